@@ -1,0 +1,78 @@
+# SPDX-License-Identifier: MIT
+#
+#   make            build/fescue and build/libfescue.a
+#   make demo       fill the two demo tables
+#   make check      every test of the ordinary suite; ends with "N passed, N failed"
+#   make check-long the suites that take longer
+#   make bench      measure, beside the limits of the machine
+#   make format     bring all sources into the one layout
+#   make install    PREFIX=/usr/local: program, library, header, manual pages
+
+CC ?= gcc
+PREFIX ?= /usr/local
+PYTHON ?= /usr/bin/python3
+BUILD ?= build
+SANITIZE ?=
+
+WARNINGS = -Wall -Wextra -Wconversion -Wshadow -Wmissing-prototypes -Wstrict-prototypes -Wvla -Werror
+CFLAGS = -std=c17 -O3 -g -D_GNU_SOURCE -pthread -fno-math-errno -ffp-contract=off $(WARNINGS) $(SANITIZE) \
+         -Isrc -Isrc/include -I/usr/include/suitesparse $(EXTRA)
+LIBS = -lcholmod -lamd -lcolamd -lsuitesparseconfig -llapacke -lopenblas -ljansson -lz -lm -pthread
+
+FOLDERS = base table numeric manifold model solve judge write job
+LIBRARY_SOURCES = $(foreach f,$(FOLDERS),$(wildcard src/$(f)/*.c))
+PROGRAM_SOURCES = $(wildcard src/cli/*.c)
+UNIT_SOURCES = $(wildcard tests/unit/test_*.c)
+SUPPORT_SOURCES = $(wildcard tests/unit/support*.c)
+FAULT_SOURCES = $(wildcard tests/fault/test_*.c)
+BENCH_SOURCES = $(wildcard tests/bench/*.c)
+MANUALS = $(wildcard src/man/*.1)
+
+object = $(patsubst %.c,$(BUILD)/%.o,$(1))
+LIBRARY = $(BUILD)/libfescue.a
+PROGRAM = $(BUILD)/fescue
+UNIT_TESTS = $(patsubst tests/%.c,$(BUILD)/tests/%,$(UNIT_SOURCES) $(FAULT_SOURCES))
+
+all: $(PROGRAM) $(LIBRARY)
+
+$(BUILD)/%.o: %.c
+	@mkdir -p $(@D)
+	$(CC) $(CFLAGS) -MMD -MP -c $< -o $@
+
+$(LIBRARY): $(call object,$(LIBRARY_SOURCES))
+	rm -f $@
+	ar rcs $@ $^
+
+$(PROGRAM): $(call object,$(PROGRAM_SOURCES)) $(LIBRARY)
+	$(CC) $(CFLAGS) $^ $(LIBS) -o $@
+
+$(UNIT_TESTS): $(BUILD)/tests/%: $(BUILD)/tests/%.o $(call object,$(SUPPORT_SOURCES)) $(LIBRARY)
+	$(CC) $(CFLAGS) $^ -lcmocka $(LIBS) -o $@
+
+tests: $(UNIT_TESTS)
+
+demo: all
+	scripts/demo-tables
+
+check: all tests
+	PYTHON=$(PYTHON) BUILD=$(BUILD) CC="$(CC)" tests/run check
+
+check-long: all tests
+	PYTHON=$(PYTHON) BUILD=$(BUILD) CC="$(CC)" tests/run long
+
+format:
+	clang-format -i $(shell git ls-files --cached --others --exclude-standard '*.c' '*.h')
+
+install: all
+	install -d $(DESTDIR)$(PREFIX)/bin $(DESTDIR)$(PREFIX)/lib $(DESTDIR)$(PREFIX)/include $(DESTDIR)$(PREFIX)/share/man/man1
+	install $(PROGRAM) $(DESTDIR)$(PREFIX)/bin
+	install -m 644 $(LIBRARY) $(DESTDIR)$(PREFIX)/lib
+	install -m 644 src/include/fescue.h src/include/fescue_options.def src/include/fescue_sow_options.def $(DESTDIR)$(PREFIX)/include
+	install -m 644 $(MANUALS) $(DESTDIR)$(PREFIX)/share/man/man1
+
+clean:
+	rm -rf $(BUILD)
+
+.PHONY: all tests demo check check-long format install clean
+.SECONDARY:
+-include $(shell find $(BUILD) -name '*.d' 2>/dev/null)

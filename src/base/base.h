@@ -1,0 +1,186 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The ground floor: what every other folder stands on.
+ *
+ *   failures    a function returns its status, outputs come last; the context keeps the first failure's sentence
+ *   memory      one replaceable, counting allocator; sizes only by checked products
+ *   files       one small table of system calls for every open, read, write, flush and rename
+ *   output      files that appear whole under their final name, or not at all
+ *   random      counter-based numbers: a draw depends on (seed, stream, index) and on nothing else
+ *   team        the workers: who am I, how many are we, sum these numbers in a fixed order
+ *   clock       wall and processor time
+ *
+ * Nothing here knows of tables. Nothing here prints, exits or aborts.
+ */
+#ifndef FESCUE_BASE_H
+#define FESCUE_BASE_H
+
+#include "fescue.h"
+
+#include <stdarg.h>
+#include <stdbool.h>
+#include <stddef.h>
+#include <stdint.h>
+
+/* ---- failures ------------------------------------------------------------------------------------------------- */
+
+/* Records the sentence for the user (no trailing newline, no "error:") unless an earlier one is kept, and returns
+   `status`. `where` is "file.c:line" of our source. Safe from any worker. Borrows everything. */
+fescue_status failure_record(fescue_context *context, fescue_status status, const char *where, const char *format, ...)
+    __attribute__((format(printf, 4, 5)));
+
+#define BASE_TEXT_(x) #x
+#define BASE_TEXT(x) BASE_TEXT_(x)
+#define FAIL(context, status, ...) failure_record((context), (status), __FILE__ ":" BASE_TEXT(__LINE__), __VA_ARGS__)
+
+/* Evaluates a call; on anything but FESCUE_OK leaves through the function's one label `done:`, with `status` set. */
+#define TRY(call)                                                                                                      \
+    do {                                                                                                               \
+        status = (call);                                                                                               \
+        if (status != FESCUE_OK)                                                                                       \
+            goto done;                                                                                                 \
+    } while (0)
+
+/* ---- memory --------------------------------------------------------------------------------------------------- */
+
+/* *out (the address of a pointer of any object type) becomes a new zeroed block of count * size bytes, aligned to 64;
+   a size of 0 gives NULL and FESCUE_OK. FESCUE_NO_MEMORY when the product overflows, the memory limit would be passed
+   or the system refuses; *out is then NULL. The caller owns the block. Safe from any worker. */
+fescue_status memory_take(fescue_context *context, size_t count, size_t size, void *out);
+
+/* As memory_take, but keeps the first min(old, new) bytes of *block; the new tail is zeroed. On failure *block stays.
+ */
+fescue_status memory_resize(fescue_context *context, size_t count, size_t size, void *block);
+
+/* Takes back the block *block points at (NULL is fine) and nulls it. */
+void memory_give(fescue_context *context, void *block);
+
+/* TAKE(ctx, n, &p): a typed memory_take. GIVE(ctx, &p). */
+#define TAKE(context, count, pointer) memory_take((context), (count), sizeof **(pointer), (pointer))
+#define RESIZE(context, count, pointer) memory_resize((context), (count), sizeof **(pointer), (pointer))
+#define GIVE(context, pointer) memory_give((context), (pointer))
+
+/* New NUL-terminated copy of `length` bytes of text. The caller owns it. */
+fescue_status memory_copy_text(fescue_context *context, const char *text, size_t length, char **out);
+
+/* *product = a * b, or false when that overflows. */
+bool size_product(size_t a, size_t b, size_t *product);
+
+/* One aligned workspace carved in declared pieces: first every piece is reserved, then the arena is opened once, then
+   the same pieces are carved in the same order. Usage: arena_reserve xN, arena_open, arena_carve xN, arena_close. */
+struct arena {
+    char *base;
+    size_t reserved, carved;
+    bool overflow;
+};
+void arena_reserve(struct arena *arena, size_t count, size_t size);
+fescue_status arena_open(fescue_context *context, struct arena *arena); /* zeroed; FESCUE_NO_MEMORY */
+void *arena_carve(struct arena *arena, size_t count, size_t size);      /* aligned to 64; asserts on over-carving */
+void arena_close(fescue_context *context, struct arena *arena);         /* NULL-safe, idempotent */
+
+/* ---- files ---------------------------------------------------------------------------------------------------- */
+
+/* Every touch of the disk goes through this table; each entry behaves as the POSIX call of its name and sets errno.
+   Tests put their own in place with file_calls_set. */
+struct file_calls {
+    int (*open)(const char *path, int flags, unsigned mode);
+    ptrdiff_t (*read)(int descriptor, void *bytes, size_t count);
+    ptrdiff_t (*write)(int descriptor, const void *bytes, size_t count);
+    int (*sync)(int descriptor);
+    int (*close)(int descriptor);
+    int (*rename)(const char *from, const char *to);
+    int (*unlink)(const char *path);
+    int (*make_directory)(const char *path, unsigned mode);
+};
+extern const struct file_calls posix_file_calls;
+void file_calls_set(fescue_context *context, const struct file_calls *calls); /* borrowed; NULL: POSIX */
+
+/* Opens for reading; "-" is standard input. FESCUE_NO_INPUT with a sentence naming path and cause. */
+fescue_status file_open_read(fescue_context *context, const char *path, int *descriptor);
+/* Reads up to count bytes (retries EINTR); *got = 0 at the end. FESCUE_NO_INPUT on a read error. */
+fescue_status file_read(fescue_context *context, const char *path, int descriptor, void *bytes, size_t count,
+                        size_t *got);
+void file_close(fescue_context *context, int *descriptor); /* -1 and standard input are left alone; sets -1 */
+
+/* ---- output: whole under the final name, or not at all ---------------------------------------------------------- */
+
+/* A set of files of one directory that appear together. Each is written beside its final name under a temporary one;
+   output_publish flushes all to disk, removes an older `seal` (the file whose presence says "complete"), renames
+   every file, the seal last, and flushes the directory. output_abandon (or a failed publish) removes what is temporary.
+   FESCUE_CANNOT_CREATE (directory, temporary file), FESCUE_CANNOT_WRITE (write, flush, rename). */
+struct output;  /* the set */
+struct outfile; /* one file of it, buffered */
+
+fescue_status output_open(fescue_context *context, const char *directory, const char *seal, struct output **out);
+/* New file `name` in the set; owned by the set. */
+fescue_status output_add(struct output *output, const char *name, struct outfile **out);
+fescue_status output_publish(struct output **output); /* takes the set, also when it fails; nulls the pointer */
+void output_abandon(struct output **output);          /* NULL-safe; nulls the pointer */
+
+/* Appending to one file. Failures are sticky: after one, further calls do nothing and outfile_status tells; publish
+   fails too. So a writer may check once, at its end. */
+void outfile_write(struct outfile *file, const void *bytes, size_t count);
+void outfile_text(struct outfile *file, const char *text);
+void outfile_format(struct outfile *file, const char *format, ...) __attribute__((format(printf, 2, 3)));
+/* The shortest decimal that reads back as the same double (or float); "nan" for a hole; never depends on the locale. */
+void outfile_real(struct outfile *file, double value, enum fescue_precision precision);
+void outfile_count(struct outfile *file, uint64_t value);
+fescue_status outfile_status(const struct outfile *file);
+
+/* The shortest round-trip decimal of value into text (at least 32 bytes), NUL-terminated; returns its length. */
+size_t real_to_text(double value, enum fescue_precision precision, char text[32]);
+
+/* ---- random numbers -------------------------------------------------------------------------------------------- */
+
+/* Philox4x32-10 (Salmon, Moraes, Dror, Shaw 2011, "Parallel random numbers: as easy as 1, 2, 3"): the key is the
+   seed, the counter is (index, stream). A draw depends on nothing else, so the order of work does not matter. */
+struct random_stream {
+    uint64_t seed, stream, index; /* index counts 128-bit blocks already used */
+};
+enum random_purpose { /* the high half of `stream`, so that no two uses share numbers */
+                      RANDOM_HOLDOUT = 1,
+                      RANDOM_START,
+                      RANDOM_SOW,
+                      RANDOM_FOLD,
+                      RANDOM_PROBE,
+                      RANDOM_BATCH,
+                      RANDOM_TEST
+};
+void philox4x32(const uint32_t counter[4], const uint32_t key[2], uint32_t out[4]);
+struct random_stream random_open(uint64_t seed, enum random_purpose purpose, uint32_t which);
+uint64_t random_bits(struct random_stream *stream);
+double random_uniform(struct random_stream *stream);                 /* [0, 1), 53 bits */
+double random_normal(struct random_stream *stream);                  /* N(0, 1), Box-Muller */
+uint64_t random_below(struct random_stream *stream, uint64_t bound); /* 0 .. bound-1, unbiased */
+double random_uniform_at(uint64_t seed, enum random_purpose purpose, uint32_t which, uint64_t index); /* stateless */
+
+/* ---- the team --------------------------------------------------------------------------------------------------- */
+
+/* Work is cut into blocks whose number and bounds never depend on the number of workers; what a block computes goes
+   to its own place; sums over blocks run in block order. So the bits are the same for any number of threads. Only one
+   team_run at a time on a context; a task must not call team_run, and must not allocate. */
+typedef void team_task(void *job, size_t block, size_t worker);
+
+size_t team_workers(const fescue_context *context); /* threads; worker numbers are 0 .. workers-1 */
+/* Calls task(job, block, worker) once for every block in 0 .. blocks-1, in any order, and returns when all are done. */
+void team_run(fescue_context *context, size_t blocks, team_task *task, void *job);
+/* out[k] = sum over blocks, in order, of partial[block*width + k]; then over ranks where there are several. */
+void team_sum(fescue_context *context, const double *partial, size_t blocks, size_t width, double *out);
+/* Starts (or changes to) `workers` threads; 0 = the processors this process may use. FESCUE_NO_MEMORY. */
+fescue_status team_resize(fescue_context *context, size_t workers);
+
+/* ---- clock, progress, cancel --------------------------------------------------------------------------------------
+ */
+
+double clock_wall(void); /* seconds, monotonic */
+double clock_cpu(void);  /* seconds of this process, all threads */
+
+/* Tells the user's callback, if any: what is being done, how far (0..1, or negative when unknown). FESCUE_STOPPED
+   when the callback asks to stop or fescue_context_cancel was called; else FESCUE_OK. */
+fescue_status progress_tell(fescue_context *context, const char *stage, double share);
+/* Whether fescue_context_cancel was called. Safe from any thread. */
+bool is_cancelled(const fescue_context *context);
+/* A sentence for the log callback, if any (--verbose and the run record's notes). */
+void log_tell(fescue_context *context, const char *format, ...) __attribute__((format(printf, 2, 3)));
+
+#endif

@@ -1,0 +1,83 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Judging: what is there (survey), what is hidden and kept (holdout), which offsets, rank and ridge (choose), how wrong
+ * (errors, interval), and which cells the data can say anything about (determined).
+ */
+#ifndef FESCUE_JUDGE_H
+#define FESCUE_JUDGE_H
+
+#include "solve/solve.h"
+
+/* Cells hidden before anything is estimated, and the cells that are kept; no row or column that had cells loses all.
+   Which cells are hidden depends on the seed and on their positions only, not on threads or order of the input. */
+struct holdout {
+    struct cells kept, hidden;
+};
+fescue_status holdout_split(fescue_context *context, const struct cells *cells, double share, uint64_t seed,
+                            struct holdout *holdout);
+void holdout_free(fescue_context *context, struct holdout *holdout);
+
+struct errors {
+    uint64_t count;
+    double rmse, mae; /* table units; 0 when count is 0 */
+};
+/* Errors of the model's estimates (bounds applied) on hidden cells. residuals (count doubles, row order, estimate
+   minus observed) may be NULL. */
+fescue_status errors_measure(fescue_context *context, const struct cells *hidden, const struct model *model,
+                             double *residuals, struct errors *errors);
+
+/* Half-width h so that a share of at least `level` of |residuals| is within it: the ceil((n+1) level)-th smallest, the
+   split-conformal quantile (Vovk, Gammerman, Shafer 2005); infinite when n is too small. Sorts residuals' sizes. */
+double interval_halfwidth(double *residuals, uint64_t count, double level);
+
+/* One point of the path that was tried. */
+struct choose_step {
+    enum fescue_offsets offsets;
+    uint32_t rank;
+    double ridge;
+    struct errors errors;
+};
+/* What the hold-out decided. */
+struct choice {
+    enum fescue_offsets offsets;
+    uint32_t rank;
+    double ridge;
+    struct errors errors, offsets_errors; /* on the hidden cells: of the choice, and of its offsets alone */
+    double offsets_only_rank0_rmse;       /* of the best offsets alone */
+    double halfwidth;                     /* of the interval at the asked level; NAN when nothing was hidden */
+    bool noiseless;                       /* the hidden cells are met to rounding */
+    struct choose_step *path;             /* owned; everything that was tried, in order */
+    uint64_t path_count;
+};
+struct choose_request {
+    const struct fescue_options *options;
+    const struct solver *solver;
+    double deadline; /* clock_wall() second, or 0 */
+};
+/* Fits on holdout->kept and judges on holdout->hidden: offsets (where auto) x a warm-started path over ranks (where
+   auto) x a ladder of ridges (where auto). Without hidden cells (--holdout 0) an auto rank and ridge are judged on a
+   hold-out of a tenth all the same, announced as such. */
+fescue_status choose_run(fescue_context *context, const struct holdout *holdout, const struct choose_request *request,
+                         struct choice *choice);
+void choice_free(fescue_context *context, struct choice *choice);
+
+/* Whether the pattern can determine the low-rank part of cell (i, j): rows and columns outside the k-core of the
+   bipartite graph of observed cells (k = rank), or in different connected blocks of it, cannot be (Singer, Cucuringu
+   2010). */
+enum basis { BASIS_LOW_RANK, BASIS_OFFSETS, BASIS_MEAN };
+const char *basis_word(enum basis basis); /* "low-rank", "offsets", "mean" */
+struct determined {
+    uint32_t rows, columns;
+    size_t rank;
+    uint32_t *row_block, *column_block;     /* core block of each line, from 1; 0: not in the core */
+    uint32_t *row_support, *column_support; /* observed cells of each line */
+};
+fescue_status determined_create(fescue_context *context, const struct cells *cells, size_t rank,
+                                struct determined *determined);
+enum basis determined_basis(const struct determined *determined, uint32_t row, uint32_t column);
+void determined_free(fescue_context *context, struct determined *determined);
+
+/* What is there before any fit, and as text (new, owned by the caller). */
+fescue_status survey_text(const fescue_table *table, char **text);
+
+#endif

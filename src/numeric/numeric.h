@@ -1,0 +1,105 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Arithmetic: loops over observed cells (sweep), small dense algebra (dense), sparse symmetric systems (sparse_spd).
+ *
+ * Factor matrices are tall (lines x rank) and row-major, so that the rank numbers of one line lie together; the stride
+ * is the rank rounded up to a multiple of 8 and the padding is zero, so that loops need no remainder. To LAPACK, which
+ * is column-major, such a matrix is its own transpose: a QR of it is an LQ there. No routine here allocates.
+ */
+#ifndef FESCUE_NUMERIC_H
+#define FESCUE_NUMERIC_H
+
+#include "table/table.h"
+
+/* A view: owns nothing. Entry (i, j) is data[i*stride + j]. */
+struct matrix {
+    double *data;
+    size_t rows, columns, stride;
+};
+#define MATRIX_AT(m, i, j) ((m).data[(size_t)(i) * (m).stride + (size_t)(j)])
+static inline size_t factor_stride(size_t rank)
+{
+    return (rank + 7) / 8 * 8;
+}
+/* Reserving and carving a factor in an arena (lines x rank, padded, zeroed). */
+void matrix_reserve(struct arena *arena, size_t rows, size_t columns);
+struct matrix matrix_carve(struct arena *arena, size_t rows, size_t columns);
+/* The first `columns` columns of a, same data. */
+struct matrix matrix_left(struct matrix a, size_t columns);
+
+/* ---- dense: all on CBLAS and LAPACKE with the library's own threads held still --------------------------------- */
+
+void matrix_copy(struct matrix from, struct matrix to);
+void matrix_zero(struct matrix a);
+void matrix_scale(double alpha, struct matrix a);
+void matrix_add(double alpha, struct matrix x, struct matrix y); /* y += alpha x */
+double matrix_dot(struct matrix a, struct matrix b);             /* sum of a_ij b_ij */
+double matrix_norm(struct matrix a);                             /* Frobenius, safe for 1e+-150 */
+void matrix_multiply(double alpha, struct matrix a, bool transpose_a, struct matrix b, bool transpose_b, double beta,
+                     struct matrix c);                           /* c = alpha op(a) op(b) + beta c */
+void matrix_scale_columns(struct matrix a, const double *scale); /* a_ij *= scale_j */
+/* a = q r with r upper triangular and diag(r) >= 0; q overwrites a (lines x k, lines >= k); r is k x k or NULL data. A
+   rank-deficient a still gives an orthonormal q. `work` from dense_work_size(lines, k) doubles. */
+fescue_status dense_qr(fescue_context *context, struct matrix a, struct matrix r, double *work);
+/* Thin SVD a = u diag(s) v' of lines x k, lines >= k: u overwrites a, s descending [k], v is k x k. */
+fescue_status dense_svd(fescue_context *context, struct matrix a, double *s, struct matrix v, double *work);
+/* Symmetric a (k x k, upper used) = q diag(w) q', w ascending; q overwrites a. */
+fescue_status dense_eigen(fescue_context *context, struct matrix a, double *w, double *work);
+/* Work, in doubles, that is enough for every dense_ routine on lines x columns. */
+size_t dense_work_size(size_t lines, size_t columns);
+
+/* Packed small systems: a symmetric positive definite k x k matrix kept as its lower triangle, row by row
+   (k(k+1)/2 numbers). Cholesky in place; on breakdown adds 1e-14 trace/k to the diagonal, tenfold until it goes. */
+void packed_cholesky(double *a, size_t k);
+void packed_solve(const double *factor, size_t k, double *b); /* b <- (L L')^-1 b */
+static inline size_t packed_size(size_t k)
+{
+    return k * (k + 1) / 2;
+}
+
+/* ---- sweep: one pass over the observed cells of one direction --------------------------------------------------- */
+
+/* All take a half (lines x length), `left` with one row a line and `right` with one row a position, equal columns and
+   strides, and the team of the context; results are the same bits for any number of workers. Arithmetic in the store's
+   precision, sums over cells in double. Workspace comes from sweep_work_size. Single precision copies the factors. */
+struct sweep {
+    fescue_context *context;
+    enum fescue_precision precision;
+    struct arena arena; /* partial sums, single-precision copies, one small workspace a worker */
+    size_t rank_most;
+    const char *kernel; /* which instruction set was chosen: "portable", "avx2", "avx512" */
+};
+fescue_status sweep_create(fescue_context *context, const struct cells *cells, size_t rank_most, struct sweep *sweep);
+void sweep_destroy(struct sweep *sweep);
+
+/* r_k = left_i . right_j - x_k over all cells; *square = sum r_k^2. gradient (lines x rank, or data NULL) = R right.
+   residual (a value array in the half's order and the store's precision, or NULL) receives r. */
+void sweep_residual(struct sweep *sweep, const struct half *half, struct matrix left, struct matrix right,
+                    struct matrix gradient, void *residual, double *square);
+/* product (lines x rank) = S right for the sparse S with the half's pattern and the given values (store's precision).
+ */
+void sweep_multiply(struct sweep *sweep, const struct half *half, const void *values, struct matrix right,
+                    struct matrix product);
+/* z_k = a_i . right_j + left_i . b_j (a tangent step seen on the cells), residual r given in the half's order:
+ *zr = sum z_k r_k, *zz = sum z_k^2. */
+void sweep_tangent(struct sweep *sweep, const struct half *half, struct matrix a, struct matrix right,
+                   struct matrix left, struct matrix b, const void *residual, double *zr, double *zz);
+/* Ridge least squares of every line on its own: w_i = argmin sum_j (w . right_j - x_ij)^2 + sum_k ridge_k w_k^2
+   (ridge: rank numbers, or NULL for 0). A line without cells gets 0. factors (lines x packed_size(rank), or NULL)
+   receives the Cholesky factors. weights is lines x rank. */
+void sweep_solve(struct sweep *sweep, const struct half *half, struct matrix right, const double *ridge,
+                 struct matrix weights, double *factors);
+/* sum and sum of |.| of (left_i . right_j - x_k), for errors on hidden cells; *square as above. */
+void sweep_errors(struct sweep *sweep, const struct half *half, struct matrix left, struct matrix right, double *square,
+                  double *absolute);
+
+/* ---- sparse symmetric positive definite systems, through CHOLMOD ------------------------------------------------- */
+
+/* Solves (diag(d) + [0 B; B' 0]) y = rhs where d has rows+columns entries and B is the rows x columns matrix with the
+   half's pattern and unit values: the normal equations of two-way effects. Supernodal or simplicial as CHOLMOD picks;
+   when the shorter side is eliminated first the Schur complement is formed on the other (see the file).
+   FESCUE_NO_MEMORY; FESCUE_DEFECT when the matrix is not positive definite. */
+fescue_status sparse_two_way_solve(fescue_context *context, const struct half *by_row, const double *diagonal,
+                                   const double *rhs, double *solution);
+
+#endif

@@ -1,0 +1,70 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Finding the low-rank part: starting points, solvers, stopping rules. A solver is a small table of functions, listed
+ * once in solver.c; adding one touches its own file, the list and the options. The driver (solve_run) owns everything
+ * that solvers share: limits, the trace, the best point seen, cancelling.
+ */
+#ifndef FESCUE_SOLVE_H
+#define FESCUE_SOLVE_H
+
+#include "model/model.h"
+
+#define SOLVE_STOP_LIST(X)                                                                                             \
+    X(STOP_GRADIENT, "gradient", "the gradient fell below the tolerance")                                              \
+    X(STOP_EXACT, "exact", "the seen cells are met to rounding")                                                       \
+    X(STOP_CHANGE, "change", "the objective no longer changes")                                                        \
+    X(STOP_STALLED, "stalled", "no step lowers the objective any more")                                                \
+    X(STOP_ITERATIONS, "iterations", "the limit of iterations was reached")                                            \
+    X(STOP_TIME, "time", "the time limit was reached")                                                                 \
+    X(STOP_CANCELLED, "cancelled", "it was asked to stop")
+enum solve_stop {
+#define SOLVE_STOP_ENUM_(name, word, text) name,
+    SOLVE_STOP_LIST(SOLVE_STOP_ENUM_)
+#undef SOLVE_STOP_ENUM_
+};
+const char *solve_stop_word(enum solve_stop stop);
+const char *solve_stop_text(enum solve_stop stop);
+bool solve_converged(enum solve_stop stop); /* gradient, exact, change */
+
+struct solve_limits {
+    uint64_t iterations;
+    double gradient; /* relative to the gradient at the zero matrix */
+    double change;   /* relative change of the objective over ten iterations; 0: never */
+    double deadline; /* clock_wall() second, or 0 for none */
+};
+
+/* One line an iteration. rmse is over the seen cells, in units of the problem's scale. */
+struct solve_step {
+    uint32_t rank, iteration;
+    double objective, rmse, gradient, step, seconds;
+};
+struct solve_result {
+    const char *solver;
+    enum solve_stop stop;
+    uint64_t iterations;
+    double objective, rmse, gradient; /* at the point returned; gradient relative as in the limits */
+    struct solve_step *trace;         /* owned; solve_result_free */
+    uint64_t trace_count;
+};
+void solve_result_free(fescue_context *context, struct solve_result *result);
+
+struct solver;                                      /* name, summary, and its functions: solve_internal.h */
+const struct solver *solver_find(const char *name); /* NULL when there is none of that name */
+const struct solver *solver_at(size_t k);           /* the k-th of the list, NULL past its end */
+const char *solver_name(const struct solver *solver);
+const char *solver_summary(const struct solver *solver);
+
+/* Improves `point` (its rank fixed) until a limit. The best point seen is left in it, never worse than it came; the
+   trace is appended to *result when its trace is not NULL yet or continues. A numerical outcome is a field of the
+   result; the status is for memory and cancelling (FESCUE_STOPPED only when cancelled; the point is then valid). */
+fescue_status solve_run(struct problem *problem, const struct solver *solver, const struct solve_limits *limits,
+                        struct low_rank *point, struct solve_result *result);
+
+/* Start: truncated SVD of the trimmed, rescaled target (Keshavan, Montanari, Oh 2010) by randomised block Krylov
+   iteration (Musco, Musco 2015). New point, owned by the caller. */
+fescue_status start_spectral(struct problem *problem, size_t rank, uint64_t seed, struct low_rank *out);
+/* Rank r to r+1: appends the leading singular pair of the residual with its exact step length and restores the
+   orthonormal form. Replaces *point. When the residual is zero the new singular value is 0. */
+fescue_status start_grow(struct problem *problem, uint64_t seed, struct low_rank *point);
+
+#endif

@@ -1,0 +1,127 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * What was observed: files in, one immutable table out.
+ *
+ *   stream          bytes of a plain or gzip file, or of standard input, with the line number for messages
+ *   number          text to double, exact to the last bit, independent of the locale
+ *   matrix_market   coordinate and array
+ *   delimited       wide and long text, comma, semicolon or tab, RFC 4180 quoting
+ *   labels          names of rows and columns
+ *   cells           the two-way compressed store of observed cells
+ *   texts           what a value looked like in the input, so that it can be given back byte for byte
+ */
+#ifndef FESCUE_TABLE_H
+#define FESCUE_TABLE_H
+
+#include "base/base.h"
+
+/* One direction of the store: the observed cells line by line (a line is a row or a column).
+   start[lines+1]; across[start[i] .. start[i+1]-1] are the positions seen in line i, ascending;
+   value holds the numbers in the same order, float or double as cells.precision says.
+   block[blocks+1] cuts the lines into pieces of roughly equal work (cells + lines), the same for any number of
+   workers: no line is split, blocks is at most CELLS_MOST_BLOCKS. */
+struct half {
+    uint32_t lines, length; /* length: how many positions a line has */
+    uint64_t *start;
+    uint32_t *across;
+    void *value;
+    uint32_t *block;
+    size_t blocks;
+};
+enum { CELLS_MOST_BLOCKS = 256 };
+
+/* The observed cells both ways; immutable once built. by_row.lines = rows = by_column.length, and the other way. */
+struct cells {
+    uint32_t rows, columns;
+    uint64_t count;
+    enum fescue_precision precision;
+    struct half by_row, by_column;
+    bool shares_pattern; /* start, across and block belong to another store: only the values are ours */
+};
+
+/* A cell on its way into a store. */
+struct triplet_list {
+    uint32_t *row, *column;
+    void *value; /* float or double */
+    uint64_t count, capacity;
+    enum fescue_precision precision;
+};
+fescue_status triplets_append(fescue_context *context, struct triplet_list *list, uint32_t row, uint32_t column,
+                              double value);
+void triplets_free(fescue_context *context, struct triplet_list *list);
+double triplet_value(const struct triplet_list *list, uint64_t index);
+
+/* Builds both directions by counting sort, O(count + rows + columns). Input in any order, no (row, column) twice
+   (asserted in debug, tables merge duplicates before). Borrows the list. `cells` is an output, empty on failure. */
+fescue_status cells_build(fescue_context *context, uint32_t rows, uint32_t columns, const struct triplet_list *list,
+                          struct cells *cells);
+/* New store with the cells k (k counts in row order) for which keep[k] is nonzero. */
+fescue_status cells_select(fescue_context *context, const struct cells *from, const uint8_t *keep, struct cells *cells);
+/* New store that shares `from`'s pattern (which must outlive it) and has values of its own, zeroed. */
+fescue_status cells_alike(fescue_context *context, const struct cells *from, struct cells *cells);
+void cells_free(fescue_context *context, struct cells *cells);
+double cells_value(const struct cells *cells, const struct half *half, uint64_t k); /* half->value[k] as double */
+
+/* Names of one side. Unlabelled sides (Matrix Market) have text == NULL and are called by their number from 1. */
+struct labels {
+    uint32_t count;
+    char **text; /* NUL-terminated UTF-8 as read, unquoted; each owned */
+};
+/* The label of line i into `buffer` when the side is unlabelled, else the label itself. */
+const char *label_text(const struct labels *labels, uint32_t i, char buffer[16]);
+/* Finds a label in O(1) expected; used by the long reader and by questions about cells. */
+struct label_index;
+fescue_status label_index_create(fescue_context *context, const struct labels *labels, struct label_index **out);
+bool label_index_find(const struct label_index *index, const char *text, size_t length, uint32_t *position);
+void label_index_destroy(fescue_context *context, struct label_index **index);
+
+enum table_shape { SHAPE_MM_COORDINATE, SHAPE_MM_ARRAY, SHAPE_WIDE, SHAPE_LONG, SHAPE_MEMORY };
+
+/* What the input looked like, enough to write it back in the same shape. */
+struct table_look {
+    enum table_shape shape;
+    char separator;                               /* ',' ';' '\t' for delimited text */
+    char *corner;                                 /* wide: the text of the first cell; owned */
+    char *row_title, *column_title, *value_title; /* long: the header, NULL where there was none; owned */
+};
+
+/* Everything read from one input; immutable. Row order of cells is the key of `texts`. */
+struct fescue_table {
+    fescue_context *context; /* borrowed */
+    char *path;              /* as the user gave it */
+    struct table_look look;
+    struct labels row_labels, column_labels;
+    struct cells cells;
+    struct texts *texts;  /* NULL when not kept (a table too large to be written out dense) */
+    uint64_t duplicates;  /* cells that came more than once and were merged */
+    uint32_t input_crc32; /* of the bytes as they lie on disk, for the run record */
+    uint64_t input_bytes;
+};
+
+/* The text of observed cell k (row order) as the input had it; *length bytes, not terminated; buffer may be used. */
+const char *texts_of(const struct texts *texts, const struct cells *cells, uint64_t k, char buffer[32], size_t *length);
+
+struct table_reading { /* how to read; defaults are all zero */
+    enum fescue_precision precision;
+    enum fescue_duplicates duplicates;
+    enum fescue_format format;
+    uint64_t dense_most; /* keep texts only while rows * columns is at most this; 0: FESCUE_DENSE_MOST */
+};
+
+/* Reads a table from path ("-": standard input), recognised by content, plain or gzip. FESCUE_NO_INPUT,
+   FESCUE_BAD_DATA with one line "path: line N: what was found, what was expected", FESCUE_NO_MEMORY.
+   The caller owns *out: table_destroy. */
+fescue_status table_read(fescue_context *context, const char *path, const struct table_reading *reading,
+                         fescue_table **out);
+/* New table from numbers in memory (copied); fails on an index out of range, a duplicate, a value not finite. */
+fescue_status table_from_triplets(fescue_context *context, uint32_t rows, uint32_t columns, uint64_t count,
+                                  const uint32_t *row, const uint32_t *column, const double *value,
+                                  enum fescue_precision precision, fescue_table **out);
+void table_destroy(fescue_table **table); /* NULL-safe; nulls the pointer */
+
+/* A double from decimal text [text, end): optional sign, digits, point, exponent. Exactly what strtod gives in the C
+   locale. False when it is not a number in this grammar (nan, inf, hex, empty, trailing bytes are not). An overflow
+   gives an infinity: callers refuse it. */
+bool number_parse(const char *text, const char *end, double *value);
+
+#endif
