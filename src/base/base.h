@@ -60,6 +60,9 @@ void memory_give(fescue_context *context, void *block);
 #define RESIZE(context, count, pointer) memory_resize((context), (count), sizeof **(pointer), (pointer))
 #define GIVE(context, pointer) memory_give((context), (pointer))
 
+/* No more than `bytes` may be alive from now on (0: no limit); what is alive already stays. */
+void memory_limit_set(fescue_context *context, uint64_t bytes);
+
 /* New NUL-terminated copy of `length` bytes of text. The caller owns it. */
 fescue_status memory_copy_text(fescue_context *context, const char *text, size_t length, char **out);
 

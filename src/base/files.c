@@ -1,0 +1,79 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The table of system calls, and reading.
+ */
+#include "base/context_internal.h"
+
+#include <errno.h>
+#include <fcntl.h>
+#include <stdio.h>
+#include <string.h>
+#include <sys/stat.h>
+#include <unistd.h>
+
+static int posix_open(const char *path, int flags, unsigned mode)
+{
+    return open(path, flags, mode);
+}
+
+static int posix_make_directory(const char *path, unsigned mode)
+{
+    return mkdir(path, mode);
+}
+
+const struct file_calls posix_file_calls = {
+    .open = posix_open,
+    .read = read,
+    .write = write,
+    .sync = fsync,
+    .close = close,
+    .rename = rename,
+    .unlink = unlink,
+    .make_directory = posix_make_directory,
+};
+
+void file_calls_set(fescue_context *context, const struct file_calls *calls)
+{
+    context->files = calls != NULL ? calls : &posix_file_calls;
+}
+
+static bool is_standard_input(const char *path)
+{
+    return strcmp(path, "-") == 0;
+}
+
+fescue_status file_open_read(fescue_context *context, const char *path, int *descriptor)
+{
+    if (is_standard_input(path)) {
+        *descriptor = STDIN_FILENO;
+        return FESCUE_OK;
+    }
+    do
+        *descriptor = context->files->open(path, O_RDONLY | O_CLOEXEC, 0);
+    while (*descriptor < 0 && errno == EINTR); /* opening a named pipe waits for its writer */
+    if (*descriptor >= 0)
+        return FESCUE_OK;
+    *descriptor = -1;
+    return FAIL(context, FESCUE_NO_INPUT, "%s: cannot be opened: %s", path, error_text(context, errno));
+}
+
+fescue_status file_read(fescue_context *context, const char *path, int descriptor, void *bytes, size_t count,
+                        size_t *got)
+{
+    ptrdiff_t read;
+    do
+        read = context->files->read(descriptor, bytes, count);
+    while (read < 0 && errno == EINTR);
+    *got = read < 0 ? 0 : (size_t)read;
+    if (read >= 0)
+        return FESCUE_OK;
+    return FAIL(context, FESCUE_NO_INPUT, "%s: cannot be read: %s", is_standard_input(path) ? "standard input" : path,
+                error_text(context, errno));
+}
+
+void file_close(fescue_context *context, int *descriptor)
+{
+    if (*descriptor >= 0 && *descriptor != STDIN_FILENO)
+        context->files->close(*descriptor);
+    *descriptor = -1;
+}
