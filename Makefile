@@ -31,6 +31,7 @@ MANUALS = $(wildcard src/man/*.1)
 object = $(patsubst %.c,$(BUILD)/%.o,$(1))
 LIBRARY = $(BUILD)/libfescue.a
 PROGRAM = $(BUILD)/fescue
+SUPPORT = $(BUILD)/tests/unit/libsupport.a
 UNIT_TESTS = $(patsubst tests/%.c,$(BUILD)/tests/%,$(UNIT_SOURCES) $(FAULT_SOURCES))
 
 all: $(PROGRAM) $(LIBRARY)
@@ -46,7 +47,12 @@ $(LIBRARY): $(call object,$(LIBRARY_SOURCES))
 $(PROGRAM): $(call object,$(PROGRAM_SOURCES)) $(LIBRARY)
 	$(CC) $(CFLAGS) $^ $(LIBS) -o $@
 
-$(UNIT_TESTS): $(BUILD)/tests/%: $(BUILD)/tests/%.o $(call object,$(SUPPORT_SOURCES)) $(LIBRARY)
+# An archive, so that a test takes only the helpers it uses, and with them only the folders they need.
+$(SUPPORT): $(call object,$(SUPPORT_SOURCES))
+	rm -f $@
+	ar rcs $@ $^
+
+$(UNIT_TESTS): $(BUILD)/tests/%: $(BUILD)/tests/%.o $(SUPPORT) $(LIBRARY)
 	$(CC) $(CFLAGS) $^ -lcmocka $(LIBS) -o $@
 
 tests: $(UNIT_TESTS)
