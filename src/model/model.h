@@ -37,6 +37,8 @@ struct problem {
     fescue_context *context;
     struct cells target; /* shares the pattern of the cells it was made from, which must outlive it */
     double scale, ridge, lambda;
+    double rounding; /* rms error that rounding leaves in a target: epsilon of the store, times rms(observed) / scale
+                        where that is above one (offsets took most of the number away) */
 };
 fescue_status problem_create(fescue_context *context, const struct cells *cells, const struct offsets *offsets,
                              double ridge, struct problem *problem);

@@ -1,0 +1,138 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The low-rank problem that is left when the offsets are taken out.
+ *
+ *     t_ij = (x_ij - offset_ij) / scale,      scale^2 = mean over seen of (x_ij - offset_ij)^2
+ *
+ * so that the targets have mean square 1 in any units. Squares are summed relative to the largest difference, because
+ * values around 1e-150 or 1e+150 have no square. All arithmetic is in double; only the stored target is rounded to the
+ * store's precision.
+ *
+ * Parallel over the blocks of the store; each block writes its own targets and its own partial sums, which are added in
+ * block order, so that the scale does not depend on the workers.
+ *
+ * Cost: three passes over the cells, and room for one more set of values both ways.
+ */
+#include "model/model.h"
+
+#include <assert.h>
+#include <float.h>
+#include <math.h>
+
+struct target_pass {
+    const struct cells *from;
+    const struct offsets *offsets; /* NULL: none */
+    const struct half *half;       /* of `from` */
+    void *target;                  /* values in the half's order, when they are written */
+    bool by_row;
+    double largest, scale;
+    double largest_of[CELLS_MOST_BLOCKS];    /* |x - offset| */
+    double square_of[2 * CELLS_MOST_BLOCKS]; /* (x - offset)^2 and x^2, in units of largest^2 */
+};
+
+static double difference_at(const struct target_pass *pass, uint32_t line, uint64_t k)
+{
+    double x = cells_value(pass->from, pass->half, k);
+    uint32_t across = pass->half->across[k];
+    if (pass->offsets == NULL)
+        return x;
+    return x - (pass->by_row ? offsets_at(pass->offsets, line, across) : offsets_at(pass->offsets, across, line));
+}
+
+static void largest_task(void *job, size_t block, size_t worker)
+{
+    struct target_pass *pass = job;
+    double largest = 0;
+    (void)worker;
+    for (uint32_t line = pass->half->block[block]; line < pass->half->block[block + 1]; line++)
+        for (uint64_t k = pass->half->start[line]; k < pass->half->start[line + 1]; k++)
+            largest = fmax(largest, fabs(difference_at(pass, line, k)));
+    pass->largest_of[block] = largest;
+}
+
+static void square_task(void *job, size_t block, size_t worker)
+{
+    struct target_pass *pass = job;
+    double difference = 0, observed = 0;
+    (void)worker;
+    for (uint32_t line = pass->half->block[block]; line < pass->half->block[block + 1]; line++)
+        for (uint64_t k = pass->half->start[line]; k < pass->half->start[line + 1]; k++) {
+            double d = difference_at(pass, line, k) / pass->largest;
+            double x = cells_value(pass->from, pass->half, k) / pass->largest;
+            difference += d * d;
+            observed += x * x;
+        }
+    pass->square_of[2 * block] = difference;
+    pass->square_of[2 * block + 1] = observed;
+}
+
+static void target_task(void *job, size_t block, size_t worker)
+{
+    struct target_pass *pass = job;
+    (void)worker;
+    for (uint32_t line = pass->half->block[block]; line < pass->half->block[block + 1]; line++)
+        for (uint64_t k = pass->half->start[line]; k < pass->half->start[line + 1]; k++) {
+            double t = difference_at(pass, line, k) / pass->scale;
+            if (pass->from->precision == FESCUE_SINGLE)
+                ((float *)pass->target)[k] = (float)t;
+            else
+                ((double *)pass->target)[k] = t;
+        }
+}
+
+/* Scale and rounding, from two passes over the rows. */
+static void problem_measure(struct problem *problem, struct target_pass *pass)
+{
+    double sum[2] = {0, 0}, count = (double)pass->from->count;
+    team_run(problem->context, pass->half->blocks, largest_task, pass);
+    for (size_t block = 0; block < pass->half->blocks; block++)
+        pass->largest = fmax(pass->largest, pass->largest_of[block]);
+    problem->scale = 1;
+    problem->rounding = pass->from->precision == FESCUE_SINGLE ? FLT_EPSILON : DBL_EPSILON;
+    if (pass->largest == 0)
+        return;
+    team_run(problem->context, pass->half->blocks, square_task, pass);
+    team_sum(problem->context, pass->square_of, pass->half->blocks, 2, sum);
+    problem->scale = pass->largest * sqrt(sum[0] / count);
+    if (sum[1] > sum[0])
+        problem->rounding *= sqrt(sum[1] / sum[0]);
+}
+
+fescue_status problem_create(fescue_context *context, const struct cells *cells, const struct offsets *offsets,
+                             double ridge, struct problem *problem)
+{
+    fescue_status status;
+    *problem = (struct problem){.context = context};
+    struct target_pass pass = {.from = cells, .offsets = offsets, .half = &cells->by_row, .by_row = true};
+    TRY(cells_alike(context, cells, &problem->target));
+    problem_measure(problem, &pass);
+    problem_set_ridge(problem, ridge);
+    pass.scale = problem->scale;
+    pass.target = problem->target.by_row.value;
+    team_run(context, pass.half->blocks, target_task, &pass);
+    pass.half = &cells->by_column;
+    pass.by_row = false;
+    pass.target = problem->target.by_column.value;
+    team_run(context, pass.half->blocks, target_task, &pass);
+done:
+    if (status != FESCUE_OK)
+        problem_free(problem);
+    return status;
+}
+
+void problem_set_ridge(struct problem *problem, double ridge)
+{
+    const struct cells *target = &problem->target;
+    double all = (double)target->rows * (double)target->columns;
+    assert(ridge >= 0);
+    problem->ridge = ridge;
+    problem->lambda = all > 0 ? ridge * ((double)target->count / all) : 0;
+}
+
+void problem_free(struct problem *problem)
+{
+    if (problem == NULL)
+        return;
+    cells_free(problem->context, &problem->target);
+    *problem = (struct problem){.context = problem->context};
+}
