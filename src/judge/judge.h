@@ -46,6 +46,9 @@ struct choice {
     double offsets_only_rank0_rmse;       /* of the best offsets alone */
     double halfwidth;                     /* of the interval at the asked level; NAN when nothing was hidden */
     bool noiseless;                       /* the hidden cells are met to rounding */
+    bool own_holdout;                     /* nothing was hidden by the caller, so a tenth was, for the choice alone */
+    struct low_rank start;                /* owned; the chosen low-rank part in the table's units, from which the fit on
+                                             all cells starts well: divide the spectrum by the new problem's scale */
     struct choose_step *path;             /* owned; everything that was tried, in order */
     uint64_t path_count;
 };
@@ -56,24 +59,28 @@ struct choose_request {
 };
 /* Fits on holdout->kept and judges on holdout->hidden: offsets (where auto) x a warm-started path over ranks (where
    auto) x a ladder of ridges (where auto). Without hidden cells (--holdout 0) an auto rank and ridge are judged on a
-   hold-out of a tenth all the same, announced as such. */
+   hold-out of a tenth all the same, announced as such (own_holdout; the errors and halfwidth are then those of that
+   hold-out). When nothing is auto and nothing hidden, `start` alone is made and the errors have count 0. A rank that
+   the table is too small for is lowered. */
 fescue_status choose_run(fescue_context *context, const struct holdout *holdout, const struct choose_request *request,
                          struct choice *choice);
 void choice_free(fescue_context *context, struct choice *choice);
 
 /* Whether the pattern can determine the low-rank part of cell (i, j): rows and columns outside the k-core of the
    bipartite graph of observed cells (k = rank), or in different connected blocks of it, cannot be (Singer, Cucuringu
-   2010). */
+   2010). Such a cell rests on the offsets when their kind has an effect for its row or column and that line has cells;
+   else on the mean. */
 enum basis { BASIS_LOW_RANK, BASIS_OFFSETS, BASIS_MEAN };
 const char *basis_word(enum basis basis); /* "low-rank", "offsets", "mean" */
 struct determined {
     uint32_t rows, columns;
     size_t rank;
+    enum fescue_offsets offsets;            /* the kind the model was fitted with */
     uint32_t *row_block, *column_block;     /* core block of each line, from 1; 0: not in the core */
     uint32_t *row_support, *column_support; /* observed cells of each line */
 };
 fescue_status determined_create(fescue_context *context, const struct cells *cells, size_t rank,
-                                struct determined *determined);
+                                enum fescue_offsets offsets, struct determined *determined);
 enum basis determined_basis(const struct determined *determined, uint32_t row, uint32_t column);
 void determined_free(fescue_context *context, struct determined *determined);
 
