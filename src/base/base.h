@@ -98,9 +98,11 @@ struct file_calls {
 extern const struct file_calls posix_file_calls;
 void file_calls_set(fescue_context *context, const struct file_calls *calls); /* borrowed; NULL: POSIX */
 
-/* Opens for reading; "-" is standard input. FESCUE_NO_INPUT with a sentence naming path and cause. */
+/* Opens for reading; "-" is standard input. FESCUE_NO_INPUT with a sentence naming path and cause; FESCUE_STOPPED when
+   a signal interrupts the wait and fescue_context_cancel was called. */
 fescue_status file_open_read(fescue_context *context, const char *path, int *descriptor);
-/* Reads up to count bytes (retries EINTR); *got = 0 at the end. FESCUE_NO_INPUT on a read error. */
+/* Reads up to count bytes (retries EINTR); *got = 0 at the end. FESCUE_NO_INPUT on a read error, FESCUE_STOPPED as
+   above. */
 fescue_status file_read(fescue_context *context, const char *path, int descriptor, void *bytes, size_t count,
                         size_t *got);
 void file_close(fescue_context *context, int *descriptor); /* -1 and standard input are left alone; sets -1 */
@@ -109,7 +111,8 @@ void file_close(fescue_context *context, int *descriptor); /* -1 and standard in
 
 /* A set of files of one directory that appear together. Each is written beside its final name under a temporary one;
    output_publish flushes all to disk, removes an older `seal` (the file whose presence says "complete"), renames
-   every file, the seal last, and flushes the directory. output_abandon (or a failed publish) removes what is temporary.
+   every file, the seal last, and flushes the directory. output_abandon (or a failed publish) removes what is temporary;
+   directories that were made stay.
    FESCUE_CANNOT_CREATE (directory, temporary file), FESCUE_CANNOT_WRITE (write, flush, rename). */
 struct output;  /* the set */
 struct outfile; /* one file of it, buffered */
@@ -117,6 +120,9 @@ struct outfile; /* one file of it, buffered */
 fescue_status output_open(fescue_context *context, const char *directory, const char *seal, struct output **out);
 /* New file `name` in the set; owned by the set. */
 fescue_status output_add(struct output *output, const char *name, struct outfile **out);
+/* Publishing also removes what an older run may have left under this name, unless the set has a file of it: so that all
+   results in the directory belong to the new seal. FESCUE_NO_MEMORY. */
+fescue_status output_retire(struct output *output, const char *name);
 fescue_status output_publish(struct output **output); /* takes the set, also when it fails; nulls the pointer */
 void output_abandon(struct output **output);          /* NULL-safe; nulls the pointer */
 

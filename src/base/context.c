@@ -96,7 +96,7 @@ void log_tell(fescue_context *context, const char *format, ...)
     char sentence[1024];
     va_list arguments;
     va_start(arguments, format);
-    int length = text_format(context, sentence, sizeof sentence, format, arguments);
+    int length = sentence_format(context, sentence, sizeof sentence, format, arguments);
     va_end(arguments);
     if (length >= 0)
         context->hooks.log(context->hooks.data, sentence);

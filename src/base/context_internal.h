@@ -64,6 +64,10 @@ struct fescue_context {
 /* vsnprintf in the C locale. */
 int text_format(const fescue_context *context, char *text, size_t size, const char *format, va_list arguments)
     __attribute__((format(printf, 4, 0)));
+/* A sentence for a person: text_format, cut to `size` with "..." and made plain (sentence.c). Returns its length, or a
+   negative number, with an empty text, when the format cannot be met. */
+int sentence_format(const fescue_context *context, char *text, size_t size, const char *format, va_list arguments)
+    __attribute__((format(printf, 4, 0)));
 /* The system's sentence for an errno; lives until the thread's next call. */
 const char *error_text(const fescue_context *context, int error);
 

@@ -50,10 +50,12 @@ fescue_status file_open_read(fescue_context *context, const char *path, int *des
     }
     do
         *descriptor = context->files->open(path, O_RDONLY | O_CLOEXEC, 0);
-    while (*descriptor < 0 && errno == EINTR); /* opening a named pipe waits for its writer */
+    while (*descriptor < 0 && errno == EINTR && !is_cancelled(context)); /* a named pipe waits for its writer */
     if (*descriptor >= 0)
         return FESCUE_OK;
     *descriptor = -1;
+    if (errno == EINTR)
+        return FAIL(context, FESCUE_STOPPED, "%s: asked to stop while opening", path);
     return FAIL(context, FESCUE_NO_INPUT, "%s: cannot be opened: %s", path, error_text(context, errno));
 }
 
@@ -63,12 +65,14 @@ fescue_status file_read(fescue_context *context, const char *path, int descripto
     ptrdiff_t read;
     do
         read = context->files->read(descriptor, bytes, count);
-    while (read < 0 && errno == EINTR);
+    while (read < 0 && errno == EINTR && !is_cancelled(context)); /* a pipe or a terminal may wait for ever */
     *got = read < 0 ? 0 : (size_t)read;
     if (read >= 0)
         return FESCUE_OK;
-    return FAIL(context, FESCUE_NO_INPUT, "%s: cannot be read: %s", is_standard_input(path) ? "standard input" : path,
-                error_text(context, errno));
+    const char *name = is_standard_input(path) ? "standard input" : path;
+    if (errno == EINTR)
+        return FAIL(context, FESCUE_STOPPED, "%s: asked to stop while reading", name);
+    return FAIL(context, FESCUE_NO_INPUT, "%s: cannot be read: %s", name, error_text(context, errno));
 }
 
 void file_close(fescue_context *context, int *descriptor)

@@ -84,21 +84,20 @@ static const char *size_text(uint64_t bytes, char text[32])
     return text;
 }
 
-/* Counts `bytes` as alive, unless that would pass the limit. */
-static bool bytes_count(struct memory_counters *memory, size_t bytes)
+/* Counts `bytes` as alive, unless that would pass the limit; *now is what is alive with them. */
+static bool bytes_count(struct memory_counters *memory, size_t bytes, uint64_t *now)
 {
     uint64_t limit = atomic_load(&memory->limit);
-    uint64_t now = atomic_fetch_add(&memory->bytes, bytes) + bytes;
-    if (limit != 0 && now > limit) {
+    *now = atomic_fetch_add(&memory->bytes, bytes) + bytes;
+    if (limit != 0 && *now > limit) {
         atomic_fetch_sub(&memory->bytes, bytes);
         return false;
     }
     return true;
 }
 
-static void peak_raise(struct memory_counters *memory)
+static void peak_raise(struct memory_counters *memory, uint64_t now)
 {
-    uint64_t now = atomic_load(&memory->bytes);
     uint64_t peak = atomic_load(&memory->peak_bytes);
     while (now > peak && !atomic_compare_exchange_weak(&memory->peak_bytes, &peak, now))
         ;
@@ -121,6 +120,7 @@ fescue_status memory_take(fescue_context *context, size_t count, size_t size, vo
     struct memory_counters *memory = &context->memory;
     char asked[32], limit[32];
     size_t bytes, total;
+    uint64_t now;
     pointer_store(out, NULL);
     if (!size_product(count, size, &bytes) ||
         __builtin_add_overflow(bytes, sizeof(struct block_header) + ALIGNMENT, &total))
@@ -128,7 +128,7 @@ fescue_status memory_take(fescue_context *context, size_t count, size_t size, vo
     if (bytes == 0)
         return FESCUE_OK;
     atomic_fetch_add(&memory->calls, 1);
-    if (!bytes_count(memory, bytes))
+    if (!bytes_count(memory, bytes, &now))
         return FAIL(context, FESCUE_NO_MEMORY, "%s more would pass the memory limit of %s", size_text(bytes, asked),
                     size_text(atomic_load(&memory->limit), limit));
     void *block = block_create(context, bytes);
@@ -137,7 +137,7 @@ fescue_status memory_take(fescue_context *context, size_t count, size_t size, vo
         return FAIL(context, FESCUE_NO_MEMORY, "the system has no %s of memory left", size_text(bytes, asked));
     }
     atomic_fetch_add(&memory->blocks, 1);
-    peak_raise(memory);
+    peak_raise(memory, now);
     pointer_store(out, block);
     return FESCUE_OK;
 }

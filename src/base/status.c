@@ -10,7 +10,6 @@
 
 #include <assert.h>
 #include <stdio.h>
-#include <string.h>
 
 static const struct {
     const char *text;
@@ -46,23 +45,6 @@ void failure_close(struct failure *failure)
     pthread_mutex_destroy(&failure->lock);
 }
 
-/* A sentence that did not fit ends in "..."; no UTF-8 character is cut in two. */
-static void text_cut(char *text, size_t size)
-{
-    size_t end = size - sizeof "...";
-    while (end > 0 && ((unsigned char)text[end] & 0xc0) == 0x80)
-        end--;
-    memcpy(text + end, "...", sizeof "...");
-}
-
-/* Sentences quote labels and paths, which may hold line breaks or terminal escapes: a message stays one plain line. */
-static void text_make_plain(char *text)
-{
-    for (; *text != '\0'; text++)
-        if ((unsigned char)*text < ' ' || *text == 0x7f)
-            *text = '?';
-}
-
 fescue_status failure_record(fescue_context *context, fescue_status status, const char *where, const char *format, ...)
 {
     assert(status != FESCUE_OK);
@@ -72,13 +54,10 @@ fescue_status failure_record(fescue_context *context, fescue_status status, cons
         failure->status = status;
         va_list arguments;
         va_start(arguments, format);
-        int length = text_format(context, failure->text, sizeof failure->text, format, arguments);
+        int length = sentence_format(context, failure->text, sizeof failure->text, format, arguments);
         va_end(arguments);
         if (length < 0)
             snprintf(failure->text, sizeof failure->text, "%s", fescue_status_text(status));
-        else if ((size_t)length >= sizeof failure->text)
-            text_cut(failure->text, sizeof failure->text);
-        text_make_plain(failure->text);
         snprintf(failure->where, sizeof failure->where, "%s", where);
     }
     pthread_mutex_unlock(&failure->lock);
