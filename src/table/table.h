@@ -63,9 +63,11 @@ void cells_free(fescue_context *context, struct cells *cells);
 double cells_value(const struct cells *cells, const struct half *half, uint64_t k); /* half->value[k] as double */
 
 /* Names of one side. Unlabelled sides (Matrix Market) have text == NULL and are called by their number from 1. */
+struct text_store;
 struct labels {
     uint32_t count;
-    char **text; /* NUL-terminated UTF-8 as read, unquoted; each owned */
+    char **text;              /* NUL-terminated UTF-8 as read, unquoted; the array is owned */
+    struct text_store *store; /* where the characters lie; owned */
 };
 /* The label of line i into `buffer` when the side is unlabelled, else the label itself. */
 const char *label_text(const struct labels *labels, uint32_t i, char buffer[16]);
