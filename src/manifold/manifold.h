@@ -40,12 +40,25 @@ double low_rank_entry(const struct low_rank *point, size_t row, size_t column);
      cut locus             the points whose largest principal angle is pi/2; no distance exceeds pi/2 sqrt(min(r, m-r))
      strong convexity      balls of radius below pi/4 are strongly convex
    At r = m there is one point, and every tangent is zero. */
+/* The geodesic t -> Exp_U(t D), D = P diag(s) Q': factors made once for any number of t. The s_k are its speeds in the
+   planes spanned by column k of U Q and column k of P. */
+struct grassmann_geodesic {
+    struct matrix start; /* U, borrowed: must not change while the geodesic is used */
+    struct matrix along; /* U Q, rows x rank */
+    struct matrix rise;  /* P, rows x rank; a column whose speed is 0 may be anything */
+    struct matrix turn;  /* Q, rank x rank */
+    double *speed;       /* s, in no order */
+};
+void geodesic_reserve(struct arena *arena, size_t rows, size_t rank);
+struct grassmann_geodesic geodesic_carve(struct arena *arena, size_t rows, size_t rank);
+
 struct grassmann_work {
     fescue_context *context;
     size_t rows, rank;
-    struct matrix tall, direction; /* rows x rank */
-    struct matrix core, turn;      /* rank x rank */
-    double *angles, *scale;        /* rank */
+    struct grassmann_geodesic geodesic;
+    struct matrix tall, other;       /* rows x rank */
+    struct matrix core, second_core; /* rank x rank */
+    double *sine, *cosine;           /* rank */
     double *dense;
 };
 void grassmann_reserve(struct arena *arena, size_t rows, size_t rank);
@@ -60,31 +73,27 @@ static inline double grassmann_inner(struct matrix d, struct matrix e)
    basis is near in the same sense (any retraction below gives such) this is the transport by projection. O(m r^2). */
 void grassmann_project(struct grassmann_work *work, struct matrix point, struct matrix z);
 
-/* The geodesic t -> Exp_U(t D): factors of D, made once for any number of t. */
-struct grassmann_geodesic {
-    struct matrix start;     /* U, borrowed: must not change while the geodesic is used */
-    struct matrix direction; /* P, rows x rank */
-    struct matrix turn;      /* Q, rank x rank */
-    double *speed;           /* s: D = P diag(s) Q' */
-};
-void geodesic_reserve(struct arena *arena, size_t rows, size_t rank);
-struct grassmann_geodesic geodesic_carve(struct arena *arena, size_t rows, size_t rank);
-/* One thin SVD, O(m r^2). */
+/* The geodesic that leaves `point` along `tangent`: one thin SVD, O(m r^2). */
 fescue_status geodesic_aim(struct grassmann_work *work, struct matrix point, struct matrix tangent,
                            struct grassmann_geodesic *geodesic);
+/* The shortest geodesic that is at `point` for t = 0 and at `target` for t = 1; on the cut locus one of the shortest.
+   Its speeds are the principal angles between the two. Does not depend on the target's basis. */
+fescue_status geodesic_join(struct grassmann_work *work, struct matrix point, struct matrix target,
+                            struct grassmann_geodesic *geodesic);
 /* to = Exp_U(t D), in the basis into which U is carried in parallel. `to` may be the start when it is used no more. */
 void geodesic_point(struct grassmann_work *work, const struct grassmann_geodesic *geodesic, double t, struct matrix to);
+/* d = the D of the geodesic, a tangent at its start. */
+void geodesic_tangent(struct grassmann_work *work, const struct grassmann_geodesic *geodesic, struct matrix d);
 /* k, a tangent at the start, becomes the parallel tangent at geodesic_point(t). */
 void geodesic_transport(struct grassmann_work *work, const struct grassmann_geodesic *geodesic, double t,
                         struct matrix k);
-/* to = the polar factor of U + t D, the other retraction that keeps the geodesic's plane. */
+/* to = the polar factor of U + t D: the point of the geodesic's planes at the angles atan(t s) in place of t s. */
 void geodesic_polar(struct grassmann_work *work, const struct grassmann_geodesic *geodesic, double t, struct matrix to);
 
 /* to = Exp_U(t D); `to` may be the point or the tangent. */
 fescue_status grassmann_exp(struct grassmann_work *work, struct matrix point, struct matrix tangent, double t,
                             struct matrix to);
-/* tangent = the shortest D at `point` with Exp(D) = target; on the cut locus one of the shortest. Does not depend on
-   the target's basis. `tangent` may be the target. */
+/* tangent = the D at `point` of geodesic_join: the shortest with Exp(D) = target. `tangent` may be the target. */
 fescue_status grassmann_log(struct grassmann_work *work, struct matrix point, struct matrix target,
                             struct matrix tangent);
 /* angles[r], ascending in [0, pi/2]; absolute error of rounding size for small and large angles alike. */

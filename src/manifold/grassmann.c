@@ -1,0 +1,92 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The Grassmann manifold: workspace, tangents, the retraction by QR, random points. Geodesics are in geodesic.c, what
+ * lies between two given points in geodesic_join.c.
+ *
+ * A subspace of R^m of dimension r is held as an orthonormal basis U, m x r. The tangents are the D with U'D = 0
+ * (horizontal lifts: moving U within its own subspace is no movement), so the projection onto them is I - U U' from the
+ * left. (Absil, Mahony, Sepulchre 2008, "Optimization algorithms on matrix manifolds", sections 3.4.4, 3.6.2, 4.1.2.)
+ *
+ * The projection is applied twice. Once leaves U'D of the size of rounding in Z; where Z is nearly normal, as a
+ * gradient is that is nearly zero, that is not small beside D. Twice leaves rounding in D.
+ *
+ * The QR factor is unique only with the signs of R's diagonal fixed; dense_qr makes them positive, so that the new
+ * basis tends to U as t D tends to zero and vectors at the two points can be compared.
+ */
+#include "manifold/manifold_internal.h"
+
+void grassmann_reserve(struct arena *arena, size_t rows, size_t rank)
+{
+    assert(rank >= 1 && rank <= rows);
+    geodesic_reserve(arena, rows, rank);
+    matrix_reserve(arena, rows, rank);
+    matrix_reserve(arena, rows, rank);
+    matrix_reserve(arena, rank, rank);
+    matrix_reserve(arena, rank, rank);
+    arena_reserve(arena, rank, sizeof(double));
+    arena_reserve(arena, rank, sizeof(double));
+    arena_reserve(arena, dense_work_size(rows, rank), sizeof(double));
+}
+
+struct grassmann_work grassmann_carve(fescue_context *context, struct arena *arena, size_t rows, size_t rank)
+{
+    struct grassmann_work work = {.context = context, .rows = rows, .rank = rank};
+    work.geodesic = geodesic_carve(arena, rows, rank);
+    work.tall = matrix_carve(arena, rows, rank);
+    work.other = matrix_carve(arena, rows, rank);
+    work.core = matrix_carve(arena, rank, rank);
+    work.second_core = matrix_carve(arena, rank, rank);
+    work.sine = arena_carve(arena, rank, sizeof(double));
+    work.cosine = arena_carve(arena, rank, sizeof(double));
+    work.dense = arena_carve(arena, dense_work_size(rows, rank), sizeof(double));
+    return work;
+}
+
+void grassmann_project(struct grassmann_work *work, struct matrix point, struct matrix z)
+{
+    assert(is_shape(point, work->rows, work->rank) && is_shape(z, work->rows, work->rank));
+    if (work->rows == work->rank) { /* one point only */
+        matrix_zero(z);
+        return;
+    }
+    for (int pass = 0; pass < 2; pass++) {
+        matrix_multiply(1, point, true, z, false, 0, work->core);
+        matrix_multiply(-1, point, false, work->core, false, 1, z);
+    }
+}
+
+fescue_status grassmann_retract_qr(struct grassmann_work *work, struct matrix point, struct matrix tangent, double t,
+                                   struct matrix to)
+{
+    fescue_status status;
+    matrix_copy(point, work->tall);
+    matrix_add(t, tangent, work->tall);
+    TRY(dense_qr(work->context, work->tall, (struct matrix){0}, work->dense));
+    matrix_copy(work->tall, to);
+done:
+    return status;
+}
+
+static void normals_fill(struct random_stream *stream, struct matrix a)
+{
+    for (size_t i = 0; i < a.rows; i++)
+        for (size_t j = 0; j < a.columns; j++)
+            MATRIX_AT(a, i, j) = random_normal(stream);
+}
+
+/* The span of independent normal vectors is uniform, since their distribution is the same in every basis. */
+fescue_status grassmann_random_point(struct grassmann_work *work, struct random_stream *stream, struct matrix point)
+{
+    assert(is_shape(point, work->rows, work->rank));
+    normals_fill(stream, point);
+    return dense_qr(work->context, point, (struct matrix){0}, work->dense);
+}
+
+void grassmann_random_tangent(struct grassmann_work *work, struct random_stream *stream, struct matrix point,
+                              struct matrix tangent)
+{
+    normals_fill(stream, tangent);
+    grassmann_project(work, point, tangent);
+    if (work->rows > work->rank)
+        matrix_scale(1 / matrix_norm(tangent), tangent);
+}
