@@ -2,6 +2,17 @@
  *
  * Results to files. A writer takes the run (everything that is known, read-only) and adds its files to an output set;
  * nothing appears under a final name before the whole set is published.
+ *
+ *   unseen     what is said of one unseen cell: estimate, interval, basis, whether --strict leaves it blank
+ *   filled     the completed table in the shape it came in
+ *   cells      one line an unseen cell
+ *   factors    offsets and the low-rank part
+ *   trace      one line an iteration of the final fit
+ *   record     run.json: what is needed to repeat and to judge the run
+ *   array      a dense Matrix Market file        field     a field of delimited text
+ *
+ * All numbers that were computed are written as the shortest decimal that reads back as the same double. All bytes are
+ * the same for any number of threads and any hour, but for the object "timing" of run.json.
  */
 #ifndef FESCUE_WRITE_H
 #define FESCUE_WRITE_H
@@ -16,23 +27,44 @@ struct run {
     const struct model *model;
     const struct choice *choice;
     const struct solve_result *fit; /* of the final fit on all cells */
+    const char *start;              /* of that fit: "grown", "spectral" or "none" */
+    double scale;                   /* of its problem: units of the table in one of the fit's */
     const struct determined *determined;
-    double halfwidth;                          /* NAN: intervals are left blank */
+    double halfwidth;                          /* NAN or infinite: intervals are left blank */
     double started, seconds_wall, seconds_cpu; /* started: Unix time */
     uint64_t hidden;                           /* cells held out while choosing */
-    uint64_t filled[3];                        /* unseen cells by basis */
+    uint64_t filled[3];                        /* unseen cells by basis, those left blank among them */
     uint64_t blank;                            /* cells left blank by --strict */
     bool writes_filled, writes_cells, writes_factors;
 };
 
-fescue_status write_filled(const struct run *run, struct output *output);  /* filled.mtx, filled.csv, filled.tsv */
+/* What is said of cell (row, column), which was not seen. */
+struct unseen {
+    double estimate, lower, upper; /* bounds applied; lower and upper NAN where there is no interval */
+    enum basis basis;
+    bool is_blank; /* left blank by --strict */
+};
+struct unseen run_unseen(const struct run *run, uint32_t row, uint32_t column);
+/* The estimate of any cell. Without a ridge nothing but chance decides the low-rank part of a cell that the data do not
+   determine: there it is left out. Else it is model_estimate. */
+double run_estimate(const struct run *run, uint32_t row, uint32_t column);
+/* Counts filled[] and blank of the run, in O(observed + rows + columns). */
+fescue_status run_count(struct run *run);
+/* Why a result is not written, for record and summary; NULL when it is. */
+const char *run_why_left_out(const struct run *run, bool is_written);
+/* The words that go with every result that people read. */
+extern const char *const run_caution;
+
+const char *filled_name(const fescue_table *table); /* filled.mtx, filled.csv or filled.tsv */
+
+fescue_status write_filled(const struct run *run, struct output *output);
 fescue_status write_cells(const struct run *run, struct output *output);   /* cells.csv */
 fescue_status write_factors(const struct run *run, struct output *output); /* left, spectrum, right, offsets: .mtx */
 fescue_status write_trace(const struct run *run, struct output *output);   /* trace.csv */
 fescue_status write_record(const struct run *run, struct output *output);  /* run.json, the seal */
 
-/* Pieces that sow uses too: a field of delimited text, quoted as RFC 4180 says when it has to be; a dense array file.
- */
+/* Pieces that sow uses too: a field of delimited text, quoted as RFC 4180 says when it has to be; a dense array file,
+   with one line of comment or NULL. */
 void write_field(struct outfile *file, const char *text, char separator);
 fescue_status write_array(struct output *output, const char *name, struct matrix matrix, const char *comment);
 

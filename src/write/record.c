@@ -1,0 +1,310 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * run.json: everything needed to repeat and to judge the run, and the seal of its directory: where it is, the run is
+ * complete.
+ *
+ *   program, version, caution
+ *   input     path, crc32 and bytes (as on disk), shape, rows, columns, observed, duplicates
+ *   options   every option that bears on results, as the text that sets it
+ *   choice    offsets, rank, ridge; hidden cells, errors on them, of offsets alone too; the interval; the path tried
+ *   fit       solver, start, stop, iterations, objective, gradient, rmse
+ *   model     mean, ridges of the effects, spectrum, how an estimate is made of them
+ *   unseen    cells by basis, cells left blank
+ *   files     each with "written" or why it was left out
+ *   timing    started, seconds, threads, bytes of memory at most: all that may differ when the run is repeated
+ *
+ * Keys keep the order in which they are set here. Numbers have 17 significant digits, which read back as the same
+ * double; what is not finite becomes null. Jansson takes memory from malloc: its allocator is one for the whole
+ * process and so not ours to replace. When it has none it gives NULL, which every call of it here passes on, and which
+ * ends as FESCUE_NO_MEMORY.
+ */
+#include "write/write.h"
+
+#include <inttypes.h>
+#include <jansson.h>
+#include <math.h>
+#include <stdio.h>
+#include <string.h>
+#include <time.h>
+
+/* An object in the making; `failed` stays once there was no memory. */
+struct record {
+    fescue_context *context;
+    json_t *object;
+    bool failed;
+};
+
+/* ---- values ---------------------------------------------------------------------------------------------------------
+ */
+
+static struct record record_open(fescue_context *context)
+{
+    json_t *object = json_object();
+    return (struct record){context, object, object == NULL};
+}
+
+/* Takes the value. */
+static void value_set(struct record *record, const char *key, json_t *value)
+{
+    if (json_object_set_new(record->object, key, value) != 0)
+        record->failed = true;
+}
+
+static void record_set(struct record *record, const char *key, struct record value)
+{
+    record->failed = record->failed || value.failed;
+    value_set(record, key, value.object);
+}
+
+static void real_set(struct record *record, const char *key, double value)
+{
+    value_set(record, key, isfinite(value) ? json_real(value) : json_null());
+}
+
+/* Counts are below 2^63: they count what lies in memory, or cells of a table of at most 2^32 by 2^32, of which more
+   than 2^63 cannot be told apart from "very many". */
+static void count_set(struct record *record, const char *key, uint64_t value)
+{
+    value_set(record, key, json_integer(value > INT64_MAX ? INT64_MAX : (json_int_t)value));
+}
+
+/* JSON is UTF-8; a path may be any bytes. Bytes beyond ASCII become question marks in a text that is not UTF-8. */
+static void text_set(struct record *record, const char *key, const char *text)
+{
+    char *plain = NULL;
+    json_t *value = json_string(text);
+    if (value == NULL && memory_copy_text(record->context, text, strlen(text), &plain) == FESCUE_OK) {
+        for (char *byte = plain; *byte != '\0'; byte++)
+            *byte = (unsigned char)*byte < 0x80 ? *byte : '?';
+        value = json_string(plain);
+    }
+    GIVE(record->context, &plain);
+    value_set(record, key, value);
+}
+
+static void flag_set(struct record *record, const char *key, bool value)
+{
+    value_set(record, key, json_boolean(value));
+}
+
+static const char *offsets_word(enum fescue_offsets offsets)
+{
+    static const char *const words[] = {
+        [FESCUE_OFFSETS_AUTO] = "auto",       [FESCUE_OFFSETS_BOTH] = "both", [FESCUE_OFFSETS_ROWS] = "rows",
+        [FESCUE_OFFSETS_COLUMNS] = "columns", [FESCUE_OFFSETS_MEAN] = "mean", [FESCUE_OFFSETS_NONE] = "none"};
+    return words[offsets];
+}
+
+/* ---- the parts ------------------------------------------------------------------------------------------------------
+ */
+
+static struct record input_record(const struct run *run)
+{
+    static const char *const shapes[] = {[SHAPE_MM_COORDINATE] = "matrix-market coordinate",
+                                         [SHAPE_MM_ARRAY] = "matrix-market array",
+                                         [SHAPE_WIDE] = "wide",
+                                         [SHAPE_LONG] = "long",
+                                         [SHAPE_MEMORY] = "memory"};
+    const fescue_table *table = run->table;
+    struct record input = record_open(run->context);
+    char crc[16];
+    snprintf(crc, sizeof crc, "%08" PRIx32, table->input_crc32);
+    text_set(&input, "path", table->path == NULL ? "" : table->path);
+    text_set(&input, "crc32", crc);
+    count_set(&input, "bytes", table->input_bytes);
+    text_set(&input, "shape", shapes[table->look.shape]);
+    count_set(&input, "rows", table->cells.rows);
+    count_set(&input, "columns", table->cells.columns);
+    count_set(&input, "observed", table->cells.count);
+    count_set(&input, "duplicates", table->duplicates);
+    return input;
+}
+
+/* Where the results went and how many workers there were bears on no result. */
+static struct record options_record(const struct run *run)
+{
+    struct record options = record_open(run->context);
+    size_t count;
+    const struct fescue_option *table = fescue_option_table(&count);
+    for (size_t k = 0; k < count; k++) {
+        char text[128];
+        if (strcmp(table[k].name, "output") == 0 || strcmp(table[k].name, "threads") == 0)
+            continue;
+        fescue_option_text(&table[k], run->options, text, sizeof text);
+        text_set(&options, table[k].name, text);
+    }
+    return options;
+}
+
+static struct record errors_record(const struct run *run, const struct errors *errors)
+{
+    struct record record = record_open(run->context);
+    real_set(&record, "rmse", errors->count > 0 ? errors->rmse : NAN);
+    real_set(&record, "mae", errors->count > 0 ? errors->mae : NAN);
+    return record;
+}
+
+static struct record step_record(const struct run *run, const struct choose_step *step)
+{
+    struct record record = record_open(run->context);
+    text_set(&record, "offsets", offsets_word(step->offsets));
+    count_set(&record, "rank", step->rank);
+    real_set(&record, "ridge", step->ridge);
+    real_set(&record, "rmse", step->errors.count > 0 ? step->errors.rmse : NAN);
+    real_set(&record, "mae", step->errors.count > 0 ? step->errors.mae : NAN);
+    return record;
+}
+
+static struct record choice_record(const struct run *run)
+{
+    const struct choice *choice = run->choice;
+    struct record record = record_open(run->context), path = {run->context, json_array(), false};
+    text_set(&record, "offsets", offsets_word(choice->offsets));
+    count_set(&record, "rank", choice->rank);
+    real_set(&record, "ridge", choice->ridge);
+    count_set(&record, "hidden", run->hidden);
+    count_set(&record, "judged", choice->errors.count);
+    record_set(&record, "errors", errors_record(run, &choice->errors));
+    record_set(&record, "errors_of_offsets_alone", errors_record(run, &choice->offsets_errors));
+    flag_set(&record, "noiseless", choice->noiseless);
+    real_set(&record, "interval_level", run->options->interval);
+    real_set(&record, "interval_halfwidth", run->halfwidth);
+    for (uint64_t k = 0; k < choice->path_count; k++) {
+        struct record step = step_record(run, &choice->path[k]);
+        path.failed = path.failed || step.failed;
+        if (json_array_append_new(path.object, step.object) != 0)
+            path.failed = true;
+    }
+    record_set(&record, "path", path);
+    return record;
+}
+
+static struct record fit_record(const struct run *run)
+{
+    const struct solve_result *fit = run->fit;
+    struct record record = record_open(run->context);
+    text_set(&record, "solver", fit->solver == NULL ? "none" : fit->solver);
+    text_set(&record, "start", run->start);
+    text_set(&record, "stop", solve_stop_word(fit->stop));
+    text_set(&record, "stop_means", solve_stop_text(fit->stop));
+    flag_set(&record, "converged", solve_converged(fit->stop));
+    count_set(&record, "iterations", fit->iterations);
+    real_set(&record, "objective", fit->objective);
+    real_set(&record, "gradient", fit->gradient);
+    real_set(&record, "scale", run->scale);
+    real_set(&record, "rmse_seen", fit->rmse * run->scale);
+    return record;
+}
+
+static struct record model_record(const struct run *run)
+{
+    const struct model *model = run->model;
+    struct record record = record_open(run->context), spectrum = {run->context, json_array(), false};
+    real_set(&record, "mean", model->offsets.mean);
+    real_set(&record, "row_ridge", model->offsets.row_ridge);
+    real_set(&record, "column_ridge", model->offsets.column_ridge);
+    for (size_t k = 0; k < model->low_rank.rank; k++)
+        if (json_array_append_new(spectrum.object, json_real(model->low_rank.spectrum[k])) != 0)
+            spectrum.failed = true;
+    record_set(&record, "spectrum", spectrum);
+    text_set(&record, "estimate",
+             "mean + row offset + column offset + left diag(spectrum) right', then bounds; where the "
+             "ridge is 0, cells whose basis is not low-rank are without the product");
+    return record;
+}
+
+static struct record unseen_record(const struct run *run)
+{
+    struct record record = record_open(run->context);
+    count_set(&record, "cells", run->filled[BASIS_LOW_RANK] + run->filled[BASIS_OFFSETS] + run->filled[BASIS_MEAN]);
+    for (enum basis basis = BASIS_LOW_RANK; basis <= BASIS_MEAN; basis++)
+        count_set(&record, basis_word(basis), run->filled[basis]);
+    count_set(&record, "left_blank", run->blank);
+    return record;
+}
+
+static struct record files_record(const struct run *run)
+{
+    struct record record = record_open(run->context);
+    const char *filled = run_why_left_out(run, run->writes_filled), *cells = run_why_left_out(run, run->writes_cells);
+    const char *factors = run_why_left_out(run, run->writes_factors);
+    const char *low_rank = run->model->low_rank.rank == 0 ? "the rank is 0" : NULL;
+    const struct {
+        const char *name, *why;
+    } files[] = {{filled_name(run->table), filled},
+                 {"cells.csv", cells},
+                 {"row-offsets.mtx", factors},
+                 {"column-offsets.mtx", factors},
+                 {"left.mtx", factors != NULL ? factors : low_rank},
+                 {"spectrum.mtx", factors != NULL ? factors : low_rank},
+                 {"right.mtx", factors != NULL ? factors : low_rank},
+                 {"trace.csv", NULL}};
+    for (size_t k = 0; k < sizeof files / sizeof files[0]; k++) {
+        char text[256];
+        snprintf(text, sizeof text, "left out: %s", files[k].why == NULL ? "" : files[k].why);
+        text_set(&record, files[k].name, files[k].why == NULL ? "written" : text);
+    }
+    return record;
+}
+
+static struct record timing_record(const struct run *run)
+{
+    struct record record = record_open(run->context);
+    time_t started = (time_t)run->started;
+    struct tm parts;
+    char text[32] = "";
+    if (gmtime_r(&started, &parts) != NULL)
+        strftime(text, sizeof text, "%Y-%m-%dT%H:%M:%SZ", &parts);
+    text_set(&record, "started", text);
+    real_set(&record, "seconds", run->seconds_wall);
+    real_set(&record, "seconds_of_processors", run->seconds_cpu);
+    count_set(&record, "threads", team_workers(run->context));
+    count_set(&record, "memory_most_bytes", fescue_memory_usage(run->context).peak_bytes);
+    return record;
+}
+
+/* ---- the whole ------------------------------------------------------------------------------------------------------
+ */
+
+static struct record run_record(const struct run *run)
+{
+    struct record record = record_open(run->context);
+    text_set(&record, "program", "fescue");
+    text_set(&record, "version", FESCUE_VERSION);
+    text_set(&record, "caution", run_caution);
+    record_set(&record, "input", input_record(run));
+    record_set(&record, "options", options_record(run));
+    record_set(&record, "choice", choice_record(run));
+    record_set(&record, "fit", fit_record(run));
+    record_set(&record, "model", model_record(run));
+    record_set(&record, "unseen", unseen_record(run));
+    record_set(&record, "files", files_record(run));
+    record_set(&record, "timing", timing_record(run));
+    return record;
+}
+
+static int chunk_put(const char *chunk, size_t size, void *data)
+{
+    struct outfile *file = data;
+    outfile_write(file, chunk, size);
+    return outfile_status(file) == FESCUE_OK ? 0 : -1;
+}
+
+fescue_status write_record(const struct run *run, struct output *output)
+{
+    struct outfile *file;
+    struct record record = {0};
+    fescue_status status;
+    TRY(output_add(output, "run.json", &file));
+    record = run_record(run);
+    if (!record.failed &&
+        json_dump_callback(record.object, chunk_put, file, JSON_INDENT(2) | JSON_REAL_PRECISION(17)) != 0)
+        record.failed = outfile_status(file) == FESCUE_OK;
+    if (record.failed)
+        TRY(FAIL(run->context, FESCUE_NO_MEMORY, "the system has no memory left for the record of the run"));
+    outfile_write(file, "\n", 1);
+    TRY(outfile_status(file));
+done:
+    json_decref(record.object);
+    return status;
+}

@@ -1,0 +1,182 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * What is said of one unseen cell (i, j), and how many there are of each kind.
+ *
+ * The basis is the most of the model that the data determine there:
+ *     low-rank   the model has a rank above 0, and i and j lie in one block of the core
+ *     offsets    else, where the row or the column has an effect of its own, estimated from cells it was seen in
+ *     mean       else
+ * With --strict a cell is left blank when it is not determined in full: its basis is not low-rank or, in a model of
+ * rank 0, one of the effects it takes has no observation behind it.
+ *
+ * Counting: the cells of each basis over the whole table are sums of products over blocks,
+ *     low-rank   sum over b of R_b C_b                R_b, C_b: rows and columns of core block b = 1, 2, ...
+ *     mean       R' C' - sum over b of R'_b C'_b      primed: of these, the ones without an effect of their own
+ *     offsets    rows * columns less these two
+ * and one pass over the observed cells takes those off. So a table with billions of empty cells costs no more than what
+ * was read.
+ */
+#include "write/write.h"
+
+#include <math.h>
+
+const char *const run_caution =
+    "Estimates are not measurements. Do not use them for safety, medical, billing or compliance decisions without the "
+    "review that local rules and licensed practice require.";
+
+/* ---- one cell -----------------------------------------------------------------------------------------------------
+ */
+
+static bool has_row_effects(const struct run *run)
+{
+    enum fescue_offsets kind = run->model->offsets.kind;
+    return kind == FESCUE_OFFSETS_BOTH || kind == FESCUE_OFFSETS_ROWS;
+}
+
+static bool has_column_effects(const struct run *run)
+{
+    enum fescue_offsets kind = run->model->offsets.kind;
+    return kind == FESCUE_OFFSETS_BOTH || kind == FESCUE_OFFSETS_COLUMNS;
+}
+
+static bool has_low_rank(const struct run *run)
+{
+    return run->model->low_rank.rank > 0;
+}
+
+static enum basis basis_at(const struct run *run, uint32_t row, uint32_t column)
+{
+    const struct determined *determined = run->determined;
+    if (has_low_rank(run) && determined_basis(determined, row, column) == BASIS_LOW_RANK)
+        return BASIS_LOW_RANK;
+    if (has_row_effects(run) && determined->row_support[row] > 0)
+        return BASIS_OFFSETS;
+    if (has_column_effects(run) && determined->column_support[column] > 0)
+        return BASIS_OFFSETS;
+    return BASIS_MEAN;
+}
+
+static bool is_determined(const struct run *run, uint32_t row, uint32_t column, enum basis basis)
+{
+    if (has_low_rank(run))
+        return basis == BASIS_LOW_RANK;
+    return (!has_row_effects(run) || run->determined->row_support[row] > 0) &&
+           (!has_column_effects(run) || run->determined->column_support[column] > 0);
+}
+
+static double estimate_at(const struct run *run, uint32_t row, uint32_t column, enum basis basis)
+{
+    const struct model *model = run->model;
+    if (basis == BASIS_LOW_RANK || !has_low_rank(run) || run->choice->ridge > 0)
+        return model_estimate(model, row, column);
+    double estimate = offsets_at(&model->offsets, row, column);
+    return fmin(fmax(estimate, model->bounds.low), model->bounds.high);
+}
+
+double run_estimate(const struct run *run, uint32_t row, uint32_t column)
+{
+    return estimate_at(run, row, column, basis_at(run, row, column));
+}
+
+struct unseen run_unseen(const struct run *run, uint32_t row, uint32_t column)
+{
+    const struct fescue_range *bounds = &run->model->bounds;
+    enum basis basis = basis_at(run, row, column);
+    struct unseen unseen = {estimate_at(run, row, column, basis), NAN, NAN, basis, false};
+    unseen.is_blank = run->options->strict && !is_determined(run, row, column, basis);
+    if (isfinite(run->halfwidth)) {
+        unseen.lower = fmax(unseen.estimate - run->halfwidth, bounds->low);
+        unseen.upper = fmin(unseen.estimate + run->halfwidth, bounds->high);
+    }
+    return unseen;
+}
+
+/* ---- counting -----------------------------------------------------------------------------------------------------
+ */
+
+/* Lines of one side in each block of the core (0: in none): all of them, and those without an effect of their own. */
+struct block_count {
+    uint64_t all, plain;
+};
+
+static uint32_t block_most(const uint32_t *block, uint32_t lines)
+{
+    uint32_t most = 0;
+    for (uint32_t i = 0; i < lines; i++)
+        most = block[i] > most ? block[i] : most;
+    return most;
+}
+
+/* Counts the lines of one side; returns how many have no effect of their own. */
+static uint64_t blocks_count(const uint32_t *block, const uint32_t *support, uint32_t lines, bool has_effects,
+                             struct block_count *counts)
+{
+    uint64_t plain = 0;
+    for (uint32_t i = 0; i < lines; i++) {
+        bool is_plain = !has_effects || support[i] == 0;
+        counts[block[i]].all++;
+        counts[block[i]].plain += is_plain;
+        plain += is_plain;
+    }
+    return plain;
+}
+
+/* Cells of the whole table by basis. */
+static fescue_status table_count(struct run *run)
+{
+    const struct determined *d = run->determined;
+    struct block_count *rows = NULL, *columns = NULL;
+    fescue_status status;
+    uint32_t row_most = block_most(d->row_block, d->rows), column_most = block_most(d->column_block, d->columns);
+    size_t most = row_most > column_most ? row_most : column_most;
+    TRY(TAKE(run->context, most + 1, &rows));
+    TRY(TAKE(run->context, most + 1, &columns));
+    uint64_t plain_rows = blocks_count(d->row_block, d->row_support, d->rows, has_row_effects(run), rows);
+    uint64_t plain_columns =
+        blocks_count(d->column_block, d->column_support, d->columns, has_column_effects(run), columns);
+    uint64_t low_rank = 0, mean = plain_rows * plain_columns;
+    for (size_t b = 1; has_low_rank(run) && b <= most; b++) {
+        low_rank += rows[b].all * columns[b].all;
+        mean -= rows[b].plain * columns[b].plain;
+    }
+    run->filled[BASIS_LOW_RANK] = low_rank;
+    run->filled[BASIS_MEAN] = mean;
+    run->filled[BASIS_OFFSETS] = (uint64_t)d->rows * d->columns - low_rank - mean;
+    run->blank = (uint64_t)d->rows * d->columns - low_rank;
+    if (!has_low_rank(run)) {
+        uint64_t full_rows = has_row_effects(run) ? d->rows - plain_rows : d->rows;
+        uint64_t full_columns = has_column_effects(run) ? d->columns - plain_columns : d->columns;
+        run->blank -= full_rows * full_columns;
+    }
+done:
+    GIVE(run->context, &columns);
+    GIVE(run->context, &rows);
+    return status;
+}
+
+fescue_status run_count(struct run *run)
+{
+    const struct cells *cells = &run->table->cells;
+    fescue_status status = table_count(run);
+    if (status != FESCUE_OK)
+        return status;
+    for (uint32_t row = 0; row < cells->rows; row++)
+        for (uint64_t k = cells->by_row.start[row]; k < cells->by_row.start[row + 1]; k++) {
+            uint32_t column = cells->by_row.across[k];
+            enum basis basis = basis_at(run, row, column);
+            run->filled[basis]--;
+            run->blank -= !is_determined(run, row, column, basis);
+        }
+    if (!run->options->strict)
+        run->blank = 0;
+    return FESCUE_OK;
+}
+
+const char *run_why_left_out(const struct run *run, bool is_written)
+{
+    if (is_written)
+        return NULL;
+    if (run->options->write != (unsigned)FESCUE_AUTO)
+        return "not asked for by --write";
+    return "the table has more than " BASE_TEXT(FESCUE_DENSE_MOST) " cells; --write asks for it all the same";
+}
