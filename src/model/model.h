@@ -37,6 +37,7 @@ struct problem {
     fescue_context *context;
     struct cells target; /* shares the pattern of the cells it was made from, which must outlive it */
     double scale, ridge, lambda;
+    double norm;     /* of the targets, sqrt(sum t^2): sqrt(count), or 0 when all are 0 */
     double rounding; /* rms error that rounding leaves in a target: epsilon of the store, times rms(observed) / scale
                         where that is above one (offsets took most of the number away) */
 };

@@ -91,6 +91,7 @@ static void problem_measure(struct problem *problem, struct target_pass *pass)
     problem->rounding = pass->from->precision == FESCUE_SINGLE ? FLT_EPSILON : DBL_EPSILON;
     if (pass->largest == 0)
         return;
+    problem->norm = sqrt(count);
     team_run(problem->context, pass->half->blocks, square_task, pass);
     team_sum(problem->context, pass->square_of, pass->half->blocks, 2, sum);
     problem->scale = pass->largest * sqrt(sum[0] / count);
