@@ -15,4 +15,66 @@ bool option_value_parse(const struct fescue_option *option, const char *text, vo
 /* What the option takes, as the end of a sentence that begins "expected ". */
 void option_value_expected(const struct fescue_option *option, char *text, size_t size);
 
+/* ---- the surroundings of a job ------------------------------------------------------------------------------------
+ */
+
+/* Memory limit and number of workers as the options say. */
+fescue_status job_prepare(fescue_context *context, const struct fescue_options *options);
+
+/* ---- the fit on all cells -----------------------------------------------------------------------------------------
+ */
+
+struct final_request {
+    const struct cells *cells;
+    const struct fescue_options *options;
+    const struct choice *choice;
+    const struct solver *solver;
+    double deadline; /* clock_wall() second, or 0 */
+};
+struct final_fit {
+    struct model model;         /* owned */
+    struct solve_result result; /* owned; its iterations are those of the whole way from its start */
+    const char *start;          /* which start it came from: "grown", "spectral", or "none" at rank 0 */
+    double scale;               /* units of the table in one of the fit's */
+};
+/* Fits all cells with what was chosen. Asked to stop, it ends with what it has: FESCUE_OK and STOP_CANCELLED. */
+fescue_status final_fit_run(fescue_context *context, const struct final_request *request, struct final_fit *fit);
+void final_fit_free(fescue_context *context, struct final_fit *fit);
+
+/* ---- a fill -------------------------------------------------------------------------------------------------------
+ */
+
+struct fescue_fill {
+    fescue_context *context; /* borrowed */
+    const fescue_table *table;
+    struct fescue_options options; /* a copy; its texts are dropped */
+    struct choice choice;
+    struct final_fit fit;
+    struct determined determined;
+    double wall, cpu; /* clocks when it began */
+    struct run run;   /* the view that writers get */
+    char *text;       /* the summary */
+};
+
+/* The summary, new and owned by the caller; with the lines on files when they are being written. */
+fescue_status fill_summarise(const fescue_fill *fill, bool is_written, char **text);
+
+/* ---- text for people ----------------------------------------------------------------------------------------------
+ */
+
+/* A text that grows. Failures are sticky: text_finish tells. */
+struct text {
+    fescue_context *context;
+    fescue_status status;
+    size_t length, capacity;
+    char *bytes;
+};
+/* Formats are for texts and whole numbers: what they print does not depend on the locale then. Reals go in by
+   real_to_words. At most 1023 bytes at once. */
+void text_add(struct text *text, const char *format, ...) __attribute__((format(printf, 2, 3)));
+/* Hands over the text, or frees it and tells the first failure. */
+fescue_status text_finish(struct text *text, char **out);
+/* value to so many significant digits, at most 15, trailing zeros dropped, whatever the locale. */
+const char *real_to_words(double value, int digits, char text[32]);
+
 #endif

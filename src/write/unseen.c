@@ -44,18 +44,6 @@ static bool has_low_rank(const struct run *run)
     return run->model->low_rank.rank > 0;
 }
 
-static enum basis basis_at(const struct run *run, uint32_t row, uint32_t column)
-{
-    const struct determined *determined = run->determined;
-    if (has_low_rank(run) && determined_basis(determined, row, column) == BASIS_LOW_RANK)
-        return BASIS_LOW_RANK;
-    if (has_row_effects(run) && determined->row_support[row] > 0)
-        return BASIS_OFFSETS;
-    if (has_column_effects(run) && determined->column_support[column] > 0)
-        return BASIS_OFFSETS;
-    return BASIS_MEAN;
-}
-
 static bool is_determined(const struct run *run, uint32_t row, uint32_t column, enum basis basis)
 {
     if (has_low_rank(run))
@@ -75,13 +63,13 @@ static double estimate_at(const struct run *run, uint32_t row, uint32_t column, 
 
 double run_estimate(const struct run *run, uint32_t row, uint32_t column)
 {
-    return estimate_at(run, row, column, basis_at(run, row, column));
+    return estimate_at(run, row, column, determined_basis(run->determined, row, column));
 }
 
 struct unseen run_unseen(const struct run *run, uint32_t row, uint32_t column)
 {
     const struct fescue_range *bounds = &run->model->bounds;
-    enum basis basis = basis_at(run, row, column);
+    enum basis basis = determined_basis(run->determined, row, column);
     struct unseen unseen = {estimate_at(run, row, column, basis), NAN, NAN, basis, false};
     unseen.is_blank = run->options->strict && !is_determined(run, row, column, basis);
     if (isfinite(run->halfwidth)) {
@@ -163,7 +151,7 @@ fescue_status run_count(struct run *run)
     for (uint32_t row = 0; row < cells->rows; row++)
         for (uint64_t k = cells->by_row.start[row]; k < cells->by_row.start[row + 1]; k++) {
             uint32_t column = cells->by_row.across[k];
-            enum basis basis = basis_at(run, row, column);
+            enum basis basis = determined_basis(run->determined, row, column);
             run->filled[basis]--;
             run->blank -= !is_determined(run, row, column, basis);
         }

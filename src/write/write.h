@@ -52,6 +52,8 @@ double run_estimate(const struct run *run, uint32_t row, uint32_t column);
 fescue_status run_count(struct run *run);
 /* Why a result is not written, for record and summary; NULL when it is. */
 const char *run_why_left_out(const struct run *run, bool is_written);
+/* Which bit of --write stands for which result: the order of its words in the list of options. */
+enum { WRITE_FILLED = 1, WRITE_CELLS = 2, WRITE_FACTORS = 4 };
 /* The words that go with every result that people read. */
 extern const char *const run_caution;
 

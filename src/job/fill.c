@@ -1,0 +1,222 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The main job:
+ *
+ *     table --> hold-out --> choice of offsets, rank, ridge --> fit on all cells --> what is determined --> files
+ *
+ * The error that is announced, and the half-width of the intervals, are those of the chosen model on cells that it did
+ * not see; the estimates are those of the fit on all cells, which has seen more and is no worse.
+ *
+ * Limits: of a --time-limit choosing gets `choosing_share`, the fit on all cells the rest. Either ends with what it has
+ * by then, and the summary says so. Only a job that is stopped before anything was fitted fails.
+ */
+#include "job/job_internal.h"
+
+#include <assert.h>
+#include <math.h>
+#include <string.h>
+#include <time.h>
+
+/* Choosing fits many ranks, the fit on all cells one, from a point that is nearly there. */
+static const double choosing_share = 0.7;
+
+static fescue_status table_check(const fescue_table *table)
+{
+    if (table->cells.count == 0)
+        return FAIL(table->context, FESCUE_BAD_DATA, "%s: no cell of the table holds a number: nothing to learn from",
+                    table->path == NULL ? "the table" : table->path);
+    return FESCUE_OK;
+}
+
+/* The solver by name; auto is the first of the list, which solver.c orders by preference. */
+static const struct solver *solver_choose(const struct fescue_options *options)
+{
+    size_t count;
+    const struct fescue_option *option = fescue_option_table(&count);
+    char name[128];
+    while (strcmp(option->name, "solver") != 0)
+        option++;
+    fescue_option_text(option, options, name, sizeof name);
+    const struct solver *solver = strcmp(name, "auto") == 0 ? solver_at(0) : solver_find(name);
+    assert(solver != NULL);
+    return solver;
+}
+
+static fescue_status fill_choose(fescue_fill *fill, const struct solver *solver)
+{
+    const struct cells *cells = &fill->table->cells;
+    struct fescue_options *options = &fill->options;
+    struct choose_request request = {.options = options, .solver = solver};
+    struct holdout holdout = {0};
+    fescue_status status;
+    if (options->time_limit > 0)
+        request.deadline = fill->wall + choosing_share * options->time_limit;
+    TRY(holdout_split(fill->context, cells, options->holdout, (uint64_t)options->seed, &holdout));
+    TRY(choose_run(fill->context, &holdout, &request, &fill->choice));
+    fill->run.hidden = holdout.hidden.count > 0 ? holdout.hidden.count : fill->choice.errors.count;
+done:
+    holdout_free(fill->context, &holdout);
+    return status;
+}
+
+static fescue_status fill_fit(fescue_fill *fill, const struct solver *solver)
+{
+    struct final_request request = {
+        .cells = &fill->table->cells, .options = &fill->options, .choice = &fill->choice, .solver = solver};
+    if (fill->options.time_limit > 0)
+        request.deadline = fill->wall + fill->options.time_limit;
+    return final_fit_run(fill->context, &request, &fill->fit);
+}
+
+static bool is_small(const struct cells *cells)
+{
+    return (uint64_t)cells->rows * cells->columns <= FESCUE_DENSE_MOST;
+}
+
+/* What writers see. */
+static void run_view(fescue_fill *fill)
+{
+    struct run *run = &fill->run;
+    unsigned write = fill->options.write;
+    bool is_auto = write == (unsigned)FESCUE_AUTO, is_dense = is_small(&fill->table->cells);
+    run->context = fill->context;
+    run->table = fill->table;
+    run->options = &fill->options;
+    run->model = &fill->fit.model;
+    run->choice = &fill->choice;
+    run->fit = &fill->fit.result;
+    run->start = fill->fit.start;
+    run->scale = fill->fit.scale;
+    run->determined = &fill->determined;
+    run->halfwidth = fill->choice.halfwidth;
+    run->writes_filled = is_auto ? is_dense : (write & WRITE_FILLED) != 0;
+    run->writes_cells = is_auto ? is_dense : (write & WRITE_CELLS) != 0;
+    run->writes_factors = is_auto || (write & WRITE_FACTORS) != 0;
+}
+
+static fescue_status fill_run(fescue_fill *fill)
+{
+    fescue_context *context = fill->context;
+    fescue_status status;
+    TRY(table_check(fill->table));
+    TRY(job_prepare(context, &fill->options));
+    const struct solver *solver = solver_choose(&fill->options);
+    TRY(fill_choose(fill, solver));
+    TRY(fill_fit(fill, solver));
+    low_rank_free(context, &fill->choice.start);
+    TRY(determined_create(context, &fill->table->cells, fill->fit.model.low_rank.rank, fill->fit.model.offsets.kind,
+                          &fill->determined));
+    run_view(fill);
+    TRY(run_count(&fill->run));
+    TRY(fill_summarise(fill, false, &fill->text));
+done:
+    return status;
+}
+
+fescue_status fescue_fill_table(const fescue_table *table, const struct fescue_options *options, fescue_fill **out)
+{
+    fescue_fill *fill = NULL;
+    fescue_status status = TAKE(table->context, 1, &fill);
+    *out = NULL;
+    if (status != FESCUE_OK)
+        return status;
+    fill->context = table->context;
+    fill->table = table;
+    fill->options = *options;
+    fill->options.output = NULL;
+    fill->wall = clock_wall();
+    fill->cpu = clock_cpu();
+    fill->run.started = (double)time(NULL);
+    status = fill_run(fill);
+    if (status != FESCUE_OK)
+        fescue_fill_destroy(&fill);
+    *out = fill;
+    return status;
+}
+
+double fescue_fill_estimate(const fescue_fill *fill, uint32_t row, uint32_t column)
+{
+    assert(row < fill->table->cells.rows && column < fill->table->cells.columns);
+    return run_estimate(&fill->run, row, column);
+}
+
+/* ---- files --------------------------------------------------------------------------------------------------------
+ */
+
+/* Asks whether to go on; a job that was asked to stop before, and has something to write all the same, writes it. */
+static fescue_status writing_tell(const fescue_fill *fill)
+{
+    if (fill->fit.result.stop == STOP_CANCELLED)
+        return FESCUE_OK;
+    return progress_tell(fill->context, "writing", -1);
+}
+
+/* Results of an older run in the same place that this one does not have must not lie beside its record. */
+static fescue_status names_retire(struct output *output)
+{
+    static const char *const names[] = {"filled.mtx",   "filled.csv", "filled.tsv",      "cells.csv",
+                                        "left.mtx",     "right.mtx",  "row-offsets.mtx", "column-offsets.mtx",
+                                        "spectrum.mtx", "trace.csv"};
+    fescue_status status = FESCUE_OK;
+    for (size_t k = 0; k < sizeof names / sizeof names[0] && status == FESCUE_OK; k++)
+        status = output_retire(output, names[k]);
+    return status;
+}
+
+static fescue_status results_add(const fescue_fill *fill, struct output *output)
+{
+    const struct run *run = &fill->run;
+    fescue_status status;
+    TRY(writing_tell(fill));
+    if (run->writes_filled)
+        TRY(write_filled(run, output));
+    TRY(writing_tell(fill));
+    if (run->writes_cells)
+        TRY(write_cells(run, output));
+    TRY(writing_tell(fill));
+    if (run->writes_factors)
+        TRY(write_factors(run, output));
+    TRY(write_trace(run, output));
+    TRY(names_retire(output));
+done:
+    return status;
+}
+
+fescue_status fescue_fill_write(fescue_fill *fill, const char *directory)
+{
+    struct output *output = NULL;
+    char *text = NULL;
+    fescue_status status;
+    TRY(output_open(fill->context, directory, "run.json", &output));
+    TRY(results_add(fill, output));
+    TRY(fill_summarise(fill, true, &text));
+    fill->run.seconds_wall = clock_wall() - fill->wall;
+    fill->run.seconds_cpu = clock_cpu() - fill->cpu;
+    TRY(write_record(&fill->run, output));
+    TRY(output_publish(&output));
+    GIVE(fill->context, &fill->text);
+    fill->text = text;
+    text = NULL;
+done:
+    GIVE(fill->context, &text);
+    output_abandon(&output);
+    return status;
+}
+
+const char *fescue_fill_text(const fescue_fill *fill)
+{
+    return fill->text;
+}
+
+void fescue_fill_destroy(fescue_fill **pointer)
+{
+    fescue_fill *fill = *pointer;
+    if (fill == NULL)
+        return;
+    fescue_context *context = fill->context;
+    determined_free(context, &fill->determined);
+    final_fit_free(context, &fill->fit);
+    choice_free(context, &fill->choice);
+    GIVE(context, &fill->text);
+    GIVE(context, pointer);
+}

@@ -1,0 +1,170 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The fit on all cells, with the offsets, rank and ridge that were chosen.
+ *
+ * The objective has many stationary points, and which one a local method ends in is decided by its start. Two starts
+ * fail on different tables: a point grown rank by rank is lost where all singular values are equal and few cells are
+ * seen, a truncated SVD of what was seen where they are unequal (Keshavan, Montanari, Oh 2010, is the latter). So both
+ * are tried:
+ *
+ *     grown      the point that choosing ended with, which it grew on the cells that were not hidden
+ *     spectral   truncated SVD of the trimmed, rescaled targets
+ *
+ * each improved until its gradient has fallen to `screen_gradient` or for `screen_iterations`; the lower objective is
+ * taken on to the tolerance asked for. A fit that meets the seen cells to rounding is not beaten: then the second start
+ * is left out. As solve_run gives back no worse than what came in, the result is never above the objective of the point
+ * that choosing ended with.
+ *
+ * Cost: at most twice one fit, and room for two points. What is parallel is so in the solvers.
+ */
+#include "job/job_internal.h"
+
+#include <math.h>
+#include <string.h>
+
+/* Enough to tell one basin from another: at 1e-4 of the first gradient the objective of a convergent fit is known to
+   about 1e-8 of its first value, far below the difference between two stationary points that matter. */
+static const double screen_gradient = 1e-4;
+enum { SCREEN_ITERATIONS = 100 };
+
+/* An objective that does not change by more over ten iterations is settled for every use of its point: the noise of a
+   hidden-cell error is larger by many powers of ten. */
+static const double settled_change = 1e-13;
+
+struct candidate {
+    const char *start;
+    struct low_rank point;
+    struct solve_result result;
+};
+
+static void candidate_free(fescue_context *context, struct candidate *candidate)
+{
+    low_rank_free(context, &candidate->point);
+    solve_result_free(context, &candidate->result);
+}
+
+/* Joins the lines of a second run to those of the first: its first line is the point that the first ended with. */
+static void trace_join(struct solve_result *result, uint64_t first)
+{
+    struct solve_step *trace = result->trace;
+    if (first == 0 || result->trace_count <= first)
+        return;
+    uint32_t iteration = trace[first - 1].iteration;
+    double seconds = trace[first - 1].seconds;
+    result->trace_count--;
+    memmove(trace + first, trace + first + 1, (result->trace_count - first) * sizeof *trace);
+    for (uint64_t k = first; k < result->trace_count; k++) {
+        trace[k].iteration += iteration;
+        trace[k].seconds += seconds;
+    }
+}
+
+/* Improves the candidate further. Being asked to stop is an outcome here: the point is as good as it is. */
+static fescue_status candidate_improve(struct problem *problem, const struct final_request *request,
+                                       const struct solve_limits *limits, struct candidate *candidate)
+{
+    struct solve_result *result = &candidate->result;
+    uint64_t lines = result->trace_count, iterations = result->iterations;
+    fescue_status status = solve_run(problem, request->solver, limits, &candidate->point, result);
+    trace_join(result, lines);
+    result->iterations += iterations;
+    return status == FESCUE_STOPPED ? FESCUE_OK : status;
+}
+
+static bool is_cut_short(const struct candidate *candidate)
+{
+    return candidate->result.stop == STOP_TIME || candidate->result.stop == STOP_CANCELLED;
+}
+
+static fescue_status grown_create(struct problem *problem, const struct choice *choice, struct candidate *candidate)
+{
+    candidate->start = "grown";
+    fescue_status status = low_rank_copy(problem->context, &choice->start, &candidate->point);
+    for (size_t k = 0; status == FESCUE_OK && k < candidate->point.rank; k++)
+        candidate->point.spectrum[k] /= problem->scale;
+    return status;
+}
+
+/* The better of the two starts, improved as far as screening goes. */
+static fescue_status candidate_choose(struct problem *problem, const struct final_request *request,
+                                      struct candidate *best)
+{
+    struct candidate other = {.start = "spectral"};
+    struct solve_limits screen = {.iterations = SCREEN_ITERATIONS, .deadline = request->deadline};
+    fescue_status status;
+    screen.gradient = fmax(screen_gradient, request->options->tolerance);
+    if (request->options->iterations < SCREEN_ITERATIONS)
+        screen.iterations = (uint64_t)request->options->iterations;
+    TRY(grown_create(problem, request->choice, best));
+    TRY(candidate_improve(problem, request, &screen, best));
+    if (best->result.stop == STOP_EXACT || is_cut_short(best))
+        return FESCUE_OK;
+    status = start_spectral(problem, best->point.rank, (uint64_t)request->options->seed, &other.point);
+    if (status == FESCUE_STOPPED) {
+        best->result.stop = STOP_CANCELLED;
+        return FESCUE_OK;
+    }
+    TRY(status);
+    TRY(candidate_improve(problem, request, &screen, &other));
+    if (other.result.objective < best->result.objective) {
+        struct candidate swapped = *best;
+        *best = other;
+        other = swapped;
+    }
+done:
+    candidate_free(problem->context, &other);
+    return status;
+}
+
+static fescue_status low_rank_fit(struct problem *problem, const struct final_request *request, struct candidate *best)
+{
+    struct solve_limits limits = {.iterations = (uint64_t)request->options->iterations,
+                                  .gradient = request->options->tolerance,
+                                  .change = settled_change,
+                                  .deadline = request->deadline};
+    fescue_status status;
+    if (request->choice->rank == 0) {
+        best->start = "none";
+        TRY(low_rank_create(problem->context, problem->target.rows, problem->target.columns, 0, &best->point));
+        return candidate_improve(problem, request, &limits, best);
+    }
+    TRY(candidate_choose(problem, request, best));
+    if (best->result.stop == STOP_EXACT || is_cut_short(best) || best->result.iterations >= limits.iterations)
+        return FESCUE_OK;
+    limits.iterations -= best->result.iterations;
+    TRY(candidate_improve(problem, request, &limits, best));
+done:
+    return status;
+}
+
+fescue_status final_fit_run(fescue_context *context, const struct final_request *request, struct final_fit *fit)
+{
+    struct problem problem = {0};
+    struct candidate best = {0};
+    struct model *model = &fit->model;
+    fescue_status status;
+    *fit = (struct final_fit){.model = {.rows = request->cells->rows, .columns = request->cells->columns}};
+    model->bounds = request->options->bounds;
+    TRY(offsets_fit(context, request->cells, request->choice->offsets, &model->offsets));
+    TRY(problem_create(context, request->cells, &model->offsets, request->choice->ridge, &problem));
+    TRY(low_rank_fit(&problem, request, &best));
+    fit->scale = problem.scale;
+    fit->start = best.start;
+    for (size_t k = 0; k < best.point.rank; k++)
+        best.point.spectrum[k] *= problem.scale;
+    model->low_rank = best.point;
+    fit->result = best.result;
+    best = (struct candidate){0};
+done:
+    candidate_free(context, &best);
+    problem_free(&problem);
+    if (status != FESCUE_OK)
+        final_fit_free(context, fit);
+    return status;
+}
+
+void final_fit_free(fescue_context *context, struct final_fit *fit)
+{
+    model_free(context, &fit->model);
+    solve_result_free(context, &fit->result);
+}

@@ -1,0 +1,189 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The summary of a fill: what a person wants to know, one matter a line.
+ */
+#include "job/job_internal.h"
+
+#include <inttypes.h>
+#include <math.h>
+#include <string.h>
+
+struct summary {
+    const fescue_fill *fill;
+    const struct run *run;
+    struct text text;
+};
+
+static void table_lines(struct summary *summary)
+{
+    const fescue_table *table = summary->fill->table;
+    const struct cells *cells = &table->cells;
+    char share[32];
+    double all = (double)cells->rows * (double)cells->columns;
+    text_add(&summary->text, "table      %" PRIu32 " rows x %" PRIu32 " columns, %" PRIu64 " cells seen (%s %%)\n",
+             cells->rows, cells->columns, cells->count, real_to_words(100 * (double)cells->count / all, 3, share));
+    if (table->duplicates > 0)
+        text_add(&summary->text, "           %" PRIu64 " cells came more than once and were merged\n",
+                 table->duplicates);
+}
+
+static const char *offsets_text(enum fescue_offsets offsets)
+{
+    switch (offsets) {
+    case FESCUE_OFFSETS_BOTH:
+        return "offsets of rows and columns";
+    case FESCUE_OFFSETS_ROWS:
+        return "offsets of rows";
+    case FESCUE_OFFSETS_COLUMNS:
+        return "offsets of columns";
+    case FESCUE_OFFSETS_MEAN:
+        return "the mean";
+    case FESCUE_OFFSETS_NONE:
+    case FESCUE_OFFSETS_AUTO:
+        break;
+    }
+    return "no offsets";
+}
+
+static const char *by_whom(bool is_auto)
+{
+    return is_auto ? "chosen" : "as asked";
+}
+
+static void model_lines(struct summary *summary)
+{
+    const struct fescue_options *options = &summary->fill->options;
+    const struct choice *choice = &summary->fill->choice;
+    struct text *text = &summary->text;
+    char ridge[32];
+    bool chooses_rank = options->rank == FESCUE_AUTO, chooses_ridge = options->ridge == (double)FESCUE_AUTO;
+    bool chooses_offsets = options->offsets == FESCUE_OFFSETS_AUTO;
+    text_add(text, "model      %s (%s), rank %" PRIu32 " (%s)", offsets_text(choice->offsets), by_whom(chooses_offsets),
+             choice->rank, by_whom(chooses_rank));
+    if (choice->rank > 0)
+        text_add(text, ", ridge %s (%s)", real_to_words(choice->ridge, 3, ridge), by_whom(chooses_ridge));
+    text_add(text, "\n");
+    if (choice->path_count > 1)
+        text_add(text, "           out of %" PRIu64 " that were tried on %" PRIu64 " hidden cells\n",
+                 choice->path_count, choice->errors.count);
+    if (choice->rank == 0 && chooses_rank && choice->errors.count > 0)
+        text_add(text, "           no usable low-rank structure: offsets alone predict hidden cells better\n");
+    if (!chooses_rank && choice->rank < options->rank)
+        text_add(text, "           rank %" PRId64 " was asked for; the table is too small for it\n", options->rank);
+}
+
+static void error_lines(struct summary *summary)
+{
+    const struct choice *choice = &summary->fill->choice;
+    const struct errors *errors = &choice->errors, *alone = &choice->offsets_errors;
+    struct text *text = &summary->text;
+    char rmse[32], mae[32], alone_rmse[32], alone_mae[32];
+    if (errors->count == 0) {
+        text_add(text, "error      not measured: no cells were hidden\n");
+        return;
+    }
+    text_add(text, "error      RMSE %s, MAE %s on %" PRIu64 " hidden cells\n", real_to_words(errors->rmse, 4, rmse),
+             real_to_words(errors->mae, 4, mae), errors->count);
+    if (choice->rank > 0)
+        text_add(text, "           offsets alone: RMSE %s, MAE %s\n", real_to_words(alone->rmse, 4, alone_rmse),
+                 real_to_words(alone->mae, 4, alone_mae));
+    if (choice->noiseless)
+        text_add(text, "           the hidden cells are met to rounding: the table is free of noise\n");
+    if (choice->own_holdout)
+        text_add(text, "           no cells were to be kept hidden; a tenth was, for the choice alone\n");
+    text_add(text, "           they were hidden at random: where holes are long runs or late starts, expect more\n");
+}
+
+static void interval_line(struct summary *summary)
+{
+    char level[32], halfwidth[32];
+    double h = summary->run->halfwidth;
+    real_to_words(100 * summary->fill->options.interval, 3, level);
+    if (isfinite(h))
+        text_add(&summary->text, "interval   estimate +- %s holds %s %% of such cells\n",
+                 real_to_words(h, 4, halfwidth), level);
+    else if (summary->fill->choice.errors.count > 0)
+        text_add(&summary->text, "interval   none: too few hidden cells for %s %%\n", level);
+    else
+        text_add(&summary->text, "interval   none: no cells were hidden\n");
+}
+
+static const char *advice(enum solve_stop stop)
+{
+    switch (stop) {
+    case STOP_ITERATIONS:
+        return "more --iterations, or a larger --tolerance, would end it";
+    case STOP_TIME:
+        return "give it a longer --time-limit, or a --rank to spare it the search";
+    case STOP_CANCELLED:
+        return "run it again to its end before the results are used";
+    default:
+        return "its error on hidden cells was measured all the same";
+    }
+}
+
+static void fit_lines(struct summary *summary)
+{
+    const struct solve_result *result = &summary->fill->fit.result;
+    struct text *text = &summary->text;
+    if (summary->fill->fit.model.low_rank.rank == 0)
+        return;
+    text_add(text, "fit        %s on all cells, %" PRIu64 " iterations: %s\n", result->solver, result->iterations,
+             solve_stop_text(result->stop));
+    if (!solve_converged(result->stop))
+        text_add(text, "           WARNING: the fit did not converge; %s\n", advice(result->stop));
+}
+
+static void filled_lines(struct summary *summary)
+{
+    const struct run *run = summary->run;
+    struct text *text = &summary->text;
+    uint64_t low_rank = run->filled[BASIS_LOW_RANK], offsets = run->filled[BASIS_OFFSETS];
+    uint64_t mean = run->filled[BASIS_MEAN], all = low_rank + offsets + mean;
+    if (all == 0) {
+        text_add(text, "filled     nothing: every cell was seen\n");
+        return;
+    }
+    text_add(text,
+             "filled     %" PRIu64 " cells; by what the data determine: low-rank %" PRIu64 ", offsets %" PRIu64
+             ", mean %" PRIu64 "\n",
+             all - run->blank, low_rank, offsets, mean);
+    if (run->blank > 0)
+        text_add(text, "           %" PRIu64 " left blank, as the data do not determine them (--strict)\n", run->blank);
+    else if (run->model->low_rank.rank > 0 && offsets + mean > 0 && !run->options->strict)
+        text_add(text, "           do not rely on the %" PRIu64 " that are not low-rank; --strict leaves them blank\n",
+                 offsets + mean);
+}
+
+static void left_out_line(struct summary *summary, const char *name, const char *why)
+{
+    if (why != NULL)
+        text_add(&summary->text, "           not %s: %s\n", name, why);
+}
+
+static void files_lines(struct summary *summary)
+{
+    const struct run *run = summary->run;
+    const char *name = filled_name(run->table);
+    text_add(&summary->text, "written    %s%s%s%strace.csv, run.json\n", run->writes_filled ? name : "",
+             run->writes_filled ? ", " : "", run->writes_cells ? "cells.csv, " : "",
+             run->writes_factors ? "factors, " : "");
+    left_out_line(summary, name, run_why_left_out(run, run->writes_filled));
+    left_out_line(summary, "cells.csv", run_why_left_out(run, run->writes_cells));
+    left_out_line(summary, "the factors", run_why_left_out(run, run->writes_factors));
+}
+
+fescue_status fill_summarise(const fescue_fill *fill, bool is_written, char **text)
+{
+    struct summary summary = {.fill = fill, .run = &fill->run, .text = {.context = fill->context}};
+    table_lines(&summary);
+    model_lines(&summary);
+    error_lines(&summary);
+    interval_line(&summary);
+    fit_lines(&summary);
+    filled_lines(&summary);
+    if (is_written)
+        files_lines(&summary);
+    text_add(&summary.text, "%s\n", run_caution);
+    return text_finish(&summary.text, text);
+}
