@@ -27,7 +27,8 @@ fescue_status errors_measure(fescue_context *context, const struct cells *hidden
                              double *residuals, struct errors *errors);
 
 /* Half-width h so that a share of at least `level` of |residuals| is within it: the ceil((n+1) level)-th smallest, the
-   split-conformal quantile (Vovk, Gammerman, Shafer 2005); infinite when n is too small. Sorts residuals' sizes. */
+   split-conformal quantile (Vovk, Gammerman, Shafer 2005); infinite when n is too small. Leaves the sizes in
+   residuals. */
 double interval_halfwidth(double *residuals, uint64_t count, double level);
 
 /* One point of the path that was tried. */

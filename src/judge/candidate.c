@@ -1,0 +1,159 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * One fit and what the hidden cells say of it.
+ *
+ * Two fits are compared by paired differences: with e and e' their errors on the same hidden cell, d = e^2 - e'^2 has a
+ * much smaller spread than either, since the noise of the cell is in both. The errors of one row hang together (they
+ * share that row's factor), so the standard error of mean(d) is taken over groups of hidden cells that are neighbours
+ * in row order, and only the groups' sums are kept: with N hidden cells, G groups of n_g cells, D_g the sum of d in
+ * group g,
+ *
+ *     mean = sum_g D_g / N,      error^2 = G/(G-1) sum_g (D_g - n_g mean)^2 / N^2.
+ */
+#include "judge/choose_internal.h"
+
+#include <math.h>
+
+/* Enough groups for a standard error of its own accuracy 1/sqrt(2G) = 2 %, few enough to keep one set a rank. */
+enum { GROUPS_MOST = 1024 };
+
+fescue_status candidate_create(struct chooser *chooser, struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    const struct cells *kept = chooser->kept;
+    uint64_t hidden = chooser->hidden->count;
+    chooser->groups = hidden < GROUPS_MOST ? (size_t)hidden : GROUPS_MOST;
+    *candidate = (struct candidate){.errors.rmse = INFINITY, .objective = INFINITY};
+    TRY(TAKE(chooser->context, chooser->groups, &candidate->square));
+    TRY(low_rank_create(chooser->context, kept->rows, kept->columns, 0, &candidate->point));
+done:
+    if (status != FESCUE_OK)
+        candidate_free(chooser, candidate);
+    return status;
+}
+
+void candidate_free(struct chooser *chooser, struct candidate *candidate)
+{
+    GIVE(chooser->context, &candidate->square);
+    low_rank_free(chooser->context, &candidate->point);
+}
+
+fescue_status candidate_copy(struct chooser *chooser, const struct candidate *from, struct candidate *to)
+{
+    fescue_status status = FESCUE_OK;
+    struct low_rank point = {0};
+    double *square = to->square;
+    TRY(low_rank_copy(chooser->context, &from->point, &point));
+    low_rank_free(chooser->context, &to->point);
+    *to = *from;
+    to->point = point;
+    to->square = square;
+    for (size_t g = 0; g < chooser->groups; g++)
+        square[g] = from->square[g];
+done:
+    return status;
+}
+
+void candidate_swap(struct candidate *a, struct candidate *b)
+{
+    struct candidate kept = *a;
+    *a = *b;
+    *b = kept;
+}
+
+/* The first hidden cell of group g. */
+static uint64_t group_start(const struct chooser *chooser, size_t g)
+{
+    uint64_t count = chooser->hidden->count, whole = count / chooser->groups, rest = count % chooser->groups;
+    return g * whole + (g < rest ? g : rest);
+}
+
+static void groups_sum(const struct chooser *chooser, double *square)
+{
+    for (size_t g = 0; g < chooser->groups; g++) {
+        square[g] = 0;
+        for (uint64_t k = group_start(chooser, g); k < group_start(chooser, g + 1); k++)
+            square[g] += chooser->residuals[k] * chooser->residuals[k];
+    }
+}
+
+static fescue_status path_note(struct chooser *chooser, const struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    if (chooser->path_count == chooser->path_capacity) {
+        uint64_t capacity = 2 * chooser->path_capacity + 16;
+        TRY(RESIZE(chooser->context, capacity, &chooser->path));
+        chooser->path_capacity = capacity;
+    }
+    chooser->path[chooser->path_count++] = (struct choose_step){.offsets = candidate->offsets,
+                                                                .rank = (uint32_t)candidate->point.rank,
+                                                                .ridge = candidate->ridge,
+                                                                .errors = candidate->errors};
+done:
+    return status;
+}
+
+fescue_status candidate_measure(struct chooser *chooser, struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    /* Numbers are held to 2^-53 or 2^-24, and a few hundred roundings go into an estimate. */
+    static const double double_rounding = 1e-7, single_rounding = 1e-5;
+    bool is_single = chooser->kept->precision == FESCUE_SINGLE;
+    struct model model = {.rows = chooser->kept->rows,
+                          .columns = chooser->kept->columns,
+                          .offsets = *chooser->offsets,
+                          .low_rank = candidate->point,
+                          .bounds = chooser->options->bounds};
+    for (size_t k = 0; k < candidate->point.rank; k++)
+        chooser->spectrum[k] = candidate->point.spectrum[k] * chooser->problem.scale;
+    model.low_rank.spectrum = chooser->spectrum;
+    TRY(errors_measure(chooser->context, chooser->hidden, &model, chooser->residuals, &candidate->errors));
+    groups_sum(chooser, candidate->square);
+    candidate->offsets = chooser->offsets->kind;
+    if (!isfinite(candidate->errors.rmse))
+        candidate->errors.rmse = INFINITY;
+    candidate->is_exact =
+        candidate->errors.count > 0 &&
+        candidate->errors.rmse <= (is_single ? single_rounding : double_rounding) * chooser->problem.scale;
+    TRY(path_note(chooser, candidate));
+done:
+    return status;
+}
+
+fescue_status candidate_fit(struct chooser *chooser, double ridge, const struct solve_limits *limits,
+                            struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    struct solve_result result = {0};
+    problem_set_ridge(&chooser->problem, ridge);
+    TRY(progress_tell(chooser->context, "choosing", -1));
+    TRY(solve_run(&chooser->problem, chooser->solver, limits, &candidate->point, &result));
+    candidate->ridge = ridge;
+    candidate->objective = result.objective;
+    candidate->kept_rmse = result.rmse;
+    TRY(candidate_measure(chooser, candidate));
+done:
+    solve_result_free(chooser->context, &result);
+    return status;
+}
+
+bool candidate_beats(const struct chooser *chooser, const struct candidate *large, const struct candidate *small,
+                     double errors)
+{
+    size_t groups = chooser->groups;
+    double count = (double)chooser->hidden->count, mean = 0, spread = 0;
+    if (!isfinite(large->errors.rmse))
+        return false;
+    if (!isfinite(small->errors.rmse))
+        return true;
+    for (size_t g = 0; g < groups; g++)
+        mean += (small->square[g] - large->square[g]) / count;
+    for (size_t g = 0; g < groups; g++) {
+        double share = (double)(group_start(chooser, g + 1) - group_start(chooser, g)) / count;
+        double away = (small->square[g] - large->square[g]) / count - share * mean;
+        spread += away * away;
+    }
+    if (groups < 2)
+        return false; /* one hidden cell has no spread to judge by */
+    return mean > errors * sqrt(spread * (double)groups / (double)(groups - 1));
+}

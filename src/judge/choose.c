@@ -1,0 +1,299 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Which offsets, rank and ridge: fits on the kept cells, the hidden ones judge.
+ *
+ * For each kind of offsets that competes a path over ranks (choose_path), at each rank a short walk along a ladder of
+ * ridges (choose_ridge). When the offsets are to be chosen, two kinds compete: none, and both (with mean). Two-way
+ * effects count as one component more, since they have as many unknowns as one, and the fit with more components must
+ * beat the other by a standard error (candidate). A table that is U V' and nothing else thus keeps clear of offsets
+ * that would leave components of their own behind, and a table of strong effects gets them. Offsets that explain
+ * nothing of the hidden cells on their own are not followed any further.
+ *
+ * The winner is fitted again with finer limits, challenged once from the spectral start, and its ridge checked again,
+ * because a loose fit is a shrunk one; the announced error is that of this fit.
+ *
+ * The hidden cells both choose and measure, so the announced error of the chosen fit is the least of several. They are
+ * many against the few dozen fits that compete, and differences between near-best fits are far smaller than the error.
+ *
+ * Cost: some 3 loose fits a rank and kind. Everything is a function of the input and the seed.
+ */
+#include "judge/choose_internal.h"
+
+#include <assert.h>
+#include <math.h>
+
+/* Share that is hidden for the choice when the user hides nothing. */
+static const double own_share = 0.1;
+
+bool chooser_is_late(const struct chooser *chooser)
+{
+    return chooser->deadline > 0 && clock_wall() >= chooser->deadline;
+}
+
+/* For comparing: the error on hidden cells settles long before the gradient does. */
+struct solve_limits chooser_loose_limits(const struct chooser *chooser)
+{
+    uint64_t most = (uint64_t)chooser->options->iterations;
+    return (struct solve_limits){
+        .iterations = most < 40 ? most : 40, .gradient = 1e-4, .change = 3e-3, .deadline = chooser->deadline};
+}
+
+/* For announcing: the error to three or four digits. */
+struct solve_limits chooser_fine_limits(const struct chooser *chooser)
+{
+    return (struct solve_limits){.iterations = (uint64_t)chooser->options->iterations,
+                                 .gradient = chooser->options->tolerance,
+                                 .change = 1e-5,
+                                 .deadline = chooser->deadline};
+}
+
+size_t chooser_rank_most(const struct chooser *chooser)
+{
+    uint64_t rows = chooser->kept->rows, columns = chooser->kept->columns, rank = 0;
+    uint64_t most = rows < columns ? rows : columns;
+    while (rank < most && (rank + 1) * (rows + columns - rank - 1) <= chooser->kept->count)
+        rank++;
+    return (size_t)rank;
+}
+
+fescue_status chooser_take_up(struct chooser *chooser, const struct offsets *offsets)
+{
+    fescue_status status = FESCUE_OK;
+    if (chooser->has_problem && chooser->offsets == offsets)
+        goto done;
+    if (chooser->has_problem)
+        problem_free(&chooser->problem);
+    chooser->has_problem = false;
+    chooser->offsets = offsets;
+    TRY(problem_create(chooser->context, chooser->kept, offsets, 0, &chooser->problem));
+    chooser->has_problem = true;
+done:
+    return status;
+}
+
+static fescue_status chooser_open(struct chooser *chooser)
+{
+    fescue_status status = FESCUE_OK;
+    size_t rank_most = (size_t)(chooser->options->rank > chooser->options->rank_most ? chooser->options->rank
+                                                                                     : chooser->options->rank_most);
+    TRY(TAKE(chooser->context, chooser->hidden->count, &chooser->residuals));
+    TRY(TAKE(chooser->context, rank_most, &chooser->spectrum));
+done:
+    return status;
+}
+
+static void chooser_close(struct chooser *chooser)
+{
+    if (chooser->has_problem)
+        problem_free(&chooser->problem);
+    GIVE(chooser->context, &chooser->residuals);
+    GIVE(chooser->context, &chooser->spectrum);
+    GIVE(chooser->context, &chooser->path);
+}
+
+/* ---- the kinds of offsets --------------------------------------------------------------------------------------- */
+
+struct kind {
+    struct offsets offsets;
+    struct candidate alone; /* rank 0 */
+    bool competes;
+};
+enum { KINDS_MOST = 2 };
+
+static fescue_status kinds_open(struct chooser *chooser, struct kind *kinds, size_t *count)
+{
+    fescue_status status = FESCUE_OK;
+    static const enum fescue_offsets rivals[KINDS_MOST] = {FESCUE_OFFSETS_NONE, FESCUE_OFFSETS_BOTH};
+    enum fescue_offsets given = (enum fescue_offsets)chooser->options->offsets;
+    if (given == FESCUE_OFFSETS_AUTO && chooser->hidden->count == 0)
+        given = FESCUE_OFFSETS_BOTH; /* nothing judges: the shrunk effects do the least harm */
+    *count = given == FESCUE_OFFSETS_AUTO ? KINDS_MOST : 1;
+    for (size_t k = 0; k < *count; k++) {
+        struct kind *kind = &kinds[k];
+        TRY(offsets_fit(chooser->context, chooser->kept, *count == 1 ? given : rivals[k], &kind->offsets));
+        TRY(chooser_take_up(chooser, &kind->offsets));
+        TRY(candidate_create(chooser, &kind->alone));
+        TRY(candidate_measure(chooser, &kind->alone));
+        kind->competes = k == 0 || candidate_beats(chooser, &kind->alone, &kinds[0].alone, 1);
+    }
+done:
+    return status;
+}
+
+static void kinds_close(struct chooser *chooser, struct kind *kinds)
+{
+    for (size_t k = 0; k < KINDS_MOST; k++) {
+        candidate_free(chooser, &kinds[k].alone);
+        offsets_free(chooser->context, &kinds[k].offsets);
+    }
+}
+
+/* Components, two-way effects counting as one. */
+static size_t candidate_size(const struct candidate *candidate)
+{
+    return candidate->point.rank + (candidate->offsets == FESCUE_OFFSETS_BOTH);
+}
+
+/* The better of two kinds: the smaller unless the larger beats it. */
+static bool is_second_better(const struct chooser *chooser, const struct candidate *first,
+                             const struct candidate *second)
+{
+    if (first->is_exact != second->is_exact)
+        return second->is_exact;
+    if (candidate_size(second) > candidate_size(first))
+        return !first->is_exact && candidate_beats(chooser, second, first, 1);
+    if (candidate_size(second) < candidate_size(first))
+        return first->is_exact || !candidate_beats(chooser, first, second, 1);
+    return second->errors.rmse < first->errors.rmse;
+}
+
+static fescue_status kind_follow(struct chooser *chooser, struct kind *kind, size_t rank_most,
+                                 struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    int64_t rank = chooser->options->rank;
+    TRY(chooser_take_up(chooser, &kind->offsets));
+    if (rank == FESCUE_AUTO)
+        TRY(path_walk(chooser, rank_most, candidate));
+    else
+        TRY(path_climb(chooser, rank_most, candidate));
+done:
+    return status;
+}
+
+static size_t rank_limit(const struct chooser *chooser)
+{
+    const struct cells *kept = chooser->kept;
+    size_t shorter = kept->rows < kept->columns ? kept->rows : kept->columns;
+    if (chooser->options->rank != FESCUE_AUTO) {
+        size_t given = (size_t)chooser->options->rank;
+        return given < shorter ? given : shorter;
+    }
+    if (chooser->hidden->count == 0)
+        return 0; /* nothing judges */
+    size_t asked = (size_t)chooser->options->rank_most, most = chooser_rank_most(chooser);
+    return asked < most ? asked : most;
+}
+
+/* *winner and the kind it belongs to. */
+static fescue_status kinds_compete(struct chooser *chooser, struct kind *kinds, size_t count, struct candidate *winner,
+                                   size_t *best)
+{
+    fescue_status status = FESCUE_OK;
+    struct candidate candidate = {0};
+    size_t most = rank_limit(chooser);
+    *best = 0;
+    TRY(kind_follow(chooser, &kinds[0], most, winner));
+    for (size_t k = 1; k < count; k++) {
+        if (!kinds[k].competes || chooser_is_late(chooser))
+            continue;
+        candidate_free(chooser, &candidate);
+        TRY(kind_follow(chooser, &kinds[k], most, &candidate));
+        if (is_second_better(chooser, winner, &candidate)) {
+            candidate_swap(winner, &candidate);
+            *best = k;
+        }
+    }
+done:
+    candidate_free(chooser, &candidate);
+    return status;
+}
+
+/* ---- the whole -------------------------------------------------------------------------------------------------- */
+
+static fescue_status winner_finish(struct chooser *chooser, struct candidate *winner)
+{
+    fescue_status status = FESCUE_OK;
+    struct solve_limits fine = chooser_fine_limits(chooser), loose = chooser_loose_limits(chooser);
+    bool is_judged = chooser->hidden->count > 0;
+    if (winner->point.rank > 0 && !winner->is_exact && is_judged) {
+        TRY(path_challenge(chooser, &loose, winner));
+        TRY(ridge_search(chooser, &fine, winner));
+        TRY(path_try_exact(chooser, winner));
+    }
+    TRY(candidate_measure(chooser, winner)); /* the residuals are the winner's again */
+done:
+    return status;
+}
+
+static fescue_status choice_fill(struct chooser *chooser, struct kind *kinds, size_t best, struct candidate *winner,
+                                 struct choice *choice)
+{
+    fescue_status status = FESCUE_OK;
+    bool is_judged = chooser->hidden->count > 0;
+    choice->offsets = winner->offsets;
+    choice->rank = (uint32_t)winner->point.rank;
+    choice->ridge = winner->point.rank == 0 ? 0 : winner->ridge;
+    choice->errors = is_judged ? winner->errors : (struct errors){0};
+    choice->offsets_errors = is_judged ? kinds[best].alone.errors : (struct errors){0};
+    choice->offsets_only_rank0_rmse = choice->offsets_errors.rmse;
+    for (size_t k = 0; k < KINDS_MOST; k++) {
+        bool is_there = kinds[k].alone.square != NULL && is_judged;
+        if (is_there && kinds[k].alone.errors.rmse < choice->offsets_only_rank0_rmse)
+            choice->offsets_only_rank0_rmse = kinds[k].alone.errors.rmse;
+    }
+    choice->noiseless = winner->is_exact;
+    choice->halfwidth =
+        is_judged ? interval_halfwidth(chooser->residuals, chooser->hidden->count, chooser->options->interval) : NAN;
+    TRY(low_rank_copy(chooser->context, &winner->point, &choice->start));
+    for (size_t k = 0; k < choice->start.rank; k++)
+        choice->start.spectrum[k] *= chooser->problem.scale;
+    TRY(RESIZE(chooser->context, chooser->path_count, &chooser->path));
+    choice->path = chooser->path;
+    choice->path_count = chooser->path_count;
+    chooser->path = NULL;
+done:
+    return status;
+}
+
+static fescue_status choose_on(fescue_context *context, const struct holdout *holdout,
+                               const struct choose_request *request, struct choice *choice)
+{
+    fescue_status status = FESCUE_OK;
+    struct chooser chooser = {.context = context,
+                              .options = request->options,
+                              .solver = request->solver,
+                              .deadline = request->deadline,
+                              .kept = &holdout->kept,
+                              .hidden = &holdout->hidden};
+    struct kind kinds[KINDS_MOST] = {0};
+    struct candidate winner = {0};
+    size_t count = 0, best = 0;
+    TRY(chooser_open(&chooser));
+    TRY(kinds_open(&chooser, kinds, &count));
+    TRY(kinds_compete(&chooser, kinds, count, &winner, &best));
+    TRY(chooser_take_up(&chooser, &kinds[best].offsets));
+    TRY(winner_finish(&chooser, &winner));
+    TRY(choice_fill(&chooser, kinds, best, &winner, choice));
+done:
+    candidate_free(&chooser, &winner);
+    kinds_close(&chooser, kinds);
+    chooser_close(&chooser);
+    return status;
+}
+
+fescue_status choose_run(fescue_context *context, const struct holdout *holdout, const struct choose_request *request,
+                         struct choice *choice)
+{
+    fescue_status status = FESCUE_OK;
+    const struct fescue_options *options = request->options;
+    struct holdout own = {0};
+    bool is_open =
+        options->rank == FESCUE_AUTO || options->ridge == FESCUE_AUTO || options->offsets == FESCUE_OFFSETS_AUTO;
+    *choice = (struct choice){.own_holdout = is_open && holdout->hidden.count == 0};
+    if (choice->own_holdout)
+        TRY(holdout_split(context, &holdout->kept, own_share, (uint64_t)options->seed, &own));
+    TRY(choose_on(context, choice->own_holdout ? &own : holdout, request, choice));
+done:
+    holdout_free(context, &own);
+    if (status != FESCUE_OK)
+        choice_free(context, choice);
+    return status;
+}
+
+void choice_free(fescue_context *context, struct choice *choice)
+{
+    GIVE(context, &choice->path);
+    low_rank_free(context, &choice->start);
+    choice->path_count = 0;
+}

@@ -1,0 +1,80 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The inside of the choice: one fit and what the hidden cells say of it (candidate), the ladder of ridges
+ * (choose_ridge), the path over ranks (choose_path), and all together (choose).
+ */
+#ifndef FESCUE_CHOOSE_INTERNAL_H
+#define FESCUE_CHOOSE_INTERNAL_H
+
+#include "judge/judge.h"
+
+/* What the whole choice works on. */
+struct chooser {
+    fescue_context *context;
+    const struct fescue_options *options;
+    const struct solver *solver;
+    double deadline;
+    const struct cells *kept, *hidden;
+
+    const struct offsets *offsets; /* those at hand; borrowed */
+    struct problem problem;        /* what they leave of the kept cells */
+    bool has_problem;
+
+    double *residuals; /* one a hidden cell */
+    double *spectrum;  /* one a component, in the table's units */
+    size_t groups;     /* how many groups the hidden cells are judged in */
+
+    struct choose_step *path;
+    uint64_t path_count, path_capacity;
+};
+
+/* One fit. The ridge is a rung of the ladder, or the user's own. */
+struct candidate {
+    enum fescue_offsets offsets;
+    size_t rung;
+    double ridge;
+    double objective, kept_rmse; /* in the problem's units */
+    struct errors errors;        /* on the hidden cells, table units; infinite when the fit blew up */
+    double *square;              /* sum of squared errors of each group of hidden cells */
+    struct low_rank point;       /* in the problem's units */
+    bool is_exact;               /* the hidden cells are met to rounding */
+};
+fescue_status candidate_create(struct chooser *chooser, struct candidate *candidate); /* rank 0, not yet measured */
+void candidate_free(struct chooser *chooser, struct candidate *candidate);
+fescue_status candidate_copy(struct chooser *chooser, const struct candidate *from, struct candidate *to);
+void candidate_swap(struct candidate *a, struct candidate *b);
+/* Lets the solver improve the point under `ridge`, measures it on the hidden cells and notes it in the path. */
+fescue_status candidate_fit(struct chooser *chooser, double ridge, const struct solve_limits *limits,
+                            struct candidate *candidate);
+/* As it is, without a fit. */
+fescue_status candidate_measure(struct chooser *chooser, struct candidate *candidate);
+/* Whether `large` has less error on the hidden cells than `small` by more than `errors` standard errors of the paired
+   difference. */
+bool candidate_beats(const struct chooser *chooser, const struct candidate *large, const struct candidate *small,
+                     double errors);
+
+/* The ladder, from the strongest ridge down to none. */
+size_t ridge_rungs(void);
+double ridge_rung(size_t rung);
+size_t ridge_first_rung(void); /* where a search without any knowledge begins */
+/* Fits under the candidate's own ridge and, when the ridge is to be chosen, under its neighbours on the ladder as long
+   as the hidden cells gain. */
+fescue_status ridge_search(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate);
+
+bool chooser_is_late(const struct chooser *chooser);
+/* Takes up other offsets: the problem is what they leave of the kept cells. */
+fescue_status chooser_take_up(struct chooser *chooser, const struct offsets *offsets);
+struct solve_limits chooser_loose_limits(const struct chooser *chooser);
+struct solve_limits chooser_fine_limits(const struct chooser *chooser);
+size_t chooser_rank_most(const struct chooser *chooser); /* the largest rank that the kept cells allow */
+
+/* The path over ranks 0, 1, 2, ... under the offsets at hand; *chosen is the smallest rank that no larger one beats. */
+fescue_status path_walk(struct chooser *chooser, size_t rank_most, struct candidate *chosen);
+/* To a given rank, without judging the ranks on the way. */
+fescue_status path_climb(struct chooser *chooser, size_t rank, struct candidate *chosen);
+/* A rival from the spectral start at the candidate's rank and ridge; takes its place when it has less error. */
+fescue_status path_challenge(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate);
+/* When the errors are small: whether a tight fit without ridge meets the hidden cells to rounding. */
+fescue_status path_try_exact(struct chooser *chooser, struct candidate *candidate);
+
+#endif

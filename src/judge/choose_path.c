@@ -1,0 +1,149 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The path over ranks, judged on the hidden cells.
+ *
+ * Rank r starts from the best fit at rank r - 1, to which the leading singular pair of its residual is appended
+ * (start_grow): from a rank-grown start nearly every local method converges, while from the spectral one all fail when
+ * the singular values differ much and cells are few. The opposite happens too: with equal singular values and few cells
+ * growing can get stuck where the spectral start does not. So a rank that brings no gain is challenged by a fit from
+ * the spectral start before it is believed.
+ *
+ * A larger rank takes over when it beats the chosen one by a standard error of the paired differences of squared errors
+ * (two, over rank 0: that a table has low-rank structure at all asks for firmer ground, and a strong ridge makes fits
+ * that differ from nothing so little that one error is passed by chance too often). The path ends when no rank has been
+ * best for 3 + r/4 ranks, r the best so far.
+ *
+ * Cost: a few fits of at most 40 loose iterations a rank.
+ */
+#include "judge/choose_internal.h"
+
+#include <math.h>
+
+/* The relative gain below which a rank counts as bringing nothing. */
+static const double gain_worth = 1e-4;
+
+static bool is_larger_better(const struct chooser *chooser, const struct candidate *large,
+                             const struct candidate *small)
+{
+    static const double over_nothing = 2, over_less = 1;
+    return candidate_beats(chooser, large, small, small->point.rank == 0 ? over_nothing : over_less);
+}
+
+fescue_status path_challenge(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    struct candidate rival = {0};
+    struct low_rank point = {0};
+    if (chooser_is_late(chooser))
+        goto done;
+    TRY(candidate_create(chooser, &rival));
+    TRY(start_spectral(&chooser->problem, candidate->point.rank, (uint64_t)chooser->options->seed, &point));
+    low_rank_free(chooser->context, &rival.point);
+    rival.point = point;
+    rival.rung = candidate->rung;
+    TRY(candidate_fit(chooser, candidate->ridge, limits, &rival));
+    if (rival.errors.rmse < candidate->errors.rmse * (1 - gain_worth))
+        candidate_swap(&rival, candidate);
+done:
+    candidate_free(chooser, &rival);
+    return status;
+}
+
+fescue_status path_try_exact(struct chooser *chooser, struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    /* Errors above this share of the signal are noise, or too far from a solution to tell. */
+    static const double suspicion = 0.02;
+    bool ridge_allows = chooser->options->ridge == FESCUE_AUTO || chooser->options->ridge == 0;
+    struct candidate tight = {0};
+    if (!ridge_allows || candidate->point.rank == 0 || candidate->is_exact || chooser_is_late(chooser) ||
+        candidate->errors.rmse > suspicion * chooser->problem.scale)
+        goto done;
+    /* Without noise the objective falls by a factor an iteration until nothing is left of it; with noise it soon stops
+       changing. So a loose limit on change ends the second case early and never the first. */
+    struct solve_limits limits = {.iterations = (uint64_t)chooser->options->iterations,
+                                  .gradient = 1e-13,
+                                  .change = 1e-2,
+                                  .deadline = chooser->deadline};
+    TRY(candidate_create(chooser, &tight));
+    TRY(candidate_copy(chooser, candidate, &tight));
+    tight.rung = ridge_rungs() - 1;
+    TRY(candidate_fit(chooser, 0, &limits, &tight));
+    if (tight.is_exact)
+        candidate_swap(&tight, candidate);
+done:
+    candidate_free(chooser, &tight);
+    return status;
+}
+
+/* One rank more than the candidate has. */
+static fescue_status rank_step(struct chooser *chooser, double best_rmse, struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    struct solve_limits limits = chooser_loose_limits(chooser);
+    TRY(start_grow(&chooser->problem, (uint64_t)chooser->options->seed, &candidate->point));
+    TRY(ridge_search(chooser, &limits, candidate));
+    if (candidate->errors.rmse >= best_rmse * (1 - gain_worth))
+        TRY(path_challenge(chooser, &limits, candidate));
+    TRY(path_try_exact(chooser, candidate));
+done:
+    return status;
+}
+
+static fescue_status candidate_at_zero(struct chooser *chooser, struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    TRY(candidate_create(chooser, candidate));
+    candidate->rung = ridge_first_rung();
+    TRY(candidate_measure(chooser, candidate));
+done:
+    return status;
+}
+
+fescue_status path_walk(struct chooser *chooser, size_t rank_most, struct candidate *chosen)
+{
+    fescue_status status = FESCUE_OK;
+    struct candidate current = {0};
+    TRY(candidate_at_zero(chooser, chosen));
+    TRY(candidate_create(chooser, &current));
+    TRY(candidate_copy(chooser, chosen, &current));
+    double best_rmse = chosen->errors.rmse;
+    size_t best_rank = 0;
+    for (size_t rank = 1; rank <= rank_most && !chosen->is_exact && !chooser_is_late(chooser); rank++) {
+        TRY(rank_step(chooser, best_rmse, &current));
+        if (current.is_exact || is_larger_better(chooser, &current, chosen))
+            TRY(candidate_copy(chooser, &current, chosen));
+        if (current.errors.rmse < best_rmse * (1 - gain_worth)) {
+            best_rmse = current.errors.rmse;
+            best_rank = rank;
+        }
+        if (rank - best_rank >= 3 + best_rank / 4)
+            break;
+    }
+done:
+    candidate_free(chooser, &current);
+    return status;
+}
+
+fescue_status path_climb(struct chooser *chooser, size_t rank, struct candidate *chosen)
+{
+    fescue_status status = FESCUE_OK;
+    struct solve_limits limits = chooser_loose_limits(chooser), brief = limits;
+    double given = chooser->options->ridge;
+    brief.iterations = 15; /* enough to lay a component down before the next; nobody judges it */
+    TRY(candidate_at_zero(chooser, chosen));
+    problem_set_ridge(&chooser->problem, given == FESCUE_AUTO ? ridge_rung(chosen->rung) : given);
+    while (chosen->point.rank < rank) {
+        struct solve_result result = {0};
+        TRY(start_grow(&chooser->problem, (uint64_t)chooser->options->seed, &chosen->point));
+        status = solve_run(&chooser->problem, chooser->solver, &brief, &chosen->point, &result);
+        solve_result_free(chooser->context, &result);
+        TRY(status);
+    }
+    if (rank == 0)
+        goto done;
+    TRY(ridge_search(chooser, &limits, chosen));
+    TRY(path_try_exact(chooser, chosen));
+done:
+    return status;
+}
