@@ -51,7 +51,7 @@ struct fen {
 
 /* ---- levels ----------------------------------------------------------------------------------------------------- */
 
-/* A storm about every three days, 2 to 12 hours long, a few centimetres of rise in all. */
+/* A storm about every three days, 2 to 12 hours long, a centimetre or two of rise in all. */
 static void rain_fall(const struct sowing *sowing, double rain[HOURS])
 {
     struct random_stream stream = sow_stream(sowing, FEN_RAIN, 0);
@@ -60,7 +60,7 @@ static void rain_fall(const struct sowing *sowing, double rain[HOURS])
         if (random_uniform(&stream) >= 1. / 70)
             continue;
         size_t hours = 2 + random_below(&stream, 11);
-        double rise = 2.2 * exp(0.6 * random_normal(&stream));
+        double rise = 1.1 * exp(0.6 * random_normal(&stream));
         for (size_t k = 0; k < hours && t + k < HOURS; k++)
             rain[t + k] += rise / (double)hours;
     }
