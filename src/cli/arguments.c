@@ -95,11 +95,11 @@ static fescue_status unknown_say(const struct command *command, const struct gra
     const char *name = argument + 2, *best = NULL;
     size_t length = strcspn(name, "="), fewest = 3; /* up to two slips make a guess worth showing */
     for (const struct option *option = grammar->longs; option->name != NULL; option++) {
-        size_t slips = slips_count(name, length, option->name);
         bool begins = length >= 3 && strncmp(name, option->name, length) == 0;
-        if (slips < fewest || (begins && best == NULL)) {
+        size_t slips = begins ? 1 : slips_count(name, length, option->name);
+        if (slips < fewest) {
             best = option->name;
-            fewest = smaller(slips, fewest);
+            fewest = slips;
         }
     }
     if (best != NULL)
@@ -120,13 +120,13 @@ static fescue_status misuse_say(const struct command *command, const struct gram
 {
     bool is_long = strncmp(argument, "--", 2) == 0;
     if (code == ':')
-        return is_long ? say_usage("the option %s needs a value", argument)
-                       : say_usage("the option -%c needs a value", optopt);
+        return is_long ? say_usage("%s: found nothing, expected a value", argument)
+                       : say_usage("-%c: found nothing, expected a value", optopt);
     if (!is_long)
         return say_usage("%s takes no option -%c; \"fescue %s --help\" lists them", command->name, optopt,
                          command->name);
     if (optopt >= OWN)
-        return say_usage("the option --%s takes no value", own_options[optopt - OWN].name);
+        return say_usage("--%s takes no value", own_options[optopt - OWN].name);
     return unknown_say(command, grammar, argument);
 }
 
@@ -146,7 +146,7 @@ static fescue_status positional_take(struct request *request, const char *text)
 static fescue_status option_set(struct request *request, const struct fescue_option *option, const char *text)
 {
     if (strcmp(option->name, "output") == 0 && text[0] == '\0')
-        return say_usage("the option --output needs the name of a directory");
+        return say_usage("--output: found \"\", expected the name of a directory");
     return request->command->flag == FESCUE_FOR_SOW
                ? fescue_sow_options_set(request->context, &request->sow_options, option->name, text)
                : fescue_options_set(request->context, &request->options, option->name, text);

@@ -138,9 +138,9 @@ static fescue_status spectrum_set(struct plain *plain)
             MATRIX_AT(spectrum, k, 0) = 1;
     } else if (strlen(text) >= SOW_TEXT_SIZE || (!geometric_parse(text, spectrum) && !list_parse(text, spectrum))) {
         return FAIL(plain->sowing->context, FESCUE_USAGE,
-                    "the option --spectrum takes flat, geometric:K with K at least 1, or as many positive numbers as "
-                    "the rank (%zu) with commas between, found \"%.100s\"",
-                    plain->rank, text);
+                    "--spectrum: found \"%.100s\", expected flat, geometric:K with K at least 1, or as many positive "
+                    "numbers as the rank (%zu) with commas between",
+                    text, plain->rank);
     }
     for (size_t k = 0; k < spectrum.rows; k++)
         square += MATRIX_AT(spectrum, k, 0) * MATRIX_AT(spectrum, k, 0);
@@ -166,8 +166,9 @@ static fescue_status plain_open(struct sowing *sowing, struct plain *plain)
     size_t rank = (size_t)options->rank;
     *plain = (struct plain){.sowing = sowing, .rows = m, .columns = n, .rank = rank};
     if (rank > m || rank > n)
-        return FAIL(sowing->context, FESCUE_USAGE, "a table of %llu x %llu has no rank %zu", (unsigned long long)m,
-                    (unsigned long long)n, rank);
+        return FAIL(sowing->context, FESCUE_USAGE,
+                    "--rank: found \"%zu\", but the rank of a table of %llu x %llu is at most its shorter side", rank,
+                    (unsigned long long)m, (unsigned long long)n);
     matrix_reserve(&plain->arena, m, rank);
     matrix_reserve(&plain->arena, n, rank);
     matrix_reserve(&plain->arena, rank, 1);
