@@ -17,7 +17,8 @@
  *     2. Step. With W held, f along U + tD is a parabola with slope <g, D> and curvature |P(D W')|^2. Letting W follow
  *        lowers the curvature by a factor that changes slowly from one iteration to the next; it is measured on the
  *        step taken before (the parabola through f(0), f'(0), f(t)) and used for the next, which saves the pass and the
- *        small solves that the exact Gauss-Newton curvature would take.
+ *        small solves that the exact Gauss-Newton curvature would take. A step that turns out to be off the parabola's
+ *        minimum by more than a factor of two is taken again, at the minimum.
  *     3. Retraction by QR with positive diagonal; Armijo with backtracking (line.c).
  *
  * Departures: the remembered factor is ours. With lambda > 0 nothing changes: the ridge is on W alone.
@@ -34,6 +35,9 @@ static const double least_cosine = 1e-3;
 /* The remembered factor is held within these: letting W follow cannot raise the curvature by much, and a factor near 0
    comes from a step that was too long for a parabola. */
 static const double least_factor = 0.05, most_factor = 2;
+
+/* A first step that is off the parabola's minimum by more than this factor is taken again. */
+static const double off_step = 2;
 
 struct grassmann_cg {
     struct projection projection;
@@ -119,7 +123,7 @@ done:
     return status;
 }
 
-/* The curvature that f showed over the last step, unless rounding hides it. */
+/* The curvature that f showed over a step, unless rounding hides it. */
 static void factor_learn(struct grassmann_cg *cg, const struct line *line, double t, double held)
 {
     double bend = cg->projection.objective - line->objective - t * line->slope;
@@ -127,6 +131,17 @@ static void factor_learn(struct grassmann_cg *cg, const struct line *line, doubl
     if (fabs(t * line->slope) < 1e3 * line->slack || !(factor > 0))
         return;
     cg->factor = fmin(fmax(factor, least_factor), most_factor);
+}
+
+static fescue_status trial_evaluate(struct grassmann_cg *cg, const struct line *line, double t, double held)
+{
+    struct projection *p = &cg->projection;
+    fescue_status status = grassmann_retract_qr(&cg->work, cg->basis, cg->direction, t, p->basis);
+    if (status != FESCUE_OK)
+        return status;
+    projection_evaluate(p);
+    factor_learn(cg, line, t, held);
+    return FESCUE_OK;
 }
 
 /* Goes along the direction; *moved = false when nothing better was found, and the point is as before. */
@@ -145,9 +160,12 @@ static fescue_status line_follow(struct grassmann_cg *cg, bool *moved)
     matrix_copy(p->basis, cg->basis);
     matrix_copy(p->gradient, cg->gradient);
     for (int trial = 0; trial < LINE_MOST_TRIALS && !*moved; trial++) {
-        TRY(grassmann_retract_qr(&cg->work, cg->basis, cg->direction, t, p->basis));
-        projection_evaluate(p);
-        factor_learn(cg, &line, t, held);
+        TRY(trial_evaluate(cg, &line, t, held));
+        double better = -slope / (cg->factor * held);
+        if (trial == 0 && !(better > t / off_step && better < t * off_step)) {
+            t = better;
+            TRY(trial_evaluate(cg, &line, t, held));
+        }
         *moved = line_accepts(&line, t, p->objective);
         if (!*moved)
             t = line_shorten(&line, t, p->objective);

@@ -9,7 +9,7 @@
  *     gradient    |g| <= tolerance |T|  and  |g| <= 1e-3 |R|
  *     change      over the last ten iterations the objective fell by no more than change * objective
  *     stalled     the solver found no better point, or twenty iterations brought neither a lower objective nor a
- *                 smaller gradient
+ *                 smaller gradient; when |g| <= tolerance |T| this counts as `gradient`
  *     iterations, time, cancelled
  *
  * |T| is the norm of the gradient at the zero matrix, so the tolerance does not depend on units. The second half of
@@ -122,12 +122,16 @@ static bool is_exact(const struct run *run)
     return sqrt(run->measure.square) <= exact_roundings * problem->rounding * problem->norm;
 }
 
-static bool is_flat(const struct run *run)
+/* The gradient has fallen below the tolerance. */
+static bool is_small(const struct run *run)
 {
     const struct problem *problem = run->field.problem;
-    double tolerance = fmax(run->limits->gradient, problem->rounding);
-    return run->measure.gradient <= tolerance * problem->norm &&
-           run->measure.gradient <= gradient_to_residual * sqrt(run->measure.square);
+    return run->measure.gradient <= fmax(run->limits->gradient, problem->rounding) * problem->norm;
+}
+
+static bool is_flat(const struct run *run)
+{
+    return is_small(run) && run->measure.gradient <= gradient_to_residual * sqrt(run->measure.square);
 }
 
 static bool is_unchanged(struct run *run)
@@ -138,12 +142,16 @@ static bool is_unchanged(struct run *run)
     return run->limits->change > 0 && run->iteration >= CHANGE_WINDOW && before - now <= run->limits->change * now;
 }
 
+/* Twenty iterations without a lower objective, by more than rounding, or a clearly smaller gradient. */
 static bool is_stalled(struct run *run)
 {
-    if (run->measure.objective < run->lowest || run->measure.gradient < run->flattest)
+    const struct solve_measure *now = &run->measure;
+    double slack = line_start(run->field.problem, now, 0).slack;
+    if (now->objective < run->lowest - slack || now->gradient < 0.9 * run->flattest) {
         run->improved = run->iteration;
-    run->lowest = fmin(run->lowest, run->measure.objective);
-    run->flattest = fmin(run->flattest, run->measure.gradient);
+        run->lowest = fmin(run->lowest, now->objective);
+        run->flattest = fmin(run->flattest, now->gradient);
+    }
     return run->iteration - run->improved >= STALL_WINDOW;
 }
 
@@ -157,7 +165,7 @@ static bool run_ends(struct run *run, bool moved)
     else if (is_flat(run))
         *stop = STOP_GRADIENT;
     else if (!moved || stalled)
-        *stop = STOP_STALLED;
+        *stop = is_small(run) ? STOP_GRADIENT : STOP_STALLED;
     else if (unchanged)
         *stop = STOP_CHANGE;
     else if (run->iteration >= run->limits->iterations)
