@@ -3,22 +3,83 @@
  * The observed cells both ways.
  *
  * The rows are placed first. Files are mostly sorted one way or the other, and then the rows are in order already: one
- * transposition gives the columns. Otherwise a second one, back again, sorts the rows.
+ * transposition gives the columns. Otherwise a second one, back again, sorts the rows; cells of the same place keep
+ * the order of the input through all of it, so that the first and the last of them can be told.
  */
 #include "table/table_internal.h"
 
 #include <assert.h>
+#include <math.h>
 
-fescue_status cells_finish(fescue_context *context, struct cells *cells)
+/* ---- cells that came more than once ----------------------------------------------------------------------------- */
+
+static void value_store(const struct cells *cells, uint64_t k, double value)
+{
+    if (cells->precision == FESCUE_SINGLE)
+        ((float *)cells->by_row.value)[k] = (float)value;
+    else
+        ((double *)cells->by_row.value)[k] = value;
+}
+
+/* The mean of the cells first .. last. Where a sum would overflow, parts of it do not. */
+static double values_mean(const struct cells *cells, uint64_t first, uint64_t last)
+{
+    double count = (double)(last - first + 1), sum = 0, parts = 0;
+    for (uint64_t k = first; k <= last; k++) {
+        sum += cells_value(cells, &cells->by_row, k);
+        parts += cells_value(cells, &cells->by_row, k) / count;
+    }
+    return isfinite(sum) ? sum / count : parts;
+}
+
+static double values_merge(const struct cells *cells, enum fescue_duplicates duplicates, uint64_t first, uint64_t last)
+{
+    if (first == last || duplicates == FESCUE_DUPLICATES_FIRST)
+        return cells_value(cells, &cells->by_row, first);
+    if (duplicates == FESCUE_DUPLICATES_LAST)
+        return cells_value(cells, &cells->by_row, last);
+    return values_mean(cells, first, last);
+}
+
+/* In sorted rows, cells of the same place lie side by side; they become one, and what follows moves up. */
+static void rows_merge(struct cells *cells, enum fescue_duplicates duplicates)
+{
+    struct half *half = &cells->by_row;
+    uint64_t at = 0, k = 0;
+    for (uint32_t i = 0; i < half->lines; i++) {
+        uint64_t end = half->start[i + 1];
+        half->start[i] = at;
+        while (k < end) {
+            uint64_t last = k;
+            while (last + 1 < end && half->across[last + 1] == half->across[k])
+                last++;
+            value_store(cells, at, values_merge(cells, duplicates, k, last));
+            half->across[at++] = half->across[k];
+            k = last + 1;
+        }
+    }
+    half->start[half->lines] = at;
+    cells->count = at;
+}
+
+/* ---- building --------------------------------------------------------------------------------------------------- */
+
+fescue_status cells_finish(fescue_context *context, enum fescue_duplicates duplicates, struct cells *cells,
+                           uint64_t *merged)
 {
     fescue_status status;
-    TRY(half_open(context, cells->columns, cells->rows, cells->count, cells->precision, &cells->by_column));
+    uint64_t count = cells->count;
+    TRY(half_open(context, cells->columns, cells->rows, count, cells->precision, &cells->by_column));
     half_transpose(&cells->by_row, &cells->by_column, cells->precision);
-    if (!half_is_ascending(&cells->by_row))
+    if (!half_is_ascending(&cells->by_row)) {
         half_transpose(&cells->by_column, &cells->by_row, cells->precision);
+        if (duplicates != FESCUE_DUPLICATES_REFUSE)
+            rows_merge(cells, duplicates);
+        if (cells->count != count)
+            half_transpose(&cells->by_row, &cells->by_column, cells->precision);
+    }
+    *merged = count - cells->count;
     assert(half_is_ascending(&cells->by_row));
-    /* Rows in any order make columns in order, since the rows are read one after the other. */
-    assert(half_is_ascending(&cells->by_column));
     TRY(half_cut(context, &cells->by_row));
     TRY(half_cut(context, &cells->by_column));
 done:
@@ -29,13 +90,14 @@ fescue_status cells_build(fescue_context *context, uint32_t rows, uint32_t colum
                           struct cells *cells)
 {
     fescue_status status;
+    uint64_t merged;
     *cells = (struct cells){.rows = rows, .columns = columns, .count = list->count, .precision = list->precision};
     TRY(half_open(context, rows, columns, list->count, list->precision, &cells->by_row));
     half_count(&cells->by_row, list->row, list->count);
     half_begin(&cells->by_row);
     half_place(&cells->by_row, list->row, list->column, list->value, list->count, list->precision);
     half_end(&cells->by_row);
-    TRY(cells_finish(context, cells));
+    TRY(cells_finish(context, FESCUE_DUPLICATES_REFUSE, cells, &merged));
 done:
     if (status != FESCUE_OK)
         cells_free(context, cells);
@@ -66,12 +128,13 @@ static void half_keep(const struct cells *from, const uint8_t *keep, struct half
 fescue_status cells_select(fescue_context *context, const struct cells *from, const uint8_t *keep, struct cells *cells)
 {
     fescue_status status;
+    uint64_t merged;
     *cells = (struct cells){.rows = from->rows, .columns = from->columns, .precision = from->precision};
     for (uint64_t k = 0; k < from->count; k++)
         cells->count += keep[k] != 0;
     TRY(half_open(context, from->rows, from->columns, cells->count, from->precision, &cells->by_row));
     half_keep(from, keep, &cells->by_row);
-    TRY(cells_finish(context, cells));
+    TRY(cells_finish(context, FESCUE_DUPLICATES_REFUSE, cells, &merged));
 done:
     if (status != FESCUE_OK)
         cells_free(context, cells);

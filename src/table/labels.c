@@ -10,7 +10,6 @@
 #include "table/table_internal.h"
 
 #include <assert.h>
-#include <inttypes.h>
 #include <stdio.h>
 #include <string.h>
 

@@ -4,16 +4,16 @@
  */
 #include "table/table_internal.h"
 
-#include <inttypes.h>
 #include <math.h>
+#include <string.h>
 
-static fescue_status table_create(fescue_context *context, const char *path, size_t length, fescue_table **out)
+fescue_status table_create(fescue_context *context, const char *path, fescue_table **out)
 {
     fescue_status status;
     fescue_table *table = NULL;
     TRY(TAKE(context, 1, &table));
     table->context = context;
-    TRY(memory_copy_text(context, path, length, &table->path));
+    TRY(memory_copy_text(context, path, strlen(path), &table->path));
     *out = table;
 done:
     if (status != FESCUE_OK)
@@ -35,6 +35,7 @@ void table_destroy(fescue_table **out)
     labels_free(context, &table->row_labels);
     labels_free(context, &table->column_labels);
     cells_free(context, &table->cells);
+    texts_free(context, &table->texts);
     GIVE(context, out);
 }
 
@@ -100,7 +101,7 @@ fescue_status table_from_triplets(fescue_context *context, uint32_t rows, uint32
     uint32_t twice_row, twice_column;
     *out = NULL;
     TRY(given_check(context, &given, precision));
-    TRY(table_create(context, "", 0, &table));
+    TRY(table_create(context, "", &table));
     table->look.shape = SHAPE_MEMORY;
     table->row_labels.count = rows;
     table->column_labels.count = columns;
@@ -113,7 +114,7 @@ fescue_status table_from_triplets(fescue_context *context, uint32_t rows, uint32
                       twice_row, twice_column);
         goto done;
     }
-    TRY(cells_finish(context, &table->cells));
+    TRY(cells_finish(context, FESCUE_DUPLICATES_REFUSE, &table->cells, &table->duplicates));
     *out = table;
     table = NULL;
 done:

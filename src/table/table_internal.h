@@ -7,6 +7,8 @@
 
 #include "table/table.h"
 
+#include <inttypes.h>
+
 /* Rows and columns are counted in 32 bits, and one number is kept free to mean "none". */
 #define TABLE_MOST_LINES (UINT32_MAX - 1)
 
@@ -65,7 +67,126 @@ fescue_status half_find_twice(fescue_context *context, const struct half *half, 
 fescue_status half_cut(fescue_context *context, struct half *half);
 void half_free(fescue_context *context, struct half *half);
 
-/* With by_row filled in any order within the rows, and no cell twice: sorts it, makes by_column and the blocks. */
-fescue_status cells_finish(fescue_context *context, struct cells *cells);
+/* What to do with a cell that comes more than once: cells_finish merges cells of the same place, taken in the order in
+   which they were placed. *merged counts the cells that are gone. With FESCUE_DUPLICATES_REFUSE there are none. */
+fescue_status cells_finish(fescue_context *context, enum fescue_duplicates duplicates, struct cells *cells,
+                           uint64_t *merged);
+
+/* ---- stream: bytes of a plain or gzip file, line by line --------------------------------------------------------- */
+
+struct stream;
+struct line {
+    const char *text, *end; /* without its terminator; text is NULL at the end of the data */
+    size_t terminator;      /* bytes of it, which lie at `end`: 0 at the end of the file, 1 or 2 (CR LF) */
+};
+/* FESCUE_NO_INPUT, or FESCUE_BAD_DATA for what no table can be: nothing at all, another kind of compression. */
+fescue_status stream_open(fescue_context *context, const char *path, struct stream **out);
+/* The first bytes, as many as there are up to `most`, without taking them. Only before the first line. */
+fescue_status stream_peek(struct stream *stream, size_t most, const char **text, size_t *length);
+/* The next line; good until the next call. */
+fescue_status stream_line(struct stream *stream, struct line *line);
+uint64_t stream_line_number(const struct stream *stream); /* of the line delivered last, from 1 */
+const char *stream_name(const struct stream *stream);     /* as the user calls it */
+fescue_context *stream_context(const struct stream *stream);
+void stream_told(const struct stream *stream, uint32_t *crc32, uint64_t *bytes); /* of the bytes read from the disk */
+void stream_close(struct stream **stream);                                       /* NULL-safe; nulls the pointer */
+
+/* Bad data at the line delivered last, or at another one. */
+#define BAD_LINE_AT(stream, number, format, ...)                                                                       \
+    FAIL(stream_context(stream), FESCUE_BAD_DATA, "%s: line %" PRIu64 ": " format, stream_name(stream), (number),      \
+         ##__VA_ARGS__)
+#define BAD_LINE(stream, format, ...) BAD_LINE_AT(stream, stream_line_number(stream), format, ##__VA_ARGS__)
+
+/* For "%.*s": a piece of the input, no longer than a reader needs to find it. */
+enum { QUOTE_MOST = 40 };
+#define QUOTE(text, end) (int)((end) - (text) > QUOTE_MOST ? QUOTE_MOST : (end) - (text)), (text)
+
+/* ---- values and texts -------------------------------------------------------------------------------------------- */
+
+/* A value to be stored in `precision`. NULL, or what is wrong with the text: "is not a number" and the like. */
+const char *value_parse(const char *text, const char *end, enum fescue_precision precision, double *value);
+
+bool is_nan_text(const char *text, const char *end); /* in any case, with or without a sign */
+
+/* How the text of a cell follows from its value. */
+enum text_code {
+    TEXT_SHORTEST,                /* the shortest text that reads back as the value */
+    TEXT_DECIMALS,                /* TEXT_DECIMALS + d: that, with zeros up to d decimals */
+    TEXT_MOST_DECIMALS = 30,      /* more make an odd text */
+    TEXT_UNKNOWN = UINT8_MAX - 1, /* while texts are put in order */
+    TEXT_ODD = UINT8_MAX          /* kept as it is */
+};
+/* The code of a text that was read as `value`, which has been rounded to `precision`. */
+enum text_code text_code_of(double value, enum fescue_precision precision, const char *text, size_t length);
+
+/* Odd texts in the order of the input. */
+struct odd_texts {
+    struct text_store *store;
+    char **text;
+    uint64_t count, capacity;
+};
+fescue_status odd_texts_add(fescue_context *context, struct odd_texts *odd, const char *text, size_t length);
+void odd_texts_free(fescue_context *context, struct odd_texts *odd);
+
+/* ---- pile: cells as they come from a file -------------------------------------------------------------------------
+ */
+
+/* What a symmetric file leaves out: the other triangle, with the same or the opposite sign. */
+enum pile_mirror { MIRROR_NONE, MIRROR_SAME, MIRROR_NEGATED };
+
+enum { PILE_BLOCK = 1 << 14 }; /* entries: a block is some 200 kB, so that a pile wastes little and links are rare */
+struct pile_block {
+    struct pile_block *next;
+    uint32_t count;
+    uint8_t *code; /* NULL when texts are not kept */
+    void *value;
+    uint32_t row[PILE_BLOCK], column[PILE_BLOCK];
+};
+
+/* Entries in the order of the input; blocks, so that growing copies nothing. */
+struct pile {
+    fescue_context *context; /* borrowed */
+    enum fescue_precision precision;
+    enum pile_mirror mirror;
+    bool keeps_texts;
+    uint64_t dense_most; /* texts are kept while rows * columns is at most this */
+    uint64_t count;
+    struct pile_block *first, *last;
+    struct line_run { /* entries from `entry` on lie on lines from `line` on, one a line */
+        uint64_t entry, line;
+    } * runs;
+    uint64_t run_count, run_capacity, next_line;
+    struct odd_texts odd;
+};
+struct pile_entry {
+    uint32_t row, column;
+    double value;
+    uint64_t line;
+    const char *text, *end;
+};
+void pile_open(fescue_context *context, const struct table_reading *reading, struct pile *pile);
+/* The table is going to have at least this size: texts are dropped when that is too much. */
+void pile_told_size(struct pile *pile, uint64_t rows, uint64_t columns);
+fescue_status pile_add(struct pile *pile, const struct pile_entry *entry);
+uint64_t pile_line(const struct pile *pile, uint64_t entry);
+/* Makes table->cells, texts and duplicates from the pile, which is used up. The table's labels are there already. */
+fescue_status pile_build(struct pile *pile, const struct stream *stream, enum fescue_duplicates duplicates,
+                         fescue_table *table);
+void pile_free(struct pile *pile);
+
+/* The texts of the pile, taken out of it, in the order of the cells, which were built from it. */
+fescue_status texts_create(struct pile *pile, const struct cells *cells, enum fescue_duplicates duplicates,
+                           struct texts **out);
+void texts_free(fescue_context *context, struct texts **texts);
+
+fescue_status table_create(fescue_context *context, const char *path, fescue_table **out);
+
+/* ---- readers -------------------------------------------------------------------------------------------------------
+ */
+
+/* Each reads the whole stream into a table that has its context and path, and nothing else. */
+bool is_matrix_market(const char *text, size_t length);
+fescue_status matrix_market_read(struct stream *stream, const struct table_reading *reading, fescue_table *table);
+fescue_status delimited_read(struct stream *stream, const struct table_reading *reading, fescue_table *table);
 
 #endif
