@@ -61,6 +61,9 @@ const struct fescue_option *command_options(const struct command *command, size_
 /* Reads argv[first ..] into the request, whose context and command are set. FESCUE_USAGE after saying why. */
 fescue_status arguments_read(int argc, char **argv, struct request *request);
 
+/* Whether a signal asked this run of the program to stop. */
+bool is_asked_to_stop(void);
+
 void help_program(FILE *file);
 void help_command(FILE *file, const struct command *command);
 

@@ -30,13 +30,20 @@ const size_t command_count = sizeof commands / sizeof commands[0];
 /* The handler's only way to the context. NULL again before the context goes; a handler that still runs then runs on
    one of the context's workers, and its end is waited for. */
 static fescue_context *_Atomic running;
+static volatile sig_atomic_t asked_to_stop;
 
 static void signal_take(int number)
 {
     (void)number;
+    asked_to_stop = 1;
     fescue_context *context = running;
     if (context != NULL)
         fescue_context_cancel(context);
+}
+
+bool is_asked_to_stop(void)
+{
+    return asked_to_stop != 0;
 }
 
 static void signals_set(fescue_context *context)

@@ -100,6 +100,28 @@ done:
     return status;
 }
 
+/* What an older sowing in the same place has and this one does not must not lie beside its record. */
+static fescue_status names_retire(struct output *output)
+{
+    static const char *const names[] = {"table.mtx",
+                                        "table.csv",
+                                        "truth.mtx",
+                                        "truth.csv",
+                                        "table.mtx.gz",
+                                        "table.csv.gz",
+                                        "truth.mtx.gz",
+                                        "truth.csv.gz",
+                                        "truth-left.mtx",
+                                        "truth-right.mtx",
+                                        "truth-spectrum.mtx",
+                                        "truth-row-offsets.mtx",
+                                        "truth-column-offsets.mtx"};
+    fescue_status status = FESCUE_OK;
+    for (size_t k = 0; k < sizeof names / sizeof names[0] && status == FESCUE_OK; k++)
+        status = output_retire(output, names[k]);
+    return status;
+}
+
 static fescue_status summary_write(const struct sowing *sowing, char **text)
 {
     char line[1024];
@@ -131,6 +153,7 @@ fescue_status fescue_sow(fescue_context *context, const struct fescue_sow_option
     TRY(output_open(context, directory, seal, &sowing.output));
     TRY(scenes[options->scene](&sowing));
     TRY(record_write(&sowing));
+    TRY(names_retire(sowing.output));
     TRY(summary_write(&sowing, text));
     TRY(output_publish(&sowing.output));
 done:
