@@ -125,14 +125,15 @@ static inline struct matrix frame(struct ground *ground, size_t rows, size_t col
     return a;
 }
 
-/* The factor of the largest error a place: sqrt of the count of numbers, times a few roundings. */
+/* What rounding may leave in the norm of an a that was computed from numbers of size one: a few units a place, added up
+   like independent errors. */
 static inline double rounding(struct matrix a)
 {
     return 2e-15 * sqrt((double)(a.rows * a.columns)) + 4e-15;
 }
 
-/* error[k] was measured at the step first * 2^-k: every halving must divide it by nearly 2^order, as long as it is
-   above the floor that rounding sets. At least two halvings must be above it. */
+/* error[k], a norm, was measured at the step first * 2^-k: every halving must divide it by nearly 2^order, as long as
+   it is above the floor that rounding sets. At least two halvings must be above it. */
 static inline void assert_order(const double *error, size_t count, double order, double floor)
 {
     size_t judged = 0;
