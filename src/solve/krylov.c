@@ -18,14 +18,18 @@
  * Departure: orthogonalised block by block instead of one QR of the raw Krylov matrix, which loses the small singular
  * values of an ill-conditioned A.
  *
- * b is the rank and four more, rounded up to a full stride, which costs nothing; q = 4, or less when b(q+1) would pass
- * the shorter side. Cost: 2(q+1) + 3 passes of 2b flops a cell, and short (b(q+1))^2. Parallel in the passes only.
+ * b is the rank and four more, rounded up to a full stride, which costs nothing, at most 256; q = 4, or less when
+ * b(q+1) would pass the shorter side. Cost: 2(q+1) + 3 passes of 2b flops a cell, and short (b(q+1))^2. Parallel in the
+ * passes only.
  */
 #include "solve/solve_internal.h"
 
 #include <assert.h>
 
-enum { BLOCKS_MOST = 5 };
+enum {
+    BLOCKS_MOST = 5,
+    WIDTH_MOST = 256, /* the widest factor that the sweeps take, in full strides, and the largest rank */
+};
 
 struct krylov {
     const struct sparse_operator *sparse;
@@ -40,14 +44,14 @@ struct krylov {
     double *eigenvalues, *dense;
 };
 
-size_t krylov_width(size_t rank)
-{
-    return factor_stride(rank + 4);
-}
-
 static size_t smaller(size_t a, size_t b)
 {
     return a < b ? a : b;
+}
+
+size_t krylov_width(size_t rank)
+{
+    return smaller(factor_stride(rank + 4), WIDTH_MOST);
 }
 
 static void krylov_reserve(struct krylov *k, size_t rank)
