@@ -45,8 +45,9 @@ static fescue_status scene_options_check(fescue_context *context, const struct f
         fescue_option_text(&table[k], options, given, sizeof given);
         fescue_option_text(&table[k], &standard, usual, sizeof usual);
         if (strcmp(given, usual) != 0)
-            return FAIL(context, FESCUE_USAGE, "the option --%s is for plain tables: a scene has its own",
-                        table[k].name);
+            return FAIL(context, FESCUE_USAGE,
+                        "--%s: found \"%.100s\", but a scene has its own; the option is for plain tables",
+                        table[k].name, given);
     }
     return FESCUE_OK;
 }
