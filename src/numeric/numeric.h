@@ -59,15 +59,23 @@ static inline size_t packed_size(size_t k)
 
 /* ---- sweep: one pass over the observed cells of one direction --------------------------------------------------- */
 
-/* All take a half (lines x length), `left` with one row a line and `right` with one row a position, equal columns and
-   strides, and the team of the context; results are the same bits for any number of workers. Arithmetic in the store's
-   precision, sums over cells in double. Workspace comes from sweep_work_size. Single precision copies the factors. */
+/* All take a half (lines x length), `left` with one row a line and `right` with one row a position, equal columns, and
+   the team of the context; results are the same bits for any number of workers. The numbers of a row behind its columns
+   up to the next multiple of 8 must be there and be zero, in factors read and written (matrix_carve makes such ones).
+   Arithmetic in the store's precision, sums over cells in double. All workspace is taken by sweep_create; single
+   precision copies the factors there once a call. The half may be of any store with as many rows and columns as that
+   of sweep_create. */
+struct sweep_kernel;
 struct sweep {
     fescue_context *context;
     enum fescue_precision precision;
     struct arena arena; /* partial sums, single-precision copies, one small workspace a worker */
-    size_t rank_most;
+    size_t rank_most;   /* at most 257 */
     const char *kernel; /* which instruction set was chosen: "portable", "avx2", "avx512" */
+    const struct sweep_kernel *kernels;
+    double *partial, *room;
+    float *pool;
+    size_t pool_size, workers; /* the team may not grow beyond what it was at sweep_create */
 };
 fescue_status sweep_create(fescue_context *context, const struct cells *cells, size_t rank_most, struct sweep *sweep);
 void sweep_destroy(struct sweep *sweep);
@@ -95,11 +103,12 @@ void sweep_errors(struct sweep *sweep, const struct half *half, struct matrix le
 
 /* ---- sparse symmetric positive definite systems, through CHOLMOD ------------------------------------------------- */
 
-/* Solves (diag(d) + [0 B; B' 0]) y = rhs where d has rows+columns entries and B is the rows x columns matrix with the
-   half's pattern and unit values: the normal equations of two-way effects. Supernodal or simplicial as CHOLMOD picks;
-   when the shorter side is eliminated first the Schur complement is formed on the other (see the file).
+/* Solves (diag(d) + [0 B; B' 0]) y = rhs for `count` right-hand sides, where d has rows + columns entries and B is the
+   rows x columns matrix with the cells' pattern and unit values: the normal equations of two-way effects. rhs and
+   solution hold count vectors of rows + columns numbers and do not overlap. Direct by CHOLMOD; by conjugate gradients
+   to 1e-12 where the factor would be far larger than the data (see the file). The same bits for any number of workers.
    FESCUE_NO_MEMORY; FESCUE_DEFECT when the matrix is not positive definite. */
-fescue_status sparse_two_way_solve(fescue_context *context, const struct half *by_row, const double *diagonal,
-                                   const double *rhs, double *solution);
+fescue_status sparse_two_way_solve(fescue_context *context, const struct cells *cells, const double *diagonal,
+                                   size_t count, const double *rhs, double *solution);
 
 #endif

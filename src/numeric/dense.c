@@ -1,0 +1,84 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Products of matrices, and what all dense routines stand on: one thread inside OpenBLAS, pieces of lines, work sizes.
+ *
+ * Holding OpenBLAS at one thread is a setting of the whole process; a program around us that wants more of them for its
+ * own work may set them again between calls, at the price of bits that depend on it.
+ */
+#include "numeric/dense_internal.h"
+
+#include <assert.h>
+#include <pthread.h>
+
+extern void openblas_set_num_threads(int threads);
+
+static void threads_set(void)
+{
+    openblas_set_num_threads(1);
+}
+
+void dense_threads_hold(void)
+{
+    static pthread_once_t once = PTHREAD_ONCE_INIT;
+    pthread_once(&once, threads_set);
+}
+
+lapack_int dense_size(size_t size)
+{
+    assert(size <= INT32_MAX);
+    return (lapack_int)size;
+}
+
+fescue_status dense_check(fescue_context *context, const char *routine, lapack_int info)
+{
+    if (info == 0)
+        return FESCUE_OK;
+    return FAIL(context, FESCUE_DEFECT, "%s gave up (%d): the numbers it was given are not all finite", routine,
+                (int)info);
+}
+
+struct dense_pieces dense_pieces_of(size_t lines, size_t columns)
+{
+    /* A piece pays for its call into the team (some 10 us), and for a partial sum of columns^2 numbers. */
+    size_t each = 4096 > 8 * columns ? 4096 : 8 * columns;
+    size_t least = (lines + DENSE_MOST_PIECES - 1) / DENSE_MOST_PIECES;
+    if (each < least)
+        each = least;
+    return (struct dense_pieces){.lines = lines, .each = each, .count = lines == 0 ? 1 : (lines + each - 1) / each};
+}
+
+struct matrix dense_piece(struct matrix a, const struct dense_pieces *pieces, size_t which)
+{
+    size_t first = which * pieces->each;
+    size_t rest = pieces->lines - first;
+    a.data += first * a.stride;
+    a.rows = rest < pieces->each ? rest : pieces->each;
+    return a;
+}
+
+void matrix_multiply(double alpha, struct matrix a, bool transpose_a, struct matrix b, bool transpose_b, double beta,
+                     struct matrix c)
+{
+    size_t inner = transpose_a ? a.rows : a.columns;
+    assert(c.rows == (transpose_a ? a.columns : a.rows) && c.columns == (transpose_b ? b.rows : b.columns));
+    assert(inner == (transpose_b ? b.columns : b.rows));
+    dense_threads_hold();
+    if (c.rows == 0 || c.columns == 0)
+        return;
+    if (inner == 0) {
+        for (size_t i = 0; i < c.rows; i++)
+            for (size_t j = 0; j < c.columns; j++)
+                MATRIX_AT(c, i, j) = beta == 0 ? 0 : beta * MATRIX_AT(c, i, j);
+        return;
+    }
+    cblas_dgemm(CblasRowMajor, transpose_a ? CblasTrans : CblasNoTrans, transpose_b ? CblasTrans : CblasNoTrans,
+                dense_size(c.rows), dense_size(c.columns), dense_size(inner), alpha, a.data, dense_size(a.stride),
+                b.data, dense_size(b.stride), beta, c.data, dense_size(c.stride));
+}
+
+size_t dense_work_size(size_t lines, size_t columns)
+{
+    /* QR: one partial sum a piece, two triangles. SVD: two square matrices, LAPACK's room, 64 lines a piece. */
+    size_t pieces = dense_pieces_of(lines, columns).count;
+    return (pieces + 8) * columns * columns + (pieces + 8) * DENSE_BLOCK * (columns + 1) + 64;
+}

@@ -1,0 +1,287 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * What surrounds the loops over observed cells: the choice of kernels, the workspace, the operations.
+ *
+ * A block is a piece of the half's lines, cut when the cells were stored; each has its own place for its sums, which
+ * are added in block order. Which worker takes a block, and how many there are, leaves no trace in the bits. The
+ * instruction set does: it decides how many numbers are summed side by side and whether products are rounded before
+ * they are added. The one found at run time can be overruled by FESCUE_KERNEL=portable|avx2|avx512, as far as the
+ * processor has it.
+ *
+ * Workspace: sums of 256 blocks; in single precision, copies of up to two factors of each side; for each worker a
+ * line's normal equations twice and a chunk of gathered rows.
+ */
+#include "numeric/sweep_internal.h"
+
+#include <assert.h>
+#include <stdlib.h>
+#include <string.h>
+
+/* ---- which kernels ------------------------------------------------------------------------------------------------
+ */
+
+struct kernel_set {
+    const char *name;
+    const struct sweep_kernel *kernel[2]; /* by enum fescue_precision */
+};
+static const struct kernel_set portable_set = {"portable", {&sweep_portable_double, &sweep_portable_single}};
+
+#if defined(__x86_64__)
+static const struct kernel_set avx2_set = {"avx2", {&sweep_avx2_double, &sweep_avx2_single}};
+static const struct kernel_set avx512_set = {"avx512", {&sweep_avx512_double, &sweep_avx512_single}};
+
+/* The sets this processor can run, the best first; NULL past the end. */
+static const struct kernel_set *kernel_set_at(size_t k)
+{
+    const struct kernel_set *set[4] = {NULL};
+    size_t count = 0;
+    __builtin_cpu_init();
+    if (__builtin_cpu_supports("avx512f") && __builtin_cpu_supports("avx512vl") && __builtin_cpu_supports("avx512dq"))
+        set[count++] = &avx512_set;
+    if (__builtin_cpu_supports("avx2") && __builtin_cpu_supports("fma"))
+        set[count++] = &avx2_set;
+    set[count] = &portable_set;
+    return k <= count ? set[k] : NULL;
+}
+#else
+static const struct kernel_set *kernel_set_at(size_t k)
+{
+    return k == 0 ? &portable_set : NULL;
+}
+#endif
+
+static const struct kernel_set *kernel_set_choose(void)
+{
+    const char *wish = getenv("FESCUE_KERNEL");
+    for (size_t k = 0; wish != NULL && kernel_set_at(k) != NULL; k++)
+        if (strcmp(wish, kernel_set_at(k)->name) == 0)
+            return kernel_set_at(k);
+    return kernel_set_at(0);
+}
+
+/* ---- workspace ----------------------------------------------------------------------------------------------------
+ */
+
+size_t sweep_width(const struct sweep *sweep, size_t rank)
+{
+    size_t lanes = sweep->kernels->lanes > 8 ? sweep->kernels->lanes : 8;
+    return (rank + lanes - 1) / lanes * lanes;
+}
+
+/* Doubles that one worker needs: rows and values of a chunk (doubles also where they are floats), two squares, a side.
+ */
+static size_t worker_room(const struct sweep *sweep)
+{
+    size_t width = sweep_width(sweep, sweep->rank_most);
+    return (SWEEP_CHUNK + 2 * width + 1) * width + SWEEP_CHUNK;
+}
+
+struct sweep_room sweep_room_of(const struct sweep *sweep, size_t worker)
+{
+    size_t width = sweep_width(sweep, sweep->rank_most);
+    assert(worker < sweep->workers);
+    double *at = sweep->room + worker * worker_room(sweep);
+    return (struct sweep_room){.rows = at,
+                               .values = at + SWEEP_CHUNK * width,
+                               .gram = at + SWEEP_CHUNK * width + SWEEP_CHUNK,
+                               .factor = at + SWEEP_CHUNK * width + SWEEP_CHUNK + width * width,
+                               .side = at + SWEEP_CHUNK * width + SWEEP_CHUNK + 2 * width * width};
+}
+
+fescue_status sweep_create(fescue_context *context, const struct cells *cells, size_t rank_most, struct sweep *sweep)
+{
+    const struct kernel_set *set = kernel_set_choose();
+    fescue_status status = FESCUE_OK;
+    assert(rank_most <= 257);
+    *sweep = (struct sweep){.context = context,
+                            .precision = cells->precision,
+                            .rank_most = rank_most,
+                            .kernel = set->name,
+                            .kernels = set->kernel[cells->precision],
+                            .workers = team_workers(context)};
+    sweep->pool_size = 0;
+    if (cells->precision == FESCUE_SINGLE)
+        sweep->pool_size = 2 * ((size_t)cells->rows + cells->columns) * sweep_width(sweep, rank_most);
+    arena_reserve(&sweep->arena, (size_t)CELLS_MOST_BLOCKS * SWEEP_SUMS, sizeof(double));
+    arena_reserve(&sweep->arena, sweep->pool_size, sizeof(float));
+    arena_reserve(&sweep->arena, sweep->workers * worker_room(sweep), sizeof(double));
+    TRY(arena_open(context, &sweep->arena));
+    sweep->partial = arena_carve(&sweep->arena, (size_t)CELLS_MOST_BLOCKS * SWEEP_SUMS, sizeof(double));
+    sweep->pool = arena_carve(&sweep->arena, sweep->pool_size, sizeof(float));
+    sweep->room = arena_carve(&sweep->arena, sweep->workers * worker_room(sweep), sizeof(double));
+done:
+    if (status != FESCUE_OK)
+        sweep_destroy(sweep);
+    return status;
+}
+
+void sweep_destroy(struct sweep *sweep)
+{
+    if (sweep == NULL)
+        return;
+    arena_close(sweep->context, &sweep->arena);
+    *sweep = (struct sweep){0};
+}
+
+/* ---- factors as the kernels see them
+ * --------------------------------------------------------------------------------- */
+
+struct copy_job {
+    struct matrix from;
+    float *to;
+    size_t width, each;
+};
+enum { COPY_LINES = 4096 }; /* a piece for one worker */
+
+static void piece_copy(void *argument, size_t piece, size_t worker)
+{
+    const struct copy_job *job = argument;
+    size_t last = (piece + 1) * COPY_LINES < job->from.rows ? (piece + 1) * COPY_LINES : job->from.rows;
+    (void)worker;
+    for (size_t i = piece * COPY_LINES; i < last; i++) {
+        const double *from = &MATRIX_AT(job->from, i, 0);
+        float *to = job->to + i * job->width;
+        for (size_t j = 0; j < job->from.columns; j++)
+            to[j] = (float)from[j];
+        memset(to + job->from.columns, 0, (job->width - job->from.columns) * sizeof *to);
+    }
+}
+
+struct sweep_rows sweep_rows_of(struct sweep *sweep, struct matrix matrix, size_t width, size_t *room)
+{
+    if (sweep->precision == FESCUE_DOUBLE) {
+        assert(matrix.stride >= width);
+        return (struct sweep_rows){.data = matrix.data, .stride = matrix.stride};
+    }
+    struct copy_job job = {.from = matrix, .to = sweep->pool + *room, .width = width};
+    *room += matrix.rows * width;
+    assert(*room <= sweep->pool_size);
+    team_run(sweep->context, (matrix.rows + COPY_LINES - 1) / COPY_LINES, piece_copy, &job);
+    return (struct sweep_rows){.data = job.to, .stride = width};
+}
+
+/* ---- running
+ * ---------------------------------------------------------------------------------------------------------- */
+
+struct block_run {
+    const struct sweep_job *job;
+    sweep_block *kernel;
+    double *partial;
+};
+
+static void run_block(void *argument, size_t block, size_t worker)
+{
+    const struct block_run *run = argument;
+    double *sums = run->partial + block * SWEEP_SUMS;
+    sums[0] = sums[1] = 0;
+    run->kernel(run->job, block, worker, sums);
+}
+
+void sweep_run(struct sweep_job *job, sweep_block *kernel, double sums[SWEEP_SUMS])
+{
+    struct sweep *sweep = job->sweep;
+    struct block_run run = {.job = job, .kernel = kernel, .partial = sweep->partial};
+    assert(job->half->blocks <= CELLS_MOST_BLOCKS);
+    team_run(sweep->context, job->half->blocks, run_block, &run);
+    team_sum(sweep->context, sweep->partial, job->half->blocks, SWEEP_SUMS, sums);
+}
+
+static struct sweep_job job_open(struct sweep *sweep, const struct half *half, struct matrix right)
+{
+    assert(right.columns <= sweep->rank_most && right.rows == half->length);
+    return (struct sweep_job){
+        .sweep = sweep, .half = half, .width = sweep_width(sweep, right.columns), .rank = right.columns};
+}
+
+void sweep_residual(struct sweep *sweep, const struct half *half, struct matrix left, struct matrix right,
+                    struct matrix gradient, void *residual, double *square)
+{
+    struct sweep_job job = job_open(sweep, half, right);
+    double sums[SWEEP_SUMS];
+    size_t room = 0;
+    assert(left.rows == half->lines && left.columns == right.columns);
+    job.left = sweep_rows_of(sweep, left, job.width, &room);
+    job.right = sweep_rows_of(sweep, right, job.width, &room);
+    job.product = gradient;
+    job.residual = residual;
+    sweep_run(&job, sweep->kernels->residual, sums);
+    *square = sums[0];
+}
+
+void sweep_errors(struct sweep *sweep, const struct half *half, struct matrix left, struct matrix right, double *square,
+                  double *absolute)
+{
+    struct sweep_job job = job_open(sweep, half, right);
+    double sums[SWEEP_SUMS];
+    size_t room = 0;
+    assert(left.rows == half->lines && left.columns == right.columns);
+    job.left = sweep_rows_of(sweep, left, job.width, &room);
+    job.right = sweep_rows_of(sweep, right, job.width, &room);
+    sweep_run(&job, sweep->kernels->residual, sums);
+    *square = sums[0];
+    *absolute = sums[1];
+}
+
+void sweep_multiply(struct sweep *sweep, const struct half *half, const void *values, struct matrix right,
+                    struct matrix product)
+{
+    struct sweep_job job = job_open(sweep, half, right);
+    double sums[SWEEP_SUMS];
+    size_t room = 0;
+    assert(product.rows == half->lines && product.columns == right.columns);
+    job.right = sweep_rows_of(sweep, right, job.width, &room);
+    job.values = values;
+    job.product = product;
+    sweep_run(&job, sweep->kernels->multiply, sums);
+}
+
+void sweep_tangent(struct sweep *sweep, const struct half *half, struct matrix a, struct matrix right,
+                   struct matrix left, struct matrix b, const void *residual, double *zr, double *zz)
+{
+    struct sweep_job job = job_open(sweep, half, right);
+    double sums[SWEEP_SUMS];
+    size_t room = 0;
+    assert(left.rows == half->lines && a.rows == half->lines && b.rows == half->length);
+    job.left = sweep_rows_of(sweep, left, job.width, &room);
+    job.right = sweep_rows_of(sweep, right, job.width, &room);
+    job.a = sweep_rows_of(sweep, a, job.width, &room);
+    job.b = sweep_rows_of(sweep, b, job.width, &room);
+    job.values = residual;
+    sweep_run(&job, sweep->kernels->tangent, sums);
+    *zr = sums[0];
+    *zz = sums[1];
+}
+
+void sweep_solve(struct sweep *sweep, const struct half *half, struct matrix right, const double *ridge,
+                 struct matrix weights, double *factors)
+{
+    struct sweep_job job = job_open(sweep, half, right);
+    double sums[SWEEP_SUMS];
+    size_t room = 0;
+    assert(weights.rows == half->lines && weights.columns == right.columns);
+    job.right = sweep_rows_of(sweep, right, job.width, &room);
+    job.product = weights;
+    job.ridge = ridge;
+    job.factors = factors;
+    sweep_run(&job, sweep->kernels->solve, sums);
+}
+
+void sweep_line_solve(const struct sweep_job *job, struct sweep_room *room, uint32_t line)
+{
+    size_t rank = job->rank;
+    double *packed = room->factor, *weight = &MATRIX_AT(job->product, line, 0);
+    for (size_t i = 0; i < rank; i++) {
+        double *row = packed + i * (i + 1) / 2;
+        for (size_t j = 0; j <= i; j++)
+            row[j] = room->gram[j * job->width + i];
+        if (job->ridge != NULL)
+            row[i] += job->ridge[i];
+    }
+    packed_cholesky(packed, rank);
+    packed_solve(packed, rank, room->side);
+    bool empty = job->half->start[line] == job->half->start[line + 1];
+    for (size_t j = 0; j < rank; j++)
+        weight[j] = empty ? 0 : room->side[j];
+    if (job->factors != NULL)
+        memcpy(job->factors + line * packed_size(rank), packed, packed_size(rank) * sizeof *packed);
+}

@@ -1,0 +1,25 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The sweep kernels in double precision for processors with AVX2 and FMA.
+ */
+#include "numeric/sweep_internal.h"
+
+#if defined(__x86_64__)
+#include <immintrin.h>
+
+#if defined(__clang__)
+#pragma clang attribute push(__attribute__((target("avx2,fma"))), apply_to = function)
+#else
+#pragma GCC target("avx2,fma")
+#endif
+
+#define REAL double
+#define LANES 4
+#define MADD(a, b, c) _mm256_fmadd_pd(a, b, c)
+#define SWEEP_KERNEL sweep_avx2_double
+#include "numeric/sweep_kernel.h"
+
+#if defined(__clang__)
+#pragma clang attribute pop
+#endif
+#endif

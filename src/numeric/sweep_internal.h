@@ -1,0 +1,69 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Between the sweeps (one file an operation, precision-blind) and their kernels (sweep_kernel.h, included once for each
+ * precision and instruction set).
+ */
+#ifndef FESCUE_NUMERIC_SWEEP_INTERNAL_H
+#define FESCUE_NUMERIC_SWEEP_INTERNAL_H
+
+#include "numeric/numeric.h"
+
+/* Numbers a line of a factor may have: rank 256, one more for a solver's constant, up to whole registers. */
+enum { SWEEP_MOST_WIDTH = 272 };
+/* Cells in flight at once, and cells gathered before their products are added to a line's normal equations. */
+enum { SWEEP_CHUNK = 32 };
+
+/* One factor as a kernel sees it: rows of `width` numbers in the sweep's precision, `stride` numbers apart. */
+struct sweep_rows {
+    const void *data;
+    size_t stride;
+};
+
+/* What a kernel does to one block of lines. Sums of the block go to `sums`. */
+struct sweep_job {
+    struct sweep *sweep;
+    const struct half *half;
+    struct sweep_rows left, right, a, b;
+    size_t width; /* numbers worked on in each row: the rank up to whole registers, zeros behind the rank */
+    size_t rank;
+    const void *values;    /* of cells, in the half's order, instead of the half's own */
+    void *residual;        /* written by residual, read by tangent; may be NULL in the former */
+    struct matrix product; /* gradient, product or weights; data may be NULL */
+    const double *ridge;
+    double *factors;
+};
+
+enum { SWEEP_SUMS = 2 };
+typedef void sweep_block(const struct sweep_job *job, size_t block, size_t worker, double sums[SWEEP_SUMS]);
+struct sweep_kernel {
+    size_t lanes; /* numbers in a register */
+    sweep_block *residual, *multiply, *tangent, *solve;
+};
+extern const struct sweep_kernel sweep_portable_double, sweep_portable_single;
+#if defined(__x86_64__)
+extern const struct sweep_kernel sweep_avx2_double, sweep_avx2_single, sweep_avx512_double, sweep_avx512_single;
+#endif
+
+/* Runs one kernel over all blocks and adds up its sums. */
+void sweep_run(struct sweep_job *job, sweep_block *kernel, double sums[SWEEP_SUMS]);
+
+/* Makes `matrix` what a kernel sees: itself, or its copy in single precision at `*room` of the sweep's pool, which is
+   moved on. Zeros stand behind the columns in a copy; in double they are the caller's duty. */
+struct sweep_rows sweep_rows_of(struct sweep *sweep, struct matrix matrix, size_t width, size_t *room);
+/* Width of the job's rows for factors of this rank. */
+size_t sweep_width(const struct sweep *sweep, size_t rank);
+
+/* One worker's room in sweep_solve: the gathered rows and values, the normal equations, a copy of them, the right-hand
+   side. */
+struct sweep_room {
+    void *rows;   /* SWEEP_CHUNK x width */
+    void *values; /* SWEEP_CHUNK */
+    double *gram, *factor, *side;
+};
+struct sweep_room sweep_room_of(const struct sweep *sweep, size_t worker);
+
+/* The rest of a line's solution, the same for all kernels: `gram` (upper triangle, rows `width` apart, ridge not yet
+   added) and `side` become the weights, in `side`; packed factors as sweep_solve wants them. */
+void sweep_line_solve(const struct sweep_job *job, struct sweep_room *room, uint32_t line);
+
+#endif

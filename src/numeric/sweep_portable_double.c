@@ -1,0 +1,11 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The sweep kernels in double precision in plain C.
+ */
+#include "numeric/sweep_internal.h"
+
+#define REAL double
+#define LANES 2
+#define MADD(a, b, c) ((a) * (b) + (c))
+#define SWEEP_KERNEL sweep_portable_double
+#include "numeric/sweep_kernel.h"
