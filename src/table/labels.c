@@ -240,6 +240,13 @@ void labels_free(fescue_context *context, struct labels *labels)
     labels->count = 0;
 }
 
+void label_list_finish(fescue_context *context, struct label_list *list, struct labels *labels)
+{
+    label_index_destroy(context, &list->index);
+    *labels = list->labels;
+    *list = (struct label_list){0};
+}
+
 void label_list_free(fescue_context *context, struct label_list *list)
 {
     label_index_destroy(context, &list->index);

@@ -21,6 +21,7 @@ void pile_open(fescue_context *context, const struct table_reading *reading, str
 {
     *pile = (struct pile){.context = context,
                           .precision = reading->precision,
+                          .decimal = '.',
                           .keeps_texts = true,
                           .dense_most = reading->dense_most != 0 ? reading->dense_most : FESCUE_DENSE_MOST};
 }
@@ -91,7 +92,8 @@ uint64_t pile_line(const struct pile *pile, uint64_t entry)
 static fescue_status text_keep(struct pile *pile, const struct pile_entry *entry, double value, uint8_t *code)
 {
     size_t length = (size_t)(entry->end - entry->text);
-    *code = (uint8_t)text_code_of(value, pile->precision, entry->text, length);
+    const struct text_style style = {pile->precision, pile->decimal};
+    *code = (uint8_t)text_code_of(value, style, entry->text, length);
     return *code == TEXT_ODD ? odd_texts_add(pile->context, &pile->odd, entry->text, length) : FESCUE_OK;
 }
 

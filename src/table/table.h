@@ -83,6 +83,7 @@ enum table_shape { SHAPE_MM_COORDINATE, SHAPE_MM_ARRAY, SHAPE_WIDE, SHAPE_LONG, 
 struct table_look {
     enum table_shape shape;
     char separator;                               /* ',' ';' '\t' for delimited text */
+    char decimal;                                 /* '.', or ',' in semicolon-separated text that uses it */
     char *corner;                                 /* wide: the text of the first cell; owned */
     char *row_title, *column_title, *value_title; /* long: the header, NULL where there was none; owned */
 };

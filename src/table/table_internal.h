@@ -38,6 +38,8 @@ fescue_status label_list_add(fescue_context *context, struct label_list *list, c
 /* The position of a label, which is added when it is new. Creates the index at the first call. */
 fescue_status label_list_find_or_add(fescue_context *context, struct label_list *list, const char *text, size_t length,
                                      uint32_t *position);
+/* Hands the labels over to *labels; the list is empty then. */
+void label_list_finish(fescue_context *context, struct label_list *list, struct labels *labels);
 void label_list_free(fescue_context *context, struct label_list *list);
 void labels_free(fescue_context *context, struct labels *labels);
 
@@ -116,8 +118,13 @@ enum text_code {
     TEXT_UNKNOWN = UINT8_MAX - 1, /* while texts are put in order */
     TEXT_ODD = UINT8_MAX          /* kept as it is */
 };
-/* The code of a text that was read as `value`, which has been rounded to `precision`. */
-enum text_code text_code_of(double value, enum fescue_precision precision, const char *text, size_t length);
+/* How numbers are laid out: rounded to `precision` when they were read, with `decimal` for a point. */
+struct text_style {
+    enum fescue_precision precision;
+    char decimal;
+};
+/* The code of a text that was read as `value`. */
+enum text_code text_code_of(double value, struct text_style style, const char *text, size_t length);
 
 /* Odd texts in the order of the input. */
 struct odd_texts {
@@ -148,6 +155,7 @@ struct pile {
     fescue_context *context; /* borrowed */
     enum fescue_precision precision;
     enum pile_mirror mirror;
+    char decimal; /* what texts have for a point */
     bool keeps_texts;
     uint64_t dense_most; /* texts are kept while rows * columns is at most this */
     uint64_t count;
@@ -188,5 +196,53 @@ fescue_status table_create(fescue_context *context, const char *path, fescue_tab
 bool is_matrix_market(const char *text, size_t length);
 fescue_status matrix_market_read(struct stream *stream, const struct table_reading *reading, fescue_table *table);
 fescue_status delimited_read(struct stream *stream, const struct table_reading *reading, fescue_table *table);
+
+/* ---- delimited text ------------------------------------------------------------------------------------------------
+ */
+
+struct field {
+    const char *text, *end; /* without quotes */
+};
+struct record {
+    uint64_t line; /* its first */
+    struct field *field;
+    size_t count; /* 0 at the end of the file */
+    size_t capacity;
+    char *joined; /* a record with quotes is copied here */
+    size_t joined_count, joined_size;
+};
+/* The next record that is not an empty line; fields are good until the next call. */
+fescue_status record_read(struct stream *stream, char separator, struct record *record);
+void record_free(fescue_context *context, struct record *record);
+
+/* What the first lines say: separator, and shape SHAPE_WIDE or SHAPE_LONG as far as the format leaves it open. */
+struct delimited_kind {
+    char separator;
+    enum table_shape shape;
+};
+fescue_status delimited_kind_find(struct stream *stream, enum fescue_format format, struct delimited_kind *kind);
+
+/* Everything a reader of delimited text works with. */
+struct delimited {
+    struct stream *stream;
+    const struct table_reading *reading;
+    fescue_table *table;
+    char separator;
+    char decimal;          /* 0 until a value has shown it */
+    uint64_t decimal_line; /* where it did */
+    struct record record;
+    struct pile pile;
+    struct label_list rows, columns;
+};
+bool is_hole(const struct field *field);                    /* blank, NA, NaN, null, in any case */
+bool is_number(const struct field *field, bool with_comma); /* whether a decimal comma is taken for a point */
+/* Adds the value of a field, unless it is a hole. */
+fescue_status delimited_cell(struct delimited *delimited, uint32_t row, uint32_t column, const struct field *field);
+/* Refuses what is not UTF-8 or empty; `what` says what it is a label of. */
+fescue_status label_check(const struct delimited *delimited, const struct field *field, const char *what);
+/* New text of the corner or of a header, which may be empty but not out of UTF-8. */
+fescue_status title_keep(struct delimited *delimited, const struct field *field, char **title);
+fescue_status wide_read(struct delimited *delimited);
+fescue_status long_read(struct delimited *delimited);
 
 #endif

@@ -19,6 +19,7 @@
 enum { TEXT_SIZE = 32, RANK_STEP = 256 }; /* a rank is counted from the nearest multiple: 256 bytes are four lines */
 
 struct texts {
+    char decimal;
     uint8_t *code;    /* of each cell */
     uint64_t *before; /* odd texts before cell RANK_STEP * i */
     char **odd;       /* in the order of the cells */
@@ -28,12 +29,14 @@ struct texts {
 /* ---- one text --------------------------------------------------------------------------------------------------- */
 
 /* The text that a code other than TEXT_ODD stands for. 0 when it does not fit. */
-static size_t text_make(double value, enum fescue_precision precision, enum text_code code, char text[TEXT_SIZE])
+static size_t text_make(double value, struct text_style style, enum text_code code, char text[TEXT_SIZE])
 {
-    size_t length = real_to_text(value, precision, text);
+    size_t length = real_to_text(value, style.precision, text);
+    char *point = memchr(text, '.', length);
+    if (point != NULL)
+        *point = style.decimal;
     if (code == TEXT_SHORTEST)
         return length;
-    const char *point = memchr(text, '.', length);
     size_t has = point == NULL ? 0 : length - (size_t)(point + 1 - text);
     size_t wanted = (size_t)code - TEXT_DECIMALS;
     size_t added = (wanted > has ? wanted - has : 0) + (point == NULL);
@@ -41,13 +44,13 @@ static size_t text_make(double value, enum fescue_precision precision, enum text
         return 0;
     memset(text + length, '0', added);
     if (point == NULL)
-        text[length] = '.';
+        text[length] = style.decimal;
     return length + added;
 }
 
-/* Digits of [-] whole [. decimals] in the plainest spelling: no leading zero but the one before a point. 0 when the
+/* Digits of [-] whole [point decimals] in the plainest spelling: no leading zero but the one before a point. 0 when the
    text is something else. */
-static size_t plain_digits(const char *text, size_t length, size_t *decimals)
+static size_t plain_digits(const char *text, size_t length, char decimal, size_t *decimals)
 {
     const char *end = text + length;
     if (text < end && *text == '-')
@@ -61,7 +64,7 @@ static size_t plain_digits(const char *text, size_t length, size_t *decimals)
         return 0;
     if (text == end)
         return digits;
-    if (*text != '.')
+    if (*text != decimal)
         return 0;
     *decimals = (size_t)(end - ++text);
     while (text < end && *text >= '0' && *text <= '9')
@@ -69,10 +72,10 @@ static size_t plain_digits(const char *text, size_t length, size_t *decimals)
     return text == end && *decimals > 0 ? digits + *decimals : 0;
 }
 
-enum text_code text_code_of(double value, enum fescue_precision precision, const char *text, size_t length)
+enum text_code text_code_of(double value, struct text_style style, const char *text, size_t length)
 {
-    size_t decimals, digits = plain_digits(text, length, &decimals);
-    size_t safe = precision == FESCUE_SINGLE ? FLT_DIG : DBL_DIG;
+    size_t decimals, digits = plain_digits(text, length, style.decimal, &decimals);
+    size_t safe = style.precision == FESCUE_SINGLE ? FLT_DIG : DBL_DIG;
     enum text_code code = TEXT_SHORTEST;
     if (digits != 0 && decimals > 0 && decimals <= TEXT_MOST_DECIMALS)
         code = TEXT_DECIMALS + (enum text_code)decimals;
@@ -80,7 +83,7 @@ enum text_code text_code_of(double value, enum fescue_precision precision, const
     if (digits != 0 && digits <= safe && (value == 0 || fabs(value) >= 1e-4))
         return code;
     char made[TEXT_SIZE];
-    size_t made_length = text_make(value, precision, code, made);
+    size_t made_length = text_make(value, style, code, made);
     return made_length == length && memcmp(made, text, length) == 0 ? code : TEXT_ODD;
 }
 
@@ -217,6 +220,7 @@ fescue_status texts_create(struct pile *pile, const struct cells *cells, enum fe
     struct texts *texts = NULL;
     *out = NULL;
     TRY(TAKE(context, 1, &texts));
+    texts->decimal = pile->decimal;
     TRY(TAKE(context, cells->count, &texts->code));
     TRY(TAKE(context, cells->count / RANK_STEP + 1, &texts->before));
     memset(texts->code, TEXT_UNKNOWN, cells->count);
@@ -242,7 +246,8 @@ const char *texts_of(const struct texts *texts, const struct cells *cells, uint6
         *length = strlen(text);
         return text;
     }
-    *length = text_make(cells_value(cells, &cells->by_row, k), cells->precision, texts->code[k], buffer);
+    const struct text_style style = {cells->precision, texts->decimal};
+    *length = text_make(cells_value(cells, &cells->by_row, k), style, texts->code[k], buffer);
     return buffer;
 }
 

@@ -18,6 +18,8 @@ static bool is_infinity(const char *text, const char *end)
 
 bool is_nan_text(const char *text, const char *end)
 {
+    if (end - text < 3 || (end[-1] | ' ') != 'n') /* nearly all texts leave here */
+        return false;
     if (text < end && (*text == '-' || *text == '+'))
         text++;
     return end - text == 3 && strncasecmp(text, "nan", 3) == 0;

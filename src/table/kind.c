@@ -1,0 +1,211 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * What delimited text is: its separator and its shape, from the first 64 kB.
+ *
+ * Separator, of tab, semicolon and comma: one that is in the first record and cuts all records into equally many
+ * fields, the last of which is a number or a hole in all but the first record. Where several do, the one that comes
+ * first in this list, since a comma may also be a decimal sign. Where none does, the one that the first record has most
+ * of; what is wrong is then found, with its line, when the text is read.
+ *
+ * Shape. Long text has three fields: row, column, value. Other numbers of fields are wide. Three fields may be either;
+ * in this order decide
+ *
+ *     long   the second field of a record after the first is neither a number nor a hole
+ *     long   the first field comes again (a wide table has every row once)
+ *     wide   the first field of the first record is blank (the corner of a wide table often is)
+ *     wide   the second field of a record is a hole, or has a decimal point (labels that are numbers seldom have)
+ *     long   the third field of the first record is "value"
+ *
+ * and if nothing does, the text is refused, with the option that tells: guessing wrong would be found by nobody.
+ */
+#include "table/table_internal.h"
+
+#include <string.h>
+#include <strings.h>
+
+enum { SAMPLE_SIZE = 1 << 16, SAMPLE_FIELDS = 4 };
+
+/* Where we are in the sample, and the record that was met last. */
+struct sample {
+    const char *at, *end;
+    bool is_whole; /* the text ends where the sample does */
+    char separator;
+    size_t count;                      /* fields of the record */
+    struct field field[SAMPLE_FIELDS]; /* the first of them, without quotes around them */
+    struct field last;
+};
+
+static const char *field_end(const char *text, const char *end, char separator)
+{
+    if (text < end && *text == '"') {
+        for (text++; text < end; text++) {
+            if (*text != '"')
+                continue;
+            if (text + 1 == end || text[1] != '"')
+                break;
+            text++;
+        }
+    }
+    while (text < end && *text != separator && *text != '\n')
+        text++;
+    return text;
+}
+
+/* Without the carriage return before an end of line, and without quotes (those within stay doubled). */
+static struct field field_bare(const char *text, const char *end)
+{
+    if (end > text && end[-1] == '\r')
+        end--;
+    if (end - text >= 2 && *text == '"' && end[-1] == '"')
+        return (struct field){text + 1, end - 1};
+    return (struct field){text, end};
+}
+
+/* The next record; false at the end. A record that the sample cuts off is left out, unless it is the first. */
+static bool sample_record(struct sample *sample, bool is_first)
+{
+    const char *end = sample->end;
+    while (sample->at < end &&
+           (*sample->at == '\n' || (*sample->at == '\r' && end - sample->at > 1 && sample->at[1] == '\n')))
+        sample->at++;
+    if (sample->at == end)
+        return false;
+    sample->count = 0;
+    for (;; sample->at++) {
+        const char *stop = field_end(sample->at, end, sample->separator);
+        sample->last = field_bare(sample->at, stop);
+        if (sample->count < SAMPLE_FIELDS)
+            sample->field[sample->count] = sample->last;
+        sample->count++;
+        sample->at = stop;
+        if (stop == end || *stop == '\n')
+            break;
+    }
+    return is_first || sample->is_whole || sample->at < end;
+}
+
+/* ---- separator -------------------------------------------------------------------------------------------------- */
+
+/* How well a separator fits: 0 it does not, 1 all records have as many fields as the first, 2 and end in a number. */
+static int separator_fit(struct sample sample, size_t *first_count)
+{
+    bool is_even = true, is_numeric = true;
+    *first_count = sample_record(&sample, true) ? sample.count : 0;
+    while (sample_record(&sample, false)) {
+        is_even = is_even && sample.count == *first_count;
+        is_numeric = is_numeric && (is_hole(&sample.last) || is_number(&sample.last, sample.separator == ';'));
+    }
+    return *first_count < 2 || !is_even ? 0 : is_numeric ? 2 : 1;
+}
+
+static fescue_status separator_find(const struct stream *stream, struct sample sample, char *separator)
+{
+    static const char separators[] = {'\t', ';', ','};
+    int best = -1;
+    size_t most = 1;
+    for (size_t k = 0; k < sizeof separators; k++) {
+        size_t count;
+        sample.separator = separators[k];
+        int fit = separator_fit(sample, &count);
+        if (count < 2 || fit < best || (fit == best && (fit > 0 || count <= most)))
+            continue;
+        best = fit;
+        most = count;
+        *separator = separators[k];
+    }
+    if (best >= 0)
+        return FESCUE_OK;
+    return BAD_LINE_AT(stream, UINT64_C(1),
+                       "no comma, semicolon or tab was found, fields separated by one of them "
+                       "were expected");
+}
+
+/* ---- shape ------------------------------------------------------------------------------------------------------ */
+
+/* What speaks for one shape or the other. */
+struct evidence {
+    bool corner_blank, value_titled; /* in the first record */
+    bool second_is_text, second_is_hole, second_has_point, first_again;
+};
+
+static bool field_is(const struct field *field, const char *word)
+{
+    size_t length = strlen(word);
+    return (size_t)(field->end - field->text) == length && strncasecmp(field->text, word, length) == 0;
+}
+
+static bool has_point(const struct field *field)
+{
+    size_t length = (size_t)(field->end - field->text);
+    return memchr(field->text, '.', length) != NULL || memchr(field->text, ',', length) != NULL;
+}
+
+/* Looks at the records of three fields behind the first. */
+static fescue_status evidence_collect(fescue_context *context, struct sample *sample, struct evidence *evidence)
+{
+    fescue_status status = FESCUE_OK;
+    struct label_list seen = {0};
+    while (sample_record(sample, false)) {
+        const struct field *first = &sample->field[0], *second = &sample->field[1];
+        if (sample->count != 3)
+            continue;
+        uint32_t position, known = seen.labels.count;
+        TRY(label_list_find_or_add(context, &seen, first->text, (size_t)(first->end - first->text), &position));
+        evidence->first_again = evidence->first_again || position < known;
+        bool number = is_number(second, sample->separator == ';');
+        evidence->second_is_hole = evidence->second_is_hole || is_hole(second);
+        evidence->second_is_text = evidence->second_is_text || (!number && !is_hole(second));
+        evidence->second_has_point = evidence->second_has_point || (number && has_point(second));
+    }
+done:
+    label_list_free(context, &seen);
+    return status;
+}
+
+static fescue_status shape_weigh(const struct stream *stream, const struct evidence *evidence, enum table_shape *shape)
+{
+    if (evidence->second_is_text || evidence->first_again)
+        *shape = SHAPE_LONG;
+    else if (evidence->corner_blank || evidence->second_is_hole || evidence->second_has_point)
+        *shape = SHAPE_WIDE;
+    else if (evidence->value_titled)
+        *shape = SHAPE_LONG;
+    else
+        return BAD_LINE_AT(stream, UINT64_C(1),
+                           "three columns may be a wide table of two columns or a long one of row, "
+                           "column and value; --format wide or --format long says which it is");
+    return FESCUE_OK;
+}
+
+static fescue_status shape_find(const struct stream *stream, struct sample sample, enum table_shape *shape)
+{
+    struct evidence evidence = {0};
+    sample_record(&sample, true);
+    *shape = SHAPE_WIDE;
+    if (sample.count == 4 && (field_is(&sample.field[3], "weight") || field_is(&sample.field[3], "weights")))
+        *shape = SHAPE_LONG;
+    if (sample.count != 3)
+        return FESCUE_OK;
+    evidence.corner_blank = field_is(&sample.field[0], "");
+    evidence.value_titled = field_is(&sample.field[2], "value");
+    fescue_status status = evidence_collect(stream_context(stream), &sample, &evidence);
+    return status == FESCUE_OK ? shape_weigh(stream, &evidence, shape) : status;
+}
+
+fescue_status delimited_kind_find(struct stream *stream, enum fescue_format format, struct delimited_kind *kind)
+{
+    fescue_status status;
+    size_t length;
+    struct sample sample = {0};
+    TRY(stream_peek(stream, SAMPLE_SIZE, &sample.at, &length));
+    sample.end = sample.at + length;
+    sample.is_whole = length < SAMPLE_SIZE;
+    TRY(separator_find(stream, sample, &kind->separator));
+    sample.separator = kind->separator;
+    if (format == FESCUE_FORMAT_AUTO)
+        TRY(shape_find(stream, sample, &kind->shape));
+    else
+        kind->shape = format == FESCUE_FORMAT_LONG ? SHAPE_LONG : SHAPE_WIDE;
+done:
+    return status;
+}
