@@ -72,6 +72,13 @@ static void model_lines(struct summary *summary)
         text_add(text, "           rank %" PRId64 " was asked for; the table is too small for it\n", options->rank);
 }
 
+static const char *alone_text(enum fescue_offsets offsets)
+{
+    if (offsets == FESCUE_OFFSETS_NONE)
+        return "without the low-rank part";
+    return offsets == FESCUE_OFFSETS_MEAN ? "the mean alone" : "offsets alone";
+}
+
 static void error_lines(struct summary *summary)
 {
     const struct choice *choice = &summary->fill->choice;
@@ -85,8 +92,8 @@ static void error_lines(struct summary *summary)
     text_add(text, "error      RMSE %s, MAE %s on %" PRIu64 " hidden cells\n", real_to_words(errors->rmse, 4, rmse),
              real_to_words(errors->mae, 4, mae), errors->count);
     if (choice->rank > 0)
-        text_add(text, "           offsets alone: RMSE %s, MAE %s\n", real_to_words(alone->rmse, 4, alone_rmse),
-                 real_to_words(alone->mae, 4, alone_mae));
+        text_add(text, "           %s: RMSE %s, MAE %s\n", alone_text(choice->offsets),
+                 real_to_words(alone->rmse, 4, alone_rmse), real_to_words(alone->mae, 4, alone_mae));
     if (choice->noiseless)
         text_add(text, "           the hidden cells are met to rounding: the table is free of noise\n");
     if (choice->own_holdout)
@@ -173,6 +180,21 @@ static void files_lines(struct summary *summary)
     left_out_line(summary, "the factors", run_why_left_out(run, run->writes_factors));
 }
 
+/* Words in lines of at most 80. */
+static void words_wrap(struct text *text, const char *words)
+{
+    enum { WIDTH = 80 };
+    while (*words != '\0') {
+        size_t length = strlen(words);
+        if (length > WIDTH)
+            for (length = WIDTH; words[length] != ' ';)
+                length--;
+        text_add(text, "%.*s\n", (int)length, words);
+        words += length;
+        words += *words == ' ';
+    }
+}
+
 fescue_status fill_summarise(const fescue_fill *fill, bool is_written, char **text)
 {
     struct summary summary = {.fill = fill, .run = &fill->run, .text = {.context = fill->context}};
@@ -184,6 +206,6 @@ fescue_status fill_summarise(const fescue_fill *fill, bool is_written, char **te
     filled_lines(&summary);
     if (is_written)
         files_lines(&summary);
-    text_add(&summary.text, "%s\n", run_caution);
+    words_wrap(&summary.text, run_caution);
     return text_finish(&summary.text, text);
 }

@@ -13,15 +13,13 @@
  *   files     each with "written" or why it was left out
  *   timing    started, seconds, threads, bytes of memory at most: all that may differ when the run is repeated
  *
- * Keys keep the order in which they are set here. Numbers have 17 significant digits, which read back as the same
- * double; what is not finite becomes null. Jansson takes memory from malloc: its allocator is one for the whole
- * process and so not ours to replace. When it has none it gives NULL, which every call of it here passes on, and which
- * ends as FESCUE_NO_MEMORY.
+ * Keys keep the order in which they are set here. What is not finite becomes null. Jansson takes memory from malloc:
+ * its allocator is one for the whole process and so not ours to replace. When it has none it gives NULL, which every
+ * call of it here passes on, and which ends as FESCUE_NO_MEMORY.
  */
-#include "write/write.h"
+#include "write/write_internal.h"
 
 #include <inttypes.h>
-#include <jansson.h>
 #include <math.h>
 #include <stdio.h>
 #include <string.h>
@@ -166,6 +164,8 @@ static struct record choice_record(const struct run *run)
     count_set(&record, "judged", choice->errors.count);
     record_set(&record, "errors", errors_record(run, &choice->errors));
     record_set(&record, "errors_of_offsets_alone", errors_record(run, &choice->offsets_errors));
+    real_set(&record, "rmse_of_best_offsets_alone", choice->errors.count > 0 ? choice->offsets_only_rank0_rmse : NAN);
+    flag_set(&record, "hidden_for_choice_only", choice->own_holdout);
     flag_set(&record, "noiseless", choice->noiseless);
     real_set(&record, "interval_level", run->options->interval);
     real_set(&record, "interval_halfwidth", run->halfwidth);
@@ -207,7 +207,7 @@ static struct record model_record(const struct run *run)
         if (json_array_append_new(spectrum.object, json_real(model->low_rank.spectrum[k])) != 0)
             spectrum.failed = true;
     record_set(&record, "spectrum", spectrum);
-    text_set(&record, "estimate",
+    text_set(&record, "formula",
              "mean + row offset + column offset + left diag(spectrum) right', then bounds; where the "
              "ridge is 0, cells whose basis is not low-rank are without the product");
     return record;
@@ -283,13 +283,6 @@ static struct record run_record(const struct run *run)
     return record;
 }
 
-static int chunk_put(const char *chunk, size_t size, void *data)
-{
-    struct outfile *file = data;
-    outfile_write(file, chunk, size);
-    return outfile_status(file) == FESCUE_OK ? 0 : -1;
-}
-
 fescue_status write_record(const struct run *run, struct output *output)
 {
     struct outfile *file;
@@ -297,13 +290,10 @@ fescue_status write_record(const struct run *run, struct output *output)
     fescue_status status;
     TRY(output_add(output, "run.json", &file));
     record = run_record(run);
-    if (!record.failed &&
-        json_dump_callback(record.object, chunk_put, file, JSON_INDENT(2) | JSON_REAL_PRECISION(17)) != 0)
-        record.failed = outfile_status(file) == FESCUE_OK;
-    if (record.failed)
-        TRY(FAIL(run->context, FESCUE_NO_MEMORY, "the system has no memory left for the record of the run"));
-    outfile_write(file, "\n", 1);
+    bool good = !record.failed && json_put(file, record.object);
     TRY(outfile_status(file));
+    if (!good)
+        TRY(FAIL(run->context, FESCUE_NO_MEMORY, "the system has no memory left for the record of the run"));
 done:
     json_decref(record.object);
     return status;

@@ -9,7 +9,7 @@
  *   factors    offsets and the low-rank part
  *   trace      one line an iteration of the final fit
  *   record     run.json: what is needed to repeat and to judge the run
- *   array      a dense Matrix Market file        field     a field of delimited text
+ *   array      a dense Matrix Market file      field   a field of delimited text      json   a value of JSON
  *
  * All numbers that were computed are written as the shortest decimal that reads back as the same double. All bytes are
  * the same for any number of threads and any hour, but for the object "timing" of run.json.

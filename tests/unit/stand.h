@@ -93,7 +93,7 @@ static void stand_begin(void **state, struct stand *stand)
 static void stand_read(struct stand *stand, const char *text)
 {
     char path[PATH_SIZE];
-    const struct table_reading reading = {0};
+    const struct table_reading reading = {.format = (enum fescue_format)stand->options.format};
     file_put_text(path_in(stand->folder, "table", path), text);
     assert_status(stand->context, table_read(stand->context, path, &reading, &stand->table), FESCUE_OK);
 }

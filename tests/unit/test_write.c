@@ -264,6 +264,7 @@ static void what_is_left_out_says_why(void **state)
 {
     struct stand stand;
     stand_begin(state, &stand);
+    stand.options.format = FESCUE_FORMAT_WIDE;
     stand_read(&stand, "x,a,b\nr,1,2\ns,3,\n");
     stand_run(&stand, FESCUE_OFFSETS_BOTH, 0);
     assert_null(run_why_left_out(&stand.run, true));
@@ -297,6 +298,7 @@ static void factors_are_arrays(void **state)
     struct stand stand;
     char path[PATH_SIZE];
     stand_begin(state, &stand);
+    stand.options.format = FESCUE_FORMAT_WIDE;
     stand_read(&stand, "x,a,b\nr,1,2\ns,3,\nt,4,5\n");
     stand_run(&stand, FESCUE_OFFSETS_BOTH, 2);
     stand_write(&stand, write_factors);
@@ -316,6 +318,7 @@ static void rank_0_has_offsets_only(void **state)
     struct stand stand;
     char path[PATH_SIZE];
     stand_begin(state, &stand);
+    stand.options.format = FESCUE_FORMAT_WIDE;
     stand_read(&stand, "x,a,b\nr,1,2\ns,3,\n");
     stand_run(&stand, FESCUE_OFFSETS_MEAN, 0);
     stand_write(&stand, write_factors);
@@ -330,6 +333,7 @@ static void the_trace_is_in_units_of_the_table(void **state)
     struct stand stand;
     char path[PATH_SIZE];
     stand_begin(state, &stand);
+    stand.options.format = FESCUE_FORMAT_WIDE;
     stand_read(&stand, "x,a,b\nr,1,2\ns,3,\n");
     stand_run(&stand, FESCUE_OFFSETS_MEAN, 1);
     assert_status(stand.context, TAKE(stand.context, 2, &stand.fit.trace), FESCUE_OK);
@@ -377,6 +381,7 @@ static void a_full_disk_leaves_nothing(void **state)
     struct stand stand;
     char path[PATH_SIZE];
     stand_begin(state, &stand);
+    stand.options.format = FESCUE_FORMAT_WIDE;
     stand_read(&stand, "x,a,b\nr,1,2\ns,3,\n");
     stand_run(&stand, FESCUE_OFFSETS_BOTH, 1);
     for (size_t k = 0; k < sizeof writers / sizeof writers[0]; k++) {
