@@ -69,16 +69,17 @@ static uint32_t text_hash(const uint64_t key[2], const char *text, size_t length
 struct label_index {
     const struct labels *labels; /* borrowed; may grow */
     struct slot {
-        uint32_t hash, position; /* position + 1; 0: the slot is free */
+        const char *text; /* the label's, so that a look costs one jump less; NULL: the slot is free */
+        uint32_t hash, position;
     } * slots;
     size_t mask; /* number of slots - 1, a power of two less one */
     uint32_t taken;
     uint64_t key[2];
 };
 
-static bool label_is(const struct labels *labels, uint32_t i, const char *text, size_t length)
+static bool text_is(const char *label, const char *text, size_t length)
 {
-    return strncmp(labels->text[i], text, length) == 0 && labels->text[i][length] == '\0';
+    return strncmp(label, text, length) == 0 && label[length] == '\0';
 }
 
 /* The slot that holds the text, or the free one where it belongs. */
@@ -86,7 +87,7 @@ static struct slot *slot_find(const struct label_index *index, uint32_t hash, co
 {
     for (size_t at = hash & index->mask;; at = (at + 1) & index->mask) {
         struct slot *slot = &index->slots[at];
-        if (slot->position == 0 || (slot->hash == hash && label_is(index->labels, slot->position - 1, text, length)))
+        if (slot->text == NULL || (slot->hash == hash && text_is(slot->text, text, length)))
             return slot;
     }
 }
@@ -102,10 +103,10 @@ static fescue_status slots_resize(fescue_context *context, struct label_index *i
     index->slots = slots;
     index->mask = count - 1;
     for (size_t k = 0; k < old_count; k++) {
-        if (old[k].position == 0)
+        if (old[k].text == NULL)
             continue;
         size_t at = old[k].hash & index->mask;
-        while (slots[at].position != 0)
+        while (slots[at].text != NULL)
             at = (at + 1) & index->mask;
         slots[at] = old[k];
     }
@@ -125,8 +126,8 @@ static fescue_status label_index_add(fescue_context *context, struct label_index
     size_t length = strlen(text);
     uint32_t hash = text_hash(index->key, text, length);
     struct slot *slot = slot_find(index, hash, text, length);
-    if (slot->position == 0) {
-        *slot = (struct slot){hash, i + 1};
+    if (slot->text == NULL) {
+        *slot = (struct slot){text, hash, i};
         index->taken++;
     }
     return FESCUE_OK;
@@ -174,8 +175,8 @@ bool label_index_find(const struct label_index *index, const char *text, size_t 
     if (index->slots == NULL)
         return false;
     const struct slot *slot = slot_find(index, text_hash(index->key, text, length), text, length);
-    *position = slot->position - 1;
-    return slot->position != 0;
+    *position = slot->position;
+    return slot->text != NULL;
 }
 
 void label_index_destroy(fescue_context *context, struct label_index **index)
@@ -225,10 +226,15 @@ fescue_status label_list_find_or_add(fescue_context *context, struct label_list 
     fescue_status status = FESCUE_OK;
     if (list->index == NULL)
         TRY(label_index_create(context, &list->labels, &list->index));
-    if (label_index_find(list->index, text, length, position))
+    if (list->labels.count > 0 && text_is(list->labels.text[list->last], text, length)) {
+        *position = list->last;
         return FESCUE_OK;
-    TRY(label_list_add(context, list, text, length));
-    *position = list->labels.count - 1;
+    }
+    if (!label_index_find(list->index, text, length, position)) {
+        TRY(label_list_add(context, list, text, length));
+        *position = list->labels.count - 1;
+    }
+    list->last = *position;
 done:
     return status;
 }

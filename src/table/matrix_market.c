@@ -220,6 +220,7 @@ static fescue_status sizes_read(struct market *market)
     TRY(sides_check(market));
     if (market->is_array)
         market->entries = array_entries(market);
+    market->pile.keeps_lines = !market->is_array;
     pile_told_size(&market->pile, market->rows, market->columns);
 done:
     return status;

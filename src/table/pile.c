@@ -23,6 +23,7 @@ void pile_open(fescue_context *context, const struct table_reading *reading, str
                           .precision = reading->precision,
                           .decimal = '.',
                           .keeps_texts = true,
+                          .keeps_lines = true,
                           .dense_most = reading->dense_most != 0 ? reading->dense_most : FESCUE_DENSE_MOST};
 }
 
@@ -102,7 +103,7 @@ fescue_status pile_add(struct pile *pile, const struct pile_entry *entry)
     fescue_status status = FESCUE_OK;
     if (pile->last == NULL || pile->last->count == PILE_BLOCK)
         TRY(block_append(pile));
-    if (entry->line != pile->next_line)
+    if (pile->keeps_lines && entry->line != pile->next_line)
         TRY(run_append(pile, entry->line));
     struct pile_block *block = pile->last;
     uint32_t k = block->count;

@@ -30,7 +30,7 @@ void text_store_free(fescue_context *context, struct text_store **store);
 /* A growing list of labels: capacity belongs to labels->text. */
 struct label_list {
     struct labels labels;
-    uint32_t capacity;
+    uint32_t capacity, last;   /* last: found last; files have runs of the same label */
     struct label_index *index; /* NULL: positions are not looked up */
 };
 /* Appends without looking whether it is there already. The index, when there is one, learns it. */
@@ -157,6 +157,7 @@ struct pile {
     enum pile_mirror mirror;
     char decimal; /* what texts have for a point */
     bool keeps_texts;
+    bool keeps_lines;    /* of entries: where no cell can come twice nobody asks for them */
     uint64_t dense_most; /* texts are kept while rows * columns is at most this */
     uint64_t count;
     struct pile_block *first, *last;

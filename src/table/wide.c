@@ -65,6 +65,7 @@ done:
 fescue_status wide_read(struct delimited *delimited)
 {
     fescue_status status;
+    delimited->pile.keeps_lines = false;
     TRY(columns_read(delimited));
     for (;;) {
         TRY(record_read(delimited->stream, delimited->separator, &delimited->record));
