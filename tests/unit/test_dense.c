@@ -1,0 +1,369 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Dense algebra by identities: Q'Q = I, Q R = A, U diag(s) V' = A on random vectors, and the like. An error is measured
+ * against eps times the size of what was worked on; the factors in front are those of Higham 2002, Accuracy and
+ * Stability of Numerical Algorithms, chapters 19 and 20: a modest constant times lines^1/2 columns.
+ */
+#include "numeric/numeric.h"
+#include "support.h"
+
+#include <float.h>
+#include <math.h>
+#include <stdlib.h>
+#include <string.h>
+
+struct shape {
+    size_t lines, columns;
+};
+static const struct shape shapes[] = {{1, 1},   {2, 2},    {7, 3},    {16, 16},   {40, 13},    {100, 100}, {300, 33},
+                                      {600, 7}, {1000, 1}, {2000, 8}, {9000, 16}, {40000, 24}, {1300, 257}};
+#define COUNT(array) (sizeof(array) / sizeof *(array))
+
+struct stand {
+    fescue_context *context;
+    struct arena arena;
+    struct matrix a, copy, r, square, product;
+    double *s, *work, *x, *y;
+};
+
+static void stand_open(struct stand *stand, fescue_context *context, struct shape shape)
+{
+    struct random_stream stream = random_open(shape.lines + 1000 * shape.columns, RANDOM_TEST, 1);
+    size_t work = dense_work_size(shape.lines, shape.columns);
+    *stand = (struct stand){.context = context};
+    for (int m = 0; m < 2; m++)
+        matrix_reserve(&stand->arena, shape.lines, shape.columns);
+    for (int m = 0; m < 3; m++)
+        matrix_reserve(&stand->arena, shape.columns, shape.columns);
+    arena_reserve(&stand->arena, shape.columns, sizeof(double));
+    arena_reserve(&stand->arena, work, sizeof(double));
+    assert_status(context, arena_open(context, &stand->arena), FESCUE_OK);
+    stand->a = matrix_carve(&stand->arena, shape.lines, shape.columns);
+    stand->copy = matrix_carve(&stand->arena, shape.lines, shape.columns);
+    stand->r = matrix_carve(&stand->arena, shape.columns, shape.columns);
+    stand->square = matrix_carve(&stand->arena, shape.columns, shape.columns);
+    stand->product = matrix_carve(&stand->arena, shape.columns, shape.columns);
+    stand->s = arena_carve(&stand->arena, shape.columns, sizeof(double));
+    stand->work = arena_carve(&stand->arena, work, sizeof(double));
+    for (size_t i = 0; i < shape.lines; i++)
+        for (size_t j = 0; j < shape.columns; j++)
+            MATRIX_AT(stand->a, i, j) = random_normal(&stream);
+    matrix_copy(stand->a, stand->copy);
+}
+
+static void stand_close(struct stand *stand)
+{
+    arena_close(stand->context, &stand->arena);
+}
+
+static double tolerance_of(const struct stand *stand)
+{
+    return 20 * DBL_EPSILON * sqrt((double)stand->a.rows) * (double)stand->a.columns;
+}
+
+static void padding_check(struct matrix a)
+{
+    for (size_t i = 0; i < a.rows; i++)
+        for (size_t j = a.columns; j < a.stride; j++)
+            assert_true(MATRIX_AT(a, i, j) == 0);
+}
+
+/* |a'a - I|, by plain loops: they share nothing with what is tested. */
+static void orthonormal_check(struct matrix a, double tolerance)
+{
+    for (size_t j = 0; j < a.columns; j++)
+        for (size_t c = j < 4 ? 0 : j - 4; c <= j; c++) {
+            double sum = 0;
+            for (size_t i = 0; i < a.rows; i++)
+                sum += MATRIX_AT(a, i, j) * MATRIX_AT(a, i, c);
+            assert_close(sum, j == c, tolerance);
+        }
+}
+
+/* |q r - a| for a random vector: q (r x) = a x. */
+static void product_check(struct matrix q, struct matrix r, struct matrix a, double tolerance)
+{
+    struct random_stream stream = random_open(9, RANDOM_TEST, 2);
+    double x[600], y[600], norm = matrix_norm(a);
+    for (size_t j = 0; j < a.columns; j++)
+        x[j] = random_normal(&stream);
+    for (size_t j = 0; j < a.columns; j++) {
+        y[j] = 0;
+        for (size_t c = 0; c < a.columns; c++)
+            y[j] += MATRIX_AT(r, j, c) * x[c];
+    }
+    for (size_t i = 0; i < a.rows; i++) {
+        double got = 0, want = 0;
+        for (size_t j = 0; j < a.columns; j++) {
+            got += MATRIX_AT(q, i, j) * y[j];
+            want += MATRIX_AT(a, i, j) * x[j];
+        }
+        assert_close(got, want, tolerance * norm);
+    }
+}
+
+static void triangle_check(struct matrix r)
+{
+    for (size_t i = 0; i < r.rows; i++) {
+        assert_true(MATRIX_AT(r, i, i) >= 0);
+        for (size_t j = 0; j < i; j++)
+            assert_true(MATRIX_AT(r, i, j) == 0);
+    }
+}
+
+static void qr_check(struct stand *stand)
+{
+    assert_status(stand->context, dense_qr(stand->context, stand->a, stand->r, stand->work), FESCUE_OK);
+    triangle_check(stand->r);
+    orthonormal_check(stand->a, tolerance_of(stand));
+    product_check(stand->a, stand->r, stand->copy, tolerance_of(stand));
+    padding_check(stand->a);
+    padding_check(stand->r);
+}
+
+static void qr_of_many_shapes(void **state)
+{
+    struct stand stand;
+    for (size_t k = 0; k < COUNT(shapes); k++) {
+        stand_open(&stand, bench_of(state)->context, shapes[k]);
+        qr_check(&stand);
+        stand_close(&stand);
+    }
+}
+
+/* Columns that repeat, vanish, or nearly so; lengths that differ by 1e200. */
+static void qr_of_deficient_matrices(void **state)
+{
+    static const struct shape many[] = {{20, 6}, {50, 9}, {5000, 9}, {20000, 16}};
+    static const double nearly[] = {0, 1e-18, 1e-13, 1e-9, 1e-7, 1e-5, 1e-3};
+    struct stand stand;
+    for (size_t k = 0; k < COUNT(many); k++)
+        for (size_t n = 0; n < COUNT(nearly); n++) {
+            stand_open(&stand, bench_of(state)->context, many[k]);
+            for (size_t i = 0; i < many[k].lines; i++) {
+                double *row = &MATRIX_AT(stand.a, i, 0);
+                row[2] = row[0] + nearly[n] * row[2];
+                row[4] = nearly[n] * row[4];
+                row[5] = row[1] - row[3] + nearly[n] * row[5];
+            }
+            matrix_copy(stand.a, stand.copy);
+            qr_check(&stand);
+            stand_close(&stand);
+        }
+}
+
+static void qr_of_extreme_sizes(void **state)
+{
+    static const double sizes[] = {0, 1e-300, 1e-150, 1e150, 1e300};
+    static const struct shape shape = {6000, 5};
+    struct stand stand;
+    for (size_t n = 0; n < COUNT(sizes); n++) {
+        stand_open(&stand, bench_of(state)->context, shape);
+        matrix_scale(sizes[n], stand.a);
+        matrix_copy(stand.a, stand.copy);
+        qr_check(&stand);
+        stand_close(&stand);
+        const double scale[] = {1, 1e100, 1e-100, 1e-20, sizes[n]};
+        stand_open(&stand, bench_of(state)->context, shape);
+        matrix_scale_columns(stand.a, scale);
+        assert_status(stand.context, dense_qr(stand.context, stand.a, stand.r, stand.work), FESCUE_OK);
+        orthonormal_check(stand.a, tolerance_of(&stand));
+        triangle_check(stand.r);
+        stand_close(&stand);
+    }
+}
+
+static void qr_without_r(void **state)
+{
+    struct stand stand;
+    struct shape shape = {50, 6};
+    stand_open(&stand, bench_of(state)->context, shape);
+    assert_status(stand.context, dense_qr(stand.context, stand.a, (struct matrix){0}, stand.work), FESCUE_OK);
+    orthonormal_check(stand.a, tolerance_of(&stand));
+    stand_close(&stand);
+}
+
+static void qr_leaves_no_trace_of_workers(void **state)
+{
+    static const size_t workers[] = {1, 2, 7};
+    static const struct shape shape = {60000, 12};
+    fescue_context *context = bench_of(state)->context;
+    struct stand stand;
+    double first_q[8] = {0}, first_r[8] = {0}, first_s[8] = {0};
+    for (size_t w = 0; w < COUNT(workers); w++) {
+        assert_status(context, team_resize(context, workers[w]), FESCUE_OK);
+        stand_open(&stand, context, shape);
+        qr_check(&stand);
+        if (w == 0) {
+            memcpy(first_q, &MATRIX_AT(stand.a, 59999, 0), sizeof first_q);
+            memcpy(first_r, &MATRIX_AT(stand.r, 0, 0), sizeof first_r);
+        }
+        assert_memory_equal(first_q, &MATRIX_AT(stand.a, 59999, 0), sizeof first_q);
+        assert_memory_equal(first_r, &MATRIX_AT(stand.r, 0, 0), sizeof first_r);
+        assert_status(context, dense_svd(context, stand.copy, stand.s, stand.r, stand.work), FESCUE_OK);
+        if (w == 0)
+            memcpy(first_s, &MATRIX_AT(stand.copy, 59999, 0), sizeof first_s);
+        assert_memory_equal(first_s, &MATRIX_AT(stand.copy, 59999, 0), sizeof first_s);
+        stand_close(&stand);
+    }
+}
+
+static void svd_check(struct stand *stand)
+{
+    struct matrix v = stand->r;
+    assert_status(stand->context, dense_svd(stand->context, stand->a, stand->s, v, stand->work), FESCUE_OK);
+    orthonormal_check(stand->a, tolerance_of(stand));
+    orthonormal_check(v, tolerance_of(stand));
+    for (size_t j = 0; j < v.rows; j++) {
+        assert_true(stand->s[j] >= 0 && (j == 0 || stand->s[j] <= stand->s[j - 1]));
+        for (size_t c = 0; c < v.rows; c++)
+            MATRIX_AT(stand->square, j, c) = stand->s[j] * MATRIX_AT(v, c, j);
+    }
+    product_check(stand->a, stand->square, stand->copy, tolerance_of(stand));
+    padding_check(stand->a);
+    padding_check(v);
+}
+
+static void svd_of_many_shapes(void **state)
+{
+    struct stand stand;
+    for (size_t k = 0; k < COUNT(shapes); k++) {
+        stand_open(&stand, bench_of(state)->context, shapes[k]);
+        svd_check(&stand);
+        stand_close(&stand);
+        stand_open(&stand, bench_of(state)->context, shapes[k]);
+        for (size_t i = 0; i < shapes[k].lines; i++) /* rank 1 */
+            for (size_t j = 1; j < shapes[k].columns; j++)
+                MATRIX_AT(stand.a, i, j) = MATRIX_AT(stand.a, i, 0) * (double)j;
+        matrix_copy(stand.a, stand.copy);
+        svd_check(&stand);
+        if (shapes[k].columns > 1)
+            assert_close(stand.s[1], 0, tolerance_of(&stand) * stand.s[0]);
+        stand_close(&stand);
+    }
+}
+
+/* A matrix whose singular values are known: columns of I, scaled. */
+static void svd_of_a_diagonal(void **state)
+{
+    static const double scale[] = {3, -7, 0.5, 0, 2};
+    static const double sorted[] = {7, 3, 2, 0.5, 0};
+    struct stand stand;
+    struct shape shape = {12, 5};
+    stand_open(&stand, bench_of(state)->context, shape);
+    matrix_zero(stand.a);
+    for (size_t j = 0; j < 5; j++)
+        MATRIX_AT(stand.a, 2 * j + 1, j) = scale[j];
+    assert_status(stand.context, dense_svd(stand.context, stand.a, stand.s, stand.r, stand.work), FESCUE_OK);
+    for (size_t j = 0; j < 5; j++)
+        assert_close(stand.s[j], sorted[j], 1e-14);
+    orthonormal_check(stand.a, 1e-14);
+    stand_close(&stand);
+}
+
+/* A q = q diag(w), from the upper triangle alone. */
+static void eigen_of_many_sizes(void **state)
+{
+    static const size_t sizes[] = {1, 2, 3, 8, 17, 64, 130, 257};
+    struct stand stand;
+    for (size_t k = 0; k < COUNT(sizes); k++) {
+        size_t size = sizes[k];
+        stand_open(&stand, bench_of(state)->context, (struct shape){size, size});
+        for (size_t i = 0; i < size; i++)
+            for (size_t j = 0; j < size; j++) {
+                MATRIX_AT(stand.copy, i, j) = MATRIX_AT(stand.a, i < j ? i : j, i < j ? j : i);
+                if (j < i)
+                    MATRIX_AT(stand.a, i, j) = (double)NAN;
+            }
+        assert_status(stand.context, dense_eigen(stand.context, stand.a, stand.s, stand.work), FESCUE_OK);
+        orthonormal_check(stand.a, tolerance_of(&stand));
+        for (size_t j = 0; j < size; j++) {
+            assert_true(j == 0 || stand.s[j] >= stand.s[j - 1]);
+            for (size_t c = 0; c < size; c++)
+                MATRIX_AT(stand.square, j, c) = stand.s[j] * MATRIX_AT(stand.a, c, j);
+        }
+        product_check(stand.a, stand.square, stand.copy, tolerance_of(&stand));
+        stand_close(&stand);
+    }
+}
+
+/* The eigenvalues of the second difference (diagonal 2, neighbours -1) are 2 - 2 cos(k pi / (n+1)): a textbook fact
+   (Strang 2007, Computational Science and Engineering, section 1.5; quoted from memory). */
+static void eigenvalues_of_the_second_difference(void **state)
+{
+    enum { SIZE = 40 };
+    struct stand stand;
+    stand_open(&stand, bench_of(state)->context, (struct shape){SIZE, SIZE});
+    matrix_zero(stand.a);
+    for (size_t i = 0; i < SIZE; i++) {
+        MATRIX_AT(stand.a, i, i) = 2;
+        if (i > 0)
+            MATRIX_AT(stand.a, i - 1, i) = -1;
+    }
+    assert_status(stand.context, dense_eigen(stand.context, stand.a, stand.s, stand.work), FESCUE_OK);
+    for (size_t k = 0; k < SIZE; k++)
+        assert_close(stand.s[k], 2 - 2 * cos((double)(k + 1) * acos(-1.0) / (SIZE + 1)), 1e-13);
+    stand_close(&stand);
+}
+
+static void products_of_all_kinds(void **state)
+{
+    enum { M = 9, N = 7, K = 5 };
+    struct random_stream stream = random_open(11, RANDOM_TEST, 3);
+    double data[3][16 * 16];
+    (void)state;
+    for (int kind = 0; kind < 4; kind++) {
+        bool ta = kind & 1, tb = kind & 2;
+        struct matrix a = {data[0], ta ? K : M, ta ? M : K, 16}, b = {data[1], tb ? N : K, tb ? K : N, 16};
+        struct matrix c = {data[2], M, N, 16};
+        double want[M][N];
+        for (size_t i = 0; i < 3 * 256; i++)
+            data[i / 256][i % 256] = random_normal(&stream);
+        for (size_t i = 0; i < M; i++)
+            for (size_t j = 0; j < N; j++) {
+                want[i][j] = 0.5 * MATRIX_AT(c, i, j);
+                for (size_t l = 0; l < K; l++)
+                    want[i][j] += -2 * (ta ? MATRIX_AT(a, l, i) : MATRIX_AT(a, i, l)) *
+                                  (tb ? MATRIX_AT(b, j, l) : MATRIX_AT(b, l, j));
+            }
+        matrix_multiply(-2, a, ta, b, tb, 0.5, c);
+        for (size_t i = 0; i < M; i++)
+            for (size_t j = 0; j < N; j++)
+                assert_close(MATRIX_AT(c, i, j), want[i][j], 1e-13);
+    }
+    /* No inner dimension: c = beta c; beta 0 clears whatever was there. */
+    struct matrix none = {data[0], 3, 0, 8}, empty = {data[1], 0, 2, 8}, c = {data[2], 3, 2, 8};
+    MATRIX_AT(c, 1, 1) = (double)NAN;
+    matrix_multiply(1, none, false, empty, false, 0, c);
+    assert_true(MATRIX_AT(c, 1, 1) == 0 && MATRIX_AT(c, 2, 0) == 0);
+}
+
+static void what_is_not_finite_is_refused(void **state)
+{
+    struct stand stand;
+    struct shape shape = {30, 4};
+    stand_open(&stand, bench_of(state)->context, shape);
+    MATRIX_AT(stand.a, 3, 2) = (double)NAN;
+    assert_status(stand.context, dense_svd(stand.context, stand.a, stand.s, stand.r, stand.work), FESCUE_DEFECT);
+    assert_non_null(strstr(fescue_failure_text(stand.context), "not all finite"));
+    fescue_failure_clear(stand.context);
+    stand_close(&stand);
+}
+
+int main(void)
+{
+    const struct CMUnitTest tests[] = {
+        BENCH_TEST(qr_of_many_shapes),
+        BENCH_TEST(qr_of_deficient_matrices),
+        BENCH_TEST(qr_of_extreme_sizes),
+        BENCH_TEST(qr_without_r),
+        BENCH_TEST(qr_leaves_no_trace_of_workers),
+        BENCH_TEST(svd_of_many_shapes),
+        BENCH_TEST(svd_of_a_diagonal),
+        BENCH_TEST(eigen_of_many_sizes),
+        BENCH_TEST(eigenvalues_of_the_second_difference),
+        BENCH_TEST(products_of_all_kinds),
+        BENCH_TEST(what_is_not_finite_is_refused),
+    };
+    return cmocka_run_group_tests(tests, NULL, NULL);
+}
