@@ -138,17 +138,17 @@ def positive_qr(a):
     return q * np.where(np.diag(triangle) < 0, -1, 1)
 
 
+SCIPY_SAME = "SciPy's angles, all on one side of 45 degrees"
+SCIPY_MIXED = "SciPy's angles, on both sides of 45 degrees"
+ROOTS = {SCIPY_MIXED: 2e-7}  # some ten times the root of rounding
+
+
 def scipy_angles(worst, geometry, u, y):
     """SciPy 1.10 picks sine or cosine for the k-th largest angle by the k-th smallest one. Where some angles are below 45
     degrees and some above, its small ones come from cosines and are good to the root of rounding only."""
     found, theirs = geometry.angles(u, y), sla.subspace_angles(u, y)[::-1]
     one_sided = found[-1] < np.pi / 4 or found[0] > np.pi / 4
     worst.keep(SCIPY_SAME if one_sided else SCIPY_MIXED, found - theirs)
-
-
-SCIPY_SAME = "SciPy's angles, all on one side of 45 degrees"
-SCIPY_MIXED = "SciPy's angles, on both sides of 45 degrees"
-ROOTS = {SCIPY_MIXED: 2e-7}  # some ten times the root of rounding
 
 
 def steps_everywhere(geometry, rng):
