@@ -49,7 +49,7 @@ fescue_status failure_record(fescue_context *context, fescue_status status, cons
 fescue_status memory_take(fescue_context *context, size_t count, size_t size, void *out);
 
 /* As memory_take, but keeps the first min(old, new) bytes of *block; the new tail is zeroed. On failure *block stays.
- */
+   A size that is not larger never fails: where there is no room for the copy, *block stays as large as it was. */
 fescue_status memory_resize(fescue_context *context, size_t count, size_t size, void *block);
 
 /* Takes back the block *block points at (NULL is fine) and nulls it. */

@@ -115,31 +115,51 @@ static void *block_create(fescue_context *context, size_t bytes)
     return block;
 }
 
-fescue_status memory_take(fescue_context *context, size_t count, size_t size, void *out)
+/* A counted block of bytes > 0, or NULL; *over_limit tells which of the two reasons it was. */
+static void *block_take(fescue_context *context, size_t bytes, bool *over_limit)
 {
     struct memory_counters *memory = &context->memory;
-    char asked[32], limit[32];
-    size_t bytes, total;
     uint64_t now;
-    pointer_store(out, NULL);
-    if (!size_product(count, size, &bytes) ||
-        __builtin_add_overflow(bytes, sizeof(struct block_header) + ALIGNMENT, &total))
-        return FAIL(context, FESCUE_NO_MEMORY, "%zu times %zu bytes are more than can be addressed", count, size);
-    if (bytes == 0)
-        return FESCUE_OK;
     atomic_fetch_add(&memory->calls, 1);
-    if (!bytes_count(memory, bytes, &now))
-        return FAIL(context, FESCUE_NO_MEMORY, "%s more would pass the memory limit of %s", size_text(bytes, asked),
-                    size_text(atomic_load(&memory->limit), limit));
+    *over_limit = !bytes_count(memory, bytes, &now);
+    if (*over_limit)
+        return NULL;
     void *block = block_create(context, bytes);
     if (block == NULL) {
         atomic_fetch_sub(&memory->bytes, bytes);
-        return FAIL(context, FESCUE_NO_MEMORY, "the system has no %s of memory left", size_text(bytes, asked));
+        return NULL;
     }
     atomic_fetch_add(&memory->blocks, 1);
     peak_raise(memory, now);
+    return block;
+}
+
+/* The bytes of the product, when they and the room around them can be addressed. */
+static bool block_size(size_t count, size_t size, size_t *bytes)
+{
+    size_t total;
+    return size_product(count, size, bytes) &&
+           !__builtin_add_overflow(*bytes, sizeof(struct block_header) + ALIGNMENT, &total);
+}
+
+fescue_status memory_take(fescue_context *context, size_t count, size_t size, void *out)
+{
+    char asked[32], limit[32];
+    size_t bytes;
+    bool over_limit;
+    pointer_store(out, NULL);
+    if (!block_size(count, size, &bytes))
+        return FAIL(context, FESCUE_NO_MEMORY, "%zu times %zu bytes are more than can be addressed", count, size);
+    if (bytes == 0)
+        return FESCUE_OK;
+    void *block = block_take(context, bytes, &over_limit);
     pointer_store(out, block);
-    return FESCUE_OK;
+    if (block != NULL)
+        return FESCUE_OK;
+    if (over_limit)
+        return FAIL(context, FESCUE_NO_MEMORY, "%s more would pass the memory limit of %s", size_text(bytes, asked),
+                    size_text(atomic_load(&context->memory.limit), limit));
+    return FAIL(context, FESCUE_NO_MEMORY, "the system has no %s of memory left", size_text(bytes, asked));
 }
 
 void memory_give(fescue_context *context, void *block)
@@ -159,19 +179,33 @@ void memory_give(fescue_context *context, void *block)
     pointer_store(block, NULL);
 }
 
-fescue_status memory_resize(fescue_context *context, size_t count, size_t size, void *block)
+/* The new block takes the place of the old one and what fits of its bytes. */
+static void block_replace(fescue_context *context, void *block, void *new)
 {
-    void *old = pointer_load(block), *new;
-    fescue_status status = memory_take(context, count, size, &new);
-    if (status != FESCUE_OK)
-        return status;
+    void *old = pointer_load(block);
     if (old != NULL && new != NULL) {
         size_t kept = block_header_of(old)->bytes, bytes = block_header_of(new)->bytes;
         memcpy(new, old, kept < bytes ? kept : bytes);
     }
     memory_give(context, block);
     pointer_store(block, new);
-    return FESCUE_OK;
+}
+
+fescue_status memory_resize(fescue_context *context, size_t count, size_t size, void *block)
+{
+    void *old = pointer_load(block), *new;
+    size_t bytes;
+    bool over_limit;
+    if (old != NULL && block_size(count, size, &bytes) && bytes > 0 && bytes <= block_header_of(old)->bytes) {
+        new = block_take(context, bytes, &over_limit);
+        if (new != NULL)
+            block_replace(context, block, new);
+        return FESCUE_OK;
+    }
+    fescue_status status = memory_take(context, count, size, &new);
+    if (status == FESCUE_OK)
+        block_replace(context, block, new);
+    return status;
 }
 
 fescue_status memory_copy_text(fescue_context *context, const char *text, size_t length, char **out)

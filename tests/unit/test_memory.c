@@ -181,6 +181,28 @@ static void a_resized_block_keeps_its_head(void **state)
     assert_no_leak(context);
 }
 
+static void a_smaller_block_is_never_refused(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    uint32_t *block = NULL;
+    assert_status(context, RESIZE(context, 10, &block), FESCUE_OK);
+    for (uint32_t k = 0; k < 10; k++)
+        block[k] = k + 1;
+    fault_plan(FAULT_TAKE, 1, false, 0);
+    assert_status(context, RESIZE(context, 9, &block), FESCUE_OK);
+    assert_true(fault_met());
+    memory_limit_set(context, 50); /* no room for both for a moment */
+    assert_status(context, RESIZE(context, 8, &block), FESCUE_OK);
+    assert_string_equal(fescue_failure_text(context), "");
+    for (uint32_t k = 0; k < 10; k++)
+        assert_int_equal(block[k], k + 1);
+    assert_int_equal(fescue_memory_usage(context).bytes, 40);
+    assert_status(context, RESIZE(context, 2, &block), FESCUE_OK);
+    assert_int_equal(fescue_memory_usage(context).bytes, 8);
+    assert_int_equal(block[1], 2);
+    GIVE(context, &block);
+}
+
 static void a_copied_text_ends_in_nul(void **state)
 {
     fescue_context *context = bench_of(state)->context;
@@ -284,6 +306,7 @@ int main(void)
         BENCH_TEST(a_limit_holds),
         BENCH_TEST(sizes_are_told_in_decimal_units),
         BENCH_TEST(a_resized_block_keeps_its_head),
+        BENCH_TEST(a_smaller_block_is_never_refused),
         BENCH_TEST(a_copied_text_ends_in_nul),
         BENCH_TEST(an_arena_is_one_block_of_aligned_pieces),
         BENCH_TEST(an_empty_arena_opens),
