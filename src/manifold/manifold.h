@@ -28,6 +28,8 @@ struct low_rank {
 fescue_status low_rank_create(fescue_context *context, size_t rows, size_t columns, size_t rank, struct low_rank *out);
 fescue_status low_rank_copy(fescue_context *context, const struct low_rank *from, struct low_rank *out);
 void low_rank_free(fescue_context *context, struct low_rank *point); /* NULL-safe, leaves rank 0 */
+/* New point A B' from tall factors, rank numbers a row, rank <= rows and columns; borrows both. */
+fescue_status low_rank_from_product(fescue_context *context, struct matrix a, struct matrix b, struct low_rank *out);
 double low_rank_entry(const struct low_rank *point, size_t row, size_t column);
 
 /* ---- Grassmann -------------------------------------------------------------------------------------------------- */

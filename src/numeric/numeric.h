@@ -52,6 +52,9 @@ size_t dense_work_size(size_t lines, size_t columns);
    (k(k+1)/2 numbers). Cholesky in place; on breakdown adds 1e-14 trace/k to the diagonal, tenfold until it goes. */
 void packed_cholesky(double *a, size_t k);
 void packed_solve(const double *factor, size_t k, double *b); /* b <- (L L')^-1 b */
+/* inverse <- (L L')^-1, packed as the factor is; not in place, k at most PACKED_INVERSE_MOST. */
+enum { PACKED_INVERSE_MOST = 260 };
+void packed_inverse(const double *factor, size_t k, double *inverse);
 static inline size_t packed_size(size_t k)
 {
     return k * (k + 1) / 2;
@@ -100,6 +103,26 @@ void sweep_solve(struct sweep *sweep, const struct half *half, struct matrix rig
 /* sum and sum of |.| of (left_i . right_j - x_k), for errors on hidden cells; *square as above. */
 void sweep_errors(struct sweep *sweep, const struct half *half, struct matrix left, struct matrix right, double *square,
                   double *absolute);
+
+/* ---- moments: sums of second moments over the seen cells of a line ----------------------------------------------- */
+
+/* E[g_j g_j'] of `regressors` regressors for every position j: a packed lower triangle each, at data + j * stride.
+   Regressor `one` is the constant 1. weight: one number a position, or NULL for 1. A view; owns nothing. */
+struct moments {
+    double *data;
+    size_t stride, regressors, one;
+    const double *weight;
+};
+static inline size_t moments_stride(size_t regressors)
+{
+    return (packed_size(regressors) + 7) / 8 * 8;
+}
+struct moments_sum {
+    double *second, *target, square; /* packed_size(regressors), regressors, 1 */
+};
+/* Over the cells of `line`: second = sum c M, target = sum c z E[g], square = sum c z^2. */
+void moments_gather(const struct moments *moments, const struct half *half, enum fescue_precision precision,
+                    size_t line, struct moments_sum *sum);
 
 /* ---- sparse symmetric positive definite systems, through CHOLMOD ------------------------------------------------- */
 

@@ -67,4 +67,29 @@ fescue_status start_spectral(struct problem *problem, size_t rank, uint64_t seed
    orthonormal form. Replaces *point. When the residual is zero the new singular value is 0. */
 fescue_status start_grow(struct problem *problem, uint64_t seed, struct low_rank *point);
 
+/* ---- the evidence fit: offsets, components and their shrinkage learnt together (evidence.c) ----------------------- */
+
+enum evidence_noise { EVIDENCE_NOISE_EQUAL, EVIDENCE_NOISE_COLUMNS, EVIDENCE_NOISE_ROWS };
+struct evidence_request {
+    enum fescue_offsets offsets; /* never AUTO: which effects are free */
+    enum evidence_noise noise;   /* whether every column, or row, has noise of its own */
+    size_t rank;                 /* components to begin with, 1 .. min(rows, columns); the data prune them */
+    double noise_start;          /* first guess of the noise variance, table units; 0: the whole variance */
+    uint64_t seed, rounds;
+    double change;   /* ends when the rms change of the estimates, over the table's scale, falls below this */
+    double deadline; /* clock_wall() second, or 0 for none */
+};
+struct evidence_result { /* evidence_result_free */
+    struct model model;  /* posterior means; spectrum descending, pruned components near 0 */
+    struct solve_result fit;
+    double noise; /* standard deviation, table units */
+};
+/* From `start` (its offsets, and its components as far as it has them; further ones start small and random). */
+fescue_status evidence_fit(fescue_context *context, const struct cells *cells, const struct evidence_request *request,
+                           const struct model *start, struct evidence_result *out);
+/* The same from nothing: offsets, spectral start at request->rank, then growth as long as the data support it. */
+fescue_status evidence_learn(fescue_context *context, const struct cells *cells, const struct evidence_request *request,
+                             struct evidence_result *out);
+void evidence_result_free(fescue_context *context, struct evidence_result *result);
+
 #endif

@@ -1,0 +1,294 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The evidence fit: full variational Bayes for two-way effects and a product of factors, in which the data decide how
+ * many components there are and how strongly each is shrunk. In units of the table's scale,
+ *
+ *     z_ij = a_i + b_j + u_i.v_j + e_ij          e_ij ~ N(0, s2_ij)
+ *     u_ik ~ N(0, su_k)   a_i ~ N(0, sa)   v_jk ~ N(0, sv_k)   b_j ~ N(0, sb)
+ *
+ *     symbol   shape         what it is
+ *     u, a     m x r, m      factors and effects of the rows; x_i = (u_i, a_i, 1)
+ *     v, b     n x r, n      factors and effects of the columns; w_j = (v_j, 1, b_j), so that z_ij = x_i.w_j + e_ij
+ *     s2_ij    positive      noise / (row precision * column precision), one of the two constant
+ *
+ * The posterior is factorised over rows and columns, with the full (r+1) x (r+1) covariance of (u_i, a_i) and of
+ * (v_j, b_j) (Lim, Teh 2007, "Variational Bayesian approach to movie rating prediction"; Raiko, Ilin, Karhunen 2007,
+ * "Principal component analysis for large scale problems with lots of missing values"; Nakajima, Sugiyama 2011,
+ * "Theoretical analysis of Bayesian matrix factorization"). One round:
+ *
+ *   1  rows from the second moments of the columns, columns from those of the rows  (evidence_side.c)
+ *   2  prior variances: su_k = mean of E u_ik^2 over the rows with cells, likewise sa, sv, sb
+ *   3  the exact change of basis, which raises the bound and prunes                 (evidence_basis.c)
+ *   4  noise: the mean of E e^2; per line, (sum of E e^2 + 4 mean) / (n + 4): the four pseudo-cells keep the noise of a
+ *      thin line from running to 0
+ *
+ * Departures from the papers: E e^2 comes out of the sums that a line's posterior needs anyway, so a round takes two
+ * passes over the cells, not three; the start is a fit handed in (or a spectral one) rather than random factors, and
+ * then the priors are learnt from the first round on.
+ *
+ * Cost of a round: two passes of (r+2)(r+3) flops a cell, (m+n)(r+2)^3. Memory: (m+n)(r+2)(r+3)/2 doubles. Lines are
+ * parallel; sums go block by block, so the bits do not depend on the number of workers. Nothing is allocated in a
+ * round.
+ */
+#include "solve/evidence_internal.h"
+
+#include <assert.h>
+#include <math.h>
+#include <string.h>
+
+/* Pseudo-cells of mean noise that every line's own noise is learnt with. */
+#define NOISE_PRIOR_CELLS 4.0
+/* The noise never falls below this share of the table's variance: at rounding level the posterior is a point, and the
+   sums of squares have no digits left. */
+#define NOISE_LEAST 1e-13
+/* Size of the random columns for components that the start does not have: small beside cells of size one, so that they
+   grow only where the data pull them. */
+#define EVIDENCE_PROBE 0.05
+
+static void side_reserve(struct arena *arena, const struct half *half, size_t rank)
+{
+    size_t lines = half->lines, d = rank + 2;
+    arena_reserve(arena, lines * moments_stride(d), sizeof(double));
+    arena_reserve(arena, rank + 1, sizeof(double));
+    arena_reserve(arena, lines, sizeof(double));
+    arena_reserve(arena, lines, sizeof(double));
+    arena_reserve(arena, (half->blocks + 1) * evidence_basis_partial(rank + 2), sizeof(double));
+    matrix_reserve(arena, lines, d);
+    matrix_reserve(arena, lines, d);
+}
+
+static void side_carve(struct arena *arena, const struct half *half, size_t rank, struct evidence_side *side)
+{
+    size_t lines = half->lines, d = rank + 2;
+    side->half = half;
+    side->moments = (struct moments){.stride = moments_stride(d), .regressors = d, .one = rank};
+    side->moments.data = arena_carve(arena, lines * moments_stride(d), sizeof(double));
+    side->variance = arena_carve(arena, rank + 1, sizeof(double));
+    side->line_precision = arena_carve(arena, lines, sizeof(double));
+    side->line_error = arena_carve(arena, lines, sizeof(double));
+    side->partial = arena_carve(arena, (half->blocks + 1) * evidence_basis_partial(rank + 2), sizeof(double));
+    side->mean = matrix_carve(arena, lines, d);
+    side->old = matrix_carve(arena, lines, d);
+    for (size_t line = 0; line < lines; line++)
+        side->line_precision[line] = 1;
+}
+
+static fescue_status evidence_open(struct problem *problem, size_t rank, struct evidence *evidence)
+{
+    const struct cells *cells = &problem->target;
+    size_t workers = team_workers(problem->context), d = rank + 2;
+    size_t one = evidence_side_scratch(rank), two = evidence_basis_scratch(rank);
+    size_t work = packed_size(rank) + rank + dense_work_size(rank, rank);
+    *evidence = (struct evidence){.context = problem->context, .problem = problem, .rank = rank};
+    evidence->scratch_size = ((one > two ? one : two) + 7) / 8 * 8;
+    struct arena *arena = &evidence->arena;
+    side_reserve(arena, &cells->by_row, rank);
+    side_reserve(arena, &cells->by_column, rank);
+    arena_reserve(arena, workers * evidence->scratch_size, sizeof(double));
+    for (size_t k = 0; k < 4; k++) {
+        matrix_reserve(arena, rank, rank);
+        matrix_reserve(arena, d, d);
+    }
+    arena_reserve(arena, 3 * rank, sizeof(double));
+    arena_reserve(arena, d * d, sizeof(double));
+    arena_reserve(arena, work, sizeof(double));
+    fescue_status status = arena_open(problem->context, arena);
+    if (status != FESCUE_OK)
+        return status;
+    side_carve(arena, &cells->by_row, rank, &evidence->rows);
+    side_carve(arena, &cells->by_column, rank, &evidence->columns);
+    evidence->scratch = arena_carve(arena, workers * evidence->scratch_size, sizeof(double));
+    for (size_t k = 0; k < 4; k++) {
+        evidence->small[k] = matrix_carve(arena, rank, rank);
+        evidence->gram[k] = matrix_carve(arena, d, d);
+    }
+    evidence->shift = arena_carve(arena, 3 * rank, sizeof(double));
+    evidence->map = arena_carve(arena, d * d, sizeof(double));
+    evidence->basis_work = arena_carve(arena, work, sizeof(double));
+    evidence->rows.effect_at = evidence->columns.one_at = rank;
+    evidence->rows.one_at = evidence->columns.effect_at = rank + 1;
+    return FESCUE_OK;
+}
+
+/* Plants the start: columns known, u of unit size; the rows follow in the first round. */
+static void evidence_start(struct evidence *evidence, const struct model *start, const struct evidence_request *request)
+{
+    const struct problem *problem = evidence->problem;
+    const struct low_rank *point = &start->low_rank;
+    size_t rank = evidence->rank, columns = problem->target.columns;
+    double size = sqrt((double)problem->target.rows) * problem->scale;
+    double *mean = evidence->scratch, effect = 0;
+    evidence->noise = request->noise_start > 0 ? request->noise_start / (problem->scale * problem->scale) : 1;
+    memset(evidence->columns.variance, 0, (rank + 1) * sizeof(double));
+    for (size_t j = 0; j < columns; j++) {
+        struct random_stream random = random_open(request->seed, RANDOM_START, (uint32_t)j);
+        for (size_t k = 0; k < rank; k++) {
+            mean[k] = k < point->rank ? MATRIX_AT(point->right, j, k) * point->spectrum[k] / size
+                                      : EVIDENCE_PROBE * random_normal(&random);
+            evidence->columns.variance[k] += mean[k] * mean[k] / (double)columns;
+        }
+        mean[rank] = start->offsets.column[j] / problem->scale;
+        effect += mean[rank] * mean[rank] / (double)columns;
+        evidence_side_plant(evidence, &evidence->columns, j, mean);
+    }
+    evidence->rows.moments.weight = request->noise == EVIDENCE_NOISE_ROWS ? evidence->rows.line_precision : NULL;
+    evidence->columns.moments.weight =
+        request->noise == EVIDENCE_NOISE_COLUMNS ? evidence->columns.line_precision : NULL;
+    bool has_rows = request->offsets == FESCUE_OFFSETS_BOTH || request->offsets == FESCUE_OFFSETS_ROWS;
+    bool has_columns = request->offsets == FESCUE_OFFSETS_BOTH || request->offsets == FESCUE_OFFSETS_COLUMNS;
+    for (size_t k = 0; k < rank; k++)
+        evidence->rows.variance[k] = 1;
+    evidence->rows.variance[rank] = has_rows ? 1 : 0;
+    evidence->columns.variance[rank] = !has_columns ? 0 : effect > 0 ? effect : 1;
+}
+
+/* Step 4, after the pass over `side`, whose lines have noise of their own when `own`. */
+static void noise_update(struct evidence *evidence, struct evidence_side *side, bool own)
+{
+    double total = 0, count = (double)evidence->problem->target.count;
+    for (size_t line = 0; line < side->half->lines; line++)
+        total += side->line_error[line];
+    double mean = fmax(total / count, NOISE_LEAST);
+    evidence->noise = mean;
+    for (size_t line = 0; own && line < side->half->lines; line++) {
+        double cells = (double)(side->half->start[line + 1] - side->half->start[line]);
+        side->line_precision[line] =
+            mean * (cells + NOISE_PRIOR_CELLS) / (side->line_error[line] + NOISE_PRIOR_CELLS * mean);
+    }
+}
+
+/* |X_new - X_old|_F / sqrt(mn) from Gram matrices, in O((m+n) r^2): X = (rows' mean)(columns' mean)'. */
+static double change_measure(struct evidence *evidence)
+{
+    struct evidence_side *rows = &evidence->rows, *columns = &evidence->columns;
+    struct matrix *g = evidence->gram;
+    double square = 0;
+    matrix_multiply(1, rows->mean, true, rows->mean, false, 0, g[0]);
+    matrix_multiply(1, columns->mean, true, columns->mean, false, 0, g[1]);
+    square += matrix_dot(g[0], g[1]);
+    matrix_multiply(1, rows->old, true, rows->old, false, 0, g[0]);
+    matrix_multiply(1, columns->old, true, columns->old, false, 0, g[1]);
+    square += matrix_dot(g[0], g[1]);
+    matrix_multiply(1, rows->mean, true, rows->old, false, 0, g[0]);
+    matrix_multiply(1, columns->mean, true, columns->old, false, 0, g[1]);
+    square -= 2 * matrix_dot(g[0], g[1]);
+    double cells = (double)rows->half->lines * (double)columns->half->lines;
+    return sqrt(fmax(square, 0) / cells);
+}
+
+static fescue_status evidence_round(struct evidence *evidence, const struct evidence_request *request, uint64_t round,
+                                    double *change)
+{
+    struct evidence_side *rows = &evidence->rows, *columns = &evidence->columns;
+    matrix_copy(rows->mean, rows->old);
+    matrix_copy(columns->mean, columns->old);
+    if (round > 0 && (round < EVIDENCE_ROUND_BASIS || round % EVIDENCE_BASIS_EVERY == 0)) {
+        fescue_status status = evidence_basis_change(evidence);
+        if (status != FESCUE_OK)
+            return status;
+    }
+    evidence_side_update(evidence, rows, columns);
+    evidence_side_prior(evidence, rows);
+    if (request->noise == EVIDENCE_NOISE_ROWS)
+        noise_update(evidence, rows, true);
+    evidence_side_update(evidence, columns, rows);
+    evidence_side_prior(evidence, columns);
+    if (request->noise != EVIDENCE_NOISE_ROWS)
+        noise_update(evidence, columns, request->noise == EVIDENCE_NOISE_COLUMNS);
+    *change = change_measure(evidence);
+    return FESCUE_OK;
+}
+
+/* Posterior means into a model in the table's units. */
+static fescue_status evidence_model(struct evidence *evidence, const struct model *start, struct model *model)
+{
+    fescue_context *context = evidence->context;
+    struct evidence_side *rows = &evidence->rows, *columns = &evidence->columns;
+    size_t m = rows->half->lines, n = columns->half->lines, rank = evidence->rank;
+    double scale = evidence->problem->scale;
+    fescue_status status = FESCUE_OK;
+    *model = (struct model){.rows = (uint32_t)m, .columns = (uint32_t)n, .bounds = start->bounds};
+    TRY(offsets_copy(context, (uint32_t)m, (uint32_t)n, &start->offsets, &model->offsets));
+    for (size_t i = 0; i < m; i++)
+        model->offsets.row[i] = scale * MATRIX_AT(rows->mean, i, rows->effect_at);
+    for (size_t j = 0; j < n; j++)
+        model->offsets.column[j] = scale * MATRIX_AT(columns->mean, j, columns->effect_at);
+    TRY(low_rank_from_product(context, matrix_left(rows->mean, rank), matrix_left(columns->mean, rank),
+                              &model->low_rank));
+    for (size_t k = 0; k < rank; k++)
+        model->low_rank.spectrum[k] *= scale;
+done:
+    if (status != FESCUE_OK)
+        model_free(context, model);
+    return status;
+}
+
+static fescue_status trace_append(struct evidence *evidence, uint64_t round, double change, struct solve_result *result)
+{
+    struct solve_step *step = &result->trace[result->trace_count++];
+    *step = (struct solve_step){.rank = (uint32_t)evidence->rank, .iteration = (uint32_t)round};
+    step->rmse = sqrt(evidence->noise);
+    step->objective = evidence->noise;
+    step->step = change;
+    step->seconds = clock_wall();
+    return progress_tell(evidence->context, "evidence", -1);
+}
+
+static fescue_status evidence_loop(struct evidence *evidence, const struct evidence_request *request,
+                                   struct solve_result *result)
+{
+    fescue_status status = FESCUE_OK;
+    result->stop = STOP_ITERATIONS;
+    for (uint64_t round = 0; round < request->rounds; round++) {
+        double change;
+        TRY(evidence_round(evidence, request, round, &change));
+        TRY(trace_append(evidence, round + 1, change, result));
+        result->iterations = round + 1;
+        if (change <= request->change) {
+            result->stop = STOP_CHANGE;
+            break;
+        }
+        if (request->deadline > 0 && clock_wall() > request->deadline) {
+            result->stop = STOP_TIME;
+            break;
+        }
+    }
+done:
+    return status;
+}
+
+fescue_status evidence_fit(fescue_context *context, const struct cells *cells, const struct evidence_request *request,
+                           const struct model *start, struct evidence_result *out)
+{
+    struct offsets mean = {0};
+    struct problem problem = {0};
+    struct evidence evidence = {0};
+    fescue_status status = FESCUE_OK;
+    *out = (struct evidence_result){.fit.solver = "evidence"};
+    assert(request->rank > 0 && request->rank <= cells->rows && request->rank <= cells->columns);
+    TRY(TAKE(context, request->rounds, &out->fit.trace));
+    TRY(offsets_copy(context, cells->rows, cells->columns, &start->offsets, &mean));
+    memset(mean.row, 0, cells->rows * sizeof *mean.row);
+    memset(mean.column, 0, cells->columns * sizeof *mean.column);
+    TRY(problem_create(context, cells, &mean, 0, &problem));
+    TRY(evidence_open(&problem, request->rank, &evidence));
+    evidence_start(&evidence, start, request);
+    TRY(evidence_loop(&evidence, request, &out->fit));
+    TRY(evidence_model(&evidence, start, &out->model));
+    out->noise = problem.scale * sqrt(evidence.noise);
+    out->fit.rmse = sqrt(evidence.noise);
+    out->fit.objective = evidence.noise;
+done:
+    arena_close(context, &evidence.arena);
+    problem_free(&problem);
+    offsets_free(context, &mean);
+    if (status != FESCUE_OK)
+        evidence_result_free(context, out);
+    return status;
+}
+
+void evidence_result_free(fescue_context *context, struct evidence_result *result)
+{
+    model_free(context, &result->model);
+    solve_result_free(context, &result->fit);
+}

@@ -1,0 +1,64 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The inside of the evidence fit, shared by its three files:
+ *
+ *   evidence.c          the loop, the start, the result
+ *   evidence_side.c     the posterior of every line of one side, given the other
+ *   evidence_basis.c    the exact change of basis between two rounds
+ *
+ * The formulas and the symbols stand at the top of evidence.c.
+ */
+#ifndef FESCUE_SOLVE_EVIDENCE_INTERNAL_H
+#define FESCUE_SOLVE_EVIDENCE_INTERNAL_H
+
+#include "solve/solve.h"
+
+/* One side of the table: its lines' posteriors, as the other side sees them. */
+struct evidence_side {
+    const struct half *half;
+    struct moments moments;   /* of the regressors (factor, 1, effect) of each line; weight belongs to evidence */
+    double *variance;         /* prior variance of the r components and of the effect; 0: switched off */
+    double *line_precision;   /* of each line, relative: 1 where all are alike */
+    double *line_error;       /* expected squared error of each line, under the other side's relative precisions */
+    double *partial;          /* sums of the blocks */
+    size_t effect_at, one_at; /* where effect and constant stand in mean, so that rows' and columns' pair up */
+    struct matrix mean, old;  /* lines x (r + 2), this round's and the last one's */
+};
+
+struct evidence {
+    fescue_context *context;
+    struct problem *problem; /* z, in units of its scale */
+    size_t rank;
+    struct evidence_side rows, columns;
+    double noise;    /* mean noise variance; that of cell (i, j) is noise / (row precision i * column precision j) */
+    double *scratch; /* one stretch a worker */
+    size_t scratch_size;
+    struct matrix small[4], gram[4]; /* r x r and (r+2) x (r+2) */
+    double *shift, *map, *basis_work;
+    struct arena arena;
+};
+
+enum { EVIDENCE_ROUND_PRIOR = 8, EVIDENCE_ROUND_BASIS = 20, EVIDENCE_BASIS_EVERY = 5 };
+
+/* The regressors of a line, as the other side sees it: components 0 .. r-1, the constant, the effect. */
+static inline size_t evidence_one(const struct evidence *evidence)
+{
+    return evidence->rank;
+}
+
+/* Doubles a worker needs. */
+size_t evidence_side_scratch(size_t rank);
+size_t evidence_basis_scratch(size_t rank);
+size_t evidence_basis_partial(size_t rank); /* numbers a block */
+
+/* New posteriors of all lines of `side` from the moments of `other`; fills side->mean and side->line_error. */
+void evidence_side_update(struct evidence *evidence, struct evidence_side *side, const struct evidence_side *other);
+/* Prior variances of `side` from its posteriors. */
+void evidence_side_prior(struct evidence *evidence, struct evidence_side *side);
+/* Writes the moments of a line whose mean is known and certain. */
+void evidence_side_plant(struct evidence *evidence, struct evidence_side *side, size_t line, const double *mean);
+
+/* Moves to the basis in which rows have unit second moment and columns a diagonal one, offsets absorbing the means. */
+fescue_status evidence_basis_change(struct evidence *evidence);
+
+#endif
