@@ -14,18 +14,32 @@
 
 #include <math.h>
 
-/* Enough groups for a standard error of its own accuracy 1/sqrt(2G) = 2 %, few enough to keep one set a rank. */
-enum { GROUPS_MOST = 1024 };
+static fescue_status path_note(struct chooser *chooser, const struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    if (chooser->path_count == chooser->path_capacity) {
+        uint64_t capacity = 2 * chooser->path_capacity + 16;
+        TRY(RESIZE(chooser->context, capacity, &chooser->path));
+        chooser->path_capacity = capacity;
+    }
+    chooser->path[chooser->path_count++] = (struct choose_step){.offsets = candidate->offsets.kind,
+                                                                .rank = (uint32_t)candidate->point.rank,
+                                                                .ridge = candidate->ridge,
+                                                                .errors = candidate->errors};
+done:
+    return status;
+}
 
-fescue_status candidate_create(struct chooser *chooser, struct candidate *candidate)
+fescue_status candidate_create(struct chooser *chooser, enum fescue_offsets kind, struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
     const struct cells *kept = chooser->kept;
-    uint64_t hidden = chooser->hidden->count;
-    chooser->groups = hidden < GROUPS_MOST ? (size_t)hidden : GROUPS_MOST;
-    *candidate = (struct candidate){.errors.rmse = INFINITY, .objective = INFINITY};
+    *candidate = (struct candidate){.version = ++chooser->versions, .rung = ridge_first_rung()};
     TRY(TAKE(chooser->context, chooser->groups, &candidate->square));
+    TRY(offsets_fit(chooser->context, kept, kind, &candidate->offsets));
     TRY(low_rank_create(chooser->context, kept->rows, kept->columns, 0, &candidate->point));
+    TRY(candidate_measure(chooser, candidate));
+    TRY(path_note(chooser, candidate));
 done:
     if (status != FESCUE_OK)
         candidate_free(chooser, candidate);
@@ -35,22 +49,26 @@ done:
 void candidate_free(struct chooser *chooser, struct candidate *candidate)
 {
     GIVE(chooser->context, &candidate->square);
+    offsets_free(chooser->context, &candidate->offsets);
     low_rank_free(chooser->context, &candidate->point);
 }
 
 fescue_status candidate_copy(struct chooser *chooser, const struct candidate *from, struct candidate *to)
 {
     fescue_status status = FESCUE_OK;
-    struct low_rank point = {0};
-    double *square = to->square;
-    TRY(low_rank_copy(chooser->context, &from->point, &point));
-    low_rank_free(chooser->context, &to->point);
-    *to = *from;
-    to->point = point;
-    to->square = square;
+    const struct cells *kept = chooser->kept;
+    struct candidate copy = *from;
+    copy.square = NULL;
+    copy.offsets = (struct offsets){0};
+    copy.point = (struct low_rank){0};
+    TRY(TAKE(chooser->context, chooser->groups, &copy.square));
+    TRY(offsets_copy(chooser->context, kept->rows, kept->columns, &from->offsets, &copy.offsets));
+    TRY(low_rank_copy(chooser->context, &from->point, &copy.point));
     for (size_t g = 0; g < chooser->groups; g++)
-        square[g] = from->square[g];
+        copy.square[g] = from->square[g];
+    candidate_swap(&copy, to);
 done:
+    candidate_free(chooser, &copy);
     return status;
 }
 
@@ -77,20 +95,14 @@ static void groups_sum(const struct chooser *chooser, double *square)
     }
 }
 
-static fescue_status path_note(struct chooser *chooser, const struct candidate *candidate)
+/* The low-rank part in the table's units; its spectrum is the chooser's. */
+static struct low_rank point_in_units(struct chooser *chooser, const struct candidate *candidate)
 {
-    fescue_status status = FESCUE_OK;
-    if (chooser->path_count == chooser->path_capacity) {
-        uint64_t capacity = 2 * chooser->path_capacity + 16;
-        TRY(RESIZE(chooser->context, capacity, &chooser->path));
-        chooser->path_capacity = capacity;
-    }
-    chooser->path[chooser->path_count++] = (struct choose_step){.offsets = candidate->offsets,
-                                                                .rank = (uint32_t)candidate->point.rank,
-                                                                .ridge = candidate->ridge,
-                                                                .errors = candidate->errors};
-done:
-    return status;
+    struct low_rank point = candidate->point;
+    for (size_t k = 0; k < point.rank; k++)
+        chooser->spectrum[k] = point.spectrum[k] * chooser->problem.scale;
+    point.spectrum = chooser->spectrum;
+    return point;
 }
 
 fescue_status candidate_measure(struct chooser *chooser, struct candidate *candidate)
@@ -99,23 +111,19 @@ fescue_status candidate_measure(struct chooser *chooser, struct candidate *candi
     /* Numbers are held to 2^-53 or 2^-24, and a few hundred roundings go into an estimate. */
     static const double double_rounding = 1e-7, single_rounding = 1e-5;
     bool is_single = chooser->kept->precision == FESCUE_SINGLE;
+    TRY(chooser_take_up(chooser, candidate));
     struct model model = {.rows = chooser->kept->rows,
                           .columns = chooser->kept->columns,
-                          .offsets = *chooser->offsets,
-                          .low_rank = candidate->point,
+                          .offsets = candidate->offsets,
+                          .low_rank = point_in_units(chooser, candidate),
                           .bounds = chooser->options->bounds};
-    for (size_t k = 0; k < candidate->point.rank; k++)
-        chooser->spectrum[k] = candidate->point.spectrum[k] * chooser->problem.scale;
-    model.low_rank.spectrum = chooser->spectrum;
     TRY(errors_measure(chooser->context, chooser->hidden, &model, chooser->residuals, &candidate->errors));
     groups_sum(chooser, candidate->square);
-    candidate->offsets = chooser->offsets->kind;
     if (!isfinite(candidate->errors.rmse))
         candidate->errors.rmse = INFINITY;
     candidate->is_exact =
         candidate->errors.count > 0 &&
         candidate->errors.rmse <= (is_single ? single_rounding : double_rounding) * chooser->problem.scale;
-    TRY(path_note(chooser, candidate));
 done:
     return status;
 }
@@ -125,15 +133,34 @@ fescue_status candidate_fit(struct chooser *chooser, double ridge, const struct 
 {
     fescue_status status = FESCUE_OK;
     struct solve_result result = {0};
+    TRY(chooser_take_up(chooser, candidate));
     problem_set_ridge(&chooser->problem, ridge);
     TRY(progress_tell(chooser->context, "choosing", -1));
     TRY(solve_run(&chooser->problem, chooser->solver, limits, &candidate->point, &result));
     candidate->ridge = ridge;
-    candidate->objective = result.objective;
-    candidate->kept_rmse = result.rmse;
     TRY(candidate_measure(chooser, candidate));
+    TRY(path_note(chooser, candidate));
 done:
     solve_result_free(chooser->context, &result);
+    return status;
+}
+
+fescue_status candidate_refit(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    struct offsets offsets = {0};
+    TRY(chooser_take_up(chooser, candidate));
+    struct low_rank point = point_in_units(chooser, candidate);
+    double scale = chooser->problem.scale;
+    TRY(refit_offsets(chooser->context, chooser->kept, candidate->offsets.kind, &point, &offsets));
+    offsets_free(chooser->context, &candidate->offsets);
+    candidate->offsets = offsets;
+    candidate->version = ++chooser->versions;
+    TRY(chooser_take_up(chooser, candidate));
+    for (size_t k = 0; k < candidate->point.rank; k++)
+        candidate->point.spectrum[k] *= scale / chooser->problem.scale;
+    TRY(candidate_fit(chooser, candidate->ridge, limits, candidate));
+done:
     return status;
 }
 

@@ -22,6 +22,10 @@
 #include <assert.h>
 #include <math.h>
 
+/* Groups of hidden cells: enough for a standard error of its own accuracy 1/sqrt(2G) = 2 %, few enough to keep one set
+   a fit. */
+enum { GROUPS_MOST = 1024 };
+
 /* Share that is hidden for the choice when the user hides nothing. */
 static const double own_share = 0.1;
 
@@ -56,17 +60,16 @@ size_t chooser_rank_most(const struct chooser *chooser)
     return (size_t)rank;
 }
 
-fescue_status chooser_take_up(struct chooser *chooser, const struct offsets *offsets)
+fescue_status chooser_take_up(struct chooser *chooser, const struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
-    if (chooser->has_problem && chooser->offsets == offsets)
+    if (chooser->version == candidate->version)
         goto done;
-    if (chooser->has_problem)
+    if (chooser->version != 0)
         problem_free(&chooser->problem);
-    chooser->has_problem = false;
-    chooser->offsets = offsets;
-    TRY(problem_create(chooser->context, chooser->kept, offsets, 0, &chooser->problem));
-    chooser->has_problem = true;
+    chooser->version = 0;
+    TRY(problem_create(chooser->context, chooser->kept, &candidate->offsets, 0, &chooser->problem));
+    chooser->version = candidate->version;
 done:
     return status;
 }
@@ -76,7 +79,9 @@ static fescue_status chooser_open(struct chooser *chooser)
     fescue_status status = FESCUE_OK;
     size_t rank_most = (size_t)(chooser->options->rank > chooser->options->rank_most ? chooser->options->rank
                                                                                      : chooser->options->rank_most);
-    TRY(TAKE(chooser->context, chooser->hidden->count, &chooser->residuals));
+    uint64_t hidden = chooser->hidden->count;
+    chooser->groups = hidden < GROUPS_MOST ? (size_t)hidden : GROUPS_MOST;
+    TRY(TAKE(chooser->context, hidden, &chooser->residuals));
     TRY(TAKE(chooser->context, rank_most, &chooser->spectrum));
 done:
     return status;
@@ -84,7 +89,7 @@ done:
 
 static void chooser_close(struct chooser *chooser)
 {
-    if (chooser->has_problem)
+    if (chooser->version != 0)
         problem_free(&chooser->problem);
     GIVE(chooser->context, &chooser->residuals);
     GIVE(chooser->context, &chooser->spectrum);
@@ -94,7 +99,6 @@ static void chooser_close(struct chooser *chooser)
 /* ---- the kinds of offsets --------------------------------------------------------------------------------------- */
 
 struct kind {
-    struct offsets offsets;
     struct candidate alone; /* rank 0 */
     bool competes;
 };
@@ -110,10 +114,7 @@ static fescue_status kinds_open(struct chooser *chooser, struct kind *kinds, siz
     *count = given == FESCUE_OFFSETS_AUTO ? KINDS_MOST : 1;
     for (size_t k = 0; k < *count; k++) {
         struct kind *kind = &kinds[k];
-        TRY(offsets_fit(chooser->context, chooser->kept, *count == 1 ? given : rivals[k], &kind->offsets));
-        TRY(chooser_take_up(chooser, &kind->offsets));
-        TRY(candidate_create(chooser, &kind->alone));
-        TRY(candidate_measure(chooser, &kind->alone));
+        TRY(candidate_create(chooser, *count == 1 ? given : rivals[k], &kind->alone));
         kind->competes = k == 0 || candidate_beats(chooser, &kind->alone, &kinds[0].alone, 1);
     }
 done:
@@ -122,16 +123,14 @@ done:
 
 static void kinds_close(struct chooser *chooser, struct kind *kinds)
 {
-    for (size_t k = 0; k < KINDS_MOST; k++) {
+    for (size_t k = 0; k < KINDS_MOST; k++)
         candidate_free(chooser, &kinds[k].alone);
-        offsets_free(chooser->context, &kinds[k].offsets);
-    }
 }
 
 /* Components, two-way effects counting as one. */
 static size_t candidate_size(const struct candidate *candidate)
 {
-    return candidate->point.rank + (candidate->offsets == FESCUE_OFFSETS_BOTH);
+    return candidate->point.rank + (candidate->offsets.kind == FESCUE_OFFSETS_BOTH);
 }
 
 /* The better of two kinds: the smaller unless the larger beats it. */
@@ -147,18 +146,12 @@ static bool is_second_better(const struct chooser *chooser, const struct candida
     return second->errors.rmse < first->errors.rmse;
 }
 
-static fescue_status kind_follow(struct chooser *chooser, struct kind *kind, size_t rank_most,
+static fescue_status kind_follow(struct chooser *chooser, const struct kind *kind, size_t rank_most,
                                  struct candidate *candidate)
 {
-    fescue_status status = FESCUE_OK;
-    int64_t rank = chooser->options->rank;
-    TRY(chooser_take_up(chooser, &kind->offsets));
-    if (rank == FESCUE_AUTO)
-        TRY(path_walk(chooser, rank_most, candidate));
-    else
-        TRY(path_climb(chooser, rank_most, candidate));
-done:
-    return status;
+    if (chooser->options->rank == FESCUE_AUTO)
+        return path_walk(chooser, &kind->alone, rank_most, candidate);
+    return path_climb(chooser, &kind->alone, rank_most, candidate);
 }
 
 static size_t rank_limit(const struct chooser *chooser)
@@ -201,6 +194,8 @@ done:
 
 /* ---- the whole -------------------------------------------------------------------------------------------------- */
 
+enum { SETTLE_ROUNDS = 4 }; /* beyond which offsets and low-rank part hardly move any more */
+
 static fescue_status winner_finish(struct chooser *chooser, struct candidate *winner)
 {
     fescue_status status = FESCUE_OK;
@@ -208,6 +203,8 @@ static fescue_status winner_finish(struct chooser *chooser, struct candidate *wi
     bool is_judged = chooser->hidden->count > 0;
     if (winner->point.rank > 0 && !winner->is_exact && is_judged) {
         TRY(path_challenge(chooser, &loose, winner));
+        TRY(candidate_fit(chooser, ridge_of(chooser, winner), &fine, winner));
+        TRY(path_settle(chooser, &fine, SETTLE_ROUNDS, winner));
         TRY(ridge_search(chooser, &fine, winner));
         TRY(path_try_exact(chooser, winner));
     }
@@ -221,7 +218,7 @@ static fescue_status choice_fill(struct chooser *chooser, struct kind *kinds, si
 {
     fescue_status status = FESCUE_OK;
     bool is_judged = chooser->hidden->count > 0;
-    choice->offsets = winner->offsets;
+    choice->offsets = winner->offsets.kind;
     choice->rank = (uint32_t)winner->point.rank;
     choice->ridge = winner->point.rank == 0 ? 0 : winner->ridge;
     choice->errors = is_judged ? winner->errors : (struct errors){0};
@@ -262,7 +259,6 @@ static fescue_status choose_on(fescue_context *context, const struct holdout *ho
     TRY(chooser_open(&chooser));
     TRY(kinds_open(&chooser, kinds, &count));
     TRY(kinds_compete(&chooser, kinds, count, &winner, &best));
-    TRY(chooser_take_up(&chooser, &kinds[best].offsets));
     TRY(winner_finish(&chooser, &winner));
     TRY(choice_fill(&chooser, kinds, best, &winner, choice));
 done:

@@ -16,9 +16,9 @@ struct chooser {
     double deadline;
     const struct cells *kept, *hidden;
 
-    const struct offsets *offsets; /* those at hand; borrowed */
-    struct problem problem;        /* what they leave of the kept cells */
-    bool has_problem;
+    struct problem problem; /* what the offsets at hand leave of the kept cells */
+    uint64_t version;       /* which offsets those are; 0: there is no problem yet */
+    uint64_t versions;      /* how many there have been */
 
     double *residuals; /* one a hidden cell */
     double *spectrum;  /* one a component, in the table's units */
@@ -30,17 +30,19 @@ struct chooser {
 
 /* One fit. The ridge is a rung of the ladder, or the user's own. */
 struct candidate {
-    enum fescue_offsets offsets;
+    struct offsets offsets; /* owned */
+    uint64_t version;       /* equal for equal offsets */
     size_t rung;
     double ridge;
-    double objective, kept_rmse; /* in the problem's units */
-    struct errors errors;        /* on the hidden cells, table units; infinite when the fit blew up */
-    double *square;              /* sum of squared errors of each group of hidden cells */
-    struct low_rank point;       /* in the problem's units */
-    bool is_exact;               /* the hidden cells are met to rounding */
+    struct errors errors;  /* on the hidden cells, table units; infinite when the fit blew up */
+    double *square;        /* sum of squared errors of each group of hidden cells */
+    struct low_rank point; /* in the problem's units */
+    bool is_exact;         /* the hidden cells are met to rounding */
 };
-fescue_status candidate_create(struct chooser *chooser, struct candidate *candidate); /* rank 0, not yet measured */
+/* The offsets of the kind alone, fitted and measured. */
+fescue_status candidate_create(struct chooser *chooser, enum fescue_offsets kind, struct candidate *candidate);
 void candidate_free(struct chooser *chooser, struct candidate *candidate);
+/* *to, zero or a candidate, becomes a copy. */
 fescue_status candidate_copy(struct chooser *chooser, const struct candidate *from, struct candidate *to);
 void candidate_swap(struct candidate *a, struct candidate *b);
 /* Lets the solver improve the point under `ridge`, measures it on the hidden cells and notes it in the path. */
@@ -48,6 +50,8 @@ fescue_status candidate_fit(struct chooser *chooser, double ridge, const struct 
                             struct candidate *candidate);
 /* As it is, without a fit. */
 fescue_status candidate_measure(struct chooser *chooser, struct candidate *candidate);
+/* Fits the offsets again to what the low-rank part leaves, then the low-rank part to what they leave. */
+fescue_status candidate_refit(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate);
 /* Whether `large` has less error on the hidden cells than `small` by more than `errors` standard errors of the paired
    difference. */
 bool candidate_beats(const struct chooser *chooser, const struct candidate *large, const struct candidate *small,
@@ -57,21 +61,27 @@ bool candidate_beats(const struct chooser *chooser, const struct candidate *larg
 size_t ridge_rungs(void);
 double ridge_rung(size_t rung);
 size_t ridge_first_rung(void); /* where a search without any knowledge begins */
-/* Fits under the candidate's own ridge and, when the ridge is to be chosen, under its neighbours on the ladder as long
-   as the hidden cells gain. */
+/* The ridge of the candidate's rung, or the user's own. */
+double ridge_of(const struct chooser *chooser, const struct candidate *candidate);
+/* When the ridge is to be chosen: fits a candidate, fitted under its own rung, under the neighbours as well, as long as
+   the hidden cells gain. */
 fescue_status ridge_search(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate);
 
 bool chooser_is_late(const struct chooser *chooser);
-/* Takes up other offsets: the problem is what they leave of the kept cells. */
-fescue_status chooser_take_up(struct chooser *chooser, const struct offsets *offsets);
+/* Takes up the candidate's offsets: the problem is what they leave of the kept cells. */
+fescue_status chooser_take_up(struct chooser *chooser, const struct candidate *candidate);
 struct solve_limits chooser_loose_limits(const struct chooser *chooser);
 struct solve_limits chooser_fine_limits(const struct chooser *chooser);
 size_t chooser_rank_most(const struct chooser *chooser); /* the largest rank that the kept cells allow */
 
-/* The path over ranks 0, 1, 2, ... under the offsets at hand; *chosen is the smallest rank that no larger one beats. */
-fescue_status path_walk(struct chooser *chooser, size_t rank_most, struct candidate *chosen);
+/* The path over ranks 0, 1, 2, ..., from offsets alone; *chosen is the smallest rank that no larger one beats. */
+fescue_status path_walk(struct chooser *chooser, const struct candidate *alone, size_t rank_most,
+                        struct candidate *chosen);
 /* To a given rank, without judging the ranks on the way. */
-fescue_status path_climb(struct chooser *chooser, size_t rank, struct candidate *chosen);
+fescue_status path_climb(struct chooser *chooser, const struct candidate *alone, size_t rank, struct candidate *chosen);
+/* Offsets and low-rank part in turns, up to `rounds` times, while the hidden cells gain. */
+fescue_status path_settle(struct chooser *chooser, const struct solve_limits *limits, size_t rounds,
+                          struct candidate *candidate);
 /* A rival from the spectral start at the candidate's rank and ridge; takes its place when it has less error. */
 fescue_status path_challenge(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate);
 /* When the errors are small: whether a tight fit without ridge meets the hidden cells to rounding. */

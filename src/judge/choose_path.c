@@ -33,19 +33,35 @@ fescue_status path_challenge(struct chooser *chooser, const struct solve_limits 
 {
     fescue_status status = FESCUE_OK;
     struct candidate rival = {0};
-    struct low_rank point = {0};
     if (chooser_is_late(chooser))
         goto done;
-    TRY(candidate_create(chooser, &rival));
-    TRY(start_spectral(&chooser->problem, candidate->point.rank, (uint64_t)chooser->options->seed, &point));
+    TRY(candidate_copy(chooser, candidate, &rival));
+    TRY(chooser_take_up(chooser, &rival));
     low_rank_free(chooser->context, &rival.point);
-    rival.point = point;
-    rival.rung = candidate->rung;
+    TRY(start_spectral(&chooser->problem, candidate->point.rank, (uint64_t)chooser->options->seed, &rival.point));
     TRY(candidate_fit(chooser, candidate->ridge, limits, &rival));
     if (rival.errors.rmse < candidate->errors.rmse * (1 - gain_worth))
         candidate_swap(&rival, candidate);
 done:
     candidate_free(chooser, &rival);
+    return status;
+}
+
+fescue_status path_settle(struct chooser *chooser, const struct solve_limits *limits, size_t rounds,
+                          struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    struct candidate trial = {0};
+    bool gained = candidate->offsets.kind != FESCUE_OFFSETS_NONE && candidate->point.rank > 0;
+    for (size_t round = 0; round < rounds && gained && !chooser_is_late(chooser); round++) {
+        TRY(candidate_copy(chooser, candidate, &trial));
+        TRY(candidate_refit(chooser, limits, &trial));
+        gained = trial.errors.rmse < candidate->errors.rmse * (1 - gain_worth);
+        if (gained)
+            candidate_swap(&trial, candidate);
+    }
+done:
+    candidate_free(chooser, &trial);
     return status;
 }
 
@@ -65,7 +81,6 @@ fescue_status path_try_exact(struct chooser *chooser, struct candidate *candidat
                                   .gradient = 1e-13,
                                   .change = 1e-2,
                                   .deadline = chooser->deadline};
-    TRY(candidate_create(chooser, &tight));
     TRY(candidate_copy(chooser, candidate, &tight));
     tight.rung = ridge_rungs() - 1;
     TRY(candidate_fit(chooser, 0, &limits, &tight));
@@ -81,7 +96,12 @@ static fescue_status rank_step(struct chooser *chooser, double best_rmse, struct
 {
     fescue_status status = FESCUE_OK;
     struct solve_limits limits = chooser_loose_limits(chooser);
+    double ridge = ridge_of(chooser, candidate);
+    TRY(chooser_take_up(chooser, candidate));
+    problem_set_ridge(&chooser->problem, ridge);
     TRY(start_grow(&chooser->problem, (uint64_t)chooser->options->seed, &candidate->point));
+    TRY(candidate_fit(chooser, ridge, &limits, candidate));
+    TRY(path_settle(chooser, &limits, 1, candidate));
     TRY(ridge_search(chooser, &limits, candidate));
     if (candidate->errors.rmse >= best_rmse * (1 - gain_worth))
         TRY(path_challenge(chooser, &limits, candidate));
@@ -90,25 +110,15 @@ done:
     return status;
 }
 
-static fescue_status candidate_at_zero(struct chooser *chooser, struct candidate *candidate)
-{
-    fescue_status status = FESCUE_OK;
-    TRY(candidate_create(chooser, candidate));
-    candidate->rung = ridge_first_rung();
-    TRY(candidate_measure(chooser, candidate));
-done:
-    return status;
-}
-
-fescue_status path_walk(struct chooser *chooser, size_t rank_most, struct candidate *chosen)
+fescue_status path_walk(struct chooser *chooser, const struct candidate *alone, size_t rank_most,
+                        struct candidate *chosen)
 {
     fescue_status status = FESCUE_OK;
     struct candidate current = {0};
-    TRY(candidate_at_zero(chooser, chosen));
-    TRY(candidate_create(chooser, &current));
-    TRY(candidate_copy(chooser, chosen, &current));
-    double best_rmse = chosen->errors.rmse;
+    double best_rmse = alone->errors.rmse;
     size_t best_rank = 0;
+    TRY(candidate_copy(chooser, alone, chosen));
+    TRY(candidate_copy(chooser, alone, &current));
     for (size_t rank = 1; rank <= rank_most && !chosen->is_exact && !chooser_is_late(chooser); rank++) {
         TRY(rank_step(chooser, best_rmse, &current));
         if (current.is_exact || is_larger_better(chooser, &current, chosen))
@@ -125,23 +135,36 @@ done:
     return status;
 }
 
-fescue_status path_climb(struct chooser *chooser, size_t rank, struct candidate *chosen)
+/* Lays the components down one by one, with few iterations each: nobody judges the ranks between. */
+static fescue_status rank_climb(struct chooser *chooser, size_t rank, struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
-    struct solve_limits limits = chooser_loose_limits(chooser), brief = limits;
-    double given = chooser->options->ridge;
-    brief.iterations = 15; /* enough to lay a component down before the next; nobody judges it */
-    TRY(candidate_at_zero(chooser, chosen));
-    problem_set_ridge(&chooser->problem, given == FESCUE_AUTO ? ridge_rung(chosen->rung) : given);
-    while (chosen->point.rank < rank) {
+    struct solve_limits limits = chooser_loose_limits(chooser);
+    limits.iterations = limits.iterations < 15 ? limits.iterations : 15;
+    TRY(chooser_take_up(chooser, candidate));
+    problem_set_ridge(&chooser->problem, ridge_of(chooser, candidate));
+    while (candidate->point.rank < rank) {
         struct solve_result result = {0};
-        TRY(start_grow(&chooser->problem, (uint64_t)chooser->options->seed, &chosen->point));
-        status = solve_run(&chooser->problem, chooser->solver, &brief, &chosen->point, &result);
+        TRY(progress_tell(chooser->context, "choosing", -1));
+        TRY(start_grow(&chooser->problem, (uint64_t)chooser->options->seed, &candidate->point));
+        status = solve_run(&chooser->problem, chooser->solver, &limits, &candidate->point, &result);
         solve_result_free(chooser->context, &result);
         TRY(status);
     }
+done:
+    return status;
+}
+
+fescue_status path_climb(struct chooser *chooser, const struct candidate *alone, size_t rank, struct candidate *chosen)
+{
+    fescue_status status = FESCUE_OK;
+    struct solve_limits limits = chooser_loose_limits(chooser);
+    TRY(candidate_copy(chooser, alone, chosen));
     if (rank == 0)
         goto done;
+    TRY(rank_climb(chooser, rank, chosen));
+    TRY(candidate_fit(chooser, ridge_of(chooser, chosen), &limits, chosen));
+    TRY(path_settle(chooser, &limits, 1, chosen));
     TRY(ridge_search(chooser, &limits, chosen));
     TRY(path_try_exact(chooser, chosen));
 done:

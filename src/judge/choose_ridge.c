@@ -84,16 +84,18 @@ done:
     return status;
 }
 
+double ridge_of(const struct chooser *chooser, const struct candidate *candidate)
+{
+    return chooser->options->ridge == FESCUE_AUTO ? ladder[candidate->rung] : chooser->options->ridge;
+}
+
 fescue_status ridge_search(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
     struct candidate trial = {0};
-    bool moved = false, is_given = chooser->options->ridge != FESCUE_AUTO;
-    double ridge = is_given ? chooser->options->ridge : ladder[candidate->rung];
-    TRY(candidate_fit(chooser, ridge, limits, candidate));
-    if (is_given || chooser->hidden->count == 0)
+    bool moved = false;
+    if (chooser->options->ridge != FESCUE_AUTO || chooser->hidden->count == 0)
         goto done;
-    TRY(candidate_create(chooser, &trial));
     TRY(ladder_down(chooser, limits, candidate, &trial, &moved));
     if (!moved)
         TRY(ladder_up(chooser, limits, candidate, &trial));

@@ -31,6 +31,11 @@ fescue_status errors_measure(fescue_context *context, const struct cells *hidden
    residuals. */
 double interval_halfwidth(double *residuals, uint64_t count, double level);
 
+/* The offsets of what a low-rank part (in the table's units) leaves of the cells: offsets_fit on x - point. With a
+   point of rank 0, or the kind none, offsets_fit itself. New, owned by the caller. */
+fescue_status refit_offsets(fescue_context *context, const struct cells *cells, enum fescue_offsets kind,
+                            const struct low_rank *point, struct offsets *offsets);
+
 /* One point of the path that was tried. */
 struct choose_step {
     enum fescue_offsets offsets;
@@ -48,8 +53,9 @@ struct choice {
     double halfwidth;                     /* of the interval at the asked level; NAN when nothing was hidden */
     bool noiseless;                       /* the hidden cells are met to rounding */
     bool own_holdout;                     /* nothing was hidden by the caller, so a tenth was, for the choice alone */
-    struct low_rank start;                /* owned; the chosen low-rank part in the table's units, from which the fit on
-                                             all cells starts well: divide the spectrum by the new problem's scale */
+    struct low_rank start;                /* owned; the chosen low-rank part in the table's units. The fit on all cells
+                                             takes its offsets by refit_offsets with it, as the choice did, and starts
+                                             from it, the spectrum divided by the new problem's scale */
     struct choose_step *path;             /* owned; everything that was tried, in order */
     uint64_t path_count;
 };
