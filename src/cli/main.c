@@ -54,8 +54,6 @@ static void signals_set(fescue_context *context)
     for (size_t k = 0; k < sizeof asking / sizeof asking[0]; k++)
         if (sigaction(asking[k], NULL, &before) == 0 && before.sa_handler != SIG_IGN) /* nohup stays in force */
             sigaction(asking[k], &action, NULL);
-    action = (struct sigaction){.sa_handler = SIG_IGN};
-    sigaction(SIGPIPE, &action, NULL);
 }
 
 /* A file opened under the number of a closed standard stream would get what is meant for the stream. Read-only, so that
@@ -130,6 +128,7 @@ static fescue_status program_run(int argc, char **argv)
 int main(int argc, char **argv)
 {
     standard_streams_open();
+    signal(SIGPIPE, SIG_IGN);
     fescue_status status = program_run(argc, argv);
     fescue_status written = standard_output_close();
     return fescue_status_exit_code(status != FESCUE_OK ? status : written);
