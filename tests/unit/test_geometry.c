@@ -331,9 +331,11 @@ static void same_bits(struct matrix a, struct matrix b)
         assert_memory_equal(&MATRIX_AT(a, i, 0), &MATRIX_AT(b, i, 0), a.columns * sizeof(double));
 }
 
+/* The same calls give the same bits whatever came between, and nothing is allocated. */
 static void check_repetition(struct world *world, const struct way *way)
 {
     struct matrix points[2], tangents[2];
+    uint64_t calls = fescue_memory_usage(world->ground.context).calls;
     for (size_t k = 0; k < 2; k++) {
         way->move(world, 0.7);
         way->carry(world, 0.7, FIRST);
@@ -343,18 +345,74 @@ static void check_repetition(struct world *world, const struct way *way)
     }
     same_bits(points[0], points[1]);
     same_bits(tangents[0], tangents[1]);
+    assert_int_equal(fescue_memory_usage(world->ground.context).calls, calls);
 }
-static void a_work_keeps_nothing_between_calls(void **state)
+static void a_work_keeps_nothing_and_takes_nothing(void **state)
 {
     in_every_way(state, check_repetition);
+}
+
+/* Tall enough that the dense algebra is cut into pieces for the team. */
+enum { TALL_ROWS = 13000, TALL_COLUMNS = 9000 };
+
+/* A step out and back on both geometries, from a fresh start, with so many workers. */
+static void tall_walk(void **state, size_t workers, struct matrix basis, struct low_rank *point)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct random_stream stream = random_open(3, RANDOM_TEST, 2);
+    struct arena arena = {0};
+    assert_status(context, team_resize(context, workers), FESCUE_OK);
+    grassmann_reserve(&arena, TALL_ROWS, RANK);
+    fixed_rank_reserve(&arena, TALL_ROWS, TALL_COLUMNS, RANK);
+    fixed_rank_tangent_reserve(&arena, TALL_ROWS, TALL_COLUMNS, RANK);
+    assert_status(context, arena_open(context, &arena), FESCUE_OK);
+    struct grassmann_work flat = grassmann_carve(context, &arena, TALL_ROWS, RANK);
+    struct fixed_rank_work work = fixed_rank_carve(context, &arena, TALL_ROWS, TALL_COLUMNS, RANK);
+    struct fixed_rank_tangent z = fixed_rank_tangent_carve(&arena, TALL_ROWS, TALL_COLUMNS, RANK);
+    assert_status(context, grassmann_random_point(&flat, &stream, basis), FESCUE_OK);
+    grassmann_random_tangent(&flat, &stream, basis, z.left);
+    assert_status(context, grassmann_exp(&flat, basis, z.left, 1, point->left), FESCUE_OK);
+    assert_status(context, grassmann_log(&flat, point->left, basis, z.left), FESCUE_OK);
+    assert_status(context, grassmann_retract_qr(&flat, point->left, z.left, 0.5, basis), FESCUE_OK);
+    for (size_t k = 0; k < RANK; k++) {
+        MATRIX_AT(point->right, 17 * k, k) = 1;
+        point->spectrum[k] = 1 / (1 + (double)k);
+    }
+    for (size_t j = 0; j < TALL_COLUMNS; j++)
+        MATRIX_AT(z.right, j, j % RANK) = random_normal(&stream);
+    fixed_rank_project(&work, point, &z);
+    assert_status(context, fixed_rank_retract(&work, point, &z, 0.1, point), FESCUE_OK);
+    arena_close(context, &arena);
+}
+
+static void threads_do_not_change_the_bits(void **state)
+{
+    static const size_t workers[] = {1, 2, 4};
+    enum { RUNS = sizeof workers / sizeof workers[0] };
+    fescue_context *context = bench_of(state)->context;
+    struct low_rank basis[RUNS], point[RUNS];
+    for (size_t k = 0; k < RUNS; k++) {
+        assert_status(context, low_rank_create(context, TALL_ROWS, RANK, RANK, &basis[k]), FESCUE_OK);
+        assert_status(context, low_rank_create(context, TALL_ROWS, TALL_COLUMNS, RANK, &point[k]), FESCUE_OK);
+        tall_walk(state, workers[k], basis[k].left, &point[k]);
+        same_bits(basis[k].left, basis[0].left);
+        same_bits(point[k].left, point[0].left);
+        same_bits(point[k].right, point[0].right);
+        assert_memory_equal(point[k].spectrum, point[0].spectrum, RANK * sizeof(double));
+    }
+    for (size_t k = 0; k < RUNS; k++) {
+        low_rank_free(context, &basis[k]);
+        low_rank_free(context, &point[k]);
+    }
+    assert_status(context, team_resize(context, 1), FESCUE_OK);
 }
 
 int main(void)
 {
     const struct CMUnitTest tests[] = {
-        BENCH_TEST(the_metric_is_that_of_the_embedding), BENCH_TEST(projection_keeps_tangents_and_is_self_adjoint),
-        BENCH_TEST(retractions_are_of_second_order),     BENCH_TEST(transports_agree_to_second_order),
-        BENCH_TEST(a_work_keeps_nothing_between_calls),
+        BENCH_TEST(the_metric_is_that_of_the_embedding),    BENCH_TEST(projection_keeps_tangents_and_is_self_adjoint),
+        BENCH_TEST(retractions_are_of_second_order),        BENCH_TEST(transports_agree_to_second_order),
+        BENCH_TEST(a_work_keeps_nothing_and_takes_nothing), BENCH_TEST(threads_do_not_change_the_bits),
     };
     return cmocka_run_group_tests(tests, NULL, NULL);
 }
