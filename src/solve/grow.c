@@ -142,7 +142,8 @@ static fescue_status growth_open(struct growth *growth, struct problem *problem,
                                  struct matrix *zero)
 {
     fescue_status status;
-    size_t width = krylov_width(1) > point->rank ? krylov_width(1) : point->rank;
+    size_t width = krylov_width(1, point->rows <= point->columns ? point->rows : point->columns);
+    width = width > point->rank ? width : point->rank;
     growth->field.problem = problem;
     TRY(sweep_create(problem->context, &problem->target, width, &growth->field.sweep));
     matrix_reserve(&growth->arena, point->rows, 1);

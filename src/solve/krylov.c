@@ -18,8 +18,9 @@
  * Departure: orthogonalised block by block instead of one QR of the raw Krylov matrix, which loses the small singular
  * values of an ill-conditioned A.
  *
- * b is the rank and four more, rounded up to a full stride, which costs nothing, at most 256; q = 4, or less when
- * b(q+1) would pass the shorter side. Cost: 2(q+1) + 3 passes of 2b flops a cell, and short (b(q+1))^2. Parallel in the
+ * b is the rank and four more, rounded up to a full stride, which costs nothing, at most 256; q = 4. Where
+ * b(q+1) would pass the shorter side one block as wide as that side is taken, and everything is exact; beyond 256 as
+ * many blocks as fit. Cost: 2(q+1) + 3 passes of 2b flops a cell, and short (b(q+1))^2. Parallel in the
  * passes only.
  */
 #include "solve/solve_internal.h"
@@ -36,7 +37,7 @@ struct krylov {
     struct arena arena;
     size_t width, blocks;
     struct matrix basis, raw;               /* Q; A A' times a block: short x b */
-    struct matrix across, across_scaled;    /* long x b */
+    struct matrix across;                   /* long x b */
     struct matrix scaled;                   /* short x b */
     struct matrix left, left_scaled;        /* Y: short x r */
     struct matrix gram, coefficients, tops; /* H; Q'raw, b(q+1) x b; E */
@@ -49,9 +50,10 @@ static size_t smaller(size_t a, size_t b)
     return a < b ? a : b;
 }
 
-size_t krylov_width(size_t rank)
+size_t krylov_width(size_t rank, size_t shorter)
 {
-    return smaller(factor_stride(rank + 4), WIDTH_MOST);
+    size_t width = smaller(factor_stride(rank + 4), WIDTH_MOST);
+    return shorter <= BLOCKS_MOST * width && shorter <= WIDTH_MOST ? shorter : width;
 }
 
 static void krylov_reserve(struct krylov *k, size_t rank)
@@ -60,7 +62,6 @@ static void krylov_reserve(struct krylov *k, size_t rank)
     matrix_reserve(&k->arena, shorter, all);
     matrix_reserve(&k->arena, shorter, k->width);
     matrix_reserve(&k->arena, shorter, k->width);
-    matrix_reserve(&k->arena, longer, k->width);
     matrix_reserve(&k->arena, longer, k->width);
     matrix_reserve(&k->arena, all, all);
     matrix_reserve(&k->arena, all, k->width);
@@ -79,7 +80,6 @@ static void krylov_carve(struct krylov *k, size_t rank)
     k->raw = matrix_carve(&k->arena, shorter, k->width);
     k->scaled = matrix_carve(&k->arena, shorter, k->width);
     k->across = matrix_carve(&k->arena, longer, k->width);
-    k->across_scaled = matrix_carve(&k->arena, longer, k->width);
     k->gram = matrix_carve(&k->arena, all, all);
     k->coefficients = matrix_carve(&k->arena, all, k->width);
     k->tops = matrix_carve(&k->arena, all, rank);
@@ -100,9 +100,7 @@ static void scale_rows(struct matrix a, const double *scale)
 /* to = A from. */
 static void apply(struct krylov *k, struct matrix from, struct matrix to)
 {
-    matrix_copy(from, k->across_scaled);
-    scale_rows(k->across_scaled, k->sparse->long_scale);
-    sweep_multiply(k->sparse->sweep, k->sparse->by_short, k->sparse->short_values, k->across_scaled, to);
+    sweep_multiply(k->sparse->sweep, k->sparse->by_short, k->sparse->short_values, from, to);
     scale_rows(to, k->sparse->short_scale);
 }
 
@@ -112,7 +110,6 @@ static void apply_transposed(struct krylov *k, struct matrix from, struct matrix
     matrix_copy(from, scaled);
     scale_rows(scaled, k->sparse->short_scale);
     sweep_multiply(k->sparse->sweep, k->sparse->by_long, k->sparse->long_values, scaled, to);
-    scale_rows(to, k->sparse->long_scale);
 }
 
 static struct matrix columns_of(struct matrix a, size_t first, size_t count)
@@ -180,7 +177,7 @@ fescue_status krylov_triplets(const struct sparse_operator *sparse, size_t rank,
                               double *spectrum, struct matrix of_long)
 {
     size_t shorter = sparse->by_short->lines;
-    struct krylov k = {.sparse = sparse, .width = smaller(krylov_width(rank), shorter)};
+    struct krylov k = {.sparse = sparse, .width = krylov_width(rank, shorter)};
     fescue_context *context = sparse->sweep->context;
     fescue_status status;
     assert(rank >= 1 && rank <= shorter && of_short.rows == shorter);

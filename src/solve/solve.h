@@ -67,7 +67,8 @@ fescue_status start_spectral(struct problem *problem, size_t rank, uint64_t seed
    orthonormal form. Replaces *point. When the residual is zero the new singular value is 0. */
 fescue_status start_grow(struct problem *problem, uint64_t seed, struct low_rank *point);
 
-/* ---- the evidence fit: offsets, components and their shrinkage learnt together (evidence.c) ----------------------- */
+/* ---- the evidence fit: offsets, components and their shrinkage learnt together (evidence.c) -----------------------
+ */
 
 enum evidence_noise { EVIDENCE_NOISE_EQUAL, EVIDENCE_NOISE_COLUMNS, EVIDENCE_NOISE_ROWS };
 struct evidence_request {

@@ -100,15 +100,15 @@ void projection_precondition(const double *factor, struct matrix g, struct matri
 /* ---- leading singular triplets -------------------------------------------------------------------------------------
  */
 
-/* A sparse matrix on the pattern of the problem's cells, seen from the shorter side: entry ij of the half counts as
-   scale_i value_ij scale_j. */
+/* A sparse matrix on the pattern of the problem's cells, seen from the shorter side: entry ij of by_short counts as
+   scale_i value_ij. */
 struct sparse_operator {
-    struct sweep *sweep; /* for krylov_width(rank) columns */
+    struct sweep *sweep; /* for krylov_width columns */
     const struct half *by_short, *by_long;
     const void *short_values, *long_values; /* in the order of either half */
-    const double *short_scale, *long_scale; /* NULL: 1 */
+    const double *short_scale;              /* NULL: 1 */
 };
-size_t krylov_width(size_t rank);
+size_t krylov_width(size_t rank, size_t shorter);
 /* The `rank` leading triplets by randomised block Krylov iteration: of_short and of_long orthonormal, spectrum
    descending. rank <= the shorter side. FESCUE_NO_MEMORY. */
 fescue_status krylov_triplets(const struct sparse_operator *sparse, size_t rank, uint64_t seed, struct matrix of_short,

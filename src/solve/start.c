@@ -4,13 +4,15 @@
  * completion from a few entries", sections 1.2 and 1.3).
  *
  * With every cell seen with the same chance p, the matrix that holds T on the seen cells and 0 elsewhere has the mean
- * p T: its leading singular spaces estimate those of T. Lines that are seen far more often than others would take the
- * leading directions over, so a line with more than twice the average number of seen cells counts as
+ * p T: its leading singular spaces estimate those of T. A line of the shorter side that is seen far more often than
+ * others would take a leading direction for itself, so one with more than twice the average number of seen cells counts
+ * as
  *
  *     scale = 2 average / its number.
  *
  * Departures: the paper throws surplus cells away, which would make the start depend on a draw; scaling keeps them all,
- * and brings the line's expectation back to that of the others. And the singular values are not those of the sparse
+ * and brings the line's expectation back to that of the others. The longer side is not trimmed: a line of it that is
+ * seen whole is a vector of the very space that is looked for. And the singular values are not those of the sparse
  * matrix over p, which hold noise of the pattern: with U the leading space of the shorter side,
  *
  *     W_j = argmin |U_j w - t_j|^2 + mu p |w|^2   for every line j of the longer side,      X = tau U W',
@@ -27,10 +29,9 @@
 /* mu. One makes a line seen at the average density shrink to a half. */
 static const double start_ridge = 1;
 
-/* The scales of both sides of a half's pattern. */
 static void trim(const struct half *half, double *scale)
 {
-    double average = (double)half->start[half->lines] / (half->lines == 0 ? 1 : half->lines);
+    double average = (double)half->start[half->lines] / half->lines;
     for (uint32_t i = 0; i < half->lines; i++) {
         double cells = (double)(half->start[i + 1] - half->start[i]);
         scale[i] = cells > 2 * average ? 2 * average / cells : 1;
@@ -40,29 +41,22 @@ static void trim(const struct half *half, double *scale)
 /* Leading triplets of the trimmed target, into out. */
 static fescue_status leading_spaces(struct field *field, uint64_t seed, struct low_rank *out)
 {
-    struct problem *problem = field->problem;
+    fescue_context *context = field->problem->context;
     const struct half *rows = field_rows(field), *columns = field_columns(field);
     bool rows_short = rows->lines <= columns->lines;
-    struct arena arena = {0};
-    fescue_status status;
-    arena_reserve(&arena, rows->lines, sizeof(double));
-    arena_reserve(&arena, columns->lines, sizeof(double));
-    TRY(arena_open(problem->context, &arena));
-    double *row_scale = arena_carve(&arena, rows->lines, sizeof(double));
-    double *column_scale = arena_carve(&arena, columns->lines, sizeof(double));
-    trim(rows, row_scale);
-    trim(columns, column_scale);
-    struct sparse_operator sparse = {.sweep = &field->sweep,
-                                     .by_short = rows_short ? rows : columns,
-                                     .by_long = rows_short ? columns : rows,
-                                     .short_scale = rows_short ? row_scale : column_scale,
-                                     .long_scale = rows_short ? column_scale : row_scale};
+    struct sparse_operator sparse = {
+        .sweep = &field->sweep, .by_short = rows_short ? rows : columns, .by_long = rows_short ? columns : rows};
+    double *scale;
+    fescue_status status = TAKE(context, sparse.by_short->lines, &scale);
+    if (status != FESCUE_OK)
+        return status;
+    trim(sparse.by_short, scale);
+    sparse.short_scale = scale;
     sparse.short_values = sparse.by_short->value;
     sparse.long_values = sparse.by_long->value;
-    TRY(krylov_triplets(&sparse, out->rank, seed, rows_short ? out->left : out->right, out->spectrum,
-                        rows_short ? out->right : out->left));
-done:
-    arena_close(problem->context, &arena);
+    status = krylov_triplets(&sparse, out->rank, seed, rows_short ? out->left : out->right, out->spectrum,
+                             rows_short ? out->right : out->left);
+    GIVE(context, &scale);
     return status;
 }
 
@@ -96,10 +90,11 @@ fescue_status start_spectral(struct problem *problem, size_t rank, uint64_t seed
 {
     struct field field = {.problem = problem};
     const struct cells *target = &problem->target;
+    size_t shorter = target->rows <= target->columns ? target->rows : target->columns;
     fescue_status status = low_rank_create(problem->context, target->rows, target->columns, rank, out);
     if (status != FESCUE_OK || rank == 0)
         return status;
-    TRY(sweep_create(problem->context, target, krylov_width(rank), &field.sweep));
+    TRY(sweep_create(problem->context, target, krylov_width(rank, shorter), &field.sweep));
     TRY(leading_spaces(&field, seed, out));
     TRY(other_side_fit(&field, out));
 done:
