@@ -30,24 +30,28 @@ struct sample {
     const char *at, *end;
     bool is_whole; /* the text ends where the sample does */
     char separator;
+    bool out_of_place;                 /* a quote was, in one of the records so far */
     size_t count;                      /* fields of the record */
     struct field field[SAMPLE_FIELDS]; /* the first of them, without quotes around them */
     struct field last;
 };
 
-static const char *field_end(const char *text, const char *end, char separator)
+/* Behind the closing quote of a field that begins with one; `end` when it is not closed. */
+static const char *quoted_end(const char *text, const char *end)
 {
-    if (text < end && *text == '"') {
-        for (text++; text < end; text++) {
-            if (*text != '"')
-                continue;
-            if (text + 1 == end || text[1] != '"')
-                break;
-            text++;
-        }
-    }
-    while (text < end && *text != separator && *text != '\n')
-        text++;
+    for (text++; text < end; text++)
+        if (*text == '"' && (text + 1 == end || *++text != '"'))
+            return text + (*text == '"');
+    return end;
+}
+
+/* *out_of_place is set when a quote stands where none may be. */
+static const char *field_end(const char *text, const char *end, char separator, bool *out_of_place)
+{
+    if (text < end && *text == '"')
+        text = quoted_end(text, end);
+    for (; text < end && *text != separator && *text != '\n'; text++)
+        *out_of_place = *out_of_place || *text == '"';
     return text;
 }
 
@@ -72,7 +76,7 @@ static bool sample_record(struct sample *sample, bool is_first)
         return false;
     sample->count = 0;
     for (;; sample->at++) {
-        const char *stop = field_end(sample->at, end, sample->separator);
+        const char *stop = field_end(sample->at, end, sample->separator, &sample->out_of_place);
         sample->last = field_bare(sample->at, stop);
         if (sample->count < SAMPLE_FIELDS)
             sample->field[sample->count] = sample->last;
@@ -86,34 +90,44 @@ static bool sample_record(struct sample *sample, bool is_first)
 
 /* ---- separator -------------------------------------------------------------------------------------------------- */
 
-/* How well a separator fits: 0 it does not, 1 all records have as many fields as the first, 2 and end in a number. */
-static int separator_fit(struct sample sample, size_t *first_count)
+/* How well a separator fits. */
+enum fit {
+    FIT_MISQUOTED, /* a quote is out of place */
+    FIT_UNEVEN,    /* records differ in the number of fields, or there is one record alone */
+    FIT_EVEN,
+    FIT_NUMERIC /* and all but the first end in a number or a hole */
+};
+
+static enum fit separator_fit(struct sample sample, size_t *first_count)
 {
     bool is_even = true, is_numeric = true;
+    size_t others = 0;
     *first_count = sample_record(&sample, true) ? sample.count : 0;
-    while (sample_record(&sample, false)) {
+    for (; sample_record(&sample, false); others++) {
         is_even = is_even && sample.count == *first_count;
         is_numeric = is_numeric && (is_hole(&sample.last) || is_number(&sample.last, sample.separator == ';'));
     }
-    return *first_count < 2 || !is_even ? 0 : is_numeric ? 2 : 1;
+    if (sample.out_of_place)
+        return FIT_MISQUOTED;
+    return others == 0 || !is_even ? FIT_UNEVEN : is_numeric ? FIT_NUMERIC : FIT_EVEN;
 }
 
 static fescue_status separator_find(const struct stream *stream, struct sample sample, char *separator)
 {
     static const char separators[] = {'\t', ';', ','};
-    int best = -1;
-    size_t most = 1;
+    enum fit best = FIT_MISQUOTED;
+    size_t most = 0;
     for (size_t k = 0; k < sizeof separators; k++) {
         size_t count;
         sample.separator = separators[k];
-        int fit = separator_fit(sample, &count);
-        if (count < 2 || fit < best || (fit == best && (fit > 0 || count <= most)))
+        enum fit fit = separator_fit(sample, &count);
+        if (count < 2 || (most > 0 && (fit < best || (fit == best && (fit >= FIT_EVEN || count <= most)))))
             continue;
         best = fit;
         most = count;
         *separator = separators[k];
     }
-    if (best >= 0)
+    if (most > 0)
         return FESCUE_OK;
     return BAD_LINE_AT(stream, UINT64_C(1),
                        "no comma, semicolon or tab was found, fields separated by one of them "
