@@ -130,8 +130,8 @@ static void ranks_tell(struct survey *survey, const struct ranks *ranks, uint64_
     uint64_t decidable = ranks->half < unknowns ? ranks->half : unknowns;
     survey->rank_most = ranks->most < unknowns ? ranks->most : unknowns;
     page_add(page,
-             "A rank needs as many cells in each row and column as it is high: all observed cells count at rank %u, "
-             "nine tenths at rank %u, half at rank %u.\n",
+             "Rank r needs r cells in each row and column, which holds for all observed cells up to rank %u, for nine "
+             "tenths of them up to rank %u, for half up to rank %u.\n",
              ranks->all, ranks->most, ranks->half);
     if (unknowns < ranks->half)
         page_add(page, "Above rank %llu there would be more unknowns than observed cells.\n",
