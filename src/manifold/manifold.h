@@ -4,8 +4,9 @@
  * what curvature costs a first-order method. Nothing here knows of tables or of observed cells.
  *
  * Workspace: an operation that needs room takes it from a `_work`, which its user reserves and carves in an arena of
- * his own (reserve everything, open, carve in the same order). Nothing here allocates but low_rank_create and _copy.
- * A work serves one operation at a time and keeps nothing between them; it borrows the context for failures' sentences.
+ * his own (reserve everything, open, carve in the same order). Only the low_rank_ functions that
+ * make a new point allocate. A work serves one operation at a time and keeps nothing between them; it borrows the
+ * context for failures' sentences.
  *
  * Status: FESCUE_OK, or FESCUE_DEFECT when LAPACK did not converge (numbers that are not finite went in); outputs are
  * then undefined. Shapes that do not fit together are asserted.

@@ -2,8 +2,7 @@
  *
  * The matrix of low rank: shapes, ownership, entries.
  */
-#include "manifold/manifold.h"
-#include "support.h"
+#include "support_geometry.h"
 
 #include <errno.h>
 
@@ -74,28 +73,61 @@ static void rank_zero_is_the_zero_matrix(void **state)
     low_rank_free(context, &point);
 }
 
-/* Every allocation of a copy fails in turn: a status, nothing alive but the original, and a rank of 0. */
+/* A B' from plain sums, whether the factors are independent or one column repeats another. */
+static void a_product_becomes_a_point(void **state)
+{
+    struct ground ground = ground_open(state);
+    for (int kind = 0; kind < 2; kind++) {
+        struct matrix a = normals(&ground, 11, 3), b = normals(&ground, 5, 3);
+        for (size_t i = 0; i < a.rows && kind == 1; i++)
+            MATRIX_AT(a, i, 2) = MATRIX_AT(a, i, 0);
+        struct matrix product = times(&ground, a, false, b, true);
+        struct low_rank point;
+        assert_status(ground.context, low_rank_from_product(ground.context, a, b, &point), FESCUE_OK);
+        assert_true(orthonormality(point.left) <= rounding(a) && orthonormality(point.right) <= rounding(b));
+        assert_true(point.spectrum[0] >= point.spectrum[1] && point.spectrum[1] >= point.spectrum[2]);
+        if (kind == 1)
+            assert_close(point.spectrum[2], 0, rounding(a) * point.spectrum[0]);
+        for (size_t i = 0; i < a.rows; i++)
+            for (size_t j = 0; j < b.rows; j++)
+                assert_close(low_rank_entry(&point, i, j), MATRIX_AT(product, i, j), rounding(a) * point.spectrum[0]);
+        low_rank_free(ground.context, &point);
+    }
+    ground_close(&ground);
+}
+
+static fescue_status copy_again(fescue_context *context, const struct low_rank *point, struct low_rank *out)
+{
+    return low_rank_copy(context, point, out);
+}
+static fescue_status multiply_again(fescue_context *context, const struct low_rank *point, struct low_rank *out)
+{
+    return low_rank_from_product(context, point->left, point->right, out);
+}
+
+/* Every allocation fails in turn: a status, nothing alive but the original, and a rank of 0. */
 static void no_memory_leaves_nothing(void **state)
 {
+    static fescue_status (*const makers[])(fescue_context *, const struct low_rank *,
+                                           struct low_rank *) = {copy_again, multiply_again};
     fescue_context *context = bench_of(state)->context;
-    struct low_rank point, copy;
+    struct low_rank point, made;
     assert_status(context, low_rank_create(context, 5, 4, 2, &point), FESCUE_OK);
+    numbers_fill(&point);
     uint64_t before = fescue_memory_usage(context).blocks;
-    for (uint64_t nth = 1;; nth++) {
-        fault_plan(FAULT_TAKE, nth, false, ENOMEM);
-        fescue_status status = low_rank_copy(context, &point, &copy);
-        bool met = fault_met();
-        fault_clear();
-        if (!met) {
-            assert_true(nth > 1);
-            assert_int_equal(status, FESCUE_OK);
-            break;
+    for (size_t k = 0; k < sizeof makers / sizeof makers[0]; k++) {
+        fescue_status status = FESCUE_NO_MEMORY;
+        for (uint64_t nth = 1; status != FESCUE_OK; nth++) {
+            fault_plan(FAULT_TAKE, nth, false, ENOMEM);
+            status = makers[k](context, &point, &made);
+            assert_int_equal(status, fault_met() ? FESCUE_NO_MEMORY : FESCUE_OK);
+            assert_int_equal(made.rank, fault_met() ? 0 : 2);
+            assert_int_equal(fescue_memory_usage(context).blocks, before + (fault_met() ? 0 : 1));
+            assert_true(fault_met() || nth > 1);
+            fault_clear();
         }
-        assert_int_equal(status, FESCUE_NO_MEMORY);
-        assert_int_equal(copy.rank, 0);
-        assert_int_equal(fescue_memory_usage(context).blocks, before);
+        low_rank_free(context, &made);
     }
-    low_rank_free(context, &copy);
     low_rank_free(context, &point);
 }
 
@@ -111,9 +143,13 @@ static void absurd_sizes_are_refused(void **state)
 int main(void)
 {
     const struct CMUnitTest tests[] = {
-        BENCH_TEST(a_new_one_is_zero),        BENCH_TEST(an_entry_is_the_sum_over_components),
-        BENCH_TEST(a_copy_stands_alone),      BENCH_TEST(rank_zero_is_the_zero_matrix),
-        BENCH_TEST(no_memory_leaves_nothing), BENCH_TEST(absurd_sizes_are_refused),
+        BENCH_TEST(a_new_one_is_zero),
+        BENCH_TEST(an_entry_is_the_sum_over_components),
+        BENCH_TEST(a_product_becomes_a_point),
+        BENCH_TEST(a_copy_stands_alone),
+        BENCH_TEST(rank_zero_is_the_zero_matrix),
+        BENCH_TEST(no_memory_leaves_nothing),
+        BENCH_TEST(absurd_sizes_are_refused),
     };
     return cmocka_run_group_tests(tests, NULL, NULL);
 }
