@@ -3,10 +3,10 @@
  * Geometry: the Grassmann manifold of r-dimensional subspaces of R^m, the manifold of m x n matrices of rank r, and
  * what curvature costs a first-order method. Nothing here knows of tables or of observed cells.
  *
- * Workspace: an operation that needs room takes it from a `_work`, which its user reserves and carves in an arena of
- * his own (reserve everything, open, carve in the same order). Only the low_rank_ functions that
- * make a new point allocate. A work serves one operation at a time and keeps nothing between them; it borrows the
- * context for failures' sentences.
+ * Workspace: an operation that needs room takes it from a `_work`, which its user reserves and carves in an arena
+ * (reserve everything, open, carve in the same order). A work serves one operation at a time and keeps nothing between
+ * them; it borrows the context for failures' sentences and for the team. Only the low_rank_ functions that make a new
+ * point allocate. The bits of every result are the same for any number of workers.
  *
  * Status: FESCUE_OK, or FESCUE_DEFECT when LAPACK did not converge (numbers that are not finite went in); outputs are
  * then undefined. Shapes that do not fit together are asserted.
@@ -43,6 +43,7 @@ double low_rank_entry(const struct low_rank *point, size_t row, size_t column);
      cut locus             the points whose largest principal angle is pi/2; no distance exceeds pi/2 sqrt(min(r, m-r))
      strong convexity      balls of radius below pi/4 are strongly convex
    At r = m there is one point, and every tangent is zero. */
+
 /* The geodesic t -> Exp_U(t D), D = P diag(s) Q': factors made once for any number of t. The s_k are its speeds in the
    planes spanned by column k of U Q and column k of P. */
 struct grassmann_geodesic {
