@@ -20,16 +20,8 @@
 /* Choosing fits many ranks, the fit on all cells one, from a point that is nearly there. */
 static const double choosing_share = 0.7;
 
-static fescue_status table_check(const fescue_table *table)
-{
-    if (table->cells.count == 0)
-        return FAIL(table->context, FESCUE_BAD_DATA, "%s: no cell of the table holds a number: nothing to learn from",
-                    table->path == NULL ? "the table" : table->path);
-    return FESCUE_OK;
-}
-
 /* The solver by name; auto is the first of the list, which solver.c orders by preference. */
-static const struct solver *solver_choose(const struct fescue_options *options)
+static const struct solver *solver_choose(fescue_context *context, const struct fescue_options *options)
 {
     size_t count;
     const struct fescue_option *option = fescue_option_table(&count);
@@ -39,6 +31,7 @@ static const struct solver *solver_choose(const struct fescue_options *options)
     fescue_option_text(option, options, name, sizeof name);
     const struct solver *solver = strcmp(name, "auto") == 0 ? solver_at(0) : solver_find(name);
     assert(solver != NULL);
+    log_tell(context, "solver %s: %s", solver_name(solver), solver_summary(solver));
     return solver;
 }
 
@@ -53,6 +46,7 @@ static fescue_status fill_choose(fescue_fill *fill, const struct solver *solver)
         request.deadline = fill->wall + choosing_share * options->time_limit;
     TRY(holdout_split(fill->context, cells, options->holdout, (uint64_t)options->seed, &holdout));
     TRY(choose_run(fill->context, &holdout, &request, &fill->choice));
+    fill->is_search_cut = request.deadline > 0 && clock_wall() >= request.deadline;
     fill->run.hidden = holdout.hidden.count > 0 ? holdout.hidden.count : fill->choice.errors.count;
 done:
     holdout_free(fill->context, &holdout);
@@ -98,9 +92,8 @@ static fescue_status fill_run(fescue_fill *fill)
 {
     fescue_context *context = fill->context;
     fescue_status status;
-    TRY(table_check(fill->table));
     TRY(job_prepare(context, &fill->options));
-    const struct solver *solver = solver_choose(&fill->options);
+    const struct solver *solver = solver_choose(context, &fill->options);
     TRY(fill_choose(fill, solver));
     TRY(fill_fit(fill, solver));
     low_rank_free(context, &fill->choice.start);

@@ -2,6 +2,9 @@
  *
  * The fit on all cells, with the offsets, rank and ridge that were chosen.
  *
+ * The offsets are those of what `choice->start` leaves (refit_offsets), as they were while choosing: fitted to the bare
+ * cells they would take in a part of the low-rank structure.
+ *
  * The objective has many stationary points, and which one a local method ends in is decided by its start. Two starts
  * fail on different tables: a point grown rank by rank is lost where all singular values are equal and few cells are
  * seen, a truncated SVD of what was seen where they are unequal (Keshavan, Montanari, Oh 2010, is the latter). So both
@@ -10,10 +13,16 @@
  *     grown      the point that choosing ended with, which it grew on the cells that were not hidden
  *     spectral   truncated SVD of the trimmed, rescaled targets
  *
- * each improved until its gradient has fallen to `screen_gradient` or for `screen_iterations`; the lower objective is
- * taken on to the tolerance asked for. A fit that meets the seen cells to rounding is not beaten: then the second start
- * is left out. As solve_run gives back no worse than what came in, the result is never above the objective of the point
- * that choosing ended with.
+ * each improved until its gradient has fallen to `screen_gradient`, for at most `SCREEN_ITERATIONS`. The second takes
+ * the place of the first when its objective is lower by more than `worth`, and the one that stays is taken on to the
+ * tolerance asked for. A fit that meets the seen cells to rounding is not beaten: then the second start is left out. As
+ * solve_run gives back no worse than what came in, the result is never above the objective of the point that choosing
+ * ended with.
+ *
+ * A fit also ends when its objective changes by less than `settled_change` over ten iterations, and this is no saving
+ * of time alone: where there is little or no ridge, ending then shrinks what the cells hardly determine, which
+ * following a flat valley for hundreds of iterations would undo, for the worse. Choosing ends its fits by the same
+ * rule, so the error on the hidden cells is the error of such a fit.
  *
  * Cost: at most twice one fit, and room for two points. What is parallel is so in the solvers.
  */
@@ -27,9 +36,11 @@
 static const double screen_gradient = 1e-4;
 enum { SCREEN_ITERATIONS = 100 };
 
-/* An objective that does not change by more over ten iterations is settled for every use of its point: the noise of a
-   hidden-cell error is larger by many powers of ten. */
-static const double settled_change = 1e-13;
+/* The same as choosing has for the fit whose error it announces. */
+static const double settled_change = 1e-5;
+
+/* Below this the two have found the same basin, or equals. */
+static const double worth = 1e-3;
 
 struct candidate {
     const char *start;
@@ -90,7 +101,8 @@ static fescue_status candidate_choose(struct problem *problem, const struct fina
                                       struct candidate *best)
 {
     struct candidate other = {.start = "spectral"};
-    struct solve_limits screen = {.iterations = SCREEN_ITERATIONS, .deadline = request->deadline};
+    struct solve_limits screen = {
+        .iterations = SCREEN_ITERATIONS, .change = settled_change, .deadline = request->deadline};
     fescue_status status;
     screen.gradient = fmax(screen_gradient, request->options->tolerance);
     if (request->options->iterations < SCREEN_ITERATIONS)
@@ -106,7 +118,7 @@ static fescue_status candidate_choose(struct problem *problem, const struct fina
     }
     TRY(status);
     TRY(candidate_improve(problem, request, &screen, &other));
-    if (other.result.objective < best->result.objective) {
+    if (other.result.objective < (1 - worth) * best->result.objective) {
         struct candidate swapped = *best;
         *best = other;
         other = swapped;
@@ -145,7 +157,7 @@ fescue_status final_fit_run(fescue_context *context, const struct final_request 
     fescue_status status;
     *fit = (struct final_fit){.model = {.rows = request->cells->rows, .columns = request->cells->columns}};
     model->bounds = request->options->bounds;
-    TRY(offsets_fit(context, request->cells, request->choice->offsets, &model->offsets));
+    TRY(refit_offsets(context, request->cells, request->choice->offsets, &request->choice->start, &model->offsets));
     TRY(problem_create(context, request->cells, &model->offsets, request->choice->ridge, &problem));
     TRY(low_rank_fit(&problem, request, &best));
     fit->scale = problem.scale;

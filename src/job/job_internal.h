@@ -49,6 +49,7 @@ struct fescue_fill {
     const fescue_table *table;
     struct fescue_options options; /* a copy; its texts are dropped */
     struct choice choice;
+    bool is_search_cut; /* the time limit ended the choosing */
     struct final_fit fit;
     struct determined determined;
     double wall, cpu; /* clocks when it began */

@@ -66,7 +66,9 @@ static void model_lines(struct summary *summary)
     if (choice->path_count > 1)
         text_add(text, "           out of %" PRIu64 " that were tried on %" PRIu64 " hidden cells\n",
                  choice->path_count, choice->errors.count);
-    if (choice->rank == 0 && chooses_rank && choice->errors.count > 0)
+    if (summary->fill->is_search_cut)
+        text_add(text, "           WARNING: the time limit ended the search; allow more, or give a --rank\n");
+    else if (choice->rank == 0 && chooses_rank && choice->errors.count > 0)
         text_add(text, "           no usable low-rank structure: offsets alone predict hidden cells better\n");
     if (!chooses_rank && choice->rank < options->rank)
         text_add(text, "           rank %" PRId64 " was asked for; the table is too small for it\n", options->rank);
@@ -98,7 +100,7 @@ static void error_lines(struct summary *summary)
         text_add(text, "           the hidden cells are met to rounding: the table is free of noise\n");
     if (choice->own_holdout)
         text_add(text, "           no cells were to be kept hidden; a tenth was, for the choice alone\n");
-    text_add(text, "           they were hidden at random: where holes are long runs or late starts, expect more\n");
+    text_add(text, "           hidden at random: expect more where holes are long runs or late starts\n");
 }
 
 static void interval_line(struct summary *summary)
@@ -119,9 +121,9 @@ static const char *advice(enum solve_stop stop)
 {
     switch (stop) {
     case STOP_ITERATIONS:
-        return "more --iterations, or a larger --tolerance, would end it";
+        return "more --iterations may end it";
     case STOP_TIME:
-        return "give it a longer --time-limit, or a --rank to spare it the search";
+        return "allow more time, or give a --rank";
     case STOP_CANCELLED:
         return "run it again to its end before the results are used";
     default:
