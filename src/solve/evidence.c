@@ -52,7 +52,7 @@ static void side_reserve(struct arena *arena, const struct half *half, size_t ra
     arena_reserve(arena, rank + 1, sizeof(double));
     arena_reserve(arena, lines, sizeof(double));
     arena_reserve(arena, lines, sizeof(double));
-    arena_reserve(arena, (half->blocks + 1) * evidence_basis_partial(rank + 2), sizeof(double));
+    arena_reserve(arena, (half->blocks + 1) * evidence_basis_partial(rank), sizeof(double));
     matrix_reserve(arena, lines, d);
     matrix_reserve(arena, lines, d);
 }
@@ -66,7 +66,7 @@ static void side_carve(struct arena *arena, const struct half *half, size_t rank
     side->variance = arena_carve(arena, rank + 1, sizeof(double));
     side->line_precision = arena_carve(arena, lines, sizeof(double));
     side->line_error = arena_carve(arena, lines, sizeof(double));
-    side->partial = arena_carve(arena, (half->blocks + 1) * evidence_basis_partial(rank + 2), sizeof(double));
+    side->partial = arena_carve(arena, (half->blocks + 1) * evidence_basis_partial(rank), sizeof(double));
     side->mean = matrix_carve(arena, lines, d);
     side->old = matrix_carve(arena, lines, d);
     for (size_t line = 0; line < lines; line++)
@@ -78,7 +78,7 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
     const struct cells *cells = &problem->target;
     size_t workers = team_workers(problem->context), d = rank + 2;
     size_t one = evidence_side_scratch(rank), two = evidence_basis_scratch(rank);
-    size_t work = packed_size(rank) + rank + dense_work_size(rank, rank);
+    size_t work = 2 * packed_size(rank) + 3 * rank + dense_work_size(rank, rank);
     *evidence = (struct evidence){.context = problem->context, .problem = problem, .rank = rank};
     evidence->scratch_size = ((one > two ? one : two) + 7) / 8 * 8;
     struct arena *arena = &evidence->arena;
@@ -89,7 +89,7 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
         matrix_reserve(arena, rank, rank);
         matrix_reserve(arena, d, d);
     }
-    arena_reserve(arena, 3 * rank, sizeof(double));
+    arena_reserve(arena, 5 * rank, sizeof(double));
     arena_reserve(arena, d * d, sizeof(double));
     arena_reserve(arena, work, sizeof(double));
     fescue_status status = arena_open(problem->context, arena);
@@ -102,7 +102,7 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
         evidence->small[k] = matrix_carve(arena, rank, rank);
         evidence->gram[k] = matrix_carve(arena, d, d);
     }
-    evidence->shift = arena_carve(arena, 3 * rank, sizeof(double));
+    evidence->shift = arena_carve(arena, 5 * rank, sizeof(double));
     evidence->map = arena_carve(arena, d * d, sizeof(double));
     evidence->basis_work = arena_carve(arena, work, sizeof(double));
     evidence->rows.effect_at = evidence->columns.one_at = rank;

@@ -2,14 +2,15 @@
  *
  * The exact change of basis between two rounds: step 3 of evidence.c. The product u.v + a + b does not change under
  *
- *     u <- u - mu,  b <- b + mu.v          (mu the mean of u over rows; b absorbs it)
- *     v <- v - nu,  a <- a + nu.u          (nu the mean of v over columns)
+ *     u <- u - mu,  b <- b + mu.v          (mu near the mean of u over rows; b absorbs it)
+ *     v <- v - nu,  a <- a + nu.u          (nu near the mean of v over columns)
  *     u <- R u,     v <- R^-T v
  *
- * and R is chosen so that the mean of E[uu'] is the identity and that of E[vv'] diagonal: with the Cholesky factor
- * A = LL' of the first and the eigenvectors L'BL = Q diag(w) Q', R = Q'L^-1 and R^-T = Q'L'. Alternating updates move
- * along these directions only slowly; the jump raises the bound at once, and a component that the data do not support
- * shows up as a w near 0.
+ * where each shift is the one that raises the bound most (to the mean itself when there are effects to absorb it, to
+ * nothing when there are none), and R is chosen so that the mean of E[uu'] is the identity and that of E[vv'] diagonal:
+ * with the Cholesky factor A = LL' of the first and the eigenvectors L'BL = Q diag(w) Q', R = Q'L^-1 and R^-T = Q'L'.
+ * Alternating updates move along these directions only slowly; the jump raises the bound at once, and a component that
+ * the data do not support shows up as a w near 0.
  *
  * On the regressors g = (factor, 1, effect) of a line both shifts and R are one linear map T, and M <- T M T'. Cost
  * 2 (r+2)^3 a line, lines in parallel.
@@ -17,7 +18,11 @@
 #include "solve/evidence_internal.h"
 
 #include <float.h>
+#include <math.h>
 #include <string.h>
+
+/* Steps towards the best shift, each of which raises the bound; the next change of basis goes on from there. */
+#define SHIFT_STEPS 10
 
 size_t evidence_basis_scratch(size_t rank)
 {
@@ -31,10 +36,10 @@ struct basis_job {
     const double *map; /* d x d */
 };
 
-/* Second moments and means of the factors (rows 0 .. r of the triangle), and the number of lines with cells. */
+/* All second moments of a line's regressors, and the number of lines with cells. */
 size_t evidence_basis_partial(size_t rank)
 {
-    return packed_size(rank + 1) + 1;
+    return packed_size(rank + 2) + 1;
 }
 
 static void mean_block(void *opaque, size_t block, size_t worker)
@@ -55,23 +60,94 @@ static void mean_block(void *opaque, size_t block, size_t worker)
     }
 }
 
-/* mean[0..r): of the factors; second: r x r dense, of the factors centred on `mean` when `centre`. */
-static void side_means(struct evidence *evidence, struct evidence_side *side, bool centre, double *mean,
-                       struct matrix second)
+/* Means over the lines with cells: of E[ff'] of the factors f (dense), of f, of E[effect f] and of E[effect^2]. */
+struct side_means {
+    double lines;
+    struct matrix second;
+    double *mean, *cross, effect;
+};
+
+static void side_means(struct evidence *evidence, struct evidence_side *side, struct side_means *out)
 {
     size_t rank = evidence->rank, width = evidence_basis_partial(rank);
     struct basis_job job = {evidence, side, NULL};
     double *sum = side->partial + side->half->blocks * width;
     team_run(evidence->context, side->half->blocks, mean_block, &job);
     team_sum(evidence->context, side->partial, side->half->blocks, width, sum);
-    double share = 1 / sum[width - 1];
-    for (size_t k = 0; k < rank; k++)
-        mean[k] = centre ? share * sum[packed_size(rank) + k] : 0;
-    for (size_t k = 0; k < rank; k++)
-        for (size_t l = 0; l <= k; l++) {
-            double entry = share * sum[packed_size(k) + l] - mean[k] * mean[l];
-            MATRIX_AT(second, k, l) = MATRIX_AT(second, l, k) = entry;
+    out->lines = sum[width - 1];
+    for (size_t k = 0; k + 1 < width; k++)
+        sum[k] /= out->lines;
+    for (size_t k = 0; k < rank; k++) {
+        out->mean[k] = sum[packed_size(rank) + k];
+        out->cross[k] = sum[packed_size(rank + 1) + k];
+        for (size_t l = 0; l <= k; l++)
+            MATRIX_AT(out->second, k, l) = MATRIX_AT(out->second, l, k) = sum[packed_size(k) + l];
+    }
+    out->effect = sum[packed_size(rank + 1) + rank + 1];
+}
+
+/* y = Sx for a packed symmetric S. */
+static void packed_apply(const double *s, size_t k, const double *x, double *y)
+{
+    memset(y, 0, k * sizeof *y);
+    for (size_t i = 0, at = 0; i < k; i++)
+        for (size_t j = 0; j <= i; j++, at++) {
+            y[i] += s[at] * x[j];
+            if (j < i)
+                y[j] += s[at] * x[i];
         }
+}
+
+/* x'Sx. */
+static double form(struct matrix s, const double *x)
+{
+    double sum = 0;
+    for (size_t k = 0; k < s.rows; k++)
+        for (size_t l = 0; l < s.columns; l++)
+            sum += x[k] * MATRIX_AT(s, k, l) * x[l];
+    return sum;
+}
+
+/* The shift s of this side's factors f, the other side's effect taking s.g. With A = mean E[ff'], mu = mean f, and
+   B, c, e the other side's means of E[gg'], E[effect g], E[effect^2], the prior's part of the bound is, up to
+   constants, -1/2 of lines log D + other lines log E,    D = 1 - 2 s'A^-1 mu + s'A^-1 s,    E = e + 2 s'c + s'Bs (D is
+   the ratio of det mean E[(f-s)(f-s)'] to det A). Both logarithms are majorised by their tangents, so that a step is a
+   small linear system and never raises the sum: (lines/D A^-1 + other lines/E B) s = lines/D A^-1 mu - other lines/E c
+   The means of this side follow; self->mean becomes the shift. */
+static void shift(struct evidence *evidence, struct side_means *self, const struct side_means *other)
+{
+    size_t rank = evidence->rank, packed = packed_size(rank);
+    double *inverse = evidence->basis_work, *system = inverse + packed;
+    double *pull = system + packed, *s = pull + rank, *image = s + rank;
+    double d = 1, e = other->effect;
+    for (size_t k = 0, at = 0; k < rank; k++)
+        for (size_t l = 0; l <= k; l++, at++)
+            system[at] = MATRIX_AT(self->second, k, l);
+    packed_cholesky(system, rank);
+    packed_inverse(system, rank, inverse);
+    packed_apply(inverse, rank, self->mean, pull);
+    memset(s, 0, rank * sizeof *s);
+    for (int step = 0; step < SHIFT_STEPS && e > 0 && d > 0; step++) {
+        double mine = self->lines / d, theirs = other->lines / e;
+        for (size_t k = 0, at = 0; k < rank; k++) {
+            for (size_t l = 0; l <= k; l++, at++)
+                system[at] = mine * inverse[at] + theirs * MATRIX_AT(other->second, k, l);
+            s[k] = mine * pull[k] - theirs * other->cross[k];
+        }
+        packed_cholesky(system, rank);
+        packed_solve(system, rank, s);
+        packed_apply(inverse, rank, s, image);
+        d = 1;
+        e = other->effect + form(other->second, s);
+        for (size_t k = 0; k < rank; k++) {
+            d += s[k] * (image[k] - 2 * pull[k]);
+            e += 2 * s[k] * other->cross[k];
+        }
+    }
+    for (size_t k = 0; k < rank; k++)
+        for (size_t l = 0; l < rank; l++)
+            MATRIX_AT(self->second, k, l) += s[k] * s[l] - s[k] * self->mean[l] - self->mean[k] * s[l];
+    memcpy(self->mean, s, rank * sizeof *s);
 }
 
 static void map_block(void *opaque, size_t block, size_t worker)
@@ -155,23 +231,45 @@ static fescue_status rotations(struct evidence *evidence, struct matrix a, struc
     return FESCUE_OK;
 }
 
+/* After the rows' shift mu, the columns' effect is b + mu.v: its products with v. The rows' effect does not change, but
+   u does. */
+static void cross_follow(struct side_means *rows, struct side_means *columns, double rows_effect_mean)
+{
+    for (size_t k = 0; k < rows->second.rows; k++) {
+        rows->cross[k] -= rows_effect_mean * rows->mean[k];
+        for (size_t l = 0; l < rows->second.rows; l++)
+            columns->cross[k] += MATRIX_AT(columns->second, k, l) * rows->mean[l];
+    }
+}
+
 fescue_status evidence_basis_change(struct evidence *evidence)
 {
     size_t rank = evidence->rank;
     struct evidence_side *rows = &evidence->rows, *columns = &evidence->columns;
-    double *mu = evidence->shift, *nu = mu + rank, *zero = nu + rank;
-    struct matrix *a = evidence->small, *b = a + 1, *to_rows = a + 2, *to_columns = a + 3;
-    bool to_b = columns->variance[rank] > 0, to_a = rows->variance[rank] > 0;
-    side_means(evidence, rows, to_b, mu, *a);
-    side_means(evidence, columns, to_a, nu, *b);
-    fescue_status status = rotations(evidence, *a, *b, *to_rows, *to_columns);
+    struct matrix *small = evidence->small;
+    double *at = evidence->shift, *zero = at + 4 * rank;
+    struct side_means u = {.second = small[0], .mean = at, .cross = at + rank};
+    struct side_means v = {.second = small[1], .mean = at + 2 * rank, .cross = at + 3 * rank};
+    side_means(evidence, rows, &u);
+    double a_mean = rows->partial[rows->half->blocks * evidence_basis_partial(rank) + packed_size(rank + 1) + rank];
+    side_means(evidence, columns, &v);
+    if (columns->variance[rank] > 0)
+        shift(evidence, &u, &v);
+    else
+        memset(u.mean, 0, rank * sizeof *u.mean);
+    cross_follow(&u, &v, a_mean);
+    if (rows->variance[rank] > 0)
+        shift(evidence, &v, &u);
+    else
+        memset(v.mean, 0, rank * sizeof *v.mean);
+    fescue_status status = rotations(evidence, u.second, v.second, small[2], small[3]);
     if (status != FESCUE_OK)
         return status;
     struct basis_job job = {evidence, rows, evidence->map};
-    map_build(*to_rows, mu, nu, mu, evidence->map); /* a <- a + nu.(u - mu) */
+    map_build(small[2], u.mean, v.mean, u.mean, evidence->map); /* a <- a + nu.(u - mu) */
     team_run(evidence->context, rows->half->blocks, map_block, &job);
     job.side = columns;
-    map_build(*to_columns, nu, mu, zero, evidence->map); /* b <- b + mu.v */
+    map_build(small[3], v.mean, u.mean, zero, evidence->map); /* b <- b + mu.v */
     team_run(evidence->context, columns->half->blocks, map_block, &job);
     const double *w = evidence->basis_work + packed_size(rank);
     for (size_t k = 0; k < rank; k++) {

@@ -19,6 +19,11 @@
 /* Precision that stands for "switched off": in units where cells have size one, no sum of cells comes near it. */
 #define PRECISION_OFF 1e30
 
+/* The prior variance of the effects follows MacKay's fixed point, mean of the squared posterior means over the share of
+   it that the data decide, which has the same solution as the mean of E a^2 and reaches it, above all at 0, in far
+   fewer rounds. Below this share it is the latter. */
+#define KNOWN_LEAST 0.01
+
 struct line_scratch {
     double *second, *target;            /* gathered */
     double *factor, *covariance, *mean; /* of the free part */
@@ -130,8 +135,8 @@ static void prior_block(void *opaque, size_t block, size_t worker)
     struct update_job *job = opaque;
     struct evidence_side *side = job->side;
     size_t rank = job->evidence->rank;
-    double *sum = side->partial + block * (rank + 2);
-    for (size_t k = 0; k < rank + 2; k++)
+    double *sum = side->partial + block * (rank + 3);
+    for (size_t k = 0; k < rank + 3; k++)
         sum[k] = 0;
     for (size_t line = side->half->block[block]; line < side->half->block[block + 1]; line++) {
         if (side->half->start[line] == side->half->start[line + 1])
@@ -140,7 +145,9 @@ static void prior_block(void *opaque, size_t block, size_t worker)
         for (size_t k = 0; k < rank; k++)
             sum[k] += moment[packed_size(k) + k];
         sum[rank] += moment[packed_size(rank + 1) + rank + 1];
-        sum[rank + 1] += 1;
+        double effect = moment[packed_size(rank + 1) + rank];
+        sum[rank + 1] += effect * effect;
+        sum[rank + 2] += 1;
     }
 }
 
@@ -150,9 +157,15 @@ void evidence_side_prior(struct evidence *evidence, struct evidence_side *side)
     size_t rank = evidence->rank;
     double *sum = evidence->scratch;
     team_run(evidence->context, side->half->blocks, prior_block, &job);
-    team_sum(evidence->context, side->partial, side->half->blocks, rank + 2, sum);
-    assert(sum[rank + 1] > 0);
-    for (size_t k = 0; k <= rank; k++)
+    team_sum(evidence->context, side->partial, side->half->blocks, rank + 3, sum);
+    double lines = sum[rank + 2];
+    assert(lines > 0);
+    for (size_t k = 0; k < rank; k++)
         if (side->variance[k] > 0)
-            side->variance[k] = sum[k] / sum[rank + 1];
+            side->variance[k] = sum[k] / lines;
+    double *effect = side->variance + rank;
+    if (*effect > 0) {
+        double known = 1 - (sum[rank] - sum[rank + 1]) / (lines * *effect);
+        *effect = known > KNOWN_LEAST ? sum[rank + 1] / lines / known : sum[rank] / lines;
+    }
 }

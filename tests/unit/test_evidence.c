@@ -1,0 +1,277 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The evidence fit: against the closed solution of the fully seen table, and by what it promises: components that are
+ * there are found, others pruned; nothing depends on threads, orientation or units.
+ */
+#include "solve/solve.h"
+#include "support_solve.h"
+
+static struct evidence_request request_of(size_t rank, enum fescue_offsets offsets)
+{
+    return (struct evidence_request){
+        .offsets = offsets, .rank = rank, .seed = 1, .rounds = 400, .change = 1e-9, .noise = EVIDENCE_NOISE_EQUAL};
+}
+
+static struct evidence_result learn(fescue_context *context, const struct cells *cells,
+                                    const struct evidence_request *request)
+{
+    struct evidence_result fit;
+    assert_status(context, evidence_learn(context, cells, request, &fit), FESCUE_OK);
+    return fit;
+}
+
+/* RMSE of the estimates over all cells against the truth. */
+static double error_of(const struct evidence_result *fit, const struct sowing *sowing)
+{
+    double square = 0;
+    for (uint32_t i = 0; i < sowing->rows; i++)
+        for (uint32_t j = 0; j < sowing->columns; j++) {
+            double e = model_estimate(&fit->model, i, j) - sowing_truth(sowing, i, j);
+            square += e * e;
+        }
+    return sqrt(square / ((double)sowing->rows * sowing->columns));
+}
+
+/* Every cell seen, no offsets: the empirical variational Bayes solution shrinks each singular value g of the table to
+       g/2 (1 - (m+n) s2/g^2 + sqrt((1 - (m+n) s2/g^2)^2 - 4 m n s2^2/g^4))
+   or to 0 (Nakajima, Sugiyama, Babacan, Tomioka 2013, "Global analytic solution of fully-observed variational Bayesian
+   matrix factorization", theorem 2, from memory). s2 is the one the fit learnt. */
+static void full_table_meets_the_closed_solution(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = {40, 25, 3, 1, 0.8, FESCUE_DOUBLE, 3};
+    struct plot plot = plot_sow(context, &sowing, 0);
+    struct evidence_request request = request_of(10, FESCUE_OFFSETS_NONE);
+    struct evidence_result fit = learn(context, &plot.cells, &request);
+    double *dense = dense_targets(&plot, NAN), spectrum[25], mn = 65;
+    struct low_rank truncated;
+    dense_truncate(context, dense, 40, 25, 3, &truncated, spectrum);
+    assert_int_equal(fit.model.low_rank.rank, 3);
+    for (size_t k = 0; k < 3; k++) {
+        double g = spectrum[k] * plot.problem.scale, x = fit.noise * fit.noise / (g * g);
+        double half = 1 - mn * x;
+        double shrunk = g / 2 * (half + sqrt(half * half - 4 * 1000 * x * x));
+        assert_close(fit.model.low_rank.spectrum[k], shrunk, 1e-5 * g);
+        assert_true(shrunk < 0.999 * g);
+    }
+    assert_close(fit.noise, 0.8, 0.06);
+    low_rank_free(context, &truncated);
+    free(dense);
+    evidence_result_free(context, &fit);
+    plot_free(&plot);
+}
+
+static void noise_alone_has_no_components(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = {60, 50, 0, 0.4, 1, FESCUE_DOUBLE, 5};
+    struct plot plot = plot_sow(context, &sowing, 0);
+    struct evidence_request request = request_of(8, FESCUE_OFFSETS_BOTH);
+    struct evidence_result fit = learn(context, &plot.cells, &request);
+    assert_int_equal(fit.model.low_rank.rank, 0);
+    assert_close(fit.noise, 1, 0.06);
+    evidence_result_free(context, &fit);
+    plot_free(&plot);
+}
+
+/* Near the bound sigma sqrt(r(m+n-r)/|seen|) of an oracle that knows the tangent space (Candes, Plan 2010). With some
+   four times as many cells as unknowns, nobody gets below about 1.15 times it. */
+static void few_cells_near_the_oracle(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = {200, 150, 4, 0.2, 0.2, FESCUE_DOUBLE, 6};
+    struct plot plot = plot_sow(context, &sowing, 0);
+    struct evidence_request request = request_of(12, FESCUE_OFFSETS_NONE);
+    struct evidence_result fit = learn(context, &plot.cells, &request);
+    double oracle = 0.2 * sqrt(4 * (200 + 150 - 4) / (double)plot.cells.count);
+    assert_int_equal(fit.model.low_rank.rank, 4);
+    assert_true(error_of(&fit, &sowing) < 1.25 * oracle);
+    evidence_result_free(context, &fit);
+    plot_free(&plot);
+}
+
+static void cells_turned(fescue_context *context, const struct cells *from, double a, double b, bool turn,
+                         struct cells *to)
+{
+    struct triplet_list list = {.precision = FESCUE_DOUBLE};
+    for (uint32_t i = 0; i < from->rows; i++)
+        for (uint64_t k = from->by_row.start[i]; k < from->by_row.start[i + 1]; k++) {
+            uint32_t j = from->by_row.across[k];
+            double x = a * cells_value(from, &from->by_row, k) + b;
+            assert_status(context, triplets_append(context, &list, turn ? j : i, turn ? i : j, x), FESCUE_OK);
+        }
+    assert_status(context,
+                  cells_build(context, turn ? from->columns : from->rows, turn ? from->rows : from->columns, &list, to),
+                  FESCUE_OK);
+    triplets_free(context, &list);
+}
+
+static void units_and_orientation_do_not_matter(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = {50, 40, 2, 0.5, 0.3, FESCUE_DOUBLE, 7};
+    struct plot plot = plot_sow(context, &sowing, 0);
+    struct cells scaled, turned;
+    cells_turned(context, &plot.cells, 1e6, 3e5, false, &scaled);
+    cells_turned(context, &plot.cells, 1, 0, true, &turned);
+    struct evidence_request request = request_of(5, FESCUE_OFFSETS_MEAN);
+    struct evidence_result plain = learn(context, &plot.cells, &request);
+    struct evidence_result big = learn(context, &scaled, &request), over = learn(context, &turned, &request);
+    for (uint32_t i = 0; i < 50; i += 7)
+        for (uint32_t j = 0; j < 40; j += 3) {
+            double x = model_estimate(&plain.model, i, j);
+            assert_close(model_estimate(&big.model, i, j), 1e6 * x + 3e5, 1);
+            assert_close(model_estimate(&over.model, j, i), x, 1e-4);
+        }
+    evidence_result_free(context, &plain);
+    evidence_result_free(context, &big);
+    evidence_result_free(context, &over);
+    cells_free(context, &scaled);
+    cells_free(context, &turned);
+    plot_free(&plot);
+}
+
+/* Columns with noise from 0.1 to 3: a fit that learns it beats one that takes all alike. */
+static void unequal_noise_is_learnt(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = {150, 30, 2, 0.5, 0, FESCUE_DOUBLE, 8};
+    struct cells clean, noisy;
+    struct triplet_list list = {.precision = FESCUE_DOUBLE};
+    sow_cells(context, &sowing, &clean);
+    for (uint32_t i = 0; i < 150; i++)
+        for (uint64_t k = clean.by_row.start[i]; k < clean.by_row.start[i + 1]; k++) {
+            uint32_t j = clean.by_row.across[k];
+            struct random_stream stream = random_open(9, RANDOM_TEST, i * 30 + j);
+            double sigma = 0.1 * pow(30, j / 29.0);
+            double x = cells_value(&clean, &clean.by_row, k) + sigma * random_normal(&stream);
+            assert_status(context, triplets_append(context, &list, i, j, x), FESCUE_OK);
+        }
+    assert_status(context, cells_build(context, 150, 30, &list, &noisy), FESCUE_OK);
+    struct evidence_request request = request_of(6, FESCUE_OFFSETS_NONE);
+    struct evidence_result equal = learn(context, &noisy, &request);
+    request.noise = EVIDENCE_NOISE_COLUMNS;
+    struct evidence_result own = learn(context, &noisy, &request);
+    assert_true(error_of(&own, &sowing) < 0.8 * error_of(&equal, &sowing));
+    evidence_result_free(context, &equal);
+    evidence_result_free(context, &own);
+    triplets_free(context, &list);
+    cells_free(context, &clean);
+    cells_free(context, &noisy);
+}
+
+static void same_bits_for_any_number_of_workers(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = {90, 70, 3, 0.3, 0.2, FESCUE_SINGLE, 10};
+    struct plot plot = plot_sow(context, &sowing, 0);
+    struct evidence_request request = request_of(6, FESCUE_OFFSETS_BOTH);
+    request.noise = EVIDENCE_NOISE_ROWS;
+    request.rounds = 40;
+    struct evidence_result first = {0};
+    const size_t workers[] = {1, 2, 7};
+    for (size_t w = 0; w < 3; w++) {
+        assert_status(context, team_resize(context, workers[w]), FESCUE_OK);
+        struct evidence_result fit = learn(context, &plot.cells, &request);
+        if (w == 0) {
+            first = fit;
+            continue;
+        }
+        assert_int_equal(fit.model.low_rank.rank, first.model.low_rank.rank);
+        assert_memory_equal(fit.model.offsets.row, first.model.offsets.row, 90 * sizeof(double));
+        assert_memory_equal(fit.model.low_rank.left.data, first.model.low_rank.left.data,
+                            90 * first.model.low_rank.left.stride * sizeof(double));
+        evidence_result_free(context, &fit);
+    }
+    evidence_result_free(context, &first);
+    plot_free(&plot);
+}
+
+static uint64_t calls_for(fescue_context *context, const struct cells *cells, uint64_t rounds)
+{
+    struct evidence_request request = request_of(4, FESCUE_OFFSETS_BOTH);
+    struct model start = {.rows = cells->rows, .columns = cells->columns};
+    struct evidence_result fit;
+    request.rounds = rounds;
+    request.change = 0;
+    assert_status(context, offsets_fit(context, cells, FESCUE_OFFSETS_BOTH, &start.offsets), FESCUE_OK);
+    assert_status(context, low_rank_create(context, cells->rows, cells->columns, 0, &start.low_rank), FESCUE_OK);
+    uint64_t before = fescue_memory_usage(context).calls;
+    assert_status(context, evidence_fit(context, cells, &request, &start, &fit), FESCUE_OK);
+    uint64_t calls = fescue_memory_usage(context).calls - before;
+    assert_int_equal(fit.fit.iterations, rounds);
+    evidence_result_free(context, &fit);
+    model_free(context, &start);
+    return calls;
+}
+
+static void rounds_allocate_nothing(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = {30, 20, 2, 0.5, 0.2, FESCUE_DOUBLE, 11};
+    struct plot plot = plot_sow(context, &sowing, 0);
+    assert_int_equal(calls_for(context, &plot.cells, 5), calls_for(context, &plot.cells, 50));
+    plot_free(&plot);
+}
+
+static void failing_memory_leaks_nothing(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = {20, 15, 2, 0.6, 0.2, FESCUE_DOUBLE, 12};
+    struct plot plot = plot_sow(context, &sowing, 0);
+    struct evidence_request request = request_of(3, FESCUE_OFFSETS_BOTH);
+    uint64_t alive = fescue_memory_usage(context).blocks;
+    request.rounds = 3;
+    for (uint64_t n = 1;; n++) {
+        struct evidence_result fit;
+        fault_plan(FAULT_TAKE, n, false, 0);
+        fescue_status status = evidence_learn(context, &plot.cells, &request, &fit);
+        bool met = fault_met();
+        fault_clear();
+        if (status == FESCUE_OK)
+            evidence_result_free(context, &fit);
+        else
+            assert_int_equal(status, FESCUE_NO_MEMORY);
+        assert_int_equal(fescue_memory_usage(context).blocks, alive);
+        fescue_failure_clear(context);
+        if (!met)
+            break;
+        assert_int_not_equal(status, FESCUE_OK);
+    }
+    plot_free(&plot);
+}
+
+/* Rows and columns in which nothing was seen get the other side's effect and no component. */
+static void lines_without_cells(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    double dense[12 * 8];
+    for (size_t i = 0; i < 12; i++)
+        for (size_t j = 0; j < 8; j++)
+            dense[i * 8 + j] = i == 3 || j == 5 || (i + j) % 5 == 0 ? NAN : (double)i + 2 * (double)j;
+    struct plot plot = plot_dense(context, 12, 8, dense, 0);
+    struct evidence_request request = request_of(2, FESCUE_OFFSETS_BOTH);
+    struct evidence_result fit = learn(context, &plot.cells, &request);
+    for (uint32_t j = 0; j < 8; j++)
+        assert_true(isfinite(model_estimate(&fit.model, 3, j)));
+    double step = model_estimate(&fit.model, 3, 7) - model_estimate(&fit.model, 3, 0);
+    assert_close(step, 14, 0.5);
+    evidence_result_free(context, &fit);
+    plot_free(&plot);
+}
+
+int main(void)
+{
+    const struct CMUnitTest tests[] = {
+        BENCH_TEST(full_table_meets_the_closed_solution),
+        BENCH_TEST(noise_alone_has_no_components),
+        BENCH_TEST(few_cells_near_the_oracle),
+        BENCH_TEST(units_and_orientation_do_not_matter),
+        BENCH_TEST(unequal_noise_is_learnt),
+        BENCH_TEST(same_bits_for_any_number_of_workers),
+        BENCH_TEST(rounds_allocate_nothing),
+        BENCH_TEST(failing_memory_leaks_nothing),
+        BENCH_TEST(lines_without_cells),
+    };
+    return cmocka_run_group_tests_name("evidence", tests, NULL, NULL);
+}
