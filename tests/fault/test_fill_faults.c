@@ -7,11 +7,51 @@
 
 #include <errno.h>
 #include <stdio.h>
+#include <stdlib.h>
 #include <string.h>
+
+/* ---- malloc ----------------------------------------------------------------------------------------------------- */
+
+/* The libraries underneath, CHOLMOD above all, take memory from malloc and not from a context. These take its place for
+   the whole process and hand on to glibc's own, unless the plan says to fail; sanitizers have one of their own that
+   must stay. */
+#if defined(__SANITIZE_ADDRESS__) || defined(__SANITIZE_THREAD__)
+#define HAS_OWN_MALLOC false
+#elif defined(__has_feature)
+#if __has_feature(address_sanitizer) || __has_feature(thread_sanitizer) || __has_feature(memory_sanitizer)
+#define HAS_OWN_MALLOC false
+#else
+#define HAS_OWN_MALLOC true
+#endif
+#else
+#define HAS_OWN_MALLOC true
+#endif
+
+#if HAS_OWN_MALLOC
+void *__libc_malloc(size_t size);
+void *__libc_calloc(size_t count, size_t size);
+void *__libc_realloc(void *block, size_t size);
+
+void *malloc(size_t size)
+{
+    return fault_due(FAULT_MALLOC) ? NULL : __libc_malloc(size);
+}
+
+void *calloc(size_t count, size_t size)
+{
+    return fault_due(FAULT_MALLOC) ? NULL : __libc_calloc(count, size);
+}
+
+void *realloc(void *block, size_t size)
+{
+    return fault_due(FAULT_MALLOC) ? NULL : __libc_realloc(block, size);
+}
+#endif
 
 /* ---- the job ---------------------------------------------------------------------------------------------------- */
 
-enum { FILL_ALL, FILL_OLDER, FILL_FEWER }; /* variants: a usual run; an older, other one; one with fewer files */
+/* Variants: a usual run; an older, other one; one with fewer files; one that chooses nothing and so is short. */
+enum { FILL_ALL, FILL_OLDER, FILL_FEWER, FILL_SHORT };
 
 static void options_put(fescue_context *context, const struct fault_job *job, struct fescue_options *options)
 {
@@ -20,6 +60,11 @@ static void options_put(fescue_context *context, const struct fault_job *job, st
     assert_status(context, fescue_options_set(context, options, "rank-most", "2"), FESCUE_OK);
     if (job->variant == FILL_OLDER)
         assert_status(context, fescue_options_set(context, options, "rank", "2"), FESCUE_OK);
+    if (job->variant == FILL_SHORT) {
+        assert_status(context, fescue_options_set(context, options, "rank", "1"), FESCUE_OK);
+        assert_status(context, fescue_options_set(context, options, "ridge", "0.1"), FESCUE_OK);
+        assert_status(context, fescue_options_set(context, options, "offsets", "both"), FESCUE_OK);
+    }
     if (job->variant == FILL_FEWER)
         assert_status(context, fescue_options_set(context, options, "write", "filled,cells"), FESCUE_OK);
 }
@@ -57,7 +102,7 @@ enum { ROWS = 12, COLUMNS = 8 };
 static struct ground {
     struct bench *bench;
     char input[PATH_SIZE], directory[PATH_SIZE];
-    struct snapshot all, older, fewer;
+    struct snapshot reference[FILL_SHORT + 1]; /* by variant */
     uint64_t takes_before_writing;
 } ground;
 
@@ -95,13 +140,13 @@ static struct fault_job fill_job_of(int variant, size_t threads)
                               .run = fill_job};
 }
 
-static void reference_take(int variant, struct snapshot *snapshot)
+static void reference_take(int variant)
 {
     struct fault_job job = fill_job_of(variant, 1);
     fault_clear();
     assert_int_equal(fault_job_run(&job), FESCUE_OK);
-    snapshot_take(ground.directory, snapshot);
-    assert_true(snapshot->count > 2);
+    snapshot_take(ground.directory, &ground.reference[variant]);
+    assert_true(ground.reference[variant].count > 2);
     folder_remove(ground.directory);
 }
 
@@ -111,29 +156,30 @@ static int ground_open(void **state)
     ground.bench = bench_of(state);
     table_put(path_in(ground.bench->folder, "levels.csv", ground.input));
     path_in(ground.bench->folder, "results", ground.directory);
-    reference_take(FILL_ALL, &ground.all);
-    reference_take(FILL_OLDER, &ground.older);
-    reference_take(FILL_FEWER, &ground.fewer);
-    ground.takes_before_writing = takes_before_writing;
-    assert_false(snapshots_match(&ground.all, &ground.older));
-    assert_true(ground.fewer.count < ground.older.count);
+    for (int variant = FILL_ALL; variant <= FILL_SHORT; variant++) {
+        reference_take(variant);
+        if (variant == FILL_FEWER)
+            ground.takes_before_writing = takes_before_writing;
+    }
+    assert_false(snapshots_match(&ground.reference[FILL_ALL], &ground.reference[FILL_OLDER]));
+    assert_true(ground.reference[FILL_FEWER].count < ground.reference[FILL_OLDER].count);
     return 0;
 }
 
 static int ground_close(void **state)
 {
-    snapshot_free(&ground.all);
-    snapshot_free(&ground.older);
-    snapshot_free(&ground.fewer);
+    for (int variant = FILL_ALL; variant <= FILL_SHORT; variant++)
+        snapshot_free(&ground.reference[variant]);
     return bench_teardown(state);
 }
 
 /* ---- the sweeps ------------------------------------------------------------------------------------------------- */
 
-static void fresh_sweep(const struct fault_case *fault, size_t threads, bool lasting)
+static void fresh_sweep(int variant, const struct fault_case *fault, size_t threads, bool lasting)
 {
-    const struct fault_job job = fill_job_of(FILL_ALL, threads);
-    const struct fault_sweep sweep = {.job = &job, .fault = fault, .lasting = lasting, .reference = &ground.all};
+    const struct fault_job job = fill_job_of(variant, threads);
+    const struct fault_sweep sweep = {
+        .job = &job, .fault = fault, .lasting = lasting, .reference = &ground.reference[variant]};
     uint64_t met = fault_sweep_run(&sweep);
     assert_true(met > 0);
     print_message("# %s: %llu met\n", fault_name(fault->kind), (unsigned long long)met);
@@ -142,8 +188,11 @@ static void fresh_sweep(const struct fault_case *fault, size_t threads, bool las
 static void over_older_sweep(const struct fault_case *fault, size_t threads, bool lasting)
 {
     const struct fault_job job = fill_job_of(FILL_FEWER, threads);
-    struct fault_sweep sweep = {
-        .job = &job, .fault = fault, .lasting = lasting, .older = &ground.older, .reference = &ground.fewer};
+    struct fault_sweep sweep = {.job = &job,
+                                .fault = fault,
+                                .lasting = lasting,
+                                .older = &ground.reference[FILL_OLDER],
+                                .reference = &ground.reference[FILL_FEWER]};
     if (fault->kind == FAULT_TAKE) /* those before writing began have no older run to hurt */
         sweep.first = ground.takes_before_writing;
     assert_true(fault_sweep_run(&sweep) > 0);
@@ -155,19 +204,35 @@ static const struct fault_case memory_fault = {FAULT_TAKE, 0, ALLOWED(FESCUE_NO_
 static void every_allocation_may_fail(void **state)
 {
     (void)state;
-    fresh_sweep(&memory_fault, 1, false);
+    fresh_sweep(FILL_ALL, &memory_fault, 1, false);
 }
 
 static void every_allocation_may_fail_with_two_threads(void **state)
 {
     (void)state;
-    fresh_sweep(&memory_fault, 2, true);
+    fresh_sweep(FILL_SHORT, &memory_fault, 2, true);
 }
 
 static void every_allocation_may_fail_over_an_older_run(void **state)
 {
     (void)state;
     over_older_sweep(&memory_fault, 1, false);
+}
+
+/* Every third call: those of CHOLMOD
+   are the same for each of the many systems that it solves. */
+static void malloc_may_fail(void **state)
+{
+    static const struct fault_case malloc_fault = {FAULT_MALLOC, ENOMEM,
+                                                   ALLOWED(FESCUE_NO_MEMORY) | ALLOWED(FESCUE_OK)};
+    const struct fault_job job = fill_job_of(FILL_SHORT, 1);
+    const struct fault_sweep sweep = {
+        .job = &job, .fault = &malloc_fault, .step = 3, .reference = &ground.reference[FILL_SHORT]};
+    (void)state;
+    if (HAS_OWN_MALLOC)
+        assert_true(fault_sweep_run(&sweep) > 100);
+    else
+        print_message("# not with a sanitizer\n");
 }
 
 static const struct fault_case file_faults[] = {
@@ -192,14 +257,14 @@ static void every_file_call_may_fail(void **state)
 {
     (void)state;
     for (size_t k = 0; k < FILE_FAULTS; k++)
-        fresh_sweep(&file_faults[k], 1, false);
+        fresh_sweep(FILL_SHORT, &file_faults[k], 1, false);
 }
 
 static void file_calls_may_go_on_failing(void **state)
 {
     (void)state;
     for (size_t k = 0; k < FILE_FAULTS; k++)
-        fresh_sweep(&file_faults[k], 2, true);
+        fresh_sweep(FILL_SHORT, &file_faults[k], 2, true);
 }
 
 static void every_file_call_may_fail_over_an_older_run(void **state)
@@ -217,6 +282,7 @@ int main(void)
         cmocka_unit_test(every_allocation_may_fail),
         cmocka_unit_test(every_allocation_may_fail_with_two_threads),
         cmocka_unit_test(every_allocation_may_fail_over_an_older_run),
+        cmocka_unit_test(malloc_may_fail),
         cmocka_unit_test(every_file_call_may_fail),
         cmocka_unit_test(file_calls_may_go_on_failing),
         cmocka_unit_test(every_file_call_may_fail_over_an_older_run),

@@ -29,8 +29,19 @@ static struct {
 static _Atomic uint64_t blocks_alive;
 
 static const char *const fault_names[FAULT_KINDS] = {
-    "nothing", "allocation", "open",   "read",           "write",      "flush",
-    "close",   "rename",     "unlink", "make directory", "short read", "short write",
+    [FAULT_NONE] = "nothing",
+    [FAULT_TAKE] = "allocation",
+    [FAULT_OPEN] = "open",
+    [FAULT_READ] = "read",
+    [FAULT_WRITE] = "write",
+    [FAULT_SYNC] = "flush",
+    [FAULT_CLOSE] = "close",
+    [FAULT_RENAME] = "rename",
+    [FAULT_UNLINK] = "unlink",
+    [FAULT_MAKE_DIRECTORY] = "make directory",
+    [FAULT_SHORT_READ] = "short read",
+    [FAULT_SHORT_WRITE] = "short write",
+    [FAULT_MALLOC] = "malloc",
 };
 
 const char *fault_name(enum fault_kind kind)
@@ -64,8 +75,7 @@ uint64_t fault_calls(enum fault_kind kind)
     return atomic_load(&plan.calls[kind]);
 }
 
-/* Counts a call; whether it is to fail. */
-static bool fault_due(enum fault_kind kind)
+bool fault_due(enum fault_kind kind)
 {
     uint64_t call = atomic_fetch_add(&plan.calls[kind], 1) + 1;
     bool due = kind == plan.kind && (call == plan.nth || (plan.lasting && call > plan.nth));

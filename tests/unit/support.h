@@ -64,6 +64,7 @@ enum fault_kind {
     FAULT_MAKE_DIRECTORY,
     FAULT_SHORT_READ,  /* half of the bytes, at least one: not an error */
     FAULT_SHORT_WRITE, /* the same */
+    FAULT_MALLOC,      /* malloc itself, whoever calls it: for a test that puts its own malloc in place */
     FAULT_KINDS
 };
 const char *fault_name(enum fault_kind kind);
@@ -74,6 +75,7 @@ void fault_plan(enum fault_kind kind, uint64_t nth, bool lasting, int error);
 void fault_clear(void); /* nothing fails, counting starts anew */
 bool fault_met(void);   /* whether the planned call came */
 uint64_t fault_calls(enum fault_kind kind);
+bool fault_due(enum fault_kind kind); /* counts a call of the kind; whether it is to fail */
 
 /* ---- files ------------------------------------------------------------------------------------------------------ */
 

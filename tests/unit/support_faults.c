@@ -143,12 +143,13 @@ static void complain(const struct fault_sweep *sweep, uint64_t nth, const char *
                  sweep->lasting ? " and all later ones" : "", complaint);
 }
 
-/* A run under the plan in force. *met: whether the fault came. */
-static const char *faulty_complaint(const struct fault_sweep *sweep, bool *met)
+/* A run whose nth call fails. *met: whether there was one. */
+static const char *faulty_complaint(const struct fault_sweep *sweep, uint64_t nth, bool *met)
 {
     static char text[128];
     size_t descriptors = descriptors_count();
     uint64_t blocks = test_blocks_alive();
+    fault_plan(sweep->fault->kind, nth, sweep->lasting, sweep->fault->error);
     fescue_status status = fault_job_run(sweep->job);
     *met = fault_met();
     fault_clear();
@@ -180,15 +181,15 @@ enum { CLEAN_ALWAYS = 100, CLEAN_EVERY = 10 };
 
 uint64_t fault_sweep_run(const struct fault_sweep *sweep)
 {
-    const uint64_t first = sweep->first > 0 ? sweep->first : 1;
-    for (uint64_t nth = first;; nth++) {
+    const uint64_t first = sweep->first > 0 ? sweep->first : 1, step = sweep->step > 0 ? sweep->step : 1;
+    for (uint64_t runs = 0;; runs++) {
+        uint64_t nth = first + runs * step;
         bool met;
         directory_prepare(sweep);
-        fault_plan(sweep->fault->kind, nth, sweep->lasting, sweep->fault->error);
-        complain(sweep, nth, faulty_complaint(sweep, &met));
-        if (!met || nth < first + CLEAN_ALWAYS || nth % CLEAN_EVERY == 0)
+        complain(sweep, nth, faulty_complaint(sweep, nth, &met));
+        if (!met || runs < CLEAN_ALWAYS || runs % CLEAN_EVERY == 0)
             complain(sweep, nth, clean_complaint(sweep));
         if (!met)
-            return nth - first;
+            return runs;
     }
 }

@@ -52,12 +52,12 @@ fescue_status fault_job_run(const struct fault_job *job);
 struct fault_sweep {
     const struct fault_job *job;
     const struct fault_case *fault;
-    uint64_t first;                   /* n of the first run; 0 is 1 */
+    uint64_t first, step;             /* n of the first run, and from one to the next; 0 is 1 */
     bool lasting;                     /* all calls from the nth on fail, not the nth alone */
     const struct snapshot *older;     /* put into the directory before each run; NULL: none */
     const struct snapshot *reference; /* what the job gives; NULL where it writes nothing */
 };
-/* Returns how many faults were met. */
+/* Returns how many runs met a fault. */
 uint64_t fault_sweep_run(const struct fault_sweep *sweep);
 
 #endif
