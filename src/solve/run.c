@@ -106,13 +106,6 @@ static fescue_status trace_add(struct run *run, size_t rank)
     return FESCUE_OK;
 }
 
-/* Gives back what was reserved for iterations that were not needed. */
-static void trace_close(struct run *run)
-{
-    if (run->capacity > run->result->trace_count)
-        (void)RESIZE(run->field.problem->context, run->result->trace_count, &run->result->trace);
-}
-
 /* ---- when to end ---------------------------------------------------------------------------------------------------
  */
 
@@ -272,7 +265,6 @@ fescue_status solve_run(struct problem *problem, const struct solver *solver, co
     result_fill(&run);
     status = ended;
 done:
-    trace_close(&run);
     if (state != NULL)
         solver->destroy(context, &state);
     sweep_destroy(&run.field.sweep);

@@ -172,10 +172,14 @@ static void lack_of_memory_leaves_nothing(void **state)
 int main(void)
 {
     const struct CMUnitTest tests[] = {
-        BENCH_TEST(the_targets_are_what_the_formula_says), BENCH_TEST(both_directions_hold_the_same),
-        BENCH_TEST(extreme_units_do_not_matter),           BENCH_TEST(a_table_of_zeros_keeps_scale_one),
-        BENCH_TEST(a_table_without_cells_is_a_problem_too), BENCH_TEST(rounding_is_that_of_the_observed),
-        BENCH_TEST(the_bits_do_not_depend_on_the_workers), BENCH_TEST(lack_of_memory_leaves_nothing),
+        BENCH_TEST(the_targets_are_what_the_formula_says),
+        BENCH_TEST(both_directions_hold_the_same),
+        BENCH_TEST(extreme_units_do_not_matter),
+        BENCH_TEST(a_table_of_zeros_keeps_scale_one),
+        BENCH_TEST(a_table_without_cells_is_a_problem_too),
+        BENCH_TEST(rounding_is_that_of_the_observed),
+        BENCH_TEST(the_bits_do_not_depend_on_the_workers),
+        BENCH_TEST(lack_of_memory_leaves_nothing),
     };
     return cmocka_run_group_tests(tests, NULL, NULL);
 }

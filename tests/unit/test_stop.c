@@ -124,8 +124,8 @@ static void exact_is_sixteen_roundings(void **state)
 {
     fescue_context *context = bench_of(state)->context;
     const struct solve_limits limits = {.iterations = 14, .gradient = 1e-9};
-    script = (struct script){.count = 15, .objective = falling, .gradient = (const double[]){1, 1, 1, 1, 1, 1, 1, 1, 1,
-                                                                                             1, 1, 1, 1, 1, 1}};
+    script = (struct script){
+        .count = 15, .objective = falling, .gradient = (const double[]){1, 1, 1, 1, 1, 1, 1, 1, 1, 1, 1, 1, 1, 1, 1}};
     script.square = 20 * pow(15.9 * DBL_EPSILON, 2);
     assert_ends(context, &limits, STOP_EXACT, 0);
     script.square = 20 * pow(16.1 * DBL_EPSILON, 2);
