@@ -49,7 +49,7 @@ check "apt-get's words" grep -q 'no such package' err
 mkdir home elsewhere
 chmod a-w home
 demo() {
-    cd elsewhere && HOME=$private/home BUILD=$BUILD "$root/scripts/demo-tables"
+    (cd elsewhere && HOME=$private/home BUILD=$BUILD exec "$root/scripts/demo-tables")
 }
 tried 0 demo
 for scene in fen-levels cider-panel; do
