@@ -19,8 +19,7 @@ static const uint64_t seed = 5;
 enum { MEMORY_LIMIT = 1 << 26, INPUT_MOST = 4096 };
 
 static const char *const good[] = {
-    "%%MatrixMarket matrix coordinate real general\n% wells\n4 5 6\n1 1 2.50\n4 5 -1e3\n2 2 +7\n3 1 0\n3 3 12\n1 5 "
-    ".5\n",
+    "%%MatrixMarket matrix coordinate real general\n% w\n4 5 5\n1 1 2.50\n4 5 -1e3\n2 2 +7\n3 1 0\n1 5 .5\n",
     "%%MatrixMarket matrix coordinate integer symmetric\n4 4 4\n1 1 2\n4 2 -1\n3 3 7\n4 3 0\n",
     "%%MatrixMarket matrix coordinate real skew-symmetric\r\n3 3 2\r\n2 1 1.5\r\n3 2 -2\r\n",
     "%%MatrixMarket matrix array real general\n3 2\n1\nnan\n3\n4e-2\nNaN\n6\n",
