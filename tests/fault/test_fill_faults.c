@@ -219,8 +219,7 @@ static void every_allocation_may_fail_over_an_older_run(void **state)
     over_older_sweep(&memory_fault, 1, false);
 }
 
-/* Every third call: those of CHOLMOD
-   are the same for each of the many systems that it solves. */
+/* Every third call: those of CHOLMOD are the same for each of the many systems that it solves. */
 static void malloc_may_fail(void **state)
 {
     static const struct fault_case malloc_fault = {FAULT_MALLOC, ENOMEM,
