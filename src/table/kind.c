@@ -7,16 +7,17 @@
  * first in this list, since a comma may also be a decimal sign. Where none does, the one that the first record has most
  * of; what is wrong is then found, with its line, when the text is read.
  *
- * Shape. Long text has three fields: row, column, value. Other numbers of fields are wide. Three fields may be either;
- * in this order decide
+ * Shape. Long text has three fields: row, column, value. Other numbers of fields are wide. Three fields may be either:
  *
- *     long   the second field of a record after the first is neither a number nor a hole
- *     long   the first field comes again (a wide table has every row once)
- *     wide   the first field of the first record is blank (the corner of a wide table often is)
- *     wide   the second field of a record is a hole, or has a decimal point (labels that are numbers seldom have)
- *     long   the third field of the first record is "value"
+ *     long   where the second field is text in every record after the first (no hole, no number): as wide text it would
+ *            be refused at its first value
+ *     else, what speaks for long text:   a first field that comes again (a wide table has every row once);
+ *                                        "value" as the third field of the first record
+ *           what speaks for wide text:   a blank corner; second fields that are holes; second fields with a decimal
+ * sign (labels that are numbers seldom have one)
  *
- * and if nothing does, the text is refused, with the option that tells: guessing wrong would be found by nobody.
+ * If nothing speaks for either, or something for both (a wide table with one hour twice, say), the text is refused,
+ * with the option that tells: guessing wrong would be found by nobody.
  */
 #include "table/table_internal.h"
 
@@ -138,8 +139,9 @@ static fescue_status separator_find(const struct stream *stream, struct sample s
 
 /* What speaks for one shape or the other. */
 struct evidence {
-    bool corner_blank, value_titled; /* in the first record */
-    bool second_is_text, second_is_hole, second_has_point, first_again;
+    bool corner_blank, value_titled;                                     /* in the first record */
+    bool second_is_value, second_is_hole, second_has_point, first_again; /* in any other */
+    size_t records;                                                      /* the others */
 };
 
 static bool field_is(const struct field *field, const char *word)
@@ -163,12 +165,13 @@ static fescue_status evidence_collect(fescue_context *context, struct sample *sa
         const struct field *first = &sample->field[0], *second = &sample->field[1];
         if (sample->count != 3)
             continue;
+        evidence->records++;
         uint32_t position, known = seen.labels.count;
         TRY(label_list_find_or_add(context, &seen, first->text, (size_t)(first->end - first->text), &position));
         evidence->first_again = evidence->first_again || position < known;
         bool number = is_number(second, sample->separator == ';');
         evidence->second_is_hole = evidence->second_is_hole || is_hole(second);
-        evidence->second_is_text = evidence->second_is_text || (!number && !is_hole(second));
+        evidence->second_is_value = evidence->second_is_value || number || is_hole(second);
         evidence->second_has_point = evidence->second_has_point || (number && has_point(second));
     }
 done:
@@ -178,12 +181,12 @@ done:
 
 static fescue_status shape_weigh(const struct stream *stream, const struct evidence *evidence, enum table_shape *shape)
 {
-    if (evidence->second_is_text || evidence->first_again)
+    bool for_long = evidence->first_again || evidence->value_titled;
+    bool for_wide = evidence->corner_blank || evidence->second_is_hole || evidence->second_has_point;
+    if (evidence->records > 0 && !evidence->second_is_value)
         *shape = SHAPE_LONG;
-    else if (evidence->corner_blank || evidence->second_is_hole || evidence->second_has_point)
-        *shape = SHAPE_WIDE;
-    else if (evidence->value_titled)
-        *shape = SHAPE_LONG;
+    else if (for_long != for_wide)
+        *shape = for_long ? SHAPE_LONG : SHAPE_WIDE;
     else
         return BAD_LINE_AT(stream, UINT64_C(1),
                            "three columns may be a wide table of two columns or a long one of row, "

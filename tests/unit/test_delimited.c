@@ -136,7 +136,8 @@ static void shapes_are_told_apart(void **state)
         const char *text;
         enum table_shape shape;
     } cases[] = {
-        {"user,item,score\n1,a,3\n2,b,4\n", SHAPE_LONG},  /* the second field is text */
+        {"user,item,score\n1,a,3\n2,b,4\n", SHAPE_LONG}, /* the second field is text */
+        {"user,item,score\n1,a,3\n2,7,4\n2,8,4\n", SHAPE_LONG},
         {"user,item,score\n1,7,3\n1,8,4\n", SHAPE_LONG},  /* a row comes again */
         {"1,7,3\n2,7,4\n2,8,4\n", SHAPE_LONG},            /* the same without a header */
         {",a,b\n1,7,3\n2,8,4\n", SHAPE_WIDE},             /* a blank corner */
@@ -157,6 +158,14 @@ static void shapes_are_told_apart(void **state)
     }
     text_refused(bench, "t,2020,2021\na,3,4\nb,5,6\n", NULL, unclear);
     text_refused(bench, "t,a,b\n1,3,4\n2,5,6\n", NULL, unclear);
+    /* evidence for both: an hour twice, a value that is none, a hole where the header says long */
+    text_refused(bench, "t,a,b\n1,7.5,3\n2,8,4\n2,9,5\n", NULL, unclear);
+    text_refused(bench, "t,a,b\n1,,3\n1,8,4\n", NULL, unclear);
+    text_refused(bench, "t,a,value\n1,0.5,3\n2,8,4\n", NULL, unclear);
+    text_refused(bench, "t,a,b\n1,7,3\n2,8x,4\n", NULL, unclear);
+    text_refused(
+        bench, "t,a,b\n1,7.5,3\n2,8x,4\n", NULL,
+        "line 3: the value '8x' is not a number; a number, or nothing, NA, NaN or null for a hole, was expected");
     text_check(bench, "t,a,b\n1,3,4\n2,5,6\n", &as_wide, SHAPE_WIDE, "1|a|3\n1|b|4\n2|a|5\n2|b|6\n");
     text_check(bench, "t,a,b\n1,3,4\n2,5,6\n", &as_long, SHAPE_LONG, "1|3|4\n2|5|6\n");
     text_check(bench, "t,2020,2021\na,3,4\n", &as_long, SHAPE_LONG, "t|2020|2021\na|3|4\n");
@@ -199,7 +208,6 @@ static void bad_lines_are_named(void **state)
         {"t,a,,c\n1,2,3,4\n", "line 1: the label of a column is empty"},
         {"t,a,b,c\n,2,3,4\n", "line 2: the label of a row is empty"},
         {"a,x,1\n,x,2\n", "line 2: the label of a row is empty"},
-        {"a,x,1\nb,,2\nb,x,1\n", "line 2: the label of a column is empty"},
         {"t,a,b,c\n1,2,3,4\n\"2,3,4,5\n3,4,5,6\n", "line 3: a quote is opened here and never closed"},
         {"t,a,b,c\n1,2,3\",4\n",
          "line 2: a quote was found inside a field that does not begin with one; a field with quotes in it is put in "
@@ -220,6 +228,7 @@ static void bad_lines_are_named(void **state)
     };
     for (size_t k = 0; k < sizeof cases / sizeof cases[0]; k++)
         text_refused(bench, cases[k].text, NULL, cases[k].sentence);
+    text_refused(bench, "a,x,1\nb,,2\nb,x,1\n", &as_long, "line 2: the label of a column is empty");
     static const char zero[] = "t,a,b,c\n1,2,3,4\n2,\0,3,4\n";
     bytes_refused(bench, zero, sizeof zero - 1, NULL, "line 3: a zero byte was found, where text was expected");
 }
