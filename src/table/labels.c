@@ -77,9 +77,10 @@ struct label_index {
     uint64_t key[2];
 };
 
+/* The text may hold a zero byte, where it was not looked for yet; then it is no label. */
 static bool text_is(const char *label, const char *text, size_t length)
 {
-    return strncmp(label, text, length) == 0 && label[length] == '\0';
+    return strncmp(label, text, length) == 0 && strlen(label) == length;
 }
 
 /* The slot that holds the text, or the free one where it belongs. */

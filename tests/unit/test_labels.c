@@ -61,6 +61,7 @@ static void an_index_finds_labels_and_nothing_else(void **state)
     assert_false(label_index_find(index, "\xc3", 1, &position));
     assert_false(label_index_find(index, "A", 1, &position));
     assert_false(label_index_find(index, "abc", 3, &position));
+    assert_false(label_index_find(index, "a\0b", 3, &position));
     label_index_destroy(context, &index);
     assert_null(index);
     label_index_destroy(context, &index);
