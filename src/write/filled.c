@@ -9,9 +9,12 @@
  *   wide text                    filled.csv or .tsv, same separator and corner   empty field
  *   long text                    filled.csv or .tsv, same titles, row by row     no line
  *
- * A table from memory has no text: its cells are written as the shortest decimals that read back the same.
+ * Estimates take the input's decimal sign. A table from memory has no text: its cells are written as the shortest
+ * decimals that read back the same.
  */
 #include "write/write.h"
+
+#include <string.h>
 
 struct filling {
     const struct run *run;
@@ -45,13 +48,24 @@ static struct content content_at(const struct filling *filling, uint32_t row, ui
     return (struct content){.is_blank = unseen.is_blank, .estimate = unseen.estimate};
 }
 
+/* The shortest decimal that reads back the same, with the decimal sign that the input has. */
+static void real_put(const struct filling *filling, double value, enum fescue_precision precision)
+{
+    char text[32];
+    size_t length = real_to_text(value, precision, text);
+    char *point = memchr(text, '.', length);
+    if (point != NULL && filling->table->look.decimal == ',')
+        *point = ',';
+    outfile_write(filling->file, text, length);
+}
+
 static void seen_put(const struct filling *filling, uint64_t k)
 {
     const struct cells *cells = &filling->table->cells;
     char buffer[32];
     size_t length;
     if (filling->table->texts == NULL) {
-        outfile_real(filling->file, cells_value(cells, &cells->by_row, k), cells->precision);
+        real_put(filling, cells_value(cells, &cells->by_row, k), cells->precision);
         return;
     }
     const char *text = texts_of(filling->table->texts, cells, k, buffer, &length);
@@ -65,7 +79,7 @@ static void content_put(const struct filling *filling, const struct content *con
     else if (content->is_blank)
         outfile_text(filling->file, blank);
     else
-        outfile_real(filling->file, content->estimate, FESCUE_DOUBLE);
+        real_put(filling, content->estimate, FESCUE_DOUBLE);
 }
 
 /* ---- Matrix Market ------------------------------------------------------------------------------------------------

@@ -66,6 +66,12 @@ static void wide_keeps_labels_and_separator(void **state)
                  "\" third\";3;14;+4\n");
 }
 
+static void decimal_commas_stay(void **state)
+{
+    filled_check(state, ";a;b\nr;1,50;\ns;;2,25\n", FESCUE_OFFSETS_BOTH, "filled.csv",
+                 ";a;b\nr;1,50;12\ns;12,5;2,25\n");
+}
+
 static void tabs_stay_tabs(void **state)
 {
     filled_check(state, "\ta\tb, c\nr1\t1\t\nr2\t\t0.10\n", FESCUE_OFFSETS_BOTH, "filled.tsv",
@@ -402,6 +408,7 @@ int main(void)
         BENCH_TEST(symmetric_is_written_in_full),
         BENCH_TEST(array_stays_array),
         BENCH_TEST(wide_keeps_labels_and_separator),
+        BENCH_TEST(decimal_commas_stay),
         BENCH_TEST(tabs_stay_tabs),
         BENCH_TEST(long_keeps_titles),
         BENCH_TEST(a_table_from_memory_becomes_an_array),
