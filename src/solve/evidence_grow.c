@@ -20,7 +20,7 @@
 /* A pruned component: standard deviation in the table over that of the noise. */
 #define COMPONENT_DEAD 1e-3
 /* Rounds between two growths, and the tolerance at which they end earlier. */
-#define GROW_ROUNDS 30
+#define GROW_ROUNDS 10
 #define GROW_CHANGE 1e-3
 
 /* How many components live. */
