@@ -133,16 +133,18 @@ static size_t candidate_size(const struct candidate *candidate)
     return candidate->point.rank + (candidate->offsets.kind == FESCUE_OFFSETS_BOTH);
 }
 
-/* The better of two kinds: the smaller unless the larger beats it. */
+/* The better of two kinds: the smaller unless the larger beats it, by two standard errors, because the kinds are tried
+   side by side at many ranks and one is passed by chance too often. */
 static bool is_second_better(const struct chooser *chooser, const struct candidate *first,
                              const struct candidate *second)
 {
-    if (first->is_exact != second->is_exact)
-        return second->is_exact;
+    static const double firmly = 2;
+    if (first->is_exact || second->is_exact)
+        return !first->is_exact || (second->is_exact && candidate_size(second) < candidate_size(first));
     if (candidate_size(second) > candidate_size(first))
-        return !first->is_exact && candidate_beats(chooser, second, first, 1);
+        return candidate_beats(chooser, second, first, firmly);
     if (candidate_size(second) < candidate_size(first))
-        return first->is_exact || !candidate_beats(chooser, first, second, 1);
+        return !candidate_beats(chooser, first, second, firmly);
     return second->errors.rmse < first->errors.rmse;
 }
 
@@ -193,8 +195,6 @@ done:
 }
 
 /* ---- the whole -------------------------------------------------------------------------------------------------- */
-
-enum { SETTLE_ROUNDS = 4 }; /* beyond which offsets and low-rank part hardly move any more */
 
 static fescue_status winner_finish(struct chooser *chooser, struct candidate *winner)
 {

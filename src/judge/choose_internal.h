@@ -79,6 +79,7 @@ fescue_status path_walk(struct chooser *chooser, const struct candidate *alone, 
                         struct candidate *chosen);
 /* To a given rank, without judging the ranks on the way. */
 fescue_status path_climb(struct chooser *chooser, const struct candidate *alone, size_t rank, struct candidate *chosen);
+enum { SETTLE_ROUNDS = 4 }; /* beyond which offsets and low-rank part hardly move any more */
 /* Offsets and low-rank part in turns, up to `rounds` times, while the hidden cells gain. */
 fescue_status path_settle(struct chooser *chooser, const struct solve_limits *limits, size_t rounds,
                           struct candidate *candidate);

@@ -91,6 +91,16 @@ done:
     return status;
 }
 
+/* Few cells for the unknowns: where growing is most likely to get stuck, and a fit is cheap for the rank it has. */
+static bool is_scarce(const struct chooser *chooser, size_t rank)
+{
+    static const double scarce = 4; /* at twice the cells of unknowns grown and spectral starts fail on different tables,
+                                       at five times neither does */
+    const struct cells *kept = chooser->kept;
+    double unknowns = (double)rank * ((double)kept->rows + (double)kept->columns - (double)rank);
+    return (double)kept->count < scarce * unknowns;
+}
+
 /* One rank more than the candidate has. */
 static fescue_status rank_step(struct chooser *chooser, double best_rmse, struct candidate *candidate)
 {
@@ -101,9 +111,9 @@ static fescue_status rank_step(struct chooser *chooser, double best_rmse, struct
     problem_set_ridge(&chooser->problem, ridge);
     TRY(start_grow(&chooser->problem, (uint64_t)chooser->options->seed, &candidate->point));
     TRY(candidate_fit(chooser, ridge, &limits, candidate));
-    TRY(path_settle(chooser, &limits, 1, candidate));
+    TRY(path_settle(chooser, &limits, SETTLE_ROUNDS, candidate));
     TRY(ridge_search(chooser, &limits, candidate));
-    if (candidate->errors.rmse >= best_rmse * (1 - gain_worth))
+    if (candidate->errors.rmse >= best_rmse * (1 - gain_worth) || is_scarce(chooser, candidate->point.rank))
         TRY(path_challenge(chooser, &limits, candidate));
     TRY(path_try_exact(chooser, candidate));
 done:
@@ -164,7 +174,7 @@ fescue_status path_climb(struct chooser *chooser, const struct candidate *alone,
         goto done;
     TRY(rank_climb(chooser, rank, chosen));
     TRY(candidate_fit(chooser, ridge_of(chooser, chosen), &limits, chosen));
-    TRY(path_settle(chooser, &limits, 1, chosen));
+    TRY(path_settle(chooser, &limits, SETTLE_ROUNDS, chosen));
     TRY(ridge_search(chooser, &limits, chosen));
     TRY(path_try_exact(chooser, chosen));
 done:
