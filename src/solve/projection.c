@@ -92,7 +92,7 @@ static double penalty_of(const struct projection *projection)
 
 void projection_evaluate(struct projection *p)
 {
-    sweep_solve(&p->field->sweep, p->by_long, p->basis, p->ridge, p->weights, NULL);
+    sweep_solve(&p->field->sweep, p->by_long, p->basis, p->ridge, p->weights, p->factors);
     sweep_residual(&p->field->sweep, p->by_short, p->basis, p->weights, p->gradient, p->residual, &p->square);
     p->objective = 0.5 * p->square + 0.5 * penalty_of(p);
     matrix_multiply(1, p->basis, true, p->gradient, false, 0, p->core);

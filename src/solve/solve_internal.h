@@ -36,7 +36,7 @@ struct solver {
     fescue_status (*point_write)(void *state, struct low_rank *point);
     void (*destroy)(fescue_context *context, void **state);
 };
-extern const struct solver fixed_rank_cg_solver, grassmann_cg_solver;
+extern const struct solver fixed_rank_cg_solver, grassmann_cg_solver, grassmann_trust_region_solver;
 
 /* Room for one value a seen cell, in the store's precision. The caller owns *values. */
 fescue_status values_create(struct field *field, void **values);
@@ -78,7 +78,8 @@ struct projection {
     struct matrix gradient; /* (I - U U') R W, short x rank */
     struct matrix core;     /* rank x rank: U'R W while projecting; any use in between */
     void *residual;         /* R in the order of by_short */
-    double *ridge;          /* rank numbers */
+    double *ridge;          /* rank numbers: the penalty is sum_k ridge_k |W_k|^2 */
+    double *factors;        /* long x packed_size(rank): Cholesky factors of the lines' systems; NULL: not wanted */
     double square, objective;
     struct matrix spare; /* long x rank, for writing the point */
     double *spectrum, *dense;
@@ -96,6 +97,54 @@ fescue_status projection_write(struct projection *projection, struct low_rank *p
    False when W is zero; factor and z are then left alone. */
 bool projection_metric(struct projection *projection, double *factor);
 void projection_precondition(const double *factor, struct matrix g, struct matrix z);
+
+/* ---- second order --------------------------------------------------------------------------------------------------
+ */
+
+/* The Hessian of the projected objective at the projection's basis, as an operator on tangents there. */
+struct hessian {
+    struct projection *projection;
+    bool exact;                   /* else Gauss and Newton's part, which is positive semidefinite */
+    struct matrix across, follow; /* long x rank: U's, then how the weights follow: -dW */
+    struct matrix product;        /* short x rank */
+    struct matrix damping;        /* rank x rank: of the ridge */
+    void *values, *zeros;         /* one a seen cell */
+    void *long_residual;          /* R in the order of the longer side */
+};
+void hessian_reserve(struct arena *arena, const struct field *field, size_t rank);
+/* Carves, and has the projection keep its factors from now on. */
+void hessian_carve(struct arena *arena, struct projection *projection, struct hessian *hessian);
+/* For the point where the projection was evaluated last. One pass when exact. */
+void hessian_start(struct hessian *hessian, bool exact);
+/* product = H[d] for a tangent d. Five passes, seven when exact. */
+void hessian_apply(struct hessian *hessian, struct matrix d, struct matrix product);
+
+/* One step of a trust region, shared by whatever goes down a projected objective with it. */
+struct trust {
+    struct projection *projection;
+    struct hessian hessian;
+    struct grassmann_work work;
+    struct matrix basis;                      /* where the step began */
+    struct matrix step, slope;                /* eta; g + H eta, short x rank */
+    struct matrix descent, direction, curved; /* z, d, H d */
+    double *metric;                           /* packed factor of W'W */
+    double radius;
+    bool slow;                    /* Gauss and Newton's part alone leaves too much of the gradient */
+    struct solve_measure measure; /* of where the projection stands; step: |eta| */
+};
+struct trust_rules {
+    double accuracy;     /* the inner gradient falls by this factor, or more when the outer one is small */
+    unsigned inner_most; /* products at most */
+    bool exact;          /* the exact Hessian where that pays */
+};
+void trust_reserve(struct arena *arena, const struct field *field, size_t rank);
+void trust_carve(struct arena *arena, struct projection *projection, struct trust *trust);
+/* Evaluates the projection where it stands and measures it. */
+void trust_start(struct trust *trust);
+/* First radius again, for a new objective. */
+void trust_widen(struct trust *trust);
+/* *moved = false when no step lowers the objective; the projection is then as it was. */
+fescue_status trust_step(struct trust *trust, const struct trust_rules *rules, bool *moved);
 
 /* ---- leading singular triplets -------------------------------------------------------------------------------------
  */
