@@ -6,9 +6,13 @@
 #     base table numeric manifold model solve judge write job        and cli, which sees fescue.h alone
 #
 # Looked at twice: in the includes, and, where objects are built, in who calls whom. The inside of a folder
-# (x_internal.h) stays in it; write may know judge's types, since it writes them, but calls nothing of it.
+# (x_internal.h) stays in it. write may know judge's types, since it writes them, and calls nothing of it.
+#
+# Calls that are let pass, by name, since they only read: from write, what judge's result says of a cell; the tables of
+# options, which fescue.h shows to everyone.
 . "$(dirname "$0")/common"
 
+readers='basis_word determined_basis fescue_option_table fescue_option_text'
 order='base table numeric manifold model solve judge write job cli'
 
 # Lines "FILE FOLDER INCLUDED".
@@ -61,8 +65,11 @@ symbols=$(for folder in $order; do
     done
 done)
 if [ -n "$symbols" ]; then
-    calls=$(printf '%s\n' "$symbols" | awk -v order="$order" '
-        BEGIN { n = split(order, name, " "); for (k = 1; k <= n; k++) place[name[k]] = k }
+    calls=$(printf '%s\n' "$symbols" | awk -v order="$order" -v readers="$readers" '
+        BEGIN {
+            n = split(order, name, " "); for (k = 1; k <= n; k++) place[name[k]] = k
+            n = split(readers, name, " "); for (k = 1; k <= n; k++) reads[name[k]] = 1
+        }
         $2 == "D" { home[$3] = $1 }
         $2 == "U" { wants[$1 " " $3] = 1 }
         END {
@@ -70,7 +77,7 @@ if [ -n "$symbols" ]; then
                 split(want, part, " ")
                 from = part[1]; to = home[part[2]]
                 if (to == "") continue
-                if (place[to] > place[from] || (from == "write" && to == "judge"))
+                if ((place[to] > place[from] || (from == "write" && to == "judge")) && !(part[2] in reads))
                     print from " calls " part[2] " of " to
                 if (from == "cli" && to != "cli" && part[2] !~ /^fescue_/)
                     print from " calls " part[2] " of " to ", which is not public"
