@@ -32,6 +32,7 @@ object = $(patsubst %.c,$(BUILD)/%.o,$(1))
 LIBRARY = $(BUILD)/libfescue.a
 PROGRAM = $(BUILD)/fescue
 SUPPORT = $(BUILD)/tests/unit/libsupport.a
+BENCHES = $(patsubst tests/%.c,$(BUILD)/tests/%,$(BENCH_SOURCES))
 UNIT_TESTS = $(patsubst tests/%.c,$(BUILD)/tests/%,$(UNIT_SOURCES) $(FAULT_SOURCES))
 
 all: $(PROGRAM) $(LIBRARY)
@@ -55,6 +56,9 @@ $(SUPPORT): $(call object,$(SUPPORT_SOURCES))
 $(UNIT_TESTS): $(BUILD)/tests/%: $(BUILD)/tests/%.o $(SUPPORT) $(LIBRARY)
 	$(CC) $(CFLAGS) $^ -lcmocka $(LIBS) -o $@
 
+$(BENCHES): $(BUILD)/tests/bench/%: $(BUILD)/tests/bench/%.o $(LIBRARY)
+	$(CC) $(CFLAGS) $^ $(LIBS) -o $@
+
 tests: $(UNIT_TESTS)
 
 demo: all
@@ -65,6 +69,9 @@ check: all tests
 
 check-long: all tests
 	PYTHON=$(PYTHON) BUILD=$(BUILD) CC="$(CC)" tests/run long
+
+bench: $(BENCHES)
+	for bench in $(BENCHES); do $$bench || exit; done
 
 format:
 	clang-format -i $(shell git ls-files --cached --others --exclude-standard '*.c' '*.h')
@@ -79,6 +86,6 @@ install: all
 clean:
 	rm -rf $(BUILD)
 
-.PHONY: all tests demo check check-long format install clean
+.PHONY: all tests demo check check-long bench format install clean
 .SECONDARY:
 -include $(shell find $(BUILD) -name '*.d' 2>/dev/null)
