@@ -175,8 +175,6 @@ static void a_step_keeps_to_its_region(void **state)
         assert_status(context, trust_step(&bed.trust, &rules, &moved), FESCUE_OK);
         matrix_multiply(1, bed.trust.step, false, metric, false, 0, bed.image);
         double length = sqrt(matrix_dot(bed.trust.step, bed.image));
-        if (getenv("SHOW"))
-            print_error("%d rad %g len %g f %.15g g %g\n", k, radius, length, p->objective, bed.trust.measure.gradient);
         assert_true(length <= radius * (1 + 1e-9));
         assert_true(!moved || p->objective <= before * (1 + 1e-12));
     }
