@@ -64,8 +64,8 @@ static void model_lines(struct summary *summary)
         text_add(text, ", ridge %s (%s)", real_to_words(choice->ridge, 3, ridge), by_whom(chooses_ridge));
     text_add(text, "\n");
     if (choice->path_count > 1)
-        text_add(text, "           out of %" PRIu64 " that were tried on %" PRIu64 " hidden cells\n",
-                 choice->path_count, choice->errors.count);
+        text_add(text, "           out of %" PRIu64 " fits tried on %" PRIu64 " hidden cells\n", choice->path_count,
+                 choice->errors.count);
     if (summary->fill->is_search_cut)
         text_add(text, "           WARNING: the time limit ended the search; allow more, or give a --rank\n");
     else if (choice->rank == 0 && chooses_rank && choice->errors.count > 0)
