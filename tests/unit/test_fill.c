@@ -2,6 +2,7 @@
  *
  * The main job through the public header: from cells in memory to estimates and files.
  */
+#include "support_locale.h"
 #include "support_table.h"
 
 #include <errno.h>
@@ -455,9 +456,9 @@ static void a_full_disk_changes_nothing(void **state)
 
 static const char *const results[] = {"filled.mtx",      "cells.csv",          "left.mtx",  "spectrum.mtx", "right.mtx",
                                       "row-offsets.mtx", "column-offsets.mtx", "trace.csv", "run.json"};
-enum { RESULTS = sizeof results / sizeof results[0] };
+enum { SUMMARY = sizeof results / sizeof results[0], RESULTS };
 
-/* All results with `threads` workers, run.json without its timing; from malloc. */
+/* All results with `threads` workers, run.json without its timing, and the summary; from malloc. */
 static void results_make(void **state, const struct sowing *sowing, int threads, char *bytes[RESULTS])
 {
     fescue_context *context = bench_of(state)->context;
@@ -470,11 +471,12 @@ static void results_make(void **state, const struct sowing *sowing, int threads,
     snprintf(name, sizeof name, "out%d", threads);
     path_in(bench_of(state)->folder, name, directory);
     assert_status(context, fescue_fill_write(fill, directory), FESCUE_OK);
-    for (size_t k = 0; k < RESULTS; k++) {
+    for (size_t k = 0; k < SUMMARY; k++) {
         bytes[k] = file_get(path_in(directory, results[k], path), &count);
         assert_non_null(bytes[k]);
     }
-    char *timing = strstr(bytes[RESULTS - 1], "\"timing\"");
+    bytes[SUMMARY] = strdup(fescue_fill_text(fill));
+    char *timing = strstr(bytes[SUMMARY - 1], "\"timing\"");
     assert_non_null(timing);
     *timing = '\0';
     fescue_fill_destroy(&fill);
@@ -494,10 +496,27 @@ static void threads_do_not_matter(void **state)
         for (size_t k = 0; k < RESULTS; k++)
             for (size_t t = 1; t < 3; t++)
                 if (strcmp(bytes[0][k], bytes[t][k]) != 0)
-                    fail_msg("%s differs with %d threads", results[k], threads[t]);
+                    fail_msg("%s differs with %d threads", k == SUMMARY ? "the summary" : results[k], threads[t]);
         for (size_t t = 0; t < 3; t++)
             for (size_t k = 0; k < RESULTS; k++)
                 free(bytes[t][k]);
+    }
+}
+
+/* A decimal comma around us changes no byte. */
+static void the_locale_does_not_matter(void **state)
+{
+    char *plain[RESULTS], *comma[RESULTS];
+    locale_t locale = comma_locale(bench_of(state)->folder);
+    results_make(state, &noisy, 1, plain);
+    locale_t around = uselocale(locale);
+    results_make(state, &noisy, 1, comma);
+    uselocale(around);
+    freelocale(locale);
+    for (size_t k = 0; k < RESULTS; k++) {
+        assert_string_equal(plain[k], comma[k]);
+        free(plain[k]);
+        free(comma[k]);
     }
 }
 
@@ -629,6 +648,7 @@ int main(void)
         BENCH_TEST(a_second_run_leaves_nothing_of_the_first),
         BENCH_TEST(a_full_disk_changes_nothing),
         BENCH_TEST(threads_do_not_matter),
+        BENCH_TEST(the_locale_does_not_matter),
         BENCH_TEST(a_cancelled_job_leaves_nothing),
         BENCH_TEST(a_job_may_be_stopped_anywhere),
         BENCH_TEST(a_short_time_limit_still_gives_a_result),
