@@ -68,12 +68,11 @@ size_t sweep_width(const struct sweep *sweep, size_t rank)
     return (rank + lanes - 1) / lanes * lanes;
 }
 
-/* Doubles that one worker needs: rows and values of a chunk (doubles also where they are floats), two squares, a side.
- */
+/* Doubles that one worker needs: a chunk's rows (doubles also where they are floats), two squares, three vectors. */
 static size_t worker_room(const struct sweep *sweep)
 {
     size_t width = sweep_width(sweep, sweep->rank_most);
-    return (SWEEP_CHUNK + 2 * width + 1) * width + SWEEP_CHUNK;
+    return (SWEEP_CHUNK + 2 * width + 3) * width;
 }
 
 struct sweep_room sweep_room_of(const struct sweep *sweep, size_t worker)
@@ -81,11 +80,13 @@ struct sweep_room sweep_room_of(const struct sweep *sweep, size_t worker)
     size_t width = sweep_width(sweep, sweep->rank_most);
     assert(worker < sweep->workers);
     double *at = sweep->room + worker * worker_room(sweep);
-    return (struct sweep_room){.rows = at,
-                               .values = at + SWEEP_CHUNK * width,
-                               .gram = at + SWEEP_CHUNK * width + SWEEP_CHUNK,
-                               .factor = at + SWEEP_CHUNK * width + SWEEP_CHUNK + width * width,
-                               .side = at + SWEEP_CHUNK * width + SWEEP_CHUNK + 2 * width * width};
+    struct sweep_room room = {.rows = at};
+    room.gram = at + SWEEP_CHUNK * width;
+    room.factor = room.gram + width * width;
+    room.side = room.factor + width * width;
+    room.solution = room.side + width;
+    room.inverse = room.solution + width;
+    return room;
 }
 
 fescue_status sweep_create(fescue_context *context, const struct cells *cells, size_t rank_most, struct sweep *sweep)
@@ -266,20 +267,30 @@ void sweep_solve(struct sweep *sweep, const struct half *half, struct matrix rig
     sweep_run(&job, sweep->kernels->solve, sums);
 }
 
-void sweep_line_solve(const struct sweep_job *job, struct sweep_room *room, uint32_t line)
+void sweep_line_store(const struct sweep_job *job, const struct sweep_room *room, uint32_t line)
+{
+    size_t rank = job->rank;
+    memcpy(&MATRIX_AT(job->product, line, 0), room->side, rank * sizeof *room->side);
+    if (job->factors == NULL)
+        return;
+    double *packed = job->factors + line * packed_size(rank);
+    for (size_t i = 0; i < rank; i++)
+        for (size_t j = 0; j <= i; j++)
+            *packed++ = room->factor[j * job->width + i];
+}
+
+void sweep_line_solve(const struct sweep_job *job, const struct sweep_room *room, uint32_t line)
 {
     size_t rank = job->rank;
     double *packed = room->factor, *weight = &MATRIX_AT(job->product, line, 0);
-    for (size_t i = 0; i < rank; i++) {
-        double *row = packed + i * (i + 1) / 2;
-        for (size_t j = 0; j <= i; j++)
-            row[j] = room->gram[j * job->width + i];
-        if (job->ridge != NULL)
-            row[i] += job->ridge[i];
-    }
-    packed_cholesky(packed, rank);
-    packed_solve(packed, rank, room->side);
     bool empty = job->half->start[line] == job->half->start[line + 1];
+    for (size_t i = 0; i < rank; i++)
+        for (size_t j = 0; j <= i; j++)
+            packed[i * (i + 1) / 2 + j] = room->gram[j * job->width + i];
+    if (!empty || job->factors != NULL)
+        packed_cholesky(packed, rank);
+    if (!empty)
+        packed_solve(packed, rank, room->side);
     for (size_t j = 0; j < rank; j++)
         weight[j] = empty ? 0 : room->side[j];
     if (job->factors != NULL)

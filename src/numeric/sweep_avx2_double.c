@@ -16,6 +16,9 @@
 #define REAL double
 #define LANES 4
 #define MADD(a, b, c) _mm256_fmadd_pd(a, b, c)
+#define MADD_WIDE(a, b, c) _mm256_fmadd_pd(a, b, c)
+#define WIDES 1
+#define COMMON_REGISTERS(X) X(2) X(4) X(6) X(8)
 #define SWEEP_KERNEL sweep_avx2_double
 #include "numeric/sweep_kernel.h"
 

@@ -16,6 +16,9 @@
 #define REAL double
 #define LANES 8
 #define MADD(a, b, c) _mm512_fmadd_pd(a, b, c)
+#define MADD_WIDE(a, b, c) _mm512_fmadd_pd(a, b, c)
+#define WIDES 1
+#define COMMON_REGISTERS(X) X(1) X(2) X(3) X(4)
 #define SWEEP_KERNEL sweep_avx512_double
 #include "numeric/sweep_kernel.h"
 

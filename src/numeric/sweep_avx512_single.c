@@ -16,6 +16,9 @@
 #define REAL float
 #define LANES 16
 #define MADD(a, b, c) _mm512_fmadd_ps(a, b, c)
+#define MADD_WIDE(a, b, c) _mm512_fmadd_pd(a, b, c)
+#define WIDES 2
+#define COMMON_REGISTERS(X) X(1) X(2)
 #define SWEEP_KERNEL sweep_avx512_single
 #include "numeric/sweep_kernel.h"
 

@@ -53,17 +53,17 @@ struct sweep_rows sweep_rows_of(struct sweep *sweep, struct matrix matrix, size_
 /* Width of the job's rows for factors of this rank. */
 size_t sweep_width(const struct sweep *sweep, size_t rank);
 
-/* One worker's room in sweep_solve: the gathered rows and values, the normal equations, a copy of them, the right-hand
-   side. */
+/* One worker's room in sweep_solve. Squares are width x width. */
 struct sweep_room {
-    void *rows;   /* SWEEP_CHUNK x width */
-    void *values; /* SWEEP_CHUNK */
-    double *gram, *factor, *side;
+    void *rows;                        /* SWEEP_CHUNK x width, gathered */
+    double *gram, *factor;             /* upper triangles of G and U, or the packed factor */
+    double *side, *solution, *inverse; /* width each */
 };
 struct sweep_room sweep_room_of(const struct sweep *sweep, size_t worker);
 
-/* The rest of a line's solution, the same for all kernels: `gram` (upper triangle, rows `width` apart, ridge not yet
-   added) and `side` become the weights, in `side`; packed factors as sweep_solve wants them. */
-void sweep_line_solve(const struct sweep_job *job, struct sweep_room *room, uint32_t line);
+/* A line whose U is in factor and whose weights are in side: writes both where they belong. */
+void sweep_line_store(const struct sweep_job *job, const struct sweep_room *room, uint32_t line);
+/* A line that has no cells, or whose factor broke down: from gram on by the rules of packed_cholesky. */
+void sweep_line_solve(const struct sweep_job *job, const struct sweep_room *room, uint32_t line);
 
 #endif

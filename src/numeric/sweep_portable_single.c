@@ -7,5 +7,8 @@
 #define REAL float
 #define LANES 4
 #define MADD(a, b, c) ((a) * (b) + (c))
+#define MADD_WIDE(a, b, c) ((a) * (b) + (c))
+#define WIDES 2
+#define COMMON_REGISTERS(X) X(4)
 #define SWEEP_KERNEL sweep_portable_single
 #include "numeric/sweep_kernel.h"
