@@ -105,12 +105,23 @@ static struct low_rank point_in_units(struct chooser *chooser, const struct cand
     return point;
 }
 
+/* Whether the hidden cells are met to rounding: four fifths of them, since a few may lie in lines that kept too few
+   cells to determine them, and their errors tell nothing. */
+static bool is_met(const struct chooser *chooser)
+{
+    /* Numbers are held to 2^-53 or 2^-24, and a few hundred roundings go into an estimate. */
+    static const double double_rounding = 1e-7, single_rounding = 1e-5, share = 0.8;
+    bool is_single = chooser->kept->precision == FESCUE_SINGLE;
+    double rounding = (is_single ? single_rounding : double_rounding) * chooser->problem.scale;
+    uint64_t met = 0, count = chooser->hidden->count;
+    for (uint64_t k = 0; k < count; k++)
+        met += fabs(chooser->residuals[k]) <= rounding;
+    return count > 0 && (double)met >= share * (double)count;
+}
+
 fescue_status candidate_measure(struct chooser *chooser, struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
-    /* Numbers are held to 2^-53 or 2^-24, and a few hundred roundings go into an estimate. */
-    static const double double_rounding = 1e-7, single_rounding = 1e-5;
-    bool is_single = chooser->kept->precision == FESCUE_SINGLE;
     TRY(chooser_take_up(chooser, candidate));
     struct model model = {.rows = chooser->kept->rows,
                           .columns = chooser->kept->columns,
@@ -121,9 +132,7 @@ fescue_status candidate_measure(struct chooser *chooser, struct candidate *candi
     groups_sum(chooser, candidate->square);
     if (!isfinite(candidate->errors.rmse))
         candidate->errors.rmse = INFINITY;
-    candidate->is_exact =
-        candidate->errors.count > 0 &&
-        candidate->errors.rmse <= (is_single ? single_rounding : double_rounding) * chooser->problem.scale;
+    candidate->is_exact = is_met(chooser);
 done:
     return status;
 }

@@ -37,7 +37,7 @@ struct candidate {
     struct errors errors;  /* on the hidden cells, table units; infinite when the fit blew up */
     double *square;        /* sum of squared errors of each group of hidden cells */
     struct low_rank point; /* in the problem's units */
-    bool is_exact;         /* the hidden cells are met to rounding */
+    bool is_exact;         /* the hidden cells, nearly all, are met to rounding */
 };
 /* The offsets of the kind alone, fitted and measured. */
 fescue_status candidate_create(struct chooser *chooser, enum fescue_offsets kind, struct candidate *candidate);

@@ -9,9 +9,9 @@
  * the spectral start before it is believed.
  *
  * A larger rank takes over when it beats the chosen one by a standard error of the paired differences of squared errors
- * (two, over rank 0: that a table has low-rank structure at all asks for firmer ground, and a strong ridge makes fits
- * that differ from nothing so little that one error is passed by chance too often). The path ends when no rank has been
- * best for 3 + r/4 ranks, r the best so far.
+ * (over rank 0 two, unless the gain is plain, a tenth or more: that a table has low-rank structure at all asks for
+ * firmer ground, and a strong ridge makes fits that differ from nothing so little that one error is passed by chance
+ * too often). The path ends when no rank has been best for 3 + r/4 ranks, r the best so far.
  *
  * Cost: a few fits of at most 40 loose iterations a rank.
  */
@@ -25,8 +25,11 @@ static const double gain_worth = 1e-4;
 static bool is_larger_better(const struct chooser *chooser, const struct candidate *large,
                              const struct candidate *small)
 {
-    static const double over_nothing = 2, over_less = 1;
-    return candidate_beats(chooser, large, small, small->point.rank == 0 ? over_nothing : over_less);
+    static const double over_less = 1, over_nothing = 2, plain_gain = 0.1;
+    if (small->point.rank > 0)
+        return candidate_beats(chooser, large, small, over_less);
+    bool is_plain = large->errors.rmse < (1 - plain_gain) * small->errors.rmse;
+    return candidate_beats(chooser, large, small, is_plain ? over_less : over_nothing);
 }
 
 fescue_status path_challenge(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate)
@@ -69,7 +72,7 @@ fescue_status path_try_exact(struct chooser *chooser, struct candidate *candidat
 {
     fescue_status status = FESCUE_OK;
     /* Errors above this share of the signal are noise, or too far from a solution to tell. */
-    static const double suspicion = 0.02;
+    static const double suspicion = 0.1;
     bool ridge_allows = chooser->options->ridge == FESCUE_AUTO || chooser->options->ridge == 0;
     struct candidate tight = {0};
     if (!ridge_allows || candidate->point.rank == 0 || candidate->is_exact || chooser_is_late(chooser) ||
@@ -94,8 +97,8 @@ done:
 /* Few cells for the unknowns: where growing is most likely to get stuck, and a fit is cheap for the rank it has. */
 static bool is_scarce(const struct chooser *chooser, size_t rank)
 {
-    static const double scarce = 4; /* at twice the cells of unknowns grown and spectral starts fail on different tables,
-                                       at five times neither does */
+    static const double scarce = 4; /* at twice the cells of unknowns grown and spectral starts fail on different
+                                       tables, at five times neither does */
     const struct cells *kept = chooser->kept;
     double unknowns = (double)rank * ((double)kept->rows + (double)kept->columns - (double)rank);
     return (double)kept->count < scarce * unknowns;

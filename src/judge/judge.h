@@ -51,7 +51,7 @@ struct choice {
     struct errors errors, offsets_errors; /* on the hidden cells: of the choice, and of its offsets alone */
     double offsets_only_rank0_rmse;       /* of the best offsets alone */
     double halfwidth;                     /* of the interval at the asked level; NAN when nothing was hidden */
-    bool noiseless;                       /* the hidden cells are met to rounding */
+    bool noiseless;                       /* the hidden cells, nearly all, are met to rounding */
     bool own_holdout;                     /* nothing was hidden by the caller, so a tenth was, for the choice alone */
     struct low_rank start;                /* owned; the chosen low-rank part in the table's units. The fit on all cells
                                              takes its offsets by refit_offsets with it, as the choice did, and starts
