@@ -20,8 +20,10 @@
 /* Choosing fits many ranks, the fit on all cells one, from a point that is nearly there. */
 static const double choosing_share = 0.7;
 
-/* The solver by name; auto is the first of the list, which solver.c orders by preference. */
-static const struct solver *solver_choose(fescue_context *context, const struct fescue_options *options)
+/* The solver by name, and who learns rank and ridge. For auto and evidence the solver, for where one is needed, is the
+   first of the list, which solver.c orders by preference. */
+static fescue_status solver_choose(fescue_context *context, const struct fescue_options *options,
+                                   struct choose_request *request)
 {
     size_t count;
     const struct fescue_option *option = fescue_option_table(&count);
@@ -29,24 +31,26 @@ static const struct solver *solver_choose(fescue_context *context, const struct 
     while (strcmp(option->name, "solver") != 0)
         option++;
     fescue_option_text(option, options, name, sizeof name);
-    const struct solver *solver = strcmp(name, "auto") == 0 ? solver_at(0) : solver_find(name);
-    assert(solver != NULL);
-    log_tell(context, "solver %s: %s", solver_name(solver), solver_summary(solver));
-    return solver;
+    bool is_auto = strcmp(name, "auto") == 0, learns = strcmp(name, "evidence") == 0;
+    if (learns && options->ridge != (double)FESCUE_AUTO)
+        return FAIL(context, FESCUE_USAGE, "--solver evidence learns the ridge itself: leave --ridge at auto");
+    request->way = is_auto ? CHOOSE_AUTO : learns ? CHOOSE_LEARN : CHOOSE_PATH;
+    request->solver = is_auto || learns ? solver_at(0) : solver_find(name);
+    assert(request->solver != NULL);
+    return FESCUE_OK;
 }
 
-static fescue_status fill_choose(fescue_fill *fill, const struct solver *solver)
+static fescue_status fill_choose(fescue_fill *fill, struct choose_request *request)
 {
     const struct cells *cells = &fill->table->cells;
     struct fescue_options *options = &fill->options;
-    struct choose_request request = {.options = options, .solver = solver};
     struct holdout holdout = {0};
     fescue_status status;
     if (options->time_limit > 0)
-        request.deadline = fill->wall + choosing_share * options->time_limit;
+        request->deadline = fill->wall + choosing_share * options->time_limit;
     TRY(holdout_split(fill->context, cells, options->holdout, (uint64_t)options->seed, &holdout));
-    TRY(choose_run(fill->context, &holdout, &request, &fill->choice));
-    fill->is_search_cut = request.deadline > 0 && clock_wall() >= request.deadline;
+    TRY(choose_run(fill->context, &holdout, request, &fill->choice));
+    fill->is_search_cut = request->deadline > 0 && clock_wall() >= request->deadline;
     fill->run.hidden = holdout.hidden.count > 0 ? holdout.hidden.count : fill->choice.errors.count;
 done:
     holdout_free(fill->context, &holdout);
@@ -93,9 +97,10 @@ static fescue_status fill_run(fescue_fill *fill)
     fescue_context *context = fill->context;
     fescue_status status;
     TRY(job_prepare(context, &fill->options));
-    const struct solver *solver = solver_choose(context, &fill->options);
-    TRY(fill_choose(fill, solver));
-    TRY(fill_fit(fill, solver));
+    struct choose_request request = {.options = &fill->options};
+    TRY(solver_choose(context, &fill->options, &request));
+    TRY(fill_choose(fill, &request));
+    TRY(fill_fit(fill, request.solver));
     low_rank_free(context, &fill->choice.start);
     TRY(determined_create(context, &fill->table->cells, fill->fit.model.low_rank.rank, fill->fit.model.offsets.kind,
                           &fill->determined));

@@ -24,6 +24,8 @@
  * following a flat valley for hundreds of iterations would undo, for the worse. Choosing ends its fits by the same
  * rule, so the error on the hidden cells is the error of such a fit.
  *
+ * What the evidence fit learnt is learnt again, by the same request from the same kind of start, on all cells.
+ *
  * Cost: at most twice one fit, and room for two points. What is parallel is so in the solvers.
  */
 #include "job/job_internal.h"
@@ -149,6 +151,35 @@ done:
     return status;
 }
 
+/* Asked to stop before all cells had their say: what was learnt from the kept ones is there. */
+static fescue_status stopped_take(fescue_context *context, const struct final_request *request, struct final_fit *fit)
+{
+    fit->scale = 1;
+    fit->result = (struct solve_result){.solver = "evidence", .stop = STOP_CANCELLED};
+    return low_rank_copy(context, &request->choice->start, &fit->model.low_rank);
+}
+
+/* The evidence fit on all cells: the same procedure as the one that was judged. */
+static fescue_status learnt_run(fescue_context *context, const struct final_request *request, struct final_fit *fit)
+{
+    const struct choice *choice = request->choice;
+    struct evidence_result result = {0};
+    struct evidence_request asked = choice->learnt;
+    asked.deadline = request->deadline;
+    fit->start = "spectral";
+    fescue_status status = evidence_learn(context, request->cells, &asked, &result);
+    if (status == FESCUE_STOPPED)
+        return stopped_take(context, request, fit);
+    if (status != FESCUE_OK)
+        return status;
+    result.model.bounds = fit->model.bounds;
+    model_free(context, &fit->model);
+    fit->model = result.model;
+    fit->result = result.fit;
+    fit->scale = result.scale;
+    return FESCUE_OK;
+}
+
 fescue_status final_fit_run(fescue_context *context, const struct final_request *request, struct final_fit *fit)
 {
     struct problem problem = {0};
@@ -158,6 +189,10 @@ fescue_status final_fit_run(fescue_context *context, const struct final_request 
     *fit = (struct final_fit){.model = {.rows = request->cells->rows, .columns = request->cells->columns}};
     model->bounds = request->options->bounds;
     TRY(refit_offsets(context, request->cells, request->choice->offsets, &request->choice->start, &model->offsets));
+    if (request->choice->is_learnt) {
+        TRY(learnt_run(context, request, fit));
+        return FESCUE_OK;
+    }
     TRY(problem_create(context, request->cells, &model->offsets, request->choice->ridge, &problem));
     TRY(low_rank_fit(&problem, request, &best));
     fit->scale = problem.scale;

@@ -59,10 +59,16 @@ static void model_lines(struct summary *summary)
     bool chooses_rank = options->rank == FESCUE_AUTO, chooses_ridge = options->ridge == (double)FESCUE_AUTO;
     bool chooses_offsets = options->offsets == FESCUE_OFFSETS_AUTO;
     text_add(text, "model      %s (%s), rank %" PRIu32 " (%s)", offsets_text(choice->offsets), by_whom(chooses_offsets),
-             choice->rank, by_whom(chooses_rank));
-    if (choice->rank > 0)
+             choice->is_learnt ? (uint32_t)summary->fill->fit.model.low_rank.rank : choice->rank,
+             by_whom(chooses_rank));
+    if (choice->rank > 0 && choice->is_learnt)
+        text_add(text, ", a ridge a component (learnt)");
+    else if (choice->rank > 0)
         text_add(text, ", ridge %s (%s)", real_to_words(choice->ridge, 3, ridge), by_whom(chooses_ridge));
     text_add(text, "\n");
+    if (choice->is_learnt && choice->learnt.noise != EVIDENCE_NOISE_EQUAL)
+        text_add(text, "           noise of every %s learnt on its own: less error on hidden cells\n",
+                 choice->learnt.noise == EVIDENCE_NOISE_COLUMNS ? "column" : "row");
     if (choice->path_count > 1)
         text_add(text, "           out of %" PRIu64 " fits tried on %" PRIu64 " hidden cells\n", choice->path_count,
                  choice->errors.count);

@@ -14,7 +14,7 @@
 
 #include <math.h>
 
-static fescue_status path_note(struct chooser *chooser, const struct candidate *candidate)
+fescue_status candidate_note(struct chooser *chooser, const struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
     if (chooser->path_count == chooser->path_capacity) {
@@ -39,7 +39,7 @@ fescue_status candidate_create(struct chooser *chooser, enum fescue_offsets kind
     TRY(offsets_fit(chooser->context, kept, kind, &candidate->offsets));
     TRY(low_rank_create(chooser->context, kept->rows, kept->columns, 0, &candidate->point));
     TRY(candidate_measure(chooser, candidate));
-    TRY(path_note(chooser, candidate));
+    TRY(candidate_note(chooser, candidate));
 done:
     if (status != FESCUE_OK)
         candidate_free(chooser, candidate);
@@ -95,8 +95,7 @@ static void groups_sum(const struct chooser *chooser, double *square)
     }
 }
 
-/* The low-rank part in the table's units; its spectrum is the chooser's. */
-static struct low_rank point_in_units(struct chooser *chooser, const struct candidate *candidate)
+struct low_rank candidate_point(struct chooser *chooser, const struct candidate *candidate)
 {
     struct low_rank point = candidate->point;
     for (size_t k = 0; k < point.rank; k++)
@@ -126,7 +125,7 @@ fescue_status candidate_measure(struct chooser *chooser, struct candidate *candi
     struct model model = {.rows = chooser->kept->rows,
                           .columns = chooser->kept->columns,
                           .offsets = candidate->offsets,
-                          .low_rank = point_in_units(chooser, candidate),
+                          .low_rank = candidate_point(chooser, candidate),
                           .bounds = chooser->options->bounds};
     TRY(errors_measure(chooser->context, chooser->hidden, &model, chooser->residuals, &candidate->errors));
     groups_sum(chooser, candidate->square);
@@ -147,8 +146,9 @@ fescue_status candidate_fit(struct chooser *chooser, double ridge, const struct 
     TRY(progress_tell(chooser->context, "choosing", -1));
     TRY(solve_run(&chooser->problem, chooser->solver, limits, &candidate->point, &result));
     candidate->ridge = ridge;
+    candidate->is_learnt = false;
     TRY(candidate_measure(chooser, candidate));
-    TRY(path_note(chooser, candidate));
+    TRY(candidate_note(chooser, candidate));
 done:
     solve_result_free(chooser->context, &result);
     return status;
@@ -159,7 +159,7 @@ fescue_status candidate_refit(struct chooser *chooser, const struct solve_limits
     fescue_status status = FESCUE_OK;
     struct offsets offsets = {0};
     TRY(chooser_take_up(chooser, candidate));
-    struct low_rank point = point_in_units(chooser, candidate);
+    struct low_rank point = candidate_point(chooser, candidate);
     double scale = chooser->problem.scale;
     TRY(refit_offsets(chooser->context, chooser->kept, candidate->offsets.kind, &point, &offsets));
     offsets_free(chooser->context, &candidate->offsets);

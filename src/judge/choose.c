@@ -170,6 +170,17 @@ static size_t rank_limit(const struct chooser *chooser)
     return asked < most ? asked : most;
 }
 
+static fescue_status kinds_learn(struct chooser *chooser, const struct kind *kinds, size_t count,
+                                 struct candidate *winner, size_t *best)
+{
+    const struct candidate *alone[KINDS_MOST] = {0};
+    size_t competing = 0;
+    for (size_t k = 0; k < count; k++)
+        if (kinds[k].competes)
+            alone[competing++] = &kinds[k].alone; /* the first always does */
+    return evidence_compete(chooser, alone, competing, winner, best);
+}
+
 /* *winner and the kind it belongs to. */
 static fescue_status kinds_compete(struct chooser *chooser, struct kind *kinds, size_t count, struct candidate *winner,
                                    size_t *best)
@@ -201,7 +212,7 @@ static fescue_status winner_finish(struct chooser *chooser, struct candidate *wi
     fescue_status status = FESCUE_OK;
     struct solve_limits fine = chooser_fine_limits(chooser), loose = chooser_loose_limits(chooser);
     bool is_judged = chooser->hidden->count > 0;
-    if (winner->point.rank > 0 && !winner->is_exact && is_judged) {
+    if (winner->point.rank > 0 && !winner->is_exact && !winner->is_learnt && is_judged) {
         TRY(path_challenge(chooser, &loose, winner));
         TRY(candidate_fit(chooser, ridge_of(chooser, winner), &fine, winner));
         TRY(path_settle(chooser, &fine, SETTLE_ROUNDS, winner));
@@ -221,6 +232,9 @@ static fescue_status choice_fill(struct chooser *chooser, struct kind *kinds, si
     choice->offsets = winner->offsets.kind;
     choice->rank = (uint32_t)winner->point.rank;
     choice->ridge = winner->point.rank == 0 ? 0 : winner->ridge;
+    choice->is_learnt = winner->is_learnt;
+    if (winner->is_learnt)
+        choice->learnt = evidence_request_of(chooser, winner);
     choice->errors = is_judged ? winner->errors : (struct errors){0};
     choice->offsets_errors = is_judged ? kinds[best].alone.errors : (struct errors){0};
     choice->offsets_only_rank0_rmse = choice->offsets_errors.rmse;
@@ -250,6 +264,7 @@ static fescue_status choose_on(fescue_context *context, const struct holdout *ho
     struct chooser chooser = {.context = context,
                               .options = request->options,
                               .solver = request->solver,
+                              .learns = request->way,
                               .deadline = request->deadline,
                               .kept = &holdout->kept,
                               .hidden = &holdout->hidden};
@@ -258,7 +273,10 @@ static fescue_status choose_on(fescue_context *context, const struct holdout *ho
     size_t count = 0, best = 0;
     TRY(chooser_open(&chooser));
     TRY(kinds_open(&chooser, kinds, &count));
-    TRY(kinds_compete(&chooser, kinds, count, &winner, &best));
+    if (evidence_is_meant(&chooser))
+        TRY(kinds_learn(&chooser, kinds, count, &winner, &best));
+    else
+        TRY(kinds_compete(&chooser, kinds, count, &winner, &best));
     TRY(winner_finish(&chooser, &winner));
     TRY(choice_fill(&chooser, kinds, best, &winner, choice));
 done:

@@ -1,7 +1,7 @@
 /* SPDX-License-Identifier: MIT
  *
  * The inside of the choice: one fit and what the hidden cells say of it (candidate), the ladder of ridges
- * (choose_ridge), the path over ranks (choose_path), and all together (choose).
+ * (choose_ridge), the path over ranks (choose_path), the evidence fit (choose_evidence), and all together (choose).
  */
 #ifndef FESCUE_CHOOSE_INTERNAL_H
 #define FESCUE_CHOOSE_INTERNAL_H
@@ -13,6 +13,7 @@ struct chooser {
     fescue_context *context;
     const struct fescue_options *options;
     const struct solver *solver;
+    enum choose_way learns;
     double deadline;
     const struct cells *kept, *hidden;
 
@@ -33,7 +34,9 @@ struct candidate {
     struct offsets offsets; /* owned */
     uint64_t version;       /* equal for equal offsets */
     size_t rung;
-    double ridge;
+    double ridge;   /* NAN: learnt, a ridge a component */
+    bool is_learnt; /* by the evidence fit, with this noise */
+    enum evidence_noise noise;
     struct errors errors;  /* on the hidden cells, table units; infinite when the fit blew up */
     double *square;        /* sum of squared errors of each group of hidden cells */
     struct low_rank point; /* in the problem's units */
@@ -48,6 +51,10 @@ void candidate_swap(struct candidate *a, struct candidate *b);
 /* Lets the solver improve the point under `ridge`, measures it on the hidden cells and notes it in the path. */
 fescue_status candidate_fit(struct chooser *chooser, double ridge, const struct solve_limits *limits,
                             struct candidate *candidate);
+/* The low-rank part in the table's units; its spectrum is the chooser's. The problem is the candidate's. */
+struct low_rank candidate_point(struct chooser *chooser, const struct candidate *candidate);
+/* One more step of the path: the candidate as it was measured. */
+fescue_status candidate_note(struct chooser *chooser, const struct candidate *candidate);
 /* As it is, without a fit. */
 fescue_status candidate_measure(struct chooser *chooser, struct candidate *candidate);
 /* Fits the offsets again to what the low-rank part leaves, then the low-rank part to what they leave. */
@@ -77,6 +84,13 @@ size_t chooser_rank_most(const struct chooser *chooser); /* the largest rank tha
 /* The path over ranks 0, 1, 2, ..., from offsets alone; *chosen is the smallest rank that no larger one beats. */
 fescue_status path_walk(struct chooser *chooser, const struct candidate *alone, size_t rank_most,
                         struct candidate *chosen);
+/* Whether the evidence fit takes the path's place. */
+bool evidence_is_meant(const struct chooser *chooser);
+/* What the candidate's kind of offsets and noise asks of the evidence fit. */
+struct evidence_request evidence_request_of(const struct chooser *chooser, const struct candidate *candidate);
+/* The evidence fit for each kind of offsets, given as offsets alone; *best is the kind of the winner. */
+fescue_status evidence_compete(struct chooser *chooser, const struct candidate *const *alone, size_t count,
+                               struct candidate *winner, size_t *best);
 /* To a given rank, without judging the ranks on the way. */
 fescue_status path_climb(struct chooser *chooser, const struct candidate *alone, size_t rank, struct candidate *chosen);
 enum { SETTLE_ROUNDS = 4 }; /* beyond which offsets and low-rank part hardly move any more */

@@ -40,14 +40,16 @@ fescue_status refit_offsets(fescue_context *context, const struct cells *cells, 
 struct choose_step {
     enum fescue_offsets offsets;
     uint32_t rank;
-    double ridge;
+    double ridge; /* NAN: learnt, a ridge a component */
     struct errors errors;
 };
 /* What the hold-out decided. */
 struct choice {
     enum fescue_offsets offsets;
     uint32_t rank;
-    double ridge;
+    double ridge;   /* NAN: learnt, a ridge a component */
+    bool is_learnt; /* by the evidence fit, on this request */
+    struct evidence_request learnt;
     struct errors errors, offsets_errors; /* on the hidden cells: of the choice, and of its offsets alone */
     double offsets_only_rank0_rmse;       /* of the best offsets alone */
     double halfwidth;                     /* of the interval at the asked level; NAN when nothing was hidden */
@@ -59,7 +61,10 @@ struct choice {
     struct choose_step *path;             /* owned; everything that was tried, in order */
     uint64_t path_count;
 };
+/* Who learns rank and ridge: the path judged by hidden cells, the evidence fit, or whichever suits. */
+enum choose_way { CHOOSE_AUTO, CHOOSE_PATH, CHOOSE_LEARN };
 struct choose_request {
+    enum choose_way way;
     const struct fescue_options *options;
     const struct solver *solver;
     double deadline; /* clock_wall() second, or 0 */

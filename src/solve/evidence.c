@@ -80,6 +80,7 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
     size_t one = evidence_side_scratch(rank), two = evidence_basis_scratch(rank);
     size_t work = 2 * packed_size(rank) + 3 * rank + dense_work_size(rank, rank);
     *evidence = (struct evidence){.context = problem->context, .problem = problem, .rank = rank};
+    evidence->started = clock_wall();
     evidence->scratch_size = ((one > two ? one : two) + 7) / 8 * 8;
     struct arena *arena = &evidence->arena;
     side_reserve(arena, &cells->by_row, rank);
@@ -213,6 +214,8 @@ static fescue_status evidence_model(struct evidence *evidence, const struct mode
         model->offsets.row[i] = scale * MATRIX_AT(rows->mean, i, rows->effect_at);
     for (size_t j = 0; j < n; j++)
         model->offsets.column[j] = scale * MATRIX_AT(columns->mean, j, columns->effect_at);
+    model->offsets.row_ridge = rows->variance[rank] > 0 ? evidence->noise / rows->variance[rank] : INFINITY;
+    model->offsets.column_ridge = columns->variance[rank] > 0 ? evidence->noise / columns->variance[rank] : INFINITY;
     TRY(low_rank_from_product(context, matrix_left(rows->mean, rank), matrix_left(columns->mean, rank),
                               &model->low_rank));
     for (size_t k = 0; k < rank; k++)
@@ -223,35 +226,42 @@ done:
     return status;
 }
 
-static fescue_status trace_append(struct evidence *evidence, uint64_t round, double change, struct solve_result *result)
+static void trace_append(struct evidence *evidence, uint64_t round, double change, struct solve_result *result)
 {
     struct solve_step *step = &result->trace[result->trace_count++];
     *step = (struct solve_step){.rank = (uint32_t)evidence->rank, .iteration = (uint32_t)round};
     step->rmse = sqrt(evidence->noise);
     step->objective = evidence->noise;
+    step->gradient = NAN;
     step->step = change;
-    step->seconds = clock_wall();
-    return progress_tell(evidence->context, "evidence", -1);
+    step->seconds = clock_wall() - evidence->started;
+}
+
+/* Whether the rounds end here, and why. */
+static bool is_over(struct evidence *evidence, const struct evidence_request *request, double change,
+                    enum solve_stop *stop)
+{
+    if (progress_tell(evidence->context, "evidence", -1) != FESCUE_OK)
+        *stop = STOP_CANCELLED;
+    else if (change <= request->change)
+        *stop = STOP_CHANGE;
+    else if (request->deadline > 0 && clock_wall() > request->deadline)
+        *stop = STOP_TIME;
+    else
+        return false;
+    return true;
 }
 
 static fescue_status evidence_loop(struct evidence *evidence, const struct evidence_request *request,
                                    struct solve_result *result)
 {
     fescue_status status = FESCUE_OK;
+    double change = INFINITY;
     result->stop = STOP_ITERATIONS;
-    for (uint64_t round = 0; round < request->rounds; round++) {
-        double change;
+    for (uint64_t round = 0; round < request->rounds && !is_over(evidence, request, change, &result->stop); round++) {
         TRY(evidence_round(evidence, request, round, &change));
-        TRY(trace_append(evidence, round + 1, change, result));
+        trace_append(evidence, round + 1, change, result);
         result->iterations = round + 1;
-        if (change <= request->change) {
-            result->stop = STOP_CHANGE;
-            break;
-        }
-        if (request->deadline > 0 && clock_wall() > request->deadline) {
-            result->stop = STOP_TIME;
-            break;
-        }
     }
 done:
     return status;
@@ -276,6 +286,7 @@ fescue_status evidence_fit(fescue_context *context, const struct cells *cells, c
     TRY(evidence_loop(&evidence, request, &out->fit));
     TRY(evidence_model(&evidence, start, &out->model));
     out->noise = problem.scale * sqrt(evidence.noise);
+    out->scale = problem.scale;
     out->fit.rmse = sqrt(evidence.noise);
     out->fit.objective = evidence.noise;
 done:

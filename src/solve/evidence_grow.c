@@ -5,7 +5,7 @@
  *
  *   1  offsets by ridge least squares; the trimmed spectral start gives all components asked for at once
  *   2  rounds until the estimates settle; what the data do not support is pruned
- *   3  the leading pair of the residual joins as one more component, rounds again: while it lives, go on
+ *   3  leading pairs of the residual join as further components, rounds again: while more live, go on
  *   4  rounds to the final tolerance
  *
  * A component lives while its standard deviation in the table is above a thousandth of the noise's: pruned ones fall
@@ -17,8 +17,13 @@
 
 #include <math.h>
 
+/* First guess of the noise, as a share of the variance that the offsets leave: with all of it, weak components are lost
+   before they have found their direction; with much less, rounds are spent on pruning what is not there. */
+#define START_NOISE 0.25
 /* A pruned component: standard deviation in the table over that of the noise. */
 #define COMPONENT_DEAD 1e-3
+/* Components that join at once: among several the rounds find the directions that one alone may miss. */
+enum { GROW_BLOCK = 4 };
 /* Rounds between two growths, and the tolerance at which they end earlier. */
 #define GROW_ROUNDS 10
 #define GROW_CHANGE 1e-3
@@ -51,21 +56,30 @@ static void model_trim(struct model *model, size_t rank)
     point->right = matrix_left(point->right, rank);
 }
 
-/* Adds components to *model, of which the offsets stand: the spectral start's `rank` when it has none yet, else one. */
-static fescue_status model_grow(fescue_context *context, const struct cells *cells,
-                                const struct evidence_request *request, struct model *model)
+static bool is_late(const struct evidence_request *request)
+{
+    return request->deadline > 0 && clock_wall() >= request->deadline;
+}
+
+/* Adds components to *model, of which the offsets stand: the spectral start's `rank` when it has none yet, else a
+ * block. */
+static fescue_status model_grow(fescue_context *context, const struct cells *cells, struct evidence_request *request,
+                                struct model *model)
 {
     struct problem problem = {0};
     struct low_rank *point = &model->low_rank;
     fescue_status status;
     TRY(problem_create(context, cells, &model->offsets, 0, &problem));
     if (point->rank == 0) {
+        if (!(request->noise_start > 0))
+            request->noise_start = START_NOISE * problem.scale * problem.scale;
         low_rank_free(context, point);
         TRY(start_spectral(&problem, request->rank, request->seed, point));
     } else {
         for (size_t k = 0; k < point->rank; k++)
             point->spectrum[k] /= problem.scale;
-        TRY(start_grow(&problem, request->seed + point->rank, point));
+        for (size_t k = 0; k < GROW_BLOCK && point->rank < request->rank_most; k++)
+            TRY(start_grow(&problem, request->seed + point->rank, point));
     }
     for (size_t k = 0; k < point->rank; k++)
         point->spectrum[k] *= problem.scale;
@@ -74,46 +88,53 @@ done:
     return status;
 }
 
-/* Replaces *fit by a fit that starts from its model. */
+/* Replaces *fit by a fit that starts from its model and noise, and drops components that died (the last one stays). */
 static fescue_status refit(fescue_context *context, const struct cells *cells, const struct evidence_request *request,
                            struct evidence_result *fit)
 {
     struct evidence_result next = {0};
-    fescue_status status = evidence_fit(context, cells, request, &fit->model, &next);
+    struct evidence_request again = *request;
+    if (fit->noise > 0)
+        again.noise_start = fit->noise * fit->noise;
+    again.rank = fit->model.low_rank.rank;
+    fescue_status status = evidence_fit(context, cells, &again, &fit->model, &next);
     if (status != FESCUE_OK)
         return status;
     evidence_result_free(context, fit);
     *fit = next;
-    return FESCUE_OK;
+    size_t alive = living(fit);
+    model_trim(&fit->model, alive > 0 ? alive : 1);
+    return next.fit.stop == STOP_CANCELLED ? FESCUE_STOPPED : FESCUE_OK;
 }
 
 fescue_status evidence_learn(fescue_context *context, const struct cells *cells, const struct evidence_request *request,
                              struct evidence_result *out)
 {
-    struct evidence_request loose = *request;
-    size_t shorter = cells->rows < cells->columns ? cells->rows : cells->columns, alive = 0;
+    struct evidence_request step = *request;
+    size_t alive = 0;
     fescue_status status;
     *out = (struct evidence_result){.model = {.rows = cells->rows, .columns = cells->columns}};
     out->model.bounds = (struct fescue_range){-INFINITY, INFINITY};
-    loose.rounds = GROW_ROUNDS;
-    loose.change = GROW_CHANGE;
+    step.noise = EVIDENCE_NOISE_EQUAL;
+    step.rounds = GROW_ROUNDS;
+    step.change = GROW_CHANGE;
     TRY(offsets_fit(context, cells, request->offsets, &out->model.offsets));
     TRY(low_rank_create(context, cells->rows, cells->columns, 0, &out->model.low_rank));
     for (;;) {
-        TRY(model_grow(context, cells, &loose, &out->model));
-        loose.rank = out->model.low_rank.rank;
-        TRY(refit(context, cells, &loose, out));
+        TRY(model_grow(context, cells, &step, &out->model));
+        TRY(refit(context, cells, &step, out));
         size_t now = living(out);
-        model_trim(&out->model, now > 0 ? now : 1);
-        if (now <= alive || now >= shorter)
+        if (now <= alive || now >= request->rank_most || is_late(request))
             break;
         alive = now;
-        loose.noise_start = out->noise * out->noise;
     }
-    loose = *request;
-    loose.rank = out->model.low_rank.rank;
-    loose.noise_start = out->noise * out->noise;
-    TRY(refit(context, cells, &loose, out));
+    step.rounds = request->rounds;
+    step.change = request->change;
+    TRY(refit(context, cells, &step, out));
+    if (request->noise != EVIDENCE_NOISE_EQUAL) {
+        step.noise = request->noise;
+        TRY(refit(context, cells, &step, out));
+    }
     model_trim(&out->model, living(out));
 done:
     if (status != FESCUE_OK)

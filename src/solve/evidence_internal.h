@@ -31,6 +31,7 @@ struct evidence {
     size_t rank;
     struct evidence_side rows, columns;
     double noise;    /* mean noise variance; that of cell (i, j) is noise / (row precision i * column precision j) */
+    double started;  /* clock_wall() second */
     double *scratch; /* one stretch a worker */
     size_t scratch_size;
     struct matrix small[4], gram[4]; /* r x r and (r+2) x (r+2) */

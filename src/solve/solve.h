@@ -75,6 +75,7 @@ struct evidence_request {
     enum fescue_offsets offsets; /* never AUTO: which effects are free */
     enum evidence_noise noise;   /* whether every column, or row, has noise of its own */
     size_t rank;                 /* components to begin with, 1 .. min(rows, columns); the data prune them */
+    size_t rank_most;            /* to which evidence_learn may grow; rank .. min(rows, columns) */
     double noise_start;          /* first guess of the noise variance, table units; 0: the whole variance */
     uint64_t seed, rounds;
     double change;   /* ends when the rms change of the estimates, over the table's scale, falls below this */
@@ -84,11 +85,14 @@ struct evidence_result { /* evidence_result_free */
     struct model model;  /* posterior means; spectrum descending, pruned components near 0 */
     struct solve_result fit;
     double noise; /* standard deviation, table units */
+    double scale; /* units of the table in one of the trace's */
 };
-/* From `start` (its offsets, and its components as far as it has them; further ones start small and random). */
+/* Cancelled: FESCUE_OK with STOP_CANCELLED in evidence_fit, once a round is done; FESCUE_STOPPED in evidence_learn.
+   From `start` (its offsets, and its components as far as it has them; further ones start small and random). */
 fescue_status evidence_fit(fescue_context *context, const struct cells *cells, const struct evidence_request *request,
                            const struct model *start, struct evidence_result *out);
-/* The same from nothing: offsets, spectral start at request->rank, then growth as long as the data support it. */
+/* The same from nothing: offsets, the spectral start at request->rank, growth as long as the data support it, all with
+   equal noise; then request->noise. */
 fescue_status evidence_learn(fescue_context *context, const struct cells *cells, const struct evidence_request *request,
                              struct evidence_result *out);
 void evidence_result_free(fescue_context *context, struct evidence_result *result);

@@ -8,8 +8,13 @@
 
 static struct evidence_request request_of(size_t rank, enum fescue_offsets offsets)
 {
-    return (struct evidence_request){
-        .offsets = offsets, .rank = rank, .seed = 1, .rounds = 400, .change = 1e-9, .noise = EVIDENCE_NOISE_EQUAL};
+    return (struct evidence_request){.offsets = offsets,
+                                     .rank = rank,
+                                     .rank_most = rank,
+                                     .seed = 1,
+                                     .rounds = 400,
+                                     .change = 1e-9,
+                                     .noise = EVIDENCE_NOISE_EQUAL};
 }
 
 static struct evidence_result learn(fescue_context *context, const struct cells *cells,

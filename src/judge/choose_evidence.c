@@ -1,0 +1,150 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The evidence fit among the candidates: it learns rank and ridge from the kept cells themselves, so that the hidden
+ * ones have little to choose, only which kind of offsets it has and whether every line of the shorter side has noise of
+ * its own.
+ *
+ * Where it is used: under --solver evidence, and under --solver auto while it is affordable and the ridge is left to
+ * the program. It leaves neighbouring ranks and ridges nothing to win, as a rule, at the price of one path's first few
+ * steps; near the noiseless limit its point is where an exact fit starts (path_try_exact).
+ */
+#include "judge/choose_internal.h"
+
+#include <math.h>
+
+/* Components to begin with: what most tables have is fewer, and growth adds what is missing. */
+enum { START_RANK = 20, FINE_ROUNDS = 60, NOISE_ROUNDS = 40 };
+/* The estimates are settled when a round moves them by this share of the table's spread. */
+static const double settled = 1e-4;
+
+/* What auto affords: cells x (rank + 3)^2 multiplications a round, and the bytes of the lines' moments. */
+static const double affordable_work = 1e10, affordable_bytes = 5e8;
+
+static size_t rank_most_of(const struct chooser *chooser)
+{
+    const struct fescue_options *options = chooser->options;
+    const struct cells *kept = chooser->kept;
+    size_t shorter = kept->rows < kept->columns ? kept->rows : kept->columns;
+    size_t asked = (size_t)(options->rank == FESCUE_AUTO ? options->rank_most : options->rank);
+    return asked < shorter ? asked : shorter;
+}
+
+static bool is_affordable(const struct chooser *chooser, size_t rank)
+{
+    const struct cells *kept = chooser->kept;
+    double size = (double)(rank + 3) * (double)(rank + 3), lines = (double)kept->rows + (double)kept->columns;
+    return (double)kept->count * size <= affordable_work && 4 * lines * size <= affordable_bytes;
+}
+
+bool evidence_is_meant(const struct chooser *chooser)
+{
+    size_t most = rank_most_of(chooser), start = most < START_RANK ? most : START_RANK;
+    if (most == 0 || chooser->hidden->count == 0)
+        return false;
+    return chooser->learns == CHOOSE_LEARN ||
+           (chooser->learns == CHOOSE_AUTO && chooser->options->ridge == FESCUE_AUTO && is_affordable(chooser, start));
+}
+
+struct evidence_request evidence_request_of(const struct chooser *chooser, const struct candidate *candidate)
+{
+    size_t most = rank_most_of(chooser);
+    return (struct evidence_request){.offsets = candidate->offsets.kind,
+                                     .noise = candidate->noise,
+                                     .rank = most < START_RANK ? most : START_RANK,
+                                     .rank_most = most,
+                                     .seed = (uint64_t)chooser->options->seed,
+                                     .rounds = FINE_ROUNDS,
+                                     .change = settled,
+                                     .deadline = chooser->deadline};
+}
+
+/* The candidate becomes what was learnt; takes over the result's offsets and point. */
+static fescue_status candidate_take(struct chooser *chooser, struct evidence_result *result, enum evidence_noise noise,
+                                    struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    offsets_free(chooser->context, &candidate->offsets);
+    low_rank_free(chooser->context, &candidate->point);
+    candidate->offsets = result->model.offsets;
+    candidate->point = result->model.low_rank;
+    result->model.offsets = (struct offsets){0};
+    result->model.low_rank = (struct low_rank){0};
+    candidate->version = ++chooser->versions;
+    candidate->is_learnt = true;
+    candidate->noise = noise;
+    candidate->ridge = NAN;
+    TRY(chooser_take_up(chooser, candidate));
+    for (size_t k = 0; k < candidate->point.rank; k++)
+        candidate->point.spectrum[k] /= chooser->problem.scale;
+    TRY(candidate_measure(chooser, candidate));
+    TRY(candidate_note(chooser, candidate));
+done:
+    return status;
+}
+
+static fescue_status learn(struct chooser *chooser, const struct candidate *alone, struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    struct evidence_result result = {0};
+    struct evidence_request request = evidence_request_of(chooser, alone);
+    TRY(progress_tell(chooser->context, "choosing", -1));
+    TRY(candidate_copy(chooser, alone, candidate));
+    TRY(evidence_learn(chooser->context, chooser->kept, &request, &result));
+    TRY(candidate_take(chooser, &result, EVIDENCE_NOISE_EQUAL, candidate));
+done:
+    evidence_result_free(chooser->context, &result);
+    return status;
+}
+
+/* The same components under noise that is learnt line by line of the shorter side, when that has less error. */
+static fescue_status learn_noise(struct chooser *chooser, struct candidate *winner)
+{
+    fescue_status status = FESCUE_OK;
+    const struct cells *kept = chooser->kept;
+    struct evidence_result result = {0};
+    struct candidate own = {0};
+    struct model start = {.rows = kept->rows, .columns = kept->columns, .bounds = chooser->options->bounds};
+    struct evidence_request request = evidence_request_of(chooser, winner);
+    request.noise = kept->columns <= kept->rows ? EVIDENCE_NOISE_COLUMNS : EVIDENCE_NOISE_ROWS;
+    request.rank = winner->point.rank;
+    request.rounds = NOISE_ROUNDS;
+    if (winner->point.rank == 0 || chooser_is_late(chooser))
+        return FESCUE_OK;
+    TRY(candidate_copy(chooser, winner, &own));
+    TRY(chooser_take_up(chooser, winner));
+    request.noise_start = winner->errors.rmse * winner->errors.rmse;
+    start.offsets = winner->offsets; /* borrowed, like the point */
+    start.low_rank = candidate_point(chooser, winner);
+    TRY(evidence_fit(chooser->context, kept, &request, &start, &result));
+    TRY(candidate_take(chooser, &result, request.noise, &own));
+    if (candidate_beats(chooser, &own, winner, 1))
+        candidate_swap(&own, winner);
+done:
+    candidate_free(chooser, &own);
+    evidence_result_free(chooser->context, &result);
+    return status;
+}
+
+fescue_status evidence_compete(struct chooser *chooser, const struct candidate *const *alone, size_t count,
+                               struct candidate *winner, size_t *best)
+{
+    fescue_status status = FESCUE_OK;
+    struct candidate candidate = {0};
+    *best = 0;
+    TRY(learn(chooser, alone[0], winner));
+    TRY(path_try_exact(chooser, winner));
+    for (size_t k = 1; k < count && !winner->is_exact && !chooser_is_late(chooser); k++) {
+        candidate_free(chooser, &candidate);
+        TRY(learn(chooser, alone[k], &candidate));
+        TRY(path_try_exact(chooser, &candidate));
+        if (candidate.is_exact || candidate_beats(chooser, &candidate, winner, 0)) {
+            candidate_swap(winner, &candidate);
+            *best = k;
+        }
+    }
+    if (!winner->is_exact)
+        TRY(learn_noise(chooser, winner));
+done:
+    candidate_free(chooser, &candidate);
+    return status;
+}
