@@ -190,8 +190,11 @@ void sweep_run(struct sweep_job *job, sweep_block *kernel, double sums[SWEEP_SUM
 static struct sweep_job job_open(struct sweep *sweep, const struct half *half, struct matrix right)
 {
     assert(right.columns <= sweep->rank_most && right.rows == half->length);
-    return (struct sweep_job){
-        .sweep = sweep, .half = half, .width = sweep_width(sweep, right.columns), .rank = right.columns};
+    return (struct sweep_job){.sweep = sweep,
+                              .half = half,
+                              .values = half->value,
+                              .width = sweep_width(sweep, right.columns),
+                              .rank = right.columns};
 }
 
 void sweep_residual(struct sweep *sweep, const struct half *half, struct matrix left, struct matrix right,

@@ -26,8 +26,8 @@ struct sweep_job {
     struct sweep_rows left, right, a, b;
     size_t width; /* numbers worked on in each row: the rank up to whole registers, zeros behind the rank */
     size_t rank;
-    const void *values;    /* of cells, in the half's order, instead of the half's own */
-    void *residual;        /* written by residual, read by tangent; may be NULL in the former */
+    const void *values;    /* of cells, in the half's order: the half's own, or residuals, or others */
+    void *residual;        /* written by residual; may be NULL */
     struct matrix product; /* gradient, product or weights; data may be NULL */
     const double *ridge;
     double *factors;

@@ -6,6 +6,8 @@
  *     LANES                REALs in a register: 2, 4, 8 or 16
  *     WIDES                registers that LANES doubles take: 1 when REAL is double, 2 when it is float
  *     MADD(a, b, c)        a b + c on registers of REAL; MADD_WIDE on registers of double
+ *     LOWER(x), UPPER(x)   the halves of a register of floats, as doubles
+ *     WIDEN_FOUR(x)        four floats as doubles
  *     COMMON_REGISTERS(X)  X(n) for each number n of registers a row that deserves loops of its own
  *     SWEEP_KERNEL         the name of the table this gives
  *
@@ -35,7 +37,6 @@ enum { MOST_REGISTERS = SWEEP_MOST_WIDTH / LANES, WIDE_LANES = LANES / WIDES };
 #define REGISTER_OF(type, count)                                                                                       \
     type __attribute__((vector_size((count) * sizeof(type)), aligned(sizeof(type)), may_alias))
 typedef REGISTER_OF(REAL, LANES) vec;
-typedef REGISTER_OF(REAL, WIDE_LANES) vec_part;
 typedef REGISTER_OF(double, WIDE_LANES) wide;
 typedef REGISTER_OF(REAL, 4) four;
 typedef REGISTER_OF(double, 4) four_wide;
@@ -56,13 +57,20 @@ INLINE wide splat_wide(double x)
     return x - (wide){0};
 }
 
-/* sum[0 .. WIDES-1] += x */
+/* sum[0 .. WIDES-1] += x, and four REALs as doubles */
+#if WIDES == 1
 INLINE void wide_add(wide *sum, const vec *x)
 {
-    const vec_part *part = (const vec_part *)x;
-    for (size_t w = 0; w < WIDES; w++)
-        sum[w] += __builtin_convertvector(part[w], wide);
+    *sum += *x;
 }
+#define WIDEN_FOUR(x) (x)
+#else
+INLINE void wide_add(wide *sum, const vec *x)
+{
+    sum[0] += LOWER(*x);
+    sum[1] += UPPER(*x);
+}
+#endif
 
 /* (sum of a, sum of b, sum of c, sum of d), pairs first. */
 #if LANES == 2
@@ -107,6 +115,8 @@ INLINE void sum_four(const vec s[4], four *out)
 /* ---- four cells ---------------------------------------------------------------------------------------------------
  */
 
+/* In the three below a broken group goes through a copy, so that whole ones stay in registers. */
+
 /* values[k], zeros for the cells that are not there. */
 INLINE void four_load(const REAL *values, uint64_t k, size_t count, four *to)
 {
@@ -116,26 +126,26 @@ INLINE void four_load(const REAL *values, uint64_t k, size_t count, four *to)
         REAL number[4] = {0};
         for (size_t c = 0; c < count; c++)
             number[c] = values[k + c];
-        *to = *(const four *)number;
+        *to = (four){number[0], number[1], number[2], 0};
     }
 }
 
 INLINE void four_store(const four *from, uint64_t k, size_t count, REAL *values)
 {
-    if (__builtin_expect(count == 4, 1))
+    if (__builtin_expect(count == 4, 1)) {
         *(four *)(values + k) = *from;
-    else
+    } else {
+        const REAL number[3] = {(*from)[0], (*from)[1], (*from)[2]};
         for (size_t c = 0; c < count; c++)
-            values[k + c] = ((const REAL *)from)[c];
+            values[k + c] = number[c];
+    }
 }
 
 /* Zeros for the cells that are not there. */
 INLINE void four_cut(four *r, size_t count)
 {
-    if (__builtin_expect(count == 4, 1))
-        return;
-    for (size_t c = count; c < 4; c++)
-        ((REAL *)r)[c] = 0;
+    if (__builtin_expect(count < 4, 0))
+        *r = (four){(*r)[0], count > 1 ? (*r)[1] : 0, count > 2 ? (*r)[2] : 0, 0};
 }
 
 /* The positions of the cells; those that are not there are at the place of the first. */
@@ -214,49 +224,69 @@ INLINE double lanes_sum(const four_wide *x)
     return ((*x)[0] + (*x)[1]) + ((*x)[2] + (*x)[3]);
 }
 
-/* What is the same in every loop over the lines of a block. */
+/* What the loops over the lines of a block need, away from where a store could change it. */
 struct span {
     uint32_t line, last;
     uint64_t stop; /* the cell behind the block's last */
+    const uint64_t *start;
+    const uint32_t *across;
+    const REAL *values;
+    REAL *residual;
+    struct sweep_rows right, b;
 };
-INLINE struct span span_of(const struct half *half, size_t block)
+/* stride: a constant, or 0 for what the rows themselves say. */
+INLINE struct span span_of(const struct sweep_job *job, size_t block, const size_t stride)
 {
+    const struct half *half = job->half;
     uint32_t last = half->block[block + 1];
-    return (struct span){.line = half->block[block], .last = last, .stop = half->start[last]};
+    return (struct span){.line = half->block[block],
+                         .last = last,
+                         .stop = half->start[last],
+                         .start = half->start,
+                         .across = half->across,
+                         .values = job->values,
+                         .residual = job->residual,
+                         .right = {job->right.data, stride > 0 ? stride : job->right.stride},
+                         .b = {job->b.data, stride > 0 ? stride : job->b.stride}};
 }
 
-/* Calls lines(job, block, sums, registers, ...) with the common numbers of registers as constants. */
+/* LINES(n, stride) with the common numbers of registers as constants, where right rows lie close together. */
 #define REGISTERS_CASE(n)                                                                                              \
     case n:                                                                                                            \
-        LINES(n);                                                                                                      \
+        LINES(n, (n)*LANES);                                                                                           \
         break;
-#define REGISTERS_SWITCH(registers)                                                                                    \
-    switch (registers) {                                                                                               \
+#define REGISTERS_SWITCH                                                                                               \
+    switch (rows_are_close(job) ? job->width / LANES : 0) {                                                            \
         COMMON_REGISTERS(REGISTERS_CASE)                                                                               \
     default:                                                                                                           \
-        LINES(registers);                                                                                              \
+        LINES(job->width / LANES, 0);                                                                                  \
     }
+
+INLINE bool rows_are_close(const struct sweep_job *job)
+{
+    return job->right.stride == job->width && (job->b.data == NULL || job->b.stride == job->width);
+}
 
 /* ---- residual and gradient ----------------------------------------------------------------------------------------
  */
 
-INLINE void residual_four(const struct sweep_job *job, uint64_t k, size_t count, const vec *l, wide *g,
-                          four_wide sums[2], const size_t registers)
+INLINE void residual_four(const struct span *span, uint64_t k, size_t count, const vec *l, wide *g, four_wide sums[2],
+                          const size_t registers)
 {
     uint32_t position[4];
     const REAL *row[4];
     vec s[4] = {{0}};
     four r, x;
-    positions_load(job->half->across + k, count, position);
-    rows_find(&job->right, position, row);
+    positions_load(span->across + k, count, position);
+    rows_find(&span->right, position, row);
     rows_dot(l, row, s, registers);
     sum_four(s, &r);
-    four_load(job->half->value, k, count, &x);
+    four_load(span->values, k, count, &x);
     r -= x;
     four_cut(&r, count);
-    if (job->residual != NULL)
-        four_store(&r, k, count, job->residual);
-    four_wide wide_r = __builtin_convertvector(r, four_wide);
+    if (span->residual != NULL)
+        four_store(&r, k, count, span->residual);
+    four_wide wide_r = WIDEN_FOUR(r);
     sums[0] += wide_r * wide_r;
     sums[1] += (four_wide)((four_bits)wide_r & INT64_MAX); /* without its sign */
     if (g != NULL)
@@ -264,9 +294,9 @@ INLINE void residual_four(const struct sweep_job *job, uint64_t k, size_t count,
 }
 
 INLINE void residual_lines(const struct sweep_job *job, size_t block, double *out, const bool gradient,
-                           const size_t registers)
+                           const size_t registers, const size_t stride)
 {
-    struct span span = span_of(job->half, block);
+    struct span span = span_of(job, block, stride);
     four_wide all[2] = {{0}, {0}};
     for (uint32_t line = span.line; line < span.last; line++) {
         four_wide sums[2] = {{0}, {0}};
@@ -274,11 +304,11 @@ INLINE void residual_lines(const struct sweep_job *job, size_t block, double *ou
         wide g[MOST_REGISTERS * WIDES];
         row_load(&job->left, line, l, registers);
         sums_clear(g, registers);
-        uint64_t end = job->half->start[line + 1];
-        for (uint64_t k = job->half->start[line]; k < end; k += 4) {
+        uint64_t end = span.start[line + 1];
+        for (uint64_t k = span.start[line]; k < end; k += 4) {
             if (k + AHEAD + 4 <= span.stop)
-                rows_prefetch(&job->right, job->half->across + k, registers * LANES);
-            residual_four(job, k, end - k < 4 ? end - k : 4, l, gradient ? g : NULL, sums, registers);
+                rows_prefetch(&span.right, span.across + k, registers * LANES);
+            residual_four(&span, k, end - k < 4 ? end - k : 4, l, gradient ? g : NULL, sums, registers);
         }
         if (gradient)
             product_store(job, line, g, registers);
@@ -293,12 +323,12 @@ static void residual_block(const struct sweep_job *job, size_t block, size_t wor
 {
     (void)worker;
     if (job->product.data != NULL) {
-#define LINES(registers) residual_lines(job, block, sums, true, registers)
-        REGISTERS_SWITCH(job->width / LANES)
+#define LINES(registers, stride) residual_lines(job, block, sums, true, registers, stride)
+        REGISTERS_SWITCH
 #undef LINES
     } else {
-#define LINES(registers) residual_lines(job, block, sums, false, registers)
-        REGISTERS_SWITCH(job->width / LANES)
+#define LINES(registers, stride) residual_lines(job, block, sums, false, registers, stride)
+        REGISTERS_SWITCH
 #undef LINES
     }
 }
@@ -306,28 +336,28 @@ static void residual_block(const struct sweep_job *job, size_t block, size_t wor
 /* ---- product with given values ------------------------------------------------------------------------------------
  */
 
-INLINE void multiply_four(const struct sweep_job *job, uint64_t k, size_t count, wide *g, const size_t registers)
+INLINE void multiply_four(const struct span *span, uint64_t k, size_t count, wide *g, const size_t registers)
 {
     uint32_t position[4];
     const REAL *row[4];
     four x;
-    positions_load(job->half->across + k, count, position);
-    rows_find(&job->right, position, row);
-    four_load(job->values, k, count, &x);
+    positions_load(span->across + k, count, position);
+    rows_find(&span->right, position, row);
+    four_load(span->values, k, count, &x);
     rows_gather(&x, row, g, registers);
 }
 
-INLINE void multiply_lines(const struct sweep_job *job, size_t block, const size_t registers)
+INLINE void multiply_lines(const struct sweep_job *job, size_t block, const size_t registers, const size_t stride)
 {
-    struct span span = span_of(job->half, block);
+    struct span span = span_of(job, block, stride);
     for (uint32_t line = span.line; line < span.last; line++) {
         wide g[MOST_REGISTERS * WIDES];
         sums_clear(g, registers);
-        uint64_t end = job->half->start[line + 1];
-        for (uint64_t k = job->half->start[line]; k < end; k += 4) {
+        uint64_t end = span.start[line + 1];
+        for (uint64_t k = span.start[line]; k < end; k += 4) {
             if (k + AHEAD + 4 <= span.stop)
-                rows_prefetch(&job->right, job->half->across + k, registers * LANES);
-            multiply_four(job, k, end - k < 4 ? end - k : 4, g, registers);
+                rows_prefetch(&span.right, span.across + k, registers * LANES);
+            multiply_four(&span, k, end - k < 4 ? end - k : 4, g, registers);
         }
         product_store(job, line, g, registers);
     }
@@ -337,50 +367,51 @@ static void multiply_block(const struct sweep_job *job, size_t block, size_t wor
 {
     (void)worker;
     (void)sums;
-#define LINES(registers) multiply_lines(job, block, registers)
-    REGISTERS_SWITCH(job->width / LANES)
+#define LINES(registers, stride) multiply_lines(job, block, registers, stride)
+    REGISTERS_SWITCH
 #undef LINES
 }
 
 /* ---- a tangent step seen on the cells ------------------------------------------------------------------------------
  */
 
-INLINE void tangent_four(const struct sweep_job *job, uint64_t k, size_t count, const vec *a, const vec *l,
+INLINE void tangent_four(const struct span *span, uint64_t k, size_t count, const vec *a, const vec *l,
                          four_wide sums[2], const size_t registers)
 {
     uint32_t position[4];
     const REAL *row[4];
     vec s[4] = {{0}};
     four z, r;
-    positions_load(job->half->across + k, count, position);
-    rows_find(&job->right, position, row);
+    positions_load(span->across + k, count, position);
+    rows_find(&span->right, position, row);
     rows_dot(a, row, s, registers);
-    rows_find(&job->b, position, row);
+    rows_find(&span->b, position, row);
     rows_dot(l, row, s, registers);
     sum_four(s, &z);
     four_cut(&z, count);
-    four_load(job->values, k, count, &r);
-    four_wide wide_z = __builtin_convertvector(z, four_wide), wide_r = __builtin_convertvector(r, four_wide);
+    four_load(span->values, k, count, &r);
+    four_wide wide_z = WIDEN_FOUR(z), wide_r = WIDEN_FOUR(r);
     sums[0] += wide_z * wide_r;
     sums[1] += wide_z * wide_z;
 }
 
-INLINE void tangent_lines(const struct sweep_job *job, size_t block, double *out, const size_t registers)
+INLINE void tangent_lines(const struct sweep_job *job, size_t block, double *out, const size_t registers,
+                          const size_t stride)
 {
-    struct span span = span_of(job->half, block);
+    struct span span = span_of(job, block, stride);
     four_wide all[2] = {{0}, {0}};
     for (uint32_t line = span.line; line < span.last; line++) {
         four_wide sums[2] = {{0}, {0}};
         vec l[MOST_REGISTERS], a[MOST_REGISTERS];
         row_load(&job->left, line, l, registers);
         row_load(&job->a, line, a, registers);
-        uint64_t end = job->half->start[line + 1];
-        for (uint64_t k = job->half->start[line]; k < end; k += 4) {
+        uint64_t end = span.start[line + 1];
+        for (uint64_t k = span.start[line]; k < end; k += 4) {
             if (k + AHEAD + 4 <= span.stop) {
-                rows_prefetch(&job->right, job->half->across + k, registers * LANES);
-                rows_prefetch(&job->b, job->half->across + k, registers * LANES);
+                rows_prefetch(&span.right, span.across + k, registers * LANES);
+                rows_prefetch(&span.b, span.across + k, registers * LANES);
             }
-            tangent_four(job, k, end - k < 4 ? end - k : 4, a, l, sums, registers);
+            tangent_four(&span, k, end - k < 4 ? end - k : 4, a, l, sums, registers);
         }
         all[0] += sums[0];
         all[1] += sums[1];
@@ -392,8 +423,8 @@ INLINE void tangent_lines(const struct sweep_job *job, size_t block, double *out
 static void tangent_block(const struct sweep_job *job, size_t block, size_t worker, double sums[SWEEP_SUMS])
 {
     (void)worker;
-#define LINES(registers) tangent_lines(job, block, sums, registers)
-    REGISTERS_SWITCH(job->width / LANES)
+#define LINES(registers, stride) tangent_lines(job, block, sums, registers, stride)
+    REGISTERS_SWITCH
 #undef LINES
 }
 
