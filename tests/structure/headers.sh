@@ -2,7 +2,7 @@
 # SPDX-License-Identifier: MIT
 #
 # Every header compiles alone, as the only thing in a file; the public one also as C11, strictly, and as C++ where there
-# is a compiler for it. Templates, *_kernel.h, are no headers: their includers define what they need.
+# is a compiler for it. Templates, *_kernel*.h, are no headers: their includers define what they need.
 . "$(dirname "$0")/common"
 
 warnings='-Wall -Wextra -Wconversion -Wshadow -Wstrict-prototypes -Werror'
@@ -18,7 +18,7 @@ compile() {
 
 for header in $(tracked 'src/*.h' 'tests/*.h'); do
     case $header in
-    *_kernel.h) continue ;;
+    *_kernel*.h) continue ;;
     src/include/*) name=${header#src/include/} ;;
     src/*) name=${header#src/} ;;
     *) name=../$header ;;
