@@ -211,9 +211,10 @@ static fescue_status evidence_model(struct evidence *evidence, const struct mode
     *model = (struct model){.rows = (uint32_t)m, .columns = (uint32_t)n, .bounds = start->bounds};
     TRY(offsets_copy(context, (uint32_t)m, (uint32_t)n, &start->offsets, &model->offsets));
     for (size_t i = 0; i < m; i++)
-        model->offsets.row[i] = scale * MATRIX_AT(rows->mean, i, rows->effect_at);
+        model->offsets.row[i] = rows->variance[rank] > 0 ? scale * MATRIX_AT(rows->mean, i, rows->effect_at) : 0;
     for (size_t j = 0; j < n; j++)
-        model->offsets.column[j] = scale * MATRIX_AT(columns->mean, j, columns->effect_at);
+        model->offsets.column[j] =
+            columns->variance[rank] > 0 ? scale * MATRIX_AT(columns->mean, j, columns->effect_at) : 0;
     model->offsets.row_ridge = rows->variance[rank] > 0 ? evidence->noise / rows->variance[rank] : INFINITY;
     model->offsets.column_ridge = columns->variance[rank] > 0 ? evidence->noise / columns->variance[rank] : INFINITY;
     TRY(low_rank_from_product(context, matrix_left(rows->mean, rank), matrix_left(columns->mean, rank),

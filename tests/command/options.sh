@@ -40,9 +40,13 @@ try 0 fill -q -r 0 $table -o none
 check "--rank 0: no low-rank part" test "$(results none)" = \
     "cells.csv column-offsets.mtx filled.mtx row-offsets.mtx run.json trace.csv "
 for rank in 1 3; do
-    try 0 fill -q -r $rank $table -o rank
+    try 0 fill -q -r $rank --solver fixed-rank-cg $table -o rank
     check "--rank $rank: as many singular values" test "$(sed -n '/^%/!{p;q}' rank/spectrum.mtx)" = "$rank 1"
 done
+try 0 fill -q -r 30 --solver evidence $table -o fewer
+check "the evidence fit keeps what the data support" test "$(sed -n '/^%/!{p;q}' fewer/spectrum.mtx)" = "2 1"
+try 64 fill -q --solver evidence --ridge 0.1 $table -o ridge
+check "and learns the ridge itself" grep -q 'learns the ridge itself' err
 try 0 fill -q --rank-most 1 $table -o most
 check "--rank-most holds" record most/run.json 'r["choice"]["rank"] <= 1'
 for offsets in both rows columns mean none; do
