@@ -51,7 +51,8 @@ size_t dense_work_size(size_t lines, size_t columns);
 /* Packed small systems: a symmetric positive definite k x k matrix kept as its lower triangle, row by row
    (k(k+1)/2 numbers). Cholesky in place; on breakdown adds 1e-14 trace/k to the diagonal, tenfold until it goes. */
 void packed_cholesky(double *a, size_t k);
-void packed_solve(const double *factor, size_t k, double *b); /* b <- (L L')^-1 b */
+void packed_cholesky_lifted(double *a, size_t k, double share); /* begins with share trace/k on the diagonal */
+void packed_solve(const double *factor, size_t k, double *b);   /* b <- (L L')^-1 b */
 /* inverse <- (L L')^-1, packed as the factor is; not in place, k at most PACKED_INVERSE_MOST. */
 enum { PACKED_INVERSE_MOST = 260 };
 void packed_inverse(const double *factor, size_t k, double *inverse);

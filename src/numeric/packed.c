@@ -71,7 +71,8 @@ static void diagonal_fill(double *a, size_t k, double value)
         packed_row(a, i)[i] = value;
 }
 
-void packed_cholesky(double *a, size_t k)
+/* The factor of A + lift I, ten times the lift on each breakdown; a lift of 0 is followed by 1e-14 trace/k. */
+static void factor_from(double *a, size_t k, double lift)
 {
     double diagonal[PACKED_MOST], trace = 0;
     assert(k <= PACKED_MOST);
@@ -83,15 +84,29 @@ void packed_cholesky(double *a, size_t k)
         diagonal_fill(a, k, trace == 0 ? 1 : (double)NAN);
         return;
     }
-    for (double lift = 1e-14 * trace / (double)k; isfinite(lift); lift *= 10) {
+    while (isfinite(lift)) {
+        for (size_t i = 0; i < k; i++)
+            packed_row(a, i)[i] = diagonal[i] + lift;
         size_t broken = rows_factor(a, k);
         if (broken == k)
             return;
         rows_restore(a, broken);
-        for (size_t i = 0; i < k; i++)
-            packed_row(a, i)[i] = diagonal[i] + lift;
+        lift = lift == 0 ? 1e-14 * trace / (double)k : 10 * lift;
     }
     diagonal_fill(a, k, (double)NAN);
+}
+
+void packed_cholesky(double *a, size_t k)
+{
+    factor_from(a, k, 0);
+}
+
+void packed_cholesky_lifted(double *a, size_t k, double share)
+{
+    double trace = 0;
+    for (size_t i = 0; i < k; i++)
+        trace += packed_row(a, i)[i];
+    factor_from(a, k, share * trace / (double)k);
 }
 
 void packed_solve(const double *factor, size_t k, double *b)

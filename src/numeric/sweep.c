@@ -14,6 +14,7 @@
 #include "numeric/sweep_internal.h"
 
 #include <assert.h>
+#include <float.h>
 #include <stdlib.h>
 #include <string.h>
 
@@ -290,8 +291,13 @@ void sweep_line_solve(const struct sweep_job *job, const struct sweep_room *room
     for (size_t i = 0; i < rank; i++)
         for (size_t j = 0; j <= i; j++)
             packed[i * (i + 1) / 2 + j] = room->gram[j * job->width + i];
-    if (!empty || job->factors != NULL)
-        packed_cholesky(packed, rank);
+    /* Single precision leaves rounding of some eps trace in G, which is to be covered; in double, packed_cholesky does.
+     */
+    double share = job->sweep->precision == FESCUE_SINGLE ? (double)rank * FLT_EPSILON : 1e-14;
+    if (empty)
+        packed_cholesky(packed, job->factors != NULL ? rank : 0);
+    else
+        packed_cholesky_lifted(packed, rank, share);
     if (!empty)
         packed_solve(packed, rank, room->side);
     for (size_t j = 0; j < rank; j++)

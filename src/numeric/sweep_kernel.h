@@ -42,6 +42,11 @@ typedef REGISTER_OF(REAL, 4) four;
 typedef REGISTER_OF(double, 4) four_wide;
 typedef REGISTER_OF(int64_t, 4) four_bits;
 
+#if WIDES == 1
+#define REAL_EPSILON DBL_EPSILON
+#else
+#define REAL_EPSILON FLT_EPSILON
+#endif
 #define INLINE static inline __attribute__((always_inline))
 
 /* ---- registers ----------------------------------------------------------------------------------------------------
@@ -165,14 +170,16 @@ INLINE void rows_find(const struct sweep_rows *rows, const uint32_t position[4],
         row[c] = data + position[c] * rows->stride;
 }
 
+INLINE void row_prefetch(const REAL *row, size_t width)
+{
+    for (size_t at = 0; at < width * sizeof(REAL); at += CACHE_LINE)
+        __builtin_prefetch((const char *)row + at);
+}
+
 INLINE void rows_prefetch(const struct sweep_rows *rows, const uint32_t *across, size_t width)
 {
-    const REAL *data = rows->data;
-    for (size_t c = 0; c < 4; c++) {
-        const char *row = (const char *)(data + across[AHEAD + c] * rows->stride);
-        for (size_t at = 0; at < width * sizeof(REAL); at += CACHE_LINE)
-            __builtin_prefetch(row + at);
-    }
+    for (size_t c = 0; c < 4; c++)
+        row_prefetch((const REAL *)rows->data + across[AHEAD + c] * rows->stride, width);
 }
 
 INLINE void row_load(const struct sweep_rows *rows, uint32_t line, vec *to, const size_t registers)

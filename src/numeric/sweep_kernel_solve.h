@@ -10,8 +10,8 @@
  *
  * The factor is made row by row in double, a whole row in registers or in the nearest cache:
  *     U_i = (G_i - sum over j < i of U_ji U_j) / sqrt(the i-th number of that)
- * with numbers left of the diagonal that mean nothing. U'z = h goes along row by row. A pivot below rank eps G_ii has
- * lost all its digits: then sweep_line_solve, with its rule for such matrices, takes over from G.
+ * with numbers left of the diagonal that mean nothing. A pivot below rank eps G_ii, eps that of REAL, has lost all its
+ * digits: then sweep_line_solve, with its rule for such matrices, takes over from G.
  *
  * Cost, in multiply-adds: rank^2/2 a cell and rank^3/6 + rank^2 a line.
  */
@@ -62,17 +62,22 @@ static void chunk_side(const REAL *rows, const REAL *values, size_t count, size_
     }
 }
 
-static void chunk_take(const struct sweep_job *job, uint64_t k, size_t count, REAL *rows)
+/* The chunk's rows; those of the next one, be it of this line or another, are asked for. */
+static void chunk_take(const struct sweep_job *job, uint64_t k, size_t count, uint64_t stop, REAL *rows)
 {
+    const uint32_t *across = job->half->across + k;
     const REAL *data = job->right.data;
+    size_t ahead = stop - k < 2 * SWEEP_CHUNK ? stop - k : 2 * SWEEP_CHUNK;
     for (size_t c = 0; c < count; c++) {
-        const REAL *from = data + job->half->across[k + c] * job->right.stride;
+        const REAL *from = data + across[c] * job->right.stride;
         for (size_t at = 0; at < job->width; at += LANES)
             *(vec *)(rows + c * job->width + at) = *(const vec *)(from + at);
     }
+    for (size_t c = count; c < count + SWEEP_CHUNK && c < ahead; c++)
+        row_prefetch(data + across[c] * job->right.stride, job->width);
 }
 
-static void line_gather(const struct sweep_job *job, const struct sweep_room *room, uint32_t line)
+static void line_gather(const struct sweep_job *job, const struct sweep_room *room, uint32_t line, uint64_t stop)
 {
     const struct half *half = job->half;
     size_t width = job->width;
@@ -81,7 +86,7 @@ static void line_gather(const struct sweep_job *job, const struct sweep_room *ro
     uint64_t end = half->start[line + 1];
     for (uint64_t k = half->start[line]; k < end; k += SWEEP_CHUNK) {
         size_t count = end - k < SWEEP_CHUNK ? end - k : SWEEP_CHUNK;
-        chunk_take(job, k, count, room->rows);
+        chunk_take(job, k, count, stop, room->rows);
         chunk_gram(room->rows, count, width, room->gram);
         chunk_side(room->rows, (const REAL *)half->value + k, count, width, room->side);
     }
@@ -106,7 +111,7 @@ INLINE double row_factor(const struct sweep_room *room, size_t i, size_t rank, s
     for (size_t v = first; v < registers; v++)
         *(wide *)(to + v * WIDE_LANES) = row[v];
     double pivot = to[i];
-    if (!(pivot > (double)rank * DBL_EPSILON * room->gram[i * width + i]) || !(pivot < DBL_MAX))
+    if (!(pivot > (double)rank * REAL_EPSILON * room->gram[i * width + i]) || !(pivot < DBL_MAX))
         return 0;
     double inverse = 1 / sqrt(pivot);
     for (size_t v = first; v < registers; v++)
@@ -161,7 +166,7 @@ static void solve_block(const struct sweep_job *job, size_t block, size_t worker
     struct sweep_room room = sweep_room_of(job->sweep, worker);
     (void)sums;
     for (uint32_t line = span.line; line < span.last; line++) {
-        line_gather(job, &room, line);
+        line_gather(job, &room, line, span.stop);
         bool empty = span.start[line] == span.start[line + 1];
         if (!empty && line_factor(&room, job->rank, job->width)) {
             line_substitute(&room, job->rank, job->width);

@@ -25,6 +25,7 @@ struct bench {
     struct sweep sweep;
     struct matrix left, right, a, b, gradient;
     void *residual;
+    double ridge[257];
     size_t rank, threads;
     double gemm; /* GFLOP/s */
 };
@@ -108,12 +109,12 @@ static void rows_tangent(struct bench *bench)
 
 static void rows_solve(struct bench *bench)
 {
-    sweep_solve(&bench->sweep, &bench->cells.by_row, bench->right, NULL, bench->gradient, NULL);
+    sweep_solve(&bench->sweep, &bench->cells.by_row, bench->right, bench->ridge, bench->gradient, NULL);
 }
 
 static void columns_solve(struct bench *bench)
 {
-    sweep_solve(&bench->sweep, &bench->cells.by_column, bench->left, NULL, bench->b, NULL);
+    sweep_solve(&bench->sweep, &bench->cells.by_column, bench->left, bench->ridge, bench->b, NULL);
 }
 
 static double best_seconds(struct bench *bench, operation *run)
@@ -181,6 +182,8 @@ static void rank_report(struct bench *bench)
 {
     struct arena arena = {0};
     double rank = (double)bench->rank;
+    for (size_t j = 0; j < bench->rank; j++)
+        bench->ridge[j] = 0.1;
     factors_draw(bench, &arena);
     for (bench->threads = 1; bench->threads <= 2; bench->threads++) {
         check(bench, team_resize(bench->context, bench->threads));

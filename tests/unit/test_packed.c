@@ -112,6 +112,25 @@ static void an_indefinite_matrix_is_lifted_far(void **state)
     assert_true(l[0] * l[0] - 1 > 1 && l[0] * l[0] - 1 < 11);
 }
 
+/* The share of the mean diagonal number comes on top, also where A is definite. */
+static void a_lift_may_come_first(void **state)
+{
+    static double a[MOST * (MOST + 1) / 2], l[MOST * (MOST + 1) / 2];
+    (void)state;
+    for (size_t s = 0; s < COUNT(sizes); s++) {
+        size_t k = sizes[s];
+        double trace = 0;
+        gram_draw(a, k, k + 5, 0.1);
+        memcpy(l, a, packed_size(k) * sizeof *a);
+        for (size_t i = 0; i < k; i++)
+            trace += *at(a, i, i);
+        packed_cholesky_lifted(l, k, 0.25);
+        for (size_t i = 0; i < k; i++)
+            *at(a, i, i) += 0.25 * trace / (double)k;
+        factor_check(l, a, k, 0);
+    }
+}
+
 static void zero_and_what_is_not_finite(void **state)
 {
     double zero[6] = {0}, b[] = {0, 0, 0}, bad[] = {1, 0, (double)NAN}, off[] = {1, (double)NAN, 1};
@@ -133,6 +152,7 @@ int main(void)
         BENCH_TEST(definite_matrices_are_solved),
         BENCH_TEST(deficient_matrices_are_lifted),
         BENCH_TEST(an_indefinite_matrix_is_lifted_far),
+        BENCH_TEST(a_lift_may_come_first),
         BENCH_TEST(zero_and_what_is_not_finite),
     };
     return cmocka_run_group_tests(tests, NULL, NULL);
