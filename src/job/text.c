@@ -7,7 +7,6 @@
 #include <assert.h>
 #include <math.h>
 #include <stdio.h>
-#include <stdlib.h>
 #include <string.h>
 
 enum { TEXT_FIRST = 1024, TEXT_PIECE = 1024 };
@@ -52,18 +51,22 @@ fescue_status text_finish(struct text *text, char **out)
     return text->status;
 }
 
-/* Rounded to a whole number of units of 10^n, which a division or product by an exact power of ten turns into the
-   double nearest to the decimal; its shortest text is that decimal. Powers of ten are exact up to 10^22; beyond, the
-   value is given in full. */
+/* Through the digits that the C library prints, for it rounds correctly; what it prints between the first two of them
+   is the locale's and left out. */
 const char *real_to_words(double value, int digits, char text[32])
 {
+    char printed[64], plain[64];
+    size_t used = 0;
     assert(digits >= 1 && digits <= 15);
-    double size = fabs(value);
-    if (isfinite(value) && size >= 1e-7 && size < 1e20) {
-        int places = digits - 1 - (int)floor(log10(size));
-        double power = pow(10, abs(places));
-        value = places >= 0 ? round(value * power) / power : round(value / power) * power;
+    snprintf(printed, sizeof printed, "%.*e", digits - 1, value);
+    for (const char *next = printed; *next != '\0' && isfinite(value); next++) {
+        bool is_digit = *next >= '0' && *next <= '9';
+        if (is_digit || *next == '-' || *next == '+' || *next == 'e')
+            plain[used++] = *next;
+        if (is_digit && digits > 1 && memchr(plain, '.', used) == NULL)
+            plain[used++] = '.';
     }
+    number_parse(plain, plain + used, &value);
     real_to_text(value, FESCUE_DOUBLE, text);
     return text;
 }

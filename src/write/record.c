@@ -6,9 +6,9 @@
  *   program, version, caution
  *   input     path, crc32 and bytes (as on disk), shape, rows, columns, observed, duplicates
  *   options   every option that bears on results, as the text that sets it
- *   choice    offsets, rank, ridge; hidden cells, errors on them, of offsets alone too; the interval; the path tried
- *   fit       solver, start, stop, iterations, objective, gradient, rmse
- *   model     mean, ridges of the effects, spectrum, how an estimate is made of them
+ *   choice    offsets, rank, ridge (null where the fit learns one a component: then the noise it assumes); hidden
+ * cells, errors on them, of offsets alone too; the interval; the path tried fit       solver, start, stop, iterations,
+ * objective, gradient, rmse model     rank, mean, ridges of the effects, spectrum, how an estimate is made of them
  *   unseen    cells by basis, cells left blank
  *   files     each with "written" or why it was left out
  *   timing    started, seconds, threads, bytes of memory at most: all that may differ when the run is repeated
@@ -155,11 +155,17 @@ static struct record step_record(const struct run *run, const struct choose_step
 
 static struct record choice_record(const struct run *run)
 {
+    static const char *const noises[] = {[EVIDENCE_NOISE_EQUAL] = "equal",
+                                         [EVIDENCE_NOISE_COLUMNS] = "of every column",
+                                         [EVIDENCE_NOISE_ROWS] = "of every row"};
     const struct choice *choice = run->choice;
     struct record record = record_open(run->context), path = {run->context, json_array(), false};
     text_set(&record, "offsets", offsets_word(choice->offsets));
     count_set(&record, "rank", choice->rank);
     real_set(&record, "ridge", choice->ridge);
+    flag_set(&record, "learnt", choice->is_learnt);
+    if (choice->is_learnt)
+        text_set(&record, "noise", noises[choice->learnt.noise]);
     count_set(&record, "hidden", run->hidden);
     count_set(&record, "judged", choice->errors.count);
     record_set(&record, "errors", errors_record(run, &choice->errors));
@@ -200,6 +206,7 @@ static struct record model_record(const struct run *run)
 {
     const struct model *model = run->model;
     struct record record = record_open(run->context), spectrum = {run->context, json_array(), false};
+    count_set(&record, "rank", model->low_rank.rank);
     real_set(&record, "mean", model->offsets.mean);
     real_set(&record, "row_ridge", model->offsets.row_ridge);
     real_set(&record, "column_ridge", model->offsets.column_ridge);

@@ -52,10 +52,16 @@ static bool is_determined(const struct run *run, uint32_t row, uint32_t column, 
            (!has_column_effects(run) || run->determined->column_support[column] > 0);
 }
 
+/* Whether something holds the low-rank part of every cell in place: a ridge, or the ridges that were learnt. */
+static bool is_shrunk(const struct run *run)
+{
+    return run->choice->is_learnt || run->choice->ridge > 0;
+}
+
 static double estimate_at(const struct run *run, uint32_t row, uint32_t column, enum basis basis)
 {
     const struct model *model = run->model;
-    if (basis == BASIS_LOW_RANK || !has_low_rank(run) || run->choice->ridge > 0)
+    if (basis == BASIS_LOW_RANK || !has_low_rank(run) || is_shrunk(run))
         return model_estimate(model, row, column);
     double estimate = offsets_at(&model->offsets, row, column);
     return fmin(fmax(estimate, model->bounds.low), model->bounds.high);

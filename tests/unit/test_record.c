@@ -97,6 +97,8 @@ static void every_documented_field_is_there(void **state)
     text_check(record, "choice/offsets", "both");
     count_check(record, "choice/rank", 2);
     real_check(record, "choice/ridge", 0.5);
+    assert_true(json_is_false(value_at(record, "choice/learnt")));
+    assert_null(json_object_get(value_at(record, "choice"), "noise"));
     count_check(record, "choice/hidden", 3);
     count_check(record, "choice/judged", 3);
     real_check(record, "choice/errors/rmse", 1.0 / 7);
@@ -123,6 +125,7 @@ static void every_documented_field_is_there(void **state)
     real_check(record, "fit/gradient", 1e-10);
     real_check(record, "fit/scale", 2);
     real_check(record, "fit/rmse_seen", 0.5);
+    count_check(record, "model/rank", 2);
     real_check(record, "model/mean", 10);
     real_check(record, "model/row_ridge", 0);
     real_check(record, "model/column_ridge", 0);
@@ -152,6 +155,25 @@ static void what_is_not_finite_is_null(void **state)
         json_t *record = record_read(&stand);
         for (size_t k = 0; k < sizeof nulls / sizeof nulls[0]; k++)
             assert_true(json_is_null(value_at(record, nulls[k])));
+        json_decref(record);
+        stand_end(&stand);
+    }
+}
+
+static void what_was_learnt_is_told(void **state)
+{
+    static const char *const noises[] = {"equal", "of every column", "of every row"};
+    for (size_t k = 0; k < 3; k++) {
+        struct stand stand;
+        stand_make(state, &stand, example);
+        stand.choice.is_learnt = true;
+        stand.choice.ridge = NAN;
+        stand.choice.learnt.noise = (enum evidence_noise)k;
+        stand_write(&stand, write_record);
+        json_t *record = record_read(&stand);
+        assert_true(json_is_null(value_at(record, "choice/ridge")));
+        assert_true(json_is_true(value_at(record, "choice/learnt")));
+        text_check(record, "choice/noise", noises[k]);
         json_decref(record);
         stand_end(&stand);
     }
@@ -354,6 +376,7 @@ int main(void)
     const struct CMUnitTest tests[] = {
         BENCH_TEST(every_documented_field_is_there),
         BENCH_TEST(what_is_not_finite_is_null),
+        BENCH_TEST(what_was_learnt_is_told),
         BENCH_TEST(every_option_is_there_but_two),
         BENCH_TEST(options_of_the_record_repeat_the_run),
         BENCH_TEST(files_say_why_they_are_not_there),

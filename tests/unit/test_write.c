@@ -206,6 +206,11 @@ static void chance_is_left_out(void **state)
     assert_close(run_estimate(&stand.run, 1, 1), 21, 0);
     assert_close(run_estimate(&stand.run, 1, 2), 13.5, 0);
     assert_close(run_unseen(&stand.run, 1, 2).estimate, 13.5, 0);
+    stand.choice.ridge = NAN; /* learnt, one a component */
+    stand.choice.is_learnt = true;
+    assert_close(run_estimate(&stand.run, 1, 2), 25.5, 0);
+    stand.choice.ridge = 0;
+    stand.choice.is_learnt = false;
     stand.model.bounds = (struct fescue_range){14, 20};
     assert_close(run_estimate(&stand.run, 1, 2), 14, 0);
     assert_close(run_estimate(&stand.run, 1, 1), 20, 0);
