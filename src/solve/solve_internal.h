@@ -36,7 +36,8 @@ struct solver {
     fescue_status (*point_write)(void *state, struct low_rank *point);
     void (*destroy)(fescue_context *context, void **state);
 };
-extern const struct solver fixed_rank_cg_solver, grassmann_cg_solver, grassmann_trust_region_solver;
+extern const struct solver fixed_rank_cg_solver, grassmann_cg_solver, grassmann_trust_region_solver,
+    recursive_least_squares_solver;
 
 /* Room for one value a seen cell, in the store's precision. The caller owns *values. */
 fescue_status values_create(struct field *field, void **values);
