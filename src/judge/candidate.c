@@ -154,16 +154,21 @@ done:
     return status;
 }
 
-fescue_status candidate_refit(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate)
+fescue_status candidate_refit(struct chooser *chooser, const struct solve_limits *limits, bool at_once,
+                              struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
     struct offsets offsets = {0};
     TRY(chooser_take_up(chooser, candidate));
     struct low_rank point = candidate_point(chooser, candidate);
     double scale = chooser->problem.scale;
-    TRY(refit_offsets(chooser->context, chooser->kept, candidate->offsets.kind, &point, &offsets));
-    offsets_free(chooser->context, &candidate->offsets);
-    candidate->offsets = offsets;
+    if (at_once) {
+        TRY(refit_offsets(chooser->context, chooser->kept, candidate->offsets.kind, &point, &offsets));
+        offsets_free(chooser->context, &candidate->offsets);
+        candidate->offsets = offsets;
+    } else {
+        TRY(refit_sweep(chooser->context, chooser->kept, &point, &candidate->offsets));
+    }
     candidate->version = ++chooser->versions;
     TRY(chooser_take_up(chooser, candidate));
     for (size_t k = 0; k < candidate->point.rank; k++)

@@ -215,7 +215,7 @@ static fescue_status winner_finish(struct chooser *chooser, struct candidate *wi
     if (winner->point.rank > 0 && !winner->is_exact && !winner->is_learnt && is_judged) {
         TRY(path_challenge(chooser, &loose, winner));
         TRY(candidate_fit(chooser, ridge_of(chooser, winner), &fine, winner));
-        TRY(path_settle(chooser, &fine, SETTLE_ROUNDS, winner));
+        TRY(path_settle(chooser, &fine, true, winner));
         TRY(ridge_search(chooser, &fine, winner));
         TRY(path_try_exact(chooser, winner));
     }

@@ -6,7 +6,7 @@
 #ifndef FESCUE_CHOOSE_INTERNAL_H
 #define FESCUE_CHOOSE_INTERNAL_H
 
-#include "judge/judge.h"
+#include "judge/judge_internal.h"
 
 /* What the whole choice works on. */
 struct chooser {
@@ -57,8 +57,10 @@ struct low_rank candidate_point(struct chooser *chooser, const struct candidate 
 fescue_status candidate_note(struct chooser *chooser, const struct candidate *candidate);
 /* As it is, without a fit. */
 fescue_status candidate_measure(struct chooser *chooser, struct candidate *candidate);
-/* Fits the offsets again to what the low-rank part leaves, then the low-rank part to what they leave. */
-fescue_status candidate_refit(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate);
+/* Fits the offsets again to what the low-rank part leaves (by sweeps, or all at once), then the low-rank part to what
+   they leave. */
+fescue_status candidate_refit(struct chooser *chooser, const struct solve_limits *limits, bool at_once,
+                              struct candidate *candidate);
 /* Whether `large` has less error on the hidden cells than `small` by more than `errors` standard errors of the paired
    difference. */
 bool candidate_beats(const struct chooser *chooser, const struct candidate *large, const struct candidate *small,
@@ -84,6 +86,17 @@ size_t chooser_rank_most(const struct chooser *chooser); /* the largest rank tha
 /* The path over ranks 0, 1, 2, ..., from offsets alone; *chosen is the smallest rank that no larger one beats. */
 fescue_status path_walk(struct chooser *chooser, const struct candidate *alone, size_t rank_most,
                         struct candidate *chosen);
+/* To a given rank, without judging the ranks on the way. */
+fescue_status path_climb(struct chooser *chooser, const struct candidate *alone, size_t rank, struct candidate *chosen);
+enum { SETTLE_ROUNDS = 4 }; /* beyond which offsets and low-rank part hardly move any more */
+/* Offsets and low-rank part in turns, at most SETTLE_ROUNDS times, while the hidden cells gain. */
+fescue_status path_settle(struct chooser *chooser, const struct solve_limits *limits, bool at_once,
+                          struct candidate *candidate);
+/* A rival from the spectral start at the candidate's rank and ridge; takes its place when it has less error. */
+fescue_status path_challenge(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate);
+/* When the errors are small: whether a tight fit without ridge meets the hidden cells to rounding. */
+fescue_status path_try_exact(struct chooser *chooser, struct candidate *candidate);
+
 /* Whether the evidence fit takes the path's place. */
 bool evidence_is_meant(const struct chooser *chooser);
 /* What the candidate's kind of offsets and noise asks of the evidence fit. */
@@ -91,15 +104,5 @@ struct evidence_request evidence_request_of(const struct chooser *chooser, const
 /* The evidence fit for each kind of offsets, given as offsets alone; *best is the kind of the winner. */
 fescue_status evidence_compete(struct chooser *chooser, const struct candidate *const *alone, size_t count,
                                struct candidate *winner, size_t *best);
-/* To a given rank, without judging the ranks on the way. */
-fescue_status path_climb(struct chooser *chooser, const struct candidate *alone, size_t rank, struct candidate *chosen);
-enum { SETTLE_ROUNDS = 4 }; /* beyond which offsets and low-rank part hardly move any more */
-/* Offsets and low-rank part in turns, up to `rounds` times, while the hidden cells gain. */
-fescue_status path_settle(struct chooser *chooser, const struct solve_limits *limits, size_t rounds,
-                          struct candidate *candidate);
-/* A rival from the spectral start at the candidate's rank and ridge; takes its place when it has less error. */
-fescue_status path_challenge(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate);
-/* When the errors are small: whether a tight fit without ridge meets the hidden cells to rounding. */
-fescue_status path_try_exact(struct chooser *chooser, struct candidate *candidate);
 
 #endif

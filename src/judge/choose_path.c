@@ -50,15 +50,15 @@ done:
     return status;
 }
 
-fescue_status path_settle(struct chooser *chooser, const struct solve_limits *limits, size_t rounds,
+fescue_status path_settle(struct chooser *chooser, const struct solve_limits *limits, bool at_once,
                           struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
     struct candidate trial = {0};
     bool gained = candidate->offsets.kind != FESCUE_OFFSETS_NONE && candidate->point.rank > 0;
-    for (size_t round = 0; round < rounds && gained && !chooser_is_late(chooser); round++) {
+    for (size_t round = 0; round < SETTLE_ROUNDS && gained && !chooser_is_late(chooser); round++) {
         TRY(candidate_copy(chooser, candidate, &trial));
-        TRY(candidate_refit(chooser, limits, &trial));
+        TRY(candidate_refit(chooser, limits, at_once, &trial));
         gained = trial.errors.rmse < candidate->errors.rmse * (1 - gain_worth);
         if (gained)
             candidate_swap(&trial, candidate);
@@ -114,7 +114,7 @@ static fescue_status rank_step(struct chooser *chooser, double best_rmse, struct
     problem_set_ridge(&chooser->problem, ridge);
     TRY(start_grow(&chooser->problem, (uint64_t)chooser->options->seed, &candidate->point));
     TRY(candidate_fit(chooser, ridge, &limits, candidate));
-    TRY(path_settle(chooser, &limits, SETTLE_ROUNDS, candidate));
+    TRY(path_settle(chooser, &limits, false, candidate));
     TRY(ridge_search(chooser, &limits, candidate));
     if (candidate->errors.rmse >= best_rmse * (1 - gain_worth) || is_scarce(chooser, candidate->point.rank))
         TRY(path_challenge(chooser, &limits, candidate));
@@ -177,7 +177,7 @@ fescue_status path_climb(struct chooser *chooser, const struct candidate *alone,
         goto done;
     TRY(rank_climb(chooser, rank, chosen));
     TRY(candidate_fit(chooser, ridge_of(chooser, chosen), &limits, chosen));
-    TRY(path_settle(chooser, &limits, SETTLE_ROUNDS, chosen));
+    TRY(path_settle(chooser, &limits, false, chosen));
     TRY(ridge_search(chooser, &limits, chosen));
     TRY(path_try_exact(chooser, chosen));
 done:

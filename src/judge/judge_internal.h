@@ -1,7 +1,7 @@
 /* SPDX-License-Identifier: MIT
  *
- * The inside of judge: the graph of observed cells (core, blocks), order statistics (order), a text that grows
- * (page), and the parts of the survey.
+ * The inside of judge: the graph of observed cells (core, blocks), offsets again (refit), order statistics (order), a
+ * text that grows (page), and the parts of the survey.
  */
 #ifndef FESCUE_JUDGE_INTERNAL_H
 #define FESCUE_JUDGE_INTERNAL_H
@@ -20,6 +20,10 @@ fescue_status core_numbers(fescue_context *context, const struct cells *cells, u
 fescue_status blocks_find(fescue_context *context, const struct cells *cells, const uint32_t *row_core,
                           const uint32_t *column_core, uint32_t k, uint32_t *row_block, uint32_t *column_block,
                           uint32_t *blocks);
+
+/* Improves offsets, those of the cells, towards those of what the point (in the table's units) leaves of them. */
+fescue_status refit_sweep(fescue_context *context, const struct cells *cells, const struct low_rank *point,
+                          struct offsets *offsets);
 
 /* The number at `place` (from 0) when all are sorted; no NaN among them. value_at(data, k) is the k-th. O(count). */
 typedef double order_value(const void *data, uint64_t k);
