@@ -6,6 +6,7 @@
 
 #include <inttypes.h>
 #include <math.h>
+#include <stdio.h>
 #include <string.h>
 
 struct summary {
@@ -14,17 +15,27 @@ struct summary {
     struct text text;
 };
 
+enum { WORDS_SIZE = 48 };
+
+/* "1 cell", "2 cells". */
+static const char *count_words(uint64_t count, const char *noun, char text[WORDS_SIZE])
+{
+    snprintf(text, WORDS_SIZE, "%" PRIu64 " %s%s", count, noun, count == 1 ? "" : "s");
+    return text;
+}
+
 static void table_lines(struct summary *summary)
 {
     const fescue_table *table = summary->fill->table;
     const struct cells *cells = &table->cells;
-    char share[32];
+    char share[32], rows[WORDS_SIZE], columns[WORDS_SIZE], seen[WORDS_SIZE];
     double all = (double)cells->rows * (double)cells->columns;
-    text_add(&summary->text, "table      %" PRIu32 " rows x %" PRIu32 " columns, %" PRIu64 " cells seen (%s %%)\n",
-             cells->rows, cells->columns, cells->count, real_to_words(100 * (double)cells->count / all, 3, share));
+    real_to_words(100 * (double)cells->count / all, 3, share);
+    text_add(&summary->text, "table      %s x %s, %s seen (%s %%)\n", count_words(cells->rows, "row", rows),
+             count_words(cells->columns, "column", columns), count_words(cells->count, "cell", seen), share);
     if (table->duplicates > 0)
-        text_add(&summary->text, "           %" PRIu64 " cells came more than once and were merged\n",
-                 table->duplicates);
+        text_add(&summary->text, "           merged: %s that came more than once\n",
+                 count_words(table->duplicates, "cell", seen));
 }
 
 static const char *offsets_text(enum fescue_offsets offsets)
@@ -55,7 +66,7 @@ static void model_lines(struct summary *summary)
     const struct fescue_options *options = &summary->fill->options;
     const struct choice *choice = &summary->fill->choice;
     struct text *text = &summary->text;
-    char ridge[32];
+    char ridge[32], tried[WORDS_SIZE], hidden[WORDS_SIZE];
     bool chooses_rank = options->rank == FESCUE_AUTO, chooses_ridge = options->ridge == (double)FESCUE_AUTO;
     bool chooses_offsets = options->offsets == FESCUE_OFFSETS_AUTO;
     text_add(text, "model      %s (%s), rank %" PRIu32 " (%s)", offsets_text(choice->offsets), by_whom(chooses_offsets),
@@ -69,9 +80,9 @@ static void model_lines(struct summary *summary)
     if (choice->is_learnt && choice->learnt.noise != EVIDENCE_NOISE_EQUAL)
         text_add(text, "           noise of every %s learnt on its own: less error on hidden cells\n",
                  choice->learnt.noise == EVIDENCE_NOISE_COLUMNS ? "column" : "row");
-    if (choice->path_count > 1)
-        text_add(text, "           out of %" PRIu64 " fits tried on %" PRIu64 " hidden cells\n", choice->path_count,
-                 choice->errors.count);
+    if (choice->path_count > 1 && choice->errors.count > 0)
+        text_add(text, "           out of %s tried on %s\n", count_words(choice->path_count, "fit", tried),
+                 count_words(choice->errors.count, "hidden cell", hidden));
     if (summary->fill->is_search_cut)
         text_add(text, "           WARNING: the time limit ended the search; allow more, or give a --rank\n");
     else if (choice->rank == 0 && chooses_rank && choice->errors.count > 0)
@@ -92,13 +103,13 @@ static void error_lines(struct summary *summary)
     const struct choice *choice = &summary->fill->choice;
     const struct errors *errors = &choice->errors, *alone = &choice->offsets_errors;
     struct text *text = &summary->text;
-    char rmse[32], mae[32], alone_rmse[32], alone_mae[32];
+    char rmse[32], mae[32], alone_rmse[32], alone_mae[32], hidden[WORDS_SIZE];
     if (errors->count == 0) {
         text_add(text, "error      not measured: no cells were hidden\n");
         return;
     }
-    text_add(text, "error      RMSE %s, MAE %s on %" PRIu64 " hidden cells\n", real_to_words(errors->rmse, 4, rmse),
-             real_to_words(errors->mae, 4, mae), errors->count);
+    text_add(text, "error      RMSE %s, MAE %s on %s\n", real_to_words(errors->rmse, 4, rmse),
+             real_to_words(errors->mae, 4, mae), count_words(errors->count, "hidden cell", hidden));
     if (choice->rank > 0)
         text_add(text, "           %s: RMSE %s, MAE %s\n", alone_text(choice->offsets),
                  real_to_words(alone->rmse, 4, alone_rmse), real_to_words(alone->mae, 4, alone_mae));
@@ -141,10 +152,11 @@ static void fit_lines(struct summary *summary)
 {
     const struct solve_result *result = &summary->fill->fit.result;
     struct text *text = &summary->text;
+    char iterations[WORDS_SIZE];
     if (summary->fill->fit.model.low_rank.rank == 0)
         return;
-    text_add(text, "fit        %s on all cells, %" PRIu64 " iterations: %s\n", result->solver, result->iterations,
-             solve_stop_text(result->stop));
+    text_add(text, "fit        %s on all cells, %s: %s\n", result->solver,
+             count_words(result->iterations, "iteration", iterations), solve_stop_text(result->stop));
     if (!solve_converged(result->stop))
         text_add(text, "           WARNING: the fit did not converge; %s\n", advice(result->stop));
 }
@@ -153,6 +165,7 @@ static void filled_lines(struct summary *summary)
 {
     const struct run *run = summary->run;
     struct text *text = &summary->text;
+    char filled[WORDS_SIZE];
     uint64_t low_rank = run->filled[BASIS_LOW_RANK], offsets = run->filled[BASIS_OFFSETS];
     uint64_t mean = run->filled[BASIS_MEAN], all = low_rank + offsets + mean;
     if (all == 0) {
@@ -160,11 +173,10 @@ static void filled_lines(struct summary *summary)
         return;
     }
     text_add(text,
-             "filled     %" PRIu64 " cells; by what the data determine: low-rank %" PRIu64 ", offsets %" PRIu64
-             ", mean %" PRIu64 "\n",
-             all - run->blank, low_rank, offsets, mean);
+             "filled     %s; by what the data determine: low-rank %" PRIu64 ", offsets %" PRIu64 ", mean %" PRIu64 "\n",
+             count_words(all - run->blank, "cell", filled), low_rank, offsets, mean);
     if (run->blank > 0)
-        text_add(text, "           %" PRIu64 " left blank, as the data do not determine them (--strict)\n", run->blank);
+        text_add(text, "           left blank: %" PRIu64 " that the data do not determine (--strict)\n", run->blank);
     else if (run->model->low_rank.rank > 0 && offsets + mean > 0 && !run->options->strict)
         text_add(text, "           do not rely on the %" PRIu64 " that are not low-rank; --strict leaves them blank\n",
                  offsets + mean);

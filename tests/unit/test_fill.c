@@ -605,7 +605,7 @@ static void few_iterations_are_a_warning(void **state)
     struct fescue_options options = OPTIONS(context, "iterations", "1", "rank", "2", "ridge", "0.1");
     fescue_table *table = table_sown(context, &noisy);
     fescue_fill *fill = filled(table, &options);
-    has_text(fill, "1 iterations: the limit of iterations was reached");
+    has_text(fill, "1 iteration: the limit of iterations was reached");
     has_text(fill, "WARNING: the fit did not converge; more --iterations may end it\n");
     fescue_fill_destroy(&fill);
     fescue_table_destroy(&table);
