@@ -145,7 +145,7 @@ def effects_check(name, table, fitted, exact):
         error = max(abs(want[0] - mean), np.max(np.abs(want[1] - row)), np.max(np.abs(want[2] - column)))
         # Rounding of the normal equations, whose condition is about cells / ridge, uncentred as they are.
         finite = [ridge for ridge in ridges if np.isfinite(ridge)]
-        check(f"{name}: effects, spsolve", error, max(1e-10, 10 * np.finfo(float).eps * table.count / min(finite)))
+        check(f"{name}: effects, spsolve", error, max(1e-10, 10 * np.finfo(float).eps * table.count / min(finite, default=1.0)))
     solution = spl.lsqr(system, side, atol=1e-15, btol=1e-15, conlim=0, iter_lim=3000)[0]
     want = table.spread(solution, ridges)
     error = max(abs(want[0] - mean), np.max(np.abs(want[1] - row)), np.max(np.abs(want[2] - column)))
