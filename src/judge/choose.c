@@ -205,6 +205,18 @@ done:
     return status;
 }
 
+/* A model of rank 0 without offsets says 0 everywhere, which nobody takes for an answer. It is left over when nothing
+   beats it: the hidden cells are too few to tell, or the time is up. The mean and shrunk effects do better, or no harm.
+ */
+static fescue_status winner_ground(struct chooser *chooser, const struct kind *kinds, size_t count,
+                                   struct candidate *winner, size_t *best)
+{
+    if (count < KINDS_MOST || winner->point.rank > 0 || winner->offsets.kind != FESCUE_OFFSETS_NONE)
+        return FESCUE_OK;
+    *best = KINDS_MOST - 1;
+    return candidate_copy(chooser, &kinds[*best].alone, winner);
+}
+
 /* ---- the whole -------------------------------------------------------------------------------------------------- */
 
 static fescue_status winner_finish(struct chooser *chooser, struct candidate *winner)
@@ -277,6 +289,7 @@ static fescue_status choose_on(fescue_context *context, const struct holdout *ho
         TRY(kinds_learn(&chooser, kinds, count, &winner, &best));
     else
         TRY(kinds_compete(&chooser, kinds, count, &winner, &best));
+    TRY(winner_ground(&chooser, kinds, count, &winner, &best));
     TRY(winner_finish(&chooser, &winner));
     TRY(choice_fill(&chooser, kinds, best, &winner, choice));
 done:

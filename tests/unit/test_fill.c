@@ -275,6 +275,27 @@ static void constant_tables_are_filled_with_the_constant(void **state)
     }
 }
 
+/* Too little to choose by, or no time: the mean and shrunk effects, never 0 for a table of numbers around 100. */
+static void with_nothing_to_go_by_the_mean_is_the_ground(void **state)
+{
+    static const double numbers[] = {101, 102, 103, 102, 104, NAN, 103, NAN, 109};
+    fescue_context *context = bench_of(state)->context;
+    static const char *const settings[][3] = {{"holdout", "0.1", NULL},
+                                              {"holdout", "0.5", NULL},
+                                              {"holdout", "0", NULL},
+                                              {"time-limit", "0.000001", NULL},
+                                              {"rank", "0", NULL}};
+    for (size_t k = 0; k < sizeof settings / sizeof settings[0]; k++) {
+        struct fescue_options options = options_of(context, settings[k]);
+        fescue_table *table = table_made(context, 3, 3, numbers);
+        fescue_fill *fill = filled(table, &options);
+        assert_close(fescue_fill_estimate(fill, 1, 2), 103, 6);
+        assert_close(fescue_fill_estimate(fill, 2, 1), 103, 6);
+        fescue_fill_destroy(&fill);
+        fescue_table_destroy(&table);
+    }
+}
+
 static void a_table_without_cells_is_refused(void **state)
 {
     fescue_context *context = bench_of(state)->context;
@@ -639,6 +660,7 @@ int main(void)
         BENCH_TEST(odd_shapes_are_filled),
         BENCH_TEST(a_full_table_has_nothing_to_fill),
         BENCH_TEST(constant_tables_are_filled_with_the_constant),
+        BENCH_TEST(with_nothing_to_go_by_the_mean_is_the_ground),
         BENCH_TEST(a_table_without_cells_is_refused),
         BENCH_TEST(a_rank_beyond_the_table_is_lowered_and_said),
         BENCH_TEST(without_a_holdout_nothing_is_announced),
