@@ -113,6 +113,17 @@ comma = cells("wide")
 check("estimates do not depend on the separator", cells("tabs") == comma)
 END
 
+# A decimal comma where the semicolon separates: seen cells stay, estimates take it up.
+sed 's/"//g; s/,/;/g; s/\./,/g' sown/table.csv >comma.csv
+try 0 fill comma.csv -o comma
+try 0 fill sown/table.csv -o point
+look "decimal comma" <<'END'
+given, filled, point = wide("comma.csv", ";"), wide("comma/filled.csv", ";"), wide("point/filled.csv")
+check("seen cells as they were", all(filled[0][k] == v for k, v in given[0].items() if v))
+check("estimates as with a point, written with a comma",
+      all(v.replace(",", ".") == point[0][k] for k, v in filled[0].items()) and not any("." in v for v in filled[0].values()))
+END
+
 # ---- long text --------------------------------------------------------------------------------------------------------
 cat >long.csv <<'END'
 wer,was,"wie, viel"
