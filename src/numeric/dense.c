@@ -56,10 +56,38 @@ struct matrix dense_piece(struct matrix a, const struct dense_pieces *pieces, si
     return a;
 }
 
+struct product {
+    double alpha;
+    struct matrix a, b, c;
+    bool transpose_a, transpose_b;
+};
+
+/* c = alpha op(a) op(b) + beta c, nothing empty. */
+static void product_make(const struct product *p, double beta)
+{
+    size_t inner = p->transpose_a ? p->a.rows : p->a.columns;
+    cblas_dgemm(CblasRowMajor, p->transpose_a ? CblasTrans : CblasNoTrans, p->transpose_b ? CblasTrans : CblasNoTrans,
+                dense_size(p->c.rows), dense_size(p->c.columns), dense_size(inner), p->alpha, p->a.data,
+                dense_size(p->a.stride), p->b.data, dense_size(p->b.stride), beta, p->c.data, dense_size(p->c.stride));
+}
+
+static struct matrix lines_of(struct matrix a, size_t first, size_t count)
+{
+    a.data += first * a.stride;
+    a.rows = a.rows - first < count ? a.rows - first : count;
+    return a;
+}
+
+/* Products of tall, narrow matrices wait for memory: a piece of lines that stays in the cache at a time is up to three
+   times as fast as all at once. Wide ones gemm cuts better by itself. */
+enum { NARROW_MOST = 64, PIECE_NUMBERS = 16384 };
+
 void matrix_multiply(double alpha, struct matrix a, bool transpose_a, struct matrix b, bool transpose_b, double beta,
                      struct matrix c)
 {
     size_t inner = transpose_a ? a.rows : a.columns;
+    struct product part = {.alpha = alpha, .transpose_a = transpose_a, .transpose_b = transpose_b, .b = b, .c = c};
+    size_t width = a.columns > c.columns ? a.columns : c.columns;
     assert(c.rows == (transpose_a ? a.columns : a.rows) && c.columns == (transpose_b ? b.rows : b.columns));
     assert(inner == (transpose_b ? b.columns : b.rows));
     dense_threads_hold();
@@ -71,9 +99,15 @@ void matrix_multiply(double alpha, struct matrix a, bool transpose_a, struct mat
                 MATRIX_AT(c, i, j) = beta == 0 ? 0 : beta * MATRIX_AT(c, i, j);
         return;
     }
-    cblas_dgemm(CblasRowMajor, transpose_a ? CblasTrans : CblasNoTrans, transpose_b ? CblasTrans : CblasNoTrans,
-                dense_size(c.rows), dense_size(c.columns), dense_size(inner), alpha, a.data, dense_size(a.stride),
-                b.data, dense_size(b.stride), beta, c.data, dense_size(c.stride));
+    size_t lines = width <= NARROW_MOST && !(transpose_a && transpose_b) ? PIECE_NUMBERS / width : a.rows;
+    for (size_t first = 0; first < a.rows; first += lines) {
+        part.a = lines_of(a, first, lines);
+        if (transpose_a)
+            part.b = transpose_b ? b : lines_of(b, first, lines);
+        else
+            part.c = lines_of(c, first, lines);
+        product_make(&part, transpose_a && first > 0 ? 1 : beta);
+    }
 }
 
 size_t dense_work_size(size_t lines, size_t columns)

@@ -5,16 +5,18 @@
  * First way, Cholesky QR done twice (Yamamoto, Nakatsukasa, Yanagisawa, Fukaya 2015, "Roundoff error analysis of the
  * Cholesky QR2 algorithm", ETNA 44, algorithm 2):
  *     G = A'A = R1'R1,  Q1 = A R1^-1,      G2 = Q1'Q1 = R2'R2,  Q = Q1 R2^-1,  R = R2 R1
- * Three passes over A, each a matrix product, so that it runs at the speed of gemm on pieces of lines. Q is as
- * orthonormal as Householder's while cond(A) is below about 1e8, and both facts that this rests on are looked at:
- * R1's diagonal (columns scaled to length 1) may not fall below 1e-6, and G2 may not differ from I by more than 1e-2.
+ * All work on A is in matrix products over pieces of lines that stay in the cache. Q is as orthonormal as Householder's
+ * while cond(A) is below about 1e8, and both facts that this rests on are looked at: R1's diagonal (columns scaled to
+ * length 1) may not fall below 1e-6, and G2 may not differ from I by more than 1e-2. Departure: where cond(R1), columns
+ * scaled, is below 30 k, and always for R2, which is near I, A is multiplied by the inverse instead of solved with R: a
+ * fifth of the time, and an error of eps cond(R1).
  *
  * Second way, Householder (LAPACK gelqf, orglq on the transpose, which is how LAPACK sees row-major lines): for what
  * the first refuses, for rank-deficient A above all, where Q must still be orthonormal, and for small A. When the first
  * way is left after its first pass, A has already become Q1, which is decomposed in its stead: R = R' R1.
  *
- * Cost: 4 n k^2 flops against Householder's 4 n k^2 at a small share of gemm's speed. Parallel: the pieces of lines;
- * G is the sum over pieces in their order, so that bits do not depend on threads.
+ * Cost: 6 n k^2 flops in products, against Householder's 4 n k^2 at a small share of their speed. Parallel: the pieces
+ * of lines; G is the sum over pieces in their order, so that bits do not depend on threads.
  */
 #include "numeric/dense_internal.h"
 
@@ -30,35 +32,64 @@ struct qr {
     double *partial;  /* one k x k sum a piece */
     double *gram;     /* k x k; its Cholesky factor afterwards */
     double *triangle; /* k x k, R1 */
+    double *inverse;  /* k x k, of the triangle to be divided by */
     double *room;     /* tau and LAPACK's workspace */
+    enum { DIVIDE_NOT, DIVIDE_SOLVE, DIVIDE_MULTIPLY } divide;
+    bool sum; /* make partial sums of A'A, after dividing */
 };
 
 /* Below this many lines a column the copies and sums of the first way cost what they save. */
 enum { LINES_A_COLUMN = 4 };
+/* Lines that are divided and summed before the next are touched: 128 kB, in numbers. */
+enum { CHUNK_NUMBERS = 16384 };
+/* Up to here a whole product is faster than the half of it that is needed. */
+enum { WHOLE_PRODUCT_MOST = 40 };
 
-static void piece_gram(void *job, size_t piece, size_t worker)
+static void chunk_divide(const struct qr *qr, struct matrix a)
 {
-    struct qr *qr = job;
-    struct matrix a = dense_piece(qr->a, &qr->pieces, piece);
-    size_t k = a.columns;
-    (void)worker;
-    cblas_dsyrk(CblasRowMajor, CblasUpper, CblasTrans, dense_size(k), dense_size(a.rows), 1, a.data,
-                dense_size(a.stride), 0, qr->partial + piece * k * k, dense_size(k));
+    lapack_int n = dense_size(a.rows), k = dense_size(a.columns), stride = dense_size(a.stride);
+    if (qr->divide == DIVIDE_SOLVE)
+        cblas_dtrsm(CblasRowMajor, CblasRight, CblasUpper, CblasNoTrans, CblasNonUnit, n, k, 1, qr->gram, k, a.data,
+                    stride);
+    else if (qr->divide == DIVIDE_MULTIPLY)
+        cblas_dtrmm(CblasRowMajor, CblasRight, CblasUpper, CblasNoTrans, CblasNonUnit, n, k, 1, qr->inverse, k, a.data,
+                    stride);
 }
 
-static void piece_divide(void *job, size_t piece, size_t worker)
+static void chunk_sum(struct matrix a, double *sum)
 {
-    struct qr *qr = job;
-    struct matrix a = dense_piece(qr->a, &qr->pieces, piece);
-    (void)worker;
-    cblas_dtrsm(CblasRowMajor, CblasRight, CblasUpper, CblasNoTrans, CblasNonUnit, dense_size(a.rows),
-                dense_size(a.columns), 1, qr->gram, dense_size(a.columns), a.data, dense_size(a.stride));
+    lapack_int n = dense_size(a.rows), k = dense_size(a.columns), stride = dense_size(a.stride);
+    if (k <= WHOLE_PRODUCT_MOST)
+        cblas_dgemm(CblasRowMajor, CblasTrans, CblasNoTrans, k, k, n, 1, a.data, stride, a.data, stride, 1, sum, k);
+    else
+        cblas_dsyrk(CblasRowMajor, CblasUpper, CblasTrans, k, n, 1, a.data, stride, 1, sum, k);
 }
 
-static void gram_make(struct qr *qr)
+static void piece_pass(void *job, size_t piece, size_t worker)
+{
+    struct qr *qr = job;
+    struct matrix a = dense_piece(qr->a, &qr->pieces, piece), chunk = a;
+    size_t k = a.columns, lines = CHUNK_NUMBERS / k + 1;
+    double *sum = qr->partial + piece * k * k;
+    (void)worker;
+    memset(sum, 0, k * k * sizeof *sum);
+    for (size_t first = 0; first < a.rows; first += lines) {
+        chunk.data = &MATRIX_AT(a, first, 0);
+        chunk.rows = a.rows - first < lines ? a.rows - first : lines;
+        chunk_divide(qr, chunk);
+        if (qr->sum)
+            chunk_sum(chunk, sum);
+    }
+}
+
+static void lines_pass(struct qr *qr)
+{
+    team_run(qr->context, qr->pieces.count, piece_pass, qr);
+}
+
+static void partials_add(struct qr *qr)
 {
     size_t k = qr->a.columns;
-    team_run(qr->context, qr->pieces.count, piece_gram, qr);
     team_sum(qr->context, qr->partial, qr->pieces.count, k * k, qr->gram);
 }
 
@@ -82,6 +113,25 @@ static bool gram_factor(struct qr *qr, double least)
         memset(g + j * k, 0, j * sizeof *g);
     }
     return true;
+}
+
+/* inverse = gram^-1, both upper triangles. */
+static void triangle_invert(struct qr *qr)
+{
+    size_t k = qr->a.columns;
+    memcpy(qr->inverse, qr->gram, k * k * sizeof *qr->gram);
+    LAPACKE_dtrtri_work(LAPACK_COL_MAJOR, 'L', 'N', dense_size(k), qr->inverse, dense_size(k));
+}
+
+/* Frobenius, of gram with its columns scaled to length 1; the lengths lie in room since gram_factor. */
+static double triangle_condition(const struct qr *qr)
+{
+    size_t k = qr->a.columns;
+    double square = 0;
+    for (size_t i = 0; i < k; i++)
+        for (size_t j = i; j < k; j++)
+            square += pow(qr->room[i] * qr->inverse[i * k + j], 2);
+    return sqrt((double)k * square);
 }
 
 static double identity_distance(const double *g, size_t k)
@@ -148,17 +198,25 @@ static void cholesky_twice(struct qr *qr, int *passes)
 {
     size_t k = qr->a.columns;
     *passes = 0;
-    gram_make(qr);
+    qr->divide = DIVIDE_NOT;
+    qr->sum = true;
+    lines_pass(qr);
+    partials_add(qr);
     /* 1e-6: cond(A) is then far enough below 1e8, see above. */
     if (!gram_factor(qr, 1e-6))
         return;
     memcpy(qr->triangle, qr->gram, k * k * sizeof *qr->gram);
-    team_run(qr->context, qr->pieces.count, piece_divide, qr);
+    triangle_invert(qr);
+    qr->divide = triangle_condition(qr) < 30 * (double)k ? DIVIDE_MULTIPLY : DIVIDE_SOLVE;
+    lines_pass(qr);
+    partials_add(qr);
     *passes = 1;
-    gram_make(qr);
     if (!(identity_distance(qr->gram, k) < 1e-2) || !gram_factor(qr, 0.5))
         return;
-    team_run(qr->context, qr->pieces.count, piece_divide, qr);
+    triangle_invert(qr);
+    qr->divide = DIVIDE_MULTIPLY;
+    qr->sum = false;
+    lines_pass(qr);
     *passes = 2;
 }
 
@@ -174,7 +232,8 @@ fescue_status dense_qr(fescue_context *context, struct matrix a, struct matrix r
     dense_threads_hold();
     qr.gram = work;
     qr.triangle = qr.gram + (k + 1) * k;
-    qr.room = qr.triangle + k * k;
+    qr.inverse = qr.triangle + k * k;
+    qr.room = qr.inverse + k * k;
     qr.partial = qr.room + (DENSE_BLOCK + 1) * k;
     if (a.rows >= LINES_A_COLUMN * k)
         cholesky_twice(&qr, &passes);

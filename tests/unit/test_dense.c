@@ -338,6 +338,43 @@ static void products_of_all_kinds(void **state)
     assert_true(MATRIX_AT(c, 1, 1) == 0 && MATRIX_AT(c, 2, 0) == 0);
 }
 
+/* Lines that are worked on piece by piece: (a'b) x = a'(b x), and (a m) x = a (m x). */
+static void products_of_tall_matrices(void **state)
+{
+    static const struct shape many[] = {{5000, 5}, {20000, 16}, {3000, 64}, {2000, 70}};
+    for (size_t k = 0; k < COUNT(many); k++) {
+        struct stand stand;
+        size_t columns = many[k].columns;
+        double x[70], want;
+        stand_open(&stand, bench_of(state)->context, many[k]);
+        for (size_t j = 0; j < columns; j++)
+            x[j] = 1 + (double)(j % 3);
+        matrix_scale(0.5, stand.copy);
+        matrix_multiply(2, stand.a, true, stand.copy, false, 0, stand.product);
+        for (size_t j = 0; j < columns; j++) {
+            double got = 0, sum = 0, size = 0;
+            for (size_t c = 0; c < columns; c++)
+                got += MATRIX_AT(stand.product, j, c) * x[c];
+            for (size_t i = 0; i < many[k].lines; i++) {
+                want = 0;
+                for (size_t c = 0; c < columns; c++)
+                    want += 2 * MATRIX_AT(stand.copy, i, c) * x[c];
+                sum += MATRIX_AT(stand.a, i, j) * want;
+                size += fabs(MATRIX_AT(stand.a, i, j) * want);
+            }
+            assert_close(got, sum, 1e-13 * size);
+        }
+        matrix_multiply(1, stand.a, false, stand.product, false, -1, stand.copy);
+        for (size_t i = 0; i < many[k].lines; i += 37) {
+            want = -0.5 * MATRIX_AT(stand.a, i, 0);
+            for (size_t c = 0; c < columns; c++)
+                want += MATRIX_AT(stand.a, i, c) * MATRIX_AT(stand.product, c, 0);
+            assert_close(MATRIX_AT(stand.copy, i, 0), want, 1e-10 * (1 + fabs(want)));
+        }
+        stand_close(&stand);
+    }
+}
+
 static void what_is_not_finite_is_refused(void **state)
 {
     struct stand stand;
@@ -363,6 +400,7 @@ int main(void)
         BENCH_TEST(eigen_of_many_sizes),
         BENCH_TEST(eigenvalues_of_the_second_difference),
         BENCH_TEST(products_of_all_kinds),
+        BENCH_TEST(products_of_tall_matrices),
         BENCH_TEST(what_is_not_finite_is_refused),
     };
     return cmocka_run_group_tests(tests, NULL, NULL);
