@@ -198,3 +198,22 @@ bool candidate_beats(const struct chooser *chooser, const struct candidate *larg
         return false; /* one hidden cell has no spread to judge by */
     return mean > errors * sqrt(spread * (double)groups / (double)(groups - 1));
 }
+
+/* Components, two-way effects counting as one. */
+static size_t candidate_size(const struct candidate *candidate)
+{
+    return candidate->point.rank + (candidate->offsets.kind == FESCUE_OFFSETS_BOTH);
+}
+
+bool candidate_succeeds(const struct chooser *chooser, const struct candidate *next, const struct candidate *best)
+{
+    static const double firmly =
+        2; /* the kinds are tried side by side at many ranks: one is passed by chance too often */
+    if (best->is_exact || next->is_exact)
+        return !best->is_exact || (next->is_exact && candidate_size(next) < candidate_size(best));
+    if (candidate_size(next) > candidate_size(best))
+        return candidate_beats(chooser, next, best, firmly);
+    if (candidate_size(next) < candidate_size(best))
+        return !candidate_beats(chooser, best, next, firmly);
+    return next->errors.rmse < best->errors.rmse;
+}

@@ -5,7 +5,7 @@
  * For each kind of offsets that competes a path over ranks (choose_path), at each rank a short walk along a ladder of
  * ridges (choose_ridge). When the offsets are to be chosen, two kinds compete: none, and both (with mean). Two-way
  * effects count as one component more, since they have as many unknowns as one, and the fit with more components must
- * beat the other by a standard error (candidate). A table that is U V' and nothing else thus keeps clear of offsets
+ * beat the other by two standard errors (candidate). A table that is U V' and nothing else thus keeps clear of offsets
  * that would leave components of their own behind, and a table of strong effects gets them. Offsets that explain
  * nothing of the hidden cells on their own are not followed any further.
  *
@@ -127,27 +127,6 @@ static void kinds_close(struct chooser *chooser, struct kind *kinds)
         candidate_free(chooser, &kinds[k].alone);
 }
 
-/* Components, two-way effects counting as one. */
-static size_t candidate_size(const struct candidate *candidate)
-{
-    return candidate->point.rank + (candidate->offsets.kind == FESCUE_OFFSETS_BOTH);
-}
-
-/* The better of two kinds: the smaller unless the larger beats it, by two standard errors, because the kinds are tried
-   side by side at many ranks and one is passed by chance too often. */
-static bool is_second_better(const struct chooser *chooser, const struct candidate *first,
-                             const struct candidate *second)
-{
-    static const double firmly = 2;
-    if (first->is_exact || second->is_exact)
-        return !first->is_exact || (second->is_exact && candidate_size(second) < candidate_size(first));
-    if (candidate_size(second) > candidate_size(first))
-        return candidate_beats(chooser, second, first, firmly);
-    if (candidate_size(second) < candidate_size(first))
-        return !candidate_beats(chooser, first, second, firmly);
-    return second->errors.rmse < first->errors.rmse;
-}
-
 static fescue_status kind_follow(struct chooser *chooser, const struct kind *kind, size_t rank_most,
                                  struct candidate *candidate)
 {
@@ -195,7 +174,7 @@ static fescue_status kinds_compete(struct chooser *chooser, struct kind *kinds, 
             continue;
         candidate_free(chooser, &candidate);
         TRY(kind_follow(chooser, &kinds[k], most, &candidate));
-        if (is_second_better(chooser, winner, &candidate)) {
+        if (candidate_succeeds(chooser, &candidate, winner)) {
             candidate_swap(winner, &candidate);
             *best = k;
         }

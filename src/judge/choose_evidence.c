@@ -137,7 +137,7 @@ fescue_status evidence_compete(struct chooser *chooser, const struct candidate *
         candidate_free(chooser, &candidate);
         TRY(learn(chooser, alone[k], &candidate));
         TRY(path_try_exact(chooser, &candidate));
-        if (candidate.is_exact || candidate_beats(chooser, &candidate, winner, 0)) {
+        if (candidate_succeeds(chooser, &candidate, winner)) {
             candidate_swap(winner, &candidate);
             *best = k;
         }

@@ -65,6 +65,9 @@ fescue_status candidate_refit(struct chooser *chooser, const struct solve_limits
    difference. */
 bool candidate_beats(const struct chooser *chooser, const struct candidate *large, const struct candidate *small,
                      double errors);
+/* Whether `next`, of another kind of offsets, takes the place of the best so far: the one with more components must
+   beat the other by two standard errors; two-way effects count as one component. */
+bool candidate_succeeds(const struct chooser *chooser, const struct candidate *next, const struct candidate *best);
 
 /* The ladder, from the strongest ridge down to none. */
 size_t ridge_rungs(void);
