@@ -199,21 +199,21 @@ bool candidate_beats(const struct chooser *chooser, const struct candidate *larg
     return mean > errors * sqrt(spread * (double)groups / (double)(groups - 1));
 }
 
-/* Components, two-way effects counting as one. */
-static size_t candidate_size(const struct candidate *candidate)
+/* Components, two-way effects counting as one; of equals the one with effects is simpler, as they are easier to read.
+ */
+static bool is_simpler(const struct candidate *a, const struct candidate *b)
 {
-    return candidate->point.rank + (candidate->offsets.kind == FESCUE_OFFSETS_BOTH);
+    size_t of_a = a->point.rank + (a->offsets.kind == FESCUE_OFFSETS_BOTH);
+    size_t of_b = b->point.rank + (b->offsets.kind == FESCUE_OFFSETS_BOTH);
+    return of_a < of_b || (of_a == of_b && a->point.rank < b->point.rank);
 }
 
 bool candidate_succeeds(const struct chooser *chooser, const struct candidate *next, const struct candidate *best)
 {
-    static const double firmly =
-        2; /* the kinds are tried side by side at many ranks: one is passed by chance too often */
+    static const double firmly = 2; /* kinds are tried side by side at many ranks: one is passed by chance too often */
     if (best->is_exact || next->is_exact)
-        return !best->is_exact || (next->is_exact && candidate_size(next) < candidate_size(best));
-    if (candidate_size(next) > candidate_size(best))
-        return candidate_beats(chooser, next, best, firmly);
-    if (candidate_size(next) < candidate_size(best))
+        return !best->is_exact || (next->is_exact && is_simpler(next, best));
+    if (is_simpler(next, best))
         return !candidate_beats(chooser, best, next, firmly);
-    return next->errors.rmse < best->errors.rmse;
+    return candidate_beats(chooser, next, best, firmly);
 }

@@ -66,7 +66,7 @@ fescue_status candidate_refit(struct chooser *chooser, const struct solve_limits
 bool candidate_beats(const struct chooser *chooser, const struct candidate *large, const struct candidate *small,
                      double errors);
 /* Whether `next`, of another kind of offsets, takes the place of the best so far: the one with more components must
-   beat the other by two standard errors; two-way effects count as one component. */
+   beat the other by two standard errors; two-way effects count as one component, and win at equal numbers. */
 bool candidate_succeeds(const struct chooser *chooser, const struct candidate *next, const struct candidate *best);
 
 /* The ladder, from the strongest ridge down to none. */
