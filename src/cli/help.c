@@ -38,14 +38,32 @@ static void value_text(const struct fescue_option *option, char *text, size_t si
     snprintf(text, size, "%s%s%s", words, list, automatic);
 }
 
+/* Prints what may stand for a value from column `from` on, broken behind a "|" where it does not fit; returns the
+   column where it ends. */
+static size_t value_wrap(FILE *file, const char *value, size_t from)
+{
+    size_t column = from;
+    while (*value != '\0') {
+        size_t length = strcspn(value, "|");
+        length += value[length] == '|';
+        if (column + length > WIDTH && column > from) {
+            fprintf(file, "\n%*s", (int)from, "");
+            column = from;
+        }
+        fwrite(value, 1, length, file);
+        column += length;
+        value += length;
+    }
+    return column;
+}
+
 static void option_print(FILE *file, char letter, const char *name, const char *value, const char *text)
 {
-    char head[128];
+    char head[64];
     int length = snprintf(head, sizeof head, letter != 0 ? "  -%c, " : "      ", letter);
-    length +=
-        snprintf(head + length, sizeof head - (size_t)length, "--%s%s%s", name, value[0] != '\0' ? " " : "", value);
+    length += snprintf(head + length, sizeof head - (size_t)length, "--%s%s", name, value[0] != '\0' ? " " : "");
     fputs(head, file);
-    size_t column = (size_t)length;
+    size_t column = value_wrap(file, value, (size_t)length);
     if (column + 2 > TEXT_COLUMN) {
         fputc('\n', file);
         column = 0;
@@ -56,7 +74,7 @@ static void option_print(FILE *file, char letter, const char *name, const char *
 
 static void library_option_print(FILE *file, const struct fescue_option *option)
 {
-    char value[96], text[256];
+    char value[512], text[512];
     value_text(option, value, sizeof value);
     bool has_standard = option->standard != NULL && option->kind != FESCUE_KIND_FLAG;
     snprintf(text, sizeof text, "%s%s%s%s", option->help, has_standard ? " [" : "",
