@@ -19,11 +19,14 @@
 #include "solve/stream_internal.h"
 
 #include <assert.h>
+#include <math.h>
 
 enum {
     MOST_BANDS = 16, /* enough for the balance of a few workers; each costs two searches a line */
     ALONE_BELOW = 8, /* lines: some 10 microseconds of work, what waking the others takes */
 };
+
+static const double ridge_share = 1e-4;
 
 static const struct half *half_short(const struct field *field)
 {
@@ -123,6 +126,13 @@ void batch_solve(struct batches *batches, struct matrix basis, double ridge)
     else
         for (size_t k = 0; k < batches->count; k++)
             line_solve(&job, k, 0);
+}
+
+double batch_ridge(const struct problem *problem)
+{
+    const struct cells *target = &problem->target;
+    double share = (double)target->count / ((double)target->rows * (double)target->columns);
+    return fmax(problem->lambda, ridge_share * share);
 }
 
 /* ---- bands ---------------------------------------------------------------------------------------------------------

@@ -26,9 +26,8 @@
  *
  * Departures. The paper has one forgetting factor for all, and no second pass. Lines come in batches whose w are all
  * taken from the U before the batch: of one line at first, of at most a hundredth of what has been seen, of at most 64;
- * that changes the error after a pass by some thousandths and lets workers share the work. The ridge is small beside
- * U_O'U_O (whose mean is the share of seen cells), 1/300 of it, or lambda when that is larger: it is there for lines
- * with fewer cells than r.
+ * that changes the error after a pass by some thousandths and lets workers share the work. The ridge (batch_ridge) is
+ * there for lines with fewer cells than r.
  *
  * Cost a pass: cells (r^2 for w and 3 r^2 for the corrections), short r^3 for the basis. Workspace: short r^2 / 2 for
  * the inverses. Parallel over lines for w, over bands of the shorter side for the corrections (batches.c): line i meets
@@ -39,7 +38,6 @@
 #include <assert.h>
 #include <math.h>
 
-static const double ridge_share = 1.0 / 300;
 /* The least memory also in unknowns: with fewer cells an unknown, P_i would follow the noise of single ones. */
 static const double memory_rank = 3;
 static const double first_memory = 3, memory_least = 0.1, memory_growth = 0.5;
@@ -188,13 +186,6 @@ static void band_learn(void *argument, size_t band, size_t worker)
     }
 }
 
-static double ridge_of(const struct problem *problem)
-{
-    const struct cells *target = &problem->target;
-    double share = (double)target->count / ((double)target->rows * (double)target->columns);
-    return fmax(problem->lambda, ridge_share * share);
-}
-
 /* Lines that may come together. */
 static size_t lag_of(const struct learn_job *job)
 {
@@ -206,7 +197,7 @@ static fescue_status recursion_pass(struct stream *stream)
 {
     struct batches *b = &stream->batches;
     struct learn_job job = {.stream = stream, .progress = stream->passes};
-    double ridge = ridge_of(stream->field->problem);
+    double ridge = batch_ridge(stream->field->problem);
     assert(b->rank <= PACKED_INVERSE_MOST);
     if (!((struct recursion *)stream->own)->known)
         inverses_begin(stream, ridge);

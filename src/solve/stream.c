@@ -5,8 +5,8 @@
  *     begin      warm, from the point that came, when the fall of the objective that its gradient promises,
  *                |g|^2 / (p |R|^2) with p the share of cells seen, is below a tenth; else cold, from a random basis
  *     pass       the solver's own; then U = Q T, the projection is evaluated at Q, and the best point seen is kept
- *     finish     when a pass lowers the objective by less than one in a hundred: Gauss-Newton and Newton steps in a
- *                trust region (trust.c) from the best point
+ *     finish     when a pass lowers the objective by less than one in a hundred, or, after the first three, does not
+ *                halve it: Gauss-Newton and Newton steps in a trust region (trust.c) from the best point
  *
  * A pass brings a point near the minimum within a few times the cost of reading the table, but not into it: what is
  * left falls like one over the number of passes. The trust region is slow from afar and fast from near. So each does
@@ -27,6 +27,10 @@
 static const double warm_below = 0.1;
 /* A fall of the objective by one in a hundred is one in two hundred of the error. */
 static const double worth = 1e-2;
+/* On a table without noise a pass takes off some such part for ever; then few of them should do as much as a step of
+   the trust region. */
+enum { PASSES_FEW = 3 };
+static const double worth_later = 0.5;
 /* As grassmann_trust_region.c has them. */
 static const struct trust_rules rules = {.accuracy = 0.1, .inner_most = 200, .exact = true};
 
@@ -136,7 +140,7 @@ static fescue_status pass_make(struct stream *stream)
     fescue_status status;
     TRY(stream->kind->pass(stream));
     stream->passes++;
-    if (!isfinite(matrix_norm(p->basis))) {
+    if (stream->lost || !isfinite(matrix_norm(p->basis))) {
         finish_begin(stream);
         goto done;
     }
@@ -144,7 +148,7 @@ static fescue_status pass_make(struct stream *stream)
     if (stream->kind->rebase != NULL)
         stream->kind->rebase(stream, stream->turn);
     trust_start(&stream->trust);
-    bool worthy = p->objective < (1 - worth) * stream->running;
+    bool worthy = p->objective < (1 - (stream->passes <= PASSES_FEW ? worth : worth_later)) * stream->running;
     stream->running = p->objective;
     if (p->objective <= stream->measure.objective) {
         matrix_copy(p->basis, stream->best);

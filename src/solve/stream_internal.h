@@ -37,6 +37,9 @@ static inline uint32_t batch_line(const struct batches *batches, size_t k)
 }
 /* weights: w_j = (U_j'U_j + ridge I)^-1 U_j't_j for every line of the batch. */
 void batch_solve(struct batches *batches, struct matrix basis, double ridge);
+/* A ridge for weights that something is to be learnt from: lambda, or a ten-thousandth of what U_j'U_j has on average
+   when that is larger, for lines with fewer cells than the rank. */
+double batch_ridge(const struct problem *problem);
 /* Calls the task for every band. */
 void batch_bands_run(struct batches *batches, team_task *task, void *job);
 /* The cells, by_long, of the batch's k-th line that lie in a band: from .. to - 1. */
@@ -75,6 +78,7 @@ struct stream {
     double running;  /* objective where the passes stand; infinite before the first of a cold run */
     uint32_t passes; /* done; a warm run begins with one */
     bool finishing;
+    bool lost; /* a pass met numbers that are none: its basis counts for nothing */
     void *own;
 };
 fescue_status stream_create(const struct stream_kind *kind, struct field *field, const struct low_rank *point,
@@ -84,5 +88,26 @@ void stream_measure(const void *state, struct solve_measure *measure);
 fescue_status stream_step(void *state, bool *moved);
 fescue_status stream_point_write(void *state, struct low_rank *point);
 void stream_destroy(fescue_context *context, void **state);
+
+/* ---- minibatches ---------------------------------------------------------------------------------------------------
+ */
+
+struct minibatch {
+    struct matrix base, base_gradient; /* U~, G~ */
+    struct matrix gradient;            /* G, then -D */
+    struct matrix mean;
+    struct matrix moment, core, core_right; /* rank x rank */
+    double *factor, *spectrum;              /* of H, packed; rank numbers */
+    size_t step;                            /* of this pass, from 0 */
+};
+/* What tells the two solvers apart that take gradient steps, one a batch (minibatch.c). */
+struct minibatch_rules {
+    bool reduced;   /* variance reduction by the gradient at the point where the pass began */
+    bool shrinking; /* steps get shorter, and the mean weighs later points more */
+};
+size_t minibatch_width(const struct field *field, size_t rank);
+void minibatch_reserve(struct arena *arena, const struct field *field, size_t rank);
+void minibatch_carve(struct stream *stream);
+fescue_status minibatch_pass(struct stream *stream, const struct minibatch_rules *rules);
 
 #endif

@@ -125,7 +125,7 @@ static void it_is_discounted_least_squares(void **state)
                     basis = random_point(context, ROWS, 5, RANK, 0);
     struct field field = {.problem = &plot.problem};
     struct sums sums;
-    double ridge = (double)plot.cells.count / (ROWS * COLUMNS) / 300, w[RANK], *work;
+    double ridge = (double)plot.cells.count / (ROWS * COLUMNS) * 1e-4, w[RANK], *work;
     void *solver;
     bool moved;
     assert_status(context, sweep_create(context, &plot.problem.target, RANK, &field.sweep), FESCUE_OK);
