@@ -144,7 +144,7 @@ static void long_lists_are_cut(void **state)
     fescue_context *context = bench_of(state)->context;
     char picture[20 * 20];
     for (int k = 0; k < 400; k++)
-        picture[k] = k / 20 < 7 && k % 20 != 19 ? '.' : (char)('0' + k * 7 % 10);
+        picture[k] = (char)(k / 20 < 7 && k % 20 != 19 ? '.' : '0' + k * 7 % 10);
     struct drawing drawing = {.rows = 20, .columns = 20, .picture = picture, .path = "thin.csv"};
     char *text = survey_of(context, &drawing);
     check_says(text, "7 rows with very few cells: 1, 2, 3, 4, 5 and 2 more.\n");
