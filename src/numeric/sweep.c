@@ -69,11 +69,11 @@ size_t sweep_width(const struct sweep *sweep, size_t rank)
     return (rank + lanes - 1) / lanes * lanes;
 }
 
-/* Doubles that one worker needs: a chunk's rows (doubles also where they are floats), two squares, three vectors. */
+/* Doubles that one worker needs: a chunk's rows (doubles also where they are floats), three squares, three vectors. */
 static size_t worker_room(const struct sweep *sweep)
 {
     size_t width = sweep_width(sweep, sweep->rank_most);
-    return (SWEEP_CHUNK + 2 * width + 3) * width;
+    return (SWEEP_CHUNK + 3 * width + 3) * width;
 }
 
 struct sweep_room sweep_room_of(const struct sweep *sweep, size_t worker)
@@ -84,7 +84,8 @@ struct sweep_room sweep_room_of(const struct sweep *sweep, size_t worker)
     struct sweep_room room = {.rows = at};
     room.gram = at + SWEEP_CHUNK * width;
     room.factor = room.gram + width * width;
-    room.side = room.factor + width * width;
+    room.lower = room.factor + width * width;
+    room.side = room.lower + width * width;
     room.solution = room.side + width;
     room.inverse = room.solution + width;
     return room;
@@ -274,13 +275,12 @@ void sweep_solve(struct sweep *sweep, const struct half *half, struct matrix rig
 void sweep_line_store(const struct sweep_job *job, const struct sweep_room *room, uint32_t line)
 {
     size_t rank = job->rank;
-    memcpy(&MATRIX_AT(job->product, line, 0), room->side, rank * sizeof *room->side);
+    memcpy(&MATRIX_AT(job->product, line, 0), room->solution, rank * sizeof *room->solution);
     if (job->factors == NULL)
         return;
     double *packed = job->factors + line * packed_size(rank);
     for (size_t i = 0; i < rank; i++)
-        for (size_t j = 0; j <= i; j++)
-            *packed++ = room->factor[j * job->width + i];
+        memcpy(packed + packed_size(i), room->lower + i * job->width, (i + 1) * sizeof *packed);
 }
 
 void sweep_line_solve(const struct sweep_job *job, const struct sweep_room *room, uint32_t line)

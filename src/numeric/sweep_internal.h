@@ -56,12 +56,12 @@ size_t sweep_width(const struct sweep *sweep, size_t rank);
 /* One worker's room in sweep_solve. Squares are width x width. */
 struct sweep_room {
     void *rows;                        /* SWEEP_CHUNK x width, gathered */
-    double *gram, *factor;             /* upper triangles of G and U, or the packed factor */
+    double *gram, *factor, *lower;     /* upper triangles of G and U, and U' */
     double *side, *solution, *inverse; /* width each */
 };
 struct sweep_room sweep_room_of(const struct sweep *sweep, size_t worker);
 
-/* A line whose U is in factor and whose weights are in side: writes both where they belong. */
+/* A line whose U' is in lower and whose weights are in solution: writes both where they belong. */
 void sweep_line_store(const struct sweep_job *job, const struct sweep_room *room, uint32_t line);
 /* A line that has no cells, or whose factor broke down: from gram on by the rules of packed_cholesky. */
 void sweep_line_solve(const struct sweep_job *job, const struct sweep_room *room, uint32_t line);

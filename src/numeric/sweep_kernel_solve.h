@@ -10,8 +10,9 @@
  *
  * The factor is made row by row in double, a whole row in registers or in the nearest cache:
  *     U_i = (G_i - sum over j < i of U_ji U_j) / sqrt(the i-th number of that)
- * with numbers left of the diagonal that mean nothing. A pivot below rank eps G_ii, eps that of REAL, has lost all its
- * digits: then sweep_line_solve, with its rule for such matrices, takes over from G.
+ * with numbers left of the diagonal that mean nothing, and set down as a column of U' as well. A pivot below rank eps
+ * G_ii, eps that of REAL, has lost all its digits: then sweep_line_solve, with its rule for such matrices, takes over
+ * from G.
  *
  * Cost, in multiply-adds: rank^2/2 a cell and rank^3/6 + rank^2 a line.
  */
@@ -94,7 +95,7 @@ static void line_gather(const struct sweep_job *job, const struct sweep_room *ro
         room->gram[i * width + i] += job->ridge[i];
 }
 
-/* Row i of U from those above it; 1 / U_ii, or 0 when the pivot broke down. */
+/* Row i of U from those above it, column i of U'; 1 / U_ii, or 0 when the pivot broke down. */
 INLINE double row_factor(const struct sweep_room *room, size_t i, size_t rank, size_t width, const size_t registers)
 {
     size_t first = i / WIDE_LANES;
@@ -116,10 +117,12 @@ INLINE double row_factor(const struct sweep_room *room, size_t i, size_t rank, s
     double inverse = 1 / sqrt(pivot);
     for (size_t v = first; v < registers; v++)
         *(wide *)(to + v * WIDE_LANES) = row[v] * inverse;
+    for (size_t j = i; j < rank; j++)
+        room->lower[j * width + i] = to[j];
     return inverse;
 }
 
-/* U, and the inverses of its diagonal; false on breakdown. G is left as it is. */
+/* U, U', and the inverses of the diagonal; false on breakdown. G is left as it is. */
 static bool line_factor(const struct sweep_room *room, size_t rank, size_t width)
 {
     size_t registers = width / WIDE_LANES;
@@ -132,31 +135,30 @@ static bool line_factor(const struct sweep_room *room, size_t rank, size_t width
     return true;
 }
 
-/* side <- U^-1 U'^-1 side; numbers behind the rank are 0 and stay so. */
+/* side -= x row, from register `first` on or up to register `last`. */
+INLINE void side_subtract(double *side, const double *row, double x, size_t first, size_t last)
+{
+    wide share = splat_wide(-x);
+    for (size_t v = first; v < last; v++) {
+        wide *to = (wide *)(side + v * WIDE_LANES);
+        *to = MADD_WIDE(share, *(const wide *)(row + v * WIDE_LANES), *to);
+    }
+}
+
+/* solution = U^-1 U'^-1 side. Both ways go by rows, those of U and those of U': a number is read from what a register
+   wrote, which is quick, and never the other way round. */
 static void line_substitute(const struct sweep_room *room, size_t rank, size_t width)
 {
     size_t registers = width / WIDE_LANES;
-    double *side = room->side;
+    double *x = room->solution;
     for (size_t i = 0; i < rank; i++) {
-        const double *row = room->factor + i * width;
-        double z = side[i] * room->inverse[i];
-        wide share = splat_wide(-z);
-        for (size_t v = i / WIDE_LANES; v < registers; v++) {
-            wide *to = (wide *)(side + v * WIDE_LANES);
-            *to = MADD_WIDE(share, *(const wide *)(row + v * WIDE_LANES), *to);
-        }
-        room->solution[i] = z;
+        x[i] = room->side[i] * room->inverse[i];
+        side_subtract(room->side, room->factor + i * width, x[i], i / WIDE_LANES, registers);
     }
-    memset(side, 0, width * sizeof *side);
+    memcpy(room->side, x, rank * sizeof *x);
     for (size_t i = rank; i-- > 0;) {
-        const double *row = room->factor + i * width;
-        wide sum = {0};
-        for (size_t v = i / WIDE_LANES; v < registers; v++)
-            sum = MADD_WIDE(*(const wide *)(row + v * WIDE_LANES), *(const wide *)(side + v * WIDE_LANES), sum);
-        double rest = room->solution[i];
-        for (size_t lane = 0; lane < WIDE_LANES; lane++)
-            rest -= sum[lane];
-        side[i] = rest * room->inverse[i];
+        x[i] = room->side[i] * room->inverse[i];
+        side_subtract(room->side, room->lower + i * width, x[i], 0, i / WIDE_LANES + 1);
     }
 }
 
