@@ -29,7 +29,7 @@ static void survey_name(struct page *page, const char *path)
     else if (strcmp(path, "-") == 0)
         page_add(page, "Standard input");
     else
-        page_label(page, path);
+        page_argument(page, path);
 }
 
 static void survey_input(struct survey *survey)
