@@ -152,6 +152,27 @@ static void qr_of_deficient_matrices(void **state)
         }
 }
 
+/* Kahan 1966: an upper triangle s^i (1, -c, ..., -c), s^2 + c^2 = 1, with columns of length 1 and a diagonal that
+   falls slowly, but a condition that grows as ((1 + c)/s)^k: its diagonal says too little. */
+static void qr_of_kahans_triangle(void **state)
+{
+    static const struct shape shape = {3000, 64};
+    static const double c[] = {0.1, 0.2, 0.25, 0.3, 0.33, 0.36, 0.4, 0.5};
+    for (size_t n = 0; n < COUNT(c); n++) {
+        struct stand stand;
+        double s = sqrt(1 - c[n] * c[n]);
+        stand_open(&stand, bench_of(state)->context, shape);
+        assert_status(stand.context, dense_qr(stand.context, stand.copy, stand.r, stand.work), FESCUE_OK);
+        for (size_t i = 0; i < shape.columns; i++)
+            for (size_t j = 0; j < shape.columns; j++)
+                MATRIX_AT(stand.square, i, j) = pow(s, (double)i) * (j == i ? 1 : j > i ? -c[n] : 0);
+        matrix_multiply(1, stand.copy, false, stand.square, false, 0, stand.a);
+        matrix_copy(stand.a, stand.copy);
+        qr_check(&stand);
+        stand_close(&stand);
+    }
+}
+
 static void qr_of_extreme_sizes(void **state)
 {
     static const double sizes[] = {0, 1e-300, 1e-150, 1e150, 1e300};
@@ -392,6 +413,7 @@ int main(void)
     const struct CMUnitTest tests[] = {
         BENCH_TEST(qr_of_many_shapes),
         BENCH_TEST(qr_of_deficient_matrices),
+        BENCH_TEST(qr_of_kahans_triangle),
         BENCH_TEST(qr_of_extreme_sizes),
         BENCH_TEST(qr_without_r),
         BENCH_TEST(qr_leaves_no_trace_of_workers),

@@ -196,6 +196,14 @@ static void tables_without_noise_are_met(void **state)
             for (uint64_t k = cells.by_row.start[i]; k < cells.by_row.start[i + 1]; k++)
                 assert_close(offsets_at(&offsets, i, cells.by_row.across[k]), cells_value(&cells, &cells.by_row, k),
                              1e-7);
+        /* Between mean and effects the tiny ridges decide: effects sum to zero. */
+        double rows = 0, columns = 0;
+        for (uint32_t i = 0; i < cells.rows; i++)
+            rows += offsets.row[i];
+        for (uint32_t j = 0; j < cells.columns; j++)
+            columns += offsets.column[j];
+        assert_close(rows, 0, 1e-11);
+        assert_close(columns, 0, 1e-11);
         if (s == 3) {
             assert_close(offsets.mean, 40, 1e-13);
             for (uint32_t i = 0; i < cells.rows; i++)
