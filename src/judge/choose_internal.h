@@ -89,7 +89,7 @@ size_t chooser_rank_most(const struct chooser *chooser); /* the largest rank tha
 /* The path over ranks 0, 1, 2, ..., from offsets alone; *chosen is the smallest rank that no larger one beats. */
 fescue_status path_walk(struct chooser *chooser, const struct candidate *alone, size_t rank_most,
                         struct candidate *chosen);
-/* To a given rank, without judging the ranks on the way. */
+/* To a given rank, the ridge following on the way. */
 fescue_status path_climb(struct chooser *chooser, const struct candidate *alone, size_t rank, struct candidate *chosen);
 enum { SETTLE_ROUNDS = 4 }; /* beyond which offsets and low-rank part hardly move any more */
 /* Offsets and low-rank part in turns, at most SETTLE_ROUNDS times, while the hidden cells gain. */

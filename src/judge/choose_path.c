@@ -104,16 +104,24 @@ static bool is_scarce(const struct chooser *chooser, size_t rank)
     return (double)kept->count < scarce * unknowns;
 }
 
-/* One rank more than the candidate has. */
-static fescue_status rank_step(struct chooser *chooser, double best_rmse, struct candidate *candidate)
+/* One rank more than the candidate has, under the ridge it has. */
+static fescue_status rank_grow(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
-    struct solve_limits limits = chooser_loose_limits(chooser);
     double ridge = ridge_of(chooser, candidate);
     TRY(chooser_take_up(chooser, candidate));
     problem_set_ridge(&chooser->problem, ridge);
     TRY(start_grow(&chooser->problem, (uint64_t)chooser->options->seed, &candidate->point));
-    TRY(candidate_fit(chooser, ridge, &limits, candidate));
+    TRY(candidate_fit(chooser, ridge, limits, candidate));
+done:
+    return status;
+}
+
+static fescue_status rank_step(struct chooser *chooser, double best_rmse, struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    struct solve_limits limits = chooser_loose_limits(chooser);
+    TRY(rank_grow(chooser, &limits, candidate));
     TRY(path_settle(chooser, &limits, false, candidate));
     TRY(ridge_search(chooser, &limits, candidate));
     if (candidate->errors.rmse >= best_rmse * (1 - gain_worth) || is_scarce(chooser, candidate->point.rank))
@@ -148,37 +156,38 @@ done:
     return status;
 }
 
-/* Lays the components down one by one, with few iterations each: nobody judges the ranks between. */
-static fescue_status rank_climb(struct chooser *chooser, size_t rank, struct candidate *candidate)
+/* The limits of a fit on the way to a given rank. */
+static struct solve_limits climb_limits(const struct chooser *chooser, size_t rank)
 {
-    fescue_status status = FESCUE_OK;
+    static const double much = 1e8; /* cells x rank^2: what all fits on the way cost, some seconds from here on */
     struct solve_limits limits = chooser_loose_limits(chooser);
-    limits.iterations = limits.iterations < 15 ? limits.iterations : 15;
-    TRY(chooser_take_up(chooser, candidate));
-    problem_set_ridge(&chooser->problem, ridge_of(chooser, candidate));
-    while (candidate->point.rank < rank) {
-        struct solve_result result = {0};
-        TRY(progress_tell(chooser->context, "choosing", -1));
-        TRY(start_grow(&chooser->problem, (uint64_t)chooser->options->seed, &candidate->point));
-        status = solve_run(&chooser->problem, chooser->solver, &limits, &candidate->point, &result);
-        solve_result_free(chooser->context, &result);
-        TRY(status);
-    }
-done:
-    return status;
+    double work = (double)chooser->kept->count * (double)rank * (double)rank;
+    if (work > much && limits.iterations > 5)
+        limits.iterations = 5; /* lays a component down; the fits after it go on from there */
+    return limits;
 }
 
 fescue_status path_climb(struct chooser *chooser, const struct candidate *alone, size_t rank, struct candidate *chosen)
 {
     fescue_status status = FESCUE_OK;
-    struct solve_limits limits = chooser_loose_limits(chooser);
+    struct solve_limits loose = chooser_loose_limits(chooser), limits = climb_limits(chooser, rank);
+    bool is_brief = limits.iterations < loose.iterations;
     TRY(candidate_copy(chooser, alone, chosen));
     if (rank == 0)
         goto done;
-    TRY(rank_climb(chooser, rank, chosen));
-    TRY(candidate_fit(chooser, ridge_of(chooser, chosen), &limits, chosen));
-    TRY(path_settle(chooser, &limits, false, chosen));
-    TRY(ridge_search(chooser, &limits, chosen));
+    while (chosen->point.rank < rank) {
+        TRY(rank_grow(chooser, &limits, chosen));
+        if (!is_brief)
+            TRY(path_settle(chooser, &limits, false, chosen));
+        TRY(ridge_search(chooser, &limits, chosen));
+    }
+    if (is_brief) {
+        TRY(candidate_fit(chooser, chosen->ridge, &loose, chosen));
+        TRY(path_settle(chooser, &loose, false, chosen));
+        TRY(ridge_search(chooser, &loose, chosen));
+    }
+    if (is_scarce(chooser, rank))
+        TRY(path_challenge(chooser, &loose, chosen));
     TRY(path_try_exact(chooser, chosen));
 done:
     return status;
