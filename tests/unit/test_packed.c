@@ -149,10 +149,8 @@ static void zero_and_what_is_not_finite(void **state)
 int main(void)
 {
     const struct CMUnitTest tests[] = {
-        BENCH_TEST(definite_matrices_are_solved),
-        BENCH_TEST(deficient_matrices_are_lifted),
-        BENCH_TEST(an_indefinite_matrix_is_lifted_far),
-        BENCH_TEST(a_lift_may_come_first),
+        BENCH_TEST(definite_matrices_are_solved),       BENCH_TEST(deficient_matrices_are_lifted),
+        BENCH_TEST(an_indefinite_matrix_is_lifted_far), BENCH_TEST(a_lift_may_come_first),
         BENCH_TEST(zero_and_what_is_not_finite),
     };
     return cmocka_run_group_tests(tests, NULL, NULL);
