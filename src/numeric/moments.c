@@ -21,13 +21,7 @@
 
 #include <string.h>
 
-#if defined(__x86_64__)
-#define MOMENTS_VERSIONS __attribute__((target_clones("avx512f", "avx2", "default")))
-#else
-#define MOMENTS_VERSIONS
-#endif
-
-MOMENTS_VERSIONS
+NUMERIC_VERSIONS
 static void add_four(double *restrict sum, const double *const from[4], const double weight[4], size_t count)
 {
     const double *restrict a = from[0], *restrict b = from[1], *restrict c = from[2], *restrict d = from[3];

@@ -27,6 +27,14 @@ struct matrix matrix_carve(struct arena *arena, size_t rows, size_t columns);
 /* The first `columns` columns of a, same data. */
 struct matrix matrix_left(struct matrix a, size_t columns);
 
+/* A function that the compiler makes for several instruction sets; the one that fits is taken when the program starts.
+   For elementwise loops, whose results do not depend on it. */
+#if defined(__x86_64__)
+#define NUMERIC_VERSIONS __attribute__((target_clones("avx512f", "avx2", "default")))
+#else
+#define NUMERIC_VERSIONS
+#endif
+
 /* ---- dense: all on CBLAS and LAPACKE with the library's own threads held still --------------------------------- */
 
 void matrix_copy(struct matrix from, struct matrix to);
@@ -53,6 +61,10 @@ size_t dense_work_size(size_t lines, size_t columns);
 void packed_cholesky(double *a, size_t k);
 void packed_cholesky_lifted(double *a, size_t k, double share); /* begins with share trace/k on the diagonal */
 void packed_solve(const double *factor, size_t k, double *b);   /* b <- (L L')^-1 b */
+/* moment <- T moment T', packed, for the k x k `map` T and its transpose, both of stride factor_stride(k) with zeros
+   behind column k. work: packed_congruence_work(k) doubles. */
+void packed_congruence(double *moment, size_t k, struct matrix map, struct matrix transposed, double *work);
+size_t packed_congruence_work(size_t k);
 /* inverse <- (L L')^-1, packed as the factor is; not in place, k at most PACKED_INVERSE_MOST. */
 enum { PACKED_INVERSE_MOST = 260 };
 void packed_inverse(const double *factor, size_t k, double *inverse);

@@ -9,6 +9,7 @@
 #include <assert.h>
 #include <string.h>
 
+NUMERIC_VERSIONS
 void packed_inverse(const double *factor, size_t k, double *inverse)
 {
     double row[PACKED_INVERSE_MOST];

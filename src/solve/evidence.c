@@ -91,7 +91,8 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
         matrix_reserve(arena, d, d);
     }
     arena_reserve(arena, 5 * rank, sizeof(double));
-    arena_reserve(arena, d * d, sizeof(double));
+    matrix_reserve(arena, d, d);
+    matrix_reserve(arena, d, d);
     arena_reserve(arena, work, sizeof(double));
     fescue_status status = arena_open(problem->context, arena);
     if (status != FESCUE_OK)
@@ -104,7 +105,8 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
         evidence->gram[k] = matrix_carve(arena, d, d);
     }
     evidence->shift = arena_carve(arena, 5 * rank, sizeof(double));
-    evidence->map = arena_carve(arena, d * d, sizeof(double));
+    evidence->map[0] = matrix_carve(arena, d, d);
+    evidence->map[1] = matrix_carve(arena, d, d);
     evidence->basis_work = arena_carve(arena, work, sizeof(double));
     evidence->rows.effect_at = evidence->columns.one_at = rank;
     evidence->rows.one_at = evidence->columns.effect_at = rank + 1;

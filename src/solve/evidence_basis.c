@@ -26,14 +26,12 @@
 
 size_t evidence_basis_scratch(size_t rank)
 {
-    size_t d = rank + 2;
-    return 2 * d * d;
+    return packed_congruence_work(rank + 2);
 }
 
 struct basis_job {
     struct evidence *evidence;
     struct evidence_side *side;
-    const double *map; /* d x d */
 };
 
 /* All second moments of a line's regressors, and the number of lines with cells. */
@@ -70,7 +68,7 @@ struct side_means {
 static void side_means(struct evidence *evidence, struct evidence_side *side, struct side_means *out)
 {
     size_t rank = evidence->rank, width = evidence_basis_partial(rank);
-    struct basis_job job = {evidence, side, NULL};
+    struct basis_job job = {evidence, side};
     double *sum = side->partial + side->half->blocks * width;
     team_run(evidence->context, side->half->blocks, mean_block, &job);
     team_sum(evidence->context, side->partial, side->half->blocks, width, sum);
@@ -154,45 +152,33 @@ static void map_block(void *opaque, size_t block, size_t worker)
 {
     struct basis_job *job = opaque;
     struct evidence *evidence = job->evidence;
-    size_t d = evidence->rank + 2;
-    double *full = evidence->scratch + worker * evidence->scratch_size, *half = full + d * d;
-    for (size_t line = job->side->half->block[block]; line < job->side->half->block[block + 1]; line++) {
-        double *moment = job->side->moments.data + line * job->side->moments.stride;
-        for (size_t k = 0, at = 0; k < d; k++)
-            for (size_t l = 0; l <= k; l++, at++)
-                full[k * d + l] = full[l * d + k] = moment[at];
-        for (size_t k = 0; k < d; k++) { /* half = T M */
-            memset(half + k * d, 0, d * sizeof *half);
-            for (size_t p = 0; p < d; p++)
-                for (size_t l = 0; l < d; l++)
-                    half[k * d + l] += job->map[k * d + p] * full[p * d + l];
-        }
-        for (size_t k = 0, at = 0; k < d; k++) /* T M T' */
-            for (size_t l = 0; l <= k; l++, at++) {
-                double sum = 0;
-                for (size_t p = 0; p < d; p++)
-                    sum += half[k * d + p] * job->map[l * d + p];
-                moment[at] = sum;
-            }
-    }
+    double *work = evidence->scratch + worker * evidence->scratch_size;
+    for (size_t line = job->side->half->block[block]; line < job->side->half->block[block + 1]; line++)
+        packed_congruence(job->side->moments.data + line * job->side->moments.stride, evidence->rank + 2,
+                          evidence->map[0], evidence->map[1], work);
 }
 
-/* T for g = (factor, 1, effect): factor' = R (factor - shift), effect' = effect + tilt . (factor - back). */
-static void map_build(struct matrix rotation, const double *shift, const double *tilt, const double *back, double *map)
+/* T for g = (factor, 1, effect): factor' = R (factor - shift), effect' = effect + tilt . (factor - back); and T'. */
+static void map_build(struct evidence *evidence, struct matrix rotation, const double *shift, const double *tilt,
+                      const double *back)
 {
-    size_t rank = rotation.rows, d = rank + 2;
-    memset(map, 0, d * d * sizeof *map);
+    size_t rank = rotation.rows;
+    struct matrix map = evidence->map[0];
+    matrix_zero(map);
     for (size_t k = 0; k < rank; k++)
         for (size_t l = 0; l < rank; l++) {
-            map[k * d + l] = MATRIX_AT(rotation, k, l);
-            map[k * d + rank] -= MATRIX_AT(rotation, k, l) * shift[l];
+            MATRIX_AT(map, k, l) = MATRIX_AT(rotation, k, l);
+            MATRIX_AT(map, k, rank) -= MATRIX_AT(rotation, k, l) * shift[l];
         }
-    map[rank * d + rank] = 1;
-    map[(rank + 1) * d + rank + 1] = 1;
+    MATRIX_AT(map, rank, rank) = 1;
+    MATRIX_AT(map, rank + 1, rank + 1) = 1;
     for (size_t l = 0; l < rank; l++) {
-        map[(rank + 1) * d + l] = tilt[l];
-        map[(rank + 1) * d + rank] -= tilt[l] * back[l];
+        MATRIX_AT(map, rank + 1, l) = tilt[l];
+        MATRIX_AT(map, rank + 1, rank) -= tilt[l] * back[l];
     }
+    for (size_t k = 0; k < rank + 2; k++)
+        for (size_t l = 0; l < rank + 2; l++)
+            MATRIX_AT(evidence->map[1], l, k) = MATRIX_AT(map, k, l);
 }
 
 /* R = Q'L^-1 and R^-T = Q'L' from A (overwritten by L) and B (overwritten by Q); w is left at the front of work. */
@@ -265,11 +251,11 @@ fescue_status evidence_basis_change(struct evidence *evidence)
     fescue_status status = rotations(evidence, u.second, v.second, small[2], small[3]);
     if (status != FESCUE_OK)
         return status;
-    struct basis_job job = {evidence, rows, evidence->map};
-    map_build(small[2], u.mean, v.mean, u.mean, evidence->map); /* a <- a + nu.(u - mu) */
+    struct basis_job job = {evidence, rows};
+    map_build(evidence, small[2], u.mean, v.mean, u.mean); /* a <- a + nu.(u - mu) */
     team_run(evidence->context, rows->half->blocks, map_block, &job);
     job.side = columns;
-    map_build(small[3], v.mean, u.mean, zero, evidence->map); /* b <- b + mu.v */
+    map_build(evidence, small[3], v.mean, u.mean, zero); /* b <- b + mu.v */
     team_run(evidence->context, columns->half->blocks, map_block, &job);
     const double *w = evidence->basis_work + packed_size(rank);
     for (size_t k = 0; k < rank; k++) {

@@ -35,7 +35,8 @@ struct evidence {
     double *scratch; /* one stretch a worker */
     size_t scratch_size;
     struct matrix small[4], gram[4]; /* r x r and (r+2) x (r+2) */
-    double *shift, *map, *basis_work;
+    struct matrix map[2];            /* a change of basis and its transpose */
+    double *shift, *basis_work;
     struct arena arena;
 };
 

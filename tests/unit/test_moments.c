@@ -7,6 +7,7 @@
 
 #include <float.h>
 #include <math.h>
+#include <string.h>
 
 static double draw(struct random_stream *stream)
 {
@@ -116,10 +117,38 @@ static void inverse_times_matrix_is_identity(void **state)
     }
 }
 
+static void congruence_is_a_product_of_three(void **state)
+{
+    (void)state;
+    enum { MOST = 11, STRIDE = 16 };
+    for (size_t k = 1; k <= MOST; k++) {
+        struct random_stream stream = random_open(3, RANDOM_TEST, (uint32_t)k);
+        double moment[66], map[MOST * STRIDE] = {0}, transposed[MOST * STRIDE] = {0}, work[2 * MOST * STRIDE];
+        size_t stride = factor_stride(k);
+        moment_draw(&stream, k, k, moment);
+        double before[66];
+        memcpy(before, moment, sizeof before);
+        for (size_t i = 0; i < k; i++)
+            for (size_t j = 0; j < k; j++)
+                map[i * stride + j] = transposed[j * stride + i] = draw(&stream);
+        packed_congruence(moment, k, (struct matrix){map, k, k, stride}, (struct matrix){transposed, k, k, stride},
+                          work);
+        for (size_t i = 0; i < k; i++)
+            for (size_t j = 0; j <= i; j++) {
+                double sum = 0;
+                for (size_t p = 0; p < k; p++)
+                    for (size_t q = 0; q < k; q++)
+                        sum += map[i * stride + p] * entry(before, p, q) * map[j * stride + q];
+                assert_close(moment[packed_size(i) + j], sum, 1e-11);
+            }
+    }
+}
+
 int main(void)
 {
     const struct CMUnitTest tests[] = {
         BENCH_TEST(sums_are_those_of_plain_loops),
+        cmocka_unit_test(congruence_is_a_product_of_three),
         cmocka_unit_test(inverse_times_matrix_is_identity),
     };
     return cmocka_run_group_tests_name("moments", tests, NULL, NULL);
