@@ -27,6 +27,9 @@ enum {
 };
 
 static const double ridge_share = 1e-4;
+/* H is lifted by this part of its mean: no step along a direction is longer than it is along a thousandth of the mean
+   weight. */
+static const double lift = 1e-6;
 
 static const struct half *half_short(const struct field *field)
 {
@@ -86,6 +89,20 @@ bool batches_next(struct batches *batches, size_t width)
 /* ---- weights -------------------------------------------------------------------------------------------------------
  */
 
+double *batch_room(const struct batches *batches, size_t worker)
+{
+    return batches->room + worker * room_a_worker(batches->rank);
+}
+
+void batch_lines_run(struct batches *batches, team_task *task, void *job)
+{
+    if (batches->count >= ALONE_BELOW)
+        team_run(batches->field->problem->context, batches->count, task, job);
+    else
+        for (size_t k = 0; k < batches->count; k++)
+            task(job, k, 0);
+}
+
 struct solve_job {
     struct batches *batches;
     struct matrix basis;
@@ -98,7 +115,7 @@ static void line_solve(void *argument, size_t k, size_t worker)
     const struct batches *b = job->batches;
     const struct cells *target = &b->field->problem->target;
     size_t rank = b->rank, line = batch_line(b, k);
-    double *system = b->room + worker * room_a_worker(rank), *w = &MATRIX_AT(b->weights, k, 0);
+    double *system = batch_room(b, worker), *w = &MATRIX_AT(b->weights, k, 0);
     for (size_t e = 0; e < packed_size(rank); e++)
         system[e] = 0;
     for (size_t p = 0; p < rank; p++) {
@@ -121,11 +138,7 @@ static void line_solve(void *argument, size_t k, size_t worker)
 void batch_solve(struct batches *batches, struct matrix basis, double ridge)
 {
     struct solve_job job = {.batches = batches, .basis = basis, .ridge = ridge};
-    if (batches->count >= ALONE_BELOW)
-        team_run(batches->field->problem->context, batches->count, line_solve, &job);
-    else
-        for (size_t k = 0; k < batches->count; k++)
-            line_solve(&job, k, 0);
+    batch_lines_run(batches, line_solve, &job);
 }
 
 double batch_ridge(const struct problem *problem)
@@ -133,6 +146,32 @@ double batch_ridge(const struct problem *problem)
     const struct cells *target = &problem->target;
     double share = (double)target->count / ((double)target->rows * (double)target->columns);
     return fmax(problem->lambda, ridge_share * share);
+}
+
+void moment_reserve(struct arena *arena, size_t rank)
+{
+    matrix_reserve(arena, rank, rank);
+    arena_reserve(arena, packed_size(rank), sizeof(double));
+}
+
+void moment_carve(struct arena *arena, size_t rank, struct moment *moment)
+{
+    moment->second = matrix_carve(arena, rank, rank);
+    moment->factor = arena_carve(arena, packed_size(rank), sizeof(double));
+}
+
+void moment_learn(struct moment *moment, struct matrix weights, double share)
+{
+    size_t rank = weights.columns;
+    double trace = 0;
+    matrix_multiply(share / (double)weights.rows, weights, true, weights, false, 1 - share, moment->second);
+    for (size_t k = 0; k < rank; k++)
+        trace += MATRIX_AT(moment->second, k, k);
+    for (size_t p = 0; p < rank; p++)
+        for (size_t q = 0; q <= p; q++)
+            moment->factor[packed_size(p) + q] =
+                MATRIX_AT(moment->second, p, q) + (p == q ? lift * trace / (double)rank : 0);
+    packed_cholesky(moment->factor, rank);
 }
 
 /* ---- bands ---------------------------------------------------------------------------------------------------------

@@ -57,7 +57,6 @@ static const double whole_part = 0.5;   /* of the first pass, before steps shrin
 static const double mean_part = 0.5;    /* of a pass, before the mean is taken */
 /* H of the first pass: weight of a batch in the running mean. The last five count, enough for many times r lines. */
 static const double moment_share = 0.2;
-static const double lift = 1e-6; /* as in recursive_least_squares.c */
 
 /* ---- memory --------------------------------------------------------------------------------------------------------
  */
@@ -77,9 +76,9 @@ void minibatch_reserve(struct arena *arena, const struct field *field, size_t ra
     size_t shorter = target->rows <= target->columns ? target->rows : target->columns;
     for (int k = 0; k < 4; k++)
         matrix_reserve(arena, shorter, rank);
-    for (int k = 0; k < 3; k++)
+    for (int k = 0; k < 2; k++)
         matrix_reserve(arena, rank, rank);
-    arena_reserve(arena, packed_size(rank), sizeof(double));
+    moment_reserve(arena, rank);
     arena_reserve(arena, rank, sizeof(double));
 }
 
@@ -89,35 +88,13 @@ void minibatch_carve(struct stream *stream)
     struct arena *arena = &stream->arena;
     size_t shorter = stream->projection.by_short->lines, rank = stream->projection.rank;
     struct matrix *const tall[] = {&own->base, &own->base_gradient, &own->gradient, &own->mean};
-    struct matrix *const small[] = {&own->moment, &own->core, &own->core_right};
+    struct matrix *const small[] = {&own->core, &own->core_right};
     for (int k = 0; k < 4; k++)
         *tall[k] = matrix_carve(arena, shorter, rank);
-    for (int k = 0; k < 3; k++)
+    for (int k = 0; k < 2; k++)
         *small[k] = matrix_carve(arena, rank, rank);
-    own->factor = arena_carve(arena, packed_size(rank), sizeof(double));
+    moment_carve(arena, rank, &own->moment);
     own->spectrum = arena_carve(arena, rank, sizeof(double));
-}
-
-/* ---- H -------------------------------------------------------------------------------------------------------------
- */
-
-static void moment_factor(struct minibatch *own)
-{
-    size_t rank = own->moment.rows;
-    double trace = 0;
-    for (size_t k = 0; k < rank; k++)
-        trace += MATRIX_AT(own->moment, k, k);
-    for (size_t p = 0; p < rank; p++)
-        for (size_t q = 0; q <= p; q++)
-            own->factor[packed_size(p) + q] = MATRIX_AT(own->moment, p, q) + (p == q ? lift * trace / (double)rank : 0);
-    packed_cholesky(own->factor, rank);
-}
-
-/* H <- (1 - share) H + share times the mean over these lines. */
-static void moment_learn(struct minibatch *own, struct matrix weights, double share)
-{
-    matrix_multiply(share / (double)weights.rows, weights, true, weights, false, 1 - share, own->moment);
-    moment_factor(own);
 }
 
 /* ---- G -------------------------------------------------------------------------------------------------------------
@@ -192,7 +169,7 @@ static void step_scale(struct stream *stream, uint64_t t)
         double seen = (double)(half->start[i + 1] - half->start[i]) / (double)half->length;
         double step = -step_of(seen, b->rank, b->count, t) / (double)b->count;
         double *g = &MATRIX_AT(own->gradient, i, 0);
-        packed_solve(own->factor, b->rank, g);
+        packed_solve(own->moment.factor, b->rank, g);
         for (size_t k = 0; k < b->rank; k++)
             g[k] *= step;
     }
@@ -224,7 +201,7 @@ static fescue_status batch_step(struct stream *stream, const struct minibatch_ru
     batch_solve(&stream->batches, p->basis, reduced ? p->ridge[0] : batch_ridge(stream->field->problem));
     weights.rows = stream->batches.count;
     if (cold)
-        moment_learn(own, weights, fmax(1 / (double)(own->step + 1), moment_share));
+        moment_learn(&own->moment, weights, fmax(1 / (double)(own->step + 1), moment_share));
     gradient_sum(stream, reduced);
     step_scale(stream, t);
     grassmann_project(&stream->trust.work, p->basis, own->gradient);
@@ -248,7 +225,7 @@ static void pass_begin(struct stream *stream)
     matrix_copy(p->basis, own->base);
     matrix_copy(p->gradient, own->base_gradient);
     matrix_scale(1 / (double)p->weights.rows, own->base_gradient);
-    moment_learn(own, p->weights, 1);
+    moment_learn(&own->moment, p->weights, 1);
 }
 
 fescue_status minibatch_pass(struct stream *stream, const struct minibatch_rules *rules)

@@ -45,8 +45,6 @@ enum {
     LAG_MOST = 64,  /* lines a batch: enough work to share */
     LAG_PART = 100, /* and at most this part of what has been seen */
 };
-/* H is lifted by this part of its mean: directions without weight keep a finite inverse. */
-static const double lift = 1e-6;
 /* T is singular when a diagonal entry falls below this part of the largest. */
 static const double turn_least = 1e-8;
 
@@ -54,7 +52,7 @@ struct recursion {
     double *inverses; /* short x packed: P_i */
     double *room;     /* rank x rank a worker */
     double *packed;
-    struct matrix moment; /* H */
+    struct moment moment; /* H */
     bool known;           /* the inverses are those of what was seen; else they begin anew */
 };
 
@@ -74,7 +72,7 @@ static void recursion_reserve(struct arena *arena, const struct field *field, si
     arena_reserve(arena, entries, sizeof(double));
     arena_reserve(arena, team_workers(field->problem->context) * rank * rank, sizeof(double));
     arena_reserve(arena, packed_size(rank), sizeof(double));
-    matrix_reserve(arena, rank, rank);
+    moment_reserve(arena, rank);
 }
 
 static void recursion_carve(struct stream *stream)
@@ -85,7 +83,7 @@ static void recursion_carve(struct stream *stream)
     own->room =
         arena_carve(&stream->arena, team_workers(stream->field->problem->context) * rank * rank, sizeof(double));
     own->packed = arena_carve(&stream->arena, packed_size(rank), sizeof(double));
-    own->moment = matrix_carve(&stream->arena, rank, rank);
+    moment_carve(&stream->arena, rank, &own->moment);
 }
 
 static double cells_of(const struct half *half, uint32_t line)
@@ -95,22 +93,6 @@ static double cells_of(const struct half *half, uint32_t line)
 
 /* ---- the inverses at first -----------------------------------------------------------------------------------------
  */
-
-/* H^-1 into own->packed, from the weights of some lines. */
-static void moment_invert(struct stream *stream, struct matrix weights)
-{
-    struct recursion *own = stream->own;
-    size_t rank = stream->projection.rank;
-    double trace = 0, *factor = own->inverses; /* room as good as any */
-    matrix_multiply(1 / (double)weights.rows, weights, true, weights, false, 0, own->moment);
-    for (size_t k = 0; k < rank; k++)
-        trace += MATRIX_AT(own->moment, k, k);
-    for (size_t p = 0; p < rank; p++)
-        for (size_t q = 0; q <= p; q++)
-            factor[packed_size(p) + q] = MATRIX_AT(own->moment, p, q) + (p == q ? lift * trace / (double)rank : 0);
-    packed_cholesky(factor, rank);
-    packed_inverse(factor, rank, own->packed);
-}
 
 static void inverses_begin(struct stream *stream, double ridge)
 {
@@ -125,7 +107,8 @@ static void inverses_begin(struct stream *stream, double ridge)
         weights = b->weights;
         weights.rows = b->count;
     }
-    moment_invert(stream, weights);
+    moment_learn(&own->moment, weights, 1);
+    packed_inverse(own->moment.factor, b->rank, own->packed);
     for (uint32_t i = 0; i < b->by_short->lines; i++) {
         double memory =
             stream->passes == 0 ? first_memory : fmax(first_memory, memory_growth * cells_of(b->by_short, i));

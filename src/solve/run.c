@@ -9,7 +9,8 @@
  *     gradient    |g| <= tolerance |T|  and  |g| <= 1e-3 |R|
  *     change      over the last ten iterations the objective fell by no more than change * objective
  *     stalled     the solver found no better point, or twenty iterations brought neither a lower objective nor a
- *                 smaller gradient; when |g| <= tolerance |T| this counts as `gradient`
+ *                 smaller gradient; when |g| <= tolerance |T| this counts as `gradient`, and for the absolute loss,
+ *                 whose gradient does not vanish at a minimum, as `change`
  *     iterations, time, cancelled
  *
  * |T| is the norm of the gradient at the zero matrix, so the tolerance does not depend on units. The second half of
@@ -158,7 +159,7 @@ static bool run_ends(struct run *run, bool moved)
     else if (is_flat(run))
         *stop = STOP_GRADIENT;
     else if (!moved || stalled)
-        *stop = is_small(run) ? STOP_GRADIENT : STOP_STALLED;
+        *stop = is_small(run) ? STOP_GRADIENT : run->solver->loss == LOSS_ABSOLUTE ? STOP_CHANGE : STOP_STALLED;
     else if (unchanged)
         *stop = STOP_CHANGE;
     else if (run->iteration >= run->limits->iterations)
@@ -174,21 +175,22 @@ static bool run_ends(struct run *run, bool moved)
  */
 
 /* The objective of a point as it came. One pass. */
-static fescue_status objective_of(struct field *field, const struct low_rank *point, struct solve_measure *measure)
+static fescue_status objective_of(struct field *field, enum solve_loss loss, const struct low_rank *point,
+                                  struct solve_measure *measure)
 {
     struct problem *problem = field->problem;
     struct arena arena = {0};
     fescue_status status;
-    double size = 0;
+    double size = 0, absolute;
     matrix_reserve(&arena, point->rows, point->rank);
     TRY(arena_open(problem->context, &arena));
-    struct matrix scaled = matrix_carve(&arena, point->rows, point->rank), none = {0};
+    struct matrix scaled = matrix_carve(&arena, point->rows, point->rank);
     matrix_copy(point->left, scaled);
     matrix_scale_columns(scaled, point->spectrum);
-    sweep_residual(&field->sweep, field_rows(field), scaled, point->right, none, NULL, &measure->square);
+    sweep_errors(&field->sweep, field_rows(field), scaled, point->right, &measure->square, &absolute);
     for (size_t k = 0; k < point->rank; k++)
         size += point->spectrum[k] * point->spectrum[k];
-    measure->objective = 0.5 * measure->square + 0.5 * problem->lambda * size;
+    measure->objective = (loss == LOSS_SQUARE ? 0.5 * measure->square : absolute) + 0.5 * problem->lambda * size;
 done:
     arena_close(problem->context, &arena);
     return status;
@@ -226,12 +228,20 @@ done:
     return status;
 }
 
+static double absolute_targets(const struct problem *problem)
+{
+    double sum = 0;
+    for (uint64_t k = 0; k < problem->target.count; k++)
+        sum += fabs(cells_value(&problem->target, &problem->target.by_row, k));
+    return sum;
+}
+
 /* The only matrix of rank 0 is the answer. */
 static void run_empty(struct run *run)
 {
     const struct problem *problem = run->field.problem;
     run->measure.square = problem->norm * problem->norm;
-    run->measure.objective = 0.5 * run->measure.square;
+    run->measure.objective = run->solver->loss == LOSS_SQUARE ? 0.5 * run->measure.square : absolute_targets(problem);
     run->result->stop = problem->norm == 0 ? STOP_EXACT : STOP_GRADIENT;
     result_fill(run);
 }
@@ -252,7 +262,7 @@ fescue_status solve_run(struct problem *problem, const struct solver *solver, co
         return FESCUE_OK;
     }
     TRY(sweep_create(context, &problem->target, point->rank * solver->width, &run.field.sweep));
-    TRY(objective_of(&run.field, point, &given));
+    TRY(objective_of(&run.field, solver->loss, point, &given));
     TRY(trace_open(&run));
     TRY(solver->create(&run.field, point, &state));
     ended = run_iterate(&run, state, point->rank);

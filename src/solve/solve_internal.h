@@ -21,11 +21,15 @@ struct solve_measure {
     double step;     /* length of the last step along its direction; 0 at the start */
 };
 
+/* What an objective sums over the seen cells, r = X - t: r^2 / 2, or |r|. */
+enum solve_loss { LOSS_SQUARE, LOSS_ABSOLUTE };
+
 /* A solver, one static constant of this kind a file, listed in solver.c. Its state holds a point of its own; the
    objective never rises from step to step but by rounding (line_accepts says how much), and a step that finds nothing
    better leaves the point alone. */
 struct solver {
     const char *name, *summary;
+    enum solve_loss loss;
     size_t width; /* the widest product it asks of the sweep, in ranks */
     /* Takes all memory that the iterations need and measures the start; borrows field and point (rank >= 1). */
     fescue_status (*create)(struct field *field, const struct low_rank *point, void **state);
@@ -37,7 +41,8 @@ struct solver {
     void (*destroy)(fescue_context *context, void **state);
 };
 extern const struct solver fixed_rank_cg_solver, grassmann_cg_solver, grassmann_trust_region_solver,
-    recursive_least_squares_solver, grassmann_stochastic_solver, grassmann_variance_reduced_solver;
+    recursive_least_squares_solver, grassmann_stochastic_solver, grassmann_variance_reduced_solver,
+    subgradient_solver;
 
 /* Room for one value a seen cell, in the store's precision. The caller owns *values. */
 fescue_status values_create(struct field *field, void **values);

@@ -6,9 +6,13 @@
 
 #include <string.h>
 
-static const struct solver *const solvers[] = {&fixed_rank_cg_solver,          &grassmann_cg_solver,
-                                               &grassmann_trust_region_solver, &recursive_least_squares_solver,
-                                               &grassmann_stochastic_solver,   &grassmann_variance_reduced_solver};
+static const struct solver *const solvers[] = {&fixed_rank_cg_solver,
+                                               &grassmann_cg_solver,
+                                               &grassmann_trust_region_solver,
+                                               &recursive_least_squares_solver,
+                                               &grassmann_stochastic_solver,
+                                               &grassmann_variance_reduced_solver,
+                                               &subgradient_solver};
 
 const struct solver *solver_at(size_t k)
 {

@@ -40,6 +40,9 @@ void batch_solve(struct batches *batches, struct matrix basis, double ridge);
 /* A ridge for weights that something is to be learnt from: lambda, or a ten-thousandth of what U_j'U_j has on average
    when that is larger, for lines with fewer cells than the rank. */
 double batch_ridge(const struct problem *problem);
+/* Calls the task for every line of the batch; each worker has room for one packed system. */
+void batch_lines_run(struct batches *batches, team_task *task, void *job);
+double *batch_room(const struct batches *batches, size_t worker);
 /* Calls the task for every band. */
 void batch_bands_run(struct batches *batches, team_task *task, void *job);
 /* The cells, by_long, of the batch's k-th line that lie in a band: from .. to - 1. */
@@ -47,6 +50,30 @@ struct cell_range {
     uint64_t from, to;
 };
 struct cell_range batch_cells(const struct batches *batches, size_t band, size_t k);
+
+/* H, a mean of w w' over lines: what a move of U costs, and what steps are measured in. */
+struct moment {
+    struct matrix second; /* H */
+    double *factor;       /* its packed Cholesky factor, lifted: directions without weight keep a finite inverse */
+};
+void moment_reserve(struct arena *arena, size_t rank);
+void moment_carve(struct arena *arena, size_t rank, struct moment *moment);
+/* H <- (1 - share) H + share times the mean over these lines. */
+void moment_learn(struct moment *moment, struct matrix weights, double share);
+
+/* ---- absolute loss -------------------------------------------------------------------------------------------------
+ */
+
+/* For every line j of the batch, rounds of reweighting towards the w_j that minimises sum |U_j w - t_j| +
+   ridge/2 |w|^2, from the one that is there; residuals below `least` count as squares (least > 0). Then what is left of
+   the line. */
+struct absolute_fit {
+    struct matrix basis, weights; /* weights: long x rank, in and out; also copied to the batch's */
+    double ridge, least;
+    unsigned rounds;
+    double *sums; /* two a line: of |r| and of r^2 */
+};
+void batch_fit_absolute(struct batches *batches, const struct absolute_fit *fit);
 
 /* ---- passes --------------------------------------------------------------------------------------------------------
  */
@@ -96,9 +123,10 @@ struct minibatch {
     struct matrix base, base_gradient; /* U~, G~ */
     struct matrix gradient;            /* G, then -D */
     struct matrix mean;
-    struct matrix moment, core, core_right; /* rank x rank */
-    double *factor, *spectrum;              /* of H, packed; rank numbers */
-    size_t step;                            /* of this pass, from 0 */
+    struct moment moment;
+    struct matrix core, core_right; /* rank x rank */
+    double *spectrum;
+    size_t step; /* of this pass, from 0 */
 };
 /* What tells the two solvers apart that take gradient steps, one a batch (minibatch.c). */
 struct minibatch_rules {

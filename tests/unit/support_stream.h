@@ -9,11 +9,13 @@
 #include "support_solve.h"
 
 /* rows x columns, the spectrum falling geometrically from its largest to largest / kappa, mean square 1. Cell (i, j) is
-   seen with probability share, or share (1 - skew) ... share (1 + skew) as i goes from the first row to the last. */
+   seen with probability share, or share (1 - skew) ... share (1 + skew) as i goes from the first row to the last. Of
+   the seen cells the part `outliers` is wrong by 3 to 10, either way; with `weeded` those are left out. */
 struct meadow {
     uint32_t rows, columns;
     size_t rank;
-    double kappa, share, skew, noise;
+    double kappa, share, skew, noise, outliers;
+    bool weeded;
     uint64_t seed;
 };
 
@@ -52,6 +54,15 @@ static inline struct low_rank meadow_truth(fescue_context *context, const struct
     return truth;
 }
 
+/* What is wrong with a cell; 0 for most. */
+static inline double outlier_draw(const struct meadow *meadow, struct random_stream *stream)
+{
+    if (meadow->outliers == 0 || random_uniform(stream) >= meadow->outliers)
+        return 0;
+    double size = 3 + 7 * random_uniform(stream);
+    return random_uniform(stream) < 0.5 ? -size : size;
+}
+
 static inline struct field_plot meadow_sow(fescue_context *context, const struct meadow *meadow)
 {
     struct field_plot out = {.truth = meadow_truth(context, meadow)};
@@ -63,7 +74,9 @@ static inline struct field_plot meadow_sow(fescue_context *context, const struct
             if (random_uniform(&stream) >= meadow->share * (1 + turn))
                 continue;
             value = low_rank_entry(&out.truth, i, j) + meadow->noise * random_normal(&stream);
-            assert_status(context, triplets_append(context, &list, i, j, value), FESCUE_OK);
+            double outlier = outlier_draw(meadow, &stream);
+            if (!meadow->weeded || outlier == 0)
+                assert_status(context, triplets_append(context, &list, i, j, value + outlier), FESCUE_OK);
         }
     assert_status(context, cells_build(context, meadow->rows, meadow->columns, &list, &out.plot.cells), FESCUE_OK);
     triplets_free(context, &list);

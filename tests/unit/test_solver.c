@@ -1,6 +1,7 @@
 /* SPDX-License-Identifier: MIT
  *
- * The conformance suite: what every solver of the list must do. Each test goes through the whole list.
+ * The conformance suite: what every solver of the list must do. Each test goes through the whole list; what holds for
+ * the square loss alone, such as where its minimum is, is asked of the solvers that have it.
  */
 #include "support_solve.h"
 
@@ -16,6 +17,26 @@ static struct sowing turned(struct sowing sowing)
     sowing.rows = sowing.columns;
     sowing.columns = rows;
     return sowing;
+}
+
+static bool is_square(size_t k)
+{
+    return solver_at(k)->loss == LOSS_SQUARE;
+}
+
+/* The objective of the k-th solver, by its definition. */
+static double objective_of(size_t k, const struct problem *problem, const struct low_rank *point)
+{
+    const struct half *half = &problem->target.by_row;
+    double sum = 0;
+    if (is_square(k))
+        return objective_plain(problem, point);
+    for (uint32_t i = 0; i < half->lines; i++)
+        for (uint64_t c = half->start[i]; c < half->start[i + 1]; c++)
+            sum += fabs(low_rank_entry(point, i, half->across[c]) - cells_value(&problem->target, half, c));
+    for (size_t l = 0; l < point->rank; l++)
+        sum += 0.5 * problem->lambda * point->spectrum[l] * point->spectrum[l];
+    return sum;
 }
 
 /* The spectral start, solved. */
@@ -57,14 +78,14 @@ static void the_result_describes_the_point(void **state)
             struct plot plot = plot_sow(context, &noisy, 0.2 * ridge);
             struct solve_result result = {0};
             struct low_rank point = solved(&plot, solver_at(s), 3, &result);
-            double objective = objective_plain(&plot.problem, &point), size = 0;
-            assert_close(result.objective / objective, 1, 1e-12);
+            double size = 0;
+            assert_close(result.objective / objective_of(s, &plot.problem, &point), 1, 1e-12);
             for (size_t k = 0; k < 3; k++)
                 size += point.spectrum[k] * point.spectrum[k];
-            double square = 2 * objective - plot.problem.lambda * size;
+            double square = 2 * objective_plain(&plot.problem, &point) - plot.problem.lambda * size;
             assert_close(result.rmse, sqrt(square / (double)plot.cells.count), 1e-12);
-            assert_int_equal(result.stop, STOP_GRADIENT);
-            assert_true(result.gradient <= 1e-9);
+            assert_int_equal(result.stop, is_square(s) ? STOP_GRADIENT : STOP_CHANGE);
+            assert_true(!is_square(s) || result.gradient <= 1e-9);
             const struct solve_step *last = &result.trace[result.trace_count - 1];
             assert_true(last->objective == result.objective && last->gradient == result.gradient);
             low_rank_free(context, &point);
@@ -169,7 +190,7 @@ static void the_gradient_is_the_slope(void **state)
 {
     fescue_context *context = bench_of(state)->context;
     for (size_t s = 0; solver_at(s) != NULL; s++)
-        for (int variant = 0; variant < 4; variant++) {
+        for (int variant = 0; variant < 4 && is_square(s); variant++) {
             struct sowing sowing = variant % 2 == 0 ? noisy : turned(noisy);
             struct plot plot = plot_sow(context, &sowing, variant < 2 ? 0 : 0.3);
             struct low_rank point = random_point(context, sowing.rows, sowing.columns, 3, 10);
@@ -202,7 +223,7 @@ static void a_full_table_gives_its_truncation(void **state)
     fescue_context *context = bench_of(state)->context;
     const double ridges[] = {0, 0.5};
     for (size_t s = 0; solver_at(s) != NULL; s++)
-        for (int variant = 0; variant < 4; variant++) {
+        for (int variant = 0; variant < 4 && is_square(s); variant++) {
             struct sowing sowing = variant % 2 == 0 ? noisy : turned(noisy);
             sowing.share = 1;
             double ridge = ridges[variant / 2], spectrum[60];
@@ -224,7 +245,7 @@ static void a_full_table_gives_its_truncation(void **state)
         }
 }
 
-/* All solvers end in the same minimum. */
+/* All solvers end in the same minimum. The first is one for the square loss. */
 static void the_minimum_does_not_depend_on_the_solver(void **state)
 {
     fescue_context *context = bench_of(state)->context;
@@ -233,6 +254,8 @@ static void the_minimum_does_not_depend_on_the_solver(void **state)
         struct solve_result result = {0};
         struct low_rank first = solved(&plot, solver_at(0), 3, &result);
         for (size_t s = 1; solver_at(s) != NULL; s++) {
+            if (!is_square(s))
+                continue;
             struct low_rank point = solved(&plot, solver_at(s), 3, &result);
             assert_close(point_distance(&point, 1, &first), 0, 1e-6);
             low_rank_free(context, &point);
@@ -249,6 +272,8 @@ static void full_rank_is_no_restriction(void **state)
     fescue_context *context = bench_of(state)->context;
     const struct sowing sowing = {.rows = 7, .columns = 5, .rank = 5, .share = 1, .noise = 0.3, .seed = 2};
     for (size_t s = 0; solver_at(s) != NULL; s++) {
+        if (!is_square(s))
+            continue;
         struct plot plot = plot_sow(context, &sowing, 0.5);
         struct low_rank point = random_point(context, 7, 5, 5, 3);
         struct solve_result result = {0};
@@ -392,11 +417,11 @@ static void limits_are_kept(void **state)
         struct low_rank point = random_point(context, 60, 40, 3, 10);
         struct solve_result result = {0};
         struct solve_limits limits = {.iterations = 3, .gradient = 1e-9};
-        double before = objective_plain(&plot.problem, &point);
+        double before = objective_of(s, &plot.problem, &point);
         assert_status(context, solve_run(&plot.problem, solver_at(s), &limits, &point, &result), FESCUE_OK);
         assert_int_equal(result.stop, STOP_ITERATIONS);
         assert_int_equal(result.iterations, 3);
-        assert_true(objective_plain(&plot.problem, &point) < before);
+        assert_true(objective_of(s, &plot.problem, &point) < before);
         limits.deadline = clock_wall() - 1;
         assert_status(context, solve_run(&plot.problem, solver_at(s), &limits, &point, &result), FESCUE_OK);
         assert_int_equal(result.stop, STOP_TIME);
@@ -418,12 +443,12 @@ static void cancelled_it_gives_back_a_valid_point(void **state)
         struct plot plot = plot_sow(context, &noisy, 0);
         struct low_rank point = random_point(context, 60, 40, 3, 10);
         struct solve_result result = {0};
-        double before = objective_plain(&plot.problem, &point);
+        double before = objective_of(s, &plot.problem, &point);
         fescue_context_cancel(context);
         assert_int_equal(solve_run(&plot.problem, solver_at(s), &usual_limits, &point, &result), FESCUE_STOPPED);
         assert_int_equal(result.stop, STOP_CANCELLED);
         assert_close(form_error(&point), 0, 1e-13);
-        assert_true(objective_plain(&plot.problem, &point) <= before * (1 + 1e-14));
+        assert_true(objective_of(s, &plot.problem, &point) <= before * (1 + 1e-14));
         solve_result_free(context, &result);
         low_rank_free(context, &point);
         plot_free(&plot);
@@ -441,10 +466,11 @@ static void never_worse_than_it_came(void **state)
             struct plot plot = plot_sow(context, &noisy, 0);
             struct solve_result result = {0};
             struct low_rank point = solved(&plot, solver_at(s), 3, &result);
-            double before = result.objective;
+            double before = objective_of(t, &plot.problem, &point);
             assert_status(context, solve_run(&plot.problem, solver_at(t), &usual_limits, &point, &result), FESCUE_OK);
             assert_true(result.objective <= before * (1 + 1e-14));
-            assert_true(result.iterations <= 3 && solve_converged(result.stop));
+            assert_true(solve_converged(result.stop));
+            assert_true(result.iterations <= 3 || !is_square(s) || !is_square(t));
             low_rank_free(context, &point);
             solve_result_free(context, &result);
             plot_free(&plot);
@@ -464,7 +490,7 @@ static void rank_zero_is_the_zero_matrix(void **state)
         assert_status(context, low_rank_create(context, 60, 40, 0, &point), FESCUE_OK);
         assert_status(context, solve_run(&plot.problem, solver_at(s), &usual_limits, &point, &result), FESCUE_OK);
         assert_close(result.rmse, 1, 1e-12);
-        assert_close(result.objective, 0.5 * (double)plot.cells.count, 1e-9);
+        assert_close(result.objective, objective_of(s, &plot.problem, &point), 1e-9);
         assert_true(solve_converged(result.stop));
         assert_string_equal(result.solver, solver_name(solver_at(s)));
         solve_result_free(context, &result);
