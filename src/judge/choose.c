@@ -9,8 +9,8 @@
  * that would leave components of their own behind, and a table of strong effects gets them. Offsets that explain
  * nothing of the hidden cells on their own are not followed any further.
  *
- * The winner is fitted again with finer limits, challenged once from the spectral start, and its ridge checked again,
- * because a loose fit is a shrunk one; the announced error is that of this fit.
+ * The winner is fitted again with finer limits; unless the table is large, it is challenged once more from the spectral
+ * start and its ridge is checked again, because a loose fit is a shrunk one. The announced error is that of this fit.
  *
  * The hidden cells both choose and measure, so the announced error of the chosen fit is the least of several. They are
  * many against the few dozen fits that compete, and differences between near-best fits are far smaller than the error.
@@ -49,6 +49,12 @@ struct solve_limits chooser_fine_limits(const struct chooser *chooser)
                                  .gradient = chooser->options->tolerance,
                                  .change = 1e-5,
                                  .deadline = chooser->deadline};
+}
+
+bool chooser_is_large(const struct chooser *chooser, size_t rank)
+{
+    static const double large = 1e8; /* some seconds for all fits on the way to the rank, each of 40 iterations */
+    return (double)chooser->kept->count * (double)rank * (double)rank > large;
 }
 
 size_t chooser_rank_most(const struct chooser *chooser)
@@ -202,12 +208,14 @@ static fescue_status winner_finish(struct chooser *chooser, struct candidate *wi
 {
     fescue_status status = FESCUE_OK;
     struct solve_limits fine = chooser_fine_limits(chooser), loose = chooser_loose_limits(chooser);
-    bool is_judged = chooser->hidden->count > 0;
+    bool is_judged = chooser->hidden->count > 0, is_large = chooser_is_large(chooser, winner->point.rank);
     if (winner->point.rank > 0 && !winner->is_exact && !winner->is_learnt && is_judged) {
-        TRY(path_challenge(chooser, &loose, winner));
+        if (!is_large)
+            TRY(path_challenge(chooser, &loose, winner));
         TRY(candidate_fit(chooser, ridge_of(chooser, winner), &fine, winner));
         TRY(path_settle(chooser, &fine, true, winner));
-        TRY(ridge_search(chooser, &fine, winner));
+        if (!is_large)
+            TRY(ridge_search(chooser, &fine, winner));
         TRY(path_try_exact(chooser, winner));
     }
     TRY(candidate_measure(chooser, winner)); /* the residuals are the winner's again */

@@ -79,7 +79,12 @@ double ridge_of(const struct chooser *chooser, const struct candidate *candidate
    the hidden cells gain. */
 fescue_status ridge_search(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate);
 
+/* The same, downwards only. */
+fescue_status ridge_lower(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate);
+
 bool chooser_is_late(const struct chooser *chooser);
+/* Whether fits of this rank take so long that each has to be worth it. */
+bool chooser_is_large(const struct chooser *chooser, size_t rank);
 /* Takes up the candidate's offsets: the problem is what they leave of the kept cells. */
 fescue_status chooser_take_up(struct chooser *chooser, const struct candidate *candidate);
 struct solve_limits chooser_loose_limits(const struct chooser *chooser);

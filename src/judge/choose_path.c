@@ -117,14 +117,20 @@ done:
     return status;
 }
 
+/* Grown, its offsets settled, its ridge found, and challenged where growing may have got stuck. In a large table fits
+   are shorter, and a rank that brings nothing is believed when cells are not scarce. */
 static fescue_status rank_step(struct chooser *chooser, double best_rmse, struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
     struct solve_limits limits = chooser_loose_limits(chooser);
+    bool is_large = chooser_is_large(chooser, candidate->point.rank + 1);
+    if (is_large && limits.iterations > 12)
+        limits.iterations = 12;
     TRY(rank_grow(chooser, &limits, candidate));
     TRY(path_settle(chooser, &limits, false, candidate));
     TRY(ridge_search(chooser, &limits, candidate));
-    if (candidate->errors.rmse >= best_rmse * (1 - gain_worth) || is_scarce(chooser, candidate->point.rank))
+    bool is_suspect = candidate->errors.rmse >= best_rmse * (1 - gain_worth) && !is_large;
+    if (is_suspect || is_scarce(chooser, candidate->point.rank))
         TRY(path_challenge(chooser, &limits, candidate));
     TRY(path_try_exact(chooser, candidate));
 done:
@@ -156,38 +162,47 @@ done:
     return status;
 }
 
-/* The limits of a fit on the way to a given rank. */
-static struct solve_limits climb_limits(const struct chooser *chooser, size_t rank)
+/* On the way to a given rank of a large table: few iterations, which lay a component down for the fits after it to go
+   on from, and a ridge that is only let down. */
+static fescue_status climb_briefly(struct chooser *chooser, size_t rank, struct candidate *candidate)
 {
-    static const double much = 1e8; /* cells x rank^2: what all fits on the way cost, some seconds from here on */
+    fescue_status status = FESCUE_OK;
+    struct solve_limits loose = chooser_loose_limits(chooser), brief = loose;
+    brief.iterations = brief.iterations < 5 ? brief.iterations : 5;
+    while (candidate->point.rank < rank) {
+        TRY(rank_grow(chooser, &brief, candidate));
+        TRY(ridge_lower(chooser, &brief, candidate));
+    }
+    TRY(candidate_fit(chooser, candidate->ridge, &loose, candidate));
+    TRY(path_settle(chooser, &loose, false, candidate));
+    TRY(ridge_search(chooser, &loose, candidate));
+done:
+    return status;
+}
+
+static fescue_status climb(struct chooser *chooser, size_t rank, struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
     struct solve_limits limits = chooser_loose_limits(chooser);
-    double work = (double)chooser->kept->count * (double)rank * (double)rank;
-    if (work > much && limits.iterations > 5)
-        limits.iterations = 5; /* lays a component down; the fits after it go on from there */
-    return limits;
+    while (candidate->point.rank < rank) {
+        TRY(rank_grow(chooser, &limits, candidate));
+        TRY(path_settle(chooser, &limits, false, candidate));
+        TRY(ridge_search(chooser, &limits, candidate));
+    }
+done:
+    return status;
 }
 
 fescue_status path_climb(struct chooser *chooser, const struct candidate *alone, size_t rank, struct candidate *chosen)
 {
     fescue_status status = FESCUE_OK;
-    struct solve_limits loose = chooser_loose_limits(chooser), limits = climb_limits(chooser, rank);
-    bool is_brief = limits.iterations < loose.iterations;
+    struct solve_limits limits = chooser_loose_limits(chooser);
     TRY(candidate_copy(chooser, alone, chosen));
     if (rank == 0)
         goto done;
-    while (chosen->point.rank < rank) {
-        TRY(rank_grow(chooser, &limits, chosen));
-        if (!is_brief)
-            TRY(path_settle(chooser, &limits, false, chosen));
-        TRY(ridge_search(chooser, &limits, chosen));
-    }
-    if (is_brief) {
-        TRY(candidate_fit(chooser, chosen->ridge, &loose, chosen));
-        TRY(path_settle(chooser, &loose, false, chosen));
-        TRY(ridge_search(chooser, &loose, chosen));
-    }
+    TRY(chooser_is_large(chooser, rank) ? climb_briefly(chooser, rank, chosen) : climb(chooser, rank, chosen));
     if (is_scarce(chooser, rank))
-        TRY(path_challenge(chooser, &loose, chosen));
+        TRY(path_challenge(chooser, &limits, chosen));
     TRY(path_try_exact(chooser, chosen));
 done:
     return status;

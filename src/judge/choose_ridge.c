@@ -89,17 +89,33 @@ double ridge_of(const struct chooser *chooser, const struct candidate *candidate
     return chooser->options->ridge == FESCUE_AUTO ? ladder[candidate->rung] : chooser->options->ridge;
 }
 
+static bool is_searched(const struct chooser *chooser)
+{
+    return chooser->options->ridge == FESCUE_AUTO && chooser->hidden->count > 0;
+}
+
 fescue_status ridge_search(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
     struct candidate trial = {0};
     bool moved = false;
-    if (chooser->options->ridge != FESCUE_AUTO || chooser->hidden->count == 0)
+    if (!is_searched(chooser))
         goto done;
     TRY(ladder_down(chooser, limits, candidate, &trial, &moved));
     if (!moved)
         TRY(ladder_up(chooser, limits, candidate, &trial));
 done:
+    candidate_free(chooser, &trial);
+    return status;
+}
+
+fescue_status ridge_lower(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    struct candidate trial = {0};
+    bool moved;
+    if (is_searched(chooser))
+        status = ladder_down(chooser, limits, candidate, &trial, &moved);
     candidate_free(chooser, &trial);
     return status;
 }
