@@ -189,6 +189,12 @@ fescue_status final_fit_run(fescue_context *context, const struct final_request 
     *fit = (struct final_fit){.model = {.rows = request->cells->rows, .columns = request->cells->columns}};
     model->bounds = request->options->bounds;
     TRY(refit_offsets(context, request->cells, request->choice->offsets, &request->choice->start, &model->offsets));
+    if (final_exact_may_help(request)) {
+        bool found;
+        TRY(final_exact_run(context, request, fit, &found));
+        if (found)
+            return FESCUE_OK;
+    }
     if (request->choice->is_learnt) {
         TRY(learnt_run(context, request, fit));
         return FESCUE_OK;

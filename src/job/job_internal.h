@@ -34,11 +34,16 @@ struct final_request {
 struct final_fit {
     struct model model;         /* owned */
     struct solve_result result; /* owned; its iterations are those of the whole way from its start */
-    const char *start;          /* which start it came from: "grown", "spectral", or "none" at rank 0 */
+    const char *start;          /* which start it came from: "grown", "spectral", "learnt", or "none" at rank 0 */
     double scale;               /* units of the table in one of the fit's */
 };
 /* Fits all cells with what was chosen. Asked to stop, it ends with what it has: FESCUE_OK and STOP_CANCELLED. */
 fescue_status final_fit_run(fescue_context *context, const struct final_request *request, struct final_fit *fit);
+/* Whether starts beyond the ordinary ones may meet all cells exactly, and trying them: *found, and then the fit has its
+   low-rank part, beside the offsets it came with (final_exact.c). Being asked to stop ends it without. */
+bool final_exact_may_help(const struct final_request *request);
+fescue_status final_exact_run(fescue_context *context, const struct final_request *request, struct final_fit *fit,
+                              bool *found);
 void final_fit_free(fescue_context *context, struct final_fit *fit);
 
 /* ---- a fill -------------------------------------------------------------------------------------------------------
