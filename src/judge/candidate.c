@@ -109,7 +109,7 @@ struct low_rank candidate_point(struct chooser *chooser, const struct candidate 
 static bool is_met(const struct chooser *chooser)
 {
     /* Numbers are held to 2^-53 or 2^-24, and a few hundred roundings go into an estimate. */
-    static const double double_rounding = 1e-7, single_rounding = 1e-5, share = 0.8;
+    static const double double_rounding = 1e-8, single_rounding = 1e-5, share = 0.8;
     bool is_single = chooser->kept->precision == FESCUE_SINGLE;
     double rounding = (is_single ? single_rounding : double_rounding) * chooser->problem.scale;
     uint64_t met = 0, count = chooser->hidden->count;

@@ -74,8 +74,9 @@ fescue_status path_try_exact(struct chooser *chooser, struct candidate *candidat
     /* Errors above this share of the signal are noise, or too far from a solution to tell. */
     static const double suspicion = 0.1;
     bool ridge_allows = chooser->options->ridge == FESCUE_AUTO || chooser->options->ridge == 0;
+    bool is_done = candidate->is_exact && !candidate->is_learnt; /* learning comes near, and stops there */
     struct candidate tight = {0};
-    if (!ridge_allows || candidate->point.rank == 0 || candidate->is_exact || chooser_is_late(chooser) ||
+    if (!ridge_allows || candidate->point.rank == 0 || is_done || chooser_is_late(chooser) ||
         candidate->errors.rmse > suspicion * chooser->problem.scale)
         goto done;
     /* Without noise the objective falls by a factor an iteration until nothing is left of it; with noise it soon stops
