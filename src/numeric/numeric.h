@@ -28,8 +28,9 @@ struct matrix matrix_carve(struct arena *arena, size_t rows, size_t columns);
 struct matrix matrix_left(struct matrix a, size_t columns);
 
 /* A function that the compiler makes for several instruction sets; the one that fits is taken when the program starts.
-   For elementwise loops, whose results do not depend on it. */
-#if defined(__x86_64__)
+   For elementwise loops, whose results do not depend on it. Not by clang, which calls the choice by another name than
+   the function (packed_inverse.ifunc), so that nobody finds it. */
+#if defined(__x86_64__) && !defined(__clang__)
 #define NUMERIC_VERSIONS __attribute__((target_clones("avx512f", "avx2", "default")))
 #else
 #define NUMERIC_VERSIONS
