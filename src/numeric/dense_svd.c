@@ -11,6 +11,7 @@
 #include "numeric/dense_internal.h"
 
 #include <assert.h>
+#include <math.h>
 #include <string.h>
 
 struct turn {
@@ -46,6 +47,17 @@ static void square_transpose(const double *from, struct matrix to)
             MATRIX_AT(to, i, j) = from[j * to.rows + i];
 }
 
+/* LAPACK's iterations need not end on numbers that are not finite: -4 is its own word for such an argument. Of the k x
+   k numbers those on and above the diagonal count. */
+static lapack_int finite_check(const double *x, size_t k)
+{
+    for (size_t i = 0; i < k; i++)
+        for (size_t j = i; j < k; j++)
+            if (!isfinite(x[i * k + j]))
+                return -4;
+    return 0;
+}
+
 fescue_status dense_svd(fescue_context *context, struct matrix a, double *s, struct matrix v, double *work)
 {
     size_t k = a.columns;
@@ -59,6 +71,7 @@ fescue_status dense_svd(fescue_context *context, struct matrix a, double *s, str
     double *triangle = work, *left = triangle + k * k, *right = left + k * k, *room = right + k * k;
     for (size_t i = 0; i < k; i++)
         memcpy(triangle + i * k, &MATRIX_AT(v, i, 0), k * sizeof *triangle);
+    TRY(dense_check(context, "gesvd", finite_check(triangle, k)));
     TRY(dense_check(context, "gesvd",
                     LAPACKE_dgesvd_work(LAPACK_COL_MAJOR, 'A', 'A', size, size, triangle, size, s, left, size, right,
                                         size, room, size * (2 * DENSE_BLOCK + 3))));
@@ -84,6 +97,7 @@ fescue_status dense_eigen(fescue_context *context, struct matrix a, double *w, d
     dense_threads_hold();
     for (size_t i = 0; i < k; i++)
         memcpy(square + i * k, &MATRIX_AT(a, i, 0), k * sizeof *square);
+    TRY(dense_check(context, "syevd", finite_check(square, k)));
     /* Our upper triangle is the lower one of what LAPACK sees. */
     TRY(dense_check(context, "syevd",
                     LAPACKE_dsyevd_work(LAPACK_COL_MAJOR, 'V', 'L', size, square, size, w, room, dense_size(room_size),

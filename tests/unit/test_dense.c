@@ -405,6 +405,10 @@ static void what_is_not_finite_is_refused(void **state)
     assert_status(stand.context, dense_svd(stand.context, stand.a, stand.s, stand.r, stand.work), FESCUE_DEFECT);
     assert_non_null(strstr(fescue_failure_text(stand.context), "not all finite"));
     fescue_failure_clear(stand.context);
+    matrix_zero(stand.square);
+    MATRIX_AT(stand.square, 1, 2) = (double)INFINITY;
+    assert_status(stand.context, dense_eigen(stand.context, stand.square, stand.s, stand.work), FESCUE_DEFECT);
+    fescue_failure_clear(stand.context);
     stand_close(&stand);
 }
 
