@@ -112,6 +112,7 @@ static fescue_status start_try(struct problem *problem, const struct final_reque
     if (*found) {
         for (size_t k = 0; k < point.rank; k++)
             point.spectrum[k] *= problem->scale;
+        fit->is_exact = true;
         fit->scale = problem->scale;
         fit->start = starts[which].name;
         fit->model.low_rank = point;

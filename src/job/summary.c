@@ -61,23 +61,47 @@ static const char *by_whom(bool is_auto)
     return is_auto ? "chosen" : "as asked";
 }
 
+/* What shrinks the components. */
+static void ridge_words(struct summary *summary)
+{
+    const struct choice *choice = &summary->fill->choice;
+    bool is_chosen = summary->fill->options.ridge == (double)FESCUE_AUTO;
+    char ridge[32];
+    if (summary->fill->fit.is_exact)
+        text_add(&summary->text, ", no ridge (all seen cells are met to rounding)");
+    else if (choice->is_learnt)
+        text_add(&summary->text, ", a ridge a component (learnt)");
+    else
+        text_add(&summary->text, ", ridge %s (%s)", real_to_words(choice->ridge, 3, ridge), by_whom(is_chosen));
+}
+
+/* A rank that was asked for and is not there. */
+static void rank_line(struct summary *summary)
+{
+    const struct fescue_fill *fill = summary->fill;
+    const struct cells *cells = &fill->table->cells;
+    int64_t asked = fill->options.rank, shorter = cells->rows < cells->columns ? cells->rows : cells->columns;
+    if (asked == FESCUE_AUTO || (int64_t)fill->fit.model.low_rank.rank >= asked)
+        return;
+    text_add(&summary->text, "           rank %" PRId64 " was asked for; %s\n", asked,
+             fill->choice.is_learnt && asked <= shorter ? "the data do not support more components"
+                                                        : "the table is too small for it");
+}
+
 static void model_lines(struct summary *summary)
 {
     const struct fescue_options *options = &summary->fill->options;
     const struct choice *choice = &summary->fill->choice;
     struct text *text = &summary->text;
-    char ridge[32], tried[WORDS_SIZE], hidden[WORDS_SIZE];
-    bool chooses_rank = options->rank == FESCUE_AUTO, chooses_ridge = options->ridge == (double)FESCUE_AUTO;
-    bool chooses_offsets = options->offsets == FESCUE_OFFSETS_AUTO;
-    text_add(text, "model      %s (%s), rank %" PRIu32 " (%s)", offsets_text(choice->offsets), by_whom(chooses_offsets),
-             choice->is_learnt ? (uint32_t)summary->fill->fit.model.low_rank.rank : choice->rank,
-             by_whom(chooses_rank));
-    if (choice->rank > 0 && choice->is_learnt)
-        text_add(text, ", a ridge a component (learnt)");
-    else if (choice->rank > 0)
-        text_add(text, ", ridge %s (%s)", real_to_words(choice->ridge, 3, ridge), by_whom(chooses_ridge));
+    char tried[WORDS_SIZE], hidden[WORDS_SIZE];
+    size_t rank = summary->fill->fit.model.low_rank.rank;
+    bool chooses_rank = options->rank == FESCUE_AUTO, is_learnt = choice->is_learnt && !summary->fill->fit.is_exact;
+    text_add(text, "model      %s (%s), rank %zu (%s)", offsets_text(choice->offsets),
+             by_whom(options->offsets == FESCUE_OFFSETS_AUTO), rank, by_whom(chooses_rank));
+    if (rank > 0)
+        ridge_words(summary);
     text_add(text, "\n");
-    if (choice->is_learnt && choice->learnt.noise != EVIDENCE_NOISE_EQUAL)
+    if (is_learnt && choice->learnt.noise != EVIDENCE_NOISE_EQUAL)
         text_add(text, "           noise of every %s learnt on its own: less error on hidden cells\n",
                  choice->learnt.noise == EVIDENCE_NOISE_COLUMNS ? "column" : "row");
     if (choice->path_count > 1 && choice->errors.count > 0)
@@ -85,10 +109,9 @@ static void model_lines(struct summary *summary)
                  count_words(choice->errors.count, "hidden cell", hidden));
     if (summary->fill->is_search_cut)
         text_add(text, "           WARNING: the time limit ended the search; allow more, or give a --rank\n");
-    else if (choice->rank == 0 && chooses_rank && choice->errors.count > 0)
+    else if (rank == 0 && chooses_rank && choice->errors.count > 0)
         text_add(text, "           no usable low-rank structure: offsets alone predict hidden cells better\n");
-    if (!chooses_rank && choice->rank < options->rank)
-        text_add(text, "           rank %" PRId64 " was asked for; the table is too small for it\n", options->rank);
+    rank_line(summary);
 }
 
 static const char *alone_text(enum fescue_offsets offsets)
@@ -115,6 +138,8 @@ static void error_lines(struct summary *summary)
                  real_to_words(alone->rmse, 4, alone_rmse), real_to_words(alone->mae, 4, alone_mae));
     if (choice->noiseless)
         text_add(text, "           the hidden cells are met to rounding: the table is free of noise\n");
+    if (summary->fill->fit.is_exact)
+        text_add(text, "           of the fits that were tried; the one on all cells is exact, so this is too much\n");
     if (choice->own_holdout)
         text_add(text, "           no cells were to be kept hidden; a tenth was, for the choice alone\n");
     text_add(text, "           hidden at random: expect more where holes are long runs or late starts\n");
