@@ -200,6 +200,7 @@ static void result_fill(struct run *run)
 {
     struct solve_result *result = run->result;
     result->solver = run->solver->name;
+    result->start = NULL;
     result->iterations = run->iteration;
     result->objective = run->measure.objective;
     result->rmse = rmse_of(run->field.problem, run->measure.square);

@@ -40,6 +40,7 @@ struct solve_step {
 };
 struct solve_result {
     const char *solver;
+    const char *start; /* the strategy whose end was best, of solve_recover; else NULL */
     enum solve_stop stop;
     uint64_t iterations;
     double objective, rmse, gradient; /* at the point returned; gradient relative as in the limits */
@@ -66,6 +67,13 @@ fescue_status start_spectral(struct problem *problem, size_t rank, uint64_t seed
 /* Rank r to r+1: appends the leading singular pair of the residual with its exact step length and restores the
    orthonormal form. Replaces *point. When the residual is zero the new singular value is 0. */
 fescue_status start_grow(struct problem *problem, uint64_t seed, struct low_rank *point);
+
+/* From nothing to the best minimum that several starting strategies lead to, finished by the trust region to the limits
+   (recover.c). New point, owned by the caller; the trace of all attempts is in *result, the fields are those of the
+   best, iterations counts all finishes. FESCUE_STOPPED when asked to stop: *out is the best so far, or has rank 0 and
+   no memory when there is none yet. On another failure *out holds nothing. */
+fescue_status solve_recover(struct problem *problem, size_t rank, uint64_t seed, const struct solve_limits *limits,
+                            struct low_rank *out, struct solve_result *result);
 
 /* ---- the evidence fit: offsets, components and their shrinkage learnt together (evidence.c) -----------------------
  */
