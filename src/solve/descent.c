@@ -43,11 +43,11 @@ fescue_status descent_turn(struct descent *descent)
     return FESCUE_OK;
 }
 
-bool descent_is_near(const struct descent *descent)
+bool descent_is_near(const struct descent *descent, double share)
 {
     const struct projection *p = &descent->projection;
     const struct cells *target = &descent->field.problem->target;
     double density = (double)target->count / ((double)target->rows * (double)target->columns);
-    /* |R| seen on the share that is seen; a third: Newton's region is about as wide as the smallest component. */
-    return sqrt(p->square) <= 0.3 * sqrt(density) * p->spectrum[p->rank - 1];
+    /* |R| is what of the error is seen, on a share `density` of the cells. */
+    return sqrt(p->square) <= share * sqrt(density) * p->spectrum[p->rank - 1];
 }

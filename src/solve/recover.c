@@ -6,7 +6,7 @@
  * start is good for every table (recover_growth.c, recover_weighted.c, recover_ladder.c say what each is good for), so
  * they are tried in turn, the cheapest first, each finished by Newton steps (trust.c), until
  *
- *     one meets the seen cells to rounding: there is nothing better;
+ *     one meets the seen cells to rounding, or all but: there is nothing better;
  *     or two end at the same objective, to a millionth: with noise that is the best sign of the minimum there is;
  *     or all have been tried, or the time is up.
  *
@@ -36,6 +36,8 @@ enum { STRATEGIES = sizeof strategies / sizeof *strategies };
 /* A finish: superlinear when it is near, hopeless when it is not. Below 1e-13 a gradient is rounding. */
 static const struct solve_limits finish = {.iterations = 60, .gradient = 1e-13, .change = 0.01};
 static const double agreement = 1e-6;
+/* No measured table leaves so little: the finish was on its way to rounding when its iterations ran out. */
+static const double vanishing = 1e-8;
 
 struct recovery {
     struct problem *problem;
@@ -72,7 +74,7 @@ static fescue_status candidate_judge(struct recovery *recovery, const char *name
     double before = recovery->ended.objective;
     bool same = recovery->has_best && result->stop == STOP_GRADIENT && recovery->ended.stop == STOP_GRADIENT &&
                 fabs(result->objective - before) <= agreement * before;
-    *settled = same || result->stop == STOP_EXACT || result->stop == STOP_TIME;
+    *settled = same || result->rmse <= vanishing || result->stop == STOP_EXACT || result->stop == STOP_TIME;
     if (!recovery->has_best || result->objective < before) {
         struct low_rank worse = recovery->best;
         recovery->best = recovery->candidate;

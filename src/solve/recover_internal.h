@@ -21,8 +21,9 @@ void descent_close(struct descent *descent);
 /* Turns the frame so that W'W = diag(s^2), s descending, in projection.spectrum. The projection is to be evaluated
    again. */
 fescue_status descent_turn(struct descent *descent);
-/* After a turn: whether the residual is small against the smallest component, so that Newton's steps can finish. */
-bool descent_is_near(const struct descent *descent);
+/* After a turn: whether the residual is at most this share of the smallest component, so that Newton's steps can
+   finish. */
+bool descent_is_near(const struct descent *descent, double share);
 
 /* A strategy makes a new point of the given rank, near a minimum if all goes well, for Newton's steps to finish. At
    the deadline it hurries, and the point has its rank all the same. On failure *out may hold memory; the caller frees

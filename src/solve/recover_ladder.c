@@ -27,7 +27,7 @@ static const struct trust_rules rules = {.accuracy = 0.1, .inner_most = 200, .ex
 static const double smoothing = 0.3;
 static const double last_rung = 1e-5; /* beyond a condition of 300 growth does better */
 enum { STILL_RUNGS = 10 };
-static const double still = 0.99;
+static const double still = 0.99, near = 0.3;
 
 static fescue_status rung_step(struct descent *descent, double mu)
 {
@@ -62,7 +62,7 @@ fescue_status recover_ladder(const struct recover_request *request, struct low_r
             TRY(recover_pause(request, &late));
             TRY(rung_step(&descent, mu));
         }
-        if (descent_is_near(&descent))
+        if (descent_is_near(&descent, near))
             break;
         waited = descent.projection.square < still * lowest ? 0 : waited + 1;
         if (waited == 0)

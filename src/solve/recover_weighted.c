@@ -25,7 +25,7 @@ static const struct trust_rules rules = {.accuracy = 0.1, .inner_most = 100, .ex
 /* At the full rank: steps at most, how s2 falls, and the share of the residual's mean square below which s2 counts as
    having lost touch with it: the residual is noise. */
 enum { FULL_STEPS = 60 };
-static const double fall = 0.9, lost = 0.05;
+static const double fall = 0.9, lost = 0.05, near = 0.01;
 
 /* Turns the frame and sets the ridges for s2. */
 static fescue_status ridges_set(struct descent *descent, double phi, double s2)
@@ -60,7 +60,7 @@ static fescue_status rank_fit(const struct recover_request *request, bool full, 
         TRY(trust_step(&descent.trust, &rules, &moved));
         seen = descent.projection.square / count;
         s2 = full ? fmin(seen, fall * s2) : seen;
-        if (full && (descent_is_near(&descent) || s2 < lost * seen))
+        if (full && (descent_is_near(&descent, near) || s2 < lost * seen))
             break;
     }
     status = projection_write(&descent.projection, point);
