@@ -1,6 +1,7 @@
 /* SPDX-License-Identifier: MIT
  *
- * Arithmetic: loops over observed cells (sweep), small dense algebra (dense), sparse symmetric systems (sparse_spd).
+ * Arithmetic: loops over observed cells (sweep), small dense algebra (dense), sparse symmetric systems (sparse_spd),
+ * processes in time (kalman, chain).
  *
  * Factor matrices are tall (lines x rank) and row-major, so that the rank numbers of one line lie together; the stride
  * is the rank rounded up to a multiple of 8 and the padding is zero, so that loops need no remainder. To LAPACK, which
@@ -147,5 +148,64 @@ void moments_gather(const struct moments *moments, const struct half *half, enum
    FESCUE_NO_MEMORY; FESCUE_DEFECT when the matrix is not positive definite. */
 fescue_status sparse_two_way_solve(fescue_context *context, const struct cells *cells, const double *diagonal,
                                    size_t count, const double *rhs, double *solution);
+
+/* ---- kalman: a scalar AR(1) process seen with noise (kalman.c) ----------------------------------------------------
+ */
+
+struct kalman_law {
+    double variance, correlation; /* correlation over one step, 0 <= it < 1 */
+};
+struct kalman_series {
+    size_t count;
+    const double *time, *value, *noise; /* ascending; noise: variance of each value, INFINITY: not seen */
+};
+struct kalman_state { /* posterior, count numbers each; cross: covariance with the step before, 0 for the first */
+    double *mean, *variance, *cross;
+};
+/* Length of a step; two lines at the same time are told apart. */
+double kalman_step(double from, double to);
+/* Posterior of all steps; returns the log likelihood of the values. */
+double kalman_smooth(const struct kalman_series *series, const struct kalman_law *law,
+                     const struct kalman_state *state);
+/* Mean and variance of a step, given all but its own value. */
+void kalman_without(double noise, double value, double *mean, double *variance);
+/* Mean between two steps of known mean (their covariances do not matter), step[0] after the one, step[1] before the
+   other. */
+double kalman_between(const struct kalman_law *law, const double step[2], const double mean[2]);
+
+/* Sums of second moments by length of step, for learning the law. All members are doubles and add up. */
+enum { KALMAN_CLASSES = 128 };
+struct kalman_tally {
+    double series, first; /* first steps: how many, their E x^2 */
+    double count[KALMAN_CLASSES], length[KALMAN_CLASSES];
+    double now[KALMAN_CLASSES], both[KALMAN_CLASSES], before[KALMAN_CLASSES]; /* E x^2, E x x-, E x-^2 */
+};
+void kalman_tally_step(struct kalman_tally *tally, double step, double now, double both, double before);
+void kalman_tally_series(struct kalman_tally *tally, const struct kalman_series *series,
+                         const struct kalman_state *state);
+void kalman_tally_add(struct kalman_tally *tally, double share, const struct kalman_tally *more); /* += share more */
+/* The law that the tally makes most likely. Stays as it is where all moments are 0. */
+void kalman_learn(const struct kalman_tally *tally, struct kalman_law *law);
+
+/* ---- chain: vectors in time whose components are AR(1) (chain.c) --------------------------------------------------
+ */
+
+struct chain {
+    size_t steps, size;
+    const double *time;           /* ascending, one a step */
+    const struct kalman_law *law; /* one a component; variance 0: held at 0 */
+    const uint32_t *line;         /* of each step; precision, mean, cross are by line. NULL: the same */
+    const double *precision;      /* of the data of each line, packed */
+    size_t precision_stride;
+    const double *mean;         /* size numbers a line: right side of the data */
+    double *cross;              /* size numbers a line: covariance of each component with itself one step before */
+    double *forward, *backward; /* room: steps x chain_room(size) each */
+};
+size_t chain_room(size_t size);
+size_t chain_work(size_t size); /* doubles of `work` in all three */
+/* Both messages, in any order or at once; then the marginals, in any order: covariance (packed) and mean of step t. */
+void chain_forward(const struct chain *chain, double *work);
+void chain_backward(const struct chain *chain, double *work);
+void chain_marginal(const struct chain *chain, size_t t, double *covariance, double *mean, double *work);
 
 #endif

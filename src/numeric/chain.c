@@ -1,0 +1,180 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * A chain of vectors in time whose components are AR(1), each step seen through its own Gaussian data: the posterior
+ * of x_0 .. x_(m-1), d numbers each, with f_tk = rho_k^(t_t - t_(t-1)) and q_tk = v_k (1 - f_tk^2),
+ *
+ *     x_0k ~ N(0, v_k)     x_tk = f_tk x_(t-1)k + N(0, q_tk)     data: exp(-1/2 x_t' D_t x_t + b_t' x_t)
+ *
+ * Its precision is block tridiagonal: D_t plus diagonals on the diagonal, the diagonal matrices -E_t = -f_t/q_t beside
+ * it. A message from the left and one from the right, each one elimination a step,
+ *
+ *     J_t = (D_t + M_t + f_(t+1)^2/q_(t+1))^-1     M_(t+1) = 1/q_(t+1) - E_(t+1) J_t E_(t+1)           M_0 = 1/v
+ *     K_t = (D_t + N_t + 1/q_t)^-1                 N_(t-1) = f_t^2/q_t - E_t K_t E_t                    N_(m-1) = 0
+ *
+ * (with the right sides carried along) give every marginal on its own: Cov(x_t) = (D_t + M_t + N_t)^-1, and
+ * Cov(x_(t-1), x_t) = J_(t-1) E_t Cov(x_t), of which the diagonal is kept. (Two-filter smoothing: Fraser, Potter 1969,
+ * "The optimum linear smoother as a combination of two optimum linear filters", here in information form.)
+ *
+ * Cost: three factorisations and inverses of size d a step, O(m d^3); the two messages run beside one another, the
+ * marginals in blocks of steps. Nothing depends on the number of workers. As E is diagonal a message costs no product
+ * of matrices. Precisions are differences: at rho = 0.9999 some four digits of sixteen are lost, which is why rho stays
+ * below that (kalman_learn).
+ */
+#include "numeric/numeric.h"
+
+#include <math.h>
+#include <string.h>
+
+/* Precision that stands for "held at 0": in units where data have size one no sum of them comes near it. */
+#define PRECISION_OFF 1e30
+
+size_t chain_room(size_t size)
+{
+    return packed_size(size) + size;
+}
+
+size_t chain_work(size_t size)
+{
+    return packed_size(size) + 4 * size;
+}
+
+/* E, f^2/q and 1/q between step t - 1 and t; 1/v alone at t = 0. Those of equal steps are kept. */
+struct link {
+    double step;
+    double *off, *left, *right;
+};
+
+static struct link link_carve(double *at, size_t size)
+{
+    return (struct link){.step = -1, .off = at, .left = at + size, .right = at + 2 * size};
+}
+
+static void link_set(const struct chain *chain, size_t t, struct link *link)
+{
+    double step = t > 0 ? kalman_step(chain->time[t - 1], chain->time[t]) : 0;
+    if (step == link->step)
+        return;
+    link->step = step;
+    for (size_t k = 0; k < chain->size; k++) {
+        const struct kalman_law *law = &chain->law[k];
+        double f = t > 0 && law->variance > 0 ? pow(law->correlation, step) : 0;
+        link->right[k] = law->variance > 0 ? 1 / (law->variance * (1 - f * f)) : PRECISION_OFF;
+        link->off[k] = f * link->right[k];
+        link->left[k] = f * link->off[k];
+    }
+}
+
+static size_t line_at(const struct chain *chain, size_t t)
+{
+    return chain->line != NULL ? chain->line[t] : t;
+}
+
+static double *room_at(const struct chain *chain, double *room, size_t t)
+{
+    return room + t * chain_room(chain->size);
+}
+
+/* precision += diag(own) - E J E, side += E J g: the message through `link` from the step whose J, J g are at `from`
+   (NULL: there is none). */
+static void message_add(size_t size, const struct link *link, const double *own, const double *from, double *precision,
+                        double *side)
+{
+    for (size_t k = 0; k < size; k++)
+        precision[packed_size(k) + k] += own[k];
+    if (from == NULL)
+        return;
+    const double *image = from + packed_size(size);
+    for (size_t k = 0, at = 0; k < size; k++) {
+        double scale = link->off[k];
+        for (size_t l = 0; l <= k; l++, at++)
+            precision[at] -= scale * link->off[l] * from[at];
+        side[k] += scale * image[k];
+    }
+}
+
+/* The data of step t. */
+static void data_copy(const struct chain *chain, size_t t, double *precision, double *side)
+{
+    size_t line = line_at(chain, t);
+    memcpy(precision, chain->precision + line * chain->precision_stride, packed_size(chain->size) * sizeof *precision);
+    memcpy(side, chain->mean + line * chain->size, chain->size * sizeof *side);
+}
+
+/* At `room`: the inverse of `precision` and its product with `side`. */
+static void step_invert(size_t size, double *precision, double *side, double *room)
+{
+    packed_cholesky(precision, size);
+    packed_solve(precision, size, side);
+    packed_inverse(precision, size, room);
+    memcpy(room + packed_size(size), side, size * sizeof *side);
+}
+
+void chain_forward(const struct chain *chain, double *work)
+{
+    size_t d = chain->size;
+    double *precision = work, *side = work + packed_size(d);
+    struct link link = link_carve(side + d, d);
+    for (size_t t = 0; t + 1 < chain->steps; t++) {
+        data_copy(chain, t, precision, side);
+        link_set(chain, t, &link);
+        message_add(d, &link, link.right, t > 0 ? room_at(chain, chain->forward, t - 1) : NULL, precision, side);
+        link_set(chain, t + 1, &link);
+        for (size_t k = 0; k < d; k++)
+            precision[packed_size(k) + k] += link.left[k];
+        step_invert(d, precision, side, room_at(chain, chain->forward, t));
+    }
+}
+
+void chain_backward(const struct chain *chain, double *work)
+{
+    size_t d = chain->size;
+    double *precision = work, *side = work + packed_size(d);
+    struct link link = link_carve(side + d, d);
+    for (size_t t = chain->steps; t-- > 1;) {
+        data_copy(chain, t, precision, side);
+        if (t + 1 < chain->steps) {
+            link_set(chain, t + 1, &link);
+            message_add(d, &link, link.left, room_at(chain, chain->backward, t + 1), precision, side);
+        }
+        link_set(chain, t, &link);
+        for (size_t k = 0; k < d; k++)
+            precision[packed_size(k) + k] += link.right[k];
+        step_invert(d, precision, side, room_at(chain, chain->backward, t));
+    }
+}
+
+/* Diagonal of J_(t-1) E_t C_t. */
+static void cross_write(size_t size, const struct link *link, const double *from, const double *covariance,
+                        double *cross)
+{
+    for (size_t k = 0; k < size; k++)
+        cross[k] = 0;
+    if (from == NULL)
+        return;
+    for (size_t k = 0, at = 0; k < size; k++)
+        for (size_t l = 0; l <= k; l++, at++) {
+            double product = from[at] * covariance[at];
+            cross[k] += product * link->off[l];
+            if (l < k)
+                cross[l] += product * link->off[k];
+        }
+}
+
+void chain_marginal(const struct chain *chain, size_t t, double *covariance, double *mean, double *work)
+{
+    size_t d = chain->size, line = line_at(chain, t);
+    struct link link = link_carve(work + packed_size(d) + d, d);
+    const double *from = t > 0 ? room_at(chain, chain->forward, t - 1) : NULL;
+    double *precision = work;
+    data_copy(chain, t, precision, mean);
+    if (t + 1 < chain->steps) {
+        link_set(chain, t + 1, &link);
+        message_add(d, &link, link.left, room_at(chain, chain->backward, t + 1), precision, mean);
+    }
+    link_set(chain, t, &link);
+    message_add(d, &link, link.right, from, precision, mean);
+    packed_cholesky(precision, d);
+    packed_solve(precision, d, mean);
+    packed_inverse(precision, d, covariance);
+    cross_write(d, &link, from, covariance, chain->cross + line * d);
+}
