@@ -59,13 +59,16 @@ struct fescue_survey {
 
 fescue_status fescue_survey_table(const fescue_table *table, const struct fescue_options *options, fescue_survey **out)
 {
+    struct time_axis time = {0};
     fescue_status status;
     *out = NULL;
     TRY(job_prepare(table->context, options));
+    TRY(time_axis_find(table->context, table, (enum fescue_time_axis)options->time_axis, &time));
     TRY(TAKE(table->context, 1, out));
     (*out)->context = table->context;
-    TRY(survey_text(table, &(*out)->text));
+    TRY(survey_text(table, &time, &(*out)->text));
 done:
+    time_axis_free(table->context, &time);
     if (status != FESCUE_OK)
         fescue_survey_destroy(out);
     return status;

@@ -80,6 +80,7 @@ static void run_view(fescue_fill *fill)
     run->context = fill->context;
     run->table = fill->table;
     run->options = &fill->options;
+    run->time = &fill->time;
     run->model = &fill->fit.model;
     run->choice = &fill->choice;
     run->fit = &fill->fit.result;
@@ -97,6 +98,7 @@ static fescue_status fill_run(fescue_fill *fill)
     fescue_context *context = fill->context;
     fescue_status status;
     TRY(job_prepare(context, &fill->options));
+    TRY(time_axis_find(context, fill->table, (enum fescue_time_axis)fill->options.time_axis, &fill->time));
     struct choose_request request = {.options = &fill->options};
     TRY(solver_choose(context, &fill->options, &request));
     TRY(fill_choose(fill, &request));
@@ -215,6 +217,7 @@ void fescue_fill_destroy(fescue_fill **pointer)
     determined_free(context, &fill->determined);
     final_fit_free(context, &fill->fit);
     choice_free(context, &fill->choice);
+    time_axis_free(context, &fill->time);
     GIVE(context, &fill->text);
     GIVE(context, pointer);
 }

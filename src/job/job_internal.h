@@ -54,6 +54,7 @@ struct fescue_fill {
     fescue_context *context; /* borrowed */
     const fescue_table *table;
     struct fescue_options options; /* a copy; its texts are dropped */
+    struct time_axis time;         /* of the table, or none */
     struct choice choice;
     bool is_search_cut; /* the time limit ended the choosing */
     struct final_fit fit;

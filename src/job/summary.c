@@ -38,6 +38,16 @@ static void table_lines(struct summary *summary)
                  count_words(table->duplicates, "cell", seen));
 }
 
+static void time_line(struct summary *summary)
+{
+    const struct time_axis *time = &summary->fill->time;
+    char words[TIME_TEXT_SIZE];
+    if (time->along != TIME_NONE)
+        text_add(&summary->text, "time       %s\n", time_axis_text(time, words));
+    else if (time->note[0] != '\0')
+        text_add(&summary->text, "time       %s\n", time->note);
+}
+
 static const char *offsets_text(enum fescue_offsets offsets)
 {
     switch (offsets) {
@@ -244,6 +254,7 @@ fescue_status fill_summarise(const fescue_fill *fill, bool is_written, char **te
 {
     struct summary summary = {.fill = fill, .run = &fill->run, .text = {.context = fill->context}};
     table_lines(&summary);
+    time_line(&summary);
     model_lines(&summary);
     error_lines(&summary);
     interval_line(&summary);

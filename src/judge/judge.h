@@ -96,7 +96,7 @@ fescue_status determined_create(fescue_context *context, const struct cells *cel
 enum basis determined_basis(const struct determined *determined, uint32_t row, uint32_t column);
 void determined_free(fescue_context *context, struct determined *determined);
 
-/* What is there before any fit, and as text (new, owned by the caller). */
-fescue_status survey_text(const fescue_table *table, char **text);
+/* What is there before any fit, and as text (new, owned by the caller). `time` may be NULL: nothing is said of it. */
+fescue_status survey_text(const fescue_table *table, const struct time_axis *time, char **text);
 
 #endif

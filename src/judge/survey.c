@@ -77,6 +77,15 @@ static void survey_head(struct survey *survey)
         page_add(page, "There is nothing to fill: every cell is observed.\n");
 }
 
+static void survey_time(struct survey *survey, const struct time_axis *time)
+{
+    char words[TIME_TEXT_SIZE];
+    if (time != NULL && time->along != TIME_NONE)
+        page_add(survey->page, "The %s.\n", time_axis_text(time, words));
+    else if (time != NULL && time->note[0] != '\0')
+        page_add(survey->page, "The %s.\n", time->note);
+}
+
 /* A command line that can be pasted. */
 static void survey_suggest(struct survey *survey)
 {
@@ -104,7 +113,7 @@ static void survey_suggest(struct survey *survey)
     page_add(page, "\n");
 }
 
-fescue_status survey_text(const fescue_table *table, char **out)
+fescue_status survey_text(const fescue_table *table, const struct time_axis *time, char **out)
 {
     fescue_status status = FESCUE_OK;
     fescue_context *context = table->context;
@@ -115,6 +124,7 @@ fescue_status survey_text(const fescue_table *table, char **out)
     TRY(TAKE(context, table->cells.columns, &survey.column_core));
     TRY(core_numbers(context, &table->cells, survey.row_core, survey.column_core));
     survey_head(&survey);
+    survey_time(&survey, time);
     if (table->cells.count > 0) {
         survey_values(&survey);
         survey_lines(&survey);

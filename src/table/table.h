@@ -9,6 +9,7 @@
  *   labels          names of rows and columns
  *   cells           the two-way compressed store of observed cells
  *   texts           what a value looked like in the input, so that it can be given back byte for byte
+ *   time_axis       when the lines of one side were: from labels that are times, or evenly spaced
  */
 #ifndef FESCUE_TABLE_H
 #define FESCUE_TABLE_H
@@ -121,6 +122,32 @@ fescue_status table_from_triplets(fescue_context *context, uint32_t rows, uint32
                                   const uint32_t *row, const uint32_t *column, const double *value,
                                   enum fescue_precision precision, fescue_table **out);
 void table_destroy(fescue_table **table); /* NULL-safe; nulls the pointer */
+
+/* When the rows or the columns were. Equal times are allowed; nothing says that lines come in the order of time. */
+enum time_along { TIME_NONE, TIME_ROWS, TIME_COLUMNS };
+struct time_axis {
+    enum time_along along; /* TIME_NONE: there is no such side; everything else is 0 or NULL, but for the note */
+    uint32_t count;
+    double *at;                /* count: of each line, in steps from the earliest; a step is the median spacing of
+                                  neighbouring distinct times */
+    uint32_t *order;           /* order[k]: the k-th line in time; of equal times the one that comes first */
+    double step_seconds;       /* NAN where lines are only numbered */
+    double start;              /* Unix second of the earliest (by the wall clock where labels have no offset), or NAN */
+    uint32_t gaps;             /* between neighbours in time of more than one and a half steps */
+    uint32_t equal;            /* lines at the time of an earlier one */
+    uint32_t set_back;         /* times when a clock without offset was seen to be set back */
+    bool is_sorted, is_labels; /* order is 0, 1, 2, ...; the times come from labels */
+    char note[256];            /* why there is none although many labels are times, or ""; one plain line */
+};
+/* auto: the rows, else the columns, if all labels of the side are times as ISO 8601 writes them and at least three of
+   them differ. Rows or columns: that side; unlabelled lines are evenly spaced, labels may also be plain numbers, which
+   are times in a unit of their own; FESCUE_BAD_DATA when they are neither. The caller owns what is in *out. */
+fescue_status time_axis_find(fescue_context *context, const fescue_table *table, enum fescue_time_axis wanted,
+                             struct time_axis *out);
+void time_axis_free(fescue_context *context, struct time_axis *axis);
+/* "rows are times, step 1 h, 12 gaps in the clock" into text; "" for TIME_NONE. */
+enum { TIME_TEXT_SIZE = 256 };
+const char *time_axis_text(const struct time_axis *axis, char text[TIME_TEXT_SIZE]);
 
 /* A double from decimal text [text, end): optional sign, digits, point, exponent. Exactly what strtod gives in the C
    locale. False when it is not a number in this grammar (nan, inf, hex, empty, trailing bytes are not). An overflow

@@ -43,6 +43,19 @@ void label_list_finish(fescue_context *context, struct label_list *list, struct 
 void label_list_free(fescue_context *context, struct label_list *list);
 void labels_free(fescue_context *context, struct labels *labels);
 
+/* ---- instants ---------------------------------------------------------------------------------------------------- */
+
+struct instant {
+    int64_t second; /* since 1970-01-01T00:00, in UTC where the label has an offset, else by the clock on the wall */
+    int32_t nano;   /* 0 .. 999999999 */
+    bool has_offset;
+};
+/* Whether the whole text is an instant as ISO 8601 writes it (time_label.c). */
+bool time_label_parse(const char *text, const char *end, struct instant *instant);
+/* Clocks on the wall that were set back (time_clock.c): moves the seconds of such lines so that they are in order, and
+   counts the times when it happened. Lines are in the order of the file; step: the usual spacing in seconds. */
+uint32_t time_clock_mend(struct instant *instants, uint32_t count, double step);
+
 /* ---- halves: one direction of the store ----------------------------------------------------------------------------
  *
  * Made by counting: half_open, half_count once for all cells, half_begin, half_place once for the same cells, half_end.

@@ -10,7 +10,14 @@ static size_t field_length(const struct field *field)
     return (size_t)(field->end - field->text);
 }
 
-/* A new label; one that is there already is refused. */
+/* A time may come twice: two looks at the same moment, or the hour that repeats where summer time ends. */
+static bool is_time(const struct field *field)
+{
+    struct instant instant;
+    return time_label_parse(field->text, field->end, &instant);
+}
+
+/* A new label; one that is there already is refused, unless it is a time. */
 static fescue_status label_add(struct delimited *delimited, struct label_list *list, const struct field *field,
                                const char *what)
 {
@@ -18,7 +25,9 @@ static fescue_status label_add(struct delimited *delimited, struct label_list *l
     uint32_t position, known = list->labels.count;
     TRY(label_check(delimited, field, what));
     TRY(label_list_find_or_add(delimited->table->context, list, field->text, field_length(field), &position));
-    if (position < known)
+    if (position < known && is_time(field))
+        TRY(label_list_add(delimited->table->context, list, field->text, field_length(field)));
+    else if (position < known)
         status = BAD_LINE_AT(delimited->stream, delimited->record.line,
                              "the label '%.*s' of %s %" PRIu32 " is that of %s %" PRIu32
                              " already; every label was expected once",

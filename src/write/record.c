@@ -5,6 +5,7 @@
  *
  *   program, version, caution
  *   input     path, crc32 and bytes (as on disk), shape, rows, columns, observed, duplicates
+ *   time      which side is in time, its step, gaps, equal times; or along none
  *   options   every option that bears on results, as the text that sets it
  *   choice    offsets, rank, ridge (null where the fit learns one a component: then the noise it assumes); hidden
  * cells, errors on them, of offsets alone too; the interval; the path tried fit       solver, start, stop, iterations,
@@ -116,6 +117,25 @@ static struct record input_record(const struct run *run)
     count_set(&input, "observed", table->cells.count);
     count_set(&input, "duplicates", table->duplicates);
     return input;
+}
+
+static struct record time_record(const struct run *run)
+{
+    static const char *const sides[] = {[TIME_NONE] = "none", [TIME_ROWS] = "rows", [TIME_COLUMNS] = "columns"};
+    const struct time_axis *time = run->time;
+    struct record record = record_open(run->context);
+    text_set(&record, "along", sides[time->along]);
+    if (time->note[0] != '\0')
+        text_set(&record, "note", time->note);
+    if (time->along == TIME_NONE)
+        return record;
+    real_set(&record, "step_seconds", time->step_seconds);
+    real_set(&record, "start_unix_seconds", time->start);
+    count_set(&record, "gaps", time->gaps);
+    count_set(&record, "equal_times", time->equal);
+    count_set(&record, "clock_set_back", time->set_back);
+    flag_set(&record, "in_order", time->is_sorted);
+    return record;
 }
 
 /* Where the results went and how many workers there were bears on no result. */
@@ -280,6 +300,7 @@ static struct record run_record(const struct run *run)
     text_set(&record, "version", FESCUE_VERSION);
     text_set(&record, "caution", run_caution);
     record_set(&record, "input", input_record(run));
+    record_set(&record, "time", time_record(run));
     record_set(&record, "options", options_record(run));
     record_set(&record, "choice", choice_record(run));
     record_set(&record, "fit", fit_record(run));

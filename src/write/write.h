@@ -24,6 +24,7 @@ struct run {
     fescue_context *context;
     const fescue_table *table;
     const struct fescue_options *options;
+    const struct time_axis *time; /* along none where there is no time axis */
     const struct model *model;
     const struct choice *choice;
     const struct solve_result *fit; /* of the final fit on all cells */

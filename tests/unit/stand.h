@@ -20,6 +20,7 @@ struct stand {
     const char *folder; /* of the bench; results go to folder/out */
     fescue_table *table;
     struct fescue_options options;
+    struct time_axis time; /* none */
     struct model model;
     struct choice choice;
     struct solve_result fit;
@@ -71,6 +72,7 @@ static void stand_run(struct stand *stand, enum fescue_offsets kind, size_t rank
     stand->run = (struct run){.context = stand->context,
                               .table = stand->table,
                               .options = &stand->options,
+                              .time = &stand->time,
                               .model = &stand->model,
                               .choice = &stand->choice,
                               .fit = &stand->fit,

@@ -40,7 +40,7 @@ static char *survey_of(fescue_context *context, const struct drawing *drawing)
                 assert_status(context, triplets_append(context, &list, i, j, c - '0'), FESCUE_OK);
         }
     assert_status(context, cells_build(context, drawing->rows, drawing->columns, &list, &table.cells), FESCUE_OK);
-    assert_status(context, survey_text(&table, &text), FESCUE_OK);
+    assert_status(context, survey_text(&table, NULL, &text), FESCUE_OK);
     cells_free(context, &table.cells);
     triplets_free(context, &list);
     return text;
@@ -252,7 +252,7 @@ static void a_lack_of_memory_leaks_nothing(void **state)
     for (uint64_t n = 1; met; n++) {
         char *text = NULL;
         fault_plan(FAULT_TAKE, n, false, 0);
-        fescue_status status = survey_text(table, &text);
+        fescue_status status = survey_text(table, NULL, &text);
         met = fault_met();
         assert_status(context, status, met ? FESCUE_NO_MEMORY : FESCUE_OK);
         assert_true((text == NULL) == met);
