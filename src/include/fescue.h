@@ -99,6 +99,13 @@ enum fescue_offsets {
     FESCUE_OFFSETS_NONE
 };
 enum fescue_time_axis { FESCUE_TIME_AUTO, FESCUE_TIME_ROWS, FESCUE_TIME_COLUMNS, FESCUE_TIME_NONE };
+enum fescue_holdout_shape {
+    FESCUE_HOLDOUT_AUTO,
+    FESCUE_HOLDOUT_CELLS,
+    FESCUE_HOLDOUT_GAPS,
+    FESCUE_HOLDOUT_ROWS,
+    FESCUE_HOLDOUT_COLUMNS
+};
 #define FESCUE_DENSE_MOST 20000000 /* cells of a table above which dense outputs are left out unless asked for */
 #define FESCUE_AUTO (-1)           /* a count or real option left to the program */
 

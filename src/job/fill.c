@@ -40,6 +40,29 @@ static fescue_status solver_choose(fescue_context *context, const struct fescue_
     return FESCUE_OK;
 }
 
+/* Which shape the hold-outs have, and along which side: that of the clock; else, for gaps, the one whose holes come in
+   runs. */
+static fescue_status fill_shape(fescue_fill *fill, struct holdout_request *asked)
+{
+    const struct cells *cells = &fill->table->cells;
+    const struct time_axis *time = &fill->time;
+    enum fescue_holdout_shape shape = (enum fescue_holdout_shape)fill->options.holdout_shape;
+    fescue_status status;
+    fill->order = (struct line_order){time->along == TIME_COLUMNS, time->at, time->order};
+    TRY(hole_shape_find(fill->context, cells, time->along == TIME_NONE ? NULL : &fill->order, &fill->shape));
+    if (time->along == TIME_NONE)
+        fill->order.along_columns = fill->shape.along_columns;
+    if (shape != FESCUE_HOLDOUT_AUTO)
+        fill->shape = (struct hole_shape){.shape = shape, .along_columns = fill->order.along_columns};
+    *asked = (struct holdout_request){.shape = fill->shape.shape,
+                                      .share = fill->options.holdout,
+                                      .seed = (uint64_t)fill->options.seed,
+                                      .is_pooled = true,
+                                      .order = &fill->order};
+done:
+    return status;
+}
+
 static fescue_status fill_choose(fescue_fill *fill, struct choose_request *request)
 {
     const struct cells *cells = &fill->table->cells;
@@ -48,7 +71,9 @@ static fescue_status fill_choose(fescue_fill *fill, struct choose_request *reque
     fescue_status status;
     if (options->time_limit > 0)
         request->deadline = fill->wall + choosing_share * options->time_limit;
-    TRY(holdout_split(fill->context, cells, options->holdout, (uint64_t)options->seed, &holdout));
+    struct holdout_request asked;
+    TRY(fill_shape(fill, &asked));
+    TRY(holdout_cut(fill->context, cells, &asked, &holdout));
     TRY(choose_run(fill->context, &holdout, request, &fill->choice));
     fill->is_search_cut = request->deadline > 0 && clock_wall() >= request->deadline;
     fill->run.hidden = holdout.hidden.count > 0 ? holdout.hidden.count : fill->choice.errors.count;

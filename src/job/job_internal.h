@@ -55,6 +55,8 @@ struct fescue_fill {
     const fescue_table *table;
     struct fescue_options options; /* a copy; its texts are dropped */
     struct time_axis time;         /* of the table, or none */
+    struct hole_shape shape;       /* of what is hidden */
+    struct line_order order;       /* along which gaps lie */
     struct choice choice;
     bool is_search_cut; /* the time limit ended the choosing */
     struct final_fit fit;

@@ -131,6 +131,19 @@ static const char *alone_text(enum fescue_offsets offsets)
     return offsets == FESCUE_OFFSETS_MEAN ? "the mean alone" : "offsets alone";
 }
 
+/* What was hidden, and why in this shape. */
+static void shape_line(struct summary *summary)
+{
+    static const char *const shapes[] = {[FESCUE_HOLDOUT_AUTO] = "",
+                                         [FESCUE_HOLDOUT_CELLS] = "scattered cells",
+                                         [FESCUE_HOLDOUT_GAPS] = "scattered cells and gaps like the table's own",
+                                         [FESCUE_HOLDOUT_ROWS] = "all but a few cells of some rows",
+                                         [FESCUE_HOLDOUT_COLUMNS] = "all but a few cells of some columns"};
+    const struct hole_shape *shape = &summary->fill->shape;
+    text_add(&summary->text, "           hidden: %s (%s)\n", shapes[shape->shape],
+             shape->why[0] != '\0' ? shape->why : "as asked");
+}
+
 static void error_lines(struct summary *summary)
 {
     const struct choice *choice = &summary->fill->choice;
@@ -152,7 +165,7 @@ static void error_lines(struct summary *summary)
         text_add(text, "           of the fits that were tried; the one on all cells is exact, so this is too much\n");
     if (choice->own_holdout)
         text_add(text, "           no cells were to be kept hidden; a tenth was, for the choice alone\n");
-    text_add(text, "           hidden at random: expect more where holes are long runs or late starts\n");
+    shape_line(summary);
 }
 
 static void interval_line(struct summary *summary)

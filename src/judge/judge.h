@@ -17,6 +17,39 @@ fescue_status holdout_split(fescue_context *context, const struct cells *cells, 
                             struct holdout *holdout);
 void holdout_free(fescue_context *context, struct holdout *holdout);
 
+/* A side of the table in order, as hold-outs and intervals see it. A view: owns nothing. */
+struct line_order {
+    bool along_columns;    /* the columns are in order; else the rows */
+    const double *at;      /* when each line is, in steps; NULL: 0, 1, 2, ... */
+    const uint32_t *order; /* order[k] is the k-th line; NULL: as they come */
+};
+
+/* What is to be hidden. */
+struct holdout_request {
+    enum fescue_holdout_shape shape; /* never AUTO */
+    double share;
+    uint64_t seed;
+    uint32_t fold;                  /* 0: what choosing hides; 1, 2, ...: further ones, scattered ones apart as long as
+                                       fold * share is at most 1 */
+    bool is_pooled;                 /* gaps: half of the share is scattered */
+    const struct line_order *order; /* gaps: along which they lie; NULL: the rows as they come */
+};
+/* cells: scattered. gaps: stretches of lines, as the holes of other lines are, at the same places and at others, and
+   whole places where the table has places without any cell; when there are no holes, scattered. rows, columns: all but
+   a few cells of some lines. No line loses all its cells, but for such places. */
+fescue_status holdout_cut(fescue_context *context, const struct cells *cells, const struct holdout_request *request,
+                          struct holdout *holdout);
+
+/* Which shape the holes have. order NULL: no side is known to be in order, and a side whose holes come in runs is taken
+   to be in the order it came in. */
+struct hole_shape {
+    enum fescue_holdout_shape shape; /* never AUTO */
+    bool along_columns;              /* gaps: the side that is in order */
+    char why[160];                   /* one clause */
+};
+fescue_status hole_shape_find(fescue_context *context, const struct cells *cells, const struct line_order *order,
+                              struct hole_shape *found);
+
 struct errors {
     uint64_t count;
     double rmse, mae; /* table units; 0 when count is 0 */
