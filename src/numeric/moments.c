@@ -1,68 +1,186 @@
 /* SPDX-License-Identifier: MIT
  *
- * Sums of second moments over the seen cells of one line, for fits that carry the uncertainty of both sides.
+ * Sums of second moments over the seen cells of lines, for fits that carry the uncertainty of both sides.
  *
  * Each position j of a half brings the second moment M_j = E[g_j g_j'] of d regressors g_j, one of which is the
- * constant 1. It is kept as a packed lower triangle, row by row (packed.c), so d(d+1)/2 numbers, padded to a multiple
- * of eight. Row `one` of the triangle, that of the constant, holds the mean E[g_j] itself: a position needs nothing but
- * its packed moment. For line i with seen positions j, values z_ij and a weight
- * c_j a position the gather gives
+ * constant 1. It is kept as a packed lower triangle, row by row (packed.c), so d(d+1)/2 numbers, padded. Row `one` of
+ * the triangle, that of the constant, holds the mean E[g_j] itself: a position needs nothing but its packed moment. For
+ * line i with seen positions j, values z_ij and a weight c_j a position the gather gives
  *
  *     S = sum_j c_j M_j        t = sum_j c_j z_ij E[g_j]        q = sum_j c_j z_ij^2
  *
  * from which the posterior of the line, and the expected squared error of its cells, q - 2 h't + <E[hh'], S>, follow
  * without another pass over the cells.
  *
- * Cost: d(d+1)/2 + 2d additions and multiplications a cell; each M_j is read once, in order, four positions at a time
- * so that S is loaded and stored once for four. Elementwise sums in a fixed order: the bits do not depend on threads
- * or on the instruction set.
+ * Cost: d(d+1)/2 + 2d additions and multiplications a cell, and as many numbers to read, so that what counts is where
+ * they are read from. Eight lines go together. Where they see a good share of the positions, they go through these in
+ * steps of 32 and through the triangle in tiles of 64 numbers: one tile of 32 positions is read from afar once, and
+ * from the nearest cache for each line that has a cell there; its sum stays in registers. Where lines see few
+ * positions there is nothing to share, and each goes through its cells alone, asking for those 32 cells ahead.
+ *
+ * Either way the sums of a line run over its cells in order: the bits depend on the instruction set only in that some
+ * round products before they are added, and on the number of threads not at all.
  */
-#include "numeric/numeric.h"
+#include "numeric/batch_internal.h"
 
 #include <string.h>
 
-NUMERIC_VERSIONS
-static void add_four(double *restrict sum, const double *const from[4], const double weight[4], size_t count)
+enum { TILE_NUMBERS = 64, PREFETCH_EACH = BATCH_STRETCH / BATCH_LANES };
+
+/* Lines that see a quarter of the positions share each of these between two of eight. */
+enum { SHARED_FROM = 4 };
+
+struct gather {
+    const struct moments *moments;
+    const struct half *half;
+    enum fescue_precision precision;
+    size_t first, count;            /* lines */
+    double *second, *target, *tail; /* of each line: sums as they grow; tail is target behind `one` */
+    double *square;
+};
+
+static size_t target_stride(size_t regressors)
 {
-    const double *restrict a = from[0], *restrict b = from[1], *restrict c = from[2], *restrict d = from[3];
-    double wa = weight[0], wb = weight[1], wc = weight[2], wd = weight[3];
-    for (size_t k = 0; k < count; k++)
-        sum[k] += (wa * a[k] + wb * b[k]) + (wc * c[k] + wd * d[k]);
+    return (regressors + 7) / 8 * 8;
 }
 
-/* t += z E[g]: the mean is row `one` of the triangle and, below its diagonal, the column of that number. */
-static void add_target(double *restrict target, const double *restrict moment, double z, const struct moments *moments)
+size_t moments_batch_size(size_t regressors)
 {
-    size_t one = moments->one;
-    const double *mean = moment + one * (one + 1) / 2;
-    for (size_t k = 0; k <= one; k++)
-        target[k] += z * mean[k];
-    for (size_t k = one + 1; k < moments->regressors; k++)
-        target[k] += z * moment[k * (k + 1) / 2 + one];
+    return BATCH_LANES * (2 * moments_stride(regressors) + 3 * target_stride(regressors) + 1);
+}
+
+struct moments_batch moments_batch_carve(double *at, size_t regressors)
+{
+    struct moments_batch batch = {.second = at};
+    batch.target = batch.second + BATCH_LANES * moments_stride(regressors);
+    batch.square = batch.target + BATCH_LANES * target_stride(regressors);
+    batch.work = batch.square + BATCH_LANES;
+    return batch;
+}
+
+/* Cells k .. of a line, up to position `behind` or as many as there is room for; returns the first that is left. */
+static uint64_t stretch_take(const struct gather *gather, uint64_t k, uint64_t end, uint64_t behind, double *square,
+                             struct batch_stretch *stretch)
+{
+    const struct moments *moments = gather->moments;
+    const struct half *half = gather->half;
+    const uint32_t *across = half->across + k;
+    size_t most = end - k < BATCH_STRETCH ? end - k : BATCH_STRETCH, count = 0;
+    double sum[2] = {0};
+    for (; count < most && across[count] < behind; count++) {
+        uint32_t position = across[count];
+        double weight = moments->weight != NULL ? moments->weight[position] : 1;
+        double z = gather->precision == FESCUE_SINGLE ? (double)((const float *)half->value)[k + count]
+                                                      : ((const double *)half->value)[k + count];
+        stretch->offset[count] = position * moments->stride;
+        stretch->factor[count] = weight;
+        stretch->pull[count] = weight * z;
+        sum[count % 2] += weight * z * z;
+    }
+    *square += sum[0] + sum[1];
+    stretch->count = count;
+    return k + count;
+}
+
+/* t += sum of c z E[g]: the mean is row `one` of the triangle and, below its diagonal, the column of that number. */
+static void stretch_target(const struct gather *gather, const struct batch_stretch *stretch, size_t lane)
+{
+    const struct moments *moments = gather->moments;
+    size_t one = moments->one, stride = target_stride(moments->regressors);
+    moments->kernel->add(moments->data + packed_size(one), stretch, NULL, stretch->pull, one + 1,
+                         gather->target + lane * stride);
+    for (size_t k = one + 1; k < moments->regressors; k++) {
+        const double *from = moments->data + packed_size(k) + one;
+        double sum[2] = {0};
+        for (size_t c = 0; c < stretch->count; c++)
+            sum[c % 2] += stretch->pull[c] * from[stretch->offset[c]];
+        gather->tail[lane * stride + k] += sum[0] + sum[1];
+    }
+}
+
+static void tile_add(const struct gather *gather, const struct batch_stretch *stretch, const struct batch_stretch *next,
+                     size_t lane, size_t at)
+{
+    const struct moments *moments = gather->moments;
+    size_t left = packed_size(moments->regressors) - at;
+    moments->kernel->add(moments->data + at, stretch, next, stretch->factor, left < TILE_NUMBERS ? left : TILE_NUMBERS,
+                         gather->second + lane * moments->stride + at);
+}
+
+/* A tile of the next few positions, which the lines share the asking for. */
+static void tile_prefetch(const struct gather *gather, size_t position, size_t at)
+{
+    const struct moments *moments = gather->moments;
+    size_t last = position + PREFETCH_EACH < gather->half->length ? position + PREFETCH_EACH : gather->half->length;
+    for (; position < last; position++)
+        for (size_t n = 0; n < TILE_NUMBERS; n += 8)
+            __builtin_prefetch(moments->data + position * moments->stride + at + n, 0, 2);
+}
+
+static void lines_gather_together(const struct gather *gather)
+{
+    const struct half *half = gather->half;
+    struct batch_stretch stretch[BATCH_LANES];
+    uint64_t k[BATCH_LANES];
+    for (size_t lane = 0; lane < gather->count; lane++)
+        k[lane] = half->start[gather->first + lane];
+    for (size_t begin = 0; begin < half->length; begin += BATCH_STRETCH) {
+        for (size_t lane = 0; lane < gather->count; lane++)
+            k[lane] = stretch_take(gather, k[lane], half->start[gather->first + lane + 1], begin + BATCH_STRETCH,
+                                   gather->square + lane, &stretch[lane]);
+        for (size_t at = 0; at < packed_size(gather->moments->regressors); at += TILE_NUMBERS)
+            for (size_t lane = 0; lane < gather->count; lane++) {
+                tile_prefetch(gather, begin + BATCH_STRETCH + lane * PREFETCH_EACH, at);
+                tile_add(gather, &stretch[lane], NULL, lane, at);
+            }
+        for (size_t lane = 0; lane < gather->count; lane++)
+            stretch_target(gather, &stretch[lane], lane);
+    }
+}
+
+static void lines_gather_alone(const struct gather *gather)
+{
+    const struct half *half = gather->half;
+    struct batch_stretch pair[2] = {{0}, {0}};
+    uint64_t k = half->start[gather->first], stop = half->start[gather->first + gather->count];
+    size_t lane[2] = {0, 0};
+    for (size_t turn = 0; pair[turn % 2].count > 0 || k < stop; turn++) {
+        struct batch_stretch *now = &pair[turn % 2], *next = &pair[(turn + 1) % 2];
+        size_t other = lane[turn % 2];
+        while (k < stop && k == half->start[gather->first + other + 1])
+            other++;
+        lane[(turn + 1) % 2] = other;
+        k = stretch_take(gather, k, half->start[gather->first + other + 1], half->length, gather->square + other, next);
+        for (size_t c = next->count; c < BATCH_STRETCH; c++) /* may be asked for, but not used */
+            next->offset[c] = next->count > 0 ? next->offset[0] : 0;
+        if (now->count == 0)
+            continue;
+        for (size_t at = 0; at < packed_size(gather->moments->regressors); at += TILE_NUMBERS)
+            tile_add(gather, now, next, lane[turn % 2], at);
+        stretch_target(gather, now, lane[turn % 2]);
+    }
 }
 
 void moments_gather(const struct moments *moments, const struct half *half, enum fescue_precision precision,
-                    size_t line, struct moments_sum *sum)
+                    size_t first, const struct moments_batch *out)
 {
-    size_t packed = packed_size(moments->regressors);
-    memset(sum->second, 0, packed * sizeof *sum->second);
-    memset(sum->target, 0, moments->regressors * sizeof *sum->target);
-    sum->square = 0;
-    uint64_t end = half->start[line + 1];
-    for (uint64_t k = half->start[line]; k < end; k += 4) {
-        const double *from[4];
-        double weight[4];
-        for (uint64_t f = 0; f < 4; f++) { /* past the end: a position already in cache, with weight 0 */
-            uint32_t position = half->across[k + f < end ? k + f : k];
-            from[f] = moments->data + position * moments->stride;
-            weight[f] = k + f >= end ? 0 : moments->weight != NULL ? moments->weight[position] : 1;
-        }
-        add_four(sum->second, from, weight, packed);
-        for (uint64_t f = 0; f < 4 && k + f < end; f++) {
-            double z = precision == FESCUE_SINGLE ? (double)((const float *)half->value)[k + f]
-                                                  : ((const double *)half->value)[k + f];
-            add_target(sum->target, from[f], weight[f] * z, moments);
-            sum->square += weight[f] * z * z;
-        }
-    }
+    size_t stride = target_stride(moments->regressors), left = half->lines - first, behind = moments->one + 1;
+    struct gather gather = {.moments = moments, .half = half, .precision = precision, .first = first};
+    gather.count = left < BATCH_LANES ? left : BATCH_LANES;
+    gather.second = out->work;
+    gather.target = gather.second + BATCH_LANES * moments->stride;
+    gather.tail = gather.target + BATCH_LANES * stride;
+    gather.square = out->square;
+    memset(out->work, 0, BATCH_LANES * (moments->stride + 2 * stride) * sizeof *out->work);
+    memset(out->square, 0, BATCH_LANES * sizeof *out->square);
+    uint64_t cells = half->start[first + gather.count] - half->start[first];
+    if (cells * SHARED_FROM >= (uint64_t)gather.count * half->length)
+        lines_gather_together(&gather);
+    else
+        lines_gather_alone(&gather);
+    for (size_t lane = 0; lane < BATCH_LANES; lane++)
+        memcpy(gather.target + lane * stride + behind, gather.tail + lane * stride + behind,
+               (moments->regressors - behind) * sizeof *gather.target);
+    moments->kernel->pack(gather.second, moments->stride, packed_size(moments->regressors), out->second);
+    moments->kernel->pack(gather.target, stride, moments->regressors, out->target);
 }

@@ -119,7 +119,27 @@ void sweep_solve(struct sweep *sweep, const struct half *half, struct matrix rig
 void sweep_errors(struct sweep *sweep, const struct half *half, struct matrix left, struct matrix right, double *square,
                   double *absolute);
 
-/* ---- moments: sums of second moments over the seen cells of a line ----------------------------------------------- */
+/* ---- batches: eight lines and their small systems side by side --------------------------------------------------- */
+
+/* Number `at` of lane l stands at [at * BATCH_LANES + l]; arrays of batches are as long as if `at` went up to a whole
+   multiple of 8. The kernel is the one of the instruction set (FESCUE_KERNEL=portable|avx2|avx512 overrules). What a
+   lane gives does not depend on the other lanes. */
+enum { BATCH_LANES = 8 };
+struct batch_kernel;
+const struct batch_kernel *batch_kernel_choose(void);
+static inline size_t batch_size(size_t numbers)
+{
+    return (numbers + 7) / 8 * 8 * BATCH_LANES;
+}
+/* Eight packed positive definite k x k matrices a, overwritten by their factors: b <- A^-1 b, and inverse <- A^-1,
+   packed, unless NULL. Returns a bit for each lane whose pivots broke down and whose results mean nothing: that one is
+   to be done again by packed_cholesky, which lifts such matrices. */
+unsigned packed_batch_solve(const struct batch_kernel *kernel, double *a, size_t k, double *b, double *inverse);
+/* line[l][at] <- batch, `size` numbers each and up to the next multiple of 8. */
+void packed_batch_unpack(const struct batch_kernel *kernel, const double *batch, size_t size,
+                         double *const line[BATCH_LANES]);
+
+/* ---- moments: sums of second moments over the seen cells of lines ------------------------------------------------ */
 
 /* E[g_j g_j'] of `regressors` regressors for every position j: a packed lower triangle each, at data + j * stride.
    Regressor `one` is the constant 1. weight: one number a position, or NULL for 1. A view; owns nothing. */
@@ -127,17 +147,24 @@ struct moments {
     double *data;
     size_t stride, regressors, one;
     const double *weight;
+    const struct batch_kernel *kernel;
 };
+/* Whole registers may be read from the beginning of any row of a triangle. */
 static inline size_t moments_stride(size_t regressors)
 {
-    return (packed_size(regressors) + 7) / 8 * 8;
+    return (packed_size(regressors) + 7 + 7) / 8 * 8;
 }
-struct moments_sum {
-    double *second, *target, square; /* packed_size(regressors), regressors, 1 */
+/* Of eight lines side by side: packed_size(regressors), regressors and 1 numbers a lane. */
+struct moments_batch {
+    double *second, *target, *square;
+    double *work;
 };
-/* Over the cells of `line`: second = sum c M, target = sum c z E[g], square = sum c z^2. */
+size_t moments_batch_size(size_t regressors); /* doubles, a multiple of 8 */
+struct moments_batch moments_batch_carve(double *at, size_t regressors);
+/* Over the cells of the lines first .. first+7, as far as there are so many: second = sum c M, target = sum c z E[g],
+   square = sum c z^2; 0 in lanes without a line. */
 void moments_gather(const struct moments *moments, const struct half *half, enum fescue_precision precision,
-                    size_t line, struct moments_sum *sum);
+                    size_t first, const struct moments_batch *out);
 
 /* ---- sparse symmetric positive definite systems, through CHOLMOD ------------------------------------------------- */
 

@@ -5,60 +5,16 @@
  * A block is a piece of the half's lines, cut when the cells were stored; each has its own place for its sums, which
  * are added in block order. Which worker takes a block, and how many there are, leaves no trace in the bits. The
  * instruction set does: it decides how many numbers are summed side by side and whether products are rounded before
- * they are added. The one found at run time can be overruled by FESCUE_KERNEL=portable|avx2|avx512, as far as the
- * processor has it.
+ * they are added (kernel_set.c).
  *
  * Workspace: sums of 256 blocks; in single precision, copies of up to two factors of each side; for each worker a
  * line's normal equations twice and a chunk of gathered rows.
  */
-#include "numeric/sweep_internal.h"
+#include "numeric/kernel_internal.h"
 
 #include <assert.h>
 #include <float.h>
-#include <stdlib.h>
 #include <string.h>
-
-/* ---- which kernels ------------------------------------------------------------------------------------------------
- */
-
-struct kernel_set {
-    const char *name;
-    const struct sweep_kernel *kernel[2]; /* by enum fescue_precision */
-};
-static const struct kernel_set portable_set = {"portable", {&sweep_portable_double, &sweep_portable_single}};
-
-#if defined(__x86_64__)
-static const struct kernel_set avx2_set = {"avx2", {&sweep_avx2_double, &sweep_avx2_single}};
-static const struct kernel_set avx512_set = {"avx512", {&sweep_avx512_double, &sweep_avx512_single}};
-
-/* The sets this processor can run, the best first; NULL past the end. */
-static const struct kernel_set *kernel_set_at(size_t k)
-{
-    const struct kernel_set *set[4] = {NULL};
-    size_t count = 0;
-    __builtin_cpu_init();
-    if (__builtin_cpu_supports("avx512f") && __builtin_cpu_supports("avx512vl") && __builtin_cpu_supports("avx512dq"))
-        set[count++] = &avx512_set;
-    if (__builtin_cpu_supports("avx2") && __builtin_cpu_supports("fma"))
-        set[count++] = &avx2_set;
-    set[count] = &portable_set;
-    return k <= count ? set[k] : NULL;
-}
-#else
-static const struct kernel_set *kernel_set_at(size_t k)
-{
-    return k == 0 ? &portable_set : NULL;
-}
-#endif
-
-static const struct kernel_set *kernel_set_choose(void)
-{
-    const char *wish = getenv("FESCUE_KERNEL");
-    for (size_t k = 0; wish != NULL && kernel_set_at(k) != NULL; k++)
-        if (strcmp(wish, kernel_set_at(k)->name) == 0)
-            return kernel_set_at(k);
-    return kernel_set_at(0);
-}
 
 /* ---- workspace ----------------------------------------------------------------------------------------------------
  */
@@ -100,7 +56,7 @@ fescue_status sweep_create(fescue_context *context, const struct cells *cells, s
                             .precision = cells->precision,
                             .rank_most = rank_most,
                             .kernel = set->name,
-                            .kernels = set->kernel[cells->precision],
+                            .kernels = set->sweep[cells->precision],
                             .workers = team_workers(context)};
     sweep->pool_size = 0;
     if (cells->precision == FESCUE_SINGLE)

@@ -61,7 +61,8 @@ static void side_carve(struct arena *arena, const struct half *half, size_t rank
 {
     size_t lines = half->lines, d = rank + 2;
     side->half = half;
-    side->moments = (struct moments){.stride = moments_stride(d), .regressors = d, .one = rank};
+    side->moments =
+        (struct moments){.stride = moments_stride(d), .regressors = d, .one = rank, .kernel = batch_kernel_choose()};
     side->moments.data = arena_carve(arena, lines * moments_stride(d), sizeof(double));
     side->variance = arena_carve(arena, rank + 1, sizeof(double));
     side->line_precision = arena_carve(arena, lines, sizeof(double));
@@ -90,7 +91,7 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
         matrix_reserve(arena, rank, rank);
         matrix_reserve(arena, d, d);
     }
-    arena_reserve(arena, 5 * rank, sizeof(double));
+    arena_reserve(arena, 4 * rank, sizeof(double));
     matrix_reserve(arena, d, d);
     matrix_reserve(arena, d, d);
     arena_reserve(arena, work, sizeof(double));
@@ -104,7 +105,7 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
         evidence->small[k] = matrix_carve(arena, rank, rank);
         evidence->gram[k] = matrix_carve(arena, d, d);
     }
-    evidence->shift = arena_carve(arena, 5 * rank, sizeof(double));
+    evidence->shift = arena_carve(arena, 4 * rank, sizeof(double));
     evidence->map[0] = matrix_carve(arena, d, d);
     evidence->map[1] = matrix_carve(arena, d, d);
     evidence->basis_work = arena_carve(arena, work, sizeof(double));

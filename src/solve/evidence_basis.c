@@ -12,8 +12,9 @@
  * Alternating updates move along these directions only slowly; the jump raises the bound at once, and a component that
  * the data do not support shows up as a w near 0.
  *
- * On the regressors g = (factor, 1, effect) of a line both shifts and R are one linear map T, and M <- T M T'. Cost
- * 2 (r+2)^3 a line, lines in parallel.
+ * On the regressors g = (factor, 1, effect) of a column both shifts and R^-T are one linear map T, and M <- T M T'. The
+ * rows' own moments are left as they are: what follows is that the rows are learnt afresh, from the columns' moments
+ * and the rows' prior variances alone. Cost 4 (r+2)^3 a column, columns in parallel.
  */
 #include "solve/evidence_internal.h"
 
@@ -158,32 +159,29 @@ static void map_block(void *opaque, size_t block, size_t worker)
                           evidence->map[0], evidence->map[1], work);
 }
 
-/* T for g = (factor, 1, effect): factor' = R (factor - shift), effect' = effect + tilt . (factor - back); and T'. */
-static void map_build(struct evidence *evidence, struct matrix rotation, const double *shift, const double *tilt,
-                      const double *back)
+/* T for g = (factor, 1, effect): factor' = R (factor - shift), effect' = effect + tilt . factor; and T'. */
+static void map_build(struct evidence *evidence, struct matrix turn, const double *shift, const double *tilt)
 {
-    size_t rank = rotation.rows;
+    size_t rank = turn.rows;
     struct matrix map = evidence->map[0];
     matrix_zero(map);
     for (size_t k = 0; k < rank; k++)
         for (size_t l = 0; l < rank; l++) {
-            MATRIX_AT(map, k, l) = MATRIX_AT(rotation, k, l);
-            MATRIX_AT(map, k, rank) -= MATRIX_AT(rotation, k, l) * shift[l];
+            MATRIX_AT(map, k, l) = MATRIX_AT(turn, k, l);
+            MATRIX_AT(map, k, rank) -= MATRIX_AT(turn, k, l) * shift[l];
         }
     MATRIX_AT(map, rank, rank) = 1;
     MATRIX_AT(map, rank + 1, rank + 1) = 1;
-    for (size_t l = 0; l < rank; l++) {
+    for (size_t l = 0; l < rank; l++)
         MATRIX_AT(map, rank + 1, l) = tilt[l];
-        MATRIX_AT(map, rank + 1, rank) -= tilt[l] * back[l];
-    }
     for (size_t k = 0; k < rank + 2; k++)
         for (size_t l = 0; l < rank + 2; l++)
             MATRIX_AT(evidence->map[1], l, k) = MATRIX_AT(map, k, l);
 }
 
-/* R = Q'L^-1 and R^-T = Q'L' from A (overwritten by L) and B (overwritten by Q); w is left at the front of work. */
-static fescue_status rotations(struct evidence *evidence, struct matrix a, struct matrix b, struct matrix to_rows,
-                               struct matrix to_columns)
+/* R^-T = Q'L' from A (overwritten by L) and B (overwritten by Q); w is left behind the factor in basis_work. */
+static fescue_status rotation(struct evidence *evidence, struct matrix a, struct matrix b, struct matrix room,
+                              struct matrix to_columns)
 {
     size_t rank = evidence->rank;
     double *factor = evidence->basis_work, *w = factor + packed_size(rank), *work = w + rank;
@@ -195,26 +193,17 @@ static fescue_status rotations(struct evidence *evidence, struct matrix a, struc
     for (size_t k = 0; k < rank; k++)
         for (size_t l = 0; l <= k; l++)
             MATRIX_AT(a, k, l) = factor[packed_size(k) + l];
-    matrix_multiply(1, b, false, a, false, 0, to_rows);         /* BL */
-    matrix_multiply(1, a, true, to_rows, false, 0, to_columns); /* L'BL */
+    matrix_multiply(1, b, false, a, false, 0, room);         /* BL */
+    matrix_multiply(1, a, true, room, false, 0, to_columns); /* L'BL */
     for (size_t k = 0; k < rank; k++)
         for (size_t l = 0; l < k; l++)
             MATRIX_AT(to_columns, l, k) = MATRIX_AT(to_columns, k, l) =
                 0.5 * (MATRIX_AT(to_columns, l, k) + MATRIX_AT(to_columns, k, l));
     matrix_copy(to_columns, b);
     fescue_status status = dense_eigen(evidence->context, b, w, work); /* b = Q */
-    if (status != FESCUE_OK)
-        return status;
-    matrix_multiply(1, b, true, a, true, 0, to_columns); /* Q'L' */
-    for (size_t k = 0; k < rank; k++) {                  /* row k of Q'L^-1: solve L' x = q_k */
-        for (size_t l = rank; l-- > 0;) {
-            double sum = MATRIX_AT(b, l, k);
-            for (size_t p = l + 1; p < rank; p++)
-                sum -= MATRIX_AT(a, p, l) * MATRIX_AT(to_rows, k, p);
-            MATRIX_AT(to_rows, k, l) = sum / MATRIX_AT(a, l, l);
-        }
-    }
-    return FESCUE_OK;
+    if (status == FESCUE_OK)
+        matrix_multiply(1, b, true, a, true, 0, to_columns); /* Q'L' */
+    return status;
 }
 
 /* After the rows' shift mu, the columns' effect is b + mu.v: its products with v. The rows' effect does not change, but
@@ -233,7 +222,7 @@ fescue_status evidence_basis_change(struct evidence *evidence)
     size_t rank = evidence->rank;
     struct evidence_side *rows = &evidence->rows, *columns = &evidence->columns;
     struct matrix *small = evidence->small;
-    double *at = evidence->shift, *zero = at + 4 * rank;
+    double *at = evidence->shift;
     struct side_means u = {.second = small[0], .mean = at, .cross = at + rank};
     struct side_means v = {.second = small[1], .mean = at + 2 * rank, .cross = at + 3 * rank};
     side_means(evidence, rows, &u);
@@ -248,14 +237,11 @@ fescue_status evidence_basis_change(struct evidence *evidence)
         shift(evidence, &v, &u);
     else
         memset(v.mean, 0, rank * sizeof *v.mean);
-    fescue_status status = rotations(evidence, u.second, v.second, small[2], small[3]);
+    fescue_status status = rotation(evidence, u.second, v.second, small[2], small[3]);
     if (status != FESCUE_OK)
         return status;
-    struct basis_job job = {evidence, rows};
-    map_build(evidence, small[2], u.mean, v.mean, u.mean); /* a <- a + nu.(u - mu) */
-    team_run(evidence->context, rows->half->blocks, map_block, &job);
-    job.side = columns;
-    map_build(evidence, small[3], v.mean, u.mean, zero); /* b <- b + mu.v */
+    struct basis_job job = {evidence, columns};
+    map_build(evidence, small[3], v.mean, u.mean); /* b <- b + mu.v */
     team_run(evidence->context, columns->half->blocks, map_block, &job);
     const double *w = evidence->basis_work + packed_size(rank);
     for (size_t k = 0; k < rank; k++) {

@@ -1,7 +1,8 @@
 /* SPDX-License-Identifier: MIT
  *
  * The posterior of every line of one side, given the second moments of the other side: step 1 of evidence.c. Lines are
- * independent of one another, so blocks of them run in parallel, and every sum over lines goes block by block.
+ * independent of one another: eight go side by side, batches of eight run in parallel, and every sum over lines goes
+ * block by block.
  *
  * With the free part h = (factor, effect) of length p = r + 1, the gathered S, t, q of moments.c and the line's own
  * precision c:
@@ -15,6 +16,7 @@
 #include "solve/evidence_internal.h"
 
 #include <assert.h>
+#include <string.h>
 
 /* Precision that stands for "switched off": in units where cells have size one, no sum of cells comes near it. */
 #define PRECISION_OFF 1e30
@@ -24,78 +26,135 @@
    fewer rounds. Below this share it is the latter. */
 #define KNOWN_LEAST 0.01
 
-struct line_scratch {
-    double *second, *target;            /* gathered */
+/* Eight lines side by side, each number BATCH_LANES times. */
+struct lines_scratch {
+    struct moments_batch gathered;
     double *factor, *covariance, *mean; /* of the free part */
+    double *moment;                     /* of the regressors */
+    double *beyond;                     /* where the moments of lanes without a line go */
 };
 
 size_t evidence_side_scratch(size_t rank)
 {
-    return packed_size(rank + 2) + 2 * packed_size(rank + 1) + 2 * (rank + 2);
+    return moments_batch_size(rank + 2) + 2 * batch_size(packed_size(rank + 1)) + batch_size(rank + 1) +
+           batch_size(packed_size(rank + 2)) + moments_stride(rank + 2);
 }
 
-static struct line_scratch scratch_carve(double *at, size_t rank)
+static struct lines_scratch scratch_carve(double *at, size_t rank)
 {
-    struct line_scratch s = {.second = at};
-    s.factor = s.second + packed_size(rank + 2);
-    s.covariance = s.factor + packed_size(rank + 1);
-    s.target = s.covariance + packed_size(rank + 1);
-    s.mean = s.target + rank + 2;
+    struct lines_scratch s = {.gathered = moments_batch_carve(at, rank + 2)};
+    s.factor = at + moments_batch_size(rank + 2);
+    s.covariance = s.factor + batch_size(packed_size(rank + 1));
+    s.mean = s.covariance + batch_size(packed_size(rank + 1));
+    s.moment = s.mean + batch_size(rank + 1);
+    s.beyond = s.moment + batch_size(packed_size(rank + 2));
     return s;
-}
-
-/* Second moments of (factor, 1, effect) from mean and covariance of (factor, effect); covariance NULL: none. */
-static void moments_write(double *moment, const double *mean, const double *covariance, size_t rank)
-{
-    for (size_t k = 0, at = 0; k < rank; k++)
-        for (size_t l = 0; l <= k; l++, at++)
-            moment[at] = mean[k] * mean[l] + (covariance != NULL ? covariance[at] : 0);
-    double *one = moment + packed_size(rank), *effect = moment + packed_size(rank + 1);
-    const double *effect_covariance = covariance != NULL ? covariance + packed_size(rank) : NULL;
-    for (size_t k = 0; k < rank; k++) {
-        one[k] = mean[k];
-        effect[k] = mean[rank] * mean[k] + (covariance != NULL ? effect_covariance[k] : 0);
-    }
-    one[rank] = 1;
-    effect[rank] = mean[rank];
-    effect[rank + 1] = mean[rank] * mean[rank] + (covariance != NULL ? effect_covariance[rank] : 0);
 }
 
 void evidence_side_plant(struct evidence *evidence, struct evidence_side *side, size_t line, const double *mean)
 {
-    moments_write(side->moments.data + line * side->moments.stride, mean, NULL, evidence->rank);
-}
-
-/* <mean mean' + covariance, S> over the free part, S packed. */
-static double inner_second(const struct line_scratch *s, size_t free)
-{
-    double sum = 0;
-    for (size_t k = 0, at = 0; k < free; k++)
+    size_t rank = evidence->rank;
+    double *moment = side->moments.data + line * side->moments.stride;
+    for (size_t k = 0, at = 0; k < rank; k++)
         for (size_t l = 0; l <= k; l++, at++)
-            sum += (k == l ? 1 : 2) * (s->mean[k] * s->mean[l] + s->covariance[at]) * s->second[at];
-    return sum;
+            moment[at] = mean[k] * mean[l];
+    double *one = moment + packed_size(rank), *effect = moment + packed_size(rank + 1);
+    for (size_t k = 0; k < rank; k++) {
+        one[k] = mean[k];
+        effect[k] = mean[rank] * mean[k];
+    }
+    one[rank] = 1;
+    effect[rank] = mean[rank];
+    effect[rank + 1] = mean[rank] * mean[rank];
 }
 
-static double line_solve(const struct evidence *evidence, const struct evidence_side *side, size_t line, double square,
-                         const struct line_scratch *s)
+#define EACH_LANE for (size_t lane = 0; lane < BATCH_LANES; lane++)
+
+/* L into factor and c (t[0..p] - S[p, 0..p]) into mean. */
+NUMERIC_VERSIONS
+static void systems_write(const struct evidence_side *side, size_t free, const double *restrict precision,
+                          const struct lines_scratch *s)
 {
-    size_t free = evidence->rank + 1;
-    double precision = side->line_precision[line] / evidence->noise;
-    const double *cross = s->second + packed_size(free);
-    for (size_t k = 0; k < packed_size(free); k++)
-        s->factor[k] = precision * s->second[k];
+    const double *restrict second = s->gathered.second, *restrict target = s->gathered.target;
+    const double *restrict cross = second + packed_size(free) * BATCH_LANES;
+    double *restrict factor = s->factor, *restrict mean = s->mean;
+    for (size_t at = 0; at < packed_size(free) * BATCH_LANES; at += BATCH_LANES)
+        EACH_LANE factor[at + lane] = precision[lane] * second[at + lane];
     for (size_t k = 0; k < free; k++) {
-        double variance = side->variance[k];
-        s->factor[packed_size(k) + k] += variance > 0 ? 1 / variance : PRECISION_OFF;
-        s->mean[k] = precision * (s->target[k] - cross[k]);
+        double variance = side->variance[k], own = variance > 0 ? 1 / variance : PRECISION_OFF;
+        EACH_LANE factor[(packed_size(k) + k) * BATCH_LANES + lane] += own;
+        EACH_LANE mean[k * BATCH_LANES + lane] =
+            precision[lane] * (target[k * BATCH_LANES + lane] - cross[k * BATCH_LANES + lane]);
     }
-    packed_cholesky(s->factor, free);
-    packed_solve(s->factor, free, s->mean);
-    packed_inverse(s->factor, free, s->covariance);
-    double error = square - 2 * s->target[free] + cross[free] + inner_second(s, free);
+}
+
+/* One lane whose pivots broke down, again and with a lift. */
+static void lane_solve(const struct evidence_side *side, size_t free, double precision, size_t lane,
+                       const struct lines_scratch *s)
+{
+    double *factor = s->beyond, *inverse = s->gathered.work, *mean = inverse + packed_size(free);
+    const double *cross = s->gathered.second + packed_size(free) * BATCH_LANES;
+    for (size_t at = 0; at < packed_size(free); at++)
+        factor[at] = precision * s->gathered.second[at * BATCH_LANES + lane];
+    for (size_t k = 0; k < free; k++) {
+        factor[packed_size(k) + k] += side->variance[k] > 0 ? 1 / side->variance[k] : PRECISION_OFF;
+        mean[k] = precision * (s->gathered.target[k * BATCH_LANES + lane] - cross[k * BATCH_LANES + lane]);
+    }
+    packed_cholesky(factor, free);
+    packed_solve(factor, free, mean);
+    packed_inverse(factor, free, inverse);
     for (size_t k = 0; k < free; k++)
-        error += 2 * s->mean[k] * (cross[k] - s->target[k]);
-    return error > 0 ? error : 0;
+        s->mean[k * BATCH_LANES + lane] = mean[k];
+    for (size_t at = 0; at < packed_size(free); at++)
+        s->covariance[at * BATCH_LANES + lane] = inverse[at];
+}
+
+/* Second moments of (factor, 1, effect) from mean and covariance of (factor, effect), and <E[hh'], S> over the free
+   part. */
+NUMERIC_VERSIONS
+static void moments_write(size_t rank, const struct lines_scratch *s, double *restrict inner)
+{
+    const double *restrict mean = s->mean, *restrict covariance = s->covariance, *restrict second = s->gathered.second;
+    double *restrict moment = s->moment;
+    EACH_LANE inner[lane] = 0;
+    for (size_t k = 0, at = 0; k <= rank; k++) {
+        double *row = moment + packed_size(k < rank ? k : rank + 1) * BATCH_LANES;
+        const double *mine = mean + k * BATCH_LANES;
+        for (size_t l = 0; l <= k; l++, at += BATCH_LANES) {
+            double *to = row + (k == rank && l == rank ? rank + 1 : l) * BATCH_LANES, times = l == k ? 1 : 2;
+            EACH_LANE
+            {
+                double entry = mine[lane] * mean[l * BATCH_LANES + lane] + covariance[at + lane];
+                to[lane] = entry;
+                inner[lane] += times * entry * second[at + lane];
+            }
+        }
+    }
+    double *one = moment + packed_size(rank) * BATCH_LANES;
+    double *effect = moment + (packed_size(rank + 1) + rank) * BATCH_LANES;
+    memcpy(one, mean, rank * BATCH_LANES * sizeof *one);
+    EACH_LANE one[rank * BATCH_LANES + lane] = 1;
+    EACH_LANE effect[lane] = mean[rank * BATCH_LANES + lane];
+}
+
+/* Posteriors of a batch of lines into mean and moment; error[lane] is the expected squared error. */
+static void lines_solve(const struct evidence_side *side, size_t rank, const double *precision,
+                        const struct lines_scratch *s, double *error)
+{
+    size_t free = rank + 1;
+    const double *cross = s->gathered.second + packed_size(free) * BATCH_LANES, *target = s->gathered.target;
+    double inner[BATCH_LANES];
+    systems_write(side, free, precision, s);
+    unsigned broken = packed_batch_solve(side->moments.kernel, s->factor, free, s->mean, s->covariance);
+    for (size_t lane = 0; broken >> lane != 0; lane++)
+        if (broken >> lane & 1)
+            lane_solve(side, free, precision[lane], lane, s);
+    moments_write(rank, s, inner);
+    EACH_LANE error[lane] = s->gathered.square[lane] - 2 * target[free * BATCH_LANES + lane] +
+                            cross[free * BATCH_LANES + lane] + inner[lane];
+    for (size_t at = 0; at < free * BATCH_LANES; at += BATCH_LANES)
+        EACH_LANE error[lane] += 2 * s->mean[at + lane] * (cross[at + lane] - target[at + lane]);
+    EACH_LANE error[lane] = error[lane] > 0 ? error[lane] : 0;
 }
 
 struct update_job {
@@ -104,21 +163,27 @@ struct update_job {
     const struct evidence_side *other;
 };
 
-static void update_block(void *opaque, size_t block, size_t worker)
+/* Batches are cut by lines alone, so that eight columns go together also where each is a block of work of its own. */
+static void update_batch(void *opaque, size_t batch, size_t worker)
 {
     struct update_job *job = opaque;
     struct evidence *evidence = job->evidence;
     struct evidence_side *side = job->side;
-    size_t rank = evidence->rank;
-    struct line_scratch s = scratch_carve(evidence->scratch + worker * evidence->scratch_size, rank);
-    for (size_t line = side->half->block[block]; line < side->half->block[block + 1]; line++) {
-        struct moments_sum sum = {s.second, s.target, 0};
-        moments_gather(&job->other->moments, side->half, evidence->problem->target.precision, line, &sum);
-        side->line_error[line] = line_solve(evidence, side, line, sum.square, &s);
-        moments_write(side->moments.data + line * side->moments.stride, s.mean, s.covariance, rank);
+    size_t rank = evidence->rank, first = batch * BATCH_LANES, left = side->half->lines - first;
+    size_t count = left < BATCH_LANES ? left : BATCH_LANES;
+    struct lines_scratch s = scratch_carve(evidence->scratch + worker * evidence->scratch_size, rank);
+    double precision[BATCH_LANES], error[BATCH_LANES], *to[BATCH_LANES];
+    EACH_LANE precision[lane] = lane < count ? side->line_precision[first + lane] / evidence->noise : 0;
+    EACH_LANE to[lane] = lane < count ? side->moments.data + (first + lane) * side->moments.stride : s.beyond;
+    moments_gather(&job->other->moments, side->half, evidence->problem->target.precision, first, &s.gathered);
+    lines_solve(side, rank, precision, &s, error);
+    packed_batch_unpack(side->moments.kernel, s.moment, packed_size(rank + 2), to);
+    for (size_t lane = 0; lane < count; lane++) {
+        size_t line = first + lane;
+        side->line_error[line] = error[lane];
         for (size_t k = 0; k < rank; k++)
-            MATRIX_AT(side->mean, line, k) = s.mean[k];
-        MATRIX_AT(side->mean, line, side->effect_at) = s.mean[rank];
+            MATRIX_AT(side->mean, line, k) = s.mean[k * BATCH_LANES + lane];
+        MATRIX_AT(side->mean, line, side->effect_at) = s.mean[rank * BATCH_LANES + lane];
         MATRIX_AT(side->mean, line, side->one_at) = 1;
     }
 }
@@ -126,7 +191,7 @@ static void update_block(void *opaque, size_t block, size_t worker)
 void evidence_side_update(struct evidence *evidence, struct evidence_side *side, const struct evidence_side *other)
 {
     struct update_job job = {evidence, side, other};
-    team_run(evidence->context, side->half->blocks, update_block, &job);
+    team_run(evidence->context, (side->half->lines + BATCH_LANES - 1) / BATCH_LANES, update_batch, &job);
 }
 
 static void prior_block(void *opaque, size_t block, size_t worker)

@@ -1,13 +1,19 @@
 /* SPDX-License-Identifier: MIT
  *
- * Sums of second moments over the cells of a line, and the inverse of a packed matrix, against plain double loops.
+ * Sums of second moments over the cells of lines, batches of small systems and the inverse of a packed matrix, against
+ * plain double loops.
  */
 #include "numeric/numeric.h"
 #include "support_table.h"
 
 #include <float.h>
 #include <math.h>
+#include <stdlib.h>
 #include <string.h>
+
+enum { LARGEST = 64 };
+static const char *const kernels[] = {"portable", "avx2", "avx512"}; /* those the processor lacks are not taken */
+#define COUNT(array) (sizeof(array) / sizeof *(array))
 
 static double draw(struct random_stream *stream)
 {
@@ -27,65 +33,174 @@ static double entry(const double *moment, size_t k, size_t l)
     return k >= l ? moment[packed_size(k) + l] : moment[packed_size(l) + k];
 }
 
-static void gather_check(fescue_context *context, enum fescue_precision precision, size_t d, size_t one, bool weighted)
+struct gather_case {
+    enum fescue_precision precision;
+    double seen; /* of the cells: lines that see few positions go through them alone, others together */
+    size_t d, one;
+    bool weighted;
+};
+
+/* sum over the cells of a line of weight * value * entry (a, b) of the moment */
+static double plain_sum(const struct cells *cells, const struct moments *moments, size_t line, size_t a, size_t b,
+                        bool valued)
 {
-    struct sowing sowing = {23, 17, 2, 0.5, 0.3, precision, 4};
+    const struct half *half = &cells->by_row;
+    double sum = 0;
+    for (uint64_t k = half->start[line]; k < half->start[line + 1]; k++) {
+        uint32_t j = half->across[k];
+        sum += (moments->weight != NULL ? moments->weight[j] : 1) * (valued ? cells_value(cells, half, k) : 1) *
+               entry(moments->data + j * moments->stride, a, b);
+    }
+    return sum;
+}
+
+static void line_check(const struct cells *cells, const struct moments *moments, const struct moments_batch *sum,
+                       size_t line)
+{
+    const struct half *half = &cells->by_row;
+    size_t lane = line % BATCH_LANES, d = moments->regressors;
+    double square = 0;
+    for (uint64_t k = half->start[line]; k < half->start[line + 1]; k++) {
+        double z = cells_value(cells, half, k);
+        square += (moments->weight != NULL ? moments->weight[half->across[k]] : 1) * z * z;
+    }
+    assert_close(sum->square[lane], square, 1e-13 * (1 + square));
+    for (size_t a = 0; a < d; a++) {
+        assert_close(sum->target[a * BATCH_LANES + lane], plain_sum(cells, moments, line, a, moments->one, true),
+                     1e-12);
+        for (size_t b = 0; b <= a; b++)
+            assert_close(sum->second[(packed_size(a) + b) * BATCH_LANES + lane],
+                         plain_sum(cells, moments, line, a, b, false), 1e-12);
+    }
+}
+
+static void gather_check(fescue_context *context, const struct gather_case *at)
+{
+    enum { ROWS = 23, COLUMNS = 83 };
+    struct sowing sowing = {ROWS, COLUMNS, 2, at->seen, 0.3, at->precision, 4};
     struct cells cells;
     sow_cells(context, &sowing, &cells);
-    const struct half *half = &cells.by_row;
-    struct random_stream stream = random_open(1, RANDOM_TEST, (uint32_t)d);
-    struct moments moments = {.stride = moments_stride(d), .regressors = d, .one = one};
-    double *weight, *second, *target;
-    assert_status(context, TAKE(context, 17 * moments.stride, &moments.data), FESCUE_OK);
-    assert_status(context, TAKE(context, 17, &weight), FESCUE_OK);
-    assert_status(context, TAKE(context, packed_size(d), &second), FESCUE_OK);
-    assert_status(context, TAKE(context, d, &target), FESCUE_OK);
-    for (size_t j = 0; j < 17; j++) {
-        moment_draw(&stream, d, one, moments.data + j * moments.stride);
+    struct random_stream stream = random_open(1, RANDOM_TEST, (uint32_t)at->d);
+    struct moments moments = {.stride = moments_stride(at->d), .regressors = at->d, .one = at->one};
+    double *weight, *work;
+    moments.kernel = batch_kernel_choose();
+    assert_status(context, TAKE(context, COLUMNS * moments.stride, &moments.data), FESCUE_OK);
+    assert_status(context, TAKE(context, COLUMNS, &weight), FESCUE_OK);
+    assert_status(context, TAKE(context, moments_batch_size(at->d), &work), FESCUE_OK);
+    for (size_t j = 0; j < COLUMNS; j++) {
+        moment_draw(&stream, at->d, at->one, moments.data + j * moments.stride);
         weight[j] = 0.1 + random_uniform(&stream);
     }
-    moments.weight = weighted ? weight : NULL;
-    for (size_t line = 0; line < 23; line++) {
-        struct moments_sum sum = {second, target, -1};
-        double square = 0;
-        moments_gather(&moments, half, precision, line, &sum);
-        for (uint64_t k = half->start[line]; k < half->start[line + 1]; k++) {
-            double z = cells_value(&cells, half, k), c = weighted ? weight[half->across[k]] : 1;
-            square += c * z * z;
-        }
-        assert_close(sum.square, square, 1e-13 * (1 + square));
-        for (size_t a = 0; a < d; a++) {
-            double expected = 0;
-            for (uint64_t k = half->start[line]; k < half->start[line + 1]; k++) {
-                double c = weighted ? weight[half->across[k]] : 1;
-                expected +=
-                    c * cells_value(&cells, half, k) * entry(moments.data + half->across[k] * moments.stride, a, one);
-            }
-            assert_close(target[a], expected, 1e-12);
-            for (size_t b = 0; b <= a; b++) {
-                double s = 0;
-                for (uint64_t k = half->start[line]; k < half->start[line + 1]; k++)
-                    s += (weighted ? weight[half->across[k]] : 1) *
-                         entry(moments.data + half->across[k] * moments.stride, a, b);
-                assert_close(second[packed_size(a) + b], s, 1e-12);
-            }
-        }
+    moments.weight = at->weighted ? weight : NULL;
+    struct moments_batch sum = moments_batch_carve(work, at->d);
+    for (size_t line = 0; line < ROWS; line++) {
+        if (line % BATCH_LANES == 0)
+            moments_gather(&moments, &cells.by_row, at->precision, line, &sum);
+        line_check(&cells, &moments, &sum, line);
     }
+    for (size_t lane = ROWS % BATCH_LANES; lane < BATCH_LANES; lane++)
+        assert_true(sum.square[lane] == 0 && sum.second[lane] == 0 && sum.target[lane] == 0);
     memory_give(context, &moments.data);
     GIVE(context, &weight);
-    GIVE(context, &second);
-    GIVE(context, &target);
+    GIVE(context, &work);
     cells_free(context, &cells);
 }
 
 static void sums_are_those_of_plain_loops(void **state)
 {
+    static const double seen[] = {0.05, 0.2, 0.5, 0.97};
+    static const size_t sizes[] = {2, 3, 4, 5, 8, 9, 12, 16, 18, 22};
     fescue_context *context = bench_of(state)->context;
-    for (size_t d = 2; d < 13; d++)
-        for (int weighted = 0; weighted < 2; weighted++) {
-            gather_check(context, FESCUE_DOUBLE, d, d - 2, weighted);
-            gather_check(context, FESCUE_SINGLE, d, 0, weighted);
+    for (size_t n = 0; n < COUNT(kernels); n++) {
+        setenv("FESCUE_KERNEL", kernels[n], 1);
+        for (size_t k = 0; k < COUNT(sizes); k++)
+            for (size_t s = 0; s < COUNT(seen); s++) {
+                size_t d = sizes[k];
+                gather_check(context, &(struct gather_case){FESCUE_DOUBLE, seen[s], d, d - 2, s % 2 == 0});
+                gather_check(context, &(struct gather_case){FESCUE_SINGLE, seen[s], d, k % 2 == 0 ? 0 : d - 1, s > 1});
+            }
+    }
+    unsetenv("FESCUE_KERNEL");
+}
+
+/* A = G G' + 0.5 I, packed. */
+static void definite_draw(struct random_stream *stream, size_t k, double *a)
+{
+    static double g[LARGEST][LARGEST];
+    for (size_t i = 0; i < k; i++)
+        for (size_t j = 0; j < k; j++)
+            g[i][j] = draw(stream);
+    for (size_t i = 0; i < k; i++)
+        for (size_t j = 0; j <= i; j++) {
+            double sum = i == j ? 0.5 : 0;
+            for (size_t p = 0; p < k; p++)
+                sum += g[i][p] * g[j][p];
+            a[packed_size(i) + j] = sum;
         }
+}
+
+/* Each lane against the same system on its own; A x = b and A A^-1 = I within what rounding does to A of such
+   condition. */
+static void lane_check(const double *single, size_t k, const double *x, const double *inverse, size_t lane)
+{
+    for (size_t i = 0; i < k; i++) {
+        double b = 0;
+        for (size_t p = 0; p < k; p++)
+            b += entry(single, i, p) * x[p * BATCH_LANES + lane];
+        assert_close(b, (double)(i + lane), 1e-9 * (double)k);
+        for (size_t j = 0; j < k; j++) {
+            double sum = 0;
+            for (size_t p = 0; p < k; p++) {
+                size_t at = p >= j ? packed_size(p) + j : packed_size(j) + p;
+                sum += entry(single, i, p) * inverse[at * BATCH_LANES + lane];
+            }
+            assert_close(sum, i == j ? 1 : 0, 1e-10 * (double)k);
+        }
+    }
+}
+
+/* The bits of a lane, to be compared with what other lanes around it leave of them. */
+static double lane_mark(const double *batch, size_t numbers, size_t lane)
+{
+    double mark = 0;
+    for (size_t at = 0; at < numbers; at++)
+        mark += batch[at * BATCH_LANES + lane] * (double)(at + 1);
+    return mark;
+}
+
+static void batches_are_solved_lane_by_lane(void **state)
+{
+    static double single[BATCH_LANES][LARGEST * (LARGEST + 1) / 2], a[BATCH_LANES * LARGEST * (LARGEST + 1) / 2];
+    static double inverse[BATCH_LANES * LARGEST * (LARGEST + 1) / 2], b[BATCH_LANES * LARGEST];
+    (void)state;
+    for (size_t n = 0; n < COUNT(kernels); n++) {
+        setenv("FESCUE_KERNEL", kernels[n], 1);
+        const struct batch_kernel *kernel = batch_kernel_choose();
+        for (size_t k = 1; k <= LARGEST; k += k < 10 ? 1 : 27) {
+            struct random_stream stream = random_open(5, RANDOM_TEST, (uint32_t)k);
+            double mark = 0;
+            for (size_t lane = 0; lane < BATCH_LANES; lane++)
+                definite_draw(&stream, k, single[lane]);
+            for (int spoilt = 0; spoilt < 2; spoilt++) {
+                for (size_t lane = 0; lane < BATCH_LANES; lane++) {
+                    for (size_t at = 0; at < packed_size(k); at++)
+                        a[at * BATCH_LANES + lane] = single[lane][at];
+                    for (size_t i = 0; i < k; i++)
+                        b[i * BATCH_LANES + lane] = (double)(i + lane);
+                }
+                if (spoilt != 0)
+                    a[(packed_size(k) - 1) * BATCH_LANES + 3] = -1; /* no longer definite */
+                assert_int_equal(packed_batch_solve(kernel, a, k, b, inverse), spoilt != 0 ? 8 : 0);
+                for (size_t lane = 0; lane < BATCH_LANES; lane++)
+                    if (spoilt == 0 || lane != 3)
+                        lane_check(single[lane], k, b, inverse, lane);
+                double now = lane_mark(inverse, packed_size(k), 5) + lane_mark(b, k, 5);
+                assert_true(spoilt == 0 || now == mark);
+                mark = now;
+            }
+        }
+    }
+    unsetenv("FESCUE_KERNEL");
 }
 
 static void inverse_times_matrix_is_identity(void **state)
@@ -148,6 +263,7 @@ int main(void)
 {
     const struct CMUnitTest tests[] = {
         BENCH_TEST(sums_are_those_of_plain_loops),
+        cmocka_unit_test(batches_are_solved_lane_by_lane),
         cmocka_unit_test(congruence_is_a_product_of_three),
         cmocka_unit_test(inverse_times_matrix_is_identity),
     };

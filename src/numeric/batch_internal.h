@@ -1,0 +1,35 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Between the operations on batches of eight (batch.c, moments.c) and their kernels (batch_kernel.h, included once for
+ * each instruction set).
+ */
+#ifndef FESCUE_NUMERIC_BATCH_INTERNAL_H
+#define FESCUE_NUMERIC_BATCH_INTERNAL_H
+
+#include "numeric/numeric.h"
+
+/* Cells of one line whose moments are added in one go. 32 positions of 512 bytes (a tile of the kernel) are half of the
+   nearest cache. */
+enum { BATCH_STRETCH = 32 };
+struct batch_stretch {
+    size_t count;
+    size_t offset[BATCH_STRETCH]; /* of the position's moment, in doubles */
+    double factor[BATCH_STRETCH]; /* its weight c */
+    double pull[BATCH_STRETCH];   /* c z */
+};
+
+struct batch_kernel {
+    /* sum[0 .. size-1] += sum over the stretch of factor * data[offset + 0 .. size-1], size rounded up to 8. What
+       `next` will need is asked for; NULL when it is near. */
+    void (*add)(const double *data, const struct batch_stretch *stretch, const struct batch_stretch *next,
+                const double *factor, size_t size, double *sum);
+    unsigned (*solve)(double *a, size_t k, double *b, double *inverse);
+    void (*pack)(const double *lines, size_t stride, size_t size, double *batch);
+    void (*unpack)(const double *batch, size_t size, double *const line[BATCH_LANES]);
+};
+extern const struct batch_kernel batch_portable;
+#if defined(__x86_64__)
+extern const struct batch_kernel batch_avx2, batch_avx512;
+#endif
+
+#endif

@@ -1,0 +1,298 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The inner loops over batches of eight lines and their small systems, once for every instruction set. The including
+ * file defines
+ *
+ *     LANES                doubles in a register: 2, 4 or 8
+ *     MADD(a, b, c)        a b + c on registers
+ *     SQRT(x)              square roots of a register's numbers
+ *     BATCH_KERNEL         the name of the table this gives
+ *
+ * Eight symmetric matrices of one size stand side by side: number `at` of the packed lower triangle of matrix `lane` is
+ * a[8 at + lane] (packed.c says where entry (i, j) is in a triangle), so that one register holds the same entry of
+ * several matrices and no operation goes across a register. For each matrix
+ *
+ *     A = L L'         L_ij = (A_ij - sum_{l<j} L_il L_jl) / L_jj         1 / L_jj is what stands on the diagonal
+ *     b <- A^-1 b      forwards by rows of L, backwards by columns
+ *     N = L^-1         N_ij = -1/L_ii sum_{j<=p<i} L_ip N_pj
+ *     A^-1 = N'N       A^-1_ij = sum_{p>=i} N_pi N_pj, row by row in place of N
+ *
+ * with four entries (i, j .. j+3) at a time, so that five loads feed four multiply-adds and no sum waits for another.
+ * k^3 / 2 multiply-adds a matrix in all. A pivot below k eps A_ii has lost all its digits: its lane is reported, and
+ * its numbers mean nothing.
+ *
+ * What a lane gives depends on LANES not at all, and on MADD only in whether products are rounded before they are
+ * added.
+ */
+#include <float.h>
+#include <math.h>
+#include <string.h>
+
+#define INLINE static inline __attribute__((always_inline))
+typedef double vec __attribute__((vector_size(LANES * sizeof(double)), aligned(sizeof(double)), may_alias));
+typedef int64_t vec_bits __attribute__((vector_size(LANES * sizeof(double)), aligned(sizeof(double)), may_alias));
+
+enum { TILE = 8, FOUR = 4 }; /* registers of sums in flight; entries of a row at a time */
+
+INLINE vec splat(double x)
+{
+    return x - (vec){0};
+}
+
+/* ---- sums of weighted moments -------------------------------------------------------------------------------------
+ */
+
+INLINE void tile_add(const double *data, const struct batch_stretch *stretch, const struct batch_stretch *next,
+                     const double *factor, double *sum, const size_t registers)
+{
+    vec total[TILE];
+    for (size_t v = 0; v < registers; v++)
+        total[v] = *(const vec *)(sum + v * LANES);
+    for (size_t c = 0; c < stretch->count; c++) {
+        const double *moment = data + stretch->offset[c];
+        vec share = splat(factor[c]);
+        for (size_t v = 0; next != NULL && v < registers; v += 8 / LANES)
+            __builtin_prefetch(data + next->offset[c] + v * LANES);
+        for (size_t v = 0; v < registers; v++)
+            total[v] = MADD(share, *(const vec *)(moment + v * LANES), total[v]);
+    }
+    for (size_t v = 0; v < registers; v++)
+        *(vec *)(sum + v * LANES) = total[v];
+}
+
+#define TILE_CASE(n)                                                                                                   \
+    case n:                                                                                                            \
+        tile_add(data, stretch, next, factor, sum, n);                                                                 \
+        break;
+
+static void stretch_add(const double *data, const struct batch_stretch *stretch, const struct batch_stretch *next,
+                        const double *factor, size_t size, double *sum)
+{
+    size_t left = (size + LANES - 1) / LANES;
+    for (; left >= TILE; left -= TILE, data += TILE * LANES, sum += TILE * LANES)
+        if (next == NULL)
+            tile_add(data, stretch, NULL, factor, sum, TILE);
+        else
+            tile_add(data, stretch, next, factor, sum, TILE);
+    switch (left) {
+        TILE_CASE(1)
+        TILE_CASE(2)
+        TILE_CASE(3)
+        TILE_CASE(4)
+        TILE_CASE(5)
+        TILE_CASE(6)
+        TILE_CASE(7)
+    default:
+        break;
+    }
+}
+
+/* ---- systems ------------------------------------------------------------------------------------------------------
+ */
+
+/* Row i of a packed triangle of batches, from the lanes that `a` points at. */
+INLINE double *row_of(double *a, size_t i)
+{
+    return a + packed_size(i) * BATCH_LANES;
+}
+
+INLINE vec *at(double *row, size_t j)
+{
+    return (vec *)(row + j * BATCH_LANES);
+}
+
+/* L_ij .. L_i,j+count-1, and their squares off the pivot. */
+INLINE void entries_factor(double *a, double *row, size_t j, vec *pivot, const size_t count)
+{
+    vec sum[FOUR];
+    double *other[FOUR];
+    for (size_t c = 0; c < count; c++) {
+        other[c] = row_of(a, j + c);
+        sum[c] = (vec){0};
+    }
+    for (size_t l = 0; l < j; l++) {
+        vec x = *at(row, l);
+        for (size_t c = 0; c < count; c++)
+            sum[c] = MADD(x, *at(other[c], l), sum[c]);
+    }
+    for (size_t c = 0; c < count; c++) {
+        for (size_t e = 0; e < c; e++)
+            sum[c] = MADD(*at(row, j + e), *at(other[c], j + e), sum[c]);
+        vec entry = (*at(row, j + c) - sum[c]) * *at(other[c], j + c);
+        *at(row, j + c) = entry;
+        *pivot = MADD(-entry, entry, *pivot);
+    }
+}
+
+/* N_ij .. N_i,j+count-1 from the rows of N above. */
+INLINE void entries_invert(double *l_row, double *n, size_t i, size_t j, const size_t count)
+{
+    vec sum[FOUR], scale = -*at(l_row, i);
+    for (size_t c = 0; c < count; c++)
+        sum[c] = (vec){0};
+    for (size_t p = j; p < j + count; p++) { /* the triangle that N begins with */
+        double *above = row_of(n, p);
+        for (size_t c = 0; c < count; c++)
+            if (c <= p - j)
+                sum[c] = MADD(*at(l_row, p), *at(above, j + c), sum[c]);
+    }
+    for (size_t p = j + count; p < i; p++) {
+        double *above = row_of(n, p);
+        vec x = *at(l_row, p);
+        for (size_t c = 0; c < count; c++)
+            sum[c] = MADD(x, *at(above, j + c), sum[c]);
+    }
+    for (size_t c = 0; c < count; c++)
+        *at(row_of(n, i), j + c) = scale * sum[c];
+}
+
+/* Entries (i, j .. j+count-1) of N'N, in place. */
+INLINE void entries_square(double *n, size_t k, size_t i, size_t j, const size_t count)
+{
+    vec sum[FOUR];
+    for (size_t c = 0; c < count; c++)
+        sum[c] = (vec){0};
+    for (size_t p = i; p < k; p++) {
+        double *row = row_of(n, p);
+        vec x = *at(row, i);
+        for (size_t c = 0; c < count; c++)
+            sum[c] = MADD(x, *at(row, j + c), sum[c]);
+    }
+    for (size_t c = 0; c < count; c++)
+        *at(row_of(n, i), j + c) = sum[c];
+}
+
+/* CALL(j, count) for j = 0, 4, 8, ... below end. */
+#define BY_FOUR(end)                                                                                                   \
+    do {                                                                                                               \
+        size_t j_ = 0;                                                                                                 \
+        for (; j_ + FOUR <= (end); j_ += FOUR)                                                                         \
+            CALL(j_, FOUR);                                                                                            \
+        if ((end)-j_ == 3)                                                                                             \
+            CALL(j_, 3);                                                                                               \
+        else if ((end)-j_ == 2)                                                                                        \
+            CALL(j_, 2);                                                                                               \
+        else if ((end)-j_ == 1)                                                                                        \
+            CALL(j_, 1);                                                                                               \
+    } while (0)
+
+static void lanes_factor(double *a, size_t k, vec_bits *broken)
+{
+    for (size_t i = 0; i < k; i++) {
+        double *row = row_of(a, i);
+        vec pivot = *at(row, i), least = pivot * ((double)k * DBL_EPSILON);
+#define CALL(j, count) entries_factor(a, row, j, &pivot, count)
+        BY_FOUR(i);
+#undef CALL
+        *broken |= ~((pivot > least) & (pivot <= splat(DBL_MAX)));
+        *at(row, i) = 1 / SQRT(pivot);
+    }
+}
+
+static void lanes_solve(double *a, size_t k, double *b)
+{
+    for (size_t i = 0; i < k; i++) {
+        double *row = row_of(a, i);
+        vec sum[2] = {{0}, {0}};
+        size_t j = 0;
+        for (; j + 2 <= i; j += 2) {
+            sum[0] = MADD(*at(row, j), *at(b, j), sum[0]);
+            sum[1] = MADD(*at(row, j + 1), *at(b, j + 1), sum[1]);
+        }
+        if (j < i)
+            sum[0] = MADD(*at(row, j), *at(b, j), sum[0]);
+        *at(b, i) = (*at(b, i) - (sum[0] + sum[1])) * *at(row, i);
+    }
+    for (size_t i = k; i-- > 0;) {
+        double *row = row_of(a, i);
+        vec x = *at(b, i) * *at(row, i);
+        *at(b, i) = x;
+        for (size_t j = 0; j < i; j++)
+            *at(b, j) = MADD(-x, *at(row, j), *at(b, j));
+    }
+}
+
+static void lanes_invert(double *a, size_t k, double *inverse)
+{
+    for (size_t i = 0; i < k; i++) {
+        double *row = row_of(a, i);
+#define CALL(j, count) entries_invert(row, inverse, i, j, count)
+        BY_FOUR(i);
+#undef CALL
+        *at(row_of(inverse, i), i) = *at(row, i);
+    }
+    for (size_t i = 0; i < k; i++) {
+#define CALL(j, count) entries_square(inverse, k, i, j, count)
+        BY_FOUR(i + 1);
+#undef CALL
+    }
+}
+
+static unsigned lanes_all(double *a, size_t k, double *b, double *inverse)
+{
+    unsigned lanes = 0;
+    for (size_t first = 0; first < BATCH_LANES; first += LANES) {
+        vec_bits broken = {0};
+        lanes_factor(a + first, k, &broken);
+        lanes_solve(a + first, k, b + first);
+        if (inverse != NULL)
+            lanes_invert(a + first, k, inverse + first);
+        for (size_t lane = 0; lane < LANES; lane++)
+            lanes |= broken[lane] != 0 ? 1U << (first + lane) : 0;
+    }
+    return lanes;
+}
+
+/* ---- between lines one after another and lines side by side -------------------------------------------------------
+ */
+
+#if LANES == 2
+enum { BLOCK = 2 };
+typedef vec part;
+INLINE void block_transpose(part x[BLOCK])
+{
+    part low = __builtin_shufflevector(x[0], x[1], 0, 2);
+    x[1] = __builtin_shufflevector(x[0], x[1], 1, 3);
+    x[0] = low;
+}
+#else
+enum { BLOCK = 4 };
+typedef double part __attribute__((vector_size(4 * sizeof(double)), aligned(sizeof(double)), may_alias));
+INLINE void block_transpose(part x[BLOCK])
+{
+    part a = __builtin_shufflevector(x[0], x[1], 0, 4, 2, 6), b = __builtin_shufflevector(x[0], x[1], 1, 5, 3, 7);
+    part c = __builtin_shufflevector(x[2], x[3], 0, 4, 2, 6), d = __builtin_shufflevector(x[2], x[3], 1, 5, 3, 7);
+    x[0] = __builtin_shufflevector(a, c, 0, 1, 4, 5);
+    x[1] = __builtin_shufflevector(b, d, 0, 1, 4, 5);
+    x[2] = __builtin_shufflevector(a, c, 2, 3, 6, 7);
+    x[3] = __builtin_shufflevector(b, d, 2, 3, 6, 7);
+}
+#endif
+
+static void lines_pack(const double *lines, size_t stride, size_t size, double *batch)
+{
+    for (size_t first = 0; first < size; first += BLOCK)
+        for (size_t lane = 0; lane < BATCH_LANES; lane += BLOCK) {
+            part x[BLOCK];
+            for (size_t b = 0; b < BLOCK; b++)
+                x[b] = *(const part *)(lines + (lane + b) * stride + first);
+            block_transpose(x);
+            for (size_t b = 0; b < BLOCK; b++)
+                *(part *)(batch + (first + b) * BATCH_LANES + lane) = x[b];
+        }
+}
+
+static void lines_unpack(const double *batch, size_t size, double *const line[BATCH_LANES])
+{
+    for (size_t first = 0; first < size; first += BLOCK)
+        for (size_t lane = 0; lane < BATCH_LANES; lane += BLOCK) {
+            part x[BLOCK];
+            for (size_t b = 0; b < BLOCK; b++)
+                x[b] = *(const part *)(batch + (first + b) * BATCH_LANES + lane);
+            block_transpose(x);
+            for (size_t b = 0; b < BLOCK; b++)
+                *(part *)(line[lane + b] + first) = x[b];
+        }
+}
+
+const struct batch_kernel BATCH_KERNEL = {stretch_add, lanes_all, lines_pack, lines_unpack};
