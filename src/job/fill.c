@@ -132,7 +132,7 @@ static fescue_status fill_run(fescue_fill *fill)
     TRY(determined_create(context, &fill->table->cells, fill->fit.model.low_rank.rank, fill->fit.model.offsets.kind,
                           &fill->determined));
     run_view(fill);
-    TRY(run_count(&fill->run));
+    run_count(&fill->run);
     TRY(fill_summarise(fill, false, &fill->text));
 done:
     return status;

@@ -16,6 +16,8 @@
  *     first   where in `order` each degree begins
  *
  * Vertices are numbered rows first, then columns. One thread; O(cells + lines); four numbers a line of workspace.
+ *
+ * core_trim makes the one core in which rows and columns need different numbers of cells, by a queue of those to go.
  */
 #include "judge/judge_internal.h"
 
@@ -114,5 +116,42 @@ fescue_status core_numbers(fescue_context *context, const struct cells *cells, u
         column_core[j] = (uint32_t)peeling.degree[cells->rows + (uint64_t)j];
 done:
     peeling_close(context, &peeling);
+    return status;
+}
+
+/* ---- one core, rows and columns asking for different numbers ---------------------------------------------------- */
+
+fescue_status core_trim(fescue_context *context, const struct cells *cells, size_t row_least, size_t column_least,
+                        uint32_t *row_in, uint32_t *column_in)
+{
+    fescue_status status = FESCUE_OK;
+    const struct half *halves[2] = {&cells->by_row, &cells->by_column};
+    uint32_t *in[2] = {row_in, column_in};
+    const uint64_t least[2] = {row_least, column_least};
+    uint64_t *degree[2] = {NULL, NULL}, *leaving = NULL, end = 0;
+    TRY(TAKE(context, cells->rows, &degree[0]));
+    TRY(TAKE(context, cells->columns, &degree[1]));
+    TRY(TAKE(context, (size_t)cells->rows + cells->columns, &leaving));
+    for (uint64_t side = 0; side < 2; side++)
+        for (uint64_t i = 0; i < halves[side]->lines; i++) {
+            degree[side][i] = halves[side]->start[i + 1] - halves[side]->start[i];
+            in[side][i] = degree[side][i] >= least[side] && degree[side][i] > 0;
+            if (!in[side][i])
+                leaving[end++] = 2 * i + side;
+        }
+    for (uint64_t begin = 0; begin < end; begin++) {
+        uint64_t side = leaving[begin] % 2, line = leaving[begin] / 2, other = 1 - side;
+        for (uint64_t k = halves[side]->start[line]; k < halves[side]->start[line + 1]; k++) {
+            uint32_t across = halves[side]->across[k];
+            if (in[other][across] && --degree[other][across] < least[other]) {
+                in[other][across] = 0;
+                leaving[end++] = 2 * (uint64_t)across + other;
+            }
+        }
+    }
+done:
+    GIVE(context, &degree[0]);
+    GIVE(context, &degree[1]);
+    GIVE(context, &leaving);
     return status;
 }

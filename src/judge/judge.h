@@ -111,9 +111,8 @@ fescue_status choose_run(fescue_context *context, const struct holdout *holdout,
                          struct choice *choice);
 void choice_free(fescue_context *context, struct choice *choice);
 
-/* Whether the pattern can determine the low-rank part of cell (i, j): rows and columns outside the k-core of the
-   bipartite graph of observed cells (k = rank), or in different connected blocks of it, cannot be (Singer, Cucuringu
-   2010). Such a cell rests on the offsets when their kind has an effect for its row or column and that line has cells;
+/* Whether the pattern of observed cells determines the low-rank part of an unseen cell at this rank (determined.c). One
+   that it does not rests on the offsets when their kind has an effect for its row or column and that line has cells;
    else on the mean. */
 enum basis { BASIS_LOW_RANK, BASIS_OFFSETS, BASIS_MEAN };
 const char *basis_word(enum basis basis); /* "low-rank", "offsets", "mean" */
@@ -123,6 +122,9 @@ struct determined {
     enum fescue_offsets offsets;            /* the kind the model was fitted with */
     uint32_t *row_block, *column_block;     /* core block of each line, from 1; 0: not in the core */
     uint32_t *row_support, *column_support; /* observed cells of each line */
+    struct loose *loose;                    /* lines that can move while no seen cell does; NULL: none */
+    uint64_t low_rank;                      /* cells, seen or not, whose basis is low-rank */
+    uint64_t unchecked;                     /* lines of which only the necessary conditions are known: too large */
 };
 fescue_status determined_create(fescue_context *context, const struct cells *cells, size_t rank,
                                 enum fescue_offsets offsets, struct determined *determined);

@@ -15,6 +15,11 @@
 fescue_status core_numbers(fescue_context *context, const struct cells *cells, uint32_t *row_core,
                            uint32_t *column_core);
 
+/* The largest part of the graph in which each row has at least row_least cells and each column column_least: 1 for a
+   line in it, else 0. */
+fescue_status core_trim(fescue_context *context, const struct cells *cells, size_t row_least, size_t column_least,
+                        uint32_t *row_in, uint32_t *column_in);
+
 /* Connected blocks among the lines whose core number is at least k: 1, 2, ... in the order of their first rows; 0 for
    a line outside, or (k = 0) without cells. *blocks is how many there are. */
 fescue_status blocks_find(fescue_context *context, const struct cells *cells, const uint32_t *row_core,

@@ -3,15 +3,14 @@
  * What is said of one unseen cell (i, j), and how many there are of each kind.
  *
  * The basis is the most of the model that the data determine there:
- *     low-rank   the model has a rank above 0, and i and j lie in one block of the core
+ *     low-rank   the model has a rank above 0, and the pattern determines the cell at it (determined.c)
  *     offsets    else, where the row or the column has an effect of its own, estimated from cells it was seen in
  *     mean       else
  * With --strict a cell is left blank when it is not determined in full: its basis is not low-rank or, in a model of
  * rank 0, one of the effects it takes has no observation behind it.
  *
- * Counting: the cells of each basis over the whole table are sums of products over blocks,
- *     low-rank   sum over b of R_b C_b                R_b, C_b: rows and columns of core block b = 1, 2, ...
- *     mean       R' C' - sum over b of R'_b C'_b      primed: of these, the ones without an effect of their own
+ * Counting: the cells of the whole table whose basis is low-rank are known (determined), and
+ *     mean       R' C', less those if no line has an effect       R', C': lines without an effect of their own
  *     offsets    rows * columns less these two
  * and one pass over the observed cells takes those off. So a table with billions of empty cells costs no more than what
  * was read.
@@ -88,72 +87,39 @@ struct unseen run_unseen(const struct run *run, uint32_t row, uint32_t column)
 /* ---- counting -----------------------------------------------------------------------------------------------------
  */
 
-/* Lines of one side in each block of the core (0: in none): all of them, and those without an effect of their own. */
-struct block_count {
-    uint64_t all, plain;
-};
-
-static uint32_t block_most(const uint32_t *block, uint32_t lines)
+static uint64_t lines_without(const uint32_t *support, uint32_t lines)
 {
-    uint32_t most = 0;
+    uint64_t without = 0;
     for (uint32_t i = 0; i < lines; i++)
-        most = block[i] > most ? block[i] : most;
-    return most;
-}
-
-/* Counts the lines of one side; returns how many have no effect of their own. */
-static uint64_t blocks_count(const uint32_t *block, const uint32_t *support, uint32_t lines, bool has_effects,
-                             struct block_count *counts)
-{
-    uint64_t plain = 0;
-    for (uint32_t i = 0; i < lines; i++) {
-        bool is_plain = !has_effects || support[i] == 0;
-        counts[block[i]].all++;
-        counts[block[i]].plain += is_plain;
-        plain += is_plain;
-    }
-    return plain;
+        without += support[i] == 0;
+    return without;
 }
 
 /* Cells of the whole table by basis. */
-static fescue_status table_count(struct run *run)
+static void table_count(struct run *run)
 {
     const struct determined *d = run->determined;
-    struct block_count *rows = NULL, *columns = NULL;
-    fescue_status status;
-    uint32_t row_most = block_most(d->row_block, d->rows), column_most = block_most(d->column_block, d->columns);
-    size_t most = row_most > column_most ? row_most : column_most;
-    TRY(TAKE(run->context, most + 1, &rows));
-    TRY(TAKE(run->context, most + 1, &columns));
-    uint64_t plain_rows = blocks_count(d->row_block, d->row_support, d->rows, has_row_effects(run), rows);
-    uint64_t plain_columns =
-        blocks_count(d->column_block, d->column_support, d->columns, has_column_effects(run), columns);
-    uint64_t low_rank = 0, mean = plain_rows * plain_columns;
-    for (size_t b = 1; has_low_rank(run) && b <= most; b++) {
-        low_rank += rows[b].all * columns[b].all;
-        mean -= rows[b].plain * columns[b].plain;
-    }
+    uint64_t all = (uint64_t)d->rows * d->columns, low_rank = d->low_rank;
+    uint64_t empty_rows = lines_without(d->row_support, d->rows);
+    uint64_t empty_columns = lines_without(d->column_support, d->columns);
+    bool has_effects = has_row_effects(run) || has_column_effects(run);
+    uint64_t plain_rows = has_row_effects(run) ? empty_rows : d->rows;
+    uint64_t plain_columns = has_column_effects(run) ? empty_columns : d->columns;
     run->filled[BASIS_LOW_RANK] = low_rank;
-    run->filled[BASIS_MEAN] = mean;
-    run->filled[BASIS_OFFSETS] = (uint64_t)d->rows * d->columns - low_rank - mean;
-    run->blank = (uint64_t)d->rows * d->columns - low_rank;
+    run->filled[BASIS_MEAN] = plain_rows * plain_columns - (has_effects ? 0 : low_rank);
+    run->filled[BASIS_OFFSETS] = all - low_rank - run->filled[BASIS_MEAN];
+    run->blank = all - low_rank;
     if (!has_low_rank(run)) {
-        uint64_t full_rows = has_row_effects(run) ? d->rows - plain_rows : d->rows;
-        uint64_t full_columns = has_column_effects(run) ? d->columns - plain_columns : d->columns;
+        uint64_t full_rows = has_row_effects(run) ? d->rows - empty_rows : d->rows;
+        uint64_t full_columns = has_column_effects(run) ? d->columns - empty_columns : d->columns;
         run->blank -= full_rows * full_columns;
     }
-done:
-    GIVE(run->context, &columns);
-    GIVE(run->context, &rows);
-    return status;
 }
 
-fescue_status run_count(struct run *run)
+void run_count(struct run *run)
 {
     const struct cells *cells = &run->table->cells;
-    fescue_status status = table_count(run);
-    if (status != FESCUE_OK)
-        return status;
+    table_count(run);
     for (uint32_t row = 0; row < cells->rows; row++)
         for (uint64_t k = cells->by_row.start[row]; k < cells->by_row.start[row + 1]; k++) {
             uint32_t column = cells->by_row.across[k];
@@ -163,7 +129,6 @@ fescue_status run_count(struct run *run)
         }
     if (!run->options->strict)
         run->blank = 0;
-    return FESCUE_OK;
 }
 
 const char *run_why_left_out(const struct run *run, bool is_written)

@@ -50,7 +50,7 @@ struct unseen run_unseen(const struct run *run, uint32_t row, uint32_t column);
    determine: there it is left out. Else it is model_estimate. */
 double run_estimate(const struct run *run, uint32_t row, uint32_t column);
 /* Counts filled[] and blank of the run, in O(observed + rows + columns). */
-fescue_status run_count(struct run *run);
+void run_count(struct run *run);
 /* Why a result is not written, for record and summary; NULL when it is. */
 const char *run_why_left_out(const struct run *run, bool is_written);
 /* Which bit of --write stands for which result: the order of its words in the list of options. */

@@ -83,7 +83,7 @@ static void stand_run(struct stand *stand, enum fescue_offsets kind, size_t rank
                               .writes_filled = true,
                               .writes_cells = true,
                               .writes_factors = true};
-    assert_status(stand->context, run_count(&stand->run), FESCUE_OK);
+    run_count(&stand->run);
 }
 
 static void stand_begin(void **state, struct stand *stand)
