@@ -223,6 +223,10 @@ static void filled_lines(struct summary *summary)
     text_add(text,
              "filled     %s; by what the data determine: low-rank %" PRIu64 ", offsets %" PRIu64 ", mean %" PRIu64 "\n",
              count_words(all - run->blank, "cell", filled), low_rank, offsets, mean);
+    if (run->determined->unchecked > 0)
+        text_add(text,
+                 "           of %" PRIu64 " rows and columns only the necessary conditions were checked: too large\n",
+                 run->determined->unchecked);
     if (run->blank > 0)
         text_add(text, "           left blank: %" PRIu64 " that the data do not determine (--strict)\n", run->blank);
     else if (run->model->low_rank.rank > 0 && offsets + mean > 0 && !run->options->strict)

@@ -10,7 +10,7 @@
  *   choice    offsets, rank, ridge (null where the fit learns one a component: then the noise it assumes); hidden
  * cells, errors on them, of offsets alone too; the interval; the path tried fit       solver, start, stop, iterations,
  * objective, gradient, rmse model     rank, mean, ridges of the effects, spectrum, how an estimate is made of them
- *   unseen    cells by basis, cells left blank
+ *   unseen    cells by basis, cells left blank, lines whose basis rests on necessary conditions alone
  *   files     each with "written" or why it was left out
  *   timing    started, seconds, threads, bytes of memory at most: all that may differ when the run is repeated
  *
@@ -247,6 +247,7 @@ static struct record unseen_record(const struct run *run)
     for (enum basis basis = BASIS_LOW_RANK; basis <= BASIS_MEAN; basis++)
         count_set(&record, basis_word(basis), run->filled[basis]);
     count_set(&record, "left_blank", run->blank);
+    count_set(&record, "unchecked_lines", run->determined->unchecked);
     return record;
 }
 

@@ -66,7 +66,10 @@ static void stand_run(struct stand *stand, enum fescue_offsets kind, size_t rank
     stand->model.bounds = stand->options.bounds;
     stand_offsets(stand, kind);
     stand_low_rank(stand, rank);
-    assert_status(stand->context, determined_create(stand->context, cells, rank, kind, &stand->determined), FESCUE_OK);
+    /* Tables as small as these determine no component beside effects: let those be known. */
+    assert_status(stand->context,
+                  determined_create(stand->context, cells, rank, FESCUE_OFFSETS_MEAN, &stand->determined), FESCUE_OK);
+    stand->determined.offsets = kind;
     stand->choice = (struct choice){.offsets = kind, .rank = (uint32_t)rank, .ridge = 0.5, .halfwidth = 1.25};
     stand->fit = (struct solve_result){.solver = "grassmann-cg", .stop = STOP_GRADIENT};
     stand->run = (struct run){.context = stand->context,
