@@ -2,7 +2,7 @@
  *
  * What is fitted: offsets, and the objective of the low-rank part.
  *
- *     estimate_ij = mean + row_i + column_j + (left diag(spectrum) right')_ij
+ *     estimate_ij = mean + row_i + column_j + (left diag(spectrum) right')_ij + time_ij
  */
 #ifndef FESCUE_MODEL_H
 #define FESCUE_MODEL_H
@@ -46,11 +46,36 @@ fescue_status problem_create(fescue_context *context, const struct cells *cells,
 void problem_set_ridge(struct problem *problem, double ridge);
 void problem_free(struct problem *problem);
 
+/* What time adds to offsets and low-rank part (time_part.c). The lines along the axis are its steps, the lines across
+   it its series: with times as rows, every column is one. A series has a residual that is AR(1) in time; known at the
+   cells that were seen, it follows between them. The components and the effect of the steps may be AR(1) too, which is
+   in their values already: their laws are here for the record, and for a fit that starts from this one. */
+struct time_part {
+    enum time_along along; /* TIME_NONE: there is none, and everything else is 0 */
+    uint32_t steps, series;
+    double *at;             /* of each step, in steps from the earliest */
+    uint64_t *start;        /* series + 1 */
+    double *time, *mean;    /* of the seen cells of each series, in the order of time: when, and the residual */
+    struct kalman_law *law; /* of the residual of each series; variance in the table's units, squared */
+    double *noise;          /* variance of each series, table units */
+    size_t components;      /* of which laws are known, the effect being the last; 0: independent steps */
+    struct kalman_law *steps_law;
+};
+fescue_status time_part_create(fescue_context *context, const struct time_axis *axis, uint32_t series, uint64_t count,
+                               size_t components, struct time_part *part);
+fescue_status time_part_copy(fescue_context *context, const struct time_part *from, struct time_part *to);
+void time_part_free(fescue_context *context, struct time_part *part);
+/* The residual at a cell: O(log seen). */
+double time_part_at(const struct time_part *part, uint32_t row, uint32_t column);
+/* Steps from a cell to the nearest seen cell of its series; infinite where the series has none. */
+double time_part_distance(const struct time_part *part, uint32_t row, uint32_t column);
+
 /* The whole of what was learnt, in the table's units (scale is already in the spectrum). */
 struct model {
     uint32_t rows, columns;
     struct offsets offsets;
     struct low_rank low_rank;
+    struct time_part time;
     struct fescue_range bounds;
 };
 double model_estimate(const struct model *model, uint32_t row, uint32_t column); /* clamped to bounds */

@@ -97,7 +97,7 @@ static void data_copy(const struct chain *chain, size_t t, double *precision, do
 {
     size_t line = line_at(chain, t);
     memcpy(precision, chain->precision + line * chain->precision_stride, packed_size(chain->size) * sizeof *precision);
-    memcpy(side, chain->mean + line * chain->size, chain->size * sizeof *side);
+    memcpy(side, chain->mean + line * chain->mean_stride, chain->size * sizeof *side);
 }
 
 /* At `room`: the inverse of `precision` and its product with `side`. */

@@ -224,7 +224,8 @@ struct chain {
     const uint32_t *line;         /* of each step; precision, mean, cross are by line. NULL: the same */
     const double *precision;      /* of the data of each line, packed */
     size_t precision_stride;
-    const double *mean;         /* size numbers a line: right side of the data */
+    const double *mean; /* size numbers a line: right side of the data */
+    size_t mean_stride;
     double *cross;              /* size numbers a line: covariance of each component with itself one step before */
     double *forward, *backward; /* room: steps x chain_room(size) each */
 };

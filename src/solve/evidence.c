@@ -6,6 +6,8 @@
  *     z_ij = a_i + b_j + u_i.v_j + e_ij          e_ij ~ N(0, s2_ij)
  *     u_ik ~ N(0, su_k)   a_i ~ N(0, sa)   v_jk ~ N(0, sv_k)   b_j ~ N(0, sb)
  *
+ * and, where lines are times, a residual and factors that are AR(1) in time (evidence_time.c).
+ *
  *     symbol   shape         what it is
  *     u, a     m x r, m      factors and effects of the rows; x_i = (u_i, a_i, 1)
  *     v, b     n x r, n      factors and effects of the columns; w_j = (v_j, 1, b_j), so that z_ij = x_i.w_j + e_ij
@@ -82,7 +84,8 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
     size_t work = 2 * packed_size(rank) + 3 * rank + dense_work_size(rank, rank);
     *evidence = (struct evidence){.context = problem->context, .problem = problem, .rank = rank};
     evidence->started = clock_wall();
-    evidence->scratch_size = ((one > two ? one : two) + 7) / 8 * 8;
+    size_t most = one > two ? one : two, chain = evidence_chain_scratch(rank);
+    evidence->scratch_size = ((most > chain ? most : chain) + 7) / 8 * 8;
     struct arena *arena = &evidence->arena;
     side_reserve(arena, &cells->by_row, rank);
     side_reserve(arena, &cells->by_column, rank);
@@ -150,6 +153,9 @@ static void evidence_start(struct evidence *evidence, const struct model *start,
 static void noise_update(struct evidence *evidence, struct evidence_side *side, bool own)
 {
     double total = 0, count = (double)evidence->problem->target.count;
+    if (side->excess != NULL)
+        for (size_t line = 0; line < side->half->lines; line++)
+            side->line_error[line] += side->excess[line];
     for (size_t line = 0; line < side->half->lines; line++)
         total += side->line_error[line];
     double mean = fmax(total / count, NOISE_LEAST);
@@ -180,23 +186,37 @@ static double change_measure(struct evidence *evidence)
     return sqrt(fmax(square, 0) / cells);
 }
 
+/* Steps 1 and 2 for one side. */
+static void side_round(struct evidence *evidence, struct evidence_side *side, const struct evidence_side *other)
+{
+    struct evidence_time *time = evidence->time;
+    if (time != NULL && time->chain_on && side == time->steps) {
+        evidence_chain_update(evidence);
+        evidence_chain_prior(evidence);
+        return;
+    }
+    evidence_side_update(evidence, side, other);
+    evidence_side_prior(evidence, side);
+}
+
 static fescue_status evidence_round(struct evidence *evidence, const struct evidence_request *request, uint64_t round,
                                     double *change)
 {
     struct evidence_side *rows = &evidence->rows, *columns = &evidence->columns;
     matrix_copy(rows->mean, rows->old);
     matrix_copy(columns->mean, columns->old);
-    if (round > 0 && (round < EVIDENCE_ROUND_BASIS || round % EVIDENCE_BASIS_EVERY == 0)) {
+    bool has_chain = evidence->time != NULL && evidence->time->chain_on;
+    if (round > 0 && !has_chain && (round < EVIDENCE_ROUND_BASIS || round % EVIDENCE_BASIS_EVERY == 0)) {
         fescue_status status = evidence_basis_change(evidence);
         if (status != FESCUE_OK)
             return status;
     }
-    evidence_side_update(evidence, rows, columns);
-    evidence_side_prior(evidence, rows);
+    if (evidence->time != NULL)
+        evidence_time_round(evidence, round);
+    side_round(evidence, rows, columns);
     if (request->noise == EVIDENCE_NOISE_ROWS)
         noise_update(evidence, rows, true);
-    evidence_side_update(evidence, columns, rows);
-    evidence_side_prior(evidence, columns);
+    side_round(evidence, columns, rows);
     if (request->noise != EVIDENCE_NOISE_ROWS)
         noise_update(evidence, columns, request->noise == EVIDENCE_NOISE_COLUMNS);
     *change = change_measure(evidence);
@@ -224,6 +244,8 @@ static fescue_status evidence_model(struct evidence *evidence, const struct mode
                               &model->low_rank));
     for (size_t k = 0; k < rank; k++)
         model->low_rank.spectrum[k] *= scale;
+    if (evidence->time != NULL)
+        TRY(evidence_time_part(evidence, &model->time));
 done:
     if (status != FESCUE_OK)
         model_free(context, model);
@@ -287,6 +309,10 @@ fescue_status evidence_fit(fescue_context *context, const struct cells *cells, c
     TRY(problem_create(context, cells, &mean, 0, &problem));
     TRY(evidence_open(&problem, request->rank, &evidence));
     evidence_start(&evidence, start, request);
+    if (request->time != NULL && request->time->along != TIME_NONE) {
+        TRY(evidence_time_open(&evidence, request));
+        evidence_time_begin(&evidence, start);
+    }
     TRY(evidence_loop(&evidence, request, &out->fit));
     TRY(evidence_model(&evidence, start, &out->model));
     out->noise = problem.scale * sqrt(evidence.noise);
@@ -294,6 +320,7 @@ fescue_status evidence_fit(fescue_context *context, const struct cells *cells, c
     out->fit.rmse = sqrt(evidence.noise);
     out->fit.objective = evidence.noise;
 done:
+    evidence_time_close(&evidence);
     arena_close(context, &evidence.arena);
     problem_free(&problem);
     offsets_free(context, &mean);

@@ -116,6 +116,7 @@ fescue_status evidence_learn(fescue_context *context, const struct cells *cells,
     *out = (struct evidence_result){.model = {.rows = cells->rows, .columns = cells->columns}};
     out->model.bounds = (struct fescue_range){-INFINITY, INFINITY};
     step.noise = EVIDENCE_NOISE_EQUAL;
+    step.time = NULL;
     step.rounds = GROW_ROUNDS;
     step.change = GROW_CHANGE;
     TRY(offsets_fit(context, cells, request->offsets, &out->model.offsets));
@@ -131,8 +132,9 @@ fescue_status evidence_learn(fescue_context *context, const struct cells *cells,
     step.rounds = request->rounds;
     step.change = request->change;
     TRY(refit(context, cells, &step, out));
-    if (request->noise != EVIDENCE_NOISE_EQUAL) {
+    if (request->noise != EVIDENCE_NOISE_EQUAL || request->time != NULL) {
         step.noise = request->noise;
+        step.time = request->time;
         TRY(refit(context, cells, &step, out));
     }
     model_trim(&out->model, living(out));

@@ -1,10 +1,13 @@
 /* SPDX-License-Identifier: MIT
  *
- * The inside of the evidence fit, shared by its three files:
+ * The inside of the evidence fit, shared by its files:
  *
  *   evidence.c          the loop, the start, the result
  *   evidence_side.c     the posterior of every line of one side, given the other
  *   evidence_basis.c    the exact change of basis between two rounds
+ *   evidence_time.c     when lines are times: what is shared by
+ *   evidence_residual.c     a residual of every series, AR(1) in time
+ *   evidence_chain.c        factors and effects of the steps, AR(1) in time
  *
  * The formulas and the symbols stand at the top of evidence.c.
  */
@@ -19,6 +22,7 @@ struct evidence_side {
     struct moments moments;   /* of the regressors (factor, 1, effect) of each line; weight belongs to evidence */
     double *variance;         /* prior variance of the r components and of the effect; 0: switched off */
     double *line_precision;   /* of each line, relative: 1 where all are alike */
+    double *excess;           /* of each line, added to line_error: what the time residual does not know; or NULL */
     double *line_error;       /* expected squared error of each line, under the other side's relative precisions */
     double *partial;          /* sums of the blocks */
     size_t effect_at, one_at; /* where effect and constant stand in mean, so that rows' and columns' pair up */
@@ -37,6 +41,7 @@ struct evidence {
     struct matrix small[4], gram[4]; /* r x r and (r+2) x (r+2) */
     struct matrix map[2];            /* a change of basis and its transpose */
     double *shift, *basis_work;
+    struct evidence_time *time; /* NULL: lines have no order */
     struct arena arena;
 };
 
@@ -62,5 +67,47 @@ void evidence_side_plant(struct evidence *evidence, struct evidence_side *side, 
 
 /* Moves to the basis in which rows have unit second moment and columns a diagonal one, offsets absorbing the means. */
 fescue_status evidence_basis_change(struct evidence *evidence);
+
+/* ---- time ------------------------------------------------------------------------------------------------------- */
+
+/* Of one side the lines are steps in time, those of the other are series. Positions of cells: in the half of the series
+   (k), by series in the order of time (q, which counts within a series from its start as k does). */
+struct evidence_time {
+    const struct time_axis *axis;
+    struct evidence_side *steps, *series;
+    bool residual_on, chain_on;
+    /* residual */
+    uint64_t *twin;                      /* of position k: the same cell in the half of the steps */
+    uint32_t *place;                     /* of q: the offset of k from its series' start; NULL: the same */
+    double *clean;                       /* of k: the target without a residual taken off */
+    double *mean, *spread;               /* of q: posterior of the residual; spread of the cell of k */
+    struct kalman_law *law;              /* of each series */
+    struct kalman_tally *pool, *partial; /* of all series, the round before; of blocks */
+    double *series_scratch;              /* of each worker: six numbers a cell of the longest series */
+    size_t longest;
+    /* chain */
+    struct chain chain;
+    struct kalman_law *steps_law; /* of each component and the effect */
+    double *clock;                /* of the k-th step in time */
+    double *store;                /* of each line, what its error needs: evidence_chain_store(rank) */
+    struct arena arena;
+};
+fescue_status evidence_time_open(struct evidence *evidence, const struct evidence_request *request);
+void evidence_time_close(struct evidence *evidence);
+/* Switches residual and chain on when their round has come; laws of a start that has a time part are taken over. */
+void evidence_time_begin(struct evidence *evidence, const struct model *start);
+void evidence_time_round(struct evidence *evidence, uint64_t round);
+fescue_status evidence_time_part(struct evidence *evidence, struct time_part *part);
+
+/* Takes the posterior mean of every series' residual off the targets of both halves, and learns the laws. */
+void evidence_residual_update(struct evidence *evidence);
+/* In place of evidence_side_update and evidence_side_prior for the steps. */
+void evidence_chain_update(struct evidence *evidence);
+void evidence_chain_prior(struct evidence *evidence);
+size_t evidence_chain_store(size_t rank); /* numbers a line */
+size_t evidence_chain_scratch(size_t rank);
+
+/* Second moments of (factor, 1, effect) from mean and covariance of (factor, effect); covariance NULL: none. */
+void evidence_moments_write(double *moment, const double *mean, const double *covariance, size_t rank);
 
 #endif

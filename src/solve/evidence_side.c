@@ -51,21 +51,25 @@ static struct lines_scratch scratch_carve(double *at, size_t rank)
     return s;
 }
 
-void evidence_side_plant(struct evidence *evidence, struct evidence_side *side, size_t line, const double *mean)
+void evidence_moments_write(double *moment, const double *mean, const double *covariance, size_t rank)
 {
-    size_t rank = evidence->rank;
-    double *moment = side->moments.data + line * side->moments.stride;
     for (size_t k = 0, at = 0; k < rank; k++)
         for (size_t l = 0; l <= k; l++, at++)
-            moment[at] = mean[k] * mean[l];
+            moment[at] = mean[k] * mean[l] + (covariance != NULL ? covariance[at] : 0);
     double *one = moment + packed_size(rank), *effect = moment + packed_size(rank + 1);
+    const double *effect_covariance = covariance != NULL ? covariance + packed_size(rank) : NULL;
     for (size_t k = 0; k < rank; k++) {
         one[k] = mean[k];
-        effect[k] = mean[rank] * mean[k];
+        effect[k] = mean[rank] * mean[k] + (covariance != NULL ? effect_covariance[k] : 0);
     }
     one[rank] = 1;
     effect[rank] = mean[rank];
-    effect[rank + 1] = mean[rank] * mean[rank];
+    effect[rank + 1] = mean[rank] * mean[rank] + (covariance != NULL ? effect_covariance[rank] : 0);
+}
+
+void evidence_side_plant(struct evidence *evidence, struct evidence_side *side, size_t line, const double *mean)
+{
+    evidence_moments_write(side->moments.data + line * side->moments.stride, mean, NULL, evidence->rank);
 }
 
 #define EACH_LANE for (size_t lane = 0; lane < BATCH_LANES; lane++)

@@ -86,6 +86,7 @@ struct evidence_request {
     size_t rank_most;            /* to which evidence_learn may grow; rank .. min(rows, columns) */
     double noise_start;          /* first guess of the noise variance, table units; 0: the whole variance */
     uint64_t seed, rounds;
+    const struct time_axis *time; /* borrowed; NULL or along none: lines have no order */
     double change;   /* ends when the rms change of the estimates, over the table's scale, falls below this */
     double deadline; /* clock_wall() second, or 0 for none */
 };

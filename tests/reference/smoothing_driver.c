@@ -83,6 +83,7 @@ static void chain_run(void)
     struct chain chain = {.steps = steps, .size = d, .time = time, .law = law, .line = line, .precision = precision};
     chain.precision_stride = packed;
     chain.mean = side;
+    chain.mean_stride = d;
     chain.cross = out + steps * (d + packed);
     chain.forward = forward;
     chain.backward = backward;

@@ -1,0 +1,256 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The evidence fit of a table whose rows (or columns) are times: what its two time parts share, and when they begin.
+ *
+ *     residual   r_j(t), AR(1), of every series                    evidence_residual.c
+ *     chain      factors and effects of the steps, AR(1)           evidence_chain.c
+ *
+ * The order matters. A chain that begins while the loadings still move bends them towards what is smooth, and loses at
+ * long outages; so the residual begins first, and the chain when it has settled. Both start from a guess: variance of
+ * the residual 0.3 of the noise, correlations 0.6.
+ *
+ * A fit that starts from a model with a time part takes its laws over and has both parts from the first round: the
+ * components of a model come in the order of their strength, in which neighbours rarely change.
+ *
+ * Times need not be sorted: the steps go by the axis's order, and the cells of each series have a place in time beside
+ * their place in the store, unless the two are the same.
+ *
+ * Memory: 3 numbers a cell, and two small matrices a step.
+ */
+#include "solve/evidence_internal.h"
+
+#include <assert.h>
+#include <math.h>
+#include <string.h>
+
+/* Rounds after which the parts begin, and their first laws (above). */
+enum { RESIDUAL_ROUND = 2, CHAIN_ROUND = 12 };
+#define RESIDUAL_SHARE 0.3
+#define FIRST_CORRELATION 0.6
+
+static size_t longest_series(const struct half *half)
+{
+    uint64_t most = 0;
+    for (size_t line = 0; line < half->lines; line++)
+        if (half->start[line + 1] - half->start[line] > most)
+            most = half->start[line + 1] - half->start[line];
+    return (size_t)(most + 7) / 8 * 8; /* workers' stretches in cache lines of their own */
+}
+
+static void time_reserve(struct evidence *evidence, const struct evidence_time *time)
+{
+    struct arena *arena = &evidence->time->arena;
+    const struct half *series = time->series->half, *steps = time->steps->half;
+    size_t count = evidence->problem->target.count, d = evidence->rank + 1;
+    arena_reserve(arena, count, sizeof *time->twin);
+    arena_reserve(arena, time->axis->is_sorted ? 0 : count, sizeof *time->place);
+    for (size_t k = 0; k < 3; k++)
+        arena_reserve(arena, count, sizeof(double));
+    arena_reserve(arena, series->lines, sizeof *time->law);
+    arena_reserve(arena, series->blocks + 1, sizeof *time->partial);
+    arena_reserve(arena, team_workers(evidence->context) * 6 * time->longest, sizeof(double));
+    arena_reserve(arena, d, sizeof *time->steps_law);
+    arena_reserve(arena, steps->lines, sizeof(double));
+    arena_reserve(arena, steps->lines * evidence_chain_store(evidence->rank), sizeof(double));
+    arena_reserve(arena, steps->lines * d, sizeof(double));
+    for (size_t k = 0; k < 2; k++)
+        arena_reserve(arena, steps->lines * chain_room(d), sizeof(double));
+    arena_reserve(arena, steps->lines, sizeof(double));
+    arena_reserve(arena, series->lines, sizeof(double));
+}
+
+static void time_carve(struct evidence *evidence, struct evidence_time *time)
+{
+    struct arena *arena = &time->arena;
+    const struct half *series = time->series->half, *steps = time->steps->half;
+    size_t count = evidence->problem->target.count, d = evidence->rank + 1;
+    time->twin = arena_carve(arena, count, sizeof *time->twin);
+    time->place = arena_carve(arena, time->axis->is_sorted ? 0 : count, sizeof *time->place);
+    time->clean = arena_carve(arena, count, sizeof(double));
+    time->mean = arena_carve(arena, count, sizeof(double));
+    time->spread = arena_carve(arena, count, sizeof(double));
+    time->law = arena_carve(arena, series->lines, sizeof *time->law);
+    time->partial = arena_carve(arena, series->blocks + 1, sizeof *time->partial);
+    time->pool = time->partial + series->blocks;
+    time->series_scratch = arena_carve(arena, team_workers(evidence->context) * 6 * time->longest, sizeof(double));
+    time->steps_law = arena_carve(arena, d, sizeof *time->steps_law);
+    time->clock = arena_carve(arena, steps->lines, sizeof(double));
+    time->store = arena_carve(arena, steps->lines * evidence_chain_store(evidence->rank), sizeof(double));
+    time->chain.cross = arena_carve(arena, steps->lines * d, sizeof(double));
+    time->chain.forward = arena_carve(arena, steps->lines * chain_room(d), sizeof(double));
+    time->chain.backward = arena_carve(arena, steps->lines * chain_room(d), sizeof(double));
+    time->steps->excess = arena_carve(arena, steps->lines, sizeof(double));
+    time->series->excess = arena_carve(arena, series->lines, sizeof(double));
+}
+
+/* Twins and places: the steps in the order of time meet the cells of every series in that order. `next` has a number a
+   series. */
+static void cells_match(struct evidence *evidence, uint64_t *next)
+{
+    struct evidence_time *time = evidence->time;
+    const struct half *series = time->series->half, *steps = time->steps->half;
+    memcpy(next, series->start, series->lines * sizeof *next);
+    for (size_t step = 0; step < steps->lines; step++)
+        for (uint64_t k = steps->start[step]; k < steps->start[step + 1]; k++)
+            time->twin[next[steps->across[k]]++] = k;
+    if (time->axis->is_sorted) {
+        time->place = NULL;
+        return;
+    }
+    for (size_t k = 0; k < evidence->problem->target.count;
+         k++) /* of a cell of the steps: where it lies in the series */
+        ((uint64_t *)time->mean)[time->twin[k]] = k;
+    memcpy(next, series->start, series->lines * sizeof *next);
+    for (size_t t = 0; t < steps->lines; t++) {
+        size_t step = time->axis->order[t];
+        for (uint64_t k = steps->start[step]; k < steps->start[step + 1]; k++) {
+            uint32_t line = steps->across[k];
+            time->place[next[line]++] = (uint32_t)(((uint64_t *)time->mean)[k] - series->start[line]);
+        }
+    }
+    memset(time->mean, 0, evidence->problem->target.count * sizeof *time->mean);
+}
+
+static void chain_set(struct evidence *evidence)
+{
+    struct evidence_time *time = evidence->time;
+    struct chain *chain = &time->chain;
+    chain->steps = time->steps->half->lines;
+    chain->size = evidence->rank + 1;
+    chain->time = time->clock;
+    chain->law = time->steps_law;
+    chain->line = time->axis->order;
+    chain->precision = time->steps->moments.data;
+    chain->precision_stride = time->steps->moments.stride;
+    chain->mean = time->steps->mean.data;
+    chain->mean_stride = time->steps->mean.stride;
+    for (size_t t = 0; t < chain->steps; t++)
+        time->clock[t] = time->axis->at[time->axis->order[t]];
+}
+
+fescue_status evidence_time_open(struct evidence *evidence, const struct evidence_request *request)
+{
+    fescue_context *context = evidence->context;
+    const struct cells *target = &evidence->problem->target;
+    struct evidence_time *time = NULL;
+    uint64_t *next = NULL;
+    fescue_status status;
+    TRY(TAKE(context, 1, &time));
+    evidence->time = time;
+    time->axis = request->time;
+    bool by_rows = time->axis->along == TIME_ROWS;
+    time->steps = by_rows ? &evidence->rows : &evidence->columns;
+    time->series = by_rows ? &evidence->columns : &evidence->rows;
+    assert(time->axis->count == time->steps->half->lines);
+    time->longest = longest_series(time->series->half);
+    time_reserve(evidence, time);
+    TRY(arena_open(context, &time->arena));
+    time_carve(evidence, time);
+    TRY(TAKE(context, time->series->half->lines, &next));
+    cells_match(evidence, next);
+    for (uint64_t k = 0; k < target->count; k++)
+        time->clean[k] = cells_value(target, time->series->half, k);
+    chain_set(evidence);
+done:
+    GIVE(context, &next);
+    return status;
+}
+
+void evidence_time_close(struct evidence *evidence)
+{
+    if (evidence->time == NULL)
+        return;
+    arena_close(evidence->context, &evidence->time->arena);
+    GIVE(evidence->context, &evidence->time);
+}
+
+void evidence_time_begin(struct evidence *evidence, const struct model *start)
+{
+    struct evidence_time *time = evidence->time;
+    const struct time_part *part = &start->time;
+    double unit = evidence->problem->scale * evidence->problem->scale;
+    if (part->along != time->axis->along)
+        return;
+    time->residual_on = true;
+    for (size_t line = 0; line < time->series->half->lines; line++) {
+        time->law[line] = part->law[line];
+        time->law[line].variance /= unit;
+    }
+    if (part->components == 0)
+        return;
+    time->chain_on = true;
+    for (size_t k = 0; k <= evidence->rank; k++) {
+        size_t from = k < evidence->rank ? k : part->components - 1;
+        bool is_known = k == evidence->rank || k + 1 < part->components;
+        double variance = time->steps->variance[k];
+        time->steps_law[k] = (struct kalman_law){variance, is_known ? part->steps_law[from].correlation : 0};
+    }
+}
+
+static void residual_begin(struct evidence *evidence)
+{
+    struct evidence_time *time = evidence->time;
+    time->residual_on = true;
+    for (size_t line = 0; line < time->series->half->lines; line++)
+        time->law[line] = (struct kalman_law){RESIDUAL_SHARE * evidence->noise / time->series->line_precision[line],
+                                              FIRST_CORRELATION};
+}
+
+static void chain_begin(struct evidence *evidence)
+{
+    struct evidence_time *time = evidence->time;
+    time->chain_on = true;
+    for (size_t k = 0; k <= evidence->rank; k++)
+        time->steps_law[k] = (struct kalman_law){time->steps->variance[k], FIRST_CORRELATION};
+}
+
+void evidence_time_round(struct evidence *evidence, uint64_t round)
+{
+    struct evidence_time *time = evidence->time;
+    if (!time->residual_on && round >= RESIDUAL_ROUND)
+        residual_begin(evidence);
+    if (!time->chain_on && round >= CHAIN_ROUND)
+        chain_begin(evidence);
+    if (time->residual_on && round > 0)
+        evidence_residual_update(evidence);
+}
+
+static void part_block(void *opaque, size_t block, size_t worker)
+{
+    (void)worker;
+    void **job = opaque;
+    const struct evidence *evidence = job[0];
+    const struct evidence_time *time = evidence->time;
+    struct time_part *part = job[1];
+    const struct half *half = time->series->half;
+    double scale = evidence->problem->scale;
+    for (size_t line = half->block[block]; line < half->block[block + 1]; line++) {
+        uint64_t start = half->start[line];
+        for (uint64_t q = start; q < half->start[line + 1]; q++) {
+            uint64_t k = time->place != NULL ? start + time->place[q] : q;
+            part->time[q] = time->axis->at[half->across[k]];
+            part->mean[q] = scale * time->mean[q];
+        }
+        part->law[line] = time->law[line];
+        part->law[line].variance *= scale * scale;
+        part->noise[line] = scale * scale * evidence->noise / time->series->line_precision[line];
+    }
+}
+
+fescue_status evidence_time_part(struct evidence *evidence, struct time_part *part)
+{
+    const struct evidence_time *time = evidence->time;
+    const struct half *half = time->series->half;
+    size_t components = time->chain_on ? evidence->rank + 1 : 0;
+    if (!time->residual_on)
+        return FESCUE_OK;
+    fescue_status status =
+        time_part_create(evidence->context, time->axis, half->lines, evidence->problem->target.count, components, part);
+    if (status != FESCUE_OK)
+        return status;
+    memcpy(part->start, half->start, ((size_t)half->lines + 1) * sizeof *part->start);
+    memcpy(part->steps_law, time->steps_law, components * sizeof *part->steps_law);
+    void *job[2] = {evidence, part};
+    team_run(evidence->context, half->blocks, part_block, job);
+    return FESCUE_OK;
+}
