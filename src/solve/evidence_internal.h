@@ -83,6 +83,7 @@ struct evidence_time {
     double *mean, *spread;               /* of q: posterior of the residual; spread of the cell of k */
     struct kalman_law *law;              /* of each series */
     struct kalman_tally *pool, *partial; /* of all series, the round before; of blocks */
+    double pool_share;                   /* of the pool that goes to every series */
     double *series_scratch;              /* of each worker: six numbers a cell of the longest series */
     size_t longest;
     /* chain */

@@ -20,6 +20,10 @@
 
 /* Steps' worth of the moments of all series with which those of each are learnt. */
 #define POOL_CELLS 10.0
+/* Longest jump, in steps of the first size, and how far correlations go on it, as log(-log rho). */
+#define LENGTH_MOST 8.0
+#define PLACE_LOW (-9.0)
+#define PLACE_HIGH 1.6
 
 struct residual_job {
     struct evidence *evidence;
@@ -87,6 +91,56 @@ static void targets_put(const struct evidence *evidence, size_t line, const stru
     time->series->excess[line] = excess;
 }
 
+/* One expectation and maximisation step for series under `law`: its tally alone in *own (may be NULL), the next law. */
+static double law_step(const struct evidence_time *time, const struct kalman_series *series,
+                       const struct kalman_state *state, const struct kalman_law *law, struct kalman_law *next)
+{
+    struct kalman_tally tally = {0};
+    double likelihood = kalman_smooth(series, law, state);
+    kalman_tally_series(&tally, series, state);
+    if (time->pool_share > 0)
+        kalman_tally_add(&tally, time->pool_share, time->pool);
+    *next = *law;
+    kalman_learn(&tally, next);
+    return likelihood;
+}
+
+/* Coordinates in which laws are extrapolated. */
+static void law_place(const struct kalman_law *law, double place[2])
+{
+    place[0] = log(law->variance);
+    place[1] = log(-log(law->correlation));
+}
+
+/* Two steps, the jump along them (Varadhan, Roland 2008, "Simple and globally convergent methods for accelerating the
+   convergence of any EM algorithm", scheme 3), and the better of both ends; the state is that of the law before the
+   last step. Series too weak to have a law keep theirs. */
+static void law_learn(const struct evidence_time *time, const struct kalman_series *series,
+                      const struct kalman_state *state, struct kalman_law *law)
+{
+    struct kalman_law first, second, jump, last;
+    double a[2], b[2], c[2], step = 0, bend = 0;
+    law_step(time, series, state, law, &first);
+    double before = law_step(time, series, state, &first, &second);
+    law_place(law, a);
+    law_place(&first, b);
+    law_place(&second, c);
+    for (size_t k = 0; k < 2; k++) {
+        step += (b[k] - a[k]) * (b[k] - a[k]);
+        bend += (c[k] - 2 * b[k] + a[k]) * (c[k] - 2 * b[k] + a[k]);
+    }
+    double length = bend > 0 ? fmin(fmax(sqrt(step / bend), 1), LENGTH_MOST) : 1;
+    for (size_t k = 0; k < 2; k++)
+        c[k] = a[k] + 2 * length * (b[k] - a[k]) + length * length * (c[k] - 2 * b[k] + a[k]);
+    c[1] = fmin(fmax(c[1], PLACE_LOW), PLACE_HIGH);
+    jump = (struct kalman_law){exp(c[0]), exp(-exp(c[1]))};
+    if (length > 1 && isfinite(c[0]) && law_step(time, series, state, &jump, &last) >= before) {
+        *law = last;
+        return;
+    }
+    law_step(time, series, state, &second, law);
+}
+
 static void residual_block(void *opaque, size_t block, size_t worker)
 {
     struct residual_job *job = opaque;
@@ -94,21 +148,13 @@ static void residual_block(void *opaque, size_t block, size_t worker)
     const struct half *half = time->series->half;
     double *at = time->series_scratch + worker * 6 * time->longest, *out = at + 3 * time->longest;
     struct kalman_state state = {out, out + time->longest, out + 2 * time->longest};
-    struct kalman_tally *sum = time->partial + block, own;
-    double pool = time->pool->series, all = pool;
-    for (size_t c = 0; c < KALMAN_CLASSES; c++)
-        all += time->pool->count[c];
+    struct kalman_tally *sum = time->partial + block;
     memset(sum, 0, sizeof *sum);
     for (size_t line = half->block[block]; line < half->block[block + 1]; line++) {
         struct kalman_series series = series_view(job->evidence, line, at);
-        kalman_smooth(&series, &time->law[line], &state);
-        memset(&own, 0, sizeof own);
-        kalman_tally_series(&own, &series, &state);
-        kalman_tally_add(sum, 1, &own);
-        if (all > 0)
-            kalman_tally_add(&own, POOL_CELLS / all, time->pool);
+        law_learn(time, &series, &state, &time->law[line]);
+        kalman_tally_series(sum, &series, &state);
         targets_put(job->evidence, line, &state);
-        kalman_learn(&own, &time->law[line]);
     }
 }
 
@@ -130,6 +176,10 @@ void evidence_residual_update(struct evidence *evidence)
     struct evidence_time *time = evidence->time;
     struct residual_job job = {evidence, time};
     size_t blocks = time->series->half->blocks;
+    double count = time->pool->series;
+    for (size_t c = 0; c < KALMAN_CLASSES; c++)
+        count += time->pool->count[c];
+    time->pool_share = count > 0 ? POOL_CELLS / count : 0;
     team_run(evidence->context, blocks, residual_block, &job);
     team_run(evidence->context, time->steps->half->blocks, excess_block, &job);
     memset(time->pool, 0, sizeof *time->pool);
