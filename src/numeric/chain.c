@@ -16,9 +16,9 @@
  * "The optimum linear smoother as a combination of two optimum linear filters", here in information form.)
  *
  * Cost: three factorisations and inverses of size d a step, O(m d^3); the two messages run beside one another, the
- * marginals in blocks of steps. Nothing depends on the number of workers. As E is diagonal a message costs no product
- * of matrices. Precisions are differences: at rho = 0.9999 some four digits of sixteen are lost, which is why rho stays
- * below that (kalman_learn).
+ * marginals in batches of eight steps. Nothing depends on the number of workers. As E is diagonal a message costs no
+ * product of matrices. Precisions are differences: at rho = 0.9999 some four digits of sixteen are lost, which is why
+ * rho stays below that (kalman_learn).
  */
 #include "numeric/numeric.h"
 
@@ -28,14 +28,19 @@
 /* Precision that stands for "held at 0": in units where data have size one no sum of them comes near it. */
 #define PRECISION_OFF 1e30
 
+static size_t side_at(size_t size)
+{
+    return (packed_size(size) + 7) / 8 * 8;
+}
+
 size_t chain_room(size_t size)
 {
-    return packed_size(size) + size;
+    return side_at(size) + (size + 7) / 8 * 8;
 }
 
 size_t chain_work(size_t size)
 {
-    return packed_size(size) + 4 * size;
+    return 2 * batch_size(packed_size(size)) + batch_size(size) + packed_size(size) + 4 * size;
 }
 
 /* E, f^2/q and 1/q between step t - 1 and t; 1/v alone at t = 0. Those of equal steps are kept. */
@@ -83,7 +88,7 @@ static void message_add(size_t size, const struct link *link, const double *own,
         precision[packed_size(k) + k] += own[k];
     if (from == NULL)
         return;
-    const double *image = from + packed_size(size);
+    const double *image = from + side_at(size);
     for (size_t k = 0, at = 0; k < size; k++) {
         double scale = link->off[k];
         for (size_t l = 0; l <= k; l++, at++)
@@ -106,7 +111,7 @@ static void step_invert(size_t size, double *precision, double *side, double *ro
     packed_cholesky(precision, size);
     packed_solve(precision, size, side);
     packed_inverse(precision, size, room);
-    memcpy(room + packed_size(size), side, size * sizeof *side);
+    memcpy(room + side_at(size), side, size * sizeof *side);
 }
 
 void chain_forward(const struct chain *chain, double *work)
@@ -160,21 +165,65 @@ static void cross_write(size_t size, const struct link *link, const double *from
         }
 }
 
-void chain_marginal(const struct chain *chain, size_t t, double *covariance, double *mean, double *work)
+/* Precision and right side of the marginal of step t. */
+static void marginal_system(const struct chain *chain, size_t t, double *precision, double *side, struct link *link)
 {
-    size_t d = chain->size, line = line_at(chain, t);
-    struct link link = link_carve(work + packed_size(d) + d, d);
-    const double *from = t > 0 ? room_at(chain, chain->forward, t - 1) : NULL;
-    double *precision = work;
-    data_copy(chain, t, precision, mean);
+    size_t d = chain->size;
+    data_copy(chain, t, precision, side);
     if (t + 1 < chain->steps) {
-        link_set(chain, t + 1, &link);
-        message_add(d, &link, link.left, room_at(chain, chain->backward, t + 1), precision, mean);
+        link_set(chain, t + 1, link);
+        message_add(d, link, link->left, room_at(chain, chain->backward, t + 1), precision, side);
     }
-    link_set(chain, t, &link);
-    message_add(d, &link, link.right, from, precision, mean);
-    packed_cholesky(precision, d);
-    packed_solve(precision, d, mean);
-    packed_inverse(precision, d, covariance);
-    cross_write(d, &link, from, covariance, chain->cross + line * d);
+    link_set(chain, t, link);
+    message_add(d, link, link->right, t > 0 ? room_at(chain, chain->forward, t - 1) : NULL, precision, side);
+}
+
+/* A lane whose pivots broke down, again and with a lift. */
+static void lane_solve(const struct chain *chain, size_t t, double *precision, double *side, struct link *link,
+                       double *room)
+{
+    marginal_system(chain, t, precision, side, link);
+    step_invert(chain->size, precision, side, room);
+}
+
+void chain_marginals(const struct chain *chain, const struct batch_kernel *kernel, size_t first, double *out,
+                     double *work)
+{
+    size_t d = chain->size, packed = packed_size(d), room = chain_room(d);
+    size_t left = chain->steps - first, count = left < BATCH_LANES ? left : BATCH_LANES;
+    double *factor = work, *inverse = factor + batch_size(packed), *mean = inverse + batch_size(packed);
+    double *precision = mean + batch_size(d), *side = precision + packed, *to[BATCH_LANES];
+    struct link link = link_carve(side + d, d);
+    for (size_t lane = 0; lane < BATCH_LANES; lane++) { /* beyond the last step: that one again */
+        marginal_system(chain, first + (lane < count ? lane : count - 1), precision, side, &link);
+        for (size_t at = 0; at < packed; at++)
+            factor[at * BATCH_LANES + lane] = precision[at];
+        for (size_t k = 0; k < d; k++)
+            mean[k * BATCH_LANES + lane] = side[k];
+        to[lane] = out + lane * room;
+    }
+    unsigned broken = packed_batch_solve(kernel, factor, d, mean, inverse);
+    packed_batch_unpack(kernel, inverse, packed, to);
+    for (size_t lane = 0; lane < BATCH_LANES; lane++)
+        to[lane] += side_at(d);
+    packed_batch_unpack(kernel, mean, d, to);
+    for (size_t lane = 0; lane < count; lane++) {
+        size_t t = first + lane;
+        double *own = out + lane * room;
+        if (broken >> lane & 1)
+            lane_solve(chain, t, precision, side, &link, own);
+        link_set(chain, t, &link);
+        cross_write(d, &link, t > 0 ? room_at(chain, chain->forward, t - 1) : NULL, own,
+                    chain->cross + line_at(chain, t) * d);
+    }
+}
+
+const double *chain_mean(const struct chain *chain, const double *out, size_t lane)
+{
+    return out + lane * chain_room(chain->size) + side_at(chain->size);
+}
+
+const double *chain_covariance(const struct chain *chain, const double *out, size_t lane)
+{
+    return out + lane * chain_room(chain->size);
 }

@@ -231,9 +231,14 @@ struct chain {
 };
 size_t chain_room(size_t size);
 size_t chain_work(size_t size); /* doubles of `work` in all three */
-/* Both messages, in any order or at once; then the marginals, in any order: covariance (packed) and mean of step t. */
+/* Both messages, in any order or at once; then the marginals of steps first .. first+7, as far as there are so many,
+   into `out` (BATCH_LANES x chain_room(size)). */
 void chain_forward(const struct chain *chain, double *work);
 void chain_backward(const struct chain *chain, double *work);
-void chain_marginal(const struct chain *chain, size_t t, double *covariance, double *mean, double *work);
+void chain_marginals(const struct chain *chain, const struct batch_kernel *kernel, size_t first, double *out,
+                     double *work);
+/* Of step first + lane: where its mean and its covariance, packed, stand in `out`. */
+const double *chain_mean(const struct chain *chain, const double *out, size_t lane);
+const double *chain_covariance(const struct chain *chain, const double *out, size_t lane);
 
 #endif

@@ -28,7 +28,9 @@ size_t evidence_chain_store(size_t rank)
 
 size_t evidence_chain_scratch(size_t rank)
 {
-    return packed_size(rank + 2) + (rank + 2) + chain_work(rank + 1);
+    size_t gather = moments_batch_size(rank + 2) + batch_size(packed_size(rank + 1)) + moments_stride(rank + 2);
+    size_t marginal = BATCH_LANES * chain_room(rank + 1) + chain_work(rank + 1);
+    return gather > marginal ? gather : marginal;
 }
 
 struct chain_job {
@@ -36,25 +38,36 @@ struct chain_job {
     struct evidence_time *time;
 };
 
-static void gather_block(void *opaque, size_t block, size_t worker)
+/* Of eight lines: c S in the place of their moments, c (t - S[p, .]) in that of their means, and the store. */
+static void gather_batch(void *opaque, size_t batch, size_t worker)
 {
     struct chain_job *job = opaque;
     struct evidence *evidence = job->evidence;
     struct evidence_side *side = job->time->steps;
-    size_t free = evidence->rank + 1;
-    double *second = evidence->scratch + worker * evidence->scratch_size;
-    for (size_t line = side->half->block[block]; line < side->half->block[block + 1]; line++) {
-        double *store = job->time->store + line * evidence_chain_store(evidence->rank);
-        double *cross = store + free + 1, *data = side->moments.data + line * side->moments.stride;
-        double precision = side->line_precision[line] / evidence->noise;
-        struct moments_sum sum = {second, store, 0};
-        moments_gather(&job->time->series->moments, side->half, evidence->problem->target.precision, line, &sum);
-        memcpy(cross, second + packed_size(free), (free + 1) * sizeof *cross);
-        store[2 * (free + 1)] = sum.square;
-        for (size_t k = 0; k < packed_size(free); k++)
-            data[k] = precision * second[k];
+    size_t rank = evidence->rank, free = rank + 1, first = batch * BATCH_LANES, left = side->half->lines - first;
+    size_t count = left < BATCH_LANES ? left : BATCH_LANES;
+    double *at = evidence->scratch + worker * evidence->scratch_size, *to[BATCH_LANES], precision[BATCH_LANES];
+    struct moments_batch sum = moments_batch_carve(at, rank + 2);
+    double *data = at + moments_batch_size(rank + 2), *beyond = data + batch_size(packed_size(free));
+    const double *cross = sum.second + packed_size(free) * BATCH_LANES;
+    moments_gather(&job->time->series->moments, side->half, evidence->problem->target.precision, first, &sum);
+    for (size_t lane = 0; lane < BATCH_LANES; lane++) {
+        precision[lane] = lane < count ? side->line_precision[first + lane] / evidence->noise : 0;
+        to[lane] = lane < count ? side->moments.data + (first + lane) * side->moments.stride : beyond;
+    }
+    for (size_t k = 0; k < packed_size(free); k++)
+        for (size_t lane = 0; lane < BATCH_LANES; lane++)
+            data[k * BATCH_LANES + lane] = precision[lane] * sum.second[k * BATCH_LANES + lane];
+    packed_batch_unpack(side->moments.kernel, data, packed_size(free), to);
+    for (size_t lane = 0; lane < count; lane++) {
+        double *store = job->time->store + (first + lane) * evidence_chain_store(rank);
+        for (size_t k = 0; k <= free; k++) {
+            store[k] = sum.target[k * BATCH_LANES + lane];
+            store[free + 1 + k] = cross[k * BATCH_LANES + lane];
+        }
+        store[2 * (free + 1)] = sum.square[lane];
         for (size_t k = 0; k < free; k++)
-            MATRIX_AT(side->mean, line, k) = precision * (store[k] - cross[k]);
+            MATRIX_AT(side->mean, first + lane, k) = precision[lane] * (store[k] - store[free + 1 + k]);
     }
 }
 
@@ -82,17 +95,18 @@ static double line_error(const struct evidence *evidence, const struct evidence_
     return error > 0 ? error : 0;
 }
 
-static void marginal_block(void *opaque, size_t block, size_t worker)
+static void marginal_batch(void *opaque, size_t batch, size_t worker)
 {
     struct chain_job *job = opaque;
     struct evidence *evidence = job->evidence;
     struct evidence_side *side = job->time->steps;
-    size_t rank = evidence->rank, free = rank + 1;
-    double *covariance = evidence->scratch + worker * evidence->scratch_size;
-    double *mean = covariance + packed_size(free), *work = mean + free;
-    for (size_t t = side->half->block[block]; t < side->half->block[block + 1]; t++) {
-        size_t line = job->time->axis->order[t];
-        chain_marginal(&job->time->chain, t, covariance, mean, work);
+    const struct chain *chain = &job->time->chain;
+    size_t rank = evidence->rank, first = batch * BATCH_LANES;
+    double *out = evidence->scratch + worker * evidence->scratch_size, *work = out + BATCH_LANES * chain_room(rank + 1);
+    chain_marginals(chain, side->moments.kernel, first, out, work);
+    for (size_t lane = 0; lane < BATCH_LANES && first + lane < chain->steps; lane++) {
+        size_t line = job->time->axis->order[first + lane];
+        const double *mean = chain_mean(chain, out, lane), *covariance = chain_covariance(chain, out, lane);
         side->line_error[line] = line_error(evidence, side, line, mean, covariance);
         evidence_moments_write(side->moments.data + line * side->moments.stride, mean, covariance, rank);
         for (size_t k = 0; k < rank; k++)
@@ -106,9 +120,10 @@ void evidence_chain_update(struct evidence *evidence)
 {
     struct evidence_side *side = evidence->time->steps;
     struct chain_job job = {evidence, evidence->time};
-    team_run(evidence->context, side->half->blocks, gather_block, &job);
+    size_t batches = (side->half->lines + BATCH_LANES - 1) / BATCH_LANES;
+    team_run(evidence->context, batches, gather_batch, &job);
     team_run(evidence->context, 2, message_task, &job);
-    team_run(evidence->context, side->half->blocks, marginal_block, &job);
+    team_run(evidence->context, batches, marginal_batch, &job);
 }
 
 /* One component, over all steps. Component `rank` is the effect. */

@@ -1,6 +1,7 @@
 /* SPDX-License-Identifier: MIT
  *
- * Smoothing in time for smoothing.py. Reads numbers of native doubles on standard input, writes such on standard output.
+ * Smoothing in time for smoothing.py. Reads numbers of native doubles on standard input, writes such on standard
+ * output.
  *
  *   series   in: count, variance, correlation, then count times, values, noises
  *            out: log likelihood; count means, variances, covariances with the step before; count means and variances
@@ -89,8 +90,15 @@ static void chain_run(void)
     chain.backward = backward;
     chain_forward(&chain, work);
     chain_backward(&chain, work);
-    for (size_t t = 0; t < steps; t++)
-        chain_marginal(&chain, t, out + steps * d + line[t] * packed, out + line[t] * d, work);
+    double *eight = calloc(BATCH_LANES * chain_room(d), sizeof *eight);
+    for (size_t t = 0; t < steps; t++) {
+        if (t % BATCH_LANES == 0)
+            chain_marginals(&chain, batch_kernel_choose(), t, eight, work);
+        memcpy(out + line[t] * d, chain_mean(&chain, eight, t % BATCH_LANES), d * sizeof *out);
+        memcpy(out + steps * d + line[t] * packed, chain_covariance(&chain, eight, t % BATCH_LANES),
+               packed * sizeof *out);
+    }
+    free(eight);
     numbers_write(out, steps * (2 * d + packed));
     free(head);
     free(variance);
