@@ -118,6 +118,9 @@ enum { QUOTE_MOST = 40 };
 
 /* ---- values and texts -------------------------------------------------------------------------------------------- */
 
+/* Behind the number (number_parse's grammar) that `text` begins with; NULL when it begins with none. */
+const char *number_read(const char *text, const char *end, double *value);
+
 /* A value to be stored in `precision`. NULL, or what is wrong with the text: "is not a number" and the like. */
 const char *value_parse(const char *text, const char *end, enum fescue_precision precision, double *value);
 

@@ -20,7 +20,7 @@ static const uint64_t seed = 20240301;
 static uint64_t trials(void)
 {
     const char *text = getenv("FESCUE_TRIALS");
-    return text != NULL ? strtoull(text, NULL, 10) : 20000;
+    return text != NULL ? strtoull(text, NULL, 10) : 100000;
 }
 
 /* The text is surrounded by digits that do not belong to it: parsing must stop at its end. */
@@ -185,7 +185,7 @@ static void half_way_points_agree(void **state)
 {
     (void)state;
     struct random_stream stream = random_open(seed, RANDOM_TEST, 2);
-    for (uint64_t n = trials() / 20; n > 0; n--) {
+    for (uint64_t n = trials() / 100; n > 0; n--) {
         /* c + 1/2 for a whole c of 53 bits, times a power of two that keeps it exact in print */
         uint64_t c = UINT64_C(1) << 52 | (uint64_t)(random_uniform(&stream) * 0x1p52);
         int power = -(int)random_below(&stream, 900);
@@ -199,11 +199,55 @@ static void half_way_points_agree(void **state)
     }
 }
 
+/* Close to half way, in few digits: 17 to 21 of the point itself, the last of them moved a little, at the exponents
+   where the product with a power of five decides. Whole numbers above 2^53 are half way exactly when they are odd and
+   below 2^54. */
+static void nearly_half_way_points_agree(void **state)
+{
+    (void)state;
+    struct random_stream stream = random_open(seed, RANDOM_TEST, 4);
+    for (uint64_t n = trials(); n > 0; n--) {
+        uint64_t c = UINT64_C(1) << 52 | (uint64_t)(random_uniform(&stream) * 0x1p52);
+        int power = (int)random_below(&stream, 500) - 280, digits = 17 + (int)random_below(&stream, 5);
+        char text[64], *last;
+        sprintf(text, "%.*Le", digits - 1, ldexpl((long double)c + 0.5L, power));
+        check(text);
+        last = strchr(text, 'e') - 1;
+        *last = (char)('0' + random_below(&stream, 10));
+        check(text);
+        sprintf(text, "%" PRIu64 "%s", 2 * c + random_below(&stream, 3), random_below(&stream, 2) == 0 ? "" : ".0e-3");
+        check(text);
+    }
+}
+
+/* Whole powers of two and of ten, and their neighbours, at every exponent. */
+static void neighbours_of_powers_agree(void **state)
+{
+    (void)state;
+    char text[64];
+    for (int power = -340; power <= 310; power++)
+        for (int first = 1; first <= 9; first++)
+            for (int way = -1; way <= 1; way++) {
+                sprintf(text, "%" PRIu64 "e%d", (uint64_t)first * UINT64_C(1000000000000000000) + (uint64_t)way, power);
+                check(text);
+                sprintf(text, "%de%d", first, power);
+                check(text);
+            }
+    for (int power = -1074; power <= 1023; power++)
+        for (int digits = 15; digits <= 25; digits++) {
+            double value = ldexp(1, power);
+            sprintf(text, "%.*e", digits, value);
+            check(text);
+            sprintf(text, "%.*e", digits, nextafter(value, 0));
+            check(text);
+        }
+}
+
 static void a_thousand_digits_are_not_too_many(void **state)
 {
     (void)state;
     struct random_stream stream = random_open(seed, RANDOM_TEST, 3);
-    for (uint64_t n = trials() / 100; n > 0; n--) {
+    for (uint64_t n = trials() / 500; n > 0; n--) {
         char *text = malloc(8000), *end = digits_put(&stream, text, random_below(&stream, 3000));
         *end++ = '.';
         end = digits_put(&stream, end, 1 + random_below(&stream, 3000));
@@ -237,6 +281,8 @@ int main(void)
         cmocka_unit_test(random_decimals_agree),
         cmocka_unit_test(printed_doubles_come_back),
         cmocka_unit_test(half_way_points_agree),
+        cmocka_unit_test(nearly_half_way_points_agree),
+        cmocka_unit_test(neighbours_of_powers_agree),
         cmocka_unit_test(a_thousand_digits_are_not_too_many),
         BENCH_TEST(the_locale_does_not_matter),
     };
