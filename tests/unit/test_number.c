@@ -215,7 +215,8 @@ static void nearly_half_way_points_agree(void **state)
         last = strchr(text, 'e') - 1;
         *last = (char)('0' + random_below(&stream, 10));
         check(text);
-        sprintf(text, "%" PRIu64 "%s", 2 * c + random_below(&stream, 3), random_below(&stream, 2) == 0 ? "" : ".0e-3");
+        static const char *const scales[] = {"", "0e-1", "00e-2", "000e-3"};
+        sprintf(text, "%" PRIu64 "%s", 2 * c + random_below(&stream, 3), scales[random_below(&stream, 4)]);
         check(text);
     }
 }
