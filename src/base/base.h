@@ -94,6 +94,9 @@ struct file_calls {
     int (*rename)(const char *from, const char *to);
     int (*unlink)(const char *path);
     int (*make_directory)(const char *path, unsigned mode);
+    int64_t (*size)(int descriptor);           /* of a regular file; -1 when it is none or an error */
+    void *(*map)(int descriptor, size_t size); /* its first bytes, to be read alone; NULL on an error */
+    int (*unmap)(void *bytes, size_t size);
 };
 extern const struct file_calls posix_file_calls;
 void file_calls_set(fescue_context *context, const struct file_calls *calls); /* borrowed; NULL: POSIX */
@@ -105,6 +108,12 @@ fescue_status file_open_read(fescue_context *context, const char *path, int *des
    above. */
 fescue_status file_read(fescue_context *context, const char *path, int descriptor, void *bytes, size_t count,
                         size_t *got);
+/* Bytes of a regular file; 0 for anything else, such as a pipe. */
+uint64_t file_size(fescue_context *context, int descriptor);
+/* The first `size` bytes (at least one) as memory that may be read and not written, *bytes; NULL where the system
+   cannot do that, and then they are to be read. */
+void file_map(fescue_context *context, int descriptor, size_t size, const void **bytes);
+void file_unmap(fescue_context *context, const void **bytes, size_t size); /* NULL-safe; nulls the pointer */
 void file_close(fescue_context *context, int *descriptor); /* -1 and standard input are left alone; sets -1 */
 
 /* ---- output: whole under the final name, or not at all ---------------------------------------------------------- */
@@ -167,7 +176,7 @@ double random_uniform_at(uint64_t seed, enum random_purpose purpose, uint32_t wh
 
 /* Work is cut into blocks whose number and bounds never depend on the number of workers; what a block computes goes
    to its own place; sums over blocks run in block order. So the bits are the same for any number of threads. Only one
-   team_run at a time on a context; a task must not call team_run, and must not allocate. */
+   team_run at a time on a context; a task must not call team_run, and in a fit must not allocate. */
 typedef void team_task(void *job, size_t block, size_t worker);
 
 size_t team_workers(const fescue_context *context); /* threads; worker numbers are 0 .. workers-1 */
@@ -187,6 +196,10 @@ double clock_cpu(void);  /* seconds of this process, all threads */
 /* Tells the user's callback, if any: what is being done, how far (0..1, or negative when unknown). FESCUE_STOPPED
    when the callback asks to stop or fescue_context_cancel was called; else FESCUE_OK. */
 fescue_status progress_tell(fescue_context *context, const char *stage, double share);
+/* The same while bytes are read: `done` of `total` (0: not known) after `seconds`; the callback is told the rate too.
+ */
+fescue_status progress_tell_bytes(fescue_context *context, const char *stage, uint64_t done, uint64_t total,
+                                  double seconds);
 /* Whether fescue_context_cancel was called. Safe from any thread. */
 bool is_cancelled(const fescue_context *context);
 /* A sentence for the log callback, if any (--verbose and the run record's notes). */

@@ -5,6 +5,7 @@
 #include "base/context_internal.h"
 
 #include <assert.h>
+#include <inttypes.h>
 #include <signal.h>
 #include <stdio.h>
 #include <stdlib.h>
@@ -85,6 +86,19 @@ fescue_status progress_tell(fescue_context *context, const char *stage, double s
     const struct fescue_hooks *hooks = &context->hooks;
     bool go_on = hooks->progress == NULL || hooks->progress(hooks->data, stage, share);
     if (go_on && !is_cancelled(context))
+        return FESCUE_OK;
+    return FAIL(context, FESCUE_STOPPED, "asked to stop (%s)", stage);
+}
+
+fescue_status progress_tell_bytes(fescue_context *context, const char *stage, uint64_t done, uint64_t total,
+                                  double seconds)
+{
+    const struct fescue_hooks *hooks = &context->hooks;
+    char text[64];
+    if (hooks->progress == NULL || seconds <= 0)
+        return progress_tell(context, stage, -1);
+    snprintf(text, sizeof text, "%s, %" PRIu64 " MB/s", stage, (uint64_t)(1e-6 * (double)done / seconds));
+    if (hooks->progress(hooks->data, text, total > 0 ? (double)done / (double)total : -1) && !is_cancelled(context))
         return FESCUE_OK;
     return FAIL(context, FESCUE_STOPPED, "asked to stop (%s)", stage);
 }

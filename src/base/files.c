@@ -8,6 +8,7 @@
 #include <fcntl.h>
 #include <stdio.h>
 #include <string.h>
+#include <sys/mman.h>
 #include <sys/stat.h>
 #include <unistd.h>
 
@@ -21,6 +22,19 @@ static int posix_make_directory(const char *path, unsigned mode)
     return mkdir(path, mode);
 }
 
+static int64_t posix_size(int descriptor)
+{
+    struct stat about;
+    return fstat(descriptor, &about) == 0 && S_ISREG(about.st_mode) ? about.st_size : -1;
+}
+
+/* All pages at once: whoever maps a file is going to look at every byte of it. */
+static void *posix_map(int descriptor, size_t size)
+{
+    void *bytes = mmap(NULL, size, PROT_READ, MAP_PRIVATE | MAP_POPULATE, descriptor, 0);
+    return bytes != MAP_FAILED ? bytes : NULL;
+}
+
 const struct file_calls posix_file_calls = {
     .open = posix_open,
     .read = read,
@@ -30,6 +44,9 @@ const struct file_calls posix_file_calls = {
     .rename = rename,
     .unlink = unlink,
     .make_directory = posix_make_directory,
+    .size = posix_size,
+    .map = posix_map,
+    .unmap = munmap,
 };
 
 void file_calls_set(fescue_context *context, const struct file_calls *calls)
@@ -73,6 +90,24 @@ fescue_status file_read(fescue_context *context, const char *path, int descripto
     if (errno == EINTR)
         return FAIL(context, FESCUE_STOPPED, "%s: asked to stop while reading", name);
     return FAIL(context, FESCUE_NO_INPUT, "%s: cannot be read: %s", name, error_text(context, errno));
+}
+
+uint64_t file_size(fescue_context *context, int descriptor)
+{
+    int64_t size = context->files->size(descriptor);
+    return size < 0 ? 0 : (uint64_t)size;
+}
+
+void file_map(fescue_context *context, int descriptor, size_t size, const void **bytes)
+{
+    *bytes = context->files->map(descriptor, size);
+}
+
+void file_unmap(fescue_context *context, const void **bytes, size_t size)
+{
+    if (*bytes != NULL)
+        context->files->unmap((void *)(uintptr_t)*bytes, size);
+    *bytes = NULL;
 }
 
 void file_close(fescue_context *context, int *descriptor)

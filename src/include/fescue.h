@@ -57,7 +57,8 @@ int fescue_status_exit_code(fescue_status status);
 
 typedef struct fescue_context fescue_context;
 
-/* What the library asks of its surroundings; any entry may be NULL, then the default in brackets is used. */
+/* What the library asks of its surroundings; any entry may be NULL, then the default in brackets is used. take and give
+   may be called by several threads at once, progress and log only by the one that called us. */
 struct fescue_hooks {
     void *data;                                                    /* handed back to each call below */
     void *(*take)(void *data, size_t size);                        /* [malloc] */

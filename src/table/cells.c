@@ -64,22 +64,21 @@ static void rows_merge(struct cells *cells, enum fescue_duplicates duplicates)
 
 /* ---- building --------------------------------------------------------------------------------------------------- */
 
-fescue_status cells_finish(fescue_context *context, enum fescue_duplicates duplicates, struct cells *cells,
-                           uint64_t *merged)
+fescue_status cells_finish(fescue_context *context, enum fescue_duplicates duplicates, bool is_ascending,
+                           struct cells *cells, uint64_t *merged)
 {
     fescue_status status;
     uint64_t count = cells->count;
     TRY(half_open(context, cells->columns, cells->rows, count, cells->precision, &cells->by_column));
-    half_transpose(&cells->by_row, &cells->by_column, cells->precision);
-    if (!half_is_ascending(&cells->by_row)) {
-        half_transpose(&cells->by_column, &cells->by_row, cells->precision);
+    TRY(half_transpose(context, &cells->by_row, &cells->by_column, cells->precision));
+    if (!is_ascending) {
+        TRY(half_transpose(context, &cells->by_column, &cells->by_row, cells->precision));
         if (duplicates != FESCUE_DUPLICATES_REFUSE)
             rows_merge(cells, duplicates);
         if (cells->count != count)
-            half_transpose(&cells->by_row, &cells->by_column, cells->precision);
+            TRY(half_transpose(context, &cells->by_row, &cells->by_column, cells->precision));
     }
     *merged = count - cells->count;
-    assert(half_is_ascending(&cells->by_row));
     TRY(half_cut(context, &cells->by_row));
     TRY(half_cut(context, &cells->by_column));
 done:
@@ -91,13 +90,13 @@ fescue_status cells_build(fescue_context *context, uint32_t rows, uint32_t colum
 {
     fescue_status status;
     uint64_t merged;
+    const struct cell_run run = {list->row, list->column, list->value, list->count, MIRROR_NONE};
     *cells = (struct cells){.rows = rows, .columns = columns, .count = list->count, .precision = list->precision};
     TRY(half_open(context, rows, columns, list->count, list->precision, &cells->by_row));
-    half_count(&cells->by_row, list->row, list->count);
-    half_begin(&cells->by_row);
-    half_place(&cells->by_row, list->row, list->column, list->value, list->count, list->precision);
-    half_end(&cells->by_row);
-    TRY(cells_finish(context, FESCUE_DUPLICATES_REFUSE, cells, &merged));
+    TRY(half_sort(context, &run, 1, list->precision, &cells->by_row));
+    bool is_ascending = half_is_ascending(context, &cells->by_row);
+    TRY(cells_finish(context, FESCUE_DUPLICATES_REFUSE, is_ascending, cells, &merged));
+    assert(is_ascending || half_is_ascending(context, &cells->by_row)); /* no cell twice, as the caller promised */
 done:
     if (status != FESCUE_OK)
         cells_free(context, cells);
@@ -134,7 +133,7 @@ fescue_status cells_select(fescue_context *context, const struct cells *from, co
         cells->count += keep[k] != 0;
     TRY(half_open(context, from->rows, from->columns, cells->count, from->precision, &cells->by_row));
     half_keep(from, keep, &cells->by_row);
-    TRY(cells_finish(context, FESCUE_DUPLICATES_REFUSE, cells, &merged));
+    TRY(cells_finish(context, FESCUE_DUPLICATES_REFUSE, true, cells, &merged));
 done:
     if (status != FESCUE_OK)
         cells_free(context, cells);

@@ -163,6 +163,12 @@ done:
 
 /* ---- reading ---------------------------------------------------------------------------------------------------- */
 
+static fescue_status records_read(void *data)
+{
+    struct delimited *delimited = data;
+    return delimited->shape == SHAPE_LONG ? long_read(delimited) : wide_read(delimited);
+}
+
 fescue_status delimited_read(struct stream *stream, const struct table_reading *reading, fescue_table *table)
 {
     fescue_status status;
@@ -172,7 +178,8 @@ fescue_status delimited_read(struct stream *stream, const struct table_reading *
     pile_open(context, reading, &delimited.pile);
     TRY(delimited_kind_find(stream, reading->format, &kind));
     delimited.separator = kind.separator;
-    TRY(kind.shape == SHAPE_LONG ? long_read(&delimited) : wide_read(&delimited));
+    delimited.shape = kind.shape;
+    TRY(stream_read(stream, records_read, &delimited));
     table->look.shape = kind.shape;
     table->look.separator = kind.separator;
     table->look.decimal = delimited.pile.decimal;

@@ -10,12 +10,15 @@
  * A symmetric file holds the lower triangle (with skew symmetry without its diagonal), the rest is its mirror image. In
  * the array form a value that reads nan is a hole; in the coordinate form a hole is an entry that is not there.
  *
+ * Chunks of entries are parsed by all workers (market_chunk.c) and taken in their order; a chunk that holds anything
+ * but plain entries is read here, line by line.
+ *
  * What the header promises is checked against what comes, and never believed before: nothing is allocated by it but the
  * offsets of the lines, and these only when the file held entries enough to make so many lines plausible.
  */
 #include "table/table_internal.h"
 
-#include <assert.h>
+#include <math.h>
 #include <string.h>
 #include <strings.h>
 
@@ -27,12 +30,18 @@ struct token {
     const char *text, *end;
 };
 
+/* Where the value of the array form that is read next belongs. */
+struct array_place {
+    uint64_t row, column;
+};
+
 struct market {
     struct stream *stream;
-    const struct table_reading *reading;
     struct pile pile;
-    bool is_array, is_integer;
-    uint64_t rows, columns, entries;
+    struct market_form form;
+    uint64_t entries, read;  /* promised by the header; read so far */
+    struct array_place next; /* array form */
+    struct chunk *chunk;     /* whose lines are read; NULL: of the header */
     struct line line;
     struct token field[8]; /* of the line, as many as there are */
     int fields;            /* one more than the array holds when there are more */
@@ -65,11 +74,12 @@ static inline void fields_split(struct market *market)
     }
 }
 
-/* The next line that says something: neither blank nor a comment. fields is 0 at the end of the file. */
+/* The next line that says something: neither blank nor a comment. fields is 0 at the end of the chunk, or file. */
 static fescue_status line_next(struct market *market)
 {
     do {
-        fescue_status status = stream_line(market->stream, &market->line);
+        fescue_status status = market->chunk != NULL ? chunk_line(market->stream, market->chunk, &market->line)
+                                                     : stream_line(market->stream, &market->line);
         if (status != FESCUE_OK)
             return status;
         market->fields = 0;
@@ -114,8 +124,8 @@ static bool token_is(const struct token *token, const char *word)
 static fescue_status form_read(struct market *market)
 {
     const struct token *form = &market->field[2];
-    market->is_array = token_is(form, "array");
-    if (!market->is_array && !token_is(form, "coordinate"))
+    market->form.is_array = token_is(form, "array");
+    if (!market->form.is_array && !token_is(form, "coordinate"))
         return BAD_LINE(market->stream, "'%.*s' was found, 'coordinate' or 'array' was expected",
                         QUOTE(form->text, form->end));
     return FESCUE_OK;
@@ -130,8 +140,8 @@ static fescue_status kind_read(struct market *market)
     if (token_is(kind, "pattern"))
         return BAD_LINE(market->stream, "a pattern was found, values were expected: it says where cells are and not "
                                         "what they hold, so there is nothing to fill from");
-    market->is_integer = token_is(kind, "integer");
-    if (!market->is_integer && !token_is(kind, "real") && !token_is(kind, "double"))
+    market->form.is_integer = token_is(kind, "integer");
+    if (!market->form.is_integer && !token_is(kind, "real") && !token_is(kind, "double"))
         return BAD_LINE(market->stream, "'%.*s' was found, 'real' or 'integer' was expected",
                         QUOTE(kind->text, kind->end));
     return FESCUE_OK;
@@ -171,57 +181,57 @@ done:
 
 static fescue_status sides_check(const struct market *market)
 {
-    if (market->rows == 0 || market->columns == 0)
+    if (market->form.rows == 0 || market->form.columns == 0)
         return BAD_LINE(market->stream, "a table of %" PRIu64 " rows and %" PRIu64 " columns has no cells",
-                        market->rows, market->columns);
-    if (market->rows > TABLE_MOST_LINES || market->columns > TABLE_MOST_LINES)
+                        market->form.rows, market->form.columns);
+    if (market->form.rows > TABLE_MOST_LINES || market->form.columns > TABLE_MOST_LINES)
         return BAD_LINE(market->stream,
                         "%" PRIu64 " rows and %" PRIu64 " columns were found, at most %" PRIu32 " of each are possible",
-                        market->rows, market->columns, TABLE_MOST_LINES);
-    if (market->pile.mirror != MIRROR_NONE && market->rows != market->columns)
+                        market->form.rows, market->form.columns, TABLE_MOST_LINES);
+    if (market->pile.mirror != MIRROR_NONE && market->form.rows != market->form.columns)
         return BAD_LINE(market->stream,
                         "%" PRIu64 " rows and %" PRIu64
                         " columns were found, a symmetric table has as many rows as columns",
-                        market->rows, market->columns);
+                        market->form.rows, market->form.columns);
     return FESCUE_OK;
 }
 
 /* The number of values in the array form: all, or a triangle. Below 2^64, since sides are below 2^32. */
 static uint64_t array_entries(const struct market *market)
 {
-    uint64_t n = market->rows;
+    uint64_t n = market->form.rows;
     switch (market->pile.mirror) {
     case MIRROR_SAME:
         return n % 2 == 0 ? n / 2 * (n + 1) : (n + 1) / 2 * n;
     case MIRROR_NEGATED:
         return n % 2 == 0 ? n / 2 * (n - 1) : (n - 1) / 2 * n;
     default:
-        return n * market->columns;
+        return n * market->form.columns;
     }
 }
 
 static fescue_status sizes_read(struct market *market)
 {
     fescue_status status;
-    int expected = market->is_array ? 2 : 3;
+    int expected = market->form.is_array ? 2 : 3;
     TRY(line_next(market));
     if (market->fields == 0) {
         status = BAD_LINE(market->stream, "the file ends here, a line with the sizes of the table was expected");
         goto done;
     }
-    if (market->fields != expected || !count_parse(&market->field[0], &market->rows) ||
-        !count_parse(&market->field[1], &market->columns) ||
-        (!market->is_array && !count_parse(&market->field[2], &market->entries))) {
-        status =
-            BAD_LINE(market->stream, "'%.*s' was found, %s were expected", QUOTE(market->line.text, market->line.end),
-                     market->is_array ? "the numbers of rows and columns" : "the numbers of rows, columns and entries");
+    if (market->fields != expected || !count_parse(&market->field[0], &market->form.rows) ||
+        !count_parse(&market->field[1], &market->form.columns) ||
+        (!market->form.is_array && !count_parse(&market->field[2], &market->entries))) {
+        status = BAD_LINE(
+            market->stream, "'%.*s' was found, %s were expected", QUOTE(market->line.text, market->line.end),
+            market->form.is_array ? "the numbers of rows and columns" : "the numbers of rows, columns and entries");
         goto done;
     }
     TRY(sides_check(market));
-    if (market->is_array)
+    if (market->form.is_array)
         market->entries = array_entries(market);
-    market->pile.keeps_lines = !market->is_array;
-    pile_told_size(&market->pile, market->rows, market->columns);
+    market->pile.keeps_lines = !market->form.is_array;
+    pile_told_size(&market->pile, market->form.rows, market->form.columns);
 done:
     return status;
 }
@@ -246,10 +256,10 @@ static bool is_integer_text(const struct token *token)
 
 static fescue_status value_read(const struct market *market, const struct token *token, double *value)
 {
-    const char *fault = value_parse(token->text, token->end, market->reading->precision, value);
+    const char *fault = value_parse(token->text, token->end, market->pile.precision, value);
     if (fault != NULL)
         return value_refuse(market, token, fault);
-    if (market->is_integer && !is_integer_text(token))
+    if (market->form.is_integer && !is_integer_text(token))
         return value_refuse(market, token, "is not an integer, as the header promises");
     return FESCUE_OK;
 }
@@ -302,8 +312,8 @@ static fescue_status coordinate_entry(struct market *market)
                           QUOTE(market->line.text, market->line.end));
         goto done;
     }
-    TRY(place_read(market, 0, "row", market->rows, &row));
-    TRY(place_read(market, 1, "column", market->columns, &column));
+    TRY(place_read(market, 0, "row", market->form.rows, &row));
+    TRY(place_read(market, 1, "column", market->form.columns, &column));
     if (market->pile.mirror != MIRROR_NONE)
         TRY(triangle_check(market, row, column));
     if (is_nan_text(market->field[2].text, market->field[2].end)) {
@@ -315,14 +325,10 @@ done:
     return status;
 }
 
-/* Where the value of the array form that is read next belongs. */
-struct array_place {
-    uint64_t row, column;
-};
-
-static void array_place_next(const struct market *market, struct array_place *place)
+static void array_place_next(struct market *market)
 {
-    if (++place->row < market->rows)
+    struct array_place *place = &market->next;
+    if (++place->row < market->form.rows)
         return;
     place->column++;
     place->row = 0;
@@ -330,7 +336,7 @@ static void array_place_next(const struct market *market, struct array_place *pl
         place->row = place->column + (market->pile.mirror == MIRROR_NEGATED);
 }
 
-static fescue_status array_entry(struct market *market, const struct array_place *place)
+static fescue_status array_entry(struct market *market)
 {
     const struct token *token = &market->field[0];
     if (market->fields != 1)
@@ -338,34 +344,86 @@ static fescue_status array_entry(struct market *market, const struct array_place
                         QUOTE(market->line.text, market->line.end));
     if (is_nan_text(token->text, token->end))
         return FESCUE_OK;
-    return entry_add(market, place->row, place->column, token);
+    return entry_add(market, market->next.row, market->next.column, token);
 }
 
+/* Reads the chunk line by line. */
 static fescue_status entries_read(struct market *market)
 {
     fescue_status status;
-    struct array_place place = {.row = market->pile.mirror == MIRROR_NEGATED, .column = 0};
-    uint64_t read = 0;
-    for (;; read++) {
+    for (;; market->read++) {
         TRY(line_next(market));
-        if (market->fields == 0 || read == market->entries)
-            break;
-        if (market->is_array) {
-            TRY(array_entry(market, &place));
-            array_place_next(market, &place);
-        } else {
-            TRY(coordinate_entry(market));
-        }
+        if (market->fields == 0)
+            return FESCUE_OK;
+        if (market->read == market->entries)
+            return BAD_LINE(market->stream,
+                            "'%.*s' was found after all %" PRIu64
+                            " entries that the header promises, the end of the file was expected",
+                            QUOTE(market->line.text, market->line.end), market->entries);
+        TRY(market->form.is_array ? array_entry(market) : coordinate_entry(market));
+        if (market->form.is_array)
+            array_place_next(market);
     }
-    if (read < market->entries)
+done:
+    return status;
+}
+
+/* ---- entries by chunks ------------------------------------------------------------------------------------------ */
+
+static void entry_move(const struct pile *pile, struct pile_block *block, uint32_t from, uint32_t to)
+{
+    size_t size = cell_size(pile->precision);
+    memmove((char *)block->value + to * size, (char *)block->value + from * size, size);
+    if (block->code != NULL)
+        block->code[to] = block->code[from];
+}
+
+/* Gives the values of the array form their places, and takes out the holes. */
+static void array_places_give(struct market *market, struct pile_block *block)
+{
+    uint32_t kept = 0;
+    for (uint32_t k = 0; k < block->count; k++, array_place_next(market)) {
+        bool is_hole = market->pile.precision == FESCUE_SINGLE ? isnan(((const float *)block->value)[k])
+                                                               : isnan(((const double *)block->value)[k]);
+        if (is_hole)
+            continue;
+        entry_move(&market->pile, block, k, kept);
+        block->row[kept] = (uint32_t)market->next.row;
+        block->column[kept++] = (uint32_t)market->next.column;
+    }
+    block->count = kept;
+}
+
+static fescue_status chunk_parse(const void *data, const struct chunk *chunk, struct pile_block **block)
+{
+    const struct market *market = data;
+    return market_parse(&market->form, chunk, block);
+}
+
+static fescue_status chunk_finish(void *data, struct chunk *chunk, struct pile_block **block)
+{
+    struct market *market = data;
+    market->chunk = chunk;
+    if (*block == NULL || (*block)->count > market->entries - market->read)
+        return entries_read(market);
+    uint64_t lines = (*block)->count, first = stream_line_number(market->stream) + 1;
+    if (market->form.is_array)
+        array_places_give(market, *block);
+    stream_lines_skip(market->stream, lines);
+    market->read += lines;
+    return pile_take(&market->pile, block, first);
+}
+
+static fescue_status chunks_read(struct market *market)
+{
+    const struct chunk_reader reader = {market, chunk_parse, chunk_finish};
+    fescue_status status;
+    market->next.row = market->pile.mirror == MIRROR_NEGATED;
+    TRY(stream_parse(market->stream, &reader));
+    if (market->read < market->entries)
         status = BAD_LINE(market->stream,
                           "the file ends here after %" PRIu64 " of the %" PRIu64 " entries that its header promises",
-                          read, market->entries);
-    else if (market->fields != 0)
-        status = BAD_LINE(market->stream,
-                          "'%.*s' was found after all %" PRIu64
-                          " entries that the header promises, the end of the file was expected",
-                          QUOTE(market->line.text, market->line.end), market->entries);
+                          market->read, market->entries);
 done:
     return status;
 }
@@ -373,27 +431,28 @@ done:
 /* Offsets of lines take memory by what the header promises: only as much as the entries make plausible. */
 static fescue_status promise_check(const struct market *market)
 {
-    uint64_t most = market->rows > market->columns ? market->rows : market->columns;
+    uint64_t most = market->form.rows > market->form.columns ? market->form.rows : market->form.columns;
     if (most <= FREE_LINES || (most - FREE_LINES) / LINES_AN_ENTRY <= market->pile.count)
         return FESCUE_OK;
     return FAIL(market->pile.context, FESCUE_BAD_DATA,
                 "%s: the header promises %" PRIu64 " rows and %" PRIu64 " columns, but only %" PRIu64
                 " cells are observed: nearly every one of them would be empty",
-                stream_name(market->stream), market->rows, market->columns, market->pile.count);
+                stream_name(market->stream), market->form.rows, market->form.columns, market->pile.count);
 }
 
 fescue_status matrix_market_read(struct stream *stream, const struct table_reading *reading, fescue_table *table)
 {
     fescue_status status;
-    struct market market = {.stream = stream, .reading = reading};
+    struct market market = {.stream = stream};
+    market.form.pile = &market.pile;
     pile_open(table->context, reading, &market.pile);
     TRY(banner_read(&market));
     TRY(sizes_read(&market));
-    TRY(entries_read(&market));
+    TRY(chunks_read(&market));
     TRY(promise_check(&market));
-    table->look.shape = market.is_array ? SHAPE_MM_ARRAY : SHAPE_MM_COORDINATE;
-    table->row_labels.count = (uint32_t)market.rows;
-    table->column_labels.count = (uint32_t)market.columns;
+    table->look.shape = market.form.is_array ? SHAPE_MM_ARRAY : SHAPE_MM_COORDINATE;
+    table->row_labels.count = (uint32_t)market.form.rows;
+    table->column_labels.count = (uint32_t)market.form.columns;
     TRY(pile_build(&market.pile, stream, reading->duplicates, table));
 done:
     pile_free(&market.pile);

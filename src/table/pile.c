@@ -3,19 +3,15 @@
  * Cells as they come from a file, on their way into the store.
  *
  * Memory for n entries in single precision: 12 n bytes of pile, then 8 n for the rows; the pile is given back before
- * the columns take another 8 n. So the peak is 20 n, and what a header promises is never believed: a block is taken
- * when the entries for it are there. (Texts, kept for small tables only, need the pile until they are in order.)
+ * the columns take another 8 n. So the peak is 20 n and what sort.c needs, and what a header promises is never
+ * believed: a block is taken when the entries for it are there, or the text that they come from. (Texts, kept for small
+ * tables only, need the pile until they are in order.)
  *
  * The line of an entry, wanted only for a message about duplicates, is kept in runs: an ordinary file is one run.
  */
 #include "table/table_internal.h"
 
 #include <assert.h>
-
-static size_t value_size(enum fescue_precision precision)
-{
-    return precision == FESCUE_SINGLE ? sizeof(float) : sizeof(double);
-}
 
 void pile_open(fescue_context *context, const struct table_reading *reading, struct pile *pile)
 {
@@ -32,36 +28,77 @@ void pile_told_size(struct pile *pile, uint64_t rows, uint64_t columns)
     if (!pile->keeps_texts || columns == 0 || rows <= pile->dense_most / columns)
         return;
     pile->keeps_texts = false;
-    odd_texts_free(pile->context, &pile->odd);
+    for (struct pile_block *block = pile->first; block != NULL; block = block->next)
+        odd_texts_free(pile->context, &block->odd);
 }
 
-static fescue_status block_create(const struct pile *pile, struct pile_block **out)
+/* ---- blocks ----------------------------------------------------------------------------------------------------- */
+
+fescue_status pile_block_create(const struct pile *pile, uint32_t capacity, struct pile_block **out)
 {
     struct pile_block *block;
-    size_t size = value_size(pile->precision);
-    size_t bytes = sizeof *block + PILE_BLOCK * (size + (pile->keeps_texts ? 1 : 0));
-    fescue_status status = memory_take(pile->context, 1, bytes, &block);
-    if (status == FESCUE_OK) {
-        block->value = block + 1; /* aligned for doubles: the struct holds pointers */
-        block->code = pile->keeps_texts ? (uint8_t *)block->value + PILE_BLOCK * size : NULL;
-    }
+    size_t value = cell_size(pile->precision), code = pile->keeps_texts ? 1 : 0, size;
+    bool fits = size_product(capacity, value + 2 * sizeof(uint32_t) + code, &size) && size <= SIZE_MAX - sizeof *block;
+    *out = NULL;
+    fescue_status status = memory_take(pile->context, 1, fits ? sizeof *block + size : SIZE_MAX, &block);
+    if (status != FESCUE_OK)
+        return status;
+    block->capacity = capacity;
+    block->value = block + 1; /* aligned for doubles: the struct holds pointers */
+    block->row = (uint32_t *)(void *)((char *)block->value + capacity * value);
+    block->column = block->row + capacity;
+    block->code = pile->keeps_texts ? (uint8_t *)(block->column + capacity) : NULL;
     *out = block;
+    return FESCUE_OK;
+}
+
+static fescue_status text_keep(const struct pile *pile, struct pile_block *block, const struct pile_entry *entry,
+                               double value)
+{
+    size_t length = (size_t)(entry->end - entry->text);
+    const struct text_style style = {pile->precision, pile->decimal};
+    enum text_code code = text_code_of(value, style, entry->text, length);
+    block->code[block->count] = (uint8_t)code;
+    return code == TEXT_ODD ? odd_texts_add(pile->context, &block->odd, entry->text, length) : FESCUE_OK;
+}
+
+fescue_status pile_block_add(const struct pile *pile, struct pile_block *block, const struct pile_entry *entry)
+{
+    fescue_status status = FESCUE_OK;
+    uint32_t k = block->count;
+    assert(k < block->capacity);
+    block->row[k] = entry->row;
+    block->column[k] = entry->column;
+    if (pile->precision == FESCUE_SINGLE)
+        ((float *)block->value)[k] = (float)entry->value;
+    else
+        ((double *)block->value)[k] = entry->value;
+    if (pile->keeps_texts)
+        TRY(text_keep(pile, block, entry,
+                      pile->precision == FESCUE_SINGLE ? (double)(float)entry->value : entry->value));
+    block->count++;
+done:
     return status;
 }
 
-static fescue_status block_append(struct pile *pile)
+void pile_block_free(fescue_context *context, struct pile_block **block)
 {
-    struct pile_block *block;
-    fescue_status status = block_create(pile, &block);
-    if (status != FESCUE_OK)
-        return status;
-    if (pile->last == NULL)
+    if (*block != NULL)
+        odd_texts_free(context, &(*block)->odd);
+    GIVE(context, block);
+}
+
+static void block_append(struct pile *pile, struct pile_block *block)
+{
+    if (pile->first == NULL)
         pile->first = block;
     else
         pile->last->next = block;
     pile->last = block;
-    return FESCUE_OK;
+    pile->blocks++;
 }
+
+/* ---- entries ---------------------------------------------------------------------------------------------------- */
 
 static fescue_status run_append(struct pile *pile, uint64_t line)
 {
@@ -90,35 +127,32 @@ uint64_t pile_line(const struct pile *pile, uint64_t entry)
     return pile->runs[low].line + (entry - pile->runs[low].entry);
 }
 
-static fescue_status text_keep(struct pile *pile, const struct pile_entry *entry, double value, uint8_t *code)
-{
-    size_t length = (size_t)(entry->end - entry->text);
-    const struct text_style style = {pile->precision, pile->decimal};
-    *code = (uint8_t)text_code_of(value, style, entry->text, length);
-    return *code == TEXT_ODD ? odd_texts_add(pile->context, &pile->odd, entry->text, length) : FESCUE_OK;
-}
-
 fescue_status pile_add(struct pile *pile, const struct pile_entry *entry)
 {
     fescue_status status = FESCUE_OK;
-    if (pile->last == NULL || pile->last->count == PILE_BLOCK)
-        TRY(block_append(pile));
+    if (pile->last == NULL || pile->last->count == pile->last->capacity) {
+        struct pile_block *block;
+        TRY(pile_block_create(pile, PILE_BLOCK, &block));
+        block_append(pile, block);
+    }
     if (pile->keeps_lines && entry->line != pile->next_line)
         TRY(run_append(pile, entry->line));
-    struct pile_block *block = pile->last;
-    uint32_t k = block->count;
-    block->row[k] = entry->row;
-    block->column[k] = entry->column;
-    if (pile->precision == FESCUE_SINGLE)
-        ((float *)block->value)[k] = (float)entry->value;
-    else
-        ((double *)block->value)[k] = entry->value;
-    if (pile->keeps_texts)
-        TRY(text_keep(pile, entry, pile->precision == FESCUE_SINGLE ? (double)(float)entry->value : entry->value,
-                      &block->code[k]));
-    block->count++;
+    TRY(pile_block_add(pile, pile->last, entry));
     pile->count++;
     pile->next_line = entry->line + 1;
+done:
+    return status;
+}
+
+fescue_status pile_take(struct pile *pile, struct pile_block **block, uint64_t line)
+{
+    fescue_status status = FESCUE_OK;
+    if (pile->keeps_lines && line != pile->next_line)
+        TRY(run_append(pile, line));
+    block_append(pile, *block);
+    pile->count += (*block)->count;
+    pile->next_line = line + (*block)->count;
+    *block = NULL;
 done:
     return status;
 }
@@ -127,41 +161,20 @@ static void blocks_free(struct pile *pile)
 {
     while (pile->first != NULL) {
         struct pile_block *next = pile->first->next;
-        GIVE(pile->context, &pile->first);
+        pile_block_free(pile->context, &pile->first);
         pile->first = next;
     }
     pile->last = NULL;
+    pile->blocks = 0;
 }
 
 void pile_free(struct pile *pile)
 {
     blocks_free(pile);
     GIVE(pile->context, &pile->runs);
-    odd_texts_free(pile->context, &pile->odd);
 }
 
 /* ---- building --------------------------------------------------------------------------------------------------- */
-
-/* The entries of the other triangle. */
-static void block_mirror(const struct pile *pile, const struct pile_block *from, struct pile_block *to)
-{
-    bool negated = pile->mirror == MIRROR_NEGATED;
-    to->count = 0;
-    for (uint32_t k = 0; k < from->count; k++) {
-        if (from->row[k] == from->column[k])
-            continue;
-        uint32_t at = to->count++;
-        to->row[at] = from->column[k];
-        to->column[at] = from->row[k];
-        if (pile->precision == FESCUE_SINGLE) {
-            float value = ((const float *)from->value)[k];
-            ((float *)to->value)[at] = negated ? -value : value;
-        } else {
-            double value = ((const double *)from->value)[k];
-            ((double *)to->value)[at] = negated ? -value : value;
-        }
-    }
-}
 
 static uint64_t cells_of(const struct pile *pile)
 {
@@ -173,33 +186,22 @@ static uint64_t cells_of(const struct pile *pile)
     return count;
 }
 
-/* Lays the entries and their mirror images into the rows. */
-static fescue_status rows_place(const struct pile *pile, struct cells *cells)
+/* Sorts the entries, and their mirror images behind those of their block, into the rows. */
+static fescue_status rows_sort(const struct pile *pile, struct cells *cells)
 {
     fescue_status status;
-    struct half *rows = &cells->by_row;
-    struct pile_block *mirrored = NULL;
-    if (pile->mirror != MIRROR_NONE)
-        TRY(block_create(pile, &mirrored));
-    TRY(half_open(pile->context, cells->rows, cells->columns, cells->count, cells->precision, rows));
+    struct cell_run *runs = NULL;
+    size_t count = 0;
+    TRY(half_open(pile->context, cells->rows, cells->columns, cells->count, cells->precision, &cells->by_row));
+    TRY(TAKE(pile->context, 2 * pile->blocks, &runs));
     for (const struct pile_block *block = pile->first; block != NULL; block = block->next) {
-        half_count(rows, block->row, block->count);
-        if (mirrored != NULL) {
-            block_mirror(pile, block, mirrored);
-            half_count(rows, mirrored->row, mirrored->count);
-        }
+        runs[count++] = (struct cell_run){block->row, block->column, block->value, block->count, MIRROR_NONE};
+        if (pile->mirror != MIRROR_NONE)
+            runs[count++] = (struct cell_run){block->column, block->row, block->value, block->count, pile->mirror};
     }
-    half_begin(rows);
-    for (const struct pile_block *block = pile->first; block != NULL; block = block->next) {
-        half_place(rows, block->row, block->column, block->value, block->count, cells->precision);
-        if (mirrored != NULL) {
-            block_mirror(pile, block, mirrored);
-            half_place(rows, mirrored->row, mirrored->column, mirrored->value, mirrored->count, cells->precision);
-        }
-    }
-    half_end(rows);
+    TRY(half_sort(pile->context, runs, count, cells->precision, &cells->by_row));
 done:
-    GIVE(pile->context, &mirrored);
+    GIVE(pile->context, &runs);
     return status;
 }
 
@@ -249,12 +251,13 @@ fescue_status pile_build(struct pile *pile, const struct stream *stream, enum fe
                             .count = cells_of(pile),
                             .precision = pile->precision};
     pile_told_size(pile, cells->rows, cells->columns);
-    TRY(rows_place(pile, cells));
-    if (duplicates == FESCUE_DUPLICATES_REFUSE)
+    TRY(rows_sort(pile, cells));
+    bool is_ascending = half_is_ascending(pile->context, &cells->by_row);
+    if (!is_ascending && duplicates == FESCUE_DUPLICATES_REFUSE)
         TRY(duplicates_refuse(pile, stream, table));
     if (!pile->keeps_texts)
         blocks_free(pile);
-    TRY(cells_finish(pile->context, duplicates, cells, &table->duplicates));
+    TRY(cells_finish(pile->context, duplicates, is_ascending, cells, &table->duplicates));
     if (pile->keeps_texts)
         TRY(texts_create(pile, cells, duplicates, &table->texts));
 done:

@@ -1,46 +1,55 @@
 /* SPDX-License-Identifier: MIT
  *
- * Bytes of a plain or gzip file, or of standard input, handed out line by line.
+ * The text of a source, in chunks of whole lines, and the pipeline that reads and parses them side by side.
  *
- *     disk      what was read last: DISK_SIZE bytes, counted into the check sum of the run record
- *     buffer    text, plain or inflated; [at, got) is not handed out yet
+ *     source --fill--> chunk --parse--> block of entries --finish--> pile
+ *              one after the other  |  any order, any worker  |  one after the other, in the order of the text
  *
- * A line is found by memchr in the buffer. When none ends there, what is left moves to the front and more is read
- * behind it; when it fills the buffer, the buffer doubles: a line may be as long as memory allows.
+ * A chunk ends with the last end of line that fits; what is left, less than a line, is carried over to the next one. A
+ * line that fills a chunk makes it double: a line may be as long as memory allows.
  *
- * A gzip file is a row of members (RFC 1952, section 2.2). They are inflated one after the other with zlib; its own
- * file layer is not used because it takes a damaged or cut file for a short one, or for text.
+ * Chunks lie in a ring, chunk n in slot n mod ring_size, and three counters say where the work stands:
+ *
+ *     finished <= taken <= filled <= finished + ring_size
+ *
+ * so that memory is bounded however far one worker gets ahead. Worker 0, the caller, does all reading, since signals
+ * come to it alone and must be able to end a wait for a slow pipe; while the ring is full it parses like the others.
+ * With one worker the same loop fills and parses in turn. What a chunk holds, and in which order chunks are finished,
+ * does not depend on the number of workers; nor do line numbers, which are counted as chunks are finished.
+ *
+ * Readers whose lines depend on one another take lines, with stream_line, on one worker, while worker 0 fills.
  */
 #include "table/table_internal.h"
 
 #include <assert.h>
-#include <limits.h>
+#include <pthread.h>
 #include <string.h>
-#include <zlib.h>
 
 enum {
-    DISK_SIZE = 1 << 18,   /* large enough that system calls cost nothing beside the parsing */
-    BUFFER_SIZE = 1 << 20, /* holds one disk block of text, several when inflated, and stays in the second cache */
-    GZIP_WINDOW = 15 + 16  /* zlib: the largest window, and a gzip header */
+    CHUNK_SIZE = 1 << 18, /* stays in the second cache with what is parsed from it; a turn of the lock costs nothing */
+    SPARE_CHUNKS = 2      /* beyond one a worker: filled while all are busy */
 };
 
 struct stream {
     fescue_context *context;
-    const char *path, *name; /* borrowed */
-    int descriptor;
-    unsigned char *disk;
-    size_t disk_at, disk_got;
-    bool disk_ended;
-    uint64_t disk_bytes;
-    uint32_t crc32;
-    bool is_gzip, inflate_open;
-    bool in_member; /* between the first and the last byte of a gzip member */
-    z_stream inflate;
-    char *buffer;
-    size_t at, got, size;
-    bool ended;    /* nothing comes behind `got` */
-    bool has_zero; /* a zero byte was seen: every line is looked at */
-    uint64_t line;
+    struct source source;
+    double opened;      /* when, by the clock */
+    uint64_t disk_size; /* of the file; 0: not known */
+    uint64_t line;      /* delivered, or counted behind a finished chunk */
+    struct chunk *ring;
+    size_t ring_size;
+    char *carry; /* the beginning of the line that the last chunk filled cut off */
+    size_t carry_length, carry_size;
+    struct chunk *current; /* whose lines stream_line delivers */
+
+    pthread_mutex_t lock; /* guards what follows, while workers run */
+    pthread_cond_t changed;
+    uint64_t filled, taken, finished; /* chunks */
+    bool ended;                       /* no chunk follows the last one filled */
+    bool stopped;                     /* by a failure, or since nothing is wanted any more */
+    bool is_shared;                   /* worker 0 fills; otherwise whoever wants a chunk does it himself */
+    bool has_reader;
+    fescue_status status; /* of the failure that stopped us */
 };
 
 uint64_t stream_line_number(const struct stream *stream)
@@ -50,7 +59,7 @@ uint64_t stream_line_number(const struct stream *stream)
 
 const char *stream_name(const struct stream *stream)
 {
-    return stream->name;
+    return stream->source.name;
 }
 
 fescue_context *stream_context(const struct stream *stream)
@@ -58,292 +67,374 @@ fescue_context *stream_context(const struct stream *stream)
     return stream->context;
 }
 
-void stream_told(const struct stream *stream, uint32_t *crc32, uint64_t *bytes)
+struct source *stream_source(struct stream *stream)
 {
-    *crc32 = stream->crc32;
-    *bytes = stream->disk_bytes;
+    return &stream->source;
 }
 
-/* ---- the disk --------------------------------------------------------------------------------------------------- */
-
-/* Adds what one read gives to the end of the disk block, which has room. */
-static fescue_status disk_read(struct stream *stream)
+void stream_lines_skip(struct stream *stream, uint64_t lines)
 {
-    size_t got;
-    unsigned char *to = stream->disk + stream->disk_got;
-    fescue_status status =
-        file_read(stream->context, stream->path, stream->descriptor, to, DISK_SIZE - stream->disk_got, &got);
-    if (status != FESCUE_OK)
-        return status;
-    stream->crc32 = (uint32_t)crc32(stream->crc32, to, (uInt)got);
-    stream->disk_got += got;
-    stream->disk_bytes += got;
-    stream->disk_ended = got == 0;
-    return FESCUE_OK;
+    stream->line += lines;
 }
 
-/* Leaves at least one byte in the disk block, unless the file has ended. */
-static fescue_status disk_refill(struct stream *stream)
+static struct chunk *chunk_at(const struct stream *stream, uint64_t number)
 {
-    if (stream->disk_at < stream->disk_got || stream->disk_ended)
+    return &stream->ring[number % stream->ring_size];
+}
+
+/* ---- filling ---------------------------------------------------------------------------------------------------- */
+
+static fescue_status chunk_grow(struct stream *stream, struct chunk *chunk, size_t least)
+{
+    size_t size = chunk->size < CHUNK_SIZE ? CHUNK_SIZE : chunk->size;
+    while (size < least)
+        if (!size_product(size, 2, &size))
+            return FAIL(stream->context, FESCUE_NO_MEMORY, "%s: a line is longer than can be addressed",
+                        stream->source.name);
+    if (size == chunk->size)
         return FESCUE_OK;
-    stream->disk_at = stream->disk_got = 0;
-    return disk_read(stream);
+    fescue_status status = RESIZE(stream->context, size, &chunk->text);
+    if (status == FESCUE_OK)
+        chunk->size = size;
+    return status;
 }
 
-/* ---- gzip ------------------------------------------------------------------------------------------------------- */
-
-/* zlib's memory is ours too, so that it is counted and can be refused. */
-static voidpf zlib_take(voidpf context, uInt count, uInt size)
+/* Keeps what follows the last whole line. */
+static fescue_status carry_keep(struct stream *stream, const struct chunk *chunk)
 {
-    void *block;
-    return memory_take(context, count, size, &block) == FESCUE_OK ? block : Z_NULL;
-}
-
-static void zlib_give(voidpf context, voidpf block)
-{
-    memory_give(context, &block);
-}
-
-static fescue_status gzip_open(struct stream *stream)
-{
-    stream->is_gzip = true;
-    stream->inflate.zalloc = zlib_take;
-    stream->inflate.zfree = zlib_give;
-    stream->inflate.opaque = stream->context;
-    int result = inflateInit2(&stream->inflate, GZIP_WINDOW);
-    if (result != Z_OK) /* zlib's version was checked when we were linked: what is left is memory */
-        return FAIL(stream->context, FESCUE_NO_MEMORY, "%s: no memory to inflate it", stream->name);
-    stream->inflate_open = true;
-    stream->in_member = true;
+    size_t length = chunk->got - chunk->end;
+    if (length > stream->carry_size) {
+        size_t size = length + length / 2; /* lengths of lines vary: not every longer one is to cost a new block */
+        fescue_status status = RESIZE(stream->context, size, &stream->carry);
+        if (status != FESCUE_OK)
+            return status;
+        stream->carry_size = size;
+    }
+    if (length > 0)
+        memcpy(stream->carry, chunk->text + chunk->end, length);
+    stream->carry_length = length;
     return FESCUE_OK;
 }
 
-/* The line that was being inflated when it went wrong, at `end`. */
-static uint64_t line_at(const struct stream *stream, const char *end)
-{
-    uint64_t line = stream->line + 1;
-    for (const char *c = stream->buffer + stream->at; c < end; c++)
-        line += *c == '\n';
-    return line;
-}
-
-static fescue_status gzip_fail(const struct stream *stream, int result)
-{
-    const char *cause = stream->inflate.msg != NULL ? stream->inflate.msg : "";
-    uint64_t line = line_at(stream, (const char *)stream->inflate.next_out);
-    if (result == Z_MEM_ERROR)
-        return FAIL(stream->context, FESCUE_NO_MEMORY, "%s: no memory to inflate it", stream->name);
-    if (result == Z_NEED_DICT)
-        cause = "a preset dictionary is asked for";
-    if (strcmp(cause, "incorrect header check") == 0) /* the first member's header was seen when the file was opened */
-        return BAD_LINE_AT(stream, line, "the gzip data are followed by bytes that are not gzip");
-    if (strcmp(cause, "incorrect data check") == 0)
-        return BAD_LINE_AT(stream, line, "the gzip check sum does not match what was inflated: the file is damaged");
-    if (strcmp(cause, "incorrect length check") == 0)
-        return BAD_LINE_AT(stream, line, "the gzip length does not match what was inflated: the file is damaged");
-    return BAD_LINE_AT(stream, line, "the gzip data are damaged (%s)", cause);
-}
-
-/* Inflates from the disk block, which is not empty, to `to`. */
-static fescue_status gzip_step(struct stream *stream, char *to, size_t room, size_t *made)
-{
-    z_stream *inflating = &stream->inflate;
-    uInt given = (uInt)(stream->disk_got - stream->disk_at), space = room < UINT_MAX ? (uInt)room : UINT_MAX;
-    if (!stream->in_member)
-        inflateReset(inflating);
-    stream->in_member = true;
-    inflating->next_in = stream->disk + stream->disk_at;
-    inflating->avail_in = given;
-    inflating->next_out = (unsigned char *)to;
-    inflating->avail_out = space;
-    int result = inflate(inflating, Z_NO_FLUSH);
-    stream->disk_at += given - inflating->avail_in;
-    *made = space - inflating->avail_out;
-    if (result == Z_STREAM_END)
-        stream->in_member = false;
-    else if (result != Z_OK && result != Z_BUF_ERROR) /* Z_BUF_ERROR: more input or room is needed, as usual */
-        return gzip_fail(stream, result);
-    return FESCUE_OK;
-}
-
-/* ---- text ------------------------------------------------------------------------------------------------------- */
-
-static fescue_status text_step(struct stream *stream, char *to, size_t room, size_t *made)
+/* Reads until the chunk is full or the text ends. */
+static fescue_status chunk_read(struct stream *stream, struct chunk *chunk)
 {
     fescue_status status;
-    *made = 0;
-    TRY(disk_refill(stream));
-    if (stream->disk_at == stream->disk_got) {
-        if (stream->is_gzip && stream->in_member)
-            return BAD_LINE_AT(stream, line_at(stream, to),
-                               "the gzip data end in the middle: the file is truncated after %" PRIu64 " bytes",
-                               stream->disk_bytes);
-        stream->ended = true;
-        return FESCUE_OK;
+    struct source *source = &stream->source;
+    TRY(progress_tell_bytes(stream->context, "reading", source->disk_bytes, stream->disk_size,
+                            clock_wall() - stream->opened));
+    while (chunk->got < chunk->size && !source_has_ended(source)) {
+        size_t made;
+        TRY(source_read(source, chunk->text + chunk->got, chunk->size - chunk->got, &made));
+        chunk->got += made;
     }
-    if (stream->is_gzip)
-        return gzip_step(stream, to, room, made);
-    size_t held = stream->disk_got - stream->disk_at;
-    *made = held < room ? held : room;
-    memcpy(to, stream->disk + stream->disk_at, *made);
-    stream->disk_at += *made;
 done:
     return status;
 }
 
-/* Makes room behind `got`: what was handed out is dropped, and if that is not enough the buffer doubles. */
-static fescue_status buffer_make_room(struct stream *stream)
+/* The next chunk of the text into the slot where it belongs; *ended tells whether it is the last. */
+static fescue_status chunk_fill(struct stream *stream, struct chunk *chunk, bool *ended)
 {
-    if (stream->at > 0) {
-        memmove(stream->buffer, stream->buffer + stream->at, stream->got - stream->at);
-        stream->got -= stream->at;
-        stream->at = 0;
+    fescue_status status;
+    chunk->at = chunk->end = chunk->got = 0;
+    TRY(chunk_grow(stream, chunk, stream->carry_length));
+    if (stream->carry_length > 0)
+        memcpy(chunk->text, stream->carry, stream->carry_length);
+    chunk->got = stream->carry_length;
+    for (size_t seen = chunk->got;; seen = chunk->got) { /* what is carried over holds no end of line */
+        TRY(chunk_read(stream, chunk));
+        *ended = source_has_ended(&stream->source);
+        const char *newline = memrchr(chunk->text + seen, '\n', chunk->got - seen);
+        chunk->end = *ended ? chunk->got : newline != NULL ? (size_t)(newline + 1 - chunk->text) : 0;
+        if (*ended || newline != NULL)
+            break;
+        TRY(chunk_grow(stream, chunk, chunk->size + 1));
     }
-    if (stream->got < stream->size)
-        return FESCUE_OK;
-    size_t size;
-    if (!size_product(stream->size, 2, &size))
-        return FAIL(stream->context, FESCUE_NO_MEMORY, "%s: a line is longer than can be addressed", stream->name);
-    fescue_status status = RESIZE(stream->context, size, &stream->buffer);
-    if (status == FESCUE_OK)
-        stream->size = size;
+    chunk->number = stream->filled;
+    chunk->complaint = stream->source.complaint;
+    chunk->has_zero = memchr(chunk->text, '\0', chunk->end) != NULL;
+    TRY(carry_keep(stream, chunk));
+done:
     return status;
 }
 
-/* At least one more byte behind `got`, unless the text has ended. */
-static fescue_status buffer_fill(struct stream *stream)
+/* ---- sharing ---------------------------------------------------------------------------------------------------- */
+
+static void stream_stop(struct stream *stream, fescue_status status)
+{
+    pthread_mutex_lock(&stream->lock);
+    if (!stream->stopped)
+        stream->status = status;
+    stream->stopped = true;
+    pthread_cond_broadcast(&stream->changed);
+    pthread_mutex_unlock(&stream->lock);
+}
+
+/* Fills the next slot, which is free, and shows the chunk to all. */
+static void chunk_supply(struct stream *stream)
+{
+    bool ended;
+    fescue_status status = chunk_fill(stream, chunk_at(stream, stream->filled), &ended);
+    if (status != FESCUE_OK) {
+        stream_stop(stream, status);
+        return;
+    }
+    pthread_mutex_lock(&stream->lock);
+    stream->filled++;
+    stream->ended = ended;
+    pthread_cond_broadcast(&stream->changed);
+    pthread_mutex_unlock(&stream->lock);
+}
+
+/* What a worker does next. */
+enum task { TASK_NONE, TASK_FILL, TASK_PARSE };
+
+static enum task task_choose(const struct stream *stream, bool may_fill)
+{
+    if (may_fill && !stream->ended && stream->filled - stream->finished < stream->ring_size)
+        return TASK_FILL;
+    return stream->taken < stream->filled ? TASK_PARSE : TASK_NONE;
+}
+
+/* Waits for something to do; TASK_NONE when there will be nothing more. TASK_PARSE takes *chunk. */
+static enum task task_await(struct stream *stream, bool may_fill, bool may_parse, struct chunk **chunk)
+{
+    enum task task = TASK_NONE;
+    pthread_mutex_lock(&stream->lock);
+    while (!stream->stopped && !(stream->ended && stream->taken == stream->filled)) {
+        task = task_choose(stream, may_fill);
+        if (task == TASK_FILL || (task == TASK_PARSE && may_parse))
+            break;
+        task = TASK_NONE;
+        if (stream->ended && !may_parse)
+            break;
+        pthread_cond_wait(&stream->changed, &stream->lock);
+    }
+    if (task == TASK_PARSE)
+        *chunk = chunk_at(stream, stream->taken++);
+    pthread_mutex_unlock(&stream->lock);
+    return task;
+}
+
+/* ---- lines ------------------------------------------------------------------------------------------------------ */
+
+/* The line of damaged data: whole lines are counted up to where the damage showed. */
+static fescue_status complaint_tell(const struct stream *stream, const struct chunk *chunk)
+{
+    uint64_t line = stream->line + 1;
+    for (const char *c = chunk->text + chunk->at; c < chunk->text + chunk->end; c++)
+        line += *c == '\n';
+    return source_tell(&stream->source, line);
+}
+
+fescue_status chunk_line(struct stream *stream, struct chunk *chunk, struct line *line)
+{
+    *line = (struct line){0};
+    if (chunk->at == chunk->end)
+        return FESCUE_OK;
+    line->text = chunk->text + chunk->at;
+    const char *newline = memchr(line->text, '\n', chunk->end - chunk->at);
+    const char *after = newline != NULL ? newline + 1 : chunk->text + chunk->end;
+    line->end = newline != NULL ? newline : after;
+    if (line->end > line->text && line->end[-1] == '\r')
+        line->end--;
+    line->terminator = (size_t)(after - line->end);
+    chunk->at = (size_t)(after - chunk->text);
+    stream->line++;
+    if (chunk->has_zero && memchr(line->text, '\0', (size_t)(line->end - line->text)) != NULL)
+        return BAD_LINE(stream, "a zero byte was found, where text was expected");
+    return FESCUE_OK;
+}
+
+/* Makes the next chunk the current one, or leaves none. */
+static fescue_status chunk_next(struct stream *stream)
+{
+    fescue_status status = FESCUE_OK;
+    stream->current = NULL;
+    pthread_mutex_lock(&stream->lock);
+    stream->finished = stream->taken;
+    pthread_cond_broadcast(&stream->changed);
+    pthread_mutex_unlock(&stream->lock);
+    if (!stream->is_shared && !stream->ended && !stream->stopped)
+        chunk_supply(stream);
+    if (task_await(stream, false, true, &stream->current) == TASK_NONE && stream->stopped)
+        status = stream->status;
+    else if (stream->current != NULL && stream->current->complaint != NULL)
+        status = complaint_tell(stream, stream->current);
+    return status;
+}
+
+fescue_status stream_line(struct stream *stream, struct line *line)
 {
     fescue_status status;
-    TRY(progress_tell(stream->context, "reading", -1));
-    TRY(buffer_make_room(stream));
-    size_t made = 0;
-    while (made == 0 && !stream->ended)
-        TRY(text_step(stream, stream->buffer + stream->got, stream->size - stream->got, &made));
-    stream->has_zero = stream->has_zero || memchr(stream->buffer + stream->got, '\0', made) != NULL;
-    stream->got += made;
+    do {
+        *line = (struct line){0};
+        if (stream->current == NULL)
+            return FESCUE_OK;
+        TRY(chunk_line(stream, stream->current, line));
+        if (line->text == NULL)
+            TRY(chunk_next(stream));
+    } while (line->text == NULL);
 done:
     return status;
 }
 
 fescue_status stream_peek(struct stream *stream, size_t most, const char **text, size_t *length)
 {
-    fescue_status status = FESCUE_OK;
-    assert(stream->line == 0 && most <= BUFFER_SIZE / 2);
-    while (stream->got - stream->at < most && !stream->ended)
-        TRY(buffer_fill(stream));
-    *text = stream->buffer + stream->at;
-    *length = stream->got - stream->at < most ? stream->got - stream->at : most;
-done:
-    return status;
-}
-
-/* The line from `at` to `newline`, or to the end of the text when there is none. */
-static void line_take(struct stream *stream, const char *newline, struct line *line)
-{
-    const char *after = newline != NULL ? newline + 1 : stream->buffer + stream->got;
-    line->text = stream->buffer + stream->at;
-    line->end = newline != NULL ? newline : after;
-    if (line->end > line->text && line->end[-1] == '\r')
-        line->end--;
-    line->terminator = (size_t)(after - line->end);
-    stream->at = (size_t)(after - stream->buffer);
-    stream->line++;
-}
-
-fescue_status stream_line(struct stream *stream, struct line *line)
-{
-    size_t seen = 0; /* bytes from `at` on that hold no end of line */
-    *line = (struct line){0};
-    for (;;) {
-        const char *start = stream->buffer + stream->at;
-        size_t held = stream->got - stream->at;
-        const char *newline = memchr(start + seen, '\n', held - seen);
-        if (newline != NULL || (stream->ended && held > 0)) {
-            line_take(stream, newline, line);
-            break;
-        }
-        if (stream->ended)
-            return FESCUE_OK;
-        seen = held;
-        fescue_status status = buffer_fill(stream);
-        if (status != FESCUE_OK)
-            return status;
-    }
-    if (stream->has_zero && memchr(line->text, '\0', (size_t)(line->end - line->text)) != NULL)
-        return BAD_LINE(stream, "a zero byte was found, where text was expected");
+    assert(stream->line == 0 && most <= CHUNK_SIZE / 2);
+    const struct chunk *chunk = stream->current;
+    *text = chunk->text + chunk->at;
+    *length = chunk->got - chunk->at < most ? chunk->got - chunk->at : most;
     return FESCUE_OK;
+}
+
+/* ---- reading by lines ------------------------------------------------------------------------------------------- */
+
+struct line_reading {
+    struct stream *stream;
+    fescue_status (*read)(void *data);
+    void *data;
+};
+
+/* Whether we are the one who reads lines. */
+static bool reader_claim(struct stream *stream)
+{
+    pthread_mutex_lock(&stream->lock);
+    bool first = !stream->has_reader;
+    stream->has_reader = true;
+    pthread_mutex_unlock(&stream->lock);
+    return first;
+}
+
+static void stop_await(struct stream *stream)
+{
+    pthread_mutex_lock(&stream->lock);
+    while (!stream->stopped)
+        pthread_cond_wait(&stream->changed, &stream->lock);
+    pthread_mutex_unlock(&stream->lock);
+}
+
+/* There are as many blocks as workers, and whoever has one keeps it to the end: so each worker gets one. */
+static void line_worker(void *job, size_t block, size_t worker)
+{
+    const struct line_reading *reading = job;
+    struct stream *stream = reading->stream;
+    struct chunk *none;
+    (void)block;
+    while (worker == 0 && task_await(stream, true, false, &none) == TASK_FILL)
+        chunk_supply(stream);
+    if (worker > 0 && reader_claim(stream))
+        stream_stop(stream, reading->read(reading->data));
+    stop_await(stream);
+}
+
+fescue_status stream_read(struct stream *stream, fescue_status (*read)(void *data), void *data)
+{
+    struct line_reading reading = {stream, read, data};
+    size_t workers = team_workers(stream->context);
+    if (workers == 1)
+        return read(data);
+    stream->is_shared = true;
+    team_run(stream->context, workers, line_worker, &reading);
+    return stream->status;
+}
+
+/* ---- reading by chunks ------------------------------------------------------------------------------------------ */
+
+struct chunk_reading {
+    struct stream *stream;
+    const struct chunk_reader *reader;
+};
+
+/* Waits until all chunks before this one are finished; false when that will never be. */
+static bool turn_await(struct stream *stream, const struct chunk *chunk)
+{
+    pthread_mutex_lock(&stream->lock);
+    while (!stream->stopped && stream->finished != chunk->number)
+        pthread_cond_wait(&stream->changed, &stream->lock);
+    bool is_ours = !stream->stopped;
+    pthread_mutex_unlock(&stream->lock);
+    return is_ours;
+}
+
+static void turn_pass(struct stream *stream)
+{
+    pthread_mutex_lock(&stream->lock);
+    stream->finished++;
+    pthread_cond_broadcast(&stream->changed);
+    pthread_mutex_unlock(&stream->lock);
+}
+
+static void chunk_parse(struct stream *stream, const struct chunk_reader *reader, struct chunk *chunk)
+{
+    fescue_status status = FESCUE_OK;
+    struct pile_block *block = NULL;
+    if (chunk->complaint == NULL)
+        TRY(reader->parse(reader->data, chunk, &block));
+    if (turn_await(stream, chunk)) {
+        TRY(chunk->complaint != NULL ? complaint_tell(stream, chunk) : reader->finish(reader->data, chunk, &block));
+        turn_pass(stream);
+    }
+done:
+    pile_block_free(stream->context, &block);
+    if (status != FESCUE_OK)
+        stream_stop(stream, status);
+}
+
+static void chunk_worker(void *job, size_t block, size_t worker)
+{
+    const struct chunk_reading *reading = job;
+    struct stream *stream = reading->stream;
+    struct chunk *chunk;
+    enum task task;
+    (void)block;
+    while ((task = task_await(stream, worker == 0, true, &chunk)) != TASK_NONE)
+        if (task == TASK_FILL)
+            chunk_supply(stream);
+        else
+            chunk_parse(stream, reading->reader, chunk);
+}
+
+fescue_status stream_parse(struct stream *stream, const struct chunk_reader *reader)
+{
+    struct chunk_reading reading = {stream, reader};
+    size_t workers = team_workers(stream->context);
+    if (stream->current == NULL)
+        return FESCUE_OK;
+    stream->current = NULL; /* it is the first to be parsed: what is left of it */
+    stream->finished = --stream->taken;
+    stream->is_shared = true;
+    team_run(stream->context, workers, chunk_worker, &reading);
+    return stream->status;
 }
 
 /* ---- opening ---------------------------------------------------------------------------------------------------- */
 
-/* Files that are no text, by what they begin with: what they are and what to do. */
-static const struct {
-    size_t offset, length;
-    const char *bytes;
-    const char *sentence;
-} strangers[] = {
-    {4, 6, "1AY&SY", "bzip2 data were found; only plain text and gzip are read"}, /* behind "BZh" and a digit */
-    {1, 4, "7zXZ", "xz data were found; only plain text and gzip are read"},      /* behind 0xfd */
-    {0, 4, "\x28\xb5\x2f\xfd", "zstd data were found; only plain text and gzip are read"},
-    {0, 4, "PK\x03\x04", "a zip archive (or a spreadsheet) was found; save it as delimited text"},
-    {0, 2, "\xff\xfe", "UTF-16 text was found, UTF-8 was expected; convert it, for instance with iconv"},
-    {0, 2, "\xfe\xff", "UTF-16 text was found, UTF-8 was expected; convert it, for instance with iconv"},
-};
-
-static fescue_status strangers_refuse(const struct stream *stream)
-{
-    if (stream->disk_got == 0)
-        return FAIL(stream->context, FESCUE_BAD_DATA, "%s: the input is empty, a table was expected", stream->name);
-    for (size_t k = 0; k < sizeof strangers / sizeof strangers[0]; k++)
-        if (stream->disk_got >= strangers[k].offset + strangers[k].length &&
-            memcmp(stream->disk + strangers[k].offset, strangers[k].bytes, strangers[k].length) == 0)
-            return BAD_LINE_AT(stream, UINT64_C(1), "%s", strangers[k].sentence);
-    return FESCUE_OK;
-}
-
-static fescue_status byte_order_mark_skip(struct stream *stream)
+static void byte_order_mark_skip(struct chunk *chunk)
 {
     static const char mark[] = "\xef\xbb\xbf";
-    const char *text;
-    size_t length;
-    fescue_status status = stream_peek(stream, sizeof mark - 1, &text, &length);
-    if (status == FESCUE_OK && length == sizeof mark - 1 && memcmp(text, mark, length) == 0)
-        stream->at += length;
-    return status;
-}
-
-/* Looks at the first bytes, which may come in pieces, to see what they are. */
-static fescue_status kind_find(struct stream *stream)
-{
-    enum { ENOUGH = 10 }; /* for the longest of the strangers */
-    static const unsigned char gzip[] = {0x1f, 0x8b};
-    fescue_status status = FESCUE_OK;
-    while (stream->disk_got < ENOUGH && !stream->disk_ended)
-        TRY(disk_read(stream));
-    TRY(strangers_refuse(stream));
-    if (stream->disk_got >= sizeof gzip && memcmp(stream->disk, gzip, sizeof gzip) == 0)
-        TRY(gzip_open(stream));
-    TRY(byte_order_mark_skip(stream));
-done:
-    return status;
+    const size_t length = sizeof mark - 1;
+    if (chunk->end >= length && memcmp(chunk->text, mark, length) == 0)
+        chunk->at += length;
 }
 
 fescue_status stream_open(fescue_context *context, const char *path, struct stream **out)
 {
     fescue_status status;
     struct stream *stream = NULL;
+    size_t workers = team_workers(context);
     *out = NULL;
     TRY(TAKE(context, 1, &stream));
     stream->context = context;
-    stream->path = path;
-    stream->name = strcmp(path, "-") == 0 ? "standard input" : path;
-    stream->size = BUFFER_SIZE;
-    stream->descriptor = -1;
-    TRY(file_open_read(context, path, &stream->descriptor));
-    TRY(TAKE(context, DISK_SIZE, &stream->disk));
-    TRY(TAKE(context, stream->size, &stream->buffer));
-    TRY(kind_find(stream));
+    stream->opened = clock_wall();
+    pthread_mutex_init(&stream->lock, NULL);
+    pthread_cond_init(&stream->changed, NULL);
+    TRY(source_open(context, path, &stream->source));
+    stream->disk_size = file_size(context, stream->source.descriptor);
+    stream->ring_size = workers == 1 ? 1 : workers + SPARE_CHUNKS;
+    TRY(TAKE(context, stream->ring_size, &stream->ring));
+    TRY(chunk_next(stream));
+    byte_order_mark_skip(stream->current);
     *out = stream;
     stream = NULL;
 done:
@@ -357,10 +448,12 @@ void stream_close(struct stream **out)
     if (stream == NULL)
         return;
     fescue_context *context = stream->context;
-    if (stream->inflate_open)
-        inflateEnd(&stream->inflate);
-    file_close(context, &stream->descriptor);
-    GIVE(context, &stream->disk);
-    GIVE(context, &stream->buffer);
+    source_close(&stream->source);
+    for (size_t k = 0; stream->ring != NULL && k < stream->ring_size; k++)
+        GIVE(context, &stream->ring[k].text);
+    GIVE(context, &stream->ring);
+    GIVE(context, &stream->carry);
+    pthread_cond_destroy(&stream->changed);
+    pthread_mutex_destroy(&stream->lock);
     GIVE(context, out);
 }

@@ -73,22 +73,20 @@ static fescue_status given_check(fescue_context *context, const struct given_cel
 
 static fescue_status given_place(fescue_context *context, const struct given_cells *given, struct cells *cells)
 {
-    struct half *half = &cells->by_row;
-    fescue_status status = half_open(context, given->rows, given->columns, given->count, cells->precision, half);
-    if (status != FESCUE_OK)
-        return status;
-    half_count(half, given->row, given->count);
-    half_begin(half);
-    if (cells->precision == FESCUE_DOUBLE) {
-        half_place(half, given->row, given->column, given->value, given->count, FESCUE_DOUBLE);
-    } else {
-        for (uint64_t k = 0; k < given->count; k++) {
-            float value = (float)given->value[k];
-            half_place(half, &given->row[k], &given->column[k], &value, 1, FESCUE_SINGLE);
-        }
+    fescue_status status;
+    float *single = NULL;
+    struct cell_run run = {given->row, given->column, given->value, given->count, MIRROR_NONE};
+    TRY(half_open(context, given->rows, given->columns, given->count, cells->precision, &cells->by_row));
+    if (cells->precision == FESCUE_SINGLE) {
+        TRY(TAKE(context, given->count, &single));
+        for (uint64_t k = 0; k < given->count; k++)
+            single[k] = (float)given->value[k];
+        run.value = single;
     }
-    half_end(half);
-    return FESCUE_OK;
+    TRY(half_sort(context, &run, 1, cells->precision, &cells->by_row));
+done:
+    GIVE(context, &single);
+    return status;
 }
 
 fescue_status table_from_triplets(fescue_context *context, uint32_t rows, uint32_t columns, uint64_t count,
@@ -107,14 +105,15 @@ fescue_status table_from_triplets(fescue_context *context, uint32_t rows, uint32
     table->column_labels.count = columns;
     table->cells = (struct cells){.rows = rows, .columns = columns, .count = count, .precision = precision};
     TRY(given_place(context, &given, &table->cells));
-    bool twice;
-    TRY(half_find_twice(context, &table->cells.by_row, &twice, &twice_row, &twice_column));
+    bool is_ascending = half_is_ascending(context, &table->cells.by_row), twice = false;
+    if (!is_ascending)
+        TRY(half_find_twice(context, &table->cells.by_row, &twice, &twice_row, &twice_column));
     if (twice) {
         status = FAIL(context, FESCUE_BAD_DATA, "the cell of row %" PRIu32 " and column %" PRIu32 " is given twice",
                       twice_row, twice_column);
         goto done;
     }
-    TRY(cells_finish(context, FESCUE_DUPLICATES_REFUSE, &table->cells, &table->duplicates));
+    TRY(cells_finish(context, FESCUE_DUPLICATES_REFUSE, is_ascending, &table->cells, &table->duplicates));
     *out = table;
     table = NULL;
 done:

@@ -8,6 +8,7 @@
 #include "table/table.h"
 
 #include <inttypes.h>
+#include <zlib.h>
 
 /* Rows and columns are counted in 32 bits, and one number is kept free to mean "none". */
 #define TABLE_MOST_LINES (UINT32_MAX - 1)
@@ -23,6 +24,8 @@ struct text_store {
 /* New NUL-terminated copy of `length` bytes; *store is created at the first call. */
 fescue_status text_store_add(fescue_context *context, struct text_store **store, const char *text, size_t length,
                              char **out);
+/* Moves the texts of the other store, which is empty then. */
+void text_store_join(struct text_store **store, struct text_store **other);
 void text_store_free(fescue_context *context, struct text_store **store);
 
 /* ---- labels ------------------------------------------------------------------------------------------------------ */
@@ -56,25 +59,33 @@ bool time_label_parse(const char *text, const char *end, struct instant *instant
    counts the times when it happened. Lines are in the order of the file; step: the usual spacing in seconds. */
 uint32_t time_clock_mend(struct instant *instants, uint32_t count, double step);
 
-/* ---- halves: one direction of the store ----------------------------------------------------------------------------
- *
- * Made by counting: half_open, half_count once for all cells, half_begin, half_place once for the same cells, half_end.
+/* ---- halves: one direction of the store ---------------------------------------------------------------------------
  */
 
+size_t cell_size(enum fescue_precision precision); /* bytes of a value */
 /* Room for `count` cells; everything zero. */
 fescue_status half_open(fescue_context *context, uint32_t lines, uint32_t length, uint64_t count,
                         enum fescue_precision precision, struct half *half);
-void half_count(struct half *half, const uint32_t *line, uint64_t count);
-void half_begin(struct half *half);
-/* Cells of the same line keep the order in which they are placed. `value` has the half's precision. */
-void half_place(struct half *half, const uint32_t *line, const uint32_t *across, const void *value, uint64_t count,
-                enum fescue_precision precision);
-void half_end(struct half *half);
+
+/* What a symmetric file leaves out: the other triangle, with the same or the opposite sign. */
+enum mirror { MIRROR_NONE, MIRROR_SAME, MIRROR_NEGATED };
+/* Cells on their way into a half: `line` of each, and the position `across` it. With a mirror they are the images of
+   the cells of a file: those off the diagonal, with that sign. */
+struct cell_run {
+    const uint32_t *line, *across;
+    const void *value; /* of the half's precision */
+    uint64_t count;
+    enum mirror mirror;
+};
+/* Fills a half that is open. Cells of the same line keep the order in which they come. */
+fescue_status half_sort(fescue_context *context, const struct cell_run *runs, size_t count,
+                        enum fescue_precision precision, struct half *half);
 /* Fills `to`, opened with room for the cells of `from`, with the same cells the other way; ascending within each line;
    equal cells keep their order. What `to` held is lost. */
-void half_transpose(const struct half *from, struct half *to, enum fescue_precision precision);
+fescue_status half_transpose(fescue_context *context, const struct half *from, struct half *to,
+                             enum fescue_precision precision);
 /* Whether every line is strictly ascending: in order and without a cell twice. */
-bool half_is_ascending(const struct half *half);
+bool half_is_ascending(fescue_context *context, const struct half *half);
 /* Looks for two cells at the same place, in lines of any order: *twice, and where. O(cells + lines). */
 fescue_status half_find_twice(fescue_context *context, const struct half *half, bool *twice, uint32_t *line,
                               uint32_t *across);
@@ -82,29 +93,87 @@ fescue_status half_find_twice(fescue_context *context, const struct half *half, 
 fescue_status half_cut(fescue_context *context, struct half *half);
 void half_free(fescue_context *context, struct half *half);
 
-/* What to do with a cell that comes more than once: cells_finish merges cells of the same place, taken in the order in
-   which they were placed. *merged counts the cells that are gone. With FESCUE_DUPLICATES_REFUSE there are none. */
-fescue_status cells_finish(fescue_context *context, enum fescue_duplicates duplicates, struct cells *cells,
-                           uint64_t *merged);
+/* Makes cells complete whose rows are placed: the columns, and the blocks of both. Cells of the same place, taken in
+   the order in which they were placed, are merged, unless `is_ascending` says that there are none and the rows in
+   order; *merged counts the cells that are gone. With FESCUE_DUPLICATES_REFUSE there must be none. */
+fescue_status cells_finish(fescue_context *context, enum fescue_duplicates duplicates, bool is_ascending,
+                           struct cells *cells, uint64_t *merged);
 
-/* ---- stream: bytes of a plain or gzip file, line by line --------------------------------------------------------- */
+/* ---- source: bytes of a plain or gzip file -------------------------------------------------------------------------
+ */
 
+struct source {
+    fescue_context *context;
+    const char *path, *name; /* borrowed; name: as the user calls it */
+    int descriptor;
+    unsigned char *disk;
+    size_t at, got;         /* of the disk block: not handed out yet */
+    bool disk_ended, ended; /* nothing more comes from the disk; nothing more is made of it */
+    uint64_t disk_bytes;
+    uint32_t crc32;
+    bool is_gzip, inflate_open;
+    bool in_member; /* between the first and the last byte of a gzip member */
+    z_stream inflate;
+    const char *complaint; /* what is wrong with compressed data; NULL: nothing so far */
+    char complaint_text[96];
+};
+/* FESCUE_NO_INPUT, or FESCUE_BAD_DATA for what no table can be: nothing at all, another kind of compression. To be
+   closed in any case. */
+fescue_status source_open(fescue_context *context, const char *path, struct source *source);
+/* Makes the disk block hold the first `enough` bytes, if there are so many. Before the first source_read. */
+fescue_status source_look(struct source *source, size_t enough);
+/* Up to `room` bytes, inflated; none do not mean the end. */
+fescue_status source_read(struct source *source, char *to, size_t room, size_t *made);
+bool source_has_ended(const struct source *source); /* also where the data are damaged: complaint says how */
+fescue_status source_tell(const struct source *source, uint64_t line); /* FESCUE_BAD_DATA with the complaint */
+void source_told(const struct source *source, uint32_t *crc32, uint64_t *bytes); /* of the bytes read from the disk */
+void source_close(struct source *source);                                        /* idempotent */
+
+/* ---- stream: the text of a source, in chunks of whole lines
+ * ----------------------------------------------------------
+ */
+
+struct pile_block;
 struct stream;
+struct chunk {
+    char *text; /* owned by the stream */
+    size_t at, end, got, size;
+    uint64_t number;       /* in the order of the text, from 0 */
+    bool has_zero;         /* there is a zero byte in it */
+    const char *complaint; /* the source's; there are no lines then */
+};
 struct line {
     const char *text, *end; /* without its terminator; text is NULL at the end of the data */
     size_t terminator;      /* bytes of it, which lie at `end`: 0 at the end of the file, 1 or 2 (CR LF) */
 };
-/* FESCUE_NO_INPUT, or FESCUE_BAD_DATA for what no table can be: nothing at all, another kind of compression. */
-fescue_status stream_open(fescue_context *context, const char *path, struct stream **out);
+fescue_status stream_open(fescue_context *context, const char *path, struct stream **out); /* as source_open */
 /* The first bytes, as many as there are up to `most`, without taking them. Only before the first line. */
 fescue_status stream_peek(struct stream *stream, size_t most, const char **text, size_t *length);
 /* The next line; good until the next call. */
 fescue_status stream_line(struct stream *stream, struct line *line);
+/* The next line of the chunk, whose turn it is (see stream_parse); text is NULL at its end. */
+fescue_status chunk_line(struct stream *stream, struct chunk *chunk, struct line *line);
+void stream_lines_skip(struct stream *stream, uint64_t lines); /* counts lines that were read in another way */
+
+/* Runs read(data), which takes lines with stream_line, while another thread, if there is one, reads and inflates what
+   follows. `read` runs on any worker and starts no team of its own. */
+fescue_status stream_read(struct stream *stream, fescue_status (*read)(void *data), void *data);
+
+/* How the rest of a stream is read by all workers. `parse` reads one chunk beside others; it sees neither lines before
+   nor after, and leaves *block NULL when that is not enough. `finish` is called once for each chunk in their order; it
+   takes the block (and nulls *block) or reads the chunk line by line. */
+struct chunk_reader {
+    void *data;
+    fescue_status (*parse)(const void *data, const struct chunk *chunk, struct pile_block **block);
+    fescue_status (*finish)(void *data, struct chunk *chunk, struct pile_block **block);
+};
+fescue_status stream_parse(struct stream *stream, const struct chunk_reader *reader);
+
 uint64_t stream_line_number(const struct stream *stream); /* of the line delivered last, from 1 */
 const char *stream_name(const struct stream *stream);     /* as the user calls it */
 fescue_context *stream_context(const struct stream *stream);
-void stream_told(const struct stream *stream, uint32_t *crc32, uint64_t *bytes); /* of the bytes read from the disk */
-void stream_close(struct stream **stream);                                       /* NULL-safe; nulls the pointer */
+struct source *stream_source(struct stream *stream);
+void stream_close(struct stream **stream); /* NULL-safe; nulls the pointer */
 
 /* Bad data at the line delivered last, or at another one. */
 #define BAD_LINE_AT(stream, number, format, ...)                                                                       \
@@ -154,34 +223,33 @@ void odd_texts_free(fescue_context *context, struct odd_texts *odd);
 /* ---- pile: cells as they come from a file -------------------------------------------------------------------------
  */
 
-/* What a symmetric file leaves out: the other triangle, with the same or the opposite sign. */
-enum pile_mirror { MIRROR_NONE, MIRROR_SAME, MIRROR_NEGATED };
-
-enum { PILE_BLOCK = 1 << 14 }; /* entries: a block is some 200 kB, so that a pile wastes little and links are rare */
+/* Entries that lie side by side; all its arrays are one piece of memory. */
 struct pile_block {
     struct pile_block *next;
-    uint32_t count;
-    uint8_t *code; /* NULL when texts are not kept */
+    uint32_t count, capacity;
+    uint32_t *row, *column;
     void *value;
-    uint32_t row[PILE_BLOCK], column[PILE_BLOCK];
+    uint8_t *code; /* NULL when texts are not kept */
+    struct odd_texts odd;
 };
+enum { PILE_BLOCK = 1 << 14 }; /* entries, when it is not known how many will come: some 200 kB */
 
 /* Entries in the order of the input; blocks, so that growing copies nothing. */
 struct pile {
     fescue_context *context; /* borrowed */
     enum fescue_precision precision;
-    enum pile_mirror mirror;
+    enum mirror mirror;
     char decimal; /* what texts have for a point */
     bool keeps_texts;
     bool keeps_lines;    /* of entries: where no cell can come twice nobody asks for them */
     uint64_t dense_most; /* texts are kept while rows * columns is at most this */
     uint64_t count;
     struct pile_block *first, *last;
+    size_t blocks;
     struct line_run { /* entries from `entry` on lie on lines from `line` on, one a line */
         uint64_t entry, line;
     } * runs;
     uint64_t run_count, run_capacity, next_line;
-    struct odd_texts odd;
 };
 struct pile_entry {
     uint32_t row, column;
@@ -193,6 +261,13 @@ void pile_open(fescue_context *context, const struct table_reading *reading, str
 /* The table is going to have at least this size: texts are dropped when that is too much. */
 void pile_told_size(struct pile *pile, uint64_t rows, uint64_t columns);
 fescue_status pile_add(struct pile *pile, const struct pile_entry *entry);
+/* An empty block as the pile would have it, with room for `capacity` entries. Safe from any worker. */
+fescue_status pile_block_create(const struct pile *pile, uint32_t capacity, struct pile_block **out);
+/* One more entry, for which there is room. Safe from any worker. */
+fescue_status pile_block_add(const struct pile *pile, struct pile_block *block, const struct pile_entry *entry);
+void pile_block_free(fescue_context *context, struct pile_block **block); /* NULL-safe */
+/* Takes a block whose entries lie on lines from `line` on, one a line. */
+fescue_status pile_take(struct pile *pile, struct pile_block **block, uint64_t line);
 uint64_t pile_line(const struct pile *pile, uint64_t entry);
 /* Makes table->cells, texts and duplicates from the pile, which is used up. The table's labels are there already. */
 fescue_status pile_build(struct pile *pile, const struct stream *stream, enum fescue_duplicates duplicates,
@@ -211,6 +286,15 @@ fescue_status table_create(fescue_context *context, const char *path, fescue_tab
 
 /* Each reads the whole stream into a table that has its context and path, and nothing else. */
 bool is_matrix_market(const char *text, size_t length);
+/* What the header of a Matrix Market file says of its entries, and the pile that they go to. */
+struct market_form {
+    const struct pile *pile;
+    bool is_array, is_integer;
+    uint64_t rows, columns;
+};
+/* All entries of the chunk as a block, those of the array form without their places and with nan for holes; NULL when
+   there is anything but plain entries in it. Safe from any worker. */
+fescue_status market_parse(const struct market_form *form, const struct chunk *chunk, struct pile_block **block);
 fescue_status matrix_market_read(struct stream *stream, const struct table_reading *reading, fescue_table *table);
 fescue_status delimited_read(struct stream *stream, const struct table_reading *reading, fescue_table *table);
 
@@ -244,6 +328,7 @@ struct delimited {
     struct stream *stream;
     const struct table_reading *reading;
     fescue_table *table;
+    enum table_shape shape;
     char separator;
     char decimal;          /* 0 until a value has shown it */
     uint64_t decimal_line; /* where it did */

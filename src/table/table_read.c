@@ -33,7 +33,7 @@ fescue_status table_read(fescue_context *context, const char *path, const struct
     TRY(table_create(context, path, &table));
     TRY(stream_open(context, path, &stream));
     TRY(kind_read(stream, reading, table));
-    stream_told(stream, &table->input_crc32, &table->input_bytes);
+    source_told(stream_source(stream), &table->input_crc32, &table->input_bytes);
     *out = table;
     table = NULL;
 done:

@@ -39,6 +39,16 @@ fescue_status text_store_add(fescue_context *context, struct text_store **store,
     return FESCUE_OK;
 }
 
+void text_store_join(struct text_store **store, struct text_store **other)
+{
+    struct text_store **end = other;
+    while (*end != NULL)
+        end = &(*end)->older;
+    *end = *store;
+    *store = *other;
+    *other = NULL;
+}
+
 void text_store_free(fescue_context *context, struct text_store **store)
 {
     while (*store != NULL) {

@@ -188,12 +188,12 @@ static void odd_place(struct texts *texts, uint64_t k, char *text, enum fescue_d
 static void odd_collect(const struct pile *pile, const struct half *rows, enum fescue_duplicates duplicates,
                         struct texts *texts)
 {
-    uint64_t at[2] = {0}, next = 0;
+    uint64_t at[2] = {0};
     for (const struct pile_block *block = pile->first; block != NULL; block = block->next)
-        for (uint32_t k = 0; k < block->count; k++) {
+        for (uint32_t k = 0, next = 0; k < block->count; k++) {
             if (block->code[k] != TEXT_ODD)
                 continue;
-            char *text = pile->odd.text[next++];
+            char *text = block->odd.text[next++];
             int cells = entry_cells(pile, rows, block, k, at);
             odd_place(texts, at[0], text, duplicates);
             if (cells == 2 && code_mirror(pile, TEXT_ODD) == TEXT_ODD)
@@ -229,8 +229,8 @@ fescue_status texts_create(struct pile *pile, const struct cells *cells, enum fe
     TRY(TAKE(context, odd, &texts->odd));
     if (odd > 0)
         odd_collect(pile, &cells->by_row, duplicates, texts);
-    texts->store = pile->odd.store;
-    pile->odd.store = NULL;
+    for (struct pile_block *block = pile->first; block != NULL; block = block->next)
+        text_store_join(&texts->store, &block->odd.store);
     *out = texts;
     texts = NULL;
 done:

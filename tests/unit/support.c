@@ -13,6 +13,7 @@
 #include <stdio.h>
 #include <stdlib.h>
 #include <string.h>
+#include <sys/mman.h>
 #include <sys/stat.h>
 #include <unistd.h>
 
@@ -39,6 +40,8 @@ static const char *const fault_names[FAULT_KINDS] = {
     [FAULT_RENAME] = "rename",
     [FAULT_UNLINK] = "unlink",
     [FAULT_MAKE_DIRECTORY] = "make directory",
+    [FAULT_SIZE] = "size",
+    [FAULT_MAP] = "map",
     [FAULT_SHORT_READ] = "short read",
     [FAULT_SHORT_WRITE] = "short write",
     [FAULT_MALLOC] = "malloc",
@@ -159,6 +162,16 @@ static int faulty_make_directory(const char *path, unsigned mode)
     return fault_due(FAULT_MAKE_DIRECTORY) ? -1 : mkdir(path, mode);
 }
 
+static int64_t faulty_size(int descriptor)
+{
+    return fault_due(FAULT_SIZE) ? -1 : posix_file_calls.size(descriptor);
+}
+
+static void *faulty_map(int descriptor, size_t size)
+{
+    return fault_due(FAULT_MAP) ? NULL : posix_file_calls.map(descriptor, size);
+}
+
 static const struct file_calls faulty_calls = {
     .open = faulty_open,
     .read = faulty_read,
@@ -168,6 +181,9 @@ static const struct file_calls faulty_calls = {
     .rename = faulty_rename,
     .unlink = faulty_unlink,
     .make_directory = faulty_make_directory,
+    .size = faulty_size,
+    .map = faulty_map,
+    .unmap = munmap,
 };
 
 /* ---- the bench -------------------------------------------------------------------------------------------------- */

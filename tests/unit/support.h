@@ -62,6 +62,8 @@ enum fault_kind {
     FAULT_RENAME,
     FAULT_UNLINK,
     FAULT_MAKE_DIRECTORY,
+    FAULT_SIZE, /* says that it is no regular file */
+    FAULT_MAP,
     FAULT_SHORT_READ,  /* half of the bytes, at least one: not an error */
     FAULT_SHORT_WRITE, /* the same */
     FAULT_MALLOC,      /* malloc itself, whoever calls it: for a test that puts its own malloc in place */

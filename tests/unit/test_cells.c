@@ -189,10 +189,9 @@ static void a_cell_given_twice_is_found(void **state)
     bool twice;
     uint32_t line, across;
     assert_status(context, half_open(context, 3, 3, 6, FESCUE_DOUBLE, &half), FESCUE_OK);
-    half_count(&half, row, 6);
-    half_begin(&half);
-    half_place(&half, row, column, value, 6, FESCUE_DOUBLE);
-    half_end(&half);
+    const struct cell_run run = {row, column, value, 6, MIRROR_NONE};
+    assert_status(context, half_sort(context, &run, 1, FESCUE_DOUBLE, &half), FESCUE_OK);
+    assert_false(half_is_ascending(context, &half));
     assert_status(context, half_find_twice(context, &half, &twice, &line, &across), FESCUE_OK);
     assert_true(twice);
     assert_int_equal(line, 1);

@@ -331,7 +331,7 @@ static void a_memory_limit_is_kept(void **state)
     struct bench *bench = bench_of(state);
     fescue_table *table;
     static const char text[] = "t,a,b,c\n1,2,3,4\n";
-    memory_limit_set(bench->context, 1000000);
+    memory_limit_set(bench->context, 400000);
     assert_status(bench->context, bytes_read(bench, text, sizeof text - 1, NULL, &table), FESCUE_NO_MEMORY);
     assert_null(table);
     memory_limit_set(bench->context, 0);

@@ -1,0 +1,241 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Matrix Market files of several chunks: the same table and the same sentences from 1, 2 and 5 workers, whether chunks
+ * are parsed at one go or, because of a remark in them, line by line.
+ */
+#include "support_reader.h"
+
+#include <inttypes.h>
+#include <math.h>
+#include <stdio.h>
+#include <stdlib.h>
+#include <string.h>
+
+enum { ROWS = 900, COLUMNS = 700, ENTRIES = 50000 }; /* some 900 kB of text: four chunks */
+static const size_t workers[] = {1, 2, 5};
+static const uint64_t seed = 20240701;
+
+/* How the text is laid out. */
+struct layout {
+    uint64_t remarks; /* one every so many lines on average; 0: none */
+    bool is_wide;     /* more blanks than needed, and CR LF */
+    bool is_integer;
+    uint64_t promised, bad_line; /* entries in the header; a line that reads "1 x 1" (0: none) */
+};
+
+static double value_at(uint64_t k, bool is_integer)
+{
+    double u = random_uniform_at(seed, RANDOM_TEST, 1, k);
+    return is_integer ? floor(2000 * u) - 1000 : (double)(float)(u - 0.5) * pow(10, (double)(k % 7) - 3);
+}
+
+/* Cells in a scrambled order, none twice: 104729 is a prime that divides no number of cells. */
+static void place_at(uint64_t k, uint64_t place[2])
+{
+    uint64_t cell = k * 104729 % ((uint64_t)ROWS * COLUMNS);
+    place[0] = cell / COLUMNS;
+    place[1] = cell % COLUMNS;
+}
+
+static char *text_write(const struct layout *layout, size_t *length)
+{
+    char *text = NULL;
+    uint64_t line = 2;
+    FILE *out = open_memstream(&text, length);
+    assert_non_null(out);
+    fprintf(out, "%%%%MatrixMarket matrix coordinate %s general\n%d %d %" PRIu64 "\n",
+            layout->is_integer ? "integer" : "real", ROWS, COLUMNS, layout->promised);
+    for (uint64_t k = 0; k < ENTRIES; k++) {
+        uint64_t place[2];
+        place_at(k, place);
+        if (layout->remarks > 0 && random_uniform_at(seed, RANDOM_TEST, 2, k) * (double)layout->remarks < 1) {
+            fputs(k % 2 == 0 ? "% a remark\n" : "\n", out);
+            line++;
+        }
+        if (++line == layout->bad_line)
+            fputs("1 x 1\n", out);
+        else
+            fprintf(out, layout->is_wide ? " %" PRIu64 "\t %" PRIu64 "  %.9g \r\n" : "%" PRIu64 " %" PRIu64 " %.9g\n",
+                    place[0] + 1, place[1] + 1, value_at(k, layout->is_integer));
+    }
+    fclose(out);
+    return text;
+}
+
+static void cells_check(const fescue_table *table, bool is_integer)
+{
+    const struct half *rows = &table->cells.by_row;
+    double *expected = malloc((size_t)ROWS * COLUMNS * sizeof *expected);
+    assert_non_null(expected);
+    for (size_t k = 0; k < (size_t)ROWS * COLUMNS; k++)
+        expected[k] = NAN;
+    for (uint64_t k = 0; k < ENTRIES; k++) {
+        char text[32];
+        uint64_t place[2];
+        place_at(k, place);
+        sprintf(text, "%.9g", value_at(k, is_integer));
+        expected[place[0] * COLUMNS + place[1]] = strtod(text, NULL);
+    }
+    assert_int_equal(table->cells.count, ENTRIES);
+    for (uint32_t i = 0; i < rows->lines; i++)
+        for (uint64_t k = rows->start[i]; k < rows->start[i + 1]; k++)
+            assert_true(cells_value(&table->cells, rows, k) == expected[(size_t)i * COLUMNS + rows->across[k]]);
+    free(expected);
+}
+
+/* A text and the same compressed. */
+struct packed {
+    char *bytes[2];
+    size_t count[2];
+};
+
+static struct packed layout_pack(const struct layout *layout)
+{
+    struct packed packed = {0};
+    packed.bytes[0] = text_write(layout, &packed.count[0]);
+    gzip_append(&packed.bytes[1], &packed.count[1], packed.bytes[0], packed.count[0]);
+    return packed;
+}
+
+static void packed_free(struct packed *packed)
+{
+    free(packed->bytes[0]), free(packed->bytes[1]);
+}
+
+static void layout_check(struct bench *bench, const struct layout *layout)
+{
+    struct packed packed = layout_pack(layout);
+    fescue_table *first = NULL;
+    for (size_t w = 0; w < 6; w++) {
+        fescue_table *table;
+        assert_status(bench->context, team_resize(bench->context, workers[w % 3]), FESCUE_OK);
+        assert_status(bench->context, bytes_read(bench, packed.bytes[w / 3], packed.count[w / 3], NULL, &table),
+                      FESCUE_OK);
+        if (first == NULL) {
+            first = table;
+            cells_check(table, layout->is_integer);
+        } else {
+            tables_equal(first, table);
+            table_destroy(&table);
+        }
+    }
+    table_destroy(&first);
+    packed_free(&packed);
+}
+
+static void every_layout_gives_the_same_table(void **state)
+{
+    static const struct layout layouts[] = {
+        {.promised = ENTRIES},
+        {.promised = ENTRIES, .remarks = 20000},
+        {.promised = ENTRIES, .remarks = 7},
+        {.promised = ENTRIES, .is_wide = true, .remarks = 40000},
+        {.promised = ENTRIES, .is_integer = true},
+    };
+    for (size_t k = 0; k < sizeof layouts / sizeof layouts[0]; k++)
+        layout_check(bench_of(state), &layouts[k]);
+}
+
+static void layout_refused(struct bench *bench, const struct layout *layout, const char *sentence)
+{
+    struct packed packed = layout_pack(layout);
+    for (size_t w = 0; w < 6; w++) {
+        assert_status(bench->context, team_resize(bench->context, workers[w % 3]), FESCUE_OK);
+        bytes_refused(bench, packed.bytes[w / 3], packed.count[w / 3], NULL, sentence);
+    }
+    packed_free(&packed);
+}
+
+static void faults_are_told_with_their_line(void **state)
+{
+    struct bench *bench = bench_of(state);
+    static const uint64_t lines[] = {3, 30000, ENTRIES + 2};
+    for (size_t k = 0; k < sizeof lines / sizeof lines[0]; k++) {
+        char sentence[128];
+        const struct layout layout = {.promised = ENTRIES, .bad_line = lines[k]};
+        snprintf(sentence, sizeof sentence, "line %" PRIu64 ": 'x' was found, the number of a column was expected",
+                 lines[k]);
+        layout_refused(bench, &layout, sentence);
+    }
+}
+
+static void promises_are_held_to(void **state)
+{
+    struct bench *bench = bench_of(state);
+    char sentence[256], entry[64];
+    uint64_t place[2];
+    place_at(30000, place);
+    snprintf(entry, sizeof entry, "%" PRIu64 " %" PRIu64 " %.9g", place[0] + 1, place[1] + 1, value_at(30000, false));
+    snprintf(sentence, sizeof sentence,
+             "line 30003: '%s' was found after all 30000 entries that the header promises, the end of the file was "
+             "expected",
+             entry);
+    layout_refused(bench, &(struct layout){.promised = 30000}, sentence);
+    layout_refused(bench, &(struct layout){.promised = ENTRIES + 1},
+                   "line 50002: the file ends here after 50000 of the 50001 entries that its header promises");
+}
+
+/* A fault in the text is told before damage that comes behind it, though that may be met first. */
+static void what_comes_first_is_told(void **state)
+{
+    struct bench *bench = bench_of(state);
+    const struct layout layout = {.promised = ENTRIES, .bad_line = 40};
+    size_t length, count = 0;
+    char *text = text_write(&layout, &length), *bytes = NULL;
+    gzip_append(&bytes, &count, text, length);
+    for (size_t w = 0; w < 3; w++) {
+        assert_status(bench->context, team_resize(bench->context, workers[w]), FESCUE_OK);
+        bytes_refused(bench, bytes, count - 1000, NULL, "line 40: 'x' was found, the number of a column was expected");
+    }
+    free(bytes), free(text);
+}
+
+/* All cells of the array form but for holes, against the coordinate form; symmetric ones too. */
+static void arrays_keep_their_places(void **state)
+{
+    struct bench *bench = bench_of(state);
+    enum { SIDE = 400 };
+    static const char *const symmetries[] = {"general", "symmetric", "skew-symmetric"};
+    for (size_t s = 0; s < 3; s++) {
+        char *array = NULL, *list = NULL, *cells = NULL;
+        size_t array_length, list_length, cells_length;
+        uint64_t count = 0;
+        FILE *out = open_memstream(&array, &array_length), *side = open_memstream(&cells, &cells_length);
+        fprintf(out, "%%%%MatrixMarket matrix array real %s\n%d %d\n", symmetries[s], SIDE, SIDE);
+        for (uint64_t j = 0; j < SIDE; j++)
+            for (uint64_t i = s == 0 ? 0 : s == 1 ? j : j + 1; i < SIDE; i++) {
+                uint64_t k = j * SIDE + i;
+                if (k % 5 == 2) {
+                    fputs(k % 10 == 2 ? "nan\n" : "-NaN\n", out);
+                    continue;
+                }
+                fprintf(out, "%.7g\n", value_at(k, false));
+                fprintf(side, "%" PRIu64 " %" PRIu64 " %.7g\n", i + 1, j + 1, value_at(k, false));
+                count++;
+            }
+        fclose(out), fclose(side);
+        out = open_memstream(&list, &list_length);
+        fprintf(out, "%%%%MatrixMarket matrix coordinate real %s\n%d %d %" PRIu64 "\n%s", symmetries[s], SIDE, SIDE,
+                count, cells);
+        fclose(out);
+        for (size_t w = 0; w < 3; w++) {
+            assert_status(bench->context, team_resize(bench->context, workers[w]), FESCUE_OK);
+            fescue_table *a = text_read(bench, array, NULL), *b = text_read(bench, list, NULL);
+            tables_equal(a, b);
+            table_destroy(&a), table_destroy(&b);
+        }
+        free(array), free(list), free(cells);
+    }
+}
+
+int main(void)
+{
+    const struct CMUnitTest tests[] = {
+        BENCH_TEST(every_layout_gives_the_same_table),
+        BENCH_TEST(faults_are_told_with_their_line),
+        BENCH_TEST(promises_are_held_to),
+        BENCH_TEST(what_comes_first_is_told),
+        BENCH_TEST(arrays_keep_their_places),
+    };
+    return cmocka_run_group_tests_name("market_chunk", tests, NULL, NULL);
+}
