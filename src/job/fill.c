@@ -91,6 +91,27 @@ static fescue_status fill_fit(fescue_fill *fill, const struct solver *solver)
     return final_fit_run(fill->context, &request, &fill->fit);
 }
 
+static fescue_status fill_judge(fescue_fill *fill, const struct solver *solver)
+{
+    const struct final_fit *fit = &fill->fit;
+    bool has_order = fill->time.along != TIME_NONE || fill->shape.shape == FESCUE_HOLDOUT_GAPS;
+    double deviation = fit->result.rmse * fit->scale;
+    struct judge_request request = {.cells = &fill->table->cells,
+                                    .options = &fill->options,
+                                    .choice = &fill->choice,
+                                    .solver = solver,
+                                    .model = &fit->model,
+                                    .shape = &fill->shape,
+                                    .order = has_order ? &fill->order : NULL,
+                                    .noise = deviation * deviation,
+                                    .is_exact = fit->is_exact || fill->choice.noiseless};
+    if (fill->options.time_limit > 0)
+        request.deadline = fill->wall + fill->options.time_limit;
+    if (fit->result.stop == STOP_CANCELLED)
+        request.deadline = fill->wall; /* no time is left */
+    return judge_run(fill->context, &request, &fill->judgement);
+}
+
 static bool is_small(const struct cells *cells)
 {
     return (uint64_t)cells->rows * cells->columns <= FESCUE_DENSE_MOST;
@@ -112,7 +133,8 @@ static void run_view(fescue_fill *fill)
     run->start = fill->fit.start;
     run->scale = fill->fit.scale;
     run->determined = &fill->determined;
-    run->halfwidth = fill->choice.halfwidth;
+    run->judgement = &fill->judgement;
+    run->shape = &fill->shape;
     run->writes_filled = is_auto ? is_dense : (write & WRITE_FILLED) != 0;
     run->writes_cells = is_auto ? is_dense : (write & WRITE_CELLS) != 0;
     run->writes_factors = is_auto || (write & WRITE_FACTORS) != 0;
@@ -129,6 +151,7 @@ static fescue_status fill_run(fescue_fill *fill)
     TRY(fill_choose(fill, &request));
     TRY(fill_fit(fill, request.solver));
     low_rank_free(context, &fill->choice.start);
+    TRY(fill_judge(fill, request.solver));
     TRY(determined_create(context, &fill->table->cells, fill->fit.model.low_rank.rank, fill->fit.model.offsets.kind,
                           &fill->determined));
     run_view(fill);
@@ -240,6 +263,7 @@ void fescue_fill_destroy(fescue_fill **pointer)
         return;
     fescue_context *context = fill->context;
     determined_free(context, &fill->determined);
+    judgement_free(context, &fill->judgement);
     final_fit_free(context, &fill->fit);
     choice_free(context, &fill->choice);
     time_axis_free(context, &fill->time);

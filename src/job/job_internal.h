@@ -60,6 +60,7 @@ struct fescue_fill {
     struct choice choice;
     bool is_search_cut; /* the time limit ended the choosing */
     struct final_fit fit;
+    struct judgement judgement; /* borrows the fit's model */
     struct determined determined;
     double wall, cpu; /* clocks when it began */
     struct run run;   /* the view that writers get */

@@ -136,12 +136,32 @@ static void shape_line(struct summary *summary)
 {
     static const char *const shapes[] = {[FESCUE_HOLDOUT_AUTO] = "",
                                          [FESCUE_HOLDOUT_CELLS] = "scattered cells",
-                                         [FESCUE_HOLDOUT_GAPS] = "scattered cells and gaps like the table's own",
+                                         [FESCUE_HOLDOUT_GAPS] = "scattered cells, and gaps like the table's own",
                                          [FESCUE_HOLDOUT_ROWS] = "all but a few cells of some rows",
                                          [FESCUE_HOLDOUT_COLUMNS] = "all but a few cells of some columns"};
     const struct hole_shape *shape = &summary->fill->shape;
-    text_add(&summary->text, "           hidden: %s (%s)\n", shapes[shape->shape],
+    text_add(&summary->text, "           hidden were %s: %s\n", shapes[shape->shape],
              shape->why[0] != '\0' ? shape->why : "as asked");
+}
+
+/* The error over the unseen cells, and where the figure comes from. */
+static void judged_lines(struct summary *summary)
+{
+    const struct judgement *judgement = &summary->fill->judgement;
+    struct text *text = &summary->text;
+    char rmse[32], mae[32], low[32], high[32], scattered[32], hidden[WORDS_SIZE];
+    text_add(text, "error      RMSE %s", real_to_words(judgement->rmse, 4, rmse));
+    if (isfinite(judgement->rmse_low))
+        text_add(text, " (%s to %s)", real_to_words(judgement->rmse_low, 4, low),
+                 real_to_words(judgement->rmse_high, 4, high));
+    text_add(text, ", MAE %s expected over the unseen cells\n", real_to_words(judgement->mae, 4, mae));
+    text_add(text, "           from %s in %u folds%s\n", count_words(judgement->judged, "hidden cell", hidden),
+             judgement->scattered_folds + judgement->shaped_folds,
+             judgement->is_cut ? " (the time limit left others out)" : "");
+    shape_line(summary);
+    if (judgement->shaped_folds > 0 && judgement->scattered_folds > 0)
+        text_add(text, "           scattered cells alone would have said RMSE %s\n",
+                 real_to_words(judgement->scattered_rmse, 4, scattered));
 }
 
 static void error_lines(struct summary *summary)
@@ -149,33 +169,43 @@ static void error_lines(struct summary *summary)
     const struct choice *choice = &summary->fill->choice;
     const struct errors *errors = &choice->errors, *alone = &choice->offsets_errors;
     struct text *text = &summary->text;
-    char rmse[32], mae[32], alone_rmse[32], alone_mae[32], hidden[WORDS_SIZE];
+    char rmse[32], mae[32], alone_rmse[32], hidden[WORDS_SIZE];
     if (errors->count == 0) {
         text_add(text, "error      not measured: no cells were hidden\n");
         return;
     }
-    text_add(text, "error      RMSE %s, MAE %s on %s\n", real_to_words(errors->rmse, 4, rmse),
-             real_to_words(errors->mae, 4, mae), count_words(errors->count, "hidden cell", hidden));
+    if (summary->fill->judgement.is_judged) {
+        judged_lines(summary);
+    } else {
+        text_add(text, "error      RMSE %s, MAE %s on %s\n", real_to_words(errors->rmse, 4, rmse),
+                 real_to_words(errors->mae, 4, mae), count_words(errors->count, "hidden cell", hidden));
+        shape_line(summary);
+    }
     if (choice->rank > 0)
-        text_add(text, "           %s: RMSE %s, MAE %s\n", alone_text(choice->offsets),
-                 real_to_words(alone->rmse, 4, alone_rmse), real_to_words(alone->mae, 4, alone_mae));
+        text_add(text, "           while choosing, on %s: RMSE %s, %s %s\n",
+                 count_words(errors->count, "hidden cell", hidden), real_to_words(errors->rmse, 4, rmse),
+                 alone_text(choice->offsets), real_to_words(alone->rmse, 4, alone_rmse));
     if (choice->noiseless)
         text_add(text, "           the hidden cells are met to rounding: the table is free of noise\n");
     if (summary->fill->fit.is_exact)
         text_add(text, "           of the fits that were tried; the one on all cells is exact, so this is too much\n");
     if (choice->own_holdout)
         text_add(text, "           no cells were to be kept hidden; a tenth was, for the choice alone\n");
-    shape_line(summary);
 }
 
 static void interval_line(struct summary *summary)
 {
-    char level[32], halfwidth[32];
-    double h = summary->run->halfwidth;
+    const struct judgement *judgement = &summary->fill->judgement;
+    char level[32], halfwidth[32], low[32], high[32];
     real_to_words(100 * summary->fill->options.interval, 3, level);
-    if (isfinite(h))
+    if (judgement->is_judged && isfinite(judgement->quantile))
+        text_add(&summary->text,
+                 "interval   of every cell its own, to hold %s %% of readings: +- %s, %s to %s for most\n", level,
+                 real_to_words(judgement->halfwidth_median, 4, halfwidth),
+                 real_to_words(judgement->halfwidth_low, 4, low), real_to_words(judgement->halfwidth_high, 4, high));
+    else if (!judgement->is_judged && isfinite(judgement->halfwidth))
         text_add(&summary->text, "interval   estimate +- %s holds %s %% of such cells\n",
-                 real_to_words(h, 4, halfwidth), level);
+                 real_to_words(judgement->halfwidth, 4, halfwidth), level);
     else if (summary->fill->choice.errors.count > 0)
         text_add(&summary->text, "interval   none: too few hidden cells for %s %%\n", level);
     else

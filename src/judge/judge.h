@@ -111,6 +111,78 @@ fescue_status choose_run(fescue_context *context, const struct holdout *holdout,
                          struct choice *choice);
 void choice_free(fescue_context *context, struct choice *choice);
 
+/* ---- how wrong: intervals and the announced error -----------------------------------------------------------------
+ */
+
+/* How far an estimate leans on few cells: lev_ij, the variance of the estimate of cell (i, j) over that of the noise,
+   from the system that row i solves and the one that column j does (leverage.c). */
+struct tracks;
+struct leverage {
+    size_t size; /* of a system: rank + 1 */
+    bool has_rows, has_columns;
+    const struct model *model;
+    uint32_t rows, columns;
+    double *row_inverse, *column_inverse; /* packed, one a line; NULL where there are too many: counts stand in */
+    uint32_t *row_count, *column_count;   /* seen cells of each line */
+};
+/* noise: a variance in the table's units. lambda: the ridge on the components in cells, or NAN where each is shrunk by
+   its own size. Borrows the model. */
+fescue_status leverage_create(fescue_context *context, const struct cells *cells, const struct model *model,
+                              double noise, double lambda, struct leverage *leverage);
+double leverage_at(const struct leverage *leverage, uint32_t row, uint32_t column);
+void leverage_free(fescue_context *context, struct leverage *leverage);
+
+/* The expected squared error: a sum of terms with weights that are not negative (variance.c). */
+enum { VARIANCE_TERMS = 8, JUDGE_LEVELS = 4, JUDGE_BINS = 7 };
+struct variance {
+    double weight[VARIANCE_TERMS];
+    double least; /* never below */
+    bool has_distance;
+};
+
+/* What is said of the errors of a fill. */
+struct judgement {
+    bool is_judged; /* folds were judged; else, when something was hidden, all rests on choosing's own hidden cells */
+    bool is_cut;    /* a time limit left folds out */
+    bool is_warm;   /* the folds began from the fit on all cells */
+    uint32_t scattered_folds, shaped_folds;
+    uint64_t judged, missing;                     /* errors collected; unseen cells that the announced error is over */
+    double rmse, mae;                             /* announced, over the unseen cells; NAN when nothing is known */
+    double rmse_low, rmse_high;                   /* its band of nine tenths, by resampling sensors; NAN: none */
+    double scattered_rmse;                        /* what scattered cells alone say */
+    double shaped_rmse;                           /* cells hidden in the shape of the holes; NAN when there are none */
+    double by_leverage, by_distance, by_variance; /* the estimates that rmse is made of, each an RMSE */
+    double level, quantile;                       /* of the scores |error| / sqrt(variance); infinite: too few */
+    double level_quantiles[JUDGE_LEVELS];         /* at judge_levels */
+    double halfwidth;                             /* where folds were not judged: of every cell, or NAN */
+    double halfwidth_low, halfwidth_median, halfwidth_high; /* over unseen cells: a tenth is below, half, nine tenths */
+    struct variance variance;
+    struct leverage leverage; /* of the fit on all cells */
+    struct tracks *tracks;    /* owned; NULL: nothing is known of distances */
+    double *scale;            /* owned; of each sensor, in standard deviations */
+    bool sensors_are_rows;
+};
+extern const double judge_levels[JUDGE_LEVELS]; /* 0.5, 0.8, 0.9, 0.95 */
+
+struct judge_request {
+    const struct cells *cells;
+    const struct fescue_options *options;
+    const struct choice *choice;
+    const struct solver *solver;
+    const struct model *model; /* the fit on all cells; must outlive the judgement */
+    const struct hole_shape *shape;
+    const struct line_order *order; /* NULL: nothing is known of any order */
+    double noise;                   /* learnt by that fit, a variance in the table's units */
+    bool is_exact;                  /* the fit on all cells meets them to rounding */
+    double deadline;                /* clock_wall() second, or 0 */
+};
+/* Hides cells in folds, learns the choice again without them, and says how wrong the unseen cells are. Asked to stop,
+   it ends with what it has. */
+fescue_status judge_run(fescue_context *context, const struct judge_request *request, struct judgement *judgement);
+void judgement_free(fescue_context *context, struct judgement *judgement);
+/* Half-width of the interval of an unseen cell at the level asked for; NAN or infinite where there is none. */
+double judgement_halfwidth(const struct judgement *judgement, uint32_t row, uint32_t column);
+
 /* Whether the pattern of observed cells determines the low-rank part of an unseen cell at this rank (determined.c). One
    that it does not rests on the offsets when their kind has an effect for its row or column and that line has cells;
    else on the mean. */

@@ -193,8 +193,6 @@ static struct record choice_record(const struct run *run)
     real_set(&record, "rmse_of_best_offsets_alone", choice->errors.count > 0 ? choice->offsets_only_rank0_rmse : NAN);
     flag_set(&record, "hidden_for_choice_only", choice->own_holdout);
     flag_set(&record, "noiseless", choice->noiseless);
-    real_set(&record, "interval_level", run->options->interval);
-    real_set(&record, "interval_halfwidth", run->halfwidth);
     for (uint64_t k = 0; k < choice->path_count; k++) {
         struct record step = step_record(run, &choice->path[k]);
         path.failed = path.failed || step.failed;
@@ -202,6 +200,67 @@ static struct record choice_record(const struct run *run)
             path.failed = true;
     }
     record_set(&record, "path", path);
+    return record;
+}
+
+static struct record variance_record(const struct run *run)
+{
+    static const char *const terms[VARIANCE_TERMS] = {"constant",     "leverage",  "distance_3", "distance_30",
+                                                      "distance_300", "one_sided", "dark_3",     "dark_30"};
+    const struct variance *variance = &run->judgement->variance;
+    struct record record = record_open(run->context);
+    for (size_t k = 0; k < VARIANCE_TERMS; k++)
+        real_set(&record, terms[k], variance->weight[k]);
+    real_set(&record, "least", variance->least);
+    return record;
+}
+
+static struct record interval_record(const struct run *run)
+{
+    const struct judgement *judgement = run->judgement;
+    struct record record = record_open(run->context), quantiles = record_open(run->context);
+    char level[32];
+    real_set(&record, "level", judgement->level);
+    real_set(&record, "quantile", judgement->is_judged ? judgement->quantile : NAN);
+    for (size_t k = 0; k < JUDGE_LEVELS; k++) {
+        real_to_text(judge_levels[k], FESCUE_DOUBLE, level);
+        real_set(&quantiles, level, judgement->is_judged ? judgement->level_quantiles[k] : NAN);
+    }
+    record_set(&record, "quantiles", quantiles);
+    real_set(&record, "halfwidth", judgement->is_judged ? NAN : judgement->halfwidth);
+    real_set(&record, "halfwidth_low", judgement->halfwidth_low);
+    real_set(&record, "halfwidth_median", judgement->halfwidth_median);
+    real_set(&record, "halfwidth_high", judgement->halfwidth_high);
+    return record;
+}
+
+static struct record judgement_record(const struct run *run)
+{
+    static const char *const shapes[] = {[FESCUE_HOLDOUT_AUTO] = "auto",
+                                         [FESCUE_HOLDOUT_CELLS] = "cells",
+                                         [FESCUE_HOLDOUT_GAPS] = "gaps",
+                                         [FESCUE_HOLDOUT_ROWS] = "rows",
+                                         [FESCUE_HOLDOUT_COLUMNS] = "columns"};
+    const struct judgement *judgement = run->judgement;
+    struct record record = record_open(run->context);
+    text_set(&record, "holdout_shape", shapes[run->shape->shape]);
+    text_set(&record, "why", run->shape->why[0] != '\0' ? run->shape->why : "as asked");
+    count_set(&record, "scattered_folds", judgement->scattered_folds);
+    count_set(&record, "shaped_folds", judgement->shaped_folds);
+    flag_set(&record, "warm", judgement->is_warm);
+    flag_set(&record, "cut", judgement->is_cut);
+    count_set(&record, "judged", judgement->judged);
+    real_set(&record, "rmse", judgement->rmse);
+    real_set(&record, "rmse_low", judgement->rmse_low);
+    real_set(&record, "rmse_high", judgement->rmse_high);
+    real_set(&record, "mae", judgement->mae);
+    real_set(&record, "rmse_scattered", judgement->scattered_rmse);
+    real_set(&record, "rmse_shaped", judgement->shaped_rmse);
+    real_set(&record, "rmse_by_leverage", judgement->by_leverage);
+    real_set(&record, "rmse_by_distance", judgement->by_distance);
+    real_set(&record, "rmse_by_variance", judgement->by_variance);
+    record_set(&record, "interval", interval_record(run));
+    record_set(&record, "variance", variance_record(run));
     return record;
 }
 
@@ -304,6 +363,7 @@ static struct record run_record(const struct run *run)
     record_set(&record, "time", time_record(run));
     record_set(&record, "options", options_record(run));
     record_set(&record, "choice", choice_record(run));
+    record_set(&record, "judgement", judgement_record(run));
     record_set(&record, "fit", fit_record(run));
     record_set(&record, "model", model_record(run));
     record_set(&record, "unseen", unseen_record(run));

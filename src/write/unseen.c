@@ -77,9 +77,10 @@ struct unseen run_unseen(const struct run *run, uint32_t row, uint32_t column)
     enum basis basis = determined_basis(run->determined, row, column);
     struct unseen unseen = {estimate_at(run, row, column, basis), NAN, NAN, basis, false};
     unseen.is_blank = run->options->strict && !is_determined(run, row, column, basis);
-    if (isfinite(run->halfwidth)) {
-        unseen.lower = fmax(unseen.estimate - run->halfwidth, bounds->low);
-        unseen.upper = fmin(unseen.estimate + run->halfwidth, bounds->high);
+    double halfwidth = judgement_halfwidth(run->judgement, row, column);
+    if (isfinite(halfwidth)) {
+        unseen.lower = fmax(unseen.estimate - halfwidth, bounds->low);
+        unseen.upper = fmin(unseen.estimate + halfwidth, bounds->high);
     }
     return unseen;
 }

@@ -31,7 +31,8 @@ struct run {
     const char *start;              /* of that fit: "grown", "spectral" or "none" */
     double scale;                   /* of its problem: units of the table in one of the fit's */
     const struct determined *determined;
-    double halfwidth;                          /* NAN or infinite: intervals are left blank */
+    const struct judgement *judgement;
+    const struct hole_shape *shape;            /* of what was hidden */
     double started, seconds_wall, seconds_cpu; /* started: Unix time */
     uint64_t hidden;                           /* cells held out while choosing */
     uint64_t filled[3];                        /* unseen cells by basis, those left blank among them */

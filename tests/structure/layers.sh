@@ -12,7 +12,7 @@
 # options, which fescue.h shows to everyone.
 . "$(dirname "$0")/common"
 
-readers='basis_word determined_basis fescue_option_table fescue_option_text'
+readers='basis_word determined_basis judgement_halfwidth judge_levels fescue_option_table fescue_option_text'
 order='base table numeric manifold model solve judge write job cli'
 
 # Lines "FILE FOLDER INCLUDED".

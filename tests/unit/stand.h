@@ -23,6 +23,8 @@ struct stand {
     struct time_axis time; /* none */
     struct model model;
     struct choice choice;
+    struct judgement judgement;
+    struct hole_shape shape;
     struct solve_result fit;
     struct determined determined;
     struct run run;
@@ -71,6 +73,8 @@ static void stand_run(struct stand *stand, enum fescue_offsets kind, size_t rank
                   determined_create(stand->context, cells, rank, FESCUE_OFFSETS_MEAN, &stand->determined), FESCUE_OK);
     stand->determined.offsets = kind;
     stand->choice = (struct choice){.offsets = kind, .rank = (uint32_t)rank, .ridge = 0.5, .halfwidth = 1.25};
+    stand->judgement = (struct judgement){.halfwidth = 1.25, .level = 0.9};
+    stand->shape = (struct hole_shape){.shape = FESCUE_HOLDOUT_CELLS, .why = "holes lie here and there"};
     stand->fit = (struct solve_result){.solver = "grassmann-cg", .stop = STOP_GRADIENT};
     stand->run = (struct run){.context = stand->context,
                               .table = stand->table,
@@ -82,7 +86,8 @@ static void stand_run(struct stand *stand, enum fescue_offsets kind, size_t rank
                               .start = "grown",
                               .scale = 2,
                               .determined = &stand->determined,
-                              .halfwidth = 1.25,
+                              .judgement = &stand->judgement,
+                              .shape = &stand->shape,
                               .writes_filled = true,
                               .writes_cells = true,
                               .writes_factors = true};

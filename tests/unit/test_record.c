@@ -108,8 +108,8 @@ static void every_documented_field_is_there(void **state)
     real_check(record, "choice/rmse_of_best_offsets_alone", 2.5);
     assert_true(json_is_false(value_at(record, "choice/noiseless")));
     assert_true(json_is_false(value_at(record, "choice/hidden_for_choice_only")));
-    real_check(record, "choice/interval_level", 0.9);
-    real_check(record, "choice/interval_halfwidth", 1.25);
+    real_check(record, "judgement/interval/level", 0.9);
+    real_check(record, "judgement/interval/halfwidth", 1.25);
     assert_int_equal(json_array_size(value_at(record, "choice/path")), 2);
     json_t *step = json_array_get(value_at(record, "choice/path"), 0);
     text_check(step, "offsets", "none");
@@ -144,13 +144,13 @@ static void every_documented_field_is_there(void **state)
 static void what_is_not_finite_is_null(void **state)
 {
     static const char *const nulls[] = {"choice/errors/rmse", "choice/errors/mae",
-                                        "choice/errors_of_offsets_alone/rmse", "choice/interval_halfwidth",
+                                        "choice/errors_of_offsets_alone/rmse", "judgement/interval/halfwidth",
                                         "choice/rmse_of_best_offsets_alone"};
     const double halfwidths[] = {NAN, INFINITY};
     for (size_t h = 0; h < 2; h++) {
         struct stand stand;
         stand_make(state, &stand, example);
-        stand.run.halfwidth = halfwidths[h];
+        stand.judgement.halfwidth = halfwidths[h];
         stand_write(&stand, write_record);
         json_t *record = record_read(&stand);
         for (size_t k = 0; k < sizeof nulls / sizeof nulls[0]; k++)

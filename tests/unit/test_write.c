@@ -163,13 +163,13 @@ static void cells_are_blank_without_interval_or_by_strict(void **state)
     stand.options.strict = true;
     stand_read(&stand, "x,a,b,c\nr,1,2,\ns,3,,\nt,,,5\n");
     stand_run(&stand, FESCUE_OFFSETS_BOTH, 1);
-    stand.run.halfwidth = INFINITY;
+    stand.judgement.halfwidth = INFINITY;
     stand_write(&stand, write_cells);
     file_check(
         stand_path(&stand, "cells.csv", path),
         "row,column,estimate,lower,upper,basis,row_support,column_support\n"
         "r,c,,,,offsets,2,1\ns,b,21,,,low-rank,1,1\ns,c,,,,offsets,1,1\nt,a,,,,offsets,1,2\nt,b,,,,offsets,1,1\n");
-    stand.run.halfwidth = NAN;
+    stand.judgement.halfwidth = NAN;
     assert_true(isnan(run_unseen(&stand.run, 1, 1).lower) && isnan(run_unseen(&stand.run, 1, 1).upper));
     stand_end(&stand);
 }
@@ -182,7 +182,7 @@ static void cells_without_labels_are_numbered(void **state)
     stand_begin(state, &stand);
     stand_read(&stand, "%%MatrixMarket matrix coordinate real general\n2 2 2\n1 1 1\n1 2 1\n");
     stand_run(&stand, FESCUE_OFFSETS_ROWS, 0);
-    stand.run.halfwidth = NAN;
+    stand.judgement.halfwidth = NAN;
     stand_write(&stand, write_cells);
     file_check(stand_path(&stand, "cells.csv", path),
                "row,column,estimate,lower,upper,basis,row_support,column_support\n"

@@ -1,0 +1,218 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The error over the cells that are really missing, from the errors on cells that were hidden, which as a rule are
+ * easier. Three estimates of the mean squared error, over the unseen cells M and the pooled hidden ones H:
+ *
+ *     by leverage    mean_M (1 + lev) * mean_H e^2 / (1 + lev)
+ *     by distance    the same in strata of the distance d to the nearest seen cell of the sensor, weighted as the
+ *                    unseen cells fall into them; a stratum of fewer than ten hidden cells takes its neighbour's
+ *     by variance    mean_M V s^2 * mean_H e^2 / (V s^2), over the cells hidden in the shape of the holes where there
+ *                    are enough (variance.c: V and the sensor's scale s)
+ *
+ * What is announced is the root of the mean of the last two where distances are known, else of the first and the last.
+ *
+ * The band: whole sensors are drawn with replacement, their hidden and their unseen cells with them, and everything is
+ * computed again (Efron, Tibshirani 1993, "An Introduction to the Bootstrap", chapter 8, for data in clusters); the 5 %
+ * and 95 % points of `DRAWS` draws. Sums are kept a sensor and stratum, so a draw costs no pass over cells.
+ */
+#include "judge/judgement.h"
+
+#include <math.h>
+#include <string.h>
+
+enum { DRAWS = 400, STRATUM_LEAST = 10, SHAPED_LEAST = 200 };
+static const double edges[JUDGE_BINS - 1] = {1.5, 2.5, 5.5, 15.5, 50.5, 150.5};
+
+/* Of one sensor and stratum. */
+struct sums {
+    double hidden, by_leverage;         /* cells, sum of e^2 / (1 + lev) */
+    double shaped, by_variance;         /* of those that count for the variance: cells, sum of e^2 / (V s^2) */
+    double missing, leverage, variance; /* cells, sum of 1 + lev, of V s^2 */
+};
+struct announcing {
+    const struct judgement *judgement;
+    bool by_distance, by_shape;
+    uint32_t sensors;
+    struct sums *sums; /* sensors x JUDGE_BINS */
+};
+
+static size_t stratum_of(const struct announcing *announcing, double distance)
+{
+    size_t b = 0;
+    while (announcing->by_distance && b + 1 < JUDGE_BINS && distance > edges[b])
+        b++;
+    return b;
+}
+
+static void sums_fill(struct announcing *announcing, const struct judged *cells, bool is_hidden)
+{
+    const struct judgement *judgement = announcing->judgement;
+    for (uint64_t c = 0; c < cells->count; c++) {
+        uint32_t sensor = judgement->sensors_are_rows ? cells->row[c] : cells->column[c];
+        struct sums *sums = &announcing->sums[(size_t)sensor * JUDGE_BINS + stratum_of(announcing, cells->distance[c])];
+        double v = variance_at(&judgement->variance, cells->leverage[c], cells->distance[c], cells->marks[c]);
+        v *= judgement->scale[sensor] * judgement->scale[sensor];
+        if (!is_hidden) {
+            sums->missing++;
+            sums->leverage += 1 + cells->leverage[c];
+            sums->variance += v;
+            continue;
+        }
+        sums->hidden++;
+        sums->by_leverage += cells->square[c] / (1 + cells->leverage[c]);
+        if (announcing->by_shape && !(cells->marks[c] & JUDGED_SHAPED))
+            continue;
+        sums->shaped++;
+        sums->by_variance += cells->square[c] / v;
+    }
+}
+
+/* All sensors, each as often as drawn (NULL: once). */
+static void sums_add(const struct announcing *announcing, const uint32_t *drawn, struct sums total[JUDGE_BINS])
+{
+    memset(total, 0, JUDGE_BINS * sizeof *total);
+    for (uint32_t s = 0; s < announcing->sensors; s++) {
+        double times = drawn == NULL ? 1 : drawn[s];
+        for (size_t b = 0; times > 0 && b < JUDGE_BINS; b++) {
+            const struct sums *sums = &announcing->sums[(size_t)s * JUDGE_BINS + b];
+            total[b].hidden += times * sums->hidden;
+            total[b].by_leverage += times * sums->by_leverage;
+            total[b].shaped += times * sums->shaped;
+            total[b].by_variance += times * sums->by_variance;
+            total[b].missing += times * sums->missing;
+            total[b].leverage += times * sums->leverage;
+            total[b].variance += times * sums->variance;
+        }
+    }
+}
+
+/* Mean of e^2 / (1 + lev) in a stratum; where it holds too few, in the nearest ones with it. */
+static double stratum_mean(const struct sums total[JUDGE_BINS], size_t b)
+{
+    double hidden = total[b].hidden, sum = total[b].by_leverage;
+    for (size_t away = 1; hidden < STRATUM_LEAST && away < JUDGE_BINS; away++) {
+        if (b >= away) {
+            hidden += total[b - away].hidden;
+            sum += total[b - away].by_leverage;
+        }
+        if (b + away < JUDGE_BINS) {
+            hidden += total[b + away].hidden;
+            sum += total[b + away].by_leverage;
+        }
+    }
+    return hidden > 0 ? sum / hidden : NAN;
+}
+
+/* Mean squared errors. */
+struct estimates {
+    double by_leverage, by_distance, by_variance, all;
+};
+
+static struct estimates estimate(const struct announcing *announcing, const struct sums total[JUDGE_BINS])
+{
+    struct sums sum = {0};
+    double strata = 0;
+    for (size_t b = 0; b < JUDGE_BINS; b++) {
+        sum.hidden += total[b].hidden;
+        sum.by_leverage += total[b].by_leverage;
+        sum.shaped += total[b].shaped;
+        sum.by_variance += total[b].by_variance;
+        sum.missing += total[b].missing;
+        sum.leverage += total[b].leverage;
+        sum.variance += total[b].variance;
+        if (total[b].missing > 0)
+            strata += total[b].leverage * stratum_mean(total, b);
+    }
+    struct estimates found;
+    found.by_leverage = sum.leverage / sum.missing * sum.by_leverage / sum.hidden;
+    found.by_distance = strata / sum.missing;
+    found.by_variance = sum.variance / sum.missing * sum.by_variance / sum.shaped;
+    found.all = ((announcing->by_distance ? found.by_distance : found.by_leverage) + found.by_variance) / 2;
+    return found;
+}
+
+static double draw_at(const void *draws, uint64_t k)
+{
+    return ((const double *)draws)[k];
+}
+
+static fescue_status band_find(fescue_context *context, const struct announcing *announcing, uint64_t seed,
+                               struct judgement *judgement)
+{
+    fescue_status status;
+    uint32_t *drawn = NULL, sensors = announcing->sensors;
+    double draws[DRAWS];
+    uint64_t count = 0;
+    struct sums total[JUDGE_BINS];
+    struct random_stream random = random_open(seed, RANDOM_FOLD, 0x90000000u);
+    TRY(TAKE(context, sensors, &drawn));
+    for (int d = 0; d < DRAWS; d++) {
+        memset(drawn, 0, sensors * sizeof *drawn);
+        for (uint32_t s = 0; s < sensors; s++)
+            drawn[random_below(&random, sensors)]++;
+        sums_add(announcing, drawn, total);
+        double all = estimate(announcing, total).all;
+        if (isfinite(all))
+            draws[count++] = sqrt(all);
+    }
+    if (count >= DRAWS / 2 && sensors > 1) {
+        judgement->rmse_low = order_pick(draw_at, draws, count, count / 20);
+        judgement->rmse_high = order_pick(draw_at, draws, count, count - 1 - count / 20);
+    }
+done:
+    GIVE(context, &drawn);
+    return status;
+}
+
+static double rmse_where(const struct judged *pool, bool is_shaped)
+{
+    double sum = 0, count = 0;
+    for (uint64_t c = 0; c < pool->count; c++)
+        if (((pool->marks[c] & JUDGED_SHAPED) != 0) == is_shaped) {
+            sum += pool->square[c];
+            count++;
+        }
+    return count > 0 ? sqrt(sum / count) : NAN;
+}
+
+/* Mean |error| over the unseen cells: sizes over their standard deviations, times those. */
+static double mae_find(const struct judgement *judgement, const struct judged *pool, const struct judged *missing)
+{
+    double size = 0, deviation = 0;
+    for (uint64_t c = 0; c < pool->count; c++)
+        size += sqrt(pool->square[c] /
+                     variance_at(&judgement->variance, pool->leverage[c], pool->distance[c], pool->marks[c]));
+    for (uint64_t c = 0; c < missing->count; c++)
+        deviation +=
+            sqrt(variance_at(&judgement->variance, missing->leverage[c], missing->distance[c], missing->marks[c]));
+    return size / (double)pool->count * deviation / (double)missing->count;
+}
+
+fescue_status announce(fescue_context *context, const struct judged *pool, const struct judged *missing,
+                       const struct judge_request *request, struct judgement *judgement)
+{
+    fescue_status status;
+    uint64_t shaped = 0;
+    struct announcing announcing = {.judgement = judgement, .by_distance = judgement->variance.has_distance};
+    struct sums total[JUDGE_BINS];
+    for (uint64_t c = 0; c < pool->count; c++)
+        shaped += (pool->marks[c] & JUDGED_SHAPED) != 0;
+    announcing.by_shape = shaped >= SHAPED_LEAST;
+    announcing.sensors = judgement->sensors_are_rows ? request->cells->rows : request->cells->columns;
+    TRY(TAKE(context, (size_t)announcing.sensors * JUDGE_BINS, &announcing.sums));
+    judgement->scattered_rmse = rmse_where(pool, false);
+    judgement->shaped_rmse = rmse_where(pool, true);
+    sums_fill(&announcing, pool, true);
+    sums_fill(&announcing, missing, false);
+    sums_add(&announcing, NULL, total);
+    struct estimates found = estimate(&announcing, total);
+    judgement->by_leverage = sqrt(found.by_leverage);
+    judgement->by_distance = announcing.by_distance ? sqrt(found.by_distance) : NAN;
+    judgement->by_variance = sqrt(found.by_variance);
+    judgement->rmse = sqrt(found.all);
+    judgement->mae = mae_find(judgement, pool, missing);
+    TRY(band_find(context, &announcing, (uint64_t)request->options->seed, judgement));
+done:
+    GIVE(context, &announcing.sums);
+    return status;
+}

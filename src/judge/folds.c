@@ -1,0 +1,132 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Folds: part of the seen cells is hidden, the choice is learnt again from the rest, and the errors on what was hidden
+ * are collected with what they depend on, as it was in that fold: leverage from the fold's own systems, distance to the
+ * nearest cell that the fold still saw.
+ *
+ * Scattered folds come first, then folds in the shape of the holes. Left to the program, there are as many scattered
+ * ones as bring `cells_wanted` errors together (the relative error of an RMSE over as many normal ones is one in a
+ * hundred) and five shaped ones, since stretches of one sensor count for little more than one cell each. Both are cut
+ * where learning again takes long; where even a few are too many, the errors that choosing left have to do.
+ *
+ * The folds run one after another and their fits are parallel inside, so the bits do not depend on the number of
+ * workers.
+ */
+#include "judge/judgement.h"
+
+#include <math.h>
+
+static const double cells_wanted = 5000;
+enum { FOLDS_MOST = 5, COLD_ROUNDS = 100, WARM_ROUNDS = 25, START_SIZE = 23 };
+/* Multiplications for all folds: some tens of seconds of one processor. */
+static const double work_most = 6e10, cold_most = 1e10;
+
+/* Multiplications of one fold. */
+static double fold_work(const struct judge_request *request, bool is_warm)
+{
+    const struct cells *cells = request->cells;
+    bool is_learnt = request->choice->is_learnt;
+    double size = is_learnt && !is_warm ? START_SIZE : (double)request->model->low_rank.rank + 3;
+    double lines = (double)cells->rows + (double)cells->columns, rounds = is_warm ? WARM_ROUNDS : COLD_ROUNDS;
+    double cell = is_learnt ? size * size : 4 * size;
+    return rounds * ((double)cells->count * cell + (is_learnt ? lines * size * size * size / 2 : 0));
+}
+
+static void folds_plan(const struct judge_request *request, struct judgement *judgement)
+{
+    const struct fescue_options *options = request->options;
+    bool is_auto = options->folds == FESCUE_AUTO, is_shaped = request->shape->shape != FESCUE_HOLDOUT_CELLS;
+    double hidden = fmax(1, options->holdout * (double)request->cells->count);
+    double scattered = is_auto ? fmin(FOLDS_MOST, ceil(cells_wanted / hidden)) : (double)options->folds;
+    double shaped = !is_shaped ? 0 : is_auto ? FOLDS_MOST : (double)options->folds;
+    judgement->is_warm = (scattered + shaped) * fold_work(request, false) > cold_most;
+    double affordable = floor(work_most / fold_work(request, judgement->is_warm));
+    if (is_auto && scattered + shaped > affordable) {
+        scattered = fmin(scattered, fmax(affordable >= 1, floor(affordable / (is_shaped ? 3 : 1))));
+        shaped = fmin(shaped, affordable - scattered);
+    }
+    judgement->scattered_folds = (uint32_t)scattered;
+    judgement->shaped_folds = (uint32_t)fmax(0, shaped);
+}
+
+/* The hidden cells and their errors, at the end of the pool. */
+static fescue_status hidden_collect(fescue_context *context, const struct cells *hidden, const struct model *model,
+                                    unsigned marks, struct judged *pool)
+{
+    fescue_status status;
+    double *residuals = NULL;
+    struct errors errors;
+    TRY(judged_grow(context, hidden->count, pool));
+    TRY(TAKE(context, hidden->count, &residuals));
+    TRY(errors_measure(context, hidden, model, residuals, &errors));
+    for (uint32_t row = 0; row < hidden->rows; row++)
+        for (uint64_t k = hidden->by_row.start[row]; k < hidden->by_row.start[row + 1]; k++) {
+            pool->row[pool->count] = row;
+            pool->column[pool->count] = hidden->by_row.across[k];
+            pool->square[pool->count] = residuals[k] * residuals[k];
+            pool->marks[pool->count++] = (uint8_t)marks;
+        }
+done:
+    GIVE(context, &residuals);
+    return status;
+}
+
+static fescue_status fold_judge(fescue_context *context, const struct judge_request *request,
+                                const struct holdout_request *asked, struct judgement *judgement, struct judged *pool)
+{
+    fescue_status status;
+    struct holdout holdout = {0};
+    struct relearnt learnt = {0};
+    struct leverage leverage = {0};
+    struct tracks tracks = {0};
+    uint64_t from = pool->count;
+    unsigned marks = asked->shape == FESCUE_HOLDOUT_CELLS ? 0 : JUDGED_SHAPED;
+    TRY(holdout_cut(context, request->cells, asked, &holdout));
+    TRY(relearn(context, &holdout.kept, request, judgement->is_warm, &learnt));
+    TRY(leverage_create(context, &holdout.kept, &learnt.model, learnt.noise, learnt.lambda, &leverage));
+    struct judged_view view = {&holdout.kept, &leverage, NULL};
+    if (judgement->tracks != NULL) {
+        TRY(tracks_create(context, &holdout.kept, request->order, &tracks));
+        view.tracks = &tracks;
+    }
+    TRY(hidden_collect(context, &holdout.hidden, &learnt.model, marks, pool));
+    judged_measure(context, &view, from, pool);
+done:
+    tracks_free(context, &tracks);
+    leverage_free(context, &leverage);
+    relearnt_free(context, &learnt);
+    holdout_free(context, &holdout);
+    return status;
+}
+
+fescue_status folds_run(fescue_context *context, const struct judge_request *request, struct judgement *judgement,
+                        struct judged *pool)
+{
+    fescue_status status = FESCUE_OK;
+    uint32_t scattered, all;
+    folds_plan(request, judgement);
+    scattered = judgement->scattered_folds;
+    all = scattered + judgement->shaped_folds;
+    judgement->scattered_folds = judgement->shaped_folds = 0;
+    for (uint32_t f = 0; f < all && status == FESCUE_OK; f++) {
+        bool is_scattered = f < scattered;
+        struct holdout_request asked = {.shape = is_scattered ? FESCUE_HOLDOUT_CELLS : request->shape->shape,
+                                        .share = request->options->holdout,
+                                        .seed = (uint64_t)request->options->seed,
+                                        .fold = f + 1,
+                                        .order = request->order};
+        judgement->is_cut = request->deadline > 0 && clock_wall() >= request->deadline;
+        if (judgement->is_cut)
+            break;
+        status = progress_tell(context, "judging", (double)f / all);
+        if (status == FESCUE_OK)
+            status = fold_judge(context, request, &asked, judgement, pool);
+        judgement->scattered_folds += status == FESCUE_OK && is_scattered;
+        judgement->shaped_folds += status == FESCUE_OK && !is_scattered;
+    }
+    if (status == FESCUE_STOPPED) {
+        judgement->is_cut = true;
+        return FESCUE_OK;
+    }
+    return status;
+}

@@ -1,0 +1,76 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The inside of a judgement: what a fit on part of the cells says of the rest.
+ *
+ *   relearn      the chosen model learnt again from other cells
+ *   leverage     how far an estimate leans on few cells
+ *   judged       a list of cells with what their errors depend on
+ *   folds        hiding, learning again, collecting errors
+ *   variance     the squared error as a function of leverage and distance
+ *   announce     the error over the cells that are really missing, with its band
+ *   judgement    all together, and the interval of a cell
+ */
+#ifndef FESCUE_JUDGE_JUDGEMENT_H
+#define FESCUE_JUDGE_JUDGEMENT_H
+
+#include "judge/tracks.h"
+
+/* ---- learning again ---------------------------------------------------------------------------------------------- */
+
+/* What was learnt, and what shrinks it: noise is a variance in the table's units. */
+struct relearnt {
+    struct model model; /* owned */
+    double noise;
+    double lambda; /* of the ridge on the components, in cells; NAN: learnt, a ridge a component */
+};
+/* The chosen offsets, rank and ridge learnt from `cells`. is_warm: from the model of all cells, whatever it saw; else
+   from nothing. */
+fescue_status relearn(fescue_context *context, const struct cells *cells, const struct judge_request *request,
+                      bool is_warm, struct relearnt *out);
+/* The same two of the model of all cells. */
+fescue_status relearn_all(fescue_context *context, const struct judge_request *request, double *noise, double *lambda);
+void relearnt_free(fescue_context *context, struct relearnt *relearnt);
+
+/* ---- judged cells ------------------------------------------------------------------------------------------------ */
+
+/* Cells and what their errors depend on; square is of the error, 0 where it is not known. */
+struct judged {
+    uint64_t count, capacity;
+    uint32_t *row, *column;
+    double *square, *leverage, *distance;
+    uint8_t *marks;
+};
+enum judged_mark {
+    JUDGED_ONE_SIDED = 1, /* its sensor was not seen before, or not after */
+    JUDGED_DARK = 2,      /* nothing was seen at its place */
+    JUDGED_SHAPED = 4     /* hidden in the shape of the holes; else scattered */
+};
+fescue_status judged_grow(fescue_context *context, uint64_t count, struct judged *judged);
+void judged_free(fescue_context *context, struct judged *judged);
+/* Leverage, distance and marks of the cells from `from` on, as they stand to the cells that were seen. tracks may be
+   NULL: no distance, which is 0 then. */
+struct judged_view {
+    const struct cells *seen;
+    const struct leverage *leverage;
+    const struct tracks *tracks;
+};
+void judged_measure(fescue_context *context, const struct judged_view *view, uint64_t from, struct judged *judged);
+/* The unseen cells, or as many drawn at random where there are very many. */
+fescue_status judged_missing(fescue_context *context, const struct cells *cells, uint64_t seed, struct judged *judged);
+
+/* Hides, learns again and collects, fold by fold. */
+fescue_status folds_run(fescue_context *context, const struct judge_request *request, struct judgement *judgement,
+                        struct judged *pool);
+
+/* ---- variance and error ------------------------------------------------------------------------------------------ */
+
+void variance_fit(const struct judged *pool, bool has_distance, struct variance *variance);
+double variance_at(const struct variance *variance, double leverage, double distance, unsigned marks);
+/* The scale of each sensor's errors, shrunk towards 1. */
+fescue_status scales_fit(fescue_context *context, const struct judged *pool, const struct tracks *tracks,
+                         struct judgement *judgement);
+
+fescue_status announce(fescue_context *context, const struct judged *pool, const struct judged *missing,
+                       const struct judge_request *request, struct judgement *judgement);
+
+#endif

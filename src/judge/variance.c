@@ -1,0 +1,179 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The expected squared error of a cell as a sum of terms with weights that are not negative,
+ *
+ *     V = w_0 + w_1 lev + sum over q of w_q (1 - exp(-(d - 1)/q)) + w_5 [one-sided] + sum over q of w_q [dark] (...)
+ *
+ *     symbol       what it is
+ *     lev          leverage (leverage.c)
+ *     d            steps to the nearest seen cell of the same sensor; q = 3, 30, 300
+ *     one-sided    the sensor was not seen before, or not after
+ *     dark         nothing was seen at the cell's place; q = 3, 30
+ *
+ * fitted to the pooled squared errors y of the folds. The spread of y grows with its mean, so the terms are fitted by
+ * least squares under weights 1/V^2, which V itself gives: four rounds, the first with V constant (iteratively
+ * reweighted least squares; for normal errors the equations of maximum likelihood). A squared error above fifty times
+ * its V is cut to that, 7 standard deviations, so that a few wild cells do not bend the surface; what that takes away
+ * comes back with the quantile of |error| / sqrt(V).
+ *
+ * Weights not below 0: coordinate descent on the normal equations (8 x 8), each step the exact minimum over one weight;
+ * it converges for any such problem (Luo, Tseng 1992, "On the convergence of the coordinate descent method for convex
+ * differentiable minimization").
+ *
+ * The scale of a sensor: with x = y / V (mean 1 over all), r_j its mean over the n_j cells of sensor j, k the kurtosis
+ * within sensors, r_j has variance (k - 1)/n_j by chance alone. What the r_j spread beyond that is tau^2, by moments
+ * (DerSimonian, Laird 1986, "Meta-analysis in clinical trials"), and r_j is shrunk towards 1 by
+ * tau^2 / (tau^2 + (k-1)/n_j). Sensors that began late keep 1: what is missing of them is not like what was seen.
+ *
+ * Sequential, O(cells) a round.
+ */
+#include "judge/judgement.h"
+
+#include <math.h>
+#include <string.h>
+
+enum { ROUNDS = 4, DESCENTS = 400 };
+static const double wild = 50;
+/* V is not believed below this share of the mean squared error: the terms are a summary. */
+static const double least_share = 0.01;
+
+static void terms_set(bool has_distance, double leverage, double distance, unsigned marks, double *term)
+{
+    double beyond = has_distance ? fmax(distance - 1, 0) : 0, dark = has_distance && (marks & JUDGED_DARK) ? 1 : 0;
+    term[0] = 1;
+    term[1] = leverage;
+    term[2] = 1 - exp(-beyond / 3);
+    term[3] = 1 - exp(-beyond / 30);
+    term[4] = 1 - exp(-beyond / 300);
+    term[5] = has_distance && (marks & JUDGED_ONE_SIDED) ? 1 : 0;
+    term[6] = dark * (1 - exp(-(beyond + 1) / 3));
+    term[7] = dark * (1 - exp(-(beyond + 1) / 30));
+}
+
+double variance_at(const struct variance *variance, double leverage, double distance, unsigned marks)
+{
+    double term[VARIANCE_TERMS], sum = 0;
+    terms_set(variance->has_distance, leverage, distance, marks, term);
+    for (size_t k = 0; k < VARIANCE_TERMS; k++)
+        sum += variance->weight[k] * term[k];
+    return fmax(sum, variance->least);
+}
+
+/* min over w >= 0 of w'Gw - 2 b'w, from w as it is. */
+static void weights_descend(double gram[VARIANCE_TERMS][VARIANCE_TERMS], const double *side, double *weight)
+{
+    for (int step = 0; step < DESCENTS; step++)
+        for (size_t k = 0; k < VARIANCE_TERMS; k++) {
+            double rest = side[k];
+            for (size_t l = 0; l < VARIANCE_TERMS; l++)
+                rest -= l == k ? 0 : gram[k][l] * weight[l];
+            weight[k] = gram[k][k] > 0 ? fmax(0, rest / gram[k][k]) : 0;
+        }
+}
+
+static void round_fit(const struct judged *pool, bool is_first, double mean, struct variance *variance)
+{
+    double gram[VARIANCE_TERMS][VARIANCE_TERMS] = {{0}}, side[VARIANCE_TERMS] = {0}, term[VARIANCE_TERMS];
+    for (uint64_t c = 0; c < pool->count; c++) {
+        double fit = is_first ? mean : variance_at(variance, pool->leverage[c], pool->distance[c], pool->marks[c]);
+        double y = fmin(pool->square[c], wild * fit), weight = mean * mean / (fit * fit);
+        terms_set(variance->has_distance, pool->leverage[c], pool->distance[c], pool->marks[c], term);
+        for (size_t k = 0; k < VARIANCE_TERMS; k++) {
+            side[k] += weight * y * term[k];
+            for (size_t l = 0; l < VARIANCE_TERMS; l++)
+                gram[k][l] += weight * term[k] * term[l];
+        }
+    }
+    weights_descend(gram, side, variance->weight);
+}
+
+void variance_fit(const struct judged *pool, bool has_distance, struct variance *variance)
+{
+    double mean = 0;
+    for (uint64_t c = 0; c < pool->count; c++)
+        mean += pool->square[c] / (double)pool->count;
+    *variance = (struct variance){.weight = {mean}, .least = least_share * mean, .has_distance = has_distance};
+    if (!(mean > 0) || !isfinite(mean))
+        return;
+    for (int round = 0; round < ROUNDS; round++)
+        round_fit(pool, round == 0, mean, variance);
+}
+
+/* ---- the scale of a sensor -----------------------------------------------------------------------------------------
+ */
+
+struct spread {
+    double count, sum, square; /* of x */
+};
+
+static void spreads_fill(const struct judged *pool, const struct judgement *judgement, struct spread *spread)
+{
+    static const double cut = 25; /* five standard deviations: one cell does not make a noisy sensor */
+    for (uint64_t c = 0; c < pool->count; c++) {
+        double v = variance_at(&judgement->variance, pool->leverage[c], pool->distance[c], pool->marks[c]);
+        double x = fmin(pool->square[c] / v, cut);
+        struct spread *of = &spread[judgement->sensors_are_rows ? pool->row[c] : pool->column[c]];
+        of->count++;
+        of->sum += x;
+        of->square += x * x;
+    }
+}
+
+/* The spread tau^2 of the true r_j; *noise is k - 1, *mean that of all x. */
+static double spread_between(const struct spread *spread, uint32_t sensors, double *mean, double *noise)
+{
+    enum { ENOUGH = 10 };
+    double count = 0, sum = 0, within = 0, cells = 0, q = 0, squares = 0, judged = 0;
+    for (uint32_t s = 0; s < sensors; s++) {
+        count += spread[s].count;
+        sum += spread[s].sum;
+        if (spread[s].count < ENOUGH || spread[s].sum <= 0)
+            continue;
+        double r = spread[s].sum / spread[s].count;
+        within += spread[s].square / (r * r);
+        cells += spread[s].count;
+    }
+    *mean = count > 0 ? sum / count : 1;
+    *noise = cells > 0 ? fmax(1, within / cells - 1) : 2;
+    for (uint32_t s = 0; s<sensors && * mean> 0; s++) {
+        if (spread[s].count == 0)
+            continue;
+        double away = spread[s].sum / spread[s].count / *mean - 1;
+        q += spread[s].count * away * away / *noise;
+        squares += spread[s].count * spread[s].count;
+        judged++;
+    }
+    if (judged < 2 || q < judged + 2 * sqrt(2 * judged)) /* two standard errors of chi-square */
+        return 0;
+    return *noise * (q - (judged - 1)) / (count - squares / count);
+}
+
+static bool began_late(const struct tracks *tracks, uint32_t sensor)
+{
+    static const double late = 0.25;
+    uint64_t from = tracks->start[sensor];
+    return from < tracks->start[sensor + 1] && tracks->rank[from] > late * tracks->places;
+}
+
+fescue_status scales_fit(fescue_context *context, const struct judged *pool, const struct tracks *tracks,
+                         struct judgement *judgement)
+{
+    fescue_status status;
+    struct spread *spread = NULL;
+    uint32_t sensors = judgement->sensors_are_rows ? judgement->leverage.rows : judgement->leverage.columns;
+    double mean, noise;
+    TRY(TAKE(context, sensors, &spread));
+    TRY(TAKE(context, sensors, &judgement->scale));
+    spreads_fill(pool, judgement, spread);
+    double between = spread_between(spread, sensors, &mean, &noise);
+    for (uint32_t s = 0; s < sensors; s++) {
+        double scale = 1;
+        bool is_like = between > 0 && spread[s].count > 0 && (tracks == NULL || !began_late(tracks, s));
+        if (is_like)
+            scale += (spread[s].sum / spread[s].count / mean - 1) * between / (between + noise / spread[s].count);
+        judgement->scale[s] = sqrt(scale);
+    }
+done:
+    GIVE(context, &spread);
+    return status;
+}
