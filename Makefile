@@ -5,6 +5,7 @@
 #   make check      every test of the ordinary suite; ends with "N passed, N failed"
 #   make check-long the suites that take longer
 #   make bench      measure, beside the limits of the machine
+#   make bench-recovery   tables recovered from few cells, and with noise: $(BUILD)/recovery.csv
 #   make format     bring all sources into the one layout
 #   make install    PREFIX=/usr/local: program, library, header, manual pages
 
@@ -73,6 +74,9 @@ check-long: all tests
 bench: $(BENCHES)
 	for bench in $(BENCHES); do $$bench || exit; done
 
+bench-recovery: $(BUILD)/tests/bench/bench_recovery
+	$< 20 all $(BUILD)/recovery.csv
+
 format:
 	clang-format -i $(shell git ls-files --cached --others --exclude-standard '*.c' '*.h')
 
@@ -86,6 +90,6 @@ install: all
 clean:
 	rm -rf $(BUILD)
 
-.PHONY: all tests demo check check-long bench format install clean
+.PHONY: all tests demo check check-long bench bench-recovery format install clean
 .SECONDARY:
 -include $(shell find $(BUILD) -name '*.d' 2>/dev/null)

@@ -34,9 +34,9 @@ struct final_request {
 struct final_fit {
     struct model model;         /* owned */
     struct solve_result result; /* owned; its iterations are those of the whole way from its start */
-    const char *start;          /* which start it came from: "grown", "spectral", "learnt", or "none" at rank 0 */
-    double scale;               /* units of the table in one of the fit's */
-    bool is_exact;              /* found by final_exact_run: without ridge, whatever the choice says */
+    const char *start; /* which start it came from: "grown", "spectral", what solve_recover says, or "none" at rank 0 */
+    double scale;      /* units of the table in one of the fit's */
+    bool is_exact;     /* found by final_exact_run: without ridge, whatever the choice says */
 };
 /* Fits all cells with what was chosen. Asked to stop, it ends with what it has: FESCUE_OK and STOP_CANCELLED. */
 fescue_status final_fit_run(fescue_context *context, const struct final_request *request, struct final_fit *fit);

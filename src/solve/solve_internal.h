@@ -124,15 +124,31 @@ void hessian_start(struct hessian *hessian, bool exact);
 /* product = H[d] for a tangent d. Five passes, seven when exact. */
 void hessian_apply(struct hessian *hessian, struct matrix d, struct matrix product);
 
+/* Diagonal blocks of the Hessian, one a line of the shorter side, as its preconditioner (hessian_blocks.c). */
+struct hessian_blocks {
+    struct projection *projection;
+    struct matrix scratch; /* a row a worker */
+    struct matrix core;    /* rank x rank: what all blocks have */
+    double *factors;       /* short x packed_size(rank) */
+};
+void hessian_blocks_reserve(struct arena *arena, const struct field *field, size_t shorter, size_t rank);
+void hessian_blocks_carve(struct arena *arena, struct projection *projection, struct hessian_blocks *blocks);
+/* For the point where the projection, which is to keep its factors, was evaluated last; damping: of the ridge. */
+void hessian_blocks_start(struct hessian_blocks *blocks, struct matrix damping);
+/* z, a tangent, from g. */
+void hessian_blocks_precondition(struct hessian_blocks *blocks, struct matrix g, struct matrix z);
+
 /* One step of a trust region, shared by whatever goes down a projected objective with it. */
 struct trust {
     struct projection *projection;
     struct hessian hessian;
+    struct hessian_blocks blocks;
     struct grassmann_work work;
     struct matrix basis;                      /* where the step began */
     struct matrix step, slope;                /* eta; g + H eta, short x rank */
     struct matrix descent, direction, curved; /* z, d, H d */
     double *metric;                           /* packed factor of W'W */
+    struct matrix gram;                       /* W'W */
     double radius;
     bool slow;                    /* Gauss and Newton's part alone leaves too much of the gradient */
     struct solve_measure measure; /* of where the projection stands; step: |eta| */

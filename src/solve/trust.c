@@ -5,12 +5,14 @@
  *
  *     minimise  m(eta) = <g, eta> + 1/2 <eta, H[eta]>   over tangents with |eta W'|_F <= radius
  *
- * by truncated conjugate gradients (Steihaug 1983; Toint 1981), preconditioned with M = W'W on the right: M is the
- * Hessian of a table seen evenly, up to the share seen, and the region is a ball in its metric, that is in how far the
- * table moves. The inner iteration ends at the boundary, at negative curvature, after `inner_most` products, or when
- * its gradient, r0 at first, has fallen to
+ * by truncated conjugate gradients (Steihaug 1983; Toint 1981), preconditioned with the diagonal blocks of H
+ * (hessian_blocks.c); the region is a ball in the metric of W'W, that is in how far the table moves. The papers take
+ * one operator for both; here they differ, since a line with few cells has little curvature and yet moves the table as
+ * much as any other: the length of eta is then no longer certain to grow from product to product, and the iteration
+ * ends where it first leaves the ball. It also ends at negative curvature, after `inner_most` products, or when its
+ * gradient, measured in the preconditioner, has fallen by the factor
  *
- *     r0 min(accuracy, 10 r0 / |T|)
+ *     min(accuracy, 10 r0 / |T|),    r0 the outer gradient, |T| its norm at the zero matrix
  *
  * (superlinear convergence: the fall asked for grows as the outer gradient shrinks). Then eta is retracted, f
  * evaluated, and with  rho = (f(0) - f(eta) + slack) / (m(0) - m(eta) + slack),  slack what rounding of f may hide
@@ -38,10 +40,12 @@ void trust_reserve(struct arena *arena, const struct field *field, size_t rank)
     const struct cells *target = &field->problem->target;
     size_t shorter = target->rows <= target->columns ? target->rows : target->columns;
     hessian_reserve(arena, field, rank);
+    hessian_blocks_reserve(arena, field, shorter, rank);
     grassmann_reserve(arena, shorter, rank);
     for (int k = 0; k < 6; k++)
         matrix_reserve(arena, shorter, rank);
     arena_reserve(arena, packed_size(rank), sizeof(double));
+    matrix_reserve(arena, rank, rank);
 }
 
 void trust_carve(struct arena *arena, struct projection *projection, struct trust *trust)
@@ -51,10 +55,12 @@ void trust_carve(struct arena *arena, struct projection *projection, struct trus
     struct matrix *const of_short[] = {&trust->basis,   &trust->step,      &trust->slope,
                                        &trust->descent, &trust->direction, &trust->curved};
     hessian_carve(arena, projection, &trust->hessian);
+    hessian_blocks_carve(arena, projection, &trust->blocks);
     trust->work = grassmann_carve(projection->field->problem->context, arena, shorter, rank);
     for (int k = 0; k < 6; k++)
         *of_short[k] = matrix_carve(arena, shorter, rank);
     trust->metric = arena_carve(arena, packed_size(rank), sizeof(double));
+    trust->gram = matrix_carve(arena, rank, rank);
 }
 
 static void point_measure(struct trust *trust, double step)
@@ -82,10 +88,17 @@ void trust_start(struct trust *trust)
         trust_widen(trust);
 }
 
+/* <a, b> in the metric: the inner product of a W' and b W'. */
+static double metric_dot(struct trust *trust, struct matrix a, struct matrix b)
+{
+    matrix_multiply(1, a, true, b, false, 0, trust->projection->core);
+    return matrix_dot(trust->projection->core, trust->gram);
+}
+
 /* Inner products of the inner iteration, in the metric. */
 struct inner {
     double length, along, step; /* <d, d>, <eta, d>, <eta, eta> */
-    double fall;                /* <z, r> */
+    double fall;                /* g.z, z the descent that g gives */
 };
 
 /* How far along d the boundary is. */
@@ -107,14 +120,16 @@ static void step_extend(struct trust *trust, double t)
 static bool model_minimise(struct trust *trust, const struct trust_rules *rules)
 {
     struct projection *p = trust->projection;
-    double start = trust->measure.gradient, norm = p->field->problem->norm;
-    double target = start * fmin(rules->accuracy, norm > 0 ? 10 * start / norm : 1);
-    struct inner inner = {.fall = start * start, .length = start * start};
+    double norm = p->field->problem->norm, gradient = trust->measure.gradient;
+    struct inner inner = {0};
     matrix_zero(trust->step);
     matrix_copy(p->gradient, trust->slope);
-    projection_precondition(trust->metric, trust->slope, trust->descent);
+    hessian_blocks_precondition(&trust->blocks, trust->slope, trust->descent);
+    inner.fall = matrix_dot(trust->slope, trust->descent);
+    double share = fmin(rules->accuracy, norm > 0 ? 10 * gradient / norm : 1), enough = inner.fall * share * share;
     matrix_copy(trust->descent, trust->direction);
     matrix_scale(-1, trust->direction);
+    inner.length = metric_dot(trust, trust->direction, trust->direction);
     for (unsigned k = 0; k < rules->inner_most; k++) {
         hessian_apply(&trust->hessian, trust->direction, trust->curved);
         double bend = matrix_dot(trust->direction, trust->curved), t = inner.fall / bend;
@@ -125,14 +140,14 @@ static bool model_minimise(struct trust *trust, const struct trust_rules *rules)
         }
         step_extend(trust, t);
         inner.step = reach;
-        projection_precondition(trust->metric, trust->slope, trust->descent);
+        hessian_blocks_precondition(&trust->blocks, trust->slope, trust->descent);
         double fall = matrix_dot(trust->slope, trust->descent), beta = fall / inner.fall;
-        if (!(fall > target * target))
+        if (!(fall > enough))
             break;
         matrix_scale(beta, trust->direction);
         matrix_add(-1, trust->descent, trust->direction);
-        inner.along = beta * (inner.along + t * inner.length);
-        inner.length = fall + beta * beta * inner.length;
+        inner.along = metric_dot(trust, trust->step, trust->direction);
+        inner.length = metric_dot(trust, trust->direction, trust->direction);
         inner.fall = fall;
     }
     return false;
@@ -157,6 +172,14 @@ static fescue_status step_judge(struct trust *trust, bool at_boundary, bool *tak
     return FESCUE_OK;
 }
 
+/* What all trials from one point share. */
+static void inner_start(struct trust *trust)
+{
+    struct projection *p = trust->projection;
+    matrix_multiply(1, p->weights, true, p->weights, false, 0, trust->gram);
+    hessian_blocks_start(&trust->blocks, trust->hessian.damping);
+}
+
 fescue_status trust_step(struct trust *trust, const struct trust_rules *rules, bool *moved)
 {
     struct projection *p = trust->projection;
@@ -170,6 +193,8 @@ fescue_status trust_step(struct trust *trust, const struct trust_rules *rules, b
     matrix_copy(p->basis, trust->basis);
     for (int trial = 0; trial < REFUSALS_MOST && !*moved; trial++) {
         hessian_start(&trust->hessian, rules->exact && noise);
+        if (trial == 0)
+            inner_start(trust);
         at_boundary = model_minimise(trust, rules);
         TRY(step_judge(trust, at_boundary, moved));
         if (!*moved) {

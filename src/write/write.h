@@ -28,7 +28,7 @@ struct run {
     const struct model *model;
     const struct choice *choice;
     const struct solve_result *fit; /* of the final fit on all cells */
-    const char *start;              /* of that fit: "grown", "spectral" or "none" */
+    const char *start;              /* of that fit: "grown", "spectral", a strategy of solve_recover, or "none" */
     double scale;                   /* of its problem: units of the table in one of the fit's */
     const struct determined *determined;
     const struct judgement *judgement;
