@@ -180,7 +180,7 @@ void fescue_option_text(const struct fescue_option *option, const void *options,
 
 typedef struct fescue_table fescue_table;
 
-/* Reads options->precision, duplicates, format, threads. Path "-" is standard input. The caller owns *out. */
+/* Reads options->precision, duplicates, format, threads, row_weights, column_weights. Path "-" is standard input. The caller owns *out. */
 fescue_status fescue_table_read(fescue_context *context, const char *path, const struct fescue_options *options,
                                 fescue_table **out);
 /* From numbers in memory, positions from 0, all copied. FESCUE_BAD_DATA: out of range, twice, not finite. */

@@ -27,7 +27,10 @@ fescue_status fescue_table_read(fescue_context *context, const char *path, const
     *out = NULL;
     TRY(job_prepare(context, options));
     TRY(table_read(context, path, &reading, out));
+    TRY(table_weigh(*out, options->row_weights, options->column_weights));
 done:
+    if (status != FESCUE_OK)
+        table_destroy(out);
     return status;
 }
 
@@ -40,7 +43,10 @@ fescue_status fescue_table_from_cells(fescue_context *context, uint32_t rows, ui
     TRY(job_prepare(context, options));
     TRY(table_from_triplets(context, rows, columns, count, row, column, value,
                             (enum fescue_precision)options->precision, out));
+    TRY(table_weigh(*out, options->row_weights, options->column_weights));
 done:
+    if (status != FESCUE_OK)
+        table_destroy(out);
     return status;
 }
 

@@ -63,6 +63,19 @@ done:
     return status;
 }
 
+/* Weights go into the evidence fit; the path of the other solvers takes all cells for alike. */
+static fescue_status weights_consider(const fescue_table *table, const struct fescue_options *options,
+                                      struct choose_request *request)
+{
+    if (table->cells.by_row.weight == NULL)
+        return FESCUE_OK;
+    if (request->way == CHOOSE_PATH || options->ridge != (double)FESCUE_AUTO)
+        return FAIL(table->context, FESCUE_USAGE,
+                    "weights are taken by the evidence fit alone: leave --solver and --ridge at auto");
+    request->way = CHOOSE_LEARN;
+    return FESCUE_OK;
+}
+
 static fescue_status fill_choose(fescue_fill *fill, struct choose_request *request)
 {
     const struct cells *cells = &fill->table->cells;
@@ -148,6 +161,7 @@ static fescue_status fill_run(fescue_fill *fill)
     TRY(time_axis_find(context, fill->table, (enum fescue_time_axis)fill->options.time_axis, &fill->time));
     struct choose_request request = {.options = &fill->options};
     TRY(solver_choose(context, &fill->options, &request));
+    TRY(weights_consider(fill->table, &fill->options, &request));
     TRY(fill_choose(fill, &request));
     TRY(fill_fit(fill, request.solver));
     low_rank_free(context, &fill->choice.start);
@@ -172,6 +186,8 @@ fescue_status fescue_fill_table(const fescue_table *table, const struct fescue_o
     fill->table = table;
     fill->options = *options;
     fill->options.output = NULL;
+    fill->options.row_weights = table->weights.rows; /* what the table was read with */
+    fill->options.column_weights = table->weights.columns;
     fill->wall = clock_wall();
     fill->cpu = clock_cpu();
     fill->run.started = (double)time(NULL);

@@ -38,6 +38,27 @@ static void table_lines(struct summary *summary)
                  count_words(table->duplicates, "cell", seen));
 }
 
+static void weights_line(struct summary *summary)
+{
+    const struct table_weights *weights = &summary->fill->table->weights;
+    struct text *text = &summary->text;
+    const char *between = "";
+    char least[32], most[32];
+    if (weights->most == 0)
+        return;
+    text_add(text, "weights    of ");
+    const char *const whose[] = {weights->of_cells ? "cells" : NULL, weights->rows != NULL ? "rows" : NULL,
+                                 weights->columns != NULL ? "columns" : NULL};
+    for (size_t k = 0; k < sizeof whose / sizeof whose[0]; k++) {
+        if (whose[k] == NULL)
+            continue;
+        text_add(text, "%s%s", between, whose[k]);
+        between = " and ";
+    }
+    text_add(text, ", from %s to %s of the mean; errors below count every cell once\n",
+             real_to_words(weights->least, 3, least), real_to_words(weights->most, 3, most));
+}
+
 static void time_line(struct summary *summary)
 {
     const struct time_axis *time = &summary->fill->time;
@@ -302,6 +323,7 @@ fescue_status fill_summarise(const fescue_fill *fill, bool is_written, char **te
     struct summary summary = {.fill = fill, .run = &fill->run, .text = {.context = fill->context}};
     table_lines(&summary);
     time_line(&summary);
+    weights_line(&summary);
     model_lines(&summary);
     error_lines(&summary);
     interval_line(&summary);

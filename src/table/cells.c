@@ -124,6 +124,64 @@ static void half_keep(const struct cells *from, const uint8_t *keep, struct half
     to->start[half->lines] = at;
 }
 
+/* ---- weights --------------------------------------------------------------------------------------------------- */
+
+/* The columns' weights from those of the rows. */
+static fescue_status weights_transpose(fescue_context *context, struct cells *cells)
+{
+    const struct half *rows = &cells->by_row;
+    struct half *columns = &cells->by_column;
+    uint64_t *next;
+    fescue_status status = TAKE(context, columns->lines, &next);
+    if (status != FESCUE_OK)
+        return status;
+    for (uint32_t j = 0; j < columns->lines; j++)
+        next[j] = columns->start[j];
+    for (uint64_t k = 0; k < cells->count; k++)
+        columns->weight[next[rows->across[k]]++] = rows->weight[k];
+    GIVE(context, &next);
+    return FESCUE_OK;
+}
+
+static fescue_status weights_open(fescue_context *context, struct cells *cells)
+{
+    fescue_status status = FESCUE_OK;
+    assert(!cells->shares_pattern);
+    if (cells->by_row.weight == NULL)
+        TRY(TAKE(context, cells->count, &cells->by_row.weight));
+    if (cells->by_column.weight == NULL)
+        TRY(TAKE(context, cells->count, &cells->by_column.weight));
+done:
+    return status;
+}
+
+fescue_status cells_weigh(fescue_context *context, struct cells *cells, const double *weight)
+{
+    fescue_status status;
+    TRY(weights_open(context, cells));
+    for (uint64_t k = 0; k < cells->count; k++)
+        cells->by_row.weight[k] = (float)weight[k];
+    TRY(weights_transpose(context, cells));
+done:
+    return status;
+}
+
+/* ---- parts of a store ------------------------------------------------------------------------------------------ */
+
+static fescue_status weights_keep(fescue_context *context, const struct cells *from, const uint8_t *keep,
+                                  struct cells *cells)
+{
+    fescue_status status;
+    uint64_t at = 0;
+    TRY(weights_open(context, cells));
+    for (uint64_t k = 0; k < from->count; k++)
+        if (keep[k])
+            cells->by_row.weight[at++] = from->by_row.weight[k];
+    TRY(weights_transpose(context, cells));
+done:
+    return status;
+}
+
 fescue_status cells_select(fescue_context *context, const struct cells *from, const uint8_t *keep, struct cells *cells)
 {
     fescue_status status;
@@ -134,6 +192,8 @@ fescue_status cells_select(fescue_context *context, const struct cells *from, co
     TRY(half_open(context, from->rows, from->columns, cells->count, from->precision, &cells->by_row));
     half_keep(from, keep, &cells->by_row);
     TRY(cells_finish(context, FESCUE_DUPLICATES_REFUSE, true, cells, &merged));
+    if (from->by_row.weight != NULL)
+        TRY(weights_keep(context, from, keep, cells));
 done:
     if (status != FESCUE_OK)
         cells_free(context, cells);

@@ -52,14 +52,19 @@ static struct field comma_replaced(struct field field, char copy[COMMA_NUMBER_MO
     return (struct field){copy, copy + length};
 }
 
-bool is_number(const struct field *field, bool with_comma)
+bool number_read(const struct field *field, bool with_comma, double *value)
 {
     char copy[COMMA_NUMBER_MOST];
-    double value;
     struct field bare = field_trimmed(field);
     if (with_comma)
         bare = comma_replaced(bare, copy);
-    return number_parse(bare.text, bare.end, &value);
+    return number_parse(bare.text, bare.end, value);
+}
+
+bool is_number(const struct field *field, bool with_comma)
+{
+    double value;
+    return number_read(field, with_comma, &value);
 }
 
 /* Learns the decimal sign from a number that has one, or refuses the other one. */
@@ -176,6 +181,8 @@ fescue_status delimited_read(struct stream *stream, const struct table_reading *
     struct delimited_kind kind;
     struct delimited delimited = {.stream = stream, .reading = reading, .table = table};
     pile_open(context, reading, &delimited.pile);
+    pile_open(context, &(const struct table_reading){.precision = FESCUE_DOUBLE}, &delimited.weights);
+    delimited.weights.keeps_texts = delimited.weights.keeps_lines = false;
     TRY(delimited_kind_find(stream, reading->format, &kind));
     delimited.separator = kind.separator;
     delimited.shape = kind.shape;
@@ -186,10 +193,13 @@ fescue_status delimited_read(struct stream *stream, const struct table_reading *
     label_list_finish(context, &delimited.rows, &table->row_labels);
     label_list_finish(context, &delimited.columns, &table->column_labels);
     TRY(pile_build(&delimited.pile, stream, reading->duplicates, table));
+    if (delimited.weight != WEIGHT_NONE)
+        TRY(weights_build(&delimited, table));
 done:
     record_free(context, &delimited.record);
     label_list_free(context, &delimited.rows);
     label_list_free(context, &delimited.columns);
     pile_free(&delimited.pile);
+    pile_free(&delimited.weights);
     return status;
 }

@@ -119,6 +119,7 @@ void half_free(fescue_context *context, struct half *half)
     GIVE(context, &half->start);
     GIVE(context, &half->across);
     GIVE(context, &half->value);
+    GIVE(context, &half->weight);
     GIVE(context, &half->block);
     *half = (struct half){0};
 }

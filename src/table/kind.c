@@ -7,7 +7,9 @@
  * first in this list, since a comma may also be a decimal sign. Where none does, the one that the first record has most
  * of; what is wrong is then found, with its line, when the text is read.
  *
- * Shape. Long text has three fields: row, column, value. Other numbers of fields are wide. Three fields may be either:
+ * Shape. Long text has three fields: row, column, value; or four, with a weight, which are long where the fourth is
+ * called "weight" or "sd", or where there is no header and the second is text in every record. Other numbers of fields
+ * are wide. Three fields may be either:
  *
  *     long   where the second field is text in every record after the first (no hole, no number): as wide text it would
  *            be refused at its first value
@@ -156,14 +158,15 @@ static bool has_point(const struct field *field)
     return memchr(field->text, '.', length) != NULL || memchr(field->text, ',', length) != NULL;
 }
 
-/* Looks at the records of three fields behind the first. */
+/* Looks at the records behind the first that have as many fields as it, three or four. */
 static fescue_status evidence_collect(fescue_context *context, struct sample *sample, struct evidence *evidence)
 {
     fescue_status status = FESCUE_OK;
     struct label_list seen = {0};
+    size_t count = sample->count;
     while (sample_record(sample, false)) {
         const struct field *first = &sample->field[0], *second = &sample->field[1];
-        if (sample->count != 3)
+        if (sample->count != count)
             continue;
         evidence->records++;
         uint32_t position, known = seen.labels.count;
@@ -194,19 +197,34 @@ static fescue_status shape_weigh(const struct stream *stream, const struct evide
     return FESCUE_OK;
 }
 
+/* Four fields: whether the first record says so, or is a cell like all others. */
+static bool has_weights(const struct sample *first, const struct evidence *evidence)
+{
+    bool with_comma = first->separator == ';';
+    bool is_cell = is_number(&first->field[2], with_comma) && is_number(&first->field[3], with_comma) &&
+                   !is_number(&first->field[1], with_comma) && !is_hole(&first->field[1]);
+    return weight_title_kind(&first->field[3]) != WEIGHT_NONE ||
+           (is_cell && evidence->records > 0 && !evidence->second_is_value);
+}
+
 static fescue_status shape_find(const struct stream *stream, struct sample sample, enum table_shape *shape)
 {
     struct evidence evidence = {0};
     sample_record(&sample, true);
+    const struct sample first = sample;
     *shape = SHAPE_WIDE;
-    if (sample.count == 4 && (field_is(&sample.field[3], "weight") || field_is(&sample.field[3], "weights")))
-        *shape = SHAPE_LONG;
-    if (sample.count != 3)
+    if (sample.count != 3 && sample.count != 4)
         return FESCUE_OK;
     evidence.corner_blank = field_is(&sample.field[0], "");
     evidence.value_titled = field_is(&sample.field[2], "value");
     fescue_status status = evidence_collect(stream_context(stream), &sample, &evidence);
-    return status == FESCUE_OK ? shape_weigh(stream, &evidence, shape) : status;
+    if (status != FESCUE_OK)
+        return status;
+    if (first.count == 3)
+        return shape_weigh(stream, &evidence, shape);
+    if (has_weights(&first, &evidence))
+        *shape = SHAPE_LONG;
+    return FESCUE_OK;
 }
 
 fescue_status delimited_kind_find(struct stream *stream, enum fescue_format format, struct delimited_kind *kind)

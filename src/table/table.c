@@ -32,6 +32,8 @@ void table_destroy(fescue_table **out)
     GIVE(context, &table->look.row_title);
     GIVE(context, &table->look.column_title);
     GIVE(context, &table->look.value_title);
+    GIVE(context, &table->weights.rows);
+    GIVE(context, &table->weights.columns);
     labels_free(context, &table->row_labels);
     labels_free(context, &table->column_labels);
     cells_free(context, &table->cells);

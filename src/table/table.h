@@ -26,6 +26,7 @@ struct half {
     uint64_t *start;
     uint32_t *across;
     void *value;
+    float *weight; /* relative precision of each cell, beside its value; NULL: all alike */
     uint32_t *block;
     size_t blocks;
 };
@@ -37,7 +38,7 @@ struct cells {
     uint64_t count;
     enum fescue_precision precision;
     struct half by_row, by_column;
-    bool shares_pattern; /* start, across and block belong to another store: only the values are ours */
+    bool shares_pattern; /* start, across, weight and block belong to another store: only the values are ours */
 };
 
 /* A cell on its way into a store. */
@@ -60,6 +61,8 @@ fescue_status cells_build(fescue_context *context, uint32_t rows, uint32_t colum
 fescue_status cells_select(fescue_context *context, const struct cells *from, const uint8_t *keep, struct cells *cells);
 /* New store that shares `from`'s pattern (which must outlive it) and has values of its own, zeroed. */
 fescue_status cells_alike(fescue_context *context, const struct cells *from, struct cells *cells);
+/* Gives every cell its weight, in row order, positive and finite; those it has are replaced. */
+fescue_status cells_weigh(fescue_context *context, struct cells *cells, const double *weight);
 void cells_free(fescue_context *context, struct cells *cells);
 double cells_value(const struct cells *cells, const struct half *half, uint64_t k); /* half->value[k] as double */
 
@@ -89,6 +92,13 @@ struct table_look {
     char *row_title, *column_title, *value_title; /* long: the header, NULL where there was none; owned */
 };
 
+/* Where the weights of the cells come from; their product is in cells, scaled to mean one. */
+struct table_weights {
+    bool of_cells;        /* a fourth column of long text */
+    char *rows, *columns; /* paths of the files; owned, or NULL */
+    double least, most;   /* of the cells' weights; 0 where there are none */
+};
+
 /* Everything read from one input; immutable. Row order of cells is the key of `texts`. */
 struct fescue_table {
     fescue_context *context; /* borrowed */
@@ -96,6 +106,7 @@ struct fescue_table {
     struct table_look look;
     struct labels row_labels, column_labels;
     struct cells cells;
+    struct table_weights weights;
     struct texts *texts;  /* NULL when not kept (a table too large to be written out dense) */
     uint64_t duplicates;  /* cells that came more than once and were merged */
     uint32_t input_crc32; /* of the bytes as they lie on disk, for the run record */
@@ -117,6 +128,9 @@ struct table_reading { /* how to read; defaults are all zero */
    The caller owns *out: table_destroy. */
 fescue_status table_read(fescue_context *context, const char *path, const struct table_reading *reading,
                          fescue_table **out);
+/* Multiplies the weights of the cells by those of their rows and columns, read from files (weights.c); a path may be
+   NULL. Takes the table before anybody else has it. FESCUE_NO_INPUT, FESCUE_BAD_DATA with one line. */
+fescue_status table_weigh(fescue_table *table, const char *row_path, const char *column_path);
 /* New table from numbers in memory (copied); fails on an index out of range, a duplicate, a value not finite. */
 fescue_status table_from_triplets(fescue_context *context, uint32_t rows, uint32_t columns, uint64_t count,
                                   const uint32_t *row, const uint32_t *column, const double *value,

@@ -323,6 +323,9 @@ struct delimited_kind {
 };
 fescue_status delimited_kind_find(struct stream *stream, enum fescue_format format, struct delimited_kind *kind);
 
+/* What a number that goes with a cell or a line is: its precision relative to others, or its standard deviation. */
+enum weight_kind { WEIGHT_NONE, WEIGHT_PRECISION, WEIGHT_DEVIATION };
+
 /* Everything a reader of delimited text works with. */
 struct delimited {
     struct stream *stream;
@@ -335,8 +338,11 @@ struct delimited {
     struct record record;
     struct pile pile;
     struct label_list rows, columns;
+    enum weight_kind weight; /* what a fourth field is */
+    struct pile weights;     /* of the same cells, in the same order */
 };
-bool is_hole(const struct field *field);                    /* blank, NA, NaN, null, in any case */
+bool is_hole(const struct field *field); /* blank, NA, NaN, null, in any case */
+bool number_read(const struct field *field, bool with_comma, double *value);
 bool is_number(const struct field *field, bool with_comma); /* whether a decimal comma is taken for a point */
 /* Adds the value of a field, unless it is a hole. */
 fescue_status delimited_cell(struct delimited *delimited, uint32_t row, uint32_t column, const struct field *field);
@@ -344,6 +350,18 @@ fescue_status delimited_cell(struct delimited *delimited, uint32_t row, uint32_t
 fescue_status label_check(const struct delimited *delimited, const struct field *field, const char *what);
 /* New text of the corner or of a header, which may be empty but not out of UTF-8. */
 fescue_status title_keep(struct delimited *delimited, const struct field *field, char **title);
+/* What a column is by its title: "weight", "weights" or "sd", in any case; else WEIGHT_NONE. */
+enum weight_kind weight_title_kind(const struct field *title);
+/* The weight that a number in a field is. NULL, or what is wrong with it. */
+const char *weight_parse(enum weight_kind kind, const struct field *field, char separator, double *weight);
+/* weight = the number itself or 1/sd^2; NULL, or what is wrong with it. */
+const char *weight_of(enum weight_kind kind, double number, double *weight);
+/* Adds the weight of the cell that was added last. */
+fescue_status weight_add(struct delimited *delimited, uint32_t row, uint32_t column, const struct field *field);
+/* Weights of all cells of the table, which was built from the same records. */
+fescue_status weights_build(struct delimited *delimited, fescue_table *table);
+/* Gives a table's cells these weights, in row order, scaled to mean one. */
+fescue_status weights_set(fescue_table *table, double *weight);
 fescue_status wide_read(struct delimited *delimited);
 fescue_status long_read(struct delimited *delimited);
 

@@ -6,6 +6,7 @@
  *   program, version, caution
  *   input     path, crc32 and bytes (as on disk), shape, rows, columns, observed, duplicates
  *   time      which side is in time, its step, gaps, equal times; or along none
+ *   weights   whether cells, rows, columns brought their own, and the range of the cells' (mean one)
  *   options   every option that bears on results, as the text that sets it
  *   choice    offsets, rank, ridge (null where the fit learns one a component: then the noise it assumes); hidden
  * cells, errors on them, of offsets alone too; the interval; the path tried fit       solver, start, stop, iterations,
@@ -117,6 +118,18 @@ static struct record input_record(const struct run *run)
     count_set(&input, "observed", table->cells.count);
     count_set(&input, "duplicates", table->duplicates);
     return input;
+}
+
+static struct record weights_record(const struct run *run)
+{
+    const struct table_weights *weights = &run->table->weights;
+    struct record record = record_open(run->context);
+    flag_set(&record, "of_cells", weights->of_cells);
+    flag_set(&record, "of_rows", weights->rows != NULL);
+    flag_set(&record, "of_columns", weights->columns != NULL);
+    real_set(&record, "least", weights->most > 0 ? weights->least : NAN);
+    real_set(&record, "most", weights->most > 0 ? weights->most : NAN);
+    return record;
 }
 
 static struct record time_record(const struct run *run)
@@ -361,6 +374,7 @@ static struct record run_record(const struct run *run)
     text_set(&record, "caution", run_caution);
     record_set(&record, "input", input_record(run));
     record_set(&record, "time", time_record(run));
+    record_set(&record, "weights", weights_record(run));
     record_set(&record, "options", options_record(run));
     record_set(&record, "choice", choice_record(run));
     record_set(&record, "judgement", judgement_record(run));

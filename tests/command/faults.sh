@@ -117,8 +117,7 @@ malformed "line 3: the value 'soon' is not a number; $number" "${long}a,c,soon\n
 malformed 'line 3: 2 fields were found, row, column and value were expected' "${long}a,c\n"
 malformed "line 3: row a, column b was given on line 2 already; --duplicates mean, last or first takes a cell that comes \
 more than once" "${long}a,b,3\n"
-malformed 'line 1: four fields were found, row, column and value were expected; weights of cells are not taken' \
-    'row,column,value,weight\na,b,1,2\n'
+malformed "line 2: the weight '-2' is not positive; a positive number was expected" 'row,column,value,weight\na,b,1,-2\n'
 malformed "line 3: the value '1.500' has a decimal point, but line 2 has a decimal comma" 't;a;b;c\nx;1,5;2;3\ny;1.500;2;3\n'
 malformed "line 2: the value '1e39' is too large for single precision" 't,a,b,c\nx,1,1e39,3\n' --precision single
 

@@ -146,6 +146,10 @@ static void shapes_are_told_apart(void **state)
         {"row,column,Value\n1,7,3\n2,8,4\n", SHAPE_LONG}, /* the header says so */
         {"t,a\n1,7\n1x,8\n", SHAPE_WIDE},                 /* two fields */
         {"t,a,b,c\n1,7,3,x2\n", SHAPE_WIDE},              /* four fields, and then a value that is none */
+        {"t,a,b,c\n1,7,3,2\n", SHAPE_WIDE},               /* four fields */
+        {"u,a,1,1\nv,a,2,1\n", SHAPE_LONG},               /* without a header, the second text everywhere */
+        {"u,8,1,2\nv,9,2,1\n", SHAPE_WIDE},               /* or a number */
+        {"row,item,score,SD\n1,7,3,2\n", SHAPE_LONG},     /* the header says so */
     };
     for (size_t k = 0; k < sizeof cases / sizeof cases[0]; k++) {
         fescue_table *table;
@@ -182,10 +186,7 @@ static void formats_that_do_not_fit_are_refused(void **state)
     text_refused(bench, "a,b\n", &as_long, "line 1: 2 fields were found, row, column and value were expected");
     text_refused(bench, "a,x,1\n\n\nb,y\n", &as_long,
                  "line 4: 2 fields were found, row, column and value were expected");
-    static const char weights[] =
-        "line 1: four fields were found, row, column and value were expected; weights of cells are not taken";
-    text_refused(bench, "a,b,1,2\n", &as_long, weights);
-    text_refused(bench, "row,column,value,Weight\na,b,1,2\n", NULL, weights);
+    text_refused(bench, "a,b,1,2,3\n", &as_long, "line 1: 5 fields were found, row, column and value were expected");
 }
 
 static void bad_lines_are_named(void **state)
