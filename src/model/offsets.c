@@ -2,10 +2,11 @@
  *
  * Mean, row and column effects by ridge-penalised least squares over the seen cells, all in one:
  *
- *     min over m, a, b of   sum (x_ij - m - a_i - b_j)^2 + R |a|^2 + C |b|^2
+ *     min over m, a, b of   sum w_ij (x_ij - m - a_i - b_j)^2 + R |a|^2 + C |b|^2
  *
- * Normal equations, with n the cells of a line, N of the table, T sums of x (here less the plain mean, so that only a
- * correction of it is sought) and K the matrix of sparse_two_way_solve, d_i = n_i + ridge:
+ * with w the weights of the cells, of mean one, or 1 where they have none. Normal equations, with n the weight of a
+ * line (the number of its cells), N of the table, T sums of w x (here less the mean, so that only a correction of it is
+ * sought) and K the matrix of sparse_two_way_solve, d_i = n_i + ridge:
  *
  *     K (a, b) + n m = T,     n'(a, b) + N m = sum of T
  *     K u = n,  K v = T   =>  m = (sum of T - n'v) / (N - n'u),   (a, b) = v - m u
@@ -16,12 +17,13 @@
  *
  * The ridges are ratios of variances, noise over effect, by Henderson's method 3 (Henderson 1953, Biometrics 9; Searle,
  * Casella, McCulloch 1992, "Variance components", section 5.5), which is unbiased for unbalanced tables. With
- * Q(.) the sum of squares left by unpenalised least squares on the effects named, p rows, q columns seen, c connected
- * blocks of the pattern:
+ * Q(.) the weighted sum of squares left by unpenalised least squares on the effects named, p rows, q columns seen, c
+ * connected blocks of the pattern, M the number of cells, and s = sum over columns j of (sum_i w_ij^2) / n_j, which is
+ * q where weights are 1:
  *
- *     E Q(m, a, b)              = (N - p - q + c) noise
- *     E [Q(m, b) - Q(m, a, b)]  = (N - q) var_a + (p - c) noise       (and with a and b exchanged)
- *     E Q(m, a)                 = (N - p) noise                       one effect alone
+ *     E Q(m, a, b)              = (M - p - q + c) noise
+ *     E [Q(m, b) - Q(m, a, b)]  = (N - s) var_a + (p - c) noise       (and with a and b exchanged)
+ *     E Q(m, a)                 = (M - p) noise                       one effect alone
  *     E [Q(m) - Q(m, a)]        = (N - sum n_i^2 / N) var_a + (p - 1) noise
  *
  * An effect whose variance comes out as nothing is switched off: ridge infinite, zeros. No ridge falls below 1e-8, so
@@ -47,6 +49,7 @@ struct side { /* rows or columns */
     const struct half *half;
     size_t seen;                     /* lines with cells */
     double squares;                  /* sum of n_i^2 */
+    double shares;                   /* sum over lines of (sum of w^2) / n_i: the lines seen, where weights are 1 */
     double *number, *total, *effect; /* n_i, T_i, a_i; number and total lie behind those of the other side */
     double ridge;
 };
@@ -56,6 +59,7 @@ struct fit {
     const struct cells *cells;
     double unit, mean; /* x = unit * (mean + t) */
     double sum;        /* of t: rounding, but it keeps the mean exact */
+    double weight;     /* N */
     struct side row, column;
     double *number, *total, *diagonal; /* rows, then columns */
     double *sides, *answers;           /* right-hand sides and solutions of the system, two each */
@@ -77,6 +81,11 @@ struct pass {
 static double cell_at(const struct fit *fit, const struct half *half, uint64_t k)
 {
     return cells_value(fit->cells, half, k) / fit->unit - fit->mean;
+}
+
+static double weight_at(const struct half *half, uint64_t k)
+{
+    return half->weight != NULL ? (double)half->weight[k] : 1;
 }
 
 static void block_pass(void *job, size_t block, size_t worker)
@@ -105,7 +114,7 @@ static double line_total(const struct pass *pass, uint32_t line)
     const struct half *half = pass->side->half;
     double sum = 0;
     for (uint64_t k = half->start[line]; k < half->start[line + 1]; k++)
-        sum += cell_at(pass->fit, half, k);
+        sum += weight_at(half, k) * cell_at(pass->fit, half, k);
     if (pass->total != NULL)
         pass->total[line] = sum;
     return sum;
@@ -119,7 +128,7 @@ static double line_squares(const struct pass *pass, uint32_t line)
         double rest = cell_at(pass->fit, half, k) - row;
         if (pass->column != NULL)
             rest -= pass->column[half->across[k]];
-        sum += rest * rest;
+        sum += weight_at(half, k) * rest * rest;
     }
     return sum;
 }
@@ -158,11 +167,16 @@ static void side_count(struct side *side)
 {
     const struct half *half = side->half;
     side->seen = 0;
-    side->squares = 0;
+    side->squares = side->shares = 0;
     for (uint32_t i = 0; i < half->lines; i++) {
-        double n = (double)(half->start[i + 1] - half->start[i]);
+        double n = 0, squares = 0;
+        for (uint64_t k = half->start[i]; k < half->start[i + 1]; k++) {
+            n += weight_at(half, k);
+            squares += weight_at(half, k) * weight_at(half, k);
+        }
         side->number[i] = n;
         side->squares += n * n;
+        side->shares += n > 0 ? squares / n : 0;
         side->seen += n > 0;
     }
 }
@@ -173,15 +187,24 @@ static void side_total(const struct fit *fit, const struct side *side)
     pass_run(&pass);
 }
 
+static double weight_sum(const struct fit *fit)
+{
+    double sum = 0;
+    for (uint32_t i = 0; i < fit->row.half->lines; i++)
+        sum += fit->row.number[i];
+    return sum;
+}
+
 /* Unit, mean, counts, totals. */
 static void fit_measure(struct fit *fit)
 {
     struct pass pass = {.fit = fit, .side = &fit->row, .line = line_total};
     fit->unit = unit_find(fit);
-    fit->mean = pass_run(&pass) / (double)fit->cells->count;
-    fit->sum = pass_run(&pass);
     side_count(&fit->row);
     side_count(&fit->column);
+    fit->weight = weight_sum(fit);
+    fit->mean = pass_run(&pass) / fit->weight;
+    fit->sum = pass_run(&pass);
     side_total(fit, &fit->row);
     side_total(fit, &fit->column);
 }
@@ -240,7 +263,7 @@ static double side_fit(const struct fit *fit, const struct side *side, double ri
         sum += weight * side->total[i];
         weights += weight * side->number[i];
     }
-    double mean = weights > 0 && isfinite(ridge) ? sum / weights : fit->sum / (double)fit->cells->count;
+    double mean = weights > 0 && isfinite(ridge) ? sum / weights : fit->sum / fit->weight;
     for (uint32_t i = 0; i < side->half->lines; i++) {
         double n = side->number[i];
         side->effect[i] = n > 0 ? (side->total[i] - n * mean) / (n + ridge) : 0;
@@ -253,7 +276,7 @@ static fescue_status both_fit(const struct fit *fit, double *mean)
 {
     size_t rows = fit->cells->rows, size = rows + fit->cells->columns;
     double *v = fit->answers, *u = v + size;
-    double nu = 0, nv = 0, seen = (double)fit->cells->count;
+    double nu = 0, nv = 0, seen = fit->weight;
     fescue_status status = FESCUE_OK;
     diagonal_make(fit, fit->row.ridge, fit->column.ridge);
     memcpy(fit->sides, fit->total, size * sizeof *fit->sides);
@@ -323,7 +346,8 @@ static double side_ridge(const struct fit *fit, const struct side *side)
     double rest = side == &fit->row ? squares_left(fit, side->effect, NULL) : squares_left(fit, NULL, side->effect);
     if (seen <= lines)
         return 1;
-    return ridge_of(all - rest, seen - side->squares / seen, lines - 1, rest / (seen - lines), whole);
+    double freedom = fit->weight - side->squares / fit->weight;
+    return ridge_of(all - rest, freedom, lines - 1, rest / (seen - lines), whole);
 }
 
 static fescue_status both_ridges(struct fit *fit)
@@ -342,8 +366,8 @@ static fescue_status both_ridges(struct fit *fit)
     diagonal_make(fit, ridge_least, ridge_least);
     TRY(sparse_two_way_solve(fit->context, fit->cells, fit->diagonal, 1, fit->total, effects));
     double rest = squares_left(fit, effects, effects + fit->cells->rows), noise = rest / freedom;
-    fit->row.ridge = ridge_of(column_rest - rest, seen - q, p - c, noise, whole);
-    fit->column.ridge = ridge_of(row_rest - rest, seen - p, q - c, noise, whole);
+    fit->row.ridge = ridge_of(column_rest - rest, fit->weight - fit->column.shares, p - c, noise, whole);
+    fit->column.ridge = ridge_of(row_rest - rest, fit->weight - fit->row.shares, q - c, noise, whole);
 done:
     return status;
 }
@@ -410,7 +434,7 @@ static fescue_status fit_run(struct fit *fit, struct offsets *offsets)
     double mean = 0; /* what is to be added to fit->mean */
     fescue_status status = FESCUE_OK;
     fit_measure(fit);
-    mean = fit->sum / (double)fit->cells->count;
+    mean = fit->sum / fit->weight;
     if (offsets->kind == FESCUE_OFFSETS_BOTH)
         TRY(both_run(fit, &mean));
     else if (offsets->kind == FESCUE_OFFSETS_ROWS)

@@ -5,9 +5,10 @@
  * Each position j of a half brings the second moment M_j = E[g_j g_j'] of d regressors g_j, one of which is the
  * constant 1. It is kept as a packed lower triangle, row by row (packed.c), so d(d+1)/2 numbers, padded. Row `one` of
  * the triangle, that of the constant, holds the mean E[g_j] itself: a position needs nothing but its packed moment. For
- * line i with seen positions j, values z_ij and a weight c_j a position the gather gives
+ * line i with seen positions j, values z_ij and a weight c_ij, that of the position times that of the cell, the gather
+ * gives
  *
- *     S = sum_j c_j M_j        t = sum_j c_j z_ij E[g_j]        q = sum_j c_j z_ij^2
+ *     S = sum_j c_ij M_j        t = sum_j c_ij z_ij E[g_j]        q = sum_j c_ij z_ij^2
  *
  * from which the posterior of the line, and the expected squared error of its cells, q - 2 h't + <E[hh'], S>, follow
  * without another pass over the cells.
@@ -69,7 +70,8 @@ static uint64_t stretch_take(const struct gather *gather, uint64_t k, uint64_t e
     double sum[2] = {0};
     for (; count < most && across[count] < behind; count++) {
         uint32_t position = across[count];
-        double weight = moments->weight != NULL ? moments->weight[position] : 1;
+        double weight = (moments->weight != NULL ? moments->weight[position] : 1) *
+                        (half->weight != NULL ? (double)half->weight[k + count] : 1);
         double z = gather->precision == FESCUE_SINGLE ? (double)((const float *)half->value)[k + count]
                                                       : ((const double *)half->value)[k + count];
         stretch->offset[count] = position * moments->stride;

@@ -169,7 +169,8 @@ void moments_gather(const struct moments *moments, const struct half *half, enum
 /* ---- sparse symmetric positive definite systems, through CHOLMOD ------------------------------------------------- */
 
 /* Solves (diag(d) + [0 B; B' 0]) y = rhs for `count` right-hand sides, where d has rows + columns entries and B is the
-   rows x columns matrix with the cells' pattern and unit values: the normal equations of two-way effects. rhs and
+   rows x columns matrix with the cells' pattern and weights, or unit values where they have none: the normal equations
+   of two-way effects. rhs and
    solution hold count vectors of rows + columns numbers and do not overlap. Direct by CHOLMOD; by conjugate gradients
    to 1e-12 where the factor would be far larger than the data (see the file). The same bits for any number of workers.
    FESCUE_NO_MEMORY; FESCUE_DEFECT when the matrix is not positive definite. */

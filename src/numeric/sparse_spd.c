@@ -3,7 +3,8 @@
  * The normal equations of two-way effects,
  *
  *     [ D_r  B  ] [ y_r ]   [ g_r ]
- *     [ B'  D_c ] [ y_c ] = [ g_c ]        B_ij = 1 where cell (i, j) was seen, D diagonal, positive definite
+ *     [ B'  D_c ] [ y_c ] = [ g_c ]        B_ij: the weight of cell (i, j) where it was seen, 1 where
+                                    cells have none; D diagonal, positive definite
  *
  * First way, direct: CHOLMOD (Chen, Davis, Hager, Rajamanickam 2008, "Algorithm 887", ACM TOMS 35), 64-bit integers,
  * supernodal or simplicial as it picks. Up to 1e5 cells in the order of approximate minimum degree. Beyond, finding
@@ -78,7 +79,7 @@ static void lower_fill(const struct two_way *system, cholmod_sparse *matrix)
             continue;
         for (uint64_t k = half->start[i]; k < half->start[i + 1]; k++) {
             index[at] = (int64_t)(rows + half->across[k]);
-            value[at++] = 1;
+            value[at++] = half->weight != NULL ? (double)half->weight[k] : 1;
         }
     }
     start[rows + columns] = at;
@@ -165,6 +166,12 @@ struct gather {
     double *to;
 };
 
+static double weighted(const struct gather *gather, uint64_t k)
+{
+    double from = gather->from[gather->half->across[k]];
+    return gather->half->weight != NULL ? (double)gather->half->weight[k] * from : from;
+}
+
 /* to_i = (minus_i - sum over the cells of line i of from_j) / divide_i, and the like: see lines_gather. */
 static void block_gather(void *job, size_t block, size_t worker)
 {
@@ -176,9 +183,9 @@ static void block_gather(void *job, size_t block, size_t worker)
         uint64_t k = half->start[line], end = half->start[line + 1];
         for (; k + 4 <= end; k += 4)
             for (size_t c = 0; c < 4; c++)
-                part[c] += gather->from[half->across[k + c]];
+                part[c] += weighted(gather, k + c);
         for (; k < end; k++)
-            part[0] += gather->from[half->across[k]];
+            part[0] += weighted(gather, k);
         double sum = (part[0] + part[2]) + (part[1] + part[3]);
         if (gather->minus != NULL)
             sum = gather->minus[line] * (gather->scale != NULL ? gather->scale[line] : 1) - sum;

@@ -9,6 +9,8 @@
     ridges    Henderson's method 3 as the book has it for any design (Searle, Casella, McCulloch 1992, section 5.5):
               reductions in sums of squares by dense projections, their expectations by traces and ranks
 
+With weights, every row of the systems is multiplied by the root of its weight.
+
 Tables: scattered, skewed, with empty lines, in several blocks, nearly without noise, and one large enough for the
 system to be solved by conjugate gradients. Prints TAP.
 """
@@ -52,31 +54,37 @@ def build_driver(folder):
 class Table:
     """Seen cells in row order, and the matrices that say which effect each has."""
 
-    def __init__(self, rows, columns, seen, value):
+    def __init__(self, rows, columns, seen, value, weight=None):
         self.rows, self.columns = rows, columns
         self.row, self.column = np.nonzero(seen)
         self.count = len(self.row)
         self.value = value[self.row, self.column]
-        cells, ones = np.arange(self.count), np.ones(self.count)
-        self.za = sp.csr_matrix((ones, (cells, self.row)), (self.count, rows))
-        self.zb = sp.csr_matrix((ones, (cells, self.column)), (self.count, columns))
+        self.weight = None if weight is None else weight[self.row, self.column]
+        cells = np.arange(self.count)
+        root = np.ones(self.count) if weight is None else np.sqrt(self.weight)
+        self.one = root[:, None]  # weighted least squares: rows times the root of their weight
+        self.side = root * self.value
+        self.za = sp.csr_matrix((root, (cells, self.row)), (self.count, rows))
+        self.zb = sp.csr_matrix((root, (cells, self.column)), (self.count, columns))
 
     def fit(self, driver, kind):
         data = np.array([self.rows, self.columns, self.count], "u8").tobytes()
         data += self.row.astype("u4").tobytes() + self.column.astype("u4").tobytes() + self.value.astype("f8").tobytes()
-        out = subprocess.run([driver, kind], input=data, stdout=subprocess.PIPE, check=True).stdout
+        if self.weight is not None:
+            data += self.weight.astype("f8").tobytes()
+        out = subprocess.run([driver, kind] + (["weighted"] if self.weight is not None else []), input=data, stdout=subprocess.PIPE, check=True).stdout
         out = np.frombuffer(out)
         return out[:3], out[3:3 + self.rows], out[3 + self.rows:]
 
     def stacked(self, ridges):
         """The ridge system; an infinite ridge leaves its effect out."""
-        parts, penalty = [sp.csr_matrix(np.ones((self.count, 1)))], [0.0]
+        parts, penalty = [sp.csr_matrix(self.one)], [0.0]
         for matrix, ridge in ((self.za, ridges[0]), (self.zb, ridges[1])):
             if np.isfinite(ridge):
                 parts.append(matrix)
                 penalty += [np.sqrt(ridge)] * matrix.shape[1]
         system = sp.vstack([sp.hstack(parts), sp.diags(penalty)]).tocsr()
-        return system, np.concatenate([self.value, np.zeros(len(penalty))])
+        return system, np.concatenate([self.side, np.zeros(len(penalty))])
 
     def spread(self, solution, ridges):
         """(m, a, b) from what stacked gave: zeros for an effect left out."""
@@ -85,7 +93,8 @@ class Table:
         return solution[0], row, column
 
 
-def sow(random, rows, columns, share, spread_row, spread_column, noise, mean=3.0, skew=False, blocks=1):
+def sow(random, rows, columns, share, spread_row, spread_column, noise, mean=3.0, skew=False, blocks=1,
+        weighted=False):
     seen = random.random((rows, columns))
     if skew:
         seen *= 2 * np.sqrt(np.linspace(0.1, 3, rows))[:, None] * np.linspace(0.1, 2, columns)
@@ -93,9 +102,13 @@ def sow(random, rows, columns, share, spread_row, spread_column, noise, mean=3.0
     for block in range(blocks):
         inside = np.arange(rows) * blocks // rows == block
         seen[np.ix_(inside, np.arange(columns) * blocks // columns != block)] = False
+    # Of mean about one, and exact in single precision.
+    weight = np.round(2.0 ** random.integers(-6, 4, (rows, columns)) * 0.51 * 1024) / 1024 if weighted else None
+    if weighted:
+        noise = noise / np.sqrt(weight)
     value = mean + spread_row * random.standard_normal((rows, 1)) + spread_column * random.standard_normal(
         (1, columns)) + noise * random.standard_normal((rows, columns))
-    return Table(rows, columns, seen, value)
+    return Table(rows, columns, seen, value, weight)
 
 
 def squares_left(design, value):
@@ -108,20 +121,20 @@ def squares_left(design, value):
 
 def henderson(table, kind):
     """The two ridges."""
-    one = np.ones((table.count, 1))
+    one = table.one
     za, zb = table.za.toarray(), table.zb.toarray()
     if kind == "rows":
         zb = zb[:, :0]
     if kind == "columns":
         za = za[:, :0]
-    rest, rank, _ = squares_left(np.hstack([one, za, zb]), table.value)
+    rest, rank, _ = squares_left(np.hstack([one, za, zb]), table.side)
     noise = rest / (table.count - rank)
     ridges = []
     for effect, others in ((za, [one, zb]), (zb, [one, za])):
         if effect.shape[1] == 0:
             ridges.append(np.inf)
             continue
-        without, other_rank, basis = squares_left(np.hstack(others), table.value)
+        without, other_rank, basis = squares_left(np.hstack(others), table.side)
         projected = effect - basis @ (basis.T @ effect)
         variance = (without - rest - (rank - other_rank) * noise) / np.sum(projected * effect)
         ridges.append(noise / variance if variance > 0 else np.inf)
@@ -164,6 +177,9 @@ def main():
         "three blocks": sow(random, 60, 45, 0.5, 1.0, 2.0, 0.7, blocks=3),
         "few rows": sow(random, 4, 70, 0.8, 1.0, 0.5, 0.5),
         "little noise": sow(random, 40, 30, 0.5, 1.0, 1.0, 1e-3),
+        "weighted 60 x 40": sow(random, 60, 40, 0.4, 1.5, 0.6, 1.0, weighted=True),
+        "weighted and skewed": sow(random, 90, 30, 0.5, 0.8, 1.5, 1.0, skew=True, weighted=True),
+        "weighted, few rows": sow(random, 4, 70, 0.8, 1.0, 0.5, 0.5, weighted=True),
         "large mean": sow(random, 40, 30, 0.5, 1.0, 1.0, 1.0, mean=1000.0),
     }
     with tempfile.TemporaryDirectory() as folder:
@@ -176,8 +192,9 @@ def main():
                 effects_check(f"{name}, {kind}", table, fitted, kind != "mean")
         for name, shape, share in (("2000 x 1500, a tenth seen", (2000, 1500), 0.1),
                                    ("2600 x 900, nearly full", (2600, 900), 0.95)):
-            table = sow(random, *shape, share, 1.0, 0.5, 1.0)
-            effects_check(name, table, table.fit(driver, "both"), False)
+            for weighted in (False, True):
+                table = sow(random, *shape, share, 1.0, 0.5, 1.0, weighted=weighted)
+                effects_check(name + ", weighted" * weighted, table, table.fit(driver, "both"), False)
     print(f"1..{tests}")
     return failures > 0
 

@@ -2,9 +2,10 @@
  *
  * Lends offsets_fit to tests/reference/offsets.py:
  *
- *     offsets_driver both|rows|columns|mean|none < table > offsets
+ *     offsets_driver both|rows|columns|mean|none [weighted] < table > offsets
  *
- * In: rows, columns, cells as 64-bit integers, then the row of every cell, its column (32-bit), its value (double).
+ * In: rows, columns, cells as 64-bit integers, then the row of every cell, its column (32-bit), its value (double), and
+ * its weight (double) where there are some. Cells come in row order.
  * Out, doubles: mean, ridge of rows, ridge of columns, row effects, column effects. A failure prints its sentence to
  * standard error and ends with its status.
  */
@@ -42,7 +43,7 @@ int main(int count, char **argument)
     fescue_context *context;
     struct cells cells;
     struct offsets offsets;
-    if (count != 2 || fescue_context_create(NULL, &context) != FESCUE_OK)
+    if (count < 2 || count > 3 || fescue_context_create(NULL, &context) != FESCUE_OK)
         return 1;
     uint64_t *size = numbers_get(3, sizeof *size);
     struct triplet_list list = {.count = size[2], .capacity = size[2], .precision = FESCUE_DOUBLE};
@@ -50,6 +51,8 @@ int main(int count, char **argument)
     list.column = numbers_get(size[2], sizeof *list.column);
     list.value = numbers_get(size[2], sizeof(double));
     fescue_status status = cells_build(context, (uint32_t)size[0], (uint32_t)size[1], &list, &cells);
+    if (status == FESCUE_OK && count == 3)
+        status = cells_weigh(context, &cells, numbers_get(size[2], sizeof(double)));
     if (status == FESCUE_OK)
         status = offsets_fit(context, &cells, kind_of(argument[1]), &offsets);
     if (status != FESCUE_OK) {

@@ -165,6 +165,44 @@ static void unequal_noise_is_learnt(void **state)
     cells_free(context, &noisy);
 }
 
+/* Noise of a cell from 0.05 to 5, in no order: a fit that is told the precisions comes near the one of a table whose
+   cells all have the same precision on the whole, and leaves the one that is not told far behind. The noise it learns
+   is that of a cell of weight one. */
+static void weights_of_cells_are_used(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = {120, 60, 2, 0.6, 0, FESCUE_DOUBLE, 18};
+    struct cells clean, noisy;
+    struct triplet_list list = {.precision = FESCUE_DOUBLE};
+    sow_cells(context, &sowing, &clean);
+    double *weight, mean = 0;
+    assert_status(context, TAKE(context, clean.count, &weight), FESCUE_OK);
+    for (uint32_t i = 0; i < 120; i++)
+        for (uint64_t k = clean.by_row.start[i]; k < clean.by_row.start[i + 1]; k++) {
+            struct random_stream stream = random_open(19, RANDOM_TEST, (uint32_t)k);
+            double sigma = 0.05 * pow(100, random_uniform(&stream));
+            double x = cells_value(&clean, &clean.by_row, k) + sigma * random_normal(&stream);
+            weight[k] = 1 / (sigma * sigma);
+            mean += weight[k] / (double)clean.count;
+            assert_status(context, triplets_append(context, &list, i, clean.by_row.across[k], x), FESCUE_OK);
+        }
+    assert_status(context, cells_build(context, 120, 60, &list, &noisy), FESCUE_OK);
+    struct evidence_request request = request_of(6, FESCUE_OFFSETS_BOTH);
+    struct evidence_result blind = learn(context, &noisy, &request);
+    for (uint64_t k = 0; k < clean.count; k++)
+        weight[k] /= mean;
+    assert_status(context, cells_weigh(context, &noisy, weight), FESCUE_OK);
+    struct evidence_result told = learn(context, &noisy, &request);
+    assert_true(error_of(&told, &sowing) < 0.2 * error_of(&blind, &sowing));
+    assert_close(told.noise, 1 / sqrt(mean), 0.03 / sqrt(mean));
+    evidence_result_free(context, &blind);
+    evidence_result_free(context, &told);
+    triplets_free(context, &list);
+    GIVE(context, &weight);
+    cells_free(context, &clean);
+    cells_free(context, &noisy);
+}
+
 static void same_bits_for_any_number_of_workers(void **state)
 {
     fescue_context *context = bench_of(state)->context;
@@ -273,6 +311,7 @@ int main(void)
         BENCH_TEST(few_cells_near_the_oracle),
         BENCH_TEST(units_and_orientation_do_not_matter),
         BENCH_TEST(unequal_noise_is_learnt),
+        BENCH_TEST(weights_of_cells_are_used),
         BENCH_TEST(same_bits_for_any_number_of_workers),
         BENCH_TEST(rounds_allocate_nothing),
         BENCH_TEST(failing_memory_leaks_nothing),

@@ -37,8 +37,15 @@ struct gather_case {
     enum fescue_precision precision;
     double seen; /* of the cells: lines that see few positions go through them alone, others together */
     size_t d, one;
-    bool weighted;
+    bool weighted, cells_weighted;
 };
+
+/* Of the position times that of the cell. */
+static double weight_of(const struct moments *moments, const struct half *half, uint64_t k)
+{
+    return (moments->weight != NULL ? moments->weight[half->across[k]] : 1) *
+           (half->weight != NULL ? (double)half->weight[k] : 1);
+}
 
 /* sum over the cells of a line of weight * value * entry (a, b) of the moment */
 static double plain_sum(const struct cells *cells, const struct moments *moments, size_t line, size_t a, size_t b,
@@ -48,7 +55,7 @@ static double plain_sum(const struct cells *cells, const struct moments *moments
     double sum = 0;
     for (uint64_t k = half->start[line]; k < half->start[line + 1]; k++) {
         uint32_t j = half->across[k];
-        sum += (moments->weight != NULL ? moments->weight[j] : 1) * (valued ? cells_value(cells, half, k) : 1) *
+        sum += weight_of(moments, half, k) * (valued ? cells_value(cells, half, k) : 1) *
                entry(moments->data + j * moments->stride, a, b);
     }
     return sum;
@@ -62,7 +69,7 @@ static void line_check(const struct cells *cells, const struct moments *moments,
     double square = 0;
     for (uint64_t k = half->start[line]; k < half->start[line + 1]; k++) {
         double z = cells_value(cells, half, k);
-        square += (moments->weight != NULL ? moments->weight[half->across[k]] : 1) * z * z;
+        square += weight_of(moments, half, k) * z * z;
     }
     assert_close(sum->square[lane], square, 1e-13 * (1 + square));
     for (size_t a = 0; a < d; a++) {
@@ -72,6 +79,16 @@ static void line_check(const struct cells *cells, const struct moments *moments,
             assert_close(sum->second[(packed_size(a) + b) * BATCH_LANES + lane],
                          plain_sum(cells, moments, line, a, b, false), 1e-12);
     }
+}
+
+static void cells_draw_weights(fescue_context *context, struct cells *cells)
+{
+    double *weight;
+    assert_status(context, TAKE(context, cells->count, &weight), FESCUE_OK);
+    for (uint64_t k = 0; k < cells->count; k++)
+        weight[k] = 0.1 + random_uniform_at(2, RANDOM_TEST, 0, k);
+    assert_status(context, cells_weigh(context, cells, weight), FESCUE_OK);
+    GIVE(context, &weight);
 }
 
 static void gather_check(fescue_context *context, const struct gather_case *at)
@@ -92,6 +109,8 @@ static void gather_check(fescue_context *context, const struct gather_case *at)
         weight[j] = 0.1 + random_uniform(&stream);
     }
     moments.weight = at->weighted ? weight : NULL;
+    if (at->cells_weighted)
+        cells_draw_weights(context, &cells);
     struct moments_batch sum = moments_batch_carve(work, at->d);
     for (size_t line = 0; line < ROWS; line++) {
         if (line % BATCH_LANES == 0)
@@ -116,8 +135,9 @@ static void sums_are_those_of_plain_loops(void **state)
         for (size_t k = 0; k < COUNT(sizes); k++)
             for (size_t s = 0; s < COUNT(seen); s++) {
                 size_t d = sizes[k];
-                gather_check(context, &(struct gather_case){FESCUE_DOUBLE, seen[s], d, d - 2, s % 2 == 0});
-                gather_check(context, &(struct gather_case){FESCUE_SINGLE, seen[s], d, k % 2 == 0 ? 0 : d - 1, s > 1});
+                gather_check(context, &(struct gather_case){FESCUE_DOUBLE, seen[s], d, d - 2, s % 2 == 0, k % 2 == 1});
+                gather_check(context, &(struct gather_case){FESCUE_SINGLE, seen[s], d, k % 2 == 0 ? 0 : d - 1, s > 1,
+                                                            k % 3 == 1});
             }
     }
     unsetenv("FESCUE_KERNEL");

@@ -1,0 +1,100 @@
+#!/bin/sh
+# SPDX-License-Identifier: MIT
+#
+# What a table brings beside its values: a time axis, and weights of cells, rows and columns. What is said of them, what
+# the record keeps, what weights are good for, and requests that cannot be.
+. "$(dirname "$0")/library"
+
+holds() { # FILE EXPRESSION, of the record r: one test
+    check "$2" "$PYTHON" -c 'import json,sys; r = json.load(open(sys.argv[1])); sys.exit(not eval(sys.argv[2]))' "$1" "$2"
+}
+
+# ---- time -------------------------------------------------------------------------------------------------------------
+"$PYTHON" - <<'END'
+import numpy as np
+random = np.random.default_rng(5)
+hours = [k for k in range(90) if k not in (20, 21, 60)]
+def table(name, labels):
+    with open(name, "w") as file:
+        file.write("time,a,b,c,d\n")
+        for k, label in enumerate(labels):
+            cells = ["%.2f" % (np.sin(hours[k] / 9) * (1 + j) + 0.1 * random.standard_normal()) for j in range(4)]
+            cells[k % 4] = ""
+            file.write(label + "," + ",".join(cells) + "\n")
+table("clock.csv", ["2024-05-%02dT%02d:00Z" % (1 + h // 24, h % 24) for h in hours])
+table("torn.csv", ["2024-05-%02d %02d:00" % (1 + h // 24, h % 24) if h != 50 else "then" for h in hours])
+table("plain.csv", ["line %d" % h for h in hours])
+END
+try 0 fill clock.csv -o clock
+check "the summary says that rows are times" grep -qx 'time       rows are times, step 1 h, 2 gaps in the clock' err
+holds clock/run.json 'r["time"]["along"] == "rows" and r["time"]["step_seconds"] == 3600 and r["time"]["gaps"] == 2'
+holds clock/run.json 'r["time"]["start_unix_seconds"] == 1714521600 and r["time"]["in_order"] is True'
+try 0 survey clock.csv
+check "the survey says it too" grep -qx 'The rows are times, step 1 h, 2 gaps in the clock.' out
+try 0 fill clock.csv --time-axis none -o clock
+denied "not with --time-axis none" grep -q '^time ' err
+holds clock/run.json 'r["time"] == {"along": "none"} and r["options"]["time-axis"] == "none"'
+try 0 fill torn.csv -o torn
+check "a label that is no time is named" \
+    grep -qx "time       rows are not taken for times: 'then' (row 49) is none" err
+try 65 fill plain.csv --time-axis rows -o plain
+says "plain.csv: --time-axis rows: the label 'line 0' of row 1 is neither a time as ISO 8601 writes it nor a number"
+check "and nothing was written" nothing_in plain
+try 64 fill plain.csv --time-axis diagonal
+
+# ---- weights ----------------------------------------------------------------------------------------------------------
+"$PYTHON" - <<'END'
+import numpy as np
+random = np.random.default_rng(6)
+m, n = 150, 30
+truth = random.standard_normal((m, 2)) @ random.standard_normal((2, n))
+sd_row, sd_cell = 0.1 * 10 ** random.random(m), 10 ** random.random((m, n))
+value = truth + sd_row[:, None] * sd_cell * random.standard_normal((m, n))
+seen = random.random((m, n)) < 0.6
+np.save("truth.npy", truth)
+with open("cells.csv", "w") as cells, open("bare.csv", "w") as bare, open("rows.csv", "w") as rows:
+    cells.write("well,day,level,sd\n")
+    bare.write("well,day,level\n")
+    rows.write("well;sd\n")
+    for i in range(m):
+        rows.write("w%d;%.6g\n" % (i, sd_row[i]))
+        for j in np.nonzero(seen[i])[0]:
+            cells.write("w%d,d%d,%.9g,%.6g\n" % (i, j, value[i, j], sd_cell[i, j]))
+            bare.write("w%d,d%d,%.9g\n" % (i, j, value[i, j]))
+END
+cat >error.py <<'END'
+import csv, sys
+import numpy as np
+truth, square = np.load("truth.npy"), []
+for line in csv.DictReader(open(sys.argv[1] + "/cells.csv")):
+    square.append((float(line["estimate"]) - truth[int(line["row"][1:]), int(line["column"][1:])]) ** 2)
+print(np.sqrt(np.mean(square)))
+END
+error_of() {
+    "$PYTHON" error.py "$1"
+}
+try 0 fill bare.csv -o bare
+try 0 fill cells.csv --row-weights rows.csv -o weighted
+check "the summary says whose weights" grep -q '^weights    of cells and rows, from ' err
+holds weighted/run.json 'r["weights"]["of_cells"] and r["weights"]["of_rows"] and not r["weights"]["of_columns"]'
+holds weighted/run.json 'r["options"]["row-weights"] == "rows.csv" and r["weights"]["least"] < 0.1 < 10 < r["weights"]["most"]'
+check "they lower the error on unseen cells to less than half" \
+    "$PYTHON" -c 'import sys; print(sys.argv); sys.exit(not float(sys.argv[1]) < 0.5 * float(sys.argv[2]))' \
+    "$(error_of weighted)" "$(error_of bare)"
+cp weighted/cells.csv once.csv
+try 0 fill cells.csv --row-weights rows.csv --threads 1 -o weighted
+check "the same bytes for any number of threads" cmp once.csv weighted/cells.csv
+sed 's/^\(w[0-9]*,d[0-9]*,[^,]*,\).*/\11/; s/sd$/weight/' cells.csv >equal.csv
+try 0 fill equal.csv -o equal
+check "equal weights change nothing" cmp equal/filled.csv bare/filled.csv
+for other in "--ridge 0.1" "--solver grassmann-cg"; do
+    try 64 fill cells.csv $other -o refused
+    says "weights are taken by the evidence fit alone: leave --solver and --ridge at auto"
+done
+try 66 fill bare.csv --column-weights missing -o refused
+says 'missing: cannot be opened: No such file or directory'
+sed 5s/.*/w3\;-1/ rows.csv >bad.csv
+try 65 fill bare.csv --row-weights bad.csv -o refused
+says "bad.csv: line 5: the standard deviation '-1' of row 'w3' is not positive; a positive number was expected"
+check "nothing was written" nothing_in refused
+finish
