@@ -52,7 +52,7 @@ static struct field comma_replaced(struct field field, char copy[COMMA_NUMBER_MO
     return (struct field){copy, copy + length};
 }
 
-bool number_read(const struct field *field, bool with_comma, double *value)
+bool field_number(const struct field *field, bool with_comma, double *value)
 {
     char copy[COMMA_NUMBER_MOST];
     struct field bare = field_trimmed(field);
@@ -64,7 +64,7 @@ bool number_read(const struct field *field, bool with_comma, double *value)
 bool is_number(const struct field *field, bool with_comma)
 {
     double value;
-    return number_read(field, with_comma, &value);
+    return field_number(field, with_comma, &value);
 }
 
 /* Learns the decimal sign from a number that has one, or refuses the other one. */

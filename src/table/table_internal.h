@@ -342,7 +342,7 @@ struct delimited {
     struct pile weights;     /* of the same cells, in the same order */
 };
 bool is_hole(const struct field *field); /* blank, NA, NaN, null, in any case */
-bool number_read(const struct field *field, bool with_comma, double *value);
+bool field_number(const struct field *field, bool with_comma, double *value);
 bool is_number(const struct field *field, bool with_comma); /* whether a decimal comma is taken for a point */
 /* Adds the value of a field, unless it is a hole. */
 fescue_status delimited_cell(struct delimited *delimited, uint32_t row, uint32_t column, const struct field *field);

@@ -47,7 +47,7 @@ const char *weight_of(enum weight_kind kind, double number, double *weight)
 const char *weight_parse(enum weight_kind kind, const struct field *field, char separator, double *weight)
 {
     double number;
-    if (!number_read(field, separator == ';', &number))
+    if (!field_number(field, separator == ';', &number))
         return "is not a number; a positive number was expected";
     return weight_of(kind, number, weight);
 }
