@@ -159,7 +159,7 @@ static fescue_status fill_run(fescue_fill *fill)
     fescue_status status;
     TRY(job_prepare(context, &fill->options));
     TRY(time_axis_find(context, fill->table, (enum fescue_time_axis)fill->options.time_axis, &fill->time));
-    struct choose_request request = {.options = &fill->options};
+    struct choose_request request = {.options = &fill->options, .time = &fill->time};
     TRY(solver_choose(context, &fill->options, &request));
     TRY(weights_consider(fill->table, &fill->options, &request));
     TRY(fill_choose(fill, &request));
@@ -168,6 +168,8 @@ static fescue_status fill_run(fescue_fill *fill)
     TRY(fill_judge(fill, request.solver));
     TRY(determined_create(context, &fill->table->cells, fill->fit.model.low_rank.rank, fill->fit.model.offsets.kind,
                           &fill->determined));
+    if (fill->fit.model.time.components > 0)
+        fill->determined.smooth = fill->fit.model.time.along;
     run_view(fill);
     run_count(&fill->run);
     TRY(fill_summarise(fill, false, &fill->text));
@@ -218,9 +220,9 @@ static fescue_status writing_tell(const fescue_fill *fill)
 /* Results of an older run in the same place that this one does not have must not lie beside its record. */
 static fescue_status names_retire(struct output *output)
 {
-    static const char *const names[] = {"filled.mtx",   "filled.csv", "filled.tsv",      "cells.csv",
-                                        "left.mtx",     "right.mtx",  "row-offsets.mtx", "column-offsets.mtx",
-                                        "spectrum.mtx", "trace.csv"};
+    static const char *const names[] = {"filled.mtx",   "filled.csv",    "filled.tsv",      "cells.csv",
+                                        "left.mtx",     "right.mtx",     "row-offsets.mtx", "column-offsets.mtx",
+                                        "spectrum.mtx", "time-part.csv", "trace.csv"};
     fescue_status status = FESCUE_OK;
     for (size_t k = 0; k < sizeof names / sizeof names[0] && status == FESCUE_OK; k++)
         status = output_retire(output, names[k]);
@@ -240,6 +242,8 @@ static fescue_status results_add(const fescue_fill *fill, struct output *output)
     TRY(writing_tell(fill));
     if (run->writes_factors)
         TRY(write_factors(run, output));
+    if (run->writes_factors)
+        TRY(write_time_part(run, output));
     TRY(write_trace(run, output));
     TRY(names_retire(output));
 done:

@@ -185,6 +185,24 @@ static void judged_lines(struct summary *summary)
                  real_to_words(judgement->scattered_rmse, 4, scattered));
 }
 
+/* What time and unequal noise bought, on the same hidden cells. */
+static void time_gain_line(struct summary *summary)
+{
+    const struct choice *choice = &summary->fill->choice;
+    bool has_time = choice->learnt.time != NULL, is_equal = choice->learnt.noise == EVIDENCE_NOISE_EQUAL;
+    char plain[32], interpolation[32];
+    if (choice->interpolation_errors.count == 0 || choice->plain_errors.count == 0)
+        return;
+    real_to_words(choice->plain_errors.rmse, 4, plain);
+    real_to_words(choice->interpolation_errors.rmse, 4, interpolation);
+    text_add(&summary->text, "           %s; low rank alone: RMSE %s, interpolation in time: %s\n",
+             !has_time && is_equal ? "time and unequal noise do not lower it"
+             : !has_time           ? "that is with unequal noise"
+             : is_equal            ? "that is with time"
+                                   : "that is with time and unequal noise",
+             plain, interpolation);
+}
+
 static void error_lines(struct summary *summary)
 {
     const struct choice *choice = &summary->fill->choice;
@@ -206,6 +224,7 @@ static void error_lines(struct summary *summary)
         text_add(text, "           while choosing, on %s: RMSE %s, %s %s\n",
                  count_words(errors->count, "hidden cell", hidden), real_to_words(errors->rmse, 4, rmse),
                  alone_text(choice->offsets), real_to_words(alone->rmse, 4, alone_rmse));
+    time_gain_line(summary);
     if (choice->noiseless)
         text_add(text, "           the hidden cells are met to rounding: the table is free of noise\n");
     if (summary->fill->fit.is_exact)
@@ -266,23 +285,25 @@ static void filled_lines(struct summary *summary)
     struct text *text = &summary->text;
     char filled[WORDS_SIZE];
     uint64_t low_rank = run->filled[BASIS_LOW_RANK], offsets = run->filled[BASIS_OFFSETS];
-    uint64_t mean = run->filled[BASIS_MEAN], all = low_rank + offsets + mean;
+    uint64_t smooth = run->filled[BASIS_SMOOTH], mean = run->filled[BASIS_MEAN];
+    uint64_t less = smooth + offsets + mean, all = low_rank + less;
     if (all == 0) {
         text_add(text, "filled     nothing: every cell was seen\n");
         return;
     }
     text_add(text,
-             "filled     %s; by what the data determine: low-rank %" PRIu64 ", offsets %" PRIu64 ", mean %" PRIu64 "\n",
-             count_words(all - run->blank, "cell", filled), low_rank, offsets, mean);
+             "filled     %s; by what the data determine: low-rank %" PRIu64 ", smooth %" PRIu64 ", offsets %" PRIu64
+             ", mean %" PRIu64 "\n",
+             count_words(all - run->blank, "cell", filled), low_rank, smooth, offsets, mean);
     if (run->determined->unchecked > 0)
         text_add(text,
                  "           of %" PRIu64 " rows and columns only the necessary conditions were checked: too large\n",
                  run->determined->unchecked);
     if (run->blank > 0)
         text_add(text, "           left blank: %" PRIu64 " that the data do not determine (--strict)\n", run->blank);
-    else if (run->model->low_rank.rank > 0 && offsets + mean > 0 && !run->options->strict)
+    else if (run->model->low_rank.rank > 0 && less > 0 && !run->options->strict)
         text_add(text, "           do not rely on the %" PRIu64 " that are not low-rank; --strict leaves them blank\n",
-                 offsets + mean);
+                 less);
 }
 
 static void left_out_line(struct summary *summary, const char *name, const char *why)

@@ -51,6 +51,7 @@ void candidate_free(struct chooser *chooser, struct candidate *candidate)
     GIVE(chooser->context, &candidate->square);
     offsets_free(chooser->context, &candidate->offsets);
     low_rank_free(chooser->context, &candidate->point);
+    time_part_free(chooser->context, &candidate->time);
 }
 
 fescue_status candidate_copy(struct chooser *chooser, const struct candidate *from, struct candidate *to)
@@ -61,9 +62,11 @@ fescue_status candidate_copy(struct chooser *chooser, const struct candidate *fr
     copy.square = NULL;
     copy.offsets = (struct offsets){0};
     copy.point = (struct low_rank){0};
+    copy.time = (struct time_part){0};
     TRY(TAKE(chooser->context, chooser->groups, &copy.square));
     TRY(offsets_copy(chooser->context, kept->rows, kept->columns, &from->offsets, &copy.offsets));
     TRY(low_rank_copy(chooser->context, &from->point, &copy.point));
+    TRY(time_part_copy(chooser->context, &from->time, &copy.time));
     for (size_t g = 0; g < chooser->groups; g++)
         copy.square[g] = from->square[g];
     candidate_swap(&copy, to);
@@ -126,6 +129,7 @@ fescue_status candidate_measure(struct chooser *chooser, struct candidate *candi
                           .columns = chooser->kept->columns,
                           .offsets = candidate->offsets,
                           .low_rank = candidate_point(chooser, candidate),
+                          .time = candidate->time,
                           .bounds = chooser->options->bounds};
     TRY(errors_measure(chooser->context, chooser->hidden, &model, chooser->residuals, &candidate->errors));
     groups_sum(chooser, candidate->square);
@@ -147,6 +151,7 @@ fescue_status candidate_fit(struct chooser *chooser, double ridge, const struct 
     TRY(solve_run(&chooser->problem, chooser->solver, limits, &candidate->point, &result));
     candidate->ridge = ridge;
     candidate->is_learnt = false;
+    time_part_free(chooser->context, &candidate->time);
     TRY(candidate_measure(chooser, candidate));
     TRY(candidate_note(chooser, candidate));
 done:

@@ -242,6 +242,11 @@ static fescue_status choice_fill(struct chooser *chooser, struct kind *kinds, si
         if (is_there && kinds[k].alone.errors.rmse < choice->offsets_only_rank0_rmse)
             choice->offsets_only_rank0_rmse = kinds[k].alone.errors.rmse;
     }
+    if (is_judged && winner->is_learnt)
+        choice->plain_errors = chooser->plain_errors;
+    if (is_judged && chooser->time != NULL)
+        TRY(interpolation_measure(chooser->context, chooser->kept, chooser->hidden, chooser->time,
+                                  &choice->interpolation_errors));
     choice->noiseless = winner->is_exact;
     choice->halfwidth =
         is_judged ? interval_halfwidth(chooser->residuals, chooser->hidden->count, chooser->options->interval) : NAN;
@@ -263,6 +268,7 @@ static fescue_status choose_on(fescue_context *context, const struct holdout *ho
     struct chooser chooser = {.context = context,
                               .options = request->options,
                               .solver = request->solver,
+                              .time = request->time != NULL && request->time->along != TIME_NONE ? request->time : NULL,
                               .learns = request->way,
                               .deadline = request->deadline,
                               .kept = &holdout->kept,

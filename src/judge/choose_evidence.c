@@ -1,8 +1,8 @@
 /* SPDX-License-Identifier: MIT
  *
  * The evidence fit among the candidates: it learns rank and ridge from the kept cells themselves, so that the hidden
- * ones have little to choose, only which kind of offsets it has and whether every line of the shorter side has noise of
- * its own.
+ * ones have little to choose, only which kind of offsets it has, whether every line of the shorter side (with a time
+ * axis: every series) has noise of its own, and whether the axis is of use.
  *
  * Where it is used: under --solver evidence, and under --solver auto while it is affordable and the ridge is left to
  * the program. It leaves neighbouring ranks and ridges nothing to win, as a rule, at the price of one path's first few
@@ -55,6 +55,7 @@ struct evidence_request evidence_request_of(const struct chooser *chooser, const
                                      .seed = (uint64_t)chooser->options->seed,
                                      .rounds = FINE_ROUNDS,
                                      .change = settled,
+                                     .time = candidate->time.along != TIME_NONE ? chooser->time : NULL,
                                      .deadline = chooser->deadline};
 }
 
@@ -65,8 +66,11 @@ static fescue_status candidate_take(struct chooser *chooser, struct evidence_res
     fescue_status status = FESCUE_OK;
     offsets_free(chooser->context, &candidate->offsets);
     low_rank_free(chooser->context, &candidate->point);
+    time_part_free(chooser->context, &candidate->time);
     candidate->offsets = result->model.offsets;
     candidate->point = result->model.low_rank;
+    candidate->time = result->model.time;
+    result->model.time = (struct time_part){0};
     result->model.offsets = (struct offsets){0};
     result->model.low_rank = (struct low_rank){0};
     candidate->version = ++chooser->versions;
@@ -96,8 +100,18 @@ done:
     return status;
 }
 
-/* The same components under noise that is learnt line by line of the shorter side, when that has less error. */
-static fescue_status learn_noise(struct chooser *chooser, struct candidate *winner)
+/* The lines whose noise may differ: with time the series, else those of the shorter side. */
+static enum evidence_noise noise_lines(const struct chooser *chooser)
+{
+    const struct cells *kept = chooser->kept;
+    bool by_columns = chooser->time != NULL ? chooser->time->along == TIME_ROWS : kept->columns <= kept->rows;
+    return by_columns ? EVIDENCE_NOISE_COLUMNS : EVIDENCE_NOISE_ROWS;
+}
+
+/* The winner's components again, under the noise and the time part that are asked for: takes its place when it has less
+   error. */
+static fescue_status learn_more(struct chooser *chooser, enum evidence_noise noise, const struct time_axis *time,
+                                struct candidate *winner)
 {
     fescue_status status = FESCUE_OK;
     const struct cells *kept = chooser->kept;
@@ -105,7 +119,8 @@ static fescue_status learn_noise(struct chooser *chooser, struct candidate *winn
     struct candidate own = {0};
     struct model start = {.rows = kept->rows, .columns = kept->columns, .bounds = chooser->options->bounds};
     struct evidence_request request = evidence_request_of(chooser, winner);
-    request.noise = kept->columns <= kept->rows ? EVIDENCE_NOISE_COLUMNS : EVIDENCE_NOISE_ROWS;
+    request.noise = noise;
+    request.time = time;
     request.rank = winner->point.rank;
     request.rounds = NOISE_ROUNDS;
     if (winner->point.rank == 0 || chooser_is_late(chooser))
@@ -115,6 +130,7 @@ static fescue_status learn_noise(struct chooser *chooser, struct candidate *winn
     request.noise_start = winner->errors.rmse * winner->errors.rmse;
     start.offsets = winner->offsets; /* borrowed, like the point */
     start.low_rank = candidate_point(chooser, winner);
+    start.time = winner->time;
     TRY(evidence_fit(chooser->context, kept, &request, &start, &result));
     TRY(candidate_take(chooser, &result, request.noise, &own));
     if (candidate_beats(chooser, &own, winner, 1))
@@ -142,8 +158,12 @@ fescue_status evidence_compete(struct chooser *chooser, const struct candidate *
             *best = k;
         }
     }
-    if (!winner->is_exact)
-        TRY(learn_noise(chooser, winner));
+    chooser->plain_errors = winner->errors;
+    if (winner->is_exact)
+        goto done;
+    TRY(learn_more(chooser, noise_lines(chooser), NULL, winner));
+    if (chooser->time != NULL)
+        TRY(learn_more(chooser, winner->noise, chooser->time, winner));
 done:
     candidate_free(chooser, &candidate);
     return status;

@@ -13,6 +13,7 @@ struct chooser {
     fescue_context *context;
     const struct fescue_options *options;
     const struct solver *solver;
+    const struct time_axis *time; /* NULL: lines have no order */
     enum choose_way learns;
     double deadline;
     const struct cells *kept, *hidden;
@@ -21,9 +22,10 @@ struct chooser {
     uint64_t version;       /* which offsets those are; 0: there is no problem yet */
     uint64_t versions;      /* how many there have been */
 
-    double *residuals; /* one a hidden cell */
-    double *spectrum;  /* one a component, in the table's units */
-    size_t groups;     /* how many groups the hidden cells are judged in */
+    double *residuals;          /* one a hidden cell */
+    double *spectrum;           /* one a component, in the table's units */
+    struct errors plain_errors; /* of the evidence fit with equal noise and without time; count 0: there is none */
+    size_t groups;              /* how many groups the hidden cells are judged in */
 
     struct choose_step *path;
     uint64_t path_count, path_capacity;
@@ -37,6 +39,7 @@ struct candidate {
     double ridge;   /* NAN: learnt, a ridge a component */
     bool is_learnt; /* by the evidence fit, with this noise */
     enum evidence_noise noise;
+    struct time_part time; /* owned; table units */
     struct errors errors;  /* on the hidden cells, table units; infinite when the fit blew up */
     double *square;        /* sum of squared errors of each group of hidden cells */
     struct low_rank point; /* in the problem's units */

@@ -49,7 +49,7 @@ struct loose {
 
 const char *basis_word(enum basis basis)
 {
-    static const char *const words[] = {"low-rank", "offsets", "mean"};
+    static const char *const words[] = {"low-rank", "smooth", "offsets", "mean"};
     assert((size_t)basis < sizeof words / sizeof words[0]);
     return words[basis];
 }
@@ -278,6 +278,10 @@ enum basis determined_basis(const struct determined *determined, uint32_t row, u
     assert(row < determined->rows && column < determined->columns);
     if (is_low_rank(determined, row, column))
         return BASIS_LOW_RANK;
+    if (determined->smooth == TIME_ROWS && determined->column_support[column] > 0)
+        return BASIS_SMOOTH;
+    if (determined->smooth == TIME_COLUMNS && determined->row_support[row] > 0)
+        return BASIS_SMOOTH;
     return has_effect(determined, row, column) ? BASIS_OFFSETS : BASIS_MEAN;
 }
 

@@ -64,6 +64,10 @@ fescue_status errors_measure(fescue_context *context, const struct cells *hidden
    residuals. */
 double interval_halfwidth(double *residuals, uint64_t count, double level);
 
+/* Errors on hidden cells of interpolation in time, linear between the nearest kept cells of the series. */
+fescue_status interpolation_measure(fescue_context *context, const struct cells *kept, const struct cells *hidden,
+                                    const struct time_axis *time, struct errors *errors);
+
 /* The offsets of what a low-rank part (in the table's units) leaves of the cells: offsets_fit on x - point. With a
    point of rank 0, or the kind none, offsets_fit itself. New, owned by the caller. */
 fescue_status refit_offsets(fescue_context *context, const struct cells *cells, enum fescue_offsets kind,
@@ -86,6 +90,8 @@ struct choice {
     struct errors errors, offsets_errors; /* on the hidden cells: of the choice, and of its offsets alone */
     double offsets_only_rank0_rmse;       /* of the best offsets alone */
     double halfwidth;                     /* of the interval at the asked level; NAN when nothing was hidden */
+    struct errors plain_errors;           /* of the same components, with equal noise and without time */
+    struct errors interpolation_errors;   /* of interpolation in time; count 0: there is no time axis */
     bool noiseless;                       /* the hidden cells, nearly all, are met to rounding */
     bool own_holdout;                     /* nothing was hidden by the caller, so a tenth was, for the choice alone */
     struct low_rank start;                /* owned; the chosen low-rank part in the table's units. The fit on all cells
@@ -100,7 +106,8 @@ struct choose_request {
     enum choose_way way;
     const struct fescue_options *options;
     const struct solver *solver;
-    double deadline; /* clock_wall() second, or 0 */
+    const struct time_axis *time; /* borrowed, and by choice.learnt too; NULL or along none: lines have no order */
+    double deadline;              /* clock_wall() second, or 0 */
 };
 /* Fits on holdout->kept and judges on holdout->hidden: offsets (where auto) x a warm-started path over ranks (where
    auto) x a ladder of ridges (where auto). Without hidden cells (--holdout 0) an auto rank and ridge are judged on a
@@ -184,14 +191,17 @@ void judgement_free(fescue_context *context, struct judgement *judgement);
 double judgement_halfwidth(const struct judgement *judgement, uint32_t row, uint32_t column);
 
 /* Whether the pattern of observed cells determines the low-rank part of an unseen cell at this rank (determined.c). One
-   that it does not rests on the offsets when their kind has an effect for its row or column and that line has cells;
-   else on the mean. */
-enum basis { BASIS_LOW_RANK, BASIS_OFFSETS, BASIS_MEAN };
-const char *basis_word(enum basis basis); /* "low-rank", "offsets", "mean" */
+   that it does not rests on its neighbours in time when the model follows its steps from one to the next and its series
+   has cells; else on the offsets when their kind has an effect for its row or column and that line has cells; else on
+   the mean. */
+enum basis { BASIS_LOW_RANK, BASIS_SMOOTH, BASIS_OFFSETS, BASIS_MEAN };
+enum { BASIS_COUNT = BASIS_MEAN + 1 };
+const char *basis_word(enum basis basis); /* "low-rank", "smooth", "offsets", "mean" */
 struct determined {
     uint32_t rows, columns;
     size_t rank;
     enum fescue_offsets offsets;            /* the kind the model was fitted with */
+    enum time_along smooth;                 /* which lines the model follows in time; none after determined_create */
     uint32_t *row_block, *column_block;     /* core block of each line, from 1; 0: not in the core */
     uint32_t *row_support, *column_support; /* observed cells of each line */
     struct loose *loose;                    /* lines that can move while no seen cell does; NULL: none */

@@ -47,6 +47,8 @@
    grow only where the data pull them. */
 #define EVIDENCE_PROBE 0.05
 
+/* A pruned component: standard deviation in the table over that of the noise. */
+#define COMPONENT_DEAD 1e-3
 static void side_reserve(struct arena *arena, const struct half *half, size_t rank)
 {
     size_t lines = half->lines, d = rank + 2;
@@ -293,6 +295,32 @@ done:
     return status;
 }
 
+size_t evidence_living(const struct evidence_result *fit)
+{
+    const struct low_rank *point = &fit->model.low_rank;
+    double size = sqrt((double)point->rows * (double)point->columns);
+    size_t count = 0;
+    while (count < point->rank && point->spectrum[count] > COMPONENT_DEAD * fit->noise * size)
+        count++;
+    return count;
+}
+
+void evidence_trim(struct model *model, size_t rank)
+{
+    struct low_rank *point = &model->low_rank;
+    if (rank >= point->rank)
+        return;
+    point->rank = rank;
+    for (size_t side = 0; side < 2; side++) {
+        struct matrix a = side == 0 ? point->left : point->right;
+        for (size_t i = 0; i < a.rows; i++)
+            for (size_t k = rank; k < a.columns; k++)
+                MATRIX_AT(a, i, k) = 0;
+    }
+    point->left = matrix_left(point->left, rank);
+    point->right = matrix_left(point->right, rank);
+}
+
 fescue_status evidence_fit(fescue_context *context, const struct cells *cells, const struct evidence_request *request,
                            const struct model *start, struct evidence_result *out)
 {
@@ -319,6 +347,8 @@ fescue_status evidence_fit(fescue_context *context, const struct cells *cells, c
     out->scale = problem.scale;
     out->fit.rmse = sqrt(evidence.noise);
     out->fit.objective = evidence.noise;
+    size_t alive = evidence_living(out);
+    evidence_trim(&out->model, alive > 0 ? alive : 1);
 done:
     evidence_time_close(&evidence);
     arena_close(context, &evidence.arena);

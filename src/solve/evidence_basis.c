@@ -18,7 +18,6 @@
  */
 #include "solve/evidence_internal.h"
 
-#include <float.h>
 #include <math.h>
 #include <string.h>
 
@@ -29,6 +28,9 @@ size_t evidence_basis_scratch(size_t rank)
 {
     return packed_congruence_work(rank + 2);
 }
+
+/* Of a pruned component; its reciprocal and the square of that are still numbers. */
+#define VARIANCE_LEAST 1e-60
 
 struct basis_job {
     struct evidence *evidence;
@@ -246,7 +248,7 @@ fescue_status evidence_basis_change(struct evidence *evidence)
     const double *w = evidence->basis_work + packed_size(rank);
     for (size_t k = 0; k < rank; k++) {
         rows->variance[k] = 1;
-        columns->variance[k] = w[k] > 0 ? w[k] : DBL_MIN;
+        columns->variance[k] = fmax(w[k], VARIANCE_LEAST);
     }
     return FESCUE_OK;
 }

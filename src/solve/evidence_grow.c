@@ -20,41 +20,11 @@
 /* First guess of the noise, as a share of the variance that the offsets leave: with all of it, weak components are lost
    before they have found their direction; with much less, rounds are spent on pruning what is not there. */
 #define START_NOISE 0.25
-/* A pruned component: standard deviation in the table over that of the noise. */
-#define COMPONENT_DEAD 1e-3
 /* Components that join at once: among several the rounds find the directions that one alone may miss. */
 enum { GROW_BLOCK = 4 };
 /* Rounds between two growths, and the tolerance at which they end earlier. */
 #define GROW_ROUNDS 10
 #define GROW_CHANGE 1e-3
-
-/* How many components live. */
-static size_t living(const struct evidence_result *fit)
-{
-    const struct low_rank *point = &fit->model.low_rank;
-    double size = sqrt((double)point->rows * (double)point->columns);
-    size_t count = 0;
-    while (count < point->rank && point->spectrum[count] > COMPONENT_DEAD * fit->noise * size)
-        count++;
-    return count;
-}
-
-/* *model loses its components behind the first `rank`. */
-static void model_trim(struct model *model, size_t rank)
-{
-    struct low_rank *point = &model->low_rank;
-    if (rank >= point->rank)
-        return;
-    point->rank = rank;
-    for (size_t side = 0; side < 2; side++) {
-        struct matrix a = side == 0 ? point->left : point->right;
-        for (size_t i = 0; i < a.rows; i++)
-            for (size_t k = rank; k < a.columns; k++)
-                MATRIX_AT(a, i, k) = 0;
-    }
-    point->left = matrix_left(point->left, rank);
-    point->right = matrix_left(point->right, rank);
-}
 
 static bool is_late(const struct evidence_request *request)
 {
@@ -102,8 +72,6 @@ static fescue_status refit(fescue_context *context, const struct cells *cells, c
         return status;
     evidence_result_free(context, fit);
     *fit = next;
-    size_t alive = living(fit);
-    model_trim(&fit->model, alive > 0 ? alive : 1);
     return next.fit.stop == STOP_CANCELLED ? FESCUE_STOPPED : FESCUE_OK;
 }
 
@@ -124,7 +92,7 @@ fescue_status evidence_learn(fescue_context *context, const struct cells *cells,
     for (;;) {
         TRY(model_grow(context, cells, &step, &out->model));
         TRY(refit(context, cells, &step, out));
-        size_t now = living(out);
+        size_t now = evidence_living(out);
         if (now <= alive || now >= request->rank_most || is_late(request))
             break;
         alive = now;
@@ -137,7 +105,7 @@ fescue_status evidence_learn(fescue_context *context, const struct cells *cells,
         step.time = request->time;
         TRY(refit(context, cells, &step, out));
     }
-    model_trim(&out->model, living(out));
+    evidence_trim(&out->model, evidence_living(out));
 done:
     if (status != FESCUE_OK)
         evidence_result_free(context, out);

@@ -53,6 +53,10 @@ static inline size_t evidence_one(const struct evidence *evidence)
     return evidence->rank;
 }
 
+/* How many components live, and a model without those behind the first `rank`. */
+size_t evidence_living(const struct evidence_result *fit);
+void evidence_trim(struct model *model, size_t rank);
+
 /* Doubles a worker needs. */
 size_t evidence_side_scratch(size_t rank);
 size_t evidence_basis_scratch(size_t rank);

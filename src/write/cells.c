@@ -5,7 +5,7 @@
  *   row, column        labels
  *   estimate           blank when --strict leaves the cell blank
  *   lower, upper       the interval; blank where there is none
- *   basis              low-rank, offsets or mean: what the data determine of the cell
+ *   basis              low-rank, smooth, offsets or mean: what the data determine of the cell
  *   row_support        observed cells of its row
  *   column_support     and of its column
  */

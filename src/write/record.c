@@ -148,6 +148,7 @@ static struct record time_record(const struct run *run)
     count_set(&record, "equal_times", time->equal);
     count_set(&record, "clock_set_back", time->set_back);
     flag_set(&record, "in_order", time->is_sorted);
+    flag_set(&record, "used", run->model->time.along != TIME_NONE);
     return record;
 }
 
@@ -203,6 +204,10 @@ static struct record choice_record(const struct run *run)
     count_set(&record, "judged", choice->errors.count);
     record_set(&record, "errors", errors_record(run, &choice->errors));
     record_set(&record, "errors_of_offsets_alone", errors_record(run, &choice->offsets_errors));
+    if (choice->plain_errors.count > 0)
+        record_set(&record, "errors_of_low_rank_alone", errors_record(run, &choice->plain_errors));
+    if (choice->interpolation_errors.count > 0)
+        record_set(&record, "errors_of_interpolation_in_time", errors_record(run, &choice->interpolation_errors));
     real_set(&record, "rmse_of_best_offsets_alone", choice->errors.count > 0 ? choice->offsets_only_rank0_rmse : NAN);
     flag_set(&record, "hidden_for_choice_only", choice->own_holdout);
     flag_set(&record, "noiseless", choice->noiseless);
@@ -307,15 +312,19 @@ static struct record model_record(const struct run *run)
             spectrum.failed = true;
     record_set(&record, "spectrum", spectrum);
     text_set(&record, "formula",
-             "mean + row offset + column offset + left diag(spectrum) right', then bounds; where the "
-             "ridge is 0, cells whose basis is not low-rank are without the product");
+             model->time.along != TIME_NONE
+                 ? "mean + row offset + column offset + left diag(spectrum) right' + residual in time, then bounds"
+                 : "mean + row offset + column offset + left diag(spectrum) right', then bounds; where the "
+                   "ridge is 0, cells whose basis is not low-rank are without the product");
     return record;
 }
 
 static struct record unseen_record(const struct run *run)
 {
     struct record record = record_open(run->context);
-    count_set(&record, "cells", run->filled[BASIS_LOW_RANK] + run->filled[BASIS_OFFSETS] + run->filled[BASIS_MEAN]);
+    count_set(&record, "cells",
+              run->filled[BASIS_LOW_RANK] + run->filled[BASIS_SMOOTH] + run->filled[BASIS_OFFSETS] +
+                  run->filled[BASIS_MEAN]);
     for (enum basis basis = BASIS_LOW_RANK; basis <= BASIS_MEAN; basis++)
         count_set(&record, basis_word(basis), run->filled[basis]);
     count_set(&record, "left_blank", run->blank);
@@ -329,6 +338,7 @@ static struct record files_record(const struct run *run)
     const char *filled = run_why_left_out(run, run->writes_filled), *cells = run_why_left_out(run, run->writes_cells);
     const char *factors = run_why_left_out(run, run->writes_factors);
     const char *low_rank = run->model->low_rank.rank == 0 ? "the rank is 0" : NULL;
+    const char *time = run->model->time.along == TIME_NONE ? "the model follows nothing in time" : NULL;
     const struct {
         const char *name, *why;
     } files[] = {{filled_name(run->table), filled},
@@ -338,6 +348,7 @@ static struct record files_record(const struct run *run)
                  {"left.mtx", factors != NULL ? factors : low_rank},
                  {"spectrum.mtx", factors != NULL ? factors : low_rank},
                  {"right.mtx", factors != NULL ? factors : low_rank},
+                 {"time-part.csv", factors != NULL ? factors : time},
                  {"trace.csv", NULL}};
     for (size_t k = 0; k < sizeof files / sizeof files[0]; k++) {
         char text[256];

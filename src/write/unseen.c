@@ -108,7 +108,16 @@ static void table_count(struct run *run)
     uint64_t plain_columns = has_column_effects(run) ? empty_columns : d->columns;
     run->filled[BASIS_LOW_RANK] = low_rank;
     run->filled[BASIS_MEAN] = plain_rows * plain_columns - (has_effects ? 0 : low_rank);
-    run->filled[BASIS_OFFSETS] = all - low_rank - run->filled[BASIS_MEAN];
+    run->filled[BASIS_SMOOTH] = 0;
+    if (d->smooth != TIME_NONE) {
+        bool by_rows = d->smooth == TIME_ROWS;
+        uint64_t steps = by_rows ? d->rows : d->columns, empty_series = by_rows ? empty_columns : empty_rows;
+        bool has_steps_effects = by_rows ? has_row_effects(run) : has_column_effects(run);
+        uint64_t plain_steps = has_steps_effects ? (by_rows ? empty_rows : empty_columns) : steps;
+        run->filled[BASIS_SMOOTH] = all - empty_series * steps - low_rank;
+        run->filled[BASIS_MEAN] = empty_series * plain_steps;
+    }
+    run->filled[BASIS_OFFSETS] = all - low_rank - run->filled[BASIS_SMOOTH] - run->filled[BASIS_MEAN];
     run->blank = all - low_rank;
     if (!has_low_rank(run)) {
         uint64_t full_rows = has_row_effects(run) ? d->rows - empty_rows : d->rows;

@@ -7,6 +7,7 @@
  *   filled     the completed table in the shape it came in
  *   cells      one line an unseen cell
  *   factors    offsets and the low-rank part
+ *   time_part  the laws of what is followed in time
  *   trace      one line an iteration of the final fit
  *   record     run.json: what is needed to repeat and to judge the run
  *   array      a dense Matrix Market file      field   a field of delimited text      json   a value of JSON
@@ -35,7 +36,7 @@ struct run {
     const struct hole_shape *shape;            /* of what was hidden */
     double started, seconds_wall, seconds_cpu; /* started: Unix time */
     uint64_t hidden;                           /* cells held out while choosing */
-    uint64_t filled[3];                        /* unseen cells by basis, those left blank among them */
+    uint64_t filled[BASIS_COUNT];              /* unseen cells by basis, those left blank among them */
     uint64_t blank;                            /* cells left blank by --strict */
     bool writes_filled, writes_cells, writes_factors;
 };
@@ -62,10 +63,11 @@ extern const char *const run_caution;
 const char *filled_name(const fescue_table *table); /* filled.mtx, filled.csv or filled.tsv */
 
 fescue_status write_filled(const struct run *run, struct output *output);
-fescue_status write_cells(const struct run *run, struct output *output);   /* cells.csv */
-fescue_status write_factors(const struct run *run, struct output *output); /* left, spectrum, right, offsets: .mtx */
-fescue_status write_trace(const struct run *run, struct output *output);   /* trace.csv */
-fescue_status write_record(const struct run *run, struct output *output);  /* run.json, the seal */
+fescue_status write_cells(const struct run *run, struct output *output);     /* cells.csv */
+fescue_status write_factors(const struct run *run, struct output *output);   /* left, spectrum, right, offsets: .mtx */
+fescue_status write_time_part(const struct run *run, struct output *output); /* time-part.csv, where there is one */
+fescue_status write_trace(const struct run *run, struct output *output);     /* trace.csv */
+fescue_status write_record(const struct run *run, struct output *output);    /* run.json, the seal */
 
 /* Pieces that sow uses too: a field of delimited text, quoted as RFC 4180 says when it has to be; a dense array file,
    with one line of comment or NULL. */

@@ -115,6 +115,7 @@ static void words_are_those_of_the_cells_file(void **state)
 {
     (void)state;
     assert_string_equal(basis_word(BASIS_LOW_RANK), "low-rank");
+    assert_string_equal(basis_word(BASIS_SMOOTH), "smooth");
     assert_string_equal(basis_word(BASIS_OFFSETS), "offsets");
     assert_string_equal(basis_word(BASIS_MEAN), "mean");
 }

@@ -238,7 +238,7 @@ static void pattern_read(struct stand *stand, uint32_t which)
 static void count_check(const struct stand *stand)
 {
     const struct half *half = &stand->table->cells.by_row;
-    uint64_t filled[3] = {0}, blank = 0, next = 0;
+    uint64_t filled[BASIS_COUNT] = {0}, blank = 0, next = 0;
     for (uint32_t i = 0; i < half->lines; i++)
         for (uint32_t j = 0; j < half->length; j++) {
             if (next < half->start[i + 1] && half->across[next] == j) {
@@ -251,7 +251,7 @@ static void count_check(const struct stand *stand)
         }
     assert_memory_equal(filled, stand->run.filled, sizeof filled);
     assert_int_equal(blank, stand->run.blank);
-    assert_int_equal(filled[0] + filled[1] + filled[2] + stand->table->cells.count,
+    assert_int_equal(filled[0] + filled[1] + filled[2] + filled[3] + stand->table->cells.count,
                      (uint64_t)half->lines * half->length);
 }
 
