@@ -94,6 +94,7 @@ static fescue_status record_write(const struct sowing *sowing)
                    (unsigned long long)sowing->observed);
     number_write(file, "noise", sowing->noise);
     number_write(file, "rmse_floor", sowing->floor);
+    faults_write(sowing, file);
     options_write(file, sowing->options);
     outfile_text(file, "}\n");
     TRY(outfile_status(file));

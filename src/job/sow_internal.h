@@ -5,6 +5,7 @@
  *   sow         options to files: checks, the record, the summary
  *   sow_plain   random factors and a plain table
  *   sow_holes   which cells of a plain table are seen
+ *   sow_faults  faults planted in a plain table
  *   sow_text    text to a file of the set, gzipped or not
  *   scene_fen, scene_cider   the two invented scenes
  *
@@ -18,6 +19,19 @@
 
 #include <zlib.h>
 
+/* ---- faults ----------------------------------------------------------------------------------------------------- */
+
+enum { ORPHAN_ROWS = 5, ORPHAN_COLUMNS = 4 };
+/* Where faults are, from 0; all of them, whether they were asked for or not. */
+struct fault_plan {
+    uint64_t stuck_column, stuck_from, stuck_to; /* rows stuck_from .. stuck_to - 1 */
+    uint64_t spike_column, spike_row;
+    double spike;
+    uint64_t copied_column, copy_column;
+    uint64_t late_column, late_row;
+    uint64_t orphan_row, orphan_column[ORPHAN_COLUMNS];
+};
+
 /* ---- what a sowing is, and what came of it ---------------------------------------------------------------------- */
 
 struct sowing {
@@ -27,8 +41,10 @@ struct sowing {
     /* set by the kind of table that is sown: */
     uint64_t rows, columns, observed;
     const char *table, *truth; /* names of the files, without ".gz"; truth as the summary calls it */
-    double noise;              /* standard deviation, in the table's own unit */
-    double floor;              /* about the best RMSE that unseen cells allow; NAN: not known */
+    struct fault_plan plan;
+    const char *row_prefix, *column_prefix; /* of labels: "r" and "c", or nothing */
+    double noise;                           /* standard deviation, in the table's own unit */
+    double floor;                           /* about the best RMSE that unseen cells allow; NAN: not known */
 };
 
 fescue_status sow_plain(struct sowing *sowing);
@@ -45,6 +61,7 @@ enum sow_stream {
     SOW_COLUMN_OFFSETS,
     SOW_HOLES,
     SOW_NOISE,
+    SOW_FAULTS,
     SOW_FEN = 100,
     SOW_CIDER = 200
 };
@@ -65,6 +82,16 @@ struct holes {
 void holes_shares(const struct fescue_sow_options *options, double *share);
 void holes_open(const struct sowing *sowing, uint64_t column, double share, struct holes *holes);
 void holes_step(struct holes *holes);
+
+/* Chooses where the faults are; FESCUE_USAGE when the table is too small for them. */
+fescue_status faults_plan(struct sowing *sowing, const double *share);
+/* As holes_open and holes_step, for the table with its faults. */
+void faults_open(const struct sowing *sowing, uint64_t column, const double *share, struct holes *holes);
+void faults_step(const struct sowing *sowing, uint64_t column, struct holes *holes);
+/* Turns a seen cell into the one whose value it has; returns what is added to that. */
+double faults_source(const struct sowing *sowing, uint64_t *row, uint64_t *column);
+/* The list for the record. */
+void faults_write(const struct sowing *sowing, struct outfile *file);
 
 /* ---- text ------------------------------------------------------------------------------------------------------- */
 

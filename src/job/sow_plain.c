@@ -203,9 +203,10 @@ static double truth_at(const struct plain *plain, uint64_t i, uint64_t j)
 
 static double observed_at(const struct plain *plain, uint64_t i, uint64_t j)
 {
+    double added = faults_source(plain->sowing, &i, &j);
     double sigma = plain->sowing->options->noise;
     struct random_stream stream = sow_stream(plain->sowing, SOW_NOISE, (j << 32) + i);
-    return truth_at(plain, i, j) + (sigma > 0 ? sigma * random_normal(&stream) : 0);
+    return truth_at(plain, i, j) + added + (sigma > 0 ? sigma * random_normal(&stream) : 0);
 }
 
 /* ---- tables ----------------------------------------------------------------------------------------------------- */
@@ -225,7 +226,8 @@ static fescue_status cells_count(struct plain *plain, uint64_t *count)
     *count = 0;
     for (uint64_t j = 0; j < plain->columns; j++) {
         TRY(progress_of_column(plain, "counting cells", j));
-        for (holes_open(plain->sowing, j, plain->share[j], &holes); holes.next < plain->rows; holes_step(&holes))
+        for (faults_open(plain->sowing, j, plain->share, &holes); holes.next < plain->rows;
+             faults_step(plain->sowing, j, &holes))
             ++*count;
     }
 done:
@@ -240,7 +242,8 @@ static fescue_status lines_write(struct plain *plain, const char *before_row, co
     struct holes holes;
     for (uint64_t j = 0; j < plain->columns; j++) {
         TRY(progress_of_column(plain, "writing the table", j));
-        for (holes_open(plain->sowing, j, plain->share[j], &holes); holes.next < plain->rows; holes_step(&holes)) {
+        for (faults_open(plain->sowing, j, plain->share, &holes); holes.next < plain->rows;
+             faults_step(plain->sowing, j, &holes)) {
             sink_text(sink, before_row);
             sink_count(sink, holes.next + 1);
             sink_text(sink, before_column);
@@ -282,7 +285,7 @@ static fescue_status wide_write(struct plain *plain, struct sink *sink)
     TRY(TAKE(context, plain->columns, &holes));
     sink_text(sink, "row");
     for (uint64_t j = 0; j < plain->columns; j++) {
-        holes_open(plain->sowing, j, plain->share[j], &holes[j]);
+        faults_open(plain->sowing, j, plain->share, &holes[j]);
         sink_text(sink, ",c");
         sink_count(sink, j + 1);
     }
@@ -295,7 +298,7 @@ static fescue_status wide_write(struct plain *plain, struct sink *sink)
             if (holes[j].next != i)
                 continue;
             sink_real(sink, observed_at(plain, i, j));
-            holes_step(&holes[j]);
+            faults_step(plain->sowing, j, &holes[j]);
         }
         TRY(sink->status);
     }
@@ -381,6 +384,10 @@ fescue_status sow_plain(struct sowing *sowing)
     TRY(plain_open(sowing, &plain));
     sowing->rows = plain.rows;
     sowing->columns = plain.columns;
+    bool has_labels = sowing->options->shape != SHAPE_OPTION_MATRIX_MARKET;
+    sowing->row_prefix = has_labels ? "r" : "";
+    sowing->column_prefix = has_labels ? "c" : "";
+    TRY(faults_plan(sowing, plain.share));
     TRY(cells_count(&plain, &sowing->observed));
     TRY(table_sow(&plain));
     TRY(truth_sow(&plain));
