@@ -15,13 +15,8 @@
 #include <math.h>
 #include <stdio.h>
 
-enum {
-    FAULT_STUCK = 1,
-    FAULT_SPIKE = 2,
-    FAULT_DUPLICATE = 4,
-    FAULT_ORPHAN = 8,
-    FAULT_LATE = 16
-}; /* bits of --faults */
+/* Bits of --faults. */
+enum { FAULT_NONE = 1, FAULT_STUCK = 2, FAULT_SPIKE = 4, FAULT_DUPLICATE = 8, FAULT_ORPHAN = 16, FAULT_LATE = 32 };
 enum { LEAST_ROWS = 80, LEAST_COLUMNS = 12, STUCK_CELLS = 40, SPIKE_SPREADS = 30 };
 
 static bool has_fault(const struct sowing *sowing, unsigned fault)
@@ -78,7 +73,7 @@ fescue_status faults_plan(struct sowing *sowing, const double *share)
     struct random_stream stream = sow_stream(sowing, SOW_FAULTS, 0);
     const struct fescue_sow_options *options = sowing->options;
     uint64_t rows = sowing->rows;
-    if (options->faults == 0)
+    if ((options->faults & ~(unsigned)FAULT_NONE) == 0)
         goto done;
     if (rows < LEAST_ROWS || sowing->columns < LEAST_COLUMNS)
         return FAIL(sowing->context, FESCUE_USAGE, "--faults needs a table of at least %d rows and %d columns",
@@ -171,7 +166,7 @@ static void fault_write(const struct sowing *sowing, struct outfile *file, unsig
     va_start(arguments, words);
     vsnprintf(line, sizeof line, words, arguments);
     va_end(arguments);
-    bool is_first = (sowing->options->faults & (fault - 1)) == 0;
+    bool is_first = (sowing->options->faults & (fault - 1) & ~(unsigned)FAULT_NONE) == 0;
     outfile_format(file, "%s\n    {%s}", is_first ? "" : ",", line);
 }
 
@@ -180,7 +175,7 @@ void faults_write(const struct sowing *sowing, struct outfile *file)
     const struct fault_plan *plan = &sowing->plan;
     const char *r = sowing->row_prefix, *c = sowing->column_prefix;
     typedef unsigned long long number;
-    if (sowing->options->faults == 0)
+    if ((sowing->options->faults & ~(unsigned)FAULT_NONE) == 0)
         return;
     outfile_text(file, "  \"faults\": [");
     fault_write(sowing, file, FAULT_STUCK,
