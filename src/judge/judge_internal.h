@@ -1,7 +1,7 @@
 /* SPDX-License-Identifier: MIT
  *
  * The inside of judge: the graph of observed cells (core, blocks), offsets again (refit), order statistics (order), a
- * text that grows (page), and the parts of the survey.
+ * text that grows (page).
  */
 #ifndef FESCUE_JUDGE_INTERNAL_H
 #define FESCUE_JUDGE_INTERNAL_H
@@ -49,22 +49,9 @@ void page_label(struct page *page, const char *label);
 /* An argument of a command line, quoted for a shell where it needs to be; characters that cannot be shown become '?'.
  */
 void page_argument(struct page *page, const char *argument);
+/* Breaks the lines longer than WIDTH from byte `from` on, at blanks; what goes on is indented. */
+void page_wrap(struct page *page, size_t from);
 /* Hands the bytes over (owned by the caller), or frees them and returns the failure. */
 fescue_status page_close(struct page *page, char **out);
-
-/* The parts of the survey; each adds its lines. */
-struct survey {
-    const fescue_table *table;
-    const struct cells *cells;
-    struct page *page;
-    uint32_t *row_core, *column_core; /* core numbers */
-    double low, high;                 /* of the values */
-    bool is_scale;                    /* few different values: likely a closed scale of scores */
-    uint64_t rank_most;               /* the largest rank that the pattern leaves worth trying */
-};
-void survey_values(struct survey *survey);
-void survey_lines(struct survey *survey);
-fescue_status survey_blocks(struct survey *survey);
-fescue_status survey_ranks(struct survey *survey);
 
 #endif

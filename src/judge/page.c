@@ -119,6 +119,33 @@ void page_argument(struct page *page, const char *argument)
     page_add(page, "'");
 }
 
+void page_wrap(struct page *page, size_t from)
+{
+    enum { WIDTH = 100, INDENT = 4 };
+    size_t begin = from, blank = 0;
+    for (size_t k = from; page->status == FESCUE_OK && k < page->length; k++) {
+        if (page->bytes[k] == '\n') {
+            begin = k + 1;
+            blank = 0;
+            continue;
+        }
+        if (k - begin >= WIDTH && blank > begin + INDENT) {
+            page_reserve(page, INDENT);
+            if (page->status != FESCUE_OK)
+                return;
+            memmove(page->bytes + blank + 1 + INDENT, page->bytes + blank + 1, page->length - blank);
+            memset(page->bytes + blank + 1, ' ', INDENT);
+            page->bytes[blank] = '\n';
+            page->length += INDENT;
+            begin = blank + 1;
+            k = begin + INDENT;
+            blank = 0;
+        }
+        if (page->bytes[k] == ' ')
+            blank = k;
+    }
+}
+
 fescue_status page_close(struct page *page, char **out)
 {
     page_reserve(page, 0);

@@ -1,14 +1,17 @@
 /* SPDX-License-Identifier: MIT
  *
- * Rows and columns: how many cells they have, and which are empty, thin or constant, by their labels.
+ * Rows and columns: how many cells they have, and which are empty, thin or constant (more than chance makes: n cells
+ * agree with probability alike^(n-1)), by their labels.
  */
-#include "judge/judge_internal.h"
+#include "judge/survey_internal.h"
+
+#include <math.h>
 
 enum {
-    NAMED_MOST = 5,    /* labels of a list; the rest is counted */
     THIN_BELOW = 5,    /* cells under which a line is thin, when others have twice as many or more */
-    CONSTANT_LEAST = 3 /* cells that must agree: two may do so by chance */
+    CONSTANT_LEAST = 3 /* cells that must agree */
 };
+static const double by_chance = 0.05; /* lines whose cells agree by chance, below which one that does is odd */
 
 struct side {
     const struct cells *cells;
@@ -16,6 +19,7 @@ struct side {
     const struct labels *labels;
     const char *one, *many; /* "row", "rows" */
     uint64_t thin_below;
+    double alike; /* chance that two cells have the same value */
 };
 
 static uint64_t line_cells(const struct half *half, uint64_t line)
@@ -41,7 +45,7 @@ static bool is_thin(const struct side *side, uint32_t line)
 static bool is_constant(const struct side *side, uint32_t line)
 {
     uint64_t from = side->half->start[line], to = side->half->start[line + 1];
-    if (to - from < CONSTANT_LEAST)
+    if (to - from < CONSTANT_LEAST || side->half->lines * pow(side->alike, (double)(to - from - 1)) > by_chance)
         return false;
     for (uint64_t k = from + 1; k < to; k++)
         if (cells_value(side->cells, side->half, k) != cells_value(side->cells, side->half, from))
@@ -99,11 +103,13 @@ void survey_lines(struct survey *survey)
     struct side rows = {.cells = &table->cells,
                         .half = &table->cells.by_row,
                         .labels = &table->row_labels,
+                        .alike = survey->alike,
                         .one = "row",
                         .many = "rows"};
     struct side columns = {.cells = &table->cells,
                            .half = &table->cells.by_column,
                            .labels = &table->column_labels,
+                           .alike = survey->alike,
                            .one = "column",
                            .many = "columns"};
     side_tell(survey->page, &rows);

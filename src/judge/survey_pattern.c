@@ -7,17 +7,22 @@
  * unknowns of rank r are no more than the cells (m rows and n columns that have any), and above the rank at which c_r
  * falls under half of them the data cannot decide.
  */
-#include "judge/judge_internal.h"
+#include "judge/survey_internal.h"
+
+enum { BLOCKS_NAMED = 3 };
 
 struct block {
     uint64_t rows, columns, cells;
+    uint32_t number;
 };
 
 /* ---- blocks ----------------------------------------------------------------------------------------------------- */
 
 static void blocks_measure(const struct cells *cells, const uint32_t *row_block, const uint32_t *column_block,
-                           struct block *block)
+                           struct block *block, uint32_t count)
 {
+    for (uint32_t b = 0; b < count; b++)
+        block[b].number = b + 1;
     for (uint32_t i = 0; i < cells->rows; i++) {
         if (row_block[i] == 0)
             continue;
@@ -29,29 +34,64 @@ static void blocks_measure(const struct cells *cells, const uint32_t *row_block,
             block[column_block[j] - 1].columns++;
 }
 
-static void blocks_tell(struct page *page, struct block *block, uint32_t count)
+/* The BLOCKS_NAMED largest come to the front, equals in the order of their rows. */
+static void blocks_sort(struct block *block, uint32_t count)
 {
-    enum { NAMED_MOST = 3 };
-    if (count == 1) {
-        page_add(page, "The observed cells hang together in one block.\n");
-        return;
-    }
-    page_add(page, "The observed cells fall into %u blocks that share no row or column:", count);
-    for (uint32_t k = 0; k < count && k < NAMED_MOST; k++) {
-        uint32_t largest = k; /* the NAMED_MOST largest come to the front, equals in the order of their rows */
+    for (uint32_t k = 0; k < count && k < BLOCKS_NAMED; k++) {
+        uint32_t largest = k;
         for (uint32_t b = k + 1; b < count; b++)
             largest = block[b].cells > block[largest].cells ? b : largest;
         struct block next = block[largest];
         for (uint32_t b = largest; b > k; b--)
             block[b] = block[b - 1];
         block[k] = next;
-        page_add(page, "%s %llu by %llu (", k == 0 ? "" : ",", (unsigned long long)next.rows,
-                 (unsigned long long)next.columns);
-        page_count(page, next.cells, "cell)", "cells)");
     }
-    if (count > NAMED_MOST)
-        page_add(page, " and %u more", count - NAMED_MOST);
+}
+
+static void blocks_tell(struct page *page, const struct block *block, uint32_t count)
+{
+    if (count == 1) {
+        page_add(page, "The observed cells hang together in one block.\n");
+        return;
+    }
+    page_add(page, "The observed cells fall into %u blocks that share no row or column:", count);
+    for (uint32_t k = 0; k < count && k < BLOCKS_NAMED; k++) {
+        page_add(page, "%s %llu by %llu (", k == 0 ? "" : ",", (unsigned long long)block[k].rows,
+                 (unsigned long long)block[k].columns);
+        page_count(page, block[k].cells, "cell)", "cells)");
+    }
+    if (count > BLOCKS_NAMED)
+        page_add(page, " and %u more", count - BLOCKS_NAMED);
     page_add(page, ".\nA cell whose row and column lie in different blocks can only be filled from offsets.\n");
+}
+
+static void members_tell(const struct survey *survey, const struct labels *labels, const uint32_t *of, uint32_t lines,
+                         uint32_t number)
+{
+    uint64_t found = 0;
+    for (uint32_t line = 0; line < lines; line++) {
+        if (of[line] != number)
+            continue;
+        if (found < NAMED_MOST)
+            survey_label(survey, labels, line, found == 0 ? " " : ", ");
+        found++;
+    }
+    if (found > NAMED_MOST)
+        page_add(survey->page, " and %llu more", (unsigned long long)(found - NAMED_MOST));
+}
+
+/* The blocks beside the largest, by name. */
+static void orphans_tell(const struct survey *survey, const struct block *block, uint32_t count,
+                         const uint32_t *row_block, const uint32_t *column_block)
+{
+    const fescue_table *table = survey->table;
+    for (uint32_t k = 1; k < count && k < BLOCKS_NAMED; k++) {
+        page_add(survey->page, "Apart from the rest: %s", block[k].rows == 1 ? "row" : "rows");
+        members_tell(survey, &table->row_labels, row_block, survey->cells->rows, block[k].number);
+        page_add(survey->page, block[k].columns == 1 ? ", column" : ", columns");
+        members_tell(survey, &table->column_labels, column_block, survey->cells->columns, block[k].number);
+        page_add(survey->page, ".\n");
+    }
 }
 
 fescue_status survey_blocks(struct survey *survey)
@@ -59,17 +99,16 @@ fescue_status survey_blocks(struct survey *survey)
     fescue_status status = FESCUE_OK;
     fescue_context *context = survey->table->context;
     const struct cells *cells = survey->cells;
-    uint32_t *row_block = NULL, *column_block = NULL, count = 0;
+    uint32_t *row_block = survey->row_block, *column_block = survey->column_block, count = 0;
     struct block *block = NULL;
-    TRY(TAKE(context, cells->rows, &row_block));
-    TRY(TAKE(context, cells->columns, &column_block));
     TRY(blocks_find(context, cells, survey->row_core, survey->column_core, 0, row_block, column_block, &count));
     TRY(TAKE(context, count, &block));
-    blocks_measure(cells, row_block, column_block, block);
+    blocks_measure(cells, row_block, column_block, block, count);
+    blocks_sort(block, count);
+    survey->main_block = block[0].number;
     blocks_tell(survey->page, block, count);
+    orphans_tell(survey, block, count, row_block, column_block);
 done:
-    GIVE(context, &row_block);
-    GIVE(context, &column_block);
     GIVE(context, &block);
     return status;
 }

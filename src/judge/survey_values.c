@@ -3,10 +3,12 @@
  * The observed values: least, median, mean, greatest, how many decimals they carry, and whether they look like scores
  * on a closed scale (few different values, each seen often), for which bounds are worth giving.
  *
- * Decimals and different values are taken from at most SAMPLE_MOST cells, spread evenly over the table.
+ * Decimals, different values and the chance that two cells have the same value are taken from at most SAMPLE_MOST
+ * cells, spread evenly over the table.
  */
-#include "judge/judge_internal.h"
+#include "judge/survey_internal.h"
 
+#include <stdlib.h>
 #include <string.h>
 
 enum {
@@ -81,7 +83,34 @@ static void decimals_tell(struct survey *survey, const struct sample *sample)
         page_add(survey->page, ", %zu different", sample->different);
 }
 
-void survey_values(struct survey *survey)
+static int value_compare(const void *a, const void *b)
+{
+    const double *x = a, *y = b;
+    return (*x > *y) - (*x < *y);
+}
+
+/* Pairs of equal values among all pairs of the sample. */
+static fescue_status alike_find(struct survey *survey)
+{
+    fescue_status status = FESCUE_OK;
+    const struct cells *cells = survey->cells;
+    uint64_t step = cells->count / SAMPLE_MOST + 1, count = 0;
+    double *value = NULL, pairs = 0;
+    TRY(TAKE(survey->table->context, cells->count / step + 1, &value));
+    for (uint64_t k = 0; k < cells->count; k += step)
+        value[count++] = value_at(cells, k);
+    qsort(value, count, sizeof *value, value_compare);
+    for (uint64_t k = 0, from = 0; k < count; k++) {
+        from = value[k] == value[from] ? from : k;
+        pairs += (double)(k - from); /* with the equal ones before it */
+    }
+    survey->alike = count > 1 ? pairs / ((double)count * (double)(count - 1) / 2) : 0;
+done:
+    GIVE(survey->table->context, &value);
+    return status;
+}
+
+fescue_status survey_values(struct survey *survey)
 {
     const struct cells *cells = survey->cells;
     struct sample sample = {0};
@@ -100,4 +129,5 @@ void survey_values(struct survey *survey)
              value_median(cells), mean, survey->high);
     decimals_tell(survey, &sample);
     page_add(survey->page, ".\n");
+    return alike_find(survey);
 }

@@ -6,6 +6,7 @@
 #include "support_table.h"
 
 #include <stdlib.h>
+#include <stdio.h>
 #include <string.h>
 
 /* A table of one figure a place: digits are values, anything else is a hole. Rows and columns are labelled when names
@@ -240,6 +241,23 @@ static void a_shell_reads_arguments_back(void **state)
     }
 }
 
+/* A hundred to a line, broken at blanks, what goes on indented by four; words without a blank stay whole. */
+static void long_lines_are_broken(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct page page = {.context = context};
+    char *out, expected[512];
+    page_add(&page, "%0120d before\n", 0);
+    size_t from = page.length;
+    page_add(&page, "  ! %090d %05d %05d\n%0150d\nshort %0130d end\n", 1, 2, 3, 4, 5);
+    page_wrap(&page, from);
+    assert_status(context, page_close(&page, &out), FESCUE_OK);
+    snprintf(expected, sizeof expected, "%0120d before\n  ! %090d\n    %05d %05d\n%0150d\nshort\n    %0130d\n    end\n",
+             0, 1, 2, 3, 4, 5);
+    assert_string_equal(out, expected);
+    GIVE(context, &out);
+}
+
 static void a_lack_of_memory_leaks_nothing(void **state)
 {
     fescue_context *context = bench_of(state)->context;
@@ -275,6 +293,7 @@ int main(void)
         BENCH_TEST(the_largest_blocks_come_first),
         BENCH_TEST(foreign_text_is_made_safe),
         BENCH_TEST(a_shell_reads_arguments_back),
+        BENCH_TEST(long_lines_are_broken),
         BENCH_TEST(a_lack_of_memory_leaks_nothing),
     };
     return cmocka_run_group_tests_name("survey", tests, NULL, NULL);
