@@ -246,7 +246,7 @@ static void long_lines_are_broken(void **state)
 {
     fescue_context *context = bench_of(state)->context;
     struct page page = {.context = context};
-    char *out, expected[512];
+    char *out, expected[1024];
     page_add(&page, "%0120d before\n", 0);
     size_t from = page.length;
     page_add(&page, "  ! %090d %05d %05d\n%0150d\nshort %0130d end\n", 1, 2, 3, 4, 5);
