@@ -18,9 +18,9 @@ SANITIZE ?=
 WARNINGS = -Wall -Wextra -Wconversion -Wshadow -Wmissing-prototypes -Wstrict-prototypes -Wvla -Werror
 CFLAGS = -std=c17 -O3 -g -D_GNU_SOURCE -pthread -fno-math-errno -ffp-contract=off $(WARNINGS) $(SANITIZE) \
          -Isrc -Isrc/include -I/usr/include/suitesparse $(EXTRA)
-LIBS = -lcholmod -lamd -lcolamd -lsuitesparseconfig -llapacke -lopenblas -ljansson -lz -lm -pthread
+LIBS = -lcholmod -lamd -lcolamd -lsuitesparseconfig -llapacke -lopenblas -ljansson -linih -lsqlite3 -lz -lm -pthread
 
-FOLDERS = base table numeric manifold model solve judge write job
+FOLDERS = base table numeric manifold model solve judge write job night
 LIBRARY_SOURCES = $(foreach f,$(FOLDERS),$(wildcard src/$(f)/*.c))
 PROGRAM_SOURCES = $(wildcard src/cli/*.c)
 UNIT_SOURCES = $(wildcard tests/unit/test_*.c)
@@ -84,7 +84,8 @@ install: all
 	install -d $(DESTDIR)$(PREFIX)/bin $(DESTDIR)$(PREFIX)/lib $(DESTDIR)$(PREFIX)/include $(DESTDIR)$(PREFIX)/share/man/man1
 	install $(PROGRAM) $(DESTDIR)$(PREFIX)/bin
 	install -m 644 $(LIBRARY) $(DESTDIR)$(PREFIX)/lib
-	install -m 644 src/include/fescue.h src/include/fescue_options.def src/include/fescue_sow_options.def $(DESTDIR)$(PREFIX)/include
+	install -m 644 src/include/fescue.h src/include/fescue_options.def src/include/fescue_sow_options.def \
+	    src/include/fescue_night_options.def $(DESTDIR)$(PREFIX)/include
 	install -m 644 $(MANUALS) $(DESTDIR)$(PREFIX)/share/man/man1
 
 clean:

@@ -5,6 +5,7 @@
  *   failures    a function returns its status, outputs come last; the context keeps the first failure's sentence
  *   memory      one replaceable, counting allocator; sizes only by checked products
  *   files       one small table of system calls for every open, read, write, flush and rename
+ *   lock        one holder of a name at a time, among processes
  *   output      files that appear whole under their final name, or not at all
  *   random      counter-based numbers: a draw depends on (seed, stream, index) and on nothing else
  *   team        the workers: who am I, how many are we, sum these numbers in a fixed order
@@ -116,6 +117,21 @@ void file_map(fescue_context *context, int descriptor, size_t size, const void *
 void file_unmap(fescue_context *context, const void **bytes, size_t size); /* NULL-safe; nulls the pointer */
 void file_close(fescue_context *context, int *descriptor); /* -1 and standard input are left alone; sets -1 */
 
+/* ---- locks ----------------------------------------------------------------------------------------------------- */
+
+/* One holder of a name at a time, among all processes; a holder that dies lets go. A zero lock holds nothing. */
+struct lock {
+    char *path;
+    int descriptor;
+};
+/* Takes the lock whose file is `path` on `what` (for people), waiting up to `patience` seconds for another holder.
+   FESCUE_CANNOT_CREATE: held all that time, and the sentence says by whom; or no file can be made there. */
+fescue_status lock_take(fescue_context *context, const char *path, const char *what, double patience,
+                        struct lock *lock);
+void lock_give(fescue_context *context, struct lock *lock); /* idempotent; nothing happens to a lock not taken */
+/* Makes a directory and its missing parents; FESCUE_CANNOT_CREATE. */
+fescue_status directory_make(fescue_context *context, const char *path);
+
 /* ---- output: whole under the final name, or not at all ---------------------------------------------------------- */
 
 /* A set of files of one directory that appear together. Each is written beside its final name under a temporary one;
@@ -134,6 +150,8 @@ fescue_status output_add(struct output *output, const char *name, struct outfile
 fescue_status output_retire(struct output *output, const char *name);
 fescue_status output_publish(struct output **output); /* takes the set, also when it fails; nulls the pointer */
 void output_abandon(struct output **output);          /* NULL-safe; nulls the pointer */
+/* Removes the temporary files that processes which died left in a directory. FESCUE_NO_MEMORY. */
+fescue_status output_sweep(fescue_context *context, const char *directory);
 
 /* Appending to one file. Failures are sticky: after one, further calls do nothing and outfile_status tells; publish
    fails too. So a writer may check once, at its end. */

@@ -22,9 +22,13 @@
 #include "base/output_internal.h"
 
 #include <assert.h>
+#include <dirent.h>
 #include <errno.h>
 #include <fcntl.h>
+#include <signal.h>
+#include <stdlib.h>
 #include <string.h>
+#include <unistd.h>
 
 struct retired { /* a name that must be gone when the set is there */
     struct retired *next;
@@ -106,6 +110,14 @@ static fescue_status directory_open(struct output *output)
         return FESCUE_OK;
     return FAIL(context, FESCUE_CANNOT_CREATE, "%s: cannot be made or opened as a directory: %s", output->directory,
                 error_text(context, errno == ENOENT && error != 0 ? error : errno));
+}
+
+fescue_status directory_make(fescue_context *context, const char *path)
+{
+    struct output *output = NULL;
+    fescue_status status = output_open(context, path, NULL, &output);
+    output_abandon(&output);
+    return status;
 }
 
 /* ---- the set ---------------------------------------------------------------------------------------------------- */
@@ -211,6 +223,41 @@ fescue_status output_retire(struct output *output, const char *name)
 done:
     if (status != FESCUE_OK && retired != NULL)
         retired_destroy(context, retired);
+    return status;
+}
+
+/* ---- what the dead left ------------------------------------------------------------------------------------------ */
+
+/* ".NAME.PROCESS.part" of a process that is no more. */
+static bool is_left(const char *name)
+{
+    static const char ending[] = ".part";
+    size_t length = strlen(name), cut = sizeof ending - 1;
+    if (name[0] != '.' || length <= cut || strcmp(name + length - cut, ending) != 0)
+        return false;
+    size_t first = length - cut;
+    while (first > 1 && name[first - 1] >= '0' && name[first - 1] <= '9')
+        first--;
+    long process = strtol(name + first, NULL, 10);
+    return first < length - cut && name[first - 1] == '.' && process > 0 && process < INT32_MAX &&
+           kill((pid_t)process, 0) != 0 && errno == ESRCH;
+}
+
+fescue_status output_sweep(fescue_context *context, const char *directory)
+{
+    char *path = NULL;
+    fescue_status status = FESCUE_OK;
+    DIR *folder = opendir(directory);
+    for (struct dirent *entry = NULL; folder != NULL && (entry = readdir(folder)) != NULL;) {
+        if (!is_left(entry->d_name))
+            continue;
+        TRY(path_join(context, directory, "/", entry->d_name, "", &path));
+        context->files->unlink(path);
+        GIVE(context, &path);
+    }
+done:
+    if (folder != NULL)
+        closedir(folder);
     return status;
 }
 

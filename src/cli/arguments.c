@@ -28,6 +28,8 @@ struct grammar {
 
 const struct fescue_option *command_options(const struct command *command, size_t *count)
 {
+    if (command->flag == FESCUE_FOR_NIGHT)
+        return fescue_night_option_table(count);
     return command->flag == FESCUE_FOR_SOW ? fescue_sow_option_table(count) : fescue_option_table(count);
 }
 
@@ -64,39 +66,13 @@ static void grammar_build(const struct command *command, struct grammar *grammar
 
 /* ---- messages --------------------------------------------------------------------------------------------------- */
 
-static size_t smaller(size_t a, size_t b)
-{
-    return a < b ? a : b;
-}
-
-/* How many letters must be put in, left out or changed to get from `typed` to `name` (dynamic programming, row by
-   row); a large number when `typed` is too long to be a slip. */
-static size_t slips_count(const char *typed, size_t length, const char *name)
-{
-    enum { LONGEST = 40 };
-    size_t row[LONGEST + 1];
-    if (length > LONGEST)
-        return LONGEST;
-    for (size_t i = 0; i <= length; i++)
-        row[i] = i;
-    for (size_t j = 0; name[j] != '\0'; j++) {
-        size_t corner = row[0]++;
-        for (size_t i = 0; i < length; i++) {
-            size_t change = corner + (typed[i] != name[j]);
-            corner = row[i + 1];
-            row[i + 1] = smaller(change, 1 + smaller(row[i], row[i + 1]));
-        }
-    }
-    return row[length];
-}
-
 static fescue_status unknown_say(const struct command *command, const struct grammar *grammar, const char *argument)
 {
     const char *name = argument + 2, *best = NULL;
     size_t length = strcspn(name, "="), fewest = 3; /* up to two slips make a guess worth showing */
     for (const struct option *option = grammar->longs; option->name != NULL; option++) {
         bool begins = length >= 3 && strncmp(name, option->name, length) == 0;
-        size_t slips = begins ? 1 : slips_count(name, length, option->name);
+        size_t slips = begins ? 1 : fescue_slips(name, length, option->name);
         if (slips < fewest) {
             best = option->name;
             fewest = slips;
@@ -147,6 +123,8 @@ static fescue_status option_set(struct request *request, const struct fescue_opt
 {
     if (strcmp(option->name, "output") == 0 && text[0] == '\0')
         return say_usage("--output: found \"\", expected the name of a directory");
+    if (request->command->flag == FESCUE_FOR_NIGHT)
+        return fescue_night_options_set(request->context, &request->night_options, option->name, text);
     return request->command->flag == FESCUE_FOR_SOW
                ? fescue_sow_options_set(request->context, &request->sow_options, option->name, text)
                : fescue_options_set(request->context, &request->options, option->name, text);
@@ -211,7 +189,7 @@ fescue_status arguments_read(int argc, char **argv, struct request *request)
     }
     fescue_status status = rest_take(argc, argv, request);
     if (status == FESCUE_OK && request->command->positional != NULL && request->table == NULL)
-        return say_usage("%s needs a %s; \"-\" is standard input", request->command->name,
-                         request->command->positional);
+        return say_usage("%s needs a %s%s", request->command->name, request->command->positional,
+                         request->command->flag == FESCUE_FOR_NIGHT ? "" : "; \"-\" is standard input");
     return status;
 }

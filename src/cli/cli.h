@@ -8,7 +8,7 @@
  *   say         sentences for people, on standard error
  *   progress    the moving line on a terminal
  *   place       where the files of a run go
- *   fill, survey, sow   the commands
+ *   fill, survey, sow, night   the commands
  *
  * Data go to files or standard output, everything else to standard error. A failure is one line "fescue: sentence", and
  * the exit status is that of fescue.h's status list.
@@ -27,6 +27,7 @@ struct request {
     const char *table; /* the positional argument, borrowed; NULL when not given */
     struct fescue_options options;
     struct fescue_sow_options sow_options;
+    struct fescue_night_options night_options;
     struct progress *progress;
     bool quiet, verbose, help;
 };
@@ -45,6 +46,7 @@ extern const size_t command_count;
 fescue_status command_fill(struct request *request);
 fescue_status command_survey(struct request *request);
 fescue_status command_sow(struct request *request);
+fescue_status command_night(struct request *request);
 
 /* The options that are the program's own, not the library's. */
 struct own_option {

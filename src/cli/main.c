@@ -24,6 +24,11 @@ const struct command commands[] = {
      FESCUE_FOR_SURVEY, command_survey},
     {"sow", NULL, "make a synthetic table with known truth",
      "Writes a synthetic table and the truth it was made from into a directory.", FESCUE_FOR_SOW, command_sow},
+    {"night", "PLAN", "fill many tables unattended, with a ledger and a summary",
+     "Runs the jobs of PLAN, an INI file: each in a process of its own, within limits of time and memory, with "
+     "checkpoints. Run again, it goes on; what is done and unchanged is not done again. The summary goes to standard "
+     "error, and with the ledger of all nights beside the plan.",
+     FESCUE_FOR_NIGHT, command_night},
 };
 const size_t command_count = sizeof commands / sizeof commands[0];
 
@@ -88,6 +93,7 @@ static fescue_status command_run(const struct command *command, int argc, char *
     signals_set(request.context);
     fescue_options_standard(&request.options);
     fescue_sow_options_standard(&request.sow_options);
+    fescue_night_options_standard(&request.night_options);
     status = arguments_read(argc, argv, &request);
     if (status == FESCUE_OK && request.help) {
         help_command(stdout, command);

@@ -34,6 +34,7 @@ extern "C" {
 
 #define FESCUE_STATUS_LIST(X)                                                                                          \
     X(FESCUE_OK, 0, "done")                                                                                            \
+    X(FESCUE_SOME_FAILED, 1, "some jobs of a night failed")                                                            \
     X(FESCUE_USAGE, 64, "the request is not one this program takes")                                                   \
     X(FESCUE_BAD_DATA, 65, "the data are malformed")                                                                   \
     X(FESCUE_NO_INPUT, 66, "the input cannot be read")                                                                 \
@@ -134,7 +135,8 @@ typedef struct fescue_range fescue_range_value;
 typedef double fescue_time_value;
 typedef int64_t fescue_bytes_value;
 
-enum { FESCUE_FOR_FILL = 1, FESCUE_FOR_SURVEY = 2, FESCUE_FOR_SOW = 4 }; /* commands an option belongs to */
+/* Commands an option belongs to; PLAN: the section [night] of a plan. */
+enum { FESCUE_FOR_FILL = 1, FESCUE_FOR_SURVEY = 2, FESCUE_FOR_SOW = 4, FESCUE_FOR_NIGHT = 8, FESCUE_FOR_PLAN = 16 };
 
 struct fescue_option {
     const char *name; /* "holdout": --holdout */
@@ -161,17 +163,30 @@ struct fescue_sow_options {
 #include "fescue_sow_options.def"
 #undef OPTION
 };
+struct fescue_night_options {
+#define OPTION(field, kind, name, letter, automatic, standard, least, most, words, commands, help)                     \
+    fescue_##kind##_value field;
+#include "fescue_night_options.def"
+#undef OPTION
+};
 
 const struct fescue_option *fescue_option_table(size_t *count);
 const struct fescue_option *fescue_sow_option_table(size_t *count);
+const struct fescue_option *fescue_night_option_table(size_t *count);
 void fescue_options_standard(struct fescue_options *options);
 void fescue_sow_options_standard(struct fescue_sow_options *options);
+void fescue_night_options_standard(struct fescue_night_options *options);
 /* Sets the option `name` (without dashes) from text; a flag takes NULL, "yes" or "no". FESCUE_USAGE with a sentence
    that names option, value and what is taken. TEXT values are borrowed. */
 fescue_status fescue_options_set(fescue_context *context, struct fescue_options *options, const char *name,
                                  const char *text);
 fescue_status fescue_sow_options_set(fescue_context *context, struct fescue_sow_options *options, const char *name,
                                      const char *text);
+fescue_status fescue_night_options_set(fescue_context *context, struct fescue_night_options *options, const char *name,
+                                       const char *text);
+/* How many letters must be put in, left out or changed to get from the first `length` bytes of `typed` to `name`: for
+   guessing what was meant. A large number when `typed` is too long to be a slip. */
+size_t fescue_slips(const char *typed, size_t length, const char *name);
 /* The value of an option as text that fescue_options_set takes back, into text (at least 128 bytes). */
 void fescue_option_text(const struct fescue_option *option, const void *options, char *text, size_t size);
 
@@ -221,6 +236,27 @@ void fescue_fill_destroy(fescue_fill **fill);
 fescue_status fescue_sow(fescue_context *context, const struct fescue_sow_options *options, const char *directory,
                          char **text);
 void fescue_text_free(fescue_context *context, char **text);
+
+/* ---- night
+ * ------------------------------------------------------------------------------------------------------------- */
+
+/* Many jobs of fill, unattended: a plan (an INI file), a ledger of all nights beside it, a summary in the morning. Jobs
+   run in child processes, so the calling program should have no threads of its own while a night runs. */
+typedef struct fescue_night fescue_night;
+/* Reads the plan; what `given` sets goes before what the plan says. FESCUE_NO_INPUT; FESCUE_USAGE with one sentence
+   that names file, line and key. The caller owns *out. */
+fescue_status fescue_night_read(fescue_context *context, const char *plan, const struct fescue_night_options *given,
+                                fescue_night **out);
+/* Runs what there is to run. FESCUE_OK: every job is done; FESCUE_STOPPED: some stopped with a checkpoint or were not
+   begun, the same call goes on; FESCUE_SOME_FAILED. Other statuses: the night itself could not be held. */
+fescue_status fescue_night_run(fescue_night *night);
+/* The morning summary of fescue_night_run, or before it the jobs as planned; owned by the night. */
+const char *fescue_night_text(const fescue_night *night);
+/* The directory that holds the morning summary's files; owned by the night. */
+const char *fescue_night_place(const fescue_night *night);
+/* What the ledger holds, as text; free with fescue_text_free. */
+fescue_status fescue_night_history(fescue_night *night, char **text);
+void fescue_night_destroy(fescue_night **night);
 
 #ifdef __cplusplus
 }

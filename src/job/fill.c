@@ -148,6 +148,7 @@ static void run_view(fescue_fill *fill)
     run->determined = &fill->determined;
     run->judgement = &fill->judgement;
     run->shape = &fill->shape;
+    run->is_search_cut = fill->is_search_cut;
     run->writes_filled = is_auto ? is_dense : (write & WRITE_FILLED) != 0;
     run->writes_cells = is_auto ? is_dense : (write & WRITE_CELLS) != 0;
     run->writes_factors = is_auto || (write & WRITE_FACTORS) != 0;

@@ -70,22 +70,4 @@ struct fescue_fill {
 /* The summary, new and owned by the caller; with the lines on files when they are being written. */
 fescue_status fill_summarise(const fescue_fill *fill, bool is_written, char **text);
 
-/* ---- text for people ----------------------------------------------------------------------------------------------
- */
-
-/* A text that grows. Failures are sticky: text_finish tells. */
-struct text {
-    fescue_context *context;
-    fescue_status status;
-    size_t length, capacity;
-    char *bytes;
-};
-/* Formats are for texts and whole numbers: what they print does not depend on the locale then. Reals go in by
-   real_to_words. At most 1023 bytes at once. */
-void text_add(struct text *text, const char *format, ...) __attribute__((format(printf, 2, 3)));
-/* Hands over the text, or frees it and tells the first failure. */
-fescue_status text_finish(struct text *text, char **out);
-/* value to so many significant digits, at most 15, trailing zeros dropped, whatever the locale. */
-const char *real_to_words(double value, int digits, char text[32]);
-
 #endif

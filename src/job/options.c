@@ -1,7 +1,6 @@
 /* SPDX-License-Identifier: MIT
  *
- * The two tables of options, made from the lists in include/fescue_options.def and include/fescue_sow_options.def, and
- * setting an option by name.
+ * The tables of options, made from the lists in include/fescue_*options.def, and setting an option by name.
  */
 #include "job/job_internal.h"
 
@@ -37,6 +36,12 @@ static const struct fescue_option sow_option_table[] = {
 #undef OPTION
 };
 
+static const struct fescue_option night_option_table[] = {
+#define OPTION(...) ENTRY_(fescue_night_options, __VA_ARGS__)
+#include "fescue_night_options.def"
+#undef OPTION
+};
+
 const struct fescue_option *fescue_option_table(size_t *count)
 {
     *count = sizeof option_table / sizeof option_table[0];
@@ -47,6 +52,12 @@ const struct fescue_option *fescue_sow_option_table(size_t *count)
 {
     *count = sizeof sow_option_table / sizeof sow_option_table[0];
     return sow_option_table;
+}
+
+const struct fescue_option *fescue_night_option_table(size_t *count)
+{
+    *count = sizeof night_option_table / sizeof night_option_table[0];
+    return night_option_table;
 }
 
 static void *field_of(const struct fescue_option *option, void *options)
@@ -84,6 +95,14 @@ void fescue_sow_options_standard(struct fescue_sow_options *options)
     standard_set(table, count, options);
 }
 
+void fescue_night_options_standard(struct fescue_night_options *options)
+{
+    size_t count;
+    const struct fescue_option *table = fescue_night_option_table(&count);
+    *options = (struct fescue_night_options){0};
+    standard_set(table, count, options);
+}
+
 static fescue_status option_set(fescue_context *context, const struct fescue_option *table, size_t count, void *options,
                                 const char *const name_and_text[2])
 {
@@ -116,4 +135,37 @@ fescue_status fescue_sow_options_set(fescue_context *context, struct fescue_sow_
     size_t count;
     const struct fescue_option *table = fescue_sow_option_table(&count);
     return option_set(context, table, count, options, (const char *const[]){name, text});
+}
+
+fescue_status fescue_night_options_set(fescue_context *context, struct fescue_night_options *options, const char *name,
+                                       const char *text)
+{
+    size_t count;
+    const struct fescue_option *table = fescue_night_option_table(&count);
+    return option_set(context, table, count, options, (const char *const[]){name, text});
+}
+
+static size_t smaller(size_t a, size_t b)
+{
+    return a < b ? a : b;
+}
+
+/* Dynamic programming, row by row. */
+size_t fescue_slips(const char *typed, size_t length, const char *name)
+{
+    enum { LONGEST = 40 };
+    size_t row[LONGEST + 1];
+    if (length > LONGEST)
+        return LONGEST;
+    for (size_t i = 0; i <= length; i++)
+        row[i] = i;
+    for (size_t j = 0; name[j] != '\0'; j++) {
+        size_t corner = row[0]++;
+        for (size_t i = 0; i < length; i++) {
+            size_t change = corner + (typed[i] != name[j]);
+            corner = row[i + 1];
+            row[i + 1] = smaller(change, 1 + smaller(row[i], row[i + 1]));
+        }
+    }
+    return row[length];
 }

@@ -324,21 +324,6 @@ static void files_lines(struct summary *summary)
     left_out_line(summary, "the factors", run_why_left_out(run, run->writes_factors));
 }
 
-/* Words in lines of at most 80. */
-static void words_wrap(struct text *text, const char *words)
-{
-    enum { WIDTH = 80 };
-    while (*words != '\0') {
-        size_t length = strlen(words);
-        if (length > WIDTH)
-            for (length = WIDTH; words[length] != ' ';)
-                length--;
-        text_add(text, "%.*s\n", (int)length, words);
-        words += length;
-        words += *words == ' ';
-    }
-}
-
 fescue_status fill_summarise(const fescue_fill *fill, bool is_written, char **text)
 {
     struct summary summary = {.fill = fill, .run = &fill->run, .text = {.context = fill->context}};

@@ -70,3 +70,17 @@ const char *real_to_words(double value, int digits, char text[32])
     real_to_text(value, FESCUE_DOUBLE, text);
     return text;
 }
+
+void words_wrap(struct text *text, const char *words)
+{
+    enum { WIDTH = 80 };
+    while (*words != '\0') {
+        size_t length = strlen(words);
+        if (length > WIDTH)
+            for (length = WIDTH; words[length] != ' ';)
+                length--;
+        text_add(text, "%.*s\n", (int)length, words);
+        words += length;
+        words += *words == ' ';
+    }
+}

@@ -4,7 +4,7 @@
  * complete.
  *
  *   program, version, caution
- *   input     path, crc32 and bytes (as on disk), shape, rows, columns, observed, duplicates
+ *   input     path, crc32 and bytes (as on disk), shape, rows, columns, observed, duplicates, checksums of the labels
  *   time      which side is in time, its step, gaps, equal times; or along none
  *   weights   whether cells, rows, columns brought their own, and the range of the cells' (mean one)
  *   options   every option that bears on results, as the text that sets it
@@ -26,6 +26,7 @@
 #include <stdio.h>
 #include <string.h>
 #include <time.h>
+#include <zlib.h>
 
 /* An object in the making; `failed` stays once there was no memory. */
 struct record {
@@ -82,6 +83,25 @@ static void text_set(struct record *record, const char *key, const char *text)
     value_set(record, key, value);
 }
 
+/* Checksum of the labels, each with its NUL; of the number of lines alone where the side has none. */
+static void labels_set(struct record *record, const char *key, const struct labels *labels, uint32_t lines)
+{
+    char text[16];
+    uLong crc = crc32(0, (const Bytef *)&lines, sizeof lines);
+    for (uint32_t k = 0; labels->text != NULL && k < labels->count; k++)
+        crc = crc32(crc, (const Bytef *)labels->text[k], (uInt)strlen(labels->text[k]) + 1);
+    snprintf(text, sizeof text, "%08lx", crc & 0xffffffffUL);
+    text_set(record, key, text);
+}
+
+static double effects_rms(const double *effect, uint32_t count)
+{
+    double square = 0;
+    for (uint32_t k = 0; k < count; k++)
+        square += effect[k] * effect[k];
+    return sqrt(square / count);
+}
+
 static void flag_set(struct record *record, const char *key, bool value)
 {
     value_set(record, key, json_boolean(value));
@@ -117,6 +137,8 @@ static struct record input_record(const struct run *run)
     count_set(&input, "columns", table->cells.columns);
     count_set(&input, "observed", table->cells.count);
     count_set(&input, "duplicates", table->duplicates);
+    labels_set(&input, "row_labels_crc32", &table->row_labels, table->cells.rows);
+    labels_set(&input, "column_labels_crc32", &table->column_labels, table->cells.columns);
     return input;
 }
 
@@ -152,7 +174,16 @@ static struct record time_record(const struct run *run)
     return record;
 }
 
-/* Where the results went and how many workers there were bears on no result. */
+/* Where results and checkpoints went and how many workers there were bears on no result. */
+static bool is_no_matter(const char *name)
+{
+    static const char *const names[] = {"output", "threads", "checkpoint", "checkpoint-every"};
+    for (size_t k = 0; k < sizeof names / sizeof *names; k++)
+        if (strcmp(name, names[k]) == 0)
+            return true;
+    return false;
+}
+
 static struct record options_record(const struct run *run)
 {
     struct record options = record_open(run->context);
@@ -160,7 +191,7 @@ static struct record options_record(const struct run *run)
     const struct fescue_option *table = fescue_option_table(&count);
     for (size_t k = 0; k < count; k++) {
         char text[128];
-        if (strcmp(table[k].name, "output") == 0 || strcmp(table[k].name, "threads") == 0)
+        if (is_no_matter(table[k].name))
             continue;
         fescue_option_text(&table[k], run->options, text, sizeof text);
         text_set(&options, table[k].name, text);
@@ -211,6 +242,7 @@ static struct record choice_record(const struct run *run)
     real_set(&record, "rmse_of_best_offsets_alone", choice->errors.count > 0 ? choice->offsets_only_rank0_rmse : NAN);
     flag_set(&record, "hidden_for_choice_only", choice->own_holdout);
     flag_set(&record, "noiseless", choice->noiseless);
+    flag_set(&record, "cut_by_time_limit", run->is_search_cut);
     for (uint64_t k = 0; k < choice->path_count; k++) {
         struct record step = step_record(run, &choice->path[k]);
         path.failed = path.failed || step.failed;
@@ -305,6 +337,8 @@ static struct record model_record(const struct run *run)
     struct record record = record_open(run->context), spectrum = {run->context, json_array(), false};
     count_set(&record, "rank", model->low_rank.rank);
     real_set(&record, "mean", model->offsets.mean);
+    real_set(&record, "row_offsets_rms", effects_rms(model->offsets.row, model->rows));
+    real_set(&record, "column_offsets_rms", effects_rms(model->offsets.column, model->columns));
     real_set(&record, "row_ridge", model->offsets.row_ridge);
     real_set(&record, "column_ridge", model->offsets.column_ridge);
     for (size_t k = 0; k < model->low_rank.rank; k++)

@@ -36,6 +36,7 @@ struct run {
     const struct hole_shape *shape;            /* of what was hidden */
     double started, seconds_wall, seconds_cpu; /* started: Unix time */
     uint64_t hidden;                           /* cells held out while choosing */
+    bool is_search_cut;                        /* the time limit ended the choosing */
     uint64_t filled[BASIS_COUNT];              /* unseen cells by basis, those left blank among them */
     uint64_t blank;                            /* cells left blank by --strict */
     bool writes_filled, writes_cells, writes_factors;
@@ -73,5 +74,9 @@ fescue_status write_record(const struct run *run, struct output *output);    /* 
    with one line of comment or NULL. */
 void write_field(struct outfile *file, const char *text, char separator);
 fescue_status write_array(struct output *output, const char *name, struct matrix matrix, const char *comment);
+
+/* A value of Jansson as text, and a line break. False when there was no memory for it (or the file has failed). */
+struct json_t;
+bool json_put(struct outfile *file, struct json_t *value);
 
 #endif

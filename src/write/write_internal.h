@@ -9,7 +9,4 @@
 
 #include <jansson.h>
 
-/* The value as text, and a line break. False when there was no memory for it (or the file has failed). */
-bool json_put(struct outfile *file, json_t *value);
-
 #endif

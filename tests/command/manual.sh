@@ -25,7 +25,7 @@ item() { # PAGE NAME
         inside && wanted' "$1" | sed 's/[.,;:]$//; s/ [.,;:]//g'
 }
 
-for command in fill survey sow; do
+for command in fill survey sow night; do
     page=$root/src/man/fescue-$command.1
     "$FESCUE" $command --help >help
     sed -n 's/^  \(.\)\(.\)[ ,]*\(--[a-z-]*\).*/\2 \3/p' help | sed 's/^  *--/- /; s/ --/ /' | sort >wanted
@@ -35,6 +35,7 @@ for command in fill survey sow; do
 
     list=$root/src/include/fescue_options.def
     [ $command != sow ] || list=$root/src/include/fescue_sow_options.def
+    [ $command != night ] || list=$root/src/include/fescue_night_options.def
     flag=FESCUE_FOR_$(echo $command | tr a-z A-Z)
     grep '^OPTION' "$list" | grep "$flag" >lines
     while IFS= read -r line; do

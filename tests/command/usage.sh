@@ -22,6 +22,8 @@ misuse 'fill takes one TABLE, found a second: "b"' fill a b
 misuse 'fill takes one TABLE, found a second: "--rank"' fill a -- --rank
 misuse 'sow takes no argument, found "table"' sow table
 misuse 'sow needs to be told where the table and its truth go: -o DIR' sow
+misuse 'night needs a PLAN' night
+misuse '--threads: found "none", expected a whole number from 1 to 1024, or auto' night --threads none plan.ini
 misuse 'fill takes no option --rnk; is --rank meant?' fill --rnk 3 table
 misuse 'fill takes no option --hold; is --holdout meant?' fill --hold=0.2 table
 misuse 'fill takes no option --scenery; "fescue fill --help" lists them' fill --scenery table
@@ -45,7 +47,7 @@ try 0 --version
 check "the version is that of the header" grep -qx "fescue $(sed -n 's/^#define FESCUE_VERSION "\(.*\)"/\1/p' \
     "$root/src/include/fescue.h")" out
 check "and nothing else" is_empty err
-for arguments in --help 'fill --help' 'survey -h' 'sow --help' 'fill --rank 3 --help'; do
+for arguments in --help 'fill --help' 'survey -h' 'sow --help' 'night -h' 'fill --rank 3 --help'; do
     try 0 $arguments
     check "on standard output" grep -q '^usage: fescue' out
     check "nothing on standard error" is_empty err
@@ -53,7 +55,8 @@ for arguments in --help 'fill --help' 'survey -h' 'sow --help' 'fill --rank 3 --
 done
 
 # Every option of the lists is in the help of the commands that it belongs to, and only there.
-for command in fill:FESCUE_FOR_FILL:options survey:FESCUE_FOR_SURVEY:options sow:FESCUE_FOR_SOW:sow_options; do
+for command in fill:FESCUE_FOR_FILL:options survey:FESCUE_FOR_SURVEY:options sow:FESCUE_FOR_SOW:sow_options \
+    night:FESCUE_FOR_NIGHT:night_options; do
     name=${command%%:*}
     flag=${command#*:}
     flag=${flag%:*}

@@ -3,7 +3,7 @@
 #
 # The order of the folders: each may use those before it, none after it.
 #
-#     base table numeric manifold model solve judge write job        and cli, which sees fescue.h alone
+#     base table numeric manifold model solve judge write job night   and cli, which sees fescue.h alone
 #
 # Looked at twice: in the includes, and, where objects are built, in who calls whom. The inside of a folder
 # (x_internal.h) stays in it. write may know judge's types, since it writes them, and calls nothing of it.
@@ -13,7 +13,7 @@
 . "$(dirname "$0")/common"
 
 readers='basis_word determined_basis judgement_halfwidth judge_levels fescue_option_table fescue_option_text'
-order='base table numeric manifold model solve judge write job cli'
+order='base table numeric manifold model solve judge write job night cli'
 
 # Lines "FILE FOLDER INCLUDED".
 includes=$(tracked 'src/*.c' 'src/*.h' | while IFS= read -r file; do

@@ -200,9 +200,11 @@ static void only_flags_go_without_a_value(void **state)
 static void names_are_distinct(void **state)
 {
     (void)state;
-    for (int which = 0; which < 2; which++) {
+    for (int which = 0; which < 3; which++) {
         size_t count;
-        const struct fescue_option *table = which == 0 ? fescue_option_table(&count) : fescue_sow_option_table(&count);
+        const struct fescue_option *table = which == 0   ? fescue_option_table(&count)
+                                            : which == 1 ? fescue_sow_option_table(&count)
+                                                         : fescue_night_option_table(&count);
         assert_true(count > 0);
         for (size_t k = 0; k < count; k++) {
             assert_non_null(table[k].help);
