@@ -6,7 +6,7 @@
  *   1  offsets by ridge least squares; the trimmed spectral start gives all components asked for at once
  *   2  rounds until the estimates settle; what the data do not support is pruned
  *   3  leading pairs of the residual join as further components, rounds again: while more live, go on
- *   4  rounds to the final tolerance
+ *   4  rounds to the final tolerance; where cells are scarce and a component is lost on the way, 3 and 4 once more
  *
  * A component lives while its standard deviation in the table is above a thousandth of the noise's: pruned ones fall
  * towards 0 quadratically, living ones do not come near that. Growth by the residual's leading pair is what made nearly
@@ -22,6 +22,11 @@
 #define START_NOISE 0.25
 /* Components that join at once: among several the rounds find the directions that one alone may miss. */
 enum { GROW_BLOCK = 4 };
+/* Steps that align what has joined, and their change. */
+enum { ALIGN_STEPS = 30 };
+#define ALIGN_CHANGE 1e-2
+/* Cells over unknowns below which components are lost that the data support. */
+#define SCARCE 4.0
 /* Rounds between two growths, and the tolerance at which they end earlier. */
 #define GROW_ROUNDS 10
 #define GROW_CHANGE 1e-3
@@ -29,6 +34,27 @@ enum { GROW_BLOCK = 4 };
 static bool is_late(const struct evidence_request *request)
 {
     return request->deadline > 0 && clock_wall() >= request->deadline;
+}
+
+static bool is_scarce(const struct cells *cells, size_t rank)
+{
+    double lines = (double)cells->rows + (double)cells->columns;
+    return (double)cells->count < SCARCE * (double)rank * (lines - (double)rank);
+}
+
+/* A few unshrunk steps, in which what has joined finds its direction: the leading pair of few cells' residual is mostly
+   chance, and the rounds would lose a weak component before they had turned it. Where cells abound the pair will do. */
+static fescue_status point_align(struct problem *problem, const struct evidence_request *request,
+                                 struct low_rank *point)
+{
+    const struct solve_limits limits = {
+        .iterations = ALIGN_STEPS, .gradient = 1e-6, .change = ALIGN_CHANGE, .deadline = request->deadline};
+    struct solve_result result = {0};
+    if (!is_scarce(&problem->target, point->rank))
+        return FESCUE_OK;
+    fescue_status status = solve_run(problem, solver_find("grassmann-cg"), &limits, point, &result);
+    solve_result_free(problem->context, &result);
+    return status;
 }
 
 /* Adds components to *model, of which the offsets stand: the spectral start's `rank` when it has none yet, else a
@@ -50,6 +76,7 @@ static fescue_status model_grow(fescue_context *context, const struct cells *cel
             point->spectrum[k] /= problem.scale;
         for (size_t k = 0; k < GROW_BLOCK && point->rank < request->rank_most; k++)
             TRY(start_grow(&problem, request->seed + point->rank, point));
+        TRY(point_align(&problem, request, point));
     }
     for (size_t k = 0; k < point->rank; k++)
         point->spectrum[k] *= problem.scale;
@@ -75,20 +102,17 @@ static fescue_status refit(fescue_context *context, const struct cells *cells, c
     return next.fit.stop == STOP_CANCELLED ? FESCUE_STOPPED : FESCUE_OK;
 }
 
-fescue_status evidence_learn(fescue_context *context, const struct cells *cells, const struct evidence_request *request,
-                             struct evidence_result *out)
+/* Components join for as long as more of them live, out->model having its offsets and what has joined already. */
+static fescue_status components_grow(fescue_context *context, const struct cells *cells,
+                                     const struct evidence_request *request, struct evidence_result *out)
 {
     struct evidence_request step = *request;
-    size_t alive = 0;
+    size_t alive = out->model.low_rank.rank;
     fescue_status status;
-    *out = (struct evidence_result){.model = {.rows = cells->rows, .columns = cells->columns}};
-    out->model.bounds = (struct fescue_range){-INFINITY, INFINITY};
     step.noise = EVIDENCE_NOISE_EQUAL;
     step.time = NULL;
     step.rounds = GROW_ROUNDS;
     step.change = GROW_CHANGE;
-    TRY(offsets_fit(context, cells, request->offsets, &out->model.offsets));
-    TRY(low_rank_create(context, cells->rows, cells->columns, 0, &out->model.low_rank));
     for (;;) {
         TRY(model_grow(context, cells, &step, &out->model));
         TRY(refit(context, cells, &step, out));
@@ -97,14 +121,37 @@ fescue_status evidence_learn(fescue_context *context, const struct cells *cells,
             break;
         alive = now;
     }
-    step.rounds = request->rounds;
-    step.change = request->change;
-    TRY(refit(context, cells, &step, out));
-    if (request->noise != EVIDENCE_NOISE_EQUAL || request->time != NULL) {
-        step.noise = request->noise;
-        step.time = request->time;
-        TRY(refit(context, cells, &step, out));
+done:
+    return status;
+}
+
+/* Rounds to the final tolerance, all noise equal and without time. */
+static fescue_status components_settle(fescue_context *context, const struct cells *cells,
+                                       const struct evidence_request *request, struct evidence_result *out)
+{
+    struct evidence_request step = *request;
+    step.noise = EVIDENCE_NOISE_EQUAL;
+    step.time = NULL;
+    return refit(context, cells, &step, out);
+}
+
+fescue_status evidence_learn(fescue_context *context, const struct cells *cells, const struct evidence_request *request,
+                             struct evidence_result *out)
+{
+    fescue_status status;
+    *out = (struct evidence_result){.model = {.rows = cells->rows, .columns = cells->columns}};
+    out->model.bounds = (struct fescue_range){-INFINITY, INFINITY};
+    TRY(offsets_fit(context, cells, request->offsets, &out->model.offsets));
+    TRY(low_rank_create(context, cells->rows, cells->columns, 0, &out->model.low_rank));
+    TRY(components_grow(context, cells, request, out));
+    size_t alive = evidence_living(out);
+    TRY(components_settle(context, cells, request, out));
+    if (evidence_living(out) < alive && is_scarce(cells, alive) && !is_late(request)) {
+        TRY(components_grow(context, cells, request, out));
+        TRY(components_settle(context, cells, request, out));
     }
+    if (request->noise != EVIDENCE_NOISE_EQUAL || request->time != NULL)
+        TRY(refit(context, cells, request, out));
     evidence_trim(&out->model, evidence_living(out));
 done:
     if (status != FESCUE_OK)
