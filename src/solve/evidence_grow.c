@@ -22,9 +22,8 @@
 #define START_NOISE 0.25
 /* Components that join at once: among several the rounds find the directions that one alone may miss. */
 enum { GROW_BLOCK = 4 };
-/* Steps that align what has joined, and their change. */
-enum { ALIGN_STEPS = 30 };
-#define ALIGN_CHANGE 1e-2
+/* Steps that align what has joined. */
+enum { ALIGN_STEPS = 10 };
 /* Cells over unknowns below which components are lost that the data support. */
 #define SCARCE 4.0
 /* Rounds between two growths, and the tolerance at which they end earlier. */
@@ -47,8 +46,7 @@ static bool is_scarce(const struct cells *cells, size_t rank)
 static fescue_status point_align(struct problem *problem, const struct evidence_request *request,
                                  struct low_rank *point)
 {
-    const struct solve_limits limits = {
-        .iterations = ALIGN_STEPS, .gradient = 1e-6, .change = ALIGN_CHANGE, .deadline = request->deadline};
+    const struct solve_limits limits = {.iterations = ALIGN_STEPS, .gradient = 1e-6, .deadline = request->deadline};
     struct solve_result result = {0};
     if (!is_scarce(&problem->target, point->rank))
         return FESCUE_OK;
