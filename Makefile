@@ -5,6 +5,7 @@
 #   make check      every test of the ordinary suite; ends with "N passed, N failed"
 #   make check-long the suites that take longer
 #   make bench      measure, beside the limits of the machine
+#   make bench-solvers    error against time of all solvers: $(BUILD)/solvers.csv, and solvers.png by gnuplot
 #   make bench-recovery   tables recovered from few cells, and with noise: $(BUILD)/recovery.csv
 #   make format     bring all sources into the one layout
 #   make install    PREFIX=/usr/local: program, library, header, manual pages
@@ -77,6 +78,10 @@ bench: $(BENCHES)
 bench-recovery: $(BUILD)/tests/bench/bench_recovery
 	$< 20 all $(BUILD)/recovery.csv
 
+bench-solvers: $(BUILD)/tests/bench/bench_solvers
+	$< $(BUILD)/solvers.csv; met=$$?; if command -v gnuplot >/dev/null; then \
+	gnuplot -e "table='$(BUILD)/solvers.csv'; chart='$(BUILD)/solvers.png'" tests/bench/solvers.gnuplot; fi; exit $$met
+
 format:
 	clang-format -i $(shell git ls-files --cached --others --exclude-standard '*.c' '*.h')
 
@@ -91,6 +96,6 @@ install: all
 clean:
 	rm -rf $(BUILD)
 
-.PHONY: all tests demo check check-long bench bench-recovery format install clean
+.PHONY: all tests demo check check-long bench bench-recovery bench-solvers format install clean
 .SECONDARY:
 -include $(shell find $(BUILD) -name '*.d' 2>/dev/null)
