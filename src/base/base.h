@@ -7,6 +7,7 @@
  *   files       one small table of system calls for every open, read, write, flush and rename
  *   lock        one holder of a name at a time, among processes
  *   output      files that appear whole under their final name, or not at all
+ *   memo        finished work and the state of work at hand, which a later run goes on from
  *   random      counter-based numbers: a draw depends on (seed, stream, index) and on nothing else
  *   team        the workers: who am I, how many are we, sum these numbers in a fixed order
  *   clock       wall and processor time
@@ -165,6 +166,48 @@ fescue_status outfile_status(const struct outfile *file);
 
 /* The shortest round-trip decimal of value into text (at least 32 bytes), NUL-terminated; returns its length. */
 size_t real_to_text(double value, enum fescue_precision precision, char text[32]);
+
+/* ---- memo: what a later run of the same job need not do again ------------------------------------------------------
+ */
+
+/* A job is a fixed sequence of pieces of work (memo.c). Without memo_open all of this does nothing and costs nothing.
+   Used by the thread that uses the context. */
+struct memo;
+struct memo_part { /* a stretch of bytes, of a result or of a state; no pointers in it */
+    void *bytes;
+    size_t size;
+};
+/* Attaches the memo in the file `path`; what it holds counts only when it was made under the same identity, a text of
+   lines. Written every so many seconds and when the context is cancelled. FESCUE_NO_MEMORY; anything else that is wrong
+   with the file is a note, and the job starts over. */
+fescue_status memo_open(fescue_context *context, const char *path, const char *identity, double every);
+void memo_close(fescue_context *context);  /* the file stays */
+void memo_remove(fescue_context *context); /* removes the file: the job is done */
+void memo_flush(fescue_context *context);  /* writes what is finished, unless that was done on being cancelled */
+const char *memo_note(const fescue_context *context); /* why a checkpoint was not used, one sentence; or "" */
+bool memo_goes_on(const fescue_context *context);     /* whether one was */
+/* What earlier runs of the job took, seconds and seconds of processors. */
+double memo_seconds_before(const fescue_context *context, double *cpu);
+
+struct memo_work { /* one piece; a value, needs no closing */
+    struct memo *memo;
+    uint64_t number, digest;
+    size_t item, at;
+    double began;
+    bool recalls; /* it was finished in an earlier run: memo_get what it came to, and do nothing */
+};
+/* digest: of what the piece is asked. */
+struct memo_work memo_begin(fescue_context *context, uint64_t digest);
+uint64_t memo_digest(uint64_t digest, const void *bytes, size_t size); /* 0 begins one */
+/* The next bytes of what it came to; false when there are fewer. */
+bool memo_get(struct memo_work *work, void *bytes, size_t size);
+/* It is finished and came to this; copied, unless doing it again is cheaper. */
+void memo_keep(struct memo_work *work, const struct memo_part *parts, size_t count);
+/* Whether the piece ran when the last checkpoint was written; then its state then is in the parts. FESCUE_NO_INPUT when
+   it cannot be read any more. */
+fescue_status memo_resume(const struct memo_work *work, const struct memo_part *parts, size_t count, bool *resumed);
+/* It runs, and this is its state: written when that is due, or the context was cancelled. */
+void memo_tell(const struct memo_work *work, const struct memo_part *parts, size_t count);
 
 /* ---- random numbers -------------------------------------------------------------------------------------------- */
 

@@ -63,6 +63,7 @@ void fescue_context_destroy(fescue_context **context)
 {
     if (*context == NULL)
         return;
+    memo_close(*context);
     team_close(&(*context)->team);
     failure_close(&(*context)->failure);
     freelocale((*context)->locale);

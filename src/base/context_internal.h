@@ -59,6 +59,7 @@ struct fescue_context {
     struct memory_counters memory;
     atomic_bool cancelled;
     struct team team;
+    struct memo *memo; /* NULL: none is open */
 };
 
 /* vsnprintf in the C locale. */

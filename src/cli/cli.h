@@ -72,6 +72,7 @@ void help_command(FILE *file, const struct command *command);
 /* Says "fescue: sentence" as one plain line on standard error and returns FESCUE_USAGE. */
 fescue_status say_usage(const char *format, ...) __attribute__((format(printf, 1, 2)));
 void say_failure(const char *sentence);
+void say_stop(const char *format, ...) __attribute__((format(printf, 1, 2))); /* the same, made plain */
 /* The summary of a run and where its files are, on standard error, unless --quiet. */
 void say_summary(const struct request *request, const char *text, const char *place);
 /* Flushes and closes standard output; FESCUE_CANNOT_WRITE after saying why, when not all of it got out. */

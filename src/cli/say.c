@@ -21,6 +21,17 @@ void say_failure(const char *sentence)
     fprintf(stderr, "fescue: %s\n", sentence);
 }
 
+void say_stop(const char *format, ...)
+{
+    char sentence[1024];
+    va_list arguments;
+    va_start(arguments, format);
+    vsnprintf(sentence, sizeof sentence, format, arguments);
+    va_end(arguments);
+    text_make_plain(sentence);
+    say_failure(sentence);
+}
+
 fescue_status say_usage(const char *format, ...)
 {
     char sentence[1024];

@@ -195,7 +195,8 @@ void fescue_option_text(const struct fescue_option *option, const void *options,
 
 typedef struct fescue_table fescue_table;
 
-/* Reads options->precision, duplicates, format, threads, row_weights, column_weights. Path "-" is standard input. The caller owns *out. */
+/* Reads options->precision, duplicates, format, threads, row_weights, column_weights. Path "-" is standard input. The
+ * caller owns *out. */
 fescue_status fescue_table_read(fescue_context *context, const char *path, const struct fescue_options *options,
                                 fescue_table **out);
 /* From numbers in memory, positions from 0, all copied. FESCUE_BAD_DATA: out of range, twice, not finite. */
@@ -227,6 +228,13 @@ fescue_status fescue_fill_write(fescue_fill *fill, const char *directory);
 /* What a person wants to know, plain text of several lines, owned by the fill. */
 const char *fescue_fill_text(const fescue_fill *fill);
 void fescue_fill_destroy(fescue_fill **fill);
+
+/* A hold on a directory for results: two runs on one directory are refused, in this process or another. Makes the
+   directory when it is not there; waits up to `patience` seconds for another holder. FESCUE_CANNOT_CREATE. A directory
+   that was made and stayed empty goes with the hold. */
+typedef struct fescue_hold fescue_hold;
+fescue_status fescue_place_hold(fescue_context *context, const char *directory, double patience, fescue_hold **out);
+void fescue_place_release(fescue_hold **hold);
 
 /* ---- sow
  * ---------------------------------------------------------------------------------------------------------------- */

@@ -154,11 +154,24 @@ static void run_view(fescue_fill *fill)
     run->writes_factors = is_auto || (write & WRITE_FACTORS) != 0;
 }
 
+/* From here on its clocks are those of the whole job, earlier runs included. */
+static fescue_status fill_checkpoint_open(fescue_fill *fill)
+{
+    double before, before_cpu;
+    fescue_status status = checkpoint_open(fill->table, &fill->options);
+    fill->options.checkpoint = NULL;
+    before = memo_seconds_before(fill->context, &before_cpu);
+    fill->wall -= before;
+    fill->cpu -= before_cpu;
+    return status;
+}
+
 static fescue_status fill_run(fescue_fill *fill)
 {
     fescue_context *context = fill->context;
     fescue_status status;
     TRY(job_prepare(context, &fill->options));
+    TRY(fill_checkpoint_open(fill));
     TRY(time_axis_find(context, fill->table, (enum fescue_time_axis)fill->options.time_axis, &fill->time));
     struct choose_request request = {.options = &fill->options, .time = &fill->time};
     TRY(solver_choose(context, &fill->options, &request));
@@ -175,6 +188,8 @@ static fescue_status fill_run(fescue_fill *fill)
     run_count(&fill->run);
     TRY(fill_summarise(fill, false, &fill->text));
 done:
+    if (is_cancelled(context))
+        memo_flush(context);
     return status;
 }
 
@@ -263,12 +278,15 @@ fescue_status fescue_fill_write(fescue_fill *fill, const char *directory)
     fill->run.seconds_cpu = clock_cpu() - fill->cpu;
     TRY(write_record(&fill->run, output));
     TRY(output_publish(&output));
+    memo_remove(fill->context);
     GIVE(fill->context, &fill->text);
     fill->text = text;
     text = NULL;
 done:
     GIVE(fill->context, &text);
     output_abandon(&output);
+    if (status != FESCUE_OK)
+        memo_flush(fill->context); /* the fits need not be done again */
     return status;
 }
 
@@ -283,6 +301,7 @@ void fescue_fill_destroy(fescue_fill **pointer)
     if (fill == NULL)
         return;
     fescue_context *context = fill->context;
+    memo_close(context);
     determined_free(context, &fill->determined);
     judgement_free(context, &fill->judgement);
     final_fit_free(context, &fill->fit);

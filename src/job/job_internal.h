@@ -47,6 +47,12 @@ fescue_status final_exact_run(fescue_context *context, const struct final_reques
                               bool *found);
 void final_fit_free(fescue_context *context, struct final_fit *fit);
 
+/* ---- checkpoints -----------------------------------------------------------------------------------------------
+ */
+
+/* Opens the memo of a fill, when options->checkpoint names its file. */
+fescue_status checkpoint_open(const fescue_table *table, const struct fescue_options *options);
+
 /* ---- a fill -------------------------------------------------------------------------------------------------------
  */
 

@@ -335,6 +335,8 @@ fescue_status fill_summarise(const fescue_fill *fill, bool is_written, char **te
     interval_line(&summary);
     fit_lines(&summary);
     filled_lines(&summary);
+    if (memo_note(fill->context)[0] != '\0')
+        text_add(&summary.text, "checkpoint %s\n", memo_note(fill->context));
     if (is_written)
         files_lines(&summary);
     words_wrap(&summary.text, run_caution);

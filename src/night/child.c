@@ -77,25 +77,20 @@ static void log_take(void *data, const char *sentence)
 static fescue_status job_run(fescue_context *context, const struct task *task)
 {
     const char *place = task->job->output;
-    struct lock lock = {0};
-    char *path = NULL;
+    fescue_hold *hold = NULL;
     fescue_table *table = NULL;
     fescue_fill *fill = NULL;
     fescue_status status;
     TRY(fescue_table_read(context, task->job->input, &task->options, &table));
-    TRY(directory_make(context, place));
-    TRY(text_join(context, &path, place, "/.fescue-lock", NULL));
-    TRY(lock_take(context, path, place, patience, &lock));
-    TRY(output_sweep(context, place));
+    TRY(fescue_place_hold(context, place, patience, &hold));
     TRY(fescue_fill_table(table, &task->options, &fill));
     if (is_cancelled(context))
         TRY(FAIL(context, FESCUE_STOPPED, "asked to stop"));
     TRY(fescue_fill_write(fill, place));
 done:
-    lock_give(context, &lock);
-    GIVE(context, &path);
     fescue_fill_destroy(&fill);
     fescue_table_destroy(&table);
+    fescue_place_release(&hold);
     return status;
 }
 

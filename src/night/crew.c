@@ -148,6 +148,8 @@ static void task_end(struct fescue_night *night, struct task *task)
                                                    : STATE_FAILED;
     if (task->state == STATE_DONE)
         outcome_take(night, task);
+    if (task->outcome.cpu > task->cpu) /* with what earlier attempts did, of which a checkpoint knew */
+        task->cpu = task->outcome.cpu;
     if (ledger_attempt_end(&night->ledger, task) != FESCUE_OK)
         night_trouble(night);
     if (task->is_crowded && task->state == STATE_STOPPED && !task->alone) {

@@ -156,16 +156,14 @@ static fescue_status left_settle(struct fescue_night *night, const struct attemp
 {
     struct plan_job job = {.name = (char *)attempt->job, .output = (char *)attempt->output};
     struct task task = {.job = &job, .attempt = attempt->number, .state = STATE_LOST, .status = FESCUE_STOPPED};
-    struct lock lock = {0};
-    char *path = NULL;
-    fescue_status status;
+    fescue_hold *hold = NULL;
+    fescue_status status = FESCUE_OK;
     snprintf(task.message, sizeof task.message, "the night ended before it, and nobody saw how");
     task.seconds = task.cpu = task.outcome.mae = task.outcome.distance = NAN;
     for (size_t k = 0; k < FIGURES; k++)
         task.outcome.figure[k] = NAN;
-    TRY(text_join(night->context, &path, attempt->output, "/.fescue-lock", NULL));
     if (access(attempt->output, F_OK) == 0 &&
-        lock_take(night->context, path, attempt->output, patience, &lock) != FESCUE_OK)
+        fescue_place_hold(night->context, attempt->output, patience, &hold) != FESCUE_OK)
         night_trouble(night);
     if (is_published(night->context, attempt, &task.outcome)) {
         task.state = STATE_DONE;
@@ -178,8 +176,7 @@ static fescue_status left_settle(struct fescue_night *night, const struct attemp
     }
     TRY(ledger_attempt_end(&night->ledger, &task));
 done:
-    lock_give(night->context, &lock);
-    GIVE(night->context, &path);
+    fescue_place_release(&hold);
     return status;
 }
 

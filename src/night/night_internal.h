@@ -70,7 +70,7 @@ void name_of_table(const char *path, char *name, size_t size);
 /* ---- what is known of a finished run ------------------------------------------------------------------------------
  */
 
-enum { WORD_SIZE = 32, OPTIONS_SIZE = 4096, SENTENCE_SIZE = 1024 };
+enum { WORD_SIZE = 32, SENTENCE_SIZE = 1024 };
 
 enum figure { FIGURE_ERROR, FIGURE_MISSING, FIGURE_RANK, FIGURE_MEAN, FIGURE_ROWS, FIGURE_COLUMNS, FIGURE_ANGLE };
 enum { FIGURES = FIGURE_ANGLE + 1 };
@@ -93,8 +93,6 @@ struct outcome { /* NAN, 0 and "" where nothing is known */
 bool outcome_read(fescue_context *context, const char *directory, struct outcome *outcome);
 /* Checksum of a file's bytes as 8 hexadecimal digits, "" when it is not there. */
 fescue_status file_sum(fescue_context *context, const char *path, char sum[WORD_SIZE], int64_t *bytes);
-/* The options that bear on results, "name=value" a line. */
-void options_words(const struct fescue_options *options, char text[OPTIONS_SIZE]);
 
 /* ---- ledger --------------------------------------------------------------------------------------------------------
  */

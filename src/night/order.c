@@ -28,6 +28,9 @@
 static const double first_pace = 1e-5, packed = 4, memory_pace = 15, memory_least = 6e7;
 /* Room for what grew since last time. */
 static const double memory_slack = 1.2;
+/* Cross-validation is about so many times the fits before it; with FOLDS_FEW folds most of that is saved. */
+static const double folds_weight = 3;
+enum { FOLDS_FEW = 2 };
 /* A run is expected to take up to this much longer than guessed. */
 static const double time_slack = 1.25;
 
@@ -199,6 +202,7 @@ struct task *order_next(struct fescue_night *night)
         (load.threads + task->threads > night->threads || load.memory + task->guess_memory > night->memory))
         return NULL;
     task->options.threads = (int64_t)task->threads;
+    task->options.checkpoint = task->options.checkpoint_every > 0 ? task->checkpoint : NULL;
     task->memory_limit = task->options.memory_limit > 0 ? (double)task->options.memory_limit : night->memory;
     return task;
 }
@@ -213,11 +217,10 @@ void order_shrink(const struct fescue_night *night, struct task *task)
     task->shrunk[0] = '\0';
     if (isfinite(deadline) && (task->options.time_limit <= 0 || deadline < task->options.time_limit))
         task->options.time_limit = deadline;
-    if (need <= left)
+    bool has_few = task->options.folds != FESCUE_AUTO && task->options.folds <= FOLDS_FEW;
+    if (need <= left || task->options.folds == 0 || (has_few && need <= folds_weight * left))
         return;
-    double asked = task->options.holdout, share = asked * left / need;
-    if (asked <= 0)
-        return;
-    task->options.holdout = share < asked / 4 ? asked / 4 : share;
-    snprintf(task->shrunk, sizeof task->shrunk, "hold-out shrunk for want of time");
+    task->options.folds = need <= folds_weight * left ? FOLDS_FEW : 0;
+    snprintf(task->shrunk, sizeof task->shrunk, "%d folds of cross-validation, for want of time",
+             (int)task->options.folds);
 }

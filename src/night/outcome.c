@@ -14,39 +14,6 @@
 
 enum { PIECE = 1 << 18, RECORD_MOST = 1 << 26 };
 
-/* Options that bear on no result, or only by ending it: is_cut tells. */
-static const char *const not_bearing[] = {"output",       "threads",    "time-limit",
-                                          "memory-limit", "checkpoint", "checkpoint-every"};
-
-static bool is_bearing(const struct fescue_option *option)
-{
-    for (size_t k = 0; k < sizeof not_bearing / sizeof *not_bearing; k++)
-        if (strcmp(option->name, not_bearing[k]) == 0)
-            return false;
-    return (option->commands & FESCUE_FOR_FILL) != 0;
-}
-
-static void line_add(char text[OPTIONS_SIZE], size_t *used, const char *name, const char *value)
-{
-    int put = snprintf(text + *used, OPTIONS_SIZE - *used, "%s=%s\n", name, value);
-    if (put > 0 && (size_t)put < OPTIONS_SIZE - *used)
-        *used += (size_t)put;
-}
-
-void options_words(const struct fescue_options *options, char text[OPTIONS_SIZE])
-{
-    size_t count, used = 0;
-    const struct fescue_option *table = fescue_option_table(&count);
-    text[0] = '\0';
-    for (size_t k = 0; k < count; k++) {
-        char value[256];
-        if (!is_bearing(&table[k]))
-            continue;
-        fescue_option_text(&table[k], options, value, sizeof value);
-        line_add(text, &used, table[k].name, value);
-    }
-}
-
 /* ---- checksums -----------------------------------------------------------------------------------------------------
  */
 
@@ -101,10 +68,15 @@ static const json_t *member(const json_t *record, const char *part, const char *
     return json_object_get(json_object_get(record, part), key);
 }
 
+static double number_of(const json_t *object, const char *key)
+{
+    const json_t *value = json_object_get(object, key);
+    return json_is_number(value) ? json_number_value(value) : NAN;
+}
+
 static double real_of(const json_t *record, const char *part, const char *key)
 {
-    const json_t *value = member(record, part, key);
-    return json_is_number(value) ? json_number_value(value) : NAN;
+    return number_of(json_object_get(record, part), key);
 }
 
 static int64_t count_of(const json_t *record, const char *part, const char *key)
@@ -125,8 +97,8 @@ static void options_of(const json_t *record, char text[OPTIONS_SIZE])
     text[0] = '\0';
     for (size_t k = 0; k < count; k++) {
         const char *value = json_string_value(member(record, "options", table[k].name));
-        if (is_bearing(&table[k]) && value != NULL)
-            line_add(text, &used, table[k].name, value);
+        if (option_is_bearing(&table[k]) && value != NULL)
+            option_line_add(text, &used, table[k].name, value);
     }
 }
 
@@ -145,15 +117,17 @@ static void outcome_take(const json_t *record, struct outcome *outcome)
     outcome->memory = count_of(record, "timing", "memory_most_bytes");
     outcome->wall = real_of(record, "timing", "seconds");
     outcome->cpu = real_of(record, "timing", "seconds_of_processors");
-    outcome->is_cut = strcmp(stop, "time") == 0 || json_is_true(member(record, "choice", "cut_by_time_limit"));
+    outcome->is_cut = strcmp(stop, "time") == 0 || json_is_true(member(record, "choice", "cut_by_time_limit")) ||
+                      json_is_true(member(record, "judgement", "cut"));
     outcome->by_rows = outcome->rows <= outcome->columns;
     text_of(record, "input", outcome->by_rows ? "row_labels_crc32" : "column_labels_crc32", outcome->labels);
     double *figure = outcome->figure, cells = (double)outcome->rows * (double)outcome->columns;
-    figure[FIGURE_ERROR] = json_number_value(json_object_get(member(record, "choice", "errors"), "rmse"));
-    if (!json_is_number(json_object_get(member(record, "choice", "errors"), "rmse")))
-        figure[FIGURE_ERROR] = NAN;
-    const json_t *mae = json_object_get(member(record, "choice", "errors"), "mae");
-    outcome->mae = json_is_number(mae) ? json_number_value(mae) : NAN;
+    /* What is announced: of the folds, or, where there were none, of choosing's own hidden cells. */
+    const json_t *errors = json_object_get(record, "judgement");
+    if (!json_is_number(json_object_get(errors, "rmse")))
+        errors = member(record, "choice", "errors");
+    figure[FIGURE_ERROR] = number_of(errors, "rmse");
+    outcome->mae = number_of(errors, "mae");
     figure[FIGURE_MISSING] = cells > 0 ? 1 - (double)outcome->observed / cells : NAN;
     figure[FIGURE_RANK] = real_of(record, "model", "rank");
     figure[FIGURE_MEAN] = real_of(record, "model", "mean");

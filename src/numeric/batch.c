@@ -4,6 +4,11 @@
  */
 #include "numeric/kernel_internal.h"
 
+const char *kernel_name(void)
+{
+    return kernel_set_choose()->name;
+}
+
 const struct batch_kernel *batch_kernel_choose(void)
 {
     return kernel_set_choose()->batch;

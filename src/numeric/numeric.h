@@ -127,6 +127,7 @@ void sweep_errors(struct sweep *sweep, const struct half *half, struct matrix le
 enum { BATCH_LANES = 8 };
 struct batch_kernel;
 const struct batch_kernel *batch_kernel_choose(void);
+const char *kernel_name(void); /* "portable", "avx2", "avx512" */
 static inline size_t batch_size(size_t numbers)
 {
     return (numbers + 7) / 8 * 8 * BATCH_LANES;

@@ -280,17 +280,30 @@ static bool is_over(struct evidence *evidence, const struct evidence_request *re
     return true;
 }
 
+/* From where an earlier run of the job was, if it was in this fit. */
 static fescue_status evidence_loop(struct evidence *evidence, const struct evidence_request *request,
-                                   struct solve_result *result)
+                                   const struct memo_work *work, struct solve_result *result)
 {
-    fescue_status status = FESCUE_OK;
-    double change = INFINITY;
-    result->stop = STOP_ITERATIONS;
-    for (uint64_t round = 0; round < request->rounds && !is_over(evidence, request, change, &result->stop); round++) {
-        TRY(evidence_round(evidence, request, round, &change));
-        trace_append(evidence, round + 1, change, result);
-        result->iterations = round + 1;
+    struct evidence_at at = {.change = INFINITY};
+    struct memo_part parts[EVIDENCE_STATE_PARTS];
+    size_t count = evidence_state(evidence, request, &at, result, parts);
+    bool resumed;
+    fescue_status status;
+    TRY(memo_resume(work, parts, count, &resumed));
+    if (resumed) {
+        evidence_at_take(&at, evidence);
+        result->trace_count = result->iterations = at.round;
     }
+    result->stop = STOP_ITERATIONS;
+    while (at.round < request->rounds && !is_over(evidence, request, at.change, &result->stop)) {
+        TRY(evidence_round(evidence, request, at.round, &at.change));
+        trace_append(evidence, ++at.round, at.change, result);
+        result->iterations = at.round;
+        evidence_at_note(evidence, &at);
+        memo_tell(work, parts, count);
+    }
+    if (result->stop == STOP_CANCELLED && at.round > 0)
+        memo_tell(work, parts, count);
 done:
     return status;
 }
@@ -330,6 +343,11 @@ fescue_status evidence_fit(fescue_context *context, const struct cells *cells, c
     fescue_status status = FESCUE_OK;
     *out = (struct evidence_result){.fit.solver = "evidence"};
     assert(request->rank > 0 && request->rank <= cells->rows && request->rank <= cells->columns);
+    struct memo_work work = memo_begin(context, evidence_digest(cells, request, start));
+    if (work.recalls) {
+        status = evidence_recall(context, &work, request, start, out);
+        goto done;
+    }
     TRY(TAKE(context, request->rounds, &out->fit.trace));
     TRY(offsets_copy(context, cells->rows, cells->columns, &start->offsets, &mean));
     memset(mean.row, 0, cells->rows * sizeof *mean.row);
@@ -341,7 +359,7 @@ fescue_status evidence_fit(fescue_context *context, const struct cells *cells, c
         TRY(evidence_time_open(&evidence, request));
         evidence_time_begin(&evidence, start);
     }
-    TRY(evidence_loop(&evidence, request, &out->fit));
+    TRY(evidence_loop(&evidence, request, &work, &out->fit));
     TRY(evidence_model(&evidence, start, &out->model));
     out->noise = problem.scale * sqrt(evidence.noise);
     out->scale = problem.scale;
@@ -349,6 +367,7 @@ fescue_status evidence_fit(fescue_context *context, const struct cells *cells, c
     out->fit.objective = evidence.noise;
     size_t alive = evidence_living(out);
     evidence_trim(&out->model, alive > 0 ? alive : 1);
+    evidence_keep(&work, out);
 done:
     evidence_time_close(&evidence);
     arena_close(context, &evidence.arena);

@@ -5,6 +5,7 @@
  *   evidence.c          the loop, the start, the result
  *   evidence_side.c     the posterior of every line of one side, given the other
  *   evidence_basis.c    the exact change of basis between two rounds
+ *   evidence_memo.c     what is left for a later run of the same job
  *   evidence_time.c     when lines are times: what is shared by
  *   evidence_residual.c     a residual of every series, AR(1) in time
  *   evidence_chain.c        factors and effects of the steps, AR(1) in time
@@ -56,6 +57,24 @@ static inline size_t evidence_one(const struct evidence *evidence)
 /* How many components live, and a model without those behind the first `rank`. */
 size_t evidence_living(const struct evidence_result *fit);
 void evidence_trim(struct model *model, size_t rank);
+
+/* Between two rounds. */
+struct evidence_at {
+    uint64_t round, residual_on, chain_on;
+    double change, noise, pool_share;
+};
+enum { EVIDENCE_STATE_PARTS = 6 };
+/* The scalars of the state, out of the evidence and into it. */
+void evidence_at_note(const struct evidence *evidence, struct evidence_at *at);
+void evidence_at_take(const struct evidence_at *at, struct evidence *evidence);
+/* The whole state between two rounds; how many parts. */
+size_t evidence_state(struct evidence *evidence, const struct evidence_request *request, struct evidence_at *at,
+                      struct solve_result *result, struct memo_part parts[EVIDENCE_STATE_PARTS]);
+uint64_t evidence_digest(const struct cells *cells, const struct evidence_request *request, const struct model *start);
+/* A finished fit into the memo, and out of it; `out` is as evidence_fit begins with it. */
+void evidence_keep(struct memo_work *work, struct evidence_result *result);
+fescue_status evidence_recall(fescue_context *context, struct memo_work *work, const struct evidence_request *request,
+                              const struct model *start, struct evidence_result *out);
 
 /* Doubles a worker needs. */
 size_t evidence_side_scratch(size_t rank);

@@ -26,6 +26,7 @@
 
 #include <assert.h>
 #include <math.h>
+#include <string.h>
 
 enum {
     CHANGE_WINDOW = 10,
@@ -247,8 +248,8 @@ static void run_empty(struct run *run)
     result_fill(run);
 }
 
-fescue_status solve_run(struct problem *problem, const struct solver *solver, const struct solve_limits *limits,
-                        struct low_rank *point, struct solve_result *result)
+static fescue_status run_afresh(struct problem *problem, const struct solver *solver, const struct solve_limits *limits,
+                                struct low_rank *point, struct solve_result *result)
 {
     struct run run = {.field.problem = problem, .solver = solver, .limits = limits, .result = result};
     struct solve_measure given = {0};
@@ -279,6 +280,92 @@ done:
     if (state != NULL)
         solver->destroy(context, &state);
     sweep_destroy(&run.field.sweep);
+    return status;
+}
+
+/* ---- the memo ------------------------------------------------------------------------------------------------------
+ */
+
+/* What a finished run came to, beside its point and its lines of the trace. */
+struct run_sums {
+    uint64_t iterations, lines;
+    int64_t stop;
+    double objective, rmse, gradient;
+};
+enum { RUN_PARTS = 5 };
+
+static uint64_t run_digest(const struct problem *problem, const struct solver *solver,
+                           const struct solve_limits *limits, const struct low_rank *point)
+{
+    const double reals[] = {problem->lambda, problem->norm, limits->gradient, limits->change};
+    const uint64_t counts[] = {problem->target.count, limits->iterations, point->rank};
+    uint64_t digest = memo_digest(0, solver->name, strlen(solver->name));
+    digest = memo_digest(digest, reals, sizeof reals);
+    digest = memo_digest(digest, counts, sizeof counts);
+    return memo_digest(digest, point->spectrum, point->rank * sizeof(double));
+}
+
+static size_t run_parts(struct run_sums *sums, struct low_rank *point, struct solve_step *trace,
+                        struct memo_part parts[RUN_PARTS])
+{
+    parts[0] = (struct memo_part){sums, sizeof *sums};
+    parts[1] = (struct memo_part){point->spectrum, point->rank * sizeof(double)};
+    parts[2] = (struct memo_part){point->left.data, point->left.rows * point->left.stride * sizeof(double)};
+    parts[3] = (struct memo_part){point->right.data, point->right.rows * point->right.stride * sizeof(double)};
+    parts[4] = (struct memo_part){trace, sums->lines * sizeof *trace};
+    return RUN_PARTS;
+}
+
+static void run_keep(struct memo_work *work, struct low_rank *point, struct solve_result *result, uint64_t before)
+{
+    struct memo_part parts[RUN_PARTS];
+    struct run_sums sums = {.iterations = result->iterations,
+                            .lines = result->trace_count - before,
+                            .stop = (int64_t)result->stop,
+                            .objective = result->objective,
+                            .rmse = result->rmse,
+                            .gradient = result->gradient};
+    memo_keep(work, parts, run_parts(&sums, point, result->trace + before, parts));
+}
+
+static fescue_status run_recall(fescue_context *context, struct memo_work *work, const struct solver *solver,
+                                struct low_rank *point, struct solve_result *result)
+{
+    struct run_sums sums = {0};
+    struct memo_part parts[RUN_PARTS];
+    fescue_status status = FESCUE_OK;
+    bool good = memo_get(work, &sums, sizeof sums) && sums.lines <= SIZE_MAX / 2;
+    if (good)
+        TRY(RESIZE(context, result->trace_count + sums.lines, &result->trace));
+    size_t count = good ? run_parts(&sums, point, result->trace + result->trace_count, parts) : 0;
+    for (size_t k = 1; k < count && good; k++)
+        good = memo_get(work, parts[k].bytes, parts[k].size);
+    if (!good)
+        TRY(FAIL(context, FESCUE_DEFECT, "the checkpoint holds another fit than the one that was asked for"));
+    result->solver = solver->name;
+    result->start = NULL;
+    result->trace_count += sums.lines;
+    result->iterations = sums.iterations;
+    result->stop = (enum solve_stop)sums.stop;
+    result->objective = sums.objective;
+    result->rmse = sums.rmse;
+    result->gradient = sums.gradient;
+done:
+    return status;
+}
+
+fescue_status solve_run(struct problem *problem, const struct solver *solver, const struct solve_limits *limits,
+                        struct low_rank *point, struct solve_result *result)
+{
+    if (point->rank == 0)
+        return run_afresh(problem, solver, limits, point, result);
+    struct memo_work work = memo_begin(problem->context, run_digest(problem, solver, limits, point));
+    if (work.recalls)
+        return run_recall(problem->context, &work, solver, point, result);
+    uint64_t before = result->trace_count;
+    fescue_status status = run_afresh(problem, solver, limits, point, result);
+    if (status == FESCUE_OK)
+        run_keep(&work, point, result, before);
     return status;
 }
 

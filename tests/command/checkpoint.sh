@@ -1,0 +1,95 @@
+#!/bin/sh
+# SPDX-License-Identifier: MIT
+#
+# Checkpoints: a fill that is stopped again and again and started again ends with the bytes of one that was not; a
+# checkpoint of another run, and a broken one, are told and not used.
+. "$(dirname "$0")/library"
+
+# Everything but "timing", which ends the record.
+same() { # A B
+    for file in "$1"/*; do
+        case $file in
+        */run.json) sed '/"timing"/,$d' "$file" >a && sed '/"timing"/,$d' "$2/run.json" >b && cmp a b || return 1 ;;
+        *) cmp "$file" "$2/${file##*/}" || return 1 ;;
+        esac
+    done
+    test "$(ls -A "$1")" = "$(ls -A "$2")"
+}
+
+# Runs, stops after a while that grows, runs again until it is done; $stops: how often it was stopped.
+persist() { # PLACE ARGUMENT...
+    place_=$1
+    shift
+    stops=0
+    while [ "$stops" -lt 60 ]; do
+        "$PYTHON" - "$stops" "$FESCUE" fill -q "$@" -o "$place_" 2>err <<'PYTHON'
+import signal, subprocess, sys, time
+run = subprocess.Popen(sys.argv[2:])
+try:
+    status = run.wait(timeout=0.15 * 1.5 ** int(sys.argv[1]))
+except subprocess.TimeoutExpired:
+    run.send_signal((signal.SIGTERM, signal.SIGINT, signal.SIGHUP)[int(sys.argv[1]) % 3])
+    status = run.wait()
+sys.exit(status)
+PYTHON
+        got=$?
+        [ "$got" -ne 0 ] || return 0
+        [ "$got" -eq 75 ] || return 1
+        grep -q '^fescue: .*asked to stop' err || return 1
+        stops=$((stops + 1))
+    done
+    return 1
+}
+
+"$FESCUE" sow -q --rows 300 --columns 200 --rank 4 --noise 0.3 --seen 0.4 --offset-scale 1 --truth factors -o sown
+table=sown/table.mtx
+gzip -dc "$root/datasets-synthetic/fen-levels/table.csv.gz" | head -n 250 | cut -d, -f1-15 >fen.csv
+
+try_way() { # NAME TABLE ARGUMENT...
+    name=$1 source=$2
+    shift 2
+    "$FESCUE" fill -q "$source" "$@" -o "whole-$name" 2>err
+    verdict $? "$name: uninterrupted" err
+    persist "parts-$name" "$source" "$@"
+    verdict $? "$name: stopped and started until it is done" err
+    check "$name: it was stopped ($stops times)" test "$stops" -gt 0
+    check "$name: the same bytes" same "whole-$name" "parts-$name"
+    check "$name: no checkpoint is left" test ! -e "parts-$name/.fescue-checkpoint"
+}
+try_way evidence $table
+try_way path $table --solver fixed-rank-cg --rank-most 8 --threads 2
+try_way time fen.csv --time-axis rows --rank-most 6
+
+# ---- what is not of this run ------------------------------------------------------------------------------------------
+stop_early() { # PLACE ARGUMENT...
+    place_=$1
+    shift
+    rm -rf "$place_"
+    for wait_ in 0.5 1 1.5 2 3; do
+        "$FESCUE" fill -q large/table.mtx -o "$place_" "$@" 2>err &
+        child=$!
+        sleep $wait_
+        kill -TERM $child
+        wait $child
+        [ ! -e "$place_/.fescue-checkpoint" ] || return 0
+    done
+    return 1
+}
+"$FESCUE" sow -q --rows 1500 --columns 900 --rank 12 --noise 1 --seen 0.3 --truth factors -o large
+slow='--tolerance 0 --solver fixed-rank-cg --rank-most 12'
+stop_early other $slow
+verdict $? "there is a checkpoint" err
+check "and the message names it" grep -q 'the same command goes on from other/.fescue-checkpoint' err
+check "nothing else is there" test "$(ls -A other)" = .fescue-checkpoint
+cp other/.fescue-checkpoint kept
+try 0 fill $table --rank 2 -o other
+check "a checkpoint of another input is told" grep -q 'checkpoint of another run: it has input of [0-9]* bytes .*, this one .*; starting over' err
+mkdir -p broken
+"$PYTHON" -c 'b = bytearray(open("kept", "rb").read()); b[len(b) // 2] ^= 1; open("broken/.fescue-checkpoint", "wb").write(b)'
+try 0 fill $table --rank 2 -o broken
+check "a broken one is told" grep -q 'its checksum does not fit; starting over' err
+check "the results are those of a run without it" same other broken
+mkdir -p none
+try 0 fill $table --rank 2 --checkpoint-every 0 -o none
+check "and of one without checkpoints" same other none
+finish
