@@ -1,7 +1,7 @@
 #!/bin/sh
 # SPDX-License-Identifier: MIT
 #
-# A signal stops the program: status 75, one line, and nothing under a final name or beside it.
+# A signal stops the program: status 75, one line, and nothing under a final name; a checkpoint at most.
 . "$(dirname "$0")/library"
 
 # Enough work to be still at it when the signal comes, however fast the machine: it is stopped, never waited for.
@@ -20,7 +20,8 @@ stopped() { # SIGNAL PLACE COMMAND...
     verdict $? "status 75 (got $got) after SIG$signal_: $(printf '%s ' "$@" | tr '\n' ' ' | sed "s|.*$FESCUE|fescue|")" err
     check "one line is said" test "$(grep -c . err)" -eq 1
     check "that it was asked to stop" grep -q '^fescue: .*asked to stop' err
-    check "nothing in $place_" nothing_in "$place_"
+    rm -f "$place_/.fescue-checkpoint"
+    check "nothing but a checkpoint in $place_" nothing_in "$place_"
 }
 for signal in TERM INT HUP; do
     # A shell without job control starts its children with SIGINT ignored; env gives it back where it can.
@@ -54,5 +55,5 @@ child=$!
 sleep 0.5
 kill -TERM $child
 wait $child
-check "an older run in the same place stays whole" diff -r before kept
+check "an older run in the same place stays whole" diff -r -x .fescue-checkpoint before kept
 finish
