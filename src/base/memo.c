@@ -21,7 +21,7 @@
  *
  * It is written beside its name, flushed and renamed, as results are (output.c): there is always a whole one. It is
  * read once for its checksum and only then believed. The state at hand stays in the file until its piece takes it, so
- * that two of them are never held.
+ * that two of them are never held; until then the file is not written over.
  *
  * What it may cost: a write is due `every` seconds, and not before WRITES_APART times what the last one took. What a
  * piece came to is kept only when the piece took WORTH times as long as keeping it does at a disk's pace; a piece that
@@ -222,6 +222,8 @@ static void memo_write(struct memo *memo, const struct memo_item *state, const s
 {
     double began = clock_wall();
     bool had_one = has_failure(memo->context);
+    if (memo->has_state)
+        return; /* what lies there is further on than this run is yet */
     if (memo_write_all(memo, state, parts, count) != FESCUE_OK)
         failure_forget(memo->context, had_one);
     memo->wrote = clock_wall();
@@ -523,8 +525,8 @@ void memo_keep(struct memo_work *work, const struct memo_part *parts, size_t cou
     size_t size = 0;
     for (size_t k = 0; k < count; k++)
         size += parts[k].size;
-    if (!is_worth(work, size))
-        return;
+    if (!is_worth(work, size) || is_cancelled(memo->context))
+        return; /* once it was asked to stop a piece may follow one that was cut short, and is none of the sequence */
     struct memo_item *kept = item_add(memo, &item);
     if (kept == NULL || !item_reserve(memo, kept, size)) {
         memo->count -= kept != NULL;
@@ -571,7 +573,8 @@ void memo_tell(const struct memo_work *work, const struct memo_part *parts, size
 {
     struct memo *memo = work->memo;
     struct memo_item state = {.number = work->number, .digest = work->digest};
-    if (memo == NULL || (!is_due(memo) && !is_cancelled(memo->context)))
+    bool is_last = memo != NULL && is_cancelled(memo->context);
+    if (memo == NULL || memo->is_saved || (!is_last && !is_due(memo)))
         return;
     for (size_t k = 0; k < count; k++)
         state.size += parts[k].size;

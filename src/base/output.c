@@ -26,6 +26,7 @@
 #include <errno.h>
 #include <fcntl.h>
 #include <signal.h>
+#include <stdio.h>
 #include <stdlib.h>
 #include <string.h>
 #include <unistd.h>
@@ -228,6 +229,21 @@ done:
 
 /* ---- what the dead left ------------------------------------------------------------------------------------------ */
 
+/* A process that has ended but whose parent has not looked yet is as dead as one that is gone. */
+static bool is_alive(long process)
+{
+    char path[64], text[512] = "";
+    if (kill((pid_t)process, 0) != 0 && errno == ESRCH)
+        return false;
+    snprintf(path, sizeof path, "/proc/%ld/stat", process);
+    int descriptor = open(path, O_RDONLY | O_CLOEXEC);
+    ptrdiff_t got = descriptor < 0 ? 0 : read(descriptor, text, sizeof text - 1);
+    if (descriptor >= 0)
+        close(descriptor);
+    const char *name_end = got > 0 ? strrchr(text, ')') : NULL; /* "123 (name) S ..." */
+    return name_end == NULL || strncmp(name_end, ") Z", 3) != 0;
+}
+
 /* ".NAME.PROCESS.part" of a process that is no more. */
 static bool is_left(const char *name)
 {
@@ -239,8 +255,7 @@ static bool is_left(const char *name)
     while (first > 1 && name[first - 1] >= '0' && name[first - 1] <= '9')
         first--;
     long process = strtol(name + first, NULL, 10);
-    return first < length - cut && name[first - 1] == '.' && process > 0 && process < INT32_MAX &&
-           kill((pid_t)process, 0) != 0 && errno == ESRCH;
+    return first < length - cut && name[first - 1] == '.' && process > 0 && process < INT32_MAX && !is_alive(process);
 }
 
 fescue_status output_sweep(fescue_context *context, const char *directory)

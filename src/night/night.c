@@ -26,6 +26,8 @@
 static const double memory_share = 0.8;
 /* Seconds to wait for a child of a dead night, which writes its checkpoint. */
 static const double patience = 120;
+/* And for the plan's lock: a child that was just forked when its night died holds it for a moment. */
+static const double short_patience = 3;
 
 void night_trouble(struct fescue_night *night)
 {
@@ -370,7 +372,7 @@ fescue_status fescue_night_run(fescue_night *night)
 {
     struct lock lock = {0};
     fescue_status status;
-    TRY(lock_take(night->context, night->lock_path, night->plan.path, 0, &lock));
+    TRY(lock_take(night->context, night->lock_path, night->plan.path, short_patience, &lock));
     limits_set(night);
     TRY(night_hold(night));
     if (night->trouble[0] != '\0')

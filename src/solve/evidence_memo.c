@@ -28,7 +28,9 @@ uint64_t evidence_digest(const struct cells *cells, const struct evidence_reques
     const double reals[] = {request->noise_start, request->change, start->offsets.mean};
     uint64_t digest = memo_digest(0, counts, sizeof counts);
     digest = memo_digest(digest, reals, sizeof reals);
-    return memo_digest(digest, start->low_rank.spectrum, start->low_rank.rank * sizeof(double));
+    digest = memo_digest(digest, start->offsets.row, start->rows * sizeof(double));
+    digest = memo_digest(digest, start->offsets.column, start->columns * sizeof(double));
+    return low_rank_digest(digest, &start->low_rank);
 }
 
 size_t evidence_state(struct evidence *evidence, const struct evidence_request *request, struct evidence_at *at,

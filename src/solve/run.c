@@ -294,6 +294,16 @@ struct run_sums {
 };
 enum { RUN_PARTS = 5 };
 
+uint64_t low_rank_digest(uint64_t digest, const struct low_rank *point)
+{
+    digest = memo_digest(digest, point->spectrum, point->rank * sizeof(double));
+    for (size_t i = 0; i < point->left.rows && point->rank > 0; i++)
+        digest = memo_digest(digest, &MATRIX_AT(point->left, i, 0), point->rank * sizeof(double));
+    for (size_t j = 0; j < point->right.rows && point->rank > 0; j++)
+        digest = memo_digest(digest, &MATRIX_AT(point->right, j, 0), point->rank * sizeof(double));
+    return digest;
+}
+
 static uint64_t run_digest(const struct problem *problem, const struct solver *solver,
                            const struct solve_limits *limits, const struct low_rank *point)
 {
@@ -302,7 +312,7 @@ static uint64_t run_digest(const struct problem *problem, const struct solver *s
     uint64_t digest = memo_digest(0, solver->name, strlen(solver->name));
     digest = memo_digest(digest, reals, sizeof reals);
     digest = memo_digest(digest, counts, sizeof counts);
-    return memo_digest(digest, point->spectrum, point->rank * sizeof(double));
+    return low_rank_digest(digest, point);
 }
 
 static size_t run_parts(struct run_sums *sums, struct low_rank *point, struct solve_step *trace,

@@ -49,6 +49,9 @@ struct solve_result {
 };
 void solve_result_free(fescue_context *context, struct solve_result *result);
 
+/* A digest of its numbers, for the memo (memo_digest). */
+uint64_t low_rank_digest(uint64_t digest, const struct low_rank *point);
+
 struct solver;                                      /* name, summary, and its functions: solve_internal.h */
 const struct solver *solver_find(const char *name); /* NULL when there is none of that name */
 const struct solver *solver_at(size_t k);           /* the k-th of the list, NULL past its end */

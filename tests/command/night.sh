@@ -139,7 +139,7 @@ check "a deadline ends the fits" grep -q 'the time limit ended it before it was 
 check "with a result" test -e large/table-filled/run.json
 
 # ---- locks ------------------------------------------------------------------------------------------------------------
-"$FESCUE" night short.ini --for 3 2>first &
+"$FESCUE" night short.ini --for 60 2>first &
 child=$!
 n=0
 until [ -s short-ledger.lock ] || [ $n -gt 100 ]; do sleep 0.05; n=$((n + 1)); done

@@ -31,7 +31,7 @@ check "the file is as it was" test "$(cat file)" = text
 mkdir -p taken/filled.mtx
 try 74 fill sown/table.mtx -o taken
 check "a folder in the way is named" grep -q '^fescue: taken/filled.mtx: ' err
-check "nothing else is left there" test "$(ls -A taken)" = filled.mtx
+check "nothing else is left there, but a checkpoint" test "$(ls -A taken | grep -v fescue-checkpoint)" = filled.mtx
 long=$(printf '%0300d' 0)
 try 73 fill sown/table.mtx -o "$long"
 says "$long: cannot hold the results: File name too long"
