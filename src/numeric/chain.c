@@ -15,46 +15,39 @@
  * Cov(x_(t-1), x_t) = J_(t-1) E_t Cov(x_t), of which the diagonal is kept. (Two-filter smoothing: Fraser, Potter 1969,
  * "The optimum linear smoother as a combination of two optimum linear filters", here in information form.)
  *
- * Cost: three factorisations and inverses of size d a step, O(m d^3); the two messages run beside one another, the
- * marginals in batches of eight steps. Nothing depends on the number of workers. As E is diagonal a message costs no
- * product of matrices. Precisions are differences: at rho = 0.9999 some four digits of sixteen are lost, which is why
- * rho stays below that (kalman_learn).
+ * Cost: three factorisations and inverses of size d a step, O(m d^3); the two messages (chain_message.c) run beside one
+ * another, the marginals in batches of eight steps. Nothing depends on the number of workers. As E is diagonal a
+ * message costs no product of matrices. Precisions are differences: at rho = 0.9999 some four digits of sixteen are
+ * lost, which is why rho stays below that (kalman_learn).
  */
-#include "numeric/numeric.h"
+#include "numeric/chain_internal.h"
 
 #include <math.h>
 #include <string.h>
 
-/* Precision that stands for "held at 0": in units where data have size one no sum of them comes near it. */
-#define PRECISION_OFF 1e30
-
-static size_t side_at(size_t size)
+size_t chain_side_at(size_t size)
 {
     return (packed_size(size) + 7) / 8 * 8;
 }
 
 size_t chain_room(size_t size)
 {
-    return side_at(size) + (size + 7) / 8 * 8;
+    return chain_side_at(size) + (size + 7) / 8 * 8;
 }
 
 size_t chain_work(size_t size)
 {
-    return 2 * batch_size(packed_size(size)) + batch_size(size) + packed_size(size) + 4 * size;
+    size_t eight = 2 * batch_size(packed_size(size)) + 2 * batch_size(size) + 3 * size * BATCH_LANES;
+    return eight + 2 * chain_room(size) + packed_size(size) + 4 * size;
 }
 
-/* E, f^2/q and 1/q between step t - 1 and t; 1/v alone at t = 0. Those of equal steps are kept. */
-struct link {
-    double step;
-    double *off, *left, *right;
-};
-
-static struct link link_carve(double *at, size_t size)
+struct chain_link chain_link_carve(double *at, size_t size, size_t stride)
 {
-    return (struct link){.step = -1, .off = at, .left = at + size, .right = at + 2 * size};
+    return (struct chain_link){
+        .step = -1, .stride = stride, .off = at, .left = at + size * stride, .right = at + 2 * size * stride};
 }
 
-static void link_set(const struct chain *chain, size_t t, struct link *link)
+void chain_link_set(const struct chain *chain, size_t t, struct chain_link *link)
 {
     double step = t > 0 ? kalman_step(chain->time[t - 1], chain->time[t]) : 0;
     if (step == link->step)
@@ -63,32 +56,26 @@ static void link_set(const struct chain *chain, size_t t, struct link *link)
     for (size_t k = 0; k < chain->size; k++) {
         const struct kalman_law *law = &chain->law[k];
         double f = t > 0 && law->variance > 0 ? pow(law->correlation, step) : 0;
-        link->right[k] = law->variance > 0 ? 1 / (law->variance * (1 - f * f)) : PRECISION_OFF;
-        link->off[k] = f * link->right[k];
-        link->left[k] = f * link->off[k];
+        double right = law->variance > 0 ? 1 / (law->variance * (1 - f * f)) : PRECISION_OFF;
+        link->right[k * link->stride] = right;
+        link->off[k * link->stride] = f * right;
+        link->left[k * link->stride] = f * f * right;
     }
 }
 
-static size_t line_at(const struct chain *chain, size_t t)
+size_t chain_line_at(const struct chain *chain, size_t t)
 {
     return chain->line != NULL ? chain->line[t] : t;
 }
 
-static double *room_at(const struct chain *chain, double *room, size_t t)
-{
-    return room + t * chain_room(chain->size);
-}
-
-/* precision += diag(own) - E J E, side += E J g: the message through `link` from the step whose J, J g are at `from`
-   (NULL: there is none). */
-static void message_add(size_t size, const struct link *link, const double *own, const double *from, double *precision,
-                        double *side)
+void chain_message_add(size_t size, const struct chain_link *link, const double *own, const double *from,
+                       double *precision, double *side)
 {
     for (size_t k = 0; k < size; k++)
         precision[packed_size(k) + k] += own[k];
     if (from == NULL)
         return;
-    const double *image = from + side_at(size);
+    const double *image = from + chain_side_at(size);
     for (size_t k = 0, at = 0; k < size; k++) {
         double scale = link->off[k];
         for (size_t l = 0; l <= k; l++, at++)
@@ -97,59 +84,23 @@ static void message_add(size_t size, const struct link *link, const double *own,
     }
 }
 
-/* The data of step t. */
-static void data_copy(const struct chain *chain, size_t t, double *precision, double *side)
+void chain_data_copy(const struct chain *chain, size_t t, double *precision, double *side)
 {
-    size_t line = line_at(chain, t);
+    size_t line = chain_line_at(chain, t);
     memcpy(precision, chain->precision + line * chain->precision_stride, packed_size(chain->size) * sizeof *precision);
     memcpy(side, chain->mean + line * chain->mean_stride, chain->size * sizeof *side);
 }
 
-/* At `room`: the inverse of `precision` and its product with `side`. */
-static void step_invert(size_t size, double *precision, double *side, double *room)
+void chain_step_invert(size_t size, double *precision, double *side, double *room)
 {
     packed_cholesky(precision, size);
     packed_solve(precision, size, side);
     packed_inverse(precision, size, room);
-    memcpy(room + side_at(size), side, size * sizeof *side);
-}
-
-void chain_forward(const struct chain *chain, double *work)
-{
-    size_t d = chain->size;
-    double *precision = work, *side = work + packed_size(d);
-    struct link link = link_carve(side + d, d);
-    for (size_t t = 0; t + 1 < chain->steps; t++) {
-        data_copy(chain, t, precision, side);
-        link_set(chain, t, &link);
-        message_add(d, &link, link.right, t > 0 ? room_at(chain, chain->forward, t - 1) : NULL, precision, side);
-        link_set(chain, t + 1, &link);
-        for (size_t k = 0; k < d; k++)
-            precision[packed_size(k) + k] += link.left[k];
-        step_invert(d, precision, side, room_at(chain, chain->forward, t));
-    }
-}
-
-void chain_backward(const struct chain *chain, double *work)
-{
-    size_t d = chain->size;
-    double *precision = work, *side = work + packed_size(d);
-    struct link link = link_carve(side + d, d);
-    for (size_t t = chain->steps; t-- > 1;) {
-        data_copy(chain, t, precision, side);
-        if (t + 1 < chain->steps) {
-            link_set(chain, t + 1, &link);
-            message_add(d, &link, link.left, room_at(chain, chain->backward, t + 1), precision, side);
-        }
-        link_set(chain, t, &link);
-        for (size_t k = 0; k < d; k++)
-            precision[packed_size(k) + k] += link.right[k];
-        step_invert(d, precision, side, room_at(chain, chain->backward, t));
-    }
+    memcpy(room + chain_side_at(size), side, size * sizeof *side);
 }
 
 /* Diagonal of J_(t-1) E_t C_t. */
-static void cross_write(size_t size, const struct link *link, const double *from, const double *covariance,
+static void cross_write(size_t size, const struct chain_link *link, const double *from, const double *covariance,
                         double *cross)
 {
     for (size_t k = 0; k < size; k++)
@@ -166,24 +117,26 @@ static void cross_write(size_t size, const struct link *link, const double *from
 }
 
 /* Precision and right side of the marginal of step t. */
-static void marginal_system(const struct chain *chain, size_t t, double *precision, double *side, struct link *link)
+static void marginal_system(const struct chain *chain, size_t t, double *precision, double *side,
+                            struct chain_link *link)
 {
     size_t d = chain->size;
-    data_copy(chain, t, precision, side);
+    chain_data_copy(chain, t, precision, side);
     if (t + 1 < chain->steps) {
-        link_set(chain, t + 1, link);
-        message_add(d, link, link->left, room_at(chain, chain->backward, t + 1), precision, side);
+        chain_link_set(chain, t + 1, link);
+        chain_message_add(d, link, link->left, chain_room_at(chain, chain->backward, t + 1), precision, side);
     }
-    link_set(chain, t, link);
-    message_add(d, link, link->right, t > 0 ? room_at(chain, chain->forward, t - 1) : NULL, precision, side);
+    chain_link_set(chain, t, link);
+    chain_message_add(d, link, link->right, t > 0 ? chain_room_at(chain, chain->forward, t - 1) : NULL, precision,
+                      side);
 }
 
 /* A lane whose pivots broke down, again and with a lift. */
-static void lane_solve(const struct chain *chain, size_t t, double *precision, double *side, struct link *link,
+static void lane_solve(const struct chain *chain, size_t t, double *precision, double *side, struct chain_link *link,
                        double *room)
 {
     marginal_system(chain, t, precision, side, link);
-    step_invert(chain->size, precision, side, room);
+    chain_step_invert(chain->size, precision, side, room);
 }
 
 void chain_marginals(const struct chain *chain, const struct batch_kernel *kernel, size_t first, double *out,
@@ -193,7 +146,7 @@ void chain_marginals(const struct chain *chain, const struct batch_kernel *kerne
     size_t left = chain->steps - first, count = left < BATCH_LANES ? left : BATCH_LANES;
     double *factor = work, *inverse = factor + batch_size(packed), *mean = inverse + batch_size(packed);
     double *precision = mean + batch_size(d), *side = precision + packed, *to[BATCH_LANES];
-    struct link link = link_carve(side + d, d);
+    struct chain_link link = chain_link_carve(side + d, d, 1);
     for (size_t lane = 0; lane < BATCH_LANES; lane++) { /* beyond the last step: that one again */
         marginal_system(chain, first + (lane < count ? lane : count - 1), precision, side, &link);
         for (size_t at = 0; at < packed; at++)
@@ -205,22 +158,22 @@ void chain_marginals(const struct chain *chain, const struct batch_kernel *kerne
     unsigned broken = packed_batch_solve(kernel, factor, d, mean, inverse);
     packed_batch_unpack(kernel, inverse, packed, to);
     for (size_t lane = 0; lane < BATCH_LANES; lane++)
-        to[lane] += side_at(d);
+        to[lane] += chain_side_at(d);
     packed_batch_unpack(kernel, mean, d, to);
     for (size_t lane = 0; lane < count; lane++) {
         size_t t = first + lane;
         double *own = out + lane * room;
         if (broken >> lane & 1)
             lane_solve(chain, t, precision, side, &link, own);
-        link_set(chain, t, &link);
-        cross_write(d, &link, t > 0 ? room_at(chain, chain->forward, t - 1) : NULL, own,
-                    chain->cross + line_at(chain, t) * d);
+        chain_link_set(chain, t, &link);
+        cross_write(d, &link, t > 0 ? chain_room_at(chain, chain->forward, t - 1) : NULL, own,
+                    chain->cross + chain_line_at(chain, t) * d);
     }
 }
 
 const double *chain_mean(const struct chain *chain, const double *out, size_t lane)
 {
-    return out + lane * chain_room(chain->size) + side_at(chain->size);
+    return out + lane * chain_room(chain->size) + chain_side_at(chain->size);
 }
 
 const double *chain_covariance(const struct chain *chain, const double *out, size_t lane)

@@ -221,7 +221,7 @@ static fescue_status evidence_round(struct evidence *evidence, const struct evid
     side_round(evidence, columns, rows);
     if (request->noise != EVIDENCE_NOISE_ROWS)
         noise_update(evidence, columns, request->noise == EVIDENCE_NOISE_COLUMNS);
-    *change = change_measure(evidence);
+    *change = evidence->time != NULL && evidence->time->residual_on ? evidence->time->change : change_measure(evidence);
     return FESCUE_OK;
 }
 
@@ -271,7 +271,7 @@ static bool is_over(struct evidence *evidence, const struct evidence_request *re
 {
     if (progress_tell(evidence->context, "evidence", -1) != FESCUE_OK)
         *stop = STOP_CANCELLED;
-    else if (change <= request->change)
+    else if (change <= request->change || (evidence->time != NULL && evidence_time_settled(evidence)))
         *stop = STOP_CHANGE;
     else if (request->deadline > 0 && clock_wall() > request->deadline)
         *stop = STOP_TIME;

@@ -143,8 +143,10 @@ fescue_status evidence_learn(fescue_context *context, const struct cells *cells,
     TRY(low_rank_create(context, cells->rows, cells->columns, 0, &out->model.low_rank));
     TRY(components_grow(context, cells, request, out));
     size_t alive = evidence_living(out);
-    TRY(components_settle(context, cells, request, out));
-    if (evidence_living(out) < alive && is_scarce(cells, alive) && !is_late(request)) {
+    bool settles = request->time == NULL; /* what follows lines in time settles the components on its own */
+    if (settles)
+        TRY(components_settle(context, cells, request, out));
+    if (settles && evidence_living(out) < alive && is_scarce(cells, alive) && !is_late(request)) {
         TRY(components_grow(context, cells, request, out));
         TRY(components_settle(context, cells, request, out));
     }

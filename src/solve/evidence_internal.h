@@ -103,7 +103,10 @@ struct evidence_time {
     uint64_t *twin;                      /* of position k: the same cell in the half of the steps */
     uint32_t *place;                     /* of q: the offset of k from its series' start; NULL: the same */
     double *clean;                       /* of k: the target without a residual taken off */
-    double *mean, *spread;               /* of q: posterior of the residual; spread of the cell of k */
+    double *mean;                        /* of q: posterior mean of the residual */
+    double *total;                       /* of q: that and the rest of the estimate */
+    double *spread;                      /* of a cell in the half of the steps: posterior variance of the residual */
+    double *moved, change;               /* of a block: squared change of total; of all, root mean square */
     struct kalman_law *law;              /* of each series */
     struct kalman_tally *pool, *partial; /* of all series, the round before; of blocks */
     double pool_share;                   /* of the pool that goes to every series */
@@ -121,6 +124,7 @@ void evidence_time_close(struct evidence *evidence);
 /* Switches residual and chain on when their round has come; laws of a start that has a time part are taken over. */
 void evidence_time_begin(struct evidence *evidence, const struct model *start);
 void evidence_time_round(struct evidence *evidence, uint64_t round);
+bool evidence_time_settled(const struct evidence *evidence);
 fescue_status evidence_time_part(struct evidence *evidence, struct time_part *part);
 
 /* Takes the posterior mean of every series' residual off the targets of both halves, and learns the laws. */

@@ -72,8 +72,9 @@ static struct kalman_series series_view(const struct evidence *evidence, size_t 
     return (struct kalman_series){count, when, value, noise};
 }
 
-/* The residual's mean off the targets, its variance kept. */
-static void targets_put(const struct evidence *evidence, size_t line, const struct kalman_state *state)
+/* The residual's mean off the targets, its variance kept; *moved grows by the squared change of the estimates. */
+static void targets_put(const struct evidence *evidence, size_t line, const struct kalman_series *series,
+                        const struct kalman_state *state, double *moved)
 {
     const struct evidence_time *time = evidence->time;
     const struct cells *cells = &evidence->problem->target;
@@ -85,6 +86,9 @@ static void targets_put(const struct evidence *evidence, size_t line, const stru
         value_put(cells, time->series->half, k, value);
         value_put(cells, time->steps->half, time->twin[k], value);
         time->mean[start + q] = state->mean[q];
+        double total = time->clean[k] - series->value[q] + state->mean[q], change = total - time->total[start + q];
+        time->total[start + q] = total;
+        *moved += change * change;
         time->spread[time->twin[k]] = state->variance[q];
         excess += state->variance[q] * time->steps->line_precision[time->series->half->across[k]];
     }
@@ -150,11 +154,12 @@ static void residual_block(void *opaque, size_t block, size_t worker)
     struct kalman_state state = {out, out + time->longest, out + 2 * time->longest};
     struct kalman_tally *sum = time->partial + block;
     memset(sum, 0, sizeof *sum);
+    time->moved[block] = 0;
     for (size_t line = half->block[block]; line < half->block[block + 1]; line++) {
         struct kalman_series series = series_view(job->evidence, line, at);
         law_learn(time, &series, &state, &time->law[line]);
         kalman_tally_series(sum, &series, &state);
-        targets_put(job->evidence, line, &state);
+        targets_put(job->evidence, line, &series, &state, time->moved + block);
     }
 }
 
@@ -182,6 +187,8 @@ void evidence_residual_update(struct evidence *evidence)
     time->pool_share = count > 0 ? POOL_CELLS / count : 0;
     team_run(evidence->context, blocks, residual_block, &job);
     team_run(evidence->context, time->steps->half->blocks, excess_block, &job);
+    team_sum(evidence->context, time->moved, blocks, 1, &time->change);
+    time->change = sqrt(time->change / (double)evidence->problem->target.count);
     memset(time->pool, 0, sizeof *time->pool);
     for (size_t block = 0; block < blocks; block++)
         kalman_tally_add(time->pool, 1, time->partial + block);

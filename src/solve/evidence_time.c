@@ -15,7 +15,7 @@
  * Times need not be sorted: the steps go by the axis's order, and the cells of each series have a place in time beside
  * their place in the store, unless the two are the same.
  *
- * Memory: 3 numbers a cell, and two small matrices a step.
+ * Memory: 5 numbers a cell, and two small matrices a step.
  */
 #include "solve/evidence_internal.h"
 
@@ -24,8 +24,11 @@
 #include <string.h>
 
 /* Rounds after which the parts begin, and their first laws (above). */
-enum { RESIDUAL_ROUND = 2, CHAIN_ROUND = 12 };
+enum { RESIDUAL_ROUND = 1, CHAIN_ROUND = 5 };
 #define RESIDUAL_SHARE 0.3
+/* Low-rank part and residual go on exchanging what either explains long after the estimates have settled: rms change of
+   estimates in a round, in standard deviations of the noise, that no error figure notices. */
+#define SETTLED 0.0075
 #define FIRST_CORRELATION 0.6
 
 static size_t longest_series(const struct half *half)
@@ -44,8 +47,9 @@ static void time_reserve(struct evidence *evidence, const struct evidence_time *
     size_t count = evidence->problem->target.count, d = evidence->rank + 1;
     arena_reserve(arena, count, sizeof *time->twin);
     arena_reserve(arena, time->axis->is_sorted ? 0 : count, sizeof *time->place);
-    for (size_t k = 0; k < 3; k++)
+    for (size_t k = 0; k < 4; k++)
         arena_reserve(arena, count, sizeof(double));
+    arena_reserve(arena, series->blocks, sizeof *time->moved);
     arena_reserve(arena, series->lines, sizeof *time->law);
     arena_reserve(arena, series->blocks + 1, sizeof *time->partial);
     arena_reserve(arena, team_workers(evidence->context) * 6 * time->longest, sizeof(double));
@@ -68,7 +72,9 @@ static void time_carve(struct evidence *evidence, struct evidence_time *time)
     time->place = arena_carve(arena, time->axis->is_sorted ? 0 : count, sizeof *time->place);
     time->clean = arena_carve(arena, count, sizeof(double));
     time->mean = arena_carve(arena, count, sizeof(double));
+    time->total = arena_carve(arena, count, sizeof(double));
     time->spread = arena_carve(arena, count, sizeof(double));
+    time->moved = arena_carve(arena, series->blocks, sizeof *time->moved);
     time->law = arena_carve(arena, series->lines, sizeof *time->law);
     time->partial = arena_carve(arena, series->blocks + 1, sizeof *time->partial);
     time->pool = time->partial + series->blocks;
@@ -213,6 +219,11 @@ void evidence_time_round(struct evidence *evidence, uint64_t round)
         chain_begin(evidence);
     if (time->residual_on && round > 0)
         evidence_residual_update(evidence);
+}
+
+bool evidence_time_settled(const struct evidence *evidence)
+{
+    return evidence->time->chain_on && evidence->time->change <= SETTLED * sqrt(evidence->noise);
 }
 
 static void part_block(void *opaque, size_t block, size_t worker)

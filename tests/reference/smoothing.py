@@ -141,6 +141,8 @@ def main():
         series_check(driver, "slow process", random, 60, 1.0, 0.999, [1.0, 2.0], 0.1)
         chain_check(driver, "chain of equal steps", random, 30, 4, np.array([0.9, 0.5, 0.0, 0.99]), [1.0], 0.3)
         chain_check(driver, "chain of irregular steps", random, 25, 5, np.array([0.2, 0.999, 0.7, 0.9, 0.5]), [0.25, 1.0, 7.0], 0.5)
+        chain_check(driver, "long chain", random, 300, 3, np.array([0.9, 0.5, 0.99]), [1.0], 0.3)
+        chain_check(driver, "long chain that forgets little", random, 300, 2, np.array([0.9999, 0.9998]), [1.0, 0.25], 0.97)
         chain_check(driver, "chain of scalars", random, 40, 1, np.array([0.8]), [1.0, 2.0], 0.2)
         chain_check(driver, "chain without data", random, 10, 2, np.array([0.8, 0.3]), [1.0], 1.0)
         chain_check(driver, "chain of one step", random, 1, 3, np.array([0.8, 0.3, 0.5]), [1.0], 0.0)
