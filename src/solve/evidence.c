@@ -324,6 +324,10 @@ void evidence_trim(struct model *model, size_t rank)
     if (rank >= point->rank)
         return;
     point->rank = rank;
+    if (model->time.components > rank + 1) {
+        model->time.steps_law[rank] = model->time.steps_law[model->time.components - 1];
+        model->time.components = rank + 1;
+    }
     for (size_t side = 0; side < 2; side++) {
         struct matrix a = side == 0 ? point->left : point->right;
         for (size_t i = 0; i < a.rows; i++)

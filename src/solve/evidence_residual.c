@@ -44,6 +44,11 @@ static uint64_t position(const struct evidence_time *time, uint64_t start, uint6
     return time->place != NULL ? start + time->place[q] : q;
 }
 
+static double weight_at(const struct half *half, uint64_t k)
+{
+    return half->weight != NULL ? (double)half->weight[k] : 1;
+}
+
 static double mean_at(const struct evidence_time *time, size_t step, size_t line)
 {
     const double *x = time->steps->mean.data + step * time->steps->mean.stride;
@@ -67,7 +72,8 @@ static struct kalman_series series_view(const struct evidence *evidence, size_t 
         uint32_t step = half->across[k];
         when[q] = time->axis->at[step];
         value[q] = time->clean[k] - mean_at(time, step, line);
-        noise[q] = evidence->noise / (time->steps->line_precision[step] * time->series->line_precision[line]);
+        double precision = time->steps->line_precision[step] * time->series->line_precision[line];
+        noise[q] = evidence->noise / (precision * weight_at(half, k));
     }
     return (struct kalman_series){count, when, value, noise};
 }
@@ -90,7 +96,8 @@ static void targets_put(const struct evidence *evidence, size_t line, const stru
         time->total[start + q] = total;
         *moved += change * change;
         time->spread[time->twin[k]] = state->variance[q];
-        excess += state->variance[q] * time->steps->line_precision[time->series->half->across[k]];
+        double precision = time->steps->line_precision[time->series->half->across[k]];
+        excess += state->variance[q] * precision * weight_at(time->series->half, k);
     }
     time->series->excess[line] = excess;
 }
@@ -171,7 +178,7 @@ static void excess_block(void *opaque, size_t block, size_t worker)
     for (size_t line = half->block[block]; line < half->block[block + 1]; line++) {
         double sum = 0;
         for (uint64_t k = half->start[line]; k < half->start[line + 1]; k++)
-            sum += time->spread[k] * time->series->line_precision[half->across[k]];
+            sum += time->spread[k] * time->series->line_precision[half->across[k]] * weight_at(half, k);
         time->steps->excess[line] = sum;
     }
 }

@@ -148,6 +148,7 @@ fescue_status evidence_time_open(struct evidence *evidence, const struct evidenc
     time->steps = by_rows ? &evidence->rows : &evidence->columns;
     time->series = by_rows ? &evidence->columns : &evidence->rows;
     assert(time->axis->count == time->steps->half->lines);
+    time->change = INFINITY;
     time->longest = longest_series(time->series->half);
     time_reserve(evidence, time);
     TRY(arena_open(context, &time->arena));
@@ -170,6 +171,22 @@ void evidence_time_close(struct evidence *evidence)
     GIVE(evidence->context, &evidence->time);
 }
 
+/* The noise of a start, its mean over the cells, and that of every series where they have their own. */
+static void noise_take(struct evidence *evidence, const struct time_part *part)
+{
+    struct evidence_side *series = evidence->time->series;
+    double mean = 0, unit = evidence->problem->scale * evidence->problem->scale;
+    for (size_t line = 0; line < series->half->lines; line++) {
+        double cells = (double)(series->half->start[line + 1] - series->half->start[line]);
+        mean += cells * part->noise[line] / (unit * (double)evidence->problem->target.count);
+    }
+    if (!(mean > 0))
+        return;
+    evidence->noise = mean;
+    for (size_t line = 0; series->moments.weight != NULL && line < series->half->lines; line++)
+        series->line_precision[line] = mean * unit / part->noise[line];
+}
+
 void evidence_time_begin(struct evidence *evidence, const struct model *start)
 {
     struct evidence_time *time = evidence->time;
@@ -178,6 +195,7 @@ void evidence_time_begin(struct evidence *evidence, const struct model *start)
     if (part->along != time->axis->along)
         return;
     time->residual_on = true;
+    noise_take(evidence, part);
     for (size_t line = 0; line < time->series->half->lines; line++) {
         time->law[line] = part->law[line];
         time->law[line].variance /= unit;
@@ -248,6 +266,22 @@ static void part_block(void *opaque, size_t block, size_t worker)
     }
 }
 
+/* The laws of the components in the order of their strength in the table, as a model has them, and of the effect. */
+static void laws_put(const struct evidence *evidence, struct kalman_law *law)
+{
+    const struct evidence_time *time = evidence->time;
+    const double *rows = evidence->rows.variance, *columns = evidence->columns.variance;
+    for (size_t k = 0; k < evidence->rank; k++) {
+        size_t place = 0;
+        for (size_t l = 0; l < evidence->rank; l++) {
+            double mine = rows[k] * columns[k], other = rows[l] * columns[l];
+            place += other > mine || (other == mine && l < k);
+        }
+        law[place] = time->steps_law[k];
+    }
+    law[evidence->rank] = time->steps_law[evidence->rank];
+}
+
 fescue_status evidence_time_part(struct evidence *evidence, struct time_part *part)
 {
     const struct evidence_time *time = evidence->time;
@@ -260,7 +294,8 @@ fescue_status evidence_time_part(struct evidence *evidence, struct time_part *pa
     if (status != FESCUE_OK)
         return status;
     memcpy(part->start, half->start, ((size_t)half->lines + 1) * sizeof *part->start);
-    memcpy(part->steps_law, time->steps_law, components * sizeof *part->steps_law);
+    if (components > 0)
+        laws_put(evidence, part->steps_law);
     void *job[2] = {evidence, part};
     team_run(evidence->context, half->blocks, part_block, job);
     return FESCUE_OK;
