@@ -8,7 +8,7 @@
  *   say         sentences for people, on standard error
  *   progress    the moving line on a terminal
  *   place       where the files of a run go
- *   fill, survey, sow, night   the commands
+ *   fill, survey, rank, sow, night   the commands
  *
  * Data go to files or standard output, everything else to standard error. A failure is one line "fescue: sentence", and
  * the exit status is that of fescue.h's status list.
@@ -45,6 +45,7 @@ extern const size_t command_count;
 
 fescue_status command_fill(struct request *request);
 fescue_status command_survey(struct request *request);
+fescue_status command_rank(struct request *request);
 fescue_status command_sow(struct request *request);
 fescue_status command_night(struct request *request);
 

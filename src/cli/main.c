@@ -22,6 +22,10 @@ const struct command commands[] = {
      "Prints shape, density, thin and empty rows and columns, and what the pattern of holes can determine, to standard "
      "output.",
      FESCUE_FOR_SURVEY, command_survey},
+    {"rank", "TABLE", "find rank and ridge by cross-validation",
+     "Hides the cells of TABLE in folds and prints to standard output how well each rank foretells them, as a small "
+     "chart, and which rank, ridge and offsets follow from it. With -o the curve is also written as rank.csv.",
+     FESCUE_FOR_RANK, command_rank},
     {"sow", NULL, "make a synthetic table with known truth",
      "Writes a synthetic table and the truth it was made from into a directory.", FESCUE_FOR_SOW, command_sow},
     {"night", "PLAN", "fill many tables unattended, with a ledger and a summary",

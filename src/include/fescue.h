@@ -136,7 +136,14 @@ typedef double fescue_time_value;
 typedef int64_t fescue_bytes_value;
 
 /* Commands an option belongs to; PLAN: the section [night] of a plan. */
-enum { FESCUE_FOR_FILL = 1, FESCUE_FOR_SURVEY = 2, FESCUE_FOR_SOW = 4, FESCUE_FOR_NIGHT = 8, FESCUE_FOR_PLAN = 16 };
+enum {
+    FESCUE_FOR_FILL = 1,
+    FESCUE_FOR_SURVEY = 2,
+    FESCUE_FOR_SOW = 4,
+    FESCUE_FOR_NIGHT = 8,
+    FESCUE_FOR_PLAN = 16,
+    FESCUE_FOR_RANK = 32
+};
 
 struct fescue_option {
     const char *name; /* "holdout": --holdout */
@@ -235,6 +242,20 @@ void fescue_fill_destroy(fescue_fill **fill);
 typedef struct fescue_hold fescue_hold;
 fescue_status fescue_place_hold(fescue_context *context, const char *directory, double patience, fescue_hold **out);
 void fescue_place_release(fescue_hold **hold);
+
+/* ---- rank
+ * -------------------------------------------------------------------------------------------------------------- */
+
+typedef struct fescue_ranking fescue_ranking;
+/* Which rank, ridge and offsets a table supports, by cross-validation. Borrows the table, which must outlive *out. */
+fescue_status fescue_rank_table(const fescue_table *table, const struct fescue_options *options, fescue_ranking **out);
+/* The curve over ranks as a small chart and what follows from it, plain text, owned by the ranking. */
+const char *fescue_ranking_text(const fescue_ranking *ranking);
+/* The rank that was chosen. */
+uint32_t fescue_ranking_rank(const fescue_ranking *ranking);
+/* Writes rank.csv into `directory`. */
+fescue_status fescue_ranking_write(const fescue_ranking *ranking, const char *directory);
+void fescue_ranking_destroy(fescue_ranking **ranking);
 
 /* ---- sow
  * ---------------------------------------------------------------------------------------------------------------- */

@@ -80,7 +80,7 @@ done:
     return status;
 }
 
-static fescue_status chooser_open(struct chooser *chooser)
+fescue_status chooser_open(struct chooser *chooser)
 {
     fescue_status status = FESCUE_OK;
     size_t rank_most = (size_t)(chooser->options->rank > chooser->options->rank_most ? chooser->options->rank
@@ -93,7 +93,7 @@ done:
     return status;
 }
 
-static void chooser_close(struct chooser *chooser)
+void chooser_close(struct chooser *chooser)
 {
     if (chooser->version != 0)
         problem_free(&chooser->problem);

@@ -85,6 +85,9 @@ fescue_status ridge_search(struct chooser *chooser, const struct solve_limits *l
 /* The same, downwards only. */
 fescue_status ridge_lower(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate);
 
+/* Takes the rooms of a chooser whose options, cells and context are set; closing frees all but the candidates. */
+fescue_status chooser_open(struct chooser *chooser);
+void chooser_close(struct chooser *chooser);
 bool chooser_is_late(const struct chooser *chooser);
 /* Whether fits of this rank take so long that each has to be worth it. */
 bool chooser_is_large(const struct chooser *chooser, size_t rank);
@@ -99,6 +102,8 @@ fescue_status path_walk(struct chooser *chooser, const struct candidate *alone, 
                         struct candidate *chosen);
 /* To a given rank, the ridge following on the way. */
 fescue_status path_climb(struct chooser *chooser, const struct candidate *alone, size_t rank, struct candidate *chosen);
+/* One rank more than the candidate has, under the ridge it has. */
+fescue_status path_grow(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate);
 enum { SETTLE_ROUNDS = 4 }; /* beyond which offsets and low-rank part hardly move any more */
 /* Offsets and low-rank part in turns, at most SETTLE_ROUNDS times, while the hidden cells gain. */
 fescue_status path_settle(struct chooser *chooser, const struct solve_limits *limits, bool at_once,

@@ -106,7 +106,7 @@ static bool is_scarce(const struct chooser *chooser, size_t rank)
 }
 
 /* One rank more than the candidate has, under the ridge it has. */
-static fescue_status rank_grow(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate)
+fescue_status path_grow(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
     double ridge = ridge_of(chooser, candidate);
@@ -127,7 +127,7 @@ static fescue_status rank_step(struct chooser *chooser, double best_rmse, struct
     bool is_large = chooser_is_large(chooser, candidate->point.rank + 1);
     if (is_large && limits.iterations > 12)
         limits.iterations = 12;
-    TRY(rank_grow(chooser, &limits, candidate));
+    TRY(path_grow(chooser, &limits, candidate));
     TRY(path_settle(chooser, &limits, false, candidate));
     TRY(ridge_search(chooser, &limits, candidate));
     bool is_suspect = candidate->errors.rmse >= best_rmse * (1 - gain_worth) && !is_large;
@@ -171,7 +171,7 @@ static fescue_status climb_briefly(struct chooser *chooser, size_t rank, struct 
     struct solve_limits loose = chooser_loose_limits(chooser), brief = loose;
     brief.iterations = brief.iterations < 5 ? brief.iterations : 5;
     while (candidate->point.rank < rank) {
-        TRY(rank_grow(chooser, &brief, candidate));
+        TRY(path_grow(chooser, &brief, candidate));
         TRY(ridge_lower(chooser, &brief, candidate));
     }
     TRY(candidate_fit(chooser, candidate->ridge, &loose, candidate));
@@ -186,7 +186,7 @@ static fescue_status climb(struct chooser *chooser, size_t rank, struct candidat
     fescue_status status = FESCUE_OK;
     struct solve_limits limits = chooser_loose_limits(chooser);
     while (candidate->point.rank < rank) {
-        TRY(rank_grow(chooser, &limits, candidate));
+        TRY(path_grow(chooser, &limits, candidate));
         TRY(path_settle(chooser, &limits, false, candidate));
         TRY(ridge_search(chooser, &limits, candidate));
     }

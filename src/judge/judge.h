@@ -118,6 +118,41 @@ fescue_status choose_run(fescue_context *context, const struct holdout *holdout,
                          struct choice *choice);
 void choice_free(fescue_context *context, struct choice *choice);
 
+/* ---- rank and ridge by cross-validation ----------------------------------------------------------------------------
+ */
+
+struct ranking_point {
+    enum fescue_offsets offsets;
+    uint32_t rank;
+    double ridge;                       /* NAN: learnt */
+    double rmse;                        /* over all folds' hidden cells */
+    double worse, worse_error;          /* mean squared error over that of the best point, and its standard error */
+    double *fold;                       /* owned; mean squared error of each fold */
+    uint32_t rank_least, rank_greatest; /* over the folds, where each has its own; else the rank */
+    bool is_exact;                      /* hidden cells are met to rounding, in every fold */
+};
+struct ranking {
+    struct ranking_point *point; /* owned; ranks 0, 1, 2, ... of the kind of offsets that was chosen */
+    uint64_t count, best, chosen;
+    struct ranking_point learnt; /* by the evidence fit; fold NULL: there is none */
+    struct ranking_point rival;  /* what the other kind of offsets comes to; fold NULL: there was none */
+    uint32_t folds;
+    uint64_t hidden; /* cells, over all folds */
+    struct hole_shape shape;
+    bool has_structure;    /* something beats rank 0 */
+    bool is_learnt_better; /* the evidence fit beats what was chosen, by two standard errors */
+    bool is_cut;           /* a time limit ended the path */
+    bool is_ended;         /* the path ended because no rank gained any more; else at the largest */
+};
+struct ranking_request {
+    const struct fescue_options *options;
+    const struct time_axis *time; /* NULL or along none: no clock */
+    double deadline;
+};
+fescue_status ranking_run(fescue_context *context, const struct cells *cells, const struct ranking_request *request,
+                          struct ranking *ranking);
+void ranking_free(fescue_context *context, struct ranking *ranking);
+
 /* ---- how wrong: intervals and the announced error -----------------------------------------------------------------
  */
 

@@ -70,6 +70,8 @@ fescue_status write_time_part(const struct run *run, struct output *output); /* 
 fescue_status write_trace(const struct run *run, struct output *output);     /* trace.csv */
 fescue_status write_record(const struct run *run, struct output *output);    /* run.json, the seal */
 
+fescue_status write_ranking(const struct ranking *ranking, struct output *output); /* rank.csv, the seal */
+
 /* Pieces that sow uses too: a field of delimited text, quoted as RFC 4180 says when it has to be; a dense array file,
    with one line of comment or NULL. */
 void write_field(struct outfile *file, const char *text, char separator);

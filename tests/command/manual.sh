@@ -25,7 +25,7 @@ item() { # PAGE NAME
         inside && wanted' "$1" | sed 's/[.,;:]$//; s/ [.,;:]//g'
 }
 
-for command in fill survey sow night; do
+for command in fill rank survey sow night; do
     page=$root/src/man/fescue-$command.1
     "$FESCUE" $command --help >help
     sed -n 's/^  \(.\)\(.\)[ ,]*\(--[a-z-]*\).*/\2 \3/p' help | sed 's/^  *--/- /; s/ --/ /' | sort >wanted

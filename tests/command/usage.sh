@@ -47,7 +47,7 @@ try 0 --version
 check "the version is that of the header" grep -qx "fescue $(sed -n 's/^#define FESCUE_VERSION "\(.*\)"/\1/p' \
     "$root/src/include/fescue.h")" out
 check "and nothing else" is_empty err
-for arguments in --help 'fill --help' 'survey -h' 'sow --help' 'night -h' 'fill --rank 3 --help'; do
+for arguments in --help 'fill --help' 'survey -h' 'rank --help' 'sow --help' 'night -h' 'fill --rank 3 --help'; do
     try 0 $arguments
     check "on standard output" grep -q '^usage: fescue' out
     check "nothing on standard error" is_empty err
@@ -55,7 +55,7 @@ for arguments in --help 'fill --help' 'survey -h' 'sow --help' 'night -h' 'fill 
 done
 
 # Every option of the lists is in the help of the commands that it belongs to, and only there.
-for command in fill:FESCUE_FOR_FILL:options survey:FESCUE_FOR_SURVEY:options sow:FESCUE_FOR_SOW:sow_options \
+for command in fill:FESCUE_FOR_FILL:options rank:FESCUE_FOR_RANK:options survey:FESCUE_FOR_SURVEY:options sow:FESCUE_FOR_SOW:sow_options \
     night:FESCUE_FOR_NIGHT:night_options; do
     name=${command%%:*}
     flag=${command#*:}
