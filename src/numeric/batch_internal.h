@@ -8,9 +8,9 @@
 
 #include "numeric/numeric.h"
 
-/* Cells of one line whose moments are added in one go. 32 positions of 512 bytes (a tile of the kernel) are half of the
-   nearest cache. */
-enum { BATCH_STRETCH = 32 };
+/* Cells of one line whose moments are added in one go. 48 positions of 512 bytes (a tile of the kernel) leave room in a
+   nearest cache of 32 KB for the sums. */
+enum { BATCH_STRETCH = 48 };
 struct batch_stretch {
     size_t count;
     size_t offset[BATCH_STRETCH]; /* of the position's moment, in doubles */

@@ -15,9 +15,9 @@
  *
  * Cost: d(d+1)/2 + 2d additions and multiplications a cell, and as many numbers to read, so that what counts is where
  * they are read from. Eight lines go together. Where they see a good share of the positions, they go through these in
- * steps of 32 and through the triangle in tiles of 64 numbers: one tile of 32 positions is read from afar once, and
+ * steps of 48 and through the triangle in tiles of 64 numbers: one tile of 48 positions is read from afar once, and
  * from the nearest cache for each line that has a cell there; its sum stays in registers. Where lines see few
- * positions there is nothing to share, and each goes through its cells alone, asking for those 32 cells ahead.
+ * positions there is nothing to share, and each goes through its cells alone, asking for those 48 cells ahead.
  *
  * Either way the sums of a line run over its cells in order: the bits depend on the instruction set only in that some
  * round products before they are added, and on the number of threads not at all.
