@@ -4,6 +4,8 @@
  */
 #include "numeric/kernel_internal.h"
 
+#include <float.h>
+
 const char *kernel_name(void)
 {
     return kernel_set_choose()->name;
@@ -16,7 +18,7 @@ const struct batch_kernel *batch_kernel_choose(void)
 
 unsigned packed_batch_solve(const struct batch_kernel *kernel, double *a, size_t k, double *b, double *inverse)
 {
-    return kernel->solve(a, k, b, inverse);
+    return kernel->solve(a, k, b, inverse, DBL_EPSILON);
 }
 
 void packed_batch_unpack(const struct batch_kernel *kernel, const double *batch, size_t size,

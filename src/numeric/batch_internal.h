@@ -23,7 +23,8 @@ struct batch_kernel {
        `next` will need is asked for; NULL when it is near. */
     void (*add)(const double *data, const struct batch_stretch *stretch, const struct batch_stretch *next,
                 const double *factor, size_t size, double *sum);
-    unsigned (*solve)(double *a, size_t k, double *b, double *inverse);
+    /* epsilon: of the arithmetic that A was summed up in */
+    unsigned (*solve)(double *a, size_t k, double *b, double *inverse, double epsilon);
     void (*pack)(const double *lines, size_t stride, size_t size, double *batch);
     void (*unpack)(const double *batch, size_t size, double *const line[BATCH_LANES]);
 };

@@ -18,8 +18,8 @@
  *     A^-1 = N'N       A^-1_ij = sum_{p>=i} N_pi N_pj, row by row in place of N
  *
  * with four entries (i, j .. j+3) at a time, so that five loads feed four multiply-adds and no sum waits for another.
- * k^3 / 2 multiply-adds a matrix in all. A pivot below k eps A_ii has lost all its digits: its lane is reported, and
- * its numbers mean nothing.
+ * k^3 / 2 multiply-adds a matrix in all. A pivot below k epsilon A_ii has lost all its digits: its lane is reported,
+ * and its numbers mean nothing.
  *
  * What a lane gives depends on LANES not at all, and on MADD only in whether products are rounded before they are
  * added.
@@ -176,11 +176,11 @@ INLINE void entries_square(double *n, size_t k, size_t i, size_t j, const size_t
             CALL(j_, 1);                                                                                               \
     } while (0)
 
-static void lanes_factor(double *a, size_t k, vec_bits *broken)
+static void lanes_factor(double *a, size_t k, double epsilon, vec_bits *broken)
 {
     for (size_t i = 0; i < k; i++) {
         double *row = row_of(a, i);
-        vec pivot = *at(row, i), least = pivot * ((double)k * DBL_EPSILON);
+        vec pivot = *at(row, i), least = pivot * ((double)k * epsilon);
 #define CALL(j, count) entries_factor(a, row, j, &pivot, count)
         BY_FOUR(i);
 #undef CALL
@@ -228,12 +228,12 @@ static void lanes_invert(double *a, size_t k, double *inverse)
     }
 }
 
-static unsigned lanes_all(double *a, size_t k, double *b, double *inverse)
+static unsigned lanes_all(double *a, size_t k, double *b, double *inverse, double epsilon)
 {
     unsigned lanes = 0;
     for (size_t first = 0; first < BATCH_LANES; first += LANES) {
         vec_bits broken = {0};
-        lanes_factor(a + first, k, &broken);
+        lanes_factor(a + first, k, epsilon, &broken);
         lanes_solve(a + first, k, b + first);
         if (inverse != NULL)
             lanes_invert(a + first, k, inverse + first);

@@ -91,6 +91,7 @@ struct sweep {
     size_t rank_most;   /* at most 257 */
     const char *kernel; /* which instruction set was chosen: "portable", "avx2", "avx512" */
     const struct sweep_kernel *kernels;
+    const struct batch_kernel *batch;
     double *partial, *room;
     float *pool;
     size_t pool_size, workers; /* the team may not grow beyond what it was at sweep_create */

@@ -25,11 +25,13 @@ size_t sweep_width(const struct sweep *sweep, size_t rank)
     return (rank + lanes - 1) / lanes * lanes;
 }
 
-/* Doubles that one worker needs: a chunk's rows (doubles also where they are floats), three squares, three vectors. */
+/* Doubles that one worker needs: a chunk's rows (doubles also where they are floats), three squares, three vectors, a
+   batch of small systems. */
 static size_t worker_room(const struct sweep *sweep)
 {
     size_t width = sweep_width(sweep, sweep->rank_most);
-    return (SWEEP_CHUNK + 3 * width + 3) * width;
+    size_t batch = sweep->rank_most < SWEEP_BATCH_RANK ? sweep->rank_most : SWEEP_BATCH_RANK;
+    return (SWEEP_CHUNK + 3 * width + 3) * width + batch_size(packed_size(batch)) + batch_size(batch);
 }
 
 struct sweep_room sweep_room_of(const struct sweep *sweep, size_t worker)
@@ -44,6 +46,9 @@ struct sweep_room sweep_room_of(const struct sweep *sweep, size_t worker)
     room.side = room.lower + width * width;
     room.solution = room.side + width;
     room.inverse = room.solution + width;
+    room.systems = room.inverse + width;
+    room.sides = room.systems +
+                 batch_size(packed_size(sweep->rank_most < SWEEP_BATCH_RANK ? sweep->rank_most : SWEEP_BATCH_RANK));
     return room;
 }
 
@@ -57,6 +62,7 @@ fescue_status sweep_create(fescue_context *context, const struct cells *cells, s
                             .rank_most = rank_most,
                             .kernel = set->name,
                             .kernels = set->sweep[cells->precision],
+                            .batch = set->batch,
                             .workers = team_workers(context)};
     sweep->pool_size = 0;
     if (cells->precision == FESCUE_SINGLE)
@@ -237,6 +243,21 @@ void sweep_line_store(const struct sweep_job *job, const struct sweep_room *room
     double *packed = job->factors + line * packed_size(rank);
     for (size_t i = 0; i < rank; i++)
         memcpy(packed + packed_size(i), room->lower + i * job->width, (i + 1) * sizeof *packed);
+}
+
+/* The factor's diagonal is the other way up in a batch. */
+void sweep_lane_store(const struct sweep_job *job, const struct sweep_room *room, uint32_t line, size_t lane)
+{
+    double *weight = &MATRIX_AT(job->product, line, 0);
+    for (size_t j = 0; j < job->rank; j++)
+        weight[j] = room->sides[j * BATCH_LANES + lane];
+    if (job->factors == NULL)
+        return;
+    double *packed = job->factors + line * packed_size(job->rank);
+    for (size_t at = 0; at < packed_size(job->rank); at++)
+        packed[at] = room->systems[at * BATCH_LANES + lane];
+    for (size_t i = 0; i < job->rank; i++)
+        packed[packed_size(i) + i] = 1 / packed[packed_size(i) + i];
 }
 
 void sweep_line_solve(const struct sweep_job *job, const struct sweep_room *room, uint32_t line)

@@ -6,7 +6,7 @@
 #ifndef FESCUE_NUMERIC_SWEEP_INTERNAL_H
 #define FESCUE_NUMERIC_SWEEP_INTERNAL_H
 
-#include "numeric/numeric.h"
+#include "numeric/batch_internal.h"
 
 /* Numbers a line of a factor may have: rank 256, one more for a solver's constant, up to whole registers. */
 enum { SWEEP_MOST_WIDTH = 272 };
@@ -58,9 +58,14 @@ struct sweep_room {
     void *rows;                        /* SWEEP_CHUNK x width, gathered */
     double *gram, *factor, *lower;     /* upper triangles of G and U, and U' */
     double *side, *solution, *inverse; /* width each */
+    double *systems, *sides;           /* of eight lines side by side, where ranks are small */
 };
+/* Up to here systems are solved eight at a time: 133 KB of factors stay in a core's own cache. */
+enum { SWEEP_BATCH_RANK = 64 };
 struct sweep_room sweep_room_of(const struct sweep *sweep, size_t worker);
 
+/* The same of lane `lane` of a batch. */
+void sweep_lane_store(const struct sweep_job *job, const struct sweep_room *room, uint32_t line, size_t lane);
 /* A line whose U' is in lower and whose weights are in solution: writes both where they belong. */
 void sweep_line_store(const struct sweep_job *job, const struct sweep_room *room, uint32_t line);
 /* A line that has no cells, or whose factor broke down: from gram on by the rules of packed_cholesky. */

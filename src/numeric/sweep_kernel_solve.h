@@ -8,7 +8,8 @@
  * rows x up to 3 registers, which stay in registers over the chunk: 4 + 3 loads feed 12 multiply-adds. Within a chunk
  * sums are REAL, over chunks double.
  *
- * The factor is made row by row in double, a whole row in registers or in the nearest cache:
+ * Up to rank 64 eight lines go together and their systems are solved side by side (batch_kernel.h). Above, a factor is
+ * made row by row in double, a whole row in registers or in the nearest cache:
  *     U_i = (G_i - sum over j < i of U_ji U_j) / sqrt(the i-th number of that)
  * with numbers left of the diagonal that mean nothing, and set down as a column of U' as well. A pivot below rank eps
  * G_ii, eps that of REAL, has lost all its digits: then sweep_line_solve, with its rule for such matrices, takes over
@@ -162,19 +163,75 @@ static void line_substitute(const struct sweep_room *room, size_t rank, size_t w
     }
 }
 
+static void lines_solve(const struct sweep_job *job, const struct sweep_room *room, const struct span *span)
+{
+    for (uint32_t line = span->line; line < span->last; line++) {
+        line_gather(job, room, line, span->stop);
+        bool empty = span->start[line] == span->start[line + 1];
+        if (!empty && line_factor(room, job->rank, job->width)) {
+            line_substitute(room, job->rank, job->width);
+            sweep_line_store(job, room, line);
+        } else {
+            sweep_line_solve(job, room, line);
+        }
+    }
+}
+
+/* G and h of a line into its lane. */
+static void lane_write(const struct sweep_job *job, const struct sweep_room *room, size_t lane)
+{
+    double *to = room->systems + lane;
+    for (size_t i = 0; i < job->rank; i++) {
+        for (size_t j = 0; j <= i; j++, to += BATCH_LANES)
+            *to = room->gram[j * job->width + i];
+        room->sides[i * BATCH_LANES + lane] = room->side[i];
+    }
+}
+
+static void lane_clear(const struct sweep_job *job, const struct sweep_room *room, size_t lane)
+{
+    for (size_t at = 0; at < packed_size(job->rank); at++)
+        room->systems[at * BATCH_LANES + lane] = 0;
+    for (size_t i = 0; i < job->rank; i++) {
+        room->systems[(packed_size(i) + i) * BATCH_LANES + lane] = 1;
+        room->sides[i * BATCH_LANES + lane] = 0;
+    }
+}
+
+/* Lines without cells, and those whose factor breaks down, are done again on their own. */
+static void batch_solve(const struct sweep_job *job, const struct sweep_room *room, const struct span *span,
+                        uint32_t first)
+{
+    unsigned apart = 0;
+    size_t count = span->last - first < BATCH_LANES ? span->last - first : BATCH_LANES;
+    for (size_t lane = 0; lane < BATCH_LANES; lane++) {
+        uint32_t line = first + (uint32_t)lane;
+        if (lane >= count || span->start[line] == span->start[line + 1]) {
+            lane_clear(job, room, lane);
+            apart |= 1U << lane;
+            continue;
+        }
+        line_gather(job, room, line, span->stop);
+        lane_write(job, room, lane);
+    }
+    apart |= job->sweep->batch->solve(room->systems, job->rank, room->sides, NULL, REAL_EPSILON);
+    for (size_t lane = 0; lane < count; lane++) {
+        uint32_t line = first + (uint32_t)lane;
+        if (apart >> lane & 1) {
+            line_gather(job, room, line, span->stop);
+            sweep_line_solve(job, room, line);
+        } else
+            sweep_lane_store(job, room, line, lane);
+    }
+}
+
 static void solve_block(const struct sweep_job *job, size_t block, size_t worker, double sums[SWEEP_SUMS])
 {
     struct span span = span_of(job, block, 0);
     struct sweep_room room = sweep_room_of(job->sweep, worker);
     (void)sums;
-    for (uint32_t line = span.line; line < span.last; line++) {
-        line_gather(job, &room, line, span.stop);
-        bool empty = span.start[line] == span.start[line + 1];
-        if (!empty && line_factor(&room, job->rank, job->width)) {
-            line_substitute(&room, job->rank, job->width);
-            sweep_line_store(job, &room, line);
-        } else {
-            sweep_line_solve(job, &room, line);
-        }
-    }
+    if (job->rank > SWEEP_BATCH_RANK)
+        lines_solve(job, &room, &span);
+    for (uint32_t line = span.line; job->rank <= SWEEP_BATCH_RANK && line < span.last; line += BATCH_LANES)
+        batch_solve(job, &room, &span, line);
 }
