@@ -4,7 +4,7 @@
 #   make demo       fill the two demo tables
 #   make check      every test of the ordinary suite; ends with "N passed, N failed"
 #   make check-long the suites that take longer
-#   make bench      measure, beside the limits of the machine
+#   make bench      measure, beside the limits of the machine: $(BUILD)/bench.json, and bench.png by gnuplot
 #   make bench-solvers    error against time of all solvers: $(BUILD)/solvers.csv, and solvers.png by gnuplot
 #   make bench-recovery   tables recovered from few cells, and with noise: $(BUILD)/recovery.csv
 #   make format     bring all sources into the one layout
@@ -27,13 +27,15 @@ PROGRAM_SOURCES = $(wildcard src/cli/*.c)
 UNIT_SOURCES = $(wildcard tests/unit/test_*.c)
 SUPPORT_SOURCES = $(wildcard tests/unit/support*.c)
 FAULT_SOURCES = $(wildcard tests/fault/test_*.c)
-BENCH_SOURCES = $(wildcard tests/bench/*.c)
+BENCH_SOURCES = $(wildcard tests/bench/bench_*.c)
+BENCH_PARTS = $(filter-out $(BENCH_SOURCES),$(wildcard tests/bench/*.c))
 MANUALS = $(wildcard src/man/*.1)
 
 object = $(patsubst %.c,$(BUILD)/%.o,$(1))
 LIBRARY = $(BUILD)/libfescue.a
 PROGRAM = $(BUILD)/fescue
 SUPPORT = $(BUILD)/tests/unit/libsupport.a
+BENCH_LIBRARY = $(BUILD)/tests/bench/libbench.a
 BENCHES = $(patsubst tests/%.c,$(BUILD)/tests/%,$(BENCH_SOURCES))
 UNIT_TESTS = $(patsubst tests/%.c,$(BUILD)/tests/%,$(UNIT_SOURCES) $(FAULT_SOURCES))
 
@@ -58,7 +60,11 @@ $(SUPPORT): $(call object,$(SUPPORT_SOURCES))
 $(UNIT_TESTS): $(BUILD)/tests/%: $(BUILD)/tests/%.o $(SUPPORT) $(LIBRARY)
 	$(CC) $(CFLAGS) $^ -lcmocka $(LIBS) -o $@
 
-$(BENCHES): $(BUILD)/tests/bench/%: $(BUILD)/tests/bench/%.o $(LIBRARY)
+$(BENCH_LIBRARY): $(call object,$(BENCH_PARTS))
+	rm -f $@
+	ar rcs $@ $^
+
+$(BENCHES): $(BUILD)/tests/bench/%: $(BUILD)/tests/bench/%.o $(BENCH_LIBRARY) $(LIBRARY)
 	$(CC) $(CFLAGS) $^ $(LIBS) -o $@
 
 tests: $(UNIT_TESTS)
@@ -72,8 +78,10 @@ check: all tests
 check-long: all tests
 	PYTHON=$(PYTHON) BUILD=$(BUILD) CC="$(CC)" tests/run long
 
-bench: $(BENCHES)
-	for bench in $(BENCHES); do $$bench || exit; done
+# What is measured, and on tables of which sizes: see tests/bench/bench_fescue.c.
+bench: all $(BUILD)/tests/bench/bench_fescue $(filter %/bench_load,$(BENCHES))
+	BUILD=$(BUILD) PYTHON=$(PYTHON) $(BUILD)/tests/bench/bench_fescue
+	set -e; for bench in $(filter %/bench_load,$(BENCHES)); do BUILD=$(BUILD) $$bench; done
 
 bench-recovery: $(BUILD)/tests/bench/bench_recovery
 	$< 20 all $(BUILD)/recovery.csv

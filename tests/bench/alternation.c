@@ -1,0 +1,156 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Against a ridge alternation in NumPy (alternation.py) on the same sown table, rank 16, one thread each: a sweep of
+ * normal equations and solves over both sides, and the time until the error on hidden cells is within one in a hundred
+ * of where the alternation ends.
+ */
+#include "rating.h"
+
+#include "numeric/numeric.h"
+#include "solve/solve.h"
+
+#include <stdio.h>
+#include <stdlib.h>
+#include <string.h>
+
+enum { SWEEPS = 40 };
+/* Noise variance over the factors' variance of 1/4 each, as the table is sown. */
+#define RIDGE "1.0"
+
+static void column_write(const char *prefix, const char *name, const void *data, size_t size, uint64_t count)
+{
+    char path[1200];
+    snprintf(path, sizeof path, "%s.%s", prefix, name);
+    FILE *to = fopen(path, "wb");
+    if (to == NULL || fwrite(data, size, count, to) != count || fclose(to) != 0) {
+        fprintf(stderr, "bench: %s could not be written\n", path);
+        exit(1);
+    }
+}
+
+static void table_write(const struct rating *rating, const char *prefix)
+{
+    const struct half *half = &rating->cells.by_row;
+    uint32_t *row = bench_take(rating->cells.count, sizeof *row);
+    for (uint32_t i = 0; i < half->lines; i++)
+        for (uint64_t k = half->start[i]; k < half->start[i + 1]; k++)
+            row[k] = i;
+    column_write(prefix, "row", row, sizeof *row, rating->cells.count);
+    column_write(prefix, "column", half->across, sizeof *half->across, rating->cells.count);
+    column_write(prefix, "value", half->value, sizeof(double), rating->cells.count);
+    column_write(prefix, "hidden.row", rating->row, sizeof *rating->row, rating->hidden);
+    column_write(prefix, "hidden.column", rating->column, sizeof *rating->column, rating->hidden);
+    column_write(prefix, "hidden.value", rating->value, sizeof *rating->value, rating->hidden);
+    free(row);
+}
+
+static void table_remove(const char *prefix)
+{
+    static const char *const names[] = {"row", "column", "value", "hidden.row", "hidden.column", "hidden.value"};
+    for (size_t k = 0; k < sizeof names / sizeof *names; k++) {
+        char path[1200];
+        snprintf(path, sizeof path, "%s.%s", prefix, names[k]);
+        remove(path);
+    }
+}
+
+/* What alternation.py says; NULL when it, or NumPy, is not there. */
+static json_t *alternation_run(const char *prefix)
+{
+    const char *python = getenv("PYTHON"), *scripts = getenv("BENCH_SCRIPTS");
+    char command[2600], line[512];
+    snprintf(command, sizeof command, "OPENBLAS_NUM_THREADS=1 %s %s/alternation.py %s %d " RIDGE " %d",
+             python != NULL ? python : "/usr/bin/python3", scripts != NULL ? scripts : "tests/bench", prefix,
+             RATING_RANK, SWEEPS);
+    FILE *from = popen(command, "r");
+    json_t *said = from != NULL && fgets(line, sizeof line, from) != NULL ? json_loads(line, 0, NULL) : NULL;
+    if (from != NULL)
+        pclose(from);
+    return said;
+}
+
+/* ---- a sweep ------------------------------------------------------------------------------------------------------
+ */
+
+struct sweep_stand {
+    const struct rating *rating;
+    struct sweep sweep;
+    struct matrix left, right;
+    double ridge[RATING_RANK];
+};
+
+static void both_solve(void *argument)
+{
+    struct sweep_stand *stand = argument;
+    sweep_solve(&stand->sweep, &stand->rating->cells.by_row, stand->right, stand->ridge, stand->left, NULL);
+    sweep_solve(&stand->sweep, &stand->rating->cells.by_column, stand->left, stand->ridge, stand->right, NULL);
+}
+
+static double sweep_seconds(const struct rating *rating)
+{
+    struct sweep_stand stand = {.rating = rating};
+    struct arena arena = {0};
+    fescue_context *context = rating->context;
+    struct random_stream stream = random_open(4, RANDOM_TEST, 0);
+    matrix_reserve(&arena, rating->cells.rows, RATING_RANK);
+    matrix_reserve(&arena, rating->cells.columns, RATING_RANK);
+    bench_check(context, arena_open(context, &arena));
+    stand.left = matrix_carve(&arena, rating->cells.rows, RATING_RANK);
+    stand.right = matrix_carve(&arena, rating->cells.columns, RATING_RANK);
+    for (size_t j = 0; j < rating->cells.columns; j++)
+        for (size_t k = 0; k < RATING_RANK; k++)
+            MATRIX_AT(stand.right, j, k) = 0.25 * random_normal(&stream);
+    for (size_t k = 0; k < RATING_RANK; k++)
+        stand.ridge[k] = 1;
+    bench_check(context, team_resize(context, 1));
+    bench_check(context, sweep_create(context, &rating->cells, RATING_RANK, &stand.sweep));
+    double seconds = bench_seconds(1, both_solve, &stand, NULL, NULL);
+    sweep_destroy(&stand.sweep);
+    arena_close(context, &arena);
+    return seconds;
+}
+
+/* ---- a fit --------------------------------------------------------------------------------------------------------
+ */
+
+/* Processor seconds of the shortest fit that gets there, from the spectral start on; 0 when none does. */
+static double seconds_until(const struct rating *rating, const char *solver, double error, struct fit_outcome *out)
+{
+    static const uint64_t lengths[] = {1, 2, 3, 4, 6, 8, 11, 15, 20, 30, 45};
+    for (size_t k = 0; k < sizeof lengths / sizeof *lengths; k++) {
+        rating_fit(rating, solver, RATING_RANK, 1, lengths[k], out);
+        if (out->rmse <= error)
+            return out->cpu;
+    }
+    return 0;
+}
+
+void alternation_measure(struct bench *bench, uint64_t cells)
+{
+    struct rating rating;
+    char prefix[1100];
+    rating_sow(cells, FESCUE_DOUBLE, &rating);
+    snprintf(prefix, sizeof prefix, "%s/bench-table", bench->build);
+    table_write(&rating, prefix);
+    json_t *said = alternation_run(prefix);
+    table_remove(prefix);
+    double theirs = json_real_value(json_object_get(said, "sweep"));
+    double spent = json_real_value(json_object_get(said, "seconds"));
+    double error = json_real_value(json_object_get(said, "error")), ours = sweep_seconds(&rating);
+    json_int_t count = (json_int_t)rating.cells.count;
+    figure_add(bench, json_pack("{s:s, s:I, s:i, s:i, s:f, s:f, s:f}", "what", "sweep of normal equations, both sides",
+                                "cells", count, "rank", RATING_RANK, "threads", 1, "seconds", ours, "NumPy's", theirs,
+                                "share of NumPy's", ours / theirs));
+    for (size_t k = 0; said != NULL && solver_at(k) != NULL; k++) {
+        struct fit_outcome outcome;
+        double seconds = seconds_until(&rating, solver_name(solver_at(k)), 1.01 * error, &outcome);
+        figure_add(bench,
+                   json_pack("{s:s, s:s, s:I, s:i, s:i, s:f, s:f, s:f, s:f, s:f, s:I}", "what",
+                             "time to the alternation's error", "solver", solver_name(solver_at(k)), "cells", count,
+                             "rank", RATING_RANK, "threads", 1, "seconds", seconds, "alternation's", spent,
+                             "share of the alternation's", seconds / spent, "error on hidden cells", outcome.rmse,
+                             "alternation's error", error, "iterations", (json_int_t)outcome.iterations));
+    }
+    json_decref(said);
+    rating_free(&rating);
+}

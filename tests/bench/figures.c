@@ -1,0 +1,138 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Timing, printing and keeping of figures.
+ */
+#include "figures.h"
+
+#include <math.h>
+#include <stdio.h>
+#include <stdlib.h>
+#include <string.h>
+
+enum { RUNS_LEAST = 5, RUNS_MOST = 101 };
+/* Seconds in which the runs of one work are to be over: a busy machine needs many for a good median. */
+static const double seconds_enough = 0.5;
+
+void bench_check(fescue_context *context, fescue_status status)
+{
+    if (status == FESCUE_OK)
+        return;
+    fprintf(stderr, "bench: %s\n", fescue_failure_text(context));
+    exit(1);
+}
+
+void *bench_take(size_t count, size_t size)
+{
+    size_t bytes = (count * size + 63) / 64 * 64 + 64;
+    void *taken = aligned_alloc(64, bytes);
+    if (taken == NULL) {
+        fprintf(stderr, "bench: no memory for %zu bytes\n", bytes);
+        exit(1);
+    }
+    memset(taken, 0, bytes);
+    return taken;
+}
+
+static int order(const void *a, const void *b)
+{
+    double x = *(const double *)a, y = *(const double *)b;
+    return (x > y) - (x < y);
+}
+
+double bench_median(double *values, size_t count)
+{
+    qsort(values, count, sizeof *values, order);
+    return values[count / 2];
+}
+
+double bench_seconds(size_t threads, bench_work *work, void *argument, bench_work *other, double *limit)
+{
+    double (*const clock)(void) = threads == 1 ? clock_cpu : clock_wall;
+    double own[RUNS_MOST], others[RUNS_MOST], all = 0;
+    size_t runs = 0;
+    work(argument); /* what the first run meets for the first time is not counted */
+    for (; runs < RUNS_MOST && (runs < RUNS_LEAST || all < seconds_enough); runs++) {
+        double begin = clock();
+        if (other != NULL)
+            other(NULL);
+        double middle = clock();
+        work(argument);
+        others[runs] = middle - begin;
+        own[runs] = clock() - middle;
+        all += own[runs];
+    }
+    if (other != NULL)
+        *limit = bench_median(others, runs);
+    return bench_median(own, runs);
+}
+
+static void value_print(const char *key, const json_t *value)
+{
+    if (json_is_string(value))
+        printf("  %s", json_string_value(value));
+    else if (json_is_integer(value))
+        printf("  %s %lld", key, (long long)json_integer_value(value));
+    else if (json_is_real(value))
+        printf("  %s %.4g", key, json_real_value(value));
+}
+
+void figure_add(struct bench *bench, json_t *figure)
+{
+    const char *key;
+    json_t *value;
+    json_object_foreach(figure, key, value) value_print(key, value);
+    printf("\n");
+    fflush(stdout);
+    json_array_append_new(bench->figures, figure);
+}
+
+/* A column of numbers for the chart: the share of gemm by kernel and rank, one thread. */
+static void chart_data_write(const struct bench *bench, FILE *to)
+{
+    size_t k;
+    const json_t *figure;
+    json_array_foreach(bench->figures, k, figure)
+    {
+        const json_t *share = json_object_get(figure, "share of gemm"), *rank = json_object_get(figure, "rank");
+        if (share == NULL || rank == NULL || json_integer_value(json_object_get(figure, "threads")) != 1)
+            continue;
+        const char *precision = json_string_value(json_object_get(figure, "precision"));
+        fprintf(to, "\"%s, %s, rank %d\" %.4f\n", json_string_value(json_object_get(figure, "what")),
+                precision != NULL ? precision : "double", (int)json_integer_value(rank), json_real_value(share));
+    }
+}
+
+static void chart_draw(const struct bench *bench)
+{
+    char path[1024], command[3200];
+    snprintf(path, sizeof path, "%s/bench.dat", bench->build);
+    FILE *to = fopen(path, "w");
+    if (to == NULL)
+        return;
+    chart_data_write(bench, to);
+    fclose(to);
+    snprintf(command, sizeof command,
+             "command -v gnuplot >/dev/null && gnuplot -e \"set terminal pngcairo size 1000,1500; set output "
+             "'%s/bench.png'; set title 'Share of the rate of matrix products, one thread'; set yrange [] reverse; "
+             "set xrange [0:*]; set grid x; set lmargin 42; set ytics font ',9'; set style fill solid 0.6; "
+             "plot '%s' using (0.5*\\$2):0:(0.5*\\$2):(0.35):ytic(1) with boxxyerror notitle\"",
+             bench->build, path);
+    if (system(command) == 0)
+        printf("the chart is %s/bench.png\n", bench->build);
+}
+
+void figures_write(const struct bench *bench)
+{
+    char path[1024];
+    snprintf(path, sizeof path, "%s/bench.json", bench->build);
+    json_t *all =
+        json_pack("{s:{s:f, s:f, s:f, s:f}, s:O}", "limits", "dgemm flops a second", bench->limit[LIMIT_DGEMM],
+                  "sgemm flops a second", bench->limit[LIMIT_SGEMM], "copied bytes a second", bench->limit[LIMIT_COPY],
+                  "inflated bytes a second", bench->limit[LIMIT_INFLATE], "figures", bench->figures);
+    if (all == NULL || json_dump_file(all, path, JSON_INDENT(2)) != 0)
+        fprintf(stderr, "bench: %s could not be written\n", path);
+    else
+        printf("all figures are in %s\n", path);
+    json_decref(all);
+    chart_draw(bench);
+}

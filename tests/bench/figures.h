@@ -1,0 +1,48 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Figures of a run: printed as they come, and kept for bench.json.
+ */
+#ifndef BENCH_FIGURES_H
+#define BENCH_FIGURES_H
+
+#include "base/base.h"
+
+#include <jansson.h>
+
+enum bench_limit { LIMIT_DGEMM, LIMIT_SGEMM, LIMIT_COPY, LIMIT_INFLATE, LIMIT_COUNT };
+
+struct bench {
+    json_t *figures;           /* an array of objects */
+    double limit[LIMIT_COUNT]; /* flops a second; bytes a second of the two others */
+    const char *build;         /* where results go */
+};
+
+/* Ends the program with the context's sentence when `status` is one of failure. */
+void bench_check(fescue_context *context, fescue_status status);
+void *bench_take(size_t count, size_t size); /* zeroed, aligned to 64; ends the program when there is no memory */
+
+/* Work that is timed. */
+typedef void bench_work(void *argument);
+/* Processor seconds of a run of `work` on one thread, wall seconds on several, and in *limit the seconds of a run of
+   `other` between two of them: medians, so that what else the machine does strikes both alike. NULL: no other. */
+double bench_seconds(size_t threads, bench_work *work, void *argument, bench_work *other, double *limit);
+double bench_median(double *values, size_t count); /* orders them */
+
+/* Takes over `figure`, an object with "what", prints it and keeps it. */
+void figure_add(struct bench *bench, json_t *figure);
+/* bench.json, and the chart when gnuplot is there. */
+void figures_write(const struct bench *bench);
+
+/* ---- the parts of a run ------------------------------------------------------------------------------------------ */
+
+void limits_measure(struct bench *bench);
+void gemm_double_run(void *none); /* GEMM_FLOPS each */
+void gemm_single_run(void *none);
+#define GEMM_FLOPS (2.0 * 768 * 768 * 768)
+
+void kernels_measure(struct bench *bench, uint64_t cells, enum fescue_precision precision);
+void moments_measure(struct bench *bench, uint64_t cells);
+void fits_measure(struct bench *bench, uint64_t cells);
+void alternation_measure(struct bench *bench, uint64_t cells);
+
+#endif

@@ -1,0 +1,86 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * An iteration and the whole fit of every solver at ranks 8, 16 and 32 on sown ratings, with one thread and two, and
+ * the most memory held.
+ */
+#include "rating.h"
+
+#include "solve/solve.h"
+
+#include <math.h>
+#include <stdlib.h>
+#include <string.h>
+
+/* Iterations of a whole fit: far beyond where errors on hidden cells have settled. */
+enum { ITERATIONS = 40 };
+#define RIDGE 0.1 /* noise over signal, 1/4, on columns and rows that differ much in their cells */
+
+double rating_error(const struct rating *rating, const struct low_rank *point, double scale)
+{
+    double sum = 0;
+    for (uint64_t k = 0; k < rating->hidden; k++) {
+        double off = scale * low_rank_entry(point, rating->row[k], rating->column[k]) - rating->value[k];
+        sum += off * off;
+    }
+    return sqrt(sum / (double)rating->hidden);
+}
+
+/* From the observed cells to factors; in a context of its own, so that what it holds is known. */
+void rating_fit(const struct rating *rating, const char *solver, size_t rank, size_t threads, uint64_t iterations,
+                struct fit_outcome *out)
+{
+    const struct solve_limits limits = {.iterations = iterations, .gradient = 1e-6, .change = 1e-6};
+    struct solve_result result = {0};
+    struct problem problem;
+    struct low_rank point;
+    fescue_context *context;
+    if (fescue_context_create(NULL, &context) != FESCUE_OK)
+        exit(1);
+    bench_check(context, team_resize(context, threads));
+    double cpu = clock_cpu(), wall = clock_wall();
+    bench_check(context, problem_create(context, &rating->cells, NULL, RIDGE, &problem));
+    bench_check(context, start_spectral(&problem, rank, 1, &point));
+    bench_check(context, solve_run(&problem, solver_find(solver), &limits, &point, &result));
+    *out = (struct fit_outcome){clock_cpu() - cpu,           clock_wall() - wall, 0, result.iterations, 0,
+                                solve_stop_word(result.stop)};
+    out->rmse = rating_error(rating, &point, problem.scale);
+    out->bytes = fescue_memory_usage(rating->context).bytes + fescue_memory_usage(context).peak_bytes;
+    low_rank_free(context, &point);
+    solve_result_free(context, &result);
+    problem_free(&problem);
+    fescue_context_destroy(&context);
+}
+
+static void fit_report(struct bench *bench, const struct rating *rating, const char *solver, size_t rank)
+{
+    struct fit_outcome outcome[2];
+    for (size_t threads = 1; threads <= 2; threads++) {
+        struct fit_outcome *own = &outcome[threads - 1], begun;
+        rating_fit(rating, solver, rank, threads, 1, &begun);
+        rating_fit(rating, solver, rank, threads, ITERATIONS, own);
+        double seconds = threads == 1 ? own->cpu : own->wall, first = threads == 1 ? begun.cpu : begun.wall;
+        double iteration = own->iterations > 1 ? (seconds - first) / (double)(own->iterations - 1) : seconds;
+        json_t *figure = json_pack("{s:s, s:s, s:I, s:I, s:I, s:f, s:f, s:I, s:f, s:s, s:f}", "what", "fit", "solver",
+                                   solver, "cells", (json_int_t)rating->cells.count, "rank", (json_int_t)rank,
+                                   "threads", (json_int_t)threads, "seconds", seconds, "ns a cell and iteration",
+                                   iteration / (double)rating->cells.count * 1e9, "iterations",
+                                   (json_int_t)own->iterations, "error on hidden cells", own->rmse, "ended by",
+                                   own->stop, "MB at most", (double)own->bytes / 1e6);
+        if (threads == 2)
+            json_object_set_new(figure, "times one thread", json_real(outcome[0].wall / own->wall));
+        figure_add(bench, figure);
+    }
+}
+
+void fits_measure(struct bench *bench, uint64_t cells)
+{
+    static const size_t ranks[] = {8, 16, 32};
+    bool large = cells > 20000000;
+    struct rating rating;
+    rating_sow(cells, large ? FESCUE_SINGLE : FESCUE_DOUBLE, &rating);
+    for (size_t k = 0; solver_at(k) != NULL; k++)
+        for (size_t r = 0; r < sizeof ranks / sizeof *ranks; r++)
+            if (!large || (k == 0 && ranks[r] == 16))
+                fit_report(bench, &rating, solver_name(solver_at(k)), ranks[r]);
+    rating_free(&rating);
+}

@@ -1,0 +1,106 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * What the machine does at best, on one thread: matrix products in both precisions, bytes copied (read and written,
+ * both counted), and bytes that zlib inflates from the kind of text that tables are.
+ */
+#include "figures.h"
+
+#include "numeric/numeric.h"
+
+#include <cblas.h>
+#include <stdio.h>
+#include <stdlib.h>
+#include <string.h>
+#include <zlib.h>
+
+enum { SIZE = 768, COPY_BYTES = 256 << 20, TEXT_BYTES = 16 << 20 };
+
+static double *gemm_room(void)
+{
+    static double *room;
+    if (room == NULL) {
+        struct matrix none = {0};
+        matrix_multiply(1, none, false, none, false, 0, none); /* holds OpenBLAS at one thread */
+        room = bench_take(3 * SIZE * SIZE, sizeof *room);
+    }
+    return room;
+}
+
+void gemm_double_run(void *none)
+{
+    double *a = gemm_room();
+    (void)none;
+    cblas_dgemm(CblasRowMajor, CblasNoTrans, CblasNoTrans, SIZE, SIZE, SIZE, 1, a, SIZE, a + SIZE * SIZE, SIZE, 0,
+                a + 2 * SIZE * SIZE, SIZE);
+}
+
+void gemm_single_run(void *none)
+{
+    float *a = (float *)(void *)gemm_room();
+    (void)none;
+    cblas_sgemm(CblasRowMajor, CblasNoTrans, CblasNoTrans, SIZE, SIZE, SIZE, 1, a, SIZE, a + SIZE * SIZE, SIZE, 0,
+                a + 2 * SIZE * SIZE, SIZE);
+}
+
+struct bytes {
+    unsigned char *from, *to;
+    size_t from_size, to_size;
+};
+
+static void copy_run(void *argument)
+{
+    struct bytes *bytes = argument;
+    memcpy(bytes->to, bytes->from, bytes->from_size);
+}
+
+static void inflate_run(void *argument)
+{
+    struct bytes *bytes = argument;
+    uLongf size = bytes->to_size;
+    if (uncompress(bytes->to, &size, bytes->from, bytes->from_size) != Z_OK)
+        exit(1);
+}
+
+static double copy_rate(void)
+{
+    struct bytes bytes = {bench_take(COPY_BYTES, 1), bench_take(COPY_BYTES, 1), COPY_BYTES, COPY_BYTES};
+    double seconds = bench_seconds(1, copy_run, &bytes, NULL, NULL);
+    free(bytes.from);
+    free(bytes.to);
+    return 2.0 * COPY_BYTES / seconds;
+}
+
+static double inflate_rate(void)
+{
+    struct bytes bytes = {bench_take(TEXT_BYTES, 1), bench_take(TEXT_BYTES + 64, 1), TEXT_BYTES, TEXT_BYTES};
+    struct random_stream stream = random_open(1, RANDOM_TEST, 0);
+    size_t size = 0;
+    while (size + 40 < TEXT_BYTES)
+        size +=
+            (size_t)sprintf((char *)bytes.to + size, "%u %u %.1f\n", 1 + (unsigned)(size / 1400),
+                            1 + (unsigned)random_below(&stream, 20000), 0.5 * (double)(1 + random_below(&stream, 10)));
+    uLongf packed = TEXT_BYTES;
+    if (compress2(bytes.from, &packed, bytes.to, size, 6) != Z_OK)
+        exit(1);
+    bytes.from_size = packed;
+    double seconds = bench_seconds(1, inflate_run, &bytes, NULL, NULL);
+    free(bytes.from);
+    free(bytes.to);
+    return (double)size / seconds;
+}
+
+static void limit_add(struct bench *bench, enum bench_limit limit, const char *what, const char *unit, double rate)
+{
+    bench->limit[limit] = rate;
+    figure_add(bench, json_pack("{s:s, s:i, s:f}", "what", what, "threads", 1, unit, rate / 1e9));
+}
+
+void limits_measure(struct bench *bench)
+{
+    limit_add(bench, LIMIT_DGEMM, "limit: dgemm", "GFLOP/s",
+              GEMM_FLOPS / bench_seconds(1, gemm_double_run, NULL, NULL, NULL));
+    limit_add(bench, LIMIT_SGEMM, "limit: sgemm", "GFLOP/s",
+              GEMM_FLOPS / bench_seconds(1, gemm_single_run, NULL, NULL, NULL));
+    limit_add(bench, LIMIT_COPY, "limit: copy, read and written", "GB/s", copy_rate());
+    limit_add(bench, LIMIT_INFLATE, "limit: inflate, text out", "GB/s", inflate_rate());
+}
