@@ -87,9 +87,9 @@ void figure_add(struct bench *bench, json_t *figure)
 }
 
 /* A column of numbers for the chart: the share of gemm by kernel and rank, one thread. */
-static void chart_data_write(const struct bench *bench, FILE *to)
+static size_t chart_data_write(const struct bench *bench, FILE *to)
 {
-    size_t k;
+    size_t k, lines = 0;
     const json_t *figure;
     json_array_foreach(bench->figures, k, figure)
     {
@@ -99,7 +99,9 @@ static void chart_data_write(const struct bench *bench, FILE *to)
         const char *precision = json_string_value(json_object_get(figure, "precision"));
         fprintf(to, "\"%s, %s, rank %d\" %.4f\n", json_string_value(json_object_get(figure, "what")),
                 precision != NULL ? precision : "double", (int)json_integer_value(rank), json_real_value(share));
+        lines++;
     }
+    return lines;
 }
 
 static void chart_draw(const struct bench *bench)
@@ -109,8 +111,10 @@ static void chart_draw(const struct bench *bench)
     FILE *to = fopen(path, "w");
     if (to == NULL)
         return;
-    chart_data_write(bench, to);
+    size_t lines = chart_data_write(bench, to);
     fclose(to);
+    if (lines == 0)
+        return;
     snprintf(command, sizeof command,
              "command -v gnuplot >/dev/null && gnuplot -e \"set terminal pngcairo size 1000,1500; set output "
              "'%s/bench.png'; set title 'Share of the rate of matrix products, one thread'; set yrange [] reverse; "
