@@ -113,6 +113,8 @@ static fescue_status names_retire(struct output *output)
                                         "table.csv.gz",
                                         "truth.mtx.gz",
                                         "truth.csv.gz",
+                                        "readings.mtx",
+                                        "readings.mtx.gz",
                                         "truth-left.mtx",
                                         "truth-right.mtx",
                                         "truth-spectrum.mtx",

@@ -62,6 +62,8 @@ enum sow_stream {
     SOW_HOLES,
     SOW_NOISE,
     SOW_FAULTS,
+    SOW_HEAVY, /* the denominators of heavy noise */
+    SOW_WANDER,
     SOW_FEN = 100,
     SOW_CIDER = 200
 };

@@ -2,7 +2,7 @@
  *
  * A plain table: random factors of a wanted spectrum, two-way effects, noise.
  *
- *     t_ij = a_i + b_j + sum_k u_ik s_k v_jk          the truth
+ *     t_ij = a_i + b_j + sum_k u_ik s_k v_jk + w_ij   the truth
  *     x_ij = t_ij + sigma e_ij                        what is observed, where it is
  *
  *   m, n    rows, columns
@@ -11,7 +11,11 @@
  *   s       singular values, in the wanted ratios, scaled so that sum s_k^2 = m n: then the root mean square of the
  *           low-rank part is 1, which is the unit ("signal size") of the effects and of the noise
  *   a, b    Gaussian with standard deviation A
- *   e       Gaussian with standard deviation 1
+ *   w       a movement of each column's own along the rows, of standard deviation W: a sum of WAVES cosines with
+ *           random phases whose frequencies are Cauchy with scale 1/T, T a fortieth of the rows. Its correlation is
+ *           exp(-|i - i'|/T) in the mean, that of an AR(1) process, and any cell is found without the others
+ *           (Shinozuka, Deodatis 1991, "Simulation of stochastic processes by spectral representation")
+ *   e       standard deviation 1: Gaussian, or Student's t with 4 degrees of freedom over the root of 2
  *
  * Orthonormalising is Gram-Schmidt done twice, which is enough for orthogonality to rounding (Giraud, Langou,
  * Rozloznik 2005, "The loss of orthogonality in the Gram-Schmidt orthogonalization process"); written out here so that
@@ -192,21 +196,47 @@ done:
     return status;
 }
 
+static double wander_at(const struct plain *plain, uint64_t i, uint64_t j)
+{
+    enum { WAVES = 32 };
+    static const double pi = 3.14159265358979323846;
+    struct random_stream stream = sow_stream(plain->sowing, SOW_WANDER, j << 32);
+    double steps = fmax(2, (double)plain->rows / 40), sum = 0;
+    for (int k = 0; k < WAVES; k++) {
+        double frequency = tan(pi * (random_uniform(&stream) - 0.5)) / steps;
+        sum += cos(frequency * (double)i + 2 * pi * random_uniform(&stream));
+    }
+    return plain->sowing->options->wander * sqrt(2. / WAVES) * sum;
+}
+
 static double truth_at(const struct plain *plain, uint64_t i, uint64_t j)
 {
     const double *u = plain->left.data + i * plain->left.stride, *v = plain->right.data + j * plain->right.stride;
     double sum = MATRIX_AT(plain->row_effect, i, 0) + MATRIX_AT(plain->column_effect, j, 0);
     for (size_t k = 0; k < plain->rank; k++)
         sum += u[k] * MATRIX_AT(plain->spectrum, k, 0) * v[k];
-    return sum;
+    return plain->sowing->options->wander > 0 ? sum + wander_at(plain, i, j) : sum;
+}
+
+/* Noise of standard deviation 1. t is a normal number over the root of a quarter of a chi-square number with 4 degrees
+   of freedom, which is -2 log(u u') of two uniform ones, and has variance 2. */
+static double noise_at(const struct plain *plain, uint64_t i, uint64_t j)
+{
+    enum { HEAVY = 1 }; /* the words of --noise-shape */
+    struct random_stream stream = sow_stream(plain->sowing, SOW_NOISE, (j << 32) + i);
+    double normal = random_normal(&stream);
+    if (plain->sowing->options->noise_shape != HEAVY)
+        return normal;
+    struct random_stream heavy = sow_stream(plain->sowing, SOW_HEAVY, (j << 32) + 2 * i);
+    double chi = -2 * log((1 - random_uniform(&heavy)) * (1 - random_uniform(&heavy)));
+    return normal / sqrt(chi / 2);
 }
 
 static double observed_at(const struct plain *plain, uint64_t i, uint64_t j)
 {
     double added = faults_source(plain->sowing, &i, &j);
     double sigma = plain->sowing->options->noise;
-    struct random_stream stream = sow_stream(plain->sowing, SOW_NOISE, (j << 32) + i);
-    return truth_at(plain, i, j) + added + (sigma > 0 ? sigma * random_normal(&stream) : 0);
+    return truth_at(plain, i, j) + added + (sigma > 0 ? sigma * noise_at(plain, i, j) : 0);
 }
 
 /* ---- tables ----------------------------------------------------------------------------------------------------- */
@@ -331,12 +361,16 @@ static fescue_status table_sow(struct plain *plain)
 
 /* ---- truth ------------------------------------------------------------------------------------------------------ */
 
-static fescue_status truth_cells_write(struct plain *plain)
+/* Every cell, column by column. */
+static fescue_status every_cell_write(struct plain *plain, const char *name, const char *comment,
+                                      double cell_at(const struct plain *plain, uint64_t i, uint64_t j))
 {
     struct sink sink;
     fescue_status status;
-    TRY(sink_open(plain->sowing, "truth.mtx", &sink));
-    sink_text(&sink, "%%MatrixMarket matrix array real general\n% every cell without noise, column by column\n");
+    TRY(sink_open(plain->sowing, name, &sink));
+    sink_text(&sink, "%%MatrixMarket matrix array real general\n% ");
+    sink_text(&sink, comment);
+    sink_text(&sink, ", column by column\n");
     sink_count(&sink, plain->rows);
     sink_text(&sink, " ");
     sink_count(&sink, plain->columns);
@@ -344,7 +378,7 @@ static fescue_status truth_cells_write(struct plain *plain)
     for (uint64_t j = 0; j < plain->columns; j++) {
         TRY(progress_of_column(plain, "writing the truth", j));
         for (uint64_t i = 0; i < plain->rows; i++) {
-            sink_real(&sink, truth_at(plain, i, j));
+            sink_real(&sink, cell_at(plain, i, j));
             sink_text(&sink, "\n");
         }
         TRY(sink.status);
@@ -374,7 +408,11 @@ static fescue_status truth_sow(struct plain *plain)
     bool is_small = plain->rows * plain->columns <= truth_most;
     bool as_cells = sowing->options->truth == TRUTH_CELLS || (sowing->options->truth == TRUTH_AUTO && is_small);
     sowing->truth = as_cells ? "truth.mtx" : "truth-*.mtx";
-    return as_cells ? truth_cells_write(plain) : truth_factors_write(plain);
+    if (as_cells)
+        return every_cell_write(plain, "truth.mtx", "every cell without noise", truth_at);
+    if (sowing->options->wander > 0)
+        return FAIL(sowing->context, FESCUE_USAGE, "--wander: no factors hold such a truth; give --truth cells");
+    return truth_factors_write(plain);
 }
 
 fescue_status sow_plain(struct sowing *sowing)
@@ -391,6 +429,8 @@ fescue_status sow_plain(struct sowing *sowing)
     TRY(cells_count(&plain, &sowing->observed));
     TRY(table_sow(&plain));
     TRY(truth_sow(&plain));
+    if (sowing->options->readings)
+        TRY(every_cell_write(&plain, "readings.mtx", "every cell as it would be observed", observed_at));
     double m = (double)plain.rows, n = (double)plain.columns, r = (double)plain.rank;
     sowing->noise = sowing->options->noise;
     double share = r * (m + n - r) / (double)sowing->observed; /* of the cells that the free numbers eat up */
