@@ -4,10 +4,10 @@
  * easier. Three estimates of the mean squared error, over the unseen cells M and the pooled hidden ones H:
  *
  *     by leverage    mean_M (1 + lev) * mean_H e^2 / (1 + lev)
- *     by distance    the same in strata of the distance d to the nearest seen cell of the sensor, weighted as the
- *                    unseen cells fall into them; a stratum of fewer than ten hidden cells takes its neighbour's
- *     by variance    mean_M V s^2 * mean_H e^2 / (V s^2), over the cells hidden in the shape of the holes where there
- *                    are enough (variance.c: V and the sensor's scale s)
+ *     by variance    mean_M V s^2 * mean_H e^2 / mean_H V s^2, over the cells hidden in the shape of the holes where
+ *                    there are enough (variance.c: V and the sensor's scale s)
+ *     by distance    the same over all of H, in strata of the distance d to the nearest seen cell of the sensor; a
+ *                    stratum of fewer than ten hidden cells takes its neighbours' with it
  *
  * What is announced is the root of the mean of the last two where distances are known, else of the first and the last.
  *
@@ -25,9 +25,10 @@ static const double edges[JUDGE_BINS - 1] = {1.5, 2.5, 5.5, 15.5, 50.5, 150.5};
 
 /* Of one sensor and stratum. */
 struct sums {
-    double hidden, by_leverage;         /* cells, sum of e^2 / (1 + lev) */
-    double shaped, by_variance;         /* of those that count for the variance: cells, sum of e^2 / (V s^2) */
-    double missing, leverage, variance; /* cells, sum of 1 + lev, of V s^2 */
+    double hidden, relative;               /* hidden cells, sum of e^2 / (1 + lev) */
+    double square, expected;               /* sums of e^2 and of V s^2 */
+    double shaped_square, shaped_expected; /* of these, over the cells that count for the variance */
+    double missing, leverage, variance;    /* unseen cells, sums of 1 + lev and of V s^2 */
 };
 struct announcing {
     const struct judgement *judgement;
@@ -59,11 +60,13 @@ static void sums_fill(struct announcing *announcing, const struct judged *cells,
             continue;
         }
         sums->hidden++;
-        sums->by_leverage += cells->square[c] / (1 + cells->leverage[c]);
+        sums->relative += cells->square[c] / (1 + cells->leverage[c]);
+        sums->square += cells->square[c];
+        sums->expected += v;
         if (announcing->by_shape && !(cells->marks[c] & JUDGED_SHAPED))
             continue;
-        sums->shaped++;
-        sums->by_variance += cells->square[c] / v;
+        sums->shaped_square += cells->square[c];
+        sums->shaped_expected += v;
     }
 }
 
@@ -76,9 +79,11 @@ static void sums_add(const struct announcing *announcing, const uint32_t *drawn,
         for (size_t b = 0; times > 0 && b < JUDGE_BINS; b++) {
             const struct sums *sums = &announcing->sums[(size_t)s * JUDGE_BINS + b];
             total[b].hidden += times * sums->hidden;
-            total[b].by_leverage += times * sums->by_leverage;
-            total[b].shaped += times * sums->shaped;
-            total[b].by_variance += times * sums->by_variance;
+            total[b].relative += times * sums->relative;
+            total[b].square += times * sums->square;
+            total[b].expected += times * sums->expected;
+            total[b].shaped_square += times * sums->shaped_square;
+            total[b].shaped_expected += times * sums->shaped_expected;
             total[b].missing += times * sums->missing;
             total[b].leverage += times * sums->leverage;
             total[b].variance += times * sums->variance;
@@ -86,21 +91,21 @@ static void sums_add(const struct announcing *announcing, const uint32_t *drawn,
     }
 }
 
-/* Mean of e^2 / (1 + lev) in a stratum; where it holds too few, in the nearest ones with it. */
-static double stratum_mean(const struct sums total[JUDGE_BINS], size_t b)
+/* What e^2 is of V s^2 in a stratum; where it holds too few, in the nearest ones with it. */
+static double stratum_ratio(const struct sums total[JUDGE_BINS], size_t b)
 {
-    double hidden = total[b].hidden, sum = total[b].by_leverage;
+    double hidden = total[b].hidden, square = total[b].square, expected = total[b].expected;
     for (size_t away = 1; hidden < STRATUM_LEAST && away < JUDGE_BINS; away++) {
-        if (b >= away) {
-            hidden += total[b - away].hidden;
-            sum += total[b - away].by_leverage;
-        }
-        if (b + away < JUDGE_BINS) {
-            hidden += total[b + away].hidden;
-            sum += total[b + away].by_leverage;
+        size_t near[2] = {b - away, b + away}; /* below 0 comes round to a number that is too large */
+        for (size_t k = 0; k < 2; k++) {
+            if (near[k] >= JUDGE_BINS)
+                continue;
+            hidden += total[near[k]].hidden;
+            square += total[near[k]].square;
+            expected += total[near[k]].expected;
         }
     }
-    return hidden > 0 ? sum / hidden : NAN;
+    return square / expected;
 }
 
 /* Mean squared errors. */
@@ -114,19 +119,19 @@ static struct estimates estimate(const struct announcing *announcing, const stru
     double strata = 0;
     for (size_t b = 0; b < JUDGE_BINS; b++) {
         sum.hidden += total[b].hidden;
-        sum.by_leverage += total[b].by_leverage;
-        sum.shaped += total[b].shaped;
-        sum.by_variance += total[b].by_variance;
+        sum.relative += total[b].relative;
+        sum.shaped_square += total[b].shaped_square;
+        sum.shaped_expected += total[b].shaped_expected;
         sum.missing += total[b].missing;
         sum.leverage += total[b].leverage;
         sum.variance += total[b].variance;
         if (total[b].missing > 0)
-            strata += total[b].leverage * stratum_mean(total, b);
+            strata += total[b].variance * stratum_ratio(total, b);
     }
     struct estimates found;
-    found.by_leverage = sum.leverage / sum.missing * sum.by_leverage / sum.hidden;
+    found.by_leverage = sum.leverage / sum.missing * sum.relative / sum.hidden;
     found.by_distance = strata / sum.missing;
-    found.by_variance = sum.variance / sum.missing * sum.by_variance / sum.shaped;
+    found.by_variance = sum.variance / sum.missing * sum.shaped_square / sum.shaped_expected;
     found.all = ((announcing->by_distance ? found.by_distance : found.by_leverage) + found.by_variance) / 2;
     return found;
 }

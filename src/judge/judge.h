@@ -175,7 +175,7 @@ double leverage_at(const struct leverage *leverage, uint32_t row, uint32_t colum
 void leverage_free(fescue_context *context, struct leverage *leverage);
 
 /* The expected squared error: a sum of terms with weights that are not negative (variance.c). */
-enum { VARIANCE_TERMS = 8, JUDGE_LEVELS = 4, JUDGE_BINS = 7 };
+enum { VARIANCE_TERMS = 9, JUDGE_LEVELS = 4, JUDGE_BINS = 7 };
 struct variance {
     double weight[VARIANCE_TERMS];
     double least; /* never below */
@@ -198,6 +198,7 @@ struct judgement {
     double level_quantiles[JUDGE_LEVELS];         /* at judge_levels */
     double halfwidth;                             /* where folds were not judged: of every cell, or NAN */
     double halfwidth_low, halfwidth_median, halfwidth_high; /* over unseen cells: a tenth is below, half, nine tenths */
+    double tilt, tilt_centre; /* the quantile's change with 1 / (1 + leverage), as a share, and where there is none */
     struct variance variance;
     struct leverage leverage; /* of the fit on all cells */
     struct tracks *tracks;    /* owned; NULL: nothing is known of distances */

@@ -6,7 +6,8 @@
  * and distance in the fit on all cells, s the scale of its sensor, and q the ceil((n+1) level)-th smallest of the n
  * scores |e| / (sqrt(V) s) of the hidden cells, each from a fit that did not see it: cross-conformal prediction with a
  * variance-scaled score (Vovk 2015, "Cross-conformal predictors"; Lei, G'Sell, Rinaldo, Tibshirani, Wasserman 2018,
- * "Distribution-free predictive inference for regression", for the scaling). No shape of the errors is assumed.
+ * "Distribution-free predictive inference for regression", for the scaling). No shape of the errors is assumed; where
+ * it changes with leverage, q does (tilt.c).
  *
  * Where no folds were run (the fit is exact, nothing was hidden, it would take too long) the error and one half-width
  * for all cells are those that choosing found on its own hidden cells.
@@ -17,21 +18,7 @@
 
 const double judge_levels[JUDGE_LEVELS] = {0.5, 0.8, 0.9, 0.95};
 
-static double score_at(const void *scores, uint64_t k)
-{
-    return ((const double *)scores)[k];
-}
-
-/* The ceil((n+1) level)-th smallest; infinite when there are too few. */
-static double score_quantile(const double *scores, uint64_t count, double level)
-{
-    static const double rounding = 1e-12; /* as in interval.c */
-    double place = ceil((double)(count + 1) * level * (1 - rounding));
-    return place > (double)count ? INFINITY : order_pick(score_at, scores, count, (uint64_t)fmax(place, 1) - 1);
-}
-
-static fescue_status scores_rank(fescue_context *context, const struct judged *pool, double level,
-                                 struct judgement *judgement)
+static fescue_status scores_rank(fescue_context *context, const struct judged *pool, struct judgement *judgement)
 {
     fescue_status status;
     double *scores = NULL;
@@ -41,9 +28,10 @@ static fescue_status scores_rank(fescue_context *context, const struct judged *p
         double v = variance_at(&judgement->variance, pool->leverage[c], pool->distance[c], pool->marks[c]);
         scores[c] = v > 0 ? sqrt(pool->square[c] / v) / judgement->scale[sensor] : 0;
     }
-    judgement->quantile = score_quantile(scores, pool->count, level);
     for (size_t l = 0; l < JUDGE_LEVELS; l++)
         judgement->level_quantiles[l] = score_quantile(scores, pool->count, judge_levels[l]);
+    TRY(tilt_fit(context, pool, scores, judgement));
+    judgement->quantile = score_quantile(scores, pool->count, judgement->level);
 done:
     GIVE(context, &scores);
     return status;
@@ -61,6 +49,11 @@ static void choice_take(const struct judge_request *request, struct judgement *j
     judgement->mae = choice->errors.mae;
 }
 
+static double width_at(const void *widths, uint64_t k)
+{
+    return ((const double *)widths)[k];
+}
+
 /* How wide intervals are over the unseen cells. */
 static fescue_status halfwidths_rank(fescue_context *context, const struct judged *cells, struct judgement *judgement)
 {
@@ -70,11 +63,11 @@ static fescue_status halfwidths_rank(fescue_context *context, const struct judge
     for (uint64_t c = 0; c < cells->count; c++) {
         uint32_t sensor = judgement->sensors_are_rows ? cells->row[c] : cells->column[c];
         double v = variance_at(&judgement->variance, cells->leverage[c], cells->distance[c], cells->marks[c]);
-        widths[c] = judgement->quantile * sqrt(v) * judgement->scale[sensor];
+        widths[c] = judgement->quantile * tilt_at(judgement, cells->leverage[c]) * sqrt(v) * judgement->scale[sensor];
     }
-    judgement->halfwidth_low = order_pick(score_at, widths, cells->count, cells->count / 10);
-    judgement->halfwidth_median = order_pick(score_at, widths, cells->count, cells->count / 2);
-    judgement->halfwidth_high = order_pick(score_at, widths, cells->count, cells->count - 1 - cells->count / 10);
+    judgement->halfwidth_low = order_pick(width_at, widths, cells->count, cells->count / 10);
+    judgement->halfwidth_median = order_pick(width_at, widths, cells->count, cells->count / 2);
+    judgement->halfwidth_high = order_pick(width_at, widths, cells->count, cells->count - 1 - cells->count / 10);
 done:
     GIVE(context, &widths);
     return status;
@@ -90,7 +83,7 @@ static fescue_status pool_judge(fescue_context *context, const struct judge_requ
     TRY(leverage_create(context, request->cells, request->model, noise, lambda, &judgement->leverage));
     variance_fit(pool, judgement->tracks != NULL, &judgement->variance);
     TRY(scales_fit(context, pool, judgement->tracks, judgement));
-    TRY(scores_rank(context, pool, request->options->interval, judgement));
+    TRY(scores_rank(context, pool, judgement));
     TRY(judged_missing(context, request->cells, (uint64_t)request->options->seed, &missing));
     struct judged_view view = {request->cells, &judgement->leverage, judgement->tracks};
     judged_measure(context, &view, 0, &missing);
@@ -158,6 +151,7 @@ double judgement_halfwidth(const struct judgement *judgement, uint32_t row, uint
             judgement->sensors_are_rows ? judgement->leverage.column_count[line] : judgement->leverage.row_count[line];
         marks = (is_one_sided ? JUDGED_ONE_SIDED : 0u) | (seen == 0 ? JUDGED_DARK : 0u);
     }
-    double v = variance_at(&judgement->variance, leverage_at(&judgement->leverage, row, column), distance, marks);
-    return judgement->quantile * sqrt(v) * judgement->scale[sensor];
+    double leverage = leverage_at(&judgement->leverage, row, column);
+    double v = variance_at(&judgement->variance, leverage, distance, marks);
+    return judgement->quantile * tilt_at(judgement, leverage) * sqrt(v) * judgement->scale[sensor];
 }

@@ -7,6 +7,7 @@
  *   judged       a list of cells with what their errors depend on
  *   folds        hiding, learning again, collecting errors
  *   variance     the squared error as a function of leverage and distance
+ *   tilt         scores whose shape changes with leverage
  *   announce     the error over the cells that are really missing, with its band
  *   judgement    all together, and the interval of a cell
  */
@@ -69,6 +70,12 @@ double variance_at(const struct variance *variance, double leverage, double dist
 /* The scale of each sensor's errors, shrunk towards 1. */
 fescue_status scales_fit(fescue_context *context, const struct judged *pool, const struct tracks *tracks,
                          struct judgement *judgement);
+
+/* How the quantile of the scores changes with 1 / (1 + leverage), and takes it out of the scores (tilt.c). */
+fescue_status tilt_fit(fescue_context *context, const struct judged *pool, double *scores, struct judgement *judgement);
+double tilt_at(const struct judgement *judgement, double leverage);
+/* The ceil((n+1) level)-th smallest of the scores; infinite when there are too few. */
+double score_quantile(const double *scores, uint64_t count, double level);
 
 fescue_status announce(fescue_context *context, const struct judged *pool, const struct judged *missing,
                        const struct judge_request *request, struct judgement *judgement);

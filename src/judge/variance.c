@@ -2,10 +2,12 @@
  *
  * The expected squared error of a cell as a sum of terms with weights that are not negative,
  *
- *     V = w_0 + w_1 lev + sum over q of w_q (1 - exp(-(d - 1)/q)) + w_5 [one-sided] + sum over q of w_q [dark] (...)
+ *     V = w_0 + w_1 lev + w_2 sqrt(lev) + sum over q of w_q (1 - exp(-(d - 1)/q)) + w_6 [one-sided]
+ *         + [dark] sum over q of w_q (1 - exp(-d/q))
  *
  *     symbol       what it is
- *     lev          leverage (leverage.c)
+ *     lev          leverage (leverage.c); its root stands in where the error grows more slowly than the leverage of a
+ *                  model that takes more components than the table has
  *     d            steps to the nearest seen cell of the same sensor; q = 3, 30, 300
  *     one-sided    the sensor was not seen before, or not after
  *     dark         nothing was seen at the cell's place; q = 3, 30
@@ -16,14 +18,15 @@
  * its V is cut to that, 7 standard deviations, so that a few wild cells do not bend the surface; what that takes away
  * comes back with the quantile of |error| / sqrt(V).
  *
- * Weights not below 0: coordinate descent on the normal equations (8 x 8), each step the exact minimum over one weight;
+ * Weights not below 0: coordinate descent on the normal equations (9 x 9), each step the exact minimum over one weight;
  * it converges for any such problem (Luo, Tseng 1992, "On the convergence of the coordinate descent method for convex
  * differentiable minimization").
  *
- * The scale of a sensor: with x = y / V (mean 1 over all), r_j its mean over the n_j cells of sensor j, k the kurtosis
- * within sensors, r_j has variance (k - 1)/n_j by chance alone. What the r_j spread beyond that is tau^2, by moments
- * (DerSimonian, Laird 1986, "Meta-analysis in clinical trials"), and r_j is shrunk towards 1 by
- * tau^2 / (tau^2 + (k-1)/n_j). Sensors that began late keep 1: what is missing of them is not like what was seen.
+ * The scale of a sensor: with x = y / V (mean 1 over all), r_j its mean over the n_j scattered cells of sensor j (those
+ * of a gap hang together, and few gaps differ by chance as much as if sensors did), k the kurtosis within sensors, r_j
+ * has variance (k - 1)/n_j by chance alone. What the r_j spread beyond that is tau^2, by moments (DerSimonian, Laird
+ * 1986, "Meta-analysis in clinical trials"), and r_j is shrunk towards 1 by tau^2 / (tau^2 + (k-1)/n_j). Sensors that
+ * began late keep 1: what is missing of them is not like what was seen.
  *
  * Sequential, O(cells) a round.
  */
@@ -42,12 +45,13 @@ static void terms_set(bool has_distance, double leverage, double distance, unsig
     double beyond = has_distance ? fmax(distance - 1, 0) : 0, dark = has_distance && (marks & JUDGED_DARK) ? 1 : 0;
     term[0] = 1;
     term[1] = leverage;
-    term[2] = 1 - exp(-beyond / 3);
-    term[3] = 1 - exp(-beyond / 30);
-    term[4] = 1 - exp(-beyond / 300);
-    term[5] = has_distance && (marks & JUDGED_ONE_SIDED) ? 1 : 0;
-    term[6] = dark * (1 - exp(-(beyond + 1) / 3));
-    term[7] = dark * (1 - exp(-(beyond + 1) / 30));
+    term[2] = sqrt(leverage);
+    term[3] = 1 - exp(-beyond / 3);
+    term[4] = 1 - exp(-beyond / 30);
+    term[5] = 1 - exp(-beyond / 300);
+    term[6] = has_distance && (marks & JUDGED_ONE_SIDED) ? 1 : 0;
+    term[7] = dark * (1 - exp(-(beyond + 1) / 3));
+    term[8] = dark * (1 - exp(-(beyond + 1) / 30));
 }
 
 double variance_at(const struct variance *variance, double leverage, double distance, unsigned marks)
@@ -110,6 +114,8 @@ static void spreads_fill(const struct judged *pool, const struct judgement *judg
 {
     static const double cut = 25; /* five standard deviations: one cell does not make a noisy sensor */
     for (uint64_t c = 0; c < pool->count; c++) {
+        if (pool->marks[c] & JUDGED_SHAPED)
+            continue;
         double v = variance_at(&judgement->variance, pool->leverage[c], pool->distance[c], pool->marks[c]);
         double x = fmin(pool->square[c] / v, cut);
         struct spread *of = &spread[judgement->sensors_are_rows ? pool->row[c] : pool->column[c]];
@@ -143,7 +149,7 @@ static double spread_between(const struct spread *spread, uint32_t sensors, doub
         squares += spread[s].count * spread[s].count;
         judged++;
     }
-    if (judged < 2 || q < judged + 2 * sqrt(2 * judged)) /* two standard errors of chi-square */
+    if (judged < 2 || q < judged + 3 * sqrt(2 * judged)) /* three standard errors of chi-square */
         return 0;
     return *noise * (q - (judged - 1)) / (count - squares / count);
 }

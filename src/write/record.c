@@ -255,8 +255,9 @@ static struct record choice_record(const struct run *run)
 
 static struct record variance_record(const struct run *run)
 {
-    static const char *const terms[VARIANCE_TERMS] = {"constant",     "leverage",  "distance_3", "distance_30",
-                                                      "distance_300", "one_sided", "dark_3",     "dark_30"};
+    static const char *const terms[VARIANCE_TERMS] = {"constant",   "leverage",    "leverage_root",
+                                                      "distance_3", "distance_30", "distance_300",
+                                                      "one_sided",  "dark_3",      "dark_30"};
     const struct variance *variance = &run->judgement->variance;
     struct record record = record_open(run->context);
     for (size_t k = 0; k < VARIANCE_TERMS; k++)
@@ -272,6 +273,8 @@ static struct record interval_record(const struct run *run)
     char level[32];
     real_set(&record, "level", judgement->level);
     real_set(&record, "quantile", judgement->is_judged ? judgement->quantile : NAN);
+    real_set(&record, "tilt", judgement->tilt);
+    real_set(&record, "tilt_centre", judgement->tilt_centre);
     for (size_t k = 0; k < JUDGE_LEVELS; k++) {
         real_to_text(judge_levels[k], FESCUE_DOUBLE, level);
         real_set(&quantiles, level, judgement->is_judged ? judgement->level_quantiles[k] : NAN);
