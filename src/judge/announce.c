@@ -11,9 +11,11 @@
  *
  * What is announced is the root of the mean of the last two where distances are known, else of the first and the last.
  *
- * The band: whole sensors are drawn with replacement, their hidden and their unseen cells with them, and everything is
- * computed again (Efron, Tibshirani 1993, "An Introduction to the Bootstrap", chapter 8, for data in clusters); the 5 %
- * and 95 % points of `DRAWS` draws. Sums are kept a sensor and stratum, so a draw costs no pass over cells.
+ * The band: whole sensors are drawn with replacement (Efron, Tibshirani 1993, "An Introduction to the Bootstrap",
+ * chapter 8, for data in clusters), and the unseen cells of every sensor are given the ratio e^2 / (V s^2) that the
+ * hidden ones of the drawn sensor have in their stratum; the 5 % and 95 % points of `DRAWS` draws. So the band holds
+ * both: which sensors happened to be hidden, and that the error over the unseen cells is itself that of the few sensors
+ * that miss many. Sums are kept a sensor and stratum, so a draw costs no pass over cells.
  */
 #include "judge/judgement.h"
 
@@ -141,30 +143,54 @@ static double draw_at(const void *draws, uint64_t k)
     return ((const double *)draws)[k];
 }
 
+/* The mean squared error over the unseen cells if those of every sensor had errors like the hidden ones of another,
+   drawn with them: of the same stratum where that one has any there, else of the drawn sensors together. */
+static double truth_draw(const struct announcing *announcing, const uint32_t *drawn,
+                         const struct sums total[JUDGE_BINS])
+{
+    double square = 0, missing = 0;
+    for (uint32_t s = 0; s < announcing->sensors; s++) {
+        const struct sums *own = &announcing->sums[(size_t)s * JUDGE_BINS];
+        const struct sums *other = &announcing->sums[(size_t)drawn[s] * JUDGE_BINS];
+        for (size_t b = 0; b < JUDGE_BINS; b++) {
+            if (own[b].missing == 0)
+                continue;
+            bool has_any = other[b].hidden >= STRATUM_LEAST;
+            missing += own[b].missing;
+            square += own[b].variance * (has_any ? other[b].square / other[b].expected : stratum_ratio(total, b));
+        }
+    }
+    return square / missing;
+}
+
 static fescue_status band_find(fescue_context *context, const struct announcing *announcing, uint64_t seed,
                                struct judgement *judgement)
 {
     fescue_status status;
-    uint32_t *drawn = NULL, sensors = announcing->sensors;
+    uint32_t *times = NULL, *drawn = NULL, sensors = announcing->sensors;
     double draws[DRAWS];
     uint64_t count = 0;
     struct sums total[JUDGE_BINS];
     struct random_stream random = random_open(seed, RANDOM_FOLD, 0x90000000u);
+    TRY(TAKE(context, sensors, &times));
     TRY(TAKE(context, sensors, &drawn));
     for (int d = 0; d < DRAWS; d++) {
-        memset(drawn, 0, sensors * sizeof *drawn);
-        for (uint32_t s = 0; s < sensors; s++)
-            drawn[random_below(&random, sensors)]++;
-        sums_add(announcing, drawn, total);
-        double all = estimate(announcing, total).all;
+        memset(times, 0, sensors * sizeof *times);
+        for (uint32_t s = 0; s < sensors; s++) {
+            drawn[s] = (uint32_t)random_below(&random, sensors);
+            times[drawn[s]]++;
+        }
+        sums_add(announcing, times, total);
+        double all = truth_draw(announcing, drawn, total);
         if (isfinite(all))
             draws[count++] = sqrt(all);
     }
     if (count >= DRAWS / 2 && sensors > 1) {
-        judgement->rmse_low = order_pick(draw_at, draws, count, count / 20);
-        judgement->rmse_high = order_pick(draw_at, draws, count, count - 1 - count / 20);
+        judgement->rmse_low = fmin(order_pick(draw_at, draws, count, count / 20), judgement->rmse);
+        judgement->rmse_high = fmax(order_pick(draw_at, draws, count, count - 1 - count / 20), judgement->rmse);
     }
 done:
+    GIVE(context, &times);
     GIVE(context, &drawn);
     return status;
 }

@@ -6,7 +6,7 @@
  *
  * Scattered folds come first, then folds in the shape of the holes. Left to the program, there are as many scattered
  * ones as bring `cells_wanted` errors together (the relative error of an RMSE over as many normal ones is one in a
- * hundred) and five shaped ones, since stretches of one sensor count for little more than one cell each. Both are cut
+ * hundred) and eight shaped ones, since stretches of one sensor count for little more than one cell each. Both are cut
  * where learning again takes long; where even a few are too many, the errors that choosing left have to do.
  *
  * The folds run one after another and their fits are parallel inside, so the bits do not depend on the number of
@@ -17,9 +17,9 @@
 #include <math.h>
 
 static const double cells_wanted = 5000;
-enum { FOLDS_MOST = 5, COLD_ROUNDS = 100, WARM_ROUNDS = 25, START_SIZE = 23 };
+enum { FOLDS_MOST = 5, SHAPED_MOST = 8, COLD_ROUNDS = 100, WARM_ROUNDS = 25, START_SIZE = 23 };
 /* Multiplications for all folds: some tens of seconds of one processor. */
-static const double work_most = 6e10, cold_most = 1e10;
+static const double work_most = 1e11, cold_most = 4e10;
 
 /* Multiplications of one fold. */
 static double fold_work(const struct judge_request *request, bool is_warm)
@@ -38,7 +38,7 @@ static void folds_plan(const struct judge_request *request, struct judgement *ju
     bool is_auto = options->folds == FESCUE_AUTO, is_shaped = request->shape->shape != FESCUE_HOLDOUT_CELLS;
     double hidden = fmax(1, options->holdout * (double)request->cells->count);
     double scattered = is_auto ? fmin(FOLDS_MOST, ceil(cells_wanted / hidden)) : (double)options->folds;
-    double shaped = !is_shaped ? 0 : is_auto ? FOLDS_MOST : (double)options->folds;
+    double shaped = !is_shaped ? 0 : is_auto ? SHAPED_MOST : (double)options->folds;
     judgement->is_warm = (scattered + shaped) * fold_work(request, false) > cold_most;
     double affordable = floor(work_most / fold_work(request, judgement->is_warm));
     if (is_auto && scattered + shaped > affordable) {
