@@ -30,6 +30,7 @@ FAULT_SOURCES = $(wildcard tests/fault/test_*.c)
 BENCH_SOURCES = $(wildcard tests/bench/bench_*.c)
 BENCH_PARTS = $(filter-out $(BENCH_SOURCES),$(wildcard tests/bench/*.c))
 MANUALS = $(wildcard src/man/*.1)
+FORMATS = $(wildcard src/man/*.5)
 
 object = $(patsubst %.c,$(BUILD)/%.o,$(1))
 LIBRARY = $(BUILD)/libfescue.a
@@ -94,12 +95,14 @@ format:
 	clang-format -i $(shell git ls-files --cached --others --exclude-standard '*.c' '*.h')
 
 install: all
-	install -d $(DESTDIR)$(PREFIX)/bin $(DESTDIR)$(PREFIX)/lib $(DESTDIR)$(PREFIX)/include $(DESTDIR)$(PREFIX)/share/man/man1
+	install -d $(DESTDIR)$(PREFIX)/bin $(DESTDIR)$(PREFIX)/lib $(DESTDIR)$(PREFIX)/include $(DESTDIR)$(PREFIX)/share/man/man1 \
+	        $(DESTDIR)$(PREFIX)/share/man/man5
 	install $(PROGRAM) $(DESTDIR)$(PREFIX)/bin
 	install -m 644 $(LIBRARY) $(DESTDIR)$(PREFIX)/lib
 	install -m 644 src/include/fescue.h src/include/fescue_options.def src/include/fescue_sow_options.def \
 	    src/include/fescue_night_options.def $(DESTDIR)$(PREFIX)/include
 	install -m 644 $(MANUALS) $(DESTDIR)$(PREFIX)/share/man/man1
+	install -m 644 $(FORMATS) $(DESTDIR)$(PREFIX)/share/man/man5
 
 clean:
 	rm -rf $(BUILD)

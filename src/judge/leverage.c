@@ -12,6 +12,7 @@
  * a reading (the delta method for a bilinear model; the two parts are independent to that order).
  *
  *     symbol   what it is
+ *     w        the cell's weight, where cells have one: every g g' and f f' counts w times
  *     U, V, S  the model's low-rank part, orthonormal U and V
  *     a, b     effects of rows and columns; without them their regressor is 0
  *     D, E     diagonal: a common ridge lambda on the components where one was chosen; where each component is shrunk
@@ -51,11 +52,11 @@ static void regressors_set(struct matrix factor, size_t line, size_t size, bool 
     regressor[size - 1] = has_effect ? 1 : 0;
 }
 
-static void system_add(const double *regressor, size_t size, double *system)
+static void system_add(const double *regressor, double weight, size_t size, double *system)
 {
     for (size_t k = 0; k < size; k++)
         for (size_t l = 0; l <= k; l++)
-            *system++ += regressor[k] * regressor[l];
+            *system++ += weight * regressor[k] * regressor[l];
 }
 
 static void line_invert(const struct levering *levering, uint32_t line, double *room)
@@ -67,7 +68,7 @@ static void line_invert(const struct levering *levering, uint32_t line, double *
         system[packed_size(k + 1) - 1] = levering->ridge[k];
     for (uint64_t c = levering->half->start[line]; c < levering->half->start[line + 1]; c++) {
         regressors_set(levering->other, levering->half->across[c], size, levering->has_effect, regressor);
-        system_add(regressor, size, system);
+        system_add(regressor, levering->half->weight != NULL ? (double)levering->half->weight[c] : 1, size, system);
     }
     packed_cholesky(system, size);
     packed_inverse(system, size, levering->inverse + line * packed);

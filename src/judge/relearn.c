@@ -48,6 +48,7 @@ static void column_solve(const struct leverage *leverage, const struct cells *ce
     for (uint64_t k = half->start[j]; k < half->start[j + 1]; k++) {
         uint32_t i = half->across[k];
         double rest = cells_value(cells, half, k) - start->offsets.mean - start->offsets.row[i];
+        rest *= half->weight != NULL ? (double)half->weight[k] : 1;
         for (size_t l = 0; l < rank; l++)
             room[l] += rest * MATRIX_AT(point->left, i, l);
         room[rank] += leverage->has_columns ? rest : 0;

@@ -5,9 +5,9 @@
 # names and letters, every word an option takes, and its standard value.
 . "$(dirname "$0")/library"
 
-for page in "$root"/src/man/*.1; do
-    name=$(basename "$page" .1)
-    (cd "$root/src/man" && mandoc -Tlint "$name.1") >lint 2>&1 # there it finds the pages that are referred to
+for page in "$root"/src/man/*.[15]; do
+    name=$(basename "$page")
+    (cd "$root/src/man" && mandoc -Tlint "$name") >lint 2>&1 # there it finds the pages that are referred to
     check "$name: mandoc finds no fault" is_empty lint
     check "$name: and renders it" test "$(mandoc -Tutf8 "$page" | wc -l)" -gt 20
 done

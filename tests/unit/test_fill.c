@@ -581,7 +581,7 @@ static void a_job_may_be_stopped_anywhere(void **state)
     uint64_t stopped = 0, cut = 0, unwritten = 0, whole = 0;
     path_in(bench_of(state)->folder, "out", directory);
     assert_int_equal(fescue_context_create(&hooks, &context), FESCUE_OK);
-    struct fescue_options options = OPTIONS(context, "rank", "2", "ridge", "0.01", "offsets", "none");
+    struct fescue_options options = OPTIONS(context, "rank", "2", "ridge", "0.01", "offsets", "none", "folds", "1");
     fescue_table *table = table_sown(context, &noisy);
     for (; whole == 0; patience.most++) {
         fescue_fill *fill = NULL;
