@@ -122,7 +122,8 @@ static fescue_status positional_take(struct request *request, const char *text)
 static fescue_status option_set(struct request *request, const struct fescue_option *option, const char *text)
 {
     if (strcmp(option->name, "output") == 0 && text[0] == '\0')
-        return say_usage("--output: found \"\", expected the name of a directory");
+        return say_usage("--output: found \"\", expected the name of a %s",
+                         request->command->output != NULL ? "file" : "directory");
     if (request->command->flag == FESCUE_FOR_NIGHT)
         return fescue_night_options_set(request->context, &request->night_options, option->name, text);
     return request->command->flag == FESCUE_FOR_SOW

@@ -8,7 +8,7 @@
  *   say         sentences for people, on standard error
  *   progress    the moving line on a terminal
  *   place       where the files of a run go
- *   fill, survey, rank, sow, night   the commands
+ *   fill, survey, rank, sow, night, pack   the commands
  *
  * Data go to files or standard output, everything else to standard error. A failure is one line "fescue: sentence", and
  * the exit status is that of fescue.h's status list.
@@ -38,6 +38,8 @@ struct command {
     const char *summary;    /* one line */
     const char *description;
     unsigned flag; /* FESCUE_FOR_... */
+    const char *const
+        *output; /* what --output takes, and its help, where the table of options does not say it; or NULL */
     fescue_status (*run)(struct request *request);
 };
 extern const struct command commands[];
@@ -48,6 +50,7 @@ fescue_status command_survey(struct request *request);
 fescue_status command_rank(struct request *request);
 fescue_status command_sow(struct request *request);
 fescue_status command_night(struct request *request);
+fescue_status command_pack(struct request *request);
 
 /* The options that are the program's own, not the library's. */
 struct own_option {
@@ -84,6 +87,8 @@ struct progress {
     bool draws, tells; /* a moving line; sentences of the log */
     bool visible;
     double started, drawn;
+    char stage[48]; /* what is being done, and since when */
+    double stage_started;
 };
 bool progress_draw(void *data, const char *stage, double share);
 void progress_log(void *data, const char *sentence);
@@ -97,5 +102,7 @@ fescue_status place_choose(const char *table, char place[PLACE_SIZE]);
 /* Whether `directory` can be made and written, as far as can be told without touching it, and whether its results
    would replace `table` itself (NULL: there is none): better said before the work than after. */
 fescue_status place_check(const char *directory, const char *table);
+/* The same for one file. */
+fescue_status place_check_file(const char *file, const char *table);
 
 #endif

@@ -72,9 +72,15 @@ static void option_print(FILE *file, char letter, const char *name, const char *
     text_wrap(file, text, TEXT_COLUMN, TEXT_COLUMN);
 }
 
-static void library_option_print(FILE *file, const struct fescue_option *option)
+static void library_option_print(FILE *file, const struct command *command, const struct fescue_option *given)
 {
     char value[512], text[512];
+    struct fescue_option own = *given;
+    const struct fescue_option *option = &own;
+    if (strcmp(own.name, "output") == 0 && command->output != NULL) {
+        own.words = command->output[0];
+        own.help = command->output[1];
+    }
     value_text(option, value, sizeof value);
     bool has_standard = option->standard != NULL && option->kind != FESCUE_KIND_FLAG;
     snprintf(text, sizeof text, "%s%s%s%s", option->help, has_standard ? " [" : "",
@@ -92,7 +98,7 @@ void help_command(FILE *file, const struct command *command)
     fputs("\noptions, with their standard values in brackets:\n", file);
     for (size_t k = 0; k < count; k++)
         if ((options[k].commands & command->flag) != 0)
-            library_option_print(file, &options[k]);
+            library_option_print(file, command, &options[k]);
     for (size_t k = 0; k < own_option_count; k++)
         option_print(file, own_options[k].letter, own_options[k].name, "", own_options[k].help);
 }

@@ -13,26 +13,32 @@
 #include <string.h>
 #include <unistd.h>
 
+static const char *const pack_output[] = {"FILE", "the file to write"};
+
 const struct command commands[] = {
     {"fill", "TABLE", "fill the holes of a table and measure the error",
      "Fills the holes of TABLE, a file or \"-\" for standard input, and writes the full table, every filled cell with "
      "its interval, the factors and a record of the run into a directory. The summary goes to standard error.",
-     FESCUE_FOR_FILL, command_fill},
+     FESCUE_FOR_FILL, NULL, command_fill},
     {"survey", "TABLE", "say what a table is like, before any fit",
      "Prints shape, density, thin and empty rows and columns, and what the pattern of holes can determine, to standard "
      "output.",
-     FESCUE_FOR_SURVEY, command_survey},
+     FESCUE_FOR_SURVEY, NULL, command_survey},
     {"rank", "TABLE", "find rank and ridge by cross-validation",
      "Hides the cells of TABLE in folds and prints to standard output how well each rank foretells them, as a small "
      "chart, and which rank, ridge and offsets follow from it. With -o the curve is also written as rank.csv.",
-     FESCUE_FOR_RANK, command_rank},
+     FESCUE_FOR_RANK, NULL, command_rank},
     {"sow", NULL, "make a synthetic table with known truth",
-     "Writes a synthetic table and the truth it was made from into a directory.", FESCUE_FOR_SOW, command_sow},
+     "Writes a synthetic table and the truth it was made from into a directory.", FESCUE_FOR_SOW, NULL, command_sow},
     {"night", "PLAN", "fill many tables unattended, with a ledger and a summary",
      "Runs the jobs of PLAN, an INI file: each in a process of its own, within limits of time and memory, with "
      "checkpoints. Run again, it goes on; what is done and unchanged is not done again. The summary goes to standard "
      "error, and with the ledger of all nights beside the plan.",
-     FESCUE_FOR_NIGHT, command_night},
+     FESCUE_FOR_NIGHT, NULL, command_night},
+    {"pack", "TABLE", "write a table as a file that is mapped, not parsed",
+     "Writes TABLE, a file or \"-\" for standard input, as one checked binary file, which every command takes wherever "
+     "it takes a table: it is there at once, whatever the size of the table.",
+     FESCUE_FOR_PACK, pack_output, command_pack},
 };
 const size_t command_count = sizeof commands / sizeof commands[0];
 

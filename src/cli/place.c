@@ -28,7 +28,7 @@ static bool suffix_cut(char *text, const char *suffix)
 fescue_status place_choose(const char *table, char place[PLACE_SIZE])
 {
     static const char ending[] = "-filled";
-    static const char *const formats[] = {".csv", ".tsv", ".txt", ".mtx", ".mm"};
+    static const char *const formats[] = {".csv", ".tsv", ".txt", ".mtx", ".mm", ".pack"};
     if (strcmp(table, "-") == 0)
         return say_usage(
             "a table from standard input has no name to derive one from; say where results go with -o DIR");
@@ -102,4 +102,27 @@ fescue_status place_check(const char *directory, const char *table)
     if (!S_ISDIR(found.st_mode))
         return complain(directory, ENOTDIR);
     return access(path, W_OK | X_OK) == 0 ? FESCUE_OK : complain(directory, errno);
+}
+
+/* Whether two paths lead to one file. */
+static bool is_same(const char *path, const char *table)
+{
+    struct stat here, there;
+    return stat(path, &here) == 0 && stat(table, &there) == 0 && here.st_dev == there.st_dev &&
+           here.st_ino == there.st_ino;
+}
+
+fescue_status place_check_file(const char *file, const char *table)
+{
+    char parent[PLACE_SIZE];
+    struct stat found;
+    if (strlen(file) >= sizeof parent)
+        return complain(file, ENAMETOOLONG);
+    if (is_same(file, table))
+        return say_usage("%s: the pack would replace the table itself; give another name with -o", file);
+    if (file[0] == '\0' || file[strlen(file) - 1] == '/' || (stat(file, &found) == 0 && S_ISDIR(found.st_mode)))
+        return complain(file, EISDIR);
+    strcpy(parent, file);
+    path_to_parent(parent);
+    return place_check(parent, NULL);
 }

@@ -142,7 +142,8 @@ enum {
     FESCUE_FOR_SOW = 4,
     FESCUE_FOR_NIGHT = 8,
     FESCUE_FOR_PLAN = 16,
-    FESCUE_FOR_RANK = 32
+    FESCUE_FOR_RANK = 32,
+    FESCUE_FOR_PACK = 64
 };
 
 struct fescue_option {
@@ -211,6 +212,11 @@ fescue_status fescue_table_from_cells(fescue_context *context, uint32_t rows, ui
                                       const uint32_t *row, const uint32_t *column, const double *value,
                                       const struct fescue_options *options, fescue_table **out);
 void fescue_table_destroy(fescue_table **table);
+/* Writes the table as a packed file, which fescue_table_read takes like any other and maps instead of reading it; a
+   table filled from it gives the same results as one filled from its source. The file appears whole or not at all. It
+   must not be changed in place while a table that was read from it lives. *text (owned by the caller, free with
+   fescue_text_free) is the summary. */
+fescue_status fescue_table_pack(const fescue_table *table, const char *path, char **text);
 
 /* ---- survey
  * ------------------------------------------------------------------------------------------------------------ */

@@ -5,6 +5,7 @@
 #include "job/job_internal.h"
 
 #include <assert.h>
+#include <inttypes.h>
 
 fescue_status job_prepare(fescue_context *context, const struct fescue_options *options)
 {
@@ -47,6 +48,20 @@ fescue_status fescue_table_from_cells(fescue_context *context, uint32_t rows, ui
 done:
     if (status != FESCUE_OK)
         table_destroy(out);
+    return status;
+}
+
+fescue_status fescue_table_pack(const fescue_table *table, const char *path, char **text)
+{
+    fescue_status status;
+    const struct cells *cells = &table->cells;
+    struct text summary = {.context = table->context};
+    *text = NULL;
+    TRY(table_pack(table, path));
+    text_add(&summary, "packed     %" PRIu32 " rows x %" PRIu32 " columns, %" PRIu64 " cells seen%s\n", cells->rows,
+             cells->columns, cells->count, table->texts != NULL ? ", to the last digit" : "");
+    TRY(text_finish(&summary, text));
+done:
     return status;
 }
 

@@ -232,7 +232,7 @@ fescue_status delimited_kind_find(struct stream *stream, enum fescue_format form
     fescue_status status;
     size_t length;
     struct sample sample = {0};
-    TRY(stream_peek(stream, SAMPLE_SIZE, &sample.at, &length));
+    stream_peek(stream, SAMPLE_SIZE, &sample.at, &length);
     sample.end = sample.at + length;
     sample.is_whole = length < SAMPLE_SIZE;
     TRY(separator_find(stream, sample, &kind->separator));

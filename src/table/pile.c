@@ -65,18 +65,11 @@ static fescue_status text_keep(const struct pile *pile, struct pile_block *block
 fescue_status pile_block_add(const struct pile *pile, struct pile_block *block, const struct pile_entry *entry)
 {
     fescue_status status = FESCUE_OK;
-    uint32_t k = block->count;
-    assert(k < block->capacity);
-    block->row[k] = entry->row;
-    block->column[k] = entry->column;
-    if (pile->precision == FESCUE_SINGLE)
-        ((float *)block->value)[k] = (float)entry->value;
-    else
-        ((double *)block->value)[k] = entry->value;
+    assert(block->count < block->capacity);
     if (pile->keeps_texts)
         TRY(text_keep(pile, block, entry,
                       pile->precision == FESCUE_SINGLE ? (double)(float)entry->value : entry->value));
-    block->count++;
+    pile_block_put(pile, block, entry);
 done:
     return status;
 }

@@ -25,10 +25,7 @@
 #include <pthread.h>
 #include <string.h>
 
-enum {
-    CHUNK_SIZE = 1 << 18, /* stays in the second cache with what is parsed from it; a turn of the lock costs nothing */
-    SPARE_CHUNKS = 2      /* beyond one a worker: filled while all are busy */
-};
+enum { SPARE_CHUNKS = 2 }; /* beyond one a worker: filled while all are busy */
 
 struct stream {
     fescue_context *context;
@@ -93,7 +90,7 @@ static fescue_status chunk_grow(struct stream *stream, struct chunk *chunk, size
                         stream->source.name);
     if (size == chunk->size)
         return FESCUE_OK;
-    fescue_status status = RESIZE(stream->context, size, &chunk->text);
+    fescue_status status = RESIZE(stream->context, size + CHUNK_SLACK, &chunk->text);
     if (status == FESCUE_OK)
         chunk->size = size;
     return status;
@@ -279,13 +276,12 @@ done:
     return status;
 }
 
-fescue_status stream_peek(struct stream *stream, size_t most, const char **text, size_t *length)
+void stream_peek(const struct stream *stream, size_t most, const char **text, size_t *length)
 {
-    assert(stream->line == 0 && most <= CHUNK_SIZE / 2);
     const struct chunk *chunk = stream->current;
+    assert(stream->line == 0);
     *text = chunk->text + chunk->at;
     *length = chunk->got - chunk->at < most ? chunk->got - chunk->at : most;
-    return FESCUE_OK;
 }
 
 /* ---- reading by lines ------------------------------------------------------------------------------------------- */

@@ -27,7 +27,9 @@ void table_destroy(fescue_table **out)
     if (table == NULL)
         return;
     fescue_context *context = table->context;
+    pack_release(table);
     GIVE(context, &table->path);
+    GIVE(context, &table->packed_from);
     GIVE(context, &table->look.corner);
     GIVE(context, &table->look.row_title);
     GIVE(context, &table->look.column_title);

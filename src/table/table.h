@@ -9,6 +9,7 @@
  *   labels          names of rows and columns
  *   cells           the two-way compressed store of observed cells
  *   texts           what a value looked like in the input, so that it can be given back byte for byte
+ *   pack            all of it as a file that is mapped, not read
  *   time_axis       when the lines of one side were: from labels that are times, or evenly spaced
  */
 #ifndef FESCUE_TABLE_H
@@ -109,8 +110,10 @@ struct fescue_table {
     struct table_weights weights;
     struct texts *texts;  /* NULL when not kept (a table too large to be written out dense) */
     uint64_t duplicates;  /* cells that came more than once and were merged */
-    uint32_t input_crc32; /* of the bytes as they lie on disk, for the run record */
+    uint32_t input_crc32; /* of the bytes as they lie on disk, for the run record; of a pack, those of its source */
     uint64_t input_bytes;
+    struct pack *pack; /* in which cells, labels and texts lie; NULL when they are the table's own */
+    char *packed_from; /* the path of the pack's source; NULL when there is no pack */
 };
 
 /* The text of observed cell k (row order) as the input had it; *length bytes, not terminated; buffer may be used. */
@@ -136,6 +139,10 @@ fescue_status table_from_triplets(fescue_context *context, uint32_t rows, uint32
                                   const uint32_t *row, const uint32_t *column, const double *value,
                                   enum fescue_precision precision, fescue_table **out);
 void table_destroy(fescue_table **table); /* NULL-safe; nulls the pointer */
+
+/* Writes the table as a packed file, which table_read takes like any other and maps. The file appears whole or not at
+   all. FESCUE_CANNOT_CREATE, FESCUE_CANNOT_WRITE. */
+fescue_status table_pack(const fescue_table *table, const char *path);
 
 /* When the rows or the columns were. Equal times are allowed; nothing says that lines come in the order of time. */
 enum time_along { TIME_NONE, TIME_ROWS, TIME_COLUMNS };

@@ -147,8 +147,13 @@ struct line {
     size_t terminator;      /* bytes of it, which lie at `end`: 0 at the end of the file, 1 or 2 (CR LF) */
 };
 fescue_status stream_open(fescue_context *context, const char *path, struct stream **out); /* as source_open */
-/* The first bytes, as many as there are up to `most`, without taking them. Only before the first line. */
-fescue_status stream_peek(struct stream *stream, size_t most, const char **text, size_t *length);
+/* The first bytes, without taking them: all that are read, up to `most`; so at least CHUNK_SIZE, or all there are. Only
+   before the first line. */
+enum {
+    CHUNK_SIZE = 1 << 18, /* stays in the second cache with what is parsed from it; a lock costs nothing beside */
+    CHUNK_SLACK = 8       /* bytes behind `got` that may be read, whatever they are */
+};
+void stream_peek(const struct stream *stream, size_t most, const char **text, size_t *length);
 /* The next line; good until the next call. */
 fescue_status stream_line(struct stream *stream, struct line *line);
 /* The next line of the chunk, whose turn it is (see stream_parse); text is NULL at its end. */
@@ -192,6 +197,9 @@ const char *number_read(const char *text, const char *end, double *value);
 
 /* A value to be stored in `precision`. NULL, or what is wrong with the text: "is not a number" and the like. */
 const char *value_parse(const char *text, const char *end, enum fescue_precision precision, double *value);
+
+/* The first byte that is not UTF-8 (RFC 3629); NULL when there is none. */
+const char *utf8_fault(const char *text, const char *end);
 
 bool is_nan_text(const char *text, const char *end); /* in any case, with or without a sign */
 
@@ -263,7 +271,18 @@ void pile_told_size(struct pile *pile, uint64_t rows, uint64_t columns);
 fescue_status pile_add(struct pile *pile, const struct pile_entry *entry);
 /* An empty block as the pile would have it, with room for `capacity` entries. Safe from any worker. */
 fescue_status pile_block_create(const struct pile *pile, uint32_t capacity, struct pile_block **out);
-/* One more entry, for which there is room. Safe from any worker. */
+/* One more entry, for which there is room, where no texts are kept. Safe from any worker, as all three. */
+static inline void pile_block_put(const struct pile *pile, struct pile_block *block, const struct pile_entry *entry)
+{
+    uint32_t k = block->count++;
+    block->row[k] = entry->row;
+    block->column[k] = entry->column;
+    if (pile->precision == FESCUE_SINGLE)
+        ((float *)block->value)[k] = (float)entry->value;
+    else
+        ((double *)block->value)[k] = entry->value;
+}
+/* The same with its text, where texts are kept. */
 fescue_status pile_block_add(const struct pile *pile, struct pile_block *block, const struct pile_entry *entry);
 void pile_block_free(fescue_context *context, struct pile_block **block); /* NULL-safe */
 /* Takes a block whose entries lie on lines from `line` on, one a line. */
@@ -278,6 +297,21 @@ void pile_free(struct pile *pile);
 fescue_status texts_create(struct pile *pile, const struct cells *cells, enum fescue_duplicates duplicates,
                            struct texts **out);
 void texts_free(fescue_context *context, struct texts **texts);
+
+/* What texts are made of: a code for each cell, and the odd texts in the order of the cells. */
+struct texts_parts {
+    uint8_t *code;
+    char **odd;
+    uint64_t odd_count;
+    char decimal;
+};
+void texts_take_apart(const struct texts *texts, struct texts_parts *parts); /* all of it still belongs to texts */
+/* Whether there are such codes, and every odd text reads as its value. */
+bool texts_are_sound(const struct texts_parts *parts, const struct cells *cells);
+/* New texts that borrow codes and odd texts (not the array `odd`); texts_forget_codes before texts_free. */
+fescue_status texts_assemble(fescue_context *context, const struct texts_parts *parts, uint64_t cells,
+                             struct texts **out);
+void texts_forget_codes(struct texts *texts); /* NULL-safe */
 
 fescue_status table_create(fescue_context *context, const char *path, fescue_table **out);
 
@@ -297,6 +331,9 @@ struct market_form {
 fescue_status market_parse(const struct market_form *form, const struct chunk *chunk, struct pile_block **block);
 fescue_status matrix_market_read(struct stream *stream, const struct table_reading *reading, fescue_table *table);
 fescue_status delimited_read(struct stream *stream, const struct table_reading *reading, fescue_table *table);
+bool is_pack(const char *text, size_t length);
+fescue_status pack_read(struct stream *stream, const struct table_reading *reading, fescue_table *table);
+void pack_release(fescue_table *table); /* before the table's parts are given back: those in a pack are not */
 
 /* ---- delimited text ------------------------------------------------------------------------------------------------
  */

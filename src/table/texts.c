@@ -23,6 +23,7 @@ struct texts {
     uint8_t *code;    /* of each cell */
     uint64_t *before; /* odd texts before cell RANK_STEP * i */
     char **odd;       /* in the order of the cells */
+    uint64_t odd_count;
     struct text_store *store;
 };
 
@@ -225,9 +226,9 @@ fescue_status texts_create(struct pile *pile, const struct cells *cells, enum fe
     TRY(TAKE(context, cells->count / RANK_STEP + 1, &texts->before));
     memset(texts->code, TEXT_UNKNOWN, cells->count);
     codes_collect(pile, &cells->by_row, duplicates, texts->code);
-    uint64_t odd = odd_count(texts, cells->count);
-    TRY(TAKE(context, odd, &texts->odd));
-    if (odd > 0)
+    texts->odd_count = odd_count(texts, cells->count);
+    TRY(TAKE(context, texts->odd_count, &texts->odd));
+    if (texts->odd_count > 0)
         odd_collect(pile, &cells->by_row, duplicates, texts);
     for (struct pile_block *block = pile->first; block != NULL; block = block->next)
         text_store_join(&texts->store, &block->odd.store);
@@ -237,6 +238,79 @@ done:
     texts_free(context, &texts);
     return status;
 }
+
+/* ---- taken apart, for the packed file --------------------------------------------------------------------------- */
+
+void texts_take_apart(const struct texts *texts, struct texts_parts *parts)
+{
+    *parts = (struct texts_parts){
+        .code = texts->code, .odd = texts->odd, .odd_count = texts->odd_count, .decimal = texts->decimal};
+}
+
+/* A text of a number: blanks around it and a decimal comma are what value_parse would not take. */
+static bool odd_text_is(const char *text, double value, enum fescue_precision precision, char decimal)
+{
+    enum { MOST = 400 }; /* longer ones are not written by anybody, and not looked at */
+    char copy[MOST];
+    size_t length = strlen(text);
+    double read;
+    while (length > 0 && (text[length - 1] == ' ' || text[length - 1] == '\t'))
+        length--;
+    for (; length > 0 && (*text == ' ' || *text == '\t'); text++)
+        length--;
+    if (length > MOST)
+        return strspn(text, "+-.,0123456789eE") == length;
+    memcpy(copy, text, length);
+    char *comma = decimal == ',' ? memchr(copy, ',', length) : NULL;
+    if (comma != NULL)
+        *comma = '.';
+    if (value_parse(copy, copy + length, precision, &read) != NULL)
+        return false;
+    return precision == FESCUE_SINGLE ? (float)read == (float)value : read == value;
+}
+
+bool texts_are_sound(const struct texts_parts *parts, const struct cells *cells)
+{
+    uint64_t next = 0;
+    for (uint64_t k = 0; k < cells->count; k++) {
+        uint8_t code = parts->code[k];
+        if (code == TEXT_ODD &&
+            !odd_text_is(parts->odd[next++], cells_value(cells, &cells->by_row, k), cells->precision, parts->decimal))
+            return false;
+        if (code != TEXT_ODD && code > TEXT_DECIMALS + TEXT_MOST_DECIMALS)
+            return false;
+    }
+    return true;
+}
+
+fescue_status texts_assemble(fescue_context *context, const struct texts_parts *parts, uint64_t cells,
+                             struct texts **out)
+{
+    fescue_status status;
+    struct texts *texts = NULL;
+    TRY(TAKE(context, 1, &texts));
+    texts->decimal = parts->decimal;
+    texts->code = parts->code;
+    TRY(TAKE(context, cells / RANK_STEP + 1, &texts->before));
+    texts->odd_count = odd_count(texts, cells);
+    TRY(TAKE(context, texts->odd_count, &texts->odd));
+    if (texts->odd_count > 0)
+        memcpy(texts->odd, parts->odd, texts->odd_count * sizeof *texts->odd);
+    *out = texts;
+    texts = NULL;
+done:
+    texts_forget_codes(texts);
+    texts_free(context, &texts);
+    return status;
+}
+
+void texts_forget_codes(struct texts *texts)
+{
+    if (texts != NULL)
+        texts->code = NULL;
+}
+
+/* ---- asked for -------------------------------------------------------------------------------------------------- */
 
 const char *texts_of(const struct texts *texts, const struct cells *cells, uint64_t k, char buffer[32], size_t *length)
 {

@@ -150,7 +150,7 @@ static fescue_status lines_read(fescue_table *table, const char *path, bool is_r
     TRY(TAKE(table->context, reading.labels->count, weight));
     reading.weight = *weight;
     TRY(stream_open(table->context, path, &reading.stream));
-    TRY(stream_peek(reading.stream, 32, &text, &length));
+    stream_peek(reading.stream, 32, &text, &length);
     TRY(is_matrix_market(text, length) ? array_read(&reading) : text_read(&reading));
     TRY(all_given_check(&reading));
 done:

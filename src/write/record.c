@@ -4,7 +4,8 @@
  * complete.
  *
  *   program, version, caution
- *   input     path, crc32 and bytes (as on disk), shape, rows, columns, observed, duplicates, checksums of the labels
+ *   input     path, packed_from (of a pack: its source), crc32 and bytes (as on disk; of a pack: of its source), shape,
+ *             rows, columns, observed, duplicates, checksums of the labels
  *   time      which side is in time, its step, gaps, equal times; or along none
  *   weights   whether cells, rows, columns brought their own, and the range of the cells' (mean one)
  *   options   every option that bears on results, as the text that sets it
@@ -130,6 +131,8 @@ static struct record input_record(const struct run *run)
     char crc[16];
     snprintf(crc, sizeof crc, "%08" PRIx32, table->input_crc32);
     text_set(&input, "path", table->path == NULL ? "" : table->path);
+    if (table->packed_from != NULL)
+        text_set(&input, "packed_from", table->packed_from);
     text_set(&input, "crc32", crc);
     count_set(&input, "bytes", table->input_bytes);
     text_set(&input, "shape", shapes[table->look.shape]);

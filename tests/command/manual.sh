@@ -25,7 +25,7 @@ item() { # PAGE NAME
         inside && wanted' "$1" | sed 's/[.,;:]$//; s/ [.,;:]//g'
 }
 
-for command in fill rank survey sow night; do
+for command in fill rank survey sow night pack; do
     page=$root/src/man/fescue-$command.1
     "$FESCUE" $command --help >help
     sed -n 's/^  \(.\)\(.\)[ ,]*\(--[a-z-]*\).*/\2 \3/p' help | sed 's/^  *--/- /; s/ --/ /' | sort >wanted
@@ -43,6 +43,7 @@ for command in fill rank survey sow night; do
         name=$(field 3)
         standard=$(field 6)
         words=$(field 9)
+        [ "$command $name" != "pack output" ] || words=FILE # which is a file here, a directory elsewhere
         item "$page" "$name" >item
         [ "$(field 2)" = flag ] || case $standard in
         NULL) ;;

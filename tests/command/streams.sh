@@ -84,5 +84,36 @@ try 0 fill $table -o said --quiet
 check "--quiet says nothing" is_empty err
 try 66 fill missing --quiet -o said-not
 check "but errors" test -s err
+# A terminal is told what is being done, at which rate, how far it is and what is left, from one second on: the
+# first that comes of it, then the program is stopped.
+on_terminal() { # PATTERN COMMAND...: whether the pattern comes on a terminal within a minute
+    "$PYTHON" - "$@" <<'PYTHON'
+import os, pty, re, select, signal, subprocess, sys, time
+ours, theirs = pty.openpty()
+given = subprocess.Popen([sys.executable, "-c", """
+import sys, time
+sys.stdout.write("row,column,value\\n")
+for k in range(1200):
+    sys.stdout.write("".join("r%d,c%d,1.5\\n" % (k, j) for j in range(400)))
+    sys.stdout.flush()
+    time.sleep(0.005)
+"""], stdout=subprocess.PIPE, stderr=subprocess.DEVNULL)
+child = subprocess.Popen(sys.argv[2:], stdin=given.stdout, stdout=subprocess.DEVNULL, stderr=theirs)
+begin, seen = time.monotonic(), b""
+while time.monotonic() < begin + 60 and child.poll() is None and not re.search(sys.argv[1].encode(), seen):
+    if select.select([ours], [], [], 0.1)[0]:
+        if not seen:
+            first = time.monotonic() - begin
+        seen += os.read(ours, 4096)
+for process in child, given:
+    process.send_signal(signal.SIGTERM)
+    process.wait()
+print(seen)
+sys.exit(not re.search(sys.argv[1].encode(), seen) or first < 1)
+PYTHON
+}
+check "the rate is told where the size is not known" on_terminal 'reading, [0-9]+ MB/s' "$FESCUE" survey -
+check "and what is left where it is" on_terminal 'writing the table  [0-9]+ %, [0-9]+ (s|min) left' \
+    "$FESCUE" sow --rows 100000 --columns 5000 --rank 2 --seen 0.1 --truth factors -o endless
 denied "no progress where there is no terminal" grep -q "$(printf '\r')" err
 finish

@@ -24,6 +24,10 @@ misuse 'sow takes no argument, found "table"' sow table
 misuse 'sow needs to be told where the table and its truth go: -o DIR' sow
 misuse 'night needs a PLAN' night
 misuse '--threads: found "none", expected a whole number from 1 to 1024, or auto' night --threads none plan.ini
+misuse 'pack needs a TABLE; "-" is standard input' pack -o file
+misuse 'pack needs to be told where the packed table goes: -o FILE' pack table
+misuse '--output: found "", expected the name of a file' pack --output= table
+misuse 'pack takes no option --rank; "fescue pack --help" lists them' pack --rank 3 table -o file
 misuse 'fill takes no option --rnk; is --rank meant?' fill --rnk 3 table
 misuse 'fill takes no option --hold; is --holdout meant?' fill --hold=0.2 table
 misuse 'fill takes no option --scenery; "fescue fill --help" lists them' fill --scenery table
@@ -47,7 +51,7 @@ try 0 --version
 check "the version is that of the header" grep -qx "fescue $(sed -n 's/^#define FESCUE_VERSION "\(.*\)"/\1/p' \
     "$root/src/include/fescue.h")" out
 check "and nothing else" is_empty err
-for arguments in --help 'fill --help' 'survey -h' 'rank --help' 'sow --help' 'night -h' 'fill --rank 3 --help'; do
+for arguments in --help 'fill --help' 'survey -h' 'rank --help' 'sow --help' 'night -h' 'pack --help' 'fill --rank 3 --help'; do
     try 0 $arguments
     check "on standard output" grep -q '^usage: fescue' out
     check "nothing on standard error" is_empty err
@@ -56,7 +60,7 @@ done
 
 # Every option of the lists is in the help of the commands that it belongs to, and only there.
 for command in fill:FESCUE_FOR_FILL:options rank:FESCUE_FOR_RANK:options survey:FESCUE_FOR_SURVEY:options sow:FESCUE_FOR_SOW:sow_options \
-    night:FESCUE_FOR_NIGHT:night_options; do
+    night:FESCUE_FOR_NIGHT:night_options pack:FESCUE_FOR_PACK:options; do
     name=${command%%:*}
     flag=${command#*:}
     flag=${flag%:*}

@@ -4,6 +4,7 @@
  */
 #include "support_reader.h"
 
+#include <math.h>
 #include <stdio.h>
 #include <stdlib.h>
 #include <string.h>
@@ -85,6 +86,52 @@ void tables_equal(const fescue_table *a, const fescue_table *b)
     assert_int_equal(a->cells.precision, b->cells.precision);
     halves_equal(&a->cells, &a->cells.by_row, &b->cells, &b->cells.by_row);
     halves_equal(&a->cells, &a->cells.by_column, &b->cells, &b->cells.by_column);
+}
+
+/* ---- what must hold -------------------------------------------------------------------------------------------- */
+
+static bool half_is_sound(const struct cells *cells, const struct half *half)
+{
+    bool sound = half->start[0] == 0 && half->start[half->lines] == cells->count;
+    for (uint32_t i = 0; i < half->lines; i++)
+        for (uint64_t k = half->start[i]; k < half->start[i + 1]; k++)
+            sound = sound && half->across[k] < half->length && isfinite(cells_value(cells, half, k)) &&
+                    (k == half->start[i] || half->across[k - 1] < half->across[k]);
+    return sound;
+}
+
+static bool labels_are_sound(const struct labels *labels)
+{
+    size_t length = 0;
+    for (uint32_t i = 0; labels->text != NULL && i < labels->count; i++)
+        length += strlen(labels->text[i]);
+    return labels->text == NULL || length > 0;
+}
+
+/* A text that is kept reads as the value (with a decimal comma made a point). */
+static bool texts_are_sound(const fescue_table *table)
+{
+    bool sound = true;
+    for (uint64_t k = 0; table->texts != NULL && k < table->cells.count; k++) {
+        char buffer[32];
+        size_t length;
+        const char *text = texts_of(table->texts, &table->cells, k, buffer, &length);
+        char *copy = strndup(text, length);
+        if (table->look.decimal == ',' && strchr(copy, ',') != NULL)
+            *strchr(copy, ',') = '.';
+        double value = strtod(copy, NULL), kept = cells_value(&table->cells, &table->cells.by_row, k);
+        free(copy);
+        sound = sound && (table->cells.precision == FESCUE_SINGLE ? (float)value == (float)kept : value == kept);
+    }
+    return sound;
+}
+
+bool table_is_sound(const fescue_table *table)
+{
+    const struct cells *cells = &table->cells;
+    return cells->count > 0 && table->row_labels.count == cells->rows && table->column_labels.count == cells->columns &&
+           half_is_sound(cells, &cells->by_row) && half_is_sound(cells, &cells->by_column) &&
+           labels_are_sound(&table->row_labels) && labels_are_sound(&table->column_labels) && texts_are_sound(table);
 }
 
 void gzip_append(char **bytes, size_t *count, const void *text, size_t length)

@@ -23,6 +23,10 @@ void table_check(const fescue_table *table, const char *cells);
 /* The same sides, cells and values, to the bit. */
 void tables_equal(const fescue_table *a, const fescue_table *b);
 
+/* Whether the table is one, whatever it was read from: lines in order, finite values, labels, and texts that read as
+   their values. */
+bool table_is_sound(const fescue_table *table);
+
 /* Gzip members in memory, one behind the other; the caller frees *bytes with free(). */
 void gzip_append(char **bytes, size_t *count, const void *text, size_t length);
 
