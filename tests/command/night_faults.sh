@@ -37,8 +37,8 @@ PLAN
     check "no half results on the full disk" whole_or_nothing full/res
     # At every stage: room for more and more.
     for room in 4 16 64 128 192 256; do
-        mount -o remount,size=${room}k full
         rm -rf full/* full/.[a-z]*
+        mount -o remount,size=${room}k full
         "$FESCUE" night -q full.ini --again 2>err
         got=$?
         [ $got -eq 0 ] || [ $got -eq 1 ]
