@@ -226,12 +226,13 @@ void crew_ask_to_stop(struct fescue_night *night)
     }
 }
 
-void crew_watch(struct fescue_night *night)
+bool crew_watch(struct fescue_night *night)
 {
     enum { POLLS = 1024 }; /* the most workers a night has */
     struct pollfd polls[POLLS];
     struct task *tasks[POLLS];
     nfds_t count = 0;
+    bool ended = false;
     for (size_t k = 0; k < night->plan.count && count < POLLS; k++)
         if (night->tasks[k].state == STATE_RUNNING) {
             tasks[count] = &night->tasks[k];
@@ -239,8 +240,11 @@ void crew_watch(struct fescue_night *night)
         }
     int ready = poll(polls, count, (int)(1000 * look));
     for (nfds_t k = 0; k < count && ready > 0; k++)
-        if (polls[k].revents != 0)
+        if (polls[k].revents != 0) {
             task_end(night, tasks[k]);
+            ended = true;
+        }
     memory_watch(night);
     patience_watch(night);
+    return ended;
 }

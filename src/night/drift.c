@@ -5,12 +5,12 @@
  * A figure x is flagged when it leaves its usual range, of which the last HISTORY_MOST done runs tell, once there are
  * HISTORY_LEAST:
  *
- *     |x - median| > wide * 1.4826 * MAD + least * |median|,     MAD = median |x_i - median|
+ *     |x - median| > wide * 1.4826 * MAD + least * |median| + floor,     MAD = median |x_i - median|
  *
  * Median and MAD, since a bad night among the few must not widen the range for the next (Hampel 1974, "The influence
  * curve and its role in robust estimation"); 1.4826 makes the MAD a standard deviation for normal figures, and `wide`
- * lets one of several thousand such nights through. `least` keeps a figure that never moved from being flagged for its
- * last digits.
+ * lets one of several thousand such nights through. `least` and `floor` keep a figure that never moved from being
+ * flagged for its last digits.
  *
  * The subspace is that of the table's shorter side, a point on the Grassmann manifold: its leading min(r, r') columns
  * and those of the last run are joined by a geodesic, whose speeds are the principal angles (manifold.h). The greatest
@@ -27,6 +27,8 @@
 
 enum { HISTORY_LEAST = 5, HISTORY_MOST = 60 };
 static const double wide = 4, least = 0.02;
+/* Below these a change means nothing to anybody: half a rank, a cell in a thousand, a degree. */
+static const double figure_floors[FIGURES] = {[FIGURE_MISSING] = 1e-3, [FIGURE_RANK] = 0.5, [FIGURE_ANGLE] = 0.0175};
 
 /* ---- figures -------------------------------------------------------------------------------------------------------
  */
@@ -56,7 +58,7 @@ static double median_of(double *value, size_t count)
     return count % 2 == 1 ? value[count / 2] : 0.5 * (value[count / 2 - 1] + value[count / 2]);
 }
 
-bool drift_is_unusual(double value, double *past, size_t count, double *low, double *high)
+bool drift_is_unusual(double value, double floor, double *past, size_t count, double range[2])
 {
     double away[HISTORY_MOST];
     if (count < HISTORY_LEAST || count > HISTORY_MOST || !isfinite(value))
@@ -64,28 +66,28 @@ bool drift_is_unusual(double value, double *past, size_t count, double *low, dou
     double median = median_of(past, count);
     for (size_t k = 0; k < count; k++)
         away[k] = fabs(past[k] - median);
-    double width = wide * 1.4826 * median_of(away, count) + least * fabs(median);
-    *low = median - width;
-    *high = median + width;
-    return value < *low || value > *high;
+    double width = wide * 1.4826 * median_of(away, count) + least * fabs(median) + floor;
+    range[0] = median - width;
+    range[1] = median + width;
+    return value < range[0] || value > range[1];
 }
 
 static fescue_status figure_judge(struct fescue_night *night, struct task *task, enum figure figure)
 {
     struct past past = {.count = 0};
     char sql[256], now[32], from[32], to[32];
-    double low, high, value = task->outcome.figure[figure];
+    double range[2], value = task->outcome.figure[figure];
     snprintf(sql, sizeof sql,
              "SELECT %s FROM attempt WHERE job = ? AND state = 'done' AND number <> ? AND %s IS NOT NULL"
              " ORDER BY number DESC LIMIT %d",
              figure_columns[figure], figure_columns[figure], HISTORY_MOST);
     fescue_status status = ledger_ask(&night->ledger, past_take, &past, sql, "ti", task->job->name, task->attempt);
-    if (status != FESCUE_OK || !drift_is_unusual(value, past.value, past.count, &low, &high))
+    if (status != FESCUE_OK || !drift_is_unusual(value, figure_floors[figure], past.value, past.count, range))
         return status;
     size_t used = strlen(task->flags);
     snprintf(task->flags + used, sizeof task->flags - used, "%s%s %s, usually %s to %s", used > 0 ? "; " : "",
-             figure_words[figure], real_to_words(value, 4, now), real_to_words(low, 4, from),
-             real_to_words(high, 4, to));
+             figure_words[figure], real_to_words(value, 4, now), real_to_words(range[0], 4, from),
+             real_to_words(range[1], 4, to));
     return FESCUE_OK;
 }
 

@@ -300,10 +300,10 @@ static bool is_anything_running(const struct fescue_night *night)
 
 static void night_work(struct fescue_night *night)
 {
-    for (;;) {
+    for (bool changed = true;;) {
         bool over = is_over(night);
         struct task *task;
-        while (!over && (task = order_next(night)) != NULL) {
+        while (changed && !over && (task = order_next(night)) != NULL) {
             task_begin(night, task);
             over = is_over(night);
         }
@@ -311,7 +311,7 @@ static void night_work(struct fescue_night *night)
             crew_ask_to_stop(night);
         if (!is_anything_running(night))
             return;
-        crew_watch(night);
+        changed = crew_watch(night);
     }
 }
 

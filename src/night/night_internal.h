@@ -205,8 +205,8 @@ struct fescue_night {
 _Noreturn void child_run(const struct task *task, pid_t night, int pipe);
 /* Begins the task in a child process. */
 fescue_status crew_begin(struct fescue_night *night, struct task *task);
-/* Waits a moment for something to happen; tasks that ended have another state then. Watches memory. */
-void crew_watch(struct fescue_night *night);
+/* Waits a moment for something to happen; whether a task ended, which has another state then. Watches memory. */
+bool crew_watch(struct fescue_night *night);
 void crew_ask_to_stop(struct fescue_night *night);
 
 /* Guesses for all tasks, before the night. */
@@ -222,8 +222,8 @@ double order_time_left(const struct fescue_night *night, const struct task *task
 void order_shrink(const struct fescue_night *night, struct task *task);
 
 /* Compares a finished task with its job's history: angle and distance in the outcome, flags. */
-/* Whether a value leaves the usual range of its past (which is sorted), and that range. Too few: it does not. */
-bool drift_is_unusual(double value, double *past, size_t count, double *low, double *high);
+/* Whether a value leaves the usual range of its past (which gets sorted), and that range. Of too few: it does not. */
+bool drift_is_unusual(double value, double floor, double *past, size_t count, double range[2]);
 fescue_status drift_judge(struct fescue_night *night, struct task *task);
 
 /* summary.txt, index.html, night.json in night->place, and night->text. */

@@ -76,6 +76,24 @@ check "--again runs all" grep -q '4 jobs: 4 done' err
 try 0 night --history plan.ini
 check "the history has five nights" test "$(grep -c '^night' out)" -eq 5
 
+# ---- drift ------------------------------------------------------------------------------------------------------------
+cat >drift.ini <<'PLAN'
+[steady]
+input = in/drift.mtx
+rank = 2
+folds = 0
+PLAN
+cp in/t1.mtx in/drift.mtx
+for k in 1 2 3 4 5 6; do "$FESCUE" night -q --again drift.ini; done
+try 0 night --again drift.ini
+denied "the same again is not unusual" grep -q unusual err
+cp in/t3.mtx in/drift.mtx
+try 0 night drift.ini
+check "another subspace is" grep -q 'unusual: .*angle to the last subspace [0-9.]*, usually' err
+check "the ledger has the angles" "$PYTHON" -c 'import sqlite3
+angles = [r[0] for r in sqlite3.connect("drift-ledger.db").execute("SELECT angle FROM attempt ORDER BY number")]
+assert angles[0] is None and max(angles[1:7]) < 1e-6 and angles[7] > 0.2, angles'
+
 # ---- what fails, fails alone ------------------------------------------------------------------------------------------
 cat >mixed.ini <<'PLAN'
 [gone]
