@@ -6,9 +6,9 @@
  * the portfolio of starts of solve_recover goes to work on all cells, without ridge. When none of them meets the cells
  * nothing is changed.
  *
- * Tried only where it may matter: few cells for the unknowns, a ridge that may be 0, and a table small enough that all
- * of it takes seconds. A met table may still have cells that no fit determines: those in lines with too few cells;
- * `basis` marks them.
+ * Tried only where it may matter: few cells for the unknowns, no plain sign of noise, a ridge that may be 0, and a
+ * table small enough that all of it takes seconds. A met table may still have cells that no fit determines: those in
+ * lines with too few cells; `basis` marks them.
  */
 #include "job/job_internal.h"
 
@@ -16,6 +16,9 @@
 
 /* With more cells than this many times the unknowns the ordinary fit does not fail. */
 static const double scarce = 4;
+/* ... and with more than this many it is near enough to say whether there is noise: when its error on hidden cells is
+   above this share of what offsets leave, there is. */
+static const double telling = 1.75, noisy = 0.1;
 /* cells x rank^2: some seconds for all starts. */
 static const double affordable = 3e8;
 /* Newton's steps square the error; what has not ended after these has lost its way. */
@@ -33,12 +36,19 @@ static size_t rank_of(const struct final_request *request)
     return rank < shorter ? rank : shorter;
 }
 
+static bool is_noisy(const struct choice *choice)
+{
+    return choice->errors.count > 0 && choice->errors.rmse > noisy * choice->offsets_errors.rmse;
+}
+
 bool final_exact_may_help(const struct final_request *request)
 {
     const struct cells *cells = request->cells;
     double rank = (double)rank_of(request), count = (double)cells->count;
     double unknowns = rank * ((double)cells->rows + (double)cells->columns - rank);
     bool ridge_allows = request->options->ridge == (double)FESCUE_AUTO || request->options->ridge == 0;
+    if (count >= telling * unknowns && is_noisy(request->choice))
+        return false;
     return rank > 0 && ridge_allows && count > unknowns && count < scarce * unknowns &&
            count * rank * rank <= affordable;
 }

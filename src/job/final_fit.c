@@ -24,6 +24,8 @@
  * following a flat valley for hundreds of iterations would undo, for the worse. Choosing ends its fits by the same
  * rule, so the error on the hidden cells is the error of such a fit.
  *
+ * A fit with the absolute loss is gone over by squares, without the cells that it shows to be wrong (final_robust.c).
+ *
  * What the evidence fit learnt is learnt again, by the same request from the same kind of start, on all cells.
  *
  * Cost: at most twice one fit, and room for two points. What is parallel is so in the solvers.
@@ -207,7 +209,11 @@ fescue_status final_fit_run(fescue_context *context, const struct final_request 
         best.point.spectrum[k] *= problem.scale;
     model->low_rank = best.point;
     fit->result = best.result;
+    bool is_whole = !is_cut_short(&best);
     best = (struct candidate){0};
+    fit->is_robust = is_whole && model->low_rank.rank > 0 && solver_is_robust(request->solver);
+    if (fit->is_robust)
+        TRY(final_robust_run(context, request, fit));
 done:
     candidate_free(context, &best);
     problem_free(&problem);

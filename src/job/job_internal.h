@@ -37,6 +37,8 @@ struct final_fit {
     const char *start; /* which start it came from: "grown", "spectral", what solve_recover says, or "none" at rank 0 */
     double scale;      /* units of the table in one of the fit's */
     bool is_exact;     /* found by final_exact_run: without ridge, whatever the choice says */
+    bool is_robust;    /* a fit with the absolute loss, gone over by final_robust_run */
+    uint64_t set_aside; /* cells that it left out */
 };
 /* Fits all cells with what was chosen. Asked to stop, it ends with what it has: FESCUE_OK and STOP_CANCELLED. */
 fescue_status final_fit_run(fescue_context *context, const struct final_request *request, struct final_fit *fit);
@@ -45,6 +47,9 @@ fescue_status final_fit_run(fescue_context *context, const struct final_request 
 bool final_exact_may_help(const struct final_request *request);
 fescue_status final_exact_run(fescue_context *context, const struct final_request *request, struct final_fit *fit,
                               bool *found);
+/* After a fit with the absolute loss: cells far off are set aside, the others fitted by squares (final_robust.c). Being
+   asked to stop leaves the fit as it is. */
+fescue_status final_robust_run(fescue_context *context, const struct final_request *request, struct final_fit *fit);
 void final_fit_free(fescue_context *context, struct final_fit *fit);
 
 /* ---- checkpoints -----------------------------------------------------------------------------------------------

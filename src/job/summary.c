@@ -100,7 +100,7 @@ static void ridge_words(struct summary *summary)
     char ridge[32];
     if (summary->fill->fit.is_exact)
         text_add(&summary->text, ", no ridge (all seen cells are met to rounding)");
-    else if (choice->is_learnt)
+    else if (choice->is_learnt || (summary->fill->fit.is_robust && is_chosen))
         text_add(&summary->text, ", a ridge a component (learnt)");
     else
         text_add(&summary->text, ", ridge %s (%s)", real_to_words(choice->ridge, 3, ridge), by_whom(is_chosen));
@@ -270,11 +270,14 @@ static void fit_lines(struct summary *summary)
 {
     const struct solve_result *result = &summary->fill->fit.result;
     struct text *text = &summary->text;
-    char iterations[WORDS_SIZE];
+    char iterations[WORDS_SIZE], aside[WORDS_SIZE];
     if (summary->fill->fit.model.low_rank.rank == 0)
         return;
     text_add(text, "fit        %s on all cells, %s: %s\n", result->solver,
              count_words(result->iterations, "iteration", iterations), solve_stop_text(result->stop));
+    if (summary->fill->fit.is_robust)
+        text_add(text, "           then by squares, %s set aside as more than 5 standard deviations off\n",
+                 count_words(summary->fill->fit.set_aside, "cell", aside));
     if (!solve_converged(result->stop))
         text_add(text, "           WARNING: the fit did not converge; %s\n", advice(result->stop));
 }

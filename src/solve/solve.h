@@ -56,6 +56,7 @@ struct solver;                                      /* name, summary, and its fu
 const struct solver *solver_find(const char *name); /* NULL when there is none of that name */
 const struct solver *solver_at(size_t k);           /* the k-th of the list, NULL past its end */
 const char *solver_name(const struct solver *solver);
+bool solver_is_robust(const struct solver *solver); /* its loss is the absolute one */
 const char *solver_summary(const struct solver *solver);
 
 /* Improves `point` (its rank fixed) until a limit. The best point seen is left in it, never worse than it came; the

@@ -32,6 +32,11 @@ const char *solver_name(const struct solver *solver)
     return solver->name;
 }
 
+bool solver_is_robust(const struct solver *solver)
+{
+    return solver->loss == LOSS_ABSOLUTE;
+}
+
 const char *solver_summary(const struct solver *solver)
 {
     return solver->summary;
