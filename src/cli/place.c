@@ -12,9 +12,9 @@
 
 /* The results by name, of which a table to be filled may be one: filling build/x/filled.csv into build/x must not
    destroy it. */
-static const char *const results[] = {"filled.mtx",   "filled.csv",    "filled.tsv",        "cells.csv", "left.mtx",
-                                      "spectrum.mtx", "right.mtx",     "row-offsets.mtx",   "trace.csv", "run.json",
-                                      "report.html",  "time-part.csv", "column-offsets.mtx"};
+static const char *const results[] = {"filled.mtx",   "filled.csv", "filled.tsv",      "cells.csv",         "left.mtx",
+                                      "spectrum.mtx", "right.mtx",  "row-offsets.mtx", "trace.csv",         "run.json",
+                                      "report.html",  "rank.csv",   "time-part.csv",   "column-offsets.mtx"};
 
 static bool suffix_cut(char *text, const char *suffix)
 {
