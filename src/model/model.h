@@ -70,12 +70,40 @@ double time_part_at(const struct time_part *part, uint32_t row, uint32_t column)
 /* Steps from a cell to the nearest seen cell of its series; infinite where the series has none. */
 double time_part_distance(const struct time_part *part, uint32_t row, uint32_t column);
 
+/* Seasons: waves of known frequencies, of which every series has amplitudes of its own, drawn towards common ones
+   (season.c). */
+enum { SEASON_WAVES_MOST = 16 };
+struct season {
+    enum time_along along; /* TIME_NONE: there is none, and all else is 0 */
+    uint32_t steps, series;
+    size_t waves;
+    double frequency[SEASON_WAVES_MOST]; /* cycles a step of the clock */
+    double *wave;                        /* steps x 2 waves: cosine and sine of each */
+    double *amplitude;                   /* series x 2 waves, table units */
+};
+/* Waves of these periods (in steps of the clock, at least two) and of their harmonics, on an axis that is not none.
+   Null amplitudes. The caller owns *season. */
+fescue_status season_create(fescue_context *context, const struct time_axis *axis, uint32_t series,
+                            const double *period, size_t periods, struct season *season);
+/* Learns the amplitudes from the seen cells. */
+fescue_status season_fit(fescue_context *context, const struct cells *cells, struct season *season);
+double season_at(const struct season *season, uint32_t row, uint32_t column); /* 0 where there is none */
+/* New store of the same pattern without the season: cells_alike. */
+fescue_status season_remove(fescue_context *context, const struct cells *cells, const struct season *season,
+                            struct cells *rest);
+void season_free(fescue_context *context, struct season *season);
+/* Periods, in steps, among the candidates that stand out of the mean of all series, in their order, to the front of
+   `period`; *found of them (season_find.c). */
+fescue_status season_find(fescue_context *context, const struct cells *cells, const struct time_axis *axis,
+                          double *period, size_t candidates, size_t *found);
+
 /* The whole of what was learnt, in the table's units (scale is already in the spectrum). */
 struct model {
     uint32_t rows, columns;
     struct offsets offsets;
     struct low_rank low_rank;
     struct time_part time;
+    struct season season;
     struct fescue_range bounds;
 };
 double model_estimate(const struct model *model, uint32_t row, uint32_t column); /* clamped to bounds */
