@@ -87,7 +87,9 @@ static fescue_status fill_choose(fescue_fill *fill, struct choose_request *reque
     struct holdout_request asked;
     TRY(fill_shape(fill, &asked));
     TRY(holdout_cut(fill->context, cells, &asked, &holdout));
-    TRY(choose_run(fill->context, &holdout, request, &fill->choice));
+    if (fill->season_plan.count == 0 || fill->season_plan.is_auto)
+        TRY(choose_run(fill->context, &holdout, request, &fill->choice));
+    TRY(season_choose(fill, &holdout, request));
     fill->is_search_cut = request->deadline > 0 && clock_wall() >= request->deadline;
     fill->run.hidden = holdout.hidden.count > 0 ? holdout.hidden.count : fill->choice.errors.count;
 done:
@@ -98,7 +100,7 @@ done:
 static fescue_status fill_fit(fescue_fill *fill, const struct solver *solver)
 {
     struct final_request request = {
-        .cells = &fill->table->cells, .options = &fill->options, .choice = &fill->choice, .solver = solver};
+        .cells = fill->cells, .options = &fill->fitting, .choice = &fill->choice, .solver = solver};
     if (fill->options.time_limit > 0)
         request.deadline = fill->wall + fill->options.time_limit;
     return final_fit_run(fill->context, &request, &fill->fit);
@@ -109,8 +111,8 @@ static fescue_status fill_judge(fescue_fill *fill, const struct solver *solver)
     const struct final_fit *fit = &fill->fit;
     bool has_order = fill->time.along != TIME_NONE || fill->shape.shape == FESCUE_HOLDOUT_GAPS;
     double deviation = fit->result.rmse * fit->scale;
-    struct judge_request request = {.cells = &fill->table->cells,
-                                    .options = &fill->options,
+    struct judge_request request = {.cells = fill->cells,
+                                    .options = &fill->fitting,
                                     .choice = &fill->choice,
                                     .solver = solver,
                                     .model = &fit->model,
@@ -173,6 +175,7 @@ static fescue_status fill_run(fescue_fill *fill)
     TRY(job_prepare(context, &fill->options));
     TRY(fill_checkpoint_open(fill));
     TRY(time_axis_find(context, fill->table, (enum fescue_time_axis)fill->options.time_axis, &fill->time));
+    TRY(season_plan_make(fill, fill->options.season));
     struct choose_request request = {.options = &fill->options, .time = &fill->time};
     TRY(solver_choose(context, &fill->options, &request));
     TRY(weights_consider(fill->table, &fill->options, &request));
@@ -180,6 +183,7 @@ static fescue_status fill_run(fescue_fill *fill)
     TRY(fill_fit(fill, request.solver));
     low_rank_free(context, &fill->choice.start);
     TRY(fill_judge(fill, request.solver));
+    season_restore(fill);
     TRY(determined_create(context, &fill->table->cells, fill->fit.model.low_rank.rank, fill->fit.model.offsets.kind,
                           &fill->determined));
     if (fill->fit.model.time.components > 0)
@@ -206,10 +210,15 @@ fescue_status fescue_fill_table(const fescue_table *table, const struct fescue_o
     fill->options.output = NULL;
     fill->options.row_weights = table->weights.rows; /* what the table was read with */
     fill->options.column_weights = table->weights.columns;
+    fill->fitting = fill->options;
+    fill->cells = &table->cells;
     fill->wall = clock_wall();
     fill->cpu = clock_cpu();
     fill->run.started = (double)time(NULL);
-    status = fill_run(fill);
+    status = memory_copy_text(fill->context, options->season, strlen(options->season), &fill->season_text);
+    fill->options.season = fill->fitting.season = fill->season_text;
+    if (status == FESCUE_OK)
+        status = fill_run(fill);
     if (status != FESCUE_OK)
         fescue_fill_destroy(&fill);
     *out = fill;
@@ -236,9 +245,10 @@ static fescue_status writing_tell(const fescue_fill *fill)
 /* Results of an older run in the same place that this one does not have must not lie beside its record. */
 static fescue_status names_retire(struct output *output)
 {
-    static const char *const names[] = {"filled.mtx",   "filled.csv",    "filled.tsv",      "cells.csv",
-                                        "left.mtx",     "right.mtx",     "row-offsets.mtx", "column-offsets.mtx",
-                                        "spectrum.mtx", "time-part.csv", "trace.csv"};
+    static const char *const names[] = {"filled.mtx",   "filled.csv",       "filled.tsv",      "cells.csv",
+                                        "left.mtx",     "right.mtx",        "row-offsets.mtx", "column-offsets.mtx",
+                                        "spectrum.mtx", "season-waves.mtx", "season.mtx",      "time-part.csv",
+                                        "trace.csv"};
     fescue_status status = FESCUE_OK;
     for (size_t k = 0; k < sizeof names / sizeof names[0] && status == FESCUE_OK; k++)
         status = output_retire(output, names[k]);
@@ -307,6 +317,9 @@ void fescue_fill_destroy(fescue_fill **pointer)
     final_fit_free(context, &fill->fit);
     choice_free(context, &fill->choice);
     time_axis_free(context, &fill->time);
+    season_free(context, &fill->season);
+    cells_free(context, &fill->rest);
+    GIVE(context, &fill->season_text);
     GIVE(context, &fill->text);
     GIVE(context, pointer);
 }

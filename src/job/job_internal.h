@@ -58,6 +58,15 @@ void final_fit_free(fescue_context *context, struct final_fit *fit);
 /* Opens the memo of a fill, when options->checkpoint names its file. */
 fescue_status checkpoint_open(const fescue_table *table, const struct fescue_options *options);
 
+/* What --season asks for, in steps of the clock. */
+enum { SEASON_PERIODS_MOST = 4 };
+struct season_plan {
+    bool is_auto;
+    size_t count;
+    double period[SEASON_PERIODS_MOST];
+    double rmse_without; /* on the hidden cells, without a season; NAN where that was not asked */
+};
+
 /* ---- a fill -------------------------------------------------------------------------------------------------------
  */
 
@@ -66,6 +75,12 @@ struct fescue_fill {
     const fescue_table *table;
     struct fescue_options options; /* a copy; its texts are dropped */
     struct time_axis time;         /* of the table, or none */
+    char *season_text;             /* owned; options.season */
+    struct season_plan season_plan;
+    struct season season;          /* taken off the cells, until season_restore gives it to the model */
+    struct cells rest;             /* what the season leaves */
+    const struct cells *cells;     /* what is fitted: the table's, or rest */
+    struct fescue_options fitting; /* for the fit: without bounds while a season is off */
     struct hole_shape shape;       /* of what is hidden */
     struct line_order order;       /* along which gaps lie */
     struct choice choice;
@@ -77,6 +92,14 @@ struct fescue_fill {
     struct run run;   /* the view that writers get */
     char *text;       /* the summary */
 };
+
+/* What the option asks for, once the time axis is known. FESCUE_USAGE with one line. */
+fescue_status season_plan_make(fescue_fill *fill, const char *text);
+/* Makes the choice with the season taken off, and keeps it in place of the plain one where it was asked for or has less
+   error on the hidden cells. `plain` is what the choice was made by. */
+fescue_status season_choose(fescue_fill *fill, const struct holdout *holdout, const struct choose_request *plain);
+/* After everything was fitted and judged: the model has the season, if any, and the bounds. */
+void season_restore(fescue_fill *fill);
 
 /* The summary, new and owned by the caller; with the lines on files when they are being written. */
 fescue_status fill_summarise(const fescue_fill *fill, bool is_written, char **text);

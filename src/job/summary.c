@@ -38,6 +38,38 @@ static void table_lines(struct summary *summary)
                  count_words(table->duplicates, "cell", seen));
 }
 
+static void season_line(struct summary *summary)
+{
+    const struct season_plan *plan = &summary->fill->season_plan;
+    const struct fescue_fill *fill = summary->fill;
+    struct text *text = &summary->text;
+    bool is_there = fill->fit.model.season.along != TIME_NONE;
+    char period[32], with[32], without[32];
+    if (plan->count == 0) {
+        if (plan->is_auto)
+            text_add(text, "season     none: %s\n",
+                     fill->time.along == TIME_NONE ? "no side is known to be in time"
+                                                   : "no day, week or year stands out");
+        return;
+    }
+    text_add(text, "season     ");
+    for (size_t k = 0; k < plan->count; k++) {
+        double seconds = plan->period[k] * fill->time.step_seconds;
+        text_add(text, "%s%s %s", k > 0 ? " and " : "",
+                 real_to_words(isfinite(seconds) ? seconds / 3600 : plan->period[k], 6, period),
+                 isfinite(seconds) ? "h" : "steps");
+    }
+    if (!plan->is_auto)
+        text_add(text, " (as asked)\n");
+    else
+        text_add(text,
+                 is_there ? ": RMSE %s on hidden cells with it, %s without\n"
+                          : ", not taken: hidden cells are met no better with it (RMSE %s without)\n",
+                 is_there ? real_to_words(fill->choice.errors.rmse, 4, with)
+                          : real_to_words(plan->rmse_without, 4, without),
+                 real_to_words(plan->rmse_without, 4, without));
+}
+
 static void weights_line(struct summary *summary)
 {
     const struct table_weights *weights = &summary->fill->table->weights;
@@ -332,6 +364,7 @@ fescue_status fill_summarise(const fescue_fill *fill, bool is_written, char **te
     struct summary summary = {.fill = fill, .run = &fill->run, .text = {.context = fill->context}};
     table_lines(&summary);
     time_line(&summary);
+    season_line(&summary);
     weights_line(&summary);
     model_lines(&summary);
     error_lines(&summary);

@@ -7,6 +7,7 @@
  *   input     path, packed_from (of a pack: its source), crc32 and bytes (as on disk; of a pack: of its source), shape,
  *             rows, columns, observed, duplicates, checksums of the labels
  *   time      which side is in time, its step, gaps, equal times; or along none
+ *   season    whether there is one, and its waves
  *   weights   whether cells, rows, columns brought their own, and the range of the cells' (mean one)
  *   options   every option that bears on results, as the text that sets it
  *   choice    offsets, rank, ridge (null where the fit learns one a component: then the noise it assumes); hidden
@@ -143,6 +144,18 @@ static struct record input_record(const struct run *run)
     labels_set(&input, "row_labels_crc32", &table->row_labels, table->cells.rows);
     labels_set(&input, "column_labels_crc32", &table->column_labels, table->cells.columns);
     return input;
+}
+
+static struct record season_record(const struct run *run)
+{
+    const struct season *season = &run->model->season;
+    struct record record = record_open(run->context), waves = {run->context, json_array(), false};
+    for (size_t k = 0; k < season->waves; k++)
+        if (json_array_append_new(waves.object, json_real(season->frequency[k])) != 0)
+            waves.failed = true;
+    flag_set(&record, "is_there", season->along != TIME_NONE);
+    record_set(&record, "cycles_per_step", waves);
+    return record;
 }
 
 static struct record weights_record(const struct run *run)
@@ -351,11 +364,15 @@ static struct record model_record(const struct run *run)
         if (json_array_append_new(spectrum.object, json_real(model->low_rank.spectrum[k])) != 0)
             spectrum.failed = true;
     record_set(&record, "spectrum", spectrum);
-    text_set(&record, "formula",
-             model->time.along != TIME_NONE
-                 ? "mean + row offset + column offset + left diag(spectrum) right' + residual in time, then bounds"
-                 : "mean + row offset + column offset + left diag(spectrum) right', then bounds; where the "
-                   "ridge is 0, cells whose basis is not low-rank are without the product");
+    text_set(
+        &record, "formula",
+        model->season.along != TIME_NONE
+            ? "mean + row offset + column offset + left diag(spectrum) right' + season + residual in time, if any, "
+              "then bounds"
+        : model->time.along != TIME_NONE
+            ? "mean + row offset + column offset + left diag(spectrum) right' + residual in time, then bounds"
+            : "mean + row offset + column offset + left diag(spectrum) right', then bounds; where the "
+              "ridge is 0, cells whose basis is not low-rank are without the product");
     return record;
 }
 
@@ -379,6 +396,7 @@ static struct record files_record(const struct run *run)
     const char *factors = run_why_left_out(run, run->writes_factors);
     const char *low_rank = run->model->low_rank.rank == 0 ? "the rank is 0" : NULL;
     const char *time = run->model->time.along == TIME_NONE ? "the model follows nothing in time" : NULL;
+    const char *season = run->model->season.along == TIME_NONE ? "the model has no season" : NULL;
     const struct {
         const char *name, *why;
     } files[] = {{filled_name(run->table), filled},
@@ -388,6 +406,8 @@ static struct record files_record(const struct run *run)
                  {"left.mtx", factors != NULL ? factors : low_rank},
                  {"spectrum.mtx", factors != NULL ? factors : low_rank},
                  {"right.mtx", factors != NULL ? factors : low_rank},
+                 {"season-waves.mtx", factors != NULL ? factors : season},
+                 {"season.mtx", factors != NULL ? factors : season},
                  {"time-part.csv", factors != NULL ? factors : time},
                  {"trace.csv", NULL}};
     for (size_t k = 0; k < sizeof files / sizeof files[0]; k++) {
@@ -425,6 +445,7 @@ static struct record run_record(const struct run *run)
     text_set(&record, "caution", run_caution);
     record_set(&record, "input", input_record(run));
     record_set(&record, "time", time_record(run));
+    record_set(&record, "season", season_record(run));
     record_set(&record, "weights", weights_record(run));
     record_set(&record, "options", options_record(run));
     record_set(&record, "choice", choice_record(run));

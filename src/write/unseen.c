@@ -62,7 +62,7 @@ static double estimate_at(const struct run *run, uint32_t row, uint32_t column, 
     const struct model *model = run->model;
     if (basis == BASIS_LOW_RANK || !has_low_rank(run) || is_shrunk(run))
         return model_estimate(model, row, column);
-    double estimate = offsets_at(&model->offsets, row, column);
+    double estimate = offsets_at(&model->offsets, row, column) + season_at(&model->season, row, column);
     return fmin(fmax(estimate, model->bounds.low), model->bounds.high);
 }
 

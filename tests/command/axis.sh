@@ -42,6 +42,80 @@ says "plain.csv: --time-axis rows: the label 'line 0' of row 1 is neither a time
 check "and nothing was written" nothing_in plain
 try 64 fill plain.csv --time-axis diagonal
 
+# ---- season -----------------------------------------------------------------------------------------------------------
+"$PYTHON" - <<'END'
+import numpy as np
+random = np.random.default_rng(8)
+m, n = 480, 6
+hour = np.arange(m)
+phase, size = 2 * np.pi * random.random(n), 3 + random.random(n)
+truth = 20 + size * np.sin(2 * np.pi * hour[:, None] / 24 + phase) + 0.5 * random.standard_normal((m, 1))
+value = truth + 0.3 * random.standard_normal((m, n))
+seen = random.random((m, n)) < 0.9
+seen[200:248] = False
+np.save("cycle.npy", truth)
+with open("cycle.csv", "w") as wide, open("cycle.mtx", "w") as market:
+    wide.write("time," + ",".join("w%d" % j for j in range(n)) + "\n")
+    market.write("%%%%MatrixMarket matrix array real general\n%d %d\n" % (m, n))
+    for i in range(m):
+        cells = ["%.3f" % value[i, j] if seen[i, j] else "" for j in range(n)]
+        wide.write("2024-03-%02dT%02d:00Z,%s\n" % (1 + i // 24, i % 24, ",".join(cells)))
+    for j in range(n):
+        market.writelines("%s\n" % ("%.3f" % value[i, j] if seen[i, j] else "nan") for i in range(m))
+END
+cat >outage.py <<'END'
+import csv, sys
+import numpy as np
+truth = np.load("cycle.npy")
+table = list(csv.reader(open(sys.argv[1] + "/filled.csv")))[1:]
+got = np.array([[float(x) for x in line[1:]] for line in table])
+print(np.sqrt(np.mean((got - truth)[200:248] ** 2)))
+END
+try 0 fill cycle.csv -o cycle-none
+try 0 fill cycle.csv --season 24h -o cycle
+check "the summary says it" grep -qx 'season     24 h (as asked)' err
+holds cycle/run.json 'r["season"]["is_there"] and abs(r["season"]["cycles_per_step"][0] - 1 / 24) < 1e-12'
+holds cycle/run.json 'r["files"]["season.mtx"] == "written" and r["options"]["season"] == "24h"'
+check "two days without any cell are met with less than half of the error" \
+    "$PYTHON" -c 'import sys; print(sys.argv); sys.exit(not float(sys.argv[1]) < 0.5 * float(sys.argv[2]))' \
+    "$("$PYTHON" outage.py cycle)" "$("$PYTHON" outage.py cycle-none)"
+cat >factors.py <<'END'
+import csv, json
+import numpy as np, scipy.io as io
+read = lambda name: np.asarray(io.mmread("cycle/" + name + ".mtx"))
+record = json.load(open("cycle/run.json"))
+total = record["model"]["mean"] + read("row-offsets") + read("column-offsets").T
+total = total + read("season-waves") @ read("season").T
+if record["model"]["rank"] > 0:
+    total = total + (read("left") * read("spectrum").ravel()) @ read("right").T
+table = np.array([line[1:] for line in list(csv.reader(open("cycle/filled.csv")))[1:]], float)
+rest = (table - total)[200:248]
+# What the residual in time adds fades within the two days.
+print(np.abs(rest[20:28]).max())
+raise SystemExit(not np.abs(rest[20:28]).max() < 0.3)
+END
+check "the factors and the season make the estimates" "$PYTHON" factors.py
+try 0 fill cycle.csv --season auto -o cycle-auto
+check "auto finds the day" grep -q '^season     24 h' err
+try 0 fill cycle.mtx --season 24 --time-axis rows -o cycle-steps
+check "a number counts steps" grep -qx 'season     24 steps (as asked)' err
+try 0 fill clock.csv --season auto -o clock
+check "auto says when there is none" grep -qx 'season     none: no day, week or year stands out' err
+cannot() { # SEASON SENTENCE
+    try 64 fill cycle.csv --season "$1" -o refused
+    says "--season: '$2"
+}
+cannot 24x "24x' has a unit that is not known; s, m, h, d, w or y was expected"
+cannot daily "daily' is no season; a time such as 24h, 7d or 1y, or a number of steps, was expected"
+cannot 24h, "' is no season; a time such as 24h, 7d or 1y, or a number of steps, was expected"
+cannot 90m "90m' is shorter than two steps of the clock"
+cannot 24h,1y "1y' is longer than the whole table"
+try 64 fill cycle.mtx --season 24h --time-axis rows -o refused
+says "--season: '24h' is a time, but the steps of this table have no length; a number of steps was expected"
+try 64 fill cycle.mtx --season 24 -o refused
+says "--season needs to know which side is in time: labels that are ISO 8601 times, or --time-axis"
+check "nothing was written" nothing_in refused
+
 # ---- weights ----------------------------------------------------------------------------------------------------------
 "$PYTHON" - <<'END'
 import numpy as np
