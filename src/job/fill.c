@@ -215,7 +215,8 @@ fescue_status fescue_fill_table(const fescue_table *table, const struct fescue_o
     fill->wall = clock_wall();
     fill->cpu = clock_cpu();
     fill->run.started = (double)time(NULL);
-    status = memory_copy_text(fill->context, options->season, strlen(options->season), &fill->season_text);
+    const char *season = options->season != NULL ? options->season : "none";
+    status = memory_copy_text(fill->context, season, strlen(season), &fill->season_text);
     fill->options.season = fill->fitting.season = fill->season_text;
     if (status == FESCUE_OK)
         status = fill_run(fill);
