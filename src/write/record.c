@@ -207,10 +207,13 @@ static struct record options_record(const struct run *run)
     const struct fescue_option *table = fescue_option_table(&count);
     for (size_t k = 0; k < count; k++) {
         char text[128];
-        if (is_no_matter(table[k].name))
+        const char *const *given = (const void *)((const char *)run->options + table[k].position);
+        bool is_text = table[k].kind == FESCUE_KIND_TEXT; /* of any length; one that was not given has no value */
+        if (is_no_matter(table[k].name) || (is_text && *given == NULL))
             continue;
-        fescue_option_text(&table[k], run->options, text, sizeof text);
-        text_set(&options, table[k].name, text);
+        if (!is_text)
+            fescue_option_text(&table[k], run->options, text, sizeof text);
+        text_set(&options, table[k].name, is_text ? *given : text);
     }
     return options;
 }

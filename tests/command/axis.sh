@@ -161,6 +161,34 @@ check "the same bytes for any number of threads" cmp once.csv weighted/cells.csv
 sed 's/^\(w[0-9]*,d[0-9]*,[^,]*,\).*/\11/; s/sd$/weight/' cells.csv >equal.csv
 try 0 fill equal.csv -o equal
 check "equal weights change nothing" cmp equal/filled.csv bare/filled.csv
+# Noise of columns from a third of the middle one to three times as much: learnt it serves nearly as well as told.
+"$PYTHON" - <<'END'
+import numpy as np
+random = np.random.default_rng(1)
+m, n = 600, 60
+truth = random.standard_normal((m, 4)) @ random.standard_normal((4, n))
+sd = 0.7 * 9 ** (random.random(n) - 0.5)
+value = truth + sd * random.standard_normal((m, n))
+seen = random.random((m, n)) < 0.4
+np.savez("noise.npz", truth=truth, seen=seen)
+with open("noise.mtx", "w") as market, open("noise.csv", "w") as told:
+    market.write("%%%%MatrixMarket matrix array real general\n%d %d\n" % (m, n))
+    for j in range(n):
+        market.writelines("%s\n" % ("%.6f" % value[i, j] if seen[i, j] else "nan") for i in range(m))
+        told.write("%d,%.6g\n" % (j + 1, sd[j] ** -2))
+END
+cat >noise.py <<'END'
+import numpy as np, scipy.io as io
+sown = np.load("noise.npz")
+def error(place):
+    estimate = np.asarray(io.mmread(place + "/filled.mtx"))
+    return np.sqrt(np.mean((estimate - sown["truth"])[~sown["seen"]] ** 2))
+print(error("noise-learnt"), error("noise-told"))
+raise SystemExit(not error("noise-learnt") <= 1.03 * error("noise-told"))
+END
+try 0 fill noise.mtx --write filled -o noise-learnt
+try 0 fill noise.mtx --write filled --column-weights noise.csv -o noise-told
+check "noise of columns, learnt: at most 1.03 times the error of the fit that is told it" "$PYTHON" noise.py
 for other in "--ridge 0.1" "--solver grassmann-cg"; do
     try 64 fill cells.csv $other -o refused
     says "weights are taken by the evidence fit alone: leave --solver and --ridge at auto"

@@ -28,6 +28,8 @@ static const char *const good[] = {
     "\xef\xbb\xbf;A;B\r\nr1;1,5;2\r\nr2;;\"3,25\"\r\n",
     "row\tcolumn\tvalue\nAda\tRusset\t7.5\nBea\tRusset\t6\nAda\tKing's\t8.0\nBea\tKing's\tNA\n",
     "a,x,1\n\"b\nb\",x,2\na,y,3\na,x,4\n",
+    "well,day,level,sd\na,x,1,0.5\nb,x,2,1\na,y,NA,\nb,y,4,2e-1\n",
+    "t,a,b,c\n2024-10-27T02:00,1,2,3\n2024-10-27T02:00,1,2,\n2024-10-27T03:00Z,4,,6\n",
 };
 enum { GOOD = sizeof good / sizeof good[0] };
 

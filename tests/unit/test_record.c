@@ -188,6 +188,7 @@ static void every_option_is_there_but_two(void **state)
     stand.options.strict = true;
     stand.options.ridge = 0.1;
     stand.options.output = "elsewhere";
+    stand.options.row_weights = "rows.csv";
     stand_write(&stand, write_record);
     json_t *record = record_read(&stand), *options = value_at(record, "options");
     for (size_t k = 0; k < count; k++) {
@@ -198,6 +199,10 @@ static void every_option_is_there_but_two(void **state)
             continue;
         }
         fescue_option_text(&table[k], &stand.options, text, sizeof text);
+        if (table[k].kind == FESCUE_KIND_TEXT && text[0] == '\0') { /* not given */
+            assert_null(value);
+            continue;
+        }
         assert_string_equal(json_string_value(value), text);
         listed++;
     }
