@@ -165,7 +165,7 @@ check "equal weights change nothing" cmp equal/filled.csv bare/filled.csv
 "$PYTHON" - <<'END'
 import numpy as np
 random = np.random.default_rng(1)
-m, n = 600, 60
+m, n = 300, 40
 truth = random.standard_normal((m, 4)) @ random.standard_normal((4, n))
 sd = 0.7 * 9 ** (random.random(n) - 0.5)
 value = truth + sd * random.standard_normal((m, n))
