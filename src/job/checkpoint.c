@@ -68,6 +68,9 @@ fescue_status checkpoint_open(const fescue_table *table, const struct fescue_opt
     text_add(&text, "input of %" PRIu64 " bytes with checksum %08" PRIx32 "\n", table->input_bytes, table->input_crc32);
     text_add(&text, "%" PRIu32 " rows, %" PRIu32 " columns, %" PRIu64 " cells, %016" PRIx64 "\n", cells->rows,
              cells->columns, cells->count, table->look.shape == SHAPE_MEMORY ? cells_digest(cells) : 0);
+    if (cells->by_row.weight != NULL) /* the files that they come from may have changed */
+        text_add(&text, "weights %016" PRIx64 "\n",
+                 memo_digest(0, cells->by_row.weight, cells->count * sizeof *cells->by_row.weight));
     for (const char *line = lines; *line != '\0'; line = strchr(line, '\n') + 1)
         text_add(&text, "%.*s\n", (int)strcspn(line, "\n"), line);
     TRY(text_finish(&text, &identity));
