@@ -127,6 +127,53 @@ static void the_exact_hessian_is_symmetric(void **state)
     }
 }
 
+/* Symmetric, positive, and on tangents. */
+static void the_blocks_precondition(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    for (int variant = 0; variant < 4; variant++) {
+        struct bed bed;
+        bed_make(context, variant % 2 == 0 ? &wide : &tall, variant < 2 ? 0 : 0.3, &bed);
+        hessian_start(&bed.trust.hessian, false);
+        hessian_blocks_start(&bed.trust.blocks, bed.trust.hessian.damping);
+        hessian_blocks_precondition(&bed.trust.blocks, bed.a, bed.image);
+        double ba = matrix_dot(bed.b, bed.image), size = matrix_norm(bed.image);
+        assert_true(matrix_dot(bed.a, bed.image) > 0);
+        matrix_multiply(1, bed.start, true, bed.image, false, 0, bed.projection.core);
+        assert_close(matrix_norm(bed.projection.core), 0, 1e-12 * size);
+        hessian_blocks_precondition(&bed.trust.blocks, bed.b, bed.image);
+        assert_close(matrix_dot(bed.a, bed.image), ba, 1e-12 * size);
+        bed_free(&bed);
+    }
+}
+
+/* Where all cells are seen the leverage of each is |u_i|^2, and the block of line i (1 - |u_i|^2) W'W, lifted by a
+   hundredth of W'W. */
+static void the_blocks_of_a_full_table(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = wide;
+    struct bed bed;
+    sowing.share = 1;
+    bed_make(context, &sowing, 0, &bed);
+    hessian_start(&bed.trust.hessian, false);
+    hessian_blocks_start(&bed.trust.blocks, bed.trust.hessian.damping);
+    hessian_blocks_precondition(&bed.trust.blocks, bed.a, bed.image);
+    assert_true(projection_metric(&bed.projection, bed.trust.metric));
+    projection_precondition(bed.trust.metric, bed.a, bed.b);
+    for (size_t i = 0; i < bed.b.rows; i++) {
+        double leverage = 0;
+        for (size_t k = 0; k < 3; k++)
+            leverage += MATRIX_AT(bed.start, i, k) * MATRIX_AT(bed.start, i, k);
+        for (size_t k = 0; k < 3; k++)
+            MATRIX_AT(bed.b, i, k) /= 1.01 - leverage;
+    }
+    grassmann_project(&bed.work, bed.start, bed.b);
+    matrix_add(-1, bed.image, bed.b);
+    assert_close(matrix_norm(bed.b), 0, 1e-12 * matrix_norm(bed.image));
+    bed_free(&bed);
+}
+
 /* Where the residual is zero, both are the same: a table of rank 3 without noise, at its own column space. */
 static void without_residual_gauss_newton_is_exact(void **state)
 {
@@ -186,7 +233,8 @@ int main(void)
 {
     const struct CMUnitTest tests[] = {
         BENCH_TEST(derivatives_are_slopes),         BENCH_TEST(the_hessian_is_symmetric_and_tangent),
-        BENCH_TEST(the_exact_hessian_is_symmetric), BENCH_TEST(without_residual_gauss_newton_is_exact),
+        BENCH_TEST(the_exact_hessian_is_symmetric), BENCH_TEST(the_blocks_precondition),
+        BENCH_TEST(the_blocks_of_a_full_table),     BENCH_TEST(without_residual_gauss_newton_is_exact),
         BENCH_TEST(a_step_keeps_to_its_region),
     };
     return cmocka_run_group_tests(tests, NULL, NULL);
