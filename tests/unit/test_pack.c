@@ -26,8 +26,7 @@ static const char *const tables[] = {
     "%%MatrixMarket matrix array real general\n2 2\n1.25\nnan\n3\n-4.000\n",
     "t,a,b,c\nx,1,2.50,\ny,,1.000000000000000000001,0x\n", /* refused: replaced below */
     "time;north;south\n2024-01-01;1,5;2\n2024-01-02;;-3,250\n2024-01-03;7; 8\n",
-    "who,what,points\nMere,amber,4.5\n\"North, fen\",\"deep "
-    "\"\"red\"\"\",3.00\nMere,rust,007\n\"\xc3\x84lv\",amber,1e2\n",
+    "who,what,n\nMere,amber,4.5\n\"North, fen\",\"a \"\"b\"\"\",3.00\nMere,rust,007\n\"\xc3\x84lv\",rust,1e2\n",
     "a\tx\t1\nb\tx\t2\na\ty\t4.0\na\tx\t3\n",
     "row,column,value,sd\na,x,1.0,0.5\nb,x,2,1\nb,y,3,0.25\n",
 };
