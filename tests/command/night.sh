@@ -156,6 +156,23 @@ try 0 night dead.ini
 check "a deadline ends the fits" grep -q 'the time limit ended it before it was done' err
 check "with a result" test -e large/table-filled/run.json
 
+cat >haste.ini <<'PLAN'
+[haste]
+input = in/t1.mtx
+folds = 5
+PLAN
+try 0 night haste.ini
+echo 'deadline = 0.01' >>haste.ini
+try 0 night --again haste.ini
+check "when time is short cross-validation shrinks" grep -q '[0-9] folds of cross-validation, for want of time' err
+check "and the record says so" grep -q '"folds": "[02]"' in/t1-filled/run.json
+
+# ---- the sample plan --------------------------------------------------------------------------------------------------
+ln -s "$root/datasets-synthetic" datasets-synthetic
+cp "$root/scripts/sample-plan.ini" sample.ini
+try 0 night --list sample.ini
+check "the sample plan has its jobs" grep -q 'cider-panel .*, after fen-levels' out
+
 # ---- locks ------------------------------------------------------------------------------------------------------------
 "$FESCUE" night short.ini --for 60 2>first &
 child=$!

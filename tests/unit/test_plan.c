@@ -161,6 +161,27 @@ static void moments_are_read(void **state)
     assert_true(seconds > 0 && seconds <= 25 * 3600);
 }
 
+static void every_allocation_may_fail(void **state)
+{
+    struct bench *bench = bench_of(state);
+    bool met = true;
+    for (uint64_t n = 1; met; n++) {
+        struct plan plan = {0};
+        fault_plan(FAULT_TAKE, n, false, 0);
+        fescue_status status = plan_of(bench,
+                                       "[night]\nrank = 3\n[a]\ninput = x\n[b]\ninput = y\nafter = a\n"
+                                       "output = {name}-{name}\nmemory = 1G\n",
+                                       &plan);
+        met = fault_met();
+        fault_clear();
+        assert_int_equal(status, met ? FESCUE_NO_MEMORY : FESCUE_OK);
+        plan.context = bench->context;
+        plan_free(&plan);
+        assert_no_leak(bench->context);
+        fescue_failure_clear(bench->context);
+    }
+}
+
 int main(void)
 {
     const struct CMUnitTest tests[] = {BENCH_TEST(a_plan_is_read),
@@ -168,6 +189,7 @@ int main(void)
                                        BENCH_TEST(what_is_wrong_is_told),
                                        BENCH_TEST(a_long_line_is_not_cut),
                                        BENCH_TEST(every_option_of_fill_is_a_key),
-                                       BENCH_TEST(moments_are_read)};
+                                       BENCH_TEST(moments_are_read),
+                                       BENCH_TEST(every_allocation_may_fail)};
     return cmocka_run_group_tests_name("plan", tests, NULL, NULL);
 }
