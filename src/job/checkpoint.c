@@ -37,8 +37,14 @@ void options_words(const struct fescue_options *options, char text[OPTIONS_SIZE]
         char value[256];
         if (!option_is_bearing(&table[k]))
             continue;
-        fescue_option_text(&table[k], options, value, sizeof value);
-        option_line_add(text, &used, table[k].name, value);
+        const char *const *given = (const void *)((const char *)options + table[k].position);
+        bool is_text =
+            table[k].kind == FESCUE_KIND_TEXT; /* as in the record: of any length, and left out if not given */
+        if (is_text && *given == NULL)
+            continue;
+        if (!is_text)
+            fescue_option_text(&table[k], options, value, sizeof value);
+        option_line_add(text, &used, table[k].name, is_text ? *given : value);
     }
 }
 
