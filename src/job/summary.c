@@ -202,14 +202,14 @@ static void judged_lines(struct summary *summary)
 {
     const struct judgement *judgement = &summary->fill->judgement;
     struct text *text = &summary->text;
-    char rmse[32], mae[32], low[32], high[32], scattered[32], hidden[WORDS_SIZE];
+    char rmse[32], mae[32], low[32], high[32], scattered[32], hidden[WORDS_SIZE], folds[WORDS_SIZE];
     text_add(text, "error      RMSE %s", real_to_words(judgement->rmse, 4, rmse));
     if (isfinite(judgement->rmse_low))
         text_add(text, " (%s to %s)", real_to_words(judgement->rmse_low, 4, low),
                  real_to_words(judgement->rmse_high, 4, high));
     text_add(text, ", MAE %s expected over the unseen cells\n", real_to_words(judgement->mae, 4, mae));
-    text_add(text, "           from %s in %u folds%s\n", count_words(judgement->judged, "hidden cell", hidden),
-             judgement->scattered_folds + judgement->shaped_folds,
+    text_add(text, "           from %s in %s%s\n", count_words(judgement->judged, "hidden cell", hidden),
+             count_words(judgement->scattered_folds + judgement->shaped_folds, "fold", folds),
              judgement->is_cut ? " (the time limit left others out)" : "");
     shape_line(summary);
     if (judgement->shaped_folds > 0 && judgement->scattered_folds > 0)
