@@ -19,7 +19,9 @@
 static const double cells_wanted = 5000;
 enum { FOLDS_MOST = 5, SHAPED_MOST = 8, COLD_ROUNDS = 100, WARM_ROUNDS = 25, START_SIZE = 23 };
 /* Multiplications for all folds: some tens of seconds of one processor. */
-static const double work_most = 1e11, cold_most = 4e10;
+static const double work_most = 6e10, cold_most = 4e10;
+/* Following time takes about as much again for the series, and more for the steps. */
+static const double time_work = 3;
 
 /* Multiplications of one fold. */
 static double fold_work(const struct judge_request *request, bool is_warm)
@@ -29,7 +31,8 @@ static double fold_work(const struct judge_request *request, bool is_warm)
     double size = is_learnt && !is_warm ? START_SIZE : (double)request->model->low_rank.rank + 3;
     double lines = (double)cells->rows + (double)cells->columns, rounds = is_warm ? WARM_ROUNDS : COLD_ROUNDS;
     double cell = is_learnt ? size * size : 4 * size;
-    return rounds * ((double)cells->count * cell + (is_learnt ? lines * size * size * size / 2 : 0));
+    double follows = is_learnt && request->choice->learnt.time != NULL ? time_work : 1;
+    return follows * rounds * ((double)cells->count * cell + (is_learnt ? lines * size * size * size / 2 : 0));
 }
 
 static void folds_plan(const struct judge_request *request, struct judgement *judgement)
