@@ -32,8 +32,8 @@ static const struct strategy strategies[] = {
     {"patient growth", recover_growth, 0.001, 100}, {"slow ridge ladder", recover_ladder, 0.95, 3},
 };
 enum { STRATEGIES = sizeof strategies / sizeof *strategies, STRATEGIES_FIRST = 2 };
-/* Cells over unknowns: of 240 measured tables without noise that had more, the first two strategies found every one,
-   and with noise, or more rank than the table has, the others take ten times as long to end no better. */
+/* Cells over unknowns: with more, the first two strategies found every table without noise that was measured, and with
+   noise, or more rank than the table has, the others take ten times as long to end no better. */
 static const double scarce = 1.75;
 
 /* A finish: superlinear when it is near, hopeless when it is not. Below 1e-13 a gradient is rounding. */
