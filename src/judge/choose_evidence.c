@@ -109,7 +109,8 @@ static enum evidence_noise noise_lines(const struct chooser *chooser)
 }
 
 /* The winner's components again, under the noise and the time part that are asked for: takes its place when it has less
-   error. */
+   error. A fit that follows time has to have more error to be turned down: where nothing hangs together it learns so by
+   itself, and few hidden cells show what it is worth in rows of which all are missing. */
 static fescue_status learn_more(struct chooser *chooser, enum evidence_noise noise, const struct time_axis *time,
                                 struct candidate *winner)
 {
@@ -133,7 +134,9 @@ static fescue_status learn_more(struct chooser *chooser, enum evidence_noise noi
     start.time = winner->time;
     TRY(evidence_fit(chooser->context, kept, &request, &start, &result));
     TRY(candidate_take(chooser, &result, request.noise, &own));
-    if (candidate_beats(chooser, &own, winner, 1))
+    bool is_better =
+        time != NULL ? !candidate_beats(chooser, winner, &own, 1) : candidate_beats(chooser, &own, winner, 1);
+    if (is_better)
         candidate_swap(&own, winner);
 done:
     candidate_free(chooser, &own);
