@@ -24,7 +24,7 @@
 #include <string.h>
 
 /* Rounds after which the parts begin, and their first laws (above). */
-enum { RESIDUAL_ROUND = 1, CHAIN_ROUND = 5 };
+enum { RESIDUAL_ROUND = 2, CHAIN_ROUND = 12 };
 #define RESIDUAL_SHARE 0.3
 /* Low-rank part and residual go on exchanging what either explains long after the estimates have settled: rms change of
    estimates in a round, in standard deviations of the noise, that no error figure notices. */
