@@ -271,7 +271,7 @@ static bool is_over(struct evidence *evidence, const struct evidence_request *re
 {
     if (progress_tell(evidence->context, "evidence", -1) != FESCUE_OK)
         *stop = STOP_CANCELLED;
-    else if (change <= request->change || (evidence->time != NULL && evidence_time_settled(evidence)))
+    else if (change <= request->change || (evidence->time != NULL && evidence_time_settled(evidence, change)))
         *stop = STOP_CHANGE;
     else if (request->deadline > 0 && clock_wall() > request->deadline)
         *stop = STOP_TIME;

@@ -124,7 +124,8 @@ void evidence_time_close(struct evidence *evidence);
 /* Switches residual and chain on when their round has come; laws of a start that has a time part are taken over. */
 void evidence_time_begin(struct evidence *evidence, const struct model *start);
 void evidence_time_round(struct evidence *evidence, uint64_t round);
-bool evidence_time_settled(const struct evidence *evidence);
+/* Whether estimates that moved by `change` in the last round have settled as far as anybody can tell. */
+bool evidence_time_settled(const struct evidence *evidence, double change);
 fescue_status evidence_time_part(struct evidence *evidence, struct time_part *part);
 
 /* Takes the posterior mean of every series' residual off the targets of both halves, and learns the laws. */

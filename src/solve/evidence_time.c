@@ -239,9 +239,9 @@ void evidence_time_round(struct evidence *evidence, uint64_t round)
         evidence_residual_update(evidence);
 }
 
-bool evidence_time_settled(const struct evidence *evidence)
+bool evidence_time_settled(const struct evidence *evidence, double change)
 {
-    return evidence->time->chain_on && evidence->time->change <= SETTLED * sqrt(evidence->noise);
+    return evidence->time->chain_on && change <= SETTLED * sqrt(evidence->noise);
 }
 
 static void part_block(void *opaque, size_t block, size_t worker)
