@@ -61,7 +61,7 @@ class Worst:
 
 def build_driver(folder):
     driver = os.path.join(folder, "geometry_driver")
-    command = [os.environ.get("CC", "gcc"), "-std=c17", "-O1", "-D_GNU_SOURCE",
+    command = [*shlex.split(os.environ.get("CC", "gcc")), "-std=c17", "-O1", "-D_GNU_SOURCE",
                *shlex.split(os.environ.get("SANITIZE", "")),
                "-I" + os.path.join(ROOT, "src"), "-I" + os.path.join(ROOT, "src", "include"),
                os.path.join(ROOT, "tests", "reference", "geometry_driver.c"),

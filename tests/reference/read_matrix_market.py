@@ -33,7 +33,7 @@ def check(text, good):
 
 def build_driver(folder):
     driver = os.path.join(folder, "driver")
-    command = [os.environ.get("CC", "gcc"), "-std=c17", "-O1", "-D_GNU_SOURCE",
+    command = [*shlex.split(os.environ.get("CC", "gcc")), "-std=c17", "-O1", "-D_GNU_SOURCE",
                *shlex.split(os.environ.get("SANITIZE", "")),
                "-I" + os.path.join(ROOT, "src"), "-I" + os.path.join(ROOT, "src", "include"),
                os.path.join(ROOT, "tests", "reference", "read_matrix_market_driver.c"),

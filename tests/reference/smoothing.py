@@ -37,7 +37,7 @@ def check(text, got, want, tolerance=1e-8):
 
 def build_driver(folder):
     driver = os.path.join(folder, "smoothing_driver")
-    command = [os.environ.get("CC", "gcc"), "-std=c17", "-O1", "-D_GNU_SOURCE",
+    command = [*shlex.split(os.environ.get("CC", "gcc")), "-std=c17", "-O1", "-D_GNU_SOURCE",
                *shlex.split(os.environ.get("SANITIZE", "")),
                "-I" + os.path.join(ROOT, "src"), "-I" + os.path.join(ROOT, "src", "include"),
                os.path.join(ROOT, "tests", "reference", "smoothing_driver.c"),
