@@ -227,12 +227,13 @@ static void time_gain_line(struct summary *summary)
         return;
     real_to_words(choice->plain_errors.rmse, 4, plain);
     real_to_words(choice->interpolation_errors.rmse, 4, interpolation);
-    text_add(&summary->text, "           %s; low rank alone: RMSE %s, interpolation in time: %s\n",
+    text_add(&summary->text, "           %s; low rank alone: RMSE %s, interpolation in time: %s%s\n",
              !has_time && is_equal ? "time and unequal noise do not lower it"
              : !has_time           ? "that is with unequal noise"
              : is_equal            ? "that is with time"
                                    : "that is with time and unequal noise",
-             plain, interpolation);
+             plain, interpolation,
+             choice->interpolation_errors.rmse < choice->errors.rmse ? ", the least of them" : "");
 }
 
 static void error_lines(struct summary *summary)

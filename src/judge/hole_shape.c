@@ -118,7 +118,8 @@ fescue_status hole_shape_find(fescue_context *context, const struct cells *cells
         uint32_t empty = empty_lines(places);
         if (empty > 0) {
             *found = (struct hole_shape){.shape = FESCUE_HOLDOUT_GAPS, .along_columns = order->along_columns};
-            snprintf(found->why, sizeof found->why, "%u times have no cell at all", empty);
+            snprintf(found->why, sizeof found->why, "%u %s no cell at all", empty,
+                     empty == 1 ? "time has" : "times have");
         }
         TRY(along_try(context, cells, order, &share, found));
         return FESCUE_OK;
