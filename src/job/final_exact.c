@@ -17,10 +17,11 @@
 /* With more cells than this many times the unknowns the ordinary fit does not fail. */
 static const double scarce = 4;
 /* ... and with more than this many it is near enough to say whether there is noise: when its error on hidden cells is
-   above this share of what offsets leave, there is. */
+   above this share of what offsets leave, there is. So it is where the hidden cells chose the rank: one that they chose
+   in spite of such an error is there to lower noise. */
 static const double telling = 1.75, noisy = 0.1;
-/* cells x rank^2: some seconds for all starts. */
-static const double affordable = 3e8;
+/* cells x rank^2: up to some ten seconds for all starts. */
+static const double affordable = 1e8;
 /* Newton's steps square the error; what has not ended after these has lost its way. */
 enum { ITERATIONS = 60 };
 static const double rounding = 1e-13;
@@ -47,7 +48,8 @@ bool final_exact_may_help(const struct final_request *request)
     double rank = (double)rank_of(request), count = (double)cells->count;
     double unknowns = rank * ((double)cells->rows + (double)cells->columns - rank);
     bool ridge_allows = request->options->ridge == (double)FESCUE_AUTO || request->options->ridge == 0;
-    if (count >= telling * unknowns && is_noisy(request->choice))
+    bool is_told = request->options->rank == FESCUE_AUTO || count >= telling * unknowns;
+    if (is_told && is_noisy(request->choice))
         return false;
     return rank > 0 && ridge_allows && count > unknowns && count < scarce * unknowns &&
            count * rank * rank <= affordable;
