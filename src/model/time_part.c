@@ -31,6 +31,13 @@ done:
     return status;
 }
 
+/* An array of no length may be NULL. */
+static void part_copy(void *to, const void *from, size_t size)
+{
+    if (size > 0)
+        memcpy(to, from, size);
+}
+
 fescue_status time_part_copy(fescue_context *context, const struct time_part *from, struct time_part *to)
 {
     *to = (struct time_part){0};
@@ -41,12 +48,12 @@ fescue_status time_part_copy(fescue_context *context, const struct time_part *fr
     fescue_status status = time_part_create(context, &axis, from->series, count, from->components, to);
     if (status != FESCUE_OK)
         return status;
-    memcpy(to->start, from->start, ((size_t)from->series + 1) * sizeof *to->start);
-    memcpy(to->time, from->time, count * sizeof *to->time);
-    memcpy(to->mean, from->mean, count * sizeof *to->mean);
-    memcpy(to->law, from->law, from->series * sizeof *to->law);
-    memcpy(to->noise, from->noise, from->series * sizeof *to->noise);
-    memcpy(to->steps_law, from->steps_law, from->components * sizeof *to->steps_law);
+    part_copy(to->start, from->start, ((size_t)from->series + 1) * sizeof *to->start);
+    part_copy(to->time, from->time, count * sizeof *to->time);
+    part_copy(to->mean, from->mean, count * sizeof *to->mean);
+    part_copy(to->law, from->law, from->series * sizeof *to->law);
+    part_copy(to->noise, from->noise, from->series * sizeof *to->noise);
+    part_copy(to->steps_law, from->steps_law, from->components * sizeof *to->steps_law);
     return FESCUE_OK;
 }
 
