@@ -12,7 +12,7 @@
  *             each step, until it has settled. The start's own time counts, the measuring does not. The evidence fit by
  *             the number of its final rounds, each a run from nothing.
  *     fill    the whole job through the program's face, for every word of --solver, with --rank 10 --offsets none: it
- *             chooses the ridge, hides cells, judges, and fits all cells. One point each.
+ *             has a minute, chooses the ridge, hides cells, judges, and fits all cells. One point each.
  *
  * It is said how `auto` stands beside the best fill: its time over the shortest of those that come within one per cent
  * of auto's error (at most 1.5), its error over the least (at most 1.01); and the same of the times of the evidence
@@ -259,7 +259,7 @@ static double evidence_follow(struct bench *bench)
 
 static void options_make(struct bench *bench, const char *solver, struct fescue_options *options)
 {
-    static const char *const set[][2] = {{"rank", "10"}, {"offsets", "none"}, {"threads", "1"}};
+    static const char *const set[][2] = {{"rank", "10"}, {"offsets", "none"}, {"threads", "1"}, {"time-limit", "1m"}};
     fescue_options_standard(options);
     for (size_t k = 0; k < sizeof set / sizeof *set; k++)
         check(bench, fescue_options_set(bench->context, options, set[k][0], set[k][1]));
