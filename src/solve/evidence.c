@@ -145,10 +145,13 @@ static void evidence_start(struct evidence *evidence, const struct model *start,
         request->noise == EVIDENCE_NOISE_COLUMNS ? evidence->columns.line_precision : NULL;
     bool has_rows = request->offsets == FESCUE_OFFSETS_BOTH || request->offsets == FESCUE_OFFSETS_ROWS;
     bool has_columns = request->offsets == FESCUE_OFFSETS_BOTH || request->offsets == FESCUE_OFFSETS_COLUMNS;
-    for (size_t k = 0; k < rank; k++)
+    for (size_t k = 0; k < rank; k++) {
+        double *variance = &evidence->columns.variance[k];
+        *variance = *variance > 0 ? fmax(*variance, EVIDENCE_VARIANCE_LEAST) : 0;
         evidence->rows.variance[k] = 1;
+    }
     evidence->rows.variance[rank] = has_rows ? 1 : 0;
-    evidence->columns.variance[rank] = !has_columns ? 0 : effect > 0 ? effect : 1;
+    evidence->columns.variance[rank] = !has_columns ? 0 : effect > 0 ? fmax(effect, EVIDENCE_VARIANCE_LEAST) : 1;
 }
 
 /* Step 4, after the pass over `side`, whose lines have noise of their own when `own`. */

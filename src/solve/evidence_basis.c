@@ -29,9 +29,6 @@ size_t evidence_basis_scratch(size_t rank)
     return packed_congruence_work(rank + 2);
 }
 
-/* Of a pruned component; its reciprocal and the square of that are still numbers. */
-#define VARIANCE_LEAST 1e-60
-
 struct basis_job {
     struct evidence *evidence;
     struct evidence_side *side;
@@ -248,7 +245,7 @@ fescue_status evidence_basis_change(struct evidence *evidence)
     const double *w = evidence->basis_work + packed_size(rank);
     for (size_t k = 0; k < rank; k++) {
         rows->variance[k] = 1;
-        columns->variance[k] = fmax(w[k], VARIANCE_LEAST);
+        columns->variance[k] = fmax(w[k], EVIDENCE_VARIANCE_LEAST);
     }
     return FESCUE_OK;
 }

@@ -48,6 +48,10 @@ struct evidence {
 
 enum { EVIDENCE_ROUND_PRIOR = 8, EVIDENCE_ROUND_BASIS = 20, EVIDENCE_BASIS_EVERY = 5 };
 
+/* Prior variances do not fall below this: what is dying squares itself from round to round, and its reciprocal and the
+   square of that have to be numbers. */
+#define EVIDENCE_VARIANCE_LEAST 1e-60
+
 /* The regressors of a line, as the other side sees it: components 0 .. r-1, the constant, the effect. */
 static inline size_t evidence_one(const struct evidence *evidence)
 {

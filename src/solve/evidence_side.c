@@ -16,6 +16,7 @@
 #include "solve/evidence_internal.h"
 
 #include <assert.h>
+#include <math.h>
 #include <string.h>
 
 /* Precision that stands for "switched off": in units where cells have size one, no sum of cells comes near it. */
@@ -231,10 +232,11 @@ void evidence_side_prior(struct evidence *evidence, struct evidence_side *side)
     assert(lines > 0);
     for (size_t k = 0; k < rank; k++)
         if (side->variance[k] > 0)
-            side->variance[k] = sum[k] / lines;
+            side->variance[k] = fmax(sum[k] / lines, EVIDENCE_VARIANCE_LEAST);
     double *effect = side->variance + rank;
     if (*effect > 0) {
         double known = 1 - (sum[rank] - sum[rank + 1]) / (lines * *effect);
         *effect = known > KNOWN_LEAST ? sum[rank + 1] / lines / known : sum[rank] / lines;
+        *effect = fmax(*effect, EVIDENCE_VARIANCE_LEAST);
     }
 }

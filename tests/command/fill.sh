@@ -209,4 +209,9 @@ for file in one two; do
         check "$file gzip member(s): the same $result" cmp wide/$result packed-$file/$result
     done
 done
+
+# ---- effects that are not there: what is learnt of them dies out and leaves no number that is none ----------------------
+try 0 sow -q --rows 200 --columns 80 --rank 3 --seen 0.4 --noise 0.3 --seed 76 -o flat
+try 0 fill flat/table.mtx --folds 0 -o flat-filled
+denied "all estimates are numbers" grep -qiE 'nan|inf' flat-filled/filled.mtx
 finish
