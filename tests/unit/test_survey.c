@@ -5,8 +5,8 @@
 #include "judge/judge_internal.h"
 #include "support_table.h"
 
-#include <stdlib.h>
 #include <stdio.h>
+#include <stdlib.h>
 #include <string.h>
 
 /* A table of one figure a place: digits are values, anything else is a hole. Rows and columns are labelled when names
