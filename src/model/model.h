@@ -67,8 +67,6 @@ fescue_status time_part_copy(fescue_context *context, const struct time_part *fr
 void time_part_free(fescue_context *context, struct time_part *part);
 /* The residual at a cell: O(log seen). */
 double time_part_at(const struct time_part *part, uint32_t row, uint32_t column);
-/* Steps from a cell to the nearest seen cell of its series; infinite where the series has none. */
-double time_part_distance(const struct time_part *part, uint32_t row, uint32_t column);
 
 /* Seasons: waves of known frequencies, of which every series has amplitudes of its own, drawn towards common ones
    (season.c). */

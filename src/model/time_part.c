@@ -104,13 +104,3 @@ double time_part_at(const struct time_part *part, uint32_t row, uint32_t column)
         return part->mean[later - 1] * pow(law->correlation, when - part->time[later - 1]);
     return has_after ? part->mean[later] * pow(law->correlation, part->time[later] - when) : 0;
 }
-
-double time_part_distance(const struct time_part *part, uint32_t row, uint32_t column)
-{
-    uint32_t series = part->along == TIME_ROWS ? column : row;
-    double when = part->at[part->along == TIME_ROWS ? row : column];
-    uint64_t later = later_find(part, series, when);
-    double before = later > part->start[series] ? when - part->time[later - 1] : INFINITY;
-    double after = later < part->start[series + 1] ? part->time[later] - when : INFINITY;
-    return before < after ? before : after;
-}
