@@ -52,20 +52,21 @@ static void sums_fill(struct announcing *announcing, const struct judged *cells,
     const struct judgement *judgement = announcing->judgement;
     for (uint64_t c = 0; c < cells->count; c++) {
         uint32_t sensor = judgement->sensors_are_rows ? cells->row[c] : cells->column[c];
-        struct sums *sums = &announcing->sums[(size_t)sensor * JUDGE_BINS + stratum_of(announcing, cells->distance[c])];
-        double v = variance_at(&judgement->variance, cells->leverage[c], cells->distance[c], cells->marks[c]);
+        struct sums *sums =
+            &announcing->sums[(size_t)sensor * JUDGE_BINS + stratum_of(announcing, cells->at[c].distance)];
+        double v = variance_at(&judgement->variance, &cells->at[c]);
         v *= judgement->scale[sensor] * judgement->scale[sensor];
         if (!is_hidden) {
             sums->missing++;
-            sums->leverage += 1 + cells->leverage[c];
+            sums->leverage += 1 + cells->at[c].leverage;
             sums->variance += v;
             continue;
         }
         sums->hidden++;
-        sums->relative += cells->square[c] / (1 + cells->leverage[c]);
+        sums->relative += cells->square[c] / (1 + cells->at[c].leverage);
         sums->square += cells->square[c];
         sums->expected += v;
-        if (announcing->by_shape && !(cells->marks[c] & JUDGED_SHAPED))
+        if (announcing->by_shape && !(cells->at[c].marks & STANDING_SHAPED))
             continue;
         sums->shaped_square += cells->square[c];
         sums->shaped_expected += v;
@@ -199,7 +200,7 @@ static double rmse_where(const struct judged *pool, bool is_shaped)
 {
     double sum = 0, count = 0;
     for (uint64_t c = 0; c < pool->count; c++)
-        if (((pool->marks[c] & JUDGED_SHAPED) != 0) == is_shaped) {
+        if (((pool->at[c].marks & STANDING_SHAPED) != 0) == is_shaped) {
             sum += pool->square[c];
             count++;
         }
@@ -211,11 +212,9 @@ static double mae_find(const struct judgement *judgement, const struct judged *p
 {
     double size = 0, deviation = 0;
     for (uint64_t c = 0; c < pool->count; c++)
-        size += sqrt(pool->square[c] /
-                     variance_at(&judgement->variance, pool->leverage[c], pool->distance[c], pool->marks[c]));
+        size += sqrt(pool->square[c] / variance_at(&judgement->variance, &pool->at[c]));
     for (uint64_t c = 0; c < missing->count; c++)
-        deviation +=
-            sqrt(variance_at(&judgement->variance, missing->leverage[c], missing->distance[c], missing->marks[c]));
+        deviation += sqrt(variance_at(&judgement->variance, &missing->at[c]));
     return size / (double)pool->count * deviation / (double)missing->count;
 }
 
@@ -227,7 +226,7 @@ fescue_status announce(fescue_context *context, const struct judged *pool, const
     struct announcing announcing = {.judgement = judgement, .by_distance = judgement->variance.has_distance};
     struct sums total[JUDGE_BINS];
     for (uint64_t c = 0; c < pool->count; c++)
-        shaped += (pool->marks[c] & JUDGED_SHAPED) != 0;
+        shaped += (pool->at[c].marks & STANDING_SHAPED) != 0;
     announcing.by_shape = shaped >= SHAPED_LEAST;
     announcing.sensors = judgement->sensors_are_rows ? request->cells->rows : request->cells->columns;
     TRY(TAKE(context, (size_t)announcing.sensors * JUDGE_BINS, &announcing.sums));

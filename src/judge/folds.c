@@ -67,7 +67,7 @@ static fescue_status hidden_collect(fescue_context *context, const struct cells 
             pool->row[pool->count] = row;
             pool->column[pool->count] = hidden->by_row.across[k];
             pool->square[pool->count] = residuals[k] * residuals[k];
-            pool->marks[pool->count++] = (uint8_t)marks;
+            pool->at[pool->count++] = (struct standing){.weight = 1, .marks = marks};
         }
 done:
     GIVE(context, &residuals);
@@ -83,11 +83,11 @@ static fescue_status fold_judge(fescue_context *context, const struct judge_requ
     struct leverage leverage = {0};
     struct tracks tracks = {0};
     uint64_t from = pool->count;
-    unsigned marks = asked->shape == FESCUE_HOLDOUT_CELLS ? 0 : JUDGED_SHAPED;
+    unsigned marks = asked->shape == FESCUE_HOLDOUT_CELLS ? 0 : STANDING_SHAPED;
     TRY(holdout_cut(context, request->cells, asked, &holdout));
     TRY(relearn(context, &holdout.kept, request, judgement->is_warm, &learnt));
     TRY(leverage_create(context, &holdout.kept, &learnt.model, learnt.noise, learnt.lambda, &leverage));
-    struct judged_view view = {&holdout.kept, &leverage, NULL};
+    struct judged_view view = {&leverage, NULL, judgement->sensors_are_rows};
     if (judgement->tracks != NULL) {
         TRY(tracks_create(context, &holdout.kept, request->order, &tracks));
         view.tracks = &tracks;

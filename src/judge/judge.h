@@ -172,10 +172,15 @@ struct leverage {
 fescue_status leverage_create(fescue_context *context, const struct cells *cells, const struct model *model,
                               double noise, double lambda, struct leverage *leverage);
 double leverage_at(const struct leverage *leverage, uint32_t row, uint32_t column);
+/* Its two parts: of the row's coefficients, and of the column's. */
+struct leverage_parts {
+    double row, column;
+};
+struct leverage_parts leverage_parts_at(const struct leverage *leverage, uint32_t row, uint32_t column);
 void leverage_free(fescue_context *context, struct leverage *leverage);
 
 /* The expected squared error: a sum of terms with weights that are not negative (variance.c). */
-enum { VARIANCE_TERMS = 9, JUDGE_LEVELS = 4, JUDGE_BINS = 7 };
+enum { VARIANCE_TERMS = 10, JUDGE_LEVELS = 4, JUDGE_BINS = 7 };
 struct variance {
     double weight[VARIANCE_TERMS];
     double least; /* never below */

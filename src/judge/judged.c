@@ -1,8 +1,8 @@
 /* SPDX-License-Identifier: MIT
  *
- * A list of cells with what their errors depend on: leverage, distance to the nearest seen cell of the same sensor,
- * whether that lies on one side only, whether anything at all was seen at their place. The list of the cells that are
- * missing, or a sample of them.
+ * A list of cells with what their errors depend on: leverage and the sensor's part of it, distance to the nearest seen
+ * cell of the same sensor, whether that lies on one side only, whether anything at all was seen at their place. The
+ * list of the cells that are missing, or a sample of them.
  *
  * Cells are measured in pieces of fixed size over the team, each piece writing its own places.
  */
@@ -24,9 +24,7 @@ fescue_status judged_grow(fescue_context *context, uint64_t count, struct judged
     TRY(RESIZE(context, capacity, &judged->row));
     TRY(RESIZE(context, capacity, &judged->column));
     TRY(RESIZE(context, capacity, &judged->square));
-    TRY(RESIZE(context, capacity, &judged->leverage));
-    TRY(RESIZE(context, capacity, &judged->distance));
-    TRY(RESIZE(context, capacity, &judged->marks));
+    TRY(RESIZE(context, capacity, &judged->at));
     judged->capacity = capacity;
 done:
     return status;
@@ -37,9 +35,7 @@ void judged_free(fescue_context *context, struct judged *judged)
     GIVE(context, &judged->row);
     GIVE(context, &judged->column);
     GIVE(context, &judged->square);
-    GIVE(context, &judged->leverage);
-    GIVE(context, &judged->distance);
-    GIVE(context, &judged->marks);
+    GIVE(context, &judged->at);
     judged->count = judged->capacity = 0;
 }
 
@@ -49,22 +45,19 @@ struct measuring {
     uint64_t from;
 };
 
-/* Steps to the nearest place at which anything was seen; places without any cell are few, so a walk does. */
-static void cell_measure(const struct judged_view *view, struct judged *judged, uint64_t k)
+void standing_find(const struct judged_view *view, uint32_t row, uint32_t column, struct standing *standing)
 {
-    uint32_t row = judged->row[k], column = judged->column[k];
-    judged->leverage[k] = leverage_at(view->leverage, row, column);
-    judged->distance[k] = 0;
+    struct leverage_parts parts = leverage_parts_at(view->leverage, row, column);
+    standing->leverage = (float)(parts.row + parts.column);
+    standing->own = (float)(view->sensors_are_rows ? parts.row : parts.column);
+    standing->distance = 0;
     if (view->tracks == NULL)
         return;
-    bool is_one_sided, by_column = view->tracks->along_columns;
-    uint32_t sensor = by_column ? row : column, line = by_column ? column : row;
-    const struct half *places = by_column ? &view->seen->by_column : &view->seen->by_row;
-    judged->distance[k] = tracks_distance(view->tracks, sensor, view->tracks->placed[line], &is_one_sided);
-    if (is_one_sided)
-        judged->marks[k] |= JUDGED_ONE_SIDED;
-    if (places->start[line] == places->start[line + 1])
-        judged->marks[k] |= JUDGED_DARK;
+    bool is_one_sided;
+    uint32_t sensor = view->sensors_are_rows ? row : column, line = view->sensors_are_rows ? column : row;
+    uint32_t seen = view->sensors_are_rows ? view->leverage->column_count[line] : view->leverage->row_count[line];
+    standing->distance = (float)tracks_distance(view->tracks, sensor, view->tracks->placed[line], &is_one_sided);
+    standing->marks |= (is_one_sided ? STANDING_ONE_SIDED : 0u) | (seen == 0 ? STANDING_DARK : 0u);
 }
 
 static void piece_measure(void *job, size_t piece, size_t worker)
@@ -75,7 +68,8 @@ static void piece_measure(void *job, size_t piece, size_t worker)
     if (to > measuring->judged->count)
         to = measuring->judged->count;
     for (uint64_t k = from; k < to; k++)
-        cell_measure(measuring->view, measuring->judged, k);
+        standing_find(measuring->view, measuring->judged->row[k], measuring->judged->column[k],
+                      &measuring->judged->at[k]);
 }
 
 void judged_measure(fescue_context *context, const struct judged_view *view, uint64_t from, struct judged *judged)
@@ -90,7 +84,7 @@ static void missing_add(struct judged *judged, uint32_t row, uint32_t column)
     judged->row[judged->count] = row;
     judged->column[judged->count] = column;
     judged->square[judged->count] = 0;
-    judged->marks[judged->count++] = 0;
+    judged->at[judged->count++] = (struct standing){.weight = 1};
 }
 
 static bool is_seen(const struct half *by_row, uint32_t row, uint32_t column)

@@ -25,7 +25,7 @@ static fescue_status scores_rank(fescue_context *context, const struct judged *p
     TRY(TAKE(context, pool->count, &scores));
     for (uint64_t c = 0; c < pool->count; c++) {
         uint32_t sensor = judgement->sensors_are_rows ? pool->row[c] : pool->column[c];
-        double v = variance_at(&judgement->variance, pool->leverage[c], pool->distance[c], pool->marks[c]);
+        double v = variance_at(&judgement->variance, &pool->at[c]);
         scores[c] = v > 0 ? sqrt(pool->square[c] / v) / judgement->scale[sensor] : 0;
     }
     for (size_t l = 0; l < JUDGE_LEVELS; l++)
@@ -62,8 +62,9 @@ static fescue_status halfwidths_rank(fescue_context *context, const struct judge
     TRY(TAKE(context, cells->count, &widths));
     for (uint64_t c = 0; c < cells->count; c++) {
         uint32_t sensor = judgement->sensors_are_rows ? cells->row[c] : cells->column[c];
-        double v = variance_at(&judgement->variance, cells->leverage[c], cells->distance[c], cells->marks[c]);
-        widths[c] = judgement->quantile * tilt_at(judgement, cells->leverage[c]) * sqrt(v) * judgement->scale[sensor];
+        double v = variance_at(&judgement->variance, &cells->at[c]);
+        widths[c] =
+            judgement->quantile * tilt_at(judgement, cells->at[c].leverage) * sqrt(v) * judgement->scale[sensor];
     }
     judgement->halfwidth_low = order_pick(width_at, widths, cells->count, cells->count / 10);
     judgement->halfwidth_median = order_pick(width_at, widths, cells->count, cells->count / 2);
@@ -85,7 +86,7 @@ static fescue_status pool_judge(fescue_context *context, const struct judge_requ
     TRY(scales_fit(context, pool, judgement->tracks, judgement));
     TRY(scores_rank(context, pool, judgement));
     TRY(judged_missing(context, request->cells, (uint64_t)request->options->seed, &missing));
-    struct judged_view view = {request->cells, &judgement->leverage, judgement->tracks};
+    struct judged_view view = {&judgement->leverage, judgement->tracks, judgement->sensors_are_rows};
     judged_measure(context, &view, 0, &missing);
     /* With nothing missing the hidden cells speak for themselves. */
     TRY(announce(context, pool, missing.count > 0 ? &missing : pool, request, judgement));
@@ -140,18 +141,9 @@ double judgement_halfwidth(const struct judgement *judgement, uint32_t row, uint
 {
     if (!judgement->is_judged)
         return judgement->halfwidth;
-    const struct tracks *tracks = judgement->tracks;
-    uint32_t sensor = judgement->sensors_are_rows ? row : column, line = judgement->sensors_are_rows ? column : row;
-    double distance = 0;
-    unsigned marks = 0;
-    if (tracks != NULL) {
-        bool is_one_sided;
-        distance = tracks_distance(tracks, sensor, tracks->placed[line], &is_one_sided);
-        uint32_t seen =
-            judgement->sensors_are_rows ? judgement->leverage.column_count[line] : judgement->leverage.row_count[line];
-        marks = (is_one_sided ? JUDGED_ONE_SIDED : 0u) | (seen == 0 ? JUDGED_DARK : 0u);
-    }
-    double leverage = leverage_at(&judgement->leverage, row, column);
-    double v = variance_at(&judgement->variance, leverage, distance, marks);
-    return judgement->quantile * tilt_at(judgement, leverage) * sqrt(v) * judgement->scale[sensor];
+    const struct judged_view view = {&judgement->leverage, judgement->tracks, judgement->sensors_are_rows};
+    struct standing at = {.weight = 1};
+    standing_find(&view, row, column, &at);
+    return judgement->quantile * tilt_at(judgement, at.leverage) * sqrt(variance_at(&judgement->variance, &at)) *
+           judgement->scale[judgement->sensors_are_rows ? row : column];
 }

@@ -4,7 +4,8 @@
  *
  *   relearn      the chosen model learnt again from other cells
  *   leverage     how far an estimate leans on few cells
- *   judged       a list of cells with what their errors depend on
+ *   standing     what the error of a cell depends on
+ *   judged       a list of cells with that
  *   folds        hiding, learning again, collecting errors
  *   variance     the squared error as a function of leverage and distance
  *   tilt         scores whose shape changes with leverage
@@ -34,27 +35,36 @@ void relearnt_free(fescue_context *context, struct relearnt *relearnt);
 
 /* ---- judged cells ------------------------------------------------------------------------------------------------ */
 
-/* Cells and what their errors depend on; square is of the error, 0 where it is not known. */
+/* What the error of a cell depends on. */
+enum standing_mark {
+    STANDING_ONE_SIDED = 1, /* its sensor was not seen before, or not after */
+    STANDING_DARK = 2,      /* nothing was seen at its place */
+    STANDING_SHAPED = 4     /* hidden in the shape of the holes; else scattered */
+};
+struct standing {
+    float leverage, own; /* whole, and the part of the sensor's coefficients */
+    float distance;      /* steps to the nearest seen cell of its sensor; 0 where nothing is known of any */
+    float weight;        /* of its reading: noise has the variance of a reading of weight one over this */
+    unsigned marks;
+};
+/* Cells and how they stand; square is of the error, 0 where it is not known. */
 struct judged {
     uint64_t count, capacity;
     uint32_t *row, *column;
-    double *square, *leverage, *distance;
-    uint8_t *marks;
-};
-enum judged_mark {
-    JUDGED_ONE_SIDED = 1, /* its sensor was not seen before, or not after */
-    JUDGED_DARK = 2,      /* nothing was seen at its place */
-    JUDGED_SHAPED = 4     /* hidden in the shape of the holes; else scattered */
+    double *square;
+    struct standing *at;
 };
 fescue_status judged_grow(fescue_context *context, uint64_t count, struct judged *judged);
 void judged_free(fescue_context *context, struct judged *judged);
-/* Leverage, distance and marks of the cells from `from` on, as they stand to the cells that were seen. tracks may be
-   NULL: no distance, which is 0 then. */
+/* How a cell stands to the cells that leverage and tracks were made of, but for its weight; marks are added to. tracks
+   may be NULL: no distance. */
 struct judged_view {
-    const struct cells *seen;
     const struct leverage *leverage;
     const struct tracks *tracks;
+    bool sensors_are_rows;
 };
+void standing_find(const struct judged_view *view, uint32_t row, uint32_t column, struct standing *standing);
+/* The same of the cells from `from` on. */
 void judged_measure(fescue_context *context, const struct judged_view *view, uint64_t from, struct judged *judged);
 /* The unseen cells, or as many drawn at random where there are very many. */
 fescue_status judged_missing(fescue_context *context, const struct cells *cells, uint64_t seed, struct judged *judged);
@@ -66,7 +76,7 @@ fescue_status folds_run(fescue_context *context, const struct judge_request *req
 /* ---- variance and error ------------------------------------------------------------------------------------------ */
 
 void variance_fit(const struct judged *pool, bool has_distance, struct variance *variance);
-double variance_at(const struct variance *variance, double leverage, double distance, unsigned marks);
+double variance_at(const struct variance *variance, const struct standing *at);
 /* The scale of each sensor's errors, shrunk towards 1. */
 fescue_status scales_fit(fescue_context *context, const struct judged *pool, const struct tracks *tracks,
                          struct judgement *judgement);

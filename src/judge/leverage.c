@@ -166,16 +166,25 @@ static double form_value(const double *packed, const double *factor, size_t size
     return sum;
 }
 
-double leverage_at(const struct leverage *leverage, uint32_t row, uint32_t column)
+struct leverage_parts leverage_parts_at(const struct leverage *leverage, uint32_t row, uint32_t column)
 {
+    struct leverage_parts parts = {(double)leverage->size / (leverage->row_count[row] + 1.),
+                                   (double)leverage->size / (leverage->column_count[column] + 1.)};
     size_t size = leverage->size, packed = packed_size(size);
     const struct low_rank *point = &leverage->model->low_rank;
     if (leverage->row_inverse == NULL || leverage->column_inverse == NULL)
-        return (double)size / (leverage->row_count[row] + 1.) + (double)size / (leverage->column_count[column] + 1.);
-    return form_value(leverage->row_inverse + row * packed, point->right.data + column * point->right.stride, size,
-                      leverage->has_rows ? 1 : 0) +
-           form_value(leverage->column_inverse + column * packed, point->left.data + row * point->left.stride, size,
-                      leverage->has_columns ? 1 : 0);
+        return parts;
+    parts.row = form_value(leverage->row_inverse + row * packed, point->right.data + column * point->right.stride, size,
+                           leverage->has_rows ? 1 : 0);
+    parts.column = form_value(leverage->column_inverse + column * packed, point->left.data + row * point->left.stride,
+                              size, leverage->has_columns ? 1 : 0);
+    return parts;
+}
+
+double leverage_at(const struct leverage *leverage, uint32_t row, uint32_t column)
+{
+    struct leverage_parts parts = leverage_parts_at(leverage, row, column);
+    return parts.row + parts.column;
 }
 
 void leverage_free(fescue_context *context, struct leverage *leverage)

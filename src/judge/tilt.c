@@ -69,7 +69,7 @@ fescue_status tilt_fit(fescue_context *context, const struct judged *pool, doubl
     TRY(TAKE(context, count, &share));
     TRY(TAKE(context, count, &some));
     for (uint64_t c = 0; c < count; c++)
-        share[c] = 1 / (1 + pool->leverage[c]);
+        share[c] = 1 / (1 + pool->at[c].leverage);
     for (size_t g = 0; g < GROUPS; g++)
         edge[g] = order_pick(value_at, share, count, g * count / GROUPS);
     edge[0] = -INFINITY;
@@ -88,7 +88,7 @@ fescue_status tilt_fit(fescue_context *context, const struct judged *pool, doubl
     }
     line_fit(x, y, GROUPS, judgement);
     for (uint64_t c = 0; c < count; c++)
-        scores[c] /= tilt_at(judgement, pool->leverage[c]);
+        scores[c] /= tilt_at(judgement, pool->at[c].leverage);
 done:
     GIVE(context, &share);
     GIVE(context, &some);

@@ -3,7 +3,7 @@
  * The expected squared error of a cell as a sum of terms with weights that are not negative,
  *
  *     V = w_0 + w_1 lev + w_2 sqrt(lev) + sum over q of w_q (1 - exp(-(d - 1)/q)) + w_6 [one-sided]
- *         + [dark] sum over q of w_q (1 - exp(-d/q))
+ *         + [dark] sum over q of w_q (1 - exp(-d/q)) + w_9 own (1 - exp(-(d - 1)/30))
  *
  *     symbol       what it is
  *     lev          leverage (leverage.c); its root stands in where the error grows more slowly than the leverage of a
@@ -11,6 +11,10 @@
  *     d            steps to the nearest seen cell of the same sensor; q = 3, 30, 300
  *     one-sided    the sensor was not seen before, or not after
  *     dark         nothing was seen at the cell's place; q = 3, 30
+ *     own          the part of lev that the sensor's own coefficients have. It takes the errors of the sensor's cells
+ * for independent; where they hang together in time, as those of a sensor that moves slowly on its own do, the
+ * coefficients are worse by as much as such errors are fewer. That shows away from seen cells only, near which the same
+ * movement is in the estimate
  *
  * fitted to the pooled squared errors y of the folds. The spread of y grows with its mean, so the terms are fitted by
  * least squares under weights 1/V^2, which V itself gives: four rounds, the first with V constant (iteratively
@@ -18,9 +22,9 @@
  * its V is cut to that, 7 standard deviations, so that a few wild cells do not bend the surface; what that takes away
  * comes back with the quantile of |error| / sqrt(V).
  *
- * Weights not below 0: coordinate descent on the normal equations (9 x 9), each step the exact minimum over one weight;
- * it converges for any such problem (Luo, Tseng 1992, "On the convergence of the coordinate descent method for convex
- * differentiable minimization").
+ * Weights not below 0: coordinate descent on the normal equations (10 x 10), each step the exact minimum over one
+ * weight; it converges for any such problem (Luo, Tseng 1992, "On the convergence of the coordinate descent method for
+ * convex differentiable minimization").
  *
  * The scale of a sensor: with x = y / V (mean 1 over all), r_j its mean over the n_j scattered cells of sensor j (those
  * of a gap hang together, and few gaps differ by chance as much as if sensors did), k the kurtosis within sensors, r_j
@@ -40,24 +44,26 @@ static const double wild = 50;
 /* V is not believed below this share of the mean squared error: the terms are a summary. */
 static const double least_share = 0.01;
 
-static void terms_set(bool has_distance, double leverage, double distance, unsigned marks, double *term)
+static void terms_set(bool has_distance, const struct standing *at, double *term)
 {
-    double beyond = has_distance ? fmax(distance - 1, 0) : 0, dark = has_distance && (marks & JUDGED_DARK) ? 1 : 0;
+    double beyond = has_distance ? fmax(at->distance - 1., 0) : 0;
+    double dark = has_distance && (at->marks & STANDING_DARK) ? 1 : 0;
     term[0] = 1;
-    term[1] = leverage;
-    term[2] = sqrt(leverage);
+    term[1] = at->leverage;
+    term[2] = sqrt(at->leverage);
     term[3] = 1 - exp(-beyond / 3);
     term[4] = 1 - exp(-beyond / 30);
     term[5] = 1 - exp(-beyond / 300);
-    term[6] = has_distance && (marks & JUDGED_ONE_SIDED) ? 1 : 0;
+    term[6] = has_distance && (at->marks & STANDING_ONE_SIDED) ? 1 : 0;
     term[7] = dark * (1 - exp(-(beyond + 1) / 3));
     term[8] = dark * (1 - exp(-(beyond + 1) / 30));
+    term[9] = at->own * term[4];
 }
 
-double variance_at(const struct variance *variance, double leverage, double distance, unsigned marks)
+double variance_at(const struct variance *variance, const struct standing *at)
 {
     double term[VARIANCE_TERMS], sum = 0;
-    terms_set(variance->has_distance, leverage, distance, marks, term);
+    terms_set(variance->has_distance, at, term);
     for (size_t k = 0; k < VARIANCE_TERMS; k++)
         sum += variance->weight[k] * term[k];
     return fmax(sum, variance->least);
@@ -79,9 +85,9 @@ static void round_fit(const struct judged *pool, bool is_first, double mean, str
 {
     double gram[VARIANCE_TERMS][VARIANCE_TERMS] = {{0}}, side[VARIANCE_TERMS] = {0}, term[VARIANCE_TERMS];
     for (uint64_t c = 0; c < pool->count; c++) {
-        double fit = is_first ? mean : variance_at(variance, pool->leverage[c], pool->distance[c], pool->marks[c]);
+        double fit = is_first ? mean : variance_at(variance, &pool->at[c]);
         double y = fmin(pool->square[c], wild * fit), weight = mean * mean / (fit * fit);
-        terms_set(variance->has_distance, pool->leverage[c], pool->distance[c], pool->marks[c], term);
+        terms_set(variance->has_distance, &pool->at[c], term);
         for (size_t k = 0; k < VARIANCE_TERMS; k++) {
             side[k] += weight * y * term[k];
             for (size_t l = 0; l < VARIANCE_TERMS; l++)
@@ -114,9 +120,9 @@ static void spreads_fill(const struct judged *pool, const struct judgement *judg
 {
     static const double cut = 25; /* five standard deviations: one cell does not make a noisy sensor */
     for (uint64_t c = 0; c < pool->count; c++) {
-        if (pool->marks[c] & JUDGED_SHAPED)
+        if (pool->at[c].marks & STANDING_SHAPED)
             continue;
-        double v = variance_at(&judgement->variance, pool->leverage[c], pool->distance[c], pool->marks[c]);
+        double v = variance_at(&judgement->variance, &pool->at[c]);
         double x = fmin(pool->square[c] / v, cut);
         struct spread *of = &spread[judgement->sensors_are_rows ? pool->row[c] : pool->column[c]];
         of->count++;

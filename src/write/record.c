@@ -274,9 +274,9 @@ static struct record choice_record(const struct run *run)
 
 static struct record variance_record(const struct run *run)
 {
-    static const char *const terms[VARIANCE_TERMS] = {"constant",   "leverage",    "leverage_root",
-                                                      "distance_3", "distance_30", "distance_300",
-                                                      "one_sided",  "dark_3",      "dark_30"};
+    static const char *const terms[VARIANCE_TERMS] = {"constant",    "leverage",       "leverage_root", "distance_3",
+                                                      "distance_30", "distance_300",   "one_sided",     "dark_3",
+                                                      "dark_30",     "own_leverage_30"};
     const struct variance *variance = &run->judgement->variance;
     struct record record = record_open(run->context);
     for (size_t k = 0; k < VARIANCE_TERMS; k++)

@@ -125,10 +125,13 @@ static void judged_sow(fescue_context *context, const struct variance *law, cons
     for (uint64_t c = 0; c < JUDGED; c++) {
         judged->row[c] = (uint32_t)c;
         judged->column[c] = (uint32_t)(c % SENSORS);
-        judged->leverage[c] = 0.05 + 2 * pow(random_uniform(&random), 3);
-        judged->distance[c] = floor(exp(5 * random_uniform(&random)));
-        judged->marks[c] = random_uniform(&random) < 0.2 ? JUDGED_ONE_SIDED : 0;
-        double v = variance_at(law, judged->leverage[c], judged->distance[c], judged->marks[c]);
+        double leverage = 0.05 + 2 * pow(random_uniform(&random), 3), share = random_uniform(&random);
+        judged->at[c] = (struct standing){.leverage = (float)leverage,
+                                          .own = (float)(share * leverage),
+                                          .distance = (float)floor(exp(5 * random_uniform(&random))),
+                                          .weight = 1,
+                                          .marks = random_uniform(&random) < 0.2 ? STANDING_ONE_SIDED : 0};
+        double v = variance_at(law, &judged->at[c]);
         double e = random_normal(&random) * sqrt(v) * sensor[c % SENSORS];
         judged->square[c] = e * e;
     }
@@ -138,7 +141,7 @@ static void judged_sow(fescue_context *context, const struct variance *law, cons
 static void the_surface_is_found_again(void **state)
 {
     fescue_context *context = bench_of(state)->context;
-    const struct variance law = {.weight = {1, 2, 0, 0, 3, 0, 0.5}, .has_distance = true};
+    const struct variance law = {.weight = {1, 2, 0, 0, 3, 0, 0.5, 0, 0, 4}, .has_distance = true};
     struct variance found;
     struct judged judged;
     double sensor[SENSORS];
@@ -147,15 +150,19 @@ static void the_surface_is_found_again(void **state)
     judged_sow(context, &law, sensor, &judged);
     variance_fit(&judged, true, &found);
     /* 20 000 squared errors of relative spread sqrt 2: a mean over a tenth of them is known to 3 % */
-    for (double lev = 0.1; lev < 2; lev += 0.3)
-        for (double d = 1; d < 100; d *= 3) {
-            double v = variance_at(&law, lev, d, 0);
-            assert_true(fabs(variance_at(&found, lev, d, 0) / v - 1) < 0.12);
-        }
+    for (float lev = 0.1f; lev < 2; lev += 0.3f)
+        for (float d = 1; d < 100; d *= 3)
+            for (float share = 0.1f; share < 1; share += 0.4f) {
+                struct standing at = {.leverage = lev, .own = share * lev, .distance = d, .weight = 1};
+                assert_true(fabs(variance_at(&found, &at) / variance_at(&law, &at) - 1) < 0.12);
+            }
     for (size_t k = 0; k < VARIANCE_TERMS; k++)
         assert_true(found.weight[k] >= 0);
     variance_fit(&judged, false, &found);
-    assert_close(variance_at(&found, 0.5, 1, 0), variance_at(&found, 0.5, 100, JUDGED_ONE_SIDED), 0);
+    struct standing near = {.leverage = 0.5f, .distance = 1, .weight = 1}, far = near;
+    far.distance = 100;
+    far.marks = STANDING_ONE_SIDED;
+    assert_close(variance_at(&found, &near), variance_at(&found, &far), 0);
     judged_free(context, &judged);
 }
 
@@ -195,7 +202,7 @@ static void scores_tilt_where_their_shape_changes(void **state)
         struct judgement judgement = {.level = 0.5};
         for (uint64_t c = 0; c < JUDGED; c++) {
             double x = 0.05 + 0.9 * random_uniform(&random);
-            judged.leverage[c] = 1 / x - 1;
+            judged.at[c].leverage = (float)(1 / x - 1);
             scores[c] = (tilted ? 1 - x / 2 : 1) * fabs(random_normal(&random));
         }
         assert_status(context, tilt_fit(context, &judged, scores, &judgement), FESCUE_OK);
