@@ -19,7 +19,7 @@ SANITIZE ?=
 WARNINGS = -Wall -Wextra -Wconversion -Wshadow -Wmissing-prototypes -Wstrict-prototypes -Wvla -Werror
 CFLAGS = -std=c17 -O3 -g -D_GNU_SOURCE -pthread -fno-math-errno -ffp-contract=off $(WARNINGS) $(SANITIZE) \
          -Isrc -Isrc/include -I/usr/include/suitesparse $(EXTRA)
-LIBS = -lcholmod -lamd -lcolamd -lsuitesparseconfig -llapacke -lopenblas -ljansson -linih -lsqlite3 -lz -lm -pthread
+LIBS = -lcholmod -lamd -lcolamd -lsuitesparseconfig -llapacke -lopenblas -ljansson -linih -lsqlite3 -lisal -lz -lm -pthread
 
 FOLDERS = base table numeric manifold model solve judge write job night
 LIBRARY_SOURCES = $(foreach f,$(FOLDERS),$(wildcard src/$(f)/*.c))

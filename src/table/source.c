@@ -5,22 +5,18 @@
  *     disk      what was read last and is not handed out: [at, got). Plain bytes that fill a whole DISK_SIZE go past
  * it.
  *
- * A gzip file is a row of members (RFC 1952, section 2.2). They are inflated one after the other with zlib; its own
- * file layer is not used because it takes a damaged or cut file for a short one, or for text.
+ * gunzip.c inflates.
  *
  * What is wrong with compressed data is kept and not told: text from before it may still be on its way, and may hold a
  * fault of its own, which comes first. Whoever has read all text asks source_tell for the sentence.
  */
 #include "table/table_internal.h"
 
-#include <limits.h>
+#include <isa-l/crc.h>
 #include <stdio.h>
 #include <string.h>
 
-enum {
-    DISK_SIZE = 1 << 18,  /* large enough that system calls cost nothing beside the parsing */
-    GZIP_WINDOW = 15 + 16 /* zlib: the largest window, and a gzip header */
-};
+enum { DISK_SIZE = 1 << 18 }; /* large enough that system calls cost nothing beside the parsing */
 
 void source_told(const struct source *source, uint32_t *crc32, uint64_t *bytes)
 {
@@ -36,7 +32,7 @@ static fescue_status bytes_read(struct source *source, void *to, size_t room, si
     fescue_status status = file_read(source->context, source->path, source->descriptor, to, room, got);
     if (status != FESCUE_OK)
         return status;
-    source->crc32 = (uint32_t)crc32_z(source->crc32, to, *got);
+    source->crc32 = crc32_gzip_refl(source->crc32, to, *got);
     source->disk_bytes += *got;
     source->disk_ended = *got == 0;
     return FESCUE_OK;
@@ -63,75 +59,23 @@ static fescue_status disk_refill(struct source *source)
     return bytes_read(source, source->disk, DISK_SIZE, &source->got);
 }
 
-/* ---- gzip ------------------------------------------------------------------------------------------------------- */
-
-/* zlib's memory is ours too, so that it is counted and can be refused. */
-static voidpf zlib_take(voidpf context, uInt count, uInt size)
-{
-    void *block;
-    return memory_take(context, count, size, &block) == FESCUE_OK ? block : Z_NULL;
-}
-
-static void zlib_give(voidpf context, voidpf block)
-{
-    memory_give(context, &block);
-}
-
-static fescue_status gzip_open(struct source *source)
-{
-    source->is_gzip = true;
-    source->inflate.zalloc = zlib_take;
-    source->inflate.zfree = zlib_give;
-    source->inflate.opaque = source->context;
-    int result = inflateInit2(&source->inflate, GZIP_WINDOW);
-    if (result != Z_OK) /* zlib's version was checked when we were linked: what is left is memory */
-        return FAIL(source->context, FESCUE_NO_MEMORY, "%s: no memory to inflate it", source->name);
-    source->inflate_open = true;
-    source->in_member = true;
-    return FESCUE_OK;
-}
-
-/* What inflate's result says is wrong with the data. */
-static const char *gzip_complaint(struct source *source, int result)
-{
-    const char *cause = source->inflate.msg != NULL ? source->inflate.msg : "";
-    if (result == Z_NEED_DICT)
-        cause = "a preset dictionary is asked for";
-    if (strcmp(cause, "incorrect header check") == 0) /* the first member's header was seen when the file was opened */
-        return "the gzip data are followed by bytes that are not gzip";
-    if (strcmp(cause, "incorrect data check") == 0)
-        return "the gzip check sum does not match what was inflated: the file is damaged";
-    if (strcmp(cause, "incorrect length check") == 0)
-        return "the gzip length does not match what was inflated: the file is damaged";
-    snprintf(source->complaint_text, sizeof source->complaint_text, "the gzip data are damaged (%s)", cause);
-    return source->complaint_text;
-}
-
-/* Inflates from the disk block, which is not empty, to `to`. */
-static fescue_status gzip_step(struct source *source, char *to, size_t room, size_t *made)
-{
-    z_stream *inflating = &source->inflate;
-    uInt given = (uInt)(source->got - source->at), space = room < UINT_MAX ? (uInt)room : UINT_MAX;
-    if (!source->in_member)
-        inflateReset(inflating);
-    source->in_member = true;
-    inflating->next_in = source->disk + source->at;
-    inflating->avail_in = given;
-    inflating->next_out = (unsigned char *)to;
-    inflating->avail_out = space;
-    int result = inflate(inflating, Z_NO_FLUSH);
-    source->at += given - inflating->avail_in;
-    *made = space - inflating->avail_out;
-    if (result == Z_MEM_ERROR)
-        return FAIL(source->context, FESCUE_NO_MEMORY, "%s: no memory to inflate it", source->name);
-    if (result == Z_STREAM_END)
-        source->in_member = false;
-    else if (result != Z_OK && result != Z_BUF_ERROR) /* Z_BUF_ERROR: more input or room is needed, as usual */
-        source->complaint = gzip_complaint(source, result);
-    return FESCUE_OK;
-}
-
 /* ---- text ------------------------------------------------------------------------------------------------------- */
+
+/* Inflates from the disk block. At the end of the file it is empty, but there may still be text on its way. */
+static void gzip_read(struct source *source, char *to, size_t room, size_t *made)
+{
+    struct gunzip_bytes bytes = {
+        .in = source->disk + source->at, .given = source->got - source->at, .to = to, .room = room};
+    bool is_last = bytes.given == 0;
+    source->complaint = gunzip_step(source->gunzip, &bytes);
+    source->at += bytes.taken;
+    *made = bytes.made;
+    if (source->complaint != NULL || !is_last || bytes.made > 0 || !gunzip_in_member(source->gunzip))
+        return;
+    snprintf(source->complaint_text, sizeof source->complaint_text,
+             "the gzip data end in the middle: the file is truncated after %" PRIu64 " bytes", source->disk_bytes);
+    source->complaint = source->complaint_text;
+}
 
 fescue_status source_read(struct source *source, char *to, size_t room, size_t *made)
 {
@@ -142,18 +86,14 @@ fescue_status source_read(struct source *source, char *to, size_t room, size_t *
         return FESCUE_OK;
     }
     TRY(disk_refill(source));
-    if (source->at == source->got) {
-        if (source->is_gzip && source->in_member) {
-            snprintf(source->complaint_text, sizeof source->complaint_text,
-                     "the gzip data end in the middle: the file is truncated after %" PRIu64 " bytes",
-                     source->disk_bytes);
-            source->complaint = source->complaint_text;
-        }
+    if (source->at == source->got && !(source->is_gzip && gunzip_in_member(source->gunzip))) {
         source->ended = true;
         return FESCUE_OK;
     }
-    if (source->is_gzip)
-        return gzip_step(source, to, room, made);
+    if (source->is_gzip) {
+        gzip_read(source, to, room, made);
+        return FESCUE_OK;
+    }
     *made = source->got - source->at < room ? source->got - source->at : room;
     memcpy(to, source->disk + source->at, *made);
     source->at += *made;
@@ -207,7 +147,8 @@ static fescue_status kind_find(struct source *source)
     TRY(source_look(source, ENOUGH));
     TRY(strangers_refuse(source));
     if (source->got >= sizeof gzip && memcmp(source->disk, gzip, sizeof gzip) == 0)
-        TRY(gzip_open(source));
+        TRY(gunzip_open(source->context, &source->gunzip));
+    source->is_gzip = source->gunzip != NULL;
 done:
     return status;
 }
@@ -226,9 +167,7 @@ done:
 
 void source_close(struct source *source)
 {
-    if (source->inflate_open)
-        inflateEnd(&source->inflate);
-    source->inflate_open = false;
+    GIVE(source->context, &source->gunzip);
     file_close(source->context, &source->descriptor);
     GIVE(source->context, &source->disk);
 }

@@ -8,7 +8,6 @@
 #include "table/table.h"
 
 #include <inttypes.h>
-#include <zlib.h>
 
 /* Rows and columns are counted in 32 bits, and one number is kept free to mean "none". */
 #define TABLE_MOST_LINES (UINT32_MAX - 1)
@@ -99,6 +98,20 @@ void half_free(fescue_context *context, struct half *half);
 fescue_status cells_finish(fescue_context *context, enum fescue_duplicates duplicates, bool is_ascending,
                            struct cells *cells, uint64_t *merged);
 
+/* ---- gunzip ------------------------------------------------------------------------------------------------------ */
+
+struct gunzip; /* given back by GIVE */
+struct gunzip_bytes {
+    const unsigned char *in;
+    char *to;
+    size_t given, room, taken, made;
+};
+fescue_status gunzip_open(fescue_context *context, struct gunzip **out);
+/* Inflates what is given, as far as there is room; NULL, or what is wrong with the data. Without a complaint it takes
+   or makes something while something is given, or is on its way, and there is room. */
+const char *gunzip_step(struct gunzip *gunzip, struct gunzip_bytes *bytes);
+bool gunzip_in_member(const struct gunzip *gunzip); /* between the first and the last byte of a member */
+
 /* ---- source: bytes of a plain or gzip file -------------------------------------------------------------------------
  */
 
@@ -111,9 +124,8 @@ struct source {
     bool disk_ended, ended; /* nothing more comes from the disk; nothing more is made of it */
     uint64_t disk_bytes;
     uint32_t crc32;
-    bool is_gzip, inflate_open;
-    bool in_member; /* between the first and the last byte of a gzip member */
-    z_stream inflate;
+    bool is_gzip;
+    struct gunzip *gunzip; /* NULL: plain */
     const char *complaint; /* what is wrong with compressed data; NULL: nothing so far */
     char complaint_text[96];
 };

@@ -24,7 +24,7 @@ import scipy.linalg as sla
 ROOT = os.path.dirname(os.path.dirname(os.path.dirname(os.path.abspath(__file__))))
 BUILD = os.path.join(ROOT, os.environ.get("BUILD", "build"))
 SEED = int(os.environ.get("TEST_SEED", "49"))
-LIBRARIES = "-lcholmod -lamd -lcolamd -lsuitesparseconfig -llapacke -lopenblas -ljansson -lz -lm -pthread"
+LIBRARIES = "-lcholmod -lamd -lcolamd -lsuitesparseconfig -llapacke -lopenblas -ljansson -lisal -lz -lm -pthread"
 TINY = 1e-13  # for numbers of size one at these sizes: some hundred roundings
 
 GRASSMANN = [(1, 1), (2, 1), (9, 1), (7, 3), (6, 6), (5, 4), (33, 20), (60, 9)]

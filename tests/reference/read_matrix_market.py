@@ -19,7 +19,7 @@ ROOT = os.path.dirname(os.path.dirname(os.path.dirname(os.path.abspath(__file__)
 BUILD = os.path.join(ROOT, os.environ.get("BUILD", "build"))
 FESCUE = os.environ.get("FESCUE", os.path.join(BUILD, "fescue"))
 SEED = int(os.environ.get("TEST_SEED", "31"))
-LIBRARIES = "-lcholmod -lamd -lcolamd -lsuitesparseconfig -llapacke -lopenblas -ljansson -lz -lm -pthread"
+LIBRARIES = "-lcholmod -lamd -lcolamd -lsuitesparseconfig -llapacke -lopenblas -ljansson -lisal -lz -lm -pthread"
 
 tests = failures = 0
 

@@ -188,14 +188,15 @@ static void damage_is_named(void **state)
     size_t count = 0;
     gzip_append(&bytes, &count, "a\nb\nc\n", 6);
     bytes[count - 8] ^= 1; /* RFC 1952: the last eight bytes are CRC32 and length */
-    failure_check(bench, bytes, count,
-                  "line 4: the gzip check sum does not match what was inflated: the file is damaged");
+    static const char differs[] =
+        "line 4: the gzip check sum or length does not match what was inflated: the file is damaged";
+    failure_check(bench, bytes, count, differs);
     bytes[count - 8] ^= 1;
     bytes[count - 4] ^= 1;
-    failure_check(bench, bytes, count, "line 4: the gzip length does not match what was inflated: the file is damaged");
+    failure_check(bench, bytes, count, differs);
     bytes[count - 4] ^= 1;
     bytes[10] = 7; /* the first block's header, bits 1 and 2 both set: a kind that there is not (RFC 1951, 3.2.3) */
-    failure_check(bench, bytes, count, "line 1: the gzip data are damaged (invalid block type)");
+    failure_check(bench, bytes, count, "line 1: the gzip data are damaged (invalid block)");
     bytes[10] = 7;
     bytes[2] = 9;
     failure_check(bench, bytes, count, "line 1: the gzip data are damaged (unknown compression method)");
