@@ -3,7 +3,7 @@
  * The error over the cells that are really missing, from the errors on cells that were hidden, which as a rule are
  * easier. Three estimates of the mean squared error, over the unseen cells M and the pooled hidden ones H:
  *
- *     by leverage    mean_M (1 + lev) * mean_H e^2 / (1 + lev)
+ *     by leverage    mean_M (1/w + lev) * mean_H e^2 / (1/w + lev), w the weight of a reading, as a rule 1
  *     by variance    mean_M V s^2 * mean_H e^2 / mean_H V s^2, over the cells hidden in the shape of the holes where
  *                    there are enough (variance.c: V and the sensor's scale s)
  *     by distance    the same over all of H, in strata of the distance d to the nearest seen cell of the sensor; a
@@ -27,10 +27,10 @@ static const double edges[JUDGE_BINS - 1] = {1.5, 2.5, 5.5, 15.5, 50.5, 150.5};
 
 /* Of one sensor and stratum. */
 struct sums {
-    double hidden, relative;               /* hidden cells, sum of e^2 / (1 + lev) */
+    double hidden, relative;               /* hidden cells, sum of e^2 / (1/w + lev) */
     double square, expected;               /* sums of e^2 and of V s^2 */
     double shaped_square, shaped_expected; /* of these, over the cells that count for the variance */
-    double missing, leverage, variance;    /* unseen cells, sums of 1 + lev and of V s^2 */
+    double missing, leverage, variance;    /* unseen cells, sums of 1/w + lev and of V s^2 */
 };
 struct announcing {
     const struct judgement *judgement;
@@ -58,12 +58,12 @@ static void sums_fill(struct announcing *announcing, const struct judged *cells,
         v *= judgement->scale[sensor] * judgement->scale[sensor];
         if (!is_hidden) {
             sums->missing++;
-            sums->leverage += 1 + cells->at[c].leverage;
+            sums->leverage += 1. / cells->at[c].weight + cells->at[c].leverage;
             sums->variance += v;
             continue;
         }
         sums->hidden++;
-        sums->relative += cells->square[c] / (1 + cells->at[c].leverage);
+        sums->relative += cells->square[c] / (1. / cells->at[c].weight + cells->at[c].leverage);
         sums->square += cells->square[c];
         sums->expected += v;
         if (announcing->by_shape && !(cells->at[c].marks & STANDING_SHAPED))
@@ -201,8 +201,8 @@ static double rmse_where(const struct judged *pool, bool is_shaped)
     double sum = 0, count = 0;
     for (uint64_t c = 0; c < pool->count; c++)
         if (((pool->at[c].marks & STANDING_SHAPED) != 0) == is_shaped) {
-            sum += pool->square[c];
-            count++;
+            sum += pool->at[c].weight * pool->square[c];
+            count += pool->at[c].weight;
         }
     return count > 0 ? sqrt(sum / count) : NAN;
 }

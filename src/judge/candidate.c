@@ -6,7 +6,7 @@
  * much smaller spread than either, since the noise of the cell is in both. The errors of one row hang together (they
  * share that row's factor), so the standard error of mean(d) is taken over groups of hidden cells that are neighbours
  * in row order, and only the groups' sums are kept: with N hidden cells, G groups of n_g cells, D_g the sum of d in
- * group g,
+ * group g, d times its weight where cells have weights,
  *
  *     mean = sum_g D_g / N,      error^2 = G/(G-1) sum_g (D_g - n_g mean)^2 / N^2.
  */
@@ -91,10 +91,11 @@ static uint64_t group_start(const struct chooser *chooser, size_t g)
 
 static void groups_sum(const struct chooser *chooser, double *square)
 {
+    const float *weight = chooser->hidden->by_row.weight;
     for (size_t g = 0; g < chooser->groups; g++) {
         square[g] = 0;
         for (uint64_t k = group_start(chooser, g); k < group_start(chooser, g + 1); k++)
-            square[g] += chooser->residuals[k] * chooser->residuals[k];
+            square[g] += (weight != NULL ? (double)weight[k] : 1) * (chooser->residuals[k] * chooser->residuals[k]);
     }
 }
 

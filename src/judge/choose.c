@@ -223,6 +223,15 @@ done:
     return status;
 }
 
+/* One half-width for all cells, of readings of weight one. */
+static double halfwidth_find(struct chooser *chooser)
+{
+    const float *weight = chooser->hidden->by_row.weight;
+    for (uint64_t k = 0; weight != NULL && k < chooser->hidden->count; k++)
+        chooser->residuals[k] *= sqrt((double)weight[k]);
+    return interval_halfwidth(chooser->residuals, chooser->hidden->count, chooser->options->interval);
+}
+
 static fescue_status choice_fill(struct chooser *chooser, struct kind *kinds, size_t best, struct candidate *winner,
                                  struct choice *choice)
 {
@@ -248,8 +257,7 @@ static fescue_status choice_fill(struct chooser *chooser, struct kind *kinds, si
         TRY(interpolation_measure(chooser->context, chooser->kept, chooser->hidden, chooser->time,
                                   &choice->interpolation_errors));
     choice->noiseless = winner->is_exact;
-    choice->halfwidth =
-        is_judged ? interval_halfwidth(chooser->residuals, chooser->hidden->count, chooser->options->interval) : NAN;
+    choice->halfwidth = is_judged ? halfwidth_find(chooser) : NAN;
     TRY(low_rank_copy(chooser->context, &winner->point, &choice->start));
     for (size_t k = 0; k < choice->start.rank; k++)
         choice->start.spectrum[k] *= chooser->problem.scale;

@@ -67,7 +67,8 @@ static fescue_status hidden_collect(fescue_context *context, const struct cells 
             pool->row[pool->count] = row;
             pool->column[pool->count] = hidden->by_row.across[k];
             pool->square[pool->count] = residuals[k] * residuals[k];
-            pool->at[pool->count++] = (struct standing){.weight = 1, .marks = marks};
+            float weight = hidden->by_row.weight != NULL ? hidden->by_row.weight[k] : 1;
+            pool->at[pool->count++] = (struct standing){.weight = weight, .marks = marks};
         }
 done:
     GIVE(context, &residuals);

@@ -60,6 +60,7 @@ fescue_status interpolation_measure(fescue_context *context, const struct cells 
 {
     fescue_status status = FESCUE_OK;
     struct track track = {0};
+    double weights = 0;
     size_t series = time->along == TIME_ROWS ? kept->columns : kept->rows;
     *errors = (struct errors){.count = hidden->count};
     TRY(TAKE(context, series + 1, &track.start));
@@ -73,10 +74,15 @@ fescue_status interpolation_measure(fescue_context *context, const struct cells 
             bool by_rows = time->along == TIME_ROWS;
             double guess = track_at(&track, by_rows ? column : row, time->at[by_rows ? row : column]);
             double away = guess - cells_value(hidden, &hidden->by_row, k);
-            errors->rmse += away * away / (double)hidden->count;
-            errors->mae += fabs(away) / (double)hidden->count;
+            double weight = hidden->by_row.weight != NULL ? (double)hidden->by_row.weight[k] : 1;
+            errors->rmse += weight * away * away;
+            errors->mae += weight * fabs(away);
+            weights += weight;
         }
-    errors->rmse = sqrt(errors->rmse);
+    if (weights > 0) {
+        errors->rmse = sqrt(errors->rmse / weights);
+        errors->mae /= weights;
+    }
 done:
     GIVE(context, &track.start);
     GIVE(context, &track.next);

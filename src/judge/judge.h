@@ -54,8 +54,8 @@ struct errors {
     uint64_t count;
     double rmse, mae; /* table units; 0 when count is 0 */
 };
-/* Errors of the model's estimates (bounds applied) on hidden cells. residuals (count doubles, row order, estimate
-   minus observed) may be NULL. */
+/* Errors of the model's estimates (bounds applied) on hidden cells, means weighted as the cells are. residuals (count
+   doubles, row order, estimate minus observed) may be NULL. */
 fescue_status errors_measure(fescue_context *context, const struct cells *hidden, const struct model *model,
                              double *residuals, struct errors *errors);
 
@@ -187,6 +187,11 @@ struct variance {
     bool has_distance;
 };
 
+/* How precise readings of rows and columns are, as the weights of seen cells have it (line_weights.c). */
+struct line_weights {
+    double *row, *column; /* owned, logarithms; NULL: all are alike, of weight one */
+};
+
 /* What is said of the errors of a fill. */
 struct judgement {
     bool is_judged; /* folds were judged; else, when something was hidden, all rests on choosing's own hidden cells */
@@ -208,6 +213,7 @@ struct judgement {
     struct leverage leverage; /* of the fit on all cells */
     struct tracks *tracks;    /* owned; NULL: nothing is known of distances */
     double *scale;            /* owned; of each sensor, in standard deviations */
+    struct line_weights weights;
     bool sensors_are_rows;
 };
 extern const double judge_levels[JUDGE_LEVELS]; /* 0.5, 0.8, 0.9, 0.95 */

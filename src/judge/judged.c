@@ -79,12 +79,12 @@ void judged_measure(fescue_context *context, const struct judged_view *view, uin
     team_run(context, (size_t)((count + PIECE - 1) / PIECE), piece_measure, &measuring);
 }
 
-static void missing_add(struct judged *judged, uint32_t row, uint32_t column)
+static void missing_add(const struct line_weights *weights, uint32_t row, uint32_t column, struct judged *judged)
 {
     judged->row[judged->count] = row;
     judged->column[judged->count] = column;
     judged->square[judged->count] = 0;
-    judged->at[judged->count++] = (struct standing){.weight = 1};
+    judged->at[judged->count++] = (struct standing){.weight = (float)line_weights_at(weights, row, column)};
 }
 
 static bool is_seen(const struct half *by_row, uint32_t row, uint32_t column)
@@ -102,7 +102,8 @@ static bool is_seen(const struct half *by_row, uint32_t row, uint32_t column)
     return false;
 }
 
-fescue_status judged_missing(fescue_context *context, const struct cells *cells, uint64_t seed, struct judged *judged)
+fescue_status judged_missing(fescue_context *context, const struct cells *cells, const struct line_weights *weights,
+                             uint64_t seed, struct judged *judged)
 {
     const struct half *half = &cells->by_row;
     double all = (double)cells->rows * (double)cells->columns, missing = all - (double)cells->count;
@@ -116,7 +117,7 @@ fescue_status judged_missing(fescue_context *context, const struct cells *cells,
             uint32_t row = (uint32_t)random_below(&random, cells->rows);
             uint32_t column = (uint32_t)random_below(&random, cells->columns);
             if (!is_seen(half, row, column))
-                missing_add(judged, row, column);
+                missing_add(weights, row, column, judged);
         }
         return FESCUE_OK;
     }
@@ -126,7 +127,7 @@ fescue_status judged_missing(fescue_context *context, const struct cells *cells,
             if (next < half->start[row + 1] && half->across[next] == column)
                 next++;
             else
-                missing_add(judged, row, column);
+                missing_add(weights, row, column, judged);
         }
     }
     return FESCUE_OK;

@@ -7,7 +7,8 @@
  * scores |e| / (sqrt(V) s) of the hidden cells, each from a fit that did not see it: cross-conformal prediction with a
  * variance-scaled score (Vovk 2015, "Cross-conformal predictors"; Lei, G'Sell, Rinaldo, Tibshirani, Wasserman 2018,
  * "Distribution-free predictive inference for regression", for the scaling). No shape of the errors is assumed; where
- * it changes with leverage, q does (tilt.c).
+ * it changes with leverage, q does (tilt.c). Where cells have weights, V of each has noise over its own weight in it,
+ * and an unseen reading is taken to be as precise as those of its row and column (line_weights.c).
  *
  * Where no folds were run (the fit is exact, nothing was hidden, it would take too long) the error and one half-width
  * for all cells are those that choosing found on its own hidden cells.
@@ -63,8 +64,7 @@ static fescue_status halfwidths_rank(fescue_context *context, const struct judge
     for (uint64_t c = 0; c < cells->count; c++) {
         uint32_t sensor = judgement->sensors_are_rows ? cells->row[c] : cells->column[c];
         double v = variance_at(&judgement->variance, &cells->at[c]);
-        widths[c] =
-            judgement->quantile * tilt_at(judgement, cells->at[c].leverage) * sqrt(v) * judgement->scale[sensor];
+        widths[c] = judgement->quantile * tilt_at(judgement, &cells->at[c]) * sqrt(v) * judgement->scale[sensor];
     }
     judgement->halfwidth_low = order_pick(width_at, widths, cells->count, cells->count / 10);
     judgement->halfwidth_median = order_pick(width_at, widths, cells->count, cells->count / 2);
@@ -85,7 +85,8 @@ static fescue_status pool_judge(fescue_context *context, const struct judge_requ
     variance_fit(pool, judgement->tracks != NULL, &judgement->variance);
     TRY(scales_fit(context, pool, judgement->tracks, judgement));
     TRY(scores_rank(context, pool, judgement));
-    TRY(judged_missing(context, request->cells, (uint64_t)request->options->seed, &missing));
+    TRY(line_weights_find(context, request->cells, &judgement->weights));
+    TRY(judged_missing(context, request->cells, &judgement->weights, (uint64_t)request->options->seed, &missing));
     struct judged_view view = {&judgement->leverage, judgement->tracks, judgement->sensors_are_rows};
     judged_measure(context, &view, 0, &missing);
     /* With nothing missing the hidden cells speak for themselves. */
@@ -135,6 +136,7 @@ void judgement_free(fescue_context *context, struct judgement *judgement)
         tracks_free(context, judgement->tracks);
     GIVE(context, &judgement->tracks);
     GIVE(context, &judgement->scale);
+    line_weights_free(context, &judgement->weights);
 }
 
 double judgement_halfwidth(const struct judgement *judgement, uint32_t row, uint32_t column)
@@ -142,8 +144,8 @@ double judgement_halfwidth(const struct judgement *judgement, uint32_t row, uint
     if (!judgement->is_judged)
         return judgement->halfwidth;
     const struct judged_view view = {&judgement->leverage, judgement->tracks, judgement->sensors_are_rows};
-    struct standing at = {.weight = 1};
+    struct standing at = {.weight = (float)line_weights_at(&judgement->weights, row, column)};
     standing_find(&view, row, column, &at);
-    return judgement->quantile * tilt_at(judgement, at.leverage) * sqrt(variance_at(&judgement->variance, &at)) *
+    return judgement->quantile * tilt_at(judgement, &at) * sqrt(variance_at(&judgement->variance, &at)) *
            judgement->scale[judgement->sensors_are_rows ? row : column];
 }

@@ -4,6 +4,7 @@
  *
  *   relearn      the chosen model learnt again from other cells
  *   leverage     how far an estimate leans on few cells
+ *   line_weights how precise a reading of an unseen cell would be
  *   standing     what the error of a cell depends on
  *   judged       a list of cells with that
  *   folds        hiding, learning again, collecting errors
@@ -33,6 +34,13 @@ fescue_status relearn(fescue_context *context, const struct cells *cells, const 
 fescue_status relearn_all(fescue_context *context, const struct judge_request *request, double *noise, double *lambda);
 void relearnt_free(fescue_context *context, struct relearnt *relearnt);
 
+/* ---- weights ----------------------------------------------------------------------------------------------------- */
+
+fescue_status line_weights_find(fescue_context *context, const struct cells *cells, struct line_weights *weights);
+/* Of a reading in row and column; 1 where cells have no weights. */
+double line_weights_at(const struct line_weights *weights, uint32_t row, uint32_t column);
+void line_weights_free(fescue_context *context, struct line_weights *weights);
+
 /* ---- judged cells ------------------------------------------------------------------------------------------------ */
 
 /* What the error of a cell depends on. */
@@ -44,7 +52,7 @@ enum standing_mark {
 struct standing {
     float leverage, own; /* whole, and the part of the sensor's coefficients */
     float distance;      /* steps to the nearest seen cell of its sensor; 0 where nothing is known of any */
-    float weight;        /* of its reading: noise has the variance of a reading of weight one over this */
+    float weight;        /* of its reading: its noise has the variance of one of weight one over this */
     unsigned marks;
 };
 /* Cells and how they stand; square is of the error, 0 where it is not known. */
@@ -67,7 +75,8 @@ void standing_find(const struct judged_view *view, uint32_t row, uint32_t column
 /* The same of the cells from `from` on. */
 void judged_measure(fescue_context *context, const struct judged_view *view, uint64_t from, struct judged *judged);
 /* The unseen cells, or as many drawn at random where there are very many. */
-fescue_status judged_missing(fescue_context *context, const struct cells *cells, uint64_t seed, struct judged *judged);
+fescue_status judged_missing(fescue_context *context, const struct cells *cells, const struct line_weights *weights,
+                             uint64_t seed, struct judged *judged);
 
 /* Hides, learns again and collects, fold by fold. */
 fescue_status folds_run(fescue_context *context, const struct judge_request *request, struct judgement *judgement,
@@ -81,9 +90,10 @@ double variance_at(const struct variance *variance, const struct standing *at);
 fescue_status scales_fit(fescue_context *context, const struct judged *pool, const struct tracks *tracks,
                          struct judgement *judgement);
 
-/* How the quantile of the scores changes with 1 / (1 + leverage), and takes it out of the scores (tilt.c). */
+/* How the quantile of the scores changes with the noise's share of the variance, and takes it out of the scores
+ * (tilt.c). */
 fescue_status tilt_fit(fescue_context *context, const struct judged *pool, double *scores, struct judgement *judgement);
-double tilt_at(const struct judgement *judgement, double leverage);
+double tilt_at(const struct judgement *judgement, const struct standing *at);
 /* The ceil((n+1) level)-th smallest of the scores; infinite when there are too few. */
 double score_quantile(const double *scores, uint64_t count, double level);
 

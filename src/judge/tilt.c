@@ -5,7 +5,7 @@
  * that rest on few others are closer to normal, and one quantile for all is too small for them in the middle of the
  * distribution and too large far out. With
  *
- *     x = 1 / (1 + lev)      the noise's share of the variance
+ *     x = 1 / (1 + w lev)      the noise's share of the variance, w the weight of the reading, as a rule 1
  *
  * the level's quantile q_g is taken in five groups of equal number by x, a line q_g / q = 1 + t (x - x0) fitted to the
  * groups by least squares, and the slope shrunk by 1 - (error / t)^2, so that a slope within its own standard error is
@@ -30,9 +30,14 @@ double score_quantile(const double *scores, uint64_t count, double level)
     return place > (double)count ? INFINITY : order_pick(value_at, scores, count, (uint64_t)fmax(place, 1) - 1);
 }
 
-double tilt_at(const struct judgement *judgement, double leverage)
+static double noise_share(const struct standing *at)
 {
-    return fmin(fmax(1 + judgement->tilt * (1 / (1 + leverage) - judgement->tilt_centre), 0.5), 2);
+    return 1 / (1. + (double)at->weight * at->leverage);
+}
+
+double tilt_at(const struct judgement *judgement, const struct standing *at)
+{
+    return fmin(fmax(1 + judgement->tilt * (noise_share(at) - judgement->tilt_centre), 0.5), 2);
 }
 
 /* Slope and centre of the line through the groups' points. */
@@ -69,7 +74,7 @@ fescue_status tilt_fit(fescue_context *context, const struct judged *pool, doubl
     TRY(TAKE(context, count, &share));
     TRY(TAKE(context, count, &some));
     for (uint64_t c = 0; c < count; c++)
-        share[c] = 1 / (1 + pool->at[c].leverage);
+        share[c] = noise_share(&pool->at[c]);
     for (size_t g = 0; g < GROUPS; g++)
         edge[g] = order_pick(value_at, share, count, g * count / GROUPS);
     edge[0] = -INFINITY;
@@ -88,7 +93,7 @@ fescue_status tilt_fit(fescue_context *context, const struct judged *pool, doubl
     }
     line_fit(x, y, GROUPS, judgement);
     for (uint64_t c = 0; c < count; c++)
-        scores[c] /= tilt_at(judgement, pool->at[c].leverage);
+        scores[c] /= tilt_at(judgement, &pool->at[c]);
 done:
     GIVE(context, &share);
     GIVE(context, &some);

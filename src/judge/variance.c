@@ -2,10 +2,11 @@
  *
  * The expected squared error of a cell as a sum of terms with weights that are not negative,
  *
- *     V = w_0 + w_1 lev + w_2 sqrt(lev) + sum over q of w_q (1 - exp(-(d - 1)/q)) + w_6 [one-sided]
+ *     V = w_0 / w + w_1 lev + w_2 sqrt(lev) + sum over q of w_q (1 - exp(-(d - 1)/q)) + w_6 [one-sided]
  *         + [dark] sum over q of w_q (1 - exp(-d/q)) + w_9 own (1 - exp(-(d - 1)/30))
  *
  *     symbol       what it is
+ *     w            weight of the reading, 1 where cells have none: noise of precision w
  *     lev          leverage (leverage.c); its root stands in where the error grows more slowly than the leverage of a
  *                  model that takes more components than the table has
  *     d            steps to the nearest seen cell of the same sensor; q = 3, 30, 300
@@ -48,7 +49,7 @@ static void terms_set(bool has_distance, const struct standing *at, double *term
 {
     double beyond = has_distance ? fmax(at->distance - 1., 0) : 0;
     double dark = has_distance && (at->marks & STANDING_DARK) ? 1 : 0;
-    term[0] = 1;
+    term[0] = 1. / at->weight;
     term[1] = at->leverage;
     term[2] = sqrt(at->leverage);
     term[3] = 1 - exp(-beyond / 3);

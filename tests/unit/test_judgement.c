@@ -207,10 +207,36 @@ static void scores_tilt_where_their_shape_changes(void **state)
         }
         assert_status(context, tilt_fit(context, &judged, scores, &judgement), FESCUE_OK);
         double q = score_quantile(scores, JUDGED, 0.5);
-        for (double x = 0.1; x < 1; x += 0.2) /* 0.6745: the median of |normal| */
-            assert_true(fabs(q * tilt_at(&judgement, 1 / x - 1) / 0.6745 / (tilted ? 1 - x / 2 : 1) - 1) < 0.06);
+        for (double x = 0.1; x < 1; x += 0.2) { /* 0.6745: the median of |normal| */
+            struct standing at = {.leverage = (float)(1 / x - 1), .weight = 1};
+            assert_true(fabs(q * tilt_at(&judgement, &at) / 0.6745 / (tilted ? 1 - x / 2 : 1) - 1) < 0.06);
+        }
     }
     judged_free(context, &judged);
+}
+
+/* ---- weights -------------------------------------------------------------------------------------------------------
+ */
+
+/* Weights that are products of those of rows and columns are met at unseen cells too. */
+static void unseen_readings_are_as_precise_as_their_lines(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = {.rows = M, .columns = N, .rank = 1, .share = 0.5, .seed = 4};
+    struct cells cells;
+    struct line_weights weights;
+    double weight[M * N];
+    sow_cells(context, &sowing, &cells);
+    for (uint32_t i = 0; i < M; i++)
+        for (uint64_t k = cells.by_row.start[i]; k < cells.by_row.start[i + 1]; k++)
+            weight[k] = (1 + i) / (1. + cells.by_row.across[k]);
+    assert_status(context, cells_weigh(context, &cells, weight), FESCUE_OK);
+    assert_status(context, line_weights_find(context, &cells, &weights), FESCUE_OK);
+    for (uint32_t i = 0; i < M; i++)
+        for (uint32_t j = 0; j < N; j++)
+            assert_close(line_weights_at(&weights, i, j) * (1. + j) / (1 + i), 1, 1e-6);
+    line_weights_free(context, &weights);
+    cells_free(context, &cells);
 }
 
 /* ---- whole ----------------------------------------------------------------------------------------------------------
@@ -226,16 +252,47 @@ struct trial {
     struct judge_request request;
 };
 
+static const struct sowing trial_sowing = {
+    .rows = 120, .columns = 60, .rank = 2, .share = 0.5, .noise = 0.3, .seed = 2};
+
+/* The weight of a row's readings: six steps of a factor 4, of mean one about. */
+static double row_weight(uint32_t row)
+{
+    return pow(4, row % 6) / 227.5;
+}
+
+/* Readings of other precision: their noise is divided by the root of their weight. */
+static void trial_weigh(fescue_context *context, struct trial *trial)
+{
+    struct cells *cells = &trial->cells;
+    double *weight = NULL;
+    assert_status(context, TAKE(context, cells->count, &weight), FESCUE_OK);
+    for (int side = 0; side < 2; side++) {
+        const struct half *half = side == 0 ? &cells->by_row : &cells->by_column;
+        for (uint32_t line = 0; line < half->lines; line++)
+            for (uint64_t k = half->start[line]; k < half->start[line + 1]; k++) {
+                uint32_t row = side == 0 ? line : half->across[k], column = side == 0 ? half->across[k] : line;
+                double truth = sowing_truth(&trial_sowing, row, column);
+                ((double *)half->value)[k] = truth + (cells_value(cells, half, k) - truth) / sqrt(row_weight(row));
+                if (side == 0)
+                    weight[k] = row_weight(row);
+            }
+    }
+    assert_status(context, cells_weigh(context, cells, weight), FESCUE_OK);
+    GIVE(context, &weight);
+}
+
 /* A table of rank 2 with noise 0.3, offsets chosen, and a fit on all cells that is simply what choosing ends with,
    learnt again. */
-static void trial_begin(fescue_context *context, struct trial *trial)
+static void trial_begin_with(fescue_context *context, bool is_weighted, struct trial *trial)
 {
-    struct sowing sowing = {.rows = 120, .columns = 60, .rank = 2, .share = 0.5, .noise = 0.3, .seed = 2};
     struct choose_request choosing = {.options = &trial->options, .solver = solver_at(0)};
     struct relearnt learnt;
     *trial = (struct trial){.shape = {.shape = FESCUE_HOLDOUT_CELLS}};
     fescue_options_standard(&trial->options);
-    sow_cells(context, &sowing, &trial->cells);
+    sow_cells(context, &trial_sowing, &trial->cells);
+    if (is_weighted)
+        trial_weigh(context, trial);
     assert_status(context, holdout_split(context, &trial->cells, 0.1, 1, &trial->holdout), FESCUE_OK);
     assert_status(context, choose_run(context, &trial->holdout, &choosing, &trial->choice), FESCUE_OK);
     assert_true(trial->choice.is_learnt);
@@ -250,6 +307,11 @@ static void trial_begin(fescue_context *context, struct trial *trial)
     trial->request.model = &trial->model;
 }
 
+static void trial_begin(fescue_context *context, struct trial *trial)
+{
+    trial_begin_with(context, false, trial);
+}
+
 static void trial_end(fescue_context *context, struct trial *trial)
 {
     model_free(context, &trial->model);
@@ -258,36 +320,62 @@ static void trial_end(fescue_context *context, struct trial *trial)
     cells_free(context, &trial->cells);
 }
 
-/* Against readings that nobody saw, of the same law. */
-static void the_announced_error_is_that_of_unseen_readings(void **state)
+/* What unseen readings say of a judgement: of the rows with row % 6 in [from, to). */
+struct told {
+    double rmse, inside;
+};
+static struct told unseen_tell(const struct trial *trial, const struct judgement *judgement, uint32_t from, uint32_t to)
 {
-    fescue_context *context = bench_of(state)->context;
-    struct sowing sowing = {.rows = 120, .columns = 60, .rank = 2, .share = 0.5, .noise = 0.3, .seed = 2};
-    struct trial trial;
-    struct judgement judgement;
-    trial_begin(context, &trial);
-    assert_status(context, judge_run(context, &trial.request, &judgement), FESCUE_OK);
     struct random_stream random = random_open(77, RANDOM_TEST, 9);
+    const struct half *half = &trial->cells.by_row;
     double square = 0, count = 0, inside = 0;
-    for (uint32_t i = 0; i < 120; i++)
-        for (uint32_t j = 0; j < 60; j++) {
-            double reading = sowing_truth(&sowing, i, j) + 0.3 * random_normal(&random);
-            double e = model_estimate(&trial.model, i, j) - reading;
-            bool seen = false;
-            for (uint64_t k = trial.cells.by_row.start[i]; k < trial.cells.by_row.start[i + 1]; k++)
-                seen |= trial.cells.by_row.across[k] == j;
+    for (uint32_t i = 0; i < trial_sowing.rows; i++)
+        for (uint32_t j = 0; j < trial_sowing.columns; j++) {
+            double noise = 0.3 * random_normal(&random) / (half->weight != NULL ? sqrt(row_weight(i)) : 1);
+            double e = model_estimate(&trial->model, i, j) - sowing_truth(&trial_sowing, i, j) - noise;
+            bool seen = i % 6 < from || i % 6 >= to;
+            for (uint64_t k = half->start[i]; k < half->start[i + 1]; k++)
+                seen |= half->across[k] == j;
             if (seen)
                 continue;
             count++;
             square += e * e;
-            inside += fabs(e) <= judgement_halfwidth(&judgement, i, j);
+            inside += fabs(e) <= judgement_halfwidth(judgement, i, j);
         }
-    double rmse = sqrt(square / count);
+    return (struct told){sqrt(square / count), inside / count};
+}
+
+/* Against readings that nobody saw, of the same law. */
+static void the_announced_error_is_that_of_unseen_readings(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct trial trial;
+    struct judgement judgement;
+    trial_begin(context, &trial);
+    assert_status(context, judge_run(context, &trial.request, &judgement), FESCUE_OK);
+    struct told told = unseen_tell(&trial, &judgement, 0, 6);
     /* about 3600 unseen and 1800 hidden normal errors: standard error of the ratio 2 % */
-    assert_true(fabs(judgement.rmse / rmse - 1) < 0.06);
-    assert_true(fabs(inside / count - 0.9) < 0.025);
+    assert_true(fabs(judgement.rmse / told.rmse - 1) < 0.06);
+    assert_true(fabs(told.inside - 0.9) < 0.025);
     assert_true(judgement.rmse_low < judgement.rmse && judgement.rmse < judgement.rmse_high);
     assert_true(judgement.is_judged && judgement.scattered_folds == 5 && judgement.shaped_folds == 0);
+    judgement_free(context, &judgement);
+    trial_end(context, &trial);
+}
+
+/* Rows whose readings differ in precision by a factor of a thousand: what is announced is over all of them, and the
+   intervals keep their promise among the precise and among the others. */
+static void weights_are_in_the_intervals(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct trial trial;
+    struct judgement judgement;
+    trial_begin_with(context, true, &trial);
+    assert_status(context, judge_run(context, &trial.request, &judgement), FESCUE_OK);
+    /* the mean square is that of the sixth with the noisiest rows: 600 unseen and 300 hidden errors, 5 % */
+    assert_true(fabs(judgement.rmse / unseen_tell(&trial, &judgement, 0, 6).rmse - 1) < 0.15);
+    for (uint32_t at = 0; at < 6; at += 2) /* 1200 unseen cells each */
+        assert_true(fabs(unseen_tell(&trial, &judgement, at, at + 2).inside - 0.9) < 0.05);
     judgement_free(context, &judgement);
     trial_end(context, &trial);
 }
@@ -390,7 +478,9 @@ int main(void)
         BENCH_TEST(the_surface_is_found_again),
         BENCH_TEST(sensors_keep_one_scale_unless_they_differ),
         BENCH_TEST(scores_tilt_where_their_shape_changes),
+        BENCH_TEST(unseen_readings_are_as_precise_as_their_lines),
         BENCH_TEST(the_announced_error_is_that_of_unseen_readings),
+        BENCH_TEST(weights_are_in_the_intervals),
         BENCH_TEST(threads_do_not_matter),
         BENCH_TEST(without_folds_choosing_speaks),
         BENCH_TEST(warm_and_cold_folds_agree),
