@@ -41,7 +41,8 @@ struct solver {
     void (*destroy)(fescue_context *context, void **state);
 };
 extern const struct solver fixed_rank_cg_solver, grassmann_cg_solver, grassmann_trust_region_solver,
-    recursive_least_squares_solver, grassmann_stochastic_solver, grassmann_variance_reduced_solver, subgradient_solver;
+    recursive_least_squares_solver, grassmann_stochastic_solver, grassmann_variance_reduced_solver, subgradient_solver,
+    alternating_solver;
 
 /* Room for one value a seen cell, in the store's precision. The caller owns *values. */
 fescue_status values_create(struct field *field, void **values);

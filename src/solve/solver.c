@@ -9,6 +9,7 @@
 static const struct solver *const solvers[] = {&fixed_rank_cg_solver,
                                                &grassmann_cg_solver,
                                                &grassmann_trust_region_solver,
+                                               &alternating_solver,
                                                &recursive_least_squares_solver,
                                                &grassmann_stochastic_solver,
                                                &grassmann_variance_reduced_solver,

@@ -11,8 +11,8 @@ set title '3000 x 2000, rank 10, a tenth of the cells seen, noise 0.1: lines ste
 set yrange [1:2]
 set grid
 set key outside right
-names = 'evidence fixed-rank-cg grassmann-cg grassmann-trust-region recursive-least-squares grassmann-stochastic '.\
-        'grassmann-variance-reduced subgradient'
+names = 'evidence fixed-rank-cg grassmann-cg grassmann-trust-region alternating recursive-least-squares '.\
+        'grassmann-stochastic grassmann-variance-reduced subgradient'
 only(way, name) = (strcol(1) eq way && strcol(2) eq name) ? $5 : NaN
 set datafile missing NaN
 plot for [k = 1:words(names)] table skip 1 using 4:(only('steps', word(names, k))) \

@@ -13,7 +13,7 @@ import numpy as np
 import scipy.io as io
 
 FESCUE = os.environ.get("FESCUE", "build/fescue")
-SOLVERS = ("fixed-rank-cg", "grassmann-cg", "grassmann-trust-region")
+SOLVERS = ("fixed-rank-cg", "grassmann-cg", "grassmann-trust-region", "alternating")
 
 
 def main():
