@@ -149,6 +149,7 @@ static void run_view(fescue_fill *fill)
     run->scale = fill->fit.scale;
     run->determined = &fill->determined;
     run->judgement = &fill->judgement;
+    run->near = &fill->near;
     run->shape = &fill->shape;
     run->is_search_cut = fill->is_search_cut;
     run->writes_filled = is_auto ? is_dense : (write & WRITE_FILLED) != 0;
@@ -179,6 +180,7 @@ static fescue_status fill_run(fescue_fill *fill)
     struct choose_request request = {.options = &fill->options, .time = &fill->time};
     TRY(solver_choose(context, &fill->options, &request));
     TRY(weights_consider(fill->table, &fill->options, &request));
+    TRY(near_take(fill, fill->near_text, &request));
     TRY(fill_choose(fill, &request));
     TRY(fill_fit(fill, request.solver));
     low_rank_free(context, &fill->choice.start);
@@ -188,6 +190,8 @@ static fescue_status fill_run(fescue_fill *fill)
                           &fill->determined));
     if (fill->fit.model.time.components > 0)
         fill->determined.smooth = fill->fit.model.time.along;
+    if (near_is_felt(&fill->fit.model.near))
+        TRY(determined_take_near(context, &fill->near, &fill->determined));
     run_view(fill);
     run_count(&fill->run);
     TRY(fill_summarise(fill, false, &fill->text));
@@ -218,6 +222,10 @@ fescue_status fescue_fill_table(const fescue_table *table, const struct fescue_o
     const char *season = options->season != NULL ? options->season : "none";
     status = memory_copy_text(fill->context, season, strlen(season), &fill->season_text);
     fill->options.season = fill->fitting.season = fill->season_text;
+    if (status == FESCUE_OK && options->near_columns != NULL)
+        status =
+            memory_copy_text(fill->context, options->near_columns, strlen(options->near_columns), &fill->near_text);
+    fill->options.near_columns = fill->fitting.near_columns = fill->near_text;
     if (status == FESCUE_OK)
         status = fill_run(fill);
     if (status != FESCUE_OK)
@@ -320,7 +328,9 @@ void fescue_fill_destroy(fescue_fill **pointer)
     time_axis_free(context, &fill->time);
     season_free(context, &fill->season);
     cells_free(context, &fill->rest);
+    nearness_free(context, &fill->near);
     GIVE(context, &fill->season_text);
+    GIVE(context, &fill->near_text);
     GIVE(context, &fill->text);
     GIVE(context, pointer);
 }

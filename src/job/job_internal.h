@@ -76,6 +76,8 @@ struct fescue_fill {
     struct fescue_options options; /* a copy; its texts are dropped */
     struct time_axis time;         /* of the table, or none */
     char *season_text;             /* owned; options.season */
+    char *near_text;               /* owned; options.near_columns */
+    struct nearness near;          /* of the columns; count 0: nothing is known */
     struct season_plan season_plan;
     struct season season;          /* taken off the cells, until season_restore gives it to the model */
     struct cells rest;             /* what the season leaves */
@@ -100,6 +102,12 @@ fescue_status season_plan_make(fescue_fill *fill, const char *text);
 fescue_status season_choose(fescue_fill *fill, const struct holdout *holdout, const struct choose_request *plain);
 /* After everything was fitted and judged: the model has the season, if any, and the bounds. */
 void season_restore(fescue_fill *fill);
+
+/* Reads what --near-columns names (NULL: nothing) and asks for it. FESCUE_USAGE, FESCUE_NO_INPUT, FESCUE_BAD_DATA with
+   one line. */
+fescue_status near_take(fescue_fill *fill, const char *path, struct choose_request *request);
+bool near_is_felt(const struct near_part *part); /* whether near columns bear on estimates */
+void near_line(const fescue_fill *fill, struct text *text); /* of the summary */
 
 /* The summary, new and owned by the caller; with the lines on files when they are being written. */
 fescue_status fill_summarise(const fescue_fill *fill, bool is_written, char **text);

@@ -367,6 +367,7 @@ fescue_status fill_summarise(const fescue_fill *fill, bool is_written, char **te
     time_line(&summary);
     season_line(&summary);
     weights_line(&summary);
+    near_line(fill, &summary.text);
     model_lines(&summary);
     error_lines(&summary);
     interval_line(&summary);

@@ -253,6 +253,8 @@ static fescue_status choice_fill(struct chooser *chooser, struct kind *kinds, si
     }
     if (is_judged && winner->is_learnt)
         choice->plain_errors = chooser->plain_errors;
+    if (is_judged && winner->is_learnt)
+        choice->far_errors = chooser->far_errors;
     if (is_judged && chooser->time != NULL)
         TRY(interpolation_measure(chooser->context, chooser->kept, chooser->hidden, chooser->time,
                                   &choice->interpolation_errors));
@@ -277,6 +279,7 @@ static fescue_status choose_on(fescue_context *context, const struct holdout *ho
                               .options = request->options,
                               .solver = request->solver,
                               .time = request->time != NULL && request->time->along != TIME_NONE ? request->time : NULL,
+                              .near = request->near,
                               .learns = request->way,
                               .deadline = request->deadline,
                               .kept = &holdout->kept,

@@ -2,7 +2,7 @@
  *
  * The evidence fit among the candidates: it learns rank and ridge from the kept cells themselves, so that the hidden
  * ones have little to choose, only which kind of offsets it has, whether every line of the shorter side (with a time
- * axis: every series) has noise of its own, and whether the axis is of use.
+ * axis: every series) has noise of its own, and whether the axis and near columns are of use.
  *
  * Where it is used: under --solver evidence, and under --solver auto while it is affordable and the ridge is left to
  * the program. It leaves neighbouring ranks and ridges nothing to win, as a rule, at the price of one path's first few
@@ -56,6 +56,7 @@ struct evidence_request evidence_request_of(const struct chooser *chooser, const
                                      .rounds = FINE_ROUNDS,
                                      .change = settled,
                                      .time = candidate->time.along != TIME_NONE ? chooser->time : NULL,
+                                     .near = candidate->near.is_there ? chooser->near : NULL,
                                      .deadline = chooser->deadline};
 }
 
@@ -70,6 +71,7 @@ static fescue_status candidate_take(struct chooser *chooser, struct evidence_res
     candidate->offsets = result->model.offsets;
     candidate->point = result->model.low_rank;
     candidate->time = result->model.time;
+    candidate->near = result->model.near;
     result->model.time = (struct time_part){0};
     result->model.offsets = (struct offsets){0};
     result->model.low_rank = (struct low_rank){0};
@@ -108,11 +110,18 @@ static enum evidence_noise noise_lines(const struct chooser *chooser)
     return by_columns ? EVIDENCE_NOISE_COLUMNS : EVIDENCE_NOISE_ROWS;
 }
 
-/* The winner's components again, under the noise and the time part that are asked for: takes its place when it has less
-   error. A fit that follows time has to have more error to be turned down: where nothing hangs together it learns so by
-   itself, and few hidden cells show what it is worth in rows of which all are missing. */
-static fescue_status learn_more(struct chooser *chooser, enum evidence_noise noise, const struct time_axis *time,
-                                struct candidate *winner)
+/* What a fit is to have beyond equal noise. */
+struct more {
+    enum evidence_noise noise;
+    const struct time_axis *time;
+    const struct nearness *near;
+};
+
+/* The winner's components again, under the noise, the time part and the near columns that are asked for: takes its
+   place when it has less error. A fit that follows time or near columns has to have more error to be turned down: where
+   nothing hangs together it learns so by itself, and few hidden cells show what it is worth in lines of which all are
+   missing. */
+static fescue_status learn_more(struct chooser *chooser, const struct more *more, struct candidate *winner)
 {
     fescue_status status = FESCUE_OK;
     const struct cells *kept = chooser->kept;
@@ -120,8 +129,9 @@ static fescue_status learn_more(struct chooser *chooser, enum evidence_noise noi
     struct candidate own = {0};
     struct model start = {.rows = kept->rows, .columns = kept->columns, .bounds = chooser->options->bounds};
     struct evidence_request request = evidence_request_of(chooser, winner);
-    request.noise = noise;
-    request.time = time;
+    request.noise = more->noise;
+    request.time = more->time;
+    request.near = more->near;
     request.rank = winner->point.rank;
     request.rounds = NOISE_ROUNDS;
     if (winner->point.rank == 0 || chooser_is_late(chooser))
@@ -132,10 +142,11 @@ static fescue_status learn_more(struct chooser *chooser, enum evidence_noise noi
     start.offsets = winner->offsets; /* borrowed, like the point */
     start.low_rank = candidate_point(chooser, winner);
     start.time = winner->time;
+    start.near = winner->near;
     TRY(evidence_fit(chooser->context, kept, &request, &start, &result));
     TRY(candidate_take(chooser, &result, request.noise, &own));
-    bool is_better =
-        time != NULL ? !candidate_beats(chooser, winner, &own, 1) : candidate_beats(chooser, &own, winner, 1);
+    bool is_better = more->time != NULL || more->near != NULL ? !candidate_beats(chooser, winner, &own, 1)
+                                                              : candidate_beats(chooser, &own, winner, 1);
     if (is_better)
         candidate_swap(&own, winner);
 done:
@@ -164,9 +175,14 @@ fescue_status evidence_compete(struct chooser *chooser, const struct candidate *
     chooser->plain_errors = winner->errors;
     if (winner->is_exact)
         goto done;
-    TRY(learn_more(chooser, noise_lines(chooser), NULL, winner));
+    TRY(learn_more(chooser, &(struct more){.noise = noise_lines(chooser)}, winner));
     if (chooser->time != NULL)
-        TRY(learn_more(chooser, winner->noise, chooser->time, winner));
+        TRY(learn_more(chooser, &(struct more){winner->noise, chooser->time, NULL}, winner));
+    if (chooser->near != NULL && winner->point.rank > 0) {
+        const struct time_axis *time = winner->time.along != TIME_NONE ? chooser->time : NULL;
+        chooser->far_errors = winner->errors;
+        TRY(learn_more(chooser, &(struct more){winner->noise, time, chooser->near}, winner));
+    }
 done:
     candidate_free(chooser, &candidate);
     return status;

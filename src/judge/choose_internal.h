@@ -14,6 +14,7 @@ struct chooser {
     const struct fescue_options *options;
     const struct solver *solver;
     const struct time_axis *time; /* NULL: lines have no order */
+    const struct nearness *near;  /* NULL: nothing is known of columns being near one another */
     enum choose_way learns;
     double deadline;
     const struct cells *kept, *hidden;
@@ -25,6 +26,7 @@ struct chooser {
     double *residuals;          /* one a hidden cell */
     double *spectrum;           /* one a component, in the table's units */
     struct errors plain_errors; /* of the evidence fit with equal noise and without time; count 0: there is none */
+    struct errors far_errors;   /* of the evidence fit without near columns; count 0: there is none with them */
     size_t groups;              /* how many groups the hidden cells are judged in */
 
     struct choose_step *path;
@@ -40,6 +42,7 @@ struct candidate {
     bool is_learnt; /* by the evidence fit, with this noise */
     enum evidence_noise noise;
     struct time_part time; /* owned; table units */
+    struct near_part near;
     struct errors errors;  /* on the hidden cells, table units; infinite when the fit blew up */
     double *square;        /* sum of squared errors of each group of hidden cells */
     struct low_rank point; /* in the problem's units */

@@ -278,7 +278,10 @@ enum basis determined_basis(const struct determined *determined, uint32_t row, u
     assert(row < determined->rows && column < determined->columns);
     if (is_low_rank(determined, row, column))
         return BASIS_LOW_RANK;
-    if (determined->smooth == TIME_ROWS && determined->column_support[column] > 0)
+    bool has_steps = determined->smooth == TIME_ROWS;
+    if (has_steps && determined->column_support[column] > 0)
+        return BASIS_SMOOTH;
+    if (determined->near != NULL && determined->near[column] && (has_steps || determined->row_support[row] > 0))
         return BASIS_SMOOTH;
     if (determined->smooth == TIME_COLUMNS && determined->row_support[row] > 0)
         return BASIS_SMOOTH;
@@ -414,11 +417,44 @@ done:
     return status;
 }
 
+/* The head of a column's group, ways to it halved. */
+static uint32_t group_head(uint32_t *group, uint32_t column)
+{
+    while (group[column] != column)
+        column = group[column] = group[group[column]];
+    return column;
+}
+
+fescue_status determined_take_near(fescue_context *context, const struct nearness *near, struct determined *determined)
+{
+    uint32_t *group = NULL;
+    uint8_t *is_seen = NULL;
+    fescue_status status;
+    TRY(TAKE(context, near->columns, &group));
+    TRY(TAKE(context, near->columns, &is_seen));
+    TRY(TAKE(context, near->columns, &determined->near));
+    for (uint32_t j = 0; j < near->columns; j++)
+        group[j] = j;
+    for (uint64_t k = 0; k < near->count; k++)
+        group[group_head(group, near->high[k])] = group_head(group, near->low[k]);
+    for (uint32_t j = 0; j < near->columns; j++)
+        is_seen[group_head(group, j)] |= determined->column_support[j] > 0;
+    for (uint64_t k = 0; k < near->count; k++) {
+        bool rests = is_seen[group_head(group, near->high[k])] != 0;
+        determined->near[near->high[k]] = determined->near[near->low[k]] = rests;
+    }
+done:
+    GIVE(context, &group);
+    GIVE(context, &is_seen);
+    return status;
+}
+
 void determined_free(fescue_context *context, struct determined *determined)
 {
     GIVE(context, &determined->row_block);
     GIVE(context, &determined->column_block);
     GIVE(context, &determined->row_support);
     GIVE(context, &determined->column_support);
+    GIVE(context, &determined->near);
     loose_free(context, &determined->loose);
 }

@@ -92,6 +92,7 @@ struct choice {
     double halfwidth;                     /* of the interval at the asked level; NAN when nothing was hidden */
     struct errors plain_errors;           /* of the same components, with equal noise and without time */
     struct errors interpolation_errors;   /* of interpolation in time; count 0: there is no time axis */
+    struct errors far_errors;             /* without near columns; count 0: they were not tried */
     bool noiseless;                       /* the hidden cells, nearly all, are met to rounding */
     bool own_holdout;                     /* nothing was hidden by the caller, so a tenth was, for the choice alone */
     struct low_rank start;                /* owned; the chosen low-rank part in the table's units. The fit on all cells
@@ -107,6 +108,7 @@ struct choose_request {
     const struct fescue_options *options;
     const struct solver *solver;
     const struct time_axis *time; /* borrowed, and by choice.learnt too; NULL or along none: lines have no order */
+    const struct nearness *near;  /* borrowed, and by choice.learnt too; NULL: columns are not near one another */
     double deadline;              /* clock_wall() second, or 0 */
 };
 /* Fits on holdout->kept and judges on holdout->hidden: offsets (where auto) x a warm-started path over ranks (where
@@ -239,8 +241,8 @@ double judgement_halfwidth(const struct judgement *judgement, uint32_t row, uint
 
 /* Whether the pattern of observed cells determines the low-rank part of an unseen cell at this rank (determined.c). One
    that it does not rests on its neighbours in time when the model follows its steps from one to the next and its series
-   has cells; else on the offsets when their kind has an effect for its row or column and that line has cells; else on
-   the mean. */
+   has cells, or on near columns; else on the offsets when their kind has an effect for its row or column and that line
+   has cells; else on the mean. */
 enum basis { BASIS_LOW_RANK, BASIS_SMOOTH, BASIS_OFFSETS, BASIS_MEAN };
 enum { BASIS_COUNT = BASIS_MEAN + 1 };
 const char *basis_word(enum basis basis); /* "low-rank", "smooth", "offsets", "mean" */
@@ -251,6 +253,7 @@ struct determined {
     enum time_along smooth;                 /* which lines the model follows in time; none after determined_create */
     uint32_t *row_block, *column_block;     /* core block of each line, from 1; 0: not in the core */
     uint32_t *row_support, *column_support; /* observed cells of each line */
+    uint8_t *near;                          /* owned; of each column, whether it goes with near ones; NULL: none does */
     struct loose *loose;                    /* lines that can move while no seen cell does; NULL: none */
     uint64_t low_rank;                      /* cells, seen or not, whose basis is low-rank */
     uint64_t unchecked;                     /* lines of which only the necessary conditions are known: too large */
@@ -258,6 +261,8 @@ struct determined {
 fescue_status determined_create(fescue_context *context, const struct cells *cells, size_t rank,
                                 enum fescue_offsets offsets, struct determined *determined);
 enum basis determined_basis(const struct determined *determined, uint32_t row, uint32_t column);
+/* From now on columns that are near others, by whatever way near one with cells, rest on them. */
+fescue_status determined_take_near(fescue_context *context, const struct nearness *near, struct determined *determined);
 void determined_free(fescue_context *context, struct determined *determined);
 
 /* What is there before any fit, and as text (new, owned by the caller). `time` may be NULL: nothing is said of it. */

@@ -72,8 +72,11 @@ static fescue_status start_create(fescue_context *context, const struct cells *c
     const struct model *model = request->model;
     struct leverage leverage = {0};
     double *room = NULL;
-    *start =
-        (struct model){.rows = model->rows, .columns = model->columns, .time = model->time, .bounds = model->bounds};
+    *start = (struct model){.rows = model->rows,
+                            .columns = model->columns,
+                            .time = model->time,
+                            .near = model->near,
+                            .bounds = model->bounds};
     TRY(offsets_copy(context, model->rows, model->columns, &model->offsets, &start->offsets));
     TRY(low_rank_copy(context, &model->low_rank, &start->low_rank));
     TRY(leverage_create(context, cells, model, request->noise, NAN, &leverage));

@@ -95,6 +95,13 @@ void season_free(fescue_context *context, struct season *season);
 fescue_status season_find(fescue_context *context, const struct cells *cells, const struct time_axis *axis,
                           double *period, size_t candidates, size_t *found);
 
+/* How strongly columns that are near one another are drawn together: of a loading's precision, the share of its
+   neighbours, strengths summing to one, over that of its own (0: not at all). */
+struct near_part {
+    bool is_there;
+    double components, effect; /* of the components, in the mean by their size; of the columns' effects */
+};
+
 /* The whole of what was learnt, in the table's units (scale is already in the spectrum). */
 struct model {
     uint32_t rows, columns;
@@ -102,6 +109,7 @@ struct model {
     struct low_rank low_rank;
     struct time_part time;
     struct season season;
+    struct near_part near;
     struct fescue_range bounds;
 };
 double model_estimate(const struct model *model, uint32_t row, uint32_t column); /* clamped to bounds */

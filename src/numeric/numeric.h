@@ -1,7 +1,7 @@
 /* SPDX-License-Identifier: MIT
  *
- * Arithmetic: loops over observed cells (sweep), small dense algebra (dense), sparse symmetric systems (sparse_spd),
- * processes in time (kalman, chain).
+ * Arithmetic: loops over observed cells (sweep), small dense algebra (dense), sparse symmetric systems (sparse_spd,
+ * sparse_field), processes in time (kalman, chain).
  *
  * Factor matrices are tall (lines x rank) and row-major, so that the rank numbers of one line lie together; the stride
  * is the rank rounded up to a multiple of 8 and the padding is zero, so that loops need no remainder. To LAPACK, which
@@ -178,6 +178,17 @@ void moments_gather(const struct moments *moments, const struct half *half, enum
    FESCUE_NO_MEMORY; FESCUE_DEFECT when the matrix is not positive definite. */
 fescue_status sparse_two_way_solve(fescue_context *context, const struct cells *cells, const double *diagonal,
                                    size_t count, const double *rhs, double *solution);
+
+/* A Gaussian field over near columns, of precision A = diag(d) + strength * (graph Laplacian), d > 0 (sparse_field.c).
+   What is solved with, and whose inverse is asked for, is the last factor. FESCUE_NO_MEMORY; FESCUE_DEFECT when A is
+   not positive definite. */
+struct sparse_field;
+fescue_status sparse_field_create(fescue_context *context, const struct nearness *near, struct sparse_field **out);
+fescue_status sparse_field_factor(struct sparse_field *field, const double *diagonal, double strength);
+fescue_status sparse_field_solve(struct sparse_field *field, const double *rhs, double *solution); /* may overlap */
+void sparse_field_variances(struct sparse_field *field, double *variance);     /* the diagonal of A^-1 */
+double sparse_field_energy(const struct sparse_field *field, const double *x); /* x'Lx */
+void sparse_field_destroy(fescue_context *context, struct sparse_field **field);
 
 /* ---- kalman: a scalar AR(1) process seen with noise (kalman.c) ----------------------------------------------------
  */

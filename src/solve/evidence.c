@@ -6,7 +6,8 @@
  *     z_ij = a_i + b_j + u_i.v_j + e_ij          e_ij ~ N(0, s2_ij)
  *     u_ik ~ N(0, su_k)   a_i ~ N(0, sa)   v_jk ~ N(0, sv_k)   b_j ~ N(0, sb)
  *
- * and, where lines are times, a residual and factors that are AR(1) in time (evidence_time.c).
+ * and, where lines are times, a residual and factors that are AR(1) in time (evidence_time.c); where columns are near
+ * one another, their factors and effects are fields over them (evidence_near.c).
  *
  *     symbol   shape         what it is
  *     u, a     m x r, m      factors and effects of the rows; x_i = (u_i, a_i, 1)
@@ -192,16 +193,23 @@ static double change_measure(struct evidence *evidence)
 }
 
 /* Steps 1 and 2 for one side. */
-static void side_round(struct evidence *evidence, struct evidence_side *side, const struct evidence_side *other)
+static fescue_status side_round(struct evidence *evidence, struct evidence_side *side,
+                                const struct evidence_side *other)
 {
     struct evidence_time *time = evidence->time;
     if (time != NULL && time->chain_on && side == time->steps) {
         evidence_chain_update(evidence);
         evidence_chain_prior(evidence);
-        return;
+        return FESCUE_OK;
     }
+    bool has_fields = evidence->near != NULL && evidence->near->is_on && side == &evidence->columns;
+    fescue_status status = has_fields ? evidence_near_update(evidence) : FESCUE_OK;
+    if (status != FESCUE_OK)
+        return status;
     evidence_side_update(evidence, side, other);
-    evidence_side_prior(evidence, side);
+    if (!has_fields)
+        evidence_side_prior(evidence, side);
+    return FESCUE_OK;
 }
 
 static fescue_status evidence_round(struct evidence *evidence, const struct evidence_request *request, uint64_t round,
@@ -211,21 +219,23 @@ static fescue_status evidence_round(struct evidence *evidence, const struct evid
     matrix_copy(rows->mean, rows->old);
     matrix_copy(columns->mean, columns->old);
     bool has_chain = evidence->time != NULL && evidence->time->chain_on;
-    if (round > 0 && !has_chain && (round < EVIDENCE_ROUND_BASIS || round % EVIDENCE_BASIS_EVERY == 0)) {
-        fescue_status status = evidence_basis_change(evidence);
-        if (status != FESCUE_OK)
-            return status;
-    }
+    bool has_fields = evidence->near != NULL && evidence->near->is_on;
+    fescue_status status = FESCUE_OK;
+    if (round > 0 && !has_chain && !has_fields && (round < EVIDENCE_ROUND_BASIS || round % EVIDENCE_BASIS_EVERY == 0))
+        TRY(evidence_basis_change(evidence));
     if (evidence->time != NULL)
         evidence_time_round(evidence, round);
-    side_round(evidence, rows, columns);
+    if (evidence->near != NULL)
+        evidence_near_round(evidence, round);
+    TRY(side_round(evidence, rows, columns));
     if (request->noise == EVIDENCE_NOISE_ROWS)
         noise_update(evidence, rows, true);
-    side_round(evidence, columns, rows);
+    TRY(side_round(evidence, columns, rows));
     if (request->noise != EVIDENCE_NOISE_ROWS)
         noise_update(evidence, columns, request->noise == EVIDENCE_NOISE_COLUMNS);
     *change = evidence->time != NULL && evidence->time->residual_on ? evidence->time->change : change_measure(evidence);
-    return FESCUE_OK;
+done:
+    return status;
 }
 
 /* Posterior means into a model in the table's units. */
@@ -251,6 +261,8 @@ static fescue_status evidence_model(struct evidence *evidence, const struct mode
         model->low_rank.spectrum[k] *= scale;
     if (evidence->time != NULL)
         TRY(evidence_time_part(evidence, &model->time));
+    if (evidence->near != NULL)
+        evidence_near_part(evidence, &model->near);
 done:
     if (status != FESCUE_OK)
         model_free(context, model);
@@ -272,9 +284,11 @@ static void trace_append(struct evidence *evidence, uint64_t round, double chang
 static bool is_over(struct evidence *evidence, const struct evidence_request *request, double change,
                     enum solve_stop *stop)
 {
+    bool all_on = evidence->near == NULL || evidence->near->is_on;
     if (progress_tell(evidence->context, "evidence", -1) != FESCUE_OK)
         *stop = STOP_CANCELLED;
-    else if (change <= request->change || (evidence->time != NULL && evidence_time_settled(evidence, change)))
+    else if (all_on &&
+             (change <= request->change || (evidence->time != NULL && evidence_time_settled(evidence, change))))
         *stop = STOP_CHANGE;
     else if (request->deadline > 0 && clock_wall() > request->deadline)
         *stop = STOP_TIME;
@@ -366,6 +380,10 @@ fescue_status evidence_fit(fescue_context *context, const struct cells *cells, c
         TRY(evidence_time_open(&evidence, request));
         evidence_time_begin(&evidence, start);
     }
+    if (request->near != NULL) {
+        TRY(evidence_near_open(&evidence, request));
+        evidence_near_begin(&evidence, start);
+    }
     TRY(evidence_loop(&evidence, request, &work, &out->fit));
     TRY(evidence_model(&evidence, start, &out->model));
     out->noise = problem.scale * sqrt(evidence.noise);
@@ -376,6 +394,7 @@ fescue_status evidence_fit(fescue_context *context, const struct cells *cells, c
     evidence_trim(&out->model, alive > 0 ? alive : 1);
     evidence_keep(&work, out);
 done:
+    evidence_near_close(&evidence);
     evidence_time_close(&evidence);
     arena_close(context, &evidence.arena);
     problem_free(&problem);

@@ -9,6 +9,7 @@
  *   evidence_time.c     when lines are times: what is shared by
  *   evidence_residual.c     a residual of every series, AR(1) in time
  *   evidence_chain.c        factors and effects of the steps, AR(1) in time
+ *   evidence_near.c     when some columns are near one another
  *
  * The formulas and the symbols stand at the top of evidence.c.
  */
@@ -20,12 +21,14 @@
 /* One side of the table: its lines' posteriors, as the other side sees them. */
 struct evidence_side {
     const struct half *half;
-    struct moments moments;   /* of the regressors (factor, 1, effect) of each line; weight belongs to evidence */
-    double *variance;         /* prior variance of the r components and of the effect; 0: switched off */
-    double *line_precision;   /* of each line, relative: 1 where all are alike */
-    double *excess;           /* of each line, added to line_error: what the time residual does not know; or NULL */
-    double *line_error;       /* expected squared error of each line, under the other side's relative precisions */
-    double *partial;          /* sums of the blocks */
+    struct moments moments; /* of the regressors (factor, 1, effect) of each line; weight belongs to evidence */
+    double *variance;       /* prior variance of the r components and of the effect; 0: switched off */
+    double *line_precision; /* of each line, relative: 1 where all are alike */
+    double *excess;         /* of each line, added to line_error: what the time residual does not know; or NULL */
+    double *line_error;     /* expected squared error of each line, under the other side's relative precisions */
+    double *partial;        /* sums of the blocks */
+    double *own, *pull;     /* of each line, r + 1 prior precisions in place of 1 / variance, and those times the prior
+                               means; NULL: all alike, around 0 */
     size_t effect_at, one_at; /* where effect and constant stand in mean, so that rows' and columns' pair up */
     struct matrix mean, old;  /* lines x (r + 2), this round's and the last one's */
 };
@@ -43,6 +46,7 @@ struct evidence {
     struct matrix map[2];            /* a change of basis and its transpose */
     double *shift, *basis_work;
     struct evidence_time *time; /* NULL: lines have no order */
+    struct evidence_near *near; /* NULL: columns are not near one another */
     struct arena arena;
 };
 
@@ -51,6 +55,9 @@ enum { EVIDENCE_ROUND_PRIOR = 8, EVIDENCE_ROUND_BASIS = 20, EVIDENCE_BASIS_EVERY
 /* Prior variances do not fall below this: what is dying squares itself from round to round, and its reciprocal and the
    square of that have to be numbers. */
 #define EVIDENCE_VARIANCE_LEAST 1e-60
+
+/* Precision that stands for "switched off": in units where cells have size one, no sum of cells comes near it. */
+#define EVIDENCE_PRECISION_OFF 1e30
 
 /* The regressors of a line, as the other side sees it: components 0 .. r-1, the constant, the effect. */
 static inline size_t evidence_one(const struct evidence *evidence)
@@ -64,10 +71,10 @@ void evidence_trim(struct model *model, size_t rank);
 
 /* Between two rounds. */
 struct evidence_at {
-    uint64_t round, residual_on, chain_on;
+    uint64_t round, residual_on, chain_on, near_on;
     double change, noise, pool_share;
 };
-enum { EVIDENCE_STATE_PARTS = 6 };
+enum { EVIDENCE_STATE_PARTS = 7 };
 /* The scalars of the state, out of the evidence and into it. */
 void evidence_at_note(const struct evidence *evidence, struct evidence_at *at);
 void evidence_at_take(const struct evidence_at *at, struct evidence *evidence);
@@ -139,6 +146,26 @@ void evidence_chain_update(struct evidence *evidence);
 void evidence_chain_prior(struct evidence *evidence);
 size_t evidence_chain_store(size_t rank); /* numbers a line */
 size_t evidence_chain_scratch(size_t rank);
+
+/* ---- near columns ------------------------------------------------------------------------------------------------ */
+
+struct evidence_near {
+    struct sparse_field *field;
+    bool is_on;
+    size_t columns;
+    double *scale, *strength;                           /* of each component and the effect: variance sv, pull s */
+    double *precision, *rhs, *mean, *variance, *factor; /* of a field, one number a column */
+    struct arena arena;
+};
+fescue_status evidence_near_open(struct evidence *evidence, const struct evidence_request *request);
+void evidence_near_close(struct evidence *evidence);
+/* Switches the fields on when their round has come. */
+void evidence_near_begin(struct evidence *evidence, const struct model *start);
+void evidence_near_round(struct evidence *evidence, uint64_t round);
+/* What the columns are to each other, from their posteriors, before these are learnt again; and the laws of the fields.
+   In place of evidence_side_prior for the columns. */
+fescue_status evidence_near_update(struct evidence *evidence);
+void evidence_near_part(const struct evidence *evidence, struct near_part *part);
 
 /* Second moments of (factor, 1, effect) from mean and covariance of (factor, effect); covariance NULL: none. */
 void evidence_moments_write(double *moment, const double *mean, const double *covariance, size_t rank);

@@ -13,8 +13,40 @@ struct evidence_sums {
     uint64_t time_cells, time_components; /* of the time part; along which axis it is, the request says */
     int64_t stop, along;
     double objective, rmse, gradient, noise, scale, mean, row_ridge, column_ridge;
+    struct near_part near;
 };
 enum { RESULT_PARTS = 13 };
+
+static uint64_t bytes_digest(uint64_t digest, const void *bytes, size_t size)
+{
+    return size > 0 ? memo_digest(digest, bytes, size) : digest;
+}
+
+/* The clock, and what the start knows of time. */
+static uint64_t time_digest(uint64_t digest, const struct time_axis *axis, const struct time_part *part)
+{
+    const uint64_t counts[] = {axis != NULL ? (uint64_t)axis->along : 0, axis != NULL ? axis->count : 0,
+                               (uint64_t)part->along, part->components};
+    digest = memo_digest(digest, counts, sizeof counts);
+    if (axis != NULL && axis->along != TIME_NONE)
+        digest = bytes_digest(digest, axis->at, axis->count * sizeof *axis->at);
+    if (part->along == TIME_NONE)
+        return digest;
+    digest = bytes_digest(digest, part->law, part->series * sizeof *part->law);
+    digest = bytes_digest(digest, part->noise, part->series * sizeof *part->noise);
+    return bytes_digest(digest, part->steps_law, part->components * sizeof *part->steps_law);
+}
+
+static uint64_t near_digest(uint64_t digest, const struct nearness *near, const struct near_part *part)
+{
+    const double known[] = {part->is_there, part->components, part->effect};
+    digest = memo_digest(digest, known, sizeof known);
+    if (near == NULL)
+        return digest;
+    digest = bytes_digest(digest, near->high, near->count * sizeof *near->high);
+    digest = bytes_digest(digest, near->low, near->count * sizeof *near->low);
+    return bytes_digest(digest, near->strength, near->count * sizeof *near->strength);
+}
 
 uint64_t evidence_digest(const struct cells *cells, const struct evidence_request *request, const struct model *start)
 {
@@ -30,6 +62,10 @@ uint64_t evidence_digest(const struct cells *cells, const struct evidence_reques
     digest = memo_digest(digest, reals, sizeof reals);
     digest = memo_digest(digest, start->offsets.row, start->rows * sizeof(double));
     digest = memo_digest(digest, start->offsets.column, start->columns * sizeof(double));
+    if (cells->by_row.weight != NULL)
+        digest = bytes_digest(digest, cells->by_row.weight, cells->count * sizeof *cells->by_row.weight);
+    digest = time_digest(digest, request->time, &start->time);
+    digest = near_digest(digest, request->near, &start->near);
     return low_rank_digest(digest, &start->low_rank);
 }
 
@@ -39,21 +75,25 @@ size_t evidence_state(struct evidence *evidence, const struct evidence_request *
     parts[0] = (struct memo_part){at, sizeof *at};
     parts[1] = (struct memo_part){evidence->arena.base, evidence->arena.reserved};
     parts[2] = (struct memo_part){result->trace, request->rounds * sizeof *result->trace};
+    size_t count = 3;
+    if (evidence->near != NULL)
+        parts[count++] = (struct memo_part){evidence->near->arena.base, evidence->near->arena.reserved};
     if (evidence->time == NULL)
-        return 3;
+        return count;
     /* The residual has been taken off the targets. */
     struct cells *target = &evidence->problem->target;
     size_t values = target->count * (target->precision == FESCUE_SINGLE ? sizeof(float) : sizeof(double));
-    parts[3] = (struct memo_part){evidence->time->arena.base, evidence->time->arena.reserved};
-    parts[4] = (struct memo_part){target->by_row.value, values};
-    parts[5] = (struct memo_part){target->by_column.value, values};
-    return 6;
+    parts[count++] = (struct memo_part){evidence->time->arena.base, evidence->time->arena.reserved};
+    parts[count++] = (struct memo_part){target->by_row.value, values};
+    parts[count++] = (struct memo_part){target->by_column.value, values};
+    return count;
 }
 
 void evidence_at_note(const struct evidence *evidence, struct evidence_at *at)
 {
     const struct evidence_time *time = evidence->time;
     at->noise = evidence->noise;
+    at->near_on = evidence->near != NULL && evidence->near->is_on;
     if (time == NULL)
         return;
     at->residual_on = time->residual_on;
@@ -65,6 +105,8 @@ void evidence_at_take(const struct evidence_at *at, struct evidence *evidence)
 {
     struct evidence_time *time = evidence->time;
     evidence->noise = at->noise;
+    if (evidence->near != NULL)
+        evidence->near->is_on = at->near_on != 0;
     if (time == NULL)
         return;
     time->residual_on = at->residual_on != 0;
@@ -114,7 +156,8 @@ void evidence_keep(struct memo_work *work, struct evidence_result *result)
                                  .scale = result->scale,
                                  .mean = offsets->mean,
                                  .row_ridge = offsets->row_ridge,
-                                 .column_ridge = offsets->column_ridge};
+                                 .column_ridge = offsets->column_ridge,
+                                 .near = result->model.near};
     if (result->fit.stop != STOP_CANCELLED)
         memo_keep(work, parts, result_parts(&sums, result, parts));
 }
@@ -133,6 +176,7 @@ static void sums_take(const struct evidence_sums *sums, struct evidence_result *
     out->model.offsets.mean = sums->mean;
     out->model.offsets.row_ridge = sums->row_ridge;
     out->model.offsets.column_ridge = sums->column_ridge;
+    out->model.near = sums->near;
     point->rank = sums->rank;
     point->left = matrix_left(point->left, sums->rank);
     point->right = matrix_left(point->right, sums->rank);

@@ -11,6 +11,8 @@
  *     mean  h = C c (t[0..p] - S[p, 0..p])                    (regressor p of the other side is its effect)
  *     expected squared error  q - 2 (h't[0..p] + t[p]) + <E[hh'], S[0..p, 0..p]> + 2 h'S[p, 0..p] + S[p, p]
  *
+ * Lines may have priors of their own instead (own, pull): diag(own) in L, and pull added to the right side.
+ *
  * A component whose prior variance is 0 is held at 0 by a precision far above any data.
  */
 #include "solve/evidence_internal.h"
@@ -18,9 +20,6 @@
 #include <assert.h>
 #include <math.h>
 #include <string.h>
-
-/* Precision that stands for "switched off": in units where cells have size one, no sum of cells comes near it. */
-#define PRECISION_OFF 1e30
 
 /* The prior variance of the effects follows MacKay's fixed point, mean of the squared posterior means over the share of
    it that the data decide, which has the same solution as the mean of E a^2 and reaches it, above all at 0, in far
@@ -75,7 +74,28 @@ void evidence_side_plant(struct evidence *evidence, struct evidence_side *side, 
 
 #define EACH_LANE for (size_t lane = 0; lane < BATCH_LANES; lane++)
 
-/* L into factor and c (t[0..p] - S[p, 0..p]) into mean. */
+/* Prior precision of component k of a line. */
+static double own_of(const struct evidence_side *side, size_t free, size_t line, size_t k)
+{
+    if (side->own != NULL)
+        return side->own[line * free + k];
+    return side->variance[k] > 0 ? 1 / side->variance[k] : EVIDENCE_PRECISION_OFF;
+}
+
+/* Where lines have priors of their own; lanes without a line have any. */
+static void own_add(const struct evidence_side *side, size_t free, size_t first, const struct lines_scratch *s)
+{
+    EACH_LANE
+    {
+        size_t line = first + lane < side->half->lines ? first + lane : first;
+        for (size_t k = 0; k < free; k++) {
+            s->factor[(packed_size(k) + k) * BATCH_LANES + lane] += side->own[line * free + k];
+            s->mean[k * BATCH_LANES + lane] += side->pull[line * free + k];
+        }
+    }
+}
+
+/* L into factor and c (t[0..p] - S[p, 0..p]) into mean, but for priors of the lines' own. */
 NUMERIC_VERSIONS
 static void systems_write(const struct evidence_side *side, size_t free, const double *restrict precision,
                           const struct lines_scratch *s)
@@ -86,7 +106,7 @@ static void systems_write(const struct evidence_side *side, size_t free, const d
     for (size_t at = 0; at < packed_size(free) * BATCH_LANES; at += BATCH_LANES)
         EACH_LANE factor[at + lane] = precision[lane] * second[at + lane];
     for (size_t k = 0; k < free; k++) {
-        double variance = side->variance[k], own = variance > 0 ? 1 / variance : PRECISION_OFF;
+        double own = side->own != NULL ? 0 : own_of(side, free, 0, k);
         EACH_LANE factor[(packed_size(k) + k) * BATCH_LANES + lane] += own;
         EACH_LANE mean[k * BATCH_LANES + lane] =
             precision[lane] * (target[k * BATCH_LANES + lane] - cross[k * BATCH_LANES + lane]);
@@ -94,16 +114,18 @@ static void systems_write(const struct evidence_side *side, size_t free, const d
 }
 
 /* One lane whose pivots broke down, again and with a lift. */
-static void lane_solve(const struct evidence_side *side, size_t free, double precision, size_t lane,
+static void lane_solve(const struct evidence_side *side, size_t free, double precision, size_t line,
                        const struct lines_scratch *s)
 {
+    size_t lane = line % BATCH_LANES;
     double *factor = s->beyond, *inverse = s->gathered.work, *mean = inverse + packed_size(free);
     const double *cross = s->gathered.second + packed_size(free) * BATCH_LANES;
     for (size_t at = 0; at < packed_size(free); at++)
         factor[at] = precision * s->gathered.second[at * BATCH_LANES + lane];
     for (size_t k = 0; k < free; k++) {
-        factor[packed_size(k) + k] += side->variance[k] > 0 ? 1 / side->variance[k] : PRECISION_OFF;
+        factor[packed_size(k) + k] += own_of(side, free, line, k);
         mean[k] = precision * (s->gathered.target[k * BATCH_LANES + lane] - cross[k * BATCH_LANES + lane]);
+        mean[k] += side->pull != NULL ? side->pull[line * free + k] : 0;
     }
     packed_cholesky(factor, free);
     packed_solve(factor, free, mean);
@@ -143,17 +165,19 @@ static void moments_write(size_t rank, const struct lines_scratch *s, double *re
 }
 
 /* Posteriors of a batch of lines into mean and moment; error[lane] is the expected squared error. */
-static void lines_solve(const struct evidence_side *side, size_t rank, const double *precision,
+static void lines_solve(const struct evidence_side *side, size_t rank, size_t first, const double *precision,
                         const struct lines_scratch *s, double *error)
 {
     size_t free = rank + 1;
     const double *cross = s->gathered.second + packed_size(free) * BATCH_LANES, *target = s->gathered.target;
     double inner[BATCH_LANES];
     systems_write(side, free, precision, s);
+    if (side->own != NULL)
+        own_add(side, free, first, s);
     unsigned broken = packed_batch_solve(side->moments.kernel, s->factor, free, s->mean, s->covariance);
     for (size_t lane = 0; broken >> lane != 0; lane++)
         if (broken >> lane & 1)
-            lane_solve(side, free, precision[lane], lane, s);
+            lane_solve(side, free, precision[lane], first + lane, s);
     moments_write(rank, s, inner);
     EACH_LANE error[lane] = s->gathered.square[lane] - 2 * target[free * BATCH_LANES + lane] +
                             cross[free * BATCH_LANES + lane] + inner[lane];
@@ -181,7 +205,7 @@ static void update_batch(void *opaque, size_t batch, size_t worker)
     EACH_LANE precision[lane] = lane < count ? side->line_precision[first + lane] / evidence->noise : 0;
     EACH_LANE to[lane] = lane < count ? side->moments.data + (first + lane) * side->moments.stride : s.beyond;
     moments_gather(&job->other->moments, side->half, evidence->problem->target.precision, first, &s.gathered);
-    lines_solve(side, rank, precision, &s, error);
+    lines_solve(side, rank, first, precision, &s, error);
     packed_batch_unpack(side->moments.kernel, s.moment, packed_size(rank + 2), to);
     for (size_t lane = 0; lane < count; lane++) {
         size_t line = first + lane;

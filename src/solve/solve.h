@@ -91,6 +91,7 @@ struct evidence_request {
     double noise_start;          /* first guess of the noise variance, table units; 0: the whole variance */
     uint64_t seed, rounds;
     const struct time_axis *time; /* borrowed; NULL or along none: lines have no order */
+    const struct nearness *near;  /* borrowed; NULL: nothing is known of columns being near one another */
     double change;   /* ends when the rms change of the estimates, over the table's scale, falls below this */
     double deadline; /* clock_wall() second, or 0 for none */
 };

@@ -134,6 +134,17 @@ fescue_status table_read(fescue_context *context, const char *path, const struct
 /* Multiplies the weights of the cells by those of their rows and columns, read from files (weights.c); a path may be
    NULL. Takes the table before anybody else has it. FESCUE_NO_INPUT, FESCUE_BAD_DATA with one line. */
 fescue_status table_weigh(fescue_table *table, const char *row_path, const char *column_path);
+/* Pairs of columns that are near one another, ascending, low < high; the columns that are near any have strengths that
+   sum to one in the mean. */
+struct nearness {
+    uint32_t columns;
+    uint64_t count; /* 0: nothing is known */
+    uint32_t *high, *low;
+    double *strength;
+};
+/* From a file (nearness.c). FESCUE_NO_INPUT, FESCUE_BAD_DATA with one line. The caller owns *near. */
+fescue_status nearness_read(const fescue_table *table, const char *path, struct nearness *near);
+void nearness_free(fescue_context *context, struct nearness *near);
 /* New table from numbers in memory (copied); fails on an index out of range, a duplicate, a value not finite. */
 fescue_status table_from_triplets(fescue_context *context, uint32_t rows, uint32_t columns, uint64_t count,
                                   const uint32_t *row, const uint32_t *column, const double *value,

@@ -8,6 +8,7 @@
  *             rows, columns, observed, duplicates, checksums of the labels
  *   time      which side is in time, its step, gaps, equal times; or along none
  *   season    whether there is one, and its waves
+ *   near      whether near columns are drawn together, how many pairs there are, how strongly, and the RMSE without
  *   weights   whether cells, rows, columns brought their own, and the range of the cells' (mean one)
  *   options   every option that bears on results, as the text that sets it
  *   choice    offsets, rank, ridge (null where the fit learns one a component: then the noise it assumes); hidden
@@ -167,6 +168,19 @@ static struct record weights_record(const struct run *run)
     flag_set(&record, "of_columns", weights->columns != NULL);
     real_set(&record, "least", weights->most > 0 ? weights->least : NAN);
     real_set(&record, "most", weights->most > 0 ? weights->most : NAN);
+    return record;
+}
+
+static struct record near_record(const struct run *run)
+{
+    const struct near_part *near = &run->model->near;
+    const struct errors *without = &run->choice->far_errors;
+    struct record record = record_open(run->context);
+    flag_set(&record, "is_there", near->is_there);
+    count_set(&record, "pairs", run->near->count);
+    real_set(&record, "components", near->is_there ? near->components : NAN);
+    real_set(&record, "offsets", near->is_there ? near->effect : NAN);
+    real_set(&record, "rmse_without", without->count > 0 ? without->rmse : NAN);
     return record;
 }
 
@@ -450,6 +464,7 @@ static struct record run_record(const struct run *run)
     record_set(&record, "time", time_record(run));
     record_set(&record, "season", season_record(run));
     record_set(&record, "weights", weights_record(run));
+    record_set(&record, "near", near_record(run));
     record_set(&record, "options", options_record(run));
     record_set(&record, "choice", choice_record(run));
     record_set(&record, "judgement", judgement_record(run));

@@ -96,6 +96,27 @@ static uint64_t lines_without(const uint32_t *support, uint32_t lines)
     return without;
 }
 
+/* Where columns go with near ones: smooth and mean again. Low-rank cells lie in rows and columns with cells. */
+static void near_count(struct run *run)
+{
+    const struct determined *d = run->determined;
+    bool has_steps = d->smooth == TIME_ROWS, has_effects = has_row_effects(run) || has_column_effects(run);
+    uint64_t empty_rows = lines_without(d->row_support, d->rows), smooth = 0, mean = 0, low_rank = 0;
+    for (uint32_t j = 0; j < d->columns; j++) {
+        bool has_cells = d->column_support[j] > 0, has_effect = has_column_effects(run) && has_cells;
+        if ((has_steps && has_cells) || d->near[j]) {
+            smooth += has_steps ? d->rows : d->rows - empty_rows;
+            mean += has_steps || has_effect ? 0 : empty_rows;
+            continue;
+        }
+        for (uint32_t i = 0; i < d->rows && has_cells; i++)
+            low_rank += determined_basis(d, i, j) == BASIS_LOW_RANK;
+        mean += has_effect ? 0 : has_row_effects(run) ? empty_rows : d->rows;
+    }
+    run->filled[BASIS_SMOOTH] = smooth - (d->low_rank - low_rank);
+    run->filled[BASIS_MEAN] = mean - (has_effects ? 0 : low_rank);
+}
+
 /* Cells of the whole table by basis. */
 static void table_count(struct run *run)
 {
@@ -117,6 +138,8 @@ static void table_count(struct run *run)
         run->filled[BASIS_SMOOTH] = all - empty_series * steps - low_rank;
         run->filled[BASIS_MEAN] = empty_series * plain_steps;
     }
+    if (d->near != NULL)
+        near_count(run);
     run->filled[BASIS_OFFSETS] = all - low_rank - run->filled[BASIS_SMOOTH] - run->filled[BASIS_MEAN];
     run->blank = all - low_rank;
     if (!has_low_rank(run)) {

@@ -33,6 +33,7 @@ struct run {
     double scale;                   /* of its problem: units of the table in one of the fit's */
     const struct determined *determined;
     const struct judgement *judgement;
+    const struct nearness *near;               /* of the columns; count 0: nothing is known */
     const struct hole_shape *shape;            /* of what was hidden */
     double started, seconds_wall, seconds_cpu; /* started: Unix time */
     uint64_t hidden;                           /* cells held out while choosing */
