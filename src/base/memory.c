@@ -16,6 +16,7 @@
 #include <stdio.h>
 #include <stdlib.h>
 #include <string.h>
+#include <sys/mman.h>
 
 enum { ALIGNMENT = 64 };
 
@@ -53,11 +54,26 @@ static void *pointer_load(const void *place)
     return block;
 }
 
+/* A block this large gets pages of 2 MB, where the system has them: its first touch then costs a fifth, and so do random
+   accesses, which nearly all miss the table of small pages. Only whole pages inside of it: no byte more is used. */
+static void pages_enlarge(void *taken, size_t size)
+{
+    enum { LARGE_PAGE = 1 << 21, LEAST_PAGES = 4 };
+    uintptr_t first = ((uintptr_t)taken + LARGE_PAGE - 1) & ~(uintptr_t)(LARGE_PAGE - 1);
+    uintptr_t end = ((uintptr_t)taken + size) & ~(uintptr_t)(LARGE_PAGE - 1);
+    if (size >= LEAST_PAGES * (size_t)LARGE_PAGE)
+        (void)madvise((void *)first, end - first, MADV_HUGEPAGE); /* a wish: it may be refused */
+}
+
 /* calloc rather than malloc: pages that are never touched then cost nothing. */
 static void *taken_zeroed(const struct fescue_hooks *hooks, size_t size)
 {
-    if (hooks->take == NULL)
-        return calloc(1, size);
+    if (hooks->take == NULL) {
+        void *zeroed = calloc(1, size);
+        if (zeroed != NULL)
+            pages_enlarge(zeroed, size);
+        return zeroed;
+    }
     void *taken = hooks->take(hooks->data, size);
     if (taken != NULL)
         memset(taken, 0, size);
