@@ -7,31 +7,24 @@
  * lines before it are known; so what is said of a fault, and where, is said in one place (matrix_market.c). What is
  * accepted here is accepted there, with the same value.
  *
- * Digits are read eight at a time (Lemire 2021, "Number parsing at a gigabyte per second", section 7): a word of eight
- * characters less eight times '0' has a byte above 9 where the digits end; shifted so that the last digit is the last
- * byte, three multiplications add pairs of digits, pairs of pairs and the two halves. A value of less than eight digits
- * on either side of its point is then one division away (way 1 of number.c); others go there.
+ * Most lines are short: row, column and a value of few digits, each behind one blank. Where there is SSE2, such a line
+ * is cut by the mask of its first 32 characters that are no digits; so the next line can begin before the numbers of
+ * this one are made. Others are read field by field.
  *
  * Every line but the last of a file ends with a line feed, which is no digit and no blank: so no loop over those looks
  * for the end of the chunk. A chunk without one at its end is given up.
  */
-#include "table/table_internal.h"
+#include "table/digits.h"
 
-#include <endian.h>
 #include <math.h>
-#include <string.h>
-
-_Static_assert(CHUNK_SLACK >= sizeof(uint64_t), "eight characters can be read from any place of a chunk");
+#ifdef __SSE2__
+#include <emmintrin.h>
+#endif
 
 /* What is not read yet. */
 struct rest {
     const char *at, *end;
 };
-
-static inline bool is_digit(char c)
-{
-    return (unsigned char)(c - '0') < 10;
-}
 
 /* The blanks before a field; whether there is one. */
 static inline bool blanks_skip(struct rest *rest)
@@ -40,25 +33,6 @@ static inline bool blanks_skip(struct rest *rest)
     while (*rest->at == ' ' || *rest->at == '\t')
         rest->at++;
     return rest->at > before;
-}
-
-/* Reads the digits at `at`, at most eight of them, and returns how many there are. */
-static inline unsigned eight_digits(const char *at, uint64_t *number)
-{
-    static const uint64_t ones = 0x0101010101010101;
-    uint64_t word;
-    memcpy(&word, at, sizeof word);
-    word = le64toh(word) ^ ones * '0';
-    uint64_t beyond = ((word + ones * (0x80 - 10)) | word) & ones * 0x80; /* right up to the first that is no digit */
-    unsigned count = beyond == 0 ? 8 : (unsigned)__builtin_ctzll(beyond) / 8;
-    *number = 0;
-    if (count == 0)
-        return 0;
-    word <<= 8 * (8 - count);
-    word = word * (1 + (10 << 8)) >> 8;
-    word = (word & 0x00ff00ff00ff00ff) * (1 + (UINT64_C(100) << 16)) >> 16;
-    *number = (word & 0x0000ffff0000ffff) * (1 + (UINT64_C(10000) << 32)) >> 32;
-    return count;
 }
 
 /* A number from 1 to `most`, of at most ten digits, which say more than any side has. */
@@ -84,22 +58,10 @@ static inline bool line_end_take(struct rest *rest)
 /* A short value; leaves the rest where it was when it is none. */
 static inline bool short_value_take(struct rest *rest, double *value)
 {
-    static const double power[] = {1e0, 1e1, 1e2, 1e3, 1e4, 1e5, 1e6, 1e7};
-    const char *at = rest->at;
-    bool negative = *at == '-';
-    uint64_t whole, fraction = 0;
-    at += negative;
-    unsigned digits = eight_digits(at, &whole), decimals = 0;
-    at += digits;
-    if (*at == '.') {
-        decimals = eight_digits(++at, &fraction);
-        at += decimals;
-    }
-    if (digits == 0 || digits == 8 || decimals == 8 || *at > ' ' || *at < 0) /* longer, an exponent, no number */
+    const char *end = short_value_read(rest->at, '.', value);
+    if (end == NULL || *end > ' ' || *end < 0)
         return false;
-    double size = ((double)whole * power[decimals] + (double)fraction) / power[decimals];
-    *value = negative ? -size : size;
-    rest->at = at;
+    rest->at = end;
     return true;
 }
 
@@ -137,6 +99,68 @@ static inline bool coordinate_take(const struct market_form *form, struct rest *
            place_take(rest, form->columns, &entry->column) && blanks_skip(rest) && value_take(form, rest, entry) &&
            line_end_take(rest) && is_in_triangle(form, entry);
 }
+
+#ifdef __SSE2__
+
+enum { WINDOW = 32 };
+
+/* The characters of the window that are no digits, the first in the lowest bit. */
+static inline uint32_t others_find(const char *at)
+{
+    const __m128i zero = _mm_set1_epi8('0'), nine = _mm_set1_epi8(9);
+    __m128i low = _mm_sub_epi8(_mm_loadu_si128((const __m128i *)(const void *)at), zero);
+    __m128i high = _mm_sub_epi8(_mm_loadu_si128((const __m128i *)(const void *)(at + WINDOW / 2)), zero);
+    low = _mm_cmpeq_epi8(_mm_min_epu8(low, nine), low);
+    high = _mm_cmpeq_epi8(_mm_min_epu8(high, nine), high);
+    return ~((uint32_t)_mm_movemask_epi8(low) | (uint32_t)_mm_movemask_epi8(high) << WINDOW / 2);
+}
+
+/* A short line, "row column [-]digits[.digits]" with less than eight digits each and one blank between; at anything
+   else false, and the rest stays where it was. Bits above those of the window are set, so that the mask is never empty.
+   Nothing branches on a sign or a point, which no processor could foresee. */
+static inline bool short_line_take(const struct market_form *form, struct rest *rest, struct pile_entry *entry)
+{
+    const char *at = rest->at;
+    if (rest->end - at < WINDOW)
+        return false;
+    const uint64_t beyond = UINT64_C(15) << WINDOW;
+    uint64_t others = others_find(at) | beyond;
+    const unsigned row_end = (unsigned)__builtin_ctzll(others);
+    others &= others - 1;
+    const unsigned column_end = (unsigned)__builtin_ctzll(others), column = row_end + 1;
+    others &= others - 1;
+    const bool negative = at[column_end + 1] == '-';
+    others &= (others - 1) | ((uint64_t)negative - 1);
+    const unsigned value = column_end + 1 + negative, whole_end = (unsigned)__builtin_ctzll(others);
+    const bool has_point = at[whole_end] == '.';
+    others &= (others - 1) | ((uint64_t)has_point - 1);
+    const unsigned end = (unsigned)__builtin_ctzll(others), fraction = whole_end + has_point;
+    const unsigned decimals = end - fraction;
+    if (at[row_end] != ' ' || at[column_end] != ' ' || at[end] != '\n' || end >= WINDOW || row_end - 1 > 6 ||
+        column_end - column - 1 > 6 || whole_end - value - 1 > 6 || decimals > 7 || (has_point && form->is_integer))
+        return false;
+    entry->row = (uint32_t)digits_number(digits_load(at), row_end) - 1;
+    entry->column = (uint32_t)digits_number(digits_load(at + column), column_end - column) - 1;
+    uint64_t whole = digits_number(digits_load(at + value), whole_end - value);
+    uint64_t part = digits_number(digits_load(at + fraction), decimals);
+    double size = ((double)whole * digits_power[decimals] + (double)part) / digits_power[decimals];
+    entry->value = negative ? -size : size;
+    entry->text = at + column_end + 1;
+    entry->end = at + end;
+    bool is_ours = entry->row < form->rows && entry->column < form->columns && is_in_triangle(form, entry);
+    rest->at += is_ours ? end + 1 : 0;
+    return is_ours;
+}
+
+#else
+
+static inline bool short_line_take(const struct market_form *form, struct rest *rest, struct pile_entry *entry)
+{
+    (void)form, (void)rest, (void)entry;
+    return false;
+}
+
+#endif
 
 /* A value, or a hole: nan. */
 static inline bool array_take(const struct market_form *form, struct rest *rest, struct pile_entry *entry,
@@ -179,7 +203,8 @@ static fescue_status lines_parse(const struct market_form *form, struct rest res
     *is_plain = true;
     while (rest.at < rest.end && *is_plain) {
         bool is_hole = false;
-        *is_plain = form->is_array ? array_take(form, &rest, &entry, &is_hole) : coordinate_take(form, &rest, &entry);
+        *is_plain = form->is_array ? array_take(form, &rest, &entry, &is_hole)
+                                   : short_line_take(form, &rest, &entry) || coordinate_take(form, &rest, &entry);
         if (is_hole)
             hole_add(block, form->pile->precision);
         else if (*is_plain && form->pile->keeps_texts)

@@ -228,6 +228,75 @@ static void arrays_keep_their_places(void **state)
     }
 }
 
+/* Lines at the edge of what is read at one go: as a remark at the end, which has all be read line by line, tells. */
+static void a_remark_changes_nothing(void **state)
+{
+    struct bench *bench = bench_of(state);
+    static const char *const lines[] = {
+        "1 2 3",
+        "01 002 3.0",
+        "1 2 -3.25",
+        "1 2 -0",
+        "1 2 0.1234567",
+        "1 2 0.12345678",
+        "1 2 1234567.75",
+        "1 2 12345678.75",
+        "1 2 3.",
+        "1 2 .5",
+        "1 2 +3",
+        "1 2 3e2",
+        "1 2 3\r",
+        "1 2  3",
+        " 1 2 3",
+        "1\t2 3",
+        "1 2 3 ",
+        "1 2 3 4",
+        "1 2",
+        "0 2 3",
+        "51 2 3",
+        "1 61 3",
+        "1 0 3",
+        "1 2 -",
+        "1 2 .",
+        "1 2 nan",
+        "1 2 1.2.3",
+        "1 2 --3",
+        "-1 2 3",
+        "1 -2 3",
+        "1 2.0 3",
+        "1 2 -.5",
+        "1 2 1/2",
+        "12345678 2 3",
+        "1 2 \xb2",
+        "1 2 3-",
+        "1 2 99999999",
+        "1 2 9999999",
+        "1 2 0.30000000001",
+        "1 2 -12345.67890",
+    };
+    for (size_t k = 0; k < sizeof lines / sizeof lines[0]; k++) {
+        fescue_table *table[2];
+        char text[256], sentence[256] = "";
+        fescue_status status[2];
+        for (int remark = 0; remark < 2; remark++) {
+            int length = snprintf(text, sizeof text,
+                                  "%%%%MatrixMarket matrix coordinate real general\n50 60 4\n48 58 1.25\n%s\n"
+                                  "49 59 -0.5\n50 60 7\n%s",
+                                  lines[k], remark ? "% remark\n" : "");
+            fescue_failure_clear(bench->context);
+            status[remark] = bytes_read(bench, text, (size_t)length, NULL, &table[remark]);
+            if (remark == 0 && status[0] != FESCUE_OK)
+                snprintf(sentence, sizeof sentence, "%s", fescue_failure_text(bench->context));
+        }
+        assert_int_equal(status[0], status[1]);
+        if (status[0] == FESCUE_OK)
+            tables_equal(table[0], table[1]);
+        else
+            assert_string_equal(sentence, fescue_failure_text(bench->context));
+        table_destroy(&table[0]), table_destroy(&table[1]);
+    }
+}
+
 int main(void)
 {
     const struct CMUnitTest tests[] = {
@@ -236,6 +305,7 @@ int main(void)
         BENCH_TEST(promises_are_held_to),
         BENCH_TEST(what_comes_first_is_told),
         BENCH_TEST(arrays_keep_their_places),
+        BENCH_TEST(a_remark_changes_nothing),
     };
     return cmocka_run_group_tests_name("market_chunk", tests, NULL, NULL);
 }
