@@ -18,7 +18,7 @@ enum { CHART = 46 }; /* columns of the scale */
 struct fescue_ranking {
     fescue_context *context; /* borrowed */
     const fescue_table *table;
-    struct fescue_options options; /* a copy; its texts are dropped */
+    struct fescue_options options; /* a copy; its texts are dropped in the end */
     struct ranking ranking;
     char *text;
 };
@@ -44,10 +44,12 @@ static struct scale scale_find(const struct ranking *ranking)
         scale.low = fmin(scale.low, rmse);
         scale.high = isfinite(rmse) ? fmax(scale.high, rmse) : scale.high;
     }
-    if (ranking->learnt.fold != NULL && isfinite(ranking->learnt.rmse)) {
-        scale.low = fmin(scale.low, ranking->learnt.rmse);
-        scale.high = fmax(scale.high, ranking->learnt.rmse);
-    }
+    const struct ranking_point *beside[] = {&ranking->learnt, &ranking->interpolation};
+    for (size_t k = 0; k < sizeof beside / sizeof beside[0]; k++)
+        if (beside[k]->fold != NULL && isfinite(beside[k]->rmse)) {
+            scale.low = fmin(scale.low, beside[k]->rmse);
+            scale.high = fmax(scale.high, beside[k]->rmse);
+        }
     return scale;
 }
 
@@ -75,7 +77,9 @@ static void dot_draw(const struct scale *scale, const struct ranking_point *poin
         line[k - 1] = '\0';
 }
 
-static void point_line(struct text *text, const struct scale *scale, const struct ranking_point *point, char mark)
+/* name NULL: the rank. */
+static void point_line(struct text *text, const struct scale *scale, const struct ranking_point *point, char mark,
+                       const char *name)
 {
     char ridge[32] = "-", rmse[32], rank[32], line[CHART + 1];
     if (point->rank > 0 && isnan(point->ridge))
@@ -85,7 +89,7 @@ static void point_line(struct text *text, const struct scale *scale, const struc
     snprintf(rank, sizeof rank, point->rank_greatest > point->rank_least ? "%u-%u" : "%u", point->rank_least,
              point->rank_greatest);
     dot_draw(scale, point, mark, line);
-    text_add(text, "  %c%5s  %-7s %-11s |%s\n", mark == 'o' ? ' ' : mark, rank, ridge,
+    text_add(text, "  %c%5s  %-7s %-11s |%s\n", mark == 'o' ? ' ' : mark, name != NULL ? name : rank, ridge,
              real_to_words(point->rmse, 5, rmse), line);
 }
 
@@ -97,9 +101,11 @@ static void chart_add(struct text *text, const struct ranking *ranking)
     real_to_words(scale.high, 4, high);
     text_add(text, "\n    rank  ridge   RMSE         %s%*s\n", low, CHART - (int)strlen(low), high);
     for (uint64_t k = 0; k < ranking->count; k++)
-        point_line(text, &scale, &ranking->point[k], k == ranking->chosen ? '*' : 'o');
+        point_line(text, &scale, &ranking->point[k], k == ranking->chosen ? '*' : 'o', NULL);
     if (ranking->learnt.fold != NULL)
-        point_line(text, &scale, &ranking->learnt, 'o');
+        point_line(text, &scale, &ranking->learnt, 'o', NULL);
+    if (ranking->interpolation.fold != NULL)
+        point_line(text, &scale, &ranking->interpolation, 'o', "time");
     text_add(text, "\n");
 }
 
@@ -120,6 +126,8 @@ static void head_add(struct text *text, const struct fescue_ranking *all)
     text_add(text, "%u rows by %u columns, %" PRIu64 " cells observed; %u folds hide %s.\n", cells->rows,
              cells->columns, cells->count, ranking->folds, shapes[ranking->shape.shape]);
     text_add(text, "Offsets: %s.\n", kind_word(ranking->point[0].offsets));
+    if (ranking->is_weighted)
+        text_add(text, "Weighted: each rank is the evidence fit with so many components at most.\n");
 }
 
 static void choice_add(struct text *text, const struct ranking *ranking)
@@ -156,6 +164,17 @@ static void learnt_add(struct text *text, const struct ranking *ranking)
              percent(fabs(ratio - 1), share), ratio < 1 ? "less" : "more");
 }
 
+static void interpolation_add(struct text *text, const struct ranking *ranking)
+{
+    const struct ranking_point *rival = &ranking->interpolation, *chosen = &ranking->point[ranking->chosen];
+    char share[32];
+    if (rival->fold == NULL || chosen->is_exact)
+        return;
+    double ratio = rival->rmse / chosen->rmse;
+    text_add(text, "Plain interpolation in time comes to %s %% %s error than %s.\n", percent(fabs(ratio - 1), share),
+             ratio < 1 ? "less" : "more", ranking->has_structure ? "the rank" : "the offsets");
+}
+
 static void rival_add(struct text *text, const struct ranking *ranking)
 {
     const struct ranking_point *rival = &ranking->rival;
@@ -174,14 +193,22 @@ static void end_add(struct text *text, const struct fescue_ranking *all)
         text_add(text, "The error still falls at the largest rank that was tried; --rank-most allows more.\n");
 }
 
-/* The path in quotes for a shell, with what cannot be shown left to the user. */
-static void path_add(struct text *text, const char *path)
+/* The path as a shell takes it, or what it stands for, which is left to the user. */
+static void path_add(struct text *text, const char *path, const char *word)
 {
     static const char plain[] = "abcdefghijklmnopqrstuvwxyzABCDEFGHIJKLMNOPQRSTUVWXYZ0123456789_./-+:,=@%";
     if (path[0] != '\0' && strspn(path, plain) == strlen(path))
         text_add(text, "%s", path);
     else
-        text_add(text, "TABLE");
+        text_add(text, "%s", word);
+}
+
+static void weights_add(struct text *text, const char *option, const char *path)
+{
+    if (path == NULL)
+        return;
+    text_add(text, " %s ", option);
+    path_add(text, path, "FILE");
 }
 
 static void command_add(struct text *text, const struct fescue_ranking *all)
@@ -193,13 +220,15 @@ static void command_add(struct text *text, const struct fescue_ranking *all)
     text_add(text, all->ranking.is_learnt_better
                        ? "\nTo fill with the evidence fit, which needs no rank:\n    fescue fill "
                        : "\nTo fill with it:\n    fescue fill ");
-    path_add(text, all->table->path);
+    path_add(text, all->table->path, "TABLE");
     if (strcmp(all->table->path, "-") == 0)
         text_add(text, " -o filled");
     if (!all->ranking.is_learnt_better)
         text_add(text, " --offsets %s --rank %u", kind_word(chosen->offsets), chosen->rank);
-    if (!all->ranking.is_learnt_better && chosen->rank > 0)
+    if (!all->ranking.is_learnt_better && chosen->rank > 0 && !isnan(chosen->ridge))
         text_add(text, " --ridge %s", chosen->is_exact ? "0" : real_to_words(chosen->ridge, 15, ridge));
+    weights_add(text, "--row-weights", all->options.row_weights);
+    weights_add(text, "--column-weights", all->options.column_weights);
     text_add(text, "\n");
 }
 
@@ -210,6 +239,7 @@ static fescue_status ranking_text_make(struct fescue_ranking *all)
     chart_add(&text, &all->ranking);
     choice_add(&text, &all->ranking);
     learnt_add(&text, &all->ranking);
+    interpolation_add(&text, &all->ranking);
     rival_add(&text, &all->ranking);
     end_add(&text, all);
     command_add(&text, all);
@@ -248,6 +278,7 @@ fescue_status fescue_rank_table(const fescue_table *table, const struct fescue_o
     all->options = *options;
     all->options.output = NULL;
     status = ranking_make(all);
+    all->options.row_weights = all->options.column_weights = NULL;
     if (status != FESCUE_OK)
         fescue_ranking_destroy(&all);
     *out = all;

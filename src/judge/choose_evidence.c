@@ -88,18 +88,32 @@ done:
     return status;
 }
 
-static fescue_status learn(struct chooser *chooser, const struct candidate *alone, struct candidate *candidate)
+static fescue_status learn_as(struct chooser *chooser, const struct evidence_request *request,
+                              const struct candidate *alone, struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
     struct evidence_result result = {0};
-    struct evidence_request request = evidence_request_of(chooser, alone);
     TRY(progress_tell(chooser->context, "choosing", -1));
     TRY(candidate_copy(chooser, alone, candidate));
-    TRY(evidence_learn(chooser->context, chooser->kept, &request, &result));
+    TRY(evidence_learn(chooser->context, chooser->kept, request, &result));
     TRY(candidate_take(chooser, &result, EVIDENCE_NOISE_EQUAL, candidate));
 done:
     evidence_result_free(chooser->context, &result);
     return status;
+}
+
+static fescue_status learn(struct chooser *chooser, const struct candidate *alone, struct candidate *candidate)
+{
+    struct evidence_request request = evidence_request_of(chooser, alone);
+    return learn_as(chooser, &request, alone, candidate);
+}
+
+fescue_status evidence_reach(struct chooser *chooser, const struct candidate *alone, size_t rank,
+                             struct candidate *candidate)
+{
+    struct evidence_request request = evidence_request_of(chooser, alone);
+    request.rank = request.rank_most = rank;
+    return learn_as(chooser, &request, alone, candidate);
 }
 
 /* The lines whose noise may differ: with time the series, else those of the shorter side. */

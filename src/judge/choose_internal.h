@@ -120,6 +120,10 @@ fescue_status path_try_exact(struct chooser *chooser, struct candidate *candidat
 bool evidence_is_meant(const struct chooser *chooser);
 /* What the candidate's kind of offsets and noise asks of the evidence fit. */
 struct evidence_request evidence_request_of(const struct chooser *chooser, const struct candidate *candidate);
+/* The evidence fit with at most so many components, on the kind of offsets that `alone` is. *candidate, zero or a
+   candidate, becomes it. */
+fescue_status evidence_reach(struct chooser *chooser, const struct candidate *alone, size_t rank,
+                             struct candidate *candidate);
 /* The evidence fit for each kind of offsets, given as offsets alone; *best is the kind of the winner. */
 fescue_status evidence_compete(struct chooser *chooser, const struct candidate *const *alone, size_t count,
                                struct candidate *winner, size_t *best);

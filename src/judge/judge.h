@@ -136,12 +136,14 @@ struct ranking_point {
 struct ranking {
     struct ranking_point *point; /* owned; ranks 0, 1, 2, ... of the kind of offsets that was chosen */
     uint64_t count, best, chosen;
-    struct ranking_point learnt; /* by the evidence fit; fold NULL: there is none */
-    struct ranking_point rival;  /* what the other kind of offsets comes to; fold NULL: there was none */
+    struct ranking_point learnt;        /* by the evidence fit; fold NULL: there is none */
+    struct ranking_point interpolation; /* in time, of rank 0; fold NULL: there is no time axis */
+    struct ranking_point rival;         /* what the other kind of offsets comes to; fold NULL: there was none */
     uint32_t folds;
     uint64_t hidden; /* cells, over all folds */
     struct hole_shape shape;
-    bool has_structure;    /* something beats rank 0 */
+    bool has_structure; /* something beats rank 0 */
+    bool is_weighted;   /* each rank is the evidence fit with so many components at most, which alone takes weights */
     bool is_learnt_better; /* the evidence fit beats what was chosen, by two standard errors */
     bool is_cut;           /* a time limit ended the path */
     bool is_ended;         /* the path ended because no rank gained any more; else at the largest */

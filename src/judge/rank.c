@@ -23,6 +23,10 @@
  * more, and the point with more components has to win by two standard errors. Offsets that explain nothing on their own
  * are not followed. The evidence fit, which learns rank and shrinkage from the kept cells alone, competes as one line.
  *
+ * Where cells have weights, squared errors are weighted by them, and the fit at each rank is the evidence fit with so
+ * many components at most, which learns its shrinkage: no other takes weights. With a time axis, interpolation in time
+ * is one line more.
+ *
  * Folds run in parallel (rank_fold); the sums over them are in their order. Cost: K times some three or four loose fits
  * a rank and kind.
  */
@@ -38,7 +42,7 @@ struct cross {
     struct rank_folds folds;
     const struct ranking_request *request;
     size_t kinds, rank_most;
-    bool is_late, is_ended;
+    bool is_late, is_ended, is_weighted;
 };
 
 static fescue_status stage_run(struct cross *cross, enum stage stage, size_t number)
@@ -158,10 +162,15 @@ done:
     return status;
 }
 
-/* The next rank, at its best ridge. */
-static fescue_status rank_next(struct cross *cross, double best_error)
+/* The next rank of a path over offsets of kind number `kind`, at its best ridge. */
+static fescue_status rank_next(struct cross *cross, size_t kind, const struct curve *curve)
 {
     fescue_status status;
+    double best_error = curve->point[curve->best].rmse * curve->point[curve->best].rmse;
+    if (cross->is_weighted) {
+        struct stage_request request = {.stage = STAGE_REACH, .kind = kind, .rung = curve->count};
+        return rank_folds_run(&cross->folds, request);
+    }
     TRY(stage_run(cross, STAGE_GROW, 0));
     double error = rank_folds_error(&cross->folds, rank_fold_current);
     TRY(ridge_find(cross, &error));
@@ -175,8 +184,9 @@ done:
 static fescue_status curve_add(struct cross *cross, struct curve *curve)
 {
     fescue_status status;
-    TRY(point_make(cross, rank_fold_current, &curve->point[curve->count]));
-    curve->count++;
+    struct ranking_point *point = &curve->point[curve->count];
+    TRY(point_make(cross, rank_fold_current, point));
+    point->rank = point->rank_least = point->rank_greatest = (uint32_t)curve->count++;
     const struct ranking_point *last = &curve->point[curve->count - 1], *best = &curve->point[curve->best];
     bool gains = last->rmse < best->rmse * (1 - gain_worth) || (last->is_exact && !best->is_exact);
     if (gains)
@@ -193,8 +203,7 @@ static fescue_status path_follow(struct cross *cross, size_t kind, struct curve 
     TRY(curve_add(cross, curve));
     cross->is_ended = false;
     while (curve->count <= cross->rank_most && !cross->is_ended && !is_late(cross)) {
-        double best = curve->point[curve->best].rmse;
-        TRY(rank_next(cross, best * best));
+        TRY(rank_next(cross, kind, curve));
         TRY(curve_add(cross, curve));
         cross->is_ended =
             curve->point[curve->count - 1].is_exact || curve->count - 1 - curve->best >= 3 + curve->best / 4;
@@ -306,13 +315,33 @@ done:
     return status;
 }
 
+static fescue_status interpolation_add(struct cross *cross, struct ranking *ranking)
+{
+    fescue_status status = FESCUE_OK;
+    const struct rank_folds *folds = &cross->folds;
+    struct ranking_point *point = &ranking->interpolation;
+    double sum = 0;
+    if (folds->fold[0].interpolation.count == 0)
+        goto done;
+    TRY(TAKE(folds->context, folds->count, &point->fold));
+    for (uint32_t k = 0; k < folds->count; k++) {
+        const struct errors *errors = &folds->fold[k].interpolation;
+        point->fold[k] = errors->rmse * errors->rmse;
+        sum += point->fold[k] * (double)errors->count;
+    }
+    point->offsets = FESCUE_OFFSETS_NONE;
+    point->rmse = sqrt(sum / (double)folds->hidden);
+done:
+    return status;
+}
+
 static void differences_find(const struct cross *cross, struct ranking *ranking)
 {
     const struct ranking_point *best = &ranking->point[ranking->best];
-    struct ranking_point *beside[] = {&ranking->learnt, &ranking->rival};
+    struct ranking_point *beside[] = {&ranking->learnt, &ranking->rival, &ranking->interpolation};
     for (uint64_t k = 0; k < ranking->count; k++)
         points_compare(cross, &ranking->point[k], best, &ranking->point[k].worse, &ranking->point[k].worse_error);
-    for (size_t k = 0; k < 2; k++)
+    for (size_t k = 0; k < sizeof beside / sizeof beside[0]; k++)
         if (beside[k]->fold != NULL)
             points_compare(cross, beside[k], best, &beside[k]->worse, &beside[k]->worse_error);
 }
@@ -358,8 +387,9 @@ fescue_status ranking_run(fescue_context *context, const struct cells *cells, co
 {
     fescue_status status = FESCUE_OK;
     int64_t folds = request->options->folds == FESCUE_AUTO ? STANDARD_FOLDS : request->options->folds;
-    struct cross cross = {.request = request, .folds = {.context = context}};
-    *ranking = (struct ranking){.folds = (uint32_t)folds};
+    struct cross cross = {
+        .request = request, .folds = {.context = context}, .is_weighted = cells->by_row.weight != NULL};
+    *ranking = (struct ranking){.folds = (uint32_t)folds, .is_weighted = cross.is_weighted};
     if (folds < LEAST_FOLDS)
         return FAIL(context, FESCUE_USAGE, "--folds: found %lld, but cross-validation needs at least %d",
                     (long long)folds, LEAST_FOLDS);
@@ -370,6 +400,7 @@ fescue_status ranking_run(fescue_context *context, const struct cells *cells, co
     TRY(kinds_open(&cross));
     TRY(kinds_compete(&cross, ranking));
     TRY(learnt_add(&cross, ranking));
+    TRY(interpolation_add(&cross, ranking));
     differences_find(&cross, ranking);
     ranking->has_structure = ranking->chosen > 0;
     ranking->is_learnt_better =
@@ -389,4 +420,5 @@ void ranking_free(fescue_context *context, struct ranking *ranking)
     ranking->point = NULL;
     GIVE(context, &ranking->learnt.fold);
     GIVE(context, &ranking->rival.fold);
+    GIVE(context, &ranking->interpolation.fold);
 }

@@ -64,11 +64,14 @@ static fescue_status fold_open(struct rank_folds *folds, const struct cells *cel
                                      .options = request->options,
                                      .solver = solver_at(0),
                                      .time = has_clock ? request->time : NULL,
-                                     .learns = CHOOSE_AUTO,
+                                     .learns = cells->by_row.weight != NULL ? CHOOSE_LEARN : CHOOSE_AUTO,
                                      .deadline = request->deadline,
                                      .kept = &fold->holdout.kept,
                                      .hidden = &fold->holdout.hidden};
     TRY(chooser_open(&fold->chooser));
+    if (has_clock)
+        TRY(interpolation_measure(fold->context, &fold->holdout.kept, &fold->holdout.hidden, request->time,
+                                  &fold->interpolation));
     folds->hidden += fold->holdout.hidden.count;
 done:
     return status;
@@ -168,6 +171,8 @@ static fescue_status fold_stage(struct rank_fold *fold, const struct stage_reque
         return path_challenge(&fold->chooser, &limits, &fold->current);
     case STAGE_EXACT:
         return path_try_exact(&fold->chooser, &fold->current);
+    case STAGE_REACH:
+        return evidence_reach(&fold->chooser, &fold->alone[request->kind], request->rung, &fold->current);
     case STAGE_LEARN:
         return fold_learn(fold, request->kind);
     }

@@ -17,6 +17,7 @@ struct rank_fold {
     struct chooser chooser;
     struct candidate alone[RANK_KINDS]; /* of each kind of offsets, rank 0 */
     struct candidate current, trial, learnt;
+    struct errors interpolation; /* count 0: there is no time axis */
     fescue_status status;
 };
 struct rank_folds {
@@ -38,6 +39,7 @@ enum stage {
     STAGE_TAKE,      /* current = trial */
     STAGE_CHALLENGE, /* current against the spectral start */
     STAGE_EXACT,     /* whether a tight fit of current meets the hidden cells to rounding */
+    STAGE_REACH,     /* current = the evidence fit with `rung` components at most, on alone[kind] */
     STAGE_LEARN      /* learnt = the evidence fit, on the kinds before number `kind` */
 };
 struct stage_request {

@@ -2,12 +2,15 @@
  *
  * rank.csv: one line a point of the cross-validation.
  *
- *   offsets          the kind
- *   rank             components; of the evidence fit the least and the greatest over the folds, as 3-4, when they
- * differ ridge            blank: learnt, one a component rmse             over the hidden cells of all folds, table
- * units worse            mean squared error over that of the best rank, the mean of the folds' differences worse_error
- * its standard error mark             "chosen", "best", both with a blank between, "learnt" for the evidence fit,
- * "rival" for what the other kind of offsets comes to, or nothing fold_1 ...       mean squared error of each fold
+ *   offsets       the kind
+ *   rank          components; of the evidence fit the least and the greatest over the folds, as 3-4, when they differ
+ *   ridge         blank: learnt, one a component
+ *   rmse          over the hidden cells of all folds, table units, weighted where cells have weights
+ *   worse         mean squared error over that of the best rank, the mean of the folds' differences
+ *   worse_error   its standard error
+ *   mark          "chosen", "best", both with a blank between, "learnt" for the evidence fit, "interpolation" in time,
+ *                 "rival" for what the other kind of offsets comes to, or nothing
+ *   fold_1 ...    mean squared error of each fold
  */
 #include "write/write.h"
 
@@ -57,6 +60,8 @@ fescue_status write_ranking(const struct ranking *ranking, struct output *output
     }
     if (ranking->learnt.fold != NULL)
         point_put(file, ranking, &ranking->learnt, "learnt");
+    if (ranking->interpolation.fold != NULL)
+        point_put(file, ranking, &ranking->interpolation, "interpolation");
     if (ranking->rival.fold != NULL)
         point_put(file, ranking, &ranking->rival, "rival");
     return outfile_status(file);

@@ -47,7 +47,7 @@ def rank_of(table, place, *options):
                           text=True).stdout
     with open(os.path.join(place, "rank.csv"), encoding="utf-8") as file:
         lines = list(csv.DictReader(file))
-    path = [line for line in lines if line["mark"] not in ("learnt", "rival")]
+    path = [line for line in lines if line["mark"] not in ("learnt", "interpolation", "rival")]
     return next(line for line in path if "chosen" in line["mark"]), path, lines, text
 
 
