@@ -141,10 +141,9 @@ done:
 
 /* ---- reading ---------------------------------------------------------------------------------------------------- */
 
-static fescue_status records_read(void *data)
+static fescue_status wide_records_read(void *data)
 {
-    struct delimited *delimited = data;
-    return delimited->shape == SHAPE_LONG ? long_read(delimited) : wide_read(delimited);
+    return wide_read(data);
 }
 
 fescue_status delimited_read(struct stream *stream, const struct table_reading *reading, fescue_table *table)
@@ -159,7 +158,7 @@ fescue_status delimited_read(struct stream *stream, const struct table_reading *
     TRY(delimited_kind_find(stream, reading->format, &kind));
     delimited.separator = kind.separator;
     delimited.shape = kind.shape;
-    TRY(stream_read(stream, records_read, &delimited));
+    TRY(kind.shape == SHAPE_LONG ? long_read(&delimited) : stream_read(stream, wide_records_read, &delimited));
     table->look.shape = kind.shape;
     table->look.separator = kind.separator;
     table->look.decimal = delimited.pile.decimal;

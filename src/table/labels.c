@@ -3,10 +3,10 @@
  * Names of rows and columns: the list, and finding a name in it.
  *
  * The index is a table of slots with open addressing, at most half of them taken, so that a search looks at two or
- * three slots on average. Labels come from files that anybody may have written, so the hash is keyed: SipHash-1-3
- * (Aumasson, Bernstein 2012, "SipHash: a fast short-input PRF"; one round a word, three at the end), with a key that
- * changes from run to run. Positions do not depend on it: they follow the order of the file.
+ * three slots on average. Labels come from files that anybody may have written, so the hash is keyed (sip.h), with a
+ * key that changes from run to run. Positions do not depend on it: they follow the order of the file.
  */
+#include "table/sip.h"
 #include "table/table_internal.h"
 
 #include <assert.h>
@@ -15,40 +15,9 @@
 
 /* ---- hash ------------------------------------------------------------------------------------------------------ */
 
-struct sip {
-    uint64_t v0, v1, v2, v3;
-};
-
-static uint64_t turned(uint64_t x, int bits)
-{
-    return x << bits | x >> (64 - bits);
-}
-
-static void sip_round(struct sip *s)
-{
-    s->v0 += s->v1;
-    s->v1 = turned(s->v1, 13) ^ s->v0;
-    s->v0 = turned(s->v0, 32);
-    s->v2 += s->v3;
-    s->v3 = turned(s->v3, 16) ^ s->v2;
-    s->v0 += s->v3;
-    s->v3 = turned(s->v3, 21) ^ s->v0;
-    s->v2 += s->v1;
-    s->v1 = turned(s->v1, 17) ^ s->v2;
-    s->v2 = turned(s->v2, 32);
-}
-
-static void sip_word(struct sip *s, uint64_t word)
-{
-    s->v3 ^= word;
-    sip_round(s);
-    s->v0 ^= word;
-}
-
 static uint32_t text_hash(const uint64_t key[2], const char *text, size_t length)
 {
-    struct sip s = {key[0] ^ 0x736f6d6570736575, key[1] ^ 0x646f72616e646f6d, key[0] ^ 0x6c7967656e657261,
-                    key[1] ^ 0x7465646279746573};
+    struct sip s = sip_open(key);
     uint64_t word, last = (uint64_t)length << 56;
     size_t whole = length / sizeof word * sizeof word;
     for (size_t k = 0; k < whole; k += sizeof word) {
@@ -58,10 +27,7 @@ static uint32_t text_hash(const uint64_t key[2], const char *text, size_t length
     for (size_t k = whole; k < length; k++)
         last |= (uint64_t)(unsigned char)text[k] << 8 * (k - whole);
     sip_word(&s, last);
-    s.v2 ^= 0xff;
-    for (int round = 0; round < 3; round++)
-        sip_round(&s);
-    return (uint32_t)(s.v0 ^ s.v1 ^ s.v2 ^ s.v3);
+    return sip_close(&s);
 }
 
 /* ---- index ----------------------------------------------------------------------------------------------------- */

@@ -4,6 +4,9 @@
  * four fields; one cell a record. The first record is a header when its third field is neither a number nor a hole.
  * Rows and columns are numbered as they come first. A record whose value is a hole says that there are such a row and
  * such a column, and nothing of the cell.
+ *
+ * Chunks of plain records are read by all workers (long_chunk.c); any other chunk is read here, record by record, and
+ * so is all of a text with weights.
  */
 #include "table/table_internal.h"
 
@@ -68,20 +71,62 @@ done:
     return status;
 }
 
-fescue_status long_read(struct delimited *delimited)
+/* The first record, which may be a header. */
+static fescue_status first_read(struct delimited *delimited)
 {
     fescue_status status;
     const struct record *record = &delimited->record;
-    for (bool is_first = true;; is_first = false) {
+    TRY(record_read(delimited->stream, delimited->separator, &delimited->record));
+    if (record->count == 0)
+        return FESCUE_OK;
+    bool is_header =
+        record->count >= 3 && !is_hole(&record->field[2]) && !is_number(&record->field[2], delimited->separator == ';');
+    if (record->count == 4)
+        delimited->weight = WEIGHT_PRECISION; /* unless a header says otherwise */
+    TRY(is_header ? header_read(delimited) : cell_read(delimited));
+done:
+    return status;
+}
+
+/* The records that begin in this chunk. */
+static fescue_status chunk_records_read(struct delimited *delimited)
+{
+    fescue_status status;
+    const uint64_t number = stream_chunk_number(delimited->stream);
+    do {
         TRY(record_read(delimited->stream, delimited->separator, &delimited->record));
-        if (record->count == 0)
-            break;
-        bool is_header = is_first && record->count >= 3 && !is_hole(&record->field[2]) &&
-                         !is_number(&record->field[2], delimited->separator == ';');
-        if (is_first && record->count == 4)
-            delimited->weight = WEIGHT_PRECISION; /* unless a header says otherwise */
-        TRY(is_header ? header_read(delimited) : cell_read(delimited));
+        if (delimited->record.count == 0)
+            return FESCUE_OK;
+        TRY(cell_read(delimited));
+    } while (stream_chunk_number(delimited->stream) == number && !stream_chunk_is_read(delimited->stream));
+done:
+    return status;
+}
+
+/* All that is left, on one worker. */
+static fescue_status records_read(void *data)
+{
+    fescue_status status = FESCUE_OK;
+    struct delimited *delimited = data;
+    while (status == FESCUE_OK && stream_chunk_number(delimited->stream) != UINT64_MAX)
+        status = chunk_records_read(delimited);
+    return status;
+}
+
+fescue_status long_read(struct delimited *delimited)
+{
+    fescue_status status;
+    struct long_chunks chunks = {0};
+    TRY(first_read(delimited));
+    if (delimited->weight != WEIGHT_NONE)
+        return stream_read(delimited->stream, records_read, delimited);
+    TRY(long_chunks_open(delimited, &chunks));
+    while (stream_chunk_number(delimited->stream) != UINT64_MAX) {
+        TRY(long_chunks_read(&chunks));
+        if (stream_chunk_number(delimited->stream) != UINT64_MAX)
+            TRY(chunk_records_read(delimited));
     }
 done:
+    long_chunks_close(&chunks);
     return status;
 }

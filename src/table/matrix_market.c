@@ -394,24 +394,28 @@ static void array_places_give(struct market *market, struct pile_block *block)
     block->count = kept;
 }
 
-static fescue_status chunk_parse(const void *data, const struct chunk *chunk, struct pile_block **block)
+static fescue_status chunk_parse(void *data, size_t worker, const struct chunk *chunk, struct pile_block **block)
 {
     const struct market *market = data;
+    (void)worker;
     return market_parse(&market->form, chunk, block);
 }
 
-static fescue_status chunk_finish(void *data, struct chunk *chunk, struct pile_block **block)
+static fescue_status chunk_finish(void *data, size_t worker, struct chunk *chunk, struct pile_block **block,
+                                  bool *is_left)
 {
     struct market *market = data;
+    (void)worker, (void)is_left;
     market->chunk = chunk;
     if (*block == NULL || (*block)->count > market->entries - market->read)
         return entries_read(market);
-    uint64_t lines = (*block)->count, first = stream_line_number(market->stream) + 1;
+    const uint64_t lines = (*block)->count;
+    const struct line_run run = {0, stream_line_number(market->stream) + 1};
     if (market->form.is_array)
         array_places_give(market, *block);
     stream_lines_skip(market->stream, lines);
     market->read += lines;
-    return pile_take(&market->pile, block, first);
+    return pile_take(&market->pile, block, &run, 1);
 }
 
 static fescue_status chunks_read(struct market *market)

@@ -93,8 +93,11 @@ static void block_append(struct pile *pile, struct pile_block *block)
 
 /* ---- entries ---------------------------------------------------------------------------------------------------- */
 
-static fescue_status run_append(struct pile *pile, uint64_t line)
+/* From this entry on lines begin anew, unless they follow those before. */
+static fescue_status run_append(struct pile *pile, uint64_t entry, uint64_t line)
 {
+    if (!pile->keeps_lines || line == pile->next_line)
+        return FESCUE_OK;
     if (pile->run_count == pile->run_capacity) {
         uint64_t capacity = pile->run_capacity < 16 ? 16 : pile->run_capacity + pile->run_capacity / 2;
         fescue_status status = RESIZE(pile->context, capacity, &pile->runs);
@@ -102,7 +105,7 @@ static fescue_status run_append(struct pile *pile, uint64_t line)
             return status;
         pile->run_capacity = capacity;
     }
-    pile->runs[pile->run_count++] = (struct line_run){pile->count, line};
+    pile->runs[pile->run_count++] = (struct line_run){entry, line};
     return FESCUE_OK;
 }
 
@@ -128,8 +131,7 @@ fescue_status pile_add(struct pile *pile, const struct pile_entry *entry)
         TRY(pile_block_create(pile, PILE_BLOCK, &block));
         block_append(pile, block);
     }
-    if (pile->keeps_lines && entry->line != pile->next_line)
-        TRY(run_append(pile, entry->line));
+    TRY(run_append(pile, pile->count, entry->line));
     TRY(pile_block_add(pile, pile->last, entry));
     pile->count++;
     pile->next_line = entry->line + 1;
@@ -137,14 +139,18 @@ done:
     return status;
 }
 
-fescue_status pile_take(struct pile *pile, struct pile_block **block, uint64_t line)
+fescue_status pile_take(struct pile *pile, struct pile_block **block, const struct line_run *runs, size_t count)
 {
     fescue_status status = FESCUE_OK;
-    if (pile->keeps_lines && line != pile->next_line)
-        TRY(run_append(pile, line));
+    uint64_t entries = (*block)->count;
+    for (size_t k = 0; k < count; k++) {
+        TRY(run_append(pile, pile->count + runs[k].entry, runs[k].line));
+        pile->next_line = runs[k].line + ((k + 1 < count ? runs[k + 1].entry : entries) - runs[k].entry);
+    }
+    if (!pile->keeps_texts) /* they were, while it was parsed */
+        odd_texts_free(pile->context, &(*block)->odd);
     block_append(pile, *block);
-    pile->count += (*block)->count;
-    pile->next_line = line + (*block)->count;
+    pile->count += entries;
     *block = NULL;
 done:
     return status;

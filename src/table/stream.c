@@ -44,6 +44,7 @@ struct stream {
     uint64_t filled, taken, finished; /* chunks */
     bool ended;                       /* no chunk follows the last one filled */
     bool stopped;                     /* by a failure, or since nothing is wanted any more */
+    bool is_left;                     /* the next chunk to be finished is to be read by lines */
     bool is_shared;                   /* worker 0 fills; otherwise whoever wants a chunk does it himself */
     bool has_reader;
     fescue_status status; /* of the failure that stopped us */
@@ -160,7 +161,7 @@ done:
 static void stream_stop(struct stream *stream, fescue_status status)
 {
     pthread_mutex_lock(&stream->lock);
-    if (!stream->stopped)
+    if (!stream->stopped || (stream->is_left && stream->status == FESCUE_OK))
         stream->status = status;
     stream->stopped = true;
     pthread_cond_broadcast(&stream->changed);
@@ -276,6 +277,16 @@ done:
     return status;
 }
 
+uint64_t stream_chunk_number(const struct stream *stream)
+{
+    return stream->current != NULL ? stream->current->number : UINT64_MAX;
+}
+
+bool stream_chunk_is_read(const struct stream *stream)
+{
+    return stream->current == NULL || stream->current->at == stream->current->end;
+}
+
 void stream_peek(const struct stream *stream, size_t most, const char **text, size_t *length)
 {
     const struct chunk *chunk = stream->current;
@@ -353,23 +364,28 @@ static bool turn_await(struct stream *stream, const struct chunk *chunk)
     return is_ours;
 }
 
-static void turn_pass(struct stream *stream)
+/* The chunk is finished, or left to whoever reads lines; then nothing behind it is wanted either. */
+static void turn_pass(struct stream *stream, bool is_left)
 {
     pthread_mutex_lock(&stream->lock);
-    stream->finished++;
+    stream->finished += !is_left;
+    stream->is_left = is_left;
+    stream->stopped = stream->stopped || is_left;
     pthread_cond_broadcast(&stream->changed);
     pthread_mutex_unlock(&stream->lock);
 }
 
-static void chunk_parse(struct stream *stream, const struct chunk_reader *reader, struct chunk *chunk)
+static void chunk_parse(struct stream *stream, const struct chunk_reader *reader, size_t worker, struct chunk *chunk)
 {
     fescue_status status = FESCUE_OK;
     struct pile_block *block = NULL;
+    bool is_left = false;
     if (chunk->complaint == NULL)
-        TRY(reader->parse(reader->data, chunk, &block));
+        TRY(reader->parse(reader->data, worker, chunk, &block));
     if (turn_await(stream, chunk)) {
-        TRY(chunk->complaint != NULL ? complaint_tell(stream, chunk) : reader->finish(reader->data, chunk, &block));
-        turn_pass(stream);
+        TRY(chunk->complaint != NULL ? complaint_tell(stream, chunk)
+                                     : reader->finish(reader->data, worker, chunk, &block, &is_left));
+        turn_pass(stream, is_left);
     }
 done:
     pile_block_free(stream->context, &block);
@@ -388,7 +404,15 @@ static void chunk_worker(void *job, size_t block, size_t worker)
         if (task == TASK_FILL)
             chunk_supply(stream);
         else
-            chunk_parse(stream, reading->reader, chunk);
+            chunk_parse(stream, reading->reader, worker, chunk);
+}
+
+/* The chunk that was left becomes the current one; those behind it, filled already, will be taken again. */
+static void lines_resume(struct stream *stream)
+{
+    stream->stopped = stream->is_shared = false;
+    stream->current = chunk_at(stream, stream->finished);
+    stream->taken = stream->finished + 1;
 }
 
 fescue_status stream_parse(struct stream *stream, const struct chunk_reader *reader)
@@ -400,7 +424,10 @@ fescue_status stream_parse(struct stream *stream, const struct chunk_reader *rea
     stream->current = NULL; /* it is the first to be parsed: what is left of it */
     stream->finished = --stream->taken;
     stream->is_shared = true;
+    stream->is_left = false;
     team_run(stream->context, workers, chunk_worker, &reading);
+    if (stream->is_left && stream->status == FESCUE_OK)
+        lines_resume(stream);
     return stream->status;
 }
 

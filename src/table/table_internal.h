@@ -177,14 +177,18 @@ void stream_lines_skip(struct stream *stream, uint64_t lines); /* counts lines t
 fescue_status stream_read(struct stream *stream, fescue_status (*read)(void *data), void *data);
 
 /* How the rest of a stream is read by all workers. `parse` reads one chunk beside others; it sees neither lines before
-   nor after, and leaves *block NULL when that is not enough. `finish` is called once for each chunk in their order; it
-   takes the block (and nulls *block) or reads the chunk line by line. */
+   nor after, and leaves *block NULL when that is not enough. `finish` is called once for each chunk in their order, by
+   the worker that parsed it and has parsed nothing since; it takes the block (and nulls *block), reads the chunk line
+   by line, or leaves it: then stream_parse ends, stream_line gives the lines from this chunk on, and it may be called
+   again. */
 struct chunk_reader {
     void *data;
-    fescue_status (*parse)(const void *data, const struct chunk *chunk, struct pile_block **block);
-    fescue_status (*finish)(void *data, struct chunk *chunk, struct pile_block **block);
+    fescue_status (*parse)(void *data, size_t worker, const struct chunk *chunk, struct pile_block **block);
+    fescue_status (*finish)(void *data, size_t worker, struct chunk *chunk, struct pile_block **block, bool *is_left);
 };
 fescue_status stream_parse(struct stream *stream, const struct chunk_reader *reader);
+uint64_t stream_chunk_number(const struct stream *stream); /* of the line delivered last; UINT64_MAX behind the end */
+bool stream_chunk_is_read(const struct stream *stream);    /* that line is the last of its chunk */
 
 uint64_t stream_line_number(const struct stream *stream); /* of the line delivered last, from 1 */
 const char *stream_name(const struct stream *stream);     /* as the user calls it */
@@ -254,6 +258,10 @@ struct pile_block {
 };
 enum { PILE_BLOCK = 1 << 14 }; /* entries, when it is not known how many will come: some 200 kB */
 
+/* Entries from `entry` on lie on lines from `line` on, one a line. */
+struct line_run {
+    uint64_t entry, line;
+};
 /* Entries in the order of the input; blocks, so that growing copies nothing. */
 struct pile {
     fescue_context *context; /* borrowed */
@@ -266,9 +274,7 @@ struct pile {
     uint64_t count;
     struct pile_block *first, *last;
     size_t blocks;
-    struct line_run { /* entries from `entry` on lie on lines from `line` on, one a line */
-        uint64_t entry, line;
-    } * runs;
+    struct line_run *runs;
     uint64_t run_count, run_capacity, next_line;
 };
 struct pile_entry {
@@ -297,8 +303,9 @@ static inline void pile_block_put(const struct pile *pile, struct pile_block *bl
 /* The same with its text, where texts are kept. */
 fescue_status pile_block_add(const struct pile *pile, struct pile_block *block, const struct pile_entry *entry);
 void pile_block_free(fescue_context *context, struct pile_block **block); /* NULL-safe */
-/* Takes a block whose entries lie on lines from `line` on, one a line. */
-fescue_status pile_take(struct pile *pile, struct pile_block **block, uint64_t line);
+/* Takes a block, whose entries, counted from 0, lie on the lines that the runs tell; the first run is that of entry 0.
+ */
+fescue_status pile_take(struct pile *pile, struct pile_block **block, const struct line_run *runs, size_t count);
 uint64_t pile_line(const struct pile *pile, uint64_t entry);
 /* Makes table->cells, texts and duplicates from the pile, which is used up. The table's labels are there already. */
 fescue_status pile_build(struct pile *pile, const struct stream *stream, enum fescue_duplicates duplicates,
@@ -413,5 +420,16 @@ fescue_status weights_build(struct delimited *delimited, fescue_table *table);
 fescue_status weights_set(fescue_table *table, double *weight);
 fescue_status wide_read(struct delimited *delimited);
 fescue_status long_read(struct delimited *delimited);
+
+/* Long text by chunks (long_chunk.c): what each worker keeps. To be closed in any case. */
+struct long_chunks {
+    struct delimited *delimited;
+    struct long_worker *worker;
+    size_t workers;
+};
+fescue_status long_chunks_open(struct delimited *delimited, struct long_chunks *chunks);
+/* Reads up to a chunk that must be read by records, or all. */
+fescue_status long_chunks_read(struct long_chunks *chunks);
+void long_chunks_close(struct long_chunks *chunks);
 
 #endif

@@ -1,0 +1,67 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * The labels of one side that one worker has met, beside the list of all (labels.c), which chunks are entered into in
+ * their order only.
+ *
+ *     label[0 .. settled)        have their position in the list of all, and their text in its store
+ *     label[settled .. count)    are new in the chunk that is read, and their text lies in it
+ *
+ * Looking up a text takes no lock and asks nobody; when the chunk's turn has come, its new labels are settled. Hash
+ * table with open addressing, at most half full; labels of up to 16 bytes are told apart by two words, without their
+ * text. When there are LEXICON_MOST labels it is emptied: it is a cache, and what it has forgotten is settled again.
+ */
+#ifndef FESCUE_TABLE_LEXICON_H
+#define FESCUE_TABLE_LEXICON_H
+
+#include "table/sip.h"
+#include "table/table_internal.h"
+
+#include <endian.h>
+
+/* Some 14 MB; a chunk has room for half as many. */
+enum { LEXICON_MOST = 1 << 18 };
+
+struct lexicon_label {
+    uint64_t head, tail; /* the first and the last eight bytes; of less than eight, those and zero */
+    const char *text;
+    uint32_t length, hash;
+};
+struct lexicon {
+    struct lexicon_slot {
+        uint64_t head, tail;
+        uint32_t length, hash, number, spare; /* number: of the label, from 1; 0: the slot is free */
+    } * slots;
+    size_t mask;
+    struct lexicon_label *label;
+    uint32_t *position;                      /* of each label, in the list of all */
+    uint32_t count, capacity, settled, last; /* last: found last */
+    uint64_t key[2];
+};
+void lexicon_open(struct lexicon *lexicon); /* empty; takes no memory */
+/* Before a chunk: forgets what was never settled, or all. */
+fescue_status lexicon_begin(fescue_context *context, struct lexicon *lexicon);
+/* Behind a chunk: enters its new labels into the list of all. */
+fescue_status lexicon_settle(fescue_context *context, struct lexicon *lexicon, struct label_list *list);
+void lexicon_free(fescue_context *context, struct lexicon *lexicon);
+/* The number of a label, which is added when it is new; *is_new. Eight bytes behind the text can be read. */
+fescue_status lexicon_find_or_add(fescue_context *context, struct lexicon *lexicon, const char *text, uint32_t length,
+                                  uint32_t *number, bool *is_new);
+
+static inline uint64_t lexicon_word(const char *text)
+{
+    uint64_t word;
+    memcpy(&word, text, sizeof word);
+    return le64toh(word);
+}
+
+/* Whether the label stands at `text`, where as many bytes, and eight, can be read. */
+static inline bool lexicon_label_is(const struct lexicon_label *label, const char *text)
+{
+    enum { WORD = sizeof(uint64_t) };
+    if (label->length < WORD)
+        return ((lexicon_word(text) ^ label->head) & ((UINT64_C(1) << 8 * label->length) - 1)) == 0;
+    return lexicon_word(text) == label->head && lexicon_word(text + label->length - WORD) == label->tail &&
+           (label->length <= 2 * WORD || memcmp(text, label->text, label->length) == 0);
+}
+
+#endif
