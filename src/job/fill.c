@@ -112,6 +112,8 @@ static fescue_status fill_judge(fescue_fill *fill, const struct solver *solver)
     bool has_order = fill->time.along != TIME_NONE || fill->shape.shape == FESCUE_HOLDOUT_GAPS;
     double deviation = fit->result.rmse * fit->scale;
     struct judge_request request = {.cells = fill->cells,
+                                    .season = fill->season.along != TIME_NONE ? &fill->season : NULL,
+                                    .whole = &fill->table->cells,
                                     .options = &fill->fitting,
                                     .choice = &fill->choice,
                                     .solver = solver,

@@ -9,8 +9,8 @@
  * A season is fitted to the kept cells and taken off kept and hidden ones; everything behind (offsets, rank, noise,
  * time parts, folds) works on what it leaves, and the final model adds it again. So an error on hidden cells is that of
  * the whole estimate. The fit on all cells takes a season fitted to all cells; the folds that intervals are made of
- * leave it as it is, since a cell moves a handful of amplitudes by little. While choosing, bounds wait: they are those
- * of the whole, not of what a season leaves.
+ * fit it again to the cells that they keep. While choosing, bounds wait: they are those of the whole, not of what a
+ * season leaves.
  */
 #include "job/job_internal.h"
 

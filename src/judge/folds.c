@@ -75,30 +75,51 @@ done:
     return status;
 }
 
+/* What a season leaves of a fold, learnt from the cells that the fold keeps: the hidden ones have no part in it. New in
+ *rest, which shares the pattern of *holdout. */
+static fescue_status season_again(fescue_context *context, const struct season *of_all, const struct holdout *holdout,
+                                  struct holdout *rest)
+{
+    fescue_status status;
+    struct season season = {0};
+    TRY(season_alike(context, of_all, &season));
+    TRY(season_fit(context, &holdout->kept, &season));
+    TRY(season_remove(context, &holdout->kept, &season, &rest->kept));
+    TRY(season_remove(context, &holdout->hidden, &season, &rest->hidden));
+done:
+    season_free(context, &season);
+    return status;
+}
+
 static fescue_status fold_judge(fescue_context *context, const struct judge_request *request,
                                 const struct holdout_request *asked, struct judgement *judgement, struct judged *pool)
 {
     fescue_status status;
-    struct holdout holdout = {0};
+    struct holdout holdout = {0}, rest = {0}, *fold = &holdout;
     struct relearnt learnt = {0};
     struct leverage leverage = {0};
     struct tracks tracks = {0};
     uint64_t from = pool->count;
     unsigned marks = asked->shape == FESCUE_HOLDOUT_CELLS ? 0 : STANDING_SHAPED;
-    TRY(holdout_cut(context, request->cells, asked, &holdout));
-    TRY(relearn(context, &holdout.kept, request, judgement->is_warm, &learnt));
-    TRY(leverage_create(context, &holdout.kept, &learnt.model, learnt.noise, learnt.lambda, &leverage));
+    TRY(holdout_cut(context, request->season != NULL ? request->whole : request->cells, asked, &holdout));
+    if (request->season != NULL) {
+        TRY(season_again(context, request->season, &holdout, &rest));
+        fold = &rest;
+    }
+    TRY(relearn(context, &fold->kept, request, judgement->is_warm, &learnt));
+    TRY(leverage_create(context, &fold->kept, &learnt.model, learnt.noise, learnt.lambda, &leverage));
     struct judged_view view = {&leverage, NULL, judgement->sensors_are_rows};
     if (judgement->tracks != NULL) {
-        TRY(tracks_create(context, &holdout.kept, request->order, &tracks));
+        TRY(tracks_create(context, &fold->kept, request->order, &tracks));
         view.tracks = &tracks;
     }
-    TRY(hidden_collect(context, &holdout.hidden, &learnt.model, marks, pool));
+    TRY(hidden_collect(context, &fold->hidden, &learnt.model, marks, pool));
     judged_measure(context, &view, from, pool);
 done:
     tracks_free(context, &tracks);
     leverage_free(context, &leverage);
     relearnt_free(context, &learnt);
+    holdout_free(context, &rest);
     holdout_free(context, &holdout);
     return status;
 }

@@ -223,7 +223,9 @@ struct judgement {
 extern const double judge_levels[JUDGE_LEVELS]; /* 0.5, 0.8, 0.9, 0.95 */
 
 struct judge_request {
-    const struct cells *cells;
+    const struct cells *cells;   /* what was fitted */
+    const struct season *season; /* that was taken off `whole` to get there; NULL: none was. Folds have their own */
+    const struct cells *whole;
     const struct fescue_options *options;
     const struct choice *choice;
     const struct solver *solver;

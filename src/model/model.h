@@ -83,6 +83,8 @@ struct season {
    Null amplitudes. The caller owns *season. */
 fescue_status season_create(fescue_context *context, const struct time_axis *axis, uint32_t series,
                             const double *period, size_t periods, struct season *season);
+/* Another with the same waves, of null amplitudes. */
+fescue_status season_alike(fescue_context *context, const struct season *from, struct season *season);
 /* Learns the amplitudes from the seen cells. */
 fescue_status season_fit(fescue_context *context, const struct cells *cells, struct season *season);
 double season_at(const struct season *season, uint32_t row, uint32_t column); /* 0 where there is none */

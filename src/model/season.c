@@ -88,6 +88,22 @@ done:
     return status;
 }
 
+fescue_status season_alike(fescue_context *context, const struct season *from, struct season *season)
+{
+    fescue_status status = FESCUE_OK;
+    size_t width = 2 * from->waves;
+    *season = *from;
+    season->wave = season->amplitude = NULL;
+    TRY(memory_take(context, from->steps, width * sizeof(double), &season->wave));
+    TRY(memory_take(context, from->series, width * sizeof(double), &season->amplitude));
+    if (width > 0)
+        memcpy(season->wave, from->wave, from->steps * width * sizeof(double));
+done:
+    if (status != FESCUE_OK)
+        season_free(context, season);
+    return status;
+}
+
 void season_free(fescue_context *context, struct season *season)
 {
     GIVE(context, &season->wave);
