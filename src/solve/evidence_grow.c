@@ -109,6 +109,7 @@ static fescue_status components_grow(fescue_context *context, const struct cells
     fescue_status status;
     step.noise = EVIDENCE_NOISE_EQUAL;
     step.time = NULL;
+    step.near = NULL;
     step.rounds = GROW_ROUNDS;
     step.change = GROW_CHANGE;
     for (;;) {
@@ -123,13 +124,14 @@ done:
     return status;
 }
 
-/* Rounds to the final tolerance, all noise equal and without time. */
+/* Rounds to the final tolerance, all noise equal, without time and near columns. */
 static fescue_status components_settle(fescue_context *context, const struct cells *cells,
                                        const struct evidence_request *request, struct evidence_result *out)
 {
     struct evidence_request step = *request;
     step.noise = EVIDENCE_NOISE_EQUAL;
     step.time = NULL;
+    step.near = NULL;
     return refit(context, cells, &step, out);
 }
 
@@ -150,7 +152,7 @@ fescue_status evidence_learn(fescue_context *context, const struct cells *cells,
         TRY(components_grow(context, cells, request, out));
         TRY(components_settle(context, cells, request, out));
     }
-    if (request->noise != EVIDENCE_NOISE_EQUAL || request->time != NULL)
+    if (request->noise != EVIDENCE_NOISE_EQUAL || request->time != NULL || request->near != NULL)
         TRY(refit(context, cells, request, out));
     evidence_trim(&out->model, evidence_living(out));
 done:
