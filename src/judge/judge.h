@@ -223,9 +223,7 @@ struct judgement {
 extern const double judge_levels[JUDGE_LEVELS]; /* 0.5, 0.8, 0.9, 0.95 */
 
 struct judge_request {
-    const struct cells *cells;   /* what was fitted */
-    const struct season *season; /* that was taken off `whole` to get there; NULL: none was. Folds have their own */
-    const struct cells *whole;
+    const struct cells *cells; /* what was fitted */
     const struct fescue_options *options;
     const struct choice *choice;
     const struct solver *solver;
@@ -235,6 +233,9 @@ struct judge_request {
     double noise;                   /* learnt by that fit, a variance in the table's units */
     bool is_exact;                  /* the fit on all cells meets them to rounding */
     double deadline;                /* clock_wall() second, or 0 */
+    /* A season that was taken off `whole` to get to cells; NULL: none was. Folds learn it again. */
+    const struct season *season;
+    const struct cells *whole;
 };
 /* Hides cells in folds, learns the choice again without them, and says how wrong the unseen cells are. Asked to stop,
    it ends with what it has. */
