@@ -28,10 +28,10 @@ static int64_t posix_size(int descriptor)
     return fstat(descriptor, &about) == 0 && S_ISREG(about.st_mode) ? about.st_size : -1;
 }
 
-/* All pages at once: whoever maps a file is going to look at every byte of it. */
+/* Pages come as they are looked at, by all workers. */
 static void *posix_map(int descriptor, size_t size)
 {
-    void *bytes = mmap(NULL, size, PROT_READ, MAP_PRIVATE | MAP_POPULATE, descriptor, 0);
+    void *bytes = mmap(NULL, size, PROT_READ, MAP_PRIVATE, descriptor, 0);
     return bytes != MAP_FAILED ? bytes : NULL;
 }
 

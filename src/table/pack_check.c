@@ -23,6 +23,7 @@ enum { DRAWS_A_PIECE = 1 << 12 }; /* of random numbers: some 40 microseconds */
 
 struct check {
     const struct cells *cells;
+    const struct pack_watch *watch;
     size_t pieces;       /* of each direction */
     uint64_t *random[2]; /* u, v */
     uint64_t seed, z;
@@ -102,14 +103,29 @@ static void lines_check(struct check *check, bool is_column, uint32_t first, uin
     atomic_fetch_add(&check->sum[is_column], sum);
 }
 
+/* Offsets that are out of order are found by lines_check, and then it does not matter what was told. */
+static void lines_tell(const struct check *check, const struct half *half, uint32_t first, uint32_t end)
+{
+    const uint64_t from = half->start[first], to = half->start[end];
+    const size_t size = cell_size(check->cells->precision);
+    if (from >= to || to > check->cells->count)
+        return;
+    check->watch->tell(check->watch->data, half->across + from, half->across + to);
+    check->watch->tell(check->watch->data, (const char *)half->value + from * size,
+                       (const char *)half->value + to * size);
+}
+
 static void piece_check(void *job, size_t piece, size_t worker)
 {
     struct check *check = job;
-    bool is_column = piece >= check->pieces;
-    uint64_t lines = is_column ? check->cells->columns : check->cells->rows, part = piece % check->pieces;
+    const bool is_column = piece >= check->pieces;
+    const struct half *half = is_column ? &check->cells->by_column : &check->cells->by_row;
+    const uint64_t part = piece % check->pieces;
+    const uint32_t first = (uint32_t)(half->lines * part / check->pieces),
+                   end = (uint32_t)(half->lines * (part + 1) / check->pieces);
     (void)worker;
-    lines_check(check, is_column, (uint32_t)(lines * part / check->pieces),
-                (uint32_t)(lines * (part + 1) / check->pieces));
+    lines_tell(check, half, first, end);
+    lines_check(check, is_column, first, end);
 }
 
 /* ---- random numbers --------------------------------------------------------------------------------------------- */
@@ -141,10 +157,11 @@ static void numbers_draw(fescue_context *context, struct check *check)
     team_run(context, pieces, piece_draw, check);
 }
 
-fescue_status pack_check_cells(fescue_context *context, const struct cells *cells, const char **fault)
+fescue_status pack_check_cells(fescue_context *context, const struct cells *cells, const struct pack_watch *watch,
+                               const char **fault)
 {
     fescue_status status = FESCUE_OK;
-    struct check check = {.cells = cells, .pieces = CELLS_MOST_BLOCKS};
+    struct check check = {.cells = cells, .watch = watch, .pieces = CELLS_MOST_BLOCKS};
     const struct half *rows = &cells->by_row, *columns = &cells->by_column;
     *fault = fault_texts[FAULT_OFFSETS];
     if (rows->start[0] != 0 || rows->start[rows->lines] != cells->count || columns->start[0] != 0 ||

@@ -68,8 +68,15 @@ bool pack_places_find(const struct pack_header *header, struct pack_places *plac
 /* A sum that changes with any single word of the bytes, and with more of them but for one case in 2^64. */
 uint64_t pack_sum(const void *bytes, size_t count);
 
+/* Who is told of a stretch of positions or values just before it is looked at, while that brings it into the cache. */
+struct pack_watch {
+    void (*tell)(void *data, const void *first, const void *end);
+    void *data;
+};
 /* Whether what a table points at, in a pack, is a table: lines in order and inside, both directions the same cells,
-   finite values. *fault is NULL, or what is wrong. FESCUE_NO_MEMORY. */
-fescue_status pack_check_cells(fescue_context *context, const struct cells *cells, const char **fault);
+   finite values. *fault is NULL, and then the watch was told of every byte of positions and values once; or what is
+   wrong. FESCUE_NO_MEMORY. */
+fescue_status pack_check_cells(fescue_context *context, const struct cells *cells, const struct pack_watch *watch,
+                               const char **fault);
 
 #endif

@@ -1,7 +1,8 @@
 /* SPDX-License-Identifier: MIT
  *
  * A table from a packed file (pack_internal.h): mapped, every byte summed by all workers, looked at, and used where it
- * lies. Where the system cannot map (a pipe, a compressed pack) the bytes are read into memory and used there.
+ * lies. Positions and values, nearly all of a pack, are summed just before they are looked at, so that they come out of
+ * memory once. Where the system cannot map (a pipe, a compressed pack) the bytes are read into memory and used there.
  *
  * A mapped file must not be changed in place while it is used; a new pack replaces an old one by a rename, which leaves
  * the old one to whoever has it.
@@ -173,16 +174,25 @@ done:
 struct summing {
     const struct unpacker *unpacker;
     const uint64_t *sums;
+    bool spares_cells;        /* blocks that begin in positions or values are left to when those are looked at */
     _Atomic uint64_t damaged; /* the first such block */
 };
 
-static void block_check(void *job, size_t block, size_t worker)
+static struct summing summing_of(const struct unpacker *unpacker, bool spares_cells)
 {
-    struct summing *summing = job;
+    return (struct summing){
+        .unpacker = unpacker,
+        .sums = (const uint64_t *)(const void *)(unpacker->bytes + unpacker->places.sums),
+        .spares_cells = spares_cells,
+        .damaged = UINT64_MAX,
+    };
+}
+
+static void block_check(struct summing *summing, uint64_t block)
+{
     const struct unpacker *unpacker = summing->unpacker;
-    uint64_t first = PACK_HEADER + (uint64_t)block * PACK_BLOCK, rest = unpacker->places.end - first;
+    uint64_t first = PACK_HEADER + block * PACK_BLOCK, rest = unpacker->places.end - first;
     size_t count = rest < PACK_BLOCK ? (size_t)rest : PACK_BLOCK;
-    (void)worker;
     if (pack_sum(unpacker->bytes + first, count) == summing->sums[block])
         return;
     uint64_t damaged = atomic_load(&summing->damaged);
@@ -190,23 +200,57 @@ static void block_check(void *job, size_t block, size_t worker)
         ;
 }
 
-static fescue_status sums_check(const struct unpacker *unpacker)
+static bool block_is_of_cells(const struct unpacker *unpacker, uint64_t block)
 {
-    size_t blocks = (size_t)unpacker->places.blocks, bytes = blocks * sizeof(uint64_t);
-    const uint64_t *sums = (const uint64_t *)(const void *)(unpacker->bytes + unpacker->places.sums);
-    struct summing summing = {.unpacker = unpacker, .sums = sums, .damaged = UINT64_MAX};
-    for (const char *c = unpacker->bytes + sizeof unpacker->header; c < unpacker->bytes + PACK_HEADER; c++)
-        if (*c != 0)
-            return REFUSE(unpacker, "is damaged: there is something behind its header");
-    if (pack_sum(sums, bytes) != sums[blocks])
-        return REFUSE(unpacker, "is damaged: the sum over its sums does not match");
-    team_run(unpacker->context, blocks, block_check, &summing);
-    uint64_t damaged = atomic_load(&summing.damaged);
+    static const enum pack_part parts[] = {PACK_ROW_ACROSS, PACK_ROW_VALUE, PACK_COLUMN_ACROSS, PACK_COLUMN_VALUE};
+    const uint64_t first = PACK_HEADER + block * PACK_BLOCK;
+    for (size_t k = 0; k < sizeof parts / sizeof parts[0]; k++) /* the difference wraps where the part begins behind */
+        if (first - unpacker->places.part[parts[k]] < unpacker->header.part_bytes[parts[k]])
+            return true;
+    return false;
+}
+
+static void block_task(void *job, size_t block, size_t worker)
+{
+    struct summing *summing = job;
+    (void)worker;
+    if (!summing->spares_cells || !block_is_of_cells(summing->unpacker, block))
+        block_check(summing, block);
+}
+
+/* The blocks that begin in this stretch, which is one of positions or values. */
+static void stretch_check(void *data, const void *first, const void *end)
+{
+    struct summing *summing = data;
+    const char *bytes = summing->unpacker->bytes + PACK_HEADER;
+    uint64_t from = (uint64_t)((const char *)first - bytes), to = (uint64_t)((const char *)end - bytes);
+    for (uint64_t block = (from + PACK_BLOCK - 1) / PACK_BLOCK; block * PACK_BLOCK < to; block++)
+        block_check(summing, block);
+}
+
+static fescue_status damage_tell(const struct summing *summing)
+{
+    const struct unpacker *unpacker = summing->unpacker;
+    uint64_t damaged = atomic_load(&summing->damaged);
     if (damaged == UINT64_MAX)
         return FESCUE_OK;
     uint64_t first = PACK_HEADER + damaged * PACK_BLOCK, end = first + PACK_BLOCK;
     return REFUSE(unpacker, "is damaged: bytes %" PRIu64 " to %" PRIu64 " are not what was written", first,
                   (end < unpacker->places.end ? end : unpacker->places.end) - 1);
+}
+
+/* All blocks, or all but those of cells. */
+static fescue_status sums_check(const struct unpacker *unpacker, bool spares_cells)
+{
+    struct summing summing = summing_of(unpacker, spares_cells);
+    size_t blocks = (size_t)unpacker->places.blocks;
+    for (const char *c = unpacker->bytes + sizeof unpacker->header; c < unpacker->bytes + PACK_HEADER; c++)
+        if (*c != 0)
+            return REFUSE(unpacker, "is damaged: there is something behind its header");
+    if (pack_sum(summing.sums, blocks * sizeof(uint64_t)) != summing.sums[blocks])
+        return REFUSE(unpacker, "is damaged: the sum over its sums does not match");
+    team_run(unpacker->context, blocks, block_task, &summing);
+    return damage_tell(&summing);
 }
 
 /* ---- parts ------------------------------------------------------------------------------------------------------ */
@@ -236,10 +280,15 @@ static fescue_status cells_unpack(const struct unpacker *unpacker, struct cells 
                                           .start = part_of(unpacker, PACK_COLUMN_START),
                                           .across = part_of(unpacker, PACK_COLUMN_ACROSS),
                                           .value = part_of(unpacker, PACK_COLUMN_VALUE)}};
+    struct summing summing = summing_of(unpacker, true);
+    const struct pack_watch watch = {stretch_check, &summing};
     const char *fault;
-    TRY(pack_check_cells(unpacker->context, cells, &fault));
-    if (fault != NULL)
+    TRY(pack_check_cells(unpacker->context, cells, &watch, &fault));
+    if (fault != NULL) { /* which damage may be the cause of, and perhaps not all was summed */
+        TRY(sums_check(unpacker, false));
         return REFUSE(unpacker, "is malformed: %s", fault);
+    }
+    TRY(damage_tell(&summing));
     TRY(half_cut(unpacker->context, &cells->by_row));
     TRY(half_cut(unpacker->context, &cells->by_column));
 done:
@@ -354,7 +403,7 @@ static fescue_status table_unpack(const struct unpacker *unpacker, fescue_table 
 {
     fescue_status status;
     const struct pack_header *header = &unpacker->header;
-    TRY(sums_check(unpacker));
+    TRY(sums_check(unpacker, true));
     TRY(cells_unpack(unpacker, &table->cells));
     TRY(labels_unpack(unpacker, PACK_ROW_LABELS, (uint32_t)header->rows, &table->row_labels));
     TRY(labels_unpack(unpacker, PACK_COLUMN_LABELS, (uint32_t)header->columns, &table->column_labels));
