@@ -1,7 +1,9 @@
 /* SPDX-License-Identifier: MIT
  *
  * The error over the cells that are really missing, from the errors on cells that were hidden, which as a rule are
- * easier. Three estimates of the mean squared error, over the unseen cells M and the pooled hidden ones H:
+ * easier. Three estimates of the mean squared error, over the unseen cells M and the hidden ones H (where holes are
+ * gaps those that were hidden in gaps, if there are enough: of a scattered cell both neighbours are seen, as of few
+ * others):
  *
  *     by leverage    mean_M (1/w + lev) * mean_H e^2 / (1/w + lev), w the weight of a reading, as a rule 1
  *     by variance    mean_M V s^2 * mean_H e^2 / mean_H V s^2, over the cells hidden in the shape of the holes where
@@ -12,10 +14,12 @@
  * What is announced is the root of the mean of the last two where distances are known, else of the first and the last.
  *
  * The band: whole sensors are drawn with replacement (Efron, Tibshirani 1993, "An Introduction to the Bootstrap",
- * chapter 8, for data in clusters), and the unseen cells of every sensor are given the ratio e^2 / (V s^2) that the
- * hidden ones of the drawn sensor have in their stratum; the 5 % and 95 % points of `DRAWS` draws. So the band holds
- * both: which sensors happened to be hidden, and that the error over the unseen cells is itself that of the few sensors
- * that miss many. Sums are kept a sensor and stratum, so a draw costs no pass over cells.
+ * chapter 8, for data in clusters), twice a draw. Once for the unseen cells, whose error is itself that of the few
+ * sensors that miss many: those of every sensor are given the ratio e^2 / (V s^2) that the hidden ones of a drawn
+ * sensor have in their stratum. Once for the hidden cells, which were those of some sensors and not of others: what
+ * would have been announced from the drawn ones. With T and A the two mean squares, T / A is drawn as the unseen cells'
+ * true one over the announced one is, and the band is the 5 % and 95 % points of announced * sqrt(T / A) over `DRAWS`
+ * draws. Sums are kept a sensor and stratum, so a draw costs no pass over cells.
  */
 #include "judge/judgement.h"
 
@@ -36,7 +40,10 @@ struct announcing {
     const struct judgement *judgement;
     bool by_distance, by_shape;
     uint32_t sensors;
-    struct sums *sums; /* sensors x JUDGE_BINS */
+    struct sums *sums;       /* sensors x JUDGE_BINS */
+    uint32_t *drawn, *times; /* sensors drawn, and how often each */
+    uint32_t *able;          /* of the drawn ones, those that can stand for others in a stratum */
+    struct random_stream random;
 };
 
 static size_t stratum_of(const struct announcing *announcing, double distance)
@@ -73,13 +80,13 @@ static void sums_fill(struct announcing *announcing, const struct judged *cells,
     }
 }
 
-/* All sensors, each as often as drawn (NULL: once). */
+/* The unseen cells of all sensors, and the hidden ones of each as often as drawn (NULL: once). */
 static void sums_add(const struct announcing *announcing, const uint32_t *drawn, struct sums total[JUDGE_BINS])
 {
     memset(total, 0, JUDGE_BINS * sizeof *total);
     for (uint32_t s = 0; s < announcing->sensors; s++) {
         double times = drawn == NULL ? 1 : drawn[s];
-        for (size_t b = 0; times > 0 && b < JUDGE_BINS; b++) {
+        for (size_t b = 0; b < JUDGE_BINS; b++) {
             const struct sums *sums = &announcing->sums[(size_t)s * JUDGE_BINS + b];
             total[b].hidden += times * sums->hidden;
             total[b].relative += times * sums->relative;
@@ -87,9 +94,9 @@ static void sums_add(const struct announcing *announcing, const uint32_t *drawn,
             total[b].expected += times * sums->expected;
             total[b].shaped_square += times * sums->shaped_square;
             total[b].shaped_expected += times * sums->shaped_expected;
-            total[b].missing += times * sums->missing;
-            total[b].leverage += times * sums->leverage;
-            total[b].variance += times * sums->variance;
+            total[b].missing += sums->missing;
+            total[b].leverage += sums->leverage;
+            total[b].variance += sums->variance;
         }
     }
 }
@@ -144,45 +151,67 @@ static double draw_at(const void *draws, uint64_t k)
     return ((const double *)draws)[k];
 }
 
-/* The mean squared error over the unseen cells if those of every sensor had errors like the hidden ones of another,
-   drawn with them: of the same stratum where that one has any there, else of the drawn sensors together. */
-static double truth_draw(const struct announcing *announcing, const uint32_t *drawn,
-                         const struct sums total[JUDGE_BINS])
+static void sensors_draw(struct announcing *announcing)
 {
-    double square = 0, missing = 0;
+    memset(announcing->times, 0, announcing->sensors * sizeof *announcing->times);
     for (uint32_t s = 0; s < announcing->sensors; s++) {
-        const struct sums *own = &announcing->sums[(size_t)s * JUDGE_BINS];
-        const struct sums *other = &announcing->sums[(size_t)drawn[s] * JUDGE_BINS];
-        for (size_t b = 0; b < JUDGE_BINS; b++) {
-            if (own[b].missing == 0)
-                continue;
-            bool has_any = other[b].hidden >= STRATUM_LEAST;
-            missing += own[b].missing;
-            square += own[b].variance * (has_any ? other[b].square / other[b].expected : stratum_ratio(total, b));
-        }
+        announcing->drawn[s] = (uint32_t)random_below(&announcing->random, announcing->sensors);
+        announcing->times[announcing->drawn[s]]++;
     }
-    return square / missing;
 }
 
-static fescue_status band_find(fescue_context *context, const struct announcing *announcing, uint64_t seed,
+/* The sum of squared errors over the unseen cells of a stratum if those of every sensor had errors like the hidden ones
+   of the sensor drawn with it; of another drawn one where that has too few there; where none has enough, of the nearest
+   strata together. */
+static double stratum_draw(struct announcing *announcing, const struct sums total[JUDGE_BINS], size_t b)
+{
+    double square = 0;
+    uint32_t able = 0;
+    for (uint32_t s = 0; s < announcing->sensors; s++)
+        if (announcing->sums[(size_t)announcing->drawn[s] * JUDGE_BINS + b].hidden >= STRATUM_LEAST)
+            announcing->able[able++] = announcing->drawn[s];
+    for (uint32_t s = 0; s < announcing->sensors; s++) {
+        const struct sums *own = &announcing->sums[(size_t)s * JUDGE_BINS + b];
+        const struct sums *other = &announcing->sums[(size_t)announcing->drawn[s] * JUDGE_BINS + b];
+        if (own->missing == 0)
+            continue;
+        if (able > 0 && other->hidden < STRATUM_LEAST) {
+            uint32_t stands = announcing->able[random_below(&announcing->random, able)];
+            other = &announcing->sums[(size_t)stands * JUDGE_BINS + b];
+        }
+        square += own->variance * (able > 0 ? other->square / other->expected : stratum_ratio(total, b));
+    }
+    return square;
+}
+
+/* T / A, times what is announced. */
+static double truth_draw(struct announcing *announcing, double announced)
+{
+    struct sums total[JUDGE_BINS];
+    double square = 0, missing = 0;
+    sensors_draw(announcing);
+    sums_add(announcing, announcing->times, total);
+    for (size_t b = 0; b < JUDGE_BINS; b++) {
+        square += total[b].missing > 0 ? stratum_draw(announcing, total, b) : 0;
+        missing += total[b].missing;
+    }
+    sensors_draw(announcing);
+    sums_add(announcing, announcing->times, total);
+    return square / missing * announced / estimate(announcing, total).all;
+}
+
+static fescue_status band_find(fescue_context *context, struct announcing *announcing, double announced,
                                struct judgement *judgement)
 {
     fescue_status status;
-    uint32_t *times = NULL, *drawn = NULL, sensors = announcing->sensors;
+    uint32_t sensors = announcing->sensors;
     double draws[DRAWS];
     uint64_t count = 0;
-    struct sums total[JUDGE_BINS];
-    struct random_stream random = random_open(seed, RANDOM_FOLD, 0x90000000u);
-    TRY(TAKE(context, sensors, &times));
-    TRY(TAKE(context, sensors, &drawn));
+    TRY(TAKE(context, sensors, &announcing->times));
+    TRY(TAKE(context, sensors, &announcing->drawn));
+    TRY(TAKE(context, sensors, &announcing->able));
     for (int d = 0; d < DRAWS; d++) {
-        memset(times, 0, sensors * sizeof *times);
-        for (uint32_t s = 0; s < sensors; s++) {
-            drawn[s] = (uint32_t)random_below(&random, sensors);
-            times[drawn[s]]++;
-        }
-        sums_add(announcing, times, total);
-        double all = truth_draw(announcing, drawn, total);
+        double all = truth_draw(announcing, announced);
         if (isfinite(all))
             draws[count++] = sqrt(all);
     }
@@ -191,8 +220,9 @@ static fescue_status band_find(fescue_context *context, const struct announcing 
         judgement->rmse_high = fmax(order_pick(draw_at, draws, count, count - 1 - count / 20), judgement->rmse);
     }
 done:
-    GIVE(context, &times);
-    GIVE(context, &drawn);
+    GIVE(context, &announcing->times);
+    GIVE(context, &announcing->drawn);
+    GIVE(context, &announcing->able);
     return status;
 }
 
@@ -218,21 +248,21 @@ static double mae_find(const struct judgement *judgement, const struct judged *p
     return size / (double)pool->count * deviation / (double)missing->count;
 }
 
-fescue_status announce(fescue_context *context, const struct judged *pool, const struct judged *missing,
-                       const struct judge_request *request, struct judgement *judgement)
+fescue_status announce(fescue_context *context, const struct judged *pool, const struct judged *speaking,
+                       const struct judged *missing, const struct judge_request *request, struct judgement *judgement)
 {
     fescue_status status;
     uint64_t shaped = 0;
     struct announcing announcing = {.judgement = judgement, .by_distance = judgement->variance.has_distance};
     struct sums total[JUDGE_BINS];
-    for (uint64_t c = 0; c < pool->count; c++)
-        shaped += (pool->at[c].marks & STANDING_SHAPED) != 0;
+    for (uint64_t c = 0; c < speaking->count; c++)
+        shaped += (speaking->at[c].marks & STANDING_SHAPED) != 0;
     announcing.by_shape = shaped >= SHAPED_LEAST;
     announcing.sensors = judgement->sensors_are_rows ? request->cells->rows : request->cells->columns;
     TRY(TAKE(context, (size_t)announcing.sensors * JUDGE_BINS, &announcing.sums));
     judgement->scattered_rmse = rmse_where(pool, false);
     judgement->shaped_rmse = rmse_where(pool, true);
-    sums_fill(&announcing, pool, true);
+    sums_fill(&announcing, speaking, true);
     sums_fill(&announcing, missing, false);
     sums_add(&announcing, NULL, total);
     struct estimates found = estimate(&announcing, total);
@@ -240,8 +270,9 @@ fescue_status announce(fescue_context *context, const struct judged *pool, const
     judgement->by_distance = announcing.by_distance ? sqrt(found.by_distance) : NAN;
     judgement->by_variance = sqrt(found.by_variance);
     judgement->rmse = sqrt(found.all);
-    judgement->mae = mae_find(judgement, pool, missing);
-    TRY(band_find(context, &announcing, (uint64_t)request->options->seed, judgement));
+    judgement->mae = mae_find(judgement, speaking, missing);
+    announcing.random = random_open((uint64_t)request->options->seed, RANDOM_FOLD, 0x90000000u);
+    TRY(band_find(context, &announcing, found.all, judgement));
 done:
     GIVE(context, &announcing.sums);
     return status;

@@ -7,7 +7,9 @@
  * Scattered folds come first, then folds in the shape of the holes. Left to the program, there are as many scattered
  * ones as bring `cells_wanted` errors together (the relative error of an RMSE over as many normal ones is one in a
  * hundred) and eight shaped ones, since stretches of one sensor count for little more than one cell each. Both are cut
- * where learning again takes long; where even a few are too many, the errors that choosing left have to do.
+ * where learning again takes long; where even a few are too many, the errors that choosing left have to do. A fold
+ * learns from nothing (cold) where at least half of the shaped ones can: from the fit on all cells (warm) it is several
+ * times quicker, but components that hang together over long gaps keep something of what is hidden.
  *
  * The folds run one after another and their fits are parallel inside, so the bits do not depend on the number of
  * workers.
@@ -17,7 +19,7 @@
 #include <math.h>
 
 static const double cells_wanted = 5000;
-enum { FOLDS_MOST = 5, SHAPED_MOST = 8, COLD_ROUNDS = 100, WARM_ROUNDS = 25, START_SIZE = 23 };
+enum { FOLDS_MOST = 5, SHAPED_MOST = 8, SHAPED_COLD = 4, COLD_ROUNDS = 100, WARM_ROUNDS = 25, START_SIZE = 23 };
 /* Multiplications for all folds: some tens of seconds of one processor. */
 static const double work_most = 6e10, cold_most = 4e10;
 /* Following time takes about as much again for the series, and more for the steps. */
@@ -42,7 +44,10 @@ static void folds_plan(const struct judge_request *request, struct judgement *ju
     double hidden = fmax(1, options->holdout * (double)request->cells->count);
     double scattered = is_auto ? fmin(FOLDS_MOST, ceil(cells_wanted / hidden)) : (double)options->folds;
     double shaped = !is_shaped ? 0 : is_auto ? SHAPED_MOST : (double)options->folds;
-    judgement->is_warm = (scattered + shaped) * fold_work(request, false) > cold_most;
+    double cold = floor(cold_most / fold_work(request, false));
+    judgement->is_warm = scattered + (is_auto ? fmin(shaped, SHAPED_COLD) : shaped) > cold;
+    if (is_auto && !judgement->is_warm)
+        shaped = fmin(shaped, cold - scattered);
     double affordable = floor(work_most / fold_work(request, judgement->is_warm));
     if (is_auto && scattered + shaped > affordable) {
         scattered = fmin(scattered, fmax(affordable >= 1, floor(affordable / (is_shaped ? 3 : 1))));

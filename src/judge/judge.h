@@ -189,6 +189,7 @@ struct variance {
     double weight[VARIANCE_TERMS];
     double least; /* never below */
     bool has_distance;
+    bool is_of_gaps; /* fitted to cells hidden in gaps alone */
 };
 
 /* How precise readings of rows and columns are, as the weights of seen cells have it (line_weights.c). */

@@ -74,23 +74,41 @@ done:
     return status;
 }
 
+/* Where holes are gaps, those of the hidden cells that lay in gaps; scattered ones come first. */
+static struct judged speaking_find(const struct judge_request *request, const struct judged *pool)
+{
+    enum { ENOUGH = 1000 };
+    uint64_t first = 0;
+    while (first < pool->count && !(pool->at[first].marks & STANDING_SHAPED))
+        first++;
+    if (request->shape->shape != FESCUE_HOLDOUT_GAPS || pool->count - first < ENOUGH)
+        first = 0;
+    return (struct judged){.count = pool->count - first,
+                           .row = pool->row + first,
+                           .column = pool->column + first,
+                           .square = pool->square + first,
+                           .at = pool->at + first};
+}
+
 static fescue_status pool_judge(fescue_context *context, const struct judge_request *request, const struct judged *pool,
                                 struct judgement *judgement)
 {
     fescue_status status;
-    struct judged missing = {0};
+    struct judged missing = {0}, speaking = speaking_find(request, pool);
+    bool is_of_gaps = judgement->tracks != NULL && request->shape->shape == FESCUE_HOLDOUT_GAPS &&
+                      (speaking.at[0].marks & STANDING_SHAPED);
     double noise, lambda;
     TRY(relearn_all(context, request, &noise, &lambda));
     TRY(leverage_create(context, request->cells, request->model, noise, lambda, &judgement->leverage));
-    variance_fit(pool, judgement->tracks != NULL, &judgement->variance);
+    variance_fit(&speaking, judgement->tracks != NULL, is_of_gaps, &judgement->variance);
     TRY(scales_fit(context, pool, judgement->tracks, judgement));
-    TRY(scores_rank(context, pool, judgement));
+    TRY(scores_rank(context, &speaking, judgement));
     TRY(line_weights_find(context, request->cells, &judgement->weights));
     TRY(judged_missing(context, request->cells, &judgement->weights, (uint64_t)request->options->seed, &missing));
     struct judged_view view = {&judgement->leverage, judgement->tracks, judgement->sensors_are_rows};
     judged_measure(context, &view, 0, &missing);
     /* With nothing missing the hidden cells speak for themselves. */
-    TRY(announce(context, pool, missing.count > 0 ? &missing : pool, request, judgement));
+    TRY(announce(context, pool, &speaking, missing.count > 0 ? &missing : pool, request, judgement));
     judgement->is_judged = true;
     judgement->judged = pool->count;
     TRY(halfwidths_rank(context, missing.count > 0 ? &missing : pool, judgement));

@@ -84,7 +84,7 @@ fescue_status folds_run(fescue_context *context, const struct judge_request *req
 
 /* ---- variance and error ------------------------------------------------------------------------------------------ */
 
-void variance_fit(const struct judged *pool, bool has_distance, struct variance *variance);
+void variance_fit(const struct judged *pool, bool has_distance, bool is_of_gaps, struct variance *variance);
 double variance_at(const struct variance *variance, const struct standing *at);
 /* The scale of each sensor's errors, shrunk towards 1. */
 fescue_status scales_fit(fescue_context *context, const struct judged *pool, const struct tracks *tracks,
@@ -97,7 +97,8 @@ double tilt_at(const struct judgement *judgement, const struct standing *at);
 /* The ceil((n+1) level)-th smallest of the scores; infinite when there are too few. */
 double score_quantile(const double *scores, uint64_t count, double level);
 
-fescue_status announce(fescue_context *context, const struct judged *pool, const struct judged *missing,
-                       const struct judge_request *request, struct judgement *judgement);
+/* pool: all hidden cells; speaking: those of them that V was fitted to. */
+fescue_status announce(fescue_context *context, const struct judged *pool, const struct judged *speaking,
+                       const struct judged *missing, const struct judge_request *request, struct judgement *judgement);
 
 #endif

@@ -17,6 +17,10 @@
  * coefficients are worse by as much as such errors are fewer. That shows away from seen cells only, near which the same
  * movement is in the estimate
  *
+ * In gaps own is left out of lev: there it grows into the gap as the distance does, by more than the error, and in the
+ * folds, where sensors have lost more cells than they really miss, it is larger all over with errors that are not. So
+ * it would take the place of the distance and promise less for the cells that are missing.
+ *
  * fitted to the pooled squared errors y of the folds. The spread of y grows with its mean, so the terms are fitted by
  * least squares under weights 1/V^2, which V itself gives: four rounds, the first with V constant (iteratively
  * reweighted least squares; for normal errors the equations of maximum likelihood). A squared error above fifty times
@@ -45,13 +49,15 @@ static const double wild = 50;
 /* V is not believed below this share of the mean squared error: the terms are a summary. */
 static const double least_share = 0.01;
 
-static void terms_set(bool has_distance, const struct standing *at, double *term)
+static void terms_set(const struct variance *variance, const struct standing *at, double *term)
 {
+    bool has_distance = variance->has_distance;
+    double leverage = variance->is_of_gaps ? fmax(at->leverage - at->own, 0) : at->leverage;
     double beyond = has_distance ? fmax(at->distance - 1., 0) : 0;
     double dark = has_distance && (at->marks & STANDING_DARK) ? 1 : 0;
     term[0] = 1. / at->weight;
-    term[1] = at->leverage;
-    term[2] = sqrt(at->leverage);
+    term[1] = leverage;
+    term[2] = sqrt(leverage);
     term[3] = 1 - exp(-beyond / 3);
     term[4] = 1 - exp(-beyond / 30);
     term[5] = 1 - exp(-beyond / 300);
@@ -64,7 +70,7 @@ static void terms_set(bool has_distance, const struct standing *at, double *term
 double variance_at(const struct variance *variance, const struct standing *at)
 {
     double term[VARIANCE_TERMS], sum = 0;
-    terms_set(variance->has_distance, at, term);
+    terms_set(variance, at, term);
     for (size_t k = 0; k < VARIANCE_TERMS; k++)
         sum += variance->weight[k] * term[k];
     return fmax(sum, variance->least);
@@ -88,7 +94,7 @@ static void round_fit(const struct judged *pool, bool is_first, double mean, str
     for (uint64_t c = 0; c < pool->count; c++) {
         double fit = is_first ? mean : variance_at(variance, &pool->at[c]);
         double y = fmin(pool->square[c], wild * fit), weight = mean * mean / (fit * fit);
-        terms_set(variance->has_distance, &pool->at[c], term);
+        terms_set(variance, &pool->at[c], term);
         for (size_t k = 0; k < VARIANCE_TERMS; k++) {
             side[k] += weight * y * term[k];
             for (size_t l = 0; l < VARIANCE_TERMS; l++)
@@ -98,12 +104,13 @@ static void round_fit(const struct judged *pool, bool is_first, double mean, str
     weights_descend(gram, side, variance->weight);
 }
 
-void variance_fit(const struct judged *pool, bool has_distance, struct variance *variance)
+void variance_fit(const struct judged *pool, bool has_distance, bool is_of_gaps, struct variance *variance)
 {
     double mean = 0;
     for (uint64_t c = 0; c < pool->count; c++)
         mean += pool->square[c] / (double)pool->count;
-    *variance = (struct variance){.weight = {mean}, .least = least_share * mean, .has_distance = has_distance};
+    *variance = (struct variance){
+        .weight = {mean}, .least = least_share * mean, .has_distance = has_distance, .is_of_gaps = is_of_gaps};
     if (!(mean > 0) || !isfinite(mean))
         return;
     for (int round = 0; round < ROUNDS; round++)
