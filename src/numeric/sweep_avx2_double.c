@@ -14,7 +14,9 @@
 #endif
 
 #define REAL double
+#define REAL_IS_DOUBLE
 #define LANES 4
+#define GROUP 4
 #define MADD(a, b, c) _mm256_fmadd_pd(a, b, c)
 #define MADD_WIDE(a, b, c) _mm256_fmadd_pd(a, b, c)
 #define WIDES 1

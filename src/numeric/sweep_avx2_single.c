@@ -15,12 +15,11 @@
 
 #define REAL float
 #define LANES 8
+#define GROUP 8
 #define MADD(a, b, c) _mm256_fmadd_ps(a, b, c)
 #define MADD_WIDE(a, b, c) _mm256_fmadd_pd(a, b, c)
 #define WIDES 2
-#define LOWER(x) _mm256_cvtps_pd(_mm256_castps256_ps128(x))
-#define UPPER(x) _mm256_cvtps_pd(_mm256_extractf128_ps(x, 1))
-#define WIDEN_FOUR(x) _mm256_cvtps_pd(x)
+#define WIDEN(x, part) _mm256_cvtps_pd((part) == 0 ? _mm256_castps256_ps128(x) : _mm256_extractf128_ps(x, 1))
 #define COMMON_REGISTERS(X) X(1) X(2) X(3) X(4)
 #define SWEEP_KERNEL sweep_avx2_single
 #include "numeric/sweep_kernel.h"

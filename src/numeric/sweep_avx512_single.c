@@ -1,6 +1,9 @@
 /* SPDX-License-Identifier: MIT
  *
  * The sweep kernels in single precision for processors with AVX-512 (F, VL, DQ).
+ *
+ * Eight floats a register, so that rank 5 or 8 is not half padding, and eight doubles to add them up in. Processors
+ * that do 512 bits in two halves (such as Zen 4, where this was measured) lose nothing by it at any rank.
  */
 #include "numeric/sweep_internal.h"
 
@@ -14,14 +17,13 @@
 #endif
 
 #define REAL float
-#define LANES 16
-#define MADD(a, b, c) _mm512_fmadd_ps(a, b, c)
+#define LANES 8
+#define GROUP 8
+#define MADD(a, b, c) _mm256_fmadd_ps(a, b, c)
 #define MADD_WIDE(a, b, c) _mm512_fmadd_pd(a, b, c)
-#define WIDES 2
-#define LOWER(x) _mm512_cvtps_pd(_mm512_castps512_ps256(x))
-#define UPPER(x) _mm512_cvtps_pd(_mm512_extractf32x8_ps(x, 1))
-#define WIDEN_FOUR(x) _mm256_cvtps_pd(x)
-#define COMMON_REGISTERS(X) X(1) X(2)
+#define WIDES 1
+#define WIDEN(x, part) _mm512_cvtps_pd(x)
+#define COMMON_REGISTERS(X) X(1) X(2) X(3) X(4)
 #define SWEEP_KERNEL sweep_avx512_single
 #include "numeric/sweep_kernel.h"
 

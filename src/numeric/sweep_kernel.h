@@ -3,50 +3,58 @@
  * The loops over observed cells, once for every precision and instruction set. The including file defines
  *
  *     REAL                 float or double, the precision of factors and values
- *     LANES                REALs in a register: 2, 4, 8 or 16
- *     WIDES                registers that LANES doubles take: 1 when REAL is double, 2 when it is float
+ *     LANES                REALs in a register: 2, 4 or 8
+ *     GROUP                cells in flight: LANES, or 4 of doubles, whose halves are added first
+ *     WIDES                registers that LANES doubles take
  *     MADD(a, b, c)        a b + c on registers of REAL; MADD_WIDE on registers of double
- *     LOWER(x), UPPER(x)   the halves of a register of floats, as doubles
- *     WIDEN_FOUR(x)        four floats as doubles
+ *     WIDEN(x, part)       the numbers of a register of floats that go to double register `part` of WIDES; only when
+ *                          REAL is float
  *     COMMON_REGISTERS(X)  X(n) for each number n of registers a row that deserves loops of its own
  *     SWEEP_KERNEL         the name of the table this gives
  *
- * Four cells are in flight. For the cells k..k+3 of a line, with the line's row l in registers:
+ * A group of cells is in flight, and what they give is one register. For the cells c of a group of a line,
+ * with the line's row l in registers:
  *
  *     s_c = sum over registers of l * p_c        p_c the right row of cell c: one register of partial sums a cell
- *     r   = (sum of s_0, ..., sum of s_3) - x    four horizontal sums by a transposing tree
- *     g  += r_0 p_0 + r_1 p_1 + r_2 p_2 + r_3 p_3
+ *     r   = (sum of s_0, sum of s_1, ...) - x    all horizontal sums at once, by a transposing tree
+ *     g  += sum over c of r_c p_c                in two chains, so that half of the additions wait for nothing
  *
- * Within the four, arithmetic is REAL; what is added over the cells of a line (g, sums of squares) is double. The last
- * one to three cells of a line are filled up to four, and r is then 0 for those that are not there. The right rows of
- * the cells AHEAD of these are asked for beforehand: they lie anywhere in memory, and the order of cells says where.
+ * Within a group arithmetic is REAL; what is added over the groups of a line (g, sums of squares) is double. In single
+ * precision a term of g so meets GROUP roundings at most, whatever the length of the line. The last cells of a line
+ * that are no whole group are filled up to one, and r is then 0 for those that are not there.
  *
- * The loops are written for any number of registers a row and made once for each common number of them, where
- * everything is unrolled and stays in registers. A line is worked on by one worker from its first to its last cell, so
- * that bits depend on REAL, LANES and MADD only.
+ * What a cell costs is, in turn, latency, memory and arithmetic, and each has its remedy:
+ *   - From a row to its r it is a long way (product, tree, difference, and back into every lane), which the processor
+ *     can hide only as far as its window reaches. So the sums s of a group are made before the gradient of the group
+ *     before it: what stands next in line is always ready.
+ *   - The right rows lie anywhere in memory, but the order of cells says where: those of the cells AHEAD are asked for,
+ *     unless all of them fit into a core's own cache (NEAR_BYTES).
+ *   - Positions and values come in order, 12 bytes a cell, faster than the processor itself looks out for them: those
+ *     STREAM_AHEAD are asked for.
+ *   - The loops are written for any number of registers a row and made once for each common number of them, where
+ *     everything is unrolled and stays in registers.
+ *
+ * A line is worked on by one worker from its first to its last cell, so that bits depend on REAL, LANES and MADD only.
  */
 #include <assert.h>
 #include <float.h>
 #include <math.h>
 #include <string.h>
 
-/* Some 32 cells of 3 to 4 ns hide a trip to memory of 100 ns, and what a busy machine adds to it. */
-enum { AHEAD = 32, CACHE_LINE = 64 };
+/* Some 32 cells of 2 to 3 ns hide a trip to memory of 80 ns, and what a busy machine adds to it; 4 KB of values. */
+enum { AHEAD = 32, STREAM_AHEAD = 512, CACHE_LINE = 64, NEAR_BYTES = 400 << 10 };
 enum { MOST_REGISTERS = SWEEP_MOST_WIDTH / LANES, WIDE_LANES = LANES / WIDES };
 
 #define REGISTER_OF(type, count)                                                                                       \
     type __attribute__((vector_size((count) * sizeof(type)), aligned(sizeof(type)), may_alias))
 typedef REGISTER_OF(REAL, LANES) vec;
 typedef REGISTER_OF(double, WIDE_LANES) wide;
-typedef REGISTER_OF(REAL, 4) four;
-typedef REGISTER_OF(double, 4) four_wide;
-typedef REGISTER_OF(int64_t, 4) four_bits;
+/* A number a cell of a group, and sums of their products. */
+typedef REGISTER_OF(REAL, GROUP) cells;
+typedef REGISTER_OF(double, GROUP / WIDES) squares;
+typedef REGISTER_OF(int64_t, GROUP / WIDES) squares_bits;
 
-#if WIDES == 1
-#define REAL_EPSILON DBL_EPSILON
-#else
-#define REAL_EPSILON FLT_EPSILON
-#endif
+#define REAL_EPSILON (sizeof(REAL) == sizeof(double) ? DBL_EPSILON : (double)FLT_EPSILON)
 #define INLINE static inline __attribute__((always_inline))
 
 /* ---- registers ----------------------------------------------------------------------------------------------------
@@ -62,124 +70,126 @@ INLINE wide splat_wide(double x)
     return x - (wide){0};
 }
 
-/* sum[0 .. WIDES-1] += x, and four REALs as doubles */
-#if WIDES == 1
-INLINE void wide_add(wide *sum, const vec *x)
-{
-    *sum += *x;
-}
-#define WIDEN_FOUR(x) (x)
-#else
-INLINE void wide_add(wide *sum, const vec *x)
-{
-    sum[0] += LOWER(*x);
-    sum[1] += UPPER(*x);
-}
+#ifndef WIDEN
+#define WIDEN(x, part) (x)
 #endif
 
-/* (sum of a, sum of b, sum of c, sum of d), pairs first. */
+/* sum[0 .. WIDES-1] += x */
+INLINE void wide_add(wide *sum, const vec *x)
+{
+    for (int part = 0; part < WIDES; part++)
+        sum[part] += WIDEN(*x, part);
+}
+
+/* (sum of s[0], sum of s[1], ...). Shuffles that stay within 16 bytes come first, and where eight doubles are done in
+   two halves, their halves are added before all: what follows then costs half as much. */
 #if LANES == 2
-INLINE void sum_four(const vec s[4], four *out)
+INLINE void sum_each(const vec s[GROUP], cells *out)
 {
-    vec ab = __builtin_shufflevector(s[0], s[1], 0, 2) + __builtin_shufflevector(s[0], s[1], 1, 3);
-    vec cd = __builtin_shufflevector(s[2], s[3], 0, 2) + __builtin_shufflevector(s[2], s[3], 1, 3);
-    *out = __builtin_shufflevector(ab, cd, 0, 1, 2, 3);
+    *out = __builtin_shufflevector(s[0], s[1], 0, 2) + __builtin_shufflevector(s[0], s[1], 1, 3);
 }
-#elif LANES == 4
-INLINE void sum_four(const vec s[4], four *out)
+#elif LANES == 4 && !defined(REAL_IS_DOUBLE)
+#define PAIRS(a, b) (__builtin_shufflevector(a, b, 0, 2, 4, 6) + __builtin_shufflevector(a, b, 1, 3, 5, 7))
+INLINE void sum_each(const vec s[GROUP], cells *out)
 {
-    vec ab = __builtin_shufflevector(s[0], s[1], 0, 4, 2, 6) + __builtin_shufflevector(s[0], s[1], 1, 5, 3, 7);
-    vec cd = __builtin_shufflevector(s[2], s[3], 0, 4, 2, 6) + __builtin_shufflevector(s[2], s[3], 1, 5, 3, 7);
-    *out = __builtin_shufflevector(ab, cd, 0, 1, 4, 5) + __builtin_shufflevector(ab, cd, 2, 3, 6, 7);
+    vec ab = PAIRS(s[0], s[1]), cd = PAIRS(s[2], s[3]);
+    *out = PAIRS(ab, cd);
 }
-#elif LANES == 8
-INLINE void sum_four(const vec s[4], four *out)
+#elif defined(REAL_IS_DOUBLE)
+typedef REGISTER_OF(double, 4) four;
+INLINE void sum_four(const four *a, const four *b, const four *c, const four *d, four *out)
 {
-    vec ab = __builtin_shufflevector(s[0], s[1], 0, 1, 2, 3, 8, 9, 10, 11) +
-             __builtin_shufflevector(s[0], s[1], 4, 5, 6, 7, 12, 13, 14, 15);
-    vec cd = __builtin_shufflevector(s[2], s[3], 0, 1, 2, 3, 8, 9, 10, 11) +
-             __builtin_shufflevector(s[2], s[3], 4, 5, 6, 7, 12, 13, 14, 15);
-    vec pairs = __builtin_shufflevector(ab, cd, 0, 8, 2, 10, 4, 12, 6, 14) +
-                __builtin_shufflevector(ab, cd, 1, 9, 3, 11, 5, 13, 7, 15); /* a c a c b d b d */
-    *out = __builtin_shufflevector(pairs, pairs, 0, 4, 1, 5) + __builtin_shufflevector(pairs, pairs, 2, 6, 3, 7);
+    four ab = __builtin_shufflevector(*a, *b, 0, 5, 2, 7) + __builtin_shufflevector(*a, *b, 1, 4, 3, 6);
+    four cd = __builtin_shufflevector(*c, *d, 0, 5, 2, 7) + __builtin_shufflevector(*c, *d, 1, 4, 3, 6);
+    *out = __builtin_shufflevector(ab, cd, 0, 1, 6, 7) + __builtin_shufflevector(ab, cd, 2, 3, 4, 5);
+}
+#if LANES == 4
+INLINE void sum_each(const vec s[GROUP], cells *out)
+{
+    sum_four(&s[0], &s[1], &s[2], &s[3], out);
 }
 #else
-INLINE void sum_four(const vec s[4], four *out)
+INLINE void sum_each(const vec s[GROUP], cells *out)
 {
-    vec ab = __builtin_shufflevector(s[0], s[1], 0, 1, 2, 3, 4, 5, 6, 7, 16, 17, 18, 19, 20, 21, 22, 23) +
-             __builtin_shufflevector(s[0], s[1], 8, 9, 10, 11, 12, 13, 14, 15, 24, 25, 26, 27, 28, 29, 30, 31);
-    vec cd = __builtin_shufflevector(s[2], s[3], 0, 1, 2, 3, 4, 5, 6, 7, 16, 17, 18, 19, 20, 21, 22, 23) +
-             __builtin_shufflevector(s[2], s[3], 8, 9, 10, 11, 12, 13, 14, 15, 24, 25, 26, 27, 28, 29, 30, 31);
-    vec abcd = __builtin_shufflevector(ab, cd, 0, 1, 2, 3, 8, 9, 10, 11, 16, 17, 18, 19, 24, 25, 26, 27) +
-               __builtin_shufflevector(ab, cd, 4, 5, 6, 7, 12, 13, 14, 15, 20, 21, 22, 23, 28, 29, 30, 31);
-    vec pairs = abcd + __builtin_shufflevector(abcd, abcd, 1, 0, 3, 2, 5, 4, 7, 6, 9, 8, 11, 10, 13, 12, 15, 14);
-    *out = __builtin_shufflevector(pairs, pairs, 0, 4, 8, 12) + __builtin_shufflevector(pairs, pairs, 2, 6, 10, 14);
+    four half[GROUP];
+    for (size_t c = 0; c < GROUP; c++)
+        half[c] = __builtin_shufflevector(s[c], s[c], 0, 1, 2, 3) + __builtin_shufflevector(s[c], s[c], 4, 5, 6, 7);
+    sum_four(&half[0], &half[1], &half[2], &half[3], out);
+}
+#endif
+#else
+#define PAIRS(a, b)                                                                                                    \
+    (__builtin_shufflevector(a, b, 0, 2, 8, 10, 4, 6, 12, 14) +                                                        \
+     __builtin_shufflevector(a, b, 1, 3, 9, 11, 5, 7, 13, 15))
+INLINE void sum_each(const vec s[GROUP], cells *out)
+{
+    vec ab = PAIRS(s[0], s[1]), cd = PAIRS(s[2], s[3]), ef = PAIRS(s[4], s[5]), gh = PAIRS(s[6], s[7]);
+    vec abcd = PAIRS(ab, cd), efgh = PAIRS(ef, gh); /* each number in two parts, four apart */
+    *out = __builtin_shufflevector(abcd, efgh, 0, 1, 2, 3, 8, 9, 10, 11) +
+           __builtin_shufflevector(abcd, efgh, 4, 5, 6, 7, 12, 13, 14, 15);
 }
 #endif
 
-/* ---- four cells ---------------------------------------------------------------------------------------------------
+/* ---- groups of cells ----------------------------------------------------------------------------------------------
  */
+
+/* Where the right rows of a group are, and a number for each. */
+struct group {
+    const REAL *row[GROUP];
+    cells number;
+};
 
 /* In the three below a broken group goes through a copy, so that whole ones stay in registers. */
 
 /* values[k], zeros for the cells that are not there. */
-INLINE void four_load(const REAL *values, uint64_t k, size_t count, four *to)
+INLINE void group_load(const REAL *values, uint64_t k, size_t count, cells *to)
 {
-    if (__builtin_expect(count == 4, 1)) {
-        *to = *(const four *)(values + k);
+    if (count == GROUP) {
+        *to = *(const cells *)(values + k);
     } else {
-        REAL number[4] = {0};
+        REAL number[GROUP] = {0};
         for (size_t c = 0; c < count; c++)
             number[c] = values[k + c];
-        *to = (four){number[0], number[1], number[2], 0};
+        *to = *(const cells *)number;
     }
 }
 
-INLINE void four_store(const four *from, uint64_t k, size_t count, REAL *values)
+INLINE void group_store(const cells *from, uint64_t k, size_t count, REAL *values)
 {
-    if (__builtin_expect(count == 4, 1)) {
-        *(four *)(values + k) = *from;
+    if (count == GROUP) {
+        *(cells *)(values + k) = *from;
     } else {
-        const REAL number[3] = {(*from)[0], (*from)[1], (*from)[2]};
+        REAL number[GROUP];
+        *(cells *)number = *from;
         for (size_t c = 0; c < count; c++)
             values[k + c] = number[c];
     }
 }
 
 /* Zeros for the cells that are not there. */
-INLINE void four_cut(four *r, size_t count)
+INLINE void group_cut(cells *r, size_t count)
 {
-    if (__builtin_expect(count < 4, 0))
-        *r = (four){(*r)[0], count > 1 ? (*r)[1] : 0, count > 2 ? (*r)[2] : 0, 0};
+    if (count < GROUP) {
+        REAL number[GROUP];
+        *(cells *)number = *r;
+        for (size_t c = count; c < GROUP; c++)
+            number[c] = 0;
+        *r = *(const cells *)number;
+    }
 }
 
-/* The positions of the cells; those that are not there are at the place of the first. */
-INLINE void positions_load(const uint32_t *across, size_t count, uint32_t position[4])
-{
-    if (__builtin_expect(count == 4, 1))
-        memcpy(position, across, 4 * sizeof *across);
-    else
-        for (size_t c = 0; c < 4; c++)
-            position[c] = across[c < count ? c : 0];
-}
-
-INLINE void rows_find(const struct sweep_rows *rows, const uint32_t position[4], const REAL *row[4])
+/* The rows of the cells; those that are not there have the row of the first. */
+INLINE void group_find(const struct sweep_rows *rows, const uint32_t *across, size_t count, const REAL *row[GROUP])
 {
     const REAL *data = rows->data;
-    for (size_t c = 0; c < 4; c++)
-        row[c] = data + position[c] * rows->stride;
+    for (size_t c = 0; c < GROUP; c++)
+        row[c] = data + across[c < count ? c : 0] * rows->stride;
 }
 
 INLINE void row_prefetch(const REAL *row, size_t width)
 {
     for (size_t at = 0; at < width * sizeof(REAL); at += CACHE_LINE)
         __builtin_prefetch((const char *)row + at);
-}
-
-INLINE void rows_prefetch(const struct sweep_rows *rows, const uint32_t *across, size_t width)
-{
-    for (size_t c = 0; c < 4; c++)
-        row_prefetch((const REAL *)rows->data + across[AHEAD + c] * rows->stride, width);
 }
 
 INLINE void row_load(const struct sweep_rows *rows, uint32_t line, vec *to, const size_t registers)
@@ -190,23 +200,26 @@ INLINE void row_load(const struct sweep_rows *rows, uint32_t line, vec *to, cons
 }
 
 /* s_c += l * row_c */
-INLINE void rows_dot(const vec *l, const REAL *const row[4], vec s[4], const size_t registers)
+INLINE void rows_dot(const vec *l, const REAL *const row[GROUP], vec s[GROUP], const size_t registers)
 {
     for (size_t v = 0; v < registers; v++)
-        for (size_t c = 0; c < 4; c++)
+        for (size_t c = 0; c < GROUP; c++)
             s[c] = MADD(l[v], *(const vec *)(row[c] + v * LANES), s[c]);
 }
 
-/* g += sum over c of r_c row_c */
-INLINE void rows_gather(const four *r, const REAL *const row[4], wide *g, const size_t registers)
+/* g += sum over c of number_c row_c */
+INLINE void group_gather(const struct group *group, wide *g, const size_t registers)
 {
-    vec r0 = splat((*r)[0]), r1 = splat((*r)[1]), r2 = splat((*r)[2]), r3 = splat((*r)[3]);
+    vec number[GROUP];
+    for (size_t c = 0; c < GROUP; c++)
+        number[c] = splat(group->number[c]);
     for (size_t v = 0; v < registers; v++) {
-        vec sum = r0 * *(const vec *)(row[0] + v * LANES);
-        sum = MADD(r1, *(const vec *)(row[1] + v * LANES), sum);
-        sum = MADD(r2, *(const vec *)(row[2] + v * LANES), sum);
-        sum = MADD(r3, *(const vec *)(row[3] + v * LANES), sum);
-        wide_add(g + v * WIDES, &sum);
+        vec sum[2] = {number[0] * *(const vec *)(group->row[0] + v * LANES),
+                      number[1] * *(const vec *)(group->row[1] + v * LANES)};
+        for (size_t c = 2; c < GROUP; c++)
+            sum[c % 2] = MADD(number[c], *(const vec *)(group->row[c] + v * LANES), sum[c % 2]);
+        sum[0] += sum[1];
+        wide_add(g + v * WIDES, &sum[0]);
     }
 }
 
@@ -226,9 +239,20 @@ INLINE void product_store(const struct sweep_job *job, uint32_t line, const wide
             *(wide *)(row + v * WIDE_LANES) = g[v];
 }
 
-INLINE double lanes_sum(const four_wide *x)
+INLINE double squares_sum(const squares sums[WIDES])
 {
-    return ((*x)[0] + (*x)[1]) + ((*x)[2] + (*x)[3]);
+    double sum = 0;
+    for (size_t part = 0; part < WIDES; part++)
+        for (size_t lane = 0; lane < GROUP / WIDES; lane++)
+            sum += sums[part][lane];
+    return sum;
+}
+
+/* sum += x y, in double */
+INLINE void squares_add(squares sum[WIDES], const cells *x, const cells *y)
+{
+    for (int part = 0; part < WIDES; part++)
+        sum[part] += WIDEN(*x, part) * WIDEN(*y, part);
 }
 
 /* What the loops over the lines of a block need, away from where a store could change it. */
@@ -240,6 +264,7 @@ struct span {
     const REAL *values;
     REAL *residual;
     struct sweep_rows right, b;
+    bool far; /* right rows do not fit into a core's own cache */
 };
 /* stride: a constant, or 0 for what the rows themselves say. */
 INLINE struct span span_of(const struct sweep_job *job, size_t block, const size_t stride)
@@ -254,7 +279,23 @@ INLINE struct span span_of(const struct sweep_job *job, size_t block, const size
                          .values = job->values,
                          .residual = job->residual,
                          .right = {job->right.data, stride > 0 ? stride : job->right.stride},
-                         .b = {job->b.data, stride > 0 ? stride : job->b.stride}};
+                         .b = {job->b.data, stride > 0 ? stride : job->b.stride},
+                         .far = half->length * job->width * sizeof(REAL) > NEAR_BYTES};
+}
+
+/* Asks for what the cells behind k will need, as far as they are of this block. */
+INLINE void span_prefetch(const struct span *span, uint64_t k, bool both, const size_t registers)
+{
+    if (k + STREAM_AHEAD + GROUP > span->stop)
+        return;
+    __builtin_prefetch(span->values + k + STREAM_AHEAD);
+    __builtin_prefetch(span->across + k + STREAM_AHEAD);
+    const uint32_t *across = span->across + k + AHEAD;
+    for (size_t c = 0; span->far && c < GROUP; c++) {
+        row_prefetch((const REAL *)span->right.data + across[c] * span->right.stride, registers * LANES);
+        if (both)
+            row_prefetch((const REAL *)span->b.data + across[c] * span->b.stride, registers * LANES);
+    }
 }
 
 /* LINES(n, stride) with the common numbers of registers as constants, where right rows lie close together. */
@@ -277,53 +318,67 @@ INLINE bool rows_are_close(const struct sweep_job *job)
 /* ---- residual and gradient ----------------------------------------------------------------------------------------
  */
 
-INLINE void residual_four(const struct span *span, uint64_t k, size_t count, const vec *l, wide *g, four_wide sums[2],
-                          const size_t registers)
+/* The group's rows and residuals. */
+INLINE void residual_group(const struct span *span, uint64_t k, size_t count, const vec *l, struct group *group,
+                           squares *square, squares *absolute, const size_t registers)
 {
-    uint32_t position[4];
-    const REAL *row[4];
-    vec s[4] = {{0}};
-    four r, x;
-    positions_load(span->across + k, count, position);
-    rows_find(&span->right, position, row);
-    rows_dot(l, row, s, registers);
-    sum_four(s, &r);
-    four_load(span->values, k, count, &x);
-    r -= x;
-    four_cut(&r, count);
+    vec s[GROUP] = {{0}};
+    cells x;
+    group_find(&span->right, span->across + k, count, group->row);
+    rows_dot(l, group->row, s, registers);
+    sum_each(s, &group->number);
+    group_load(span->values, k, count, &x);
+    group->number -= x;
+    group_cut(&group->number, count);
     if (span->residual != NULL)
-        four_store(&r, k, count, span->residual);
-    four_wide wide_r = WIDEN_FOUR(r);
-    sums[0] += wide_r * wide_r;
-    sums[1] += (four_wide)((four_bits)wide_r & INT64_MAX); /* without its sign */
-    if (g != NULL)
-        rows_gather(&r, row, g, registers);
+        group_store(&group->number, k, count, span->residual);
+    squares_add(square, &group->number, &group->number);
+    for (int part = 0; absolute != NULL && part < WIDES; part++) /* without its sign */
+        absolute[part] += (squares)((squares_bits)WIDEN(group->number, part) & INT64_MAX);
+}
+
+/* All groups of a line, each beside the gradient of the one before. */
+INLINE void residual_line(const struct span *span, uint64_t k, uint64_t end, const vec *l, wide *g, squares *square,
+                          squares *absolute, const size_t registers)
+{
+    struct group before, now;
+    uint64_t whole = end - (end - k) % GROUP;
+    if (k < whole) {
+        residual_group(span, k, GROUP, l, &before, square, absolute, registers);
+        for (k += GROUP; k < whole; k += GROUP) {
+            span_prefetch(span, k, false, registers);
+            residual_group(span, k, GROUP, l, &now, square, absolute, registers);
+            if (g != NULL)
+                group_gather(&before, g, registers);
+            before = now;
+        }
+        if (g != NULL)
+            group_gather(&before, g, registers);
+    }
+    if (k < end) {
+        residual_group(span, k, end - k, l, &now, square, absolute, registers);
+        if (g != NULL)
+            group_gather(&now, g, registers);
+    }
 }
 
 INLINE void residual_lines(const struct sweep_job *job, size_t block, double *out, const bool gradient,
                            const size_t registers, const size_t stride)
 {
     struct span span = span_of(job, block, stride);
-    four_wide all[2] = {{0}, {0}};
+    squares square[WIDES] = {{0}}, absolute[WIDES] = {{0}};
     for (uint32_t line = span.line; line < span.last; line++) {
-        four_wide sums[2] = {{0}, {0}};
         vec l[MOST_REGISTERS];
         wide g[MOST_REGISTERS * WIDES];
         row_load(&job->left, line, l, registers);
         sums_clear(g, registers);
-        uint64_t end = span.start[line + 1];
-        for (uint64_t k = span.start[line]; k < end; k += 4) {
-            if (k + AHEAD + 4 <= span.stop)
-                rows_prefetch(&span.right, span.across + k, registers * LANES);
-            residual_four(&span, k, end - k < 4 ? end - k : 4, l, gradient ? g : NULL, sums, registers);
-        }
+        residual_line(&span, span.start[line], span.start[line + 1], l, gradient ? g : NULL, square,
+                      gradient ? NULL : absolute, registers);
         if (gradient)
             product_store(job, line, g, registers);
-        all[0] += sums[0];
-        all[1] += sums[1];
     }
-    out[0] = lanes_sum(&all[0]);
-    out[1] = lanes_sum(&all[1]);
+    out[0] = squares_sum(square);
+    out[1] = squares_sum(absolute);
 }
 
 static void residual_block(const struct sweep_job *job, size_t block, size_t worker, double sums[SWEEP_SUMS])
@@ -343,15 +398,12 @@ static void residual_block(const struct sweep_job *job, size_t block, size_t wor
 /* ---- product with given values ------------------------------------------------------------------------------------
  */
 
-INLINE void multiply_four(const struct span *span, uint64_t k, size_t count, wide *g, const size_t registers)
+INLINE void multiply_group(const struct span *span, uint64_t k, size_t count, wide *g, const size_t registers)
 {
-    uint32_t position[4];
-    const REAL *row[4];
-    four x;
-    positions_load(span->across + k, count, position);
-    rows_find(&span->right, position, row);
-    four_load(span->values, k, count, &x);
-    rows_gather(&x, row, g, registers);
+    struct group group;
+    group_find(&span->right, span->across + k, count, group.row);
+    group_load(span->values, k, count, &group.number);
+    group_gather(&group, g, registers);
 }
 
 INLINE void multiply_lines(const struct sweep_job *job, size_t block, const size_t registers, const size_t stride)
@@ -360,12 +412,13 @@ INLINE void multiply_lines(const struct sweep_job *job, size_t block, const size
     for (uint32_t line = span.line; line < span.last; line++) {
         wide g[MOST_REGISTERS * WIDES];
         sums_clear(g, registers);
-        uint64_t end = span.start[line + 1];
-        for (uint64_t k = span.start[line]; k < end; k += 4) {
-            if (k + AHEAD + 4 <= span.stop)
-                rows_prefetch(&span.right, span.across + k, registers * LANES);
-            multiply_four(&span, k, end - k < 4 ? end - k : 4, g, registers);
+        uint64_t k = span.start[line], end = span.start[line + 1];
+        for (; k + GROUP <= end; k += GROUP) {
+            span_prefetch(&span, k, false, registers);
+            multiply_group(&span, k, GROUP, g, registers);
         }
+        if (k < end)
+            multiply_group(&span, k, end - k, g, registers);
         product_store(job, line, g, registers);
     }
 }
@@ -382,49 +435,42 @@ static void multiply_block(const struct sweep_job *job, size_t block, size_t wor
 /* ---- a tangent step seen on the cells ------------------------------------------------------------------------------
  */
 
-INLINE void tangent_four(const struct span *span, uint64_t k, size_t count, const vec *a, const vec *l,
-                         four_wide sums[2], const size_t registers)
+INLINE void tangent_group(const struct span *span, uint64_t k, size_t count, const vec *a, const vec *l, squares *zr,
+                          squares *zz, const size_t registers)
 {
-    uint32_t position[4];
-    const REAL *row[4];
-    vec s[4] = {{0}};
-    four z, r;
-    positions_load(span->across + k, count, position);
-    rows_find(&span->right, position, row);
+    const REAL *row[GROUP];
+    vec s[GROUP] = {{0}};
+    cells z, r;
+    group_find(&span->right, span->across + k, count, row);
     rows_dot(a, row, s, registers);
-    rows_find(&span->b, position, row);
+    group_find(&span->b, span->across + k, count, row);
     rows_dot(l, row, s, registers);
-    sum_four(s, &z);
-    four_cut(&z, count);
-    four_load(span->values, k, count, &r);
-    four_wide wide_z = WIDEN_FOUR(z), wide_r = WIDEN_FOUR(r);
-    sums[0] += wide_z * wide_r;
-    sums[1] += wide_z * wide_z;
+    sum_each(s, &z);
+    group_cut(&z, count);
+    group_load(span->values, k, count, &r);
+    squares_add(zr, &z, &r);
+    squares_add(zz, &z, &z);
 }
 
 INLINE void tangent_lines(const struct sweep_job *job, size_t block, double *out, const size_t registers,
                           const size_t stride)
 {
     struct span span = span_of(job, block, stride);
-    four_wide all[2] = {{0}, {0}};
+    squares zr[WIDES] = {{0}}, zz[WIDES] = {{0}};
     for (uint32_t line = span.line; line < span.last; line++) {
-        four_wide sums[2] = {{0}, {0}};
         vec l[MOST_REGISTERS], a[MOST_REGISTERS];
         row_load(&job->left, line, l, registers);
         row_load(&job->a, line, a, registers);
-        uint64_t end = span.start[line + 1];
-        for (uint64_t k = span.start[line]; k < end; k += 4) {
-            if (k + AHEAD + 4 <= span.stop) {
-                rows_prefetch(&span.right, span.across + k, registers * LANES);
-                rows_prefetch(&span.b, span.across + k, registers * LANES);
-            }
-            tangent_four(&span, k, end - k < 4 ? end - k : 4, a, l, sums, registers);
+        uint64_t k = span.start[line], end = span.start[line + 1];
+        for (; k + GROUP <= end; k += GROUP) {
+            span_prefetch(&span, k, true, registers);
+            tangent_group(&span, k, GROUP, a, l, zr, zz, registers);
         }
-        all[0] += sums[0];
-        all[1] += sums[1];
+        if (k < end)
+            tangent_group(&span, k, end - k, a, l, zr, zz, registers);
     }
-    out[0] = lanes_sum(&all[0]);
-    out[1] = lanes_sum(&all[1]);
+    out[0] = squares_sum(zr);
+    out[1] = squares_sum(zz);
 }
 
 static void tangent_block(const struct sweep_job *job, size_t block, size_t worker, double sums[SWEEP_SUMS])

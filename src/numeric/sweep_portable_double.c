@@ -5,7 +5,9 @@
 #include "numeric/sweep_internal.h"
 
 #define REAL double
+#define REAL_IS_DOUBLE
 #define LANES 2
+#define GROUP 2
 #define MADD(a, b, c) ((a) * (b) + (c))
 #define MADD_WIDE(a, b, c) ((a) * (b) + (c))
 #define WIDES 1

@@ -3,9 +3,11 @@
  * Measures the machine's limits and, beside them, the loops over cells, an iteration and the whole fit of every solver.
  *
  *     BENCH_KERNELS   cells of the table of the loops         [1e6]; 1e7 is beyond the caches
+ *     BENCH_LOOPS     of the loops, those whose names hold this, such as "gradient, rows"    [all]
+ *     BENCH_RANKS     their ranks                             [5,8,11,16,32]
  *     BENCH_CELLS     cells of the tables that are fitted     [1e5]; such as 1e5,1e6,1e7
  *     BENCH_LARGE     1: also one of 1e8
- *     BENCH_PARTS     of limits, kernels, moments, fits, alternation   [all]
+ *     BENCH_PARTS     of limits, double, single (both: kernels), moments, fits, alternation   [all]
  *     BENCH_SCRIPTS   where alternation.py is                 [tests/bench]
  *     BUILD           where bench.json and bench.png go       [build]
  */
@@ -30,10 +32,13 @@ static bool has_part(const char *name)
 int main(void)
 {
     struct bench bench = {.figures = json_array(), .build = setting("BUILD", "build")};
-    limits_measure(&bench);
+    if (has_part("limits"))
+        limits_measure(&bench);
     uint64_t kernels = (uint64_t)strtod(setting("BENCH_KERNELS", "1e6"), NULL);
-    for (int precision = FESCUE_DOUBLE; has_part("kernels") && precision <= FESCUE_SINGLE; precision++)
-        kernels_measure(&bench, kernels, (enum fescue_precision)precision);
+    static const char *const precisions[] = {[FESCUE_DOUBLE] = "double", [FESCUE_SINGLE] = "single"};
+    for (int precision = FESCUE_DOUBLE; precision <= FESCUE_SINGLE; precision++)
+        if (has_part("kernels") || has_part(precisions[precision]))
+            kernels_measure(&bench, kernels, (enum fescue_precision)precision);
     if (has_part("moments"))
         moments_measure(&bench, kernels / 10);
     for (const char *at = setting("BENCH_CELLS", "1e5"); *at != '\0';) {

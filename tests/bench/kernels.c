@@ -11,6 +11,7 @@
 #include "numeric/numeric.h"
 
 #include <stdlib.h>
+#include <string.h>
 
 struct stand {
     struct bench *bench;
@@ -152,6 +153,7 @@ static void rank_report(struct stand *stand, bool two)
     enum { COUNT = sizeof kernels / sizeof *kernels };
     struct arena arena = {0};
     fescue_context *context = stand->rating.context;
+    const char *only = getenv("BENCH_LOOPS");
     double single[COUNT];
     for (size_t j = 0; j < stand->rank; j++)
         stand->ridge[j] = 0.1;
@@ -160,7 +162,8 @@ static void rank_report(struct stand *stand, bool two)
         bench_check(context, team_resize(context, stand->threads));
         bench_check(context, sweep_create(context, &stand->rating.cells, stand->rank, &stand->sweep));
         for (size_t k = 0; k < COUNT; k++)
-            kernel_report(stand, &kernels[k], &single[k]);
+            if (only == NULL || strstr(kernels[k].what, only) != NULL)
+                kernel_report(stand, &kernels[k], &single[k]);
         sweep_destroy(&stand->sweep);
     }
     arena_close(context, &arena);
@@ -168,13 +171,17 @@ static void rank_report(struct stand *stand, bool two)
 
 void kernels_measure(struct bench *bench, uint64_t cells, enum fescue_precision precision)
 {
-    static const size_t ranks[] = {5, 8, 11, 16, 32};
+    const char *ranks = getenv("BENCH_RANKS");
     struct stand stand = {.bench = bench};
     rating_sow(cells, precision, &stand.rating);
     stand.residual = bench_take(stand.rating.cells.count, sizeof(double));
-    for (size_t r = 0; r < sizeof ranks / sizeof *ranks; r++) {
-        stand.rank = ranks[r];
+    for (const char *at = ranks != NULL ? ranks : "5,8,11,16,32"; *at != '\0';) {
+        char *end;
+        stand.rank = strtoul(at, &end, 10);
+        if (stand.rank == 0 || stand.rank > 256)
+            break;
         rank_report(&stand, stand.rank == 16);
+        at = *end == ',' ? end + 1 : end;
     }
     free(stand.residual);
     rating_free(&stand.rating);
