@@ -206,6 +206,8 @@ void memo_keep(struct memo_work *work, const struct memo_part *parts, size_t cou
 /* Whether the piece ran when the last checkpoint was written; then its state then is in the parts. FESCUE_NO_INPUT when
    it cannot be read any more. */
 fescue_status memo_resume(const struct memo_work *work, const struct memo_part *parts, size_t count, bool *resumed);
+/* How many bytes such a state has; 0: there is none. */
+uint64_t memo_state_size(const struct memo_work *work);
 /* It runs, and this is its state: written when that is due, or the context was cancelled. */
 void memo_tell(const struct memo_work *work, const struct memo_part *parts, size_t count);
 

@@ -540,6 +540,12 @@ void memo_keep(struct memo_work *work, const struct memo_part *parts, size_t cou
         memo_write(memo, &none, NULL, 0);
 }
 
+uint64_t memo_state_size(const struct memo_work *work)
+{
+    const struct memo *memo = work->memo;
+    return memo != NULL && memo->has_state && memo->state.number == work->number ? memo->state.size : 0;
+}
+
 fescue_status memo_resume(const struct memo_work *work, const struct memo_part *parts, size_t count, bool *resumed)
 {
     struct memo *memo = work->memo;

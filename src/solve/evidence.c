@@ -92,7 +92,6 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
     struct arena *arena = &evidence->arena;
     side_reserve(arena, &cells->by_row, rank);
     side_reserve(arena, &cells->by_column, rank);
-    arena_reserve(arena, workers * evidence->scratch_size, sizeof(double));
     for (size_t k = 0; k < 4; k++) {
         matrix_reserve(arena, rank, rank);
         matrix_reserve(arena, d, d);
@@ -101,12 +100,13 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
     matrix_reserve(arena, d, d);
     matrix_reserve(arena, d, d);
     arena_reserve(arena, work, sizeof(double));
+    evidence->state_size = arena->reserved;
+    arena_reserve(arena, workers * evidence->scratch_size, sizeof(double));
     fescue_status status = arena_open(problem->context, arena);
     if (status != FESCUE_OK)
         return status;
     side_carve(arena, &cells->by_row, rank, &evidence->rows);
     side_carve(arena, &cells->by_column, rank, &evidence->columns);
-    evidence->scratch = arena_carve(arena, workers * evidence->scratch_size, sizeof(double));
     for (size_t k = 0; k < 4; k++) {
         evidence->small[k] = matrix_carve(arena, rank, rank);
         evidence->gram[k] = matrix_carve(arena, d, d);
@@ -115,6 +115,7 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
     evidence->map[0] = matrix_carve(arena, d, d);
     evidence->map[1] = matrix_carve(arena, d, d);
     evidence->basis_work = arena_carve(arena, work, sizeof(double));
+    evidence->scratch = arena_carve(arena, workers * evidence->scratch_size, sizeof(double));
     evidence->rows.effect_at = evidence->columns.one_at = rank;
     evidence->rows.one_at = evidence->columns.effect_at = rank + 1;
     return FESCUE_OK;

@@ -48,6 +48,7 @@ struct evidence {
     struct evidence_time *time; /* NULL: lines have no order */
     struct evidence_near *near; /* NULL: columns are not near one another */
     struct arena arena;
+    size_t state_size; /* bytes of the arena that a later run goes on from; behind them is the workers' scratch */
 };
 
 enum { EVIDENCE_ROUND_PRIOR = 8, EVIDENCE_ROUND_BASIS = 20, EVIDENCE_BASIS_EVERY = 5 };
@@ -129,6 +130,7 @@ struct evidence_time {
     double *clock;                /* of the k-th step in time */
     double *store;                /* of each line, what its error needs: evidence_chain_store(rank) */
     struct arena arena;
+    size_t state_size; /* as that of the evidence */
 };
 fescue_status evidence_time_open(struct evidence *evidence, const struct evidence_request *request);
 void evidence_time_close(struct evidence *evidence);

@@ -1,7 +1,7 @@
 /* SPDX-License-Identifier: MIT
  *
- * What the evidence fit leaves in the memo: the state between two rounds, which is its workspace, the noise and the
- * trace; and what a finished fit came to.
+ * What the evidence fit leaves in the memo: the state between two rounds, which is its workspace, but for that of
+ * the workers, the noise and the trace; and what a finished fit came to.
  */
 #include "solve/evidence_internal.h"
 
@@ -73,7 +73,7 @@ size_t evidence_state(struct evidence *evidence, const struct evidence_request *
                       struct solve_result *result, struct memo_part parts[EVIDENCE_STATE_PARTS])
 {
     parts[0] = (struct memo_part){at, sizeof *at};
-    parts[1] = (struct memo_part){evidence->arena.base, evidence->arena.reserved};
+    parts[1] = (struct memo_part){evidence->arena.base, evidence->state_size};
     parts[2] = (struct memo_part){result->trace, request->rounds * sizeof *result->trace};
     size_t count = 3;
     if (evidence->near != NULL)
@@ -83,7 +83,7 @@ size_t evidence_state(struct evidence *evidence, const struct evidence_request *
     /* The residual has been taken off the targets. */
     struct cells *target = &evidence->problem->target;
     size_t values = target->count * (target->precision == FESCUE_SINGLE ? sizeof(float) : sizeof(double));
-    parts[count++] = (struct memo_part){evidence->time->arena.base, evidence->time->arena.reserved};
+    parts[count++] = (struct memo_part){evidence->time->arena.base, evidence->time->state_size};
     parts[count++] = (struct memo_part){target->by_row.value, values};
     parts[count++] = (struct memo_part){target->by_column.value, values};
     return count;

@@ -52,7 +52,6 @@ static void time_reserve(struct evidence *evidence, const struct evidence_time *
     arena_reserve(arena, series->blocks, sizeof *time->moved);
     arena_reserve(arena, series->lines, sizeof *time->law);
     arena_reserve(arena, series->blocks + 1, sizeof *time->partial);
-    arena_reserve(arena, team_workers(evidence->context) * 6 * time->longest, sizeof(double));
     arena_reserve(arena, d, sizeof *time->steps_law);
     arena_reserve(arena, steps->lines, sizeof(double));
     arena_reserve(arena, steps->lines * evidence_chain_store(evidence->rank), sizeof(double));
@@ -61,6 +60,8 @@ static void time_reserve(struct evidence *evidence, const struct evidence_time *
         arena_reserve(arena, steps->lines * chain_room(d), sizeof(double));
     arena_reserve(arena, steps->lines, sizeof(double));
     arena_reserve(arena, series->lines, sizeof(double));
+    evidence->time->state_size = arena->reserved;
+    arena_reserve(arena, team_workers(evidence->context) * 6 * time->longest, sizeof(double));
 }
 
 static void time_carve(struct evidence *evidence, struct evidence_time *time)
@@ -78,7 +79,6 @@ static void time_carve(struct evidence *evidence, struct evidence_time *time)
     time->law = arena_carve(arena, series->lines, sizeof *time->law);
     time->partial = arena_carve(arena, series->blocks + 1, sizeof *time->partial);
     time->pool = time->partial + series->blocks;
-    time->series_scratch = arena_carve(arena, team_workers(evidence->context) * 6 * time->longest, sizeof(double));
     time->steps_law = arena_carve(arena, d, sizeof *time->steps_law);
     time->clock = arena_carve(arena, steps->lines, sizeof(double));
     time->store = arena_carve(arena, steps->lines * evidence_chain_store(evidence->rank), sizeof(double));
@@ -87,6 +87,7 @@ static void time_carve(struct evidence *evidence, struct evidence_time *time)
     time->chain.backward = arena_carve(arena, steps->lines * chain_room(d), sizeof(double));
     time->steps->excess = arena_carve(arena, steps->lines, sizeof(double));
     time->series->excess = arena_carve(arena, series->lines, sizeof(double));
+    time->series_scratch = arena_carve(arena, team_workers(evidence->context) * 6 * time->longest, sizeof(double));
 }
 
 /* Twins and places: the steps in the order of time meet the cells of every series in that order. `next` has a number a

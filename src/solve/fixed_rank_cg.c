@@ -253,6 +253,34 @@ static void cg_measure(const void *state, struct solve_measure *measure)
     *measure = ((const struct fixed_rank_cg *)state)->measure;
 }
 
+static size_t cg_keep(void *state, struct memo_part parts[SOLVER_PARTS])
+{
+    struct fixed_rank_cg *cg = state;
+    parts[0] = matrix_part(cg->point.left);
+    parts[1] = matrix_part(cg->point.right);
+    parts[2] = (struct memo_part){cg->point.spectrum, cg->point.rank * sizeof *cg->point.spectrum};
+    parts[3] = matrix_part(cg->direction.left);
+    parts[4] = matrix_part(cg->direction.middle);
+    parts[5] = matrix_part(cg->direction.right);
+    parts[6] = (struct memo_part){&cg->measure.step, sizeof cg->measure.step};
+    parts[7] = (struct memo_part){&cg->fresh, sizeof cg->fresh};
+    return 8;
+}
+
+/* Residual and gradient are those of the point. */
+static void cg_resume(void *state)
+{
+    struct fixed_rank_cg *cg = state;
+    matrix_copy(cg->point.left, cg->trial.left);
+    matrix_copy(cg->point.right, cg->trial.right);
+    for (size_t k = 0; k < cg->point.rank; k++)
+        cg->trial.spectrum[k] = cg->point.spectrum[k];
+    cg->trial_measure.step = cg->measure.step;
+    trial_evaluate(cg);
+    trial_differentiate(cg);
+    trial_accept(cg);
+}
+
 static fescue_status cg_point_write(void *state, struct low_rank *point)
 {
     const struct fixed_rank_cg *cg = state;
@@ -270,6 +298,8 @@ const struct solver fixed_rank_cg_solver = {
     .create = cg_create,
     .measure = cg_measure,
     .step = cg_step,
+    .keep = cg_keep,
+    .resume = cg_resume,
     .point_write = cg_point_write,
     .destroy = cg_destroy,
 };

@@ -225,6 +225,24 @@ static void cg_measure(const void *state, struct solve_measure *measure)
     *measure = ((const struct grassmann_cg *)state)->measure;
 }
 
+static size_t cg_keep(void *state, struct memo_part parts[SOLVER_PARTS])
+{
+    struct grassmann_cg *cg = state;
+    parts[0] = matrix_part(cg->projection.basis);
+    parts[1] = matrix_part(cg->direction);
+    parts[2] = (struct memo_part){&cg->factor, sizeof cg->factor};
+    parts[3] = (struct memo_part){&cg->measure.step, sizeof cg->measure.step};
+    parts[4] = (struct memo_part){&cg->fresh, sizeof cg->fresh};
+    return 5;
+}
+
+static void cg_resume(void *state)
+{
+    struct grassmann_cg *cg = state;
+    projection_evaluate(&cg->projection);
+    point_measure(cg, cg->measure.step);
+}
+
 static fescue_status cg_point_write(void *state, struct low_rank *point)
 {
     return projection_write(&((struct grassmann_cg *)state)->projection, point);
@@ -237,6 +255,8 @@ const struct solver grassmann_cg_solver = {
     .create = cg_create,
     .measure = cg_measure,
     .step = cg_step,
+    .keep = cg_keep,
+    .resume = cg_resume,
     .point_write = cg_point_write,
     .destroy = cg_destroy,
 };

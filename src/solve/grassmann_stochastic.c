@@ -18,6 +18,7 @@ static const struct stream_kind stochastic_kind = {
     .reserve = minibatch_reserve,
     .carve = minibatch_carve,
     .pass = stochastic_pass,
+    .keep = minibatch_keep,
 };
 
 static fescue_status stochastic_create(struct field *field, const struct low_rank *point, void **state)
@@ -32,6 +33,8 @@ const struct solver grassmann_stochastic_solver = {
     .create = stochastic_create,
     .measure = stream_measure,
     .step = stream_step,
+    .keep = stream_keep,
+    .resume = stream_resume,
     .point_write = stream_point_write,
     .destroy = stream_destroy,
 };

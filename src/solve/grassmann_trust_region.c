@@ -54,6 +54,18 @@ static fescue_status region_step(void *state, bool *moved)
     return trust_step(&((struct trust_region *)state)->trust, &rules, moved);
 }
 
+static size_t region_keep(void *state, struct memo_part parts[SOLVER_PARTS])
+{
+    struct trust_region *region = state;
+    parts[0] = matrix_part(region->projection.basis);
+    return 1 + trust_keep(&region->trust, parts + 1);
+}
+
+static void region_resume(void *state)
+{
+    trust_resume(&((struct trust_region *)state)->trust);
+}
+
 static fescue_status region_point_write(void *state, struct low_rank *point)
 {
     return projection_write(&((struct trust_region *)state)->projection, point);
@@ -66,6 +78,8 @@ const struct solver grassmann_trust_region_solver = {
     .create = region_create,
     .measure = region_measure,
     .step = region_step,
+    .keep = region_keep,
+    .resume = region_resume,
     .point_write = region_point_write,
     .destroy = region_destroy,
 };

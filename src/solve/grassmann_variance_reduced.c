@@ -23,6 +23,7 @@ static const struct stream_kind reduced_kind = {
     .reserve = minibatch_reserve,
     .carve = minibatch_carve,
     .pass = reduced_pass,
+    .keep = minibatch_keep,
 };
 
 static fescue_status reduced_create(struct field *field, const struct low_rank *point, void **state)
@@ -37,6 +38,8 @@ const struct solver grassmann_variance_reduced_solver = {
     .create = reduced_create,
     .measure = stream_measure,
     .step = stream_step,
+    .keep = stream_keep,
+    .resume = stream_resume,
     .point_write = stream_point_write,
     .destroy = stream_destroy,
 };

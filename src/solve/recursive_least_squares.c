@@ -247,12 +247,22 @@ static void recursion_rebase(struct stream *stream, struct matrix turn)
                  (stream->projection.by_short->lines + REBASE_LINES - 1) / REBASE_LINES, piece_rebase, stream);
 }
 
+static size_t recursion_keep(struct stream *stream, struct memo_part *parts)
+{
+    struct recursion *own = stream->own;
+    size_t numbers = stream->projection.by_short->lines * packed_size(stream->projection.rank);
+    parts[0] = (struct memo_part){own->inverses, numbers * sizeof *own->inverses};
+    parts[1] = (struct memo_part){&own->known, sizeof own->known};
+    return 2;
+}
+
 static const struct stream_kind recursion_kind = {
     .own = sizeof(struct recursion),
     .width = lag_most,
     .reserve = recursion_reserve,
     .carve = recursion_carve,
     .pass = recursion_pass,
+    .keep = recursion_keep,
     .rebase = recursion_rebase,
 };
 
@@ -268,6 +278,8 @@ const struct solver recursive_least_squares_solver = {
     .create = recursion_create,
     .measure = stream_measure,
     .step = stream_step,
+    .keep = stream_keep,
+    .resume = stream_resume,
     .point_write = stream_point_write,
     .destroy = stream_destroy,
 };

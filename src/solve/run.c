@@ -26,7 +26,6 @@
 
 #include <assert.h>
 #include <math.h>
-#include <string.h>
 
 enum {
     CHANGE_WINDOW = 10,
@@ -36,17 +35,23 @@ enum {
 static const double exact_roundings = 16;
 static const double gradient_to_residual = 1e-3;
 
+struct run_at { /* where the driver stands, before a step */
+    uint64_t iteration;
+    double recent[CHANGE_WINDOW]; /* objectives, by iteration modulo the window */
+    double lowest, flattest;      /* objective and gradient */
+    uint64_t improved;            /* iteration at which either was last lowered */
+    double seconds;               /* since it began */
+};
 struct run {
     struct field field;
     const struct solver *solver;
     const struct solve_limits *limits;
+    const struct memo_work *work;
     struct solve_result *result;
     struct solve_measure measure;
-    uint64_t iteration, capacity; /* capacity: of the trace */
+    struct run_at at;
+    uint64_t capacity, first; /* lines of the trace: how many there may be, of earlier runs */
     double started;
-    double recent[CHANGE_WINDOW]; /* objectives, by iteration modulo the window */
-    double lowest, flattest;      /* objective and gradient */
-    uint64_t improved;            /* iteration at which either was last lowered */
 };
 
 fescue_status values_create(struct field *field, void **values)
@@ -85,7 +90,7 @@ static fescue_status trace_reserve(struct run *run, uint64_t lines)
 static fescue_status trace_open(struct run *run)
 {
     uint64_t lines = run->limits->iterations < TRACE_AT_ONCE ? run->limits->iterations + 1 : TRACE_AT_ONCE;
-    run->capacity = run->result->trace_count;
+    run->capacity = run->first = run->result->trace_count;
     return trace_reserve(run, run->result->trace_count + lines);
 }
 
@@ -99,7 +104,7 @@ static fescue_status trace_add(struct run *run, size_t rank)
         return status;
     result->trace[result->trace_count++] =
         (struct solve_step){.rank = (uint32_t)rank,
-                            .iteration = (uint32_t)run->iteration,
+                            .iteration = (uint32_t)run->at.iteration,
                             .objective = run->measure.objective,
                             .rmse = rmse_of(run->field.problem, run->measure.square),
                             .gradient = relative_gradient(run->field.problem, run->measure.gradient),
@@ -131,10 +136,10 @@ static bool is_flat(const struct run *run)
 
 static bool is_unchanged(struct run *run)
 {
-    double *slot = &run->recent[run->iteration % CHANGE_WINDOW];
+    double *slot = &run->at.recent[run->at.iteration % CHANGE_WINDOW];
     double before = *slot, now = run->measure.objective;
     *slot = now;
-    return run->limits->change > 0 && run->iteration >= CHANGE_WINDOW && before - now <= run->limits->change * now;
+    return run->limits->change > 0 && run->at.iteration >= CHANGE_WINDOW && before - now <= run->limits->change * now;
 }
 
 /* Twenty iterations without a lower objective, by more than rounding, or a clearly smaller gradient. */
@@ -142,12 +147,12 @@ static bool is_stalled(struct run *run)
 {
     const struct solve_measure *now = &run->measure;
     double slack = line_start(run->field.problem, now, 0).slack;
-    if (now->objective < run->lowest - slack || now->gradient < 0.9 * run->flattest) {
-        run->improved = run->iteration;
-        run->lowest = fmin(run->lowest, now->objective);
-        run->flattest = fmin(run->flattest, now->gradient);
+    if (now->objective < run->at.lowest - slack || now->gradient < 0.9 * run->at.flattest) {
+        run->at.improved = run->at.iteration;
+        run->at.lowest = fmin(run->at.lowest, now->objective);
+        run->at.flattest = fmin(run->at.flattest, now->gradient);
     }
-    return run->iteration - run->improved >= STALL_WINDOW;
+    return run->at.iteration - run->at.improved >= STALL_WINDOW;
 }
 
 /* Whether the run ends here, and why. */
@@ -163,7 +168,7 @@ static bool run_ends(struct run *run, bool moved)
         *stop = is_small(run) ? STOP_GRADIENT : run->solver->loss == LOSS_ABSOLUTE ? STOP_CHANGE : STOP_STALLED;
     else if (unchanged)
         *stop = STOP_CHANGE;
-    else if (run->iteration >= run->limits->iterations)
+    else if (run->at.iteration >= run->limits->iterations)
         *stop = STOP_ITERATIONS;
     else if (run->limits->deadline > 0 && clock_wall() >= run->limits->deadline)
         *stop = STOP_TIME;
@@ -202,29 +207,81 @@ static void result_fill(struct run *run)
     struct solve_result *result = run->result;
     result->solver = run->solver->name;
     result->start = NULL;
-    result->iterations = run->iteration;
+    result->iterations = run->at.iteration;
     result->objective = run->measure.objective;
     result->rmse = rmse_of(run->field.problem, run->measure.square);
     result->gradient = relative_gradient(run->field.problem, run->measure.gradient);
+}
+
+/* What a later run of the job goes on from: the driver, its lines of the trace, the solver. */
+enum { STATE_PARTS = 2 + SOLVER_PARTS };
+
+static size_t state_parts(struct run *run, void *state, uint64_t lines, struct memo_part parts[STATE_PARTS])
+{
+    struct solve_step *trace = run->result->trace;
+    parts[0] = (struct memo_part){&run->at, sizeof run->at};
+    parts[1] = (struct memo_part){trace == NULL ? NULL : trace + run->first, (size_t)lines * sizeof *trace};
+    return 2 + run->solver->keep(state, parts + 2);
+}
+
+static void run_tell(struct run *run, void *state)
+{
+    struct memo_part parts[STATE_PARTS];
+    if (run->work->memo == NULL || run->at.iteration == 0) /* before that there is nothing to be saved */
+        return;
+    run->at.seconds = clock_wall() - run->started;
+    memo_tell(run->work, parts, state_parts(run, state, run->result->trace_count - run->first, parts));
+}
+
+/* To where an earlier run of the job was, if it was in this fit. */
+static fescue_status run_resume(struct run *run, void *state, bool *resumed)
+{
+    struct memo_part parts[STATE_PARTS];
+    struct run_at before = run->at;
+    uint64_t size = memo_state_size(run->work), fixed = 0, lines;
+    fescue_status status;
+    *resumed = false;
+    size_t count = size == 0 ? 0 : state_parts(run, state, 0, parts);
+    for (size_t k = 0; k < count; k++)
+        fixed += parts[k].size;
+    if (size <= fixed)
+        return FESCUE_OK;
+    lines = (size - fixed) / sizeof *run->result->trace; /* if that is not whole it does not fit, and is not taken */
+    TRY(trace_reserve(run, run->first + lines));
+    TRY(memo_resume(run->work, parts, state_parts(run, state, lines, parts), resumed));
+    if (!*resumed)
+        goto done;
+    run->result->trace_count += lines;
+    run->started -= run->at.seconds;
+    run->solver->resume(state);
+    run->solver->measure(state, &run->measure);
+done:
+    if (!*resumed)
+        run->at = before;
+    return status;
 }
 
 /* Iterates until a rule fires. FESCUE_STOPPED when asked to stop. */
 static fescue_status run_iterate(struct run *run, void *state, size_t rank)
 {
     fescue_status status;
-    bool moved = true;
-    for (;;) {
-        run->solver->measure(state, &run->measure);
-        TRY(trace_add(run, rank));
-        if (run_ends(run, moved))
-            break;
+    bool moved = true, resumed;
+    TRY(run_resume(run, state, &resumed));
+    for (;; resumed = false) {
+        if (!resumed) {
+            run->solver->measure(state, &run->measure);
+            TRY(trace_add(run, rank));
+            if (run_ends(run, moved))
+                break;
+        }
         status = progress_tell(run->field.problem->context, "fitting", -1);
+        run_tell(run, state);
         if (status != FESCUE_OK) {
             run->result->stop = STOP_CANCELLED;
             break;
         }
         TRY(run->solver->step(state, &moved));
-        run->iteration++;
+        run->at.iteration++;
     }
 done:
     return status;
@@ -248,17 +305,18 @@ static void run_empty(struct run *run)
     result_fill(run);
 }
 
-static fescue_status run_afresh(struct problem *problem, const struct solver *solver, const struct solve_limits *limits,
-                                struct low_rank *point, struct solve_result *result)
+static fescue_status run_afresh(const struct run *asked, struct low_rank *point)
 {
-    struct run run = {.field.problem = problem, .solver = solver, .limits = limits, .result = result};
+    struct run run = *asked;
+    struct problem *problem = run.field.problem;
+    const struct solver *solver = run.solver;
     struct solve_measure given = {0};
     fescue_context *context = problem->context;
     void *state = NULL;
     fescue_status status, ended;
     assert(point->rows == problem->target.rows && point->columns == problem->target.columns);
     run.started = clock_wall();
-    run.lowest = run.flattest = INFINITY;
+    run.at.lowest = run.at.flattest = INFINITY;
     if (point->rank == 0) {
         run_empty(&run);
         return FESCUE_OK;
@@ -283,97 +341,18 @@ done:
     return status;
 }
 
-/* ---- the memo ------------------------------------------------------------------------------------------------------
- */
-
-/* What a finished run came to, beside its point and its lines of the trace. */
-struct run_sums {
-    uint64_t iterations, lines;
-    int64_t stop;
-    double objective, rmse, gradient;
-};
-enum { RUN_PARTS = 5 };
-
-uint64_t low_rank_digest(uint64_t digest, const struct low_rank *point)
-{
-    digest = memo_digest(digest, point->spectrum, point->rank * sizeof(double));
-    for (size_t i = 0; i < point->left.rows && point->rank > 0; i++)
-        digest = memo_digest(digest, &MATRIX_AT(point->left, i, 0), point->rank * sizeof(double));
-    for (size_t j = 0; j < point->right.rows && point->rank > 0; j++)
-        digest = memo_digest(digest, &MATRIX_AT(point->right, j, 0), point->rank * sizeof(double));
-    return digest;
-}
-
-static uint64_t run_digest(const struct problem *problem, const struct solver *solver,
-                           const struct solve_limits *limits, const struct low_rank *point)
-{
-    const double reals[] = {problem->lambda, problem->norm, limits->gradient, limits->change};
-    const uint64_t counts[] = {problem->target.count, limits->iterations, point->rank};
-    uint64_t digest = memo_digest(0, solver->name, strlen(solver->name));
-    digest = memo_digest(digest, reals, sizeof reals);
-    digest = memo_digest(digest, counts, sizeof counts);
-    return low_rank_digest(digest, point);
-}
-
-static size_t run_parts(struct run_sums *sums, struct low_rank *point, struct solve_step *trace,
-                        struct memo_part parts[RUN_PARTS])
-{
-    parts[0] = (struct memo_part){sums, sizeof *sums};
-    parts[1] = (struct memo_part){point->spectrum, point->rank * sizeof(double)};
-    parts[2] = (struct memo_part){point->left.data, point->left.rows * point->left.stride * sizeof(double)};
-    parts[3] = (struct memo_part){point->right.data, point->right.rows * point->right.stride * sizeof(double)};
-    parts[4] = (struct memo_part){trace, sums->lines * sizeof *trace};
-    return RUN_PARTS;
-}
-
-static void run_keep(struct memo_work *work, struct low_rank *point, struct solve_result *result, uint64_t before)
-{
-    struct memo_part parts[RUN_PARTS];
-    struct run_sums sums = {.iterations = result->iterations,
-                            .lines = result->trace_count - before,
-                            .stop = (int64_t)result->stop,
-                            .objective = result->objective,
-                            .rmse = result->rmse,
-                            .gradient = result->gradient};
-    memo_keep(work, parts, run_parts(&sums, point, result->trace + before, parts));
-}
-
-static fescue_status run_recall(fescue_context *context, struct memo_work *work, const struct solver *solver,
-                                struct low_rank *point, struct solve_result *result)
-{
-    struct run_sums sums = {0};
-    struct memo_part parts[RUN_PARTS];
-    fescue_status status = FESCUE_OK;
-    bool good = memo_get(work, &sums, sizeof sums) && sums.lines <= SIZE_MAX / 2;
-    if (good)
-        TRY(RESIZE(context, result->trace_count + sums.lines, &result->trace));
-    size_t count = good ? run_parts(&sums, point, result->trace + result->trace_count, parts) : 0;
-    for (size_t k = 1; k < count && good; k++)
-        good = memo_get(work, parts[k].bytes, parts[k].size);
-    if (!good)
-        TRY(FAIL(context, FESCUE_DEFECT, "the checkpoint holds another fit than the one that was asked for"));
-    result->solver = solver->name;
-    result->start = NULL;
-    result->trace_count += sums.lines;
-    result->iterations = sums.iterations;
-    result->stop = (enum solve_stop)sums.stop;
-    result->objective = sums.objective;
-    result->rmse = sums.rmse;
-    result->gradient = sums.gradient;
-done:
-    return status;
-}
-
 fescue_status solve_run(struct problem *problem, const struct solver *solver, const struct solve_limits *limits,
                         struct low_rank *point, struct solve_result *result)
 {
+    struct run run = {.field.problem = problem, .solver = solver, .limits = limits, .result = result};
     if (point->rank == 0)
-        return run_afresh(problem, solver, limits, point, result);
+        return run_afresh(&run, point);
     struct memo_work work = memo_begin(problem->context, run_digest(problem, solver, limits, point));
     if (work.recalls)
         return run_recall(problem->context, &work, solver, point, result);
     uint64_t before = result->trace_count;
-    fescue_status status = run_afresh(problem, solver, limits, point, result);
+    run.work = &work;
+    fescue_status status = run_afresh(&run, point);
     if (status == FESCUE_OK)
         run_keep(&work, point, result, before);
     return status;

@@ -24,6 +24,13 @@ struct solve_measure {
 /* What an objective sums over the seen cells, r = X - t: r^2 / 2, or |r|. */
 enum solve_loss { LOSS_SQUARE, LOSS_ABSOLUTE };
 
+enum { SOLVER_PARTS = 16 };
+/* All numbers of a matrix, for the memo. */
+static inline struct memo_part matrix_part(struct matrix a)
+{
+    return (struct memo_part){a.data, a.rows * a.stride * sizeof(double)};
+}
+
 /* A solver, one static constant of this kind a file, listed in solver.c. Its state holds a point of its own; the
    objective never rises from step to step but by rounding (line_accepts says how much), and a step that finds nothing
    better leaves the point alone. */
@@ -36,6 +43,11 @@ struct solver {
     void (*measure)(const void *state, struct solve_measure *measure);
     /* One iteration; *moved = false when no step lowers the objective. FESCUE_OK or what a routine below reported. */
     fescue_status (*step)(void *state, bool *moved);
+    /* What has to be kept of a state between two steps, so that a later run goes on from there: the numbers that cannot
+       be computed from one another, none of them depending on the workers. How many parts. */
+    size_t (*keep)(void *state, struct memo_part parts[SOLVER_PARTS]);
+    /* The parts have come back into a state that was created for the same field: computes the rest. */
+    void (*resume)(void *state);
     /* Writes the state's point in orthonormal form; takes no memory. */
     fescue_status (*point_write)(void *state, struct low_rank *point);
     void (*destroy)(fescue_context *context, void **state);
@@ -43,6 +55,14 @@ struct solver {
 extern const struct solver fixed_rank_cg_solver, grassmann_cg_solver, grassmann_trust_region_solver,
     recursive_least_squares_solver, grassmann_stochastic_solver, grassmann_variance_reduced_solver, subgradient_solver,
     alternating_solver;
+
+/* What solve_run is asked, for the memo; and what it came to, into the memo and out of it (run_memo.c). `before`: lines
+   of the trace that are none of it. */
+uint64_t run_digest(const struct problem *problem, const struct solver *solver, const struct solve_limits *limits,
+                    const struct low_rank *point);
+void run_keep(struct memo_work *work, struct low_rank *point, struct solve_result *result, uint64_t before);
+fescue_status run_recall(fescue_context *context, struct memo_work *work, const struct solver *solver,
+                         struct low_rank *point, struct solve_result *result);
 
 /* Room for one value a seen cell, in the store's precision. The caller owns *values. */
 fescue_status values_create(struct field *field, void **values);
@@ -163,6 +183,11 @@ void trust_reserve(struct arena *arena, const struct field *field, size_t rank);
 void trust_carve(struct arena *arena, struct projection *projection, struct trust *trust);
 /* Evaluates the projection where it stands and measures it. */
 void trust_start(struct trust *trust);
+/* What trust_step remembers from step to step, beside the projection's basis. */
+enum { TRUST_PARTS = 3 };
+size_t trust_keep(struct trust *trust, struct memo_part *parts);
+/* trust_start once these have come back. */
+void trust_resume(struct trust *trust);
 /* First radius again, for a new objective. */
 void trust_widen(struct trust *trust);
 /* *moved = false when no step lowers the objective; the projection is then as it was. */

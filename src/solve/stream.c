@@ -179,3 +179,21 @@ fescue_status stream_point_write(void *state, struct low_rank *point)
         best_recall(stream);
     return projection_write(&stream->projection, point);
 }
+
+size_t stream_keep(void *state, struct memo_part parts[SOLVER_PARTS])
+{
+    struct stream *stream = state;
+    parts[0] = matrix_part(stream->projection.basis);
+    parts[1] = matrix_part(stream->best);
+    parts[2] = (struct memo_part){&stream->measure, sizeof stream->measure};
+    parts[3] = (struct memo_part){&stream->running, sizeof stream->running};
+    parts[4] = (struct memo_part){&stream->passes, sizeof stream->passes};
+    parts[5] = (struct memo_part){&stream->finishing, sizeof stream->finishing};
+    size_t count = 6 + trust_keep(&stream->trust, parts + 6);
+    return count + stream->kind->keep(stream, parts + count);
+}
+
+void stream_resume(void *state)
+{
+    trust_resume(&((struct stream *)state)->trust);
+}

@@ -88,6 +88,8 @@ struct stream_kind {
     /* One pass from projection.basis, orthonormal, to another one that need not be. The projection is evaluated there,
        except before the first pass of a cold run. */
     fescue_status (*pass)(struct stream *stream);
+    /* What it remembers from pass to pass (struct solver has the rest); how many parts. */
+    size_t (*keep)(struct stream *stream, struct memo_part *parts);
     /* projection.basis = Q where the pass left Q T. NULL: nothing to do. */
     void (*rebase)(struct stream *stream, struct matrix turn);
 };
@@ -113,6 +115,8 @@ fescue_status stream_create(const struct stream_kind *kind, struct field *field,
 /* Functions of struct solver. */
 void stream_measure(const void *state, struct solve_measure *measure);
 fescue_status stream_step(void *state, bool *moved);
+size_t stream_keep(void *state, struct memo_part parts[SOLVER_PARTS]);
+void stream_resume(void *state);
 fescue_status stream_point_write(void *state, struct low_rank *point);
 void stream_destroy(fescue_context *context, void **state);
 
@@ -136,6 +140,7 @@ struct minibatch_rules {
 size_t minibatch_width(const struct field *field, size_t rank);
 void minibatch_reserve(struct arena *arena, const struct field *field, size_t rank);
 void minibatch_carve(struct stream *stream);
+size_t minibatch_keep(struct stream *stream, struct memo_part *parts);
 fescue_status minibatch_pass(struct stream *stream, const struct minibatch_rules *rules);
 
 #endif

@@ -60,6 +60,14 @@ enum {
     DOUBLING_LEAST = 16, /* iterations, likewise */
 };
 
+struct subgradient_at {           /* where the iteration stands, but for matrices */
+    double scale;                 /* s */
+    uint64_t pass, began, step;   /* iterations; the first of this kind; t */
+    uint64_t met;                 /* iterates in the mean */
+    double marked;                /* objective when the mean was last begun */
+    struct solve_measure measure; /* of the best point */
+    bool whole;                   /* deterministic */
+};
 struct subgradient {
     struct field *field;
     struct arena arena;
@@ -71,12 +79,7 @@ struct subgradient {
     struct matrix mean, gradient;             /* gradient: S, then -D */
     double *sums, *metric, *scales, *clipped; /* s_i; sums of min(|r|, 3 s_i) */
     size_t width;                             /* lines a batch */
-    double scale;                             /* s */
-    uint64_t pass, began, step;               /* iterations; the first of this kind; t */
-    size_t met;                               /* iterates in the mean */
-    double marked;                            /* objective when the mean was last begun */
-    bool whole;                               /* deterministic */
-    struct solve_measure measure;             /* of the best point */
+    struct subgradient_at at;
 };
 
 /* ---- memory --------------------------------------------------------------------------------------------------------
@@ -140,7 +143,7 @@ static struct absolute_sums weights_fit(struct subgradient *s, struct matrix bas
     struct absolute_fit fit = {.basis = basis,
                                .weights = weights,
                                .ridge = batch_ridge(s->field->problem),
-                               .least = least_scales * s->scale,
+                               .least = least_scales * s->at.scale,
                                .rounds = rounds,
                                .sums = s->sums};
     struct absolute_sums sums = {0};
@@ -207,7 +210,7 @@ static void signs_measure(struct subgradient *s, struct matrix basis)
         s->scales[i] = cells == 0 ? 0 : s->clipped[i] / cells;
         sum += s->clipped[i];
     }
-    s->scale = half->start[half->lines] == 0 ? 0 : sum / (double)half->start[half->lines];
+    s->at.scale = half->start[half->lines] == 0 ? 0 : sum / (double)half->start[half->lines];
 }
 
 /* ---- the best point ------------------------------------------------------------------------------------------------
@@ -225,7 +228,7 @@ static void best_measure(struct subgradient *s, const struct absolute_sums *sums
         projection_precondition(s->metric, p->gradient, s->gradient);
         steepness = matrix_dot(s->gradient, p->gradient);
     }
-    s->measure = (struct solve_measure){
+    s->at.measure = (struct solve_measure){
         .objective = sums->objective, .square = sums->square, .gradient = sqrt(fmax(steepness, 0)), .step = step};
 }
 
@@ -234,7 +237,7 @@ static void mean_measure(struct subgradient *s)
     matrix_copy(s->weights, s->best.spare);
     struct absolute_sums sums = weights_fit(s, s->mean, s->best.spare, ROUNDS_MEASURE);
     signs_measure(s, s->mean);
-    if (!(sums.objective < s->measure.objective))
+    if (!(sums.objective < s->at.measure.objective))
         return;
     matrix_copy(s->mean, s->best.basis);
     matrix_copy(s->best.spare, s->best.weights);
@@ -271,7 +274,7 @@ static void subgradient_begin(struct subgradient *s, const struct low_rank *poin
     matrix_copy(s->best.weights, s->weights);
     given = weights_fit(s, s->best.basis, s->best.weights, 0);
     fitted = given;
-    if (s->scale > 0)
+    if (s->at.scale > 0)
         fitted = weights_fit(s, s->best.basis, s->weights, ROUNDS_MEASURE);
     if (fitted.objective < given.objective)
         matrix_copy(s->weights, s->best.weights);
@@ -280,8 +283,8 @@ static void subgradient_begin(struct subgradient *s, const struct low_rank *poin
     best_measure(s, &given, 0);
     matrix_copy(s->best.basis, s->basis);
     s->width = batch_width(s->field->problem, point->rank);
-    s->whole = s->width == s->batches.by_long->lines;
-    s->marked = INFINITY;
+    s->at.whole = s->width == s->batches.by_long->lines;
+    s->at.marked = INFINITY;
 }
 
 static fescue_status subgradient_create(struct field *field, const struct low_rank *point, void **state)
@@ -316,7 +319,7 @@ static void step_scale(struct subgradient *s)
         double seen = (double)(half->start[i + 1] - half->start[i]) / (double)half->length;
         double most = sqrt(rank) * (seen + (rank + 2) / (double)b->count);
         double distance = distance_scales * s->scales[i]; /* 0: the line is met */
-        double step = distance > 0 ? -step_subgradient(distance, most, zeta, s->step) / (double)b->count : 0;
+        double step = distance > 0 ? -step_subgradient(distance, most, zeta, s->at.step) / (double)b->count : 0;
         double *g = &MATRIX_AT(s->gradient, i, 0);
         packed_solve(s->moment.factor, b->rank, g);
         for (size_t k = 0; k < b->rank; k++)
@@ -330,14 +333,14 @@ static fescue_status batch_step(struct subgradient *s, bool *lost)
     struct absolute_fit fit = {.basis = s->basis,
                                .weights = s->weights,
                                .ridge = batch_ridge(s->field->problem),
-                               .least = least_scales * s->scale,
+                               .least = least_scales * s->at.scale,
                                .rounds = ROUNDS_STEP,
                                .sums = s->sums};
     struct matrix weights = s->batches.weights;
     batch_fit_absolute(&s->batches, &fit);
     weights.rows = s->batches.count;
-    s->step++;
-    moment_learn(&s->moment, weights, fmax(1 / (double)s->step, moment_share));
+    s->at.step++;
+    moment_learn(&s->moment, weights, fmax(1 / (double)s->at.step, moment_share));
     signs_sum(s, s->basis);
     step_scale(s);
     grassmann_project(&s->work, s->basis, s->gradient);
@@ -348,21 +351,21 @@ static fescue_status batch_step(struct subgradient *s, bool *lost)
 /* The iterates of the first half of the very first pass are not worth a place in the mean. */
 static bool is_worth_meeting(const struct subgradient *s)
 {
-    return s->pass > 0 || s->whole || 2 * s->batches.next > s->batches.by_long->lines;
+    return s->at.pass > 0 || s->at.whole || 2 * s->batches.next > s->batches.by_long->lines;
 }
 
 /* All batches of a pass, or one of all lines. */
 static fescue_status pass_make(struct subgradient *s, bool *lost)
 {
-    size_t width = s->whole ? s->batches.by_long->lines : s->width;
+    size_t width = s->at.whole ? s->batches.by_long->lines : s->width;
     fescue_status status = FESCUE_OK;
-    batches_shuffle(&s->batches, (uint32_t)s->pass);
+    batches_shuffle(&s->batches, (uint32_t)s->at.pass);
     while (!*lost && batches_next(&s->batches, width)) {
         TRY(batch_step(s, lost));
         if (*lost || !is_worth_meeting(s))
             continue;
-        s->met++;
-        TRY(grassmann_mean_step(&s->work, s->basis, average_weight(s->met), s->mean));
+        s->at.met++;
+        TRY(grassmann_mean_step(&s->work, s->basis, average_weight(s->at.met), s->mean));
     }
 done:
     return status;
@@ -371,10 +374,10 @@ done:
 /* Deterministic from now on, from the best point. */
 static void whole_begin(struct subgradient *s)
 {
-    s->whole = true;
-    s->began = s->pass;
-    s->step = 0;
-    s->marked = INFINITY;
+    s->at.whole = true;
+    s->at.began = s->at.pass;
+    s->at.step = 0;
+    s->at.marked = INFINITY;
     matrix_copy(s->best.basis, s->basis);
     matrix_copy(s->best.weights, s->weights);
 }
@@ -382,33 +385,33 @@ static void whole_begin(struct subgradient *s)
 /* The mean begins anew where its turn has come; false when too little was gained since it last did. */
 static bool mean_begin(struct subgradient *s)
 {
-    uint64_t here = s->pass - s->began;
-    double ordinary = s->scale * (double)s->field->problem->target.count;
+    uint64_t here = s->at.pass - s->at.began;
+    double ordinary = s->at.scale * (double)s->field->problem->target.count;
     if ((here & (here - 1)) != 0)
         return true;
-    bool gained = s->marked - s->measure.objective > worth_doubling * ordinary;
-    s->met = 0;
-    s->marked = s->measure.objective;
-    return !s->whole || here < DOUBLING_LEAST || gained;
+    bool gained = s->at.marked - s->at.measure.objective > worth_doubling * ordinary;
+    s->at.met = 0;
+    s->at.marked = s->at.measure.objective;
+    return !s->at.whole || here < DOUBLING_LEAST || gained;
 }
 
 static fescue_status subgradient_step(void *state, bool *moved)
 {
     struct subgradient *s = state;
-    double before = s->measure.objective;
+    double before = s->at.measure.objective;
     bool lost = false;
     fescue_status status = FESCUE_OK;
-    *moved = s->scale > s->field->problem->rounding && mean_begin(s);
+    *moved = s->at.scale > s->field->problem->rounding && mean_begin(s);
     if (!*moved)
         return status;
     TRY(pass_make(s, &lost));
-    s->pass++;
+    s->at.pass++;
     *moved = !lost;
     if (lost)
         return status;
     mean_measure(s);
-    double ordinary = s->scale * (double)s->field->problem->target.count;
-    if (!s->whole && s->pass >= PASSES_LEAST && !(before - s->measure.objective > worth_pass * ordinary))
+    double ordinary = s->at.scale * (double)s->field->problem->target.count;
+    if (!s->at.whole && s->at.pass >= PASSES_LEAST && !(before - s->at.measure.objective > worth_pass * ordinary))
         whole_begin(s);
 done:
     return status;
@@ -416,7 +419,25 @@ done:
 
 static void subgradient_measure(const void *state, struct solve_measure *measure)
 {
-    *measure = ((const struct subgradient *)state)->measure;
+    *measure = ((const struct subgradient *)state)->at.measure;
+}
+
+static size_t subgradient_keep(void *state, struct memo_part parts[SOLVER_PARTS])
+{
+    struct subgradient *s = state;
+    const struct matrix matrices[] = {s->best.basis, s->best.weights, s->basis, s->weights, s->mean, s->moment.second};
+    size_t count = sizeof matrices / sizeof *matrices;
+    for (size_t k = 0; k < count; k++)
+        parts[k] = matrix_part(matrices[k]);
+    parts[count++] = (struct memo_part){s->scales, s->best.by_short->lines * sizeof *s->scales};
+    parts[count++] = (struct memo_part){&s->at, sizeof s->at};
+    return count;
+}
+
+/* All there is has come back; H's factor is made anew in every step. */
+static void subgradient_resume(void *state)
+{
+    (void)state;
 }
 
 static fescue_status subgradient_point_write(void *state, struct low_rank *point)
@@ -432,6 +453,8 @@ const struct solver subgradient_solver = {
     .create = subgradient_create,
     .measure = subgradient_measure,
     .step = subgradient_step,
+    .keep = subgradient_keep,
+    .resume = subgradient_resume,
     .point_write = subgradient_point_write,
     .destroy = subgradient_destroy,
 };

@@ -88,6 +88,20 @@ void trust_start(struct trust *trust)
         trust_widen(trust);
 }
 
+size_t trust_keep(struct trust *trust, struct memo_part *parts)
+{
+    parts[0] = (struct memo_part){&trust->radius, sizeof trust->radius};
+    parts[1] = (struct memo_part){&trust->slow, sizeof trust->slow};
+    parts[2] = (struct memo_part){&trust->measure.step, sizeof trust->measure.step};
+    return TRUST_PARTS;
+}
+
+void trust_resume(struct trust *trust)
+{
+    projection_evaluate(trust->projection);
+    point_measure(trust, trust->measure.step);
+}
+
 /* <a, b> in the metric: the inner product of a W' and b W'. */
 static double metric_dot(struct trust *trust, struct matrix a, struct matrix b)
 {
