@@ -94,8 +94,9 @@ static fescue_status status_of_exit(int code)
 /* A child that a signal ended says nothing itself. */
 static void death_tell(struct task *task, int number)
 {
-    char held[WORD_SIZE], limit[WORD_SIZE];
+    char held[WORD_SIZE], most[WORD_SIZE], limit[WORD_SIZE];
     bytes_words((double)task->resident, held);
+    bytes_words((double)task->memory, most);
     bytes_words(task->memory_limit, limit);
     task->status = FESCUE_DEFECT;
     if (task->is_over_memory) {
@@ -110,7 +111,7 @@ static void death_tell(struct task *task, int number)
     } else if (number == SIGKILL) {
         task->status = FESCUE_NO_MEMORY;
         snprintf(task->message, sizeof task->message,
-                 "killed from outside, at %s: by the system for want of memory, or by somebody", held);
+                 "killed from outside, at %s: by the system for want of memory, or by somebody", most);
     } else {
         snprintf(task->message, sizeof task->message, "died of signal %d (%s)", number, strsignal(number));
     }
@@ -161,19 +162,20 @@ static void task_end(struct fescue_night *night, struct task *task)
 /* ---- watching ------------------------------------------------------------------------------------------------------
  */
 
+/* Without what is mapped from files: that the system takes back when it wants to. */
 static uint64_t resident_of(pid_t process)
 {
     char path[64], text[128] = "";
-    unsigned long long pages = 0;
+    unsigned long long pages = 0, of_files = 0;
     snprintf(path, sizeof path, "/proc/%ld/statm", (long)process);
     int descriptor = open(path, O_RDONLY | O_CLOEXEC);
     if (descriptor < 0)
         return 0;
     ptrdiff_t got = read(descriptor, text, sizeof text - 1);
     close(descriptor);
-    if (got <= 0 || sscanf(text, "%*u %llu", &pages) != 1)
+    if (got <= 0 || sscanf(text, "%*u %llu %llu", &pages, &of_files) != 2 || pages < of_files)
         return 0;
-    return (uint64_t)pages * (uint64_t)sysconf(_SC_PAGESIZE);
+    return (uint64_t)(pages - of_files) * (uint64_t)sysconf(_SC_PAGESIZE);
 }
 
 static void memory_watch(struct fescue_night *night)

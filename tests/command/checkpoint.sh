@@ -1,9 +1,12 @@
 #!/bin/sh
 # SPDX-License-Identifier: MIT
 #
-# Checkpoints: a fill that is stopped again and again and started again ends with the bytes of one that was not; a
-# checkpoint of another run, and a broken one, are told and not used.
+# Checkpoints: a fill that is stopped again and again and started again, with another number of workers each time, ends
+# with the bytes of one that was not, whichever solver it has; a checkpoint of another run, and a broken one, are told
+# and not used. SOLVERS: further ones to go through by name (tests/unit/test_run_resume.c has all of them, step by step).
 . "$(dirname "$0")/library"
+
+: "${SOLVERS:=}"
 
 # Everything but "timing", which ends the record.
 same() { # A B
@@ -16,19 +19,21 @@ same() { # A B
     test "$(ls -A "$1")" = "$(ls -A "$2")"
 }
 
-# Runs, stops after a while that grows, runs again until it is done; $stops: how often it was stopped.
+# Runs, stops after a while that grows, runs again until it is done; $stops: how often it was stopped, $kept: how often
+# a checkpoint was there then.
 persist() { # PLACE ARGUMENT...
     place_=$1
     shift
-    stops=0
+    stops=0 kept=0
     while [ "$stops" -lt 60 ]; do
         "$PYTHON" - "$stops" "$FESCUE" fill -q "$@" -o "$place_" 2>err <<'PYTHON'
 import signal, subprocess, sys, time
-run = subprocess.Popen(sys.argv[2:])
+n = int(sys.argv[1])
+run = subprocess.Popen(sys.argv[2:] + ["--threads", str(1 + n % 3)])
 try:
-    status = run.wait(timeout=0.15 * 1.5 ** int(sys.argv[1]))
+    status = run.wait(timeout=0.15 * 1.5 ** n)
 except subprocess.TimeoutExpired:
-    run.send_signal((signal.SIGTERM, signal.SIGINT, signal.SIGHUP)[int(sys.argv[1]) % 3])
+    run.send_signal((signal.SIGTERM, signal.SIGINT, signal.SIGHUP)[n % 3])
     status = run.wait()
 sys.exit(76 if status < 0 else status) # 76: before it listened to signals
 PYTHON
@@ -38,6 +43,7 @@ PYTHON
         [ "$got" -ne 76 ] || continue
         [ "$got" -eq 75 ] || return 1
         grep -q '^fescue: .*asked to stop' err || return 1
+        [ ! -e "$place_/.fescue-checkpoint" ] || kept=$((kept + 1))
     done
     return 1
 }
@@ -53,13 +59,18 @@ try_way() { # NAME TABLE ARGUMENT...
     verdict $? "$name: uninterrupted" err
     persist "parts-$name" "$source" "$@"
     verdict $? "$name: stopped and started until it is done" err
-    check "$name: it was stopped ($stops times)" test "$stops" -gt 0
+    check "$name: it was stopped ($stops times, $kept with a checkpoint)" test "$kept" -gt 0
     check "$name: the same bytes" same "whole-$name" "parts-$name"
     check "$name: no checkpoint is left" test ! -e "parts-$name/.fescue-checkpoint"
 }
 try_way evidence $table
-try_way path $table --solver fixed-rank-cg --rank-most 8 --threads 2
+try_way path $table --solver fixed-rank-cg --rank-most 8
 try_way time fen.csv --time-axis rows --rank-most 6
+[ -z "$SOLVERS" ] ||
+    "$FESCUE" sow -q --rows 500 --columns 400 --rank 8 --noise 1 --seen 0.3 --truth factors -o middle
+for solver in $SOLVERS; do
+    try_way $solver middle/table.mtx --solver $solver --rank 9 --folds 0 --tolerance 0 --iterations 60 --write factors
+done
 
 # ---- what is not of this run ------------------------------------------------------------------------------------------
 stop_early() { # PLACE ARGUMENT...

@@ -4,49 +4,12 @@
  * after each run stands in support_faults.h.
  */
 #include "../unit/support_faults.h"
+#include "../unit/support_malloc.h"
 
 #include <errno.h>
 #include <stdio.h>
 #include <stdlib.h>
 #include <string.h>
-
-/* ---- malloc ----------------------------------------------------------------------------------------------------- */
-
-/* The libraries underneath, CHOLMOD above all, take memory from malloc and not from a context. These take its place for
-   the whole process and hand on to glibc's own, unless the plan says to fail; sanitizers have one of their own that
-   must stay. */
-#if defined(__SANITIZE_ADDRESS__) || defined(__SANITIZE_THREAD__)
-#define HAS_OWN_MALLOC false
-#elif defined(__has_feature)
-#if __has_feature(address_sanitizer) || __has_feature(thread_sanitizer) || __has_feature(memory_sanitizer)
-#define HAS_OWN_MALLOC false
-#else
-#define HAS_OWN_MALLOC true
-#endif
-#else
-#define HAS_OWN_MALLOC true
-#endif
-
-#if HAS_OWN_MALLOC
-void *__libc_malloc(size_t size);
-void *__libc_calloc(size_t count, size_t size);
-void *__libc_realloc(void *block, size_t size);
-
-void *malloc(size_t size)
-{
-    return fault_due(FAULT_MALLOC) ? NULL : __libc_malloc(size);
-}
-
-void *calloc(size_t count, size_t size)
-{
-    return fault_due(FAULT_MALLOC) ? NULL : __libc_calloc(count, size);
-}
-
-void *realloc(void *block, size_t size)
-{
-    return fault_due(FAULT_MALLOC) ? NULL : __libc_realloc(block, size);
-}
-#endif
 
 /* ---- the job ---------------------------------------------------------------------------------------------------- */
 

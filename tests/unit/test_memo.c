@@ -9,6 +9,7 @@
 #include <stdlib.h>
 #include <string.h>
 #include <time.h>
+#include <zlib.h>
 
 static const char identity[] = "version=1\nrank=3\n";
 
@@ -107,18 +108,45 @@ static void another_sequence_is_not_used(void **state)
     fescue_context_destroy(&context);
 }
 
-static void another_identity_is_refused_with_a_sentence(void **state)
+static void refused(const char *path, const char *asked, const char *sentence)
 {
-    struct bench *bench = bench_of(state);
-    char path[PATH_SIZE];
-    memo_make(bench, path);
     fescue_context *context = test_context_create();
-    assert_status(context, memo_open(context, path, "version=1\nrank=4\n", 300), FESCUE_OK);
+    assert_status(context, memo_open(context, path, asked, 300), FESCUE_OK);
     assert_false(memo_goes_on(context));
-    assert_non_null(strstr(memo_note(context), "it has rank=3, this one rank=4; starting over"));
+    if (strstr(memo_note(context), sentence) == NULL)
+        fail_msg("\"%s\" is not in \"%s\"", sentence, memo_note(context));
     assert_false(memo_begin(context, 11).recalls);
     assert_string_equal(fescue_failure_text(context), "");
     fescue_context_destroy(&context);
+}
+
+static void another_identity_is_refused_with_a_sentence(void **state)
+{
+    char path[PATH_SIZE];
+    memo_make(bench_of(state), path);
+    refused(path, "version=1\nrank=4\n", "it has rank=3, this one rank=4; starting over");
+    refused(path, "version=2\nrank=3\n", "it has version=1, this one version=2; starting over");
+    refused(path, "version=1\nrank=3\nridge=1\n", "it has other options; starting over");
+}
+
+/* Whole, by its checksum, and yet of another program or layout. */
+static void another_layout_is_refused_with_a_sentence(void **state)
+{
+    char path[PATH_SIZE];
+    size_t count;
+    memo_make(bench_of(state), path);
+    for (size_t at = 0; at < 16; at += 8) {
+        char *bytes = file_get(path, &count);
+        assert_non_null(bytes);
+        bytes[at] = (char)(bytes[at] + 1);
+        uint32_t crc = (uint32_t)crc32(crc32(0, NULL, 0), (const Bytef *)bytes, (uInt)(count - sizeof crc));
+        memcpy(bytes + count - sizeof crc, &crc, sizeof crc);
+        file_put(path, bytes, count);
+        refused(path, identity, at == 0 ? "not a checkpoint" : "a checkpoint of another version of this program");
+        bytes[at] = (char)(bytes[at] - 1);
+        file_put(path, bytes, count);
+        free(bytes);
+    }
 }
 
 /* Every byte is covered: changed or cut off, the file is not believed. */
@@ -189,6 +217,7 @@ int main(void)
     const struct CMUnitTest tests[] = {BENCH_TEST(what_is_kept_comes_back),
                                        BENCH_TEST(another_sequence_is_not_used),
                                        BENCH_TEST(another_identity_is_refused_with_a_sentence),
+                                       BENCH_TEST(another_layout_is_refused_with_a_sentence),
                                        BENCH_TEST(a_broken_file_is_refused),
                                        BENCH_TEST(a_disk_that_fails_fails_no_job),
                                        BENCH_TEST(without_a_memo_nothing_happens)};
