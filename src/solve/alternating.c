@@ -142,6 +142,21 @@ static void alternating_measure(const void *state, struct solve_measure *measure
     *measure = ((const struct alternating *)state)->measure;
 }
 
+static size_t alternating_keep(void *state, struct memo_part parts[SOLVER_PARTS])
+{
+    struct alternating *at = state;
+    parts[0] = matrix_part(at->projection.basis);
+    parts[1] = (struct memo_part){&at->measure.step, sizeof at->measure.step};
+    return 2;
+}
+
+static void alternating_resume(void *state)
+{
+    struct alternating *at = state;
+    projection_evaluate(&at->projection);
+    point_measure(at, at->measure.step);
+}
+
 static fescue_status alternating_point_write(void *state, struct low_rank *point)
 {
     return projection_write(&((struct alternating *)state)->projection, point);
@@ -154,6 +169,8 @@ const struct solver alternating_solver = {
     .create = alternating_create,
     .measure = alternating_measure,
     .step = alternating_step,
+    .keep = alternating_keep,
+    .resume = alternating_resume,
     .point_write = alternating_point_write,
     .destroy = alternating_destroy,
 };

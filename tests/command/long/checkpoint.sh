@@ -2,5 +2,6 @@
 # SPDX-License-Identifier: MIT
 #
 # Fits of every solver, stopped by signals and begun again.
-SOLVERS="fixed-rank-cg grassmann-cg grassmann-trust-region recursive-least-squares grassmann-stochastic \
-    grassmann-variance-reduced subgradient" exec "$(dirname "$0")/../checkpoint.sh"
+here=$(dirname "$0")
+SOLVERS=$(sed -n 's/^OPTION(solver,.*"auto|evidence|\([^"]*\)".*/\1/p' "$here/../../../src/include/fescue_options.def" |
+    tr '|' ' ') exec "$here/../checkpoint.sh"
