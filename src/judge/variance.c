@@ -12,17 +12,18 @@
  *     d            steps to the nearest seen cell of the same sensor; q = 3, 30, 300
  *     one-sided    the sensor was not seen before, or not after
  *     dark         nothing was seen at the cell's place; q = 3, 30
- *     own          the part of lev that the sensor's own coefficients have. It takes the errors of the sensor's cells
- * for independent; where they hang together in time, as those of a sensor that moves slowly on its own do, the
- * coefficients are worse by as much as such errors are fewer. That shows away from seen cells only, near which the same
- * movement is in the estimate
+ *     own          the part of lev that the sensor's own coefficients have
+ *
+ * lev takes the errors of a sensor's cells for independent. Where they hang together in time, as those of a sensor that
+ * moves slowly on its own do, its coefficients are worse by as much as such errors are fewer, and w_9 by as much
+ * larger. That shows away from seen cells only: near them the same movement is in the estimate.
  *
  * In gaps own is left out of lev: there it grows into the gap as the distance does, by more than the error, and in the
  * folds, where sensors have lost more cells than they really miss, it is larger all over with errors that are not. So
  * it would take the place of the distance and promise less for the cells that are missing.
  *
- * fitted to the pooled squared errors y of the folds. The spread of y grows with its mean, so the terms are fitted by
- * least squares under weights 1/V^2, which V itself gives: four rounds, the first with V constant (iteratively
+ * V is fitted to the pooled squared errors y of the folds. The spread of y grows with its mean, so the terms are fitted
+ * by least squares under weights 1/V^2, which V itself gives: four rounds, the first with V constant (iteratively
  * reweighted least squares; for normal errors the equations of maximum likelihood). A squared error above fifty times
  * its V is cut to that, 7 standard deviations, so that a few wild cells do not bend the surface; what that takes away
  * comes back with the quantile of |error| / sqrt(V).
