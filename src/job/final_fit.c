@@ -214,6 +214,8 @@ fescue_status final_fit_run(fescue_context *context, const struct final_request 
     fit->is_robust = is_whole && model->low_rank.rank > 0 && solver_is_robust(request->solver);
     if (fit->is_robust)
         TRY(final_robust_run(context, request, fit));
+    if (request->choice->kriged.time != NULL && is_whole)
+        TRY(krige_run(context, request->cells, model, &request->choice->kriged, &model->time));
 done:
     candidate_free(context, &best);
     problem_free(&problem);

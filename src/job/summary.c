@@ -221,17 +221,19 @@ static void judged_lines(struct summary *summary)
 static void time_gain_line(struct summary *summary)
 {
     const struct choice *choice = &summary->fill->choice;
-    bool has_time = choice->learnt.time != NULL, is_equal = choice->learnt.noise == EVIDENCE_NOISE_EQUAL;
+    bool has_time = choice->learnt.time != NULL || choice->kriged.time != NULL,
+         is_equal = choice->learnt.noise == EVIDENCE_NOISE_EQUAL;
     char plain[32], interpolation[32];
     if (choice->interpolation_errors.count == 0 || choice->plain_errors.count == 0)
         return;
     real_to_words(choice->plain_errors.rmse, 4, plain);
     real_to_words(choice->interpolation_errors.rmse, 4, interpolation);
     text_add(&summary->text, "           %s; low rank alone: RMSE %s, interpolation in time: %s%s\n",
-             !has_time && is_equal ? "time and unequal noise do not lower it"
-             : !has_time           ? "that is with unequal noise"
-             : is_equal            ? "that is with time"
-                                   : "that is with time and unequal noise",
+             !has_time && is_equal         ? "time and unequal noise do not lower it"
+             : !has_time                   ? "that is with unequal noise"
+             : choice->kriged.time != NULL ? "that is with time, by kriging what the fit leaves"
+             : is_equal                    ? "that is with time"
+                                           : "that is with time and unequal noise",
              plain, interpolation,
              choice->interpolation_errors.rmse < choice->errors.rmse ? ", the least of them" : "");
 }

@@ -232,6 +232,33 @@ static double halfwidth_find(struct chooser *chooser)
     return interval_halfwidth(chooser->residuals, chooser->hidden->count, chooser->options->interval);
 }
 
+/* A winner of the path follows time by kriging what it leaves, unless the hidden cells are met worse. */
+static fescue_status winner_krige(struct chooser *chooser, struct candidate *winner)
+{
+    fescue_status status = FESCUE_OK;
+    struct candidate own = {0};
+    struct krige_request request = {chooser->time, winner->point.rank == 0 ? 0 : winner->ridge};
+    if (chooser->time == NULL || winner->is_learnt || winner->is_exact || chooser->hidden->count == 0)
+        return FESCUE_OK;
+    chooser->plain_errors = winner->errors;
+    TRY(candidate_copy(chooser, winner, &own));
+    TRY(chooser_take_up(chooser, winner));
+    struct model model = {.rows = chooser->kept->rows,
+                          .columns = chooser->kept->columns,
+                          .offsets = winner->offsets,
+                          .low_rank = candidate_point(chooser, winner),
+                          .bounds = {-INFINITY, INFINITY}};
+    TRY(krige_run(chooser->context, chooser->kept, &model, &request, &own.time));
+    TRY(candidate_measure(chooser, &own));
+    TRY(candidate_note(chooser, &own));
+    if (!candidate_beats(chooser, winner, &own, 1))
+        candidate_swap(winner, &own);
+    TRY(candidate_measure(chooser, winner));
+done:
+    candidate_free(chooser, &own);
+    return status;
+}
+
 static fescue_status choice_fill(struct chooser *chooser, struct kind *kinds, size_t best, struct candidate *winner,
                                  struct choice *choice)
 {
@@ -251,7 +278,10 @@ static fescue_status choice_fill(struct chooser *chooser, struct kind *kinds, si
         if (is_there && kinds[k].alone.errors.rmse < choice->offsets_only_rank0_rmse)
             choice->offsets_only_rank0_rmse = kinds[k].alone.errors.rmse;
     }
-    if (is_judged && winner->is_learnt)
+    bool is_kriged = !winner->is_learnt && winner->time.along != TIME_NONE;
+    if (is_kriged)
+        choice->kriged = (struct krige_request){chooser->time, choice->ridge};
+    if (is_judged && (winner->is_learnt || is_kriged))
         choice->plain_errors = chooser->plain_errors;
     if (is_judged && winner->is_learnt)
         choice->far_errors = chooser->far_errors;
@@ -295,6 +325,7 @@ static fescue_status choose_on(fescue_context *context, const struct holdout *ho
         TRY(kinds_compete(&chooser, kinds, count, &winner, &best));
     TRY(winner_ground(&chooser, kinds, count, &winner, &best));
     TRY(winner_finish(&chooser, &winner));
+    TRY(winner_krige(&chooser, &winner));
     TRY(choice_fill(&chooser, kinds, best, &winner, choice));
 done:
     candidate_free(&chooser, &winner);

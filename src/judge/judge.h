@@ -73,6 +73,15 @@ fescue_status interpolation_measure(fescue_context *context, const struct cells 
 fescue_status refit_offsets(fescue_context *context, const struct cells *cells, enum fescue_offsets kind,
                             const struct low_rank *point, struct offsets *offsets);
 
+/* A time part for a model that was fitted without one: the kriging of its leave-one-out residuals (krige.c). New, owned
+   by the caller. */
+struct krige_request {
+    const struct time_axis *time; /* borrowed; NULL: no kriging */
+    double ridge;                 /* that the model was fitted with */
+};
+fescue_status krige_run(fescue_context *context, const struct cells *cells, const struct model *model,
+                        const struct krige_request *request, struct time_part *part);
+
 /* One point of the path that was tried. */
 struct choose_step {
     enum fescue_offsets offsets;
@@ -87,6 +96,7 @@ struct choice {
     double ridge;   /* NAN: learnt, a ridge a component */
     bool is_learnt; /* by the evidence fit, on this request */
     struct evidence_request learnt;
+    struct krige_request kriged;          /* where the path's model has time added; else its time is NULL */
     struct errors errors, offsets_errors; /* on the hidden cells: of the choice, and of its offsets alone */
     double offsets_only_rank0_rmse;       /* of the best offsets alone */
     double halfwidth;                     /* of the interval at the asked level; NAN when nothing was hidden */

@@ -20,6 +20,9 @@
 
 /* ---- learning again ---------------------------------------------------------------------------------------------- */
 
+/* Variance of the noise from what a fit leaves of its own cells, with the numbers it has taken from them. */
+fescue_status noise_measure(fescue_context *context, const struct cells *cells, const struct model *model,
+                            double *noise);
 /* What was learnt, and what shrinks it: noise is a variance in the table's units. */
 struct relearnt {
     struct model model; /* owned */

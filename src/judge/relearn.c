@@ -21,8 +21,8 @@ enum { RELEARN_ROUNDS = 30, PATH_TURNS = 2 };
 static const double settled = 3e-4, path_change = 1e-5;
 
 /* Variance of the noise from what the fit leaves of its own cells, with the numbers it has taken from them. */
-static fescue_status noise_measure(fescue_context *context, const struct cells *cells, const struct model *model,
-                                   double *noise)
+fescue_status noise_measure(fescue_context *context, const struct cells *cells, const struct model *model,
+                            double *noise)
 {
     static const double left_least = 0.2; /* a ridge takes fewer numbers than are counted */
     struct errors errors;
@@ -161,6 +161,8 @@ static fescue_status path_again(fescue_context *context, const struct cells *cel
         if (model->low_rank.rank > 0)
             TRY(point_improve(context, cells, request, out));
     }
+    if (request->choice->kriged.time != NULL)
+        TRY(krige_run(context, cells, model, &request->choice->kriged, &model->time));
 done:
     return status;
 }

@@ -201,6 +201,8 @@ static struct record time_record(const struct run *run)
     count_set(&record, "clock_set_back", time->set_back);
     flag_set(&record, "in_order", time->is_sorted);
     flag_set(&record, "used", run->model->time.along != TIME_NONE);
+    if (run->model->time.along != TIME_NONE)
+        text_set(&record, "by", run->choice->is_learnt ? "evidence" : "kriging");
     return record;
 }
 

@@ -3,7 +3,7 @@
 #
 # What the order of rows that are times is worth. The same readings with their rows in any order and their true times
 # are filled alike, each row where the user had it; readings whose times were dealt out at random lose nothing against a
-# fill that is told of no clock.
+# fill that is told of no clock. And what a clock is worth to a solver that knows of none.
 . "$(dirname "$0")/library"
 
 "$PYTHON" - <<'END'
@@ -45,6 +45,9 @@ def read(place, rows):
     assert [line[0] for line in lines] == asked, "rows are not where they were"
     estimate[rows] = [[float(x) for x in line[1:]] for line in lines]
     return estimate
+def read_sorted(place):
+    lines = np.genfromtxt(place + "/filled.csv", delimiter=",", skip_header=1)
+    return lines[:, 1:]
 def error(estimate):
     return np.sqrt(np.mean((estimate - truth)[~seen] ** 2))
 if sys.argv[1] == "order":
@@ -52,6 +55,12 @@ if sys.argv[1] == "order":
     apart = np.sqrt(np.mean((one - other)[~seen] ** 2))
     print("# apart", apart, "errors", error(one), error(other))
     raise SystemExit(not apart <= 0.01 * error(one))
+if sys.argv[1] == "kriged":
+    some = ~seen
+    some[100:104] = False # nothing at all was seen there
+    kriged, plain = [np.sqrt(np.mean((read_sorted(p) - truth)[some] ** 2)) for p in ("kriged", "sorted")]
+    print("# kriged", kriged, "plain", plain)
+    raise SystemExit(not kriged <= 0.9 * plain)
 with_clock, without = error(read("dealt-clock", mixed)), error(read("dealt-none", mixed))
 print("# with a clock that means nothing", with_clock, "without", without)
 raise SystemExit(not with_clock <= 1.01 * without)
@@ -61,6 +70,13 @@ for table in sorted mixed; do
     check "$table: the model follows time" grep -q '"used": true' $table/run.json
 done
 check "the order of the rows moves estimates by at most a hundredth of their error" "$PYTHON" clock.py order
+# A solver that knows of no clock: what it leaves is kriged.
+try 0 fill sorted.csv -o sorted --folds 0 --solver grassmann-cg
+check "the record says that kriging follows time" grep -q '"by": "kriging"' sorted/run.json
+check "so does the summary" grep -q 'that is with time, by kriging what the fit leaves; low rank alone: RMSE' err
+cp -r sorted kriged
+try 0 fill sorted.csv -o sorted --folds 0 --solver grassmann-cg --time-axis none
+check "kriging takes at least a tenth of the error" "$PYTHON" clock.py kriged
 try 0 fill dealt.csv -o dealt-clock --folds 0
 try 0 fill dealt.csv -o dealt-none --folds 0 --time-axis none
 check "times dealt out at random cost at most one per cent" "$PYTHON" clock.py dealt
