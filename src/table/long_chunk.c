@@ -25,6 +25,7 @@ enum side { SIDE_ROW, SIDE_COLUMN, SIDES };
 
 struct long_worker {
     struct pile pile; /* what blocks are made for: how the pile of all was when this worker saw it last */
+    struct pile_room room;
     struct lexicon lexicon[SIDES];
     struct line_run *runs; /* of the block */
     size_t run_count, run_capacity;
@@ -220,7 +221,7 @@ static fescue_status chunk_parse(void *data, size_t number, const struct chunk *
         return FESCUE_OK;
     for (int side = 0; side < SIDES; side++)
         TRY(lexicon_begin(context, &worker->lexicon[side]));
-    TRY(pile_block_create(&worker->pile, (uint32_t)lines, block));
+    TRY(pile_block_create(&worker->pile, &worker->room, (uint32_t)lines, block));
     TRY(lines_parse(&place, *block));
 done:
     if (status != FESCUE_OK || !worker->is_plain)
@@ -300,6 +301,7 @@ void long_chunks_close(struct long_chunks *chunks)
         for (int side = 0; side < SIDES; side++)
             lexicon_free(context, &chunks->worker[k].lexicon[side]);
         GIVE(context, &chunks->worker[k].runs);
+        pile_room_join(&chunks->delimited->pile, &chunks->worker[k].room);
     }
     GIVE(context, &chunks->worker);
 }

@@ -216,7 +216,8 @@ done:
     return status;
 }
 
-fescue_status market_parse(const struct market_form *form, const struct chunk *chunk, struct pile_block **block)
+fescue_status market_parse(const struct market_form *form, size_t worker, const struct chunk *chunk,
+                           struct pile_block **block)
 {
     fescue_status status = FESCUE_OK;
     const struct rest rest = {chunk->text + chunk->at, chunk->text + chunk->end};
@@ -225,7 +226,7 @@ fescue_status market_parse(const struct market_form *form, const struct chunk *c
     *block = NULL;
     if (rest.at == rest.end || rest.end[-1] != '\n' || lines > UINT32_MAX)
         return FESCUE_OK;
-    TRY(pile_block_create(form->pile, (uint32_t)lines, block));
+    TRY(pile_block_create(form->pile, &form->room[worker], (uint32_t)lines, block));
     TRY(lines_parse(form, rest, *block, &is_plain));
 done:
     if (status != FESCUE_OK || !is_plain)

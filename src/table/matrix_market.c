@@ -397,8 +397,7 @@ static void array_places_give(struct market *market, struct pile_block *block)
 static fescue_status chunk_parse(void *data, size_t worker, const struct chunk *chunk, struct pile_block **block)
 {
     const struct market *market = data;
-    (void)worker;
-    return market_parse(&market->form, chunk, block);
+    return market_parse(&market->form, worker, chunk, block);
 }
 
 static fescue_status chunk_finish(void *data, size_t worker, struct chunk *chunk, struct pile_block **block,
@@ -421,7 +420,10 @@ static fescue_status chunk_finish(void *data, size_t worker, struct chunk *chunk
 static fescue_status chunks_read(struct market *market)
 {
     const struct chunk_reader reader = {market, chunk_parse, chunk_finish};
+    fescue_context *context = market->pile.context;
+    const size_t workers = team_workers(context);
     fescue_status status;
+    TRY(TAKE(context, workers, &market->form.room));
     market->next.row = market->pile.mirror == MIRROR_NEGATED;
     TRY(stream_parse(market->stream, &reader));
     if (market->read < market->entries)
@@ -429,6 +431,9 @@ static fescue_status chunks_read(struct market *market)
                           "the file ends here after %" PRIu64 " of the %" PRIu64 " entries that its header promises",
                           market->read, market->entries);
 done:
+    for (size_t k = 0; market->form.room != NULL && k < workers; k++)
+        pile_room_join(&market->pile, &market->form.room[k]);
+    GIVE(context, &market->form.room);
     return status;
 }
 

@@ -12,6 +12,7 @@
 #include "table/table_internal.h"
 
 #include <assert.h>
+#include <string.h>
 
 void pile_open(fescue_context *context, const struct table_reading *reading, struct pile *pile)
 {
@@ -34,22 +35,68 @@ void pile_told_size(struct pile *pile, uint64_t rows, uint64_t columns)
 
 /* ---- blocks ----------------------------------------------------------------------------------------------------- */
 
-fescue_status pile_block_create(const struct pile *pile, uint32_t capacity, struct pile_block **out)
+struct pile_slab {
+    struct pile_slab *older;
+    size_t used, size;
+    _Alignas(64) char bytes[];
+};
+
+/* Each slab of a worker is twice as large as the one before, up to this: so what is idle stays below what is used, and
+   below this. */
+enum { SLAB_MOST = 1 << 23, SLAB_ALIGNMENT = 64 };
+
+/* A place for so many bytes in the newest slab, or in a new one. */
+static fescue_status slab_carve(fescue_context *context, struct pile_room *room, size_t size, void *out)
 {
+    struct pile_slab *slab = room->slab;
+    size = (size + SLAB_ALIGNMENT - 1) & ~(size_t)(SLAB_ALIGNMENT - 1);
+    if (slab == NULL || slab->size - slab->used < size) {
+        size_t most = slab == NULL ? 0 : 2 * slab->size < SLAB_MOST ? 2 * slab->size : SLAB_MOST;
+        size_t whole = size < most ? most : size;
+        fescue_status status = memory_take(context, 1, sizeof *slab + whole, &slab);
+        if (status != FESCUE_OK)
+            return status;
+        slab->size = whole;
+        slab->older = room->slab;
+        room->slab = slab;
+    }
+    char *place = slab->bytes + slab->used;
+    slab->used += size;
+    memcpy(out, &place, sizeof place);
+    return FESCUE_OK;
+}
+
+void pile_room_join(struct pile *pile, struct pile_room *room)
+{
+    while (room->slab != NULL) {
+        struct pile_slab *slab = room->slab;
+        room->slab = slab->older;
+        slab->older = pile->slabs;
+        pile->slabs = slab;
+    }
+}
+
+fescue_status pile_block_create(const struct pile *pile, struct pile_room *room, uint32_t capacity,
+                                struct pile_block **out)
+{
+    fescue_status status;
     struct pile_block *block;
     size_t value = cell_size(pile->precision), code = pile->keeps_texts ? 1 : 0, size;
-    bool fits = size_product(capacity, value + 2 * sizeof(uint32_t) + code, &size) && size <= SIZE_MAX - sizeof *block;
+    bool fits = size_product(capacity, value + 2 * sizeof(uint32_t) + code, &size) && size <= SIZE_MAX / 4;
     *out = NULL;
-    fescue_status status = memory_take(pile->context, 1, fits ? sizeof *block + size : SIZE_MAX, &block);
-    if (status != FESCUE_OK)
-        return status;
-    block->capacity = capacity;
-    block->value = block + 1; /* aligned for doubles: the struct holds pointers */
+    size = fits ? size + sizeof *block : SIZE_MAX;
+    if (room != NULL && fits)
+        TRY(slab_carve(pile->context, room, size, &block));
+    else
+        TRY(memory_take(pile->context, 1, size, &block));
+    *block = (struct pile_block){.slab = room != NULL ? room->slab : NULL, .capacity = capacity, .value = block + 1};
+    /* value is aligned for doubles: the struct holds pointers */
     block->row = (uint32_t *)(void *)((char *)block->value + capacity * value);
     block->column = block->row + capacity;
     block->code = pile->keeps_texts ? (uint8_t *)(block->column + capacity) : NULL;
     *out = block;
-    return FESCUE_OK;
+done:
+    return status;
 }
 
 static fescue_status text_keep(const struct pile *pile, struct pile_block *block, const struct pile_entry *entry,
@@ -74,11 +121,18 @@ done:
     return status;
 }
 
-void pile_block_free(fescue_context *context, struct pile_block **block)
+void pile_block_free(fescue_context *context, struct pile_block **out)
 {
-    if (*block != NULL)
-        odd_texts_free(context, &(*block)->odd);
-    GIVE(context, block);
+    struct pile_block *block = *out;
+    if (block == NULL)
+        return;
+    odd_texts_free(context, &block->odd);
+    if (block->slab == NULL) {
+        GIVE(context, out);
+        return;
+    }
+    block->slab->used = (size_t)((char *)block - block->slab->bytes); /* it was the last */
+    *out = NULL;
 }
 
 static void block_append(struct pile *pile, struct pile_block *block)
@@ -128,7 +182,7 @@ fescue_status pile_add(struct pile *pile, const struct pile_entry *entry)
     fescue_status status = FESCUE_OK;
     if (pile->last == NULL || pile->last->count == pile->last->capacity) {
         struct pile_block *block;
-        TRY(pile_block_create(pile, PILE_BLOCK, &block));
+        TRY(pile_block_create(pile, NULL, PILE_BLOCK, &block));
         block_append(pile, block);
     }
     TRY(run_append(pile, pile->count, entry->line));
@@ -162,6 +216,11 @@ static void blocks_free(struct pile *pile)
         struct pile_block *next = pile->first->next;
         pile_block_free(pile->context, &pile->first);
         pile->first = next;
+    }
+    while (pile->slabs != NULL) {
+        struct pile_slab *older = pile->slabs->older;
+        GIVE(pile->context, &pile->slabs);
+        pile->slabs = older;
     }
     pile->last = NULL;
     pile->blocks = 0;

@@ -247,9 +247,16 @@ void odd_texts_free(fescue_context *context, struct odd_texts *odd);
 /* ---- pile: cells as they come from a file -------------------------------------------------------------------------
  */
 
+/* A large piece of memory for many blocks, which large pages fit (base/memory.c). */
+struct pile_slab;
+/* Where the blocks of one worker come from; zero is empty. They lie there until the pile is used up. */
+struct pile_room {
+    struct pile_slab *slab; /* the newest, and through it all */
+};
 /* Entries that lie side by side; all its arrays are one piece of memory. */
 struct pile_block {
     struct pile_block *next;
+    struct pile_slab *slab; /* in which it lies; NULL: in memory of its own */
     uint32_t count, capacity;
     uint32_t *row, *column;
     void *value;
@@ -273,6 +280,7 @@ struct pile {
     uint64_t dense_most; /* texts are kept while rows * columns is at most this */
     uint64_t count;
     struct pile_block *first, *last;
+    struct pile_slab *slabs;
     size_t blocks;
     struct line_run *runs;
     uint64_t run_count, run_capacity, next_line;
@@ -287,8 +295,12 @@ void pile_open(fescue_context *context, const struct table_reading *reading, str
 /* The table is going to have at least this size: texts are dropped when that is too much. */
 void pile_told_size(struct pile *pile, uint64_t rows, uint64_t columns);
 fescue_status pile_add(struct pile *pile, const struct pile_entry *entry);
-/* An empty block as the pile would have it, with room for `capacity` entries. Safe from any worker. */
-fescue_status pile_block_create(const struct pile *pile, uint32_t capacity, struct pile_block **out);
+/* An empty block as the pile would have it, with room for `capacity` entries. Safe from any worker that has the room
+   for itself; NULL: memory of its own. The block before it in the room was taken by the pile, or given back. */
+fescue_status pile_block_create(const struct pile *pile, struct pile_room *room, uint32_t capacity,
+                                struct pile_block **out);
+/* The pile takes what the room holds; before it is built or given back, whatever happened. */
+void pile_room_join(struct pile *pile, struct pile_room *room);
 /* One more entry, for which there is room, where no texts are kept. Safe from any worker, as all three. */
 static inline void pile_block_put(const struct pile *pile, struct pile_block *block, const struct pile_entry *entry)
 {
@@ -344,10 +356,12 @@ struct market_form {
     const struct pile *pile;
     bool is_array, is_integer;
     uint64_t rows, columns;
+    struct pile_room *room; /* of each worker */
 };
 /* All entries of the chunk as a block, those of the array form without their places and with nan for holes; NULL when
-   there is anything but plain entries in it. Safe from any worker. */
-fescue_status market_parse(const struct market_form *form, const struct chunk *chunk, struct pile_block **block);
+   there is anything but plain entries in it. Beside other workers. */
+fescue_status market_parse(const struct market_form *form, size_t worker, const struct chunk *chunk,
+                           struct pile_block **block);
 fescue_status matrix_market_read(struct stream *stream, const struct table_reading *reading, fescue_table *table);
 fescue_status delimited_read(struct stream *stream, const struct table_reading *reading, fescue_table *table);
 bool is_pack(const char *text, size_t length);
