@@ -20,27 +20,6 @@ void lexicon_free(fescue_context *context, struct lexicon *lexicon)
     GIVE(context, &lexicon->position);
 }
 
-static struct lexicon_label label_make(const char *text, uint32_t length)
-{
-    struct lexicon_label label = {.head = lexicon_word(text), .text = text, .length = length};
-    if (length < WORD)
-        label.head &= (UINT64_C(1) << 8 * length) - 1;
-    else
-        label.tail = lexicon_word(text + length - WORD);
-    return label;
-}
-
-static uint32_t label_hash(const struct lexicon *lexicon, const struct lexicon_label *label)
-{
-    struct sip s = sip_open(lexicon->key);
-    sip_word(&s, label->head);
-    for (size_t k = WORD; label->length > 2 * WORD && k + WORD <= label->length; k += WORD)
-        sip_word(&s, lexicon_word(label->text + k));
-    sip_word(&s, label->tail);
-    sip_word(&s, label->length);
-    return sip_close(&s);
-}
-
 static inline bool slot_is(const struct lexicon *lexicon, const struct lexicon_slot *slot,
                            const struct lexicon_label *label)
 {
@@ -61,8 +40,8 @@ static inline struct lexicon_slot *slot_find(const struct lexicon *lexicon, cons
 static void slot_fill(struct lexicon *lexicon, uint32_t number)
 {
     const struct lexicon_label *label = &lexicon->label[number];
-    *slot_find(lexicon, label) = (struct lexicon_slot){
-        .head = label->head, .tail = label->tail, .length = label->length, .hash = label->hash, .number = number + 1};
+    *slot_find(lexicon, label) =
+        (struct lexicon_slot){.head = label->head, .tail = label->tail, .length = label->length, .number = number + 1};
 }
 
 /* All labels into a new table of `count` slots. */
@@ -86,7 +65,6 @@ fescue_status lexicon_begin(fescue_context *context, struct lexicon *lexicon)
     if (kept == lexicon->count)
         return FESCUE_OK;
     lexicon->count = lexicon->settled = kept;
-    lexicon->last = 0;
     return slots_refill(context, lexicon, lexicon->mask + 1);
 }
 
@@ -104,21 +82,19 @@ done:
     return status;
 }
 
-fescue_status lexicon_find_or_add(fescue_context *context, struct lexicon *lexicon, const char *text, uint32_t length,
+fescue_status lexicon_find_or_add(fescue_context *context, struct lexicon *lexicon, const struct lexicon_label *label,
                                   uint32_t *number, bool *is_new)
 {
     fescue_status status = FESCUE_OK;
-    struct lexicon_label label = label_make(text, length);
-    label.hash = label_hash(lexicon, &label);
     if (lexicon->slots == NULL || lexicon->count > lexicon->mask / 2)
         TRY(slots_refill(context, lexicon, lexicon->slots == NULL ? LEAST_SLOTS : 2 * (lexicon->mask + 1)));
-    const struct lexicon_slot *slot = slot_find(lexicon, &label);
+    const struct lexicon_slot *slot = slot_find(lexicon, label);
     *is_new = slot->number == 0;
     if (*is_new) {
-        TRY(label_append(context, lexicon, &label));
+        TRY(label_append(context, lexicon, label));
         slot_fill(lexicon, lexicon->count - 1);
     }
-    *number = lexicon->last = slot->number - 1;
+    *number = slot->number - 1;
 done:
     return status;
 }

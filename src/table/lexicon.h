@@ -29,12 +29,13 @@ struct lexicon_label {
 struct lexicon {
     struct lexicon_slot {
         uint64_t head, tail;
-        uint32_t length, hash, number, spare; /* number: of the label, from 1; 0: the slot is free */
+        uint32_t length, number; /* number: of the label, from 1; 0: the slot is free */
+        uint64_t spare;          /* so that no slot lies in two lines of memory */
     } * slots;
     size_t mask;
     struct lexicon_label *label;
-    uint32_t *position;                      /* of each label, in the list of all */
-    uint32_t count, capacity, settled, last; /* last: found last */
+    uint32_t *position; /* of each label, in the list of all */
+    uint32_t count, capacity, settled;
     uint64_t key[2];
 };
 void lexicon_open(struct lexicon *lexicon); /* empty; takes no memory */
@@ -43,8 +44,8 @@ fescue_status lexicon_begin(fescue_context *context, struct lexicon *lexicon);
 /* Behind a chunk: enters its new labels into the list of all. */
 fescue_status lexicon_settle(fescue_context *context, struct lexicon *lexicon, struct label_list *list);
 void lexicon_free(fescue_context *context, struct lexicon *lexicon);
-/* The number of a label, which is added when it is new; *is_new. Eight bytes behind the text can be read. */
-fescue_status lexicon_find_or_add(fescue_context *context, struct lexicon *lexicon, const char *text, uint32_t length,
+/* The number of a label, made for this lexicon, which is added when it is new; *is_new. */
+fescue_status lexicon_find_or_add(fescue_context *context, struct lexicon *lexicon, const struct lexicon_label *label,
                                   uint32_t *number, bool *is_new);
 
 static inline uint64_t lexicon_word(const char *text)
@@ -52,6 +53,32 @@ static inline uint64_t lexicon_word(const char *text)
     uint64_t word;
     memcpy(&word, text, sizeof word);
     return le64toh(word);
+}
+
+/* The label of a text behind which eight bytes can be read. */
+static inline struct lexicon_label lexicon_label_make(const struct lexicon *lexicon, const char *text, uint32_t length)
+{
+    enum { WORD = sizeof(uint64_t) };
+    struct lexicon_label label = {.head = lexicon_word(text), .text = text, .length = length};
+    struct sip s = sip_open(lexicon->key);
+    if (length < WORD)
+        label.head &= (UINT64_C(1) << 8 * length) - 1;
+    else
+        label.tail = lexicon_word(text + length - WORD);
+    sip_word(&s, label.head);
+    for (size_t k = WORD; length > 2 * WORD && k + WORD <= length; k += WORD)
+        sip_word(&s, lexicon_word(text + k));
+    sip_word(&s, label.tail);
+    sip_word(&s, length);
+    label.hash = sip_close(&s);
+    return label;
+}
+
+/* It will be looked for: the slot can be on its way. */
+static inline void lexicon_expect(const struct lexicon *lexicon, const struct lexicon_label *label)
+{
+    if (lexicon->slots != NULL)
+        __builtin_prefetch(&lexicon->slots[label->hash & lexicon->mask]);
 }
 
 /* Whether the label stands at `text`, where as many bytes, and eight, can be read. */

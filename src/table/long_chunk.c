@@ -23,6 +23,15 @@
 
 enum side { SIDE_ROW, SIDE_COLUMN, SIDES };
 
+/* Records are cut a batch at a time, and then their labels are looked for: by then the slots have come from memory. */
+enum { BATCH = 32 };
+struct cut_record {
+    struct lexicon_label label[SIDES];
+    bool is_same[SIDES]; /* as in the record before: files have runs of the same label */
+    bool is_hole;
+    struct pile_entry entry;
+};
+
 struct long_worker {
     struct pile pile; /* what blocks are made for: how the pile of all was when this worker saw it last */
     struct pile_room room;
@@ -31,6 +40,12 @@ struct long_worker {
     size_t run_count, run_capacity;
     uint64_t lines; /* of the chunk, so far */
     bool is_plain;
+    struct cut_record batch[BATCH];
+    size_t cut; /* of the batch, so far */
+    struct cut_label {
+        struct lexicon_label label;
+        uint32_t number;
+    } last[SIDES]; /* of the record that was cut last, and the number of the one that was found last */
 };
 
 /* Where a worker stands in its chunk. */
@@ -62,30 +77,42 @@ static inline const char *field_end_find(const char *at, char closing)
     }
 }
 
-/* A label, and the separator behind it. */
-static inline fescue_status label_take(struct place *place, enum side side, uint32_t *number)
+/* Cuts off a label, and the separator behind it. */
+static inline void label_cut(struct place *place, enum side side, struct cut_record *record)
+{
+    struct long_worker *worker = place->worker;
+    struct lexicon_label *last = &worker->last[side].label;
+    const bool quoted = *place->at == '"';
+    const char closing = quoted ? '"' : place->separator, *text = place->at + quoted, *end = text + last->length;
+    record->is_same[side] = last->length > 0 && place->end - text > (ptrdiff_t)last->length &&
+                            lexicon_label_is(last, text) && *end == closing;
+    if (!record->is_same[side]) {
+        end = field_end_find(text, closing);
+        worker->is_plain = end > text && *end == closing && end - text <= INT32_MAX;
+        if (!worker->is_plain)
+            return;
+        *last = record->label[side] = lexicon_label_make(&worker->lexicon[side], text, (uint32_t)(end - text));
+        lexicon_expect(&worker->lexicon[side], last);
+    }
+    worker->is_plain = end[quoted] == place->separator;
+    place->at = end + quoted + 1;
+}
+
+/* The number of a label that was cut off. */
+static inline fescue_status label_find(struct place *place, enum side side, const struct cut_record *record,
+                                       uint32_t *number)
 {
     fescue_status status = FESCUE_OK;
-    struct lexicon *lexicon = &place->worker->lexicon[side];
-    const bool quoted = *place->at == '"';
-    const char closing = quoted ? '"' : place->separator, *text = place->at + quoted, *end;
-    const struct lexicon_label *last = lexicon->count > 0 ? &lexicon->label[lexicon->last] : NULL;
-    if (last != NULL && place->end - text > (ptrdiff_t)last->length && lexicon_label_is(last, text) &&
-        text[last->length] == closing) { /* files have runs of the same label */
-        *number = lexicon->last;
-        end = text + last->length;
-    } else {
-        bool is_new;
-        end = field_end_find(text, closing);
-        place->worker->is_plain = end > text && *end == closing && end - text <= INT32_MAX;
-        if (!place->worker->is_plain)
-            return FESCUE_OK;
-        TRY(lexicon_find_or_add(place->delimited->table->context, lexicon, text, (uint32_t)(end - text), number,
+    struct cut_label *last = &place->worker->last[side];
+    bool is_new;
+    if (!record->is_same[side]) {
+        const struct lexicon_label *label = &record->label[side];
+        TRY(lexicon_find_or_add(place->delimited->table->context, &place->worker->lexicon[side], label, &last->number,
                                 &is_new));
-        place->worker->is_plain = !is_new || utf8_fault(text, end) == NULL;
+        if (is_new && utf8_fault(label->text, label->text + label->length) != NULL)
+            place->worker->is_plain = false;
     }
-    place->worker->is_plain = place->worker->is_plain && end[quoted] == place->separator;
-    place->at = end + quoted + 1;
+    *number = last->number;
 done:
     return status;
 }
@@ -148,29 +175,45 @@ done:
     return status;
 }
 
-/* The next line, which is not blank. */
-static inline fescue_status record_take(struct place *place, struct pile_block *block)
+/* Cuts the next line, which is not blank. */
+static inline void record_cut(struct place *place)
+{
+    struct long_worker *worker = place->worker;
+    struct cut_record *record = &worker->batch[worker->cut++];
+    label_cut(place, SIDE_ROW, record);
+    if (worker->is_plain)
+        label_cut(place, SIDE_COLUMN, record);
+    if (worker->is_plain)
+        value_take(place, &record->entry, &record->is_hole);
+}
+
+static inline fescue_status record_add(struct place *place, struct cut_record *record, struct pile_block *block)
 {
     fescue_status status;
     struct long_worker *worker = place->worker;
-    struct pile_entry entry = {0};
-    bool is_a_hole;
-    TRY(label_take(place, SIDE_ROW, &entry.row));
-    if (!worker->is_plain)
-        return FESCUE_OK;
-    TRY(label_take(place, SIDE_COLUMN, &entry.column));
-    if (!worker->is_plain)
-        return FESCUE_OK;
-    value_take(place, &entry, &is_a_hole);
+    TRY(label_find(place, SIDE_ROW, record, &record->entry.row));
+    TRY(label_find(place, SIDE_COLUMN, record, &record->entry.column));
     worker->lines++;
-    if (!worker->is_plain)
-        return FESCUE_OK;
-    if (is_a_hole)
+    if (record->is_hole)
         status = run_begin(place->delimited->table->context, worker, block->count);
     else if (worker->pile.keeps_texts)
-        status = pile_block_add(&worker->pile, block, &entry);
+        status = pile_block_add(&worker->pile, block, &record->entry);
     else
-        pile_block_put(&worker->pile, block, &entry);
+        pile_block_put(&worker->pile, block, &record->entry);
+done:
+    return status;
+}
+
+/* A batch of records, up to a blank line. */
+static fescue_status batch_take(struct place *place, struct pile_block *block)
+{
+    fescue_status status = FESCUE_OK;
+    struct long_worker *worker = place->worker;
+    worker->cut = 0;
+    while (worker->cut < BATCH && worker->is_plain && place->at < place->end && line_end_at(place->at) == NULL)
+        record_cut(place);
+    for (size_t k = 0; k < worker->cut && worker->is_plain; k++)
+        TRY(record_add(place, &worker->batch[k], block));
 done:
     return status;
 }
@@ -183,7 +226,7 @@ static fescue_status lines_parse(struct place *place, struct pile_block *block)
     while (place->at < place->end && worker->is_plain) {
         const char *blank = line_end_at(place->at);
         if (blank == NULL) {
-            TRY(record_take(place, block));
+            TRY(batch_take(place, block));
             continue;
         }
         worker->lines++;
@@ -216,6 +259,7 @@ static fescue_status chunk_parse(void *data, size_t number, const struct chunk *
     size_t lines = lines_count(place.at, place.end);
     *block = NULL;
     worker->lines = worker->run_count = 0;
+    worker->last[SIDE_ROW].label.length = worker->last[SIDE_COLUMN].label.length = 0;
     worker->is_plain = place.at == place.end || (place.end[-1] == '\n' && !chunk->has_zero && lines <= UINT32_MAX);
     if (!worker->is_plain)
         return FESCUE_OK;
