@@ -62,8 +62,9 @@ static fescue_status ledger_fail(struct ledger *ledger)
 {
     int code = sqlite3_errcode(ledger->database);
     fescue_status status = code == SQLITE_NOMEM ? FESCUE_NO_MEMORY : FESCUE_CANNOT_WRITE;
-    return FAIL(ledger->context, status, "%s: the ledger cannot be used: %s", ledger->path,
-                sqlite3_errmsg(ledger->database));
+    int error = code == SQLITE_IOERR || code == SQLITE_CANTOPEN ? sqlite3_system_errno(ledger->database) : 0;
+    return FAIL(ledger->context, status, "%s: the ledger cannot be used: %s%s%s", ledger->path,
+                sqlite3_errmsg(ledger->database), error != 0 ? ": " : "", error != 0 ? strerror(error) : "");
 }
 
 static int argument_bind(sqlite3_stmt *statement, int place, char kind, va_list *arguments)

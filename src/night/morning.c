@@ -1,7 +1,8 @@
 /* SPDX-License-Identifier: MIT
  *
- * The morning summary as plain text, for a mail: how the night went, what to look at first, a line a job. And the files
- * of the morning, which appear together: summary.txt, index.html, night.json, in the folder STEM-morning.
+ * The morning summary as plain text, for a mail, in at most 80 columns unless a single word is longer: how the night
+ * went, what to look at first, a line a job. And the files of the morning, which appear together: summary.txt,
+ * index.html, night.json, in the folder STEM-morning.
  */
 #include "night/night_internal.h"
 
@@ -9,8 +10,44 @@
 #include <math.h>
 #include <stdio.h>
 #include <string.h>
+#include <unistd.h>
 
-enum { NAME_WIDTH = 28 };
+enum { NAME_WIDTH = 22, WIDTH = 78, INDENT = 6 };
+
+/* A sentence, indented, in lines that are cut between words. */
+static void sentence_add(struct text *text, const char *sentence)
+{
+    size_t column = 0;
+    for (const char *word = sentence + strspn(sentence, " "); *word != '\0'; word += strspn(word, " ")) {
+        size_t length = strcspn(word, " ");
+        if (column > 0 && column + 1 + length > WIDTH) {
+            text_add(text, "\n");
+            column = 0;
+        }
+        text_add(text, "%*s%.*s", column > 0 ? 1 : INDENT, "", (int)length, word);
+        column += (column > 0 ? 1 : INDENT) + length;
+        word += length;
+    }
+    if (column > 0)
+        text_add(text, "\n");
+}
+
+/* Sections whose wildcards match no file: no mistake, and yet to be known. */
+static void empty_sections_add(const struct plan *plan, struct text *text)
+{
+    for (size_t k = 0; k < plan->section_count; k++) {
+        const struct plan_section *section = &plan->sections[k];
+        const char *input = "";
+        bool has_job = strcmp(section->name, "night") == 0;
+        for (size_t i = 0; i < plan->count && !has_job; i++)
+            has_job = plan->jobs[i].section == k;
+        for (size_t i = 0; i < section->count; i++)
+            if (strcmp(section->entries[i].key, "input") == 0)
+                input = section->entries[i].value;
+        if (!has_job)
+            text_add(text, "  [%s]: no file matches %s\n", section->name, input);
+    }
+}
 
 fescue_status night_verdict(const struct fescue_night *night)
 {
@@ -47,10 +84,13 @@ static void counts_line(const struct fescue_night *night, struct text *text)
         between = ",";
     }
     text_add(text, "\nfrom %s to %s\n", night->began, night->ended);
+    empty_sections_add(&night->plan, text);
     if (night_verdict(night) == FESCUE_STOPPED)
         text_add(text, "The same command goes on where this night ended.\n");
-    if (night->trouble[0] != '\0')
-        text_add(text, "WARNING: not all could be written down: %s\n", night->trouble);
+    if (night->trouble[0] != '\0') {
+        text_add(text, "WARNING: not all could be written down:\n");
+        sentence_add(text, night->trouble);
+    }
 }
 
 static bool is_worth_a_look(const struct task *task)
@@ -64,7 +104,10 @@ static void look_lines(const struct fescue_night *night, struct text *text)
     bool is_first = true;
     for (size_t k = 0; k < night->plan.count; k++) {
         const struct task *task = &night->tasks[k];
-        const char *const sentences[] = {task->message, task->flags, task->warning, task->shrunk,
+        char unusual[SENTENCE_SIZE + 16] = "";
+        if (task->flags[0] != '\0')
+            snprintf(unusual, sizeof unusual, "unusual: %s", task->flags);
+        const char *const sentences[] = {task->message, unusual, task->warning, task->shrunk,
                                          task->outcome.is_cut ? "the time limit ended it before it was done" : ""};
         if (!is_worth_a_look(task))
             continue;
@@ -73,10 +116,12 @@ static void look_lines(const struct fescue_night *night, struct text *text)
         is_first = false;
         text_add(text, "  %s (%s)\n", task->job->name, state_words[task->state]);
         for (size_t i = 0; i < sizeof sentences / sizeof *sentences; i++)
-            if (sentences[i][0] != '\0')
-                text_add(text, "      %s%s\n", i == 1 ? "unusual: " : "", sentences[i]);
+            sentence_add(text, sentences[i]);
     }
 }
+
+/* The longest: a time of "119 min 59 s", a share of "0.0123 %". */
+#define LINE "%-*s %-9s %9s %4s %8s %12s %8s\n"
 
 static void job_line(const struct task *task, struct text *text)
 {
@@ -93,8 +138,11 @@ static void job_line(const struct task *task, struct text *text)
         seconds_words(task->seconds, time);
         bytes_words((double)task->memory, memory);
     }
-    text_add(text, "%-*s  %-9s  %9s  %4s  %8s  %12s  %8s\n", NAME_WIDTH, task->job->name, state_words[task->state],
-             error, rank, missing, time, memory);
+    bool is_long = strlen(task->job->name) > NAME_WIDTH;
+    if (is_long)
+        text_add(text, "%s\n", task->job->name);
+    text_add(text, LINE, NAME_WIDTH, is_long ? "" : task->job->name, state_words[task->state], error, rank, missing,
+             time, memory);
 }
 
 fescue_status morning_text(const struct fescue_night *night, char **out)
@@ -102,8 +150,10 @@ fescue_status morning_text(const struct fescue_night *night, char **out)
     struct text text = {.context = night->context};
     counts_line(night, &text);
     look_lines(night, &text);
-    text_add(&text, "\n%-*s  %-9s  %9s  %4s  %8s  %12s  %8s\n", NAME_WIDTH, "job", "state", "error", "rank", "missing",
-             "time", "memory");
+    if (night->plan.count > 0) {
+        text_add(&text, "\n");
+        text_add(&text, LINE, NAME_WIDTH, "job", "state", "error", "rank", "missing", "time", "memory");
+    }
     for (size_t k = 0; k < night->plan.count; k++)
         job_line(&night->tasks[k], &text);
     text_add(&text, "\nThe error is the RMSE on cells that were hidden.\n");
@@ -129,12 +179,15 @@ fescue_status plan_text(const struct plan *plan, char **out)
     for (size_t k = 0; k < plan->count; k++) {
         const struct plan_job *job = &plan->jobs[k];
         text_add(&text, "  %-*s  %s -> %s", NAME_WIDTH, job->name, job->input, job->output);
+        if (access(job->input, R_OK) != 0)
+            text_add(&text, " (the input cannot be read now)");
         when_add(&text, ", deadline", &job->deadline);
         for (size_t i = 0; i < plan->count; i++)
             if (job->after[i])
                 text_add(&text, ", after %s", plan->jobs[i].name);
         text_add(&text, "\n");
     }
+    empty_sections_add(plan, &text);
     return text_finish(&text, out);
 }
 

@@ -96,13 +96,16 @@ static fescue_status key_unknown(const struct plan *plan, const struct plan_sect
 /* ---- values --------------------------------------------------------------------------------------------------------
  */
 
-/* Says again, with file and line, what fescue_options_set said of "--key". */
+/* Says again, with file, line and the key as it stands there, what fescue_options_set said of "--key". */
 static fescue_status option_complain(const struct plan *plan, const struct plan_entry *entry)
 {
     char said[SENTENCE_SIZE];
     snprintf(said, sizeof said, "%s", fescue_failure_text(plan->context));
     fescue_failure_clear(plan->context);
-    return plan_complain(plan, entry->line, "%s", strncmp(said, "--", 2) == 0 ? said + 2 : said);
+    const char *colon = strchr(said, ':');
+    if (strncmp(said, "--", 2) != 0 || colon == NULL)
+        return plan_complain(plan, entry->line, "%s", said);
+    return plan_complain(plan, entry->line, "%s%s", entry->key, colon);
 }
 
 static fescue_status fill_set(const struct plan *plan, const struct plan_entry *entry, const char *name,
@@ -193,6 +196,24 @@ static fescue_status path_from_plan(const struct plan *plan, const char *path, c
     return text_join(plan->context, out, path[0] == '/' ? "" : plan->folder, path, NULL);
 }
 
+/* One spelling for one place: no "./", no slash twice or at the end. */
+static void path_tidy(char *path)
+{
+    char *to = path;
+    for (const char *from = path; *from != '\0';) {
+        bool begins = to == path || to[-1] == '/';
+        if (begins && from[0] == '.' && from[1] == '/' && from[2] != '\0')
+            from += 2;
+        else if (*from == '/' && to > path && to[-1] == '/')
+            from++;
+        else
+            *to++ = *from++;
+    }
+    while (to > path + 1 && to[-1] == '/')
+        to--;
+    *to = '\0';
+}
+
 /* `pattern` with {name} replaced; without {name}, behind a slash when there are several. */
 static fescue_status output_name(const struct plan *plan, const char *pattern, const char *name, bool is_one_of_many,
                                  char **out)
@@ -211,8 +232,7 @@ static fescue_status output_name(const struct plan *plan, const char *pattern, c
     if (is_one_of_many && rest == pattern)
         text_add(&text, "/%s", name);
     TRY(text_finish(&text, &path));
-    for (size_t length = strlen(path); length > 1 && path[length - 1] == '/'; length--)
-        path[length - 1] = '\0';
+    path_tidy(path);
     TRY(path_from_plan(plan, path, out));
 done:
     GIVE(context, &path);

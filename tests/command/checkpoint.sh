@@ -19,22 +19,26 @@ same() { # A B
     test "$(ls -A "$1")" = "$(ls -A "$2")"
 }
 
-# Runs, stops after a while that grows, runs again until it is done; $stops: how often it was stopped, $kept: how often
-# a checkpoint was there then.
+# Runs, stops after a while that grows, or, every other time, once a checkpoint was written, and runs again until it is
+# done; $stops: how often it was stopped, $kept: how often a checkpoint was there then.
 persist() { # PLACE ARGUMENT...
     place_=$1
     shift
     stops=0 kept=0
     while [ "$stops" -lt 60 ]; do
         "$PYTHON" - "$stops" "$FESCUE" fill -q "$@" -o "$place_" 2>err <<'PYTHON'
-import signal, subprocess, sys, time
-n = int(sys.argv[1])
-run = subprocess.Popen(sys.argv[2:] + ["--threads", str(1 + n % 3)])
-try:
-    status = run.wait(timeout=0.15 * 1.5 ** n)
-except subprocess.TimeoutExpired:
+import os, signal, subprocess, sys, time
+n, command = int(sys.argv[1]), sys.argv[2:]
+checkpoint = command[command.index("-o") + 1] + "/.fescue-checkpoint"
+def written():
+    return os.stat(checkpoint).st_mtime_ns if os.path.exists(checkpoint) else 0
+before, began = written(), time.monotonic()
+run = subprocess.Popen(command + ["--checkpoint-every", "0.02", "--threads", str(1 + n % 3)])
+while run.poll() is None and not (written() not in (0, before) if n % 2 else time.monotonic() - began > 0.15 * 2**n):
+    time.sleep(0.002)
+if run.returncode is None:
     run.send_signal((signal.SIGTERM, signal.SIGINT, signal.SIGHUP)[n % 3])
-    status = run.wait()
+status = run.wait()
 sys.exit(76 if status < 0 else status) # 76: before it listened to signals
 PYTHON
         got=$?

@@ -89,7 +89,7 @@ try 0 night --again drift.ini
 denied "the same again is not unusual" grep -q unusual err
 cp in/t3.mtx in/drift.mtx
 try 0 night drift.ini
-check "another subspace is" grep -q 'unusual: .*angle to the last subspace [0-9.]*, usually' err
+check "another subspace is" told 'unusual: .*angle to the last subspace [0-9.]*, usually'
 check "the ledger has the angles" "$PYTHON" -c 'import sqlite3
 angles = [r[0] for r in sqlite3.connect("drift-ledger.db").execute("SELECT angle FROM attempt ORDER BY number")]
 assert angles[0] is None and max(angles[1:7]) < 1e-6 and angles[7] > 0.2, angles'
@@ -119,10 +119,11 @@ PLAN
 printf 'a,b,c,d\nx,1,<script>,3\n' >in/bad.csv
 try 1 night mixed.ini
 check "one is done" grep -q '5 jobs: 1 done, 3 failed, 1 skipped' err
-check "a table that is not there is named" grep -q 'in/nothing.csv: cannot be opened' err
-check "what comes after it is skipped" grep -q 'not begun: it comes after gone, which failed' err
+check "a table that is not there is named" told 'in/nothing.csv: cannot be opened'
+check "what comes after it is skipped" told 'not begun: it comes after gone, which failed'
 check "a bad cell is told" grep -q 'in/bad.csv: line 2' err
-check "too little memory is told" grep -q 'would pass the memory limit of 100 kB' err
+check "too little memory is told" told 'would pass the memory limit of 100 kB'
+check "the summary fits a mail" test "$(awk 'length > w { w = length } END { print w }' mixed-morning/summary.txt)" -le 80
 check "nothing of a page is taken from a table" test "$(grep -c '<script>\|<i>' mixed-morning/index.html)" -eq 0
 check "the words are there all the same" grep -q '&lt;script&gt;' mixed-morning/index.html
 check "night.json says why" "$PYTHON" -c 'import json
@@ -153,7 +154,7 @@ input = large/table.mtx
 deadline = 1
 PLAN
 try 0 night dead.ini
-check "a deadline ends the fits" grep -q 'the time limit ended it before it was done' err
+check "a deadline ends the fits" told 'the time limit ended it before it was done'
 check "with a result" test -e large/table-filled/run.json
 
 cat >haste.ini <<'PLAN'
@@ -164,8 +165,19 @@ PLAN
 try 0 night haste.ini
 echo 'deadline = 0.01' >>haste.ini
 try 0 night --again haste.ini
-check "when time is short cross-validation shrinks" grep -q '[0-9] folds of cross-validation, for want of time' err
+check "when time is short cross-validation shrinks" told '[0-9] folds of cross-validation, for want of time'
 check "and the record says so" grep -q '"folds": "[02]"' in/t1-filled/run.json
+check "as do ledger and night.json" "$PYTHON" -c 'import json, sqlite3
+told = sqlite3.connect("haste-ledger.db").execute("SELECT shrunk FROM attempt ORDER BY number DESC").fetchone()[0]
+job = json.load(open("haste-morning/night.json"))["jobs"][0]
+assert told.endswith("for want of time") and job["shrunk"] == told, (told, job)'
+
+# ---- what has no file today, and places of two spellings --------------------------------------------------------------
+printf '[some]\ninput = in/*.nothing\n[one]\ninput = in/t1.mtx\noutput = ./res//t1/\n[gone]\ninput = in/gone.mtx\n' >odd.ini
+try 0 night --list odd.ini
+check "wildcards without a file are told" grep -qF '[some]: no file matches in/*.nothing' out
+check "a place has one spelling" grep -qF 'in/t1.mtx -> res/t1' out
+check "an input that is not there is told" grep -q 'gone.* (the input cannot be read now)' out
 
 # ---- the sample plan --------------------------------------------------------------------------------------------------
 ln -s "$root/datasets-synthetic" datasets-synthetic

@@ -96,6 +96,8 @@ static void what_is_wrong_is_told(void **state)
         {"[a\ninput = x\n", "line 1: a section without its \"]\""},
         {"[a<b]\ninput = x\n", "line 1: found the section [a<b]"},
         {"[a]\ninput = x\noutput = o\n[b]\ninput = y\noutput = o\n", "line 6: b has the output of a"},
+        {"[a]\ninput = x\noutput = o/p\n[b]\ninput = y\noutput = ./o//./p/\n", "line 6: b has the output of a"},
+        {"[a]\ninput = x\nmemory = lots\n", "line 3: memory: found \"lots\", expected a size"},
         {"[a]\ninput = x/t.csv\noutput = x\n", "line 3: the results of a would lie among its own input"},
         {"[a]\ninput = x\nafter = b\n", "line 3: after: there is no job [b]"},
         {"[a]\ninput = x\nafter = b\n[b]\ninput = y\nafter = a\n", "line 3: a waits for itself"},
