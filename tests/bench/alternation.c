@@ -1,8 +1,14 @@
 /* SPDX-License-Identifier: MIT
  *
  * Against a ridge alternation in NumPy (alternation.py) on the same sown table, rank 16, one thread each: a sweep of
- * normal equations and solves over both sides, and the time until the error on hidden cells is within one in a hundred
- * of where the alternation ends.
+ * normal equations and solves over both sides, in double precision both, and the time until the error on hidden cells
+ * is within one in a hundred of where the alternation ends.
+ *
+ * The clock of all begins with the table in memory, sorted both ways; the alternation's grouping of its cells is not
+ * counted, our start is. Solvers get the rank and the ridge; values are held in single precision, which costs nothing
+ * next to noise of one half. What is asked of everything by itself (auto) gets the rank alone; its time is that of the
+ * whole job with error and intervals, and its shares are those of what the alternation took to come as near, and of
+ * all that it took to end there.
  */
 #include "rating.h"
 
@@ -17,6 +23,7 @@
 enum { SWEEPS = 40 };
 /* Noise variance over the factors' variance of 1/4 each, as the table is sown. */
 #define RIDGE "1.0"
+#define RANK "16" /* RATING_RANK */
 
 static void column_write(const char *prefix, const char *name, const void *data, size_t size, uint64_t count)
 {
@@ -114,19 +121,23 @@ static double sweep_seconds(const struct rating *rating)
 /* ---- a fit --------------------------------------------------------------------------------------------------------
  */
 
-/* Processor seconds of the shortest fit that gets there, from the spectral start on; 0 when none does. */
-static double seconds_until(const struct rating *rating, const char *solver, double error, struct fit_outcome *out)
+/* Processor seconds of the shortest fit that gets there, from the start on; 0 when none of up to `most` seconds does.
+ */
+static double seconds_until(const struct rating *rating, const char *solver, double error, double most,
+                            struct fit_outcome *out)
 {
     static const uint64_t lengths[] = {1, 2, 3, 4, 6, 8, 11, 15, 20, 30, 45};
     for (size_t k = 0; k < sizeof lengths / sizeof *lengths; k++) {
         rating_fit(rating, solver, RATING_RANK, 1, lengths[k], out);
         if (out->rmse <= error)
             return out->cpu;
+        if (out->cpu > most)
+            break;
     }
     return 0;
 }
 
-/* The whole job, everything chosen by itself but the rank it may try, on one thread; the reading is not counted. */
+/* The whole job, everything chosen by itself but the rank, on one thread; the reading is not counted. */
 static void auto_run(const struct rating *rating, struct fit_outcome *out)
 {
     const struct half *half = &rating->cells.by_row;
@@ -140,6 +151,7 @@ static void auto_run(const struct rating *rating, struct fit_outcome *out)
         exit(1);
     fescue_options_standard(&options);
     bench_check(context, fescue_options_set(context, &options, "threads", "1"));
+    bench_check(context, fescue_options_set(context, &options, "rank", RANK));
     for (uint32_t i = 0; i < half->lines; i++)
         for (uint64_t k = half->start[i]; k < half->start[i + 1]; k++)
             row[k] = i;
@@ -163,11 +175,13 @@ static void auto_run(const struct rating *rating, struct fit_outcome *out)
 static void reached_report(struct bench *bench, const struct rating *rating, const char *solver, double seconds,
                            const struct fit_outcome *outcome, const json_t *said)
 {
-    double spent = json_real_value(json_object_get(said, "seconds"));
+    double near = json_real_value(json_object_get(said, "near")),
+           all = json_real_value(json_object_get(said, "seconds"));
     json_t *figure = json_pack(
-        "{s:s, s:s, s:I, s:i, s:f, s:f, s:f, s:f, s:f, s:I}", "what", "time to the alternation's error", "solver",
-        solver, "cells", (json_int_t)rating->cells.count, "threads", 1, "seconds", seconds, "alternation's", spent,
-        "share of the alternation's", seconds / spent, "error on hidden cells", outcome->rmse, "alternation's error",
+        "{s:s, s:s, s:I, s:i, s:f, s:f, s:f, s:f, s:f, s:f, s:f, s:I}", "what", "time to the alternation's error",
+        "solver", solver, "cells", (json_int_t)rating->cells.count, "threads", 1, "seconds", seconds, "alternation's",
+        near, "share of the alternation's", seconds / near, "alternation's to its end", all, "share of that",
+        seconds / all, "error on hidden cells", outcome->rmse, "alternation's error",
         json_real_value(json_object_get(said, "error")), "iterations", (json_int_t)outcome->iterations);
     figure_add(bench, figure);
 }
@@ -187,16 +201,19 @@ void alternation_measure(struct bench *bench, uint64_t cells)
     figure_add(bench, json_pack("{s:s, s:I, s:i, s:i, s:f, s:f, s:f}", "what", "sweep of normal equations, both sides",
                                 "cells", count, "rank", RATING_RANK, "threads", 1, "seconds", ours, "NumPy's", theirs,
                                 "share of NumPy's", ours / theirs));
-    for (size_t k = 0; said != NULL && solver_at(k) != NULL; k++) {
-        struct fit_outcome outcome;
-        double seconds = seconds_until(&rating, solver_name(solver_at(k)), 1.01 * error, &outcome);
-        if (seconds > 0) /* those that end elsewhere say nothing here */
-            reached_report(bench, &rating, solver_name(solver_at(k)), seconds, &outcome, said);
-    }
     if (said != NULL) {
         struct fit_outcome outcome;
         auto_run(&rating, &outcome);
         reached_report(bench, &rating, "auto, the whole job", outcome.cpu, &outcome, said);
+    }
+    rating_free(&rating);
+    rating_sow(cells, FESCUE_SINGLE, &rating);
+    for (size_t k = 0; said != NULL && solver_at(k) != NULL; k++) {
+        struct fit_outcome outcome;
+        double most = 2 * json_real_value(json_object_get(said, "seconds"));
+        double seconds = seconds_until(&rating, solver_name(solver_at(k)), 1.01 * error, most, &outcome);
+        if (seconds > 0) /* those that end elsewhere say nothing here */
+            reached_report(bench, &rating, solver_name(solver_at(k)), seconds, &outcome, said);
     }
     json_decref(said);
     rating_free(&rating);

@@ -6,8 +6,8 @@
  *     BENCH_LOOPS     of the loops, those whose names hold this, such as "gradient, rows"    [all]
  *     BENCH_RANKS     their ranks                             [5,8,11,16,32]
  *     BENCH_CELLS     cells of the tables that are fitted     [1e5]; such as 1e5,1e6,1e7
- *     BENCH_LARGE     1: also one of 1e8
- *     BENCH_PARTS     of limits, double, single (both: kernels), moments, fits, alternation   [all]
+ *     BENCH_LARGE     1: also one of 1e8, in fits and growth
+ *     BENCH_PARTS     of limits, double, single (both: kernels), moments, fits, alternation, growth   [all but growth]
  *     BENCH_SCRIPTS   where alternation.py is                 [tests/bench]
  *     BUILD           where bench.json and bench.png go       [build]
  */
@@ -52,8 +52,11 @@ int main(void)
             alternation_measure(&bench, cells);
         at = *end == ',' ? end + 1 : end;
     }
-    if (strcmp(setting("BENCH_LARGE", "0"), "1") == 0)
+    bool with_large = strcmp(setting("BENCH_LARGE", "0"), "1") == 0;
+    if (with_large && has_part("fits"))
         fits_measure(&bench, 100000000);
+    if (strstr(setting("BENCH_PARTS", "all"), "growth") != NULL)
+        growth_measure(&bench, with_large);
     figures_write(&bench);
     json_decref(bench.figures);
     return 0;

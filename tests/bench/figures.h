@@ -44,5 +44,6 @@ void kernels_measure(struct bench *bench, uint64_t cells, enum fescue_precision 
 void moments_measure(struct bench *bench, uint64_t cells);
 void fits_measure(struct bench *bench, uint64_t cells);
 void alternation_measure(struct bench *bench, uint64_t cells);
+void growth_measure(struct bench *bench, bool with_large);
 
 #endif
