@@ -14,6 +14,9 @@
 
 /* Components to begin with: what most tables have is fewer, and growth adds what is missing. */
 enum { START_RANK = 20, FINE_ROUNDS = 60, NOISE_ROUNDS = 40 };
+/* On tables with so many cells a few rounds, which leave what they have to settle far below the error, show whether
+   noise of every line's own is worth all of them. */
+enum { LARGE = 500000, TRIAL_ROUNDS = 5 };
 /* The estimates are settled when a round moves them by this share of the table's spread. */
 static const double settled = 1e-4;
 
@@ -135,7 +138,8 @@ struct more {
    place when it has less error. A fit that follows time or near columns has to have more error to be turned down: where
    nothing hangs together it learns so by itself, and few hidden cells show what it is worth in lines of which all are
    missing. */
-static fescue_status learn_more(struct chooser *chooser, const struct more *more, struct candidate *winner)
+static fescue_status learn_rounds(struct chooser *chooser, const struct more *more, uint64_t rounds,
+                                  struct candidate *winner, bool *is_better)
 {
     fescue_status status = FESCUE_OK;
     const struct cells *kept = chooser->kept;
@@ -147,7 +151,8 @@ static fescue_status learn_more(struct chooser *chooser, const struct more *more
     request.time = more->time;
     request.near = more->near;
     request.rank = winner->point.rank;
-    request.rounds = NOISE_ROUNDS;
+    request.rounds = rounds;
+    *is_better = false;
     if (winner->point.rank == 0 || chooser_is_late(chooser))
         return FESCUE_OK;
     TRY(candidate_copy(chooser, winner, &own));
@@ -159,13 +164,24 @@ static fescue_status learn_more(struct chooser *chooser, const struct more *more
     start.near = winner->near;
     TRY(evidence_fit(chooser->context, kept, &request, &start, &result));
     TRY(candidate_take(chooser, &result, request.noise, &own));
-    bool is_better = more->time != NULL || more->near != NULL ? !candidate_beats(chooser, winner, &own, 1)
-                                                              : candidate_beats(chooser, &own, winner, 1);
-    if (is_better)
+    *is_better = more->time != NULL || more->near != NULL ? !candidate_beats(chooser, winner, &own, 1)
+                                                          : candidate_beats(chooser, &own, winner, 1);
+    if (*is_better)
         candidate_swap(&own, winner);
 done:
     candidate_free(chooser, &own);
     evidence_result_free(chooser->context, &result);
+    return status;
+}
+
+static fescue_status learn_more(struct chooser *chooser, const struct more *more, struct candidate *winner)
+{
+    bool is_plain = more->time == NULL && more->near == NULL, is_better = true;
+    fescue_status status = FESCUE_OK;
+    if (is_plain && chooser->kept->count >= LARGE)
+        status = learn_rounds(chooser, more, TRIAL_ROUNDS, winner, &is_better);
+    if (status == FESCUE_OK && is_better)
+        status = learn_rounds(chooser, more, NOISE_ROUNDS, winner, &is_better);
     return status;
 }
 

@@ -50,6 +50,9 @@
 
 /* A pruned component: standard deviation in the table over that of the noise. */
 #define COMPONENT_DEAD 1e-3
+/* Rounds that move the estimates by less than this share of the noise's standard deviation are of no use: with a
+   hundred more of them the squared error would change by a hundredth of the noise at most. */
+#define NOISE_SETTLED 1e-3
 static void side_reserve(struct arena *arena, const struct half *half, size_t rank)
 {
     size_t lines = half->lines, d = rank + 2;
@@ -288,8 +291,8 @@ static bool is_over(struct evidence *evidence, const struct evidence_request *re
     bool all_on = evidence->near == NULL || evidence->near->is_on;
     if (progress_tell(evidence->context, "evidence", -1) != FESCUE_OK)
         *stop = STOP_CANCELLED;
-    else if (all_on &&
-             (change <= request->change || (evidence->time != NULL && evidence_time_settled(evidence, change))))
+    else if (all_on && (change <= fmax(request->change, NOISE_SETTLED * sqrt(evidence->noise)) ||
+                        (evidence->time != NULL && evidence_time_settled(evidence, change))))
         *stop = STOP_CHANGE;
     else if (request->deadline > 0 && clock_wall() > request->deadline)
         *stop = STOP_TIME;
