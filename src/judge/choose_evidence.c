@@ -17,6 +17,8 @@ enum { START_RANK = 20, FINE_ROUNDS = 60, NOISE_ROUNDS = 40 };
 /* On tables with so many cells a few rounds, which leave what they have to settle far below the error, show whether
    noise of every line's own is worth all of them. */
 enum { LARGE = 500000, TRIAL_ROUNDS = 5 };
+/* And rounds enough to tell kinds of offsets apart, on tables where a round is felt. */
+enum { FELT = 50000, COMPARE_ROUNDS = 30 };
 /* The estimates are settled when a round moves them by this share of the table's spread. */
 static const double settled = 1e-4;
 
@@ -108,6 +110,8 @@ done:
 static fescue_status learn(struct chooser *chooser, const struct candidate *alone, struct candidate *candidate)
 {
     struct evidence_request request = evidence_request_of(chooser, alone);
+    if (chooser->kept->count >= FELT)
+        request.rounds = COMPARE_ROUNDS;
     return learn_as(chooser, &request, alone, candidate);
 }
 

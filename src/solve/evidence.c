@@ -50,9 +50,11 @@
 
 /* A pruned component: standard deviation in the table over that of the noise. */
 #define COMPONENT_DEAD 1e-3
-/* Rounds that move the estimates by less than this share of the noise's standard deviation are of no use: with a
-   hundred more of them the squared error would change by a hundredth of the noise at most. */
-#define NOISE_SETTLED 1e-3
+/* Rounds that move the estimates by less than this share of the noise's standard deviation are of no use: where each
+   moves them by a twentieth less than the one before, all that are left would change the squared error by some
+   thousandths. */
+#define NOISE_SETTLED 2e-3
+
 static void side_reserve(struct arena *arena, const struct half *half, size_t rank)
 {
     size_t lines = half->lines, d = rank + 2;

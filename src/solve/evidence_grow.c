@@ -29,6 +29,8 @@ enum { ALIGN_STEPS = 10 };
 /* Rounds between two growths, and the tolerance at which they end earlier. */
 #define GROW_ROUNDS 10
 #define GROW_CHANGE 1e-3
+/* Rounds of equal noise before others. */
+enum { BEFORE_ROUNDS = 15 };
 /* From so many cells on a round costs what four alternations do, and the start is brought near by some of those: with
    the ridge that shrinks an evenly seen table by a twentieth. */
 #define LARGE 500000
@@ -157,7 +159,8 @@ done:
     return status;
 }
 
-/* Rounds to the final tolerance, all noise equal, without time and near columns. */
+/* Rounds to the final tolerance, all noise equal, without time and near columns; a few when rounds with other noise
+   follow, which settle the components on their own. */
 static fescue_status components_settle(fescue_context *context, const struct cells *cells,
                                        const struct evidence_request *request, struct evidence_result *out)
 {
@@ -165,6 +168,8 @@ static fescue_status components_settle(fescue_context *context, const struct cel
     step.noise = EVIDENCE_NOISE_EQUAL;
     step.time = NULL;
     step.near = NULL;
+    if (request->noise != EVIDENCE_NOISE_EQUAL && step.rounds > BEFORE_ROUNDS)
+        step.rounds = BEFORE_ROUNDS;
     return refit(context, cells, &step, out);
 }
 
@@ -183,7 +188,8 @@ fescue_status evidence_learn(fescue_context *context, const struct cells *cells,
         request->time == NULL && !is_settled; /* what follows lines in time settles the components on its own */
     if (settles)
         TRY(components_settle(context, cells, request, out));
-    if (settles && evidence_living(out) < alive && is_scarce(cells, alive) && !is_late(request)) {
+    bool is_last = request->noise == EVIDENCE_NOISE_EQUAL;
+    if (settles && is_last && evidence_living(out) < alive && is_scarce(cells, alive) && !is_late(request)) {
         TRY(components_grow(context, cells, request, out));
         TRY(components_settle(context, cells, request, out));
     }
