@@ -21,6 +21,9 @@ enum { LARGE = 500000, TRIAL_ROUNDS = 5 };
 enum { FELT = 50000, COMPARE_ROUNDS = 30 };
 /* The estimates are settled when a round moves them by this share of the table's spread. */
 static const double settled = 1e-4;
+/* Or by this share of the noise's standard deviation: where each round moves them by a twentieth less than the one
+   before, all that are left would change the squared error by some thousandths. */
+static const double settled_noise = 2e-3;
 
 /* What auto affords: cells x (rank + 3)^2 multiplications a round, and the bytes of the lines' moments. */
 static const double affordable_work = 1e10, affordable_bytes = 5e8;
@@ -60,6 +63,7 @@ struct evidence_request evidence_request_of(const struct chooser *chooser, const
                                      .seed = (uint64_t)chooser->options->seed,
                                      .rounds = FINE_ROUNDS,
                                      .change = settled,
+                                     .change_noise = settled_noise,
                                      .time = candidate->time.along != TIME_NONE ? chooser->time : NULL,
                                      .near = candidate->near.is_there ? chooser->near : NULL,
                                      .deadline = chooser->deadline};

@@ -50,10 +50,6 @@
 
 /* A pruned component: standard deviation in the table over that of the noise. */
 #define COMPONENT_DEAD 1e-3
-/* Rounds that move the estimates by less than this share of the noise's standard deviation are of no use: where each
-   moves them by a twentieth less than the one before, all that are left would change the squared error by some
-   thousandths. */
-#define NOISE_SETTLED 2e-3
 
 static void side_reserve(struct arena *arena, const struct half *half, size_t rank)
 {
@@ -293,7 +289,7 @@ static bool is_over(struct evidence *evidence, const struct evidence_request *re
     bool all_on = evidence->near == NULL || evidence->near->is_on;
     if (progress_tell(evidence->context, "evidence", -1) != FESCUE_OK)
         *stop = STOP_CANCELLED;
-    else if (all_on && (change <= fmax(request->change, NOISE_SETTLED * sqrt(evidence->noise)) ||
+    else if (all_on && (change <= fmax(request->change, request->change_noise * sqrt(evidence->noise)) ||
                         (evidence->time != NULL && evidence_time_settled(evidence, change))))
         *stop = STOP_CHANGE;
     else if (request->deadline > 0 && clock_wall() > request->deadline)

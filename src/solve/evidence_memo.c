@@ -57,7 +57,7 @@ uint64_t evidence_digest(const struct cells *cells, const struct evidence_reques
                                request->rounds,
                                cells->count,
                                start->low_rank.rank};
-    const double reals[] = {request->noise_start, request->change, start->offsets.mean};
+    const double reals[] = {request->noise_start, request->change, request->change_noise, start->offsets.mean};
     uint64_t digest = memo_digest(0, counts, sizeof counts);
     digest = memo_digest(digest, reals, sizeof reals);
     digest = memo_digest(digest, start->offsets.row, start->rows * sizeof(double));

@@ -92,8 +92,9 @@ struct evidence_request {
     uint64_t seed, rounds;
     const struct time_axis *time; /* borrowed; NULL or along none: lines have no order */
     const struct nearness *near;  /* borrowed; NULL: nothing is known of columns being near one another */
-    double change;   /* ends when the rms change of the estimates, over the table's scale, falls below this */
-    double deadline; /* clock_wall() second, or 0 for none */
+    double change;       /* ends when the rms change of the estimates, over the table's scale, falls below this */
+    double change_noise; /* or over the noise's standard deviation below this; 0: never */
+    double deadline;     /* clock_wall() second, or 0 for none */
 };
 struct evidence_result { /* evidence_result_free */
     struct model model;  /* posterior means; spectrum descending, pruned components near 0 */
