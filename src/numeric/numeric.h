@@ -94,10 +94,15 @@ struct sweep {
     const struct batch_kernel *batch;
     double *partial, *room;
     float *pool;
+    struct sweep_slabs *slabs; /* of sweep_arrange, or NULL */
     size_t pool_size, workers; /* the team may not grow beyond what it was at sweep_create */
 };
 fescue_status sweep_create(fescue_context *context, const struct cells *cells, size_t rank_most, struct sweep *sweep);
 void sweep_destroy(struct sweep *sweep);
+/* For many sweeps over a half whose lines are long and read right rows from far away: keeps its cells once more, in an
+   order in which they are near. Sweeps with the half's own values that keep no residual then use it. Does nothing where
+   it would not pay. The half stays as it is for as long as the sweep is used. Once a sweep. */
+fescue_status sweep_arrange(struct sweep *sweep, const struct half *half);
 
 /* r_k = left_i . right_j - x_k over all cells; *square = sum r_k^2. gradient (lines x rank, or data NULL) = R right.
    residual (a value array in the half's order and the store's precision, or NULL) receives r. */

@@ -84,6 +84,7 @@ void sweep_destroy(struct sweep *sweep)
 {
     if (sweep == NULL)
         return;
+    sweep_slabs_free(sweep);
     arena_close(sweep->context, &sweep->arena);
     *sweep = (struct sweep){0};
 }
@@ -172,7 +173,7 @@ void sweep_residual(struct sweep *sweep, const struct half *half, struct matrix 
     job.right = sweep_rows_of(sweep, right, job.width, &room);
     job.product = gradient;
     job.residual = residual;
-    sweep_run(&job, sweep->kernels->residual, sums);
+    sweep_slabs_run(&job, sweep->kernels->residual, sums);
     *square = sums[0];
 }
 
@@ -185,7 +186,7 @@ void sweep_errors(struct sweep *sweep, const struct half *half, struct matrix le
     assert(left.rows == half->lines && left.columns == right.columns);
     job.left = sweep_rows_of(sweep, left, job.width, &room);
     job.right = sweep_rows_of(sweep, right, job.width, &room);
-    sweep_run(&job, sweep->kernels->residual, sums);
+    sweep_slabs_run(&job, sweep->kernels->residual, sums);
     *square = sums[0];
     *absolute = sums[1];
 }
@@ -200,7 +201,7 @@ void sweep_multiply(struct sweep *sweep, const struct half *half, const void *va
     job.right = sweep_rows_of(sweep, right, job.width, &room);
     job.values = values;
     job.product = product;
-    sweep_run(&job, sweep->kernels->multiply, sums);
+    sweep_slabs_run(&job, sweep->kernels->multiply, sums);
 }
 
 void sweep_tangent(struct sweep *sweep, const struct half *half, struct matrix a, struct matrix right,

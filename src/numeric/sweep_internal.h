@@ -31,6 +31,7 @@ struct sweep_job {
     struct matrix product; /* gradient, product or weights; data may be NULL */
     const double *ridge;
     double *factors;
+    bool more; /* residual and multiply add to what stands in product */
 };
 
 enum { SWEEP_SUMS = 2 };
@@ -46,6 +47,20 @@ extern const struct sweep_kernel sweep_avx2_double, sweep_avx2_single, sweep_avx
 
 /* Runs one kernel over all blocks and adds up its sums. */
 void sweep_run(struct sweep_job *job, sweep_block *kernel, double sums[SWEEP_SUMS]);
+
+/* A half's cells in the order of slabs (sweep_slabs.c). */
+struct sweep_slabs {
+    const uint64_t *of; /* start and values of the half */
+    const void *of_value;
+    size_t count;
+    struct half *half; /* one a slab */
+    uint64_t *start;   /* count x lines + 1: of a slab, its lines and the beginning of the next slab */
+    uint32_t *across;
+    void *value;
+};
+/* sweep_run over the slabs of the job's half, where it has been arranged and nothing is asked in its own order. */
+void sweep_slabs_run(struct sweep_job *job, sweep_block *kernel, double sums[SWEEP_SUMS]);
+void sweep_slabs_free(struct sweep *sweep);
 
 /* Makes `matrix` what a kernel sees: itself, or its copy in single precision at `*room` of the sweep's pool, which is
    moved on. Zeros stand behind the columns in a copy; in double they are the caller's duty. */

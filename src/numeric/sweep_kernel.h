@@ -223,10 +223,13 @@ INLINE void group_gather(const struct group *group, wide *g, const size_t regist
     }
 }
 
-INLINE void sums_clear(wide *g, const size_t registers)
+/* Zeros, or what earlier slabs have come to. */
+INLINE void product_begin(const struct sweep_job *job, uint32_t line, wide *g, const size_t registers)
 {
+    const double *row = job->product.data + line * job->product.stride;
+    size_t width = job->more ? factor_stride(job->rank) : 0;
     for (size_t v = 0; v < registers * WIDES; v++)
-        g[v] = (wide){0};
+        g[v] = v * WIDE_LANES < width ? *(const wide *)(row + v * WIDE_LANES) : (wide){0};
 }
 
 /* Single rows may be wider than the double ones: what lies behind is zero, and not ours to write. */
@@ -371,7 +374,8 @@ INLINE void residual_lines(const struct sweep_job *job, size_t block, double *ou
         vec l[MOST_REGISTERS];
         wide g[MOST_REGISTERS * WIDES];
         row_load(&job->left, line, l, registers);
-        sums_clear(g, registers);
+        if (gradient)
+            product_begin(job, line, g, registers);
         residual_line(&span, span.start[line], span.start[line + 1], l, gradient ? g : NULL, square,
                       gradient ? NULL : absolute, registers);
         if (gradient)
@@ -411,7 +415,7 @@ INLINE void multiply_lines(const struct sweep_job *job, size_t block, const size
     struct span span = span_of(job, block, stride);
     for (uint32_t line = span.line; line < span.last; line++) {
         wide g[MOST_REGISTERS * WIDES];
-        sums_clear(g, registers);
+        product_begin(job, line, g, registers);
         uint64_t k = span.start[line], end = span.start[line + 1];
         for (; k + GROUP <= end; k += GROUP) {
             span_prefetch(&span, k, false, registers);

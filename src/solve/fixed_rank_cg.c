@@ -146,6 +146,7 @@ static fescue_status cg_create(struct field *field, const struct low_rank *point
         return status;
     *state = cg;
     cg->field = field;
+    TRY(sweep_arrange(&field->sweep, field_columns(field)));
     TRY(low_rank_copy(context, point, &cg->trial));
     TRY(low_rank_create(context, point->rows, point->columns, point->rank, &cg->point));
     TRY(values_create(field, &cg->residual));

@@ -161,6 +161,7 @@ static void rank_report(struct stand *stand, bool two)
     for (stand->threads = 1; stand->threads <= (two ? 2 : 1); stand->threads++) {
         bench_check(context, team_resize(context, stand->threads));
         bench_check(context, sweep_create(context, &stand->rating.cells, stand->rank, &stand->sweep));
+        bench_check(context, sweep_arrange(&stand->sweep, &stand->rating.cells.by_column));
         for (size_t k = 0; k < COUNT; k++)
             if (only == NULL || strstr(kernels[k].what, only) != NULL)
                 kernel_report(stand, &kernels[k], &single[k]);

@@ -330,6 +330,130 @@ static void workers_leave_no_trace(void **state)
     unsetenv("FESCUE_KERNEL");
 }
 
+/* ---- slabs --------------------------------------------------------------------------------------------------------
+ */
+
+/* 60 000 x 40: three slabs, the last one shorter; some columns end in the first, and one is empty. */
+static void long_table(fescue_context *context, enum fescue_precision precision, struct cells *cells)
+{
+    struct triplet_list list = {.precision = precision};
+    struct random_stream stream = random_open(7, RANDOM_TEST, 5);
+    for (uint32_t i = 0; i < 60000; i++)
+        for (uint32_t j = 0; j < 40; j++)
+            if (j != 11 && (j != 12 || i < 20000) && random_uniform(&stream) < (j == 13 ? 0.05 : 0.005))
+                assert_status(context, triplets_append(context, &list, i, j, random_normal(&stream)), FESCUE_OK);
+    assert_status(context, cells_build(context, 60000, 40, &list, cells), FESCUE_OK);
+    triplets_free(context, &list);
+}
+
+/* Column j of R'U in long double, and the sums of the sizes of its terms. */
+static void column_gradient(const struct shop *shop, uint32_t j, size_t c, long double *sum, double *size)
+{
+    const struct half *half = &shop->cells.by_column;
+    double terms;
+    *sum = 0;
+    *size = 0;
+    for (uint64_t k = half->start[j]; k < half->start[j + 1]; k++) {
+        double x = cells_value(&shop->cells, half, k), u = seen(shop, shop->left, half->across[k], c);
+        double r = product_at(shop, shop->right, j, shop->left, half->across[k], &terms) - x;
+        *sum += (long double)r * (long double)u;
+        *size += (terms + fabs(x)) * fabs(u);
+    }
+}
+
+static void slabs_check(struct shop *shop)
+{
+    const struct half *half = &shop->cells.by_column;
+    double square, slabs_square, absolute;
+    struct matrix product = shop->b;
+    sweep_residual(&shop->sweep, half, shop->right, shop->left, product, NULL, &square);
+    assert_null(shop->sweep.slabs);
+    assert_status(shop->context, sweep_arrange(&shop->sweep, half), FESCUE_OK);
+    assert_non_null(shop->sweep.slabs);
+    sweep_residual(&shop->sweep, half, shop->right, shop->left, product, NULL, &slabs_square);
+    assert_close(slabs_square, square, 1e-13 * square);
+    sweep_errors(&shop->sweep, half, shop->right, shop->left, &square, &absolute);
+    assert_close(square, slabs_square, 1e-13 * square);
+    for (uint32_t j = 0; j < half->lines; j++)
+        for (size_t c = 0; c < product.stride; c++) {
+            long double want = 0;
+            double size = 0;
+            if (c < shop->rank)
+                column_gradient(shop, j, c, &want, &size);
+            assert_close(MATRIX_AT(product, j, c), (double)want, (double)(shop->rank + 13) * shop->roundoff * size);
+        }
+    /* with the values as they stand in the half: the residual of factors that are zero, but for its sign */
+    matrix_zero(shop->right);
+    sweep_residual(&shop->sweep, half, shop->right, shop->left, shop->gradient, NULL, &square);
+    sweep_multiply(&shop->sweep, half, half->value, shop->left, product);
+    for (uint32_t j = 0; j < half->lines; j++)
+        for (size_t c = 0; c < product.stride; c++)
+            assert_true(MATRIX_AT(product, j, c) == -MATRIX_AT(shop->gradient, j, c));
+}
+
+static void slabs_agree_with_plain_loops(void **state)
+{
+    static const size_t some_ranks[] = {1, 5, 8, 11, 16, 33};
+    fescue_context *context = bench_of(state)->context;
+    struct cells cells;
+    struct shop shop;
+    for (int precision = FESCUE_DOUBLE; precision <= FESCUE_SINGLE; precision++) {
+        long_table(context, (enum fescue_precision)precision, &cells);
+        for (size_t k = 0; k < COUNT(kernels); k++)
+            for (size_t r = 0; r < COUNT(some_ranks); r++) {
+                setenv("FESCUE_KERNEL", kernels[k], 1);
+                shop_open(&shop, context, &cells, some_ranks[r]);
+                shop.gradient.rows = cells.columns;
+                slabs_check(&shop);
+                shop_close(&shop);
+            }
+        cells_free(context, &cells);
+    }
+    unsetenv("FESCUE_KERNEL");
+}
+
+static void workers_leave_no_trace_in_slabs(void **state)
+{
+    static const size_t workers[] = {1, 2, 7};
+    fescue_context *context = bench_of(state)->context;
+    struct cells cells;
+    struct shop shop;
+    uint64_t first = 0;
+    long_table(context, FESCUE_DOUBLE, &cells);
+    for (size_t w = 0; w < COUNT(workers); w++) {
+        double square;
+        assert_status(context, team_resize(context, workers[w]), FESCUE_OK);
+        shop_open(&shop, context, &cells, 5);
+        assert_status(context, sweep_arrange(&shop.sweep, &cells.by_column), FESCUE_OK);
+        sweep_residual(&shop.sweep, &cells.by_column, shop.right, shop.left, shop.b, NULL, &square);
+        uint64_t bits =
+            digest(digest(0, &square, sizeof square), shop.b.data, cells.columns * shop.b.stride * sizeof(double));
+        first = w == 0 ? bits : first;
+        assert_true(bits == first);
+        shop_close(&shop);
+    }
+    cells_free(context, &cells);
+}
+
+static void slabs_need_memory(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct cells cells;
+    struct sweep sweep;
+    long_table(context, FESCUE_SINGLE, &cells);
+    for (uint64_t take = 1; take <= 5; take++) {
+        assert_status(context, sweep_create(context, &cells, 4, &sweep), FESCUE_OK);
+        fault_plan(FAULT_TAKE, take, false, 0);
+        assert_status(context, sweep_arrange(&sweep, &cells.by_column), FESCUE_NO_MEMORY);
+        fault_clear();
+        fescue_failure_clear(context);
+        assert_null(sweep.slabs);
+        sweep_destroy(&sweep);
+    }
+    cells_free(context, &cells);
+    assert_no_leak(context);
+}
+
 /* ---- corners ------------------------------------------------------------------------------------------------------
  */
 
@@ -468,6 +592,9 @@ int main(void)
         BENCH_TEST(sweeps_agree_with_plain_loops_in_double),
         BENCH_TEST(sweeps_agree_with_plain_loops_in_single),
         BENCH_TEST(workers_leave_no_trace),
+        BENCH_TEST(slabs_agree_with_plain_loops),
+        BENCH_TEST(workers_leave_no_trace_in_slabs),
+        BENCH_TEST(slabs_need_memory),
         BENCH_TEST(rank_0_leaves_the_values),
         BENCH_TEST(no_cells_give_nothing),
         BENCH_TEST(views_of_wider_factors),
