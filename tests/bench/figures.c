@@ -104,6 +104,8 @@ static size_t chart_data_write(const struct bench *bench, FILE *to)
     return lines;
 }
 
+enum { CHART_LINE = 20, CHART_MARGINS = 130 }; /* pixels */
+
 static void chart_draw(const struct bench *bench)
 {
     char path[1024], command[3200];
@@ -116,11 +118,12 @@ static void chart_draw(const struct bench *bench)
     if (lines == 0)
         return;
     snprintf(command, sizeof command,
-             "command -v gnuplot >/dev/null && gnuplot -e \"set terminal pngcairo size 1000,1500; set output "
-             "'%s/bench.png'; set title 'Share of the rate of matrix products, one thread'; set yrange [] reverse; "
-             "set xrange [0:*]; set grid x; set lmargin 42; set ytics font ',9'; set style fill solid 0.6; "
+             "command -v gnuplot >/dev/null && gnuplot -e \"set terminal pngcairo size 1000,%zu; set output "
+             "'%s/bench.png'; set title 'Loops over cells, one thread'; set yrange [%zu.5:-0.5]; "
+             "set xlabel 'share of the rate of matrix products'; set xrange [0:*]; set grid x; set lmargin 42; set "
+             "ytics font ',9'; set style fill solid 0.6; "
              "plot '%s' using (0.5*\\$2):0:(0.5*\\$2):(0.35):ytic(1) with boxxyerror notitle\"",
-             bench->build, path);
+             CHART_MARGINS + CHART_LINE * lines, bench->build, lines - 1, path);
     if (system(command) == 0)
         printf("the chart is %s/bench.png\n", bench->build);
 }
