@@ -6,9 +6,9 @@
  * the portfolio of starts of solve_recover goes to work on all cells, without ridge. When none of them meets the cells
  * nothing is changed.
  *
- * Tried only where it may matter: few cells for the unknowns, no plain sign of noise, a ridge that may be 0, and a
- * table small enough that all of it takes seconds. A met table may still have cells that no fit determines: those in
- * lines with too few cells; `basis` marks them.
+ * Tried only where it may matter: few cells for the unknowns, no plain sign of noise, nothing that follows time
+ * (readings have noise), a ridge that may be 0, and a table small enough that all of it takes seconds. A met table may
+ * still have cells that no fit determines: those in lines with too few cells; `basis` marks them.
  */
 #include "job/job_internal.h"
 
@@ -48,9 +48,10 @@ bool final_exact_may_help(const struct final_request *request)
     double rank = (double)rank_of(request), count = (double)cells->count;
     double unknowns = rank * ((double)cells->rows + (double)cells->columns - rank);
     bool ridge_allows = request->options->ridge == (double)FESCUE_AUTO || request->options->ridge == 0;
+    bool has_time = request->choice->learnt.time != NULL || request->choice->kriged.time != NULL;
     bool is_told = request->options->rank == FESCUE_AUTO || count >= telling * unknowns;
-    if (is_told && is_noisy(request->choice))
-        return false;
+    if ((is_told && is_noisy(request->choice)) || has_time)
+        return false; /* readings in time leave more than rounding, as hidden ones said */
     return rank > 0 && ridge_allows && count > unknowns && count < scarce * unknowns &&
            count * rank * rank <= affordable;
 }
