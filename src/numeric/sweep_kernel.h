@@ -25,8 +25,9 @@
  *
  * What a cell costs is, in turn, latency, memory and arithmetic, and each has its remedy:
  *   - From a row to its r it is a long way (product, tree, difference, and back into every lane), which the processor
- *     can hide only as far as its window reaches. So the sums s of a group are made before the gradient of the group
- *     before it: what stands next in line is always ready.
+ *     can hide only as far as its window reaches. So, where a row is at most BESIDE_REGISTERS, the sums s of a group
+ * are made before the gradient of the group before it: what stands next in line is always ready. Wider rows are work
+ *     enough to hide it, and two groups of them have no room in the registers.
  *   - The right rows lie anywhere in memory, but the order of cells says where: those of the cells AHEAD are asked for,
  *     unless all of them fit into a core's own cache (NEAR_BYTES).
  *   - Positions and values come in order, 12 bytes a cell, faster than the processor itself looks out for them: those
@@ -43,7 +44,7 @@
 
 /* Some 32 cells of 2 to 3 ns hide a trip to memory of 80 ns, and what a busy machine adds to it; 4 KB of values. */
 enum { AHEAD = 32, STREAM_AHEAD = 512, CACHE_LINE = 64, NEAR_BYTES = 400 << 10 };
-enum { MOST_REGISTERS = SWEEP_MOST_WIDTH / LANES, WIDE_LANES = LANES / WIDES };
+enum { MOST_REGISTERS = SWEEP_MOST_WIDTH / LANES, WIDE_LANES = LANES / WIDES, BESIDE_REGISTERS = 2 };
 
 #define REGISTER_OF(type, count)                                                                                       \
     type __attribute__((vector_size((count) * sizeof(type)), aligned(sizeof(type)), may_alias))
@@ -340,12 +341,19 @@ INLINE void residual_group(const struct span *span, uint64_t k, size_t count, co
         absolute[part] += (squares)((squares_bits)WIDEN(group->number, part) & INT64_MAX);
 }
 
-/* All groups of a line, each beside the gradient of the one before. */
+/* All groups of a line; those of narrow rows beside the gradient of the one before. */
 INLINE void residual_line(const struct span *span, uint64_t k, uint64_t end, const vec *l, wide *g, squares *square,
                           squares *absolute, const size_t registers)
 {
+    const bool beside = registers <= BESIDE_REGISTERS;
     struct group before, now;
     uint64_t whole = end - (end - k) % GROUP;
+    for (; !beside && k < whole; k += GROUP) {
+        span_prefetch(span, k, false, registers);
+        residual_group(span, k, GROUP, l, &now, square, absolute, registers);
+        if (g != NULL)
+            group_gather(&now, g, registers);
+    }
     if (k < whole) {
         residual_group(span, k, GROUP, l, &before, square, absolute, registers);
         for (k += GROUP; k < whole; k += GROUP) {
