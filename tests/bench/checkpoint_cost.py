@@ -7,7 +7,9 @@
 # FESCUE=program tests/bench/checkpoint_cost.py [PAIRS [OPTIONS OF FILL...]]
 import os, subprocess, sys, tempfile
 
-pairs, options = int((sys.argv[1:] or ["2"])[0]), sys.argv[2:] or ["--rank", "12", "--folds", "0"]
+pairs, options = int((sys.argv[1:] or ["2"])[0]), sys.argv[2:] or [
+    "--solver", "subgradient", "--rank", "10", "--ridge", "0.01", "--offsets", "none", "--folds", "0", "--tolerance", "0",
+    "--iterations", "24"] # some seventy seconds
 program = os.path.abspath(os.environ.get("FESCUE", "build/fescue"))
 
 def begin(every, place):
