@@ -136,7 +136,8 @@ static void prior_component(void *opaque, size_t k, size_t worker)
     size_t rank = job->evidence->rank, d = rank + 1, row = k < rank ? k : rank + 1;
     size_t square = packed_size(row) + row, first = row < rank ? packed_size(rank) + row : packed_size(row) + rank;
     struct kalman_tally tally = {0};
-    double before = 0, before_mean = 0;
+    double before = 0, before_mean = 0, forgot = 1 - time->steps_law[k].correlation;
+    time->law_moved[k] = 0;
     if (!(time->steps_law[k].variance > 0))
         return;
     for (size_t t = 0; t < time->chain.steps; t++) {
@@ -155,6 +156,7 @@ static void prior_component(void *opaque, size_t k, size_t worker)
     }
     kalman_learn(&tally, &time->steps_law[k]);
     side->variance[k] = time->steps_law[k].variance;
+    time->law_moved[k] = fabs(1 - time->steps_law[k].correlation - forgot) / forgot;
 }
 
 void evidence_chain_prior(struct evidence *evidence)

@@ -127,6 +127,7 @@ struct evidence_time {
     /* chain */
     struct chain chain;
     struct kalman_law *steps_law; /* of each component and the effect */
+    double *law_moved;            /* of each: by which share a round changed what a step forgets, 1 - correlation */
     double *clock;                /* of the k-th step in time */
     double *store;                /* of each line, what its error needs: evidence_chain_store(rank) */
     struct arena arena;

@@ -29,6 +29,9 @@ enum { RESIDUAL_ROUND = 2, CHAIN_ROUND = 12 };
 /* Low-rank part and residual go on exchanging what either explains long after the estimates have settled: rms change of
    estimates in a round, in standard deviations of the noise, that no error figure notices. */
 #define SETTLED 0.0075
+/* But steps in which little was seen hang on the laws: the same for what a step forgets, the mean over components by
+   the size of each in the table. */
+#define LAWS_SETTLED 0.05
 #define FIRST_CORRELATION 0.6
 
 static size_t longest_series(const struct half *half)
@@ -53,6 +56,7 @@ static void time_reserve(struct evidence *evidence, const struct evidence_time *
     arena_reserve(arena, series->lines, sizeof *time->law);
     arena_reserve(arena, series->blocks + 1, sizeof *time->partial);
     arena_reserve(arena, d, sizeof *time->steps_law);
+    arena_reserve(arena, d, sizeof(double));
     arena_reserve(arena, steps->lines, sizeof(double));
     arena_reserve(arena, steps->lines * evidence_chain_store(evidence->rank), sizeof(double));
     arena_reserve(arena, steps->lines * d, sizeof(double));
@@ -80,6 +84,7 @@ static void time_carve(struct evidence *evidence, struct evidence_time *time)
     time->partial = arena_carve(arena, series->blocks + 1, sizeof *time->partial);
     time->pool = time->partial + series->blocks;
     time->steps_law = arena_carve(arena, d, sizeof *time->steps_law);
+    time->law_moved = arena_carve(arena, d, sizeof(double));
     time->clock = arena_carve(arena, steps->lines, sizeof(double));
     time->store = arena_carve(arena, steps->lines * evidence_chain_store(evidence->rank), sizeof(double));
     time->chain.cross = arena_carve(arena, steps->lines * d, sizeof(double));
@@ -240,9 +245,21 @@ void evidence_time_round(struct evidence *evidence, uint64_t round)
         evidence_residual_update(evidence);
 }
 
+static bool laws_settled(const struct evidence *evidence)
+{
+    const struct evidence_time *time = evidence->time;
+    double moved = 0, size = 0;
+    for (size_t k = 0; k <= evidence->rank; k++) {
+        double of_table = time->steps_law[k].variance * (k < evidence->rank ? time->series->variance[k] : 1);
+        moved += of_table * time->law_moved[k];
+        size += of_table;
+    }
+    return moved <= LAWS_SETTLED * size;
+}
+
 bool evidence_time_settled(const struct evidence *evidence, double change)
 {
-    return evidence->time->chain_on && change <= SETTLED * sqrt(evidence->noise);
+    return evidence->time->chain_on && change <= SETTLED * sqrt(evidence->noise) && laws_settled(evidence);
 }
 
 static void part_block(void *opaque, size_t block, size_t worker)

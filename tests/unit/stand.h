@@ -21,6 +21,7 @@ struct stand {
     fescue_table *table;
     struct fescue_options options;
     struct time_axis time; /* none */
+    struct nearness near;
     struct model model;
     struct choice choice;
     struct judgement judgement;
@@ -80,6 +81,7 @@ static void stand_run(struct stand *stand, enum fescue_offsets kind, size_t rank
                               .table = stand->table,
                               .options = &stand->options,
                               .time = &stand->time,
+                              .near = &stand->near,
                               .model = &stand->model,
                               .choice = &stand->choice,
                               .fit = &stand->fit,
