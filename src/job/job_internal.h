@@ -106,7 +106,7 @@ void season_restore(fescue_fill *fill);
 /* Reads what --near-columns names (NULL: nothing) and asks for it. FESCUE_USAGE, FESCUE_NO_INPUT, FESCUE_BAD_DATA with
    one line. */
 fescue_status near_take(fescue_fill *fill, const char *path, struct choose_request *request);
-bool near_is_felt(const struct near_part *part); /* whether near columns bear on estimates */
+bool near_is_felt(const struct near_part *part);            /* whether near columns bear on estimates */
 void near_line(const fescue_fill *fill, struct text *text); /* of the summary */
 
 /* The summary, new and owned by the caller; with the lines on files when they are being written. */
