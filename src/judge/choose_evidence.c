@@ -142,10 +142,13 @@ struct more {
     const struct nearness *near;
 };
 
-/* The winner's components again, under the noise, the time part and the near columns that are asked for: takes its
-   place when it has less error. A fit that follows time or near columns has to have more error to be turned down: where
+/* Standard errors by which a fit that follows time or near columns has to have more error to be turned down: where
    nothing hangs together it learns so by itself, and few hidden cells show what it is worth in lines of which all are
-   missing. */
+   missing, where turning it down costs most. */
+static const double turned_down = 2;
+
+/* The winner's components again, under the noise, the time part and the near columns that are asked for: takes its
+   place when it has less error, or is not turned down. */
 static fescue_status learn_rounds(struct chooser *chooser, const struct more *more, uint64_t rounds,
                                   struct candidate *winner, bool *is_better)
 {
@@ -172,7 +175,7 @@ static fescue_status learn_rounds(struct chooser *chooser, const struct more *mo
     start.near = winner->near;
     TRY(evidence_fit(chooser->context, kept, &request, &start, &result));
     TRY(candidate_take(chooser, &result, request.noise, &own));
-    *is_better = more->time != NULL || more->near != NULL ? !candidate_beats(chooser, winner, &own, 1)
+    *is_better = more->time != NULL || more->near != NULL ? !candidate_beats(chooser, winner, &own, turned_down)
                                                           : candidate_beats(chooser, &own, winner, 1);
     if (*is_better)
         candidate_swap(&own, winner);
