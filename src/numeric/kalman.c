@@ -98,13 +98,6 @@ double kalman_smooth(const struct kalman_series *series, const struct kalman_law
     return likelihood;
 }
 
-void kalman_without(double noise, double value, double *mean, double *variance)
-{
-    double rest = noise - *variance;
-    *mean = (*mean * noise - value * *variance) / rest;
-    *variance = *variance * noise / rest;
-}
-
 double kalman_between(const struct kalman_law *law, const double step[2], const double mean[2])
 {
     double before = pow(law->correlation, step[0]), after = pow(law->correlation, step[1]), both = before * after;

@@ -213,8 +213,6 @@ double kalman_step(double from, double to);
 /* Posterior of all steps; returns the log likelihood of the values. */
 double kalman_smooth(const struct kalman_series *series, const struct kalman_law *law,
                      const struct kalman_state *state);
-/* Mean and variance of a step, given all but its own value. */
-void kalman_without(double noise, double value, double *mean, double *variance);
 /* Mean between two steps of known mean (their covariances do not matter), step[0] after the one, step[1] before the
    other. */
 double kalman_between(const struct kalman_law *law, const double step[2], const double mean[2]);

@@ -12,6 +12,10 @@
  * A fit that starts from a model with a time part takes its laws over and has both parts from the first round: the
  * components of a model come in the order of their strength, in which neighbours rarely change.
  *
+ * A blend with interpolation in time on top of it, by the distance to the nearest seen cell, would bring nothing: with
+ * the weight of every distance fitted to the truth itself, the error of NOx, ozone and wind (tests/reference/long/
+ * open_times.py, cells and gaps, two seeds) falls by 0.1 % in the median and by 1.4 % at most.
+ *
  * Times need not be sorted: the steps go by the axis's order, and the cells of each series have a place in time beside
  * their place in the store, unless the two are the same.
  *

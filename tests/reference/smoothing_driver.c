@@ -4,15 +4,14 @@
  * output.
  *
  *   series   in: count, variance, correlation, then count times, values, noises
- *            out: log likelihood; count means, variances, covariances with the step before; count means and variances
- *            without the own value; variance and correlation after one step of learning
+ *            out: log likelihood; count means, variances, covariances with the step before; variance and correlation
+ *            after one step of learning
  *   chain    in: steps, size, then `size` variances, `size` correlations, steps times, steps lines, steps packed
  *            precisions and steps right sides by line
  *            out: by line: means, packed covariances, covariances with the step before
  */
 #include "numeric/numeric.h"
 
-#include <math.h>
 #include <stdio.h>
 #include <stdlib.h>
 #include <string.h>
@@ -48,11 +47,6 @@ static void series_run(void)
     numbers_write(cross, n);
     kalman_tally_series(tally, &series, &state);
     kalman_learn(tally, &law);
-    for (size_t k = 0; k < n; k++)
-        if (isfinite(noise[k]))
-            kalman_without(noise[k], value[k], mean + k, variance + k);
-    numbers_write(mean, n);
-    numbers_write(variance, n);
     numbers_write(&law.variance, 1);
     numbers_write(&law.correlation, 1);
     free(tally);
