@@ -2,8 +2,9 @@
  *
  * Seasons of a table whose rows (or columns) are times. With time as rows, t_i in steps of the clock,
  *
- *     x_ij = m_j + sum over waves k of (c_jk cos 2 pi f_k t_i + s_jk sin 2 pi f_k t_i) + e_ij,    e_ij ~ N(0, s2_j /
- * w_ij) c_jk ~ N(g_k, v_k),   s_jk ~ N(h_k, v_k)
+ *     x_ij = m_j + sum over waves k of (c_jk cos 2 pi f_k t_i + s_jk sin 2 pi f_k t_i) + e_ij
+ *
+ *     e_ij ~ N(0, s2_j / w_ij)      c_jk ~ N(g_k, v_k)      s_jk ~ N(h_k, v_k)
  *
  *     symbol    shape   what it is
  *     f_k       W       frequencies: the harmonics 1, 2, ... of every period that are slower than two and a half steps
@@ -15,8 +16,9 @@
  * common season g, h. The linear mixed model is fitted by expectation and maximisation (Laird, Ware 1982,
  * "Random-effects models for longitudinal data"): per series the posterior of b_j from its sums of z z' and z x, then
  *
- *     g_k, h_k = means of the posterior means       v_k = mean of the posterior's spread around them, both of its
- * halves s2_j     = (expected squared error of the series + 4 mean s2) / (cells + 4)
+ *     g_k, h_k = means of the posterior means
+ *     v_k      = mean of the posterior's spread around them, both of its halves
+ *     s2_j     = (expected squared error of the series + 4 mean s2) / (cells + 4)
  *
  * The level m_j is free and not kept: offsets are learnt behind, from what the season leaves.
  *

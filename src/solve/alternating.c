@@ -16,8 +16,8 @@
  *     1. Q from W = Q B by QR.
  *     2. V_i = (Q_i'Q_i + lambda I)^-1 Q_i't_i for every line i of the shorter side, Q_i the rows of Q seen in it.
  *     3. U from V = U C by QR.
- *     4. W_j = (U_j'U_j + lambda I)^-1 U_j't_j for every line j of the longer side; residual and gradient
- * (projection.c).
+ *     4. W_j = (U_j'U_j + lambda I)^-1 U_j't_j for every line j of the longer side; then residual and
+ *        gradient (projection.c).
  *
  * A frame with orthonormal columns has |V Q'| = |V|, so that 2 and 4 minimise f itself, each over a linear space that X
  * lies in: f falls from step to step whatever the table is, and there is no step length to find. Where f falls no more,

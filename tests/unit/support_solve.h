@@ -194,4 +194,27 @@ static inline bool points_same(const struct low_rank *a, const struct low_rank *
 
 static const struct solve_limits usual_limits = {.iterations = 1000, .gradient = 1e-9};
 
+/* A fit in which every allocation is refused in turn: it says so, and leaves nothing behind. */
+static inline void evidence_refuse_memory(fescue_context *context, const struct cells *cells,
+                                          const struct evidence_request *request)
+{
+    uint64_t alive = fescue_memory_usage(context).blocks;
+    for (uint64_t n = 1;; n++) {
+        struct evidence_result fit;
+        fault_plan(FAULT_TAKE, n, false, 0);
+        fescue_status status = evidence_learn(context, cells, request, &fit);
+        bool met = fault_met();
+        fault_clear();
+        if (status == FESCUE_OK)
+            evidence_result_free(context, &fit);
+        else
+            assert_int_equal(status, FESCUE_NO_MEMORY);
+        assert_int_equal(fescue_memory_usage(context).blocks, alive);
+        fescue_failure_clear(context);
+        if (!met)
+            break;
+        assert_int_not_equal(status, FESCUE_OK);
+    }
+}
+
 #endif

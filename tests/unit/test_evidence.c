@@ -263,24 +263,8 @@ static void failing_memory_leaks_nothing(void **state)
     struct sowing sowing = {20, 15, 2, 0.6, 0.2, FESCUE_DOUBLE, 12};
     struct plot plot = plot_sow(context, &sowing, 0);
     struct evidence_request request = request_of(3, FESCUE_OFFSETS_BOTH);
-    uint64_t alive = fescue_memory_usage(context).blocks;
     request.rounds = 3;
-    for (uint64_t n = 1;; n++) {
-        struct evidence_result fit;
-        fault_plan(FAULT_TAKE, n, false, 0);
-        fescue_status status = evidence_learn(context, &plot.cells, &request, &fit);
-        bool met = fault_met();
-        fault_clear();
-        if (status == FESCUE_OK)
-            evidence_result_free(context, &fit);
-        else
-            assert_int_equal(status, FESCUE_NO_MEMORY);
-        assert_int_equal(fescue_memory_usage(context).blocks, alive);
-        fescue_failure_clear(context);
-        if (!met)
-            break;
-        assert_int_not_equal(status, FESCUE_OK);
-    }
+    evidence_refuse_memory(context, &plot.cells, &request);
     plot_free(&plot);
 }
 

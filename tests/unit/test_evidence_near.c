@@ -123,23 +123,7 @@ static void failing_memory_leaks_nothing(void **state)
     line_sow(context, N - 1, &cells, &near);
     struct evidence_request request = request_of(&near);
     request.rounds = 6;
-    uint64_t alive = fescue_memory_usage(context).blocks;
-    for (uint64_t n = 1;; n++) {
-        struct evidence_result fit;
-        fault_plan(FAULT_TAKE, n, false, 0);
-        fescue_status status = evidence_learn(context, &cells, &request, &fit);
-        bool met = fault_met();
-        fault_clear();
-        if (status == FESCUE_OK)
-            evidence_result_free(context, &fit);
-        else
-            assert_int_equal(status, FESCUE_NO_MEMORY);
-        assert_int_equal(fescue_memory_usage(context).blocks, alive);
-        fescue_failure_clear(context);
-        if (!met)
-            break;
-        assert_int_not_equal(status, FESCUE_OK);
-    }
+    evidence_refuse_memory(context, &cells, &request);
     cells_free(context, &cells);
     nearness_free(context, &near);
 }
