@@ -7,19 +7,19 @@
  * lines before it are known; so what is said of a fault, and where, is said in one place (matrix_market.c). What is
  * accepted here is accepted there, with the same value.
  *
- * Most lines are short: row, column and a value of few digits, each behind one blank. Where there is SSE2, such a line
- * is cut by the mask of its first 32 characters that are no digits; so the next line can begin before the numbers of
- * this one are made. Others are read field by field.
+ * Most lines are short: row, column and a value of not too many digits, each behind one blank. Where the processor has
+ * the vectors for it these are taken at one go (short_line.h). Others are read field by field.
  *
  * Every line but the last of a file ends with a line feed, which is no digit and no blank: so no loop over those looks
  * for the end of the chunk. A chunk without one at its end is given up.
  */
 #include "table/digits.h"
 
-#include <math.h>
-#ifdef __SSE2__
-#include <emmintrin.h>
+#if defined(__x86_64__)
+#include "table/short_line.h"
 #endif
+
+#include <math.h>
 
 /* What is not read yet. */
 struct rest {
@@ -86,10 +86,9 @@ static inline bool value_take(const struct market_form *form, struct rest *rest,
     return !form->is_integer || is_integer_text(entry->text, entry->end);
 }
 
-static inline bool is_in_triangle(const struct market_form *form, const struct pile_entry *entry)
+static inline bool is_in_triangle(enum mirror mirror, uint32_t row, uint32_t column)
 {
-    return form->pile->mirror == MIRROR_NONE || entry->row > entry->column ||
-           (entry->row == entry->column && form->pile->mirror == MIRROR_SAME);
+    return mirror == MIRROR_NONE || row > column || (row == column && mirror == MIRROR_SAME);
 }
 
 static inline bool coordinate_take(const struct market_form *form, struct rest *rest, struct pile_entry *entry)
@@ -97,70 +96,8 @@ static inline bool coordinate_take(const struct market_form *form, struct rest *
     blanks_skip(rest);
     return place_take(rest, form->rows, &entry->row) && blanks_skip(rest) &&
            place_take(rest, form->columns, &entry->column) && blanks_skip(rest) && value_take(form, rest, entry) &&
-           line_end_take(rest) && is_in_triangle(form, entry);
+           line_end_take(rest) && is_in_triangle(form->pile->mirror, entry->row, entry->column);
 }
-
-#ifdef __SSE2__
-
-enum { WINDOW = 32 };
-
-/* The characters of the window that are no digits, the first in the lowest bit. */
-static inline uint32_t others_find(const char *at)
-{
-    const __m128i zero = _mm_set1_epi8('0'), nine = _mm_set1_epi8(9);
-    __m128i low = _mm_sub_epi8(_mm_loadu_si128((const __m128i *)(const void *)at), zero);
-    __m128i high = _mm_sub_epi8(_mm_loadu_si128((const __m128i *)(const void *)(at + WINDOW / 2)), zero);
-    low = _mm_cmpeq_epi8(_mm_min_epu8(low, nine), low);
-    high = _mm_cmpeq_epi8(_mm_min_epu8(high, nine), high);
-    return ~((uint32_t)_mm_movemask_epi8(low) | (uint32_t)_mm_movemask_epi8(high) << WINDOW / 2);
-}
-
-/* A short line, "row column [-]digits[.digits]" with less than eight digits each and one blank between; at anything
-   else false, and the rest stays where it was. Bits above those of the window are set, so that the mask is never empty.
-   Nothing branches on a sign or a point, which no processor could foresee. */
-static inline bool short_line_take(const struct market_form *form, struct rest *rest, struct pile_entry *entry)
-{
-    const char *at = rest->at;
-    if (rest->end - at < WINDOW)
-        return false;
-    const uint64_t beyond = UINT64_C(15) << WINDOW;
-    uint64_t others = others_find(at) | beyond;
-    const unsigned row_end = (unsigned)__builtin_ctzll(others);
-    others &= others - 1;
-    const unsigned column_end = (unsigned)__builtin_ctzll(others), column = row_end + 1;
-    others &= others - 1;
-    const bool negative = at[column_end + 1] == '-';
-    others &= (others - 1) | ((uint64_t)negative - 1);
-    const unsigned value = column_end + 1 + negative, whole_end = (unsigned)__builtin_ctzll(others);
-    const bool has_point = at[whole_end] == '.';
-    others &= (others - 1) | ((uint64_t)has_point - 1);
-    const unsigned end = (unsigned)__builtin_ctzll(others), fraction = whole_end + has_point;
-    const unsigned decimals = end - fraction;
-    if (at[row_end] != ' ' || at[column_end] != ' ' || at[end] != '\n' || end >= WINDOW || row_end - 1 > 6 ||
-        column_end - column - 1 > 6 || whole_end - value - 1 > 6 || decimals > 7 || (has_point && form->is_integer))
-        return false;
-    entry->row = (uint32_t)digits_number(digits_load(at), row_end) - 1;
-    entry->column = (uint32_t)digits_number(digits_load(at + column), column_end - column) - 1;
-    uint64_t whole = digits_number(digits_load(at + value), whole_end - value);
-    uint64_t part = digits_number(digits_load(at + fraction), decimals);
-    double size = ((double)whole * digits_power[decimals] + (double)part) / digits_power[decimals];
-    entry->value = negative ? -size : size;
-    entry->text = at + column_end + 1;
-    entry->end = at + end;
-    bool is_ours = entry->row < form->rows && entry->column < form->columns && is_in_triangle(form, entry);
-    rest->at += is_ours ? end + 1 : 0;
-    return is_ours;
-}
-
-#else
-
-static inline bool short_line_take(const struct market_form *form, struct rest *rest, struct pile_entry *entry)
-{
-    (void)form, (void)rest, (void)entry;
-    return false;
-}
-
-#endif
 
 /* A value, or a hole: nan. */
 static inline bool array_take(const struct market_form *form, struct rest *rest, struct pile_entry *entry,
@@ -176,9 +113,17 @@ static inline bool array_take(const struct market_form *form, struct rest *rest,
     return line_end_take(rest);
 }
 
+/* By stretches short enough to count in bytes, so that the compiler adds sixteen at a time. */
 static size_t lines_count(const char *text, const char *end)
 {
+    enum { STRETCH = 128 };
     size_t lines = 0;
+    for (; end - text >= STRETCH; text += STRETCH) {
+        unsigned char feeds = 0;
+        for (int k = 0; k < STRETCH; k++)
+            feeds = (unsigned char)(feeds + (text[k] == '\n'));
+        lines += feeds;
+    }
     for (; text < end; text++)
         lines += *text == '\n';
     return lines;
@@ -194,6 +139,15 @@ static void hole_add(struct pile_block *block, enum fescue_precision precision)
         ((double *)block->value)[k] = NAN;
 }
 
+static inline fescue_status entry_put(const struct market_form *form, struct pile_block *block,
+                                      const struct pile_entry *entry)
+{
+    if (form->pile->keeps_texts)
+        return pile_block_add(form->pile, block, entry);
+    pile_block_put(form->pile, block, entry);
+    return FESCUE_OK;
+}
+
 /* Whether all lines were plain. */
 static fescue_status lines_parse(const struct market_form *form, struct rest rest, struct pile_block *block,
                                  bool *is_plain)
@@ -203,17 +157,115 @@ static fescue_status lines_parse(const struct market_form *form, struct rest res
     *is_plain = true;
     while (rest.at < rest.end && *is_plain) {
         bool is_hole = false;
-        *is_plain = form->is_array ? array_take(form, &rest, &entry, &is_hole)
-                                   : short_line_take(form, &rest, &entry) || coordinate_take(form, &rest, &entry);
+        *is_plain = form->is_array ? array_take(form, &rest, &entry, &is_hole) : coordinate_take(form, &rest, &entry);
         if (is_hole)
             hole_add(block, form->pile->precision);
-        else if (*is_plain && form->pile->keeps_texts)
-            TRY(pile_block_add(form->pile, block, &entry));
         else if (*is_plain)
-            pile_block_put(form->pile, block, &entry);
+            TRY(entry_put(form, block, &entry));
     }
 done:
     return status;
+}
+
+#if defined(__x86_64__)
+
+/* Lines whose ends are looked for, and whose values are divided, at one go; and room for what values_make and
+   line_feeds_find do beyond. */
+enum { BATCH = 256, BATCH_ROOM = BATCH + 2 * WINDOW };
+struct short_lines {
+    uint32_t feed[BATCH_ROOM];
+    size_t count, read; /* of the batch */
+    size_t line;        /* where the next one begins */
+    uint64_t halves[BATCH_ROOM];
+    double power[BATCH_ROOM];
+};
+
+SHORT_LINE_VECTORS static void short_values_put(const struct short_lines *lines, size_t count,
+                                                enum fescue_precision precision, void *to)
+{
+    size_t k = 0;
+    for (; k + 4 <= count; k += 4) {
+        const __m256d values = values_make(lines->halves + k, lines->power + k);
+        if (precision == FESCUE_SINGLE)
+            _mm_storeu_ps((float *)to + k, _mm256_cvtpd_ps(values));
+        else
+            _mm256_storeu_pd((double *)to + k, values);
+    }
+    double rest[4];
+    _mm256_storeu_pd(rest, values_make(lines->halves + k, lines->power + k));
+    for (size_t j = 0; k < count; k++, j++)
+        if (precision == FESCUE_SINGLE)
+            ((float *)to)[k] = (float)rest[j];
+        else
+            ((double *)to)[k] = rest[j];
+}
+
+/* Takes lines of the batch up to the first that is not short. */
+SHORT_LINE_VECTORS static void short_lines_put(const struct market_form *form, const char *text,
+                                               struct short_lines *lines, struct pile_block *block)
+{
+    const uint64_t rows = form->rows, columns = form->columns;
+    const uint32_t points_mask = form->is_integer ? 0 : UINT32_MAX;
+    const enum mirror mirror = form->pile->mirror;
+    uint32_t *row = block->row + block->count, *column = block->column + block->count;
+    size_t count = 0, line = lines->line;
+    for (size_t k = lines->read; k < lines->count; count++, line = lines->feed[k++] + 1) {
+        struct short_line cut;
+        if (!short_line_cut(text + line, lines->feed[k] - line, points_mask, &cut) || cut.row >= rows ||
+            cut.column >= columns || !is_in_triangle(mirror, cut.row, cut.column))
+            break;
+        row[count] = cut.row;
+        column[count] = cut.column;
+        lines->halves[count] = cut.halves;
+        lines->power[count] = cut.power;
+    }
+    short_values_put(lines, count, form->pile->precision,
+                     (char *)block->value + block->count * cell_size(form->pile->precision));
+    block->count += (uint32_t)count;
+    lines->read += count;
+    lines->line = line;
+}
+
+/* As lines_parse. A line that is not short is read field by field, which does not go beyond a line feed. */
+static fescue_status short_lines_parse(const struct market_form *form, const struct rest rest, struct pile_block *block,
+                                       bool *is_plain)
+{
+    fescue_status status = FESCUE_OK;
+    const size_t end = (size_t)(rest.end - rest.at);
+    struct short_lines lines;
+    size_t looked = 0;
+    pthread_once(&shuffles_once, shuffles_compute);
+    lines.count = lines.read = lines.line = 0;
+    *is_plain = true;
+    while (*is_plain && (lines.read < lines.count || looked < end)) {
+        struct rest line = {rest.at + lines.line, rest.end};
+        struct pile_entry entry;
+        if (lines.read < lines.count) {
+            *is_plain = coordinate_take(form, &line, &entry);
+            if (*is_plain)
+                TRY(entry_put(form, block, &entry));
+            lines.line = lines.feed[lines.read++] + 1;
+        } else {
+            lines.count = line_feeds_find(rest.at, &looked, end, BATCH, lines.feed);
+            lines.read = 0;
+        }
+        if (!form->pile->keeps_texts)
+            short_lines_put(form, rest.at, &lines, block);
+    }
+done:
+    return status;
+}
+
+#endif
+
+static fescue_status entries_parse(const struct market_form *form, struct rest rest, struct pile_block *block,
+                                   bool *is_plain)
+{
+#if defined(__x86_64__)
+    if (!form->is_array && form->vectors >= VECTORS_AVX2 && rest.end - rest.at <= UINT32_MAX)
+        return short_lines_parse(form, rest, block, is_plain);
+#endif
+    return lines_parse(form, rest, block, is_plain);
 }
 
 fescue_status market_parse(const struct market_form *form, size_t worker, const struct chunk *chunk,
@@ -227,7 +279,7 @@ fescue_status market_parse(const struct market_form *form, size_t worker, const 
     if (rest.at == rest.end || rest.end[-1] != '\n' || lines > UINT32_MAX)
         return FESCUE_OK;
     TRY(pile_block_create(form->pile, &form->room[worker], (uint32_t)lines, block));
-    TRY(lines_parse(form, rest, *block, &is_plain));
+    TRY(entries_parse(form, rest, *block, &is_plain));
 done:
     if (status != FESCUE_OK || !is_plain)
         pile_block_free(form->pile->context, block);

@@ -454,6 +454,7 @@ fescue_status matrix_market_read(struct stream *stream, const struct table_readi
     fescue_status status;
     struct market market = {.stream = stream};
     market.form.pile = &market.pile;
+    market.form.vectors = vectors_choose();
     pile_open(table->context, reading, &market.pile);
     TRY(banner_read(&market));
     TRY(sizes_read(&market));

@@ -12,6 +12,10 @@
 /* Rows and columns are counted in 32 bits, and one number is kept free to mean "none". */
 #define TABLE_MOST_LINES (UINT32_MAX - 1)
 
+/* Vector instructions that this processor has and nobody forbade (vectors.c). */
+enum vectors { VECTORS_NONE, VECTORS_AVX2, VECTORS_AVX512 };
+enum vectors vectors_choose(void);
+
 /* ---- text_store: characters that stay where they are ----------------------------------------------------------- */
 
 /* Many short texts in few blocks; a text never moves while the store lives, so pointers into it stay good. */
@@ -163,7 +167,7 @@ fescue_status stream_open(fescue_context *context, const char *path, struct stre
    before the first line. */
 enum {
     CHUNK_SIZE = 1 << 18, /* stays in the second cache with what is parsed from it; a lock costs nothing beside */
-    CHUNK_SLACK = 8       /* bytes behind `got` that may be read, whatever they are */
+    CHUNK_SLACK = 64      /* bytes behind `got` that may be read, whatever they are */
 };
 void stream_peek(const struct stream *stream, size_t most, const char **text, size_t *length);
 /* The next line; good until the next call. */
@@ -356,6 +360,7 @@ struct market_form {
     const struct pile *pile;
     bool is_array, is_integer;
     uint64_t rows, columns;
+    enum vectors vectors;
     struct pile_room *room; /* of each worker */
 };
 /* All entries of the chunk as a block, those of the array form without their places and with nan for holes; NULL when

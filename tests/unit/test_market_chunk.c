@@ -15,6 +15,24 @@ enum { ROWS = 900, COLUMNS = 700, ENTRIES = 50000 }; /* some 900 kB of text: fou
 static const size_t workers[] = {1, 2, 5};
 static const uint64_t seed = 20240701;
 
+/* How a text is read: with and without vectors, texts kept or not, in either precision. */
+struct way {
+    struct table_reading reading;
+    const char *kernel;
+};
+static const struct way ways[] = {
+    {{0}, ""},
+    {{.dense_most = 1}, ""},
+    {{.dense_most = 1}, "portable"},
+    {{.dense_most = 1, .precision = FESCUE_SINGLE}, ""},
+};
+enum { WAYS = sizeof ways / sizeof ways[0] };
+
+static void way_take(const struct way *way)
+{
+    setenv("FESCUE_KERNEL", way->kernel, 1);
+}
+
 /* How the text is laid out. */
 struct layout {
     uint64_t remarks; /* one every so many lines on average; 0: none */
@@ -106,10 +124,12 @@ static void layout_check(struct bench *bench, const struct layout *layout)
 {
     struct packed packed = layout_pack(layout);
     fescue_table *first = NULL;
-    for (size_t w = 0; w < 6; w++) {
+    for (size_t w = 0; w < 12; w++) {
+        const struct table_reading reading = {.dense_most = w < 6 ? 0 : 1}; /* texts are kept, or not */
+        size_t form = w / 3 % 2;
         fescue_table *table;
         assert_status(bench->context, team_resize(bench->context, workers[w % 3]), FESCUE_OK);
-        assert_status(bench->context, bytes_read(bench, packed.bytes[w / 3], packed.count[w / 3], NULL, &table),
+        assert_status(bench->context, bytes_read(bench, packed.bytes[form], packed.count[form], &reading, &table),
                       FESCUE_OK);
         if (first == NULL) {
             first = table;
@@ -272,19 +292,45 @@ static void a_remark_changes_nothing(void **state)
         "1 2 99999999",
         "1 2 9999999",
         "1 2 0.30000000001",
+        "9999999 2 3",
+        "1 9999999 3",
+        "1 2 123456789012345",
+        "1 2 12345678901234.5",
+        "1 2 -1.23456789012345",
+        "1 2 0.123456789012345",
+        "1 2 1234567890123456",
+        "1 2 000000000000007",
+        "50 60 -000000000.00001",
+        "0000050 0000060 3.5",
+        "00000050 60 3.5",
+        "1 2 .",
+        "1 2 -.",
+        "1.5 2 33",
+        "1 2.5 33",
+        ".1 2 33",
+        "1 2 3.\r",
+        "1 2 3 5",
+        "1 2 3 .5",
+        "1  3",
+        "1 2 ",
+        " 1 2",
+        "1 2 33333333333333333333",
+        "0000000000000000000000000000000001 2 3",
         "1 2 -12345.67890",
     };
-    for (size_t k = 0; k < sizeof lines / sizeof lines[0]; k++) {
+    for (size_t k = 0; k < WAYS * sizeof lines / sizeof lines[0]; k++) {
+        struct way way = ways[k % WAYS];
         fescue_table *table[2];
         char text[256], sentence[256] = "";
         fescue_status status[2];
+        way_take(&way);
         for (int remark = 0; remark < 2; remark++) {
             int length = snprintf(text, sizeof text,
                                   "%%%%MatrixMarket matrix coordinate real general\n50 60 4\n48 58 1.25\n%s\n"
                                   "49 59 -0.5\n50 60 7\n%s",
-                                  lines[k], remark ? "% remark\n" : "");
+                                  lines[k / WAYS], remark ? "% remark\n" : "");
             fescue_failure_clear(bench->context);
-            status[remark] = bytes_read(bench, text, (size_t)length, NULL, &table[remark]);
+            status[remark] = bytes_read(bench, text, (size_t)length, &way.reading, &table[remark]);
             if (remark == 0 && status[0] != FESCUE_OK)
                 snprintf(sentence, sizeof sentence, "%s", fescue_failure_text(bench->context));
         }
@@ -295,6 +341,47 @@ static void a_remark_changes_nothing(void **state)
             assert_string_equal(sentence, fescue_failure_text(bench->context));
         table_destroy(&table[0]), table_destroy(&table[1]);
     }
+    way_take(&ways[0]);
+}
+
+/* Values of 1 to 17 digits with the point anywhere, in lines of every length: to the bit what strtod reads. */
+static void values_are_those_of_strtod(void **state)
+{
+    struct bench *bench = bench_of(state);
+    enum { VALUES = 40000 };
+    char *text = NULL, (*written)[32] = malloc(VALUES * sizeof *written);
+    size_t length;
+    FILE *out = open_memstream(&text, &length);
+    struct random_stream stream = random_open(seed, RANDOM_TEST, 3);
+    fprintf(out, "%%%%MatrixMarket matrix coordinate real general\n%d 1234567 %d\n", VALUES, VALUES);
+    for (uint64_t k = 0; k < VALUES; k++) {
+        char *at = written[k];
+        uint64_t digits = 1 + random_below(&stream, 17), point = random_below(&stream, digits + 2);
+        if (random_below(&stream, 3) == 0)
+            *at++ = '-';
+        for (uint64_t d = 0; d < digits; d++) {
+            if (d == point)
+                *at++ = '.';
+            *at++ = (char)('0' + random_below(&stream, 10));
+        }
+        *at = '\0';
+        fprintf(out, "%" PRIu64 " %" PRIu64 " %s\n", k + 1, 1 + random_below(&stream, 10) * (k % 123456), written[k]);
+    }
+    fclose(out);
+    for (size_t w = 0; w < WAYS; w++) {
+        fescue_table *table = NULL;
+        way_take(&ways[w]);
+        assert_status(bench->context, bytes_read(bench, text, length, &ways[w].reading, &table), FESCUE_OK);
+        for (uint64_t k = 0; k < VALUES; k++) {
+            double read = cells_value(&table->cells, &table->cells.by_row, k), expected = strtod(written[k], NULL);
+            if (ways[w].reading.precision == FESCUE_SINGLE)
+                expected = (double)(float)expected;
+            assert_memory_equal(&read, &expected, sizeof read);
+        }
+        table_destroy(&table);
+    }
+    way_take(&ways[0]);
+    free(text), free(written);
 }
 
 int main(void)
@@ -306,6 +393,7 @@ int main(void)
         BENCH_TEST(what_comes_first_is_told),
         BENCH_TEST(arrays_keep_their_places),
         BENCH_TEST(a_remark_changes_nothing),
+        BENCH_TEST(values_are_those_of_strtod),
     };
     return cmocka_run_group_tests_name("market_chunk", tests, NULL, NULL);
 }
