@@ -27,6 +27,18 @@ double rating_error(const struct rating *rating, const struct low_rank *point, d
     return sqrt(sum / (double)rating->hidden);
 }
 
+/* The first is left out: it meets memory for the first time. */
+static double iteration_median(const struct solve_result *result)
+{
+    double *step = bench_take(result->trace_count, sizeof *step);
+    size_t count = 0;
+    for (uint64_t k = 2; k < result->trace_count; k++)
+        step[count++] = result->trace[k].seconds - result->trace[k - 1].seconds;
+    double median = count > 0 ? bench_median(step, count) : 0;
+    free(step);
+    return median;
+}
+
 /* From the observed cells to factors; in a context of its own, so that what it holds is known. */
 void rating_fit(const struct rating *rating, const char *solver, size_t rank, size_t threads, uint64_t iterations,
                 struct fit_outcome *out)
@@ -44,8 +56,11 @@ void rating_fit(const struct rating *rating, const char *solver, size_t rank, si
     bench_check(context, problem_create(context, &rating->cells, NULL, RIDGE, &problem));
     bench_check(context, start_spectral(&problem, rank, 1, &point));
     bench_check(context, solve_run(&problem, solver_find(solver), &limits, &point, &result));
-    *out = (struct fit_outcome){clock_cpu() - cpu,           clock_wall() - wall, 0, result.iterations, 0,
-                                solve_stop_word(result.stop)};
+    *out = (struct fit_outcome){.cpu = clock_cpu() - cpu,
+                                .wall = clock_wall() - wall,
+                                .iteration = iteration_median(&result),
+                                .iterations = result.iterations,
+                                .stop = solve_stop_word(result.stop)};
     out->rmse = rating_error(rating, &point, problem.scale);
     out->bytes = fescue_memory_usage(rating->context).bytes + fescue_memory_usage(context).peak_bytes;
     low_rank_free(context, &point);
@@ -58,15 +73,13 @@ static void fit_report(struct bench *bench, const struct rating *rating, const c
 {
     struct fit_outcome outcome[2];
     for (size_t threads = 1; threads <= 2; threads++) {
-        struct fit_outcome *own = &outcome[threads - 1], begun;
-        rating_fit(rating, solver, rank, threads, 1, &begun);
+        struct fit_outcome *own = &outcome[threads - 1];
         rating_fit(rating, solver, rank, threads, ITERATIONS, own);
-        double seconds = threads == 1 ? own->cpu : own->wall, first = threads == 1 ? begun.cpu : begun.wall;
-        double iteration = own->iterations > 1 ? (seconds - first) / (double)(own->iterations - 1) : seconds;
+        double seconds = threads == 1 ? own->cpu : own->wall;
         json_t *figure = json_pack("{s:s, s:s, s:I, s:I, s:I, s:f, s:f, s:I, s:f, s:s, s:f}", "what", "fit", "solver",
                                    solver, "cells", (json_int_t)rating->cells.count, "rank", (json_int_t)rank,
                                    "threads", (json_int_t)threads, "seconds", seconds, "ns a cell and iteration",
-                                   iteration / (double)rating->cells.count * 1e9, "iterations",
+                                   own->iteration / (double)rating->cells.count * 1e9, "iterations",
                                    (json_int_t)own->iterations, "error on hidden cells", own->rmse, "ended by",
                                    own->stop, "MB at most", (double)own->bytes / 1e6);
         if (threads == 2)

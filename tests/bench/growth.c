@@ -10,7 +10,7 @@
 
 /* Of the two that take large tables: what auto has for them, and the quickest. */
 static const char *const solvers[] = {"fixed-rank-cg", "alternating"};
-enum { SOLVERS = sizeof solvers / sizeof *solvers, SIZES = 3, FEW = 1, MANY = 6 };
+enum { SOLVERS = sizeof solvers / sizeof *solvers, SIZES = 3, ITERATIONS = 12 };
 
 struct share {
     double iteration, start, bytes; /* of a cell, seconds and bytes */
@@ -18,12 +18,11 @@ struct share {
 
 static struct share share_measure(const struct rating *rating, const char *solver)
 {
-    struct fit_outcome few, many;
+    struct fit_outcome fit;
     double cells = (double)rating->cells.count;
-    rating_fit(rating, solver, RATING_RANK, 1, FEW, &few);
-    rating_fit(rating, solver, RATING_RANK, 1, MANY, &many);
-    double iteration = many.iterations > FEW ? (many.cpu - few.cpu) / (double)(many.iterations - FEW) : many.cpu;
-    return (struct share){iteration / cells, (few.cpu - iteration * FEW) / cells, (double)many.bytes / cells};
+    rating_fit(rating, solver, RATING_RANK, 1, ITERATIONS, &fit);
+    return (struct share){fit.iteration / cells, (fit.cpu - fit.iteration * (double)fit.iterations) / cells,
+                          (double)fit.bytes / cells};
 }
 
 void growth_measure(struct bench *bench, bool with_large)

@@ -26,6 +26,7 @@ struct low_rank;
 double rating_error(const struct rating *rating, const struct low_rank *point, double scale); /* on the hidden cells */
 struct fit_outcome {
     double cpu, wall, rmse;
+    double iteration; /* wall seconds, the median of all but the first */
     uint64_t iterations;
     uint64_t bytes; /* most held, with the table */
     const char *stop;
