@@ -64,19 +64,22 @@ static void chunk_side(const REAL *rows, const REAL *values, size_t count, size_
     }
 }
 
-/* The chunk's rows; those of the next one, be it of this line or another, are asked for. */
+/* The chunk's rows; those of the chunk behind the next one, be it of this line or another, are asked for. They are
+   asked into the second cache: it waits for more of them at once than the first, and where rows come from memory that
+   is half of the time. */
 static void chunk_take(const struct sweep_job *job, uint64_t k, size_t count, uint64_t stop, REAL *rows)
 {
     const uint32_t *across = job->half->across + k;
     const REAL *data = job->right.data;
-    size_t ahead = stop - k < 2 * SWEEP_CHUNK ? stop - k : 2 * SWEEP_CHUNK;
+    size_t left = stop - k, ahead = left < 3 * SWEEP_CHUNK ? left : 3 * SWEEP_CHUNK;
     for (size_t c = 0; c < count; c++) {
         const REAL *from = data + across[c] * job->right.stride;
         for (size_t at = 0; at < job->width; at += LANES)
             *(vec *)(rows + c * job->width + at) = *(const vec *)(from + at);
     }
-    for (size_t c = count; c < count + SWEEP_CHUNK && c < ahead; c++)
-        row_prefetch(data + across[c] * job->right.stride, job->width);
+    for (size_t c = count + SWEEP_CHUNK; c < count + 2 * SWEEP_CHUNK && c < ahead; c++)
+        for (size_t at = 0; at < job->width; at += CACHE_LINE / sizeof(REAL))
+            __builtin_prefetch(data + across[c] * job->right.stride + at, 0, 2);
 }
 
 static void line_gather(const struct sweep_job *job, const struct sweep_room *room, uint32_t line, uint64_t stop)

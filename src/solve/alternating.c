@@ -32,7 +32,7 @@
  * Caterini, De Sterck 2015) was left out: it has a pass to pay and three or four sweeps to save on.
  *
  * Cost an iteration: |seen| (2 r^2 + 7r), (m + n) (r^3/6 + 2 r^2). Workspace: four matrices of the shorter side, two of
- * the longer, one value a cell. Parallel in the passes only, which give the same bits for any number of workers.
+ * the longer. Parallel in the passes only, which give the same bits for any number of workers.
  */
 #include "solve/solve_internal.h"
 
@@ -92,6 +92,7 @@ static fescue_status alternating_create(struct field *field, const struct low_ra
     arena_reserve(&at->arena, packed_size(rank), sizeof(double));
     TRY(arena_open(context, &at->arena));
     projection_carve(&at->arena, field, point, &at->projection);
+    TRY(sweep_arrange(&field->sweep, at->projection.by_short));
     at->basis = matrix_carve(&at->arena, shorter, rank);
     at->turned = matrix_carve(&at->arena, shorter, rank);
     at->metric = matrix_carve(&at->arena, rank, rank);

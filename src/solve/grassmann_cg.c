@@ -82,6 +82,7 @@ static void cg_destroy(fescue_context *context, void **state)
 static void cg_reserve(struct arena *arena, const struct field *field, size_t shorter, size_t longer, size_t rank)
 {
     projection_reserve(arena, field, rank);
+    values_reserve(arena, field);
     grassmann_reserve(arena, shorter, rank);
     for (int k = 0; k < 4; k++)
         matrix_reserve(arena, shorter, rank);
@@ -93,6 +94,7 @@ static void cg_carve(struct grassmann_cg *cg, struct field *field, const struct 
 {
     struct matrix *const of_short[] = {&cg->basis, &cg->gradient, &cg->descent, &cg->direction};
     projection_carve(&cg->arena, field, point, &cg->projection);
+    cg->projection.residual = values_carve(&cg->arena, field);
     const struct half *half = cg->projection.by_short;
     cg->work = grassmann_carve(field->problem->context, &cg->arena, half->lines, point->rank);
     for (int k = 0; k < 4; k++)

@@ -22,15 +22,10 @@
  * are s gives P(U (-dW)') - s, which is what the weights multiply, up to its sign.
  *
  * Cost of a product: five passes of 2r flops a cell, seven when exact, and long r^2. Workspace: two matrices of the
- * longer side and its factors, long r^2/2; three values a cell. Parallel in the passes, and line by line in the small
+ * longer side and its factors, long r^2/2; four values a cell. Parallel in the passes, and line by line in the small
  * solves; the bits do not depend on the workers, since lines are independent.
  */
 #include "solve/solve_internal.h"
-
-static size_t value_size(const struct field *field)
-{
-    return field->problem->target.precision == FESCUE_SINGLE ? sizeof(float) : sizeof(double);
-}
 
 void hessian_reserve(struct arena *arena, const struct field *field, size_t rank)
 {
@@ -44,8 +39,8 @@ void hessian_reserve(struct arena *arena, const struct field *field, size_t rank
     matrix_reserve(arena, longer, rank);
     matrix_reserve(arena, shorter, rank);
     matrix_reserve(arena, rank, rank);
-    for (int k = 0; k < 3; k++)
-        arena_reserve(arena, target->count, value_size(field));
+    for (int k = 0; k < 4; k++)
+        values_reserve(arena, field);
     if (size_product(longer, packed_size(rank), &factors))
         arena_reserve(arena, factors, sizeof(double));
     else
@@ -54,16 +49,17 @@ void hessian_reserve(struct arena *arena, const struct field *field, size_t rank
 
 void hessian_carve(struct arena *arena, struct projection *projection, struct hessian *hessian)
 {
-    size_t count = projection->field->problem->target.count, size = value_size(projection->field);
+    const struct field *field = projection->field;
     size_t shorter = projection->by_short->lines, longer = projection->by_long->lines, rank = projection->rank;
     *hessian = (struct hessian){.projection = projection};
     hessian->across = matrix_carve(arena, longer, rank);
     hessian->follow = matrix_carve(arena, longer, rank);
     hessian->product = matrix_carve(arena, shorter, rank);
     hessian->damping = matrix_carve(arena, rank, rank);
-    hessian->values = arena_carve(arena, count, size);
-    hessian->zeros = arena_carve(arena, count, size);
-    hessian->long_residual = arena_carve(arena, count, size);
+    hessian->values = values_carve(arena, field);
+    hessian->zeros = values_carve(arena, field);
+    hessian->long_residual = values_carve(arena, field);
+    projection->residual = values_carve(arena, field);
     projection->factors = arena_carve(arena, longer * packed_size(rank), sizeof(double));
 }
 

@@ -33,11 +33,6 @@ static const struct half *half_short(const struct field *field)
     return target->rows <= target->columns ? &target->by_row : &target->by_column;
 }
 
-static size_t value_size(const struct field *field)
-{
-    return field->problem->target.precision == FESCUE_SINGLE ? sizeof(float) : sizeof(double);
-}
-
 void projection_reserve(struct arena *arena, const struct field *field, size_t rank)
 {
     const struct half *half = half_short(field);
@@ -46,7 +41,6 @@ void projection_reserve(struct arena *arena, const struct field *field, size_t r
     matrix_reserve(arena, half->length, rank);
     matrix_reserve(arena, half->length, rank);
     matrix_reserve(arena, rank, rank);
-    arena_reserve(arena, field->problem->target.count, value_size(field));
     arena_reserve(arena, rank, sizeof(double));
     arena_reserve(arena, rank, sizeof(double));
     arena_reserve(arena, dense_work_size(half->length, rank), sizeof(double));
@@ -69,7 +63,6 @@ void projection_carve(struct arena *arena, struct field *field, const struct low
     projection->weights = matrix_carve(arena, half->length, rank);
     projection->spare = matrix_carve(arena, half->length, rank);
     projection->core = matrix_carve(arena, rank, rank);
-    projection->residual = arena_carve(arena, target->count, value_size(field));
     projection->ridge = arena_carve(arena, rank, sizeof(double));
     projection->spectrum = arena_carve(arena, rank, sizeof(double));
     projection->dense = arena_carve(arena, dense_work_size(half->length, rank), sizeof(double));

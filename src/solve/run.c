@@ -54,13 +54,6 @@ struct run {
     double started;
 };
 
-fescue_status values_create(struct field *field, void **values)
-{
-    const struct cells *target = &field->problem->target;
-    size_t size = target->precision == FESCUE_SINGLE ? sizeof(float) : sizeof(double);
-    return memory_take(field->problem->context, target->count, size, values);
-}
-
 static double rmse_of(const struct problem *problem, double square)
 {
     return problem->target.count == 0 ? 0 : sqrt(square / (double)problem->target.count);

@@ -66,6 +66,8 @@ fescue_status run_recall(fescue_context *context, struct memo_work *work, const 
 
 /* Room for one value a seen cell, in the store's precision. The caller owns *values. */
 fescue_status values_create(struct field *field, void **values);
+void values_reserve(struct arena *arena, const struct field *field); /* the same in an arena */
+void *values_carve(struct arena *arena, const struct field *field);
 /* The seen cells by row of the problem's target. */
 static inline const struct half *field_rows(const struct field *field)
 {
@@ -103,7 +105,7 @@ struct projection {
     struct matrix basis, weights;
     struct matrix gradient; /* (I - U U') R W, short x rank */
     struct matrix core;     /* rank x rank: U'R W while projecting; any use in between */
-    void *residual;         /* R in the order of by_short */
+    void *residual;         /* R in the order of by_short; NULL: not wanted */
     double *ridge;          /* rank numbers: the penalty is sum_k ridge_k |W_k|^2 */
     double *factors;        /* long x packed_size(rank): Cholesky factors of the lines' systems; NULL: not wanted */
     double square, objective;
@@ -111,10 +113,11 @@ struct projection {
     double *spectrum, *dense;
 };
 void projection_reserve(struct arena *arena, const struct field *field, size_t rank);
-/* Carves what was reserved and takes the basis of a point. */
+/* Carves what was reserved and takes the basis of a point; residual and factors are none yet. */
 void projection_carve(struct arena *arena, struct field *field, const struct low_rank *point,
                       struct projection *projection);
-/* Weights, residual, square, objective and gradient for the basis as it stands. Two passes. */
+/* Weights, square, objective and gradient for the basis as it stands, and the residual where there is room for it. Two
+   passes. */
 void projection_evaluate(struct projection *projection);
 /* X in orthonormal form. Spoils spare and core. */
 fescue_status projection_write(struct projection *projection, struct low_rank *point);

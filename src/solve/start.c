@@ -50,12 +50,14 @@ static fescue_status leading_spaces(struct field *field, uint64_t seed, struct l
     fescue_status status = TAKE(context, sparse.by_short->lines, &scale);
     if (status != FESCUE_OK)
         return status;
+    TRY(sweep_arrange(&field->sweep, sparse.by_short));
     trim(sparse.by_short, scale);
     sparse.short_scale = scale;
     sparse.short_values = sparse.by_short->value;
     sparse.long_values = sparse.by_long->value;
-    status = krylov_triplets(&sparse, out->rank, seed, rows_short ? out->left : out->right, out->spectrum,
-                             rows_short ? out->right : out->left);
+    TRY(krylov_triplets(&sparse, out->rank, seed, rows_short ? out->left : out->right, out->spectrum,
+                        rows_short ? out->right : out->left));
+done:
     GIVE(context, &scale);
     return status;
 }
