@@ -326,7 +326,7 @@ done:
 
 fescue_status long_chunks_read(struct long_chunks *chunks)
 {
-    const struct chunk_reader reader = {chunks, chunk_parse, chunk_finish};
+    const struct chunk_reader reader = {chunks, chunk_parse, chunk_finish, NULL};
     const struct pile *pile = &chunks->delimited->pile;
     for (size_t k = 0; k < chunks->workers; k++)
         chunks->worker[k].pile = (struct pile){.context = pile->context,

@@ -280,6 +280,7 @@ fescue_status market_parse(const struct market_form *form, size_t worker, const 
         return FESCUE_OK;
     TRY(pile_block_create(form->pile, &form->room[worker], (uint32_t)lines, block));
     TRY(entries_parse(form, rest, *block, &is_plain));
+    (*block)->ascends = is_plain && !form->is_array && pile_block_ascends(*block);
 done:
     if (status != FESCUE_OK || !is_plain)
         pile_block_free(form->pile->context, block);

@@ -232,6 +232,8 @@ static fescue_status sizes_read(struct market *market)
         market->entries = array_entries(market);
     market->pile.keeps_lines = !market->form.is_array;
     pile_told_size(&market->pile, market->form.rows, market->form.columns);
+    if (!market->form.is_array)
+        TRY(ascent_open(&market->pile, market->form.rows, market->entries, stream_text_size(market->stream)));
 done:
     return status;
 }
@@ -417,9 +419,15 @@ static fescue_status chunk_finish(void *data, size_t worker, struct chunk *chunk
     return pile_take(&market->pile, block, &run, 1);
 }
 
+static void block_settle(void *data, const struct pile_block *block)
+{
+    const struct market *market = data;
+    ascent_fill(&market->pile, block);
+}
+
 static fescue_status chunks_read(struct market *market)
 {
-    const struct chunk_reader reader = {market, chunk_parse, chunk_finish};
+    const struct chunk_reader reader = {market, chunk_parse, chunk_finish, block_settle};
     fescue_context *context = market->pile.context;
     const size_t workers = team_workers(context);
     fescue_status status;

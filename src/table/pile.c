@@ -7,6 +7,8 @@
  * believed: a block is taken when the entries for it are there, or the text that they come from. (Texts, kept for small
  * tables only, need the pile until they are in order.)
  *
+ * Entries that come in order need none of this (ascent.c): 12 n bytes for the rows are all, before the columns.
+ *
  * The line of an entry, wanted only for a message about duplicates, is kept in runs: an ordinary file is one run.
  */
 #include "table/table_internal.h"
@@ -145,6 +147,15 @@ static void block_append(struct pile *pile, struct pile_block *block)
     pile->blocks++;
 }
 
+void pile_block_prepend(struct pile *pile, struct pile_block *block)
+{
+    block->next = pile->first;
+    pile->first = block;
+    if (pile->last == NULL)
+        pile->last = block;
+    pile->blocks++;
+}
+
 /* ---- entries ---------------------------------------------------------------------------------------------------- */
 
 /* From this entry on lines begin anew, unless they follow those before. */
@@ -180,6 +191,7 @@ uint64_t pile_line(const struct pile *pile, uint64_t entry)
 fescue_status pile_add(struct pile *pile, const struct pile_entry *entry)
 {
     fescue_status status = FESCUE_OK;
+    ascent_end(pile);
     if (pile->last == NULL || pile->last->count == pile->last->capacity) {
         struct pile_block *block;
         TRY(pile_block_create(pile, NULL, PILE_BLOCK, &block));
@@ -203,8 +215,10 @@ fescue_status pile_take(struct pile *pile, struct pile_block **block, const stru
     }
     if (!pile->keeps_texts) /* they were, while it was parsed */
         odd_texts_free(pile->context, &(*block)->odd);
-    block_append(pile, *block);
     pile->count += entries;
+    if (ascent_claim(pile, *block))
+        goto done;
+    block_append(pile, *block);
     *block = NULL;
 done:
     return status;
@@ -229,6 +243,7 @@ static void blocks_free(struct pile *pile)
 void pile_free(struct pile *pile)
 {
     blocks_free(pile);
+    ascent_free(pile);
     GIVE(pile->context, &pile->runs);
 }
 
@@ -309,8 +324,15 @@ fescue_status pile_build(struct pile *pile, const struct stream *stream, enum fe
                             .count = cells_of(pile),
                             .precision = pile->precision};
     pile_told_size(pile, cells->rows, cells->columns);
-    TRY(rows_sort(pile, cells));
-    bool is_ascending = half_is_ascending(pile->context, &cells->by_row);
+    bool is_ascending = pile->ascent.count == pile->count;
+    if (is_ascending) {
+        cells->by_row = (struct half){.lines = cells->rows, .length = cells->columns};
+        ascent_become(pile, &cells->by_row);
+    } else {
+        TRY(ascent_leave(pile));
+        TRY(rows_sort(pile, cells));
+        is_ascending = half_is_ascending(pile->context, &cells->by_row);
+    }
     if (!is_ascending && duplicates == FESCUE_DUPLICATES_REFUSE)
         TRY(duplicates_refuse(pile, stream, table));
     if (!pile->keeps_texts)

@@ -2,7 +2,7 @@
  *
  * The text of a source, in chunks of whole lines, and the pipeline that reads and parses them side by side.
  *
- *     source --fill--> chunk --parse--> block of entries --finish--> pile
+ *     source --fill--> chunk --parse--> block of entries --finish--> pile, or --settle--> cells in order
  *              one after the other  |  any order, any worker  |  one after the other, in the order of the text
  *
  * A chunk ends with the last end of line that fits; what is left, less than a line, is carried over to the next one. A
@@ -53,6 +53,11 @@ struct stream {
 uint64_t stream_line_number(const struct stream *stream)
 {
     return stream->line;
+}
+
+uint64_t stream_text_size(const struct stream *stream)
+{
+    return stream->source.is_gzip ? 0 : stream->disk_size;
 }
 
 const char *stream_name(const struct stream *stream)
@@ -386,6 +391,8 @@ static void chunk_parse(struct stream *stream, const struct chunk_reader *reader
         TRY(chunk->complaint != NULL ? complaint_tell(stream, chunk)
                                      : reader->finish(reader->data, worker, chunk, &block, &is_left));
         turn_pass(stream, is_left);
+        if (block != NULL && reader->settle != NULL)
+            reader->settle(reader->data, block);
     }
 done:
     pile_block_free(stream->context, &block);

@@ -184,16 +184,19 @@ fescue_status stream_read(struct stream *stream, fescue_status (*read)(void *dat
    nor after, and leaves *block NULL when that is not enough. `finish` is called once for each chunk in their order, by
    the worker that parsed it and has parsed nothing since; it takes the block (and nulls *block), reads the chunk line
    by line, or leaves it: then stream_parse ends, stream_line gives the lines from this chunk on, and it may be called
-   again. */
+   again. `settle`, if there is one, is called with a block that finish did not take, beside others again, before that
+   is given back. */
 struct chunk_reader {
     void *data;
     fescue_status (*parse)(void *data, size_t worker, const struct chunk *chunk, struct pile_block **block);
     fescue_status (*finish)(void *data, size_t worker, struct chunk *chunk, struct pile_block **block, bool *is_left);
+    void (*settle)(void *data, const struct pile_block *block);
 };
 fescue_status stream_parse(struct stream *stream, const struct chunk_reader *reader);
 uint64_t stream_chunk_number(const struct stream *stream); /* of the line delivered last; UINT64_MAX behind the end */
 bool stream_chunk_is_read(const struct stream *stream);    /* that line is the last of its chunk */
 
+uint64_t stream_text_size(const struct stream *stream);   /* bytes of all text; 0 when that is not known */
 uint64_t stream_line_number(const struct stream *stream); /* of the line delivered last, from 1 */
 const char *stream_name(const struct stream *stream);     /* as the user calls it */
 fescue_context *stream_context(const struct stream *stream);
@@ -266,6 +269,9 @@ struct pile_block {
     void *value;
     uint8_t *code; /* NULL when texts are not kept */
     struct odd_texts odd;
+    bool ascends;    /* by row, and by column within each; false where nobody looked */
+    bool is_claimed; /* its cells go to the pile's ascent, from `place` on */
+    uint64_t place;
 };
 enum { PILE_BLOCK = 1 << 14 }; /* entries, when it is not known how many will come: some 200 kB */
 
@@ -273,7 +279,16 @@ enum { PILE_BLOCK = 1 << 14 }; /* entries, when it is not known how many will co
 struct line_run {
     uint64_t entry, line;
 };
-/* Entries in the order of the input; blocks, so that growing copies nothing. */
+/* The first cells of the input, as long as they come in order (ascent.c); zero is none. */
+struct ascent {
+    uint64_t *start; /* as in a half of rows, up to the last row that has begun */
+    uint32_t *across;
+    void *value;
+    uint64_t count, capacity;
+    uint32_t rows, row, column; /* of the last cell */
+    bool is_open;
+};
+/* Entries in the order of the input: those of the ascent, then blocks, so that growing copies nothing. */
 struct pile {
     fescue_context *context; /* borrowed */
     enum fescue_precision precision;
@@ -282,7 +297,8 @@ struct pile {
     bool keeps_texts;
     bool keeps_lines;    /* of entries: where no cell can come twice nobody asks for them */
     uint64_t dense_most; /* texts are kept while rows * columns is at most this */
-    uint64_t count;
+    uint64_t count;      /* of all entries */
+    struct ascent ascent;
     struct pile_block *first, *last;
     struct pile_slab *slabs;
     size_t blocks;
@@ -320,9 +336,21 @@ static inline void pile_block_put(const struct pile *pile, struct pile_block *bl
 fescue_status pile_block_add(const struct pile *pile, struct pile_block *block, const struct pile_entry *entry);
 void pile_block_free(fescue_context *context, struct pile_block **block); /* NULL-safe */
 /* Takes a block, whose entries, counted from 0, lie on the lines that the runs tell; the first run is that of entry 0.
- */
+   One that the ascent claims is not nulled: ascent_fill is called with it, and then it is given back. */
 fescue_status pile_take(struct pile *pile, struct pile_block **block, const struct line_run *runs, size_t count);
 uint64_t pile_line(const struct pile *pile, uint64_t entry);
+void pile_block_prepend(struct pile *pile, struct pile_block *block); /* whose entries are counted already */
+
+/* Room for entries that come in order, where a text of this size (0: not known) can hold them. */
+fescue_status ascent_open(struct pile *pile, uint64_t rows, uint64_t entries, uint64_t text_size);
+bool pile_block_ascends(const struct pile_block *block);
+bool ascent_claim(struct pile *pile, struct pile_block *block); /* whether the block goes on where the last one ended */
+void ascent_fill(const struct pile *pile, const struct pile_block *block); /* if claimed. Beside other workers */
+void ascent_end(struct pile *pile);                                        /* nothing more is claimed */
+void ascent_become(struct pile *pile,
+                   struct half *half);         /* all entries, as the rows of cells, opened but for its arrays */
+fescue_status ascent_leave(struct pile *pile); /* for blocks of the pile */
+void ascent_free(struct pile *pile);
 /* Makes table->cells, texts and duplicates from the pile, which is used up. The table's labels are there already. */
 fescue_status pile_build(struct pile *pile, const struct stream *stream, enum fescue_duplicates duplicates,
                          fescue_table *table);

@@ -39,6 +39,9 @@ struct layout {
     bool is_wide;     /* more blanks than needed, and CR LF */
     bool is_integer;
     uint64_t promised, bad_line; /* entries in the header; a line that reads "1 x 1" (0: none) */
+    bool is_ordered;             /* cells come row by row */
+    uint64_t swapped;            /* but for this one and the next (0: none) */
+    uint64_t repeated;           /* this one is where the one before is (0: none) */
 };
 
 static double value_at(uint64_t k, bool is_integer)
@@ -47,10 +50,17 @@ static double value_at(uint64_t k, bool is_integer)
     return is_integer ? floor(2000 * u) - 1000 : (double)(float)(u - 0.5) * pow(10, (double)(k % 7) - 3);
 }
 
-/* Cells in a scrambled order, none twice: 104729 is a prime that divides no number of cells. */
-static void place_at(uint64_t k, uint64_t place[2])
+/* Cells in a scrambled order, none twice: 104729 is a prime that divides no number of cells. Or in order, every twelfth
+   one, with some rows left out. */
+static void place_at(const struct layout *layout, uint64_t k, uint64_t place[2])
 {
+    if (layout->swapped > 0 && (k == layout->swapped || k == layout->swapped + 1))
+        k ^= layout->swapped ^ (layout->swapped + 1);
+    if (layout->repeated > 0 && k == layout->repeated)
+        k--;
     uint64_t cell = k * 104729 % ((uint64_t)ROWS * COLUMNS);
+    if (layout->is_ordered)
+        cell = k * 10 + (k > ENTRIES / 2 ? 17000 : 2000);
     place[0] = cell / COLUMNS;
     place[1] = cell % COLUMNS;
 }
@@ -65,7 +75,7 @@ static char *text_write(const struct layout *layout, size_t *length)
             layout->is_integer ? "integer" : "real", ROWS, COLUMNS, layout->promised);
     for (uint64_t k = 0; k < ENTRIES; k++) {
         uint64_t place[2];
-        place_at(k, place);
+        place_at(layout, k, place);
         if (layout->remarks > 0 && random_uniform_at(seed, RANDOM_TEST, 2, k) * (double)layout->remarks < 1) {
             fputs(k % 2 == 0 ? "% a remark\n" : "\n", out);
             line++;
@@ -80,7 +90,7 @@ static char *text_write(const struct layout *layout, size_t *length)
     return text;
 }
 
-static void cells_check(const fescue_table *table, bool is_integer)
+static void cells_check(const fescue_table *table, const struct layout *layout)
 {
     const struct half *rows = &table->cells.by_row;
     double *expected = malloc((size_t)ROWS * COLUMNS * sizeof *expected);
@@ -90,8 +100,8 @@ static void cells_check(const fescue_table *table, bool is_integer)
     for (uint64_t k = 0; k < ENTRIES; k++) {
         char text[32];
         uint64_t place[2];
-        place_at(k, place);
-        sprintf(text, "%.9g", value_at(k, is_integer));
+        place_at(layout, k, place);
+        sprintf(text, "%.9g", value_at(k, layout->is_integer));
         expected[place[0] * COLUMNS + place[1]] = strtod(text, NULL);
     }
     assert_int_equal(table->cells.count, ENTRIES);
@@ -133,7 +143,7 @@ static void layout_check(struct bench *bench, const struct layout *layout)
                       FESCUE_OK);
         if (first == NULL) {
             first = table;
-            cells_check(table, layout->is_integer);
+            cells_check(table, layout);
         } else {
             tables_equal(first, table);
             table_destroy(&table);
@@ -151,6 +161,11 @@ static void every_layout_gives_the_same_table(void **state)
         {.promised = ENTRIES, .remarks = 7},
         {.promised = ENTRIES, .is_wide = true, .remarks = 40000},
         {.promised = ENTRIES, .is_integer = true},
+        {.promised = ENTRIES, .is_ordered = true},
+        {.promised = ENTRIES, .is_ordered = true, .remarks = 20000},
+        {.promised = ENTRIES, .is_ordered = true, .swapped = 1},
+        {.promised = ENTRIES, .is_ordered = true, .swapped = 30000},
+        {.promised = ENTRIES, .is_ordered = true, .swapped = ENTRIES - 2},
     };
     for (size_t k = 0; k < sizeof layouts / sizeof layouts[0]; k++)
         layout_check(bench_of(state), &layouts[k]);
@@ -159,9 +174,11 @@ static void every_layout_gives_the_same_table(void **state)
 static void layout_refused(struct bench *bench, const struct layout *layout, const char *sentence)
 {
     struct packed packed = layout_pack(layout);
-    for (size_t w = 0; w < 6; w++) {
+    for (size_t w = 0; w < 12; w++) {
+        const struct table_reading reading = {.dense_most = w < 6 ? 0 : 1};
+        size_t form = w / 3 % 2;
         assert_status(bench->context, team_resize(bench->context, workers[w % 3]), FESCUE_OK);
-        bytes_refused(bench, packed.bytes[w / 3], packed.count[w / 3], NULL, sentence);
+        bytes_refused(bench, packed.bytes[form], packed.count[form], &reading, sentence);
     }
     packed_free(&packed);
 }
@@ -184,7 +201,7 @@ static void promises_are_held_to(void **state)
     struct bench *bench = bench_of(state);
     char sentence[256], entry[64];
     uint64_t place[2];
-    place_at(30000, place);
+    place_at(&(struct layout){0}, 30000, place);
     snprintf(entry, sizeof entry, "%" PRIu64 " %" PRIu64 " %.9g", place[0] + 1, place[1] + 1, value_at(30000, false));
     snprintf(sentence, sizeof sentence,
              "line 30003: '%s' was found after all 30000 entries that the header promises, the end of the file was "
@@ -193,6 +210,23 @@ static void promises_are_held_to(void **state)
     layout_refused(bench, &(struct layout){.promised = 30000}, sentence);
     layout_refused(bench, &(struct layout){.promised = ENTRIES + 1},
                    "line 50002: the file ends here after 50000 of the 50001 entries that its header promises");
+}
+
+/* Cells that come twice, in a file that is in order but for them. */
+static void repeated_cells_are_told_with_both_lines(void **state)
+{
+    static const uint64_t repeated[] = {1, 17000, 30000, ENTRIES - 1};
+    for (size_t k = 0; k < sizeof repeated / sizeof repeated[0]; k++) {
+        const struct layout layout = {.promised = ENTRIES, .is_ordered = true, .repeated = repeated[k]};
+        char sentence[256];
+        uint64_t place[2];
+        place_at(&layout, repeated[k], place);
+        snprintf(sentence, sizeof sentence,
+                 "line %" PRIu64 ": row %" PRIu64 ", column %" PRIu64 " was given on line %" PRIu64
+                 " already; --duplicates mean, last or first takes a cell that comes more than once",
+                 repeated[k] + 3, place[0] + 1, place[1] + 1, repeated[k] + 2);
+        layout_refused(bench_of(state), &layout, sentence);
+    }
 }
 
 /* A fault in the text is told before damage that comes behind it, though that may be met first. */
@@ -390,6 +424,7 @@ int main(void)
         BENCH_TEST(every_layout_gives_the_same_table),
         BENCH_TEST(faults_are_told_with_their_line),
         BENCH_TEST(promises_are_held_to),
+        BENCH_TEST(repeated_cells_are_told_with_both_lines),
         BENCH_TEST(what_comes_first_is_told),
         BENCH_TEST(arrays_keep_their_places),
         BENCH_TEST(a_remark_changes_nothing),
