@@ -11,11 +11,16 @@
 /* Cells of one line whose moments are added in one go. 48 positions of 512 bytes (a tile of the kernel) leave room in a
    nearest cache of 32 KB for the sums. */
 enum { BATCH_STRETCH = 48 };
+/* Cells ahead of which moments in halves are asked for: some hundred nanoseconds. */
+enum { BATCH_AHEAD = 8 };
+/* Numbers in a block of halves: a line of the caches. */
+enum { BATCH_BLOCK = 16 };
 struct batch_stretch {
     size_t count;
-    size_t offset[BATCH_STRETCH]; /* of the position's moment, in doubles */
-    double factor[BATCH_STRETCH]; /* its weight c */
-    double pull[BATCH_STRETCH];   /* c z */
+    size_t offset[BATCH_STRETCH + BATCH_AHEAD]; /* of the position's moment, in doubles; of halves, in words, and of
+                                                   the cells ahead */
+    double factor[BATCH_STRETCH];               /* its weight c */
+    double pull[BATCH_STRETCH];                 /* c z */
 };
 
 struct batch_kernel {
@@ -23,11 +28,18 @@ struct batch_kernel {
        `next` will need is asked for; NULL when it is near. */
     void (*add)(const double *data, const struct batch_stretch *stretch, const struct batch_stretch *next,
                 const double *factor, size_t size, double *sum);
+    /* The same of `blocks` blocks of halves, and of the first of them, which hold `mean` numbers, with pull into
+       target. sum and target have room for whole blocks, target for two at least. */
+    void (*add_halves)(const uint64_t *data, const struct batch_stretch *stretch, size_t blocks, size_t mean,
+                       double *sum, double *target);
     /* epsilon: of the arithmetic that A was summed up in */
     unsigned (*solve)(double *a, size_t k, double *b, double *inverse, double epsilon);
     void (*pack)(const double *lines, size_t stride, size_t size, double *batch);
     void (*unpack)(const double *batch, size_t size, double *const line[BATCH_LANES]);
 };
+/* A line's sums in the order of halves become a packed triangle, in place, by way of d numbers of room. */
+void moments_restore(size_t d, size_t one, double *room, double *numbers);
+
 extern const struct batch_kernel batch_portable;
 #if defined(__x86_64__)
 extern const struct batch_kernel batch_avx2, batch_avx512;

@@ -87,6 +87,108 @@ static void stretch_add(const double *data, const struct batch_stretch *stretch,
     }
 }
 
+/* ---- sums of weighted moments in halves ---------------------------------------------------------------------------
+ */
+
+/* Blocks whose sums stay in registers: of 32 of them, of 16. */
+#if LANES == 8
+enum { HALVES_MOST = 11, HALVES_PULLED = 2 };
+#elif LANES == 4
+enum { HALVES_MOST = 3, HALVES_PULLED = 0 };
+#else
+enum { HALVES_MOST = 1, HALVES_PULLED = 0 };
+#endif
+enum { BLOCK_PARTS = 8 / LANES, BLOCK_SUMS = 2 * BLOCK_PARTS };
+
+/* Sum v of a block: which of its numbers it begins with. */
+INLINE size_t halves_at(size_t v)
+{
+    return v / BLOCK_SUMS * BATCH_BLOCK + v % 2 * 8 + v % BLOCK_SUMS / 2 * LANES;
+}
+
+INLINE void halves_tile(const uint64_t *data, const struct batch_stretch *stretch, const double *factor, double *sum,
+                        double *target, const size_t blocks, const size_t pulled)
+{
+    vec total[HALVES_MOST * BLOCK_SUMS], also[HALVES_PULLED * BLOCK_SUMS + 1];
+    for (size_t v = 0; v < blocks * BLOCK_SUMS; v++)
+        total[v] = (vec){0};
+    for (size_t v = 0; v < pulled * BLOCK_SUMS; v++)
+        also[v] = (vec){0};
+    for (size_t c = 0; c < stretch->count; c++) {
+        const uint64_t *moment = data + stretch->offset[c], *ahead = data + stretch->offset[c + BATCH_AHEAD];
+        vec share = splat(factor[c]), pull = splat(stretch->pull[c]);
+        for (size_t b = 0; b < blocks; b++)
+            __builtin_prefetch(ahead + b * 8);
+        for (size_t v = 0; v < blocks * BLOCK_SUMS; v += 2) {
+            vec_bits word = *(const vec_bits *)(moment + v / 2 * LANES);
+            vec high = (vec)word, low = (vec)(word << 32);
+            total[v] = MADD(share, high, total[v]);
+            total[v + 1] = MADD(share, low, total[v + 1]);
+            if (v < pulled * BLOCK_SUMS) {
+                also[v] = MADD(pull, high, also[v]);
+                also[v + 1] = MADD(pull, low, also[v + 1]);
+            }
+        }
+    }
+    for (size_t v = 0; v < blocks * BLOCK_SUMS; v++)
+        *(vec *)(sum + halves_at(v)) += total[v];
+    for (size_t v = 0; v < pulled * BLOCK_SUMS; v++)
+        *(vec *)(target + halves_at(v)) += also[v];
+}
+
+#define HALVES_CASE(n)                                                                                                 \
+    case n:                                                                                                            \
+        if (HALVES_MOST < n)                                                                                           \
+            break;                                                                                                     \
+        if (HALVES_PULLED > 0 && n > 1 && target != NULL)                                                              \
+            halves_tile(data, stretch, factor, sum, target, n, HALVES_PULLED);                                         \
+        else                                                                                                           \
+            halves_tile(data, stretch, factor, sum, NULL, n, 0);                                                       \
+        break;
+
+static void halves_tile_any(const uint64_t *data, const struct batch_stretch *stretch, const double *factor,
+                            double *sum, double *target, size_t blocks)
+{
+    switch (blocks) {
+        HALVES_CASE(1)
+        HALVES_CASE(2)
+        HALVES_CASE(3)
+        HALVES_CASE(4)
+        HALVES_CASE(5)
+        HALVES_CASE(6)
+        HALVES_CASE(7)
+        HALVES_CASE(8)
+        HALVES_CASE(9)
+        HALVES_CASE(10)
+        HALVES_CASE(11)
+    default:
+        break;
+    }
+}
+
+/* Tiles of nearly the same size; target, when it is not NULL, in the first of them. */
+static void halves_sum(const uint64_t *data, const struct batch_stretch *stretch, const double *factor, double *sum,
+                       double *target, size_t blocks)
+{
+    for (size_t tiles = (blocks + HALVES_MOST - 1) / HALVES_MOST; tiles > 0; tiles--) {
+        size_t now = (blocks + tiles - 1) / tiles;
+        halves_tile_any(data, stretch, factor, sum, target, now);
+        data += now * 8;
+        sum += now * BATCH_BLOCK;
+        blocks -= now;
+        target = NULL;
+    }
+}
+
+static void halves_add(const uint64_t *data, const struct batch_stretch *stretch, size_t blocks, size_t mean,
+                       double *sum, double *target)
+{
+    bool at_once = mean <= HALVES_PULLED * BATCH_BLOCK && blocks > 1;
+    halves_sum(data, stretch, stretch->factor, sum, at_once ? target : NULL, blocks);
+    if (!at_once)
+        halves_sum(data, stretch, stretch->pull, target, NULL, (mean + BATCH_BLOCK - 1) / BATCH_BLOCK);
+}
+
 /* ---- systems ------------------------------------------------------------------------------------------------------
  */
 
@@ -295,4 +397,4 @@ static void lines_unpack(const double *batch, size_t size, double *const line[BA
         }
 }
 
-const struct batch_kernel BATCH_KERNEL = {stretch_add, lanes_all, lines_pack, lines_unpack};
+const struct batch_kernel BATCH_KERNEL = {stretch_add, halves_add, lanes_all, lines_pack, lines_unpack};

@@ -19,6 +19,9 @@
  * from the nearest cache for each line that has a cell there; its sum stays in registers. Where lines see few
  * positions there is nothing to share, and each goes through its cells alone, asking for those 48 cells ahead.
  *
+ * In halves (moments_halves.c) there is half as much to read, and each line goes through its cells alone, up to 176
+ * numbers at once, whose sums stay in registers where there are enough of them, asking for those eight cells ahead.
+ *
  * Either way the sums of a line run over its cells in order: the bits depend on the instruction set only in that some
  * round products before they are added, and on the number of threads not at all.
  */
@@ -38,22 +41,31 @@ struct gather {
     size_t first, count;            /* lines */
     double *second, *target, *tail; /* of each line: sums as they grow; tail is target behind `one` */
     double *square;
+    size_t stride, target_stride; /* of a line of these */
 };
 
+/* Whole blocks, and two of them at least. */
 static size_t target_stride(size_t regressors)
 {
-    return (regressors + 7) / 8 * 8;
+    size_t whole = (regressors + BATCH_BLOCK - 1) / BATCH_BLOCK * BATCH_BLOCK;
+    return whole < 2 * BATCH_BLOCK ? 2 * BATCH_BLOCK : whole;
+}
+
+static size_t sum_stride(size_t regressors)
+{
+    size_t whole = 2 * moments_words(regressors);
+    return whole < moments_stride(regressors) ? moments_stride(regressors) : whole;
 }
 
 size_t moments_batch_size(size_t regressors)
 {
-    return BATCH_LANES * (2 * moments_stride(regressors) + 3 * target_stride(regressors) + 1);
+    return BATCH_LANES * (2 * sum_stride(regressors) + 3 * target_stride(regressors) + 1);
 }
 
 struct moments_batch moments_batch_carve(double *at, size_t regressors)
 {
     struct moments_batch batch = {.second = at};
-    batch.target = batch.second + BATCH_LANES * moments_stride(regressors);
+    batch.target = batch.second + BATCH_LANES * sum_stride(regressors);
     batch.square = batch.target + BATCH_LANES * target_stride(regressors);
     batch.work = batch.square + BATCH_LANES;
     return batch;
@@ -68,13 +80,14 @@ static uint64_t stretch_take(const struct gather *gather, uint64_t k, uint64_t e
     const uint32_t *across = half->across + k;
     size_t most = end - k < BATCH_STRETCH ? end - k : BATCH_STRETCH, count = 0;
     double sum[2] = {0};
+    size_t step = moments->halves != NULL ? moments_words(moments->regressors) : moments->stride;
     for (; count < most && across[count] < behind; count++) {
         uint32_t position = across[count];
         double weight = (moments->weight != NULL ? moments->weight[position] : 1) *
                         (half->weight != NULL ? (double)half->weight[k + count] : 1);
         double z = gather->precision == FESCUE_SINGLE ? (double)((const float *)half->value)[k + count]
                                                       : ((const double *)half->value)[k + count];
-        stretch->offset[count] = position * moments->stride;
+        stretch->offset[count] = position * step;
         stretch->factor[count] = weight;
         stretch->pull[count] = weight * z;
         sum[count % 2] += weight * z * z;
@@ -88,7 +101,7 @@ static uint64_t stretch_take(const struct gather *gather, uint64_t k, uint64_t e
 static void stretch_target(const struct gather *gather, const struct batch_stretch *stretch, size_t lane)
 {
     const struct moments *moments = gather->moments;
-    size_t one = moments->one, stride = target_stride(moments->regressors);
+    size_t one = moments->one, stride = gather->target_stride;
     moments->kernel->add(moments->data + packed_size(one), stretch, NULL, stretch->pull, one + 1,
                          gather->target + lane * stride);
     for (size_t k = one + 1; k < moments->regressors; k++) {
@@ -106,7 +119,7 @@ static void tile_add(const struct gather *gather, const struct batch_stretch *st
     const struct moments *moments = gather->moments;
     size_t left = packed_size(moments->regressors) - at;
     moments->kernel->add(moments->data + at, stretch, next, stretch->factor, left < TILE_NUMBERS ? left : TILE_NUMBERS,
-                         gather->second + lane * moments->stride + at);
+                         gather->second + lane * gather->stride + at);
 }
 
 /* A tile of the next few positions, which the lines share the asking for. */
@@ -163,26 +176,68 @@ static void lines_gather_alone(const struct gather *gather)
     }
 }
 
+/* Where the cells that come behind a stretch lie, up to the last one of the half. */
+static void stretch_look_ahead(const struct gather *gather, uint64_t k, struct batch_stretch *stretch)
+{
+    const struct half *half = gather->half;
+    uint64_t cells = half->start[half->lines];
+    size_t step = moments_words(gather->moments->regressors);
+    for (size_t c = 0; c < BATCH_AHEAD; c++)
+        stretch->offset[stretch->count + c] = k + c < cells ? half->across[k + c] * step : stretch->offset[0];
+}
+
+static void lines_gather_halves(const struct gather *gather)
+{
+    const struct moments *moments = gather->moments;
+    const struct half *half = gather->half;
+    size_t d = moments->regressors, blocks = moments_words(d) / 8;
+    struct batch_stretch stretch;
+    for (size_t lane = 0; lane < gather->count; lane++) {
+        uint64_t k = half->start[gather->first + lane], end = half->start[gather->first + lane + 1];
+        double *second = gather->second + lane * gather->stride,
+               *target = gather->target + lane * gather->target_stride;
+        while (k < end) {
+            k = stretch_take(gather, k, end, half->length, gather->square + lane, &stretch);
+            stretch_look_ahead(gather, k, &stretch);
+            moments->kernel->add_halves(moments->halves, &stretch, blocks, d, second, target);
+        }
+        moments_restore(d, moments->one, gather->tail, second);
+    }
+}
+
+static void lines_gather(const struct gather *gather)
+{
+    const struct moments *moments = gather->moments;
+    const struct half *half = gather->half;
+    uint64_t cells = half->start[gather->first + gather->count] - half->start[gather->first];
+    size_t behind = moments->one + 1, stride = gather->target_stride;
+    if (cells * SHARED_FROM >= (uint64_t)gather->count * half->length)
+        lines_gather_together(gather);
+    else
+        lines_gather_alone(gather);
+    for (size_t lane = 0; lane < BATCH_LANES; lane++)
+        memcpy(gather->target + lane * stride + behind, gather->tail + lane * stride + behind,
+               (moments->regressors - behind) * sizeof *gather->target);
+}
+
 void moments_gather(const struct moments *moments, const struct half *half, enum fescue_precision precision,
                     size_t first, const struct moments_batch *out)
 {
-    size_t stride = target_stride(moments->regressors), left = half->lines - first, behind = moments->one + 1;
+    size_t d = moments->regressors, left = half->lines - first;
     struct gather gather = {.moments = moments, .half = half, .precision = precision, .first = first};
     gather.count = left < BATCH_LANES ? left : BATCH_LANES;
+    gather.stride = sum_stride(d);
+    gather.target_stride = target_stride(d);
     gather.second = out->work;
-    gather.target = gather.second + BATCH_LANES * moments->stride;
-    gather.tail = gather.target + BATCH_LANES * stride;
+    gather.target = gather.second + BATCH_LANES * gather.stride;
+    gather.tail = gather.target + BATCH_LANES * gather.target_stride;
     gather.square = out->square;
-    memset(out->work, 0, BATCH_LANES * (moments->stride + 2 * stride) * sizeof *out->work);
+    memset(out->work, 0, BATCH_LANES * (gather.stride + 2 * gather.target_stride) * sizeof *out->work);
     memset(out->square, 0, BATCH_LANES * sizeof *out->square);
-    uint64_t cells = half->start[first + gather.count] - half->start[first];
-    if (cells * SHARED_FROM >= (uint64_t)gather.count * half->length)
-        lines_gather_together(&gather);
+    if (moments->halves != NULL)
+        lines_gather_halves(&gather);
     else
-        lines_gather_alone(&gather);
-    for (size_t lane = 0; lane < BATCH_LANES; lane++)
-        memcpy(gather.target + lane * stride + behind, gather.tail + lane * stride + behind,
-               (moments->regressors - behind) * sizeof *gather.target);
-    moments->kernel->pack(gather.second, moments->stride, packed_size(moments->regressors), out->second);
-    moments->kernel->pack(gather.target, stride, moments->regressors, out->target);
+        lines_gather(&gather);
+    moments->kernel->pack(gather.second, gather.stride, packed_size(d), out->second);
+    moments->kernel->pack(gather.target, gather.target_stride, d, out->target);
 }

@@ -155,6 +155,8 @@ struct moments {
     size_t stride, regressors, one;
     const double *weight;
     const struct batch_kernel *kernel;
+    const uint64_t *halves; /* the same in half the bytes, kept to 2^-21 of each number, and then gathered from; or
+                               NULL (moments_halves.c). A line has moments_words */
 };
 /* Whole registers may be read from the beginning of any row of a triangle. */
 static inline size_t moments_stride(size_t regressors)
@@ -167,6 +169,17 @@ struct moments_batch {
     double *work;
 };
 size_t moments_batch_size(size_t regressors); /* doubles, a multiple of 8 */
+/* Words of a position in halves, and doubles of room to write them. */
+static inline size_t moments_words(size_t regressors)
+{
+    return (packed_size(regressors) + 15) / 16 * 8;
+}
+static inline size_t moments_room(size_t regressors)
+{
+    return 2 * moments_words(regressors);
+}
+/* The halves of one moment. */
+void moments_halve(const struct moments *moments, const double *moment, double *room, uint64_t *halves);
 struct moments_batch moments_batch_carve(double *at, size_t regressors);
 /* Over the cells of the lines first .. first+7, as far as there are so many: second = sum c M, target = sum c z E[g],
    square = sum c z^2; 0 in lanes without a line. */

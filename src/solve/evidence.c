@@ -29,7 +29,8 @@
  * passes over the cells, not three; the start is a fit handed in (or a spectral one) rather than random factors, and
  * then the priors are learnt from the first round on.
  *
- * Cost of a round: two passes of (r+2)(r+3) flops a cell, (m+n)(r+2)^3. Memory: (m+n)(r+2)(r+3)/2 doubles. Lines are
+ * Cost of a round: two passes of (r+2)(r+3) flops a cell, (m+n)(r+2)^3. Memory: (m+n)(r+2)(r+3)/2 doubles, and where
+ * there are many cells half as much again for the longer side, to be read across in halves. Lines are
  * parallel; sums go block by block, so the bits do not depend on the number of workers. Nothing is allocated in a
  * round.
  */
@@ -47,6 +48,9 @@
 /* Size of the random columns for components that the start does not have: small beside cells of size one, so that they
    grow only where the data pull them. */
 #define EVIDENCE_PROBE 0.05
+
+/* From so many cells on moments are gathered in halves. */
+#define HALVES_CELLS 50000
 
 /* A pruned component: standard deviation in the table over that of the noise. */
 #define COMPONENT_DEAD 1e-3
@@ -103,6 +107,9 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
     arena_reserve(arena, work, sizeof(double));
     evidence->state_size = arena->reserved;
     arena_reserve(arena, workers * evidence->scratch_size, sizeof(double));
+    size_t lines = cells->rows > cells->columns ? cells->rows : cells->columns;
+    size_t words = cells->count >= HALVES_CELLS ? lines * moments_words(d) : 0;
+    arena_reserve(arena, words, sizeof(uint64_t));
     fescue_status status = arena_open(problem->context, arena);
     if (status != FESCUE_OK)
         return status;
@@ -117,6 +124,7 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
     evidence->map[1] = matrix_carve(arena, d, d);
     evidence->basis_work = arena_carve(arena, work, sizeof(double));
     evidence->scratch = arena_carve(arena, workers * evidence->scratch_size, sizeof(double));
+    evidence->halves = words > 0 ? arena_carve(arena, words, sizeof(uint64_t)) : NULL;
     evidence->rows.effect_at = evidence->columns.one_at = rank;
     evidence->rows.one_at = evidence->columns.effect_at = rank + 1;
     return FESCUE_OK;
@@ -195,10 +203,10 @@ static double change_measure(struct evidence *evidence)
 }
 
 /* Steps 1 and 2 for one side. */
-static fescue_status side_round(struct evidence *evidence, struct evidence_side *side,
-                                const struct evidence_side *other)
+static fescue_status side_round(struct evidence *evidence, struct evidence_side *side, struct evidence_side *other)
 {
     struct evidence_time *time = evidence->time;
+    evidence_side_halve(evidence, other);
     if (time != NULL && time->chain_on && side == time->steps) {
         evidence_chain_update(evidence);
         evidence_chain_prior(evidence);

@@ -45,6 +45,7 @@ struct evidence {
     struct matrix small[4], gram[4]; /* r x r and (r+2) x (r+2) */
     struct matrix map[2];            /* a change of basis and its transpose */
     double *shift, *basis_work;
+    uint64_t *halves;           /* room for the moments of either side in halves; NULL: they are gathered as they are */
     struct evidence_time *time; /* NULL: lines have no order */
     struct evidence_near *near; /* NULL: columns are not near one another */
     struct arena arena;
@@ -95,6 +96,8 @@ size_t evidence_basis_partial(size_t rank); /* numbers a block */
 
 /* New posteriors of all lines of `side` from the moments of `other`; fills side->mean and side->line_error. */
 void evidence_side_update(struct evidence *evidence, struct evidence_side *side, const struct evidence_side *other);
+/* The moments of `side`, which are about to be gathered, in halves, where that serves; else as they are. */
+void evidence_side_halve(struct evidence *evidence, struct evidence_side *side);
 /* Prior variances of `side` from its posteriors. */
 void evidence_side_prior(struct evidence *evidence, struct evidence_side *side);
 /* Writes the moments of a line whose mean is known and certain. */

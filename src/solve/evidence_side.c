@@ -223,6 +223,31 @@ void evidence_side_update(struct evidence *evidence, struct evidence_side *side,
     team_run(evidence->context, (side->half->lines + BATCH_LANES - 1) / BATCH_LANES, update_batch, &job);
 }
 
+/* Halves are rounded by 2^-21. Above this noise, in units in which cells have size one, what that adds to the expected
+   squared error of a line is far below what its cells tell of it. */
+#define HALVES_NOISE 1e-2
+
+static void halve_block(void *opaque, size_t block, size_t worker)
+{
+    const struct update_job *job = opaque;
+    const struct evidence *evidence = job->evidence;
+    const struct evidence_side *side = job->side;
+    size_t words = moments_words(side->moments.regressors);
+    double *room = evidence->scratch + worker * evidence->scratch_size;
+    for (size_t line = side->half->block[block]; line < side->half->block[block + 1]; line++)
+        moments_halve(&side->moments, side->moments.data + line * side->moments.stride, room,
+                      evidence->halves + line * words);
+}
+
+void evidence_side_halve(struct evidence *evidence, struct evidence_side *side)
+{
+    struct update_job job = {evidence, side, NULL};
+    bool serves = evidence->halves != NULL && evidence->noise >= HALVES_NOISE;
+    side->moments.halves = serves ? evidence->halves : NULL;
+    if (serves)
+        team_run(evidence->context, side->half->blocks, halve_block, &job);
+}
+
 static void prior_block(void *opaque, size_t block, size_t worker)
 {
     (void)worker;

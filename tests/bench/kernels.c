@@ -204,25 +204,36 @@ static void half_gather(void *argument)
         moments_gather(&stand->moments, stand->half, FESCUE_DOUBLE, first, &stand->batch);
 }
 
-static void moments_report(struct bench *bench, const struct cells *cells, size_t rank, const char *const what[2])
+/* In doubles, or in halves; memory as a fit takes it. */
+static void moments_report(struct bench *bench, const struct cells *cells, size_t rank, bool in_halves,
+                           const char *const what[2])
 {
-    size_t d = rank + 2;
+    size_t d = rank + 2, stride = moments_stride(d);
     double *work = bench_take(moments_batch_size(d), sizeof *work);
+    fescue_context *context;
+    if (fescue_context_create(NULL, &context) != FESCUE_OK)
+        exit(1);
     for (int side = 0; side < 2; side++) {
         struct moments_stand stand = {.half = side == 0 ? &cells->by_row : &cells->by_column};
-        stand.moments = (struct moments){NULL, moments_stride(d), d, rank, NULL, batch_kernel_choose()};
-        stand.moments.data = bench_take(stand.half->length * stand.moments.stride, sizeof(double));
+        uint64_t *halves = NULL;
+        stand.moments =
+            (struct moments){.stride = stride, .regressors = d, .one = rank, .kernel = batch_kernel_choose()};
+        bench_check(context, TAKE(context, stand.half->length * stride, &stand.moments.data));
+        bench_check(context, TAKE(context, in_halves ? stand.half->length * moments_words(d) : 0, &halves));
+        stand.moments.halves = in_halves ? halves : NULL;
         stand.batch = moments_batch_carve(work, d);
         double gemm, seconds = bench_seconds(1, half_gather, &stand, gemm_double_run, &gemm);
-        double flops = 2 * (double)packed_size(d) + 2 * (double)d;
-        double count = (double)cells->count;
+        double flops = 2 * (double)packed_size(d) + 2 * (double)d, count = (double)cells->count;
+        double bytes = (in_halves ? 4 : 8) * (double)packed_size(d);
         figure_add(bench, json_pack("{s:s, s:s, s:I, s:I, s:i, s:f, s:f, s:f, s:f}", "what", what[side], "precision",
-                                    "double", "cells", (json_int_t)cells->count, "rank", (json_int_t)rank, "threads", 1,
-                                    "ns a cell", seconds / count * 1e9, "GFLOP/s", flops * count / seconds / 1e9,
-                                    "GB/s", 8 * (double)packed_size(d) * count / seconds / 1e9, "share of gemm",
-                                    flops * count / seconds / (GEMM_FLOPS / gemm)));
-        free(stand.moments.data);
+                                    in_halves ? "halves of double" : "double", "cells", (json_int_t)cells->count,
+                                    "rank", (json_int_t)rank, "threads", 1, "ns a cell", seconds / count * 1e9,
+                                    "GFLOP/s", flops * count / seconds / 1e9, "GB/s", bytes * count / seconds / 1e9,
+                                    "share of gemm", flops * count / seconds / (GEMM_FLOPS / gemm)));
+        memory_give(context, &stand.moments.data);
+        GIVE(context, &halves);
     }
+    fescue_context_destroy(&context);
     free(work);
 }
 
@@ -232,7 +243,8 @@ void moments_measure(struct bench *bench, uint64_t cells)
     static const char *const of_sensors[] = {"moments of sensors, rows", "moments of sensors, columns"};
     struct rating rating;
     rating_sow(cells, FESCUE_DOUBLE, &rating);
-    moments_report(bench, &rating.cells, 16, of_ratings);
+    for (int in_halves = 0; in_halves < 2; in_halves++)
+        moments_report(bench, &rating.cells, 16, in_halves != 0, of_ratings);
     rating_free(&rating);
     /* Sensors: many times, few places, half of it there. */
     fescue_context *context;
@@ -247,7 +259,8 @@ void moments_measure(struct bench *bench, uint64_t cells)
                 bench_check(context, triplets_append(context, &list, i, j, random_normal(&stream)));
     bench_check(context, cells_build(context, 4400, 70, &list, &dense));
     triplets_free(context, &list);
-    moments_report(bench, &dense, 20, of_sensors);
+    for (int in_halves = 0; in_halves < 2; in_halves++)
+        moments_report(bench, &dense, 20, in_halves != 0, of_sensors);
     cells_free(context, &dense);
     fescue_context_destroy(&context);
 }

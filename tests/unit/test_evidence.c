@@ -41,29 +41,36 @@ static double error_of(const struct evidence_result *fit, const struct sowing *s
        g/2 (1 - (m+n) s2/g^2 + sqrt((1 - (m+n) s2/g^2)^2 - 4 m n s2^2/g^4))
    or to 0 (Nakajima, Sugiyama, Babacan, Tomioka 2013, "Global analytic solution of fully-observed variational Bayesian
    matrix factorization", theorem 2, from memory). s2 is the one the fit learnt. */
-static void full_table_meets_the_closed_solution(void **state)
+static void closed_solution_check(fescue_context *context, const struct sowing *sowing, double noise_error)
 {
-    fescue_context *context = bench_of(state)->context;
-    struct sowing sowing = {40, 25, 3, 1, 0.8, FESCUE_DOUBLE, 3};
-    struct plot plot = plot_sow(context, &sowing, 0);
+    struct plot plot = plot_sow(context, sowing, 0);
     struct evidence_request request = request_of(10, FESCUE_OFFSETS_NONE);
     struct evidence_result fit = learn(context, &plot.cells, &request);
-    double *dense = dense_targets(&plot, NAN), spectrum[25], mn = 65;
+    double *dense = dense_targets(&plot, NAN), spectrum[100];
+    double m = sowing->rows, n = sowing->columns;
     struct low_rank truncated;
-    dense_truncate(context, dense, 40, 25, 3, &truncated, spectrum);
+    dense_truncate(context, dense, sowing->rows, sowing->columns, 3, &truncated, spectrum);
     assert_int_equal(fit.model.low_rank.rank, 3);
     for (size_t k = 0; k < 3; k++) {
         double g = spectrum[k] * plot.problem.scale, x = fit.noise * fit.noise / (g * g);
-        double half = 1 - mn * x;
-        double shrunk = g / 2 * (half + sqrt(half * half - 4 * 1000 * x * x));
+        double half = 1 - (m + n) * x;
+        double shrunk = g / 2 * (half + sqrt(half * half - 4 * m * n * x * x));
         assert_close(fit.model.low_rank.spectrum[k], shrunk, 1e-5 * g);
         assert_true(shrunk < 0.999 * g);
     }
-    assert_close(fit.noise, 0.8, 0.06);
+    assert_close(fit.noise, 0.8, noise_error);
     low_rank_free(context, &truncated);
     free(dense);
     evidence_result_free(context, &fit);
     plot_free(&plot);
+}
+
+/* The second is large enough for moments in halves. */
+static void full_table_meets_the_closed_solution(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    closed_solution_check(context, &(struct sowing){40, 25, 3, 1, 0.8, FESCUE_DOUBLE, 3}, 0.06);
+    closed_solution_check(context, &(struct sowing){520, 100, 3, 1, 0.8, FESCUE_DOUBLE, 3}, 0.01);
 }
 
 static void noise_alone_has_no_components(void **state)
@@ -203,14 +210,12 @@ static void weights_of_cells_are_used(void **state)
     cells_free(context, &noisy);
 }
 
-static void same_bits_for_any_number_of_workers(void **state)
+static void same_bits_check(fescue_context *context, const struct sowing *sowing, uint64_t rounds)
 {
-    fescue_context *context = bench_of(state)->context;
-    struct sowing sowing = {90, 70, 3, 0.3, 0.2, FESCUE_SINGLE, 10};
-    struct plot plot = plot_sow(context, &sowing, 0);
+    struct plot plot = plot_sow(context, sowing, 0);
     struct evidence_request request = request_of(6, FESCUE_OFFSETS_BOTH);
     request.noise = EVIDENCE_NOISE_ROWS;
-    request.rounds = 40;
+    request.rounds = rounds;
     struct evidence_result first = {0};
     const size_t workers[] = {1, 2, 7};
     for (size_t w = 0; w < 3; w++) {
@@ -221,13 +226,20 @@ static void same_bits_for_any_number_of_workers(void **state)
             continue;
         }
         assert_int_equal(fit.model.low_rank.rank, first.model.low_rank.rank);
-        assert_memory_equal(fit.model.offsets.row, first.model.offsets.row, 90 * sizeof(double));
+        assert_memory_equal(fit.model.offsets.row, first.model.offsets.row, sowing->rows * sizeof(double));
         assert_memory_equal(fit.model.low_rank.left.data, first.model.low_rank.left.data,
-                            90 * first.model.low_rank.left.stride * sizeof(double));
+                            sowing->rows * first.model.low_rank.left.stride * sizeof(double));
         evidence_result_free(context, &fit);
     }
     evidence_result_free(context, &first);
     plot_free(&plot);
+}
+
+static void same_bits_for_any_number_of_workers(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    same_bits_check(context, &(struct sowing){90, 70, 3, 0.3, 0.2, FESCUE_SINGLE, 10}, 40);
+    same_bits_check(context, &(struct sowing){900, 120, 3, 0.5, 0.2, FESCUE_SINGLE, 10}, 3);
 }
 
 static uint64_t calls_for(fescue_context *context, const struct cells *cells, uint64_t rounds)

@@ -11,7 +11,7 @@
 #include <stdlib.h>
 #include <string.h>
 
-enum { LARGEST = 64 };
+enum { LARGEST = 64, MOMENT_MOST = 1024 };
 static const char *const kernels[] = {"portable", "avx2", "avx512"}; /* those the processor lacks are not taken */
 #define COUNT(array) (sizeof(array) / sizeof *(array))
 
@@ -34,6 +34,7 @@ static double entry(const double *moment, size_t k, size_t l)
 }
 
 struct gather_case {
+    bool in_halves;
     enum fescue_precision precision;
     double seen; /* of the cells: lines that see few positions go through them alone, others together */
     size_t d, one;
@@ -91,6 +92,28 @@ static void cells_draw_weights(fescue_context *context, struct cells *cells)
     GIVE(context, &weight);
 }
 
+/* The moment of a position in halves; it becomes what these hold, so that sums of either are the same. */
+static void halves_put(const struct moments *moments, size_t position, uint64_t *halves)
+{
+    static const double rounding = 0x1p-21;
+    double room[MOMENT_MOST], kept[MOMENT_MOST], *moment = moments->data + position * moments->stride;
+    size_t d = moments->regressors, one = moments->one, words = moments_words(d), mean = 0, rest = d;
+    uint64_t *to = halves + position * words;
+    assert_true(moments_room(d) <= MOMENT_MOST);
+    moments_halve(moments, moment, room, to);
+    for (size_t w = 0; w < words; w++) {
+        uint64_t low = to[w] << 32;
+        memcpy(&kept[w / 8 * 16 + w % 8], to + w, sizeof *kept);
+        memcpy(&kept[w / 8 * 16 + w % 8 + 8], &low, sizeof *kept);
+    }
+    for (size_t k = 0; k < d; k++) /* row and column of the constant first */
+        for (size_t l = 0; l <= k; l++) {
+            double *number = moment + packed_size(k) + l, was = *number;
+            *number = kept[k == one || l == one ? mean++ : rest++];
+            assert_close(*number, was, rounding * fabs(was) + 1e-300);
+        }
+}
+
 static void gather_check(fescue_context *context, const struct gather_case *at)
 {
     enum { ROWS = 23, COLUMNS = 83 };
@@ -100,14 +123,18 @@ static void gather_check(fescue_context *context, const struct gather_case *at)
     struct random_stream stream = random_open(1, RANDOM_TEST, (uint32_t)at->d);
     struct moments moments = {.stride = moments_stride(at->d), .regressors = at->d, .one = at->one};
     double *weight, *work;
+    uint64_t *halves;
     moments.kernel = batch_kernel_choose();
     assert_status(context, TAKE(context, COLUMNS * moments.stride, &moments.data), FESCUE_OK);
     assert_status(context, TAKE(context, COLUMNS, &weight), FESCUE_OK);
     assert_status(context, TAKE(context, moments_batch_size(at->d), &work), FESCUE_OK);
+    assert_status(context, TAKE(context, COLUMNS * moments_words(at->d), &halves), FESCUE_OK);
     for (size_t j = 0; j < COLUMNS; j++) {
         moment_draw(&stream, at->d, at->one, moments.data + j * moments.stride);
         weight[j] = 0.1 + random_uniform(&stream);
+        halves_put(&moments, j, halves);
     }
+    moments.halves = at->in_halves ? halves : NULL;
     moments.weight = at->weighted ? weight : NULL;
     if (at->cells_weighted)
         cells_draw_weights(context, &cells);
@@ -122,22 +149,26 @@ static void gather_check(fescue_context *context, const struct gather_case *at)
     memory_give(context, &moments.data);
     GIVE(context, &weight);
     GIVE(context, &work);
+    GIVE(context, &halves);
     cells_free(context, &cells);
 }
 
 static void sums_are_those_of_plain_loops(void **state)
 {
     static const double seen[] = {0.05, 0.2, 0.5, 0.97};
-    static const size_t sizes[] = {2, 3, 4, 5, 8, 9, 12, 16, 18, 22};
+    static const size_t sizes[] = {2, 3, 4, 5, 8, 9, 12, 16, 18, 22, 30, 41};
     fescue_context *context = bench_of(state)->context;
     for (size_t n = 0; n < COUNT(kernels); n++) {
         setenv("FESCUE_KERNEL", kernels[n], 1);
         for (size_t k = 0; k < COUNT(sizes); k++)
             for (size_t s = 0; s < COUNT(seen); s++) {
                 size_t d = sizes[k];
-                gather_check(context, &(struct gather_case){FESCUE_DOUBLE, seen[s], d, d - 2, s % 2 == 0, k % 2 == 1});
-                gather_check(context, &(struct gather_case){FESCUE_SINGLE, seen[s], d, k % 2 == 0 ? 0 : d - 1, s > 1,
-                                                            k % 3 == 1});
+                for (int half = 0; half < 2; half++) {
+                    gather_check(context, &(struct gather_case){half != 0, FESCUE_DOUBLE, seen[s], d, d - 2, s % 2 == 0,
+                                                                k % 2 == 1});
+                    gather_check(context, &(struct gather_case){half != 0, FESCUE_SINGLE, seen[s], d,
+                                                                k % 2 == 0 ? 0 : d - 1, s > 1, k % 3 == 1});
+                }
             }
     }
     unsetenv("FESCUE_KERNEL");
