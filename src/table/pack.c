@@ -39,9 +39,12 @@ bool pack_places_find(const struct pack_header *header, struct pack_places *plac
 
 enum { LANES = 8, STRIDE = LANES * sizeof(uint64_t) };
 
+static const uint64_t multiplier =
+    0x9e3779b97f4a7c15; /* 2^64 over the golden ratio, made odd: its bits have no pattern */
+
 static inline uint64_t mixed(uint64_t h, uint64_t word)
 {
-    h = (h ^ word) * UINT64_C(0x9e3779b97f4a7c15); /* 2^64 over the golden ratio, made odd: its bits have no pattern */
+    h = (h ^ word) * multiplier;
     return h ^ h >> 32;
 }
 
@@ -54,15 +57,49 @@ static inline void lanes_add(uint64_t h[LANES], const unsigned char *bytes)
     }
 }
 
-uint64_t pack_sum(const void *bytes, size_t count)
+__attribute__((always_inline)) static inline void strides_add(uint64_t lanes[LANES], const unsigned char *bytes,
+                                                              size_t count)
+{
+    uint64_t h[LANES];
+    memcpy(h, lanes, sizeof h);
+    for (size_t k = 0; k < count; k += STRIDE)
+        lanes_add(h, bytes + k);
+    memcpy(lanes, h, sizeof h);
+}
+
+/* The same for the compiler to make with vectors: the lanes are one. */
+#if defined(__x86_64__)
+__attribute__((target("avx512f,avx512dq"))) static void strides_add_wide(uint64_t lanes[LANES],
+                                                                         const unsigned char *bytes, size_t count)
+{
+    typedef uint64_t wide __attribute__((vector_size(STRIDE)));
+    wide h, word;
+    memcpy(&h, lanes, sizeof h);
+    for (size_t k = 0; k < count; k += STRIDE) {
+        memcpy(&word, bytes + k, sizeof word);
+        h = (h ^ word) * multiplier;
+        h ^= h >> 32;
+    }
+    memcpy(lanes, &h, sizeof h);
+}
+#else
+static void strides_add_wide(uint64_t lanes[LANES], const unsigned char *bytes, size_t count)
+{
+    strides_add(lanes, bytes, count);
+}
+#endif
+
+uint64_t pack_sum(const void *bytes, size_t count, enum vectors vectors)
 {
     uint64_t h[LANES];
     const unsigned char *at = bytes;
     size_t rest = count % STRIDE;
     for (uint64_t lane = 0; lane < LANES; lane++)
         h[lane] = mixed(lane, LANES);
-    for (size_t k = 0; k < count - rest; k += STRIDE)
-        lanes_add(h, at + k);
+    if (vectors == VECTORS_AVX512)
+        strides_add_wide(h, at, count - rest);
+    else
+        strides_add(h, at, count - rest);
     if (rest > 0) {
         unsigned char last[STRIDE] = {0};
         memcpy(last, at + count - rest, rest);

@@ -65,8 +65,26 @@ struct pack_places {
 };
 bool pack_places_find(const struct pack_header *header, struct pack_places *places);
 
-/* A sum that changes with any single word of the bytes, and with more of them but for one case in 2^64. */
-uint64_t pack_sum(const void *bytes, size_t count);
+/* A sum that changes with any single word of the bytes, and with more of them but for one case in 2^64; the same with
+   all vectors. */
+uint64_t pack_sum(const void *bytes, size_t count, enum vectors vectors);
+
+/* Numbers that nobody knew when the pack was made. */
+struct pack_key {
+    uint64_t added, odd[3];
+};
+/* Lines first .. end-1 of a direction. */
+struct pack_lines {
+    const struct half *half;
+    enum fescue_precision precision;
+    bool is_column;
+    uint32_t first, end;
+    const struct pack_key *key;
+};
+bool pack_offsets_ascend(const struct pack_lines *lines);
+/* Whether positions ascend and lie inside, and values are finite; *sum then is what the lines add to the sum of their
+   direction. Offsets ascend and lie inside. */
+bool pack_lines_look(const struct pack_lines *lines, enum vectors vectors, uint64_t *sum);
 
 /* Who is told of a stretch of positions or values just before it is looked at, while that brings it into the cache. */
 struct pack_watch {
@@ -74,9 +92,8 @@ struct pack_watch {
     void *data;
 };
 /* Whether what a table points at, in a pack, is a table: lines in order and inside, both directions the same cells,
-   finite values. *fault is NULL, and then the watch was told of every byte of positions and values once; or what is
-   wrong. FESCUE_NO_MEMORY. */
-fescue_status pack_check_cells(fescue_context *context, const struct cells *cells, const struct pack_watch *watch,
-                               const char **fault);
+   finite values. NULL, and then the watch was told of every byte of positions and values once; or what is wrong. */
+const char *pack_check_cells(fescue_context *context, const struct cells *cells, const struct pack_watch *watch,
+                             enum vectors vectors);
 
 #endif

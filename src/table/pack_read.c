@@ -25,6 +25,7 @@ struct unpacker {
     const char *name;
     const char *bytes; /* of the pack */
     size_t size;
+    enum vectors vectors;
     struct pack_header header;
     struct pack_places places;
 };
@@ -119,7 +120,8 @@ static fescue_status origin_check(const struct unpacker *unpacker)
     if (header->version != PACK_VERSION)
         return REFUSE(unpacker, "has version %" PRIu32 ", this program reads version %d; pack the table again",
                       header->version, (int)PACK_VERSION);
-    if (header->byte_order != pack_byte_order || header->sum != pack_sum(header, offsetof(struct pack_header, sum)))
+    if (header->byte_order != pack_byte_order ||
+        header->sum != pack_sum(header, offsetof(struct pack_header, sum), VECTORS_NONE))
         return REFUSE(unpacker, "is damaged: the sum of its header does not match");
     if (header->file_bytes != unpacker->size)
         return REFUSE(unpacker, "has %zu bytes, its header tells of %" PRIu64 ": it is truncated or something follows",
@@ -193,7 +195,7 @@ static void block_check(struct summing *summing, uint64_t block)
     const struct unpacker *unpacker = summing->unpacker;
     uint64_t first = PACK_HEADER + block * PACK_BLOCK, rest = unpacker->places.end - first;
     size_t count = rest < PACK_BLOCK ? (size_t)rest : PACK_BLOCK;
-    if (pack_sum(unpacker->bytes + first, count) == summing->sums[block])
+    if (pack_sum(unpacker->bytes + first, count, unpacker->vectors) == summing->sums[block])
         return;
     uint64_t damaged = atomic_load(&summing->damaged);
     while (block < damaged && !atomic_compare_exchange_weak(&summing->damaged, &damaged, block))
@@ -247,7 +249,7 @@ static fescue_status sums_check(const struct unpacker *unpacker, bool spares_cel
     for (const char *c = unpacker->bytes + sizeof unpacker->header; c < unpacker->bytes + PACK_HEADER; c++)
         if (*c != 0)
             return REFUSE(unpacker, "is damaged: there is something behind its header");
-    if (pack_sum(summing.sums, blocks * sizeof(uint64_t)) != summing.sums[blocks])
+    if (pack_sum(summing.sums, blocks * sizeof(uint64_t), unpacker->vectors) != summing.sums[blocks])
         return REFUSE(unpacker, "is damaged: the sum over its sums does not match");
     team_run(unpacker->context, blocks, block_task, &summing);
     return damage_tell(&summing);
@@ -282,8 +284,7 @@ static fescue_status cells_unpack(const struct unpacker *unpacker, struct cells 
                                           .value = part_of(unpacker, PACK_COLUMN_VALUE)}};
     struct summing summing = summing_of(unpacker, true);
     const struct pack_watch watch = {stretch_check, &summing};
-    const char *fault;
-    TRY(pack_check_cells(unpacker->context, cells, &watch, &fault));
+    const char *fault = pack_check_cells(unpacker->context, cells, &watch, unpacker->vectors);
     if (fault != NULL) { /* which damage may be the cause of, and perhaps not all was summed */
         TRY(sums_check(unpacker, false));
         return REFUSE(unpacker, "is malformed: %s", fault);
@@ -423,7 +424,7 @@ done:
 fescue_status pack_read(struct stream *stream, const struct table_reading *reading, fescue_table *table)
 {
     fescue_status status;
-    struct unpacker unpacker = {.context = table->context, .name = stream_name(stream)};
+    struct unpacker unpacker = {.context = table->context, .name = stream_name(stream), .vectors = vectors_choose()};
     TRY(pack_open(stream, &table->pack));
     unpacker.bytes = table->pack->bytes;
     unpacker.size = table->pack->size;

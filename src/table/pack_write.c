@@ -10,6 +10,7 @@
 
 struct packer {
     const fescue_table *table;
+    enum vectors vectors;
     struct pack_header header;
     struct pack_places places;
     struct output *output;
@@ -26,7 +27,7 @@ static void block_sum(struct packer *packer)
 {
     if (packer->used == 0)
         return;
-    packer->sums[packer->summed++] = pack_sum(packer->block, packer->used);
+    packer->sums[packer->summed++] = pack_sum(packer->block, packer->used, packer->vectors);
     packer->used = 0;
 }
 
@@ -185,14 +186,14 @@ static void file_write(struct packer *packer)
 {
     char header[PACK_HEADER] = {0};
     packer->header.file_bytes = packer->places.file_bytes;
-    packer->header.sum = pack_sum(&packer->header, offsetof(struct pack_header, sum));
+    packer->header.sum = pack_sum(&packer->header, offsetof(struct pack_header, sum), VECTORS_NONE);
     memcpy(header, &packer->header, sizeof packer->header);
     outfile_write(packer->file, header, sizeof header);
     packer->written = sizeof header;
     parts_put(packer);
     assert(packer->summed == packer->places.blocks);
     size_t bytes = packer->places.blocks * sizeof *packer->sums;
-    uint64_t sum = pack_sum(packer->sums, bytes);
+    uint64_t sum = pack_sum(packer->sums, bytes, packer->vectors);
     outfile_write(packer->file, packer->sums, bytes);
     outfile_write(packer->file, &sum, sizeof sum);
 }
@@ -217,7 +218,7 @@ fescue_status table_pack(const fescue_table *table, const char *path)
 {
     fescue_status status;
     fescue_context *context = table->context;
-    struct packer packer = {.table = table};
+    struct packer packer = {.table = table, .vectors = vectors_choose()};
     header_fill(&packer);
     if (!pack_places_find(&packer.header, &packer.places))
         return FAIL(context, FESCUE_NO_MEMORY, "%s: the pack would be larger than can be addressed", path);

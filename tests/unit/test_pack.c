@@ -7,6 +7,7 @@
 
 #include <errno.h>
 #include <inttypes.h>
+#include <math.h>
 #include <stdio.h>
 #include <stdlib.h>
 #include <string.h>
@@ -160,15 +161,12 @@ static void what_was_packed_comes_back(void **state)
 }
 
 /* Large enough for several sums and, without texts, for a table that is too large for them. */
-static void large_tables_come_back(void **state)
+static fescue_table *large_table(struct bench *bench)
 {
-    struct bench *bench = bench_of(state);
     enum { ROWS = 3000, COLUMNS = 9000, CELLS = 200000 };
-    const struct table_reading reading = {.precision = FESCUE_DOUBLE};
     uint32_t *row = malloc(CELLS * sizeof *row), *column = malloc(CELLS * sizeof *column);
     double *value = malloc(CELLS * sizeof *value);
-    fescue_table *table, *back;
-    char path[PATH_SIZE];
+    fescue_table *table;
     for (uint32_t k = 0; k < CELLS; k++) {
         row[k] = k % ROWS;
         column[k] = (uint32_t)(k / ROWS * 131 + k % 97) % COLUMNS;
@@ -177,15 +175,26 @@ static void large_tables_come_back(void **state)
     assert_status(bench->context,
                   table_from_triplets(bench->context, ROWS, COLUMNS, CELLS, row, column, value, FESCUE_DOUBLE, &table),
                   FESCUE_OK);
+    free(row), free(column), free(value);
+    return table;
+}
+
+static void large_tables_come_back(void **state)
+{
+    struct bench *bench = bench_of(state);
+    const struct table_reading reading = {.precision = FESCUE_DOUBLE};
+    fescue_table *table = large_table(bench), *back;
+    char path[PATH_SIZE];
     pack_put(bench, table, path);
     for (size_t workers = 1; workers <= 4; workers++) {
+        setenv("FESCUE_KERNEL", workers == 2 ? "portable" : workers == 3 ? "avx2" : "", 1);
         assert_status(bench->context, team_resize(bench->context, workers), FESCUE_OK);
         assert_status(bench->context, table_read(bench->context, path, &reading, &back), FESCUE_OK);
         all_equal(table, back);
         table_destroy(&back);
     }
+    setenv("FESCUE_KERNEL", "", 1);
     table_destroy(&table);
-    free(row), free(column), free(value);
 }
 
 /* ---- damage ----------------------------------------------------------------------------------------------------- */
@@ -235,6 +244,42 @@ static void no_changed_byte_goes_unnoticed(void **state)
     free(bytes);
 }
 
+/* Every part of a pack of many sums, its first and last bytes and some between; by the number of the block. */
+static void damage_is_told_with_its_place(void **state)
+{
+    struct bench *bench = bench_of(state);
+    struct random_stream stream = random_open(seed, RANDOM_TEST, 5);
+    struct pack_header header;
+    struct pack_places places;
+    size_t count;
+    char path[PATH_SIZE], sentence[128], *bytes;
+    fescue_table *table = large_table(bench);
+    pack_put(bench, table, path);
+    table_destroy(&table);
+    bytes = file_get(path, &count);
+    memcpy(&header, bytes, sizeof header);
+    assert_true(pack_places_find(&header, &places));
+    for (int n = 0; n < 4 * PACK_PARTS; n++) {
+        const uint64_t size = header.part_bytes[n / 4];
+        if (size == 0)
+            continue;
+        uint64_t at = n % 4 == 0 ? 0 : n % 4 == 1 ? size - 1 : random_below(&stream, size);
+        at += places.part[n / 4];
+        uint64_t first = PACK_HEADER + (at - PACK_HEADER) / PACK_BLOCK * PACK_BLOCK, end = first + PACK_BLOCK;
+        snprintf(sentence, sizeof sentence,
+                 "the pack is damaged: bytes %" PRIu64 " to %" PRIu64 " are not what was written", first,
+                 (end < places.end ? end : places.end) - 1);
+        char was = bytes[at];
+        bytes[at] = (char)(was ^ (1 << random_below(&stream, 8)));
+        assert_status(bench->context, team_resize(bench->context, 1 + (size_t)n % 3), FESCUE_OK);
+        setenv("FESCUE_KERNEL", n % 2 == 0 ? "" : "portable", 1);
+        bytes_refused(bench, bytes, count, NULL, sentence);
+        bytes[at] = was;
+    }
+    setenv("FESCUE_KERNEL", "", 1);
+    free(bytes);
+}
+
 static void no_other_length_is_taken(void **state)
 {
     struct bench *bench = bench_of(state);
@@ -256,21 +301,21 @@ static void the_sum_sees_what_cancels(void **state)
     (void)state;
     for (int k = 0; k < WORDS; k++)
         words[k] = random_bits(&stream);
-    uint64_t sum = pack_sum(words, sizeof words);
+    uint64_t sum = pack_sum(words, sizeof words, VECTORS_NONE);
     for (int a = 0; a < WORDS; a += 3)
         for (int b = a + 1; b < WORDS && b < a + 40; b++) {
             memcpy(copy, words, sizeof words);
             copy[a] ^= UINT64_C(1) << 63, copy[b] ^= UINT64_C(1) << 63;
-            assert_true(pack_sum(copy, sizeof copy) != sum);
+            assert_true(pack_sum(copy, sizeof copy, VECTORS_NONE) != sum);
             memcpy(copy, words, sizeof words);
             copy[a] = words[b], copy[b] = words[a];
-            assert_true(pack_sum(copy, sizeof copy) != sum);
+            assert_true(pack_sum(copy, sizeof copy, VECTORS_NONE) != sum);
             copy[a] = words[a] + 1, copy[b] = words[b] - 1;
-            assert_true(pack_sum(copy, sizeof copy) != sum);
+            assert_true(pack_sum(copy, sizeof copy, VECTORS_NONE) != sum);
         }
     memset(words, 0, sizeof words);
     for (size_t count = 1; count < sizeof words; count++) /* of zeros, how many there are */
-        assert_true(pack_sum(words, count) != pack_sum(words, count - 1));
+        assert_true(pack_sum(words, count, VECTORS_NONE) != pack_sum(words, count - 1, VECTORS_NONE));
 }
 
 /* ---- made by hand ------------------------------------------------------------------------------------------------ */
@@ -281,16 +326,16 @@ static void sums_mend(char *bytes, size_t count)
     struct pack_header header;
     struct pack_places places;
     memcpy(&header, bytes, sizeof header);
-    header.sum = pack_sum(&header, offsetof(struct pack_header, sum));
+    header.sum = pack_sum(&header, offsetof(struct pack_header, sum), VECTORS_NONE);
     memcpy(bytes, &header, sizeof header);
     if (!pack_places_find(&header, &places) || places.file_bytes != count)
         return;
     for (uint64_t k = 0; k < places.blocks; k++) {
         uint64_t first = PACK_HEADER + k * PACK_BLOCK, rest = places.end - first, sum;
-        sum = pack_sum(bytes + first, rest < PACK_BLOCK ? rest : PACK_BLOCK);
+        sum = pack_sum(bytes + first, rest < PACK_BLOCK ? rest : PACK_BLOCK, VECTORS_NONE);
         memcpy(bytes + places.sums + k * sizeof sum, &sum, sizeof sum);
     }
-    uint64_t sum = pack_sum(bytes + places.sums, places.blocks * sizeof sum);
+    uint64_t sum = pack_sum(bytes + places.sums, places.blocks * sizeof sum, VECTORS_NONE);
     memcpy(bytes + places.sums + places.blocks * sizeof sum, &sum, sizeof sum);
 }
 
@@ -331,11 +376,71 @@ static void hostile_packs_do_no_harm(void **state)
     assert_true(taken > 0 && taken < trials());
 }
 
-/* Rows and columns that are each a table, and not the same one: a pattern that differs, and a value. */
+/* Sums and checks by all vectors of this machine are the same, for every length of a line. */
+static void vectors_make_no_difference(void **state)
+{
+    enum { LINES = 40, MOST = 64 * LINES };
+    static unsigned char bytes[5000];
+    static uint64_t start[LINES + 1];
+    static uint32_t across[MOST];
+    static double value[MOST];
+    struct random_stream stream = random_open(seed, RANDOM_TEST, 6);
+    const enum vectors best = vectors_choose();
+    (void)state;
+    for (size_t k = 0; k < sizeof bytes; k++)
+        bytes[k] = (unsigned char)random_below(&stream, 256);
+    for (size_t count = 0; count < sizeof bytes; count += 1 + count / 9)
+        assert_true(pack_sum(bytes, count, VECTORS_NONE) == pack_sum(bytes, count, best));
+    for (uint32_t i = 0; i < LINES; i++) { /* of i cells each */
+        start[i + 1] = start[i] + i;
+        for (uint32_t j = 0; j < i; j++) {
+            across[start[i] + j] = 7 * j + (uint32_t)random_below(&stream, 7);
+            value[start[i] + j] = random_uniform(&stream) - 0.5;
+        }
+    }
+    struct half half = {.lines = LINES, .length = 7 * LINES, .start = start, .across = across, .value = value};
+    const struct pack_key key = {random_bits(&stream), {random_bits(&stream) | 1, random_bits(&stream) | 1, 5}};
+    for (int n = 0; n < 2 * FESCUE_SINGLE + 2; n++) {
+        const struct pack_lines lines = {&half, n / 2 ? FESCUE_SINGLE : FESCUE_DOUBLE, n % 2, 0, LINES, &key};
+        uint64_t sums[2];
+        for (uint64_t k = 0; n / 2 && n % 2 == 0 && k < start[LINES]; k++)
+            ((float *)(void *)value)[k] = (float)value[k];
+        assert_true(pack_lines_look(&lines, VECTORS_NONE, &sums[0]) && pack_lines_look(&lines, best, &sums[1]));
+        assert_true(sums[0] == sums[1]);
+    }
+    for (uint64_t k = 0; k < start[LINES]; k++) { /* any one cell out of order, outside or not finite */
+        const struct pack_lines lines = {&half, FESCUE_SINGLE, false, 0, LINES, &key};
+        const uint32_t was = across[k];
+        const float number = ((float *)(void *)value)[k];
+        uint64_t sum;
+        across[k] = UINT32_MAX - 1;
+        assert_true(!pack_lines_look(&lines, VECTORS_NONE, &sum) && !pack_lines_look(&lines, best, &sum));
+        across[k] = 7 * LINES; /* the length itself: outside, or not below the next one */
+        assert_true(!pack_lines_look(&lines, VECTORS_NONE, &sum) && !pack_lines_look(&lines, best, &sum));
+        across[k] = was;
+        ((float *)(void *)value)[k] = k % 2 ? INFINITY : NAN;
+        assert_true(!pack_lines_look(&lines, VECTORS_NONE, &sum) && !pack_lines_look(&lines, best, &sum));
+        ((float *)(void *)value)[k] = number;
+    }
+}
+
+static void word_flip(char *bytes, uint64_t at, uint64_t bits)
+{
+    uint64_t word;
+    memcpy(&word, bytes + at, sizeof word);
+    word ^= bits;
+    memcpy(bytes + at, &word, sizeof word);
+}
+
+/* Rows and columns that are each a table, and not the same one: a pattern that differs; a value; its sign; the signs of
+   two; two values of one column, or of two, that change places. */
 static void directions_that_differ_are_refused(void **state)
 {
     struct bench *bench = bench_of(state);
-    for (int way = 0; way < 2; way++) {
+    enum { WAYS = 6, KEYS = 8 };
+    const uint64_t sign = UINT64_C(1) << 63;
+    for (int n = 0; n < WAYS * KEYS; n++) {
+        const int way = n % WAYS;
         struct pack_header header;
         struct pack_places places;
         size_t count;
@@ -344,15 +449,27 @@ static void directions_that_differ_are_refused(void **state)
         assert_true(pack_places_find(&header, &places));
         uint32_t row = 1; /* of the second column's only cell, which is in row 0 */
         double value = 1;
+        const uint64_t values = places.part[PACK_COLUMN_VALUE];
+        uint64_t words[5];
+        memcpy(words, bytes + values, sizeof words); /* 7 and 1.5 in the first column, -2e3, 1 and 0 in the third */
+        setenv("FESCUE_KERNEL", n % 4 == 0 ? "portable" : "", 1);
         if (way == 0)
             memcpy(bytes + places.part[PACK_COLUMN_ACROSS] + 2 * sizeof row, &row, sizeof row);
+        else if (way == 1)
+            memcpy(bytes + values, &value, sizeof value);
+        else if (way <= 3)
+            word_flip(bytes, values, sign);
         else
-            memcpy(bytes + places.part[PACK_COLUMN_VALUE], &value, sizeof value);
+            word_flip(bytes, values, words[0] ^ words[way == 4 ? 1 : 2]);
+        if (way >= 3)
+            word_flip(bytes, values + (way == 5 ? 2 : 1) * sizeof value,
+                      way == 3 ? sign : words[0] ^ words[way == 4 ? 1 : 2]);
         sums_mend(bytes, count);
         bytes_refused(bench, bytes, count, NULL,
                       "the pack is malformed: its rows and its columns hold different cells");
         free(bytes);
     }
+    setenv("FESCUE_KERNEL", "", 1);
 }
 
 static void strangers_are_told(void **state)
@@ -451,8 +568,9 @@ int main(void)
 {
     const struct CMUnitTest tests[] = {
         BENCH_TEST(what_was_packed_comes_back),         BENCH_TEST(large_tables_come_back),
-        BENCH_TEST(no_changed_byte_goes_unnoticed),     BENCH_TEST(no_other_length_is_taken),
-        cmocka_unit_test(the_sum_sees_what_cancels),    BENCH_TEST(hostile_packs_do_no_harm),
+        BENCH_TEST(no_changed_byte_goes_unnoticed),     BENCH_TEST(damage_is_told_with_its_place),
+        BENCH_TEST(no_other_length_is_taken),           cmocka_unit_test(the_sum_sees_what_cancels),
+        BENCH_TEST(hostile_packs_do_no_harm),           BENCH_TEST(vectors_make_no_difference),
         BENCH_TEST(directions_that_differ_are_refused), BENCH_TEST(strangers_are_told),
         BENCH_TEST(every_fault_of_reading_is_met),      BENCH_TEST(every_fault_of_writing_leaves_nothing),
     };
