@@ -80,8 +80,8 @@ struct arena {
 };
 void arena_reserve(struct arena *arena, size_t count, size_t size);
 fescue_status arena_open(fescue_context *context, struct arena *arena); /* zeroed; FESCUE_NO_MEMORY */
-void *arena_carve(struct arena *arena, size_t count, size_t size);      /* aligned to 64; asserts on over-carving */
-void arena_close(fescue_context *context, struct arena *arena);         /* NULL-safe, idempotent */
+void *arena_carve(struct arena *arena, size_t count, size_t size); /* aligned to 64; zeros; asserts on over-carving */
+void arena_close(fescue_context *context, struct arena *arena);    /* NULL-safe, idempotent */
 
 /* ---- files ---------------------------------------------------------------------------------------------------- */
 

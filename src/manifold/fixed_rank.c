@@ -18,7 +18,7 @@
  * Transport by projection onto the tangents at Y = W diag(.) T' needs the products of Z:
  *     Z T  = U (M (V'T) + Vp'T) + Up (V'T),      Z'W = V (M'(U'W) + Up'W) + Vp (U'W)
  *
- * Cost: O((m+n) r^2), inner products O((m+n) r). Serial: small beside a pass over the cells.
+ * Cost: O((m+n) r^2), inner products O((m+n) r). Parallel.
  */
 #include "manifold/manifold_internal.h"
 
@@ -38,63 +38,46 @@ struct fixed_rank_tangent fixed_rank_tangent_carve(struct arena *arena, size_t r
     return z;
 }
 
-void fixed_rank_zero(struct fixed_rank_tangent *z)
+void fixed_rank_add(const struct fixed_rank_work *work, double alpha, const struct fixed_rank_tangent *x, double beta,
+                    struct fixed_rank_tangent *y)
 {
-    matrix_zero(z->middle);
-    matrix_zero(z->left);
-    matrix_zero(z->right);
+    tall_add(work->context, alpha, x->middle, beta, y->middle);
+    tall_add(work->context, alpha, x->left, beta, y->left);
+    tall_add(work->context, alpha, x->right, beta, y->right);
 }
 
-void fixed_rank_copy(const struct fixed_rank_tangent *from, struct fixed_rank_tangent *to)
+double fixed_rank_inner(const struct fixed_rank_work *work, const struct fixed_rank_tangent *x,
+                        const struct fixed_rank_tangent *y)
 {
-    matrix_copy(from->middle, to->middle);
-    matrix_copy(from->left, to->left);
-    matrix_copy(from->right, to->right);
-}
-
-void fixed_rank_scale(double alpha, struct fixed_rank_tangent *z)
-{
-    matrix_scale(alpha, z->middle);
-    matrix_scale(alpha, z->left);
-    matrix_scale(alpha, z->right);
-}
-
-void fixed_rank_add(double alpha, const struct fixed_rank_tangent *x, struct fixed_rank_tangent *y)
-{
-    matrix_add(alpha, x->middle, y->middle);
-    matrix_add(alpha, x->left, y->left);
-    matrix_add(alpha, x->right, y->right);
-}
-
-double fixed_rank_inner(const struct fixed_rank_tangent *x, const struct fixed_rank_tangent *y)
-{
-    return matrix_dot(x->middle, y->middle) + matrix_dot(x->left, y->left) + matrix_dot(x->right, y->right);
+    return matrix_dot(x->middle, y->middle) + tall_dot(work->context, x->left, y->left) +
+           tall_dot(work->context, x->right, y->right);
 }
 
 /* within = frame'a; a <- (I - frame frame') a. */
-static void normal_part(struct matrix frame, struct matrix a, struct matrix within, struct matrix small)
+static void normal_part(struct fixed_rank_work *work, struct matrix frame, struct matrix a, struct matrix within)
 {
-    matrix_multiply(1, frame, true, a, false, 0, within);
+    tall_cross(work->context, frame, a, within, work->dense);
     if (frame.rows == frame.columns) { /* the frame spans everything */
         matrix_zero(a);
         return;
     }
-    matrix_multiply(-1, frame, false, within, false, 1, a);
-    matrix_multiply(1, frame, true, a, false, 0, small);
-    matrix_multiply(-1, frame, false, small, false, 1, a);
+    tall_multiply(work->context, -1, frame, within, 1, a);
+    tall_cross(work->context, frame, a, work->small, work->dense);
+    tall_multiply(work->context, -1, frame, work->small, 1, a);
 }
 
 void fixed_rank_project(struct fixed_rank_work *work, const struct low_rank *point, struct fixed_rank_tangent *z)
 {
     assert(is_shape(z->left, point->rows, point->rank) && is_shape(z->right, point->columns, point->rank));
-    normal_part(point->left, z->left, z->middle, work->small);
-    normal_part(point->right, z->right, work->small_right, work->small); /* here the inner part is M' once more */
+    normal_part(work, point->left, z->left, z->middle);
+    normal_part(work, point->right, z->right, work->small_right); /* here the inner part is M' once more */
 }
 
-void fixed_rank_pairs(const struct low_rank *point, const struct fixed_rank_tangent *z, struct matrix a)
+void fixed_rank_pairs(const struct fixed_rank_work *work, const struct low_rank *point,
+                      const struct fixed_rank_tangent *z, struct matrix a)
 {
-    matrix_copy(z->left, a);
-    matrix_multiply(1, point->left, false, z->middle, false, 1, a);
+    tall_copy(work->context, z->left, NULL, a);
+    tall_multiply(work->context, 1, point->left, z->middle, 1, a);
 }
 
 /* product = frame (middle overlap + normal_other'new_other) + normal overlap,  overlap = frame_other'new_other: one
@@ -106,11 +89,11 @@ struct tangent_side {
 static void tangent_times_frame(struct fixed_rank_work *work, struct tangent_side near, struct tangent_side far,
                                 struct matrix middle, bool transpose, struct matrix far_frame, struct matrix product)
 {
-    matrix_multiply(1, far.frame, true, far_frame, false, 0, work->small);
-    matrix_multiply(1, far.normal, true, far_frame, false, 0, work->small_right);
+    tall_cross(work->context, far.frame, far_frame, work->small, work->dense);
+    tall_cross(work->context, far.normal, far_frame, work->small_right, work->dense);
     matrix_multiply(1, middle, transpose, work->small, false, 1, work->small_right);
-    matrix_multiply(1, near.frame, false, work->small_right, false, 0, product);
-    matrix_multiply(1, near.normal, false, work->small, false, 1, product);
+    tall_multiply(work->context, 1, near.frame, work->small_right, 0, product);
+    tall_multiply(work->context, 1, near.normal, work->small, 1, product);
 }
 
 void fixed_rank_transport(struct fixed_rank_work *work, const struct low_rank *from, const struct fixed_rank_tangent *z,

@@ -133,35 +133,34 @@ static bool is_wide(struct matrix a)
 }
 
 /* to = [frame normal]. */
-static void pair_copy(const struct side *side, struct matrix to)
+static void pair_copy(fescue_context *context, const struct side *side, struct matrix to)
 {
-    size_t rank = side->frame.columns;
-    for (size_t i = 0; i < to.rows; i++)
-        for (size_t k = 0; k < rank; k++) {
-            MATRIX_AT(to, i, k) = MATRIX_AT(side->frame, i, k);
-            MATRIX_AT(to, i, rank + k) = MATRIX_AT(side->normal, i, k);
-        }
+    struct matrix right = to;
+    right.data += side->frame.columns;
+    right.columns -= side->frame.columns;
+    tall_copy(context, side->frame, NULL, matrix_left(to, side->frame.columns));
+    tall_copy(context, side->normal, NULL, right);
 }
 
 /* [frame normal] = tall triangle; where that is wide, tall is the identity and left out. */
 static fescue_status pair_factor(struct fixed_rank_work *work, const struct side *side)
 {
     if (is_wide(side->tall)) {
-        pair_copy(side, side->triangle);
+        pair_copy(work->context, side, side->triangle);
         return FESCUE_OK;
     }
-    pair_copy(side, side->tall);
+    pair_copy(work->context, side, side->tall);
     return dense_qr(work->context, side->tall, side->triangle, work->dense);
 }
 
 /* frame = tall times the leading columns of the core's singular vectors. */
-static void pair_frame(const struct side *side, struct matrix vectors, struct matrix frame)
+static void pair_frame(fescue_context *context, const struct side *side, struct matrix vectors, struct matrix frame)
 {
     struct matrix leading = matrix_left(vectors, frame.columns);
     if (is_wide(side->tall))
         matrix_copy(leading, frame);
     else
-        matrix_multiply(1, side->tall, false, leading, false, 0, frame);
+        tall_multiply(context, 1, side->tall, leading, 0, frame);
 }
 
 /* SVD of high C low', or of high C' low' when transposed, where high has at least as many rows as low. The singular
@@ -191,8 +190,8 @@ fescue_status fixed_rank_retract(struct fixed_rank_work *work, const struct low_
         TRY(core_factor(work, left.triangle, right.triangle, false, &left_vectors, &right_vectors));
     else
         TRY(core_factor(work, right.triangle, left.triangle, true, &right_vectors, &left_vectors));
-    pair_frame(&left, left_vectors, to->left);
-    pair_frame(&right, right_vectors, to->right);
+    pair_frame(work->context, &left, left_vectors, to->left);
+    pair_frame(work->context, &right, right_vectors, to->right);
     memcpy(to->spectrum, work->spectrum, work->rank * sizeof *to->spectrum);
 done:
     return status;
@@ -205,11 +204,11 @@ static fescue_status graph_factor(struct fixed_rank_work *work, const struct sid
                                   struct matrix other, double t)
 {
     struct matrix tall = side->tall;
-    matrix_multiply(t, side->normal, false, other, false, 0, tall);
+    tall_multiply(work->context, t, side->normal, other, 0, tall);
     for (size_t i = 0; i < tall.rows; i++)
         for (size_t k = 0; k < tall.columns; k++)
             MATRIX_AT(tall, i, k) /= work->spectrum[k];
-    matrix_multiply(1, side->frame, false, own, false, 1, tall);
+    tall_multiply(work->context, 1, side->frame, own, 1, tall);
     return dense_qr(work->context, tall, side->triangle, work->dense);
 }
 
@@ -224,8 +223,8 @@ static fescue_status graph_meet(struct fixed_rank_work *work, const struct side 
     matrix_scale_columns(left->triangle, work->spectrum);
     matrix_multiply(1, left->triangle, false, right->triangle, true, 0, a);
     TRY(dense_svd(work->context, a, to->spectrum, b, work->dense));
-    matrix_multiply(1, left->tall, false, a, false, 0, to->left);
-    matrix_multiply(1, right->tall, false, b, false, 0, to->right);
+    tall_multiply(work->context, 1, left->tall, a, 0, to->left);
+    tall_multiply(work->context, 1, right->tall, b, 0, to->right);
 done:
     return status;
 }

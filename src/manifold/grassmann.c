@@ -50,8 +50,8 @@ void grassmann_project(struct grassmann_work *work, struct matrix point, struct 
         return;
     }
     for (int pass = 0; pass < 2; pass++) {
-        matrix_multiply(1, point, true, z, false, 0, work->core);
-        matrix_multiply(-1, point, false, work->core, false, 1, z);
+        tall_cross(work->context, point, z, work->core, work->dense);
+        tall_multiply(work->context, -1, point, work->core, 1, z);
     }
 }
 

@@ -34,8 +34,8 @@ fescue_status low_rank_from_product(fescue_context *context, struct matrix a, st
         TRY(dense_qr(context, qb, rb, work));
         matrix_multiply(1, ra, false, rb, true, 0, core);
         TRY(dense_svd(context, core, out->spectrum, v, work));
-        matrix_multiply(1, qa, false, core, false, 0, out->left);
-        matrix_multiply(1, qb, false, v, false, 0, out->right);
+        tall_multiply(context, 1, qa, core, 0, out->left);
+        tall_multiply(context, 1, qb, v, 0, out->right);
     }
 done:
     if (status != FESCUE_OK)

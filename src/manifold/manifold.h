@@ -147,11 +147,10 @@ struct fixed_rank_work fixed_rank_carve(fescue_context *context, struct arena *a
                                         size_t rank);
 
 /* Tangents as vectors. O((m+n) r). */
-void fixed_rank_zero(struct fixed_rank_tangent *z);
-void fixed_rank_copy(const struct fixed_rank_tangent *from, struct fixed_rank_tangent *to);
-void fixed_rank_scale(double alpha, struct fixed_rank_tangent *z);
-void fixed_rank_add(double alpha, const struct fixed_rank_tangent *x, struct fixed_rank_tangent *y); /* y += alpha x */
-double fixed_rank_inner(const struct fixed_rank_tangent *x, const struct fixed_rank_tangent *y);
+void fixed_rank_add(const struct fixed_rank_work *work, double alpha, const struct fixed_rank_tangent *x, double beta,
+                    struct fixed_rank_tangent *y); /* y = alpha x + beta y; y is not read where beta is 0 */
+double fixed_rank_inner(const struct fixed_rank_work *work, const struct fixed_rank_tangent *x,
+                        const struct fixed_rank_tangent *y);
 
 /* The orthogonal projection of an m x n matrix A onto the tangents at `point`, from two products of A that its owner
    makes: on entry z->left = A V (m x r) and z->right = A'U (n x r), z->middle anything; on return z is the projection.
@@ -160,7 +159,8 @@ void fixed_rank_project(struct fixed_rank_work *work, const struct low_rank *poi
 
 /* The tangent as two pairs of factors, Z = A V' + U B': A (m x r, receives U M + Up); B is z->right itself. What
    sweep_tangent takes: (a, right, left, b) = (A, V, U, B). */
-void fixed_rank_pairs(const struct low_rank *point, const struct fixed_rank_tangent *z, struct matrix a);
+void fixed_rank_pairs(const struct fixed_rank_work *work, const struct low_rank *point,
+                      const struct fixed_rank_tangent *z, struct matrix a);
 
 /* Transport by projection: out (not z) = the projection of Z, a tangent at `from`, onto the tangents at `to`.
    O((m+n) r^2). */

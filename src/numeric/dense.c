@@ -56,13 +56,13 @@ struct matrix dense_piece(struct matrix a, const struct dense_pieces *pieces, si
     return a;
 }
 
+/* c = alpha op(a) op(b) + beta c, nothing empty. */
 struct product {
     double alpha;
     struct matrix a, b, c;
     bool transpose_a, transpose_b;
 };
 
-/* c = alpha op(a) op(b) + beta c, nothing empty. */
 static void product_make(const struct product *p, double beta)
 {
     size_t inner = p->transpose_a ? p->a.rows : p->a.columns;

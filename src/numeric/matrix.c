@@ -25,9 +25,8 @@ void matrix_reserve(struct arena *arena, size_t rows, size_t columns)
 struct matrix matrix_carve(struct arena *arena, size_t rows, size_t columns)
 {
     size_t stride = factor_stride(columns);
-    double *data = arena_carve(arena, rows * stride, sizeof *data);
-    memset(data, 0, rows * stride * sizeof *data); /* an arena may be carved a second time */
-    return (struct matrix){.data = data, .rows = rows, .columns = columns, .stride = stride};
+    return (struct matrix){
+        .data = arena_carve(arena, rows * stride, sizeof(double)), .rows = rows, .columns = columns, .stride = stride};
 }
 
 struct matrix matrix_left(struct matrix a, size_t columns)

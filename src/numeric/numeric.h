@@ -48,6 +48,15 @@ double matrix_norm(struct matrix a);                             /* Frobenius, s
 void matrix_multiply(double alpha, struct matrix a, bool transpose_a, struct matrix b, bool transpose_b, double beta,
                      struct matrix c);                           /* c = alpha op(a) op(b) + beta c */
 void matrix_scale_columns(struct matrix a, const double *scale); /* a_ij *= scale_j */
+/* The same for tall a (and b in a'b) by the team: c = alpha a b + beta c, c = a'b. `work` from dense_work_size(lines,
+   the larger number of columns). */
+void tall_multiply(fescue_context *context, double alpha, struct matrix a, struct matrix b, double beta,
+                   struct matrix c);
+void tall_cross(fescue_context *context, struct matrix a, struct matrix b, struct matrix c, double *work);
+/* to = from, its columns times `scale` or NULL; y = alpha x + beta y; the sum of a_ij b_ij. */
+void tall_copy(fescue_context *context, struct matrix from, const double *scale, struct matrix to);
+void tall_add(fescue_context *context, double alpha, struct matrix x, double beta, struct matrix y);
+double tall_dot(fescue_context *context, struct matrix a, struct matrix b);
 /* a = q r with r upper triangular and diag(r) >= 0; q overwrites a (lines x k, lines >= k); r is k x k or NULL data. A
    rank-deficient a still gives an orthonormal q. `work` from dense_work_size(lines, k) doubles. */
 fescue_status dense_qr(fescue_context *context, struct matrix a, struct matrix r, double *work);

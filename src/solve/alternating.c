@@ -57,7 +57,7 @@ static double steepness_of(struct alternating *at)
     for (size_t i = 0; i < p->rank; i++)
         for (size_t j = 0; j <= i; j++)
             MATRIX_AT(at->metric, i, j) = MATRIX_AT(at->metric, j, i) = at->inverse[packed_size(i) + j];
-    matrix_multiply(1, p->gradient, false, at->metric, false, 0, at->turned);
+    tall_multiply(p->field->problem->context, 1, p->gradient, at->metric, 0, at->turned);
     return matrix_dot(at->turned, p->gradient);
 }
 

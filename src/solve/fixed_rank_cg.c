@@ -28,7 +28,7 @@
  * Cost an iteration: three passes over the cells (tangent, residual with R V, residual with R'U), 4r flops a cell each,
  * and O((m+n) r^2). Workspace: four tangents, two points, two scaled factors, two values a cell.
  *
- * Parallel in the passes only; they give the same bits for any number of workers, all else is serial.
+ * Parallel in the passes and in all that goes over the lines; the same bits for any number of workers.
  */
 #include "solve/solve_internal.h"
 
@@ -91,8 +91,7 @@ static void trial_evaluate(struct fixed_rank_cg *cg)
     struct low_rank *x = &cg->trial;
     struct solve_measure *measure = &cg->trial_measure;
     double size = 0;
-    matrix_copy(x->left, cg->scaled_left);
-    matrix_scale_columns(cg->scaled_left, x->spectrum);
+    tall_copy(cg->work.context, x->left, x->spectrum, cg->scaled_left);
     sweep_residual(&cg->field->sweep, field_rows(cg->field), cg->scaled_left, x->right, cg->trial_gradient.left,
                    cg->trial_residual, &measure->square);
     for (size_t k = 0; k < x->rank; k++)
@@ -106,13 +105,12 @@ static void trial_differentiate(struct fixed_rank_cg *cg)
     struct low_rank *x = &cg->trial;
     struct fixed_rank_tangent *g = &cg->trial_gradient;
     double square;
-    matrix_copy(x->right, cg->scaled_right);
-    matrix_scale_columns(cg->scaled_right, x->spectrum);
+    tall_copy(cg->work.context, x->right, x->spectrum, cg->scaled_right);
     sweep_residual(&cg->field->sweep, field_columns(cg->field), cg->scaled_right, x->left, g->right, NULL, &square);
     fixed_rank_project(&cg->work, x, g);
     for (size_t k = 0; k < x->rank; k++)
         MATRIX_AT(g->middle, k, k) += cg->field->problem->lambda * x->spectrum[k];
-    cg->trial_measure.gradient = sqrt(fixed_rank_inner(g, g));
+    cg->trial_measure.gradient = sqrt(fixed_rank_inner(&cg->work, g, g));
 }
 
 /* The trial becomes the point; what was the point is overwritten by the next trial. */
@@ -132,8 +130,7 @@ static void trial_accept(struct fixed_rank_cg *cg)
 
 static void direction_restart(struct fixed_rank_cg *cg)
 {
-    fixed_rank_copy(&cg->gradient, &cg->direction);
-    fixed_rank_scale(-1, &cg->direction);
+    fixed_rank_add(&cg->work, -1, &cg->gradient, 0, &cg->direction);
     cg->fresh = true;
 }
 
@@ -173,13 +170,13 @@ static void direction_measure(struct fixed_rank_cg *cg, double *slope, double *c
     const struct low_rank *x = &cg->point;
     const struct fixed_rank_tangent *d = &cg->direction;
     double lambda = cg->field->problem->lambda, along = 0;
-    fixed_rank_pairs(x, d, cg->scaled_left);
+    fixed_rank_pairs(&cg->work, x, d, cg->scaled_left);
     sweep_tangent(&cg->field->sweep, field_rows(cg->field), cg->scaled_left, x->right, x->left, d->right, cg->residual,
                   slope, curvature);
     for (size_t k = 0; k < x->rank; k++)
         along += x->spectrum[k] * MATRIX_AT(d->middle, k, k);
     *slope += lambda * along;
-    *curvature += lambda * fixed_rank_inner(d, d);
+    *curvature += lambda * fixed_rank_inner(&cg->work, d, d);
 }
 
 /* The direction for this iteration, carried over from the point before (which cg->trial still holds; its gradient is in
@@ -188,19 +185,18 @@ static void direction_choose(struct fixed_rank_cg *cg, double old_gradient)
 {
     double new_gradient = cg->measure.gradient;
     fixed_rank_transport(&cg->work, &cg->trial, &cg->trial_gradient, &cg->point, &cg->moved);
-    double turned = fixed_rank_inner(&cg->gradient, &cg->moved);
+    double turned = fixed_rank_inner(&cg->work, &cg->gradient, &cg->moved);
     double beta = (new_gradient * new_gradient - turned) / (old_gradient * old_gradient);
     if (!(beta > 0)) {
         direction_restart(cg);
         return;
     }
     fixed_rank_transport(&cg->work, &cg->trial, &cg->direction, &cg->point, &cg->moved);
-    fixed_rank_copy(&cg->moved, &cg->direction);
-    fixed_rank_scale(beta, &cg->direction);
-    fixed_rank_add(-1, &cg->gradient, &cg->direction);
+    fixed_rank_add(&cg->work, beta, &cg->moved, 0, &cg->direction);
+    fixed_rank_add(&cg->work, -1, &cg->gradient, 1, &cg->direction);
     cg->fresh = false;
-    double descent = -fixed_rank_inner(&cg->gradient, &cg->direction);
-    double length = sqrt(fixed_rank_inner(&cg->direction, &cg->direction));
+    double descent = -fixed_rank_inner(&cg->work, &cg->gradient, &cg->direction);
+    double length = sqrt(fixed_rank_inner(&cg->work, &cg->direction, &cg->direction));
     if (!(descent > least_cosine * new_gradient * length))
         direction_restart(cg);
 }

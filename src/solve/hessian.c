@@ -69,7 +69,7 @@ void hessian_start(struct hessian *hessian, bool exact)
     struct matrix none = {0};
     double square;
     hessian->exact = exact;
-    matrix_multiply(1, p->weights, true, p->weights, false, 0, p->core);
+    tall_cross(p->field->problem->context, p->weights, p->weights, p->core, p->dense);
     for (size_t i = 0; i < p->rank; i++)
         for (size_t j = 0; j < p->rank; j++)
             MATRIX_AT(hessian->damping, i, j) = 0.5 * (p->ridge[i] + p->ridge[j]) * MATRIX_AT(p->core, i, j);

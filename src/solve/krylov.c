@@ -127,8 +127,8 @@ static void project_out(struct krylov *k, size_t count)
     part.rows = count;
     if (count == 0)
         return;
-    matrix_multiply(1, done, true, k->raw, false, 0, part);
-    matrix_multiply(-1, done, false, part, false, 1, k->raw);
+    tall_cross(k->sparse->sweep->context, done, k->raw, part, k->dense);
+    tall_multiply(k->sparse->sweep->context, -1, done, part, 1, k->raw);
 }
 
 /* raw becomes block `b` of the basis. The second round after the QR keeps it orthogonal to the earlier blocks when raw
@@ -146,10 +146,20 @@ static fescue_status block_add(struct krylov *k, size_t b)
 }
 
 /* G, so that the numbers of a line depend on the seed and the line alone. */
-static void random_fill(uint64_t seed, struct matrix g)
+struct filling {
+    struct matrix g;
+    uint64_t seed;
+};
+enum { FILL_LINES = 1024 }; /* a piece for one worker: some 300 us */
+
+static void fill_piece(void *job, size_t piece, size_t worker)
 {
-    for (size_t i = 0; i < g.rows; i++) {
-        struct random_stream stream = random_open(seed, RANDOM_START, (uint32_t)i);
+    const struct filling *filling = job;
+    struct matrix g = filling->g;
+    size_t first = piece * FILL_LINES, last = first + FILL_LINES < g.rows ? first + FILL_LINES : g.rows;
+    (void)worker;
+    for (size_t i = first; i < last; i++) {
+        struct random_stream stream = random_open(filling->seed, RANDOM_START, (uint32_t)i);
         for (size_t j = 0; j < g.columns; j++)
             MATRIX_AT(g, i, j) = random_normal(&stream);
     }
@@ -159,7 +169,8 @@ static void random_fill(uint64_t seed, struct matrix g)
 static fescue_status basis_build(struct krylov *k, uint64_t seed)
 {
     fescue_status status;
-    random_fill(seed, k->across);
+    struct filling filling = {k->across, seed};
+    team_run(k->sparse->sweep->context, (k->across.rows + FILL_LINES - 1) / FILL_LINES, fill_piece, &filling);
     apply(k, k->across, k->raw);
     for (size_t b = 0; b < k->blocks; b++) {
         TRY(block_add(k, b));
@@ -167,7 +178,7 @@ static fescue_status basis_build(struct krylov *k, uint64_t seed)
         apply(k, k->across, k->raw);
         struct matrix part = columns_of(k->gram, b * k->width, k->width);
         part.rows = (b + 1) * k->width;
-        matrix_multiply(1, matrix_left(k->basis, part.rows), true, k->raw, false, 0, part);
+        tall_cross(k->sparse->sweep->context, matrix_left(k->basis, part.rows), k->raw, part, k->dense);
     }
 done:
     return status;
@@ -190,10 +201,10 @@ fescue_status krylov_triplets(const struct sparse_operator *sparse, size_t rank,
     for (size_t i = 0; i < k.gram.rows; i++)
         for (size_t j = 0; j < rank; j++)
             MATRIX_AT(k.tops, i, j) = MATRIX_AT(k.gram, i, k.gram.columns - 1 - j);
-    matrix_multiply(1, k.basis, false, k.tops, false, 0, k.left);
+    tall_multiply(context, 1, k.basis, k.tops, 0, k.left);
     apply_transposed(&k, k.left, k.left_scaled, of_long);
     TRY(dense_svd(context, of_long, spectrum, k.small, k.dense));
-    matrix_multiply(1, k.left, false, k.small, false, 0, of_short);
+    tall_multiply(context, 1, k.left, k.small, 0, of_short);
 done:
     arena_close(context, &k.arena);
     return status;

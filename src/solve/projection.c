@@ -71,25 +71,27 @@ void projection_carve(struct arena *arena, struct field *field, const struct low
     matrix_copy(rows_short ? point->left : point->right, projection->basis);
 }
 
+/* Spoils core. */
 static double penalty_of(const struct projection *projection)
 {
-    double penalty = 0;
-    for (size_t k = 0; k < projection->rank; k++) {
-        double size = 0;
-        for (size_t j = 0; j < projection->weights.rows; j++)
-            size += MATRIX_AT(projection->weights, j, k) * MATRIX_AT(projection->weights, j, k);
-        penalty += projection->ridge[k] * size;
-    }
+    double penalty = 0, *size = projection->core.data;
+    memset(size, 0, projection->rank * sizeof *size);
+    for (size_t j = 0; j < projection->weights.rows; j++)
+        for (size_t k = 0; k < projection->rank; k++)
+            size[k] += MATRIX_AT(projection->weights, j, k) * MATRIX_AT(projection->weights, j, k);
+    for (size_t k = 0; k < projection->rank; k++)
+        penalty += projection->ridge[k] * size[k];
     return penalty;
 }
 
 void projection_evaluate(struct projection *p)
 {
+    fescue_context *context = p->field->problem->context;
     sweep_solve(&p->field->sweep, p->by_long, p->basis, p->ridge, p->weights, p->factors);
     sweep_residual(&p->field->sweep, p->by_short, p->basis, p->weights, p->gradient, p->residual, &p->square);
     p->objective = 0.5 * p->square + 0.5 * penalty_of(p);
-    matrix_multiply(1, p->basis, true, p->gradient, false, 0, p->core);
-    matrix_multiply(-1, p->basis, false, p->core, false, 1, p->gradient);
+    tall_cross(context, p->basis, p->gradient, p->core, p->dense);
+    tall_multiply(context, -1, p->basis, p->core, 1, p->gradient);
 }
 
 /* W = Q S Z' gives X = (U Z) S Q'. */
@@ -98,10 +100,11 @@ fescue_status projection_write(struct projection *p, struct low_rank *point)
     struct matrix of_short = p->rows_short ? point->left : point->right;
     struct matrix of_long = p->rows_short ? point->right : point->left;
     matrix_copy(p->weights, p->spare);
-    fescue_status status = dense_svd(p->field->problem->context, p->spare, p->spectrum, p->core, p->dense);
+    fescue_context *context = p->field->problem->context;
+    fescue_status status = dense_svd(context, p->spare, p->spectrum, p->core, p->dense);
     if (status != FESCUE_OK)
         return status;
-    matrix_multiply(1, p->basis, false, p->core, false, 0, of_short);
+    tall_multiply(context, 1, p->basis, p->core, 0, of_short);
     matrix_copy(p->spare, of_long);
     memcpy(point->spectrum, p->spectrum, p->rank * sizeof *p->spectrum);
     return FESCUE_OK;
@@ -110,7 +113,7 @@ fescue_status projection_write(struct projection *p, struct low_rank *point)
 bool projection_metric(struct projection *p, double *factor)
 {
     double trace = 0;
-    matrix_multiply(1, p->weights, true, p->weights, false, 0, p->core);
+    tall_cross(p->field->problem->context, p->weights, p->weights, p->core, p->dense);
     for (size_t k = 0; k < p->rank; k++)
         trace += MATRIX_AT(p->core, k, k);
     if (!(trace > 0))

@@ -190,7 +190,7 @@ static fescue_status step_judge(struct trust *trust, bool at_boundary, bool *tak
 static void inner_start(struct trust *trust)
 {
     struct projection *p = trust->projection;
-    matrix_multiply(1, p->weights, true, p->weights, false, 0, trust->gram);
+    tall_cross(p->field->problem->context, p->weights, p->weights, trust->gram, p->dense);
     hessian_blocks_start(&trust->blocks, trust->hessian.damping);
 }
 

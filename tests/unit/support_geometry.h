@@ -10,6 +10,7 @@
 
 #include <math.h>
 #include <stdlib.h>
+#include <string.h>
 
 /* Room for the matrices of one test, and its random numbers. */
 struct ground {
@@ -40,6 +41,7 @@ static inline void ground_close(struct ground *ground)
 /* Everything carved so far is free again. */
 static inline void ground_clear(struct ground *ground)
 {
+    memset(ground->arena.base, 0, ground->arena.carved);
     ground->arena.carved = 0;
 }
 

@@ -396,6 +396,46 @@ static void products_of_tall_matrices(void **state)
     }
 }
 
+/* What the team makes is what one worker makes, to the bit, and what plain products make, to rounding. */
+static void tall_products_by_the_team(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    static const double scale[] = {2, 3, 0, -1, 5, 1, 1, 0.5};
+    struct stand stand[3];
+    double dot[3];
+    for (size_t s = 0; s < 3; s++) {
+        stand_open(&stand[s], context, (struct shape){20000, 8});
+        struct matrix a = stand[s].a, b = stand[s].copy;
+        assert_status(context, team_resize(context, s == 1 ? 3 : 1), FESCUE_OK);
+        if (s < 2) {
+            tall_cross(context, a, b, stand[s].product, stand[s].work);
+            tall_multiply(context, 1e-3, a, stand[s].product, -1, b);
+            tall_add(context, -2, a, 3, b);
+            dot[s] = tall_dot(context, a, b);
+            tall_copy(context, b, scale, a);
+            tall_add(context, 1, a, 0, b);
+        } else {
+            matrix_multiply(1, a, true, b, false, 0, stand[s].product);
+            matrix_multiply(1e-3, a, false, stand[s].product, false, -1, b);
+            matrix_scale(3, b);
+            matrix_add(-2, a, b);
+            dot[s] = matrix_dot(a, b);
+            matrix_scale_columns(b, scale);
+        }
+    }
+    assert_true(dot[0] == dot[1]);
+    assert_close(dot[0], dot[2], 1e-11 * 20000 * 20);
+    for (size_t i = 0; i < 20000; i++)
+        for (size_t j = 0; j < 8; j++) {
+            double one = MATRIX_AT(stand[0].copy, i, j), plain = MATRIX_AT(stand[2].copy, i, j);
+            assert_true(one == MATRIX_AT(stand[1].copy, i, j) && one == MATRIX_AT(stand[0].a, i, j));
+            assert_close(one, plain, 1e-12 * (1 + fabs(plain)));
+        }
+    assert_status(context, team_resize(context, 1), FESCUE_OK);
+    for (size_t s = 0; s < 3; s++)
+        stand_close(&stand[s]);
+}
+
 static void what_is_not_finite_is_refused(void **state)
 {
     struct stand stand;
@@ -427,6 +467,7 @@ int main(void)
         BENCH_TEST(eigenvalues_of_the_second_difference),
         BENCH_TEST(products_of_all_kinds),
         BENCH_TEST(products_of_tall_matrices),
+        BENCH_TEST(tall_products_by_the_team),
         BENCH_TEST(what_is_not_finite_is_refused),
     };
     return cmocka_run_group_tests(tests, NULL, NULL);

@@ -149,7 +149,7 @@ static struct matrix fixed_rank_embed(struct world *world, enum place place)
 static struct matrix fixed_rank_embed_tangent(struct world *world, enum place place, enum slot slot)
 {
     struct matrix a = zeros(&world->ground, ROWS, RANK);
-    fixed_rank_pairs(&world->point[place], &world->tangent[slot], a);
+    fixed_rank_pairs(&world->fixed_rank, &world->point[place], &world->tangent[slot], a);
     struct matrix dense = times(&world->ground, a, false, world->point[place].right, true);
     matrix_multiply(1, world->point[place].left, false, world->tangent[slot].right, true, 1, dense);
     return dense;
@@ -164,7 +164,7 @@ static void fixed_rank_project_dense(struct world *world, struct matrix dense, e
 
 static double fixed_rank_inner_of(struct world *world, enum slot a, enum slot b)
 {
-    return fixed_rank_inner(&world->tangent[a], &world->tangent[b]);
+    return fixed_rank_inner(&world->fixed_rank, &world->tangent[a], &world->tangent[b]);
 }
 
 static void move_metric(struct world *world, double t)

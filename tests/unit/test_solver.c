@@ -159,7 +159,8 @@ static void gradient_plain(struct plot *plot, const struct low_rank *x, struct r
 {
     double *dense = dense_targets(plot, NAN);
     struct fixed_rank_tangent *g = &reference->gradient;
-    fixed_rank_zero(g);
+    matrix_zero(g->left);
+    matrix_zero(g->right);
     for (size_t i = 0; i < x->rows; i++)
         for (size_t j = 0; j < x->columns; j++) {
             double entry = low_rank_entry(x, i, j), t = dense[i * x->columns + j];
@@ -177,7 +178,7 @@ static void gradient_plain(struct plot *plot, const struct low_rank *x, struct r
 static void slopes_check(struct plot *plot, const struct low_rank *x, struct reference *reference)
 {
     double f = objective_plain(&plot->problem, x), error[8], t = 1e-2;
-    double slope = fixed_rank_inner(&reference->gradient, &reference->direction);
+    double slope = fixed_rank_inner(&reference->work, &reference->gradient, &reference->direction);
     for (int k = 0; k < 8; k++, t /= 2) {
         assert_status(plot->context,
                       fixed_rank_retract(&reference->work, x, &reference->direction, t, &reference->moved), FESCUE_OK);
@@ -202,7 +203,7 @@ static void the_gradient_is_the_slope(void **state)
                 reference_open(context, &point, &reference);
                 gradient_plain(&plot, &point, &reference);
                 slopes_check(&plot, &point, &reference);
-                double norm = sqrt(fixed_rank_inner(&reference.gradient, &reference.gradient));
+                double norm = sqrt(fixed_rank_inner(&reference.work, &reference.gradient, &reference.gradient));
                 assert_close(result.gradient * plot.problem.norm / norm, 1, 1e-9);
                 reference_close(context, &reference);
             }

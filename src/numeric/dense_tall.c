@@ -1,0 +1,123 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Products and sums of tall matrices by the team: pieces of lines, which depend on the shape alone.
+ *
+ * A product A B is a product of every piece by itself. One of two tall matrices, A'B, is the sum of those of the
+ * pieces, added in their order; so neither has bits that depend on the workers.
+ */
+#include "numeric/dense_internal.h"
+
+#include <assert.h>
+
+struct tall {
+    struct dense_pieces pieces;
+    double alpha, beta;
+    struct matrix a, b, c;
+    const double *scale;
+    double *partial; /* what a piece sums to: a number, or as many as A'B has */
+};
+
+static struct tall tall_of(struct matrix a, struct matrix b, struct matrix c)
+{
+    size_t width = a.columns > b.columns ? a.columns : b.columns;
+    return (struct tall){.pieces = dense_pieces_of(a.rows, width), .a = a, .b = b, .c = c};
+}
+
+static void multiply_piece(void *job, size_t piece, size_t worker)
+{
+    const struct tall *tall = job;
+    (void)worker;
+    matrix_multiply(tall->alpha, dense_piece(tall->a, &tall->pieces, piece), false, tall->b, false, tall->beta,
+                    dense_piece(tall->c, &tall->pieces, piece));
+}
+
+void tall_multiply(fescue_context *context, double alpha, struct matrix a, struct matrix b, double beta,
+                   struct matrix c)
+{
+    struct tall tall = tall_of(a, b, c);
+    tall.alpha = alpha;
+    tall.beta = beta;
+    team_run(context, tall.pieces.count, multiply_piece, &tall);
+}
+
+static void cross_piece(void *job, size_t piece, size_t worker)
+{
+    const struct tall *tall = job;
+    size_t rows = tall->c.rows, columns = tall->c.columns;
+    struct matrix sum = {tall->partial + piece * rows * columns, rows, columns, columns};
+    (void)worker;
+    matrix_multiply(1, dense_piece(tall->a, &tall->pieces, piece), true, dense_piece(tall->b, &tall->pieces, piece),
+                    false, 0, sum);
+}
+
+void tall_cross(fescue_context *context, struct matrix a, struct matrix b, struct matrix c, double *work)
+{
+    struct tall tall = tall_of(a, b, c);
+    size_t count = c.rows * c.columns;
+    assert(a.rows == b.rows && c.rows == a.columns && c.columns == b.columns);
+    if (tall.pieces.count == 1) {
+        matrix_multiply(1, a, true, b, false, 0, c);
+        return;
+    }
+    tall.partial = work + count;
+    team_run(context, tall.pieces.count, cross_piece, &tall);
+    team_sum(context, tall.partial, tall.pieces.count, count, work);
+    matrix_copy((struct matrix){work, c.rows, c.columns, c.columns}, c);
+}
+
+/* ---- one pass over the numbers ----------------------------------------------------------------------------------- */
+
+static void copy_piece(void *job, size_t piece, size_t worker)
+{
+    const struct tall *tall = job;
+    struct matrix to = dense_piece(tall->b, &tall->pieces, piece);
+    (void)worker;
+    matrix_copy(dense_piece(tall->a, &tall->pieces, piece), to);
+    if (tall->scale != NULL)
+        matrix_scale_columns(to, tall->scale);
+}
+
+void tall_copy(fescue_context *context, struct matrix from, const double *scale, struct matrix to)
+{
+    struct tall tall = tall_of(from, to, to);
+    tall.scale = scale;
+    team_run(context, tall.pieces.count, copy_piece, &tall);
+}
+
+static void add_piece(void *job, size_t piece, size_t worker)
+{
+    const struct tall *tall = job;
+    struct matrix y = dense_piece(tall->b, &tall->pieces, piece);
+    (void)worker;
+    if (tall->beta == 0)
+        matrix_zero(y);
+    else if (tall->beta != 1)
+        matrix_scale(tall->beta, y);
+    matrix_add(tall->alpha, dense_piece(tall->a, &tall->pieces, piece), y);
+}
+
+void tall_add(fescue_context *context, double alpha, struct matrix x, double beta, struct matrix y)
+{
+    struct tall tall = tall_of(x, y, y);
+    tall.alpha = alpha;
+    tall.beta = beta;
+    team_run(context, tall.pieces.count, add_piece, &tall);
+}
+
+static void dot_piece(void *job, size_t piece, size_t worker)
+{
+    const struct tall *tall = job;
+    (void)worker;
+    tall->partial[piece] =
+        matrix_dot(dense_piece(tall->a, &tall->pieces, piece), dense_piece(tall->b, &tall->pieces, piece));
+}
+
+double tall_dot(fescue_context *context, struct matrix a, struct matrix b)
+{
+    double partial[DENSE_MOST_PIECES], sum;
+    struct tall tall = tall_of(a, b, b);
+    tall.partial = partial;
+    team_run(context, tall.pieces.count, dot_piece, &tall);
+    team_sum(context, partial, tall.pieces.count, 1, &sum);
+    return sum;
+}
