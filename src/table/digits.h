@@ -13,7 +13,7 @@
 #include <endian.h>
 #include <string.h>
 
-_Static_assert(CHUNK_SLACK >= sizeof(uint64_t), "eight characters can be read from any place of a chunk");
+_Static_assert(CHUNK_SLACK >= 3 * sizeof(uint64_t), "eight characters can be read from behind any short value");
 
 static const double digits_power[] = {1e0, 1e1, 1e2, 1e3, 1e4, 1e5, 1e6, 1e7};
 
@@ -40,30 +40,38 @@ static inline uint64_t digits_number(uint64_t word, unsigned count)
     return (word & 0x0000ffff0000ffff) * (1 + (UINT64_C(10000) << 32)) >> 32;
 }
 
+/* How many digits a word begins with. */
+static inline unsigned digits_count(uint64_t word)
+{
+    static const uint64_t ones = 0x0101010101010101;
+    uint64_t beyond = ((word + ones * (0x80 - 10)) | word) & ones * 0x80; /* right up to the first that is no digit */
+    return beyond == 0 ? 8 : (unsigned)__builtin_ctzll(beyond) / 8;
+}
+
 /* Reads the digits at `at`, at most eight of them, and returns how many there are. */
 static inline unsigned eight_digits(const char *at, uint64_t *number)
 {
-    static const uint64_t ones = 0x0101010101010101;
     uint64_t word = digits_load(at);
-    uint64_t beyond = ((word + ones * (0x80 - 10)) | word) & ones * 0x80; /* right up to the first that is no digit */
-    unsigned count = beyond == 0 ? 8 : (unsigned)__builtin_ctzll(beyond) / 8;
+    unsigned count = digits_count(word);
     *number = digits_number(word, count);
     return count;
 }
 
 /* Reads [-] digits [point digits], less than eight of either, and returns what is behind them; NULL when there is no
-   such number, or it may go on. */
+   such number, or it may go on. Nothing branches on the point, which no processor could foresee: without one, what
+   comes next counts as no digits. */
 static inline const char *short_value_read(const char *at, char point, double *value)
 {
-    bool negative = *at == '-';
-    uint64_t whole, fraction = 0;
+    const bool negative = *at == '-';
+    uint64_t whole;
     at += negative;
-    unsigned digits = eight_digits(at, &whole), decimals = 0;
-    at += digits;
-    if (*at == point) {
-        decimals = eight_digits(++at, &fraction);
-        at += decimals;
-    }
+    const unsigned digits = eight_digits(at, &whole);
+    const bool has_point = at[digits] == point;
+    at += digits + has_point;
+    const uint64_t word = digits_load(at);
+    const unsigned decimals = digits_count(word) & (0u - has_point);
+    const uint64_t fraction = digits_number(word, decimals);
+    at += decimals;
     if (digits == 0 || digits == 8 || decimals == 8 || (*at | ' ') == 'e')
         return NULL;
     double size = ((double)whole * digits_power[decimals] + (double)fraction) / digits_power[decimals];

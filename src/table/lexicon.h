@@ -55,23 +55,29 @@ static inline uint64_t lexicon_word(const char *text)
     return le64toh(word);
 }
 
-/* The label of a text behind which eight bytes can be read. */
-static inline struct lexicon_label lexicon_label_make(const struct lexicon *lexicon, const char *text, uint32_t length)
+/* The label of a text behind which eight bytes can be read. Each member is stored as it will be loaded: a copy of the
+   whole would have to wait until it is in the cache. The length is a word of its own only where the text is longer than
+   two, since no more than nine shorter ones have the same two words. */
+static inline void lexicon_label_make(const struct lexicon *lexicon, const char *text, uint32_t length,
+                                      struct lexicon_label *label)
 {
     enum { WORD = sizeof(uint64_t) };
-    struct lexicon_label label = {.head = lexicon_word(text), .text = text, .length = length};
+    const bool is_short = length < WORD;
+    const uint64_t head = lexicon_word(text) & (is_short ? (UINT64_C(1) << 8 * length) - 1 : UINT64_MAX);
+    const uint64_t tail = is_short ? 0 : lexicon_word(text + length - WORD);
     struct sip s = sip_open(lexicon->key);
-    if (length < WORD)
-        label.head &= (UINT64_C(1) << 8 * length) - 1;
-    else
-        label.tail = lexicon_word(text + length - WORD);
-    sip_word(&s, label.head);
-    for (size_t k = WORD; length > 2 * WORD && k + WORD <= length; k += WORD)
-        sip_word(&s, lexicon_word(text + k));
-    sip_word(&s, label.tail);
-    sip_word(&s, length);
-    label.hash = sip_close(&s);
-    return label;
+    sip_word(&s, head);
+    if (length > 2 * WORD) {
+        for (size_t k = WORD; k + WORD <= length; k += WORD)
+            sip_word(&s, lexicon_word(text + k));
+        sip_word(&s, length);
+    }
+    sip_word(&s, tail);
+    label->head = head;
+    label->tail = tail;
+    label->text = text;
+    label->length = length;
+    label->hash = sip_close(&s);
 }
 
 /* It will be looked for: the slot can be on its way. */

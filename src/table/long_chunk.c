@@ -43,9 +43,10 @@ struct long_worker {
     struct cut_record batch[BATCH];
     size_t cut; /* of the batch, so far */
     struct cut_label {
-        struct lexicon_label label;
+        const struct lexicon_label *label;
         uint32_t number;
-    } last[SIDES]; /* of the record that was cut last, and the number of the one that was found last */
+    } last[SIDES]; /* of the record that was cut last, in the batch or `none`, and the number of what was found last */
+    struct lexicon_label none; /* of no length */
 };
 
 /* Where a worker stands in its chunk. */
@@ -81,7 +82,7 @@ static inline const char *field_end_find(const char *at, char closing)
 static inline void label_cut(struct place *place, enum side side, struct cut_record *record)
 {
     struct long_worker *worker = place->worker;
-    struct lexicon_label *last = &worker->last[side].label;
+    const struct lexicon_label *last = worker->last[side].label;
     const bool quoted = *place->at == '"';
     const char closing = quoted ? '"' : place->separator, *text = place->at + quoted, *end = text + last->length;
     record->is_same[side] = last->length > 0 && place->end - text > (ptrdiff_t)last->length &&
@@ -91,8 +92,9 @@ static inline void label_cut(struct place *place, enum side side, struct cut_rec
         worker->is_plain = end > text && *end == closing && end - text <= INT32_MAX;
         if (!worker->is_plain)
             return;
-        *last = record->label[side] = lexicon_label_make(&worker->lexicon[side], text, (uint32_t)(end - text));
-        lexicon_expect(&worker->lexicon[side], last);
+        lexicon_label_make(&worker->lexicon[side], text, (uint32_t)(end - text), &record->label[side]);
+        worker->last[side].label = &record->label[side]; /* nobody writes there before there is another one */
+        lexicon_expect(&worker->lexicon[side], &record->label[side]);
     }
     worker->is_plain = end[quoted] == place->separator;
     place->at = end + quoted + 1;
@@ -237,14 +239,6 @@ done:
     return status;
 }
 
-static size_t lines_count(const char *text, const char *end)
-{
-    size_t lines = 0;
-    for (; text < end; text++)
-        lines += *text == '\n';
-    return lines;
-}
-
 static fescue_status chunk_parse(void *data, size_t number, const struct chunk *chunk, struct pile_block **block)
 {
     fescue_status status;
@@ -259,7 +253,7 @@ static fescue_status chunk_parse(void *data, size_t number, const struct chunk *
     size_t lines = lines_count(place.at, place.end);
     *block = NULL;
     worker->lines = worker->run_count = 0;
-    worker->last[SIDE_ROW].label.length = worker->last[SIDE_COLUMN].label.length = 0;
+    worker->last[SIDE_ROW].label = worker->last[SIDE_COLUMN].label = &worker->none;
     worker->is_plain = place.at == place.end || (place.end[-1] == '\n' && !chunk->has_zero && lines <= UINT32_MAX);
     if (!worker->is_plain)
         return FESCUE_OK;

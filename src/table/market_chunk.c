@@ -113,22 +113,6 @@ static inline bool array_take(const struct market_form *form, struct rest *rest,
     return line_end_take(rest);
 }
 
-/* By stretches short enough to count in bytes, so that the compiler adds sixteen at a time. */
-static size_t lines_count(const char *text, const char *end)
-{
-    enum { STRETCH = 128 };
-    size_t lines = 0;
-    for (; end - text >= STRETCH; text += STRETCH) {
-        unsigned char feeds = 0;
-        for (int k = 0; k < STRETCH; k++)
-            feeds = (unsigned char)(feeds + (text[k] == '\n'));
-        lines += feeds;
-    }
-    for (; text < end; text++)
-        lines += *text == '\n';
-    return lines;
-}
-
 /* The value of a hole is nan until the places of the entries are known; no text is kept of it. */
 static void hole_add(struct pile_block *block, enum fescue_precision precision)
 {

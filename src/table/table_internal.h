@@ -193,6 +193,7 @@ struct chunk_reader {
     void (*settle)(void *data, const struct pile_block *block);
 };
 fescue_status stream_parse(struct stream *stream, const struct chunk_reader *reader);
+size_t lines_count(const char *text, const char *end);     /* line feeds */
 uint64_t stream_chunk_number(const struct stream *stream); /* of the line delivered last; UINT64_MAX behind the end */
 bool stream_chunk_is_read(const struct stream *stream);    /* that line is the last of its chunk */
 
