@@ -76,6 +76,15 @@ static fescue_status weights_consider(const fescue_table *table, const struct fe
     return FESCUE_OK;
 }
 
+/* Whether what a choice was made on also says how wrong it is: only where learning it once more is felt. */
+static bool held_serves(const fescue_fill *fill)
+{
+    const struct choice *choice = &fill->choice;
+    return evidence_is_large(&fill->table->cells) && choice->is_learnt && !choice->own_holdout && choice->rank > 0 &&
+           choice->learnt.time == NULL && choice->learnt.near == NULL && fill->season.along == TIME_NONE &&
+           fill->options.folds == (int64_t)FESCUE_AUTO && fill->shape.shape == FESCUE_HOLDOUT_CELLS;
+}
+
 static fescue_status fill_choose(fescue_fill *fill, struct choose_request *request)
 {
     const struct cells *cells = &fill->table->cells;
@@ -92,6 +101,10 @@ static fescue_status fill_choose(fescue_fill *fill, struct choose_request *reque
     TRY(season_choose(fill, &holdout, request));
     fill->is_search_cut = request->deadline > 0 && clock_wall() >= request->deadline;
     fill->run.hidden = holdout.hidden.count > 0 ? holdout.hidden.count : fill->choice.errors.count;
+    if (held_serves(fill)) {
+        fill->held = holdout;
+        holdout = (struct holdout){0};
+    }
 done:
     holdout_free(fill->context, &holdout);
     return status;
@@ -117,6 +130,7 @@ static fescue_status fill_judge(fescue_fill *fill, const struct solver *solver)
                                     .options = &fill->fitting,
                                     .choice = &fill->choice,
                                     .solver = solver,
+                                    .held = fill->held.hidden.count > 0 ? &fill->held : NULL,
                                     .model = &fit->model,
                                     .shape = &fill->shape,
                                     .order = has_order ? &fill->order : NULL,
@@ -185,8 +199,11 @@ static fescue_status fill_run(fescue_fill *fill)
     TRY(near_take(fill, fill->near_text, &request));
     TRY(fill_choose(fill, &request));
     TRY(fill_fit(fill, request.solver));
-    low_rank_free(context, &fill->choice.start);
+    if (fill->held.hidden.count == 0)
+        low_rank_free(context, &fill->choice.start);
     TRY(fill_judge(fill, request.solver));
+    low_rank_free(context, &fill->choice.start);
+    holdout_free(context, &fill->held);
     season_restore(fill);
     TRY(determined_create(context, &fill->table->cells, fill->fit.model.low_rank.rank, fill->fit.model.offsets.kind,
                           &fill->determined));
@@ -327,6 +344,7 @@ void fescue_fill_destroy(fescue_fill **pointer)
     judgement_free(context, &fill->judgement);
     final_fit_free(context, &fill->fit);
     choice_free(context, &fill->choice);
+    holdout_free(context, &fill->held);
     time_axis_free(context, &fill->time);
     season_free(context, &fill->season);
     cells_free(context, &fill->rest);

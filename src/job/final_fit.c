@@ -26,7 +26,8 @@
  *
  * A fit with the absolute loss is gone over by squares, without the cells that it shows to be wrong (final_robust.c).
  *
- * What the evidence fit learnt is learnt again, by the same request from the same kind of start, on all cells.
+ * What the evidence fit learnt is learnt again, by the same request from the same kind of start, on all cells; of a
+ * large table, from what the kept cells taught it, by a few rounds.
  *
  * Cost: at most twice one fit, and room for two points. What is parallel is so in the solvers.
  */
@@ -161,6 +162,30 @@ static fescue_status stopped_take(fescue_context *context, const struct final_re
     return low_rank_copy(context, &request->choice->start, &fit->model.low_rank);
 }
 
+/* On a large table, from what was learnt from the kept cells. */
+static fescue_status learnt_further(fescue_context *context, const struct final_request *request,
+                                    const struct final_fit *fit, struct evidence_result *result)
+{
+    const struct choice *choice = request->choice;
+    struct evidence_request asked = choice->learnt;
+    const struct model start = {.rows = request->cells->rows,
+                                .columns = request->cells->columns,
+                                .offsets = fit->model.offsets,
+                                .low_rank = choice->start};
+    asked.deadline = request->deadline;
+    asked.rank = choice->start.rank;
+    asked.noise_start = choice->noise;
+    fescue_status status = evidence_fit(context, request->cells, &asked, &start, result);
+    return status == FESCUE_OK && result->fit.stop == STOP_CANCELLED ? FESCUE_STOPPED : status;
+}
+
+static bool goes_further(const struct final_request *request)
+{
+    const struct choice *choice = request->choice;
+    return evidence_is_large(request->cells) && choice->noise > 0 && choice->start.rank > 0 &&
+           choice->learnt.time == NULL && choice->learnt.near == NULL;
+}
+
 /* The evidence fit on all cells: the same procedure as the one that was judged. */
 static fescue_status learnt_run(fescue_context *context, const struct final_request *request, struct final_fit *fit)
 {
@@ -168,8 +193,10 @@ static fescue_status learnt_run(fescue_context *context, const struct final_requ
     struct evidence_result result = {0};
     struct evidence_request asked = choice->learnt;
     asked.deadline = request->deadline;
-    fit->start = "spectral";
-    fescue_status status = evidence_learn(context, request->cells, &asked, &result);
+    bool is_further = goes_further(request);
+    fit->start = is_further ? "grown" : "spectral";
+    fescue_status status = is_further ? learnt_further(context, request, fit, &result)
+                                      : evidence_learn(context, request->cells, &asked, &result);
     if (status == FESCUE_STOPPED)
         return stopped_take(context, request, fit);
     if (status != FESCUE_OK)

@@ -86,7 +86,8 @@ struct fescue_fill {
     struct hole_shape shape;       /* of what is hidden */
     struct line_order order;       /* along which gaps lie */
     struct choice choice;
-    bool is_search_cut; /* the time limit ended the choosing */
+    struct holdout held; /* what the choice was made on, where it is judged by too; else empty */
+    bool is_search_cut;  /* the time limit ended the choosing */
     struct final_fit fit;
     struct judgement judgement; /* borrows the fit's model */
     struct determined determined;

@@ -290,6 +290,11 @@ static fescue_status choice_fill(struct chooser *chooser, struct kind *kinds, si
                                   &choice->interpolation_errors));
     choice->noiseless = winner->is_exact;
     choice->halfwidth = is_judged ? halfwidth_find(chooser) : NAN;
+    if (winner->is_learnt) {
+        choice->noise = winner->variance;
+        TRY(offsets_copy(chooser->context, chooser->kept->rows, chooser->kept->columns, &winner->offsets,
+                         &choice->beside));
+    }
     TRY(low_rank_copy(chooser->context, &winner->point, &choice->start));
     for (size_t k = 0; k < choice->start.rank; k++)
         choice->start.spectrum[k] *= chooser->problem.scale;
@@ -357,5 +362,6 @@ void choice_free(fescue_context *context, struct choice *choice)
 {
     GIVE(context, &choice->path);
     low_rank_free(context, &choice->start);
+    offsets_free(context, &choice->beside);
     choice->path_count = 0;
 }

@@ -14,9 +14,10 @@
 
 /* Components to begin with: what most tables have is fewer, and growth adds what is missing. */
 enum { START_RANK = 20, FINE_ROUNDS = 60, NOISE_ROUNDS = 40 };
-/* On tables with so many cells a few rounds, which leave what they have to settle far below the error, show whether
-   noise of every line's own is worth all of them. */
-enum { LARGE = 500000, TRIAL_ROUNDS = 5 };
+/* On large tables noise of every line's own is not tried where its variance differs by less than 14 % between lines;
+   else a few rounds, which leave what they have to settle far below the error, show whether it is worth all of them. */
+enum { TRIAL_ROUNDS = 5 };
+static const double felt_spread = 0.02;
 /* And rounds enough to tell kinds of offsets apart, on tables where a round is felt. */
 enum { FELT = 50000, COMPARE_ROUNDS = 30 };
 /* The estimates are settled when a round moves them by this share of the table's spread. */
@@ -24,6 +25,9 @@ static const double settled = 1e-4;
 /* Or by this share of the noise's standard deviation: where each round moves them by a twentieth less than the one
    before, all that are left would change the squared error by some thousandths. */
 static const double settled_noise = 2e-3;
+/* On large tables the rounds end when all that are left would come to this share of it, which is a few ten-thousandths
+   of the squared error. */
+static const double left_noise = 0.02;
 
 /* What auto affords: cells x (rank + 3)^2 multiplications a round, and the bytes of the lines' moments. */
 static const double affordable_work = 1e10, affordable_bytes = 5e8;
@@ -64,9 +68,18 @@ struct evidence_request evidence_request_of(const struct chooser *chooser, const
                                      .rounds = FINE_ROUNDS,
                                      .change = settled,
                                      .change_noise = settled_noise,
+                                     .change_left = evidence_is_large(chooser->kept) ? left_noise : 0,
                                      .time = candidate->time.along != TIME_NONE ? chooser->time : NULL,
                                      .near = candidate->near.is_there ? chooser->near : NULL,
                                      .deadline = chooser->deadline};
+}
+
+/* The lines whose noise may differ: with time the series, else those of the shorter side. */
+static enum evidence_noise noise_lines(const struct chooser *chooser)
+{
+    const struct cells *kept = chooser->kept;
+    bool by_columns = chooser->time != NULL ? chooser->time->along == TIME_ROWS : kept->columns <= kept->rows;
+    return by_columns ? EVIDENCE_NOISE_COLUMNS : EVIDENCE_NOISE_ROWS;
 }
 
 /* The candidate becomes what was learnt; takes over the result's offsets and point. */
@@ -87,6 +100,8 @@ static fescue_status candidate_take(struct chooser *chooser, struct evidence_res
     candidate->version = ++chooser->versions;
     candidate->is_learnt = true;
     candidate->noise = noise;
+    candidate->variance = result->noise * result->noise;
+    candidate->spread = noise_lines(chooser) == EVIDENCE_NOISE_COLUMNS ? result->column_spread : result->row_spread;
     candidate->ridge = NAN;
     TRY(chooser_take_up(chooser, candidate));
     for (size_t k = 0; k < candidate->point.rank; k++)
@@ -125,14 +140,6 @@ fescue_status evidence_reach(struct chooser *chooser, const struct candidate *al
     struct evidence_request request = evidence_request_of(chooser, alone);
     request.rank = request.rank_most = rank;
     return learn_as(chooser, &request, alone, candidate);
-}
-
-/* The lines whose noise may differ: with time the series, else those of the shorter side. */
-static enum evidence_noise noise_lines(const struct chooser *chooser)
-{
-    const struct cells *kept = chooser->kept;
-    bool by_columns = chooser->time != NULL ? chooser->time->along == TIME_ROWS : kept->columns <= kept->rows;
-    return by_columns ? EVIDENCE_NOISE_COLUMNS : EVIDENCE_NOISE_ROWS;
 }
 
 /* What a fit is to have beyond equal noise. */
@@ -189,7 +196,10 @@ static fescue_status learn_more(struct chooser *chooser, const struct more *more
 {
     bool is_plain = more->time == NULL && more->near == NULL, is_better = true;
     fescue_status status = FESCUE_OK;
-    if (is_plain && chooser->kept->count >= LARGE)
+    bool is_trial = is_plain && evidence_is_large(chooser->kept);
+    if (is_trial && winner->spread < felt_spread)
+        return FESCUE_OK;
+    if (is_trial)
         status = learn_rounds(chooser, more, TRIAL_ROUNDS, winner, &is_better);
     if (status == FESCUE_OK && is_better)
         status = learn_rounds(chooser, more, NOISE_ROUNDS, winner, &is_better);

@@ -41,7 +41,9 @@ struct candidate {
     double ridge;   /* NAN: learnt, a ridge a component */
     bool is_learnt; /* by the evidence fit, with this noise */
     enum evidence_noise noise;
-    struct time_part time; /* owned; table units */
+    double variance, spread; /* of that noise: its mean, table units, and by how much lines differ in it if it is equal
+                              */
+    struct time_part time;   /* owned; table units */
     struct near_part near;
     struct errors errors;  /* on the hidden cells, table units; infinite when the fit blew up */
     double *square;        /* sum of squared errors of each group of hidden cells */

@@ -11,6 +11,10 @@
  * learns from nothing (cold) where at least half of the shaped ones can: from the fit on all cells (warm) it is several
  * times quicker, but components that hang together over long gaps keep something of what is hidden.
  *
+ * A large table has one scattered fold, and the choice has learnt and been judged by one already, from nothing: where
+ * its hold-out is handed in, that is the fold. The few fits among which it chose differ by far more than the mean over
+ * so many hidden cells does by chance.
+ *
  * The folds run one after another and their fits are parallel inside, so the bits do not depend on the number of
  * workers.
  */
@@ -129,6 +133,28 @@ done:
     return status;
 }
 
+/* The fit that choosing ended with, on the cells that it was judged by. */
+static fescue_status held_judge(fescue_context *context, const struct judge_request *request,
+                                const struct judgement *judgement, struct judged *pool)
+{
+    fescue_status status;
+    const struct holdout *held = request->held;
+    const struct choice *choice = request->choice;
+    struct leverage leverage = {0};
+    struct model model = {.rows = held->kept.rows,
+                          .columns = held->kept.columns,
+                          .offsets = choice->beside,
+                          .low_rank = choice->start,
+                          .bounds = request->options->bounds};
+    const struct judged_view view = {&leverage, NULL, judgement->sensors_are_rows};
+    TRY(leverage_create(context, &held->kept, &model, choice->noise, NAN, &leverage));
+    TRY(hidden_collect(context, &held->hidden, &model, 0, pool));
+    judged_measure(context, &view, 0, pool);
+done:
+    leverage_free(context, &leverage);
+    return status;
+}
+
 fescue_status folds_run(fescue_context *context, const struct judge_request *request, struct judgement *judgement,
                         struct judged *pool)
 {
@@ -138,6 +164,11 @@ fescue_status folds_run(fescue_context *context, const struct judge_request *req
     scattered = judgement->scattered_folds;
     all = scattered + judgement->shaped_folds;
     judgement->scattered_folds = judgement->shaped_folds = 0;
+    if (request->held != NULL && scattered == 1 && all == 1 && judgement->tracks == NULL) {
+        judgement->scattered_folds = 1;
+        judgement->is_warm = false;
+        return held_judge(context, request, judgement, pool);
+    }
     for (uint32_t f = 0; f < all && status == FESCUE_OK; f++) {
         bool is_scattered = f < scattered;
         struct holdout_request asked = {.shape = is_scattered ? FESCUE_HOLDOUT_CELLS : request->shape->shape,

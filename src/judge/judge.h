@@ -108,6 +108,8 @@ struct choice {
     struct low_rank start;                /* owned; the chosen low-rank part in the table's units. The fit on all cells
                                              takes its offsets by refit_offsets with it, as the choice did, and starts
                                              from it, the spectrum divided by the new problem's scale */
+    struct offsets beside;                /* owned; what stands beside it in the fit of the kept cells that learnt it */
+    double noise;                         /* of that fit, a variance in the table's units; 0: nothing was learnt */
     struct choose_step *path;             /* owned; everything that was tried, in order */
     uint64_t path_count;
 };
@@ -247,6 +249,9 @@ struct judge_request {
     /* A season that was taken off `whole` to get to cells; NULL: none was. Folds learn it again. */
     const struct season *season;
     const struct cells *whole;
+    /* What the choice was learnt from and judged on, which may then stand for a single fold of scattered cells; or
+       NULL. */
+    const struct holdout *held;
 };
 /* Hides cells in folds, learns the choice again without them, and says how wrong the unseen cells are. Asked to stop,
    it ends with what it has. */

@@ -248,6 +248,24 @@ done:
     return status;
 }
 
+/* Of an equal noise; for normal errors the squares of a line of n cells have a mean of variance 2/n. */
+static double noise_spread(const struct evidence_side *side)
+{
+    double error = 0, cells = 0, spread = 0;
+    for (size_t line = 0; line < side->half->lines; line++) {
+        error += side->line_error[line];
+        cells += (double)(side->half->start[line + 1] - side->half->start[line]);
+    }
+    for (size_t line = 0; line < side->half->lines; line++) {
+        double own = (double)(side->half->start[line + 1] - side->half->start[line]);
+        if (own == 0)
+            continue;
+        double away = side->line_error[line] / own * cells / error - 1;
+        spread += own * away * away - 2;
+    }
+    return spread / cells;
+}
+
 /* Posterior means into a model in the table's units. */
 static fescue_status evidence_model(struct evidence *evidence, const struct model *start, struct model *model)
 {
@@ -290,15 +308,31 @@ static void trace_append(struct evidence *evidence, uint64_t round, double chang
     step->seconds = clock_wall() - evidence->started;
 }
 
+/* By how much all rounds that are left would move the estimates, each by the share of the one before that the last one
+   had; the first round comes from elsewhere. */
+static double change_left(const struct evidence_at *at)
+{
+    double share = at->round > 2 ? at->change / at->before : INFINITY;
+    return share < 1 ? at->change * share / (1 - share) : INFINITY;
+}
+
+static bool is_settled(const struct evidence *evidence, const struct evidence_request *request,
+                       const struct evidence_at *at)
+{
+    double deviation = sqrt(evidence->noise);
+    return at->change <= fmax(request->change, request->change_noise * deviation) ||
+           change_left(at) <= request->change_left * deviation ||
+           (evidence->time != NULL && evidence_time_settled(evidence, at->change));
+}
+
 /* Whether the rounds end here, and why. */
-static bool is_over(struct evidence *evidence, const struct evidence_request *request, double change,
+static bool is_over(struct evidence *evidence, const struct evidence_request *request, const struct evidence_at *at,
                     enum solve_stop *stop)
 {
     bool all_on = evidence->near == NULL || evidence->near->is_on;
     if (progress_tell(evidence->context, "evidence", -1) != FESCUE_OK)
         *stop = STOP_CANCELLED;
-    else if (all_on && (change <= fmax(request->change, request->change_noise * sqrt(evidence->noise)) ||
-                        (evidence->time != NULL && evidence_time_settled(evidence, change))))
+    else if (all_on && is_settled(evidence, request, at))
         *stop = STOP_CHANGE;
     else if (request->deadline > 0 && clock_wall() > request->deadline)
         *stop = STOP_TIME;
@@ -311,7 +345,7 @@ static bool is_over(struct evidence *evidence, const struct evidence_request *re
 static fescue_status evidence_loop(struct evidence *evidence, const struct evidence_request *request,
                                    const struct memo_work *work, struct solve_result *result)
 {
-    struct evidence_at at = {.change = INFINITY};
+    struct evidence_at at = {.change = INFINITY, .before = INFINITY};
     struct memo_part parts[EVIDENCE_STATE_PARTS];
     size_t count = evidence_state(evidence, request, &at, result, parts);
     bool resumed;
@@ -322,7 +356,8 @@ static fescue_status evidence_loop(struct evidence *evidence, const struct evide
         result->trace_count = result->iterations = at.round;
     }
     result->stop = STOP_ITERATIONS;
-    while (at.round < request->rounds && !is_over(evidence, request, at.change, &result->stop)) {
+    while (at.round < request->rounds && !is_over(evidence, request, &at, &result->stop)) {
+        at.before = at.change;
         TRY(evidence_round(evidence, request, at.round, &at.change));
         trace_append(evidence, ++at.round, at.change, result);
         result->iterations = at.round;
@@ -398,6 +433,8 @@ fescue_status evidence_fit(fescue_context *context, const struct cells *cells, c
     TRY(evidence_model(&evidence, start, &out->model));
     out->noise = problem.scale * sqrt(evidence.noise);
     out->scale = problem.scale;
+    out->row_spread = noise_spread(&evidence.rows);
+    out->column_spread = noise_spread(&evidence.columns);
     out->fit.rmse = sqrt(evidence.noise);
     out->fit.objective = evidence.noise;
     size_t alive = evidence_living(out);

@@ -33,7 +33,7 @@ enum { ALIGN_STEPS = 10 };
 enum { BEFORE_ROUNDS = 15 };
 /* From so many cells on a round costs what four alternations do, and the start is brought near by some of those: with
    the ridge that shrinks an evenly seen table by a twentieth. */
-#define LARGE 500000
+enum { LARGE = 500000 };
 enum { APPROACH_STEPS = 3 };
 #define APPROACH_RIDGE 0.05
 
@@ -62,7 +62,7 @@ static fescue_status point_align(struct problem *problem, const struct evidence_
     return status;
 }
 
-static bool is_large(const struct cells *cells)
+bool evidence_is_large(const struct cells *cells)
 {
     return cells->count >= LARGE;
 }
@@ -98,7 +98,7 @@ static fescue_status model_grow(fescue_context *context, const struct cells *cel
             request->noise_start = START_NOISE * problem.scale * problem.scale;
         low_rank_free(context, point);
         TRY(start_spectral(&problem, request->rank, request->seed, point));
-        if (is_large(cells))
+        if (evidence_is_large(cells))
             TRY(point_approach(&problem, request, point));
     } else {
         for (size_t k = 0; k < point->rank; k++)
@@ -143,7 +143,8 @@ static fescue_status components_grow(fescue_context *context, const struct cells
     step.near = NULL;
     step.rounds = GROW_ROUNDS;
     step.change = GROW_CHANGE;
-    if (is_large(cells) && request->rank == request->rank_most) { /* nothing can join: the last rounds at once */
+    if (evidence_is_large(cells) &&
+        request->rank == request->rank_most) { /* nothing can join: the last rounds at once */
         step.rounds = request->rounds;
         step.change = request->change;
     }
@@ -183,7 +184,7 @@ fescue_status evidence_learn(fescue_context *context, const struct cells *cells,
     TRY(low_rank_create(context, cells->rows, cells->columns, 0, &out->model.low_rank));
     TRY(components_grow(context, cells, request, out));
     size_t alive = evidence_living(out);
-    bool is_settled = is_large(cells) && request->rank == request->rank_most;
+    bool is_settled = evidence_is_large(cells) && request->rank == request->rank_most;
     bool settles =
         request->time == NULL && !is_settled; /* what follows lines in time settles the components on its own */
     if (settles)

@@ -74,7 +74,7 @@ void evidence_trim(struct model *model, size_t rank);
 /* Between two rounds. */
 struct evidence_at {
     uint64_t round, residual_on, chain_on, near_on;
-    double change, noise, pool_share;
+    double change, before, noise, pool_share; /* before: the change of the round before */
 };
 enum { EVIDENCE_STATE_PARTS = 7 };
 /* The scalars of the state, out of the evidence and into it. */

@@ -12,7 +12,7 @@ struct evidence_sums {
     uint64_t rank, trace_count, iterations;
     uint64_t time_cells, time_components; /* of the time part; along which axis it is, the request says */
     int64_t stop, along;
-    double objective, rmse, gradient, noise, scale, mean, row_ridge, column_ridge;
+    double objective, rmse, gradient, noise, scale, mean, row_ridge, column_ridge, row_spread, column_spread;
     struct near_part near;
 };
 enum { RESULT_PARTS = 13 };
@@ -57,7 +57,8 @@ uint64_t evidence_digest(const struct cells *cells, const struct evidence_reques
                                request->rounds,
                                cells->count,
                                start->low_rank.rank};
-    const double reals[] = {request->noise_start, request->change, request->change_noise, start->offsets.mean};
+    const double reals[] = {request->noise_start, request->change, request->change_noise, request->change_left,
+                            start->offsets.mean};
     uint64_t digest = memo_digest(0, counts, sizeof counts);
     digest = memo_digest(digest, reals, sizeof reals);
     digest = memo_digest(digest, start->offsets.row, start->rows * sizeof(double));
@@ -157,6 +158,8 @@ void evidence_keep(struct memo_work *work, struct evidence_result *result)
                                  .mean = offsets->mean,
                                  .row_ridge = offsets->row_ridge,
                                  .column_ridge = offsets->column_ridge,
+                                 .row_spread = result->row_spread,
+                                 .column_spread = result->column_spread,
                                  .near = result->model.near};
     if (result->fit.stop != STOP_CANCELLED)
         memo_keep(work, parts, result_parts(&sums, result, parts));
@@ -173,6 +176,8 @@ static void sums_take(const struct evidence_sums *sums, struct evidence_result *
     out->fit.gradient = sums->gradient;
     out->noise = sums->noise;
     out->scale = sums->scale;
+    out->row_spread = sums->row_spread;
+    out->column_spread = sums->column_spread;
     out->model.offsets.mean = sums->mean;
     out->model.offsets.row_ridge = sums->row_ridge;
     out->model.offsets.column_ridge = sums->column_ridge;

@@ -94,12 +94,16 @@ struct evidence_request {
     const struct nearness *near;  /* borrowed; NULL: nothing is known of columns being near one another */
     double change;       /* ends when the rms change of the estimates, over the table's scale, falls below this */
     double change_noise; /* or over the noise's standard deviation below this; 0: never */
+    double change_left;  /* or what all rounds left would come to, over that, below this; 0: never */
     double deadline;     /* clock_wall() second, or 0 for none */
 };
 struct evidence_result { /* evidence_result_free */
     struct model model;  /* posterior means; spectrum descending, pruned components near 0 */
     struct solve_result fit;
     double noise; /* standard deviation, table units */
+    /* Variance of the noise of a line over the mean one, beyond what its number of cells leaves to chance, over the
+       lines by their cells: what noise of every row's, or column's, own would have to say. */
+    double row_spread, column_spread;
     double scale; /* units of the table in one of the trace's */
 };
 /* Cancelled: FESCUE_OK with STOP_CANCELLED in evidence_fit, once a round is done; FESCUE_STOPPED in evidence_learn.
@@ -110,6 +114,8 @@ fescue_status evidence_fit(fescue_context *context, const struct cells *cells, c
    equal noise; then request->noise. */
 fescue_status evidence_learn(fescue_context *context, const struct cells *cells, const struct evidence_request *request,
                              struct evidence_result *out);
+/* Tables on which a fit is felt: what is known is not learnt again there. */
+bool evidence_is_large(const struct cells *cells);
 void evidence_result_free(fescue_context *context, struct evidence_result *result);
 
 #endif
