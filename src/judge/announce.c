@@ -19,14 +19,17 @@
  * sensor have in their stratum. Once for the hidden cells, which were those of some sensors and not of others: what
  * would have been announced from the drawn ones. With T and A the two mean squares, T / A is drawn as the unseen cells'
  * true one over the announced one is, and the band is the 5 % and 95 % points of announced * sqrt(T / A) over `DRAWS`
- * draws. Sums are kept a sensor and stratum, so a draw costs no pass over cells.
+ * draws, fewer where there are very many sensors. Sums are kept a sensor and stratum, so a draw costs no pass over
+ * cells.
  */
 #include "judge/judgement.h"
 
 #include <math.h>
 #include <string.h>
 
-enum { DRAWS = 400, STRATUM_LEAST = 10, SHAPED_LEAST = 200 };
+enum { DRAWS = 400, DRAWS_LEAST = 100, STRATUM_LEAST = 10, SHAPED_LEAST = 200 };
+/* Sensors that are drawn in all, as far as DRAWS_LEAST draws do not take more: the band of very many is narrow. */
+static const double drawn_most = 1e6;
 static const double edges[JUDGE_BINS - 1] = {1.5, 2.5, 5.5, 15.5, 50.5, 150.5};
 
 /* Of one sensor and stratum. */
@@ -40,7 +43,8 @@ struct announcing {
     const struct judgement *judgement;
     bool by_distance, by_shape;
     uint32_t sensors;
-    struct sums *sums;       /* sensors x JUDGE_BINS */
+    size_t strata;           /* 1 where distances are not known */
+    struct sums *sums;       /* sensors x strata */
     uint32_t *drawn, *times; /* sensors drawn, and how often each */
     uint32_t *able;          /* of the drawn ones, those that can stand for others in a stratum */
     struct random_stream random;
@@ -49,7 +53,7 @@ struct announcing {
 static size_t stratum_of(const struct announcing *announcing, double distance)
 {
     size_t b = 0;
-    while (announcing->by_distance && b + 1 < JUDGE_BINS && distance > edges[b])
+    while (b + 1 < announcing->strata && distance > edges[b])
         b++;
     return b;
 }
@@ -60,7 +64,7 @@ static void sums_fill(struct announcing *announcing, const struct judged *cells,
     for (uint64_t c = 0; c < cells->count; c++) {
         uint32_t sensor = judgement->sensors_are_rows ? cells->row[c] : cells->column[c];
         struct sums *sums =
-            &announcing->sums[(size_t)sensor * JUDGE_BINS + stratum_of(announcing, cells->at[c].distance)];
+            &announcing->sums[(size_t)sensor * announcing->strata + stratum_of(announcing, cells->at[c].distance)];
         double v = variance_at(&judgement->variance, &cells->at[c]);
         v *= judgement->scale[sensor] * judgement->scale[sensor];
         if (!is_hidden) {
@@ -86,8 +90,8 @@ static void sums_add(const struct announcing *announcing, const uint32_t *drawn,
     memset(total, 0, JUDGE_BINS * sizeof *total);
     for (uint32_t s = 0; s < announcing->sensors; s++) {
         double times = drawn == NULL ? 1 : drawn[s];
-        for (size_t b = 0; b < JUDGE_BINS; b++) {
-            const struct sums *sums = &announcing->sums[(size_t)s * JUDGE_BINS + b];
+        for (size_t b = 0; b < announcing->strata; b++) {
+            const struct sums *sums = &announcing->sums[(size_t)s * announcing->strata + b];
             total[b].hidden += times * sums->hidden;
             total[b].relative += times * sums->relative;
             total[b].square += times * sums->square;
@@ -168,16 +172,16 @@ static double stratum_draw(struct announcing *announcing, const struct sums tota
     double square = 0;
     uint32_t able = 0;
     for (uint32_t s = 0; s < announcing->sensors; s++)
-        if (announcing->sums[(size_t)announcing->drawn[s] * JUDGE_BINS + b].hidden >= STRATUM_LEAST)
+        if (announcing->sums[(size_t)announcing->drawn[s] * announcing->strata + b].hidden >= STRATUM_LEAST)
             announcing->able[able++] = announcing->drawn[s];
     for (uint32_t s = 0; s < announcing->sensors; s++) {
-        const struct sums *own = &announcing->sums[(size_t)s * JUDGE_BINS + b];
-        const struct sums *other = &announcing->sums[(size_t)announcing->drawn[s] * JUDGE_BINS + b];
+        const struct sums *own = &announcing->sums[(size_t)s * announcing->strata + b];
+        const struct sums *other = &announcing->sums[(size_t)announcing->drawn[s] * announcing->strata + b];
         if (own->missing == 0)
             continue;
         if (able > 0 && other->hidden < STRATUM_LEAST) {
             uint32_t stands = announcing->able[random_below(&announcing->random, able)];
-            other = &announcing->sums[(size_t)stands * JUDGE_BINS + b];
+            other = &announcing->sums[(size_t)stands * announcing->strata + b];
         }
         square += own->variance * (able > 0 ? other->square / other->expected : stratum_ratio(total, b));
     }
@@ -210,12 +214,13 @@ static fescue_status band_find(fescue_context *context, struct announcing *annou
     TRY(TAKE(context, sensors, &announcing->times));
     TRY(TAKE(context, sensors, &announcing->drawn));
     TRY(TAKE(context, sensors, &announcing->able));
-    for (int d = 0; d < DRAWS; d++) {
+    int most = (int)fmin(DRAWS, fmax(DRAWS_LEAST, drawn_most / sensors));
+    for (int d = 0; d < most; d++) {
         double all = truth_draw(announcing, announced);
         if (isfinite(all))
             draws[count++] = sqrt(all);
     }
-    if (count >= DRAWS / 2 && sensors > 1) {
+    if (2 * count >= (uint64_t)most && sensors > 1) {
         judgement->rmse_low = fmin(order_pick(draw_at, draws, count, count / 20), judgement->rmse);
         judgement->rmse_high = fmax(order_pick(draw_at, draws, count, count - 1 - count / 20), judgement->rmse);
     }
@@ -258,8 +263,9 @@ fescue_status announce(fescue_context *context, const struct judged *pool, const
     for (uint64_t c = 0; c < speaking->count; c++)
         shaped += (speaking->at[c].marks & STANDING_SHAPED) != 0;
     announcing.by_shape = shaped >= SHAPED_LEAST;
+    announcing.strata = announcing.by_distance ? JUDGE_BINS : 1;
     announcing.sensors = judgement->sensors_are_rows ? request->cells->rows : request->cells->columns;
-    TRY(TAKE(context, (size_t)announcing.sensors * JUDGE_BINS, &announcing.sums));
+    TRY(TAKE(context, announcing.sensors * announcing.strata, &announcing.sums));
     judgement->scattered_rmse = rmse_where(pool, false);
     judgement->shaped_rmse = rmse_where(pool, true);
     sums_fill(&announcing, speaking, true);

@@ -193,6 +193,8 @@ struct leverage_parts {
     double row, column;
 };
 struct leverage_parts leverage_parts_at(const struct leverage *leverage, uint32_t row, uint32_t column);
+/* What the leverage of a cell needs will be asked for soon. */
+void leverage_prefetch(const struct leverage *leverage, uint32_t row, uint32_t column);
 void leverage_free(fescue_context *context, struct leverage *leverage);
 
 /* The expected squared error: a sum of terms with weights that are not negative (variance.c). */

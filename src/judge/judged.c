@@ -11,6 +11,8 @@
 #include <math.h>
 
 enum { PIECE = 4096 };
+/* Cells ahead of which the systems are asked for. */
+enum { AHEAD = 4 };
 /* Above this many cells the unseen ones are sampled: a mean over as many has a relative error of a thousandth. */
 static const double all_most = 1e6;
 enum { SAMPLE = 200000 };
@@ -67,9 +69,12 @@ static void piece_measure(void *job, size_t piece, size_t worker)
     (void)worker;
     if (to > measuring->judged->count)
         to = measuring->judged->count;
-    for (uint64_t k = from; k < to; k++)
-        standing_find(measuring->view, measuring->judged->row[k], measuring->judged->column[k],
-                      &measuring->judged->at[k]);
+    const struct judged *judged = measuring->judged;
+    for (uint64_t k = from; k < to; k++) {
+        if (k + AHEAD < to)
+            leverage_prefetch(measuring->view->leverage, judged->row[k + AHEAD], judged->column[k + AHEAD]);
+        standing_find(measuring->view, judged->row[k], judged->column[k], &judged->at[k]);
+    }
 }
 
 void judged_measure(fescue_context *context, const struct judged_view *view, uint64_t from, struct judged *judged)

@@ -25,8 +25,8 @@
  * The inverses are kept packed. Where they would take more than `most_bytes`, a system is taken to be what it is for
  * regressors spread evenly, (r + 1) / (cells of the line + 1) a side.
  *
- * Cost: cells * (r+1)^2 / 2 a side, (m + n)(r+1)^3 / 2, and 2 (r+1)^2 a question. Lines are parallel, each writes its
- * own place.
+ * Cost: cells * (r+1)^2 / 2 a side, (m + n)(r+1)^3 / 2, and 2 (r+1)^2 a question. Lines are parallel, eight at a time,
+ * and each writes its own place.
  */
 #include "judge/judgement.h"
 
@@ -41,44 +41,111 @@ struct levering {
     struct matrix other; /* factors of the positions */
     bool has_effect;
     const double *ridge; /* of the system, size numbers */
+    const struct batch_kernel *kernel;
     size_t size, stride;
     double *inverse, *room;
 };
 
-/* A line's own regressors are what the other side's systems see: its factor and 1 for their effect. */
-static void regressors_set(struct matrix factor, size_t line, size_t size, bool has_effect, double *regressor)
+/* Cells whose regressors are added in one go. */
+enum { TOGETHER = 4 };
+
+/* What a worker has: eight systems side by side, their inverses, right sides that are not used; eight packed lines; one
+   system in rows of a multiple of eight, and the regressors that are added to it. */
+struct levering_room {
+    double *system, *inverse, *side, *line, *square, *regressors;
+};
+
+static size_t line_size(size_t size)
 {
-    memcpy(regressor, factor.data + line * factor.stride, (size - 1) * sizeof *regressor);
-    regressor[size - 1] = has_effect ? 1 : 0;
+    return (packed_size(size) + 7) / 8 * 8;
 }
 
-static void system_add(const double *regressor, double weight, size_t size, double *system)
+static size_t room_size(size_t size)
 {
-    for (size_t k = 0; k < size; k++)
-        for (size_t l = 0; l <= k; l++)
-            *system++ += weight * regressor[k] * regressor[l];
+    return 2 * batch_size(packed_size(size)) + batch_size(size) + BATCH_LANES * line_size(size) +
+           (size + TOGETHER) * factor_stride(size);
 }
 
-static void line_invert(const struct levering *levering, uint32_t line, double *room)
+static struct levering_room room_carve(double *at, size_t size)
 {
-    size_t size = levering->size, packed = packed_size(size);
-    double *system = room, *regressor = room + packed;
-    memset(system, 0, packed * sizeof *system);
-    for (size_t k = 0; k < size; k++)
-        system[packed_size(k + 1) - 1] = levering->ridge[k];
-    for (uint64_t c = levering->half->start[line]; c < levering->half->start[line + 1]; c++) {
-        regressors_set(levering->other, levering->half->across[c], size, levering->has_effect, regressor);
-        system_add(regressor, levering->half->weight != NULL ? (double)levering->half->weight[c] : 1, size, system);
+    struct levering_room room = {.system = at};
+    room.inverse = room.system + batch_size(packed_size(size));
+    room.side = room.inverse + batch_size(packed_size(size));
+    room.line = room.side + batch_size(size);
+    room.square = room.line + BATCH_LANES * line_size(size);
+    room.regressors = room.square + size * factor_stride(size);
+    return room;
+}
+
+/* Lower triangle, rows up to a multiple of eight, += sum over four of weight g g'. */
+NUMERIC_VERSIONS
+static void regressors_add(const double *restrict g, const double *weight, size_t size, size_t stride,
+                           double *restrict square)
+{
+    for (size_t k = 0; k < size; k++) {
+        double *restrict row = square + k * stride;
+        const double *restrict g1 = g + stride, *restrict g2 = g1 + stride, *restrict g3 = g2 + stride;
+        double x0 = weight[0] * g[k], x1 = weight[1] * g1[k], x2 = weight[2] * g2[k], x3 = weight[3] * g3[k];
+        for (size_t l = 0; l < (k + 8) / 8 * 8; l++)
+            row[l] += (x0 * g[l] + x1 * g1[l]) + (x2 * g2[l] + x3 * g3[l]);
     }
-    packed_cholesky(system, size);
-    packed_inverse(system, size, levering->inverse + line * packed);
 }
 
-static void block_invert(void *job, size_t block, size_t worker)
+/* The system of a line into room->square. A position's regressors are its factor and 1 for the effect. */
+static void system_write(const struct levering *levering, uint32_t line, const struct levering_room *room)
+{
+    const struct half *half = levering->half;
+    size_t size = levering->size, stride = factor_stride(size);
+    memset(room->square, 0, (size + TOGETHER) * stride * sizeof *room->square);
+    for (size_t k = 0; k < size; k++)
+        room->square[k * stride + k] = levering->ridge[k];
+    for (uint64_t c = half->start[line]; c < half->start[line + 1]; c += TOGETHER) {
+        double weight[TOGETHER] = {0};
+        for (size_t t = 0; t < TOGETHER && c + t < half->start[line + 1]; t++) {
+            double *to = room->regressors + t * stride;
+            memcpy(to, levering->other.data + half->across[c + t] * levering->other.stride, (size - 1) * sizeof *to);
+            to[size - 1] = levering->has_effect ? 1 : 0;
+            weight[t] = half->weight != NULL ? (double)half->weight[c + t] : 1;
+        }
+        regressors_add(room->regressors, weight, size, stride, room->square);
+    }
+}
+
+/* The same, packed. */
+static void system_pack(const double *square, size_t size, double *packed, size_t step)
+{
+    for (size_t k = 0, at = 0; k < size; k++)
+        for (size_t l = 0; l <= k; l++, at++)
+            packed[at * step] = square[k * factor_stride(size) + l];
+}
+
+static void batch_invert(void *job, size_t batch, size_t worker)
 {
     struct levering *levering = job;
-    for (uint32_t line = levering->half->block[block]; line < levering->half->block[block + 1]; line++)
-        line_invert(levering, line, levering->room + worker * levering->stride);
+    size_t size = levering->size, packed = packed_size(size), first = batch * BATCH_LANES;
+    size_t left = levering->half->lines - first, count = left < BATCH_LANES ? left : BATCH_LANES;
+    struct levering_room room = room_carve(levering->room + worker * levering->stride, size);
+    double *to[BATCH_LANES];
+    memset(room.side, 0, batch_size(size) * sizeof *room.side);
+    for (size_t lane = 0; lane < BATCH_LANES; lane++) {
+        to[lane] = room.line + lane * line_size(size);
+        if (lane < count) /* lanes without a line have the last one's system */
+            system_write(levering, (uint32_t)(first + lane), &room);
+        system_pack(room.square, size, room.system + lane, BATCH_LANES);
+    }
+    unsigned broken = packed_batch_solve(levering->kernel, room.system, size, room.side, room.inverse);
+    packed_batch_unpack(levering->kernel, room.inverse, packed, to);
+    for (size_t lane = 0; lane < count; lane++) {
+        double *inverse = levering->inverse + (first + lane) * packed;
+        if (broken >> lane & 1) { /* again, and lifted */
+            system_write(levering, (uint32_t)(first + lane), &room);
+            system_pack(room.square, size, room.system, 1);
+            packed_cholesky(room.system, size);
+            packed_inverse(room.system, size, inverse);
+        } else {
+            memcpy(inverse, to[lane], packed * sizeof *inverse);
+        }
+    }
 }
 
 /* Ridges of the systems of one side, whose lines are `lines`. */
@@ -99,10 +166,11 @@ static fescue_status side_invert(fescue_context *context, struct levering *lever
     size_t packed = packed_size(levering->size);
     fescue_status status;
     levering->ridge = ridge;
-    levering->stride = (packed + levering->size + 7) / 8 * 8;
+    levering->stride = room_size(levering->size);
+    levering->kernel = batch_kernel_choose();
     TRY(TAKE(context, team_workers(context) * levering->stride, &levering->room));
     TRY(TAKE(context, packed * levering->half->lines, &levering->inverse));
-    team_run(context, levering->half->blocks, block_invert, levering);
+    team_run(context, (levering->half->lines + BATCH_LANES - 1) / BATCH_LANES, batch_invert, levering);
 done:
     GIVE(context, &levering->room);
     if (status != FESCUE_OK)
@@ -135,13 +203,15 @@ fescue_status leverage_create(fescue_context *context, const struct cells *cells
     if (lines * (double)packed_size(size) * sizeof(double) > most_bytes || size > PACKED_INVERSE_MOST)
         return FESCUE_OK;
     TRY(TAKE(context, size, &ridge));
-    struct levering rows = {&cells->by_row, model, model->low_rank.right, leverage->has_rows, NULL, size, 0,
-                            NULL,           NULL};
+    struct levering rows = {
+        .half = &cells->by_row, .model = model, .other = model->low_rank.right, .has_effect = leverage->has_rows};
+    rows.size = size;
     ridges_set(model, cells->rows, noise, lambda, offsets->row_ridge, ridge);
     TRY(side_invert(context, &rows, ridge));
     leverage->row_inverse = rows.inverse;
     struct levering columns = {
-        &cells->by_column, model, model->low_rank.left, leverage->has_columns, NULL, size, 0, NULL, NULL};
+        .half = &cells->by_column, .model = model, .other = model->low_rank.left, .has_effect = leverage->has_columns};
+    columns.size = size;
     ridges_set(model, cells->columns, noise, lambda, offsets->column_ridge, ridge);
     TRY(side_invert(context, &columns, ridge));
     leverage->column_inverse = columns.inverse;
@@ -153,14 +223,19 @@ done:
 }
 
 /* g' A g for a packed symmetric A; the last regressor is `last`. */
+NUMERIC_VERSIONS
 static double form_value(const double *packed, const double *factor, size_t size, double last)
 {
     double sum = 0;
     for (size_t k = 0; k < size; k++) {
-        double at_k = k + 1 < size ? factor[k] : last, row = 0;
-        for (size_t l = 0; l < k; l++)
-            row += packed[l] * factor[l];
-        sum += at_k * (2 * row + packed[k] * at_k);
+        double at_k = k + 1 < size ? factor[k] : last, row[TOGETHER] = {0}, rest = 0;
+        size_t l = 0;
+        for (; l + TOGETHER <= k; l += TOGETHER)
+            for (size_t t = 0; t < TOGETHER; t++)
+                row[t] += packed[l + t] * factor[l + t];
+        for (; l < k; l++)
+            rest += packed[l] * factor[l];
+        sum += at_k * (2 * ((row[0] + row[2]) + (row[1] + row[3]) + rest) + packed[k] * at_k);
         packed += k + 1;
     }
     return sum;
@@ -179,6 +254,17 @@ struct leverage_parts leverage_parts_at(const struct leverage *leverage, uint32_
     parts.column = form_value(leverage->column_inverse + column * packed, point->left.data + row * point->left.stride,
                               size, leverage->has_columns ? 1 : 0);
     return parts;
+}
+
+void leverage_prefetch(const struct leverage *leverage, uint32_t row, uint32_t column)
+{
+    size_t packed = packed_size(leverage->size);
+    if (leverage->row_inverse == NULL || leverage->column_inverse == NULL)
+        return;
+    for (size_t k = 0; k < packed; k += 8) {
+        __builtin_prefetch(leverage->row_inverse + row * packed + k);
+        __builtin_prefetch(leverage->column_inverse + column * packed + k);
+    }
 }
 
 double leverage_at(const struct leverage *leverage, uint32_t row, uint32_t column)
