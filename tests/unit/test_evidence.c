@@ -165,11 +165,53 @@ static void unequal_noise_is_learnt(void **state)
     request.noise = EVIDENCE_NOISE_COLUMNS;
     struct evidence_result own = learn(context, &noisy, &request);
     assert_true(error_of(&own, &sowing) < 0.8 * error_of(&equal, &sowing));
+    /* Less than the planted 2.5, since the noisiest columns get components of their own; of rows, whose cells have the
+       same mixture of noises, nothing is left. */
+    assert_true(equal.column_spread > 0.1 && fabs(equal.row_spread) < 0.02);
     evidence_result_free(context, &equal);
     evidence_result_free(context, &own);
     triplets_free(context, &list);
     cells_free(context, &clean);
     cells_free(context, &noisy);
+}
+
+/* Of equal noise nothing is left beyond chance. */
+static void equal_noise_has_no_spread(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = {150, 100, 2, 0.5, 0.5, FESCUE_DOUBLE, 8};
+    struct plot plot = plot_sow(context, &sowing, 0);
+    struct evidence_request request = request_of(4, FESCUE_OFFSETS_NONE);
+    struct evidence_result fit = learn(context, &plot.cells, &request);
+    /* over 100 lines of 75 cells a variance of 2/75 is known to a share of sqrt(2/100) */
+    assert_true(fabs(fit.row_spread) < 0.015 && fabs(fit.column_spread) < 0.015);
+    evidence_result_free(context, &fit);
+    plot_free(&plot);
+}
+
+/* What rounds left would come to: the fit ends before the one that goes on, and as near to it as is said. */
+static void rounds_end_when_little_is_left(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = {150, 100, 3, 0.3, 0.5, FESCUE_DOUBLE, 8};
+    struct plot plot = plot_sow(context, &sowing, 0);
+    struct evidence_request request = request_of(5, FESCUE_OFFSETS_BOTH);
+    struct evidence_result all = learn(context, &plot.cells, &request), few;
+    for (double left = 0.1; left > 1e-4; left /= 10) {
+        double square = 0;
+        request.change_left = left;
+        few = learn(context, &plot.cells, &request);
+        for (uint32_t i = 0; i < 150; i++)
+            for (uint32_t j = 0; j < 100; j++) {
+                double away = model_estimate(&few.model, i, j) - model_estimate(&all.model, i, j);
+                square += away * away / (150 * 100);
+            }
+        assert_true(few.fit.iterations < all.fit.iterations && few.fit.stop == STOP_CHANGE);
+        assert_true(sqrt(square) <= 1.5 * left * all.noise);
+        evidence_result_free(context, &few);
+    }
+    evidence_result_free(context, &all);
+    plot_free(&plot);
 }
 
 /* Noise of a cell from 0.05 to 5, in no order: a fit that is told the precisions comes near the one of a table whose
@@ -307,6 +349,8 @@ int main(void)
         BENCH_TEST(few_cells_near_the_oracle),
         BENCH_TEST(units_and_orientation_do_not_matter),
         BENCH_TEST(unequal_noise_is_learnt),
+        BENCH_TEST(equal_noise_has_no_spread),
+        BENCH_TEST(rounds_end_when_little_is_left),
         BENCH_TEST(weights_of_cells_are_used),
         BENCH_TEST(same_bits_for_any_number_of_workers),
         BENCH_TEST(rounds_allocate_nothing),

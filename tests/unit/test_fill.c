@@ -151,6 +151,34 @@ static void a_noisy_table_comes_near_the_oracle(void **state)
     }
 }
 
+/* Where a fit is felt nothing is learnt twice: the fit on all cells goes on from that on the kept ones, which is also
+   what the error is measured with. The estimates are near the oracle all the same, the error is that of unseen
+   readings, and threads do not matter. */
+static void a_large_table_is_learnt_once(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    static const struct sowing large = {.rows = 900, .columns = 1000, .rank = 3, .share = 0.6, .noise = 0.8, .seed = 6};
+    struct fescue_options options = OPTIONS(context, "rank", "3");
+    fescue_table *table = table_sown(context, &large);
+    double freedom = large.rank * (large.rows + large.columns - (double)large.rank), estimate[2];
+    double oracle = large.noise * sqrt(freedom / (double)table->cells.count);
+    assert_true(table->cells.count > 500000);
+    for (size_t k = 0; k < 2; k++) {
+        options.threads = k == 0 ? 1 : 2;
+        fescue_fill *fill = filled(table, &options);
+        const char *said = strstr(fescue_fill_text(fill), "error      RMSE");
+        double rmse = k == 0 ? unseen_rmse(fill, table, &large) : 0, announced = 0;
+        assert_true(said != NULL && sscanf(said, "error      RMSE %lf", &announced) == 1);
+        assert_true(rmse < 1.03 * oracle);
+        assert_true(k > 0 || fabs(announced - hypot(rmse, large.noise)) < 0.01);
+        has_text(fill, "hidden cells in 1 fold");
+        estimate[k] = fescue_fill_estimate(fill, 7, 8);
+        fescue_fill_destroy(&fill);
+    }
+    assert_true(estimate[0] == estimate[1]);
+    fescue_table_destroy(&table);
+}
+
 /* Row and column effects and noise: nothing for a low-rank part to find. */
 static void a_table_without_structure_gets_rank_0(void **state)
 {
@@ -656,6 +684,7 @@ int main(void)
     const struct CMUnitTest tests[] = {
         BENCH_TEST(a_clean_table_is_recovered),
         BENCH_TEST(a_noisy_table_comes_near_the_oracle),
+        BENCH_TEST(a_large_table_is_learnt_once),
         BENCH_TEST(a_table_without_structure_gets_rank_0),
         BENCH_TEST(bounds_hold_everywhere),
         BENCH_TEST(odd_shapes_are_filled),

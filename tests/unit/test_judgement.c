@@ -405,6 +405,32 @@ static void threads_do_not_matter(void **state)
     trial_end(context, &trial);
 }
 
+/* What the choice was made on, handed in as the one fold: its errors are those that choosing announced, and the
+   intervals keep their promise. */
+static void the_choice_may_stand_for_a_fold(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct trial trial;
+    struct judgement judgement;
+    trial_begin(context, &trial);
+    trial.request.held = &trial.holdout;
+    trial.options.folds = 1;
+    assert_status(context, judge_run(context, &trial.request, &judgement), FESCUE_OK);
+    assert_true(judgement.is_judged && !judgement.is_warm && judgement.scattered_folds == 1);
+    assert_int_equal(judgement.judged, trial.holdout.hidden.count);
+    assert_close(judgement.scattered_rmse, trial.choice.errors.rmse, 1e-12);
+    struct told told = unseen_tell(&trial, &judgement, 0, 6);
+    /* about 360 hidden normal errors: standard error 4 % */
+    assert_true(fabs(judgement.rmse / told.rmse - 1) < 0.12);
+    assert_true(fabs(told.inside - 0.9) < 0.05);
+    judgement_free(context, &judgement);
+    trial.options.folds = 2; /* one is not enough */
+    assert_status(context, judge_run(context, &trial.request, &judgement), FESCUE_OK);
+    assert_int_equal(judgement.scattered_folds, 2);
+    judgement_free(context, &judgement);
+    trial_end(context, &trial);
+}
+
 /* Without folds, and when there is no time for any, it is choosing's own hidden cells that speak. */
 static void without_folds_choosing_speaks(void **state)
 {
@@ -484,6 +510,7 @@ int main(void)
         BENCH_TEST(the_announced_error_is_that_of_unseen_readings),
         BENCH_TEST(weights_are_in_the_intervals),
         BENCH_TEST(threads_do_not_matter),
+        BENCH_TEST(the_choice_may_stand_for_a_fold),
         BENCH_TEST(without_folds_choosing_speaks),
         BENCH_TEST(warm_and_cold_folds_agree),
         BENCH_TEST(a_lack_of_memory_leaks_nothing),
