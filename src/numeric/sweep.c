@@ -162,6 +162,12 @@ static struct sweep_job job_open(struct sweep *sweep, const struct half *half, s
                               .rank = right.columns};
 }
 
+static const struct sweep_kernel *job_kernel(const struct sweep_job *job)
+{
+    const struct sweep_kernel *kernel = job->sweep->kernels;
+    return job->width <= 8 && kernel->narrow != NULL ? kernel->narrow : kernel;
+}
+
 void sweep_residual(struct sweep *sweep, const struct half *half, struct matrix left, struct matrix right,
                     struct matrix gradient, void *residual, double *square)
 {
@@ -173,7 +179,7 @@ void sweep_residual(struct sweep *sweep, const struct half *half, struct matrix 
     job.right = sweep_rows_of(sweep, right, job.width, &room);
     job.product = gradient;
     job.residual = residual;
-    sweep_slabs_run(&job, sweep->kernels->residual, sums);
+    sweep_slabs_run(&job, job_kernel(&job)->residual, sums);
     *square = sums[0];
 }
 
@@ -186,7 +192,7 @@ void sweep_errors(struct sweep *sweep, const struct half *half, struct matrix le
     assert(left.rows == half->lines && left.columns == right.columns);
     job.left = sweep_rows_of(sweep, left, job.width, &room);
     job.right = sweep_rows_of(sweep, right, job.width, &room);
-    sweep_slabs_run(&job, sweep->kernels->residual, sums);
+    sweep_slabs_run(&job, job_kernel(&job)->residual, sums);
     *square = sums[0];
     *absolute = sums[1];
 }
@@ -201,7 +207,7 @@ void sweep_multiply(struct sweep *sweep, const struct half *half, const void *va
     job.right = sweep_rows_of(sweep, right, job.width, &room);
     job.values = values;
     job.product = product;
-    sweep_slabs_run(&job, sweep->kernels->multiply, sums);
+    sweep_slabs_run(&job, job_kernel(&job)->multiply, sums);
 }
 
 void sweep_tangent(struct sweep *sweep, const struct half *half, struct matrix a, struct matrix right,
@@ -216,7 +222,7 @@ void sweep_tangent(struct sweep *sweep, const struct half *half, struct matrix a
     job.a = sweep_rows_of(sweep, a, job.width, &room);
     job.b = sweep_rows_of(sweep, b, job.width, &room);
     job.values = residual;
-    sweep_run(&job, sweep->kernels->tangent, sums);
+    sweep_run(&job, job_kernel(&job)->tangent, sums);
     *zr = sums[0];
     *zz = sums[1];
 }

@@ -20,6 +20,10 @@
 #define MADD(a, b, c) _mm256_fmadd_pd(a, b, c)
 #define MADD_WIDE(a, b, c) _mm256_fmadd_pd(a, b, c)
 #define WIDES 1
+#define SPREAD 2
+#define SPREAD_LOAD(p) _mm256_broadcast_pd((const __m128d *)(const void *)(p))
+#define SPREAD_LANE(x, c) _mm256_permute_pd(x, 0xf * (c))
+#define TWO_PASSES(n) ((n) <= 2)
 #define COMMON_REGISTERS(X) X(2) X(4) X(6) X(8)
 #define SWEEP_KERNEL sweep_avx2_double
 #include "numeric/sweep_kernel.h"

@@ -20,6 +20,10 @@
 #define MADD_WIDE(a, b, c) _mm256_fmadd_pd(a, b, c)
 #define WIDES 2
 #define WIDEN(x, part) _mm256_cvtps_pd((part) == 0 ? _mm256_castps256_ps128(x) : _mm256_extractf128_ps(x, 1))
+#define SPREAD 4
+#define SPREAD_LOAD(p) _mm256_broadcast_ps((const __m128 *)(const void *)(p))
+#define SPREAD_LANE(x, c) _mm256_permute_ps(x, 0x55 * (c))
+#define TWO_PASSES(n) 1
 #define COMMON_REGISTERS(X) X(1) X(2) X(3) X(4)
 #define SWEEP_KERNEL sweep_avx2_single
 #include "numeric/sweep_kernel.h"

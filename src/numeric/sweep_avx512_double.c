@@ -20,6 +20,8 @@
 #define MADD(a, b, c) _mm512_fmadd_pd(a, b, c)
 #define MADD_WIDE(a, b, c) _mm512_fmadd_pd(a, b, c)
 #define WIDES 1
+#define NARROW &sweep_avx2_double /* whose four lanes need no halving of sums */
+#define TWO_PASSES(n) 0
 #define COMMON_REGISTERS(X) X(1) X(2) X(3) X(4)
 #define SWEEP_KERNEL sweep_avx512_double
 #include "numeric/sweep_kernel.h"

@@ -23,6 +23,10 @@
 #define MADD_WIDE(a, b, c) _mm512_fmadd_pd(a, b, c)
 #define WIDES 1
 #define WIDEN(x, part) _mm512_cvtps_pd(x)
+#define SPREAD 4
+#define SPREAD_LOAD(p) _mm256_broadcast_ps((const __m128 *)(const void *)(p))
+#define SPREAD_LANE(x, c) _mm256_permute_ps(x, 0x55 * (c))
+#define TWO_PASSES(n) 1
 #define COMMON_REGISTERS(X) X(1) X(2) X(3) X(4)
 #define SWEEP_KERNEL sweep_avx512_single
 #include "numeric/sweep_kernel.h"

@@ -9,31 +9,40 @@
  *     MADD(a, b, c)        a b + c on registers of REAL; MADD_WIDE on registers of double
  *     WIDEN(x, part)       the numbers of a register of floats that go to double register `part` of WIDES; only when
  *                          REAL is float
+ *     TWO_PASSES(n)        whether rows of n registers are gone through twice for residual and gradient
+ *     SPREAD               how many numbers SPREAD_LOAD reads, so that SPREAD_LANE gives each in all lanes; or not
+ *     NARROW               address of the table to take for rows of 8 numbers; or not
  *     COMMON_REGISTERS(X)  X(n) for each number n of registers a row that deserves loops of its own
  *     SWEEP_KERNEL         the name of the table this gives
  *
- * A group of cells is in flight, and what they give is one register. For the cells c of a group of a line,
- * with the line's row l in registers:
+ * GROUP cells give one register of numbers. For the cells c of a group of a line, with the line's row l in registers:
  *
  *     s_c = sum over registers of l * p_c        p_c the right row of cell c: one register of partial sums a cell
  *     r   = (sum of s_0, sum of s_1, ...) - x    all horizontal sums at once, by a transposing tree
  *     g  += sum over c of r_c p_c                in two chains, so that half of the additions wait for nothing
  *
  * Within a group arithmetic is REAL; what is added over the groups of a line (g, sums of squares) is double. In single
- * precision a term of g so meets GROUP roundings at most, whatever the length of the line. The last cells of a line
- * that are no whole group are filled up to one, and r is then 0 for those that are not there.
+ * precision a term of g so meets GROUP roundings at most, whatever the length of the line. A last group that is not
+ * whole goes on into the cells of the next line, with numbers that are made 0: it costs what a whole one costs.
  *
- * What a cell costs is, in turn, latency, memory and arithmetic, and each has its remedy:
- *   - From a row to its r it is a long way (product, tree, difference, and back into every lane), which the processor
- *     can hide only as far as its window reaches. So, where a row is at most BESIDE_REGISTERS, the sums s of a group
- * are made before the gradient of the group before it: what stands next in line is always ready. Wider rows are work
- *     enough to hide it, and two groups of them have no room in the registers.
+ * What a cell costs is latency, reads from the nearest cache, operations, and memory, each with its remedy:
+ *   - From a cell's position to its r it is a long way (position, row, product, tree, difference, and back into every
+ *     lane), some 60 cycles, which the processor hides only as far as its window of some 160 to 320 operations
+ *     reaches. So a line goes in chunks of up to CHUNK cells, and where TWO_PASSES says so, a chunk is gone through
+ *     twice: r of all its cells, then the gradient, which so never waits for an r. The rows are then in the nearest
+ *     cache; that is read at some two registers a cycle, so that narrow registers are no disadvantage. Where a group's
+ *     rows stay in registers (few cells of many registers, as in double precision), reading them again costs more than
+ *     the waiting, and both are done at once.
+ *   - An r goes into all lanes by one shuffle of four numbers read at once (SPREAD), not by a read for each.
  *   - The right rows lie anywhere in memory, but the order of cells says where: those of the cells AHEAD are asked for,
  *     unless all of them fit into a core's own cache (NEAR_BYTES).
  *   - Positions and values come in order, 12 bytes a cell, faster than the processor itself looks out for them: those
  *     STREAM_AHEAD are asked for.
  *   - The loops are written for any number of registers a row and made once for each common number of them, where
  *     everything is unrolled and stays in registers.
+ *
+ * Micro-operations a cell, single precision, eight numbers in a row: 6.1 in the first pass (position 2, product 1, tree
+ * 21/8, the rest 1/2), 4.9 in the second (position 2, shuffle 1, product 1, the rest 7/8).
  *
  * A line is worked on by one worker from its first to its last cell, so that bits depend on REAL, LANES and MADD only.
  */
@@ -44,7 +53,9 @@
 
 /* Some 32 cells of 2 to 3 ns hide a trip to memory of 80 ns, and what a busy machine adds to it; 4 KB of values. */
 enum { AHEAD = 32, STREAM_AHEAD = 512, CACHE_LINE = 64, NEAR_BYTES = 400 << 10 };
-enum { MOST_REGISTERS = SWEEP_MOST_WIDTH / LANES, WIDE_LANES = LANES / WIDES, BESIDE_REGISTERS = 2 };
+/* Cells of a chunk, whose rows are to stay in the nearest cache, of 32 KB, until they are read again. */
+enum { CHUNK = 128, CHUNK_BYTES = 16 << 10 };
+enum { MOST_REGISTERS = SWEEP_MOST_WIDTH / LANES, WIDE_LANES = LANES / WIDES };
 
 #define REGISTER_OF(type, count)                                                                                       \
     type __attribute__((vector_size((count) * sizeof(type)), aligned(sizeof(type)), may_alias))
@@ -54,6 +65,12 @@ typedef REGISTER_OF(double, WIDE_LANES) wide;
 typedef REGISTER_OF(REAL, GROUP) cells;
 typedef REGISTER_OF(double, GROUP / WIDES) squares;
 typedef REGISTER_OF(int64_t, GROUP / WIDES) squares_bits;
+#ifdef REAL_IS_DOUBLE
+typedef int64_t BITS;
+#else
+typedef int32_t BITS;
+#endif
+typedef REGISTER_OF(BITS, GROUP) bits;
 
 #define REAL_EPSILON (sizeof(REAL) == sizeof(double) ? DBL_EPSILON : (double)FLT_EPSILON)
 #define INLINE static inline __attribute__((always_inline))
@@ -81,6 +98,26 @@ INLINE void wide_add(wide *sum, const vec *x)
     for (int part = 0; part < WIDES; part++)
         sum[part] += WIDEN(*x, part);
 }
+
+/* each[c] = number[c] in all lanes, for SPREAD numbers */
+#ifndef SPREAD
+#define SPREAD 1
+INLINE void numbers_spread(const REAL *number, vec *each)
+{
+    *each = splat(*number);
+}
+#else
+INLINE void numbers_spread(const REAL *number, vec *each)
+{
+    vec all = SPREAD_LOAD(number);
+    each[0] = SPREAD_LANE(all, 0);
+    each[1] = SPREAD_LANE(all, 1);
+#if SPREAD == 4
+    each[2] = SPREAD_LANE(all, 2);
+    each[3] = SPREAD_LANE(all, 3);
+#endif
+}
+#endif
 
 /* (sum of s[0], sum of s[1], ...). Shuffles that stay within 16 bytes come first, and where eight doubles are done in
    two halves, their halves are added before all: what follows then costs half as much. */
@@ -131,60 +168,15 @@ INLINE void sum_each(const vec s[GROUP], cells *out)
 }
 #endif
 
-/* ---- groups of cells ----------------------------------------------------------------------------------------------
+/* ---- chunks and groups of cells -----------------------------------------------------------------------------------
  */
 
-/* Where the right rows of a group are, and a number for each. */
-struct group {
-    const REAL *row[GROUP];
-    cells number;
-};
+/* Numbers of a chunk's cells, and zeros behind them up to a whole group. */
+typedef REAL numbers[CHUNK + GROUP];
 
-/* In the three below a broken group goes through a copy, so that whole ones stay in registers. */
-
-/* values[k], zeros for the cells that are not there. */
-INLINE void group_load(const REAL *values, uint64_t k, size_t count, cells *to)
+INLINE void numbers_end(REAL *number, size_t count)
 {
-    if (count == GROUP) {
-        *to = *(const cells *)(values + k);
-    } else {
-        REAL number[GROUP] = {0};
-        for (size_t c = 0; c < count; c++)
-            number[c] = values[k + c];
-        *to = *(const cells *)number;
-    }
-}
-
-INLINE void group_store(const cells *from, uint64_t k, size_t count, REAL *values)
-{
-    if (count == GROUP) {
-        *(cells *)(values + k) = *from;
-    } else {
-        REAL number[GROUP];
-        *(cells *)number = *from;
-        for (size_t c = 0; c < count; c++)
-            values[k + c] = number[c];
-    }
-}
-
-/* Zeros for the cells that are not there. */
-INLINE void group_cut(cells *r, size_t count)
-{
-    if (count < GROUP) {
-        REAL number[GROUP];
-        *(cells *)number = *r;
-        for (size_t c = count; c < GROUP; c++)
-            number[c] = 0;
-        *r = *(const cells *)number;
-    }
-}
-
-/* The rows of the cells; those that are not there have the row of the first. */
-INLINE void group_find(const struct sweep_rows *rows, const uint32_t *across, size_t count, const REAL *row[GROUP])
-{
-    const REAL *data = rows->data;
-    for (size_t c = 0; c < GROUP; c++)
-        row[c] = data + across[c < count ? c : 0] * rows->stride;
+    *(cells *)(number + count) = (cells){0};
 }
 
 INLINE void row_prefetch(const REAL *row, size_t width)
@@ -200,6 +192,13 @@ INLINE void row_load(const struct sweep_rows *rows, uint32_t line, vec *to, cons
         to[v] = *(const vec *)(row + v * LANES);
 }
 
+/* Where the right rows of a group are. */
+INLINE void group_find(const struct sweep_rows *rows, const uint32_t *across, const REAL *row[GROUP])
+{
+    for (size_t c = 0; c < GROUP; c++)
+        row[c] = (const REAL *)rows->data + across[c] * rows->stride;
+}
+
 /* s_c += l * row_c */
 INLINE void rows_dot(const vec *l, const REAL *const row[GROUP], vec s[GROUP], const size_t registers)
 {
@@ -208,17 +207,13 @@ INLINE void rows_dot(const vec *l, const REAL *const row[GROUP], vec s[GROUP], c
             s[c] = MADD(l[v], *(const vec *)(row[c] + v * LANES), s[c]);
 }
 
-/* g += sum over c of number_c row_c */
-INLINE void group_gather(const struct group *group, wide *g, const size_t registers)
+/* g += sum over the cells of a group of each_c row_c */
+INLINE void rows_gather(const vec each[GROUP], const REAL *const row[GROUP], wide *g, const size_t registers)
 {
-    vec number[GROUP];
-    for (size_t c = 0; c < GROUP; c++)
-        number[c] = splat(group->number[c]);
     for (size_t v = 0; v < registers; v++) {
-        vec sum[2] = {number[0] * *(const vec *)(group->row[0] + v * LANES),
-                      number[1] * *(const vec *)(group->row[1] + v * LANES)};
+        vec sum[2] = {each[0] * *(const vec *)(row[0] + v * LANES), each[1] * *(const vec *)(row[1] + v * LANES)};
         for (size_t c = 2; c < GROUP; c++)
-            sum[c % 2] = MADD(number[c], *(const vec *)(group->row[c] + v * LANES), sum[c % 2]);
+            sum[c % 2] = MADD(each[c], *(const vec *)(row[c] + v * LANES), sum[c % 2]);
         sum[0] += sum[1];
         wide_add(g + v * WIDES, &sum[0]);
     }
@@ -268,7 +263,7 @@ struct span {
     const REAL *values;
     REAL *residual;
     struct sweep_rows right, b;
-    bool far; /* right rows do not fit into a core's own cache */
+    uint64_t ahead; /* up to here the rows of later cells are asked for */
 };
 /* stride: a constant, or 0 for what the rows themselves say. */
 INLINE struct span span_of(const struct sweep_job *job, size_t block, const size_t stride)
@@ -284,22 +279,82 @@ INLINE struct span span_of(const struct sweep_job *job, size_t block, const size
                          .residual = job->residual,
                          .right = {job->right.data, stride > 0 ? stride : job->right.stride},
                          .b = {job->b.data, stride > 0 ? stride : job->b.stride},
-                         .far = half->length * job->width * sizeof(REAL) > NEAR_BYTES};
+                         .ahead =
+                             half->length * job->width * sizeof(REAL) > NEAR_BYTES && half->start[last] > AHEAD + GROUP
+                                 ? half->start[last] - AHEAD - GROUP
+                                 : 0};
 }
 
-/* Asks for what the cells behind k will need, as far as they are of this block. */
+/* Asks for what the cells behind k will need, rows as far as they are of this block. */
 INLINE void span_prefetch(const struct span *span, uint64_t k, bool both, const size_t registers)
 {
-    if (k + STREAM_AHEAD + GROUP > span->stop)
-        return;
     __builtin_prefetch(span->values + k + STREAM_AHEAD);
     __builtin_prefetch(span->across + k + STREAM_AHEAD);
+    if (k >= span->ahead)
+        return;
     const uint32_t *across = span->across + k + AHEAD;
-    for (size_t c = 0; span->far && c < GROUP; c++) {
+    for (size_t c = 0; c < GROUP; c++) {
         row_prefetch((const REAL *)span->right.data + across[c] * span->right.stride, registers * LANES);
         if (both)
             row_prefetch((const REAL *)span->b.data + across[c] * span->b.stride, registers * LANES);
     }
+}
+
+/* Some cells of a line in whole groups: where they stand in the half. What a last group lacks are cells of the next
+   line, with a number that is 0 (so a row that is not finite may spoil the line before its own); where the block ends,
+   all are a copy, and what lacks is like the first of them. */
+struct chunk {
+    const uint32_t *across;
+    const REAL *values;
+    size_t count;
+};
+struct chunk_room {
+    uint32_t across[CHUNK + GROUP];
+    REAL values[CHUNK + GROUP];
+};
+
+static __attribute__((noinline)) void chunk_copy(const uint32_t *across, const REAL *values, size_t count,
+                                                 struct chunk_room *room)
+{
+    for (size_t c = 0; c < count + GROUP; c++) {
+        room->across[c] = across[c < count ? c : 0];
+        room->values[c] = values[c < count ? c : 0];
+    }
+}
+
+INLINE struct chunk chunk_find(const struct span *span, uint64_t k, uint64_t end, struct chunk_room *room,
+                               const size_t registers)
+{
+    size_t bytes = (registers * LANES + 1) * sizeof(REAL), most = CHUNK_BYTES / bytes / GROUP * GROUP;
+    most = most > CHUNK ? CHUNK : most < GROUP ? GROUP : most;
+    struct chunk chunk = {span->across + k, span->values + k, end - k < most ? end - k : most};
+    if (__builtin_expect(k + chunk.count + GROUP > span->stop, 0)) {
+        chunk_copy(chunk.across, chunk.values, chunk.count, room);
+        chunk.across = room->across;
+        chunk.values = room->values;
+    }
+    return chunk;
+}
+
+INLINE void chunk_gather(const struct span *span, struct chunk chunk, const REAL *number, wide *g,
+                         const size_t registers)
+{
+    for (size_t c = 0; c < chunk.count; c += GROUP) {
+        const REAL *row[GROUP];
+        vec each[GROUP];
+        group_find(&span->right, chunk.across + c, row);
+        for (size_t part = 0; part < GROUP; part += SPREAD)
+            numbers_spread(number + c + part, each + part);
+        rows_gather(each, row, g, registers);
+    }
+}
+
+/* Zeros for the cells of a group that are not there. */
+static const BITS cells_there[2 * GROUP] = {[0 ... GROUP - 1] = -1};
+INLINE void group_cut(cells *number, size_t left)
+{
+    size_t count = left < GROUP ? left : GROUP;
+    *number = (cells)((bits)*number & *(const bits *)(cells_there + (GROUP - count)));
 }
 
 /* LINES(n, stride) with the common numbers of registers as constants, where right rows lie close together. */
@@ -322,54 +377,67 @@ INLINE bool rows_are_close(const struct sweep_job *job)
 /* ---- residual and gradient ----------------------------------------------------------------------------------------
  */
 
-/* The group's rows and residuals. */
-INLINE void residual_group(const struct span *span, uint64_t k, size_t count, const vec *l, struct group *group,
-                           squares *square, squares *absolute, const size_t registers)
+/* The rows and residuals of the group at cell c of the chunk. */
+INLINE void residual_group(const struct span *span, uint64_t k, struct chunk chunk, size_t c, const vec *l,
+                           const REAL *row[GROUP], cells *r, const size_t registers)
 {
     vec s[GROUP] = {{0}};
-    cells x;
-    group_find(&span->right, span->across + k, count, group->row);
-    rows_dot(l, group->row, s, registers);
-    sum_each(s, &group->number);
-    group_load(span->values, k, count, &x);
-    group->number -= x;
-    group_cut(&group->number, count);
-    if (span->residual != NULL)
-        group_store(&group->number, k, count, span->residual);
-    squares_add(square, &group->number, &group->number);
-    for (int part = 0; absolute != NULL && part < WIDES; part++) /* without its sign */
-        absolute[part] += (squares)((squares_bits)WIDEN(group->number, part) & INT64_MAX);
+    span_prefetch(span, k + c, false, registers);
+    group_find(&span->right, chunk.across + c, row);
+    rows_dot(l, row, s, registers);
+    sum_each(s, r);
+    *r -= *(const cells *)(chunk.values + c);
+    group_cut(r, chunk.count - c);
 }
 
-/* All groups of a line; those of narrow rows beside the gradient of the one before. */
+INLINE void group_gather(const cells *r, const REAL *const row[GROUP], wide *g, const size_t registers)
+{
+    vec each[GROUP];
+    for (size_t c = 0; c < GROUP; c++)
+        each[c] = splat((*r)[c]);
+    rows_gather(each, row, g, registers);
+}
+
+/* number_c = l . row_c - value_c, and the gradient, unless g is NULL. */
+INLINE void chunk_residual(const struct span *span, uint64_t k, struct chunk chunk, const vec *l, wide *g, REAL *number,
+                           squares *square, squares *absolute, const size_t registers)
+{
+    for (size_t c = 0; c < chunk.count; c += GROUP) {
+        const REAL *row[GROUP];
+        cells r;
+        residual_group(span, k, chunk, c, l, row, &r, registers);
+        *(cells *)(number + c) = r;
+        squares_add(square, &r, &r);
+        for (int part = 0; absolute != NULL && part < WIDES; part++) /* without its sign */
+            absolute[part] += (squares)((squares_bits)WIDEN(r, part) & INT64_MAX);
+        if (g != NULL)
+            group_gather(&r, row, g, registers);
+    }
+}
+
+INLINE void numbers_store(const REAL *number, size_t count, REAL *to)
+{
+    size_t c = 0;
+    for (; c + GROUP <= count; c += GROUP)
+        *(cells *)(to + c) = *(const cells *)(number + c);
+    for (; c < count; c++)
+        to[c] = number[c];
+}
+
+/* All chunks of a line. */
 INLINE void residual_line(const struct span *span, uint64_t k, uint64_t end, const vec *l, wide *g, squares *square,
                           squares *absolute, const size_t registers)
 {
-    const bool beside = registers <= BESIDE_REGISTERS;
-    struct group before, now;
-    uint64_t whole = end - (end - k) % GROUP;
-    for (; !beside && k < whole; k += GROUP) {
-        span_prefetch(span, k, false, registers);
-        residual_group(span, k, GROUP, l, &now, square, absolute, registers);
-        if (g != NULL)
-            group_gather(&now, g, registers);
-    }
-    if (k < whole) {
-        residual_group(span, k, GROUP, l, &before, square, absolute, registers);
-        for (k += GROUP; k < whole; k += GROUP) {
-            span_prefetch(span, k, false, registers);
-            residual_group(span, k, GROUP, l, &now, square, absolute, registers);
-            if (g != NULL)
-                group_gather(&before, g, registers);
-            before = now;
-        }
-        if (g != NULL)
-            group_gather(&before, g, registers);
-    }
-    if (k < end) {
-        residual_group(span, k, end - k, l, &now, square, absolute, registers);
-        if (g != NULL)
-            group_gather(&now, g, registers);
+    numbers r;
+    struct chunk chunk;
+    struct chunk_room room;
+    for (; k < end; k += chunk.count) {
+        chunk = chunk_find(span, k, end, &room, registers);
+        chunk_residual(span, k, chunk, l, TWO_PASSES(registers) ? NULL : g, r, square, absolute, registers);
+        if (span->residual != NULL)
+            numbers_store(r, chunk.count, span->residual + k);
+        if (g != NULL && TWO_PASSES(registers))
+            chunk_gather(span, chunk, r, g, registers);
     }
 }
 
@@ -410,27 +478,24 @@ static void residual_block(const struct sweep_job *job, size_t block, size_t wor
 /* ---- product with given values ------------------------------------------------------------------------------------
  */
 
-INLINE void multiply_group(const struct span *span, uint64_t k, size_t count, wide *g, const size_t registers)
-{
-    struct group group;
-    group_find(&span->right, span->across + k, count, group.row);
-    group_load(span->values, k, count, &group.number);
-    group_gather(&group, g, registers);
-}
-
 INLINE void multiply_lines(const struct sweep_job *job, size_t block, const size_t registers, const size_t stride)
 {
     struct span span = span_of(job, block, stride);
     for (uint32_t line = span.line; line < span.last; line++) {
         wide g[MOST_REGISTERS * WIDES];
+        numbers x;
+        struct chunk chunk;
+        struct chunk_room room;
         product_begin(job, line, g, registers);
-        uint64_t k = span.start[line], end = span.start[line + 1];
-        for (; k + GROUP <= end; k += GROUP) {
-            span_prefetch(&span, k, false, registers);
-            multiply_group(&span, k, GROUP, g, registers);
+        for (uint64_t k = span.start[line], end = span.start[line + 1]; k < end; k += chunk.count) {
+            chunk = chunk_find(&span, k, end, &room, registers);
+            for (size_t c = 0; c < chunk.count; c += GROUP) {
+                span_prefetch(&span, k + c, false, registers);
+                *(cells *)(x + c) = *(const cells *)(chunk.values + c);
+            }
+            numbers_end(x, chunk.count);
+            chunk_gather(&span, chunk, x, g, registers);
         }
-        if (k < end)
-            multiply_group(&span, k, end - k, g, registers);
         product_store(job, line, g, registers);
     }
 }
@@ -447,23 +512,6 @@ static void multiply_block(const struct sweep_job *job, size_t block, size_t wor
 /* ---- a tangent step seen on the cells ------------------------------------------------------------------------------
  */
 
-INLINE void tangent_group(const struct span *span, uint64_t k, size_t count, const vec *a, const vec *l, squares *zr,
-                          squares *zz, const size_t registers)
-{
-    const REAL *row[GROUP];
-    vec s[GROUP] = {{0}};
-    cells z, r;
-    group_find(&span->right, span->across + k, count, row);
-    rows_dot(a, row, s, registers);
-    group_find(&span->b, span->across + k, count, row);
-    rows_dot(l, row, s, registers);
-    sum_each(s, &z);
-    group_cut(&z, count);
-    group_load(span->values, k, count, &r);
-    squares_add(zr, &z, &r);
-    squares_add(zz, &z, &z);
-}
-
 INLINE void tangent_lines(const struct sweep_job *job, size_t block, double *out, const size_t registers,
                           const size_t stride)
 {
@@ -471,15 +519,28 @@ INLINE void tangent_lines(const struct sweep_job *job, size_t block, double *out
     squares zr[WIDES] = {{0}}, zz[WIDES] = {{0}};
     for (uint32_t line = span.line; line < span.last; line++) {
         vec l[MOST_REGISTERS], a[MOST_REGISTERS];
+        struct chunk chunk;
+        struct chunk_room room;
         row_load(&job->left, line, l, registers);
         row_load(&job->a, line, a, registers);
-        uint64_t k = span.start[line], end = span.start[line + 1];
-        for (; k + GROUP <= end; k += GROUP) {
-            span_prefetch(&span, k, true, registers);
-            tangent_group(&span, k, GROUP, a, l, zr, zz, registers);
+        for (uint64_t k = span.start[line], end = span.start[line + 1]; k < end; k += chunk.count) {
+            chunk = chunk_find(&span, k, end, &room, registers);
+            for (size_t c = 0; c < chunk.count; c += GROUP) {
+                vec s[GROUP] = {{0}};
+                cells z, r = *(const cells *)(chunk.values + c);
+                span_prefetch(&span, k + c, true, registers);
+                const REAL *row[GROUP];
+                group_find(&span.right, chunk.across + c, row);
+                rows_dot(a, row, s, registers);
+                group_find(&span.b, chunk.across + c, row);
+                rows_dot(l, row, s, registers);
+                sum_each(s, &z);
+                group_cut(&z, chunk.count - c);
+                group_cut(&r, chunk.count - c);
+                squares_add(zr, &z, &r);
+                squares_add(zz, &z, &z);
+            }
         }
-        if (k < end)
-            tangent_group(&span, k, end - k, a, l, zr, zz, registers);
     }
     out[0] = squares_sum(zr);
     out[1] = squares_sum(zz);
@@ -495,8 +556,12 @@ static void tangent_block(const struct sweep_job *job, size_t block, size_t work
 
 #include "numeric/sweep_kernel_solve.h"
 
+#ifndef NARROW
+#define NARROW NULL
+#endif
 const struct sweep_kernel SWEEP_KERNEL = {.lanes = LANES,
                                           .residual = residual_block,
                                           .multiply = multiply_block,
                                           .tangent = tangent_block,
-                                          .solve = solve_block};
+                                          .solve = solve_block,
+                                          .narrow = NARROW};

@@ -11,6 +11,7 @@
 #define MADD(a, b, c) ((a) * (b) + (c))
 #define MADD_WIDE(a, b, c) ((a) * (b) + (c))
 #define WIDES 1
+#define TWO_PASSES(n) 1
 #define COMMON_REGISTERS(X) X(8)
 #define SWEEP_KERNEL sweep_portable_double
 #include "numeric/sweep_kernel.h"

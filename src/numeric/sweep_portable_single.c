@@ -13,6 +13,7 @@
 #define WIDEN(x, part)                                                                                                 \
     __builtin_convertvector((part) == 0 ? __builtin_shufflevector(x, x, 0, 1) : __builtin_shufflevector(x, x, 2, 3),   \
                             wide)
+#define TWO_PASSES(n) 1
 #define COMMON_REGISTERS(X) X(4)
 #define SWEEP_KERNEL sweep_portable_single
 #include "numeric/sweep_kernel.h"
