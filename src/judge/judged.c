@@ -13,9 +13,9 @@
 enum { PIECE = 4096 };
 /* Cells ahead of which the systems are asked for. */
 enum { AHEAD = 4 };
-/* Above this many cells the unseen ones are sampled: a mean over as many has a relative error of a thousandth. */
+/* Above this many cells the unseen ones are sampled: a mean over as many has a relative error of some thousandth. */
 static const double all_most = 1e6;
-enum { SAMPLE = 200000 };
+enum { SAMPLE = 100000 };
 
 fescue_status judged_grow(fescue_context *context, uint64_t count, struct judged *judged)
 {

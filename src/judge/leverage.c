@@ -48,11 +48,13 @@ struct levering {
 
 /* Cells whose regressors are added in one go. */
 enum { TOGETHER = 4 };
+/* Cells ahead of which factors are asked for. */
+enum { AHEAD = 16 };
 
 /* What a worker has: eight systems side by side, their inverses, right sides that are not used; eight packed lines; one
-   system in rows of a multiple of eight, and the regressors that are added to it. */
+   system in rows of a multiple of eight. */
 struct levering_room {
-    double *system, *inverse, *side, *line, *square, *regressors;
+    double *system, *inverse, *side, *line, *square;
 };
 
 static size_t line_size(size_t size)
@@ -63,7 +65,7 @@ static size_t line_size(size_t size)
 static size_t room_size(size_t size)
 {
     return 2 * batch_size(packed_size(size)) + batch_size(size) + BATCH_LANES * line_size(size) +
-           (size + TOGETHER) * factor_stride(size);
+           size * factor_stride(size);
 }
 
 static struct levering_room room_carve(double *at, size_t size)
@@ -73,42 +75,61 @@ static struct levering_room room_carve(double *at, size_t size)
     room.side = room.inverse + batch_size(packed_size(size));
     room.line = room.side + batch_size(size);
     room.square = room.line + BATCH_LANES * line_size(size);
-    room.regressors = room.square + size * factor_stride(size);
     return room;
 }
 
-/* Lower triangle, rows up to a multiple of eight, += sum over four of weight g g'. */
+/* Lower triangle of the components, rows up to a multiple of eight, += sum over four of weight g g'; the row of the
+   effect, behind them, += sum of weight g. */
 NUMERIC_VERSIONS
-static void regressors_add(const double *restrict g, const double *weight, size_t size, size_t stride,
-                           double *restrict square)
+static void factors_add(const double *const factor[TOGETHER], const double *weight, size_t rank, size_t stride,
+                        double *restrict square)
 {
-    for (size_t k = 0; k < size; k++) {
+    const double *g0 = factor[0], *g1 = factor[1], *g2 = factor[2], *g3 = factor[3];
+    double *restrict last = square + rank * stride;
+    for (size_t k = 0; k < rank; k++) {
         double *restrict row = square + k * stride;
-        const double *restrict g1 = g + stride, *restrict g2 = g1 + stride, *restrict g3 = g2 + stride;
-        double x0 = weight[0] * g[k], x1 = weight[1] * g1[k], x2 = weight[2] * g2[k], x3 = weight[3] * g3[k];
+        double x0 = weight[0] * g0[k], x1 = weight[1] * g1[k], x2 = weight[2] * g2[k], x3 = weight[3] * g3[k];
         for (size_t l = 0; l < (k + 8) / 8 * 8; l++)
-            row[l] += (x0 * g[l] + x1 * g1[l]) + (x2 * g2[l] + x3 * g3[l]);
+            row[l] += (x0 * g0[l] + x1 * g1[l]) + (x2 * g2[l] + x3 * g3[l]);
+        last[k] += (x0 + x1) + (x2 + x3);
     }
 }
 
-/* The system of a line into room->square. A position's regressors are its factor and 1 for the effect. */
+/* The factors of cell c + AHEAD will be wanted. */
+static void factor_prefetch(const struct levering *levering, uint64_t c)
+{
+    const struct half *half = levering->half;
+    if (c + AHEAD >= half->start[half->lines])
+        return;
+    const double *factor = levering->other.data + half->across[c + AHEAD] * levering->other.stride;
+    for (size_t k = 0; k + 1 < levering->size; k += 8)
+        __builtin_prefetch(factor + k);
+}
+
+/* The system of a line into room->square. */
 static void system_write(const struct levering *levering, uint32_t line, const struct levering_room *room)
 {
     const struct half *half = levering->half;
-    size_t size = levering->size, stride = factor_stride(size);
-    memset(room->square, 0, (size + TOGETHER) * stride * sizeof *room->square);
-    for (size_t k = 0; k < size; k++)
-        room->square[k * stride + k] = levering->ridge[k];
+    size_t size = levering->size, rank = size - 1, stride = factor_stride(size);
+    double *last = room->square + rank * stride, total = 0;
+    memset(room->square, 0, size * stride * sizeof *room->square);
     for (uint64_t c = half->start[line]; c < half->start[line + 1]; c += TOGETHER) {
+        const double *factor[TOGETHER];
         double weight[TOGETHER] = {0};
-        for (size_t t = 0; t < TOGETHER && c + t < half->start[line + 1]; t++) {
-            double *to = room->regressors + t * stride;
-            memcpy(to, levering->other.data + half->across[c + t] * levering->other.stride, (size - 1) * sizeof *to);
-            to[size - 1] = levering->has_effect ? 1 : 0;
-            weight[t] = half->weight != NULL ? (double)half->weight[c + t] : 1;
+        for (size_t t = 0; t < TOGETHER; t++) {
+            bool is_there = c + t < half->start[line + 1];
+            factor[t] = levering->other.data + half->across[is_there ? c + t : c] * levering->other.stride;
+            weight[t] = !is_there ? 0 : half->weight != NULL ? (double)half->weight[c + t] : 1;
+            total += weight[t];
+            factor_prefetch(levering, c + t);
         }
-        regressors_add(room->regressors, weight, size, stride, room->square);
+        factors_add(factor, weight, rank, stride, room->square);
     }
+    for (size_t k = 0; k < rank; k++) {
+        room->square[k * stride + k] += levering->ridge[k];
+        last[k] = levering->has_effect ? last[k] : 0;
+    }
+    last[rank] = levering->ridge[rank] + (levering->has_effect ? total : 0);
 }
 
 /* The same, packed. */

@@ -59,12 +59,12 @@ static void terms_set(const struct variance *variance, const struct standing *at
     term[0] = 1. / at->weight;
     term[1] = leverage;
     term[2] = sqrt(leverage);
-    term[3] = 1 - exp(-beyond / 3);
-    term[4] = 1 - exp(-beyond / 30);
-    term[5] = 1 - exp(-beyond / 300);
+    term[3] = beyond > 0 ? 1 - exp(-beyond / 3) : 0;
+    term[4] = beyond > 0 ? 1 - exp(-beyond / 30) : 0;
+    term[5] = beyond > 0 ? 1 - exp(-beyond / 300) : 0;
     term[6] = has_distance && (at->marks & STANDING_ONE_SIDED) ? 1 : 0;
-    term[7] = dark * (1 - exp(-(beyond + 1) / 3));
-    term[8] = dark * (1 - exp(-(beyond + 1) / 30));
+    term[7] = dark > 0 ? 1 - exp(-(beyond + 1) / 3) : 0;
+    term[8] = dark > 0 ? 1 - exp(-(beyond + 1) / 30) : 0;
     term[9] = at->own * term[4];
 }
 

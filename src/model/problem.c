@@ -18,6 +18,7 @@
 #include <assert.h>
 #include <float.h>
 #include <math.h>
+#include <string.h>
 
 struct target_pass {
     const struct cells *from;
@@ -30,37 +31,90 @@ struct target_pass {
     double square_of[2 * CELLS_MOST_BLOCKS]; /* (x - offset)^2 and x^2, in units of largest^2 */
 };
 
-static double difference_at(const struct target_pass *pass, uint32_t line, uint64_t k)
+/* Cells that a pass takes in one go, so that what is done to each of them is done in the widest registers there are. */
+enum { STRETCH = 256 };
+struct stretch {
+    double x[STRETCH], difference[STRETCH]; /* what was seen, and that less its offset */
+};
+
+NUMERIC_VERSIONS
+static void less_row(double offset, const double *restrict column, const uint32_t *restrict across, size_t count,
+                     double *restrict difference)
 {
-    double x = cells_value(pass->from, pass->half, k);
-    uint32_t across = pass->half->across[k];
-    if (pass->offsets == NULL)
-        return x;
-    return x - (pass->by_row ? offsets_at(pass->offsets, line, across) : offsets_at(pass->offsets, across, line));
+    for (size_t c = 0; c < count; c++)
+        difference[c] -= offset + column[across[c]];
+}
+
+NUMERIC_VERSIONS
+static void less_column(const struct offsets *offsets, double column, const uint32_t *restrict across, size_t count,
+                        double *restrict difference)
+{
+    const double *restrict row = offsets->row;
+    double mean = offsets->mean;
+    for (size_t c = 0; c < count; c++)
+        difference[c] -= mean + row[across[c]] + column;
+}
+
+NUMERIC_VERSIONS
+static void divide(double divisor, size_t count, double *numbers)
+{
+    for (size_t c = 0; c < count; c++)
+        numbers[c] /= divisor;
+}
+
+/* The cells of a line from k on, as many as fit; returns how many. */
+static size_t stretch_take(const struct target_pass *pass, uint32_t line, uint64_t k, struct stretch *stretch)
+{
+    const struct half *half = pass->half;
+    const struct offsets *offsets = pass->offsets;
+    size_t count = half->start[line + 1] - k < STRETCH ? (size_t)(half->start[line + 1] - k) : STRETCH;
+    if (pass->from->precision == FESCUE_SINGLE)
+        for (size_t c = 0; c < count; c++)
+            stretch->x[c] = (double)((const float *)half->value)[k + c];
+    else
+        memcpy(stretch->x, (const double *)half->value + k, count * sizeof *stretch->x);
+    memcpy(stretch->difference, stretch->x, count * sizeof *stretch->x);
+    if (offsets == NULL)
+        return count;
+    if (pass->by_row)
+        less_row(offsets->mean + offsets->row[line], offsets->column, half->across + k, count, stretch->difference);
+    else
+        less_column(offsets, offsets->column[line], half->across + k, count, stretch->difference);
+    return count;
 }
 
 static void largest_task(void *job, size_t block, size_t worker)
 {
     struct target_pass *pass = job;
+    struct stretch stretch;
     double largest = 0;
     (void)worker;
     for (uint32_t line = pass->half->block[block]; line < pass->half->block[block + 1]; line++)
-        for (uint64_t k = pass->half->start[line]; k < pass->half->start[line + 1]; k++)
-            largest = fmax(largest, fabs(difference_at(pass, line, k)));
+        for (uint64_t k = pass->half->start[line], count; k < pass->half->start[line + 1]; k += count) {
+            count = stretch_take(pass, line, k, &stretch);
+            for (size_t c = 0; c < count; c++) {
+                double size = fabs(stretch.difference[c]);
+                largest = size > largest ? size : largest;
+            }
+        }
     pass->largest_of[block] = largest;
 }
 
 static void square_task(void *job, size_t block, size_t worker)
 {
     struct target_pass *pass = job;
+    struct stretch stretch;
     double difference = 0, observed = 0;
     (void)worker;
     for (uint32_t line = pass->half->block[block]; line < pass->half->block[block + 1]; line++)
-        for (uint64_t k = pass->half->start[line]; k < pass->half->start[line + 1]; k++) {
-            double d = difference_at(pass, line, k) / pass->largest;
-            double x = cells_value(pass->from, pass->half, k) / pass->largest;
-            difference += d * d;
-            observed += x * x;
+        for (uint64_t k = pass->half->start[line], count; k < pass->half->start[line + 1]; k += count) {
+            count = stretch_take(pass, line, k, &stretch);
+            divide(pass->largest, count, stretch.difference);
+            divide(pass->largest, count, stretch.x);
+            for (size_t c = 0; c < count; c++) {
+                difference += stretch.difference[c] * stretch.difference[c];
+                observed += stretch.x[c] * stretch.x[c];
+            }
         }
     pass->square_of[2 * block] = difference;
     pass->square_of[2 * block + 1] = observed;
@@ -69,14 +123,17 @@ static void square_task(void *job, size_t block, size_t worker)
 static void target_task(void *job, size_t block, size_t worker)
 {
     struct target_pass *pass = job;
+    struct stretch stretch;
     (void)worker;
     for (uint32_t line = pass->half->block[block]; line < pass->half->block[block + 1]; line++)
-        for (uint64_t k = pass->half->start[line]; k < pass->half->start[line + 1]; k++) {
-            double t = difference_at(pass, line, k) / pass->scale;
+        for (uint64_t k = pass->half->start[line], count; k < pass->half->start[line + 1]; k += count) {
+            count = stretch_take(pass, line, k, &stretch);
+            divide(pass->scale, count, stretch.difference);
             if (pass->from->precision == FESCUE_SINGLE)
-                ((float *)pass->target)[k] = (float)t;
+                for (size_t c = 0; c < count; c++)
+                    ((float *)pass->target)[k + c] = (float)stretch.difference[c];
             else
-                ((double *)pass->target)[k] = t;
+                memcpy((double *)pass->target + k, stretch.difference, count * sizeof(double));
         }
 }
 

@@ -17,8 +17,9 @@
  * Stiefel 1952). The eigenvalues of D_s^-1/2 S D_s^-1/2 lie in (0, 1], and for a table of many cells a line nearly all
  * of them near 1, so that some tens of passes do; a table of 480 000 x 17 800 with 1e8 cells would have a factor of 2e8
  * numbers and 2e12 operations. This is the one departure from solving directly, and it is chosen without analysis above
- * 2e6 cells: CHOLMOD's copies of the matrix and its analysis need some 70 bytes a cell after analysis     above 1e7
- * numbers in the factor (80 MB) or 4e9 operations (less than a second)
+ * 2e6 cells (CHOLMOD's copies of the matrix and its analysis need some 70 bytes a cell) and where counting cells shows
+ * that S is mostly full and too large; else after analysis, above 1e7 numbers in the factor (80 MB) or 4e9 operations
+ * (less than a second).
  *
  *     d, g, y    diagonal, right-hand side, solution        s, l    shorter and longer side
  *     p, q       direction and S p                          z       preconditioned residual D_s^-1 r
@@ -302,6 +303,20 @@ done:
     return status;
 }
 
+/* Without analysis: a line of the longer side makes a clique of those of the shorter side that it sees. Where all
+   cliques together have more entries than the whole complement, this is mostly full. */
+static bool is_plainly_too_large(const struct cells *cells)
+{
+    bool by_row = cells->rows >= cells->columns;
+    const struct half *longer = by_row ? &cells->by_row : &cells->by_column;
+    double shorter = by_row ? cells->columns : cells->rows, full = shorter * shorter / 2, cliques = 0;
+    for (uint32_t i = 0; i < longer->lines; i++) {
+        double seen = (double)(longer->start[i + 1] - longer->start[i]);
+        cliques += seen * seen / 2;
+    }
+    return cliques >= full && full > direct_most_entries;
+}
+
 fescue_status sparse_two_way_solve(fescue_context *context, const struct cells *cells, const double *diagonal,
                                    size_t count, const double *rhs, double *solution)
 {
@@ -310,7 +325,7 @@ fescue_status sparse_two_way_solve(fescue_context *context, const struct cells *
     bool solved = false;
     fescue_status status = FESCUE_OK;
     dense_threads_hold();
-    if (cells->count <= direct_most_cells)
+    if (cells->count <= direct_most_cells && !is_plainly_too_large(cells))
         TRY(direct_solve(&system, &solved));
     if (!solved)
         TRY(gradients_solve(&system));
