@@ -29,7 +29,7 @@
 
 enum { DRAWS = 400, DRAWS_LEAST = 100, STRATUM_LEAST = 10, SHAPED_LEAST = 200 };
 /* Sensors that are drawn in all, as far as DRAWS_LEAST draws do not take more: the band of very many is narrow. */
-static const double drawn_most = 1e6;
+static const double drawn_most = 5e5;
 static const double edges[JUDGE_BINS - 1] = {1.5, 2.5, 5.5, 15.5, 50.5, 150.5};
 
 /* Of one sensor and stratum. */

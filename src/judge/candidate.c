@@ -103,7 +103,7 @@ struct low_rank candidate_point(struct chooser *chooser, const struct candidate 
 {
     struct low_rank point = candidate->point;
     for (size_t k = 0; k < point.rank; k++)
-        chooser->spectrum[k] = point.spectrum[k] * chooser->problem.scale;
+        chooser->spectrum[k] = point.spectrum[k] * chooser->scale;
     point.spectrum = chooser->spectrum;
     return point;
 }
@@ -115,7 +115,7 @@ static bool is_met(const struct chooser *chooser)
     /* Numbers are held to 2^-53 or 2^-24, and a few hundred roundings go into an estimate. */
     static const double double_rounding = 1e-8, single_rounding = 1e-5, share = 0.8;
     bool is_single = chooser->kept->precision == FESCUE_SINGLE;
-    double rounding = (is_single ? single_rounding : double_rounding) * chooser->problem.scale;
+    double rounding = (is_single ? single_rounding : double_rounding) * chooser->scale;
     uint64_t met = 0, count = chooser->hidden->count;
     for (uint64_t k = 0; k < count; k++)
         met += fabs(chooser->residuals[k]) <= rounding;
@@ -125,7 +125,7 @@ static bool is_met(const struct chooser *chooser)
 fescue_status candidate_measure(struct chooser *chooser, struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
-    TRY(chooser_take_up(chooser, candidate));
+    chooser_take_scale(chooser, candidate);
     struct model model = {.rows = chooser->kept->rows,
                           .columns = chooser->kept->columns,
                           .offsets = candidate->offsets,

@@ -69,15 +69,27 @@ size_t chooser_rank_most(const struct chooser *chooser)
 fescue_status chooser_take_up(struct chooser *chooser, const struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
-    if (chooser->version == candidate->version)
+    if (chooser->version == candidate->version) {
+        chooser_take_scale(chooser, candidate);
         goto done;
+    }
     if (chooser->version != 0)
         problem_free(&chooser->problem);
     chooser->version = 0;
     TRY(problem_create(chooser->context, chooser->kept, &candidate->offsets, 0, &chooser->problem));
     chooser->version = candidate->version;
+    chooser_take_scale(chooser, candidate);
 done:
     return status;
+}
+
+void chooser_take_scale(struct chooser *chooser, const struct candidate *candidate)
+{
+    if (chooser->version == candidate->version)
+        chooser->scale = chooser->problem.scale;
+    else if (chooser->scaled != candidate->version)
+        chooser->scale = problem_scale(chooser->context, chooser->kept, &candidate->offsets);
+    chooser->scaled = candidate->version;
 }
 
 fescue_status chooser_open(struct chooser *chooser)
@@ -242,7 +254,7 @@ static fescue_status winner_krige(struct chooser *chooser, struct candidate *win
         return FESCUE_OK;
     chooser->plain_errors = winner->errors;
     TRY(candidate_copy(chooser, winner, &own));
-    TRY(chooser_take_up(chooser, winner));
+    chooser_take_scale(chooser, winner);
     struct model model = {.rows = chooser->kept->rows,
                           .columns = chooser->kept->columns,
                           .offsets = winner->offsets,
@@ -295,9 +307,10 @@ static fescue_status choice_fill(struct chooser *chooser, struct kind *kinds, si
         TRY(offsets_copy(chooser->context, chooser->kept->rows, chooser->kept->columns, &winner->offsets,
                          &choice->beside));
     }
+    chooser_take_scale(chooser, winner);
     TRY(low_rank_copy(chooser->context, &winner->point, &choice->start));
     for (size_t k = 0; k < choice->start.rank; k++)
-        choice->start.spectrum[k] *= chooser->problem.scale;
+        choice->start.spectrum[k] *= chooser->scale;
     TRY(RESIZE(chooser->context, chooser->path_count, &chooser->path));
     choice->path = chooser->path;
     choice->path_count = chooser->path_count;

@@ -103,9 +103,9 @@ static fescue_status candidate_take(struct chooser *chooser, struct evidence_res
     candidate->variance = result->noise * result->noise;
     candidate->spread = noise_lines(chooser) == EVIDENCE_NOISE_COLUMNS ? result->column_spread : result->row_spread;
     candidate->ridge = NAN;
-    TRY(chooser_take_up(chooser, candidate));
+    chooser_take_scale(chooser, candidate);
     for (size_t k = 0; k < candidate->point.rank; k++)
-        candidate->point.spectrum[k] /= chooser->problem.scale;
+        candidate->point.spectrum[k] /= chooser->scale;
     TRY(candidate_measure(chooser, candidate));
     TRY(candidate_note(chooser, candidate));
 done:
@@ -174,7 +174,7 @@ static fescue_status learn_rounds(struct chooser *chooser, const struct more *mo
     if (winner->point.rank == 0 || chooser_is_late(chooser))
         return FESCUE_OK;
     TRY(candidate_copy(chooser, winner, &own));
-    TRY(chooser_take_up(chooser, winner));
+    chooser_take_scale(chooser, winner);
     request.noise_start = winner->errors.rmse * winner->errors.rmse;
     start.offsets = winner->offsets; /* borrowed, like the point */
     start.low_rank = candidate_point(chooser, winner);

@@ -21,6 +21,8 @@ struct chooser {
 
     struct problem problem; /* what the offsets at hand leave of the kept cells */
     uint64_t version;       /* which offsets those are; 0: there is no problem yet */
+    double scale;           /* of the problem of these or other offsets, which points are in units of */
+    uint64_t scaled;        /* which those are; 0: none yet */
     uint64_t versions;      /* how many there have been */
 
     double *residuals;          /* one a hidden cell */
@@ -59,7 +61,7 @@ void candidate_swap(struct candidate *a, struct candidate *b);
 /* Lets the solver improve the point under `ridge`, measures it on the hidden cells and notes it in the path. */
 fescue_status candidate_fit(struct chooser *chooser, double ridge, const struct solve_limits *limits,
                             struct candidate *candidate);
-/* The low-rank part in the table's units; its spectrum is the chooser's. The problem is the candidate's. */
+/* The low-rank part in the table's units; its spectrum is the chooser's. The scale is the candidate's. */
 struct low_rank candidate_point(struct chooser *chooser, const struct candidate *candidate);
 /* One more step of the path: the candidate as it was measured. */
 fescue_status candidate_note(struct chooser *chooser, const struct candidate *candidate);
@@ -98,6 +100,8 @@ bool chooser_is_late(const struct chooser *chooser);
 bool chooser_is_large(const struct chooser *chooser, size_t rank);
 /* Takes up the candidate's offsets: the problem is what they leave of the kept cells. */
 fescue_status chooser_take_up(struct chooser *chooser, const struct candidate *candidate);
+/* Only the scale of that problem. */
+void chooser_take_scale(struct chooser *chooser, const struct candidate *candidate);
 struct solve_limits chooser_loose_limits(const struct chooser *chooser);
 struct solve_limits chooser_fine_limits(const struct chooser *chooser);
 size_t chooser_rank_most(const struct chooser *chooser); /* the largest rank that the kept cells allow */

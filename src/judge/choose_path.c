@@ -77,7 +77,7 @@ fescue_status path_try_exact(struct chooser *chooser, struct candidate *candidat
     bool is_done = candidate->is_exact && !candidate->is_learnt; /* learning comes near, and stops there */
     struct candidate tight = {0};
     if (!ridge_allows || candidate->point.rank == 0 || is_done || chooser_is_late(chooser) ||
-        candidate->errors.rmse > suspicion * chooser->problem.scale)
+        candidate->errors.rmse > suspicion * chooser->scale)
         goto done;
     /* Without noise the objective falls by a factor an iteration until nothing is left of it; with noise it soon stops
        changing. So a loose limit on change ends the second case early and never the first. */

@@ -50,7 +50,15 @@ static void runs_say(const struct tracks_runs *runs, bool along_columns, struct 
              places_word(along_columns), floor(by_chance), floor(10 * (by_chance - floor(by_chance))));
 }
 
-/* Whether holes lie in runs along the order; less is better in *share, the stretches over the expected ones. */
+/* Whether holes lie in runs along an order; less is better in *share, the stretches over the expected ones. */
+static void runs_judge(const struct tracks_runs *runs, bool along_columns, double *share, struct hole_shape *found)
+{
+    if (is_broken(runs) && runs->runs < *share * runs->expected) {
+        *share = runs->runs / runs->expected;
+        runs_say(runs, along_columns, found);
+    }
+}
+
 static fescue_status along_try(fescue_context *context, const struct cells *cells, const struct line_order *order,
                                double *share, struct hole_shape *found)
 {
@@ -60,10 +68,7 @@ static fescue_status along_try(fescue_context *context, const struct cells *cell
         return status;
     struct tracks_runs runs = tracks_count_runs(&tracks);
     tracks_free(context, &tracks);
-    if (is_broken(&runs) && runs.runs < *share * runs.expected) {
-        *share = runs.runs / runs.expected;
-        runs_say(&runs, order->along_columns, found);
-    }
+    runs_judge(&runs, order->along_columns, share, found);
     return FESCUE_OK;
 }
 
@@ -105,7 +110,6 @@ static void newcomers_find(const struct cells *cells, struct hole_shape *found)
 fescue_status hole_shape_find(fescue_context *context, const struct cells *cells, const struct line_order *order,
                               struct hole_shape *found)
 {
-    static const struct line_order sides[] = {{.along_columns = false}, {.along_columns = true}};
     fescue_status status = FESCUE_OK;
     double share = 1;
     if (cells->count == 0 || cells->count / cells->columns == cells->rows) {
@@ -124,8 +128,9 @@ fescue_status hole_shape_find(fescue_context *context, const struct cells *cells
         TRY(along_try(context, cells, order, &share, found));
         return FESCUE_OK;
     }
-    for (size_t k = 0; k < 2; k++)
-        TRY(along_try(context, cells, &sides[k], &share, found));
+    struct tracks_runs along_rows = half_count_runs(&cells->by_column), along_columns = half_count_runs(&cells->by_row);
+    runs_judge(&along_rows, false, &share, found);
+    runs_judge(&along_columns, true, &share, found);
 done:
     return status;
 }

@@ -114,22 +114,34 @@ double tracks_distance(const struct tracks *tracks, uint32_t sensor, uint32_t pl
     return distance;
 }
 
+/* Of one sensor, whose places ascend. */
+static void runs_add(const uint32_t *rank, uint64_t count, uint32_t length, struct tracks_runs *all)
+{
+    uint64_t runs = count > 0;
+    double places = length, seen = (double)count;
+    if (count == 0 || count == length)
+        return;
+    for (uint64_t k = 1; k < count; k++)
+        runs += rank[k] != rank[k - 1] + 1;
+    bool at_first = rank[0] == 0, at_last = rank[count - 1] + 1 == length;
+    all->holes += places - seen;
+    all->runs += (double)runs;
+    all->expected += seen * (places - seen + 1) / places;
+    all->hole_runs += (double)runs + 1 - at_first - at_last;
+}
+
 struct tracks_runs tracks_count_runs(const struct tracks *tracks)
 {
     struct tracks_runs all = {0};
-    double places = tracks->places;
-    for (uint32_t s = 0; s < tracks->sensors; s++) {
-        uint64_t from = tracks->start[s], to = tracks->start[s + 1], runs = 0;
-        double seen = (double)(to - from);
-        if (seen == 0 || to - from == tracks->places)
-            continue;
-        for (uint64_t k = from; k < to; k++)
-            runs += k == from || tracks->rank[k] != tracks->rank[k - 1] + 1;
-        bool at_first = tracks->rank[from] == 0, at_last = tracks->rank[to - 1] + 1 == tracks->places;
-        all.holes += places - seen;
-        all.runs += (double)runs;
-        all.expected += seen * (places - seen + 1) / places;
-        all.hole_runs += (double)runs + 1 - at_first - at_last;
-    }
+    for (uint32_t s = 0; s < tracks->sensors; s++)
+        runs_add(tracks->rank + tracks->start[s], tracks->start[s + 1] - tracks->start[s], tracks->places, &all);
+    return all;
+}
+
+struct tracks_runs half_count_runs(const struct half *sensors)
+{
+    struct tracks_runs all = {0};
+    for (uint32_t s = 0; s < sensors->lines; s++)
+        runs_add(sensors->across + sensors->start[s], sensors->start[s + 1] - sensors->start[s], sensors->length, &all);
     return all;
 }

@@ -34,5 +34,7 @@ struct tracks_runs {
     double hole_runs;      /* stretches of unseen places */
 };
 struct tracks_runs tracks_count_runs(const struct tracks *tracks);
+/* The same of tracks in the order that lines came in: sensors are the lines of the half. */
+struct tracks_runs half_count_runs(const struct half *sensors);
 
 #endif

@@ -43,6 +43,8 @@ struct problem {
 };
 fescue_status problem_create(fescue_context *context, const struct cells *cells, const struct offsets *offsets,
                              double ridge, struct problem *problem);
+/* The scale of that problem alone. */
+double problem_scale(fescue_context *context, const struct cells *cells, const struct offsets *offsets);
 void problem_set_ridge(struct problem *problem, double ridge);
 void problem_free(struct problem *problem);
 

@@ -156,6 +156,14 @@ static void problem_measure(struct problem *problem, struct target_pass *pass)
         problem->rounding *= sqrt(sum[1] / sum[0]);
 }
 
+double problem_scale(fescue_context *context, const struct cells *cells, const struct offsets *offsets)
+{
+    struct problem problem = {.context = context};
+    struct target_pass pass = {.from = cells, .offsets = offsets, .half = &cells->by_row, .by_row = true};
+    problem_measure(&problem, &pass);
+    return problem.scale;
+}
+
 fescue_status problem_create(fescue_context *context, const struct cells *cells, const struct offsets *offsets,
                              double ridge, struct problem *problem)
 {

@@ -40,7 +40,7 @@ static void blocks_halve(const bits_of_double *restrict bits, size_t blocks, uin
 void moments_halve(const struct moments *moments, const double *moment, double *room, uint64_t *halves)
 {
     size_t d = moments->regressors, one = moments->one, at = d;
-    memset(room, 0, moments_room(d) * sizeof *room);
+    memset(room + packed_size(d), 0, (moments_room(d) - packed_size(d)) * sizeof *room);
     memcpy(room, moment + packed_size(one), (one + 1) * sizeof *room);
     memcpy(room + at, moment, packed_size(one) * sizeof *room);
     at += packed_size(one);
