@@ -184,19 +184,35 @@ SHORT_LINE_VECTORS static void short_values_put(const struct short_lines *lines,
             ((double *)to)[k] = rest[j];
 }
 
+/* What an entry has to keep to. */
+struct short_limits {
+    uint64_t rows, columns;
+    uint32_t points_mask;
+    enum mirror mirror;
+};
+
+static struct short_limits limits_of(const struct market_form *form)
+{
+    return (struct short_limits){form->rows, form->columns, form->is_integer ? 0 : UINT32_MAX, form->pile->mirror};
+}
+
+SHORT_LINE_VECTORS static inline bool short_line_take(const struct short_limits *limits, const char *at, size_t length,
+                                                      struct short_line *cut)
+{
+    return short_line_cut(at, length, limits->points_mask, cut) && cut->row < limits->rows &&
+           cut->column < limits->columns && is_in_triangle(limits->mirror, cut->row, cut->column);
+}
+
 /* Takes lines of the batch up to the first that is not short. */
 SHORT_LINE_VECTORS static void short_lines_put(const struct market_form *form, const char *text,
                                                struct short_lines *lines, struct pile_block *block)
 {
-    const uint64_t rows = form->rows, columns = form->columns;
-    const uint32_t points_mask = form->is_integer ? 0 : UINT32_MAX;
-    const enum mirror mirror = form->pile->mirror;
+    const struct short_limits limits = limits_of(form);
     uint32_t *row = block->row + block->count, *column = block->column + block->count;
     size_t count = 0, line = lines->line;
     for (size_t k = lines->read; k < lines->count; count++, line = lines->feed[k++] + 1) {
         struct short_line cut;
-        if (!short_line_cut(text + line, lines->feed[k] - line, points_mask, &cut) || cut.row >= rows ||
-            cut.column >= columns || !is_in_triangle(mirror, cut.row, cut.column))
+        if (!short_line_take(&limits, text + line, lines->feed[k] - line, &cut))
             break;
         row[count] = cut.row;
         column[count] = cut.column;
@@ -208,6 +224,20 @@ SHORT_LINE_VECTORS static void short_lines_put(const struct market_form *form, c
     block->count += (uint32_t)count;
     lines->read += count;
     lines->line = line;
+}
+
+/* The next line of the batch, if it is short, with the text of its value. */
+SHORT_LINE_VECTORS static bool short_entry_take(const struct market_form *form, const char *text,
+                                                const struct short_lines *lines, struct pile_entry *entry)
+{
+    const struct short_limits limits = limits_of(form);
+    const char *at = text + lines->line, *end = text + lines->feed[lines->read];
+    struct short_line cut;
+    if (!short_line_take(&limits, at, (size_t)(end - at), &cut))
+        return false;
+    *entry = (struct pile_entry){
+        .row = cut.row, .column = cut.column, .value = value_make(&cut), .text = at + cut.text, .end = end};
+    return true;
 }
 
 /* As lines_parse. A line that is not short is read field by field, which does not go beyond a line feed. */
@@ -225,7 +255,8 @@ static fescue_status short_lines_parse(const struct market_form *form, const str
         struct rest line = {rest.at + lines.line, rest.end};
         struct pile_entry entry;
         if (lines.read < lines.count) {
-            *is_plain = coordinate_take(form, &line, &entry);
+            *is_plain = (form->pile->keeps_texts && short_entry_take(form, rest.at, &lines, &entry)) ||
+                        coordinate_take(form, &line, &entry);
             if (*is_plain)
                 TRY(entry_put(form, block, &entry));
             lines.line = lines.feed[lines.read++] + 1;

@@ -138,6 +138,7 @@ struct short_line {
     uint32_t row, column;
     uint64_t halves; /* of the value's digits: the upper eight in the lower bits */
     double power;    /* of ten, by which they are divided, with the value's sign */
+    uint32_t text;   /* where the value begins */
 };
 
 /* Takes the line of `length` characters apart if it is short; points are none where `points_mask` is 0. */
@@ -166,8 +167,15 @@ SHORT_LINE_VECTORS static inline bool short_line_cut(const char *at, size_t leng
     *cut = (struct short_line){.row = (uint32_t)places - 1,
                                .column = (uint32_t)(places >> 32) - 1,
                                .halves = (uint64_t)_mm_extract_epi64(numbers, 1),
-                               .power = power[negative][decimals]};
+                               .power = power[negative][decimals],
+                               .text = column_end + 1};
     return true;
+}
+
+static inline double value_make(const struct short_line *cut)
+{
+    const uint64_t digits = (cut->halves & UINT32_MAX) * 100000000 + (cut->halves >> 32);
+    return (double)(int64_t)digits / cut->power;
 }
 
 /* Four values. A whole number below 2^52 becomes a double as the lower bits of one between 2^52 and 2^53. */
