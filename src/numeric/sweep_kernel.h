@@ -171,14 +171,6 @@ INLINE void sum_each(const vec s[GROUP], cells *out)
 /* ---- chunks and groups of cells -----------------------------------------------------------------------------------
  */
 
-/* Numbers of a chunk's cells, and zeros behind them up to a whole group. */
-typedef REAL numbers[CHUNK + GROUP];
-
-INLINE void numbers_end(REAL *number, size_t count)
-{
-    *(cells *)(number + count) = (cells){0};
-}
-
 INLINE void row_prefetch(const REAL *row, size_t width)
 {
     for (size_t at = 0; at < width * sizeof(REAL); at += CACHE_LINE)
@@ -199,10 +191,15 @@ INLINE void group_find(const struct sweep_rows *rows, const uint32_t *across, co
         row[c] = (const REAL *)rows->data + across[c] * rows->stride;
 }
 
-/* s_c += l * row_c */
-INLINE void rows_dot(const vec *l, const REAL *const row[GROUP], vec s[GROUP], const size_t registers)
+/* s_c = l * row_c, or to what is there; a row of no registers gives what is there, or 0. */
+INLINE void rows_dot(const vec *l, const REAL *const row[GROUP], bool add, vec s[GROUP], const size_t registers)
 {
-    for (size_t v = 0; v < registers; v++)
+    for (size_t c = 0; c < GROUP && !add; c++)
+        if (registers > 0)
+            s[c] = l[0] * *(const vec *)row[c];
+        else
+            s[c] = (vec){0};
+    for (size_t v = add ? 0 : 1; v < registers; v++)
         for (size_t c = 0; c < GROUP; c++)
             s[c] = MADD(l[v], *(const vec *)(row[c] + v * LANES), s[c]);
 }
@@ -219,10 +216,18 @@ INLINE void rows_gather(const vec each[GROUP], const REAL *const row[GROUP], wid
     }
 }
 
-/* Zeros, or what earlier slabs have come to. */
-INLINE void product_begin(const struct sweep_job *job, uint32_t line, wide *g, const size_t registers)
+/* Lines come in order, but too seldom for the processor to look out for their rows itself. */
+INLINE void left_prefetch(const struct sweep_rows *left, uint32_t line, const size_t registers)
 {
-    const double *row = job->product.data + line * job->product.stride;
+    row_prefetch((const REAL *)left->data + line * left->stride, registers * LANES);
+}
+
+/* Zeros, or what earlier slabs have come to. The next line's row, which will be written, is asked for. */
+INLINE void product_begin(const struct sweep_job *job, uint32_t line, uint32_t last, wide *g, const size_t registers)
+{
+    const double *row = job->product.data + line * job->product.stride, *next = row + job->product.stride;
+    for (size_t at = 0; line + 1 < last && at < registers * LANES; at += CACHE_LINE / sizeof *next)
+        __builtin_prefetch(next + at, 1);
     size_t width = job->more ? factor_stride(job->rank) : 0;
     for (size_t v = 0; v < registers * WIDES; v++)
         g[v] = v * WIDE_LANES < width ? *(const wide *)(row + v * WIDE_LANES) : (wide){0};
@@ -336,17 +341,16 @@ INLINE struct chunk chunk_find(const struct span *span, uint64_t k, uint64_t end
     return chunk;
 }
 
-INLINE void chunk_gather(const struct span *span, struct chunk chunk, const REAL *number, wide *g,
-                         const size_t registers)
+/* g += sum over the cells of a group of number_c row_c */
+INLINE void numbers_gather(const struct sweep_rows *rows, const uint32_t *across, const REAL *number, wide *g,
+                           const size_t registers)
 {
-    for (size_t c = 0; c < chunk.count; c += GROUP) {
-        const REAL *row[GROUP];
-        vec each[GROUP];
-        group_find(&span->right, chunk.across + c, row);
-        for (size_t part = 0; part < GROUP; part += SPREAD)
-            numbers_spread(number + c + part, each + part);
-        rows_gather(each, row, g, registers);
-    }
+    const REAL *row[GROUP];
+    vec each[GROUP];
+    group_find(rows, across, row);
+    for (size_t part = 0; part < GROUP; part += SPREAD)
+        numbers_spread(number + part, each + part);
+    rows_gather(each, row, g, registers);
 }
 
 /* Zeros for the cells of a group that are not there. */
@@ -381,13 +385,22 @@ INLINE bool rows_are_close(const struct sweep_job *job)
 INLINE void residual_group(const struct span *span, uint64_t k, struct chunk chunk, size_t c, const vec *l,
                            const REAL *row[GROUP], cells *r, const size_t registers)
 {
-    vec s[GROUP] = {{0}};
+    vec s[GROUP];
     span_prefetch(span, k + c, false, registers);
     group_find(&span->right, chunk.across + c, row);
-    rows_dot(l, row, s, registers);
+    rows_dot(l, row, false, s, registers);
     sum_each(s, r);
     *r -= *(const cells *)(chunk.values + c);
     group_cut(r, chunk.count - c);
+}
+
+INLINE void group_store(const cells *number, size_t left, REAL *to)
+{
+    if (left >= GROUP)
+        *(cells *)to = *number;
+    else
+        for (size_t c = 0; c < left; c++)
+            to[c] = (*number)[c];
 }
 
 INLINE void group_gather(const cells *r, const REAL *const row[GROUP], wide *g, const size_t registers)
@@ -400,13 +413,15 @@ INLINE void group_gather(const cells *r, const REAL *const row[GROUP], wide *g, 
 
 /* number_c = l . row_c - value_c, and the gradient, unless g is NULL. */
 INLINE void chunk_residual(const struct span *span, uint64_t k, struct chunk chunk, const vec *l, wide *g, REAL *number,
-                           squares *square, squares *absolute, const size_t registers)
+                           squares *square, squares *absolute, const bool kept, const size_t registers)
 {
     for (size_t c = 0; c < chunk.count; c += GROUP) {
         const REAL *row[GROUP];
         cells r;
         residual_group(span, k, chunk, c, l, row, &r, registers);
         *(cells *)(number + c) = r;
+        if (kept)
+            group_store(&r, chunk.count - c, span->residual + k + c);
         squares_add(square, &r, &r);
         for (int part = 0; absolute != NULL && part < WIDES; part++) /* without its sign */
             absolute[part] += (squares)((squares_bits)WIDEN(r, part) & INT64_MAX);
@@ -415,33 +430,23 @@ INLINE void chunk_residual(const struct span *span, uint64_t k, struct chunk chu
     }
 }
 
-INLINE void numbers_store(const REAL *number, size_t count, REAL *to)
-{
-    size_t c = 0;
-    for (; c + GROUP <= count; c += GROUP)
-        *(cells *)(to + c) = *(const cells *)(number + c);
-    for (; c < count; c++)
-        to[c] = number[c];
-}
-
 /* All chunks of a line. */
 INLINE void residual_line(const struct span *span, uint64_t k, uint64_t end, const vec *l, wide *g, squares *square,
-                          squares *absolute, const size_t registers)
+                          squares *absolute, const bool kept, const size_t registers)
 {
-    numbers r;
+    REAL r[CHUNK + GROUP];
     struct chunk chunk;
     struct chunk_room room;
     for (; k < end; k += chunk.count) {
         chunk = chunk_find(span, k, end, &room, registers);
-        chunk_residual(span, k, chunk, l, TWO_PASSES(registers) ? NULL : g, r, square, absolute, registers);
-        if (span->residual != NULL)
-            numbers_store(r, chunk.count, span->residual + k);
+        chunk_residual(span, k, chunk, l, TWO_PASSES(registers) ? NULL : g, r, square, absolute, kept, registers);
         if (g != NULL && TWO_PASSES(registers))
-            chunk_gather(span, chunk, r, g, registers);
+            for (size_t c = 0; c < chunk.count; c += GROUP)
+                numbers_gather(&span->right, chunk.across + c, r + c, g, registers);
     }
 }
 
-INLINE void residual_lines(const struct sweep_job *job, size_t block, double *out, const bool gradient,
+INLINE void residual_lines(const struct sweep_job *job, size_t block, double *out, const bool gradient, const bool kept,
                            const size_t registers, const size_t stride)
 {
     struct span span = span_of(job, block, stride);
@@ -450,10 +455,12 @@ INLINE void residual_lines(const struct sweep_job *job, size_t block, double *ou
         vec l[MOST_REGISTERS];
         wide g[MOST_REGISTERS * WIDES];
         row_load(&job->left, line, l, registers);
+        if (line + 1 < span.last)
+            left_prefetch(&job->left, line + 1, registers);
         if (gradient)
-            product_begin(job, line, g, registers);
+            product_begin(job, line, span.last, g, registers);
         residual_line(&span, span.start[line], span.start[line + 1], l, gradient ? g : NULL, square,
-                      gradient ? NULL : absolute, registers);
+                      gradient ? NULL : absolute, kept, registers);
         if (gradient)
             product_store(job, line, g, registers);
     }
@@ -464,12 +471,20 @@ INLINE void residual_lines(const struct sweep_job *job, size_t block, double *ou
 static void residual_block(const struct sweep_job *job, size_t block, size_t worker, double sums[SWEEP_SUMS])
 {
     (void)worker;
-    if (job->product.data != NULL) {
-#define LINES(registers, stride) residual_lines(job, block, sums, true, registers, stride)
+    if (job->product.data != NULL && job->residual == NULL) {
+#define LINES(registers, stride) residual_lines(job, block, sums, true, false, registers, stride)
+        REGISTERS_SWITCH
+#undef LINES
+    } else if (job->product.data != NULL) {
+#define LINES(registers, stride) residual_lines(job, block, sums, true, true, registers, stride)
+        REGISTERS_SWITCH
+#undef LINES
+    } else if (job->residual != NULL) {
+#define LINES(registers, stride) residual_lines(job, block, sums, false, true, registers, stride)
         REGISTERS_SWITCH
 #undef LINES
     } else {
-#define LINES(registers, stride) residual_lines(job, block, sums, false, registers, stride)
+#define LINES(registers, stride) residual_lines(job, block, sums, false, false, registers, stride)
         REGISTERS_SWITCH
 #undef LINES
     }
@@ -478,24 +493,34 @@ static void residual_block(const struct sweep_job *job, size_t block, size_t wor
 /* ---- product with given values ------------------------------------------------------------------------------------
  */
 
+INLINE void multiply_line(const struct span *span, uint64_t k, uint64_t end, wide *g, const size_t registers)
+{
+    struct chunk chunk;
+    struct chunk_room room;
+    for (; k < end; k += chunk.count) {
+        size_t c = 0;
+        chunk = chunk_find(span, k, end, &room, registers);
+        for (; c + GROUP <= chunk.count; c += GROUP) {
+            span_prefetch(span, k + c, false, registers);
+            numbers_gather(&span->right, chunk.across + c, chunk.values + c, g, registers);
+        }
+        if (c < chunk.count) {
+            REAL number[GROUP];
+            cells x = *(const cells *)(chunk.values + c);
+            group_cut(&x, chunk.count - c);
+            *(cells *)number = x;
+            numbers_gather(&span->right, chunk.across + c, number, g, registers);
+        }
+    }
+}
+
 INLINE void multiply_lines(const struct sweep_job *job, size_t block, const size_t registers, const size_t stride)
 {
     struct span span = span_of(job, block, stride);
     for (uint32_t line = span.line; line < span.last; line++) {
         wide g[MOST_REGISTERS * WIDES];
-        numbers x;
-        struct chunk chunk;
-        struct chunk_room room;
-        product_begin(job, line, g, registers);
-        for (uint64_t k = span.start[line], end = span.start[line + 1]; k < end; k += chunk.count) {
-            chunk = chunk_find(&span, k, end, &room, registers);
-            for (size_t c = 0; c < chunk.count; c += GROUP) {
-                span_prefetch(&span, k + c, false, registers);
-                *(cells *)(x + c) = *(const cells *)(chunk.values + c);
-            }
-            numbers_end(x, chunk.count);
-            chunk_gather(&span, chunk, x, g, registers);
-        }
+        product_begin(job, line, span.last, g, registers);
+        multiply_line(&span, span.start[line], span.start[line + 1], g, registers);
         product_store(job, line, g, registers);
     }
 }
@@ -523,17 +548,21 @@ INLINE void tangent_lines(const struct sweep_job *job, size_t block, double *out
         struct chunk_room room;
         row_load(&job->left, line, l, registers);
         row_load(&job->a, line, a, registers);
+        if (line + 1 < span.last) {
+            left_prefetch(&job->left, line + 1, registers);
+            left_prefetch(&job->a, line + 1, registers);
+        }
         for (uint64_t k = span.start[line], end = span.start[line + 1]; k < end; k += chunk.count) {
             chunk = chunk_find(&span, k, end, &room, registers);
             for (size_t c = 0; c < chunk.count; c += GROUP) {
-                vec s[GROUP] = {{0}};
+                vec s[GROUP];
                 cells z, r = *(const cells *)(chunk.values + c);
                 span_prefetch(&span, k + c, true, registers);
                 const REAL *row[GROUP];
                 group_find(&span.right, chunk.across + c, row);
-                rows_dot(a, row, s, registers);
+                rows_dot(a, row, false, s, registers);
                 group_find(&span.b, chunk.across + c, row);
-                rows_dot(l, row, s, registers);
+                rows_dot(l, row, true, s, registers);
                 sum_each(s, &z);
                 group_cut(&z, chunk.count - c);
                 group_cut(&r, chunk.count - c);
