@@ -17,11 +17,14 @@
 #include <stdatomic.h>
 #include <string.h>
 
+/* Of each direction: pieces so small that a cache holds one while it is told of and looked at; and runs of them for one
+   worker, since what is told of a piece brings much of the next ones into its cache. */
+enum { PIECES = 256, PIECES_A_RUN = 4, RUNS = PIECES / PIECES_A_RUN };
+
 struct check {
     const struct cells *cells;
     const struct pack_watch *watch;
     enum vectors vectors;
-    size_t pieces; /* of each direction */
     struct pack_key key;
     _Atomic uint64_t sum[2];
     _Atomic unsigned faults; /* bits by enum fault */
@@ -52,22 +55,18 @@ static void lines_tell(const struct check *check, const struct pack_lines *lines
                        (const char *)half->value + to * size);
 }
 
-static void piece_check(void *job, size_t piece, size_t worker)
+static void piece_check(struct check *check, bool is_column, uint64_t piece)
 {
-    struct check *check = job;
-    const bool is_column = piece >= check->pieces;
     const struct half *half = is_column ? &check->cells->by_column : &check->cells->by_row;
-    const uint64_t part = piece % check->pieces;
     const struct pack_lines lines = {
         .half = half,
         .precision = check->cells->precision,
         .is_column = is_column,
-        .first = (uint32_t)(half->lines * part / check->pieces),
-        .end = (uint32_t)(half->lines * (part + 1) / check->pieces),
+        .first = (uint32_t)(half->lines * piece / PIECES),
+        .end = (uint32_t)(half->lines * (piece + 1) / PIECES),
         .key = &check->key,
     };
     uint64_t sum;
-    (void)worker;
     if (!pack_offsets_ascend(&lines) || half->start[lines.end] > check->cells->count) {
         fault_set(check, FAULT_OFFSETS);
         return;
@@ -76,6 +75,13 @@ static void piece_check(void *job, size_t piece, size_t worker)
     if (!pack_lines_look(&lines, check->vectors, &sum))
         fault_set(check, FAULT_POSITIONS);
     atomic_fetch_add(&check->sum[is_column], sum);
+}
+
+static void run_check(void *job, size_t run, size_t worker)
+{
+    (void)worker;
+    for (uint64_t k = 0; k < PIECES_A_RUN; k++)
+        piece_check(job, run >= RUNS, run % RUNS * PIECES_A_RUN + k);
 }
 
 /* By a seed that whoever made the file cannot know: where we lie, and when. */
@@ -93,13 +99,13 @@ static void key_draw(struct check *check)
 const char *pack_check_cells(fescue_context *context, const struct cells *cells, const struct pack_watch *watch,
                              enum vectors vectors)
 {
-    struct check check = {.cells = cells, .watch = watch, .vectors = vectors, .pieces = CELLS_MOST_BLOCKS};
+    struct check check = {.cells = cells, .watch = watch, .vectors = vectors};
     const struct half *rows = &cells->by_row, *columns = &cells->by_column;
     if (rows->start[0] != 0 || rows->start[rows->lines] != cells->count || columns->start[0] != 0 ||
         columns->start[columns->lines] != cells->count)
         return fault_texts[FAULT_OFFSETS];
     key_draw(&check);
-    team_run(context, 2 * check.pieces, piece_check, &check);
+    team_run(context, 2 * (size_t)RUNS, run_check, &check);
     unsigned faults = atomic_load(&check.faults);
     if (faults == 0 && check.sum[0] != check.sum[1])
         faults = 1u << FAULT_DIFFERENCE;
