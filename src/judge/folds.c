@@ -11,9 +11,9 @@
  * learns from nothing (cold) where at least half of the shaped ones can: from the fit on all cells (warm) it is several
  * times quicker, but components that hang together over long gaps keep something of what is hidden.
  *
- * A large table has one scattered fold, and the choice has learnt and been judged by one already, from nothing: where
- * its hold-out is handed in, that is the fold. The few fits among which it chose differ by far more than the mean over
- * so many hidden cells does by chance.
+ * A large table has one scattered fold, or none that can be afforded, and the choice has learnt and been judged by one
+ * already, from nothing: where its hold-out is handed in, that is the fold. The few fits among which it chose differ by
+ * far more than the mean over so many hidden cells does by chance.
  *
  * The folds run one after another and their fits are parallel inside, so the bits do not depend on the number of
  * workers.
@@ -164,7 +164,7 @@ fescue_status folds_run(fescue_context *context, const struct judge_request *req
     scattered = judgement->scattered_folds;
     all = scattered + judgement->shaped_folds;
     judgement->scattered_folds = judgement->shaped_folds = 0;
-    if (request->held != NULL && scattered == 1 && all == 1 && judgement->tracks == NULL) {
+    if (request->held != NULL && scattered <= 1 && all == scattered && judgement->tracks == NULL) {
         judgement->scattered_folds = 1;
         judgement->is_warm = false;
         return held_judge(context, request, judgement, pool);

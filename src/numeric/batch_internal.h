@@ -12,11 +12,13 @@
    nearest cache of 32 KB for the sums. */
 enum { BATCH_STRETCH = 48 };
 /* Cells ahead of which moments in halves are asked for: some hundred nanoseconds. */
-enum { BATCH_AHEAD = 8 };
+enum { BATCH_AHEAD = 16 };
 /* Numbers in a block of halves: a line of the caches. */
 enum { BATCH_BLOCK = 16 };
 struct batch_stretch {
     size_t count;
+    bool is_far; /* halves lie in main memory: they are asked into the second cache, which can wait for more of them at
+                    once than the first */
     size_t offset[BATCH_STRETCH + BATCH_AHEAD]; /* of the position's moment, in doubles; of halves, in words, and of
                                                    the cells ahead */
     double factor[BATCH_STRETCH];               /* its weight c */

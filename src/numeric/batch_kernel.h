@@ -107,7 +107,7 @@ INLINE size_t halves_at(size_t v)
 }
 
 INLINE void halves_tile(const uint64_t *data, const struct batch_stretch *stretch, const double *factor, double *sum,
-                        double *target, const size_t blocks, const size_t pulled)
+                        double *target, const size_t blocks, const size_t pulled, const bool is_far)
 {
     vec total[HALVES_MOST * BLOCK_SUMS], also[HALVES_PULLED * BLOCK_SUMS + 1];
     for (size_t v = 0; v < blocks * BLOCK_SUMS; v++)
@@ -118,7 +118,10 @@ INLINE void halves_tile(const uint64_t *data, const struct batch_stretch *stretc
         const uint64_t *moment = data + stretch->offset[c], *ahead = data + stretch->offset[c + BATCH_AHEAD];
         vec share = splat(factor[c]), pull = splat(stretch->pull[c]);
         for (size_t b = 0; b < blocks; b++)
-            __builtin_prefetch(ahead + b * 8);
+            if (is_far)
+                __builtin_prefetch(ahead + b * 8, 0, 2);
+            else
+                __builtin_prefetch(ahead + b * 8, 0, 3);
         for (size_t v = 0; v < blocks * BLOCK_SUMS; v += 2) {
             vec_bits word = *(const vec_bits *)(moment + v / 2 * LANES);
             vec high = (vec)word, low = (vec)(word << 32);
@@ -140,10 +143,14 @@ INLINE void halves_tile(const uint64_t *data, const struct batch_stretch *stretc
     case n:                                                                                                            \
         if (HALVES_MOST < n)                                                                                           \
             break;                                                                                                     \
-        if (HALVES_PULLED > 0 && n > 1 && target != NULL)                                                              \
-            halves_tile(data, stretch, factor, sum, target, n, HALVES_PULLED);                                         \
+        if (HALVES_PULLED > 0 && n > 1 && target != NULL && stretch->is_far)                                           \
+            halves_tile(data, stretch, factor, sum, target, n, HALVES_PULLED, true);                                   \
+        else if (HALVES_PULLED > 0 && n > 1 && target != NULL)                                                         \
+            halves_tile(data, stretch, factor, sum, target, n, HALVES_PULLED, false);                                  \
+        else if (stretch->is_far)                                                                                      \
+            halves_tile(data, stretch, factor, sum, NULL, n, 0, true);                                                 \
         else                                                                                                           \
-            halves_tile(data, stretch, factor, sum, NULL, n, 0);                                                       \
+            halves_tile(data, stretch, factor, sum, NULL, n, 0, false);                                                \
         break;
 
 static void halves_tile_any(const uint64_t *data, const struct batch_stretch *stretch, const double *factor,

@@ -20,7 +20,7 @@
  * positions there is nothing to share, and each goes through its cells alone, asking for those 48 cells ahead.
  *
  * In halves (moments_halves.c) there is half as much to read, and each line goes through its cells alone, up to 176
- * numbers at once, whose sums stay in registers where there are enough of them, asking for those eight cells ahead.
+ * numbers at once, whose sums stay in registers where there are enough of them, asking for those 16 cells ahead.
  *
  * Either way the sums of a line run over its cells in order: the bits depend on the instruction set only in that some
  * round products before they are added, and on the number of threads not at all.
@@ -33,6 +33,9 @@ enum { TILE_NUMBERS = 64, PREFETCH_EACH = BATCH_STRETCH / BATCH_LANES };
 
 /* Lines that see a quarter of the positions share each of these between two of eight. */
 enum { SHARED_FROM = 4 };
+
+/* Of all positions' halves: what the third cache surely holds. */
+enum { FAR_BYTES = 16 << 20 };
 
 struct gather {
     const struct moments *moments;
@@ -191,7 +194,7 @@ static void lines_gather_halves(const struct gather *gather)
     const struct moments *moments = gather->moments;
     const struct half *half = gather->half;
     size_t d = moments->regressors, blocks = moments_words(d) / 8;
-    struct batch_stretch stretch;
+    struct batch_stretch stretch = {.is_far = half->length * moments_words(d) * sizeof(uint64_t) > FAR_BYTES};
     for (size_t lane = 0; lane < gather->count; lane++) {
         uint64_t k = half->start[gather->first + lane], end = half->start[gather->first + lane + 1];
         double *second = gather->second + lane * gather->stride,
