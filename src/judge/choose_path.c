@@ -32,6 +32,17 @@ static bool is_larger_better(const struct chooser *chooser, const struct candida
     return candidate_beats(chooser, large, small, is_plain ? over_less : over_nothing);
 }
 
+/* The spectral start in the place of the candidate's point. */
+static fescue_status start_afresh(struct chooser *chooser, size_t rank, struct candidate *candidate)
+{
+    fescue_status status = FESCUE_OK;
+    TRY(chooser_take_up(chooser, candidate));
+    low_rank_free(chooser->context, &candidate->point);
+    TRY(start_spectral(&chooser->problem, rank, (uint64_t)chooser->options->seed, &candidate->point));
+done:
+    return status;
+}
+
 fescue_status path_challenge(struct chooser *chooser, const struct solve_limits *limits, struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
@@ -39,9 +50,7 @@ fescue_status path_challenge(struct chooser *chooser, const struct solve_limits 
     if (chooser_is_late(chooser))
         goto done;
     TRY(candidate_copy(chooser, candidate, &rival));
-    TRY(chooser_take_up(chooser, &rival));
-    low_rank_free(chooser->context, &rival.point);
-    TRY(start_spectral(&chooser->problem, candidate->point.rank, (uint64_t)chooser->options->seed, &rival.point));
+    TRY(start_afresh(chooser, candidate->point.rank, &rival));
     TRY(candidate_fit(chooser, candidate->ridge, limits, &rival));
     if (rival.errors.rmse < candidate->errors.rmse * (1 - gain_worth))
         candidate_swap(&rival, candidate);
@@ -163,13 +172,23 @@ done:
     return status;
 }
 
-/* On the way to a given rank of a large table: few iterations, which lay a component down for the fits after it to go
-   on from, and a ridge that is only let down. */
+/* From the spectral start a fit has further to go than from the rank below: with the loose limit it would end while
+   offsets beside it still do a part of its work. */
+static const double fresh_change = 1e-4;
+
+/* To a given rank of a large table: where cells abound the spectral start leads there at once. Where they are scarce,
+   rank by rank with few iterations, which lay a component down for the fits after it to go on from, and a ridge that is
+   only let down. */
 static fescue_status climb_briefly(struct chooser *chooser, size_t rank, struct candidate *candidate)
 {
     fescue_status status = FESCUE_OK;
     struct solve_limits loose = chooser_loose_limits(chooser), brief = loose;
     brief.iterations = brief.iterations < 5 ? brief.iterations : 5;
+    if (!is_scarce(chooser, rank)) {
+        loose.change = fresh_change;
+        TRY(start_afresh(chooser, rank, candidate));
+        candidate->ridge = ridge_of(chooser, candidate);
+    }
     while (candidate->point.rank < rank) {
         TRY(path_grow(chooser, &brief, candidate));
         TRY(ridge_lower(chooser, &brief, candidate));
