@@ -92,38 +92,63 @@ void sweep_destroy(struct sweep *sweep)
 /* ---- factors as the kernels see them
  * --------------------------------------------------------------------------------- */
 
+enum { FACTORS_MOST = 4, COPY_LINES = 512 }; /* lines of a piece for one worker: some microseconds */
+
 struct copy_job {
-    struct matrix from;
-    float *to;
-    size_t width, each;
+    struct matrix from[FACTORS_MOST];
+    float *to[FACTORS_MOST];
+    size_t first[FACTORS_MOST + 1]; /* of each factor's pieces */
+    size_t width;
 };
-enum { COPY_LINES = 4096 }; /* a piece for one worker */
+
+/* to <- from; the zeros behind a row go along. */
+NUMERIC_VERSIONS static void rows_round(const double *from, size_t stride, size_t lines, size_t width, float *to)
+{
+    for (size_t i = 0; i < lines; i++)
+        for (size_t j = 0; j < width; j++)
+            to[i * width + j] = (float)from[i * stride + j];
+}
 
 static void piece_copy(void *argument, size_t piece, size_t worker)
 {
     const struct copy_job *job = argument;
-    size_t last = (piece + 1) * COPY_LINES < job->from.rows ? (piece + 1) * COPY_LINES : job->from.rows;
+    size_t f = 0;
     (void)worker;
-    for (size_t i = piece * COPY_LINES; i < last; i++) {
-        const double *from = &MATRIX_AT(job->from, i, 0);
-        float *to = job->to + i * job->width;
-        for (size_t j = 0; j < job->from.columns; j++)
-            to[j] = (float)from[j];
-        memset(to + job->from.columns, 0, (job->width - job->from.columns) * sizeof *to);
-    }
+    while (piece >= job->first[f + 1])
+        f++;
+    const struct matrix *from = &job->from[f];
+    size_t line = (piece - job->first[f]) * COPY_LINES;
+    size_t lines = from->rows - line < COPY_LINES ? from->rows - line : COPY_LINES;
+    const double *rows = &MATRIX_AT(*from, line, 0);
+    float *to = job->to[f] + line * job->width;
+    if (from->stride == job->width)
+        rows_round(rows, 0, 1, lines * job->width, to);
+    else
+        rows_round(rows, from->stride, lines, job->width, to);
 }
 
-struct sweep_rows sweep_rows_of(struct sweep *sweep, struct matrix matrix, size_t width, size_t *room)
+/* Makes factors what a kernel sees: themselves, or their copies in single precision, all made in one round. */
+static void factors_open(const struct sweep_job *job, size_t count, const struct matrix *factor,
+                         struct sweep_rows *const *rows)
 {
-    if (sweep->precision == FESCUE_DOUBLE) {
-        assert(matrix.stride >= width);
-        return (struct sweep_rows){.data = matrix.data, .stride = matrix.stride};
+    struct sweep *sweep = job->sweep;
+    struct copy_job copy = {.width = job->width};
+    float *room = sweep->pool;
+    assert(count <= FACTORS_MOST);
+    for (size_t f = 0; f < count; f++) {
+        assert(factor[f].stride >= job->width);
+        *rows[f] = (struct sweep_rows){.data = factor[f].data, .stride = factor[f].stride};
+        if (sweep->precision == FESCUE_DOUBLE)
+            continue;
+        copy.from[f] = factor[f];
+        copy.to[f] = room;
+        copy.first[f + 1] = copy.first[f] + (factor[f].rows + COPY_LINES - 1) / COPY_LINES;
+        *rows[f] = (struct sweep_rows){.data = room, .stride = job->width};
+        room += factor[f].rows * job->width;
     }
-    struct copy_job job = {.from = matrix, .to = sweep->pool + *room, .width = width};
-    *room += matrix.rows * width;
-    assert(*room <= sweep->pool_size);
-    team_run(sweep->context, (matrix.rows + COPY_LINES - 1) / COPY_LINES, piece_copy, &job);
-    return (struct sweep_rows){.data = job.to, .stride = width};
+    assert(room <= sweep->pool + sweep->pool_size);
+    if (sweep->precision == FESCUE_SINGLE)
+        team_run(sweep->context, copy.first[count], piece_copy, &copy);
 }
 
 /* ---- running
@@ -173,10 +198,8 @@ void sweep_residual(struct sweep *sweep, const struct half *half, struct matrix 
 {
     struct sweep_job job = job_open(sweep, half, right);
     double sums[SWEEP_SUMS];
-    size_t room = 0;
     assert(left.rows == half->lines && left.columns == right.columns);
-    job.left = sweep_rows_of(sweep, left, job.width, &room);
-    job.right = sweep_rows_of(sweep, right, job.width, &room);
+    factors_open(&job, 2, (const struct matrix[]){left, right}, (struct sweep_rows *const[]){&job.left, &job.right});
     job.product = gradient;
     job.residual = residual;
     sweep_slabs_run(&job, job_kernel(&job)->residual, sums);
@@ -188,10 +211,8 @@ void sweep_errors(struct sweep *sweep, const struct half *half, struct matrix le
 {
     struct sweep_job job = job_open(sweep, half, right);
     double sums[SWEEP_SUMS];
-    size_t room = 0;
     assert(left.rows == half->lines && left.columns == right.columns);
-    job.left = sweep_rows_of(sweep, left, job.width, &room);
-    job.right = sweep_rows_of(sweep, right, job.width, &room);
+    factors_open(&job, 2, (const struct matrix[]){left, right}, (struct sweep_rows *const[]){&job.left, &job.right});
     sweep_slabs_run(&job, job_kernel(&job)->residual, sums);
     *square = sums[0];
     *absolute = sums[1];
@@ -202,9 +223,8 @@ void sweep_multiply(struct sweep *sweep, const struct half *half, const void *va
 {
     struct sweep_job job = job_open(sweep, half, right);
     double sums[SWEEP_SUMS];
-    size_t room = 0;
     assert(product.rows == half->lines && product.columns == right.columns);
-    job.right = sweep_rows_of(sweep, right, job.width, &room);
+    factors_open(&job, 1, &right, (struct sweep_rows *const[]){&job.right});
     job.values = values;
     job.product = product;
     sweep_slabs_run(&job, job_kernel(&job)->multiply, sums);
@@ -215,12 +235,9 @@ void sweep_tangent(struct sweep *sweep, const struct half *half, struct matrix a
 {
     struct sweep_job job = job_open(sweep, half, right);
     double sums[SWEEP_SUMS];
-    size_t room = 0;
     assert(left.rows == half->lines && a.rows == half->lines && b.rows == half->length);
-    job.left = sweep_rows_of(sweep, left, job.width, &room);
-    job.right = sweep_rows_of(sweep, right, job.width, &room);
-    job.a = sweep_rows_of(sweep, a, job.width, &room);
-    job.b = sweep_rows_of(sweep, b, job.width, &room);
+    factors_open(&job, 4, (const struct matrix[]){left, right, a, b},
+                 (struct sweep_rows *const[]){&job.left, &job.right, &job.a, &job.b});
     job.values = residual;
     sweep_run(&job, job_kernel(&job)->tangent, sums);
     *zr = sums[0];
@@ -232,9 +249,8 @@ void sweep_solve(struct sweep *sweep, const struct half *half, struct matrix rig
 {
     struct sweep_job job = job_open(sweep, half, right);
     double sums[SWEEP_SUMS];
-    size_t room = 0;
     assert(weights.rows == half->lines && weights.columns == right.columns);
-    job.right = sweep_rows_of(sweep, right, job.width, &room);
+    factors_open(&job, 1, &right, (struct sweep_rows *const[]){&job.right});
     job.product = weights;
     job.ridge = ridge;
     job.factors = factors;

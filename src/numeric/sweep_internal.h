@@ -63,9 +63,6 @@ struct sweep_slabs {
 void sweep_slabs_run(struct sweep_job *job, sweep_block *kernel, double sums[SWEEP_SUMS]);
 void sweep_slabs_free(struct sweep *sweep);
 
-/* Makes `matrix` what a kernel sees: itself, or its copy in single precision at `*room` of the sweep's pool, which is
-   moved on. Zeros stand behind the columns in a copy; in double they are the caller's duty. */
-struct sweep_rows sweep_rows_of(struct sweep *sweep, struct matrix matrix, size_t width, size_t *room);
 /* Width of the job's rows for factors of this rank. */
 size_t sweep_width(const struct sweep *sweep, size_t rank);
 
