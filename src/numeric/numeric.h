@@ -121,8 +121,8 @@ void sweep_residual(struct sweep *sweep, const struct half *half, struct matrix 
  */
 void sweep_multiply(struct sweep *sweep, const struct half *half, const void *values, struct matrix right,
                     struct matrix product);
-/* z_k = a_i . right_j + left_i . b_j (a tangent step seen on the cells), residual r given in the half's order:
- *zr = sum z_k r_k, *zz = sum z_k^2. */
+/* z_k = a_i . right_j + left_i . b_j (a tangent step seen on the cells): *zz = sum z_k^2 and, with a residual r given
+   in the half's order, *zr = sum z_k r_k; both NULL where that is not wanted. */
 void sweep_tangent(struct sweep *sweep, const struct half *half, struct matrix a, struct matrix right,
                    struct matrix left, struct matrix b, const void *residual, double *zr, double *zz);
 /* Ridge least squares of every line on its own: w_i = argmin sum_j (w . right_j - x_ij)^2 + sum_k ridge_k w_k^2

@@ -238,9 +238,11 @@ void sweep_tangent(struct sweep *sweep, const struct half *half, struct matrix a
     assert(left.rows == half->lines && a.rows == half->lines && b.rows == half->length);
     factors_open(&job, 4, (const struct matrix[]){left, right, a, b},
                  (struct sweep_rows *const[]){&job.left, &job.right, &job.a, &job.b});
-    job.values = residual;
+    if (residual != NULL) /* or what is summed with the half's own values is not handed on */
+        job.values = residual;
     sweep_run(&job, job_kernel(&job)->tangent, sums);
-    *zr = sums[0];
+    if (residual != NULL)
+        *zr = sums[0];
     *zz = sums[1];
 }
 

@@ -7,7 +7,7 @@
  *
  *     symbol     name               shape
  *     U, S, V    point              m x r, r, n x r
- *     R          residual           one number a seen cell, in row order
+ *     R                             residual on the seen cells, made anew in every pass
  *     g          gradient           a tangent (M, Up, Vp): U M V' + Up V' + U Vp'
  *     D          direction          a tangent
  *     P          restriction to the seen cells
@@ -18,7 +18,7 @@
  *     2. D = -g + beta T(D_old), T the transport by projection, beta by Polak and Ribiere, never negative (Nocedal,
  *        Wright 2006, section 5.2). D = -g again when D is no clear descent.
  *     3. On the tangent the objective is a parabola, so the step there is exact:
- *            t = -(<P(D), R> + lambda <X, D>) / (|P(D)|^2 + lambda |D|^2),      <X, D> = sum_k s_k M_kk.
+ *            t = -<g, D> / (|P(D)|^2 + lambda |D|^2).
  *     4. X_new = the matrix of rank r nearest to X + t D. Armijo with backtracking guards it (line.c).
  *
  * Departures: the paper scales by 2/3 and halves the step on refusal; here the parabola through the refused value is
@@ -26,7 +26,7 @@
  * or zero, and both halves of the gradient have the relative precision of R.
  *
  * Cost an iteration: three passes over the cells (tangent, residual with R V, residual with R'U), 4r flops a cell each,
- * and O((m+n) r^2). Workspace: four tangents, two points, two scaled factors, two values a cell.
+ * and O((m+n) r^2). Workspace: four tangents, two points, two scaled factors; nothing a cell.
  *
  * Parallel in the passes and in all that goes over the lines; the same bits for any number of workers.
  */
@@ -44,7 +44,6 @@ struct fixed_rank_cg {
     struct fixed_rank_work work;
     struct fixed_rank_tangent gradient, trial_gradient, direction, moved;
     struct matrix scaled_left, scaled_right; /* U S, V S; scaled_left also holds a factor of the direction */
-    void *residual, *trial_residual;
     struct solve_measure measure, trial_measure;
     bool fresh; /* the direction is the negative gradient */
 };
@@ -77,23 +76,21 @@ static void cg_destroy(fescue_context *context, void **state)
     arena_close(context, &cg->arena);
     low_rank_free(context, &cg->point);
     low_rank_free(context, &cg->trial);
-    memory_give(context, &cg->residual);
-    memory_give(context, &cg->trial_residual);
     memory_give(context, state);
 }
 
 /* ---- the objective -------------------------------------------------------------------------------------------------
  */
 
-/* Residual, objective and the half R V of the gradient at the trial point. One pass. */
+/* Objective and the half R V of the gradient at the trial point. One pass. */
 static void trial_evaluate(struct fixed_rank_cg *cg)
 {
     struct low_rank *x = &cg->trial;
     struct solve_measure *measure = &cg->trial_measure;
     double size = 0;
     tall_copy(cg->work.context, x->left, x->spectrum, cg->scaled_left);
-    sweep_residual(&cg->field->sweep, field_rows(cg->field), cg->scaled_left, x->right, cg->trial_gradient.left,
-                   cg->trial_residual, &measure->square);
+    sweep_residual(&cg->field->sweep, field_rows(cg->field), cg->scaled_left, x->right, cg->trial_gradient.left, NULL,
+                   &measure->square);
     for (size_t k = 0; k < x->rank; k++)
         size += x->spectrum[k] * x->spectrum[k];
     measure->objective = 0.5 * measure->square + 0.5 * cg->field->problem->lambda * size;
@@ -118,13 +115,10 @@ static void trial_accept(struct fixed_rank_cg *cg)
 {
     struct low_rank point = cg->point;
     struct fixed_rank_tangent gradient = cg->gradient;
-    void *residual = cg->residual;
     cg->point = cg->trial;
     cg->trial = point;
     cg->gradient = cg->trial_gradient;
     cg->trial_gradient = gradient;
-    cg->residual = cg->trial_residual;
-    cg->trial_residual = residual;
     cg->measure = cg->trial_measure;
 }
 
@@ -146,8 +140,6 @@ static fescue_status cg_create(struct field *field, const struct low_rank *point
     TRY(sweep_arrange(&field->sweep, field_columns(field)));
     TRY(low_rank_copy(context, point, &cg->trial));
     TRY(low_rank_create(context, point->rows, point->columns, point->rank, &cg->point));
-    TRY(values_create(field, &cg->residual));
-    TRY(values_create(field, &cg->trial_residual));
     cg_reserve(&cg->arena, point);
     TRY(arena_open(context, &cg->arena));
     cg_carve(cg, point);
@@ -169,14 +161,11 @@ static void direction_measure(struct fixed_rank_cg *cg, double *slope, double *c
 {
     const struct low_rank *x = &cg->point;
     const struct fixed_rank_tangent *d = &cg->direction;
-    double lambda = cg->field->problem->lambda, along = 0;
     fixed_rank_pairs(&cg->work, x, d, cg->scaled_left);
-    sweep_tangent(&cg->field->sweep, field_rows(cg->field), cg->scaled_left, x->right, x->left, d->right, cg->residual,
-                  slope, curvature);
-    for (size_t k = 0; k < x->rank; k++)
-        along += x->spectrum[k] * MATRIX_AT(d->middle, k, k);
-    *slope += lambda * along;
-    *curvature += lambda * fixed_rank_inner(&cg->work, d, d);
+    sweep_tangent(&cg->field->sweep, field_rows(cg->field), cg->scaled_left, x->right, x->left, d->right, NULL, NULL,
+                  curvature);
+    *curvature += cg->field->problem->lambda * fixed_rank_inner(&cg->work, d, d);
+    *slope = fixed_rank_inner(&cg->work, &cg->gradient, d);
 }
 
 /* The direction for this iteration, carried over from the point before (which cg->trial still holds; its gradient is in

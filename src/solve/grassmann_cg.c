@@ -24,7 +24,7 @@
  * Departures: the remembered factor is ours. With lambda > 0 nothing changes: the ridge is on W alone.
  *
  * Cost an iteration: three passes (solve, residual with R W, tangent), and O(short r^2 + long r^2). Workspace: six
- * matrices of the shorter side, two of the longer, one value a cell. Parallel in the passes only.
+ * matrices of the shorter side, two of the longer. Parallel in the passes only.
  */
 #include "solve/solve_internal.h"
 
@@ -82,7 +82,6 @@ static void cg_destroy(fescue_context *context, void **state)
 static void cg_reserve(struct arena *arena, const struct field *field, size_t shorter, size_t longer, size_t rank)
 {
     projection_reserve(arena, field, rank);
-    values_reserve(arena, field);
     grassmann_reserve(arena, shorter, rank);
     for (int k = 0; k < 4; k++)
         matrix_reserve(arena, shorter, rank);
@@ -94,7 +93,6 @@ static void cg_carve(struct grassmann_cg *cg, struct field *field, const struct 
 {
     struct matrix *const of_short[] = {&cg->basis, &cg->gradient, &cg->descent, &cg->direction};
     projection_carve(&cg->arena, field, point, &cg->projection);
-    cg->projection.residual = values_carve(&cg->arena, field);
     const struct half *half = cg->projection.by_short;
     cg->work = grassmann_carve(field->problem->context, &cg->arena, half->lines, point->rank);
     for (int k = 0; k < 4; k++)
@@ -115,6 +113,7 @@ static fescue_status cg_create(struct field *field, const struct low_rank *point
     cg_reserve(&cg->arena, field, rows <= columns ? rows : columns, rows <= columns ? columns : rows, point->rank);
     TRY(arena_open(context, &cg->arena));
     cg_carve(cg, field, point);
+    TRY(sweep_arrange(&field->sweep, cg->projection.by_short));
     projection_evaluate(&cg->projection);
     point_measure(cg, 0);
     cg->factor = 1;
@@ -150,11 +149,10 @@ static fescue_status trial_evaluate(struct grassmann_cg *cg, const struct line *
 static fescue_status line_follow(struct grassmann_cg *cg, bool *moved)
 {
     struct projection *p = &cg->projection;
-    double slope = matrix_dot(p->gradient, cg->direction), along, held;
+    double slope = matrix_dot(p->gradient, cg->direction), held;
     fescue_status status = FESCUE_OK;
     *moved = false;
-    sweep_tangent(&p->field->sweep, p->by_short, cg->direction, p->weights, p->basis, cg->still, p->residual, &along,
-                  &held);
+    sweep_tangent(&p->field->sweep, p->by_short, cg->direction, p->weights, p->basis, cg->still, NULL, NULL, &held);
     if (!(slope < 0) || !(held > 0))
         return status;
     struct line line = line_start(p->field->problem, &cg->measure, slope);
