@@ -40,6 +40,7 @@ void gemm_double_run(void *none); /* GEMM_FLOPS each */
 void gemm_single_run(void *none);
 #define GEMM_FLOPS (2.0 * 768 * 768 * 768)
 
+void loading_measure(struct bench *bench, uint64_t cells);
 void kernels_measure(struct bench *bench, uint64_t cells, enum fescue_precision precision);
 void moments_measure(struct bench *bench, uint64_t cells);
 void fits_measure(struct bench *bench, uint64_t cells);

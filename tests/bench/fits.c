@@ -12,7 +12,7 @@
 #include <string.h>
 
 /* Iterations of a whole fit: far beyond where errors on hidden cells have settled. What takes longer is cut. */
-enum { ITERATIONS = 40, FIT_SECONDS = 60 };
+enum { ITERATIONS = 40, FIT_SECONDS = 20 };
 /* On X, per density: what shrinks a row as the sown noise and factors of variance 1/4 ask for, which have a ridge of 1
    on rows beside columns of that variance: 4 / columns, over the density, with 100 cells a row. */
 #define RIDGE 0.04

@@ -2,12 +2,9 @@
  *
  * How fast a table is loaded, beside what the machine allows in the same run.
  *
- *     bench_load [folder [cells]]          default: a folder of its own, 10000000
- *
  * The table is one of ratings, 100000 x 20000 at 1e7 cells, sides growing with the square root of the cells: 0.5 .. 5
  * by halves, rows of 20 to 180 % of the mean number of cells, the columns' popularity such that the first hundredth
- * holds a fifth of them. It is written as Matrix Market text, the same gzipped, as long text with labels, and packed;
- * files that the folder has already are used again.
+ * holds a fifth of them. It is written as Matrix Market text, the same gzipped, as long text with labels, and packed.
  *
  * Limits, all on one thread but the sorting:
  *     inflate   zlib over the gzipped file, from the page cache into one buffer
@@ -22,6 +19,8 @@
  * A virtual machine gives memory that is free back to its host, and then its next use costs several times as much,
  * whoever comes first; so before anything that takes memory is measured, as much is used and given back.
  */
+#include "figures.h"
+
 #include "table/table.h"
 
 #include <fcntl.h>
@@ -43,7 +42,7 @@ struct measure {
     int rounds;
 };
 
-struct bench {
+struct loading {
     char folder[PATH_SIZE];
     uint32_t rows, columns;
     uint64_t cells;
@@ -55,7 +54,7 @@ struct bench {
 
 static void fail(const char *what)
 {
-    fprintf(stderr, "bench_load: %s\n", what);
+    fprintf(stderr, "bench: %s\n", what);
     exit(1);
 }
 
@@ -67,9 +66,9 @@ static void *taken(size_t size)
     return block;
 }
 
-static const char *path_of(const struct bench *bench, enum form form, char path[PATH_SIZE])
+static const char *path_of(const struct loading *loading, enum form form, char path[PATH_SIZE])
 {
-    if (snprintf(path, PATH_SIZE, "%s/%s", bench->folder, form_files[form]) >= PATH_SIZE)
+    if (snprintf(path, PATH_SIZE, "%s/%s", loading->folder, form_files[form]) >= PATH_SIZE)
         fail("the name of the folder is too long");
     return path;
 }
@@ -85,45 +84,46 @@ static int positions_compare(const void *a, const void *b)
 
 /* u^2.86 puts the fifth of all draws into the first hundredth: 0.01^(1/2.86) = 0.2. Taken by cubes, since u^3 is near
    enough and needs no library. */
-static void row_draw(struct bench *bench, uint32_t i, uint64_t wanted, uint32_t *last_row)
+static void row_draw(struct loading *loading, uint32_t i, uint64_t wanted, uint32_t *last_row)
 {
     struct random_stream stream = random_open(1, RANDOM_TEST, i);
-    uint64_t first = bench->cells;
+    uint64_t first = loading->cells;
     for (uint64_t c = 0; c < wanted; c++) {
         double u = random_uniform(&stream);
-        uint32_t j = (uint32_t)(u * u * u * bench->columns);
+        uint32_t j = (uint32_t)(u * u * u * loading->columns);
         if (last_row[j] == i + 1)
             continue;
         last_row[j] = i + 1;
-        bench->row[bench->cells] = i;
-        bench->column[bench->cells] = j;
-        bench->value[bench->cells++] = 0.5f * (float)(1 + random_below(&stream, 10));
+        loading->row[loading->cells] = i;
+        loading->column[loading->cells] = j;
+        loading->value[loading->cells++] = 0.5f * (float)(1 + random_below(&stream, 10));
     }
-    qsort(bench->column + first, bench->cells - first, sizeof *bench->column, positions_compare);
+    qsort(loading->column + first, loading->cells - first, sizeof *loading->column, positions_compare);
 }
 
-static void table_draw(struct bench *bench, uint64_t cells)
+static void table_draw(struct loading *loading, uint64_t cells)
 {
     uint32_t *last_row;
     double side = 1;
     while (side * side * 1e7 < (double)cells)
         side *= 1.01;
-    bench->rows = (uint32_t)(100000 * side);
-    bench->columns = (uint32_t)(20000 * side);
+    loading->rows = (uint32_t)(100000 * side);
+    loading->columns = (uint32_t)(20000 * side);
     if (cells < 10000000) {
-        bench->rows = (uint32_t)(cells / 100 + 1);
-        bench->columns = bench->rows / 5 + 100;
+        loading->rows = (uint32_t)(cells / 100 + 1);
+        loading->columns = loading->rows / 5 + 100;
     }
     size_t room = (size_t)(2.2 * (double)cells) + 1000;
-    bench->row = taken(room * sizeof *bench->row);
-    bench->column = taken(room * sizeof *bench->column);
-    bench->value = taken(room * sizeof *bench->value);
-    last_row = calloc(bench->columns, sizeof *last_row);
+    loading->row = taken(room * sizeof *loading->row);
+    loading->column = taken(room * sizeof *loading->column);
+    loading->value = taken(room * sizeof *loading->value);
+    last_row = calloc(loading->columns, sizeof *last_row);
     if (last_row == NULL)
         fail("no memory");
-    for (uint32_t i = 0; i < bench->rows; i++) {
+    for (uint32_t i = 0; i < loading->rows; i++) {
         double share = 0.2 + 1.6 * random_uniform_at(1, RANDOM_TEST, 0, i);
-        row_draw(bench, i, (uint64_t)(1.12 * share * (double)cells / bench->rows), last_row); /* a tenth comes twice */
+        row_draw(loading, i, (uint64_t)(1.12 * share * (double)cells / loading->rows),
+                 last_row); /* a tenth comes twice */
     }
     free(last_row);
 }
@@ -131,27 +131,27 @@ static void table_draw(struct bench *bench, uint64_t cells)
 /* ---- the files ------------------------------------------------------------------------------------------------------
  */
 
-static void text_write(const struct bench *bench, const char *path)
+static void text_write(const struct loading *loading, const char *path)
 {
     FILE *out = fopen(path, "w");
     if (out == NULL)
         fail(path);
-    fprintf(out, "%%%%MatrixMarket matrix coordinate real general\n%u %u %llu\n", bench->rows, bench->columns,
-            (unsigned long long)bench->cells);
-    for (uint64_t k = 0; k < bench->cells; k++)
-        fprintf(out, "%u %u %g\n", bench->row[k] + 1, bench->column[k] + 1, (double)bench->value[k]);
+    fprintf(out, "%%%%MatrixMarket matrix coordinate real general\n%u %u %llu\n", loading->rows, loading->columns,
+            (unsigned long long)loading->cells);
+    for (uint64_t k = 0; k < loading->cells; k++)
+        fprintf(out, "%u %u %g\n", loading->row[k] + 1, loading->column[k] + 1, (double)loading->value[k]);
     if (fclose(out) != 0)
         fail(path);
 }
 
-static void long_write(const struct bench *bench, const char *path)
+static void long_write(const struct loading *loading, const char *path)
 {
     FILE *out = fopen(path, "w");
     if (out == NULL)
         fail(path);
     fputs("rater,item,value\n", out);
-    for (uint64_t k = 0; k < bench->cells; k++)
-        fprintf(out, "rater-%06u,item-%05u,%g\n", bench->row[k], bench->column[k], (double)bench->value[k]);
+    for (uint64_t k = 0; k < loading->cells; k++)
+        fprintf(out, "rater-%06u,item-%05u,%g\n", loading->row[k], loading->column[k], (double)loading->value[k]);
     if (fclose(out) != 0)
         fail(path);
 }
@@ -192,27 +192,23 @@ static void pack_write(const char *from, const char *to)
     fescue_context_destroy(&context);
 }
 
-static void files_make(const struct bench *bench)
+static void files_make(const struct loading *loading)
 {
     char text[PATH_SIZE], path[PATH_SIZE];
-    if (access(path_of(bench, FORM_TEXT, text), R_OK) != 0)
-        text_write(bench, text);
-    if (access(path_of(bench, FORM_GZIP, path), R_OK) != 0)
-        gzip_write(text, path);
-    if (access(path_of(bench, FORM_LONG, path), R_OK) != 0)
-        long_write(bench, path);
-    if (access(path_of(bench, FORM_PACK, path), R_OK) != 0)
-        pack_write(text, path);
+    text_write(loading, path_of(loading, FORM_TEXT, text));
+    gzip_write(text, path_of(loading, FORM_GZIP, path));
+    long_write(loading, path_of(loading, FORM_LONG, path));
+    pack_write(text, path_of(loading, FORM_PACK, path));
 }
 
 /* ---- memory -------------------------------------------------------------------------------------------------------
  */
 
 /* Uses as much memory as any load takes, in pages as large as there are, like the library (base/memory.c). */
-static void memory_warm(const struct bench *bench)
+static void memory_warm(const struct loading *loading)
 {
     enum { LARGE_PAGE = 1 << 21, BYTES_A_CELL = 40 };
-    size_t size = (bench->cells * BYTES_A_CELL / LARGE_PAGE + 1) * LARGE_PAGE;
+    size_t size = (loading->cells * BYTES_A_CELL / LARGE_PAGE + 1) * LARGE_PAGE;
     void *block = aligned_alloc(LARGE_PAGE, size);
     if (block == NULL)
         fail("no memory");
@@ -235,29 +231,29 @@ static struct clocks clocks_start(void)
 }
 
 /* Adds what went by since the start to the line of this name. */
-static void clocks_stop(struct bench *bench, struct clocks start, const char *name)
+static void clocks_stop(struct loading *loading, struct clocks start, const char *name)
 {
     double wall = clock_wall() - start.wall, cpu = clock_cpu() - start.cpu;
     int k = 0;
-    while (k < bench->lines && strcmp(bench->line[k].name, name) != 0)
+    while (k < loading->lines && strcmp(loading->line[k].name, name) != 0)
         k++;
-    if (k == bench->lines) {
-        if (bench->lines == MOST_LINES)
+    if (k == loading->lines) {
+        if (loading->lines == MOST_LINES)
             fail("too many lines");
-        snprintf(bench->line[bench->lines++].name, sizeof bench->line[k].name, "%s", name);
+        snprintf(loading->line[loading->lines++].name, sizeof loading->line[k].name, "%s", name);
     }
-    struct measure *measure = &bench->line[k];
+    struct measure *measure = &loading->line[k];
     measure->wall[measure->rounds] = wall;
     measure->cpu[measure->rounds++] = cpu;
 }
 
-static void inflate_measure(struct bench *bench)
+static void inflate_measure(struct loading *loading)
 {
     static unsigned char in[BUFFER], out[BUFFER];
     enum { GZIP = 15 + 16 };
     char path[PATH_SIZE];
     z_stream stream = {0};
-    int file = open(path_of(bench, FORM_GZIP, path), O_RDONLY);
+    int file = open(path_of(loading, FORM_GZIP, path), O_RDONLY);
     struct clocks start = clocks_start();
     if (file < 0 || inflateInit2(&stream, GZIP) != Z_OK)
         fail(path);
@@ -270,16 +266,16 @@ static void inflate_measure(struct bench *bench)
             inflate(&stream, Z_NO_FLUSH);
         } while (stream.avail_out == 0);
     }
-    clocks_stop(bench, start, "inflate");
+    clocks_stop(loading, start, "inflate");
     inflateEnd(&stream);
     close(file);
 }
 
-static void read_measure(struct bench *bench, enum form form, const char *name)
+static void read_measure(struct loading *loading, enum form form, const char *name)
 {
     static char buffer[BUFFER];
     char path[PATH_SIZE];
-    int file = open(path_of(bench, form, path), O_RDONLY);
+    int file = open(path_of(loading, form, path), O_RDONLY);
     if (file < 0)
         fail(path);
     while (read(file, buffer, sizeof buffer) >
@@ -289,11 +285,11 @@ static void read_measure(struct bench *bench, enum form form, const char *name)
     struct clocks start = clocks_start();
     while (read(file, buffer, sizeof buffer) > 0)
         ;
-    clocks_stop(bench, start, name);
+    clocks_stop(loading, start, name);
     close(file);
 }
 
-static void copy_measure(struct bench *bench)
+static void copy_measure(struct loading *loading)
 {
     enum { SIZE = 1 << 28 };
     char *from = taken(SIZE), *to = taken(SIZE);
@@ -302,53 +298,53 @@ static void copy_measure(struct bench *bench)
     void *(*volatile copy)(void *, const void *, size_t) = memcpy; /* not to be foreseen by the compiler */
     struct clocks start = clocks_start();
     copy(to, from, SIZE);
-    clocks_stop(bench, start, "copy of 268 MB");
+    clocks_stop(loading, start, "copy of 268 MB");
     if (to[SIZE / 2] != 1)
         fail("memcpy");
     free(from), free(to);
 }
 
-static void sort_measure(struct bench *bench, size_t workers)
+static void sort_measure(struct loading *loading, size_t workers)
 {
     fescue_context *context;
     struct cells cells;
-    struct triplet_list list = {.row = bench->row, .column = bench->column, .count = bench->cells};
+    struct triplet_list list = {.row = loading->row, .column = loading->column, .count = loading->cells};
     char name[64];
-    double *value = taken(bench->cells * sizeof *value);
-    for (uint64_t k = 0; k < bench->cells; k++)
-        value[k] = (double)bench->value[k];
+    double *value = taken(loading->cells * sizeof *value);
+    for (uint64_t k = 0; k < loading->cells; k++)
+        value[k] = (double)loading->value[k];
     list.value = value;
     if (fescue_context_create(NULL, &context) != FESCUE_OK || team_resize(context, workers) != FESCUE_OK)
         fail("no context");
-    memory_warm(bench);
+    memory_warm(loading);
     struct clocks start = clocks_start();
-    if (cells_build(context, bench->rows, bench->columns, &list, &cells) != FESCUE_OK)
+    if (cells_build(context, loading->rows, loading->columns, &list, &cells) != FESCUE_OK)
         fail(fescue_failure_text(context));
     snprintf(name, sizeof name, "sort, %zu", workers);
-    clocks_stop(bench, start, name);
+    clocks_stop(loading, start, name);
     cells_free(context, &cells);
     fescue_context_destroy(&context);
     free(value);
 }
 
-static void load_measure(struct bench *bench, enum form form, size_t workers)
+static void load_measure(struct loading *loading, enum form form, size_t workers)
 {
     static const char *const names[FORMS] = {"load .mtx.gz", "load .mtx", "load pack", "load long text"};
     char path[PATH_SIZE], name[64];
     fescue_context *context;
-    memory_warm(bench);
+    memory_warm(loading);
     struct clocks start = clocks_start();
-    fescue_table *table = load(path_of(bench, form, path), workers, &context);
+    fescue_table *table = load(path_of(loading, form, path), workers, &context);
     snprintf(name, sizeof name, "%s, %zu", names[form], workers);
-    clocks_stop(bench, start, name);
-    if (table->cells.count != bench->cells)
+    clocks_stop(loading, start, name);
+    if (table->cells.count != loading->cells)
         fail("cells are missing");
     table_destroy(&table);
     fescue_context_destroy(&context);
 }
 
 /* SciPy's reader, where there is one, once; zeros where there is none. */
-static struct clocks mmread_clocks(const struct bench *bench)
+static struct clocks mmread_clocks(const struct loading *loading)
 {
     const char *python = getenv("PYTHON");
     char path[PATH_SIZE], command[2 * PATH_SIZE];
@@ -356,7 +352,7 @@ static struct clocks mmread_clocks(const struct bench *bench)
     snprintf(command, sizeof command,
              "%s -c 'import time, scipy.io; w = time.perf_counter(); c = time.process_time(); scipy.io.mmread(\"%s\"); "
              "print(time.perf_counter() - w, time.process_time() - c)' 2>/dev/null",
-             python != NULL ? python : "/usr/bin/python3", path_of(bench, FORM_TEXT, path));
+             python != NULL ? python : "/usr/bin/python3", path_of(loading, FORM_TEXT, path));
     FILE *pipe = popen(command, "r");
     if (pipe != NULL && fscanf(pipe, "%lf %lf", &clocks.wall, &clocks.cpu) != 2)
         clocks = (struct clocks){0, 0};
@@ -368,28 +364,21 @@ static struct clocks mmread_clocks(const struct bench *bench)
 /* ---- what is told -------------------------------------------------------------------------------------------------
  */
 
-static int numbers_compare(const void *a, const void *b)
-{
-    double left = *(const double *)a, right = *(const double *)b;
-    return (left > right) - (left < right);
-}
-
 static double median(const double *numbers, int count)
 {
     double sorted[ROUNDS];
     memcpy(sorted, numbers, (size_t)count * sizeof *numbers);
-    qsort(sorted, (size_t)count, sizeof *sorted, numbers_compare);
-    return sorted[count / 2];
+    return bench_median(sorted, (size_t)count);
 }
 
-static const struct measure *line_of(const struct bench *bench, const char *name)
+static const struct measure *line_of(const struct loading *loading, const char *name)
 {
     int k = 0;
-    while (k < bench->lines && strcmp(bench->line[k].name, name) != 0)
+    while (k < loading->lines && strcmp(loading->line[k].name, name) != 0)
         k++;
-    if (k == bench->lines)
+    if (k == loading->lines)
         fail(name);
-    return &bench->line[k];
+    return &loading->line[k];
 }
 
 /* What stands over what, on the wall or in processors; the second measure below may be NULL. */
@@ -409,10 +398,10 @@ static const struct ratio ratios[] = {
     {"pack, 1 worker over 2", false, "load pack, 1", "load pack, 2", NULL, 1.8, true},
 };
 
-static double ratio_of(const struct bench *bench, const struct ratio *ratio)
+static double ratio_of(const struct loading *loading, const struct ratio *ratio)
 {
-    const struct measure *above = line_of(bench, ratio->above), *below = line_of(bench, ratio->below);
-    const struct measure *more = ratio->and_below != NULL ? line_of(bench, ratio->and_below) : NULL;
+    const struct measure *above = line_of(loading, ratio->above), *below = line_of(loading, ratio->below);
+    const struct measure *more = ratio->and_below != NULL ? line_of(loading, ratio->and_below) : NULL;
     double found[ROUNDS];
     for (int round = 0; round < ROUNDS; round++) {
         double limit = ratio->in_processors ? below->cpu[round] : below->wall[round];
@@ -423,79 +412,68 @@ static double ratio_of(const struct bench *bench, const struct ratio *ratio)
     return median(found, ROUNDS);
 }
 
-static void ratio_print(const char *what, double found, double asked, bool at_least)
+static void ratio_add(struct bench *bench, const char *what, double found, double asked, bool at_least)
 {
-    printf("%-66s %6.2f  (asked: at %s %.2f)\n", what, found, at_least ? "least" : "most", asked);
+    figure_add(bench, json_pack("{s:s, s:s, s:f, s:f}", "what", "loading", "ratio", what, "times", found,
+                                at_least ? "asked at least" : "asked at most", asked));
 }
 
-static void ratios_print(const struct bench *bench)
+static void ratios_add(struct bench *bench, const struct loading *loading)
 {
-    const struct measure *text = line_of(bench, "load .mtx, 2"), *alone = line_of(bench, "load .mtx, 1");
-    const struct clocks mmread = mmread_clocks(bench);
-    printf("\n");
+    const struct measure *text = line_of(loading, "load .mtx, 2");
+    const struct clocks mmread = mmread_clocks(loading);
     for (size_t k = 0; k < sizeof ratios / sizeof ratios[0]; k++)
-        ratio_print(ratios[k].what, ratio_of(bench, &ratios[k]), ratios[k].asked, ratios[k].at_least);
-    if (mmread.cpu > 0) {
-        ratio_print("SciPy mmread, wall, over .mtx on 2 workers", mmread.wall / median(text->wall, ROUNDS), 20, true);
-        printf("%-66s %6.2f\n", "    the same in processors, over 1 worker", mmread.cpu / median(alone->cpu, ROUNDS));
+        ratio_add(bench, ratios[k].what, ratio_of(loading, &ratios[k]), ratios[k].asked, ratios[k].at_least);
+    if (mmread.cpu > 0)
+        ratio_add(bench, "SciPy mmread over .mtx, 2 workers", mmread.wall / median(text->wall, ROUNDS), 20, true);
+}
+
+static void lines_add(struct bench *bench, const struct loading *loading)
+{
+    double cells = (double)loading->cells;
+    for (int k = 0; k < loading->lines; k++) {
+        const struct measure *measure = &loading->line[k];
+        double wall = median(measure->wall, measure->rounds), cpu = median(measure->cpu, measure->rounds);
+        figure_add(bench, json_pack("{s:s, s:s, s:I, s:f, s:f, s:f, s:f}", "what", "loading", "of", measure->name,
+                                    "cells", (json_int_t)loading->cells, "wall seconds", wall, "processor seconds", cpu,
+                                    "wall ns a cell", 1e9 * wall / cells, "processor ns a cell", 1e9 * cpu / cells));
     }
 }
 
-static void lines_print(const struct bench *bench)
+static void round_run(struct loading *loading)
 {
-    printf("%u x %u, %llu cells; medians of %d\n", bench->rows, bench->columns, (unsigned long long)bench->cells,
-           ROUNDS);
-    printf("%-24s %10s %10s %12s %12s\n", "", "wall s", "cpu s", "wall ns/cell", "cpu ns/cell");
-    for (int k = 0; k < bench->lines; k++) {
-        const struct measure *measure = &bench->line[k];
-        struct clocks line = {median(measure->wall, measure->rounds), median(measure->cpu, measure->rounds)};
-        printf("%-24s %10.3f %10.3f %12.1f %12.1f\n", bench->line[k].name, line.wall, line.cpu,
-               1e9 * line.wall / (double)bench->cells, 1e9 * line.cpu / (double)bench->cells);
-    }
+    copy_measure(loading);
+    load_measure(loading, FORM_GZIP, 1);
+    inflate_measure(loading);
+    load_measure(loading, FORM_GZIP, 2);
+    sort_measure(loading, 1);
+    load_measure(loading, FORM_TEXT, 1);
+    read_measure(loading, FORM_TEXT, "read .mtx");
+    sort_measure(loading, 2);
+    load_measure(loading, FORM_TEXT, 2);
+    read_measure(loading, FORM_PACK, "read pack");
+    load_measure(loading, FORM_PACK, 1);
+    load_measure(loading, FORM_PACK, 2);
+    load_measure(loading, FORM_LONG, 1);
+    load_measure(loading, FORM_LONG, 2);
 }
 
-static void round_run(struct bench *bench)
+void loading_measure(struct bench *bench, uint64_t cells)
 {
-    copy_measure(bench);
-    load_measure(bench, FORM_GZIP, 1);
-    inflate_measure(bench);
-    load_measure(bench, FORM_GZIP, 2);
-    sort_measure(bench, 1);
-    load_measure(bench, FORM_TEXT, 1);
-    read_measure(bench, FORM_TEXT, "read .mtx");
-    sort_measure(bench, 2);
-    load_measure(bench, FORM_TEXT, 2);
-    read_measure(bench, FORM_PACK, "read pack");
-    load_measure(bench, FORM_PACK, 1);
-    load_measure(bench, FORM_PACK, 2);
-    load_measure(bench, FORM_LONG, 1);
-    load_measure(bench, FORM_LONG, 2);
-}
-
-int main(int count, char **argument)
-{
-    static struct bench bench;
+    struct loading loading = {0};
     const char *parent = getenv("TMPDIR");
-    bool is_ours = count < 2;
-    snprintf(bench.folder, sizeof bench.folder, "%s", is_ours ? "" : argument[1]);
-    if (is_ours) {
-        snprintf(bench.folder, sizeof bench.folder, "%s/fescue-bench-XXXXXX", parent != NULL ? parent : "/tmp");
-        if (mkdtemp(bench.folder) == NULL)
-            fail("no folder");
-    } else {
-        mkdir(bench.folder, 0777);
-    }
-    table_draw(&bench, count > 2 ? strtoull(argument[2], NULL, 10) : 10000000);
-    files_make(&bench);
+    char path[PATH_SIZE];
+    snprintf(loading.folder, sizeof loading.folder, "%s/fescue-bench-XXXXXX", parent != NULL ? parent : "/tmp");
+    if (mkdtemp(loading.folder) == NULL)
+        fail("no folder");
+    table_draw(&loading, cells);
+    files_make(&loading);
     for (int round = 0; round < ROUNDS; round++)
-        round_run(&bench);
-    lines_print(&bench);
-    ratios_print(&bench);
-    for (int form = 0; is_ours && form < FORMS; form++) {
-        char path[PATH_SIZE];
-        unlink(path_of(&bench, (enum form)form, path));
-    }
-    if (is_ours)
-        rmdir(bench.folder);
-    return 0;
+        round_run(&loading);
+    lines_add(bench, &loading);
+    ratios_add(bench, &loading);
+    for (int form = 0; form < FORMS; form++)
+        unlink(path_of(&loading, (enum form)form, path));
+    rmdir(loading.folder);
+    free(loading.row), free(loading.column), free(loading.value);
 }
