@@ -125,7 +125,7 @@ lines_look_eight(const struct pack_lines *lines, enum fescue_precision precision
         __m256i before = _mm256_setzero_si256();
         __mmask8 compared = 0xfe; /* the first position of a line has none before it */
         for (uint64_t k = half->start[i]; k < end; k += 8, compared = 0xff) {
-            const __mmask8 live = end - k < 8 ? (__mmask8)((1u << (end - k)) - 1) : 0xff;
+            const __mmask8 live = (__mmask8)(end - k < 8 ? (1u << (end - k)) - 1 : 0xff);
             const __m256i across = _mm256_maskz_loadu_epi32(live, half->across + k);
             const __m512i wide = _mm512_cvtepu32_epi64(across);
             __mmask8 infinite;
