@@ -190,10 +190,15 @@ fescue_status holdout_cut(fescue_context *context, const struct cells *cells, co
     uint8_t *dark = NULL;
     *holdout = (struct holdout){0};
     TRY(TAKE(context, (size_t)cells->rows + cells->columns, &dark));
-    TRY(marks_make(context, cells, request, &draw, dark));
-    TRY(cells_select(context, cells, draw.keep, &holdout->kept));
-    for (uint64_t k = 0; k < cells->count; k++)
-        draw.keep[k] = !draw.keep[k];
+    if (request->share == 0) { /* all is kept, and need not be held twice */
+        holdout->kept = cells_share(cells);
+        TRY(TAKE(context, cells->count, &draw.keep));
+    } else {
+        TRY(marks_make(context, cells, request, &draw, dark));
+        TRY(cells_select(context, cells, draw.keep, &holdout->kept));
+        for (uint64_t k = 0; k < cells->count; k++)
+            draw.keep[k] = !draw.keep[k];
+    }
     TRY(cells_select(context, cells, draw.keep, &holdout->hidden));
 done:
     GIVE(context, &draw.keep);

@@ -9,7 +9,8 @@
 #include "solve/solve.h"
 
 /* Cells hidden before anything is estimated, and the cells that are kept; no row or column that had cells loses all.
-   Which cells are hidden depends on the seed and on their positions only, not on threads or order of the input. */
+   Which cells are hidden depends on the seed and on their positions only, not on threads or order of the input.
+   Where none is, the kept ones are the given store's own, which must outlive this. */
 struct holdout {
     struct cells kept, hidden;
 };

@@ -146,7 +146,7 @@ static fescue_status weights_transpose(fescue_context *context, struct cells *ce
 static fescue_status weights_open(fescue_context *context, struct cells *cells)
 {
     fescue_status status = FESCUE_OK;
-    assert(!cells->shares_pattern);
+    assert(!cells->shares_pattern && !cells->shares_all);
     if (cells->by_row.weight == NULL)
         TRY(TAKE(context, cells->count, &cells->by_row.weight));
     if (cells->by_column.weight == NULL)
@@ -206,6 +206,7 @@ fescue_status cells_alike(fescue_context *context, const struct cells *from, str
     size_t size = from->precision == FESCUE_SINGLE ? sizeof(float) : sizeof(double);
     *cells = *from;
     cells->shares_pattern = true;
+    cells->shares_all = false;
     cells->by_row.value = cells->by_column.value = NULL;
     TRY(memory_take(context, from->count, size, &cells->by_row.value));
     TRY(memory_take(context, from->count, size, &cells->by_column.value));
@@ -215,8 +216,19 @@ done:
     return status;
 }
 
+struct cells cells_share(const struct cells *from)
+{
+    struct cells cells = *from;
+    cells.shares_all = true;
+    return cells;
+}
+
 void cells_free(fescue_context *context, struct cells *cells)
 {
+    if (cells->shares_all) {
+        *cells = (struct cells){0};
+        return;
+    }
     if (cells->shares_pattern) {
         GIVE(context, &cells->by_row.value);
         GIVE(context, &cells->by_column.value);

@@ -40,6 +40,7 @@ struct cells {
     enum fescue_precision precision;
     struct half by_row, by_column;
     bool shares_pattern; /* start, across, weight and block belong to another store: only the values are ours */
+    bool shares_all;     /* and not even these */
 };
 
 /* A cell on its way into a store. */
@@ -60,6 +61,8 @@ fescue_status cells_build(fescue_context *context, uint32_t rows, uint32_t colum
                           struct cells *cells);
 /* New store with the cells k (k counts in row order) for which keep[k] is nonzero. */
 fescue_status cells_select(fescue_context *context, const struct cells *from, const uint8_t *keep, struct cells *cells);
+/* The same cells, which stay `from`'s and must not be changed; it must outlive this. Freed like any other store. */
+struct cells cells_share(const struct cells *from);
 /* New store that shares `from`'s pattern (which must outlive it) and has values of its own, zeroed. */
 fescue_status cells_alike(fescue_context *context, const struct cells *from, struct cells *cells);
 /* Gives every cell its weight, in row order, positive and finite; those it has are replaced. */

@@ -143,6 +143,10 @@ static void an_alike_store_shares_the_pattern(void **state)
     ((float *)alike.by_row.value)[0] = 5;
     assert_false(cells_value(&from, &from.by_row, 0) == 5);
     cells_free(context, &alike);
+    alike = cells_share(&from); /* of which nothing is freed but once */
+    assert_ptr_equal(alike.by_row.value, from.by_row.value);
+    cells_free(context, &alike);
+    assert_true(alike.count == 0);
     cells_free(context, &from);
 }
 
