@@ -99,6 +99,7 @@ struct file_calls {
     int64_t (*size)(int descriptor);           /* of a regular file; -1 when it is none or an error */
     void *(*map)(int descriptor, size_t size); /* its first bytes, to be read alone; NULL on an error */
     int (*unmap)(void *bytes, size_t size);
+    int (*rest)(void *bytes, size_t size); /* lets mapped bytes go from memory until they are read again */
 };
 extern const struct file_calls posix_file_calls;
 void file_calls_set(fescue_context *context, const struct file_calls *calls); /* borrowed; NULL: POSIX */
@@ -116,6 +117,8 @@ uint64_t file_size(fescue_context *context, int descriptor);
    cannot do that, and then they are to be read. */
 void file_map(fescue_context *context, int descriptor, size_t size, const void **bytes);
 void file_unmap(fescue_context *context, const void **bytes, size_t size); /* NULL-safe; nulls the pointer */
+/* The mapped bytes will not be read for a while: what they take of memory is given back until then. */
+void file_rest(fescue_context *context, const void *bytes, size_t size);
 void file_close(fescue_context *context, int *descriptor); /* -1 and standard input are left alone; sets -1 */
 
 /* ---- locks ----------------------------------------------------------------------------------------------------- */

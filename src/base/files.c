@@ -35,6 +35,11 @@ static void *posix_map(int descriptor, size_t size)
     return bytes != MAP_FAILED ? bytes : NULL;
 }
 
+static int posix_rest(void *bytes, size_t size)
+{
+    return madvise(bytes, size, MADV_DONTNEED); /* nobody may write there, so nothing is lost */
+}
+
 const struct file_calls posix_file_calls = {
     .open = posix_open,
     .read = read,
@@ -47,6 +52,7 @@ const struct file_calls posix_file_calls = {
     .size = posix_size,
     .map = posix_map,
     .unmap = munmap,
+    .rest = posix_rest,
 };
 
 void file_calls_set(fescue_context *context, const struct file_calls *calls)
@@ -108,6 +114,11 @@ void file_unmap(fescue_context *context, const void **bytes, size_t size)
     if (*bytes != NULL)
         context->files->unmap((void *)(uintptr_t)*bytes, size);
     *bytes = NULL;
+}
+
+void file_rest(fescue_context *context, const void *bytes, size_t size)
+{
+    (void)context->files->rest((void *)(uintptr_t)bytes, size); /* a wish: it may be refused */
 }
 
 void file_close(fescue_context *context, int *descriptor)

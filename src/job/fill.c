@@ -96,6 +96,8 @@ static fescue_status fill_choose(fescue_fill *fill, struct choose_request *reque
     struct holdout_request asked;
     TRY(fill_shape(fill, &asked));
     TRY(holdout_cut(fill->context, cells, &asked, &holdout));
+    if (holdout.hidden.count > 0)
+        table_rest(fill->table);
     if (fill->season_plan.count == 0 || fill->season_plan.is_auto)
         TRY(choose_run(fill->context, &holdout, request, &fill->choice));
     TRY(season_choose(fill, &holdout, request));

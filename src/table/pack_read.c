@@ -435,6 +435,12 @@ done:
 }
 
 /* What lies in the pack is not the table's to give back. */
+void table_rest(const fescue_table *table)
+{
+    if (table->pack != NULL && table->pack->is_mapped)
+        file_rest(table->context, table->pack->bytes, table->pack->size);
+}
+
 void pack_release(fescue_table *table)
 {
     struct half *const halves[] = {&table->cells.by_row, &table->cells.by_column};

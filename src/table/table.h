@@ -153,6 +153,8 @@ fescue_status table_from_triplets(fescue_context *context, uint32_t rows, uint32
                                   const uint32_t *row, const uint32_t *column, const double *value,
                                   enum fescue_precision precision, fescue_table **out);
 void table_destroy(fescue_table **table); /* NULL-safe; nulls the pointer */
+/* The table will not be looked at for a while; what lies in a mapped pack leaves memory until then. */
+void table_rest(const fescue_table *table);
 
 /* Writes the table as a packed file, which table_read takes like any other and maps. The file appears whole or not at
    all. FESCUE_CANNOT_CREATE, FESCUE_CANNOT_WRITE. */

@@ -172,6 +172,11 @@ static void *faulty_map(int descriptor, size_t size)
     return fault_due(FAULT_MAP) ? NULL : posix_file_calls.map(descriptor, size);
 }
 
+static int faulty_rest(void *bytes, size_t size)
+{
+    return posix_file_calls.rest(bytes, size);
+}
+
 static const struct file_calls faulty_calls = {
     .open = faulty_open,
     .read = faulty_read,
@@ -184,6 +189,7 @@ static const struct file_calls faulty_calls = {
     .size = faulty_size,
     .map = faulty_map,
     .unmap = munmap,
+    .rest = faulty_rest,
 };
 
 /* ---- the bench -------------------------------------------------------------------------------------------------- */
