@@ -253,6 +253,13 @@ void team_sum(fescue_context *context, const double *partial, size_t blocks, siz
 /* Starts (or changes to) `workers` threads; 0 = the processors this process may use. FESCUE_NO_MEMORY. */
 fescue_status team_resize(fescue_context *context, size_t workers);
 
+/* ---- vector instructions ----------------------------------------------------------------------------------------- */
+
+/* What this processor has and FESCUE_KERNEL does not forbid: AVX2 with FMA, BMI and BMI2; beside it AVX-512 F, VL, DQ.
+ */
+enum vectors { VECTORS_NONE, VECTORS_AVX2, VECTORS_AVX512 };
+enum vectors vectors_choose(void);
+
 /* ---- clock, progress, cancel --------------------------------------------------------------------------------------
  */
 

@@ -79,10 +79,9 @@ static fescue_status weights_consider(const fescue_table *table, const struct fe
 /* Whether what a choice was made on also says how wrong it is: only where learning it once more is felt. */
 static bool held_serves(const fescue_fill *fill)
 {
-    const struct choice *choice = &fill->choice;
-    return evidence_is_large(&fill->table->cells) && choice->is_learnt && !choice->own_holdout && choice->rank > 0 &&
-           choice->learnt.time == NULL && choice->learnt.near == NULL && fill->season.along == TIME_NONE &&
-           fill->options.folds == (int64_t)FESCUE_AUTO && fill->shape.shape == FESCUE_HOLDOUT_CELLS;
+    return choice_serves(&fill->choice, &fill->table->cells) && !fill->choice.own_holdout &&
+           fill->season.along == TIME_NONE && fill->options.folds == (int64_t)FESCUE_AUTO &&
+           fill->shape.shape == FESCUE_HOLDOUT_CELLS;
 }
 
 static fescue_status fill_choose(fescue_fill *fill, struct choose_request *request)

@@ -179,13 +179,6 @@ static fescue_status learnt_further(fescue_context *context, const struct final_
     return status == FESCUE_OK && result->fit.stop == STOP_CANCELLED ? FESCUE_STOPPED : status;
 }
 
-static bool goes_further(const struct final_request *request)
-{
-    const struct choice *choice = request->choice;
-    return evidence_is_large(request->cells) && choice->noise > 0 && choice->start.rank > 0 &&
-           choice->learnt.time == NULL && choice->learnt.near == NULL;
-}
-
 /* The evidence fit on all cells: the same procedure as the one that was judged. */
 static fescue_status learnt_run(fescue_context *context, const struct final_request *request, struct final_fit *fit)
 {
@@ -193,7 +186,7 @@ static fescue_status learnt_run(fescue_context *context, const struct final_requ
     struct evidence_result result = {0};
     struct evidence_request asked = choice->learnt;
     asked.deadline = request->deadline;
-    bool is_further = goes_further(request);
+    bool is_further = choice_serves(choice, request->cells) && choice->noise > 0;
     fit->start = is_further ? "grown" : "spectral";
     fescue_status status = is_further ? learnt_further(context, request, fit, &result)
                                       : evidence_learn(context, request->cells, &asked, &result);

@@ -371,6 +371,12 @@ done:
     return status;
 }
 
+bool choice_serves(const struct choice *choice, const struct cells *cells)
+{
+    return evidence_is_large(cells) && choice->is_learnt && choice->rank > 0 && choice->learnt.time == NULL &&
+           choice->learnt.near == NULL;
+}
+
 void choice_free(fescue_context *context, struct choice *choice)
 {
     GIVE(context, &choice->path);

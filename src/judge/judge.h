@@ -131,6 +131,9 @@ struct choose_request {
    the table is too small for is lowered. */
 fescue_status choose_run(fescue_context *context, const struct holdout *holdout, const struct choose_request *request,
                          struct choice *choice);
+/* Whether it is a learnt fit of a large table that follows neither time nor near columns: what it holds is then used
+   and gone on from, where otherwise all is learnt again. */
+bool choice_serves(const struct choice *choice, const struct cells *cells);
 void choice_free(fescue_context *context, struct choice *choice);
 
 /* ---- rank and ridge by cross-validation ----------------------------------------------------------------------------

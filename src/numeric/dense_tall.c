@@ -17,10 +17,11 @@ struct tall {
     double *partial; /* what a piece sums to: a number, or as many as A'B has */
 };
 
-static struct tall tall_of(struct matrix a, struct matrix b, struct matrix c)
+static struct tall tall_of(double alpha, struct matrix a, struct matrix b, double beta, struct matrix c)
 {
     size_t width = a.columns > b.columns ? a.columns : b.columns;
-    return (struct tall){.pieces = dense_pieces_of(a.rows, width), .a = a, .b = b, .c = c};
+    return (struct tall){
+        .pieces = dense_pieces_of(a.rows, width), .alpha = alpha, .beta = beta, .a = a, .b = b, .c = c};
 }
 
 static void multiply_piece(void *job, size_t piece, size_t worker)
@@ -34,9 +35,7 @@ static void multiply_piece(void *job, size_t piece, size_t worker)
 void tall_multiply(fescue_context *context, double alpha, struct matrix a, struct matrix b, double beta,
                    struct matrix c)
 {
-    struct tall tall = tall_of(a, b, c);
-    tall.alpha = alpha;
-    tall.beta = beta;
+    struct tall tall = tall_of(alpha, a, b, beta, c);
     team_run(context, tall.pieces.count, multiply_piece, &tall);
 }
 
@@ -52,7 +51,7 @@ static void cross_piece(void *job, size_t piece, size_t worker)
 
 void tall_cross(fescue_context *context, struct matrix a, struct matrix b, struct matrix c, double *work)
 {
-    struct tall tall = tall_of(a, b, c);
+    struct tall tall = tall_of(1, a, b, 0, c);
     size_t count = c.rows * c.columns;
     assert(a.rows == b.rows && c.rows == a.columns && c.columns == b.columns);
     if (tall.pieces.count == 1) {
@@ -79,7 +78,7 @@ static void copy_piece(void *job, size_t piece, size_t worker)
 
 void tall_copy(fescue_context *context, struct matrix from, const double *scale, struct matrix to)
 {
-    struct tall tall = tall_of(from, to, to);
+    struct tall tall = tall_of(1, from, to, 0, to);
     tall.scale = scale;
     team_run(context, tall.pieces.count, copy_piece, &tall);
 }
@@ -98,9 +97,7 @@ static void add_piece(void *job, size_t piece, size_t worker)
 
 void tall_add(fescue_context *context, double alpha, struct matrix x, double beta, struct matrix y)
 {
-    struct tall tall = tall_of(x, y, y);
-    tall.alpha = alpha;
-    tall.beta = beta;
+    struct tall tall = tall_of(alpha, x, y, beta, y);
     team_run(context, tall.pieces.count, add_piece, &tall);
 }
 
@@ -115,7 +112,7 @@ static void dot_piece(void *job, size_t piece, size_t worker)
 double tall_dot(fescue_context *context, struct matrix a, struct matrix b)
 {
     double partial[DENSE_MOST_PIECES], sum;
-    struct tall tall = tall_of(a, b, b);
+    struct tall tall = tall_of(1, a, b, 0, b);
     tall.partial = partial;
     team_run(context, tall.pieces.count, dot_piece, &tall);
     team_sum(context, partial, tall.pieces.count, 1, &sum);

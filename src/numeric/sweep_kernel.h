@@ -40,7 +40,6 @@
  *     STREAM_AHEAD are asked for.
  *   - The loops are written for any number of registers a row and made once for each common number of them, where
  *     everything is unrolled and stays in registers.
- *
  *   - Where a line ends, a loop ends that the processor cannot foresee, and what the next line reads and writes is not
  *     there yet: its rows are asked for one line ahead.
  *

@@ -131,6 +131,12 @@ static fescue_status refit(fescue_context *context, const struct cells *cells, c
     return next.fit.stop == STOP_CANCELLED ? FESCUE_STOPPED : FESCUE_OK;
 }
 
+/* A large table, and nothing can join: the last rounds are made at once. */
+static bool settles_at_once(const struct cells *cells, const struct evidence_request *request)
+{
+    return evidence_is_large(cells) && request->rank == request->rank_most;
+}
+
 /* Components join for as long as more of them live, out->model having its offsets and what has joined already. */
 static fescue_status components_grow(fescue_context *context, const struct cells *cells,
                                      const struct evidence_request *request, struct evidence_result *out)
@@ -143,8 +149,7 @@ static fescue_status components_grow(fescue_context *context, const struct cells
     step.near = NULL;
     step.rounds = GROW_ROUNDS;
     step.change = GROW_CHANGE;
-    if (evidence_is_large(cells) &&
-        request->rank == request->rank_most) { /* nothing can join: the last rounds at once */
+    if (settles_at_once(cells, request)) {
         step.rounds = request->rounds;
         step.change = request->change;
     }
@@ -184,9 +189,8 @@ fescue_status evidence_learn(fescue_context *context, const struct cells *cells,
     TRY(low_rank_create(context, cells->rows, cells->columns, 0, &out->model.low_rank));
     TRY(components_grow(context, cells, request, out));
     size_t alive = evidence_living(out);
-    bool is_settled = evidence_is_large(cells) && request->rank == request->rank_most;
-    bool settles =
-        request->time == NULL && !is_settled; /* what follows lines in time settles the components on its own */
+    /* what follows lines in time settles the components on its own */
+    bool settles = request->time == NULL && !settles_at_once(cells, request);
     if (settles)
         TRY(components_settle(context, cells, request, out));
     bool is_last = request->noise == EVIDENCE_NOISE_EQUAL;

@@ -12,10 +12,6 @@
 /* Rows and columns are counted in 32 bits, and one number is kept free to mean "none". */
 #define TABLE_MOST_LINES (UINT32_MAX - 1)
 
-/* Vector instructions that this processor has and nobody forbade (vectors.c). */
-enum vectors { VECTORS_NONE, VECTORS_AVX2, VECTORS_AVX512 };
-enum vectors vectors_choose(void);
-
 /* ---- text_store: characters that stay where they are ----------------------------------------------------------- */
 
 /* Many short texts in few blocks; a text never moves while the store lives, so pointers into it stay good. */

@@ -58,14 +58,6 @@ static void fail(const char *what)
     exit(1);
 }
 
-static void *taken(size_t size)
-{
-    void *block = malloc(size);
-    if (block == NULL)
-        fail("no memory");
-    return block;
-}
-
 static const char *path_of(const struct loading *loading, enum form form, char path[PATH_SIZE])
 {
     if (snprintf(path, PATH_SIZE, "%s/%s", loading->folder, form_files[form]) >= PATH_SIZE)
@@ -114,12 +106,10 @@ static void table_draw(struct loading *loading, uint64_t cells)
         loading->columns = loading->rows / 5 + 100;
     }
     size_t room = (size_t)(2.2 * (double)cells) + 1000;
-    loading->row = taken(room * sizeof *loading->row);
-    loading->column = taken(room * sizeof *loading->column);
-    loading->value = taken(room * sizeof *loading->value);
-    last_row = calloc(loading->columns, sizeof *last_row);
-    if (last_row == NULL)
-        fail("no memory");
+    loading->row = bench_take(room, sizeof *loading->row);
+    loading->column = bench_take(room, sizeof *loading->column);
+    loading->value = bench_take(room, sizeof *loading->value);
+    last_row = bench_take(loading->columns, sizeof *last_row);
     for (uint32_t i = 0; i < loading->rows; i++) {
         double share = 0.2 + 1.6 * random_uniform_at(1, RANDOM_TEST, 0, i);
         row_draw(loading, i, (uint64_t)(1.12 * share * (double)cells / loading->rows),
@@ -177,8 +167,7 @@ static fescue_table *load(const char *path, size_t workers, fescue_context **con
     fescue_table *table;
     if (fescue_context_create(NULL, context) != FESCUE_OK || team_resize(*context, workers) != FESCUE_OK)
         fail("no context");
-    if (table_read(*context, path, &reading, &table) != FESCUE_OK)
-        fail(fescue_failure_text(*context));
+    bench_check(*context, table_read(*context, path, &reading, &table));
     return table;
 }
 
@@ -186,8 +175,7 @@ static void pack_write(const char *from, const char *to)
 {
     fescue_context *context;
     fescue_table *table = load(from, 2, &context);
-    if (table_pack(table, to) != FESCUE_OK)
-        fail(fescue_failure_text(context));
+    bench_check(context, table_pack(table, to));
     table_destroy(&table);
     fescue_context_destroy(&context);
 }
@@ -292,7 +280,7 @@ static void read_measure(struct loading *loading, enum form form, const char *na
 static void copy_measure(struct loading *loading)
 {
     enum { SIZE = 1 << 28 };
-    char *from = taken(SIZE), *to = taken(SIZE);
+    char *from = bench_take(SIZE, 1), *to = bench_take(SIZE, 1);
     memset(from, 1, SIZE);
     memset(to, 2, SIZE);
     void *(*volatile copy)(void *, const void *, size_t) = memcpy; /* not to be foreseen by the compiler */
@@ -310,7 +298,7 @@ static void sort_measure(struct loading *loading, size_t workers)
     struct cells cells;
     struct triplet_list list = {.row = loading->row, .column = loading->column, .count = loading->cells};
     char name[64];
-    double *value = taken(loading->cells * sizeof *value);
+    double *value = bench_take(loading->cells, sizeof *value);
     for (uint64_t k = 0; k < loading->cells; k++)
         value[k] = (double)loading->value[k];
     list.value = value;
@@ -318,8 +306,7 @@ static void sort_measure(struct loading *loading, size_t workers)
         fail("no context");
     memory_warm(loading);
     struct clocks start = clocks_start();
-    if (cells_build(context, loading->rows, loading->columns, &list, &cells) != FESCUE_OK)
-        fail(fescue_failure_text(context));
+    bench_check(context, cells_build(context, loading->rows, loading->columns, &list, &cells));
     snprintf(name, sizeof name, "sort, %zu", workers);
     clocks_stop(loading, start, name);
     cells_free(context, &cells);
