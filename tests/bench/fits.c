@@ -11,8 +11,7 @@
 #include <stdlib.h>
 #include <string.h>
 
-/* Iterations of a whole fit: far beyond where errors on hidden cells have settled. What takes longer is cut. */
-enum { ITERATIONS = 40, FIT_SECONDS = 20 };
+enum { FIT_SECONDS = 20 }; /* what takes longer is cut */
 /* On X, per density: what shrinks a row as the sown noise and factors of variance 1/4 ask for, which have a ridge of 1
    on rows beside columns of that variance: 4 / columns, over the density, with 100 cells a row. */
 #define RIDGE 0.04
@@ -52,7 +51,7 @@ void rating_fit(const struct rating *rating, const char *solver, size_t rank, si
         exit(1);
     bench_check(context, team_resize(context, threads));
     double cpu = clock_cpu(), wall = clock_wall();
-    limits.deadline = iterations == ITERATIONS ? wall + FIT_SECONDS : 0; /* a few are counted, whatever they take */
+    limits.deadline = iterations == FIT_ITERATIONS ? wall + FIT_SECONDS : 0; /* a few are counted, whatever they take */
     bench_check(context, problem_create(context, &rating->cells, NULL, RIDGE, &problem));
     bench_check(context, start_spectral(&problem, rank, 1, &point));
     bench_check(context, solve_run(&problem, solver_find(solver), &limits, &point, &result));
@@ -74,7 +73,7 @@ static void fit_report(struct bench *bench, const struct rating *rating, const c
     struct fit_outcome outcome[2];
     for (size_t threads = 1; threads <= 2; threads++) {
         struct fit_outcome *own = &outcome[threads - 1];
-        rating_fit(rating, solver, rank, threads, ITERATIONS, own);
+        rating_fit(rating, solver, rank, threads, FIT_ITERATIONS, own);
         double seconds = threads == 1 ? own->cpu : own->wall;
         json_t *figure = json_pack("{s:s, s:s, s:I, s:I, s:I, s:f, s:f, s:I, s:f, s:s, s:f}", "what", "fit", "solver",
                                    solver, "cells", (json_int_t)rating->cells.count, "rank", (json_int_t)rank,

@@ -31,6 +31,7 @@ struct fit_outcome {
     uint64_t bytes; /* most held, with the table */
     const char *stop;
 };
+enum { FIT_ITERATIONS = 40 }; /* of a whole fit: far beyond where errors on hidden cells have settled */
 /* From the observed cells to factors, spectral start included. */
 void rating_fit(const struct rating *rating, const char *solver, size_t rank, size_t threads, uint64_t iterations,
                 struct fit_outcome *out);
