@@ -35,13 +35,14 @@ struct team_member {
     size_t worker;
 };
 
-/* Member 0 is the caller of team_run and has no thread. What `lock` guards: round, busy, leaving and, while no round
-   runs, the work. */
+/* Member 0 is the caller of team_run and has no thread. What `lock` guards: round, open, busy, leaving; the work is
+   changed by the caller alone, while no round is open and nobody busy. */
 struct team {
     pthread_mutex_t lock;
     pthread_cond_t called, finished;
     _Atomic uint64_t round; /* counts calls to work */
-    _Atomic size_t busy;    /* threads that have not finished this round */
+    _Atomic size_t busy;    /* threads that have joined this round and not left it */
+    bool open;              /* this round may be joined */
     bool leaving, running;
     size_t workers;
     team_task *task;

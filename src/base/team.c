@@ -6,8 +6,12 @@
  * caller, every block writes to a place of its own, and team_sum, the only place that adds over blocks, goes in block
  * order. A build over several ranks adds its all-reduce there and nowhere else.
  *
- * A round costs one wake-up. Solvers call rounds back to back, so a thread first looks out for the next one for some
- * microseconds before it goes to sleep.
+ * A worker joins a round while it is open, and the caller, who works too, closes it when no block is left and waits for
+ * those who have joined. Whoever comes later, because the machine is busy with other things, is not waited for: on a
+ * machine without a free processor a round costs hardly more than its work.
+ *
+ * Solvers call rounds back to back, so a thread first looks out for what it waits for before it goes to sleep: for as
+ * long as a sleep and a wake-up take, so that it never wastes more than about what it could have saved.
  */
 #include "base/context_internal.h"
 
@@ -16,14 +20,39 @@
 #include <signal.h>
 #include <string.h>
 
-/* About 20 microseconds, the price of one sleep and wake-up: looking out longer could cost more than it saves. */
-enum { LOOK_OUT = 500 };
+/* Seconds; from the call to the first work of one who sleeps they measure 20 to 80 microseconds. */
+static const double look_out = 50e-6;
+enum { LOOKS_A_CLOCK = 8 }; /* a clock takes as long as one or two looks */
 
 static inline void look_away(void)
 {
 #if defined(__x86_64__) || defined(__i386__)
     __builtin_ia32_pause();
 #endif
+}
+
+static bool has_begun(struct team *team, uint64_t seen)
+{
+    return atomic_load(&team->round) != seen;
+}
+
+static bool has_finished(struct team *team, uint64_t none)
+{
+    (void)none;
+    return atomic_load(&team->busy) == 0;
+}
+
+/* Until it is so, but not for long. */
+static void look_for(struct team *team, bool (*is_so)(struct team *team, uint64_t seen), uint64_t seen)
+{
+    if (is_so(team, seen))
+        return;
+    for (double end = clock_wall() + look_out; clock_wall() < end;)
+        for (int look = 0; look < LOOKS_A_CLOCK; look++) {
+            if (is_so(team, seen))
+                return;
+            look_away();
+        }
 }
 
 static void blocks_work(struct team *team, size_t worker)
@@ -36,52 +65,67 @@ static void blocks_work(struct team *team, size_t worker)
     }
 }
 
-/* Waits for a round other than `seen` and returns its number; *leaving tells whether it is the call to go home. */
-static uint64_t round_await(struct team *team, uint64_t seen, bool *leaving)
+/* Waits for a round other than *seen that is still open, and joins it; false when it is the call to go home. */
+static bool round_join(struct team *team, uint64_t *seen)
 {
-    for (int look = 0; look < LOOK_OUT && atomic_load(&team->round) == seen; look++)
-        look_away();
+    bool joined, leaving;
+    do {
+        look_for(team, has_begun, *seen);
+        pthread_mutex_lock(&team->lock);
+        while (!has_begun(team, *seen))
+            pthread_cond_wait(&team->called, &team->lock);
+        *seen = atomic_load(&team->round);
+        leaving = team->leaving;
+        joined = team->open;
+        if (joined)
+            atomic_fetch_add(&team->busy, 1);
+        pthread_mutex_unlock(&team->lock);
+    } while (!joined && !leaving);
+    return joined;
+}
+
+static void round_leave(struct team *team)
+{
     pthread_mutex_lock(&team->lock);
-    while (atomic_load(&team->round) == seen)
-        pthread_cond_wait(&team->called, &team->lock);
-    seen = atomic_load(&team->round);
-    *leaving = team->leaving;
+    if (atomic_fetch_sub(&team->busy, 1) == 1)
+        pthread_cond_signal(&team->finished);
     pthread_mutex_unlock(&team->lock);
-    return seen;
 }
 
 static void *member_live(void *argument)
 {
     const struct team_member *member = argument;
     struct team *team = member->team;
-    bool leaving = false;
-    for (uint64_t seen = 0;;) {
-        seen = round_await(team, seen, &leaving);
-        if (leaving)
-            return NULL;
+    for (uint64_t seen = 0; round_join(team, &seen);) {
         blocks_work(team, member->worker);
-        pthread_mutex_lock(&team->lock);
-        if (atomic_fetch_sub(&team->busy, 1) == 1)
-            pthread_cond_signal(&team->finished);
-        pthread_mutex_unlock(&team->lock);
+        round_leave(team);
     }
+    return NULL;
 }
 
-static void round_call(struct team *team)
+/* Calls as many as there is work for; leaving: all, to go home. */
+static void round_open(struct team *team, size_t others, bool leaving)
 {
     pthread_mutex_lock(&team->lock);
-    atomic_store(&team->busy, team->workers - 1);
+    team->open = !leaving;
+    team->leaving = leaving;
     atomic_fetch_add(&team->round, 1);
-    pthread_cond_broadcast(&team->called);
+    if (others < team->workers - 1)
+        for (size_t k = 0; k < others; k++)
+            pthread_cond_signal(&team->called);
+    else
+        pthread_cond_broadcast(&team->called);
     pthread_mutex_unlock(&team->lock);
 }
 
-static void round_finish(struct team *team)
+static void round_close(struct team *team)
 {
-    for (int look = 0; look < LOOK_OUT && atomic_load(&team->busy) != 0; look++)
-        look_away();
     pthread_mutex_lock(&team->lock);
-    while (atomic_load(&team->busy) != 0)
+    team->open = false;
+    pthread_mutex_unlock(&team->lock);
+    look_for(team, has_finished, 0);
+    pthread_mutex_lock(&team->lock);
+    while (!has_finished(team, 0))
         pthread_cond_wait(&team->finished, &team->lock);
     pthread_mutex_unlock(&team->lock);
 }
@@ -97,8 +141,7 @@ void team_open(struct team *team)
 /* Sends all threads home. */
 static void team_dismiss(struct team *team)
 {
-    team->leaving = true;
-    round_call(team);
+    round_open(team, team->workers - 1, true);
     for (size_t k = 1; k < team->workers; k++)
         pthread_join(team->member[k].thread, NULL);
     team->leaving = false;
@@ -176,10 +219,10 @@ void team_run(fescue_context *context, size_t blocks, team_task *task, void *job
     atomic_store(&team->next_block, 0);
     bool alone = team->workers == 1 || blocks < 2;
     if (!alone)
-        round_call(team);
+        round_open(team, blocks - 1, false);
     blocks_work(team, 0);
     if (!alone)
-        round_finish(team);
+        round_close(team);
     team->running = false;
 }
 
