@@ -18,8 +18,7 @@
  * Columns of P whose speed is tiny are orthogonal to U only to rounding / s_k; sin and cos - 1 damp them by s_k, so
  * that neither point nor transport feel it.
  *
- * Cost: aim one thin SVD of m x r; point 6 m r^2 flops, transport 4 m r^2. Serial: dense algebra of this size is small
- * beside a pass over the cells.
+ * Cost: aim one thin SVD of m x r; point 6 m r^2 flops, transport 4 m r^2. Parallel over pieces of lines.
  */
 #include "manifold/manifold_internal.h"
 
@@ -49,20 +48,20 @@ fescue_status geodesic_aim(struct grassmann_work *work, struct matrix point, str
     fescue_status status;
     assert(is_shape(point, work->rows, work->rank) && is_shape(tangent, work->rows, work->rank));
     geodesic->start = point;
-    matrix_copy(tangent, geodesic->rise);
+    tall_copy(work->context, tangent, NULL, geodesic->rise);
     TRY(dense_svd(work->context, geodesic->rise, geodesic->speed, geodesic->turn, work->dense));
-    matrix_multiply(1, point, false, geodesic->turn, false, 0, geodesic->along);
+    tall_multiply(work->context, 1, point, geodesic->turn, 0, geodesic->along);
 done:
     return status;
 }
 
-/* out = A diag(a) + P diag(p): every plane's own combination. */
-static void planes_combine(const struct grassmann_geodesic *geodesic, const double *a, const double *p,
-                           struct matrix out)
+/* tall = A diag(a) + P diag(p): every plane's own combination. Spoils other. */
+static void planes_combine(struct grassmann_work *work, const struct grassmann_geodesic *geodesic, const double *a,
+                           const double *p)
 {
-    for (size_t i = 0; i < out.rows; i++)
-        for (size_t k = 0; k < out.columns; k++)
-            MATRIX_AT(out, i, k) = MATRIX_AT(geodesic->along, i, k) * a[k] + MATRIX_AT(geodesic->rise, i, k) * p[k];
+    tall_copy(work->context, geodesic->along, a, work->tall);
+    tall_copy(work->context, geodesic->rise, p, work->other);
+    tall_add(work->context, 1, work->other, 1, work->tall);
 }
 
 static void angle_split(double angle, double *sine, double *cosine_less_one)
@@ -75,19 +74,20 @@ static void angle_split(double angle, double *sine, double *cosine_less_one)
 /* to = near (3 I - near'near) / 2. */
 static void orthonormal_polish(struct grassmann_work *work, struct matrix near, struct matrix to)
 {
-    matrix_multiply(-0.5, near, true, near, false, 0, work->core);
+    tall_cross(work->context, near, near, work->core, work->dense);
+    matrix_scale(-0.5, work->core);
     for (size_t k = 0; k < work->rank; k++)
         MATRIX_AT(work->core, k, k) += 1.5;
-    matrix_multiply(1, near, false, work->core, false, 0, to);
+    tall_multiply(work->context, 1, near, work->core, 0, to);
 }
 
 /* to = (A cos + P sin) Q' for the sines and cosines less one in the work. */
 static void planes_rotate(struct grassmann_work *work, const struct grassmann_geodesic *geodesic, struct matrix to)
 {
     assert(is_shape(to, work->rows, work->rank));
-    planes_combine(geodesic, work->cosine, work->sine, work->tall);
-    matrix_copy(geodesic->start, work->other);
-    matrix_multiply(1, work->tall, false, geodesic->turn, true, 1, work->other);
+    planes_combine(work, geodesic, work->cosine, work->sine);
+    tall_copy(work->context, geodesic->start, NULL, work->other);
+    tall_multiply_transposed(work->context, 1, work->tall, geodesic->turn, 1, work->other);
     orthonormal_polish(work, work->other, to);
 }
 
@@ -107,9 +107,8 @@ void geodesic_polar(struct grassmann_work *work, const struct grassmann_geodesic
 
 void geodesic_tangent(struct grassmann_work *work, const struct grassmann_geodesic *geodesic, struct matrix d)
 {
-    matrix_copy(geodesic->rise, work->tall);
-    matrix_scale_columns(work->tall, geodesic->speed);
-    matrix_multiply(1, work->tall, false, geodesic->turn, true, 0, d);
+    tall_copy(work->context, geodesic->rise, geodesic->speed, work->tall);
+    tall_multiply_transposed(work->context, 1, work->tall, geodesic->turn, 0, d);
 }
 
 void geodesic_transport(struct grassmann_work *work, const struct grassmann_geodesic *geodesic, double t,
@@ -118,9 +117,9 @@ void geodesic_transport(struct grassmann_work *work, const struct grassmann_geod
     assert(is_shape(k, work->rows, work->rank));
     for (size_t i = 0; i < work->rank; i++)
         angle_split(-t * geodesic->speed[i], &work->sine[i], &work->cosine[i]);
-    planes_combine(geodesic, work->sine, work->cosine, work->tall);
-    matrix_multiply(1, geodesic->rise, true, k, false, 0, work->core);
-    matrix_multiply(1, work->tall, false, work->core, false, 1, k);
+    planes_combine(work, geodesic, work->sine, work->cosine);
+    tall_cross(work->context, geodesic->rise, k, work->core, work->dense);
+    tall_multiply(work->context, 1, work->tall, work->core, 1, k);
 }
 
 fescue_status grassmann_exp(struct grassmann_work *work, struct matrix point, struct matrix tangent, double t,

@@ -21,7 +21,7 @@
  *
  * Departure: at most m - r angles differ from zero; where r > m - r those that must be zero are set to zero.
  *
- * Cost: O(m r^2), one SVD of r x r and one of m x q. Serial.
+ * Cost: O(m r^2), one SVD of r x r and one of m x q. Parallel over pieces of lines, but for large angles.
  */
 #include "manifold/manifold_internal.h"
 
@@ -68,16 +68,16 @@ fescue_status geodesic_join(struct grassmann_work *work, struct matrix point, st
     size_t q = 0;
     assert(is_shape(point, work->rows, work->rank) && is_shape(target, work->rows, work->rank));
     geodesic->start = point;
-    matrix_multiply(1, point, true, target, false, 0, geodesic->turn);
+    tall_cross(work->context, point, target, geodesic->turn, work->dense);
     TRY(dense_svd(work->context, geodesic->turn, work->cosine, work->core, work->dense));
-    matrix_multiply(1, target, false, work->core, false, 0, geodesic->rise);
+    tall_multiply(work->context, 1, target, work->core, 0, geodesic->rise);
     grassmann_project(work, point, geodesic->rise);
     while (q < work->rank && work->cosine[q] * work->cosine[q] >= half_square)
         q++;
     if (q > 0)
         TRY(small_angles_find(work, q, geodesic));
     large_angles_find(work, q, geodesic);
-    matrix_multiply(1, point, false, geodesic->turn, false, 0, geodesic->along);
+    tall_multiply(work->context, 1, point, geodesic->turn, 0, geodesic->along);
 done:
     return status;
 }

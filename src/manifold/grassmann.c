@@ -59,10 +59,10 @@ fescue_status grassmann_retract_qr(struct grassmann_work *work, struct matrix po
                                    struct matrix to)
 {
     fescue_status status;
-    matrix_copy(point, work->tall);
-    matrix_add(t, tangent, work->tall);
+    tall_copy(work->context, point, NULL, work->tall);
+    tall_add(work->context, t, tangent, 1, work->tall);
     TRY(dense_qr(work->context, work->tall, (struct matrix){0}, work->dense));
-    matrix_copy(work->tall, to);
+    tall_copy(work->context, work->tall, NULL, to);
 done:
     return status;
 }

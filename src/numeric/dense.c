@@ -39,8 +39,9 @@ fescue_status dense_check(fescue_context *context, const char *routine, lapack_i
 
 struct dense_pieces dense_pieces_of(size_t lines, size_t columns)
 {
-    /* A piece pays for its call into the team (some 10 us), and for a partial sum of columns^2 numbers. */
-    size_t each = 4096 > 8 * columns ? 4096 : 8 * columns;
+    /* A piece pays for its call into the team (some microseconds), and for a partial sum of columns^2 numbers; many
+       pieces share out more evenly. */
+    size_t each = 1024 > 8 * columns ? 1024 : 8 * columns;
     size_t least = (lines + DENSE_MOST_PIECES - 1) / DENSE_MOST_PIECES;
     if (each < least)
         each = least;

@@ -13,8 +13,9 @@ struct tall {
     struct dense_pieces pieces;
     double alpha, beta;
     struct matrix a, b, c;
-    const double *scale;
-    double *partial; /* what a piece sums to: a number, or as many as A'B has */
+    const double *scale; /* of columns, of lines, or a packed factor */
+    bool transpose;      /* of b */
+    double *partial;     /* what a piece sums to: a number, or as many as A'B has */
 };
 
 static struct tall tall_of(double alpha, struct matrix a, struct matrix b, double beta, struct matrix c)
@@ -28,14 +29,22 @@ static void multiply_piece(void *job, size_t piece, size_t worker)
 {
     const struct tall *tall = job;
     (void)worker;
-    matrix_multiply(tall->alpha, dense_piece(tall->a, &tall->pieces, piece), false, tall->b, false, tall->beta,
-                    dense_piece(tall->c, &tall->pieces, piece));
+    matrix_multiply(tall->alpha, dense_piece(tall->a, &tall->pieces, piece), false, tall->b, tall->transpose,
+                    tall->beta, dense_piece(tall->c, &tall->pieces, piece));
 }
 
 void tall_multiply(fescue_context *context, double alpha, struct matrix a, struct matrix b, double beta,
                    struct matrix c)
 {
     struct tall tall = tall_of(alpha, a, b, beta, c);
+    team_run(context, tall.pieces.count, multiply_piece, &tall);
+}
+
+void tall_multiply_transposed(fescue_context *context, double alpha, struct matrix a, struct matrix b, double beta,
+                              struct matrix c)
+{
+    struct tall tall = tall_of(alpha, a, b, beta, c);
+    tall.transpose = true;
     team_run(context, tall.pieces.count, multiply_piece, &tall);
 }
 
@@ -83,6 +92,41 @@ void tall_copy(fescue_context *context, struct matrix from, const double *scale,
     team_run(context, tall.pieces.count, copy_piece, &tall);
 }
 
+static void scale_piece(void *job, size_t piece, size_t worker)
+{
+    const struct tall *tall = job;
+    struct matrix from = dense_piece(tall->a, &tall->pieces, piece), to = dense_piece(tall->b, &tall->pieces, piece);
+    const double *scale = tall->scale + piece * tall->pieces.each;
+    (void)worker;
+    for (size_t i = 0; i < to.rows; i++)
+        for (size_t j = 0; j < to.columns; j++)
+            MATRIX_AT(to, i, j) = scale[i] * MATRIX_AT(from, i, j);
+}
+
+void tall_scale_lines(fescue_context *context, struct matrix from, const double *scale, struct matrix to)
+{
+    struct tall tall = tall_of(1, from, to, 0, to);
+    tall.scale = scale;
+    team_run(context, tall.pieces.count, scale_piece, &tall);
+}
+
+static void solve_piece(void *job, size_t piece, size_t worker)
+{
+    const struct tall *tall = job;
+    struct matrix to = dense_piece(tall->b, &tall->pieces, piece);
+    (void)worker;
+    matrix_copy(dense_piece(tall->a, &tall->pieces, piece), to);
+    for (size_t i = 0; i < to.rows; i++)
+        packed_solve(tall->scale, to.columns, &MATRIX_AT(to, i, 0));
+}
+
+void tall_solve(fescue_context *context, const double *factor, struct matrix from, struct matrix to)
+{
+    struct tall tall = tall_of(1, from, to, 0, to);
+    tall.scale = factor;
+    team_run(context, tall.pieces.count, solve_piece, &tall);
+}
+
 static void add_piece(void *job, size_t piece, size_t worker)
 {
     const struct tall *tall = job;
@@ -115,6 +159,41 @@ double tall_dot(fescue_context *context, struct matrix a, struct matrix b)
     struct tall tall = tall_of(1, a, b, 0, b);
     tall.partial = partial;
     team_run(context, tall.pieces.count, dot_piece, &tall);
+    team_sum(context, partial, tall.pieces.count, 1, &sum);
+    return sum;
+}
+
+/* sum of weight_j a_j^2 in eight sums, as matrix_dot has them */
+static void line_square(const double *a, const double *weight, size_t length, double part[8])
+{
+    size_t j = 0;
+    for (; j + 8 <= length; j += 8)
+        for (size_t p = 0; p < 8; p++)
+            part[p] += weight[j + p] * (a[j + p] * a[j + p]);
+    for (size_t p = 0; j + p < length; p++)
+        part[p] += weight[j + p] * (a[j + p] * a[j + p]);
+}
+
+static void square_piece(void *job, size_t piece, size_t worker)
+{
+    const struct tall *tall = job;
+    struct matrix a = dense_piece(tall->a, &tall->pieces, piece);
+    double part[8] = {0}, sum = 0;
+    (void)worker;
+    for (size_t i = 0; i < a.rows; i++)
+        line_square(&MATRIX_AT(a, i, 0), tall->scale, a.columns, part);
+    for (size_t p = 0; p < 8; p++)
+        sum += part[p];
+    tall->partial[piece] = sum;
+}
+
+double tall_square(fescue_context *context, struct matrix a, const double *weight)
+{
+    double partial[DENSE_MOST_PIECES], sum;
+    struct tall tall = tall_of(1, a, a, 0, a);
+    tall.scale = weight;
+    tall.partial = partial;
+    team_run(context, tall.pieces.count, square_piece, &tall);
     team_sum(context, partial, tall.pieces.count, 1, &sum);
     return sum;
 }

@@ -53,10 +53,17 @@ void matrix_scale_columns(struct matrix a, const double *scale); /* a_ij *= scal
 void tall_multiply(fescue_context *context, double alpha, struct matrix a, struct matrix b, double beta,
                    struct matrix c);
 void tall_cross(fescue_context *context, struct matrix a, struct matrix b, struct matrix c, double *work);
-/* to = from, its columns times `scale` or NULL; y = alpha x + beta y; the sum of a_ij b_ij. */
+/* c = alpha a b' + beta c for a small b. */
+void tall_multiply_transposed(fescue_context *context, double alpha, struct matrix a, struct matrix b, double beta,
+                              struct matrix c);
+/* to = from, its columns times `scale` or NULL; its lines times scale; its lines solved with a packed factor; y = alpha
+   x + beta y; the sums of a_ij b_ij and of weight_j a_ij^2. */
 void tall_copy(fescue_context *context, struct matrix from, const double *scale, struct matrix to);
+void tall_scale_lines(fescue_context *context, struct matrix from, const double *scale, struct matrix to);
+void tall_solve(fescue_context *context, const double *factor, struct matrix from, struct matrix to);
 void tall_add(fescue_context *context, double alpha, struct matrix x, double beta, struct matrix y);
 double tall_dot(fescue_context *context, struct matrix a, struct matrix b);
+double tall_square(fescue_context *context, struct matrix a, const double *weight);
 /* a = q r with r upper triangular and diag(r) >= 0; q overwrites a (lines x k, lines >= k); r is k x k or NULL data. A
    rank-deficient a still gives an orthonormal q. `work` from dense_work_size(lines, k) doubles. */
 fescue_status dense_qr(fescue_context *context, struct matrix a, struct matrix r, double *work);

@@ -58,7 +58,7 @@ static double steepness_of(struct alternating *at)
         for (size_t j = 0; j <= i; j++)
             MATRIX_AT(at->metric, i, j) = MATRIX_AT(at->metric, j, i) = at->inverse[packed_size(i) + j];
     tall_multiply(p->field->problem->context, 1, p->gradient, at->metric, 0, at->turned);
-    return matrix_dot(at->turned, p->gradient);
+    return tall_dot(p->field->problem->context, at->turned, p->gradient);
 }
 
 static void point_measure(struct alternating *at, double step)
@@ -112,7 +112,7 @@ static fescue_status sides_solve(struct projection *p)
     fescue_context *context = p->field->problem->context;
     struct matrix none = {0}, frame = p->spare;
     fescue_status status;
-    matrix_copy(p->weights, frame);
+    tall_copy(context, p->weights, NULL, frame);
     TRY(dense_qr(context, frame, none, p->dense));
     sweep_solve(&p->field->sweep, p->by_short, frame, p->ridge, p->basis, NULL);
     TRY(dense_qr(context, p->basis, none, p->dense));
@@ -126,13 +126,13 @@ static fescue_status alternating_step(void *state, bool *moved)
     struct alternating *at = state;
     struct projection *p = &at->projection;
     struct line line = line_start(p->field->problem, &at->measure, 0);
-    matrix_copy(p->basis, at->basis);
+    tall_copy(p->field->problem->context, p->basis, NULL, at->basis);
     fescue_status status = sides_solve(p);
     *moved = status == FESCUE_OK && line_accepts(&line, 1, p->objective);
     if (*moved) {
         point_measure(at, 1);
     } else {
-        matrix_copy(at->basis, p->basis);
+        tall_copy(p->field->problem->context, at->basis, NULL, p->basis);
         projection_evaluate(p);
     }
     return status;

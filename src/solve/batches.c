@@ -182,6 +182,13 @@ void batch_bands_run(struct batches *batches, team_task *task, void *job)
     team_run(batches->field->problem->context, batches->bands, task, job);
 }
 
+struct line_range batch_band(const struct batches *b, size_t band)
+{
+    const struct half *half = b->by_short;
+    return (struct line_range){half->block[band * half->blocks / b->bands],
+                               half->block[(band + 1) * half->blocks / b->bands]};
+}
+
 /* The first cell of the line whose position is not before `position`. */
 static uint64_t cell_find(const struct half *half, uint32_t line, uint32_t position)
 {
@@ -198,8 +205,8 @@ static uint64_t cell_find(const struct half *half, uint32_t line, uint32_t posit
 
 struct cell_range batch_cells(const struct batches *b, size_t band, size_t k)
 {
-    const struct half *half = b->by_short;
-    uint32_t line = batch_line(b, k), first = half->block[band * half->blocks / b->bands],
-             last = half->block[(band + 1) * half->blocks / b->bands];
-    return (struct cell_range){.from = cell_find(b->by_long, line, first), .to = cell_find(b->by_long, line, last)};
+    struct line_range lines = batch_band(b, band);
+    uint32_t line = batch_line(b, k);
+    return (struct cell_range){.from = cell_find(b->by_long, line, lines.first),
+                               .to = cell_find(b->by_long, line, lines.end)};
 }

@@ -34,12 +34,12 @@ void descent_close(struct descent *descent)
 fescue_status descent_turn(struct descent *descent)
 {
     struct projection *p = &descent->projection;
-    matrix_copy(p->weights, p->spare);
+    tall_copy(p->field->problem->context, p->weights, NULL, p->spare);
     fescue_status status = dense_svd(descent->field.problem->context, p->spare, p->spectrum, p->core, p->dense);
     if (status != FESCUE_OK)
         return status;
-    matrix_copy(p->basis, descent->trust.basis);
-    matrix_multiply(1, descent->trust.basis, false, p->core, false, 0, p->basis);
+    tall_copy(p->field->problem->context, p->basis, NULL, descent->trust.basis);
+    tall_multiply(p->field->problem->context, 1, descent->trust.basis, p->core, 0, p->basis);
     return FESCUE_OK;
 }
 

@@ -24,7 +24,7 @@
  * Departures: the remembered factor is ours. With lambda > 0 nothing changes: the ridge is on W alone.
  *
  * Cost an iteration: three passes (solve, residual with R W, tangent), and O(short r^2 + long r^2). Workspace: six
- * matrices of the shorter side, two of the longer. Parallel in the passes only.
+ * matrices of the shorter side, two of the longer. Parallel in the passes and in all that goes over the lines.
  */
 #include "solve/solve_internal.h"
 
@@ -55,8 +55,7 @@ struct grassmann_cg {
 
 static void direction_restart(struct grassmann_cg *cg)
 {
-    matrix_copy(cg->descent, cg->direction);
-    matrix_scale(-1, cg->direction);
+    tall_add(cg->work.context, -1, cg->descent, 0, cg->direction);
     cg->fresh = true;
 }
 
@@ -64,10 +63,11 @@ static void direction_restart(struct grassmann_cg *cg)
 static void point_measure(struct grassmann_cg *cg, double step)
 {
     struct projection *p = &cg->projection;
-    matrix_zero(cg->descent);
     if (projection_metric(p, cg->metric))
-        projection_precondition(cg->metric, p->gradient, cg->descent);
-    cg->steepness = matrix_dot(cg->descent, p->gradient);
+        tall_solve(cg->work.context, cg->metric, p->gradient, cg->descent);
+    else
+        matrix_zero(cg->descent);
+    cg->steepness = tall_dot(cg->work.context, cg->descent, p->gradient);
     cg->measure = (struct solve_measure){
         .objective = p->objective, .square = p->square, .gradient = sqrt(fmax(cg->steepness, 0)), .step = step};
 }
@@ -149,7 +149,7 @@ static fescue_status trial_evaluate(struct grassmann_cg *cg, const struct line *
 static fescue_status line_follow(struct grassmann_cg *cg, bool *moved)
 {
     struct projection *p = &cg->projection;
-    double slope = matrix_dot(p->gradient, cg->direction), held;
+    double slope = tall_dot(cg->work.context, p->gradient, cg->direction), held;
     fescue_status status = FESCUE_OK;
     *moved = false;
     sweep_tangent(&p->field->sweep, p->by_short, cg->direction, p->weights, p->basis, cg->still, NULL, NULL, &held);
@@ -157,8 +157,8 @@ static fescue_status line_follow(struct grassmann_cg *cg, bool *moved)
         return status;
     struct line line = line_start(p->field->problem, &cg->measure, slope);
     double t = -slope / (cg->factor * held);
-    matrix_copy(p->basis, cg->basis);
-    matrix_copy(p->gradient, cg->gradient);
+    tall_copy(cg->work.context, p->basis, NULL, cg->basis);
+    tall_copy(cg->work.context, p->gradient, NULL, cg->gradient);
     for (int trial = 0; trial < LINE_MOST_TRIALS && !*moved; trial++) {
         TRY(trial_evaluate(cg, &line, t, held));
         double better = -slope / (cg->factor * held);
@@ -174,7 +174,7 @@ static fescue_status line_follow(struct grassmann_cg *cg, bool *moved)
         point_measure(cg, t);
 done:
     if (!*moved) {
-        matrix_copy(cg->basis, p->basis);
+        tall_copy(cg->work.context, cg->basis, NULL, p->basis);
         projection_evaluate(p);
     }
     return status;
@@ -186,21 +186,20 @@ static void direction_choose(struct grassmann_cg *cg)
     struct projection *p = &cg->projection;
     struct matrix d = cg->direction;
     grassmann_project(&cg->work, p->basis, d);
-    double above = cg->steepness - matrix_dot(cg->descent, cg->gradient);
-    double below = matrix_dot(d, p->gradient) - matrix_dot(d, cg->gradient);
+    double above = cg->steepness - tall_dot(cg->work.context, cg->descent, cg->gradient);
+    double below = tall_dot(cg->work.context, d, p->gradient) - tall_dot(cg->work.context, d, cg->gradient);
     double beta = above / below;
     if (!(beta > 0) || !isfinite(beta)) {
         direction_restart(cg);
         return;
     }
-    matrix_scale(beta, d);
-    matrix_add(-1, cg->descent, d);
+    tall_add(cg->work.context, -1, cg->descent, beta, d);
     cg->fresh = false;
     /* Lengths in the metric: |D| is that of D W', |z| is the square root of the steepness. */
-    double descent = -matrix_dot(d, p->gradient);
-    matrix_multiply(1, p->weights, true, p->weights, false, 0, p->core);
-    matrix_multiply(1, d, false, p->core, false, 0, cg->gradient);
-    double length = sqrt(fmax(matrix_dot(d, cg->gradient), 0));
+    double descent = -tall_dot(cg->work.context, d, p->gradient);
+    tall_cross(cg->work.context, p->weights, p->weights, p->core, p->dense);
+    tall_multiply(cg->work.context, 1, d, p->core, 0, cg->gradient);
+    double length = sqrt(fmax(tall_dot(cg->work.context, d, cg->gradient), 0));
     if (!(descent > least_cosine * cg->measure.gradient * length))
         direction_restart(cg);
 }

@@ -41,10 +41,8 @@ static fescue_status residual_both_ways(struct growth *growth, const struct low_
     TRY(arena_open(context, &arena));
     scaled_left = matrix_carve(&arena, point->rows, point->rank);
     scaled_right = matrix_carve(&arena, point->columns, point->rank);
-    matrix_copy(point->left, scaled_left);
-    matrix_copy(point->right, scaled_right);
-    matrix_scale_columns(scaled_left, point->spectrum);
-    matrix_scale_columns(scaled_right, point->spectrum);
+    tall_copy(context, point->left, point->spectrum, scaled_left);
+    tall_copy(context, point->right, point->spectrum, scaled_right);
     sweep_residual(&growth->field.sweep, field_rows(&growth->field), scaled_left, point->right, none,
                    growth->row_residual, &square);
     sweep_residual(&growth->field.sweep, field_columns(&growth->field), scaled_right, point->left, none,
@@ -131,8 +129,8 @@ static fescue_status join(struct growth *growth, const struct low_rank *point, d
     matrix_scale_columns(core[0], grown->spectrum);
     matrix_multiply(1, core[0], false, core[1], true, 0, core[2]);
     TRY(dense_svd(context, core[2], grown->spectrum, core[3], work));
-    matrix_multiply(1, left, false, core[2], false, 0, grown->left);
-    matrix_multiply(1, right, false, core[3], false, 0, grown->right);
+    tall_multiply(context, 1, left, core[2], 0, grown->left);
+    tall_multiply(context, 1, right, core[3], 0, grown->right);
 done:
     arena_close(context, &arena);
     return status;

@@ -105,6 +105,7 @@ static void weights_follow(struct hessian *hessian, struct matrix d)
 {
     struct projection *p = hessian->projection;
     struct sweep *sweep = &p->field->sweep;
+    fescue_context *context = p->field->problem->context;
     struct half still = *p->by_long;
     struct follow_pass pass = {hessian, p->by_long};
     struct matrix none = {0};
@@ -114,15 +115,16 @@ static void weights_follow(struct hessian *hessian, struct matrix d)
     sweep_multiply(sweep, p->by_long, hessian->values, p->basis, hessian->across);
     if (hessian->exact) {
         sweep_multiply(sweep, p->by_long, hessian->long_residual, d, hessian->follow);
-        matrix_add(1, hessian->follow, hessian->across);
+        tall_add(context, 1, hessian->follow, 1, hessian->across);
     }
-    team_run(p->field->problem->context, p->by_long->blocks, follow_task, &pass);
+    team_run(context, p->by_long->blocks, follow_task, &pass);
 }
 
 void hessian_apply(struct hessian *hessian, struct matrix d, struct matrix product)
 {
     struct projection *p = hessian->projection;
     struct sweep *sweep = &p->field->sweep;
+    fescue_context *context = p->field->problem->context;
     struct half still = *p->by_short, moved = *p->by_short;
     struct matrix none = {0};
     double square;
@@ -135,9 +137,9 @@ void hessian_apply(struct hessian *hessian, struct matrix d, struct matrix produ
     sweep_multiply(sweep, p->by_short, hessian->values, p->weights, product);
     if (hessian->exact) {
         sweep_multiply(sweep, p->by_short, p->residual, hessian->follow, hessian->product);
-        matrix_add(1, hessian->product, product);
+        tall_add(context, 1, hessian->product, 1, product);
     }
-    matrix_multiply(1, p->basis, true, product, false, 0, p->core);
-    matrix_multiply(-1, p->basis, false, p->core, false, 1, product);
-    matrix_multiply(1, d, false, hessian->damping, false, -1, product);
+    tall_cross(context, p->basis, product, p->core, p->dense);
+    tall_multiply(context, -1, p->basis, p->core, 1, product);
+    tall_multiply(context, 1, d, hessian->damping, -1, product);
 }

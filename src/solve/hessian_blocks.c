@@ -22,6 +22,7 @@
 #include "solve/solve_internal.h"
 
 #include <math.h>
+#include <string.h>
 
 /* Of p W'W: enough to bound a step, little beside what a well-seen row has. */
 static const double lift = 0.01;
@@ -90,17 +91,36 @@ void hessian_blocks_start(struct hessian_blocks *blocks, struct matrix damping)
     struct projection *p = blocks->projection;
     const struct cells *target = &p->field->problem->target;
     double density = (double)target->count / ((double)target->rows * (double)target->columns);
-    matrix_multiply(lift * density, p->weights, true, p->weights, false, 0, blocks->core);
+    tall_cross(p->field->problem->context, p->weights, p->weights, blocks->core, p->dense);
+    matrix_scale(lift * density, blocks->core);
     matrix_add(1, damping, blocks->core);
     team_run(p->field->problem->context, p->by_short->blocks, blocks_task, blocks);
+}
+
+struct solve_pass {
+    const struct hessian_blocks *blocks;
+    struct matrix g, z;
+};
+
+static void solve_task(void *job, size_t at, size_t worker)
+{
+    const struct solve_pass *pass = job;
+    const struct half *half = pass->blocks->projection->by_short;
+    size_t rank = pass->z.columns;
+    (void)worker;
+    for (uint32_t i = half->block[at]; i < half->block[at + 1]; i++) {
+        double *line = &MATRIX_AT(pass->z, i, 0);
+        memcpy(line, &MATRIX_AT(pass->g, i, 0), rank * sizeof *line);
+        packed_solve(pass->blocks->factors + i * packed_size(rank), rank, line);
+    }
 }
 
 void hessian_blocks_precondition(struct hessian_blocks *blocks, struct matrix g, struct matrix z)
 {
     struct projection *p = blocks->projection;
-    matrix_copy(g, z);
-    for (size_t i = 0; i < z.rows; i++)
-        packed_solve(blocks->factors + i * packed_size(p->rank), p->rank, &MATRIX_AT(z, i, 0));
-    matrix_multiply(1, p->basis, true, z, false, 0, p->core);
-    matrix_multiply(-1, p->basis, false, p->core, false, 1, z);
+    struct solve_pass pass = {blocks, g, z};
+    fescue_context *context = p->field->problem->context;
+    team_run(context, p->by_short->blocks, solve_task, &pass);
+    tall_cross(context, p->basis, z, p->core, p->dense);
+    tall_multiply(context, -1, p->basis, p->core, 1, z);
 }

@@ -21,7 +21,7 @@
  * b is the rank and four more, rounded up to a full stride, which costs nothing, at most 256; q = 4. Where
  * b(q+1) would pass the shorter side one block as wide as that side is taken, and everything is exact; beyond 256 as
  * many blocks as fit. Cost: 2(q+1) + 3 passes of 2b flops a cell, and short (b(q+1))^2. Parallel in the
- * passes only.
+ * passes and in all that goes over the lines.
  */
 #include "solve/solve_internal.h"
 
@@ -90,26 +90,22 @@ static void krylov_carve(struct krylov *k, size_t rank)
     k->dense = arena_carve(&k->arena, dense_work_size(longer, all), sizeof(double));
 }
 
-static void scale_rows(struct matrix a, const double *scale)
-{
-    for (size_t i = 0; scale != NULL && i < a.rows; i++)
-        for (size_t j = 0; j < a.columns; j++)
-            MATRIX_AT(a, i, j) *= scale[i];
-}
-
 /* to = A from. */
 static void apply(struct krylov *k, struct matrix from, struct matrix to)
 {
     sweep_multiply(k->sparse->sweep, k->sparse->by_short, k->sparse->short_values, from, to);
-    scale_rows(to, k->sparse->short_scale);
+    if (k->sparse->short_scale != NULL)
+        tall_scale_lines(k->sparse->sweep->context, to, k->sparse->short_scale, to);
 }
 
 /* to = A'from; scaled: room of from's shape. */
 static void apply_transposed(struct krylov *k, struct matrix from, struct matrix scaled, struct matrix to)
 {
-    matrix_copy(from, scaled);
-    scale_rows(scaled, k->sparse->short_scale);
-    sweep_multiply(k->sparse->sweep, k->sparse->by_long, k->sparse->long_values, scaled, to);
+    if (k->sparse->short_scale != NULL) {
+        tall_scale_lines(k->sparse->sweep->context, from, k->sparse->short_scale, scaled);
+        from = scaled;
+    }
+    sweep_multiply(k->sparse->sweep, k->sparse->by_long, k->sparse->long_values, from, to);
 }
 
 static struct matrix columns_of(struct matrix a, size_t first, size_t count)
@@ -141,7 +137,7 @@ static fescue_status block_add(struct krylov *k, size_t b)
         project_out(k, b * k->width);
         status = dense_qr(k->sparse->sweep->context, k->raw, none, k->dense);
     }
-    matrix_copy(k->raw, columns_of(k->basis, b * k->width, k->width));
+    tall_copy(k->sparse->sweep->context, k->raw, NULL, columns_of(k->basis, b * k->width, k->width));
     return status;
 }
 

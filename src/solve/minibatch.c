@@ -44,11 +44,12 @@
  *
  * Cost a pass: cells (r^2 / 2 + 4 r), 8 r with variance reduction, and for each of its steps O(short r^2), most of it
  * a QR, and in the second half an SVD for the mean. Workspace: four matrices of the shorter side. Parallel over lines
- * for the weights, over bands of the shorter side for G (batches.c).
+ * for the weights, over bands of the shorter side for G (batches.c), over its lines for all that follows.
  */
 #include "solve/stream_internal.h"
 
 #include <math.h>
+#include <string.h>
 
 static const double cells_a_rank = 0.5; /* of an average line of the shorter side in a batch, over r */
 static const double lines_a_rank = 2;   /* lines of a batch over r, at least: for H of the batch */
@@ -100,6 +101,11 @@ void minibatch_carve(struct stream *stream)
 /* ---- G -------------------------------------------------------------------------------------------------------------
  */
 
+static fescue_context *context_of(const struct stream *stream)
+{
+    return stream->field->problem->context;
+}
+
 /* g += sign (u.w - x) w */
 static void cell_add(const double *u, const double *w, double x, double sign, double *g, size_t rank)
 {
@@ -122,7 +128,10 @@ static void band_add(void *argument, size_t band, size_t worker)
     const struct stream *stream = job->stream;
     const struct minibatch *own = stream->own;
     const struct batches *b = &stream->batches;
+    struct line_range lines = batch_band(b, band);
     (void)worker;
+    for (uint32_t i = lines.first; i < lines.end; i++)
+        memset(&MATRIX_AT(own->gradient, i, 0), 0, b->rank * sizeof(double));
     for (size_t k = 0; k < b->count; k++) {
         struct cell_range cells = batch_cells(b, band, k);
         const double *w = &MATRIX_AT(b->weights, k, 0);
@@ -143,10 +152,9 @@ static void gradient_sum(struct stream *stream, bool reduced)
 {
     struct minibatch *own = stream->own;
     struct gradient_job job = {.stream = stream, .reduced = reduced};
-    matrix_zero(own->gradient);
     batch_bands_run(&stream->batches, band_add, &job);
     if (reduced)
-        matrix_add((double)stream->batches.count, own->base_gradient, own->gradient);
+        tall_add(context_of(stream), (double)stream->batches.count, own->base_gradient, 1, own->gradient);
 }
 
 /* ---- a step --------------------------------------------------------------------------------------------------------
@@ -159,15 +167,21 @@ static double step_of(double seen, size_t rank, size_t lines, uint64_t t)
     return t == 0 || seen == 0 ? whole : fmin(whole, step_strongly_convex(convexity * seen, t));
 }
 
-/* The gradient becomes -D, still to be projected. */
-static void step_scale(struct stream *stream, uint64_t t)
+struct scale_job {
+    struct stream *stream;
+    uint64_t t;
+};
+
+static void block_scale(void *argument, size_t block, size_t worker)
 {
-    struct minibatch *own = stream->own;
-    const struct batches *b = &stream->batches;
+    const struct scale_job *job = argument;
+    const struct minibatch *own = job->stream->own;
+    const struct batches *b = &job->stream->batches;
     const struct half *half = b->by_short;
-    for (uint32_t i = 0; i < half->lines; i++) {
+    (void)worker;
+    for (uint32_t i = half->block[block]; i < half->block[block + 1]; i++) {
         double seen = (double)(half->start[i + 1] - half->start[i]) / (double)half->length;
-        double step = -step_of(seen, b->rank, b->count, t) / (double)b->count;
+        double step = -step_of(seen, b->rank, b->count, job->t) / (double)b->count;
         double *g = &MATRIX_AT(own->gradient, i, 0);
         packed_solve(own->moment.factor, b->rank, g);
         for (size_t k = 0; k < b->rank; k++)
@@ -175,19 +189,26 @@ static void step_scale(struct stream *stream, uint64_t t)
     }
 }
 
+/* The gradient becomes -D, still to be projected. */
+static void step_scale(struct stream *stream, uint64_t t)
+{
+    struct scale_job job = {stream, t};
+    team_run(context_of(stream), stream->batches.by_short->blocks, block_scale, &job);
+}
+
 /* U <- U Z A' where U~'U = A S Z': nearest to U~. */
 static fescue_status basis_turn(struct stream *stream)
 {
     struct minibatch *own = stream->own;
     struct matrix basis = stream->projection.basis;
-    matrix_multiply(1, own->base, true, basis, false, 0, own->core);
-    fescue_status status =
-        dense_svd(stream->field->problem->context, own->core, own->spectrum, own->core_right, stream->dense);
+    fescue_context *context = context_of(stream);
+    tall_cross(context, own->base, basis, own->core, stream->dense);
+    fescue_status status = dense_svd(context, own->core, own->spectrum, own->core_right, stream->dense);
     if (status != FESCUE_OK)
         return status;
     matrix_multiply(1, own->core_right, false, own->core, true, 0, stream->turn);
-    matrix_copy(basis, own->gradient);
-    matrix_multiply(1, own->gradient, false, stream->turn, false, 0, basis);
+    tall_copy(context, basis, NULL, own->gradient);
+    tall_multiply(context, 1, own->gradient, stream->turn, 0, basis);
     return FESCUE_OK;
 }
 
@@ -205,7 +226,7 @@ static fescue_status batch_step(struct stream *stream, const struct minibatch_ru
     gradient_sum(stream, reduced);
     step_scale(stream, t);
     grassmann_project(&stream->trust.work, p->basis, own->gradient);
-    stream->lost = !isfinite(matrix_norm(own->gradient));
+    stream->lost = !isfinite(tall_dot(context_of(stream), own->gradient, own->gradient));
     if (stream->lost)
         return FESCUE_OK;
     fescue_status status = grassmann_retract_qr(&stream->trust.work, p->basis, own->gradient, 1, p->basis);

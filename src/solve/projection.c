@@ -21,7 +21,7 @@
  * metric in which tangents of the subspace are compared: a turn of a direction counts as much as it moves X.
  *
  * Cost of an evaluation: |seen| (r^2 + 3r) for the weights, long r^3/6 for the Cholesky factors, 4r |seen| for residual
- * and product, short r^2. Parallel in the two passes only.
+ * and product, short r^2. Parallel in the two passes and in all that goes over the lines.
  */
 #include "solve/solve_internal.h"
 
@@ -71,25 +71,12 @@ void projection_carve(struct arena *arena, struct field *field, const struct low
     matrix_copy(rows_short ? point->left : point->right, projection->basis);
 }
 
-/* Spoils core. */
-static double penalty_of(const struct projection *projection)
-{
-    double penalty = 0, *size = projection->core.data;
-    memset(size, 0, projection->rank * sizeof *size);
-    for (size_t j = 0; j < projection->weights.rows; j++)
-        for (size_t k = 0; k < projection->rank; k++)
-            size[k] += MATRIX_AT(projection->weights, j, k) * MATRIX_AT(projection->weights, j, k);
-    for (size_t k = 0; k < projection->rank; k++)
-        penalty += projection->ridge[k] * size[k];
-    return penalty;
-}
-
 void projection_evaluate(struct projection *p)
 {
     fescue_context *context = p->field->problem->context;
     sweep_solve(&p->field->sweep, p->by_long, p->basis, p->ridge, p->weights, p->factors);
     sweep_residual(&p->field->sweep, p->by_short, p->basis, p->weights, p->gradient, p->residual, &p->square);
-    p->objective = 0.5 * p->square + 0.5 * penalty_of(p);
+    p->objective = 0.5 * p->square + 0.5 * tall_square(context, p->weights, p->ridge);
     tall_cross(context, p->basis, p->gradient, p->core, p->dense);
     tall_multiply(context, -1, p->basis, p->core, 1, p->gradient);
 }
@@ -99,13 +86,13 @@ fescue_status projection_write(struct projection *p, struct low_rank *point)
 {
     struct matrix of_short = p->rows_short ? point->left : point->right;
     struct matrix of_long = p->rows_short ? point->right : point->left;
-    matrix_copy(p->weights, p->spare);
     fescue_context *context = p->field->problem->context;
+    tall_copy(context, p->weights, NULL, p->spare);
     fescue_status status = dense_svd(context, p->spare, p->spectrum, p->core, p->dense);
     if (status != FESCUE_OK)
         return status;
     tall_multiply(context, 1, p->basis, p->core, 0, of_short);
-    matrix_copy(p->spare, of_long);
+    tall_copy(context, p->spare, NULL, of_long);
     memcpy(point->spectrum, p->spectrum, p->rank * sizeof *p->spectrum);
     return FESCUE_OK;
 }
@@ -123,11 +110,4 @@ bool projection_metric(struct projection *p, double *factor)
             factor[packed_size(i) + j] = MATRIX_AT(p->core, i, j);
     packed_cholesky(factor, p->rank);
     return true;
-}
-
-void projection_precondition(const double *factor, struct matrix g, struct matrix z)
-{
-    matrix_copy(g, z);
-    for (size_t i = 0; i < z.rows; i++)
-        packed_solve(factor, z.columns, &MATRIX_AT(z, i, 0));
 }

@@ -184,8 +184,7 @@ static fescue_status objective_of(struct field *field, enum solve_loss loss, con
     matrix_reserve(&arena, point->rows, point->rank);
     TRY(arena_open(problem->context, &arena));
     struct matrix scaled = matrix_carve(&arena, point->rows, point->rank);
-    matrix_copy(point->left, scaled);
-    matrix_scale_columns(scaled, point->spectrum);
+    tall_copy(problem->context, point->left, point->spectrum, scaled);
     sweep_errors(&field->sweep, field_rows(field), scaled, point->right, &measure->square, &absolute);
     for (size_t k = 0; k < point->rank; k++)
         size += point->spectrum[k] * point->spectrum[k];

@@ -122,10 +122,9 @@ void projection_evaluate(struct projection *projection);
 /* X in orthonormal form. Spoils spare and core. */
 fescue_status projection_write(struct projection *projection, struct low_rank *point);
 
-/* The metric in which the longer side's scale does not count: packed Cholesky factor of W'W, and z = g (W'W)^-1.
-   False when W is zero; factor and z are then left alone. */
+/* The metric in which the longer side's scale does not count: packed Cholesky factor of W'W, with which tall_solve
+   makes g (W'W)^-1 of g. False when W is zero; the factor is then left alone. */
 bool projection_metric(struct projection *projection, double *factor);
-void projection_precondition(const double *factor, struct matrix g, struct matrix z);
 
 /* ---- second order --------------------------------------------------------------------------------------------------
  */

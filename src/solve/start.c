@@ -77,7 +77,7 @@ static fescue_status other_side_fit(struct field *field, struct low_rank *point)
     for (size_t k = 0; k < point->rank; k++)
         projection.ridge[k] = start_ridge * density;
     projection_evaluate(&projection);
-    double size = matrix_dot(projection.weights, projection.weights), norm = problem->norm;
+    double size = tall_dot(problem->context, projection.weights, projection.weights), norm = problem->norm;
     double seen = norm * norm - projection.square - 2 * start_ridge * density * size;
     TRY(projection_write(&projection, point));
     if (seen > 0)

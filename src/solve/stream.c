@@ -82,7 +82,7 @@ static fescue_status stream_begin(struct stream *stream)
 {
     struct random_stream random = random_open(1, RANDOM_BATCH, UINT32_MAX); /* no pass has this number */
     trust_start(&stream->trust);
-    matrix_copy(stream->projection.basis, stream->best);
+    tall_copy(stream->trust.work.context, stream->projection.basis, NULL, stream->best);
     stream->measure = stream->trust.measure;
     stream->running = stream->measure.objective;
     if (is_warm(stream)) {
@@ -122,7 +122,7 @@ void stream_measure(const void *state, struct solve_measure *measure)
 /* The projection stands at the best point, evaluated. */
 static void best_recall(struct stream *stream)
 {
-    matrix_copy(stream->best, stream->projection.basis);
+    tall_copy(stream->trust.work.context, stream->best, NULL, stream->projection.basis);
     trust_start(&stream->trust);
 }
 
@@ -151,7 +151,7 @@ static fescue_status pass_make(struct stream *stream)
     bool worthy = p->objective < (1 - (stream->passes <= PASSES_FEW ? worth : worth_later)) * stream->running;
     stream->running = p->objective;
     if (p->objective <= stream->measure.objective) {
-        matrix_copy(p->basis, stream->best);
+        tall_copy(stream->trust.work.context, p->basis, NULL, stream->best);
         stream->measure = stream->trust.measure;
         stream->measure.step = 1;
     }

@@ -45,6 +45,11 @@ void batch_lines_run(struct batches *batches, team_task *task, void *job);
 double *batch_room(const struct batches *batches, size_t worker);
 /* Calls the task for every band. */
 void batch_bands_run(struct batches *batches, team_task *task, void *job);
+/* The lines of the shorter side that are a band. */
+struct line_range {
+    uint32_t first, end;
+};
+struct line_range batch_band(const struct batches *batches, size_t band);
 /* The cells, by_long, of the batch's k-th line that lie in a band: from .. to - 1. */
 struct cell_range {
     uint64_t from, to;

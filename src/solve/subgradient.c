@@ -39,7 +39,8 @@
  *
  * Departures from the source of the step: a step a line, by the line's own bound; d measured. Cost an iteration: three
  * rounds of weights and r multiplications a cell for S, five rounds where F is measured. Workspace: of the longer side
- * four matrices, of the shorter six. Parallel over lines and bands (batches.c).
+ * four matrices, of the shorter six. Parallel over lines and bands (batches.c), and over the lines of the shorter
+ * side for all that follows.
  */
 #include "solve/stream_internal.h"
 
@@ -154,7 +155,7 @@ static struct absolute_sums weights_fit(struct subgradient *s, struct matrix bas
         sums.absolute += s->sums[2 * j];
         sums.square += s->sums[2 * j + 1];
     }
-    sums.objective = sums.absolute + 0.5 * s->field->problem->lambda * matrix_dot(weights, weights);
+    sums.objective = sums.absolute + 0.5 * s->field->problem->lambda * tall_dot(s->work.context, weights, weights);
     return sums;
 }
 
@@ -171,7 +172,12 @@ static void band_add(void *argument, size_t band, size_t worker)
     const struct sign_job *job = argument;
     const struct subgradient *s = job->s;
     const struct batches *b = &s->batches;
+    struct line_range lines = batch_band(b, band);
     (void)worker;
+    for (uint32_t i = lines.first; i < lines.end; i++) {
+        memset(&MATRIX_AT(s->gradient, i, 0), 0, b->rank * sizeof(double));
+        s->clipped[i] = 0;
+    }
     for (size_t k = 0; k < b->count; k++) {
         struct cell_range cells = batch_cells(b, band, k);
         const double *w = &MATRIX_AT(b->weights, k, 0);
@@ -194,8 +200,6 @@ static void band_add(void *argument, size_t band, size_t worker)
 static void signs_sum(struct subgradient *s, struct matrix basis)
 {
     struct sign_job job = {.s = s, .basis = basis};
-    matrix_zero(s->gradient);
-    memset(s->clipped, 0, basis.rows * sizeof *s->clipped);
     batch_bands_run(&s->batches, band_add, &job);
 }
 
@@ -222,11 +226,11 @@ static void best_measure(struct subgradient *s, const struct absolute_sums *sums
 {
     struct projection *p = &s->best;
     double steepness = 0;
-    matrix_copy(s->gradient, p->gradient);
+    tall_copy(s->work.context, s->gradient, NULL, p->gradient);
     grassmann_project(&s->work, p->basis, p->gradient);
     if (projection_metric(p, s->metric)) {
-        projection_precondition(s->metric, p->gradient, s->gradient);
-        steepness = matrix_dot(s->gradient, p->gradient);
+        tall_solve(s->work.context, s->metric, p->gradient, s->gradient);
+        steepness = tall_dot(s->work.context, s->gradient, p->gradient);
     }
     s->at.measure = (struct solve_measure){
         .objective = sums->objective, .square = sums->square, .gradient = sqrt(fmax(steepness, 0)), .step = step};
@@ -234,13 +238,13 @@ static void best_measure(struct subgradient *s, const struct absolute_sums *sums
 
 static void mean_measure(struct subgradient *s)
 {
-    matrix_copy(s->weights, s->best.spare);
+    tall_copy(s->work.context, s->weights, NULL, s->best.spare);
     struct absolute_sums sums = weights_fit(s, s->mean, s->best.spare, ROUNDS_MEASURE);
     signs_measure(s, s->mean);
     if (!(sums.objective < s->at.measure.objective))
         return;
-    matrix_copy(s->mean, s->best.basis);
-    matrix_copy(s->best.spare, s->best.weights);
+    tall_copy(s->work.context, s->mean, NULL, s->best.basis);
+    tall_copy(s->work.context, s->best.spare, NULL, s->best.weights);
     best_measure(s, &sums, 1);
 }
 
@@ -309,13 +313,14 @@ done:
 /* ---- an iteration --------------------------------------------------------------------------------------------------
  */
 
-/* S becomes -D, still to be projected. */
-static void step_scale(struct subgradient *s)
+static void block_scale(void *job, size_t block, size_t worker)
 {
+    const struct subgradient *s = job;
     const struct batches *b = &s->batches;
     const struct half *half = b->by_short;
     double rank = (double)b->rank, zeta = curvature_zeta(0, INFINITY);
-    for (uint32_t i = 0; i < half->lines; i++) {
+    (void)worker;
+    for (uint32_t i = half->block[block]; i < half->block[block + 1]; i++) {
         double seen = (double)(half->start[i + 1] - half->start[i]) / (double)half->length;
         double most = sqrt(rank) * (seen + (rank + 2) / (double)b->count);
         double distance = distance_scales * s->scales[i]; /* 0: the line is met */
@@ -325,6 +330,12 @@ static void step_scale(struct subgradient *s)
         for (size_t k = 0; k < b->rank; k++)
             g[k] *= step;
     }
+}
+
+/* S becomes -D, still to be projected. */
+static void step_scale(struct subgradient *s)
+{
+    team_run(s->work.context, s->batches.by_short->blocks, block_scale, s);
 }
 
 /* One batch: its weights, S, the step. *lost when that leads nowhere. */
@@ -344,7 +355,7 @@ static fescue_status batch_step(struct subgradient *s, bool *lost)
     signs_sum(s, s->basis);
     step_scale(s);
     grassmann_project(&s->work, s->basis, s->gradient);
-    *lost = !isfinite(matrix_norm(s->gradient));
+    *lost = !isfinite(tall_dot(s->work.context, s->gradient, s->gradient));
     return *lost ? FESCUE_OK : grassmann_retract_qr(&s->work, s->basis, s->gradient, 1, s->basis);
 }
 

@@ -68,16 +68,22 @@ static void point_measure(struct trust *trust, double step)
     struct projection *p = trust->projection;
     double steepness = 0;
     if (projection_metric(p, trust->metric)) {
-        projection_precondition(trust->metric, p->gradient, trust->descent);
-        steepness = matrix_dot(trust->descent, p->gradient);
+        tall_solve(trust->work.context, trust->metric, p->gradient, trust->descent);
+        steepness = tall_dot(trust->work.context, trust->descent, p->gradient);
     }
     trust->measure = (struct solve_measure){
         .objective = p->objective, .square = p->square, .gradient = sqrt(fmax(steepness, 0)), .step = step};
 }
 
+static double weights_norm(const struct trust *trust)
+{
+    struct matrix weights = trust->projection->weights;
+    return sqrt(tall_dot(trust->work.context, weights, weights));
+}
+
 void trust_widen(struct trust *trust)
 {
-    trust->radius = first_radius * matrix_norm(trust->projection->weights);
+    trust->radius = first_radius * weights_norm(trust);
 }
 
 void trust_start(struct trust *trust)
@@ -105,7 +111,7 @@ void trust_resume(struct trust *trust)
 /* <a, b> in the metric: the inner product of a W' and b W'. */
 static double metric_dot(struct trust *trust, struct matrix a, struct matrix b)
 {
-    matrix_multiply(1, a, true, b, false, 0, trust->projection->core);
+    tall_cross(trust->work.context, a, b, trust->projection->core, trust->work.dense);
     return matrix_dot(trust->projection->core, trust->gram);
 }
 
@@ -126,8 +132,8 @@ static double boundary(const struct inner *inner, double radius)
 /* Moves eta by t d, and the slope with it. */
 static void step_extend(struct trust *trust, double t)
 {
-    matrix_add(t, trust->direction, trust->step);
-    matrix_add(t, trust->curved, trust->slope);
+    tall_add(trust->work.context, t, trust->direction, 1, trust->step);
+    tall_add(trust->work.context, t, trust->curved, 1, trust->slope);
 }
 
 /* eta and g + H eta; true when eta lies on the boundary. */
@@ -137,16 +143,15 @@ static bool model_minimise(struct trust *trust, const struct trust_rules *rules)
     double norm = p->field->problem->norm, gradient = trust->measure.gradient;
     struct inner inner = {0};
     matrix_zero(trust->step);
-    matrix_copy(p->gradient, trust->slope);
+    tall_copy(trust->work.context, p->gradient, NULL, trust->slope);
     hessian_blocks_precondition(&trust->blocks, trust->slope, trust->descent);
-    inner.fall = matrix_dot(trust->slope, trust->descent);
+    inner.fall = tall_dot(trust->work.context, trust->slope, trust->descent);
     double share = fmin(rules->accuracy, norm > 0 ? 10 * gradient / norm : 1), enough = inner.fall * share * share;
-    matrix_copy(trust->descent, trust->direction);
-    matrix_scale(-1, trust->direction);
+    tall_add(trust->work.context, -1, trust->descent, 0, trust->direction);
     inner.length = metric_dot(trust, trust->direction, trust->direction);
     for (unsigned k = 0; k < rules->inner_most; k++) {
         hessian_apply(&trust->hessian, trust->direction, trust->curved);
-        double bend = matrix_dot(trust->direction, trust->curved), t = inner.fall / bend;
+        double bend = tall_dot(trust->work.context, trust->direction, trust->curved), t = inner.fall / bend;
         double reach = inner.step + 2 * t * inner.along + t * t * inner.length;
         if (!(bend > 0) || !(reach < trust->radius * trust->radius)) {
             step_extend(trust, boundary(&inner, trust->radius));
@@ -155,11 +160,10 @@ static bool model_minimise(struct trust *trust, const struct trust_rules *rules)
         step_extend(trust, t);
         inner.step = reach;
         hessian_blocks_precondition(&trust->blocks, trust->slope, trust->descent);
-        double fall = matrix_dot(trust->slope, trust->descent), beta = fall / inner.fall;
+        double fall = tall_dot(trust->work.context, trust->slope, trust->descent), beta = fall / inner.fall;
         if (!(fall > enough))
             break;
-        matrix_scale(beta, trust->direction);
-        matrix_add(-1, trust->descent, trust->direction);
+        tall_add(trust->work.context, -1, trust->descent, beta, trust->direction);
         inner.along = metric_dot(trust, trust->step, trust->direction);
         inner.length = metric_dot(trust, trust->direction, trust->direction);
         inner.fall = fall;
@@ -172,7 +176,8 @@ static fescue_status step_judge(struct trust *trust, bool at_boundary, bool *tak
 {
     struct projection *p = trust->projection;
     struct line line = line_start(p->field->problem, &trust->measure, 0);
-    double promised = -0.5 * (matrix_dot(trust->step, trust->slope) + matrix_dot(trust->step, p->gradient));
+    double promised = -0.5 * (tall_dot(trust->work.context, trust->step, trust->slope) +
+                              tall_dot(trust->work.context, trust->step, p->gradient));
     fescue_status status = grassmann_retract_qr(&trust->work, trust->basis, trust->step, 1, p->basis);
     if (status != FESCUE_OK)
         return status;
@@ -204,7 +209,7 @@ fescue_status trust_step(struct trust *trust, const struct trust_rules *rules, b
     double gradient = trust->measure.gradient;
     bool at_boundary = false;
     bool noise = gradient <= (trust->slow ? noise_likely : noise_certain) * sqrt(trust->measure.square);
-    matrix_copy(p->basis, trust->basis);
+    tall_copy(trust->work.context, p->basis, NULL, trust->basis);
     for (int trial = 0; trial < REFUSALS_MOST && !*moved; trial++) {
         hessian_start(&trust->hessian, rules->exact && noise);
         if (trial == 0)
@@ -212,13 +217,13 @@ fescue_status trust_step(struct trust *trust, const struct trust_rules *rules, b
         at_boundary = model_minimise(trust, rules);
         TRY(step_judge(trust, at_boundary, moved));
         if (!*moved) {
-            matrix_copy(trust->basis, p->basis);
+            tall_copy(trust->work.context, trust->basis, NULL, p->basis);
             projection_evaluate(p);
         }
     }
-    trust->radius = fmin(trust->radius, most_radius * matrix_norm(p->weights));
+    trust->radius = fmin(trust->radius, most_radius * weights_norm(trust));
     if (*moved) {
-        point_measure(trust, sqrt(matrix_dot(trust->step, trust->step)));
+        point_measure(trust, sqrt(tall_dot(trust->work.context, trust->step, trust->step)));
         trust->slow |= !at_boundary && trust->measure.gradient > slow_above * gradient;
     }
 done:

@@ -32,7 +32,7 @@
 void __real_team_run(fescue_context *context, size_t blocks, team_task *task, void *job);
 void __wrap_team_run(fescue_context *context, size_t blocks, team_task *task, void *job);
 
-enum { TASKS = 256, EMPTY_ROUNDS = 2000 };
+enum { TASKS = 256, EMPTY_ROUNDS = 2000, ITERATIONS = 12 };
 
 /* One worker's seconds in blocks, and those of the longer of two workers. */
 static struct share {
@@ -134,15 +134,16 @@ struct stand {
     double call;
 };
 
-typedef void stand_work(struct stand *stand, const char *solver);
+typedef double stand_work(struct stand *stand, const char *solver); /* seconds of it that count; 0: all */
 
-static void fit_run(struct stand *stand, const char *solver)
+static double fit_run(struct stand *stand, const char *solver)
 {
     struct fit_outcome outcome;
-    rating_fit(&stand->rating, solver, RATING_RANK, 2, FIT_ITERATIONS, &outcome);
+    rating_fit(&stand->rating, solver, RATING_RANK, 2, ITERATIONS, &outcome);
+    return outcome.cpu;
 }
 
-static void pack_load(struct stand *stand, const char *none)
+static double pack_load(struct stand *stand, const char *none)
 {
     fescue_context *context;
     fescue_table *table;
@@ -154,10 +155,11 @@ static void pack_load(struct stand *stand, const char *none)
     bench_check(context, table_read(context, stand->pack, &reading, &table));
     table_destroy(&table);
     fescue_context_destroy(&context);
+    return 0;
 }
 
 /* Load, choose, fit, judge, write. */
-static void job_run(struct stand *stand, const char *solver)
+static double job_run(struct stand *stand, const char *solver)
 {
     struct fescue_options options;
     fescue_context *context;
@@ -177,6 +179,7 @@ static void job_run(struct stand *stand, const char *solver)
     fescue_fill_destroy(&fill);
     fescue_table_destroy(&table);
     fescue_context_destroy(&context);
+    return 0;
 }
 
 static int task_order(const void *a, const void *b)
@@ -197,17 +200,20 @@ static void share_report(struct stand *stand, const char *what, const char *solv
     memset(tasks, 0, sizeof tasks);
     looks = 0;
     double begin = clock_own();
-    work(stand, solver);
-    share.all = clock_own() - begin - (double)looks * clock_cost;
+    double counted = work(stand, solver), all = clock_own() - begin;
+    share.all = (counted > 0 ? counted : all) - (double)looks * clock_cost;
     double serial = share.all - share.blocks, path = serial + share.longer;
-    printf("%-34s cells %.0e  %7.2f s  %7llu calls of %5.0f us  serial %5.2f %%  uneven %5.2f %%  bound %.3f  with calls %.3f\n", name,
-           (double)stand->rating.cells.count, share.all, (unsigned long long)share.calls, share.calls == 0 ? 0 : 1e6 * share.blocks / (double)share.calls, 100 * serial / share.all,
+    printf("%-34s cells %.0e  %7.2f s  %7llu calls of %5.0f us  serial %5.2f %%  uneven %5.2f %%  bound %.3f  with "
+           "calls %.3f\n",
+           name, (double)stand->rating.cells.count, share.all, (unsigned long long)share.calls,
+           share.calls == 0 ? 0 : 1e6 * share.blocks / (double)share.calls, 100 * serial / share.all,
            100 * (share.longer - share.blocks / 2) / share.all, share.all / path,
            share.all / (path + (double)share.calls * stand->call));
     qsort(tasks, TASKS, sizeof *tasks, task_order);
     for (int k = 0; getenv("TASKS") && k < 8 && tasks[k].task != NULL; k++)
-        printf("    TASK %p all %.4f over %.4f calls %llu blocks %llu\n", (void *)tasks[k].task, tasks[k].all, tasks[k].longer - tasks[k].all / 2,
-               (unsigned long long)tasks[k].calls, (unsigned long long)tasks[k].blocks);
+        printf("    TASK %p all %.4f over %.4f calls %llu blocks %llu\n", (void *)tasks[k].task, tasks[k].all,
+               tasks[k].longer - tasks[k].all / 2, (unsigned long long)tasks[k].calls,
+               (unsigned long long)tasks[k].blocks);
     fflush(stdout);
 }
 
@@ -225,8 +231,9 @@ static void pack_make(struct stand *stand)
         for (uint64_t k = half->start[i]; k < half->start[i + 1]; k++)
             row[k] = i;
     fescue_options_standard(&options);
-    bench_check(context, fescue_table_from_cells(context, stand->rating.cells.rows, stand->rating.cells.columns,
-                                                 stand->rating.cells.count, row, half->across, half->value, &options, &table));
+    bench_check(context,
+                fescue_table_from_cells(context, stand->rating.cells.rows, stand->rating.cells.columns,
+                                        stand->rating.cells.count, row, half->across, half->value, &options, &table));
     bench_check(context, fescue_table_pack(table, stand->pack, &text));
     fescue_text_free(context, &text);
     fescue_table_destroy(&table);

@@ -160,7 +160,7 @@ static void the_blocks_of_a_full_table(void **state)
     hessian_blocks_start(&bed.trust.blocks, bed.trust.hessian.damping);
     hessian_blocks_precondition(&bed.trust.blocks, bed.a, bed.image);
     assert_true(projection_metric(&bed.projection, bed.trust.metric));
-    projection_precondition(bed.trust.metric, bed.a, bed.b);
+    tall_solve(bed.field.problem->context, bed.trust.metric, bed.a, bed.b);
     for (size_t i = 0; i < bed.b.rows; i++) {
         double leverage = 0;
         for (size_t k = 0; k < 3; k++)
