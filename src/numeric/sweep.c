@@ -202,7 +202,7 @@ void sweep_residual(struct sweep *sweep, const struct half *half, struct matrix 
     factors_open(&job, 2, (const struct matrix[]){left, right}, (struct sweep_rows *const[]){&job.left, &job.right});
     job.product = gradient;
     job.residual = residual;
-    sweep_slabs_run(&job, job_kernel(&job)->residual, sums);
+    sweep_slabs_run(&job, sweep->kernels->residual, sums);
     *square = sums[0];
 }
 
@@ -213,7 +213,7 @@ void sweep_errors(struct sweep *sweep, const struct half *half, struct matrix le
     double sums[SWEEP_SUMS];
     assert(left.rows == half->lines && left.columns == right.columns);
     factors_open(&job, 2, (const struct matrix[]){left, right}, (struct sweep_rows *const[]){&job.left, &job.right});
-    sweep_slabs_run(&job, job_kernel(&job)->residual, sums);
+    sweep_slabs_run(&job, sweep->kernels->residual, sums);
     *square = sums[0];
     *absolute = sums[1];
 }

@@ -24,6 +24,11 @@
 #define SPREAD_LOAD(p) _mm256_broadcast_pd((const __m128d *)(const void *)(p))
 #define SPREAD_LANE(x, c) _mm256_permute_pd(x, 0xf * (c))
 #define TWO_PASSES(n) ((n) <= 2)
+#define TURNED 4
+#define TURNED_MOST 2
+#define TURNED_WIDTHS(X) X(8, 2, false)
+#define MADD_TURNED(a, b, c) (turned) _mm256_fmadd_pd(a, b, c)
+#define PIECE_REPEAT(x) (turned) _mm256_broadcast_pd((const __m128d *)(const void *)(x))
 #define COMMON_REGISTERS(X) X(2) X(4) X(6) X(8)
 #define SWEEP_KERNEL sweep_avx2_double
 #include "numeric/sweep_kernel.h"

@@ -24,6 +24,11 @@
 #define SPREAD_LOAD(p) _mm256_broadcast_ps((const __m128 *)(const void *)(p))
 #define SPREAD_LANE(x, c) _mm256_permute_ps(x, 0x55 * (c))
 #define TWO_PASSES(n) 1
+#define TURNED 8
+#define TURNED_MOST 1
+#define TURNED_WIDTHS(X) X(8, 1, false)
+#define MADD_TURNED(a, b, c) (turned) _mm256_fmadd_ps(a, b, c)
+#define PIECE_REPEAT(x) (turned) _mm256_broadcast_ps((const __m128 *)(const void *)(x))
 #define COMMON_REGISTERS(X) X(1) X(2) X(3) X(4)
 #define SWEEP_KERNEL sweep_avx2_single
 #include "numeric/sweep_kernel.h"

@@ -19,9 +19,15 @@
 #define GROUP 4
 #define MADD(a, b, c) _mm512_fmadd_pd(a, b, c)
 #define MADD_WIDE(a, b, c) _mm512_fmadd_pd(a, b, c)
+#define MADD_SQUARES(a, b, c) _mm256_fmadd_pd(a, b, c)
 #define WIDES 1
 #define NARROW &sweep_avx2_double /* whose four lanes need no halving of sums */
 #define TWO_PASSES(n) 0
+#define TURNED 8
+#define TURNED_MOST 2
+#define TURNED_WIDTHS(X) X(8, 1, false) X(16, 2, false)
+#define MADD_TURNED(a, b, c) (turned) _mm512_fmadd_pd(a, b, c)
+#define PIECE_REPEAT(x) (turned) _mm512_broadcast_f64x2(_mm_loadu_pd(x))
 #define COMMON_REGISTERS(X) X(1) X(2) X(3) X(4)
 #define SWEEP_KERNEL sweep_avx512_double
 #include "numeric/sweep_kernel.h"

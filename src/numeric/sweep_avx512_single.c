@@ -28,6 +28,16 @@
 #define SPREAD_LOAD(p) _mm256_broadcast_ps((const __m128 *)(const void *)(p))
 #define SPREAD_LANE(x, c) _mm256_permute_ps(x, 0x55 * (c))
 #define TWO_PASSES(n) 1
+#define TURNED 16
+#define TURNED_MOST 2
+#define TURNED_WIDTHS(X) X(8, 1, true) X(16, 1, false) X(32, 2, false)
+#define MADD_TURNED(a, b, c) (turned) _mm512_fmadd_ps(a, b, c)
+#define PIECE_REPEAT(x) (turned) _mm512_broadcast_f32x4(_mm_loadu_ps(x))
+#define EIGHT(x) _mm512_castps256_ps512(_mm256_loadu_ps(x))
+#define HALVES_JOIN(low, high) (turned) _mm512_insertf32x8(EIGHT(low), _mm256_loadu_ps(high), 1)
+/* pieces 0 and 1 of eight numbers as 0 0 1 1, and back */
+#define HALVES_TWICE(x) (turned) _mm512_shuffle_f32x4(EIGHT(x), EIGHT(x), 0x50)
+#define HALVES_ONCE(x) (cells) _mm256_blend_ps(_mm512_castps512_ps256(x), _mm512_extractf32x8_ps(x, 1), 0xf0)
 #define COMMON_REGISTERS(X) X(1) X(2) X(3) X(4)
 #define SWEEP_KERNEL sweep_avx512_single
 #include "numeric/sweep_kernel.h"

@@ -39,7 +39,7 @@ typedef void sweep_block(const struct sweep_job *job, size_t block, size_t worke
 struct sweep_kernel {
     size_t lanes; /* numbers in a register */
     sweep_block *residual, *multiply, *tangent, *solve;
-    const struct sweep_kernel *narrow; /* for rows of 8 numbers, all but solve; or NULL for itself */
+    const struct sweep_kernel *narrow; /* for multiply and tangent of rows of 8 numbers; or NULL for itself */
 };
 extern const struct sweep_kernel sweep_portable_double, sweep_portable_single;
 #if defined(__x86_64__)

@@ -12,6 +12,9 @@
  *     TWO_PASSES(n)        whether rows of n registers are gone through twice for residual and gradient
  *     SPREAD               how many numbers SPREAD_LOAD reads, so that SPREAD_LANE gives each in all lanes; or not
  *     NARROW               address of the table to take for rows of 8 numbers; or not
+ *     TURNED               numbers of a register whose rows are turned; or not
+ *     TURNED_..            what else sweep_kernel_turned.h needs for it: TURNED_MOST, TURNED_WIDTHS(X), MADD_TURNED,
+ *                          PIECE_REPEAT, and HALVES_.. where rows are paired
  *     COMMON_REGISTERS(X)  X(n) for each number n of registers a row that deserves loops of its own
  *     SWEEP_KERNEL         the name of the table this gives
  *
@@ -53,10 +56,12 @@
  *     rows from a core's own cache          0.4         1.0
  *     ends of lines                         0.6         0.9
  *
- * Without gain there: sixteen floats a register (512 bits are two halves, and the tree is twice as wide); a flat stream
- * of groups that knows no ends of lines (what leads it costs as much as it saves); positions multiplied beforehand
+ * Residuals and gradients of the most common widths are made otherwise, and faster (sweep_kernel_turned.h). Without
+ * gain here: sixteen floats a register (512 bits are two halves, and the tree is twice as wide); a flat stream of
+ * groups that knows no ends of lines (what leads it costs as much as it saves); positions multiplied beforehand
  * (reading what was just written takes 11 cycles more); the second pass some groups behind the first in one loop;
- * columns in order of their popularity (3 to 6 per cent).
+ * columns in order of their popularity (3 to 6 per cent, and none where rows are turned); values and positions asked
+ * for past the caches.
  *
  * A line is worked on by one worker from its first to its last cell, so that bits depend on REAL, LANES and MADD only.
  */
@@ -86,6 +91,9 @@ typedef int32_t BITS;
 #endif
 typedef REGISTER_OF(BITS, GROUP) bits;
 
+#ifndef MADD_SQUARES
+#define MADD_SQUARES MADD_WIDE
+#endif
 #define REAL_EPSILON (sizeof(REAL) == sizeof(double) ? DBL_EPSILON : (double)FLT_EPSILON)
 #define INLINE static inline __attribute__((always_inline))
 
@@ -270,7 +278,7 @@ INLINE double squares_sum(const squares sums[WIDES])
 INLINE void squares_add(squares sum[WIDES], const cells *x, const cells *y)
 {
     for (int part = 0; part < WIDES; part++)
-        sum[part] += WIDEN(*x, part) * WIDEN(*y, part);
+        sum[part] = MADD_SQUARES(WIDEN(*x, part), WIDEN(*y, part), sum[part]);
 }
 
 /* What the loops over the lines of a block need, away from where a store could change it. */
@@ -425,6 +433,14 @@ INLINE void group_gather(const cells *r, const REAL *const row[GROUP], wide *g, 
     rows_gather(each, row, g, registers);
 }
 
+/* square += r^2, and absolute += |r| unless it is NULL */
+INLINE void numbers_measure(const cells *r, squares *square, squares *absolute)
+{
+    squares_add(square, r, r);
+    for (int part = 0; absolute != NULL && part < WIDES; part++) /* without its sign */
+        absolute[part] += (squares)((squares_bits)WIDEN(*r, part) & INT64_MAX);
+}
+
 /* number_c = l . row_c - value_c, and the gradient, unless g is NULL. */
 INLINE void chunk_residual(const struct span *span, uint64_t k, struct chunk chunk, const vec *l, wide *g, REAL *number,
                            squares *square, squares *absolute, const bool kept, const size_t registers)
@@ -436,9 +452,7 @@ INLINE void chunk_residual(const struct span *span, uint64_t k, struct chunk chu
         *(cells *)(number + c) = r;
         if (kept)
             group_store(&r, chunk.count - c, span->residual + k + c);
-        squares_add(square, &r, &r);
-        for (int part = 0; absolute != NULL && part < WIDES; part++) /* without its sign */
-            absolute[part] += (squares)((squares_bits)WIDEN(r, part) & INT64_MAX);
+        numbers_measure(&r, square, absolute);
         if (g != NULL)
             group_gather(&r, row, g, registers);
     }
@@ -482,14 +496,43 @@ INLINE void residual_lines(const struct sweep_job *job, size_t block, double *ou
     out[1] = squares_sum(absolute);
 }
 
+#ifdef TURNED
+#include "numeric/sweep_kernel_turned.h"
+/* Whether the job's rows are of a width that is turned: then, what residual_lines would do. */
+INLINE bool turned_block(const struct sweep_job *job, size_t block, double *sums, const bool gradient)
+{
+    bool close = rows_are_close(job);
+#define TURNED_CASE(width, n, paired)                                                                                  \
+    case width:                                                                                                        \
+        if (close)                                                                                                     \
+            turned_lines(job, block, sums, gradient, n, paired, width);                                                \
+        else                                                                                                           \
+            turned_lines(job, block, sums, gradient, n, paired, 0);                                                    \
+        return true;
+    switch (job->width) {
+        TURNED_WIDTHS(TURNED_CASE)
+    default:
+        return false;
+    }
+}
+#else
+INLINE bool turned_block(const struct sweep_job *job, size_t block, double *sums, const bool gradient)
+{
+    return (void)job, (void)block, (void)sums, (void)gradient, false;
+}
+#endif
+
 static void residual_block(const struct sweep_job *job, size_t block, size_t worker, double sums[SWEEP_SUMS])
 {
+    bool gradient = job->product.data != NULL;
     (void)worker;
-    if (job->product.data != NULL && job->residual == NULL) {
+    if (gradient ? turned_block(job, block, sums, true) : turned_block(job, block, sums, false))
+        return;
+    if (gradient && job->residual == NULL) {
 #define LINES(registers, stride) residual_lines(job, block, sums, true, false, registers, stride)
         REGISTERS_SWITCH
 #undef LINES
-    } else if (job->product.data != NULL) {
+    } else if (gradient) {
 #define LINES(registers, stride) residual_lines(job, block, sums, true, true, registers, stride)
         REGISTERS_SWITCH
 #undef LINES
