@@ -132,7 +132,8 @@ static void units_and_orientation_do_not_matter(void **state)
     for (uint32_t i = 0; i < 50; i += 7)
         for (uint32_t j = 0; j < 40; j += 3) {
             double x = model_estimate(&plain.model, i, j);
-            assert_close(model_estimate(&big.model, i, j), 1e6 * x + 3e5, 1);
+            /* rounds end at a change of 1e-9, slow ones some 1e-6 from where they lead */
+            assert_close(model_estimate(&big.model, i, j), 1e6 * x + 3e5, 10);
             assert_close(model_estimate(&over.model, j, i), x, 1e-4);
         }
     evidence_result_free(context, &plain);
