@@ -43,8 +43,17 @@ struct announcing {
     const struct judgement *judgement;
     bool by_distance, by_shape;
     uint32_t sensors;
-    size_t strata;           /* 1 where distances are not known */
-    struct sums *sums;       /* sensors x strata */
+    size_t strata;     /* 1 where distances are not known */
+    struct sums *sums; /* sensors x strata */
+    uint64_t seed;
+    double announced; /* mean square */
+    uint32_t *room;   /* of each worker: three numbers a sensor */
+    double *draws;    /* T / A, times what is announced */
+};
+
+/* What a draw has to itself. */
+struct draw {
+    const struct announcing *announcing;
     uint32_t *drawn, *times; /* sensors drawn, and how often each */
     uint32_t *able;          /* of the drawn ones, those that can stand for others in a stratum */
     struct random_stream random;
@@ -155,32 +164,34 @@ static double draw_at(const void *draws, uint64_t k)
     return ((const double *)draws)[k];
 }
 
-static void sensors_draw(struct announcing *announcing)
+static void sensors_draw(struct draw *draw)
 {
-    memset(announcing->times, 0, announcing->sensors * sizeof *announcing->times);
-    for (uint32_t s = 0; s < announcing->sensors; s++) {
-        announcing->drawn[s] = (uint32_t)random_below(&announcing->random, announcing->sensors);
-        announcing->times[announcing->drawn[s]]++;
+    uint32_t sensors = draw->announcing->sensors;
+    memset(draw->times, 0, sensors * sizeof *draw->times);
+    for (uint32_t s = 0; s < sensors; s++) {
+        draw->drawn[s] = (uint32_t)random_below(&draw->random, sensors);
+        draw->times[draw->drawn[s]]++;
     }
 }
 
 /* The sum of squared errors over the unseen cells of a stratum if those of every sensor had errors like the hidden ones
    of the sensor drawn with it; of another drawn one where that has too few there; where none has enough, of the nearest
    strata together. */
-static double stratum_draw(struct announcing *announcing, const struct sums total[JUDGE_BINS], size_t b)
+static double stratum_draw(struct draw *draw, const struct sums total[JUDGE_BINS], size_t b)
 {
+    const struct announcing *announcing = draw->announcing;
     double square = 0;
     uint32_t able = 0;
     for (uint32_t s = 0; s < announcing->sensors; s++)
-        if (announcing->sums[(size_t)announcing->drawn[s] * announcing->strata + b].hidden >= STRATUM_LEAST)
-            announcing->able[able++] = announcing->drawn[s];
+        if (announcing->sums[(size_t)draw->drawn[s] * announcing->strata + b].hidden >= STRATUM_LEAST)
+            draw->able[able++] = draw->drawn[s];
     for (uint32_t s = 0; s < announcing->sensors; s++) {
         const struct sums *own = &announcing->sums[(size_t)s * announcing->strata + b];
-        const struct sums *other = &announcing->sums[(size_t)announcing->drawn[s] * announcing->strata + b];
+        const struct sums *other = &announcing->sums[(size_t)draw->drawn[s] * announcing->strata + b];
         if (own->missing == 0)
             continue;
         if (able > 0 && other->hidden < STRATUM_LEAST) {
-            uint32_t stands = announcing->able[random_below(&announcing->random, able)];
+            uint32_t stands = draw->able[random_below(&draw->random, able)];
             other = &announcing->sums[(size_t)stands * announcing->strata + b];
         }
         square += own->variance * (able > 0 ? other->square / other->expected : stratum_ratio(total, b));
@@ -188,46 +199,48 @@ static double stratum_draw(struct announcing *announcing, const struct sums tota
     return square;
 }
 
-/* T / A, times what is announced. */
-static double truth_draw(struct announcing *announcing, double announced)
+/* One draw, with random numbers of its own. */
+static void truth_draw(void *job, size_t number, size_t worker)
 {
+    const struct announcing *announcing = job;
+    uint32_t *room = announcing->room + worker * 3 * announcing->sensors;
+    struct draw draw = {.announcing = announcing,
+                        .drawn = room,
+                        .times = room + announcing->sensors,
+                        .able = room + 2 * (size_t)announcing->sensors,
+                        .random = random_open(announcing->seed, RANDOM_FOLD, 0x90000000u + (uint32_t)number)};
     struct sums total[JUDGE_BINS];
     double square = 0, missing = 0;
-    sensors_draw(announcing);
-    sums_add(announcing, announcing->times, total);
+    sensors_draw(&draw);
+    sums_add(announcing, draw.times, total);
     for (size_t b = 0; b < JUDGE_BINS; b++) {
-        square += total[b].missing > 0 ? stratum_draw(announcing, total, b) : 0;
+        square += total[b].missing > 0 ? stratum_draw(&draw, total, b) : 0;
         missing += total[b].missing;
     }
-    sensors_draw(announcing);
-    sums_add(announcing, announcing->times, total);
-    return square / missing * announced / estimate(announcing, total).all;
+    sensors_draw(&draw);
+    sums_add(announcing, draw.times, total);
+    announcing->draws[number] = square / missing * announcing->announced / estimate(announcing, total).all;
 }
 
-static fescue_status band_find(fescue_context *context, struct announcing *announcing, double announced,
-                               struct judgement *judgement)
+static fescue_status band_find(fescue_context *context, struct announcing *announcing, struct judgement *judgement)
 {
     fescue_status status;
     uint32_t sensors = announcing->sensors;
     double draws[DRAWS];
     uint64_t count = 0;
-    TRY(TAKE(context, sensors, &announcing->times));
-    TRY(TAKE(context, sensors, &announcing->drawn));
-    TRY(TAKE(context, sensors, &announcing->able));
-    int most = (int)fmin(DRAWS, fmax(DRAWS_LEAST, drawn_most / sensors));
-    for (int d = 0; d < most; d++) {
-        double all = truth_draw(announcing, announced);
-        if (isfinite(all))
-            draws[count++] = sqrt(all);
-    }
+    TRY(TAKE(context, team_workers(context) * 3 * sensors, &announcing->room));
+    size_t most = (size_t)fmin(DRAWS, fmax(DRAWS_LEAST, drawn_most / sensors));
+    announcing->draws = draws;
+    team_run(context, most, truth_draw, announcing);
+    for (size_t d = 0; d < most; d++)
+        if (isfinite(draws[d]))
+            draws[count++] = sqrt(draws[d]);
     if (2 * count >= (uint64_t)most && sensors > 1) {
         judgement->rmse_low = fmin(order_pick(draw_at, draws, count, count / 20), judgement->rmse);
         judgement->rmse_high = fmax(order_pick(draw_at, draws, count, count - 1 - count / 20), judgement->rmse);
     }
 done:
-    GIVE(context, &announcing->times);
-    GIVE(context, &announcing->drawn);
-    GIVE(context, &announcing->able);
+    GIVE(context, &announcing->room);
     return status;
 }
 
@@ -277,8 +290,9 @@ fescue_status announce(fescue_context *context, const struct judged *pool, const
     judgement->by_variance = sqrt(found.by_variance);
     judgement->rmse = sqrt(found.all);
     judgement->mae = mae_find(judgement, speaking, missing);
-    announcing.random = random_open((uint64_t)request->options->seed, RANDOM_FOLD, 0x90000000u);
-    TRY(band_find(context, &announcing, found.all, judgement));
+    announcing.seed = (uint64_t)request->options->seed;
+    announcing.announced = found.all;
+    TRY(band_find(context, &announcing, judgement));
 done:
     GIVE(context, &announcing.sums);
     return status;

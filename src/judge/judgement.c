@@ -100,7 +100,7 @@ static fescue_status pool_judge(fescue_context *context, const struct judge_requ
     double noise, lambda;
     TRY(relearn_all(context, request, &noise, &lambda));
     TRY(leverage_create(context, request->cells, request->model, noise, lambda, &judgement->leverage));
-    variance_fit(&speaking, judgement->tracks != NULL, is_of_gaps, &judgement->variance);
+    TRY(variance_fit(context, &speaking, judgement->tracks != NULL, is_of_gaps, &judgement->variance));
     TRY(scales_fit(context, pool, judgement->tracks, judgement));
     TRY(scores_rank(context, &speaking, judgement));
     TRY(line_weights_find(context, request->cells, &judgement->weights));

@@ -87,7 +87,8 @@ fescue_status folds_run(fescue_context *context, const struct judge_request *req
 
 /* ---- variance and error ------------------------------------------------------------------------------------------ */
 
-void variance_fit(const struct judged *pool, bool has_distance, bool is_of_gaps, struct variance *variance);
+fescue_status variance_fit(fescue_context *context, const struct judged *pool, bool has_distance, bool is_of_gaps,
+                           struct variance *variance);
 double variance_at(const struct variance *variance, const struct standing *at);
 /* The scale of each sensor's errors, shrunk towards 1. */
 fescue_status scales_fit(fescue_context *context, const struct judged *pool, const struct tracks *tracks,

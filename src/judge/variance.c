@@ -38,7 +38,7 @@
  * 1986, "Meta-analysis in clinical trials"), and r_j is shrunk towards 1 by tau^2 / (tau^2 + (k-1)/n_j). Sensors that
  * began late keep 1: what is missing of them is not like what was seen.
  *
- * Sequential, O(cells) a round.
+ * O(cells) a round; sums over pieces of them, made by the team and added in their order.
  */
 #include "judge/judgement.h"
 
@@ -89,33 +89,73 @@ static void weights_descend(double gram[VARIANCE_TERMS][VARIANCE_TERMS], const d
         }
 }
 
-static void round_fit(const struct judged *pool, bool is_first, double mean, struct variance *variance)
+enum { PIECE = 4096 };
+
+/* The normal equations of a round. */
+struct equations {
+    double gram[VARIANCE_TERMS][VARIANCE_TERMS], side[VARIANCE_TERMS];
+};
+enum { EQUATION_NUMBERS = sizeof(struct equations) / sizeof(double) };
+
+struct fitting {
+    const struct judged *pool;
+    const struct variance *variance;
+    double mean;
+    bool is_first;
+    struct equations *partial; /* one a piece */
+};
+
+static void piece_sum(void *job, size_t piece, size_t worker)
 {
-    double gram[VARIANCE_TERMS][VARIANCE_TERMS] = {{0}}, side[VARIANCE_TERMS] = {0}, term[VARIANCE_TERMS];
-    for (uint64_t c = 0; c < pool->count; c++) {
-        double fit = is_first ? mean : variance_at(variance, &pool->at[c]);
+    const struct fitting *fitting = job;
+    const struct judged *pool = fitting->pool;
+    struct equations *sum = &fitting->partial[piece];
+    uint64_t from = (uint64_t)piece * PIECE, to = from + PIECE < pool->count ? from + PIECE : pool->count;
+    double mean = fitting->mean, term[VARIANCE_TERMS];
+    (void)worker;
+    *sum = (struct equations){0};
+    for (uint64_t c = from; c < to; c++) {
+        double fit = fitting->is_first ? mean : variance_at(fitting->variance, &pool->at[c]);
         double y = fmin(pool->square[c], wild * fit), weight = mean * mean / (fit * fit);
-        terms_set(variance, &pool->at[c], term);
+        terms_set(fitting->variance, &pool->at[c], term);
         for (size_t k = 0; k < VARIANCE_TERMS; k++) {
-            side[k] += weight * y * term[k];
+            sum->side[k] += weight * y * term[k];
             for (size_t l = 0; l < VARIANCE_TERMS; l++)
-                gram[k][l] += weight * term[k] * term[l];
+                sum->gram[k][l] += weight * term[k] * term[l];
         }
     }
-    weights_descend(gram, side, variance->weight);
 }
 
-void variance_fit(const struct judged *pool, bool has_distance, bool is_of_gaps, struct variance *variance)
+static void rounds_fit(fescue_context *context, struct fitting *fitting, struct variance *variance)
 {
+    size_t pieces = (size_t)((fitting->pool->count + PIECE - 1) / PIECE);
+    for (int round = 0; round < ROUNDS; round++) {
+        struct equations sum;
+        fitting->is_first = round == 0;
+        team_run(context, pieces, piece_sum, fitting);
+        team_sum(context, (const double *)fitting->partial, pieces, EQUATION_NUMBERS, (double *)&sum);
+        weights_descend(sum.gram, sum.side, variance->weight);
+    }
+}
+
+fescue_status variance_fit(fescue_context *context, const struct judged *pool, bool has_distance, bool is_of_gaps,
+                           struct variance *variance)
+{
+    struct fitting fitting = {.pool = pool, .variance = variance};
+    fescue_status status = FESCUE_OK;
     double mean = 0;
     for (uint64_t c = 0; c < pool->count; c++)
         mean += pool->square[c] / (double)pool->count;
     *variance = (struct variance){
         .weight = {mean}, .least = least_share * mean, .has_distance = has_distance, .is_of_gaps = is_of_gaps};
     if (!(mean > 0) || !isfinite(mean))
-        return;
-    for (int round = 0; round < ROUNDS; round++)
-        round_fit(pool, round == 0, mean, variance);
+        return FESCUE_OK;
+    fitting.mean = mean;
+    TRY(TAKE(context, (pool->count + PIECE - 1) / PIECE, &fitting.partial));
+    rounds_fit(context, &fitting, variance);
+done:
+    GIVE(context, &fitting.partial);
+    return status;
 }
 
 /* ---- the scale of a sensor -----------------------------------------------------------------------------------------

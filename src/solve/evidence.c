@@ -108,6 +108,7 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
     evidence->state_size = arena->reserved;
     arena_reserve(arena, workers * evidence->scratch_size, sizeof(double));
     size_t lines = cells->rows > cells->columns ? cells->rows : cells->columns;
+    arena_reserve(arena, dense_work_size(lines, d), sizeof(double));
     size_t words = cells->count >= HALVES_CELLS ? lines * moments_words(d) : 0;
     arena_reserve(arena, words, sizeof(uint64_t));
     fescue_status status = arena_open(problem->context, arena);
@@ -124,33 +125,61 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
     evidence->map[1] = matrix_carve(arena, d, d);
     evidence->basis_work = arena_carve(arena, work, sizeof(double));
     evidence->scratch = arena_carve(arena, workers * evidence->scratch_size, sizeof(double));
+    evidence->dense = arena_carve(arena, dense_work_size(lines, d), sizeof(double));
     evidence->halves = words > 0 ? arena_carve(arena, words, sizeof(uint64_t)) : NULL;
     evidence->rows.effect_at = evidence->columns.one_at = rank;
     evidence->rows.one_at = evidence->columns.effect_at = rank + 1;
     return FESCUE_OK;
 }
 
+struct planting {
+    struct evidence *evidence;
+    const struct model *start;
+    uint64_t seed;
+};
+
+/* What the start knows of column j, and its squares. */
+static void column_plant(const struct planting *planting, uint32_t j, double *mean, double *square)
+{
+    struct evidence *evidence = planting->evidence;
+    const struct low_rank *point = &planting->start->low_rank;
+    size_t rank = evidence->rank;
+    double scale = evidence->problem->scale, size = sqrt((double)evidence->problem->target.rows) * scale;
+    struct random_stream random = random_open(planting->seed, RANDOM_START, j);
+    for (size_t k = 0; k < rank; k++)
+        mean[k] = k < point->rank ? MATRIX_AT(point->right, j, k) * point->spectrum[k] / size
+                                  : EVIDENCE_PROBE * random_normal(&random);
+    mean[rank] = planting->start->offsets.column[j] / scale;
+    for (size_t k = 0; k <= rank; k++)
+        square[k] += mean[k] * mean[k];
+    evidence_side_plant(evidence, &evidence->columns, j, mean);
+}
+
+static void block_plant(void *job, size_t block, size_t worker)
+{
+    const struct planting *planting = job;
+    struct evidence *evidence = planting->evidence;
+    const struct half *half = evidence->columns.half;
+    size_t width = evidence->rank + 1;
+    double *square = evidence->columns.partial + block * width;
+    memset(square, 0, width * sizeof *square);
+    for (uint32_t j = half->block[block]; j < half->block[block + 1]; j++)
+        column_plant(planting, j, evidence->scratch + worker * evidence->scratch_size, square);
+}
+
 /* Plants the start: columns known, u of unit size; the rows follow in the first round. */
 static void evidence_start(struct evidence *evidence, const struct model *start, const struct evidence_request *request)
 {
     const struct problem *problem = evidence->problem;
-    const struct low_rank *point = &start->low_rank;
-    size_t rank = evidence->rank, columns = problem->target.columns;
-    double size = sqrt((double)problem->target.rows) * problem->scale;
-    double *mean = evidence->scratch, effect = 0;
+    const struct half *half = evidence->columns.half;
+    size_t rank = evidence->rank;
+    struct planting planting = {evidence, start, request->seed};
     evidence->noise = request->noise_start > 0 ? request->noise_start / (problem->scale * problem->scale) : 1;
-    memset(evidence->columns.variance, 0, (rank + 1) * sizeof(double));
-    for (size_t j = 0; j < columns; j++) {
-        struct random_stream random = random_open(request->seed, RANDOM_START, (uint32_t)j);
-        for (size_t k = 0; k < rank; k++) {
-            mean[k] = k < point->rank ? MATRIX_AT(point->right, j, k) * point->spectrum[k] / size
-                                      : EVIDENCE_PROBE * random_normal(&random);
-            evidence->columns.variance[k] += mean[k] * mean[k] / (double)columns;
-        }
-        mean[rank] = start->offsets.column[j] / problem->scale;
-        effect += mean[rank] * mean[rank] / (double)columns;
-        evidence_side_plant(evidence, &evidence->columns, j, mean);
-    }
+    team_run(evidence->context, half->blocks, block_plant, &planting);
+    team_sum(evidence->context, evidence->columns.partial, half->blocks, rank + 1, evidence->columns.variance);
+    for (size_t k = 0; k <= rank; k++)
+        evidence->columns.variance[k] /= (double)half->lines;
+    double effect = evidence->columns.variance[rank];
     evidence->rows.moments.weight = request->noise == EVIDENCE_NOISE_ROWS ? evidence->rows.line_precision : NULL;
     evidence->columns.moments.weight =
         request->noise == EVIDENCE_NOISE_COLUMNS ? evidence->columns.line_precision : NULL;
@@ -189,15 +218,12 @@ static double change_measure(struct evidence *evidence)
     struct evidence_side *rows = &evidence->rows, *columns = &evidence->columns;
     struct matrix *g = evidence->gram;
     double square = 0;
-    matrix_multiply(1, rows->mean, true, rows->mean, false, 0, g[0]);
-    matrix_multiply(1, columns->mean, true, columns->mean, false, 0, g[1]);
-    square += matrix_dot(g[0], g[1]);
-    matrix_multiply(1, rows->old, true, rows->old, false, 0, g[0]);
-    matrix_multiply(1, columns->old, true, columns->old, false, 0, g[1]);
-    square += matrix_dot(g[0], g[1]);
-    matrix_multiply(1, rows->mean, true, rows->old, false, 0, g[0]);
-    matrix_multiply(1, columns->mean, true, columns->old, false, 0, g[1]);
-    square -= 2 * matrix_dot(g[0], g[1]);
+    const struct matrix side[2][2] = {{rows->mean, rows->old}, {columns->mean, columns->old}};
+    for (int k = 0; k < 3; k++) { /* new and new, old and old, new and old */
+        for (int s = 0; s < 2; s++)
+            tall_cross(evidence->context, side[s][k == 1], side[s][k > 0], g[s], evidence->dense);
+        square += (k < 2 ? 1 : -2) * matrix_dot(g[0], g[1]);
+    }
     double cells = (double)rows->half->lines * (double)columns->half->lines;
     return sqrt(fmax(square, 0) / cells);
 }
@@ -226,8 +252,8 @@ static fescue_status evidence_round(struct evidence *evidence, const struct evid
                                     double *change)
 {
     struct evidence_side *rows = &evidence->rows, *columns = &evidence->columns;
-    matrix_copy(rows->mean, rows->old);
-    matrix_copy(columns->mean, columns->old);
+    tall_copy(evidence->context, rows->mean, NULL, rows->old);
+    tall_copy(evidence->context, columns->mean, NULL, columns->old);
     bool has_chain = evidence->time != NULL && evidence->time->chain_on;
     bool has_fields = evidence->near != NULL && evidence->near->is_on;
     fescue_status status = FESCUE_OK;

@@ -45,6 +45,7 @@ struct evidence {
     struct matrix small[4], gram[4]; /* r x r and (r+2) x (r+2) */
     struct matrix map[2];            /* a change of basis and its transpose */
     double *shift, *basis_work;
+    double *dense;              /* for products of a side's lines */
     uint64_t *halves;           /* room for the moments of either side in halves; NULL: they are gathered as they are */
     struct evidence_time *time; /* NULL: lines have no order */
     struct evidence_near *near; /* NULL: columns are not near one another */

@@ -103,25 +103,67 @@ done:
     return status;
 }
 
-/* The kept cells of `from`, in row order. */
-static void half_keep(const struct cells *from, const uint8_t *keep, struct half *to)
+/* ---- selecting -------------------------------------------------------------------------------------------------- */
+
+struct selecting {
+    const struct cells *from;
+    const uint8_t *keep; /* of each cell by row */
+    uint64_t *first;     /* of each block: how many are kept in it, then before it */
+    struct half *to;
+};
+
+static void block_count(void *job, size_t block, size_t worker)
 {
-    const struct half *half = &from->by_row;
-    uint64_t at = 0;
-    for (uint32_t i = 0; i < half->lines; i++) {
+    const struct selecting *selecting = job;
+    const struct half *half = &selecting->from->by_row;
+    uint64_t count = 0;
+    (void)worker;
+    for (uint64_t k = half->start[half->block[block]]; k < half->start[half->block[block + 1]]; k++)
+        count += selecting->keep[k] != 0;
+    selecting->first[block] = count;
+}
+
+static void block_keep(void *job, size_t block, size_t worker)
+{
+    const struct selecting *selecting = job;
+    const struct half *half = &selecting->from->by_row, *to = selecting->to;
+    uint64_t at = selecting->first[block];
+    (void)worker;
+    for (uint32_t i = half->block[block]; i < half->block[block + 1]; i++) {
         to->start[i] = at;
         for (uint64_t k = half->start[i]; k < half->start[i + 1]; k++) {
-            if (!keep[k])
+            if (!selecting->keep[k])
                 continue;
             to->across[at] = half->across[k];
-            if (from->precision == FESCUE_SINGLE)
+            if (selecting->from->precision == FESCUE_SINGLE)
                 ((float *)to->value)[at] = ((const float *)half->value)[k];
             else
                 ((double *)to->value)[at] = ((const double *)half->value)[k];
             at++;
         }
     }
-    to->start[half->lines] = at;
+}
+
+/* The kept cells of `from`, in row order. */
+static fescue_status rows_keep(fescue_context *context, const struct cells *from, const uint8_t *keep,
+                               struct cells *cells)
+{
+    const struct half *half = &from->by_row;
+    struct selecting selecting = {.from = from, .keep = keep, .to = &cells->by_row};
+    fescue_status status;
+    TRY(TAKE(context, half->blocks, &selecting.first));
+    team_run(context, half->blocks, block_count, &selecting);
+    for (size_t block = 0; block < half->blocks; block++) {
+        uint64_t count = selecting.first[block];
+        selecting.first[block] = cells->count;
+        cells->count += count;
+    }
+    TRY(half_open(context, from->rows, from->columns, cells->count, from->precision, &cells->by_row));
+    team_run(context, half->blocks, block_keep, &selecting);
+    cells->by_row.start[from->rows] = cells->count;
+done:
+    GIVE(context, &selecting.first);
+    return status;
 }
 
 /* ---- weights --------------------------------------------------------------------------------------------------- */
@@ -187,10 +229,7 @@ fescue_status cells_select(fescue_context *context, const struct cells *from, co
     fescue_status status;
     uint64_t merged;
     *cells = (struct cells){.rows = from->rows, .columns = from->columns, .precision = from->precision};
-    for (uint64_t k = 0; k < from->count; k++)
-        cells->count += keep[k] != 0;
-    TRY(half_open(context, from->rows, from->columns, cells->count, from->precision, &cells->by_row));
-    half_keep(from, keep, &cells->by_row);
+    TRY(rows_keep(context, from, keep, cells));
     TRY(cells_finish(context, FESCUE_DUPLICATES_REFUSE, true, cells, &merged));
     if (from->by_row.weight != NULL)
         TRY(weights_keep(context, from, keep, cells));

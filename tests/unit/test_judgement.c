@@ -149,7 +149,7 @@ static void the_surface_is_found_again(void **state)
     for (int of_gaps = 0; of_gaps < 2; of_gaps++) {
         law.is_of_gaps = of_gaps == 1;
         judged_sow(context, &law, sensor, &judged);
-        variance_fit(&judged, true, law.is_of_gaps, &found);
+        assert_status(context, variance_fit(context, &judged, true, law.is_of_gaps, &found), FESCUE_OK);
         /* 20 000 squared errors of relative spread sqrt 2: a mean over a tenth of them is known to 3 % */
         for (float lev = 0.1f; lev < 2; lev += 0.3f)
             for (float d = 1; d < 100; d *= 3)
@@ -159,7 +159,12 @@ static void the_surface_is_found_again(void **state)
                 }
         for (size_t k = 0; k < VARIANCE_TERMS; k++)
             assert_true(found.weight[k] >= 0);
-        variance_fit(&judged, false, false, &found);
+        struct variance by_three = {0};
+        assert_status(context, team_resize(context, 3), FESCUE_OK);
+        assert_status(context, variance_fit(context, &judged, true, law.is_of_gaps, &by_three), FESCUE_OK);
+        assert_memory_equal(by_three.weight, found.weight, sizeof found.weight);
+        assert_status(context, team_resize(context, 1), FESCUE_OK);
+        assert_status(context, variance_fit(context, &judged, false, false, &found), FESCUE_OK);
         struct standing near = {.leverage = 0.5f, .distance = 1, .weight = 1}, far = near;
         far.distance = 100;
         far.marks = STANDING_ONE_SIDED;
@@ -179,7 +184,7 @@ static void sensors_keep_one_scale_unless_they_differ(void **state)
         for (size_t s = 0; s < SENSORS; s++)
             sensor[s] = differ && s % 4 == 0 ? 3 : 1;
         judged_sow(context, &law, sensor, &judged);
-        variance_fit(&judged, false, false, &judgement.variance);
+        assert_status(context, variance_fit(context, &judged, false, false, &judgement.variance), FESCUE_OK);
         assert_status(context, scales_fit(context, &judged, NULL, &judgement), FESCUE_OK);
         for (size_t s = 0; s < SENSORS; s++)
             if (differ)
