@@ -174,6 +174,7 @@ static fescue_status learnt_further(fescue_context *context, const struct final_
                                 .low_rank = choice->start};
     asked.deadline = request->deadline;
     asked.rank = choice->start.rank;
+    asked.is_shrunk = true;
     asked.noise_start = choice->noise;
     fescue_status status = evidence_fit(context, request->cells, &asked, &start, result);
     return status == FESCUE_OK && result->fit.stop == STOP_CANCELLED ? FESCUE_STOPPED : status;

@@ -126,11 +126,18 @@ done:
     return status;
 }
 
-static fescue_status learn(struct chooser *chooser, const struct candidate *alone, struct candidate *candidate)
+/* To compare kinds of offsets. */
+static struct evidence_request comparison_of(const struct chooser *chooser, const struct candidate *alone)
 {
     struct evidence_request request = evidence_request_of(chooser, alone);
     if (chooser->kept->count >= FELT)
         request.rounds = COMPARE_ROUNDS;
+    return request;
+}
+
+static fescue_status learn(struct chooser *chooser, const struct candidate *alone, struct candidate *candidate)
+{
+    const struct evidence_request request = comparison_of(chooser, alone);
     return learn_as(chooser, &request, alone, candidate);
 }
 
@@ -154,41 +161,54 @@ struct more {
    missing, where turning it down costs most. */
 static const double turned_down = 2;
 
+/* The components of `from` again, beside these offsets and as is asked for, into *candidate. */
+static fescue_status learn_further(struct chooser *chooser, struct evidence_request *request,
+                                   const struct offsets *offsets, const struct candidate *from,
+                                   struct candidate *candidate)
+{
+    const struct cells *kept = chooser->kept;
+    struct evidence_result result = {0};
+    chooser_take_scale(chooser, from);
+    const struct model start = {.rows = kept->rows,
+                                .columns = kept->columns,
+                                .bounds = chooser->options->bounds,
+                                .offsets = *offsets,
+                                .low_rank = candidate_point(chooser, from),
+                                .time = from->time,
+                                .near = from->near};
+    request->rank = from->point.rank;
+    request->is_shrunk = evidence_is_large(kept);
+    request->noise_start = request->is_shrunk ? from->variance : from->errors.rmse * from->errors.rmse;
+    fescue_status status = evidence_fit(chooser->context, kept, request, &start, &result);
+    if (status == FESCUE_OK)
+        status = candidate_take(chooser, &result, request->noise, candidate);
+    evidence_result_free(chooser->context, &result);
+    return status;
+}
+
 /* The winner's components again, under the noise, the time part and the near columns that are asked for: takes its
    place when it has less error, or is not turned down. */
 static fescue_status learn_rounds(struct chooser *chooser, const struct more *more, uint64_t rounds,
                                   struct candidate *winner, bool *is_better)
 {
     fescue_status status = FESCUE_OK;
-    const struct cells *kept = chooser->kept;
-    struct evidence_result result = {0};
     struct candidate own = {0};
-    struct model start = {.rows = kept->rows, .columns = kept->columns, .bounds = chooser->options->bounds};
     struct evidence_request request = evidence_request_of(chooser, winner);
     request.noise = more->noise;
     request.time = more->time;
     request.near = more->near;
-    request.rank = winner->point.rank;
     request.rounds = rounds;
     *is_better = false;
     if (winner->point.rank == 0 || chooser_is_late(chooser))
         return FESCUE_OK;
     TRY(candidate_copy(chooser, winner, &own));
-    chooser_take_scale(chooser, winner);
-    request.noise_start = winner->errors.rmse * winner->errors.rmse;
-    start.offsets = winner->offsets; /* borrowed, like the point */
-    start.low_rank = candidate_point(chooser, winner);
-    start.time = winner->time;
-    start.near = winner->near;
-    TRY(evidence_fit(chooser->context, kept, &request, &start, &result));
-    TRY(candidate_take(chooser, &result, request.noise, &own));
+    TRY(learn_further(chooser, &request, &winner->offsets, winner, &own));
     *is_better = more->time != NULL || more->near != NULL ? !candidate_beats(chooser, winner, &own, turned_down)
                                                           : candidate_beats(chooser, &own, winner, 1);
     if (*is_better)
         candidate_swap(&own, winner);
 done:
     candidate_free(chooser, &own);
-    evidence_result_free(chooser->context, &result);
     return status;
 }
 
@@ -206,6 +226,22 @@ static fescue_status learn_more(struct chooser *chooser, const struct more *more
     return status;
 }
 
+/* Another kind of offsets than the best so far has: on a large table beside the components of that one, of which those
+   go that were offsets. */
+static fescue_status learn_next(struct chooser *chooser, const struct candidate *alone, const struct candidate *best,
+                                struct candidate *candidate)
+{
+    struct evidence_request request = comparison_of(chooser, alone);
+    fescue_status status;
+    if (!evidence_is_large(chooser->kept) || best->point.rank == 0)
+        return learn(chooser, alone, candidate);
+    TRY(progress_tell(chooser->context, "choosing", -1));
+    TRY(candidate_copy(chooser, alone, candidate));
+    TRY(learn_further(chooser, &request, &alone->offsets, best, candidate));
+done:
+    return status;
+}
+
 fescue_status evidence_compete(struct chooser *chooser, const struct candidate *const *alone, size_t count,
                                struct candidate *winner, size_t *best)
 {
@@ -216,7 +252,7 @@ fescue_status evidence_compete(struct chooser *chooser, const struct candidate *
     TRY(path_try_exact(chooser, winner));
     for (size_t k = 1; k < count && !winner->is_exact && !chooser_is_late(chooser); k++) {
         candidate_free(chooser, &candidate);
-        TRY(learn(chooser, alone[k], &candidate));
+        TRY(learn_next(chooser, alone[k], winner, &candidate));
         TRY(path_try_exact(chooser, &candidate));
         if (candidate_succeeds(chooser, &candidate, winner)) {
             candidate_swap(winner, &candidate);

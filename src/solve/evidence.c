@@ -52,9 +52,6 @@
 /* From so many cells on moments are gathered in halves. */
 #define HALVES_CELLS 50000
 
-/* A pruned component: standard deviation in the table over that of the noise. */
-#define COMPONENT_DEAD 1e-3
-
 static void side_reserve(struct arena *arena, const struct half *half, size_t rank)
 {
     size_t lines = half->lines, d = rank + 2;
@@ -396,36 +393,6 @@ done:
     return status;
 }
 
-size_t evidence_living(const struct evidence_result *fit)
-{
-    const struct low_rank *point = &fit->model.low_rank;
-    double size = sqrt((double)point->rows * (double)point->columns);
-    size_t count = 0;
-    while (count < point->rank && point->spectrum[count] > COMPONENT_DEAD * fit->noise * size)
-        count++;
-    return count;
-}
-
-void evidence_trim(struct model *model, size_t rank)
-{
-    struct low_rank *point = &model->low_rank;
-    if (rank >= point->rank)
-        return;
-    point->rank = rank;
-    if (model->time.components > rank + 1) {
-        model->time.steps_law[rank] = model->time.steps_law[model->time.components - 1];
-        model->time.components = rank + 1;
-    }
-    for (size_t side = 0; side < 2; side++) {
-        struct matrix a = side == 0 ? point->left : point->right;
-        for (size_t i = 0; i < a.rows; i++)
-            for (size_t k = rank; k < a.columns; k++)
-                MATRIX_AT(a, i, k) = 0;
-    }
-    point->left = matrix_left(point->left, rank);
-    point->right = matrix_left(point->right, rank);
-}
-
 fescue_status evidence_fit(fescue_context *context, const struct cells *cells, const struct evidence_request *request,
                            const struct model *start, struct evidence_result *out)
 {
@@ -447,6 +414,8 @@ fescue_status evidence_fit(fescue_context *context, const struct cells *cells, c
     TRY(problem_create(context, cells, &mean, 0, &problem));
     TRY(evidence_open(&problem, request->rank, &evidence));
     evidence_start(&evidence, start, request);
+    if (request->is_shrunk)
+        evidence_restore(&evidence);
     if (request->time != NULL && request->time->along != TIME_NONE) {
         TRY(evidence_time_open(&evidence, request));
         evidence_time_begin(&evidence, start);
@@ -463,7 +432,7 @@ fescue_status evidence_fit(fescue_context *context, const struct cells *cells, c
     out->column_spread = noise_spread(&evidence.columns);
     out->fit.rmse = sqrt(evidence.noise);
     out->fit.objective = evidence.noise;
-    size_t alive = evidence_living(out);
+    size_t alive = evidence_living(cells, out);
     evidence_trim(&out->model, alive > 0 ? alive : 1);
     evidence_keep(&work, out);
 done:

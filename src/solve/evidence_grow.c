@@ -8,10 +8,13 @@
  *   3  leading pairs of the residual join as further components, rounds again: while more live, go on
  *   4  rounds to the final tolerance; where cells are scarce and a component is lost on the way, 3 and 4 once more
  *
- * A component lives while its standard deviation in the table is above a thousandth of the noise's: pruned ones fall
- * towards 0 quadratically, living ones do not come near that. Growth by the residual's leading pair is what made nearly
- * every local method converge from few cells; the ridge per component, learnt from the data, is in the spirit of
- * MacKay 1992, "Bayesian interpolation".
+ * Which components live: evidence_living.c. Growth by the residual's leading pair is what made nearly every local
+ * method converge from few cells; the ridge per component, learnt from the data, is in the spirit of MacKay 1992,
+ * "Bayesian interpolation".
+ *
+ * A large table has the cells to tell at once: the rounds of 2 are those to the final tolerance, and when one of the
+ * components offered is gone after them no further ones are. When all live, twice as many are offered from the
+ * beginning, which costs no more than all before it.
  */
 #include "solve/evidence_internal.h"
 
@@ -131,32 +134,29 @@ static fescue_status refit(fescue_context *context, const struct cells *cells, c
     return next.fit.stop == STOP_CANCELLED ? FESCUE_STOPPED : FESCUE_OK;
 }
 
-/* A large table, and nothing can join: the last rounds are made at once. */
-static bool settles_at_once(const struct cells *cells, const struct evidence_request *request)
+/* What is asked of rounds after which components join or go. */
+static struct evidence_request step_of(const struct evidence_request *request, uint64_t rounds)
 {
-    return evidence_is_large(cells) && request->rank == request->rank_most;
+    struct evidence_request step = *request;
+    step.noise = EVIDENCE_NOISE_EQUAL;
+    step.time = NULL;
+    step.near = NULL;
+    step.rounds = rounds;
+    step.change = GROW_CHANGE;
+    return step;
 }
 
 /* Components join for as long as more of them live, out->model having its offsets and what has joined already. */
 static fescue_status components_grow(fescue_context *context, const struct cells *cells,
                                      const struct evidence_request *request, struct evidence_result *out)
 {
-    struct evidence_request step = *request;
+    struct evidence_request step = step_of(request, GROW_ROUNDS);
     size_t alive = out->model.low_rank.rank;
     fescue_status status;
-    step.noise = EVIDENCE_NOISE_EQUAL;
-    step.time = NULL;
-    step.near = NULL;
-    step.rounds = GROW_ROUNDS;
-    step.change = GROW_CHANGE;
-    if (settles_at_once(cells, request)) {
-        step.rounds = request->rounds;
-        step.change = request->change;
-    }
     for (;;) {
         TRY(model_grow(context, cells, &step, &out->model));
         TRY(refit(context, cells, &step, out));
-        size_t now = evidence_living(out);
+        size_t now = evidence_living(cells, out);
         if (now <= alive || now >= request->rank_most || is_late(request))
             break;
         alive = now;
@@ -179,6 +179,47 @@ static fescue_status components_settle(fescue_context *context, const struct cel
     return refit(context, cells, &step, out);
 }
 
+/* Equal noise, the components of a small table: they settle, and where cells are scarce those that were lost on the way
+   are looked for once more. What follows lines in time settles the components on its own. */
+static fescue_status components_learn(fescue_context *context, const struct cells *cells,
+                                      const struct evidence_request *request, struct evidence_result *out)
+{
+    fescue_status status;
+    TRY(components_grow(context, cells, request, out));
+    size_t alive = evidence_living(cells, out);
+    if (request->time != NULL)
+        return FESCUE_OK;
+    TRY(components_settle(context, cells, request, out));
+    bool is_last = request->noise == EVIDENCE_NOISE_EQUAL;
+    if (is_last && evidence_living(cells, out) < alive && is_scarce(cells, alive) && !is_late(request)) {
+        TRY(components_grow(context, cells, request, out));
+        TRY(components_settle(context, cells, request, out));
+    }
+done:
+    return status;
+}
+
+/* Those of a large table: as many as are asked for, which settle; twice as many, from nothing, for as long as all of
+   them live. */
+static fescue_status components_offer(fescue_context *context, const struct cells *cells,
+                                      const struct evidence_request *request, struct evidence_result *out)
+{
+    struct evidence_request step = step_of(request, request->rounds);
+    size_t most = request->rank_most;
+    fescue_status status;
+    step.change = request->change;
+    for (;;) {
+        TRY(model_grow(context, cells, &step, &out->model));
+        TRY(refit(context, cells, &step, out));
+        if (evidence_living(cells, out) < step.rank || step.rank == most || is_late(request))
+            break;
+        step.rank = 2 * step.rank < most ? 2 * step.rank : most;
+        evidence_trim(&out->model, 0);
+    }
+done:
+    return status;
+}
+
 fescue_status evidence_learn(fescue_context *context, const struct cells *cells, const struct evidence_request *request,
                              struct evidence_result *out)
 {
@@ -187,20 +228,11 @@ fescue_status evidence_learn(fescue_context *context, const struct cells *cells,
     out->model.bounds = (struct fescue_range){-INFINITY, INFINITY};
     TRY(offsets_fit(context, cells, request->offsets, &out->model.offsets));
     TRY(low_rank_create(context, cells->rows, cells->columns, 0, &out->model.low_rank));
-    TRY(components_grow(context, cells, request, out));
-    size_t alive = evidence_living(out);
-    /* what follows lines in time settles the components on its own */
-    bool settles = request->time == NULL && !settles_at_once(cells, request);
-    if (settles)
-        TRY(components_settle(context, cells, request, out));
-    bool is_last = request->noise == EVIDENCE_NOISE_EQUAL;
-    if (settles && is_last && evidence_living(out) < alive && is_scarce(cells, alive) && !is_late(request)) {
-        TRY(components_grow(context, cells, request, out));
-        TRY(components_settle(context, cells, request, out));
-    }
+    TRY(evidence_is_large(cells) ? components_offer(context, cells, request, out)
+                                 : components_learn(context, cells, request, out));
     if (request->noise != EVIDENCE_NOISE_EQUAL || request->time != NULL || request->near != NULL)
         TRY(refit(context, cells, request, out));
-    evidence_trim(&out->model, evidence_living(out));
+    evidence_trim(&out->model, evidence_living(cells, out));
 done:
     if (status != FESCUE_OK)
         evidence_result_free(context, out);

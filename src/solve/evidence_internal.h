@@ -3,8 +3,10 @@
  * The inside of the evidence fit, shared by its files:
  *
  *   evidence.c          the loop, the start, the result
+ *   evidence_restore.c  the start that such a fit has left
  *   evidence_side.c     the posterior of every line of one side, given the other
  *   evidence_basis.c    the exact change of basis between two rounds
+ *   evidence_living.c   which components live
  *   evidence_memo.c     what is left for a later run of the same job
  *   evidence_time.c     when lines are times: what is shared by
  *   evidence_residual.c     a residual of every series, AR(1) in time
@@ -69,7 +71,7 @@ static inline size_t evidence_one(const struct evidence *evidence)
 }
 
 /* How many components live, and a model without those behind the first `rank`. */
-size_t evidence_living(const struct evidence_result *fit);
+size_t evidence_living(const struct cells *cells, const struct evidence_result *fit);
 void evidence_trim(struct model *model, size_t rank);
 
 /* Between two rounds. */
@@ -103,6 +105,9 @@ void evidence_side_halve(struct evidence *evidence, struct evidence_side *side);
 void evidence_side_prior(struct evidence *evidence, struct evidence_side *side);
 /* Writes the moments of a line whose mean is known and certain. */
 void evidence_side_plant(struct evidence *evidence, struct evidence_side *side, size_t line, const double *mean);
+
+/* A start of shrunk means gets the variances that belong to them. */
+void evidence_restore(struct evidence *evidence);
 
 /* Moves to the basis in which rows have unit second moment and columns a diagonal one, offsets absorbing the means. */
 fescue_status evidence_basis_change(struct evidence *evidence);

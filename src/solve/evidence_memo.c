@@ -53,6 +53,7 @@ uint64_t evidence_digest(const struct cells *cells, const struct evidence_reques
     const uint64_t counts[] = {(uint64_t)request->offsets,
                                (uint64_t)request->noise,
                                request->rank,
+                               request->is_shrunk,
                                request->seed,
                                request->rounds,
                                cells->count,

@@ -89,6 +89,7 @@ struct evidence_request {
     size_t rank;                 /* components to begin with, 1 .. min(rows, columns); the data prune them */
     size_t rank_most;            /* to which evidence_learn may grow; rank .. min(rows, columns) */
     double noise_start;          /* first guess of the noise variance, table units; 0: the whole variance */
+    bool is_shrunk;              /* the start is what such a fit came to */
     uint64_t seed, rounds;
     const struct time_axis *time; /* borrowed; NULL or along none: lines have no order */
     const struct nearness *near;  /* borrowed; NULL: nothing is known of columns being near one another */
