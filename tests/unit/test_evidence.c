@@ -73,6 +73,32 @@ static void full_table_meets_the_closed_solution(void **state)
     closed_solution_check(context, &(struct sowing){520, 100, 3, 1, 0.8, FESCUE_DOUBLE, 3}, 0.01);
 }
 
+/* A settled fit is where one round more from its means alone leads, once these are known to be shrunk: on a table of
+   which all is seen variances follow from them exactly. Taken for certain they move. */
+static void a_fit_goes_on_where_one_ended(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = {40, 25, 3, 1, 1.2, FESCUE_DOUBLE, 3};
+    struct plot plot = plot_sow(context, &sowing, 0);
+    struct evidence_request request = request_of(3, FESCUE_OFFSETS_NONE);
+    struct evidence_result fit = learn(context, &plot.cells, &request), next;
+    assert_int_equal(fit.model.low_rank.rank, 3);
+    request.rounds = 1;
+    request.noise_start = fit.noise * fit.noise;
+    for (int shrunk = 0; shrunk < 2; shrunk++) {
+        request.is_shrunk = shrunk == 1;
+        assert_status(context, evidence_fit(context, &plot.cells, &request, &fit.model, &next), FESCUE_OK);
+        double kept = next.model.low_rank.spectrum[2] / fit.model.low_rank.spectrum[2];
+        if (request.is_shrunk)
+            assert_close(kept, 1, 1e-6);
+        else
+            assert_true(fabs(kept - 1) > 1e-3);
+        evidence_result_free(context, &next);
+    }
+    evidence_result_free(context, &fit);
+    plot_free(&plot);
+}
+
 static void noise_alone_has_no_components(void **state)
 {
     fescue_context *context = bench_of(state)->context;
@@ -346,6 +372,7 @@ int main(void)
 {
     const struct CMUnitTest tests[] = {
         BENCH_TEST(full_table_meets_the_closed_solution),
+        BENCH_TEST(a_fit_goes_on_where_one_ended),
         BENCH_TEST(noise_alone_has_no_components),
         BENCH_TEST(few_cells_near_the_oracle),
         BENCH_TEST(units_and_orientation_do_not_matter),
