@@ -28,7 +28,9 @@
 #define TURNED_MOST 2
 #define TURNED_WIDTHS(X) X(8, 2, false)
 #define MADD_TURNED(a, b, c) (turned) _mm256_fmadd_pd(a, b, c)
+#define MSUB_TURNED(a, b, c) (turned) _mm256_fmsub_pd(a, b, c)
 #define PIECE_REPEAT(x) (turned) _mm256_broadcast_pd((const __m128d *)(const void *)(x))
+#define PIECE_ALONE(x) (turned) _mm256_zextpd128_pd256(_mm_loadu_pd(x))
 #define COMMON_REGISTERS(X) X(2) X(4) X(6) X(8)
 #define SWEEP_KERNEL sweep_avx2_double
 #include "numeric/sweep_kernel.h"

@@ -27,7 +27,9 @@
 #define TURNED_MOST 2
 #define TURNED_WIDTHS(X) X(8, 1, false) X(16, 2, false)
 #define MADD_TURNED(a, b, c) (turned) _mm512_fmadd_pd(a, b, c)
+#define MSUB_TURNED(a, b, c) (turned) _mm512_fmsub_pd(a, b, c)
 #define PIECE_REPEAT(x) (turned) _mm512_broadcast_f64x2(_mm_loadu_pd(x))
+#define PIECE_ALONE(x) (turned) _mm512_zextpd128_pd512(_mm_loadu_pd(x))
 #define COMMON_REGISTERS(X) X(1) X(2) X(3) X(4)
 #define SWEEP_KERNEL sweep_avx512_double
 #include "numeric/sweep_kernel.h"

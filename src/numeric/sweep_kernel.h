@@ -14,7 +14,7 @@
  *     NARROW               address of the table to take for rows of 8 numbers; or not
  *     TURNED               numbers of a register whose rows are turned; or not
  *     TURNED_..            what else sweep_kernel_turned.h needs for it: TURNED_MOST, TURNED_WIDTHS(X), MADD_TURNED,
- *                          PIECE_REPEAT, and HALVES_.. where rows are paired
+ *                          MSUB_TURNED, PIECE_REPEAT, PIECE_ALONE, and HALVES_.. where rows are paired
  *     COMMON_REGISTERS(X)  X(n) for each number n of registers a row that deserves loops of its own
  *     SWEEP_KERNEL         the name of the table this gives
  *

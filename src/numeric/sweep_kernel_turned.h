@@ -83,6 +83,7 @@ INLINE void rows_turn(const turned row[PIECE], turned p[PIECE])
 #ifndef HALVES_JOIN
 #define HALVES_JOIN(low, high) (*(const turned *)((void)(high), low))
 #define HALVES_TWICE(x) PIECE_REPEAT(x)
+#define HALVES_APART(x) PIECE_ALONE(x)
 #define HALVES_ONCE(x) FIRST_PIECES(x, x)
 #endif
 
@@ -102,10 +103,14 @@ INLINE turned row_read(const REAL *row, const REAL *later, const bool paired)
     return paired ? HALVES_JOIN(row, later) : *(const turned *)row;
 }
 
-/* A number for each cell of a step, as its r will stand. */
+/* A number for each cell of a step, as its r will stand; and but once, with zeros where it would stand again. */
 INLINE turned numbers_read(const REAL *number, const bool paired)
 {
     return paired ? HALVES_TWICE(number) : PIECE_REPEAT(number);
+}
+INLINE turned numbers_read_once(const REAL *number, const bool paired)
+{
+    return paired ? HALVES_APART(number) : PIECE_ALONE(number);
 }
 
 /* p_k of the rows of a step's cells, n registers of them. */
@@ -122,10 +127,10 @@ INLINE void step_turn(const struct sweep_rows *rows, const uint32_t *across, tur
     }
 }
 
-/* l . p_c of each cell, in every piece; of paired rows twice those of the first half, then twice the others. */
-INLINE turned step_dot(const turned *l, const turned *p, const size_t n, const bool paired)
+/* l . p_c - x_c of each cell, in every piece; of paired rows twice those of the first half, then twice the others. */
+INLINE turned step_residual(const turned *l, const turned *p, const REAL *x, const size_t n, const bool paired)
 {
-    turned s[2] = {l[0] * p[0], l[1] * p[1]};
+    turned s[2] = {MSUB_TURNED(l[0], p[0], numbers_read_once(x, paired)), l[1] * p[1]};
     for (size_t k = 2; k < n * PIECE; k++)
         s[k % 2] = MADD_TURNED(l[k], p[k], s[k % 2]);
     s[0] += s[1];
@@ -135,26 +140,47 @@ INLINE turned step_dot(const turned *l, const turned *p, const size_t n, const b
     return s[0];
 }
 
-/* r of a group's cells, and g_k += r p_k unless g is NULL */
-INLINE void turned_group(const struct span *span, struct chunk chunk, size_t c, const turned *l, turned *g,
-                         cells *number, const size_t n, const bool paired)
+/* What a chunk comes to: g_k, and r^2 and |r| of every cell, PIECES times, or twice where rows are paired. */
+struct turned_sums {
+    turned g[TURNED_MOST * PIECE], square, absolute;
+};
+
+/* The numbers of a group: g_k only when asked for, and |r| only otherwise. */
+INLINE void turned_group(const struct span *span, struct chunk chunk, size_t c, const turned *l,
+                         struct turned_sums *sums, turned r[2], const bool gradient, const size_t n, const bool paired)
 {
-    turned r[2], p[TURNED_MOST * PIECE];
+    turned p[TURNED_MOST * PIECE];
     const size_t together = paired ? GROUP : PIECE;
     for (size_t at = 0, step = 0; at < GROUP; at += together, step++) {
         step_turn(&span->right, chunk.across + c + at, p, n, paired);
-        r[step] = step_dot(l, p, n, paired) - numbers_read(chunk.values + c + at, paired);
+        r[step] = step_residual(l, p, chunk.values + c + at, n, paired);
         if (__builtin_expect(chunk.count - c < GROUP, 0)) {
             const void *there = cells_there + (GROUP - (chunk.count - c)) + at;
             r[step] = (turned)((turned_bits)r[step] & (turned_bits)numbers_read(there, paired));
         }
-        for (size_t k = 0; g != NULL && k < n * PIECE; k++)
-            g[k] = MADD_TURNED(r[step], p[k], g[k]);
+        sums->square = MADD_TURNED(r[step], r[step], sums->square);
+        if (!gradient)
+            sums->absolute += (turned)((turned_bits)r[step] & (sizeof(REAL) == sizeof(double) ? INT64_MAX : INT32_MAX));
+        for (size_t k = 0; gradient && k < n * PIECE; k++)
+            sums->g[k] = MADD_TURNED(r[step], p[k], sums->g[k]);
     }
+}
+
+INLINE void group_keep(const turned r[2], size_t left, REAL *to, const bool paired)
+{
+    cells number;
     if (paired)
-        *number = HALVES_ONCE(r[0]);
+        number = HALVES_ONCE(r[0]);
     else
-        *number = FIRST_PIECES(r[0], r[1]);
+        number = FIRST_PIECES(r[0], r[1]);
+    group_store(&number, left, to);
+}
+
+/* The numbers of a register in any order: sum += */
+INLINE void parts_add(const turned *x, wide sum[WIDES])
+{
+    for (size_t at = 0; at < TURNED / LANES; at++)
+        wide_add(sum, (const vec *)x + at);
 }
 
 /* Turned back and added up, in the order of a row: sum += */
@@ -172,24 +198,26 @@ INLINE void turned_add(const turned *g, wide *sum, const size_t n, const bool pa
     }
 }
 
-INLINE void turned_line(const struct span *span, uint64_t k, uint64_t end, const turned *l, wide *sum, squares *square,
-                        squares *absolute, const size_t n, const bool paired)
+INLINE void turned_line(const struct span *span, uint64_t k, uint64_t end, const turned *l, wide *product,
+                        wide (*sums)[WIDES], const bool gradient, const size_t n, const bool paired)
 {
     struct chunk chunk;
     struct chunk_room room;
     for (; k < end; k += chunk.count) {
-        turned g[TURNED_MOST * PIECE] = {{0}};
+        struct turned_sums chunk_sums = {0};
         chunk = chunk_find(span, k, end, &room, n * TURNED / LANES);
         for (size_t c = 0; c < chunk.count; c += GROUP) {
-            cells number;
+            turned r[2];
             span_prefetch(span, k + c, false, paired ? 1 : n * TURNED / LANES);
-            turned_group(span, chunk, c, l, sum != NULL ? g : NULL, &number, n, paired);
-            numbers_measure(&number, square, absolute);
+            turned_group(span, chunk, c, l, &chunk_sums, r, gradient, n, paired);
             if (span->residual != NULL)
-                group_store(&number, chunk.count - c, span->residual + k + c);
+                group_keep(r, chunk.count - c, span->residual + k + c, paired);
         }
-        if (sum != NULL)
-            turned_add(g, sum, n, paired);
+        parts_add(&chunk_sums.square, sums[0]);
+        if (gradient)
+            turned_add(chunk_sums.g, product, n, paired);
+        else
+            parts_add(&chunk_sums.absolute, sums[1]);
     }
 }
 
@@ -199,10 +227,10 @@ INLINE void turned_lines(const struct sweep_job *job, size_t block, double *out,
 {
     const size_t registers = paired ? 1 : n * TURNED / LANES;
     struct span span = span_of(job, block, stride);
-    squares square[WIDES] = {{0}}, absolute[WIDES] = {{0}};
+    wide sums[2][WIDES] = {{{0}}};
     for (uint32_t line = span.line; line < span.last; line++) {
         turned l[TURNED_MOST * PIECE];
-        wide sum[TURNED_MOST * TURNED / LANES * WIDES];
+        wide product[TURNED_MOST * TURNED / LANES * WIDES];
         const REAL *left = (const REAL *)job->left.data + line * job->left.stride;
         for (size_t v = 0; v < n; v++) {
             turned row = row_read(left + v * TURNED, left, paired);
@@ -211,12 +239,12 @@ INLINE void turned_lines(const struct sweep_job *job, size_t block, double *out,
         if (line + 1 < span.last)
             left_prefetch(&job->left, line + 1, registers);
         if (gradient)
-            product_begin(job, line, span.last, sum, registers);
-        turned_line(&span, span.start[line], span.start[line + 1], l, gradient ? sum : NULL, square,
-                    gradient ? NULL : absolute, n, paired);
+            product_begin(job, line, span.last, product, registers);
+        turned_line(&span, span.start[line], span.start[line + 1], l, product, sums, gradient, n, paired);
         if (gradient)
-            product_store(job, line, sum, registers);
+            product_store(job, line, product, registers);
     }
-    out[0] = squares_sum(square);
-    out[1] = squares_sum(absolute);
+    for (size_t s = 0; s < 2; s++)
+        for (size_t at = 0; at < LANES; at++) /* each number was added as often as it stood there */
+            out[s] += sums[s][at / WIDE_LANES][at % WIDE_LANES] / (paired ? 2 : PIECES);
 }
