@@ -112,7 +112,7 @@ static double sweep_seconds(const struct rating *rating)
         stand.ridge[k] = 1;
     bench_check(context, team_resize(context, 1));
     bench_check(context, sweep_create(context, &rating->cells, RATING_RANK, &stand.sweep));
-    double seconds = bench_seconds(1, both_solve, &stand, NULL, NULL);
+    double seconds = bench_seconds(1, both_solve, &stand);
     sweep_destroy(&stand.sweep);
     arena_close(context, &arena);
     return seconds;

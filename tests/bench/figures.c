@@ -45,7 +45,16 @@ double bench_median(double *values, size_t count)
     return values[count / 2];
 }
 
-double bench_seconds(size_t threads, bench_work *work, void *argument, bench_work *other, double *limit)
+/* Orders the values. */
+static struct bench_time time_of(double *seconds, size_t runs)
+{
+    struct bench_time time = {.median = bench_median(seconds, runs)};
+    time.least = seconds[0];
+    return time;
+}
+
+struct bench_time bench_measure(size_t threads, bench_work *work, void *argument, bench_work *other,
+                                struct bench_time *limit)
 {
     double (*const clock)(void) = threads == 1 ? clock_cpu : clock_wall;
     double own[RUNS_MOST], others[RUNS_MOST], all = 0;
@@ -62,8 +71,13 @@ double bench_seconds(size_t threads, bench_work *work, void *argument, bench_wor
         all += own[runs];
     }
     if (other != NULL)
-        *limit = bench_median(others, runs);
-    return bench_median(own, runs);
+        *limit = time_of(others, runs);
+    return time_of(own, runs);
+}
+
+double bench_seconds(size_t threads, bench_work *work, void *argument)
+{
+    return bench_measure(threads, work, argument, NULL, NULL).median;
 }
 
 static void value_print(const char *key, const json_t *value)

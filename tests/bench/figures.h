@@ -23,10 +23,16 @@ void *bench_take(size_t count, size_t size); /* zeroed, aligned to 64; ends the 
 
 /* Work that is timed. */
 typedef void bench_work(void *argument);
-/* Processor seconds of a run of `work` on one thread, wall seconds on several, and in *limit the seconds of a run of
-   `other` between two of them: medians, so that what else the machine does strikes both alike. NULL: no other. */
-double bench_seconds(size_t threads, bench_work *work, void *argument, bench_work *other, double *limit);
-double bench_median(double *values, size_t count); /* orders them */
+/* Seconds of a run, the processor's on one thread and the wall's on several. What else the machine does strikes the
+   median; of the least, there are runs without it. */
+struct bench_time {
+    double median, least;
+};
+/* Of `work`, and in *limit of `other`, which is run between two of its runs; NULL: no other. */
+struct bench_time bench_measure(size_t threads, bench_work *work, void *argument, bench_work *other,
+                                struct bench_time *limit);
+double bench_seconds(size_t threads, bench_work *work, void *argument); /* the median of that alone */
+double bench_median(double *values, size_t count);                      /* orders them */
 
 /* Takes over `figure`, an object with "what", prints it and keeps it. */
 void figure_add(struct bench *bench, json_t *figure);

@@ -106,28 +106,35 @@ static const struct kernel {
     {"normal equations and solves, columns", columns_solve, {0, 3, 1}, 1},
 };
 
+/* The share of gemm's rate that `flops` in the time of a run are, of the medians and of the best runs of both. */
+static void share_add(json_t *figure, double flops, struct bench_time own, struct bench_time gemm)
+{
+    json_object_set_new(figure, "share of gemm", json_real(flops / own.median / (GEMM_FLOPS / gemm.median)));
+    json_object_set_new(figure, "at best", json_real(flops / own.least / (GEMM_FLOPS / gemm.least)));
+}
+
 /* One thread beside gemm; two beside one of them. */
-static void kernel_report(struct stand *stand, const struct kernel *kernel, double *single)
+static void kernel_report(struct stand *stand, const struct kernel *kernel, struct bench_time *single)
 {
     bool is_single = stand->rating.cells.precision == FESCUE_SINGLE;
-    double cells = (double)stand->rating.cells.count, rank = (double)stand->rank, size = is_single ? 4 : 8, gemm = 0;
-    double flops = kernel->flops_line[0] + rank * (kernel->flops_line[1] + rank * kernel->flops_line[2]);
-    double seconds = bench_seconds(stand->threads, kernel->run, stand,
-                                   stand->threads > 1 ? NULL
-                                   : is_single        ? gemm_single_run
-                                                      : gemm_double_run,
-                                   &gemm);
-    json_t *figure = json_pack("{s:s, s:s, s:s, s:I, s:I, s:I, s:f, s:f, s:f}", "what", kernel->what, "precision",
-                               is_single ? "single" : "double", "kernel", stand->sweep.kernel, "cells",
-                               (json_int_t)stand->rating.cells.count, "rank", (json_int_t)stand->rank, "threads",
-                               (json_int_t)stand->threads, "ns a cell", seconds / cells * 1e9, "GFLOP/s",
-                               flops * cells / seconds / 1e9, "GB/s",
-                               cells * (4 + size + kernel->rows * size * rank) / seconds / 1e9);
+    double cells = (double)stand->rating.cells.count, rank = (double)stand->rank, size = is_single ? 4 : 8;
+    double flops = cells * (kernel->flops_line[0] + rank * (kernel->flops_line[1] + rank * kernel->flops_line[2]));
+    bench_work *gemm_run = is_single ? gemm_single_run : gemm_double_run;
+    struct bench_time gemm,
+        own = bench_measure(stand->threads, kernel->run, stand, stand->threads > 1 ? NULL : gemm_run, &gemm);
+    json_t *figure =
+        json_pack("{s:s, s:s, s:s, s:I, s:I, s:I, s:f, s:f, s:f}", "what", kernel->what, "precision",
+                  is_single ? "single" : "double", "kernel", stand->sweep.kernel, "cells",
+                  (json_int_t)stand->rating.cells.count, "rank", (json_int_t)stand->rank, "threads",
+                  (json_int_t)stand->threads, "ns a cell", own.median / cells * 1e9, "GFLOP/s",
+                  flops / own.median / 1e9, "GB/s", cells * (4 + size + kernel->rows * size * rank) / own.median / 1e9);
     if (stand->threads == 1) {
-        *single = seconds;
-        json_object_set_new(figure, "share of gemm", json_real(flops * cells / seconds / (GEMM_FLOPS / gemm)));
-    } else
-        json_object_set_new(figure, "times one thread", json_real(*single / seconds));
+        *single = own;
+        share_add(figure, flops, own, gemm);
+    } else {
+        json_object_set_new(figure, "times one thread", json_real(single->median / own.median));
+        json_object_set_new(figure, "at best", json_real(single->least / own.least));
+    }
     figure_add(stand->bench, figure);
 }
 
@@ -154,7 +161,7 @@ static void rank_report(struct stand *stand, bool two)
     struct arena arena = {0};
     fescue_context *context = stand->rating.context;
     const char *only = getenv("BENCH_LOOPS");
-    double single[COUNT];
+    struct bench_time single[COUNT];
     for (size_t j = 0; j < stand->rank; j++)
         stand->ridge[j] = 0.1;
     factors_draw(stand, &arena);
@@ -222,14 +229,15 @@ static void moments_report(struct bench *bench, const struct cells *cells, size_
         bench_check(context, TAKE(context, in_halves ? stand.half->length * moments_words(d) : 0, &halves));
         stand.moments.halves = in_halves ? halves : NULL;
         stand.batch = moments_batch_carve(work, d);
-        double gemm, seconds = bench_seconds(1, half_gather, &stand, gemm_double_run, &gemm);
-        double flops = 2 * (double)packed_size(d) + 2 * (double)d, count = (double)cells->count;
+        struct bench_time gemm, own = bench_measure(1, half_gather, &stand, gemm_double_run, &gemm);
+        double count = (double)cells->count, flops = count * (2 * (double)packed_size(d) + 2 * (double)d);
         double bytes = (in_halves ? 4 : 8) * (double)packed_size(d);
-        figure_add(bench, json_pack("{s:s, s:s, s:I, s:I, s:i, s:f, s:f, s:f, s:f}", "what", what[side], "precision",
-                                    in_halves ? "halves of double" : "double", "cells", (json_int_t)cells->count,
-                                    "rank", (json_int_t)rank, "threads", 1, "ns a cell", seconds / count * 1e9,
-                                    "GFLOP/s", flops * count / seconds / 1e9, "GB/s", bytes * count / seconds / 1e9,
-                                    "share of gemm", flops * count / seconds / (GEMM_FLOPS / gemm)));
+        json_t *figure = json_pack("{s:s, s:s, s:I, s:I, s:i, s:f, s:f, s:f}", "what", what[side], "precision",
+                                   in_halves ? "halves of double" : "double", "cells", (json_int_t)cells->count, "rank",
+                                   (json_int_t)rank, "threads", 1, "ns a cell", own.median / count * 1e9, "GFLOP/s",
+                                   flops / own.median / 1e9, "GB/s", bytes * count / own.median / 1e9);
+        share_add(figure, flops, own, gemm);
+        figure_add(bench, figure);
         memory_give(context, &stand.moments.data);
         GIVE(context, &halves);
     }

@@ -64,7 +64,7 @@ static void inflate_run(void *argument)
 static double copy_rate(void)
 {
     struct bytes bytes = {bench_take(COPY_BYTES, 1), bench_take(COPY_BYTES, 1), COPY_BYTES, COPY_BYTES};
-    double seconds = bench_seconds(1, copy_run, &bytes, NULL, NULL);
+    double seconds = bench_seconds(1, copy_run, &bytes);
     free(bytes.from);
     free(bytes.to);
     return 2.0 * COPY_BYTES / seconds;
@@ -83,7 +83,7 @@ static double inflate_rate(void)
     if (compress2(bytes.from, &packed, bytes.to, size, 6) != Z_OK)
         exit(1);
     bytes.from_size = packed;
-    double seconds = bench_seconds(1, inflate_run, &bytes, NULL, NULL);
+    double seconds = bench_seconds(1, inflate_run, &bytes);
     free(bytes.from);
     free(bytes.to);
     return (double)size / seconds;
@@ -97,10 +97,8 @@ static void limit_add(struct bench *bench, enum bench_limit limit, const char *w
 
 void limits_measure(struct bench *bench)
 {
-    limit_add(bench, LIMIT_DGEMM, "limit: dgemm", "GFLOP/s",
-              GEMM_FLOPS / bench_seconds(1, gemm_double_run, NULL, NULL, NULL));
-    limit_add(bench, LIMIT_SGEMM, "limit: sgemm", "GFLOP/s",
-              GEMM_FLOPS / bench_seconds(1, gemm_single_run, NULL, NULL, NULL));
+    limit_add(bench, LIMIT_DGEMM, "limit: dgemm", "GFLOP/s", GEMM_FLOPS / bench_seconds(1, gemm_double_run, NULL));
+    limit_add(bench, LIMIT_SGEMM, "limit: sgemm", "GFLOP/s", GEMM_FLOPS / bench_seconds(1, gemm_single_run, NULL));
     limit_add(bench, LIMIT_COPY, "limit: copy, read and written", "GB/s", copy_rate());
     limit_add(bench, LIMIT_INFLATE, "limit: inflate, text out", "GB/s", inflate_rate());
 }
