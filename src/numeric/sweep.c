@@ -7,7 +7,7 @@
  * instruction set does: it decides how many numbers are summed side by side and whether products are rounded before
  * they are added (kernel_set.c).
  *
- * Workspace: sums of 256 blocks; in single precision, copies of up to two factors of each side; for each worker a
+ * Workspace: sums of 256 blocks; in single precision, copies of up to two factors of a side; for each worker a
  * line's normal equations twice and a chunk of gathered rows.
  */
 #include "numeric/kernel_internal.h"
@@ -15,6 +15,8 @@
 #include <assert.h>
 #include <float.h>
 #include <string.h>
+
+enum { FACTORS_MOST = 2 }; /* that an operation reads for every cell */
 
 /* ---- workspace ----------------------------------------------------------------------------------------------------
  */
@@ -66,7 +68,8 @@ fescue_status sweep_create(fescue_context *context, const struct cells *cells, s
                             .workers = team_workers(context)};
     sweep->pool_size = 0;
     if (cells->precision == FESCUE_SINGLE)
-        sweep->pool_size = 2 * ((size_t)cells->rows + cells->columns) * sweep_width(sweep, rank_most);
+        sweep->pool_size = FACTORS_MOST * (size_t)(cells->rows > cells->columns ? cells->rows : cells->columns) *
+                           sweep_width(sweep, rank_most);
     arena_reserve(&sweep->arena, (size_t)CELLS_MOST_BLOCKS * SWEEP_SUMS, sizeof(double));
     arena_reserve(&sweep->arena, sweep->pool_size, sizeof(float));
     arena_reserve(&sweep->arena, sweep->workers * worker_room(sweep), sizeof(double));
@@ -92,7 +95,7 @@ void sweep_destroy(struct sweep *sweep)
 /* ---- factors as the kernels see them
  * --------------------------------------------------------------------------------- */
 
-enum { FACTORS_MOST = 4, COPY_LINES = 512 }; /* lines of a piece for one worker: some microseconds */
+enum { COPY_LINES = 512 }; /* lines of a piece for one worker: some microseconds */
 
 struct copy_job {
     struct matrix from[FACTORS_MOST];
@@ -199,7 +202,8 @@ void sweep_residual(struct sweep *sweep, const struct half *half, struct matrix 
     struct sweep_job job = job_open(sweep, half, right);
     double sums[SWEEP_SUMS];
     assert(left.rows == half->lines && left.columns == right.columns);
-    factors_open(&job, 2, (const struct matrix[]){left, right}, (struct sweep_rows *const[]){&job.left, &job.right});
+    job.left = left;
+    factors_open(&job, 1, &right, (struct sweep_rows *const[]){&job.right});
     job.product = gradient;
     job.residual = residual;
     sweep_slabs_run(&job, sweep->kernels->residual, sums);
@@ -212,7 +216,8 @@ void sweep_errors(struct sweep *sweep, const struct half *half, struct matrix le
     struct sweep_job job = job_open(sweep, half, right);
     double sums[SWEEP_SUMS];
     assert(left.rows == half->lines && left.columns == right.columns);
-    factors_open(&job, 2, (const struct matrix[]){left, right}, (struct sweep_rows *const[]){&job.left, &job.right});
+    job.left = left;
+    factors_open(&job, 1, &right, (struct sweep_rows *const[]){&job.right});
     sweep_slabs_run(&job, sweep->kernels->residual, sums);
     *square = sums[0];
     *absolute = sums[1];
@@ -236,8 +241,9 @@ void sweep_tangent(struct sweep *sweep, const struct half *half, struct matrix a
     struct sweep_job job = job_open(sweep, half, right);
     double sums[SWEEP_SUMS];
     assert(left.rows == half->lines && a.rows == half->lines && b.rows == half->length);
-    factors_open(&job, 4, (const struct matrix[]){left, right, a, b},
-                 (struct sweep_rows *const[]){&job.left, &job.right, &job.a, &job.b});
+    job.left = left;
+    job.a = a;
+    factors_open(&job, 2, (const struct matrix[]){right, b}, (struct sweep_rows *const[]){&job.right, &job.b});
     if (residual != NULL) /* or what is summed with the half's own values is not handed on */
         job.values = residual;
     sweep_run(&job, job_kernel(&job)->tangent, sums);

@@ -13,7 +13,7 @@ enum { SWEEP_MOST_WIDTH = 272 };
 /* Cells in flight at once, and cells gathered before their products are added to a line's normal equations. */
 enum { SWEEP_CHUNK = 32 };
 
-/* One factor as a kernel sees it: rows of `width` numbers in the sweep's precision, `stride` numbers apart. */
+/* A factor whose rows are read for every cell: rows of `width` numbers in the sweep's precision, `stride` apart. */
 struct sweep_rows {
     const void *data;
     size_t stride;
@@ -23,7 +23,8 @@ struct sweep_rows {
 struct sweep_job {
     struct sweep *sweep;
     const struct half *half;
-    struct sweep_rows left, right, a, b;
+    struct matrix left, a; /* read once a line, and rounded then */
+    struct sweep_rows right, b;
     size_t width; /* numbers worked on in each row: the rank up to whole registers, zeros behind the rank */
     size_t rank;
     const void *values;    /* of cells, in the half's order: the half's own, or residuals, or others */

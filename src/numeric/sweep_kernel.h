@@ -80,6 +80,7 @@ enum { MOST_REGISTERS = SWEEP_MOST_WIDTH / LANES, WIDE_LANES = LANES / WIDES };
     type __attribute__((vector_size((count) * sizeof(type)), aligned(sizeof(type)), may_alias))
 typedef REGISTER_OF(REAL, LANES) vec;
 typedef REGISTER_OF(double, WIDE_LANES) wide;
+typedef REGISTER_OF(double, LANES) doubles;
 /* A number a cell of a group, and sums of their products. */
 typedef REGISTER_OF(REAL, GROUP) cells;
 typedef REGISTER_OF(double, GROUP / WIDES) squares;
@@ -199,11 +200,12 @@ INLINE void row_prefetch(const REAL *row, size_t width)
         __builtin_prefetch((const char *)row + at);
 }
 
-INLINE void row_load(const struct sweep_rows *rows, uint32_t line, vec *to, const size_t registers)
+/* A row of a factor that is read once a line. */
+INLINE void row_load(const struct matrix *factor, uint32_t line, vec *to, const size_t registers)
 {
-    const REAL *row = (const REAL *)rows->data + line * rows->stride;
+    const double *row = factor->data + line * factor->stride;
     for (size_t v = 0; v < registers; v++)
-        to[v] = *(const vec *)(row + v * LANES);
+        to[v] = __builtin_convertvector(*(const doubles *)(row + v * LANES), vec);
 }
 
 /* Where the right rows of a group are. */
@@ -239,9 +241,10 @@ INLINE void rows_gather(const vec each[GROUP], const REAL *const row[GROUP], wid
 }
 
 /* Lines come in order, but too seldom for the processor to look out for their rows itself. */
-INLINE void left_prefetch(const struct sweep_rows *left, uint32_t line, const size_t registers)
+INLINE void left_prefetch(const struct matrix *left, uint32_t line, const size_t registers)
 {
-    row_prefetch((const REAL *)left->data + line * left->stride, registers * LANES);
+    for (size_t at = 0; at < registers * LANES; at += CACHE_LINE / sizeof(double))
+        __builtin_prefetch(left->data + line * left->stride + at);
 }
 
 /* Zeros, or what earlier slabs have come to. The next line's row, which will be written, is asked for. */

@@ -71,6 +71,13 @@ INLINE void rows_turn(const turned row[PIECE], turned p[PIECE])
 #endif
 }
 
+/* What is read once a line comes in registers of LANES. */
+#if TURNED == LANES
+#define PARTS_JOIN(first, last) ((void)(last), *(first))
+#else
+#define PARTS_JOIN(first, last) __builtin_shufflevector(*(first), *(last), LIST_16(ITSELF))
+#endif
+
 /* The first pieces of two registers. */
 #ifdef REAL_IS_DOUBLE
 #define FIRST_PIECE(a) __builtin_shufflevector(a, a, 0, 1)
@@ -101,6 +108,18 @@ INLINE void row_spread(const turned *row, turned l[PIECE])
 INLINE turned row_read(const REAL *row, const REAL *later, const bool paired)
 {
     return paired ? HALVES_JOIN(row, later) : *(const turned *)row;
+}
+
+/* l_k of a line's row, n registers of it; of half a register, in both halves. */
+INLINE void left_spread(const struct matrix *left, uint32_t line, turned *l, const size_t n, const bool paired)
+{
+    vec part[TURNED_MOST * TURNED / LANES];
+    row_load(left, line, part, paired ? 1 : n * TURNED / LANES);
+    for (size_t v = 0; v < n; v++) {
+        const vec *first = part + v * TURNED / LANES, *last = paired ? first : first + TURNED / LANES - 1;
+        turned row = (turned)PARTS_JOIN(first, last);
+        row_spread(&row, l + v * PIECE);
+    }
 }
 
 /* A number for each cell of a step, as its r will stand; and but once, with zeros where it would stand again. */
@@ -231,11 +250,7 @@ INLINE void turned_lines(const struct sweep_job *job, size_t block, double *out,
     for (uint32_t line = span.line; line < span.last; line++) {
         turned l[TURNED_MOST * PIECE];
         wide product[TURNED_MOST * TURNED / LANES * WIDES];
-        const REAL *left = (const REAL *)job->left.data + line * job->left.stride;
-        for (size_t v = 0; v < n; v++) {
-            turned row = row_read(left + v * TURNED, left, paired);
-            row_spread(&row, l + v * PIECE);
-        }
+        left_spread(&job->left, line, l, n, paired);
         if (line + 1 < span.last)
             left_prefetch(&job->left, line + 1, registers);
         if (gradient)

@@ -53,26 +53,42 @@ static struct bench_time time_of(double *seconds, size_t runs)
     return time;
 }
 
+/* How many runs of the work last as long as one of the other. */
+static size_t runs_beside(bench_work *work, void *argument, bench_work *other)
+{
+    if (other == NULL)
+        return 1;
+    double begin = clock_wall();
+    other(NULL);
+    double middle = clock_wall();
+    work(argument);
+    double ratio = (middle - begin) / (clock_wall() - middle);
+    return ratio > 1 ? (size_t)fmin(ratio, 1000) : 1;
+}
+
 struct bench_time bench_measure(size_t threads, bench_work *work, void *argument, bench_work *other,
                                 struct bench_time *limit)
 {
     double (*const clock)(void) = threads == 1 ? clock_cpu : clock_wall;
     double own[RUNS_MOST], others[RUNS_MOST], all = 0;
-    size_t runs = 0;
+    size_t rounds = 0;
     work(argument); /* what the first run meets for the first time is not counted */
-    for (; runs < RUNS_MOST && (runs < RUNS_LEAST || all < seconds_enough); runs++) {
+    size_t runs = runs_beside(work, argument, other);
+    for (; rounds < RUNS_MOST && (rounds < RUNS_LEAST || all < seconds_enough); rounds++) {
         double begin = clock();
         if (other != NULL)
             other(NULL);
         double middle = clock();
-        work(argument);
-        others[runs] = middle - begin;
-        own[runs] = clock() - middle;
-        all += own[runs];
+        for (size_t run = 0; run < runs; run++)
+            work(argument);
+        double end = clock();
+        others[rounds] = middle - begin;
+        own[rounds] = (end - middle) / (double)runs;
+        all += end - middle;
     }
     if (other != NULL)
-        *limit = time_of(others, runs);
-    return time_of(own, runs);
+        *limit = time_of(others, rounds);
+    return time_of(own, rounds);
 }
 
 double bench_seconds(size_t threads, bench_work *work, void *argument)
