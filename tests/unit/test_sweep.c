@@ -341,7 +341,7 @@ static void workers_leave_no_trace(void **state)
 /* ---- slabs --------------------------------------------------------------------------------------------------------
  */
 
-/* 60 000 x 40: three slabs, the last one shorter; some columns end in the first, and one is empty. */
+/* 60 000 x 40: four slabs, the last one shorter; some columns end in the second, and one is empty. */
 static void long_table(fescue_context *context, enum fescue_precision precision, struct cells *cells)
 {
     struct triplet_list list = {.precision = precision};
