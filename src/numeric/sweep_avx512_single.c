@@ -4,7 +4,7 @@
  *
  * Eight floats a register, so that rank 5 or 8 is not half padding, and eight doubles to add them up in. Processors
  * that do 512 bits in two halves (such as Zen 4, where this was measured) lose nothing by it at any rank, and have 32
- * of these registers.
+ * of these registers. Sixteen where rows are turned.
  */
 #include "numeric/sweep_internal.h"
 

@@ -18,13 +18,14 @@
  * No cell needs a register of its own for its partial sums, no r has to be brought into all lanes, and rows are read
  * once, in one or two operations each: 7 to 9 operations a cell of 8 or 16 floats in 512 bits, beside the 11 to 16 of
  * the loops of sweep_kernel.h, so that more cells are on their way at once. Where a row fills but half of a register
- * (paired), the row of another cell is the other half. Rows of 8, 16 and 32 floats take Zen 4 some 0.84, 0.93 and 0.87
- * of the time of those loops, rows of 8 and 16 doubles 0.91 and 0.87, on 909 778 cells in lines of 90 and 144; at 24
- * and 32 doubles nothing is gained. With 256 bits, where there are 16 registers, rows of 8 floats take 0.90, of 8
- * doubles 0.97.
+ * (paired), the row of another cell is the other half. Rows of 8, 16 and 32 floats take Zen 4 some 0.78, 0.78 and 0.83
+ * of the time of those loops, rows of 8 and 16 doubles 0.84 and 0.80, on 909 778 cells in lines of 90 and 144; at 24
+ * and 32 doubles nothing is gained. With 256 bits, where there are 16 registers, rows of 8 floats take some 0.75, of 8
+ * doubles 0.85.
  *
- * g_k are REAL over a chunk: in single precision a term meets CHUNK / PIECE roundings and some more. The line's row, a
- * step's rows and g, PIECE registers each for a register of the row, limit how wide rows may be (TURNED_MOST).
+ * g_k and sums of squares are REAL over a chunk: in single precision a term meets CHUNK / PIECE roundings and some
+ * more. The line's row, a step's rows and g, PIECE registers each for a register of the row, limit how wide rows may be
+ * (TURNED_MOST).
  */
 
 enum { PIECE = 16 / sizeof(REAL), PIECES = TURNED / PIECE };

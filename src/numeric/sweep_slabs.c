@@ -22,9 +22,8 @@
 
 #include <string.h>
 
-/* Rows of 2 MB in rank 16, half of which are in use at most times, and at most what a few cores share in rank 32.
-   Shorter slabs are nearer, but a line's part of them is shorter too; below some 16 cells its beginning and end cost
-   more than is won. */
+/* Rows of 2 MB in rank 16, and at most what a few cores share in rank 32. Shorter slabs are nearer, but a line's part
+   of them is shorter too; below some 16 cells its beginning and end cost more than is won. */
 enum { SLAB_POSITIONS = 16 << 10, STRETCH_LEAST = 16 };
 
 struct arranging {

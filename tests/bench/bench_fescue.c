@@ -4,7 +4,7 @@
  * every solver.
  *
  *     BENCH_LOADED    cells of the table that is loaded       [1e7]
- *     BENCH_KERNELS   cells of the tables of the loops        [1e6,1e7]; 1e7 is beyond the caches
+ *     BENCH_KERNELS   cells of the tables of the loops        [1e5,1e6,1e7]; 1e7 is beyond the caches
  *     BENCH_LOOPS     of the loops, those whose names hold this, such as "gradient, rows"    [all]
  *     BENCH_RANKS     their ranks                             [5,8,11,16,32]
  *     BENCH_CELLS     cells of the tables that are fitted     [1e5,1e6,1e7]; 1e5 takes a minute, all an hour
@@ -72,7 +72,7 @@ int main(void)
         limits_measure(&bench);
     if (has_part("loading"))
         each_measure(&bench, setting("BENCH_LOADED", "1e7"), loading_measure);
-    each_measure(&bench, setting("BENCH_KERNELS", "1e6,1e7"), loops_measure);
+    each_measure(&bench, setting("BENCH_KERNELS", "1e5,1e6,1e7"), loops_measure);
     each_measure(&bench, setting("BENCH_CELLS", "1e5,1e6,1e7"), solvers_measure);
     if (with_large && has_part("fits"))
         fits_measure(&bench, 100000000);
