@@ -117,8 +117,8 @@ struct sweep {
 fescue_status sweep_create(fescue_context *context, const struct cells *cells, size_t rank_most, struct sweep *sweep);
 void sweep_destroy(struct sweep *sweep);
 /* For many sweeps over a half whose lines are long and read right rows from far away: keeps its cells once more, in an
-   order in which they are near. Sweeps with the half's own values that keep no residual then use it. Does nothing where
-   it would not pay. The half stays as it is for as long as the sweep is used. Once a sweep. */
+   order in which they are near. Sweeps with the half's own values that neither keep nor take a residual then use it.
+   Does nothing where it would not pay. The half stays as it is for as long as the sweep is used. Once a sweep. */
 fescue_status sweep_arrange(struct sweep *sweep, const struct half *half);
 
 /* r_k = left_i . right_j - x_k over all cells; *square = sum r_k^2. gradient (lines x rank, or data NULL) = R right.

@@ -246,7 +246,7 @@ void sweep_tangent(struct sweep *sweep, const struct half *half, struct matrix a
     factors_open(&job, 2, (const struct matrix[]){right, b}, (struct sweep_rows *const[]){&job.right, &job.b});
     if (residual != NULL) /* or what is summed with the half's own values is not handed on */
         job.values = residual;
-    sweep_run(&job, job_kernel(&job)->tangent, sums);
+    sweep_slabs_run(&job, job_kernel(&job)->tangent, sums);
     if (residual != NULL)
         *zr = sums[0];
     *zz = sums[1];

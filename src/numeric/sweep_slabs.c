@@ -11,6 +11,9 @@
  * come from memory once and are then near for every line, and for every worker, as all are at the same slab. What a
  * line has come to is read again and added to (sweep_job.more).
  *
+ * Positions in two bytes each gain 3 to 5 per cent in rank 8 and single precision where the cells lie in a shared
+ * cache, and nothing where they come from memory; they are not worth a second kind of loops.
+ *
  * Going through the cells of the half itself in that order, with a cursor for each line, needs no second copy, but does
  * not pay: cells are read more often than rows, and would then be read in pieces of some hundred bytes.
  *

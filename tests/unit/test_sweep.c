@@ -372,14 +372,17 @@ static void column_gradient(const struct shop *shop, uint32_t j, size_t c, long 
 static void slabs_check(struct shop *shop)
 {
     const struct half *half = &shop->cells.by_column;
-    double square, slabs_square, absolute;
+    double square, slabs_square, absolute, zz, slabs_zz;
     struct matrix product = shop->b;
+    sweep_tangent(&shop->sweep, half, shop->right, shop->left, shop->right, shop->left, NULL, NULL, &zz);
     sweep_residual(&shop->sweep, half, shop->right, shop->left, product, NULL, &square);
     assert_null(shop->sweep.slabs);
     assert_status(shop->context, sweep_arrange(&shop->sweep, half), FESCUE_OK);
     assert_non_null(shop->sweep.slabs);
     sweep_residual(&shop->sweep, half, shop->right, shop->left, product, NULL, &slabs_square);
     assert_close(slabs_square, square, (1e-13 + ROUNDINGS * shop->roundoff) * square);
+    sweep_tangent(&shop->sweep, half, shop->right, shop->left, shop->right, shop->left, NULL, NULL, &slabs_zz);
+    assert_close(slabs_zz, zz, (1e-13 + ROUNDINGS * shop->roundoff) * zz);
     sweep_errors(&shop->sweep, half, shop->right, shop->left, &square, &absolute);
     assert_close(square, slabs_square, (1e-13 + ROUNDINGS * shop->roundoff) * square);
     for (uint32_t j = 0; j < half->lines; j++)
