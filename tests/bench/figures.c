@@ -162,10 +162,11 @@ void figures_write(const struct bench *bench)
 {
     char path[1024];
     snprintf(path, sizeof path, "%s/bench.json", bench->build);
-    json_t *all =
-        json_pack("{s:{s:f, s:f, s:f, s:f}, s:O}", "limits", "dgemm flops a second", bench->limit[LIMIT_DGEMM],
-                  "sgemm flops a second", bench->limit[LIMIT_SGEMM], "copied bytes a second", bench->limit[LIMIT_COPY],
-                  "inflated bytes a second", bench->limit[LIMIT_INFLATE], "figures", bench->figures);
+    json_t *all = json_pack("{s:{s:f, s:f, s:f, s:f, s:f, s:f}, s:O}", "limits", "dgemm flops a second",
+                            bench->limit[LIMIT_DGEMM], "sgemm flops a second", bench->limit[LIMIT_SGEMM],
+                            "copied bytes a second", bench->limit[LIMIT_COPY], "inflated bytes a second",
+                            bench->limit[LIMIT_INFLATE], "dgemm of two threads over one", bench->limit[LIMIT_TWO_DGEMM],
+                            "copied by two threads over one", bench->limit[LIMIT_TWO_COPY], "figures", bench->figures);
     if (all == NULL || json_dump_file(all, path, JSON_INDENT(2)) != 0)
         fprintf(stderr, "bench: %s could not be written\n", path);
     else

@@ -9,11 +9,11 @@
 
 #include <jansson.h>
 
-enum bench_limit { LIMIT_DGEMM, LIMIT_SGEMM, LIMIT_COPY, LIMIT_INFLATE, LIMIT_COUNT };
+enum bench_limit { LIMIT_DGEMM, LIMIT_SGEMM, LIMIT_COPY, LIMIT_INFLATE, LIMIT_TWO_DGEMM, LIMIT_TWO_COPY, LIMIT_COUNT };
 
 struct bench {
     json_t *figures;           /* an array of objects */
-    double limit[LIMIT_COUNT]; /* flops a second; bytes a second of the two others */
+    double limit[LIMIT_COUNT]; /* flops a second; bytes a second of the two others; two threads over one */
     const char *build;         /* where results go */
 };
 
@@ -36,6 +36,9 @@ double bench_median(double *values, size_t count);                      /* order
 
 /* Takes over `figure`, an object with "what", prints it and keeps it. */
 void figure_add(struct bench *bench, json_t *figure);
+/* How many times as fast two threads were as one (processor seconds of one over wall seconds of two), and beside it
+   what the machine gives two of them now, of matrix products and of copies. */
+void figure_times_add(json_t *figure, double times);
 /* bench.json, and the chart when gnuplot is there. */
 void figures_write(const struct bench *bench);
 

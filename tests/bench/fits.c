@@ -82,7 +82,7 @@ static void fit_report(struct bench *bench, const struct rating *rating, const c
                                    (json_int_t)own->iterations, "error on hidden cells", own->rmse, "ended by",
                                    own->stop, "MB at most", (double)own->bytes / 1e6);
         if (threads == 2)
-            json_object_set_new(figure, "times one thread", json_real(outcome[0].wall / own->wall));
+            figure_times_add(figure, outcome[0].cpu / own->wall);
         figure_add(bench, figure);
     }
 }

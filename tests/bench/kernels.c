@@ -132,7 +132,7 @@ static void kernel_report(struct stand *stand, const struct kernel *kernel, stru
         *single = own;
         share_add(figure, flops, own, gemm);
     } else {
-        json_object_set_new(figure, "times one thread", json_real(single->median / own.median));
+        figure_times_add(figure, single->median / own.median);
         json_object_set_new(figure, "at best", json_real(single->least / own.least));
     }
     figure_add(stand->bench, figure);

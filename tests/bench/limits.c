@@ -2,6 +2,10 @@
  *
  * What the machine does at best, on one thread: matrix products in both precisions, bytes copied (read and written,
  * both counted), and bytes that zlib inflates from the kind of text that tables are.
+ *
+ * And what two threads give over one, of products that a cache holds and of copies that none holds: on a virtual
+ * machine whose processors share a core, or that has other work, that is less than two, and not always the same. So it
+ * is measured again beside every figure that is compared with it.
  */
 #include "figures.h"
 
@@ -89,6 +93,73 @@ static double inflate_rate(void)
     return (double)size / seconds;
 }
 
+/* ---- two threads -------------------------------------------------------------------------------------------------
+ */
+
+enum { TWO_SIZE = 384, TWO_COPY = 32 << 20, TWO_ROUNDS = 7 };
+
+struct two {
+    fescue_context *context; /* of two threads */
+    double *room[2];         /* three matrices, or two stretches of bytes */
+};
+
+static void two_multiply(void *job, size_t block, size_t worker)
+{
+    double *a = ((struct two *)job)->room[block];
+    (void)worker;
+    for (int k = 0; k < 2; k++)
+        cblas_dgemm(CblasRowMajor, CblasNoTrans, CblasNoTrans, TWO_SIZE, TWO_SIZE, TWO_SIZE, 1, a, TWO_SIZE,
+                    a + TWO_SIZE * TWO_SIZE, TWO_SIZE, 0, a + 2 * TWO_SIZE * TWO_SIZE, TWO_SIZE);
+}
+
+static void two_copy(void *job, size_t block, size_t worker)
+{
+    char *bytes = (char *)((struct two *)job)->room[block];
+    (void)worker;
+    memcpy(bytes + TWO_COPY, bytes, TWO_COPY);
+}
+
+/* Processor seconds of both blocks on this thread, over wall seconds of a block on each of two. */
+static double two_times(struct two *two, team_task *task)
+{
+    double times[TWO_ROUNDS];
+    for (int k = 0; k < TWO_ROUNDS; k++) {
+        double cpu = clock_cpu();
+        task(two, 0, 0);
+        task(two, 1, 0);
+        double wall = clock_wall();
+        cpu = clock_cpu() - cpu;
+        team_run(two->context, 2, task, two);
+        times[k] = cpu / (clock_wall() - wall);
+    }
+    return bench_median(times, TWO_ROUNDS);
+}
+
+static struct two *two_open(void)
+{
+    static struct two two;
+    if (two.context != NULL)
+        return &two;
+    if (fescue_context_create(NULL, &two.context) != FESCUE_OK)
+        exit(1);
+    bench_check(two.context, team_resize(two.context, 2));
+    gemm_room();
+    for (int k = 0; k < 2; k++)
+        two.room[k] = bench_take(2, TWO_COPY);
+    return &two;
+}
+
+void figure_times_add(json_t *figure, double times)
+{
+    struct two *two = two_open();
+    json_object_set_new(figure, "times one thread", json_real(times));
+    json_object_set_new(figure, "of products", json_real(two_times(two, two_multiply)));
+    json_object_set_new(figure, "of copies", json_real(two_times(two, two_copy)));
+}
+
+/* ---- one thread --------------------------------------------------------------------------------------------------
+ */
+
 static void limit_add(struct bench *bench, enum bench_limit limit, const char *what, const char *unit, double rate)
 {
     bench->limit[limit] = rate;
@@ -101,4 +172,9 @@ void limits_measure(struct bench *bench)
     limit_add(bench, LIMIT_SGEMM, "limit: sgemm", "GFLOP/s", GEMM_FLOPS / bench_seconds(1, gemm_single_run, NULL));
     limit_add(bench, LIMIT_COPY, "limit: copy, read and written", "GB/s", copy_rate());
     limit_add(bench, LIMIT_INFLATE, "limit: inflate, text out", "GB/s", inflate_rate());
+    struct two *two = two_open();
+    bench->limit[LIMIT_TWO_DGEMM] = two_times(two, two_multiply);
+    bench->limit[LIMIT_TWO_COPY] = two_times(two, two_copy);
+    figure_add(bench, json_pack("{s:s, s:i, s:f, s:f}", "what", "limit: times one thread", "threads", 2, "of products",
+                                bench->limit[LIMIT_TWO_DGEMM], "of copies", bench->limit[LIMIT_TWO_COPY]));
 }
