@@ -5,6 +5,7 @@
 #   make check      every test of the ordinary suite; ends with "N passed, N failed"
 #   make check-long the suites that take longer
 #   make bench      measure, beside the limits of the machine: $(BUILD)/bench.json, and bench.png by gnuplot
+#   make bench-shares     what two workers can give at most, by the processor clock of one
 #   make bench-solvers    error against time of all solvers: $(BUILD)/solvers.csv, and solvers.png by gnuplot
 #   make bench-recovery   tables recovered from few cells, and with noise: $(BUILD)/recovery.csv
 #   make format     bring all sources into the one layout
@@ -87,6 +88,9 @@ bench: all $(BUILD)/tests/bench/bench_fescue $(BUILD)/tests/bench/bench_streams
 	BUILD=$(BUILD) PYTHON=$(PYTHON) $(BUILD)/tests/bench/bench_fescue
 	BUILD=$(BUILD) $(BUILD)/tests/bench/bench_streams
 
+bench-shares: $(BUILD)/tests/bench/bench_shares
+	$<
+
 bench-recovery: $(BUILD)/tests/bench/bench_recovery
 	$< 20 all $(BUILD)/recovery.csv
 
@@ -110,6 +114,6 @@ install: all
 clean:
 	rm -rf $(BUILD)
 
-.PHONY: all tests demo check check-long bench bench-recovery bench-solvers format install clean
+.PHONY: all tests demo check check-long bench bench-recovery bench-shares bench-solvers format install clean
 .SECONDARY:
 -include $(shell find $(BUILD) -name '*.d' 2>/dev/null)

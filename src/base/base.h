@@ -166,6 +166,10 @@ void outfile_format(struct outfile *file, const char *format, ...) __attribute__
 void outfile_real(struct outfile *file, double value, enum fescue_precision precision);
 void outfile_count(struct outfile *file, uint64_t value);
 fescue_status outfile_status(const struct outfile *file);
+/* Text that the team makes: calls the task for every piece 0 .. pieces-1, some of them at the same time, and what each
+   appends to its own sink follows in the file in the order of the pieces. */
+typedef void outfile_task(void *job, size_t piece, struct outfile *sink);
+void outfile_share(struct outfile *file, size_t pieces, outfile_task *task, void *job);
 
 /* The shortest round-trip decimal of value into text (at least 32 bytes), NUL-terminated; returns its length. */
 size_t real_to_text(double value, enum fescue_precision precision, char text[32]);

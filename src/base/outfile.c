@@ -98,6 +98,7 @@ fescue_status outfile_create(fescue_context *context, const char *directory, con
     TRY(path_join(context, directory, "", name, "", &file->final));
     TRY(path_join(context, directory, ".", name, suffix, &file->temporary));
     TRY(TAKE(context, BUFFER_SIZE, &file->buffer));
+    file->size = BUFFER_SIZE;
     TRY(temporary_create(file));
 done:
     if (status != FESCUE_OK && *out != NULL) {
@@ -165,9 +166,13 @@ void outfile_write(struct outfile *file, const void *bytes, size_t count)
 {
     if (file->status != FESCUE_OK || count == 0)
         return;
-    if (count > BUFFER_SIZE - file->used)
-        outfile_flush(file);
-    if (count > BUFFER_SIZE) {
+    if (count > file->size - file->used) {
+        if (!file->grows)
+            outfile_flush(file);
+        else if (!sink_grow(file, count))
+            return;
+    }
+    if (count > file->size) {
         outfile_put(file, bytes, count);
     } else {
         memcpy(file->buffer + file->used, bytes, count);

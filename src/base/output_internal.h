@@ -16,8 +16,9 @@ struct outfile {
     enum outfile_state state;
     int descriptor; /* -1 once closed */
     fescue_status status;
-    size_t used;
+    size_t used, size;
     char *buffer;
+    bool grows; /* a sink: all that is appended stays in the buffer */
 };
 
 /* New text: the four pieces one after the other. The caller owns it. */
@@ -31,6 +32,8 @@ fescue_status outfile_create(fescue_context *context, const char *directory, con
 /* Writes what is buffered, flushes to disk, closes. */
 fescue_status outfile_finish(struct outfile *file);
 fescue_status outfile_rename(struct outfile *file);
+/* Makes room for so many bytes more in the buffer of a sink. */
+bool sink_grow(struct outfile *sink, size_t count);
 /* Removes it from the disk, under the name it has now. */
 void outfile_remove(struct outfile *file);
 /* Closes; removes it from the disk unless it is kept. */

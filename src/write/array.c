@@ -3,7 +3,20 @@
  * A dense matrix as a Matrix Market array file: column after column, one number a line (Boisvert, Pozo, Remington 1996,
  * "The Matrix Market exchange formats", NISTIR 5935).
  */
-#include "write/write.h"
+#include "write/write_internal.h"
+
+enum { PIECE = 4096 }; /* numbers */
+
+static void piece_put(void *job, size_t piece, struct outfile *sink)
+{
+    const struct matrix *matrix = job;
+    size_t first = piece * PIECE, count = matrix->rows * matrix->columns;
+    size_t end = first + PIECE < count ? first + PIECE : count;
+    for (size_t k = first; k < end; k++) {
+        outfile_real(sink, MATRIX_AT(*matrix, k % matrix->rows, k / matrix->rows), FESCUE_DOUBLE);
+        outfile_write(sink, "\n", 1);
+    }
+}
 
 fescue_status write_array(struct output *output, const char *name, struct matrix matrix, const char *comment)
 {
@@ -15,10 +28,6 @@ fescue_status write_array(struct output *output, const char *name, struct matrix
     if (comment != NULL)
         outfile_format(file, "%% %s\n", comment);
     outfile_format(file, "%zu %zu\n", matrix.rows, matrix.columns);
-    for (size_t j = 0; j < matrix.columns; j++)
-        for (size_t i = 0; i < matrix.rows; i++) {
-            outfile_real(file, MATRIX_AT(matrix, i, j), FESCUE_DOUBLE);
-            outfile_write(file, "\n", 1);
-        }
+    outfile_share(file, (matrix.rows * matrix.columns + PIECE - 1) / PIECE, piece_put, &matrix);
     return outfile_status(file);
 }

@@ -12,7 +12,7 @@
  * Estimates take the input's decimal sign. A table from memory has no text: its cells are written as the shortest
  * decimals that read back the same.
  */
-#include "write/write.h"
+#include "write/write_internal.h"
 
 #include <string.h>
 
@@ -25,8 +25,8 @@ struct filling {
 
 /* What stands in one cell. */
 struct content {
-    bool is_seen, is_blank;
-    uint64_t seen; /* number in row order */
+    uint64_t seen; /* number in row order, or PLACE_UNSEEN */
+    bool is_blank;
     double estimate;
 };
 
@@ -38,14 +38,20 @@ const char *filled_name(const fescue_table *table)
     return table->look.separator == '\t' ? "filled.tsv" : "filled.csv";
 }
 
-/* The content of a cell; *next is the row's next seen cell, and is stepped over when it is this one. */
-static struct content content_at(const struct filling *filling, uint32_t row, uint32_t column, uint64_t *next)
+static struct content content_at(const struct filling *filling, const struct place *at)
 {
-    const struct half *half = &filling->table->cells.by_row;
-    if (*next < half->start[row + 1] && half->across[*next] == column)
-        return (struct content){.is_seen = true, .seen = (*next)++};
-    struct unseen unseen = run_unseen(filling->run, row, column);
-    return (struct content){.is_blank = unseen.is_blank, .estimate = unseen.estimate};
+    if (at->seen != PLACE_UNSEEN)
+        return (struct content){.seen = at->seen};
+    struct unseen unseen = run_unseen(filling->run, at->row, at->column);
+    return (struct content){.seen = PLACE_UNSEEN, .is_blank = unseen.is_blank, .estimate = unseen.estimate};
+}
+
+/* The same filling, into the sink of a piece. */
+static struct filling filling_into(const void *job, struct outfile *sink)
+{
+    struct filling filling = *(const struct filling *)job;
+    filling.file = sink;
+    return filling;
 }
 
 /* The shortest decimal that reads back the same, with the decimal sign that the input has. */
@@ -74,7 +80,7 @@ static void seen_put(const struct filling *filling, uint64_t k)
 
 static void content_put(const struct filling *filling, const struct content *content, const char *blank)
 {
-    if (content->is_seen)
+    if (content->seen != PLACE_UNSEEN)
         seen_put(filling, content->seen);
     else if (content->is_blank)
         outfile_text(filling->file, blank);
@@ -91,52 +97,47 @@ static void header_put(const struct filling *filling, const char *format)
     outfile_format(filling->file, "%% completed by fescue " FESCUE_VERSION "\n%% %s\n", run_caution);
 }
 
+static void entry_put(const void *job, const struct place *at, struct outfile *sink)
+{
+    const struct filling filling = filling_into(job, sink);
+    struct content content = content_at(&filling, at);
+    if (content.is_blank)
+        return;
+    outfile_count(sink, (uint64_t)at->row + 1);
+    outfile_text(sink, " ");
+    outfile_count(sink, (uint64_t)at->column + 1);
+    outfile_text(sink, " ");
+    content_put(&filling, &content, "");
+    outfile_text(sink, "\n");
+}
+
 static fescue_status coordinate_put(const struct filling *filling)
 {
     const struct cells *cells = &filling->table->cells;
     struct outfile *file = filling->file;
-    uint64_t next = 0;
     header_put(filling, "coordinate");
     outfile_format(file, "%u %u ", cells->rows, cells->columns);
     outfile_count(file, (uint64_t)cells->rows * cells->columns - filling->run->blank);
     outfile_text(file, "\n");
-    for (uint32_t row = 0; row < cells->rows; row++)
-        for (uint32_t column = 0; column < cells->columns; column++) {
-            struct content content = content_at(filling, row, column, &next);
-            if (content.is_blank)
-                continue;
-            outfile_count(file, (uint64_t)row + 1);
-            outfile_text(file, " ");
-            outfile_count(file, (uint64_t)column + 1);
-            outfile_text(file, " ");
-            content_put(filling, &content, "");
-            outfile_text(file, "\n");
-        }
+    walk_share(file, cells, false, entry_put, filling);
     return outfile_status(file);
 }
 
-/* Column after column, while seen cells are numbered row by row: every row keeps its own place. */
+static void element_put(const void *job, const struct place *at, struct outfile *sink)
+{
+    const struct filling filling = filling_into(job, sink);
+    struct content content = content_at(&filling, at);
+    content_put(&filling, &content, "nan");
+    outfile_text(sink, "\n");
+}
+
 static fescue_status array_put(const struct filling *filling)
 {
     const struct cells *cells = &filling->table->cells;
-    struct outfile *file = filling->file;
-    uint64_t *next = NULL;
-    fescue_status status;
-    TRY(TAKE(filling->run->context, cells->rows, &next));
-    for (uint32_t row = 0; row < cells->rows; row++)
-        next[row] = cells->by_row.start[row];
     header_put(filling, "array");
-    outfile_format(file, "%u %u\n", cells->rows, cells->columns);
-    for (uint32_t column = 0; column < cells->columns; column++)
-        for (uint32_t row = 0; row < cells->rows; row++) {
-            struct content content = content_at(filling, row, column, &next[row]);
-            content_put(filling, &content, "nan");
-            outfile_text(file, "\n");
-        }
-    TRY(outfile_status(file));
-done:
-    GIVE(filling->run->context, &next);
-    return status;
+    outfile_format(filling->file, "%u %u\n", cells->rows, cells->columns);
+    walk_share(filling->file, cells, true, element_put, filling);
+    return outfile_status(filling->file);
 }
 
 /* ---- delimited text -----------------------------------------------------------------------------------------------
@@ -152,26 +153,30 @@ static void separator_put(const struct filling *filling)
     outfile_write(filling->file, &filling->separator, 1);
 }
 
+static void wide_cell_put(const void *job, const struct place *at, struct outfile *sink)
+{
+    const struct filling filling = filling_into(job, sink);
+    struct content content = content_at(&filling, at);
+    char buffer[16];
+    if (at->column == 0) {
+        outfile_text(sink, "\n");
+        field_put(&filling, label_text(&filling.table->row_labels, at->row, buffer));
+    }
+    separator_put(&filling);
+    content_put(&filling, &content, "");
+}
+
 static fescue_status wide_put(const struct filling *filling)
 {
     const fescue_table *table = filling->table;
     char buffer[16];
-    uint64_t next = 0;
     if (table->look.corner != NULL)
         field_put(filling, table->look.corner);
     for (uint32_t column = 0; column < table->cells.columns; column++) {
         separator_put(filling);
         field_put(filling, label_text(&table->column_labels, column, buffer));
     }
-    for (uint32_t row = 0; row < table->cells.rows; row++) {
-        outfile_text(filling->file, "\n");
-        field_put(filling, label_text(&table->row_labels, row, buffer));
-        for (uint32_t column = 0; column < table->cells.columns; column++) {
-            struct content content = content_at(filling, row, column, &next);
-            separator_put(filling);
-            content_put(filling, &content, "");
-        }
-    }
+    walk_share(filling->file, &table->cells, false, wide_cell_put, filling);
     outfile_text(filling->file, "\n");
     return outfile_status(filling->file);
 }
@@ -189,24 +194,25 @@ static void titles_put(const struct filling *filling)
     outfile_text(filling->file, "\n");
 }
 
+static void line_put(const void *job, const struct place *at, struct outfile *sink)
+{
+    const struct filling filling = filling_into(job, sink);
+    struct content content = content_at(&filling, at);
+    char buffer[16];
+    if (content.is_blank)
+        return;
+    field_put(&filling, label_text(&filling.table->row_labels, at->row, buffer));
+    separator_put(&filling);
+    field_put(&filling, label_text(&filling.table->column_labels, at->column, buffer));
+    separator_put(&filling);
+    content_put(&filling, &content, "");
+    outfile_text(sink, "\n");
+}
+
 static fescue_status long_put(const struct filling *filling)
 {
-    const fescue_table *table = filling->table;
-    char row_buffer[16], column_buffer[16];
-    uint64_t next = 0;
     titles_put(filling);
-    for (uint32_t row = 0; row < table->cells.rows; row++)
-        for (uint32_t column = 0; column < table->cells.columns; column++) {
-            struct content content = content_at(filling, row, column, &next);
-            if (content.is_blank)
-                continue;
-            field_put(filling, label_text(&table->row_labels, row, row_buffer));
-            separator_put(filling);
-            field_put(filling, label_text(&table->column_labels, column, column_buffer));
-            separator_put(filling);
-            content_put(filling, &content, "");
-            outfile_text(filling->file, "\n");
-        }
+    walk_share(filling->file, &filling->table->cells, false, line_put, filling);
     return outfile_status(filling->file);
 }
 

@@ -18,6 +18,7 @@
 #include "write/write.h"
 
 #include <math.h>
+#include <stdatomic.h>
 
 const char *const run_caution =
     "Estimates are not measurements. Do not use them for safety, medical, billing or compliance decisions without the "
@@ -149,17 +150,37 @@ static void table_count(struct run *run)
     }
 }
 
+/* Of the seen cells: how many of each basis, and how many that are not determined. */
+struct seen_count {
+    const struct run *run;
+    _Atomic uint64_t basis[BASIS_COUNT], loose;
+};
+
+static void block_count(void *job, size_t block, size_t worker)
+{
+    struct seen_count *count = job;
+    const struct half *half = &count->run->table->cells.by_row;
+    uint64_t of[BASIS_COUNT] = {0}, loose = 0;
+    (void)worker;
+    for (uint32_t row = half->block[block]; row < half->block[block + 1]; row++)
+        for (uint64_t k = half->start[row]; k < half->start[row + 1]; k++) {
+            enum basis basis = determined_basis(count->run->determined, row, half->across[k]);
+            of[basis]++;
+            loose += !is_determined(count->run, row, half->across[k], basis);
+        }
+    for (int basis = 0; basis < BASIS_COUNT; basis++)
+        atomic_fetch_add(&count->basis[basis], of[basis]);
+    atomic_fetch_add(&count->loose, loose);
+}
+
 void run_count(struct run *run)
 {
-    const struct cells *cells = &run->table->cells;
+    struct seen_count count = {.run = run};
     table_count(run);
-    for (uint32_t row = 0; row < cells->rows; row++)
-        for (uint64_t k = cells->by_row.start[row]; k < cells->by_row.start[row + 1]; k++) {
-            uint32_t column = cells->by_row.across[k];
-            enum basis basis = determined_basis(run->determined, row, column);
-            run->filled[basis]--;
-            run->blank -= !is_determined(run, row, column, basis);
-        }
+    team_run(run->context, run->table->cells.by_row.blocks, block_count, &count);
+    for (int basis = 0; basis < BASIS_COUNT; basis++)
+        run->filled[basis] -= atomic_load(&count.basis[basis]);
+    run->blank -= atomic_load(&count.loose);
     if (!run->options->strict)
         run->blank = 0;
 }

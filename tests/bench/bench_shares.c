@@ -13,11 +13,12 @@
  *     serial      seconds outside of blocks, over all
  *     uneven      what one worker waits for the other, over all
  *     bound       all over (serial + the longer of both workers' times, call by call)
- *     with calls  the same with what a call costs, a round of nothing, on top: measured here, with two real threads
+ *     with calls  the same with what the calls cost on top, as measured here with two real threads: one who is still
+ *                 looking out is there at once, one who went to sleep, after as long a serial stretch, has to be woken
  *
- * Two workers that share caches and memory give less than that; what these allow says bench_fescue (limit: two).
- * Measured: the fit of every solver to sown ratings of rank 16, the loading of a pack of them, and the whole job from
- * that pack to written files.
+ * Two workers that share caches and memory give less than that: beside every figure of two threads bench_fescue tells
+ * what the machine gives. Measured: the fit of every solver to sown ratings of rank 16, twelve iterations of it, the
+ * loading of a pack of them, and the whole job from that pack to written files.
  */
 #include "rating.h"
 
@@ -32,22 +33,17 @@
 void __real_team_run(fescue_context *context, size_t blocks, team_task *task, void *job);
 void __wrap_team_run(fescue_context *context, size_t blocks, team_task *task, void *job);
 
-enum { TASKS = 256, EMPTY_ROUNDS = 2000, ITERATIONS = 12 };
+enum { ITERATIONS = 12 };
+static const double look_out = 50e-6; /* as team.c has it */
 
-/* One worker's seconds in blocks, and those of the longer of two workers. */
 static struct share {
-    double all, blocks, longer;
-    uint64_t calls, dealt; /* of them with more than one block: so many blocks */
+    double all, blocks, longer; /* seconds in blocks, and those of the longer of two workers */
+    uint64_t calls, woken;      /* with more than one block; of these, after a serial stretch of `look_out` */
 } share;
 static double clock_cost; /* seconds of a look at the clock */
 static uint64_t looks;
+static double left; /* when the last blocks were done */
 static bool inside; /* a task that calls for work does it itself: the team of another context, of one */
-
-static struct task_share { /* by task, for whoever looks for the reason */
-    team_task *task;
-    double all, longer;
-    uint64_t calls, blocks;
-} tasks[TASKS];
 
 static double clock_own(void)
 {
@@ -55,15 +51,6 @@ static double clock_own(void)
     clock_gettime(CLOCK_THREAD_CPUTIME_ID, &now);
     looks++;
     return (double)now.tv_sec + 1e-9 * (double)now.tv_nsec;
-}
-
-static struct task_share *task_share_of(team_task *task)
-{
-    size_t k = 0;
-    while (k < TASKS - 1 && tasks[k].task != NULL && tasks[k].task != task)
-        k++;
-    tasks[k].task = task;
-    return &tasks[k];
 }
 
 void __wrap_team_run(fescue_context *context, size_t blocks, team_task *task, void *job)
@@ -82,38 +69,49 @@ void __wrap_team_run(fescue_context *context, size_t blocks, team_task *task, vo
         at = now;
     }
     inside = false;
-    struct task_share *own = task_share_of(task);
-    double longer = worker[worker[1] > worker[0]];
     share.blocks += worker[0] + worker[1];
-    share.longer += longer;
+    share.longer += worker[worker[1] > worker[0]];
     share.calls += blocks > 1;
-    share.dealt += blocks > 1 ? blocks : 0;
-    own->all += worker[0] + worker[1];
-    own->longer += longer;
-    own->calls++;
-    own->blocks += blocks;
+    share.woken += blocks > 1 && begin - left > look_out;
+    left = at;
 }
 
-static void nothing(void *job, size_t block, size_t worker)
+/* ---- what a call costs ---------------------------------------------------------------------------------------------
+ */
+
+enum { CALLS = 1000, CALL_BLOCKS = 20 };
+static const double block_seconds = 10e-6;
+
+static void seconds_pass(double seconds)
+{
+    for (double end = clock_wall() + seconds; clock_wall() < end;)
+        ;
+}
+
+static void block_pass(void *job, size_t block, size_t worker)
 {
     (void)job, (void)block, (void)worker;
+    seconds_pass(block_seconds);
 }
 
-/* Wall seconds of a round of nothing with two threads: the quicker half of many counts, of a machine that is busy. */
-static double call_cost(void)
+/* Seconds by which two threads take longer than half of the blocks after a serial stretch. On a busy machine most take
+   longer than that for other reasons: the hundredth part that went best counts. */
+static double call_cost(double stretch)
 {
-    double took[EMPTY_ROUNDS];
+    double took[CALLS];
     fescue_context *context;
     if (fescue_context_create(NULL, &context) != FESCUE_OK)
         exit(1);
     bench_check(context, team_resize(context, 2));
-    for (size_t k = 0; k < EMPTY_ROUNDS; k++) {
+    for (size_t k = 0; k < CALLS; k++) {
+        seconds_pass(stretch);
         double begin = clock_wall();
-        __real_team_run(context, 2, nothing, NULL);
-        took[k] = clock_wall() - begin;
+        __real_team_run(context, CALL_BLOCKS, block_pass, NULL);
+        took[k] = clock_wall() - begin - CALL_BLOCKS * block_seconds / 2;
     }
     fescue_context_destroy(&context);
-    return bench_median(took, EMPTY_ROUNDS);
+    bench_median(took, CALLS);
+    return took[CALLS / 100];
 }
 
 static void clock_measure(void)
@@ -130,8 +128,8 @@ static void clock_measure(void)
 
 struct stand {
     struct rating rating;
-    char folder[64], pack[128];
-    double call;
+    char folder[512], pack[600];
+    double call, wake; /* seconds of a call, and of one that wakes */
 };
 
 typedef double stand_work(struct stand *stand, const char *solver); /* seconds of it that count; 0: all */
@@ -182,13 +180,6 @@ static double job_run(struct stand *stand, const char *solver)
     return 0;
 }
 
-static int task_order(const void *a, const void *b)
-{
-    const struct task_share *x = a, *y = b;
-    double over_x = x->longer - x->all / 2, over_y = y->longer - y->all / 2;
-    return (over_x < over_y) - (over_x > over_y);
-}
-
 static void share_report(struct stand *stand, const char *what, const char *solver, stand_work *work)
 {
     const char *only = getenv("BENCH_SHARES");
@@ -197,23 +188,17 @@ static void share_report(struct stand *stand, const char *what, const char *solv
     if (only != NULL && strstr(name, only) == NULL)
         return;
     share = (struct share){0};
-    memset(tasks, 0, sizeof tasks);
     looks = 0;
-    double begin = clock_own();
+    double begin = left = clock_own();
     double counted = work(stand, solver), all = clock_own() - begin;
     share.all = (counted > 0 ? counted : all) - (double)looks * clock_cost;
     double serial = share.all - share.blocks, path = serial + share.longer;
-    printf("%-34s cells %.0e  %7.2f s  %7llu calls of %5.0f us  serial %5.2f %%  uneven %5.2f %%  bound %.3f  with "
+    double calls = (double)(share.calls - share.woken) * stand->call + (double)share.woken * stand->wake;
+    printf("%-34s cells %.0e  %7.3f s  calls %6llu  woken %5llu  serial %5.2f %%  uneven %5.2f %%  bound %.3f  with "
            "calls %.3f\n",
            name, (double)stand->rating.cells.count, share.all, (unsigned long long)share.calls,
-           share.calls == 0 ? 0 : 1e6 * share.blocks / (double)share.calls, 100 * serial / share.all,
-           100 * (share.longer - share.blocks / 2) / share.all, share.all / path,
-           share.all / (path + (double)share.calls * stand->call));
-    qsort(tasks, TASKS, sizeof *tasks, task_order);
-    for (int k = 0; getenv("TASKS") && k < 8 && tasks[k].task != NULL; k++)
-        printf("    TASK %p all %.4f over %.4f calls %llu blocks %llu\n", (void *)tasks[k].task, tasks[k].all,
-               tasks[k].longer - tasks[k].all / 2, (unsigned long long)tasks[k].calls,
-               (unsigned long long)tasks[k].blocks);
+           (unsigned long long)share.woken, 100 * serial / share.all,
+           100 * (share.longer - share.blocks / 2) / share.all, share.all / path, share.all / (path + calls));
     fflush(stdout);
 }
 
@@ -241,9 +226,12 @@ static void pack_make(struct stand *stand)
     free(row);
 }
 
-static void shares_measure(uint64_t cells, double call)
+static void shares_measure(uint64_t cells, double call, double wake)
 {
-    struct stand stand = {.folder = "/tmp/fescue-shares-XXXXXX", .call = call};
+    struct stand stand = {.call = call, .wake = wake};
+    const char *parent = getenv("TMPDIR");
+    char clear[600];
+    snprintf(stand.folder, sizeof stand.folder, "%s/fescue-bench-XXXXXX", parent != NULL ? parent : "/tmp");
     if (mkdtemp(stand.folder) == NULL)
         exit(1);
     snprintf(stand.pack, sizeof stand.pack, "%s/ratings.pack", stand.folder);
@@ -256,17 +244,20 @@ static void shares_measure(uint64_t cells, double call)
     share_report(&stand, "fill", "evidence", job_run);
     share_report(&stand, "fill", "alternating", job_run);
     rating_free(&stand.rating);
+    snprintf(clear, sizeof clear, "rm -r '%s'", stand.folder);
+    if (system(clear) != 0)
+        fprintf(stderr, "bench: %s stays\n", stand.folder);
 }
 
 int main(int count, char **argument)
 {
     static const double standard[] = {1e6, 1e7};
     clock_measure();
-    double call = call_cost();
-    printf("a look at the clock %.0f ns; a call for work, a round of nothing, %.1f us\n", 1e9 * clock_cost, 1e6 * call);
+    double call = call_cost(0), wake = call_cost(2 * look_out);
+    printf("a call costs %.1f us, one that wakes %.1f us\n", 1e6 * call, 1e6 * wake);
     for (int k = 0; k < (count > 1 ? count - 1 : 2); k++) {
         double cells = count > 1 ? strtod(argument[1 + k], NULL) : standard[k];
-        shares_measure((uint64_t)cells, call);
+        shares_measure((uint64_t)cells, call, wake);
     }
     return 0;
 }
