@@ -88,6 +88,45 @@ static void large_files_are_written_whole(void **state)
     free(expected);
 }
 
+enum { SHARED_PIECES = 100, LONG_PIECE = 57 };
+
+static void piece_append(void *job, size_t piece, struct outfile *sink)
+{
+    static const char stars[200000] = {0};
+    (void)job;
+    if (piece == LONG_PIECE) /* longer than any buffer */
+        outfile_write(sink, stars, sizeof stars);
+    for (size_t k = 0; k < piece; k++)
+        outfile_format(sink, "%zu.%zu ", piece, k);
+}
+
+/* What the team makes is what one makes, in the order of the pieces. */
+static void shared_text_follows_in_order(void **state)
+{
+    static const size_t workers[] = {1, 3};
+    const struct bench *bench = bench_of(state);
+    char path[PATH_SIZE], *bytes[2];
+    size_t count[2];
+    for (int k = 0; k < 2; k++) {
+        struct output *output = open_set(bench, "run", NULL);
+        struct outfile *file = add_file(bench, output, "shared");
+        assert_status(bench->context, team_resize(bench->context, workers[k]), FESCUE_OK);
+        outfile_text(file, "first ");
+        outfile_share(file, 0, piece_append, NULL);
+        outfile_share(file, SHARED_PIECES, piece_append, NULL);
+        outfile_text(file, "last");
+        assert_status(bench->context, output_publish(&output), FESCUE_OK);
+        bytes[k] = file_get(path_in(bench->folder, "run/shared", path), &count[k]);
+    }
+    assert_status(bench->context, team_resize(bench->context, 1), FESCUE_OK);
+    assert_int_equal(count[0], count[1]);
+    assert_memory_equal(bytes[0], bytes[1], count[0]);
+    assert_memory_equal(bytes[0], "first 1.0 2.0 2.1 3.0 ", 22);
+    assert_memory_equal(bytes[0] + count[0] - 11, " 99.98 last", 11);
+    free(bytes[0]);
+    free(bytes[1]);
+}
+
 static void a_failure_sticks_and_nothing_appears(void **state)
 {
     const struct bench *bench = bench_of(state);
@@ -507,6 +546,7 @@ int main(void)
     const struct CMUnitTest tests[] = {
         BENCH_TEST(texts_and_numbers_are_appended),
         BENCH_TEST(large_files_are_written_whole),
+        BENCH_TEST(shared_text_follows_in_order),
         BENCH_TEST(a_failure_sticks_and_nothing_appears),
         BENCH_TEST(without_memory_for_a_long_text_the_file_fails),
         BENCH_TEST(an_abandoned_set_leaves_nothing),
