@@ -59,7 +59,7 @@ static size_t runs_beside(bench_work *work, void *argument, bench_work *other)
     if (other == NULL)
         return 1;
     double begin = clock_wall();
-    other(NULL);
+    other(argument);
     double middle = clock_wall();
     work(argument);
     double ratio = (middle - begin) / (clock_wall() - middle);
@@ -75,16 +75,16 @@ struct bench_time bench_measure(size_t threads, bench_work *work, void *argument
     work(argument); /* what the first run meets for the first time is not counted */
     size_t runs = runs_beside(work, argument, other);
     for (; rounds < RUNS_MOST && (rounds < RUNS_LEAST || all < seconds_enough); rounds++) {
-        double begin = clock();
+        double begin = clock_cpu();
         if (other != NULL)
-            other(NULL);
-        double middle = clock();
+            other(argument);
+        others[rounds] = clock_cpu() - begin;
+        begin = clock();
         for (size_t run = 0; run < runs; run++)
             work(argument);
-        double end = clock();
-        others[rounds] = middle - begin;
-        own[rounds] = (end - middle) / (double)runs;
-        all += end - middle;
+        double seconds = clock() - begin;
+        own[rounds] = seconds / (double)runs;
+        all += seconds;
     }
     if (other != NULL)
         *limit = time_of(others, rounds);

@@ -28,7 +28,7 @@ typedef void bench_work(void *argument);
 struct bench_time {
     double median, least;
 };
-/* Of `work`, and in *limit of `other`, by turns for some time each; NULL: no other. */
+/* Of `work`, and in *limit of `other` on one thread, by turns for some time each; NULL: no other. */
 struct bench_time bench_measure(size_t threads, bench_work *work, void *argument, bench_work *other,
                                 struct bench_time *limit);
 double bench_seconds(size_t threads, bench_work *work, void *argument); /* the median of that alone */

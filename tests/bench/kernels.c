@@ -21,6 +21,8 @@ struct stand {
     void *residual;
     double ridge[257];
     size_t rank, threads;
+    struct stand *one; /* the same with one thread */
+    bench_work *run;   /* what is measured */
 };
 
 static void rows_gradient(void *argument)
@@ -113,27 +115,33 @@ static void share_add(json_t *figure, double flops, struct bench_time own, struc
     json_object_set_new(figure, "at best", json_real(flops / own.least / (GEMM_FLOPS / gemm.least)));
 }
 
+static void one_run(void *stand)
+{
+    const struct stand *two = stand;
+    two->run(two->one);
+}
+
 /* One thread beside gemm; two beside one of them. */
-static void kernel_report(struct stand *stand, const struct kernel *kernel, struct bench_time *single)
+static void kernel_report(struct stand *stand, const struct kernel *kernel)
 {
     bool is_single = stand->rating.cells.precision == FESCUE_SINGLE;
     double cells = (double)stand->rating.cells.count, rank = (double)stand->rank, size = is_single ? 4 : 8;
     double flops = cells * (kernel->flops_line[0] + rank * (kernel->flops_line[1] + rank * kernel->flops_line[2]));
-    bench_work *gemm_run = is_single ? gemm_single_run : gemm_double_run;
-    struct bench_time gemm,
-        own = bench_measure(stand->threads, kernel->run, stand, stand->threads > 1 ? NULL : gemm_run, &gemm);
+    bench_work *beside = stand->threads > 1 ? one_run : is_single ? gemm_single_run : gemm_double_run;
+    struct bench_time other;
+    stand->run = kernel->run;
+    struct bench_time own = bench_measure(stand->threads, kernel->run, stand, beside, &other);
     json_t *figure =
         json_pack("{s:s, s:s, s:s, s:I, s:I, s:I, s:f, s:f, s:f}", "what", kernel->what, "precision",
                   is_single ? "single" : "double", "kernel", stand->sweep.kernel, "cells",
                   (json_int_t)stand->rating.cells.count, "rank", (json_int_t)stand->rank, "threads",
                   (json_int_t)stand->threads, "ns a cell", own.median / cells * 1e9, "GFLOP/s",
                   flops / own.median / 1e9, "GB/s", cells * (4 + size + kernel->rows * size * rank) / own.median / 1e9);
-    if (stand->threads == 1) {
-        *single = own;
-        share_add(figure, flops, own, gemm);
-    } else {
-        figure_times_add(figure, single->median / own.median);
-        json_object_set_new(figure, "at best", json_real(single->least / own.least));
+    if (stand->threads == 1)
+        share_add(figure, flops, own, other);
+    else {
+        figure_times_add(figure, other.median / own.median);
+        json_object_set_new(figure, "at best", json_real(other.least / own.least));
     }
     figure_add(stand->bench, figure);
 }
@@ -155,32 +163,45 @@ static void factors_draw(struct stand *stand, struct arena *arena)
     }
 }
 
-static void rank_report(struct stand *stand, bool two)
+/* A sweep of its own, in a context that has so many threads. */
+static void stand_open(struct stand *stand, fescue_context *context, size_t threads)
+{
+    stand->threads = threads;
+    bench_check(context, team_resize(context, threads));
+    bench_check(context, sweep_create(context, &stand->rating.cells, stand->rank, &stand->sweep));
+    bench_check(context, sweep_arrange(&stand->sweep, &stand->rating.cells.by_column));
+}
+
+static void rank_report(struct stand *one, fescue_context *context, bool with_two)
 {
     enum { COUNT = sizeof kernels / sizeof *kernels };
     struct arena arena = {0};
-    fescue_context *context = stand->rating.context;
     const char *only = getenv("BENCH_LOOPS");
-    struct bench_time single[COUNT];
-    for (size_t j = 0; j < stand->rank; j++)
-        stand->ridge[j] = 0.1;
-    factors_draw(stand, &arena);
-    for (stand->threads = 1; stand->threads <= (two ? 2 : 1); stand->threads++) {
-        bench_check(context, team_resize(context, stand->threads));
-        bench_check(context, sweep_create(context, &stand->rating.cells, stand->rank, &stand->sweep));
-        bench_check(context, sweep_arrange(&stand->sweep, &stand->rating.cells.by_column));
+    for (size_t j = 0; j < one->rank; j++)
+        one->ridge[j] = 0.1;
+    factors_draw(one, &arena);
+    stand_open(one, one->rating.context, 1);
+    struct stand two = *one;
+    two.one = one;
+    if (with_two)
+        stand_open(&two, context, 2);
+    for (struct stand *stand = one; stand != NULL; stand = stand == one && with_two ? &two : NULL)
         for (size_t k = 0; k < COUNT; k++)
             if (only == NULL || strstr(kernels[k].what, only) != NULL)
-                kernel_report(stand, &kernels[k], &single[k]);
-        sweep_destroy(&stand->sweep);
-    }
-    arena_close(context, &arena);
+                kernel_report(stand, &kernels[k]);
+    if (with_two)
+        sweep_destroy(&two.sweep);
+    sweep_destroy(&one->sweep);
+    arena_close(one->rating.context, &arena);
 }
 
 void kernels_measure(struct bench *bench, uint64_t cells, enum fescue_precision precision)
 {
     const char *ranks = getenv("BENCH_RANKS");
     struct stand stand = {.bench = bench};
+    fescue_context *context; /* of two threads */
+    if (fescue_context_create(NULL, &context) != FESCUE_OK)
+        exit(1);
     rating_sow(cells, precision, &stand.rating);
     stand.residual = bench_take(stand.rating.cells.count, sizeof(double));
     for (const char *at = ranks != NULL ? ranks : "5,8,11,16,32"; *at != '\0';) {
@@ -188,10 +209,11 @@ void kernels_measure(struct bench *bench, uint64_t cells, enum fescue_precision 
         stand.rank = strtoul(at, &end, 10);
         if (stand.rank == 0 || stand.rank > 256)
             break;
-        rank_report(&stand, stand.rank == 16);
+        rank_report(&stand, context, stand.rank == 16);
         at = *end == ',' ? end + 1 : end;
     }
     free(stand.residual);
+    fescue_context_destroy(&context);
     rating_free(&stand.rating);
 }
 
