@@ -116,10 +116,27 @@ void figure_add(struct bench *bench, json_t *figure)
     json_array_append_new(bench->figures, figure);
 }
 
-/* A column of numbers for the chart: the share of gemm by kernel and rank, one thread. */
-static size_t chart_data_write(const struct bench *bench, FILE *to)
+/* Lines of the chart, by what was measured: on tables of several sizes, each a point of the line. */
+enum { CHART_LINES = 160, CHART_LINE = 16, CHART_MARGINS = 130 }; /* pixels */
+struct chart {
+    char label[CHART_LINES][96];
+    size_t lines;
+};
+
+static size_t line_of(struct chart *chart, const char *label)
 {
-    size_t k, lines = 0;
+    size_t line = 0;
+    while (line < chart->lines && strcmp(chart->label[line], label) != 0)
+        line++;
+    if (line == chart->lines && line < CHART_LINES)
+        snprintf(chart->label[chart->lines++], sizeof chart->label[line], "%s", label);
+    return line;
+}
+
+/* Cells, line, share of gemm on one thread, and what it is of. */
+static void chart_data_write(const struct bench *bench, struct chart *chart, FILE *to)
+{
+    size_t k;
     const json_t *figure;
     json_array_foreach(bench->figures, k, figure)
     {
@@ -127,33 +144,33 @@ static size_t chart_data_write(const struct bench *bench, FILE *to)
         if (share == NULL || rank == NULL || json_integer_value(json_object_get(figure, "threads")) != 1)
             continue;
         const char *precision = json_string_value(json_object_get(figure, "precision"));
-        fprintf(to, "\"%s, %s, rank %d\" %.4f\n", json_string_value(json_object_get(figure, "what")),
-                precision != NULL ? precision : "double", (int)json_integer_value(rank), json_real_value(share));
-        lines++;
+        char label[96];
+        snprintf(label, sizeof label, "%s, %s, rank %d", json_string_value(json_object_get(figure, "what")),
+                 precision != NULL ? precision : "double", (int)json_integer_value(rank));
+        fprintf(to, "%lld %zu %.4f \"%s\"\n", (long long)json_integer_value(json_object_get(figure, "cells")),
+                line_of(chart, label), json_real_value(share), label);
     }
-    return lines;
 }
-
-enum { CHART_LINE = 20, CHART_MARGINS = 130 }; /* pixels */
 
 static void chart_draw(const struct bench *bench)
 {
+    static struct chart chart;
     char path[1024], command[3200];
     snprintf(path, sizeof path, "%s/bench.dat", bench->build);
     FILE *to = fopen(path, "w");
     if (to == NULL)
         return;
-    size_t lines = chart_data_write(bench, to);
+    chart_data_write(bench, &chart, to);
     fclose(to);
-    if (lines == 0)
+    if (chart.lines == 0)
         return;
     snprintf(command, sizeof command,
              "command -v gnuplot >/dev/null && gnuplot -e \"set terminal pngcairo size 1000,%zu; set output "
              "'%s/bench.png'; set title 'Loops over cells, one thread'; set yrange [%zu.5:-0.5]; "
-             "set xlabel 'share of the rate of matrix products'; set xrange [0:*]; set grid x; set lmargin 42; set "
-             "ytics font ',9'; set style fill solid 0.6; "
-             "plot '%s' using (0.5*\\$2):0:(0.5*\\$2):(0.35):ytic(1) with boxxyerror notitle\"",
-             CHART_MARGINS + CHART_LINE * lines, bench->build, lines - 1, path);
+             "set xlabel 'share of the rate of matrix products'; set xrange [0:*]; set grid; set lmargin 42; set "
+             "ytics font ',9'; set cblabel 'cells, log10'; set palette defined (0 '#b0c4de', 1 '#10305a'); "
+             "plot '%s' using 3:2:(log10(\\$1)):ytic(4) with points pointtype 7 pointsize 1.2 palette notitle\"",
+             CHART_MARGINS + CHART_LINE * chart.lines, bench->build, chart.lines - 1, path);
     if (system(command) == 0)
         printf("the chart is %s/bench.png\n", bench->build);
 }
