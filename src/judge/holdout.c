@@ -81,21 +81,6 @@ static void rows_keep_one(void *job, size_t block, size_t worker)
         row_keep_one(draw, row);
 }
 
-/* Where cell (row, column), which is there, stands in row order. */
-static uint64_t cell_find(const struct half *by_row, uint32_t row, uint32_t column)
-{
-    uint64_t low = by_row->start[row], high = by_row->start[row + 1];
-    while (high - low > 1) {
-        uint64_t middle = low + (high - low) / 2;
-        if (by_row->across[middle] <= column)
-            low = middle;
-        else
-            high = middle;
-    }
-    assert(by_row->across[low] == column);
-    return low;
-}
-
 static void column_keep_one(struct draw *draw, uint32_t column)
 {
     const struct half *half = &draw->cells->by_column;
@@ -108,7 +93,9 @@ static void column_keep_one(struct draw *draw, uint32_t column)
             best = half->across[k];
         }
     }
-    draw->keep[cell_find(&draw->cells->by_row, best, column)] = 1;
+    uint64_t k = half_find(&draw->cells->by_row, best, column);
+    assert(draw->cells->by_row.across[k] == column);
+    draw->keep[k] = 1;
 }
 
 /* No line that has cells is left without any. */

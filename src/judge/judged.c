@@ -94,17 +94,8 @@ static void missing_add(const struct line_weights *weights, uint32_t row, uint32
 
 static bool is_seen(const struct half *by_row, uint32_t row, uint32_t column)
 {
-    uint64_t low = by_row->start[row], high = by_row->start[row + 1];
-    while (low < high) {
-        uint64_t middle = low + (high - low) / 2;
-        if (by_row->across[middle] == column)
-            return true;
-        if (by_row->across[middle] < column)
-            low = middle + 1;
-        else
-            high = middle;
-    }
-    return false;
+    uint64_t k = half_find(by_row, row, column);
+    return k < by_row->start[row + 1] && by_row->across[k] == column;
 }
 
 fescue_status judged_missing(fescue_context *context, const struct cells *cells, const struct line_weights *weights,

@@ -189,24 +189,10 @@ struct line_range batch_band(const struct batches *b, size_t band)
                                half->block[(band + 1) * half->blocks / b->bands]};
 }
 
-/* The first cell of the line whose position is not before `position`. */
-static uint64_t cell_find(const struct half *half, uint32_t line, uint32_t position)
-{
-    uint64_t from = half->start[line], to = half->start[line + 1];
-    while (from < to) {
-        uint64_t middle = from + (to - from) / 2;
-        if (half->across[middle] < position)
-            from = middle + 1;
-        else
-            to = middle;
-    }
-    return from;
-}
-
 struct cell_range batch_cells(const struct batches *b, size_t band, size_t k)
 {
     struct line_range lines = batch_band(b, band);
     uint32_t line = batch_line(b, k);
-    return (struct cell_range){.from = cell_find(b->by_long, line, lines.first),
-                               .to = cell_find(b->by_long, line, lines.end)};
+    return (struct cell_range){.from = half_find(b->by_long, line, lines.first),
+                               .to = half_find(b->by_long, line, lines.end)};
 }

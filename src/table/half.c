@@ -1,6 +1,6 @@
 /* SPDX-License-Identifier: MIT
  *
- * One direction of the store: room for it, its blocks, and whether it is in order. sort.c fills it.
+ * One direction of the store: room for it, its blocks, where a cell is, and whether it is in order. sort.c fills it.
  *
  * Blocks are cut so that cells + lines is about the same in each: a line costs something even when it is empty. The cut
  * depends on the table alone, so sums over blocks in block order do not depend on the number of workers.
@@ -29,6 +29,19 @@ done:
     if (status != FESCUE_OK)
         half_free(context, half);
     return status;
+}
+
+uint64_t half_find(const struct half *half, uint32_t line, uint32_t position)
+{
+    uint64_t low = half->start[line], high = half->start[line + 1];
+    while (low < high) {
+        uint64_t middle = low + (high - low) / 2;
+        if (half->across[middle] < position)
+            low = middle + 1;
+        else
+            high = middle;
+    }
+    return low;
 }
 
 /* ---- order ------------------------------------------------------------------------------------------------------ */

@@ -68,6 +68,8 @@ fescue_status cells_alike(fescue_context *context, const struct cells *from, str
 /* Gives every cell its weight, in row order, positive and finite; those it has are replaced. */
 fescue_status cells_weigh(fescue_context *context, struct cells *cells, const double *weight);
 void cells_free(fescue_context *context, struct cells *cells);
+/* The first cell of the line whose position is not before `position`; the line's end when there is none. */
+uint64_t half_find(const struct half *half, uint32_t line, uint32_t position);
 double cells_value(const struct cells *cells, const struct half *half, uint64_t k); /* half->value[k] as double */
 
 /* Names of one side. Unlabelled sides (Matrix Market) have text == NULL and are called by their number from 1. */

@@ -18,20 +18,6 @@ struct walk {
     const void *job;
 };
 
-/* The first seen cell of the row that does not lie before the column. */
-static uint64_t seen_find(const struct half *by_row, uint32_t row, uint32_t column)
-{
-    uint64_t low = by_row->start[row], high = by_row->start[row + 1];
-    while (low < high) {
-        uint64_t middle = low + (high - low) / 2;
-        if (by_row->across[middle] < column)
-            low = middle + 1;
-        else
-            high = middle;
-    }
-    return low;
-}
-
 static void piece_walk(void *job, size_t piece, struct outfile *sink)
 {
     const struct walk *walk = job;
@@ -42,7 +28,7 @@ static void piece_walk(void *job, size_t piece, struct outfile *sink)
         uint32_t line = (uint32_t)(k / length), across = (uint32_t)(k % length);
         struct place at = {walk->by_columns ? across : line, walk->by_columns ? line : across, PLACE_UNSEEN};
         if (walk->by_columns || k == first || across == 0)
-            next = seen_find(half, at.row, at.column);
+            next = half_find(half, at.row, at.column);
         if (next < half->start[at.row + 1] && half->across[next] == at.column)
             at.seen = next++;
         walk->put(walk->job, &at, sink);
