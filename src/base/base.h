@@ -259,10 +259,18 @@ fescue_status team_resize(fescue_context *context, size_t workers);
 
 /* ---- vector instructions ----------------------------------------------------------------------------------------- */
 
-/* What this processor has and FESCUE_KERNEL does not forbid: AVX2 with FMA, BMI and BMI2; beside it AVX-512 F, VL, DQ.
- */
+/* What this processor has: AVX2 with FMA, BMI and BMI2; beside it AVX-512 F, VL, DQ. */
 enum vectors { VECTORS_NONE, VECTORS_AVX2, VECTORS_AVX512 };
-enum vectors vectors_choose(void);
+enum vectors vectors_there(void);
+enum vectors vectors_choose(void); /* and FESCUE_KERNEL does not forbid */
+
+/* ---- OpenBLAS --------------------------------------------------------------------------------------------------- */
+
+/* One thread inside OpenBLAS from here on: it picks how to split a product by the number of its threads, so that the
+   order of sums, and with it the last bits, would depend on the machine. Our own team works on whole blocks instead. */
+void openblas_hold(void);
+/* Which of its sets of kernels it took for this processor, by its own names, such as "Haswell". */
+const char *openblas_kernels(void);
 
 /* ---- clock, progress, cancel --------------------------------------------------------------------------------------
  */

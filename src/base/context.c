@@ -11,9 +11,6 @@
 #include <stdlib.h>
 #include <string.h>
 
-/* Of OpenBLAS. Its header is not part of the CBLAS standard, hence the declaration. */
-void openblas_set_num_threads(int threads);
-
 static fescue_context *context_allocate(const struct fescue_hooks *hooks)
 {
     const size_t size = sizeof(fescue_context);
@@ -52,9 +49,7 @@ fescue_status fescue_context_create(const struct fescue_hooks *hooks, fescue_con
     context->files = &posix_file_calls;
     failure_open(&context->failure);
     team_open(&context->team);
-    /* One thread inside the library: it picks how to split a product by the number of its threads, so that the order
-       of sums, and with it the last bits, would depend on the machine. Our own team works on whole blocks instead. */
-    openblas_set_num_threads(1);
+    openblas_hold();
     *out = context;
     return FESCUE_OK;
 }

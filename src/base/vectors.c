@@ -8,7 +8,7 @@
 #include <stdlib.h>
 #include <string.h>
 
-static enum vectors vectors_there(void)
+enum vectors vectors_there(void)
 {
 #if defined(__x86_64__)
     __builtin_cpu_init();

@@ -141,8 +141,17 @@ static fescue_status program_run(int argc, char **argv)
     return FESCUE_OK;
 }
 
+/* OpenBLAS reads the variable before main, so the program begins once more; if it cannot, it is but slower. */
+static void openblas_kernels_settle(char **argv)
+{
+    const char *missed = fescue_openblas_kernels_missed();
+    if (missed != NULL && setenv("OPENBLAS_CORETYPE", missed, 1) == 0)
+        execv("/proc/self/exe", argv);
+}
+
 int main(int argc, char **argv)
 {
+    openblas_kernels_settle(argv);
     standard_streams_open();
     signal(SIGPIPE, SIG_IGN);
     fescue_status status = program_run(argc, argv);

@@ -81,6 +81,11 @@ struct fescue_memory {
 };
 struct fescue_memory fescue_memory_usage(const fescue_context *context);
 
+/* OpenBLAS takes its kernels by the model of the processor when it is loaded; the plainest, some five times slower,
+   where it does not know the model. Then: what the environment variable OPENBLAS_CORETYPE should be before the program
+   starts. NULL: it knows the processor, the variable is set, or there is nothing better. */
+const char *fescue_openblas_kernels_missed(void);
+
 /* ---- options: one table each; from it come defaults, bounds, parsing, help, manual and the run record --------------
  */
 

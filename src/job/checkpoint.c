@@ -70,7 +70,7 @@ fescue_status checkpoint_open(const fescue_table *table, const struct fescue_opt
         return FESCUE_OK;
     }
     options_words(options, lines);
-    text_add(&text, "version=%s\nkernels=%s\n", FESCUE_VERSION, kernel_name());
+    text_add(&text, "version=%s\nloops=%s\nproducts=%s\n", FESCUE_VERSION, kernel_name(), openblas_kernels());
     text_add(&text, "input of %" PRIu64 " bytes with checksum %08" PRIx32 "\n", table->input_bytes, table->input_crc32);
     text_add(&text, "%" PRIu32 " rows, %" PRIu32 " columns, %" PRIu64 " cells, %016" PRIx64 "\n", cells->rows,
              cells->columns, cells->count, table->look.shape == SHAPE_MEMORY ? cells_digest(cells) : 0);

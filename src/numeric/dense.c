@@ -10,17 +10,10 @@
 #include <assert.h>
 #include <pthread.h>
 
-extern void openblas_set_num_threads(int threads);
-
-static void threads_set(void)
-{
-    openblas_set_num_threads(1);
-}
-
 void dense_threads_hold(void)
 {
     static pthread_once_t once = PTHREAD_ONCE_INIT;
-    pthread_once(&once, threads_set);
+    pthread_once(&once, openblas_hold);
 }
 
 lapack_int dense_size(size_t size)

@@ -10,8 +10,7 @@
 #include <cblas.h>
 #include <lapacke.h>
 
-/* OpenBLAS cuts sums by its number of threads, so that bits would depend on it: from the first call on it has one. Our
-   own workers may call it side by side. */
+/* OpenBLAS has one thread from the first call on. Our own workers may call it side by side. */
 void dense_threads_hold(void);
 
 /* Sizes fit: a matrix dimension above 2^31 - 1 is a caller's mistake (tables have 32-bit indices and stay below). */

@@ -3,7 +3,7 @@
  * run.json: everything needed to repeat and to judge the run, and the seal of its directory: where it is, the run is
  * complete.
  *
- *   program, version, caution
+ *   program, version, caution, instructions
  *   input     path, packed_from (of a pack: its source), crc32 and bytes (as on disk; of a pack: of its source), shape,
  *             rows, columns, observed, duplicates, checksums of the labels
  *   time      which side is in time, its step, gaps, equal times; or along none
@@ -456,12 +456,22 @@ static struct record timing_record(const struct run *run)
 /* ---- the whole ------------------------------------------------------------------------------------------------------
  */
 
+/* What the last bits depend on beside input, options and version. */
+static struct record instructions_record(const struct run *run)
+{
+    struct record record = record_open(run->context);
+    text_set(&record, "loops", kernel_name());
+    text_set(&record, "products", openblas_kernels());
+    return record;
+}
+
 static struct record run_record(const struct run *run)
 {
     struct record record = record_open(run->context);
     text_set(&record, "program", "fescue");
     text_set(&record, "version", FESCUE_VERSION);
     text_set(&record, "caution", run_caution);
+    record_set(&record, "instructions", instructions_record(run));
     record_set(&record, "input", input_record(run));
     record_set(&record, "time", time_record(run));
     record_set(&record, "season", season_record(run));

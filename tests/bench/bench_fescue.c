@@ -18,6 +18,7 @@
 #include <stdio.h>
 #include <stdlib.h>
 #include <string.h>
+#include <unistd.h>
 
 static const char *setting(const char *name, const char *standard)
 {
@@ -64,8 +65,11 @@ static void solvers_measure(struct bench *bench, uint64_t cells)
         alternation_measure(bench, cells);
 }
 
-int main(void)
+int main(int argc, char **argv)
 {
+    const char *missed = fescue_openblas_kernels_missed();
+    if (argc > 0 && missed != NULL && setenv("OPENBLAS_CORETYPE", missed, 1) == 0)
+        execv("/proc/self/exe", argv); /* as the program does: the limits are those of the best kernels */
     struct bench bench = {.figures = json_array(), .build = setting("BUILD", "build")};
     bool with_large = strcmp(setting("BENCH_LARGE", "0"), "1") == 0;
     if (has_part("limits"))

@@ -168,6 +168,7 @@ static void limit_add(struct bench *bench, enum bench_limit limit, const char *w
 
 void limits_measure(struct bench *bench)
 {
+    figure_add(bench, json_pack("{s:s, s:s}", "what", "limit: products", "kernels", openblas_kernels()));
     limit_add(bench, LIMIT_DGEMM, "limit: dgemm", "GFLOP/s", GEMM_FLOPS / bench_seconds(1, gemm_double_run, NULL));
     limit_add(bench, LIMIT_SGEMM, "limit: sgemm", "GFLOP/s", GEMM_FLOPS / bench_seconds(1, gemm_single_run, NULL));
     limit_add(bench, LIMIT_COPY, "limit: copy, read and written", "GB/s", copy_rate());

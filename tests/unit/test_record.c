@@ -87,6 +87,8 @@ static void every_documented_field_is_there(void **state)
     text_check(record, "program", "fescue");
     text_check(record, "version", FESCUE_VERSION);
     text_check(record, "caution", run_caution);
+    text_check(record, "instructions/loops", kernel_name());
+    text_check(record, "instructions/products", openblas_kernels());
     text_check(record, "input/path", path_in(stand.folder, "table", path));
     text_check(record, "input/shape", "wide");
     count_check(record, "input/bytes", (json_int_t)strlen(example));
