@@ -150,10 +150,12 @@ INLINE void step_turn(const struct sweep_rows *rows, const uint32_t *across, tur
 /* l . p_c - x_c of each cell, in every piece; of paired rows twice those of the first half, then twice the others. */
 INLINE turned step_residual(const turned *l, const turned *p, const REAL *x, const size_t n, const bool paired)
 {
-    turned s[2] = {MSUB_TURNED(l[0], p[0], numbers_read_once(x, paired)), l[1] * p[1]};
-    for (size_t k = 2; k < n * PIECE; k++)
-        s[k % 2] = MADD_TURNED(l[k], p[k], s[k % 2]);
-    s[0] += s[1];
+    const size_t chains = n * PIECE > 4 ? 2 : 1; /* one more addition, worth it where one chain would be long */
+    turned s[2] = {MSUB_TURNED(l[0], p[0], numbers_read_once(x, paired)), l[chains - 1] * p[chains - 1]};
+    for (size_t k = chains; k < n * PIECE; k++)
+        s[k % chains] = MADD_TURNED(l[k], p[k], s[k % chains]);
+    if (chains == 2)
+        s[0] += s[1];
     s[0] += SHUFFLE(s[0], s[0], NEIGHBOUR);
     if (PIECES == 4 && !paired)
         s[0] += SHUFFLE(s[0], s[0], OPPOSITE);
