@@ -135,6 +135,14 @@ struct planting {
     uint64_t seed;
 };
 
+/* Where the first round begins, which it takes no posterior mean from: (factor, effect) of a line. */
+static void old_plant(struct evidence_side *side, size_t line, size_t rank, const double *mean)
+{
+    memcpy(&MATRIX_AT(side->old, line, 0), mean, rank * sizeof *mean);
+    MATRIX_AT(side->old, line, side->effect_at) = mean[rank];
+    MATRIX_AT(side->old, line, side->one_at) = 1;
+}
+
 /* What the start knows of column j, and its squares. */
 static void column_plant(const struct planting *planting, uint32_t j, double *mean, double *square)
 {
@@ -150,6 +158,7 @@ static void column_plant(const struct planting *planting, uint32_t j, double *me
     for (size_t k = 0; k <= rank; k++)
         square[k] += mean[k] * mean[k];
     evidence_side_plant(evidence, &evidence->columns, j, mean);
+    old_plant(&evidence->columns, j, rank, mean);
 }
 
 static void block_plant(void *job, size_t block, size_t worker)
@@ -164,6 +173,23 @@ static void block_plant(void *job, size_t block, size_t worker)
         column_plant(planting, j, evidence->scratch + worker * evidence->scratch_size, square);
 }
 
+/* What the start knows of the rows. */
+static void rows_block_plant(void *job, size_t block, size_t worker)
+{
+    const struct planting *planting = job;
+    struct evidence *evidence = planting->evidence;
+    const struct low_rank *point = &planting->start->low_rank;
+    const struct half *half = evidence->rows.half;
+    size_t rank = evidence->rank;
+    double *mean = evidence->scratch + worker * evidence->scratch_size, size = sqrt((double)half->lines);
+    for (uint32_t i = half->block[block]; i < half->block[block + 1]; i++) {
+        for (size_t k = 0; k < rank; k++)
+            mean[k] = k < point->rank ? MATRIX_AT(point->left, i, k) * size : 0;
+        mean[rank] = planting->start->offsets.row[i] / evidence->problem->scale;
+        old_plant(&evidence->rows, i, rank, mean);
+    }
+}
+
 /* Plants the start: columns known, u of unit size; the rows follow in the first round. */
 static void evidence_start(struct evidence *evidence, const struct model *start, const struct evidence_request *request)
 {
@@ -173,6 +199,7 @@ static void evidence_start(struct evidence *evidence, const struct model *start,
     struct planting planting = {evidence, start, request->seed};
     evidence->noise = request->noise_start > 0 ? request->noise_start / (problem->scale * problem->scale) : 1;
     team_run(evidence->context, half->blocks, block_plant, &planting);
+    team_run(evidence->context, evidence->rows.half->blocks, rows_block_plant, &planting);
     team_sum(evidence->context, evidence->columns.partial, half->blocks, rank + 1, evidence->columns.variance);
     for (size_t k = 0; k <= rank; k++)
         evidence->columns.variance[k] /= (double)half->lines;
@@ -249,8 +276,10 @@ static fescue_status evidence_round(struct evidence *evidence, const struct evid
                                     double *change)
 {
     struct evidence_side *rows = &evidence->rows, *columns = &evidence->columns;
-    tall_copy(evidence->context, rows->mean, NULL, rows->old);
-    tall_copy(evidence->context, columns->mean, NULL, columns->old);
+    if (round > 0) {
+        tall_copy(evidence->context, rows->mean, NULL, rows->old);
+        tall_copy(evidence->context, columns->mean, NULL, columns->old);
+    }
     bool has_chain = evidence->time != NULL && evidence->time->chain_on;
     bool has_fields = evidence->near != NULL && evidence->near->is_on;
     fescue_status status = FESCUE_OK;
@@ -332,10 +361,10 @@ static void trace_append(struct evidence *evidence, uint64_t round, double chang
 }
 
 /* By how much all rounds that are left would move the estimates, each by the share of the one before that the last one
-   had; the first round comes from elsewhere. */
+   had. The first change is that from the start, and is not always told. */
 static double change_left(const struct evidence_at *at)
 {
-    double share = at->round > 2 ? at->change / at->before : INFINITY;
+    double share = at->round > 1 && isfinite(at->before) ? at->change / at->before : INFINITY;
     return share < 1 ? at->change * share / (1 - share) : INFINITY;
 }
 
@@ -343,6 +372,8 @@ static bool is_settled(const struct evidence *evidence, const struct evidence_re
                        const struct evidence_at *at)
 {
     double deviation = sqrt(evidence->noise);
+    if (at->round < 2)
+        return false;
     return at->change <= fmax(request->change, request->change_noise * deviation) ||
            change_left(at) <= request->change_left * deviation ||
            (evidence->time != NULL && evidence_time_settled(evidence, at->change));

@@ -32,7 +32,7 @@ struct evidence_side {
     double *own, *pull;     /* of each line, r + 1 prior precisions in place of 1 / variance, and those times the prior
                                means; NULL: all alike, around 0 */
     size_t effect_at, one_at; /* where effect and constant stand in mean, so that rows' and columns' pair up */
-    struct matrix mean, old;  /* lines x (r + 2), this round's and the last one's */
+    struct matrix mean, old;  /* lines x (r + 2), this round's and the last one's, or the start's */
 };
 
 struct evidence {
