@@ -31,7 +31,7 @@ struct batch_kernel {
     void (*add)(const double *data, const struct batch_stretch *stretch, const struct batch_stretch *next,
                 const double *factor, size_t size, double *sum);
     /* The same of `blocks` blocks of halves, and of the first of them, which hold `mean` numbers, with pull into
-       target. sum and target have room for whole blocks, target for two at least. */
+       target. sum and target have room for whole blocks, target for two at least; one of them may be NULL. */
     void (*add_halves)(const uint64_t *data, const struct batch_stretch *stretch, size_t blocks, size_t mean,
                        double *sum, double *target);
     /* epsilon: of the arithmetic that A was summed up in */

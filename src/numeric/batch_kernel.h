@@ -190,9 +190,10 @@ static void halves_sum(const uint64_t *data, const struct batch_stretch *stretch
 static void halves_add(const uint64_t *data, const struct batch_stretch *stretch, size_t blocks, size_t mean,
                        double *sum, double *target)
 {
-    bool at_once = mean <= HALVES_PULLED * BATCH_BLOCK && blocks > 1;
-    halves_sum(data, stretch, stretch->factor, sum, at_once ? target : NULL, blocks);
-    if (!at_once)
+    bool at_once = sum != NULL && mean <= HALVES_PULLED * BATCH_BLOCK && blocks > 1;
+    if (sum != NULL)
+        halves_sum(data, stretch, stretch->factor, sum, at_once ? target : NULL, blocks);
+    if (target != NULL && !at_once)
         halves_sum(data, stretch, stretch->pull, target, NULL, (mean + BATCH_BLOCK - 1) / BATCH_BLOCK);
 }
 

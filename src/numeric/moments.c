@@ -19,6 +19,10 @@
  * from the nearest cache for each line that has a cell there; its sum stays in registers. Where lines see few
  * positions there is nothing to share, and each goes through its cells alone, asking for those 48 cells ahead.
  *
+ * A line that sees most positions takes from the sum over all of them, which is made once for all lines, the moments of
+ * those that it does not see: few where tables are those of stations that seldom fail. Only t needs every cell, and d
+ * numbers of each.
+ *
  * In halves (moments_halves.c) there is half as much to read, and each line goes through its cells alone, up to 176
  * numbers at once, whose sums stay in registers where there are enough of them, asking for those 16 cells ahead.
  *
@@ -37,6 +41,10 @@ enum { SHARED_FROM = 4 };
 /* Of all positions' halves: what the third cache surely holds. */
 enum { FAR_BYTES = 16 << 20 };
 
+/* Where what is left has less than this share of the weight of all, too many digits go. */
+#define FULL_WEIGHT 1e-3
+enum { TOTAL_PIECES = 32 };
+
 struct gather {
     const struct moments *moments;
     const struct half *half;
@@ -45,6 +53,7 @@ struct gather {
     double *second, *target, *tail; /* of each line: sums as they grow; tail is target behind `one` */
     double *square;
     size_t stride, target_stride; /* of a line of these */
+    bool full[BATCH_LANES];       /* lines that take from the total what they do not see */
 };
 
 /* Whole blocks, and two of them at least. */
@@ -74,6 +83,17 @@ struct moments_batch moments_batch_carve(double *at, size_t regressors)
     return batch;
 }
 
+static double weight_of(const struct moments *moments, size_t position)
+{
+    return moments->weight != NULL ? moments->weight[position] : 1;
+}
+
+/* From a position to the next, in what is gathered from. */
+static size_t moments_step(const struct moments *moments)
+{
+    return moments->halves != NULL ? moments_words(moments->regressors) : moments->stride;
+}
+
 /* Cells k .. of a line, up to position `behind` or as many as there is room for; returns the first that is left. */
 static uint64_t stretch_take(const struct gather *gather, uint64_t k, uint64_t end, uint64_t behind, double *square,
                              struct batch_stretch *stretch)
@@ -83,11 +103,10 @@ static uint64_t stretch_take(const struct gather *gather, uint64_t k, uint64_t e
     const uint32_t *across = half->across + k;
     size_t most = end - k < BATCH_STRETCH ? end - k : BATCH_STRETCH, count = 0;
     double sum[2] = {0};
-    size_t step = moments->halves != NULL ? moments_words(moments->regressors) : moments->stride;
+    size_t step = moments_step(moments);
     for (; count < most && across[count] < behind; count++) {
         uint32_t position = across[count];
-        double weight = (moments->weight != NULL ? moments->weight[position] : 1) *
-                        (half->weight != NULL ? (double)half->weight[k + count] : 1);
+        double weight = weight_of(moments, position) * (half->weight != NULL ? (double)half->weight[k + count] : 1);
         double z = gather->precision == FESCUE_SINGLE ? (double)((const float *)half->value)[k + count]
                                                       : ((const double *)half->value)[k + count];
         stretch->offset[count] = position * step;
@@ -141,7 +160,7 @@ static void lines_gather_together(const struct gather *gather)
     struct batch_stretch stretch[BATCH_LANES];
     uint64_t k[BATCH_LANES];
     for (size_t lane = 0; lane < gather->count; lane++)
-        k[lane] = half->start[gather->first + lane];
+        k[lane] = half->start[gather->first + lane + gather->full[lane]]; /* no cell of a line that is done */
     for (size_t begin = 0; begin < half->length; begin += BATCH_STRETCH) {
         for (size_t lane = 0; lane < gather->count; lane++)
             k[lane] = stretch_take(gather, k[lane], half->start[gather->first + lane + 1], begin + BATCH_STRETCH,
@@ -189,22 +208,139 @@ static void stretch_look_ahead(const struct gather *gather, uint64_t k, struct b
         stretch->offset[stretch->count + c] = k + c < cells ? half->across[k + c] * step : stretch->offset[0];
 }
 
-static void lines_gather_halves(const struct gather *gather)
+static void line_gather_halves(const struct gather *gather, size_t lane)
 {
     const struct moments *moments = gather->moments;
     const struct half *half = gather->half;
     size_t d = moments->regressors, blocks = moments_words(d) / 8;
     struct batch_stretch stretch = {.is_far = half->length * moments_words(d) * sizeof(uint64_t) > FAR_BYTES};
+    uint64_t k = half->start[gather->first + lane], end = half->start[gather->first + lane + 1];
+    double *second = gather->second + lane * gather->stride, *target = gather->target + lane * gather->target_stride;
+    while (k < end) {
+        k = stretch_take(gather, k, end, half->length, gather->square + lane, &stretch);
+        stretch_look_ahead(gather, k, &stretch);
+        moments->kernel->add_halves(moments->halves, &stretch, blocks, d, gather->full[lane] ? NULL : second, target);
+    }
+}
+
+/* ---- lines that see most positions -------------------------------------------------------------------------------
+ */
+
+/* sum += factor times moment, of whole triangles. */
+static void stretch_sum(const struct moments *moments, struct batch_stretch *stretch, double *sum)
+{
+    size_t d = moments->regressors, count = stretch->count;
+    if (count == 0)
+        return;
+    for (size_t c = count; c < count + BATCH_AHEAD; c++)
+        stretch->offset[c] = stretch->offset[count - 1];
+    if (moments->halves != NULL)
+        moments->kernel->add_halves(moments->halves, stretch, moments_words(d) / 8, d, sum, NULL);
+    else
+        moments->kernel->add(moments->data, stretch, NULL, stretch->factor, packed_size(d), sum);
+    stretch->count = 0;
+}
+
+static void position_sum(const struct moments *moments, size_t position, double factor, struct batch_stretch *stretch,
+                         double *sum)
+{
+    stretch->offset[stretch->count] = position * moments_step(moments);
+    stretch->factor[stretch->count++] = factor;
+    if (stretch->count == BATCH_STRETCH)
+        stretch_sum(moments, stretch, sum);
+}
+
+/* S = total - what is not seen. */
+static void line_lack(const struct gather *gather, size_t lane)
+{
+    const struct moments *moments = gather->moments;
+    const struct half *half = gather->half;
+    struct batch_stretch stretch = {0};
+    double *second = gather->second + lane * gather->stride;
+    memcpy(second, moments->total, gather->stride * sizeof *second);
+    size_t position = 0;
+    for (uint64_t k = half->start[gather->first + lane], end = half->start[gather->first + lane + 1]; k <= end; k++) {
+        for (size_t seen = k < end ? half->across[k] : half->length; position < seen; position++)
+            position_sum(moments, position, -weight_of(moments, position), &stretch, second);
+        position++;
+    }
+    stretch_sum(moments, &stretch, second);
+}
+
+/* Whether that is less work, and leaves enough of the total. */
+static bool line_is_full(const struct moments *moments, const struct half *half, size_t line)
+{
+    size_t d = moments->regressors, blocks = moments_words(d) / 8, mean = (d + BATCH_BLOCK - 1) / BATCH_BLOCK;
+    uint64_t begin = half->start[line], end = half->start[line + 1], seen = end - begin;
+    if (moments->total == NULL || 2 * seen <= half->length || blocks * (2 * seen - half->length) <= 2 * mean * seen)
+        return false;
+    double weight = 0;
+    for (uint64_t k = begin; moments->weight != NULL && k < end; k++)
+        weight += moments->weight[half->across[k]];
+    size_t one = moments->halves != NULL ? moments->one : packed_size(moments->one) + moments->one;
+    return moments->weight == NULL || weight >= FULL_WEIGHT * moments->total[one];
+}
+
+size_t moments_total_size(size_t regressors)
+{
+    return (1 + TOTAL_PIECES) * sum_stride(regressors);
+}
+
+struct total_job {
+    const struct moments *moments;
+    size_t positions, stride;
+    double *partial;
+};
+
+static void total_piece(void *argument, size_t piece, size_t worker)
+{
+    const struct total_job *job = argument;
+    struct batch_stretch stretch = {0};
+    double *sum = job->partial + piece * job->stride;
+    (void)worker;
+    memset(sum, 0, job->stride * sizeof *sum);
+    size_t last = job->positions * (piece + 1) / TOTAL_PIECES;
+    for (size_t position = job->positions * piece / TOTAL_PIECES; position < last; position++)
+        position_sum(job->moments, position, weight_of(job->moments, position), &stretch, sum);
+    stretch_sum(job->moments, &stretch, sum);
+}
+
+void moments_total(fescue_context *context, struct moments *moments, const struct half *half, double *room)
+{
+    size_t stride = sum_stride(moments->regressors);
+    struct total_job job = {moments, half->length, stride, room + stride};
+    uint64_t cells = half->start[half->lines];
+    moments->total = NULL;
+    if (half->weight != NULL || 2 * cells <= (uint64_t)half->lines * half->length)
+        return;
+    team_run(context, TOTAL_PIECES, total_piece, &job);
+    team_sum(context, job.partial, TOTAL_PIECES, stride, room);
+    moments->total = room;
+}
+
+/* ---- gathers -----------------------------------------------------------------------------------------------------
+ */
+
+static void lines_gather_halves(const struct gather *gather)
+{
+    const struct moments *moments = gather->moments;
     for (size_t lane = 0; lane < gather->count; lane++) {
-        uint64_t k = half->start[gather->first + lane], end = half->start[gather->first + lane + 1];
-        double *second = gather->second + lane * gather->stride,
-               *target = gather->target + lane * gather->target_stride;
-        while (k < end) {
-            k = stretch_take(gather, k, end, half->length, gather->square + lane, &stretch);
-            stretch_look_ahead(gather, k, &stretch);
-            moments->kernel->add_halves(moments->halves, &stretch, blocks, d, second, target);
-        }
-        moments_restore(d, moments->one, gather->tail, second);
+        if (gather->full[lane])
+            line_lack(gather, lane);
+        line_gather_halves(gather, lane);
+        moments_restore(moments->regressors, moments->one, gather->tail, gather->second + lane * gather->stride);
+    }
+}
+
+/* The target of a line alone. */
+static void line_target(const struct gather *gather, size_t lane)
+{
+    const struct half *half = gather->half;
+    struct batch_stretch stretch = {0};
+    uint64_t end = half->start[gather->first + lane + 1];
+    for (uint64_t k = half->start[gather->first + lane]; k < end;) {
+        k = stretch_take(gather, k, end, half->length, gather->square + lane, &stretch);
+        stretch_target(gather, &stretch, lane);
     }
 }
 
@@ -214,7 +350,14 @@ static void lines_gather(const struct gather *gather)
     const struct half *half = gather->half;
     uint64_t cells = half->start[gather->first + gather->count] - half->start[gather->first];
     size_t behind = moments->one + 1, stride = gather->target_stride;
-    if (cells * SHARED_FROM >= (uint64_t)gather->count * half->length)
+    bool together = cells * SHARED_FROM >= (uint64_t)gather->count * half->length;
+    for (size_t lane = 0; lane < gather->count; lane++)
+        if (gather->full[lane]) {
+            line_lack(gather, lane);
+            line_target(gather, lane);
+            together = true;
+        }
+    if (together)
         lines_gather_together(gather);
     else
         lines_gather_alone(gather);
@@ -237,6 +380,8 @@ void moments_gather(const struct moments *moments, const struct half *half, enum
     gather.square = out->square;
     memset(out->work, 0, BATCH_LANES * (gather.stride + 2 * gather.target_stride) * sizeof *out->work);
     memset(out->square, 0, BATCH_LANES * sizeof *out->square);
+    for (size_t lane = 0; lane < gather.count; lane++)
+        gather.full[lane] = line_is_full(moments, half, first + lane);
     if (moments->halves != NULL)
         lines_gather_halves(&gather);
     else

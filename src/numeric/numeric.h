@@ -174,6 +174,7 @@ struct moments {
     const struct batch_kernel *kernel;
     const uint64_t *halves; /* the same in half the bytes, kept to 2^-21 of each number, and then gathered from; or
                                NULL (moments_halves.c). A line has moments_words */
+    const double *total;    /* weight times moment, summed over all positions; or NULL (moments_total) */
 };
 /* Whole registers may be read from the beginning of any row of a triangle. */
 static inline size_t moments_stride(size_t regressors)
@@ -195,6 +196,11 @@ static inline size_t moments_room(size_t regressors)
 {
     return 2 * moments_words(regressors);
 }
+/* For gathers over the lines of this half: where they see most positions, makes total, from which each then takes what
+   it does not see; else NULL. Anew whenever moments, halves or weights have changed. room: as many doubles as
+   moments_total_size, for as long as total is used. */
+void moments_total(fescue_context *context, struct moments *moments, const struct half *half, double *room);
+size_t moments_total_size(size_t regressors);
 /* The halves of one moment. */
 void moments_halve(const struct moments *moments, const double *moment, double *room, uint64_t *halves);
 struct moments_batch moments_batch_carve(double *at, size_t regressors);

@@ -108,6 +108,7 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
     arena_reserve(arena, dense_work_size(lines, d), sizeof(double));
     size_t words = cells->count >= HALVES_CELLS ? lines * moments_words(d) : 0;
     arena_reserve(arena, words, sizeof(uint64_t));
+    arena_reserve(arena, moments_total_size(d), sizeof(double));
     fescue_status status = arena_open(problem->context, arena);
     if (status != FESCUE_OK)
         return status;
@@ -124,6 +125,7 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
     evidence->scratch = arena_carve(arena, workers * evidence->scratch_size, sizeof(double));
     evidence->dense = arena_carve(arena, dense_work_size(lines, d), sizeof(double));
     evidence->halves = words > 0 ? arena_carve(arena, words, sizeof(uint64_t)) : NULL;
+    evidence->total = arena_carve(arena, moments_total_size(d), sizeof(double));
     evidence->rows.effect_at = evidence->columns.one_at = rank;
     evidence->rows.one_at = evidence->columns.effect_at = rank + 1;
     return FESCUE_OK;
@@ -256,7 +258,7 @@ static double change_measure(struct evidence *evidence)
 static fescue_status side_round(struct evidence *evidence, struct evidence_side *side, struct evidence_side *other)
 {
     struct evidence_time *time = evidence->time;
-    evidence_side_halve(evidence, other);
+    evidence_side_offer(evidence, other, side);
     if (time != NULL && time->chain_on && side == time->steps) {
         evidence_chain_update(evidence);
         evidence_chain_prior(evidence);

@@ -48,6 +48,7 @@ struct evidence {
     struct matrix map[2];            /* a change of basis and its transpose */
     double *shift, *basis_work;
     double *dense;              /* for products of a side's lines */
+    double *total;              /* room for the sum of the moments of either side */
     uint64_t *halves;           /* room for the moments of either side in halves; NULL: they are gathered as they are */
     struct evidence_time *time; /* NULL: lines have no order */
     struct evidence_near *near; /* NULL: columns are not near one another */
@@ -99,8 +100,9 @@ size_t evidence_basis_partial(size_t rank); /* numbers a block */
 
 /* New posteriors of all lines of `side` from the moments of `other`; fills side->mean and side->line_error. */
 void evidence_side_update(struct evidence *evidence, struct evidence_side *side, const struct evidence_side *other);
-/* The moments of `side`, which are about to be gathered, in halves, where that serves; else as they are. */
-void evidence_side_halve(struct evidence *evidence, struct evidence_side *side);
+/* Readies the moments of `side` to be gathered by the lines of `other`: in halves where that serves, and their total
+   where that does. */
+void evidence_side_offer(struct evidence *evidence, struct evidence_side *side, const struct evidence_side *other);
 /* Prior variances of `side` from its posteriors. */
 void evidence_side_prior(struct evidence *evidence, struct evidence_side *side);
 /* Writes the moments of a line whose mean is known and certain. */

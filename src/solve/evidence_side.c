@@ -239,13 +239,14 @@ static void halve_block(void *opaque, size_t block, size_t worker)
                       evidence->halves + line * words);
 }
 
-void evidence_side_halve(struct evidence *evidence, struct evidence_side *side)
+void evidence_side_offer(struct evidence *evidence, struct evidence_side *side, const struct evidence_side *other)
 {
     struct update_job job = {evidence, side, NULL};
     bool serves = evidence->halves != NULL && evidence->noise >= HALVES_NOISE;
     side->moments.halves = serves ? evidence->halves : NULL;
     if (serves)
         team_run(evidence->context, side->half->blocks, halve_block, &job);
+    moments_total(evidence->context, &side->moments, other->half, evidence->total);
 }
 
 static void prior_block(void *opaque, size_t block, size_t worker)

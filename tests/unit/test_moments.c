@@ -39,6 +39,8 @@ struct gather_case {
     double seen; /* of the cells: lines that see few positions go through them alone, others together */
     size_t d, one;
     bool weighted, cells_weighted;
+    bool from_total; /* lines that see most positions take from the sum of all what they lack */
+    double heaviest; /* weight of one position; 0: like the others */
 };
 
 /* Of the position times that of the cell. */
@@ -72,13 +74,16 @@ static void line_check(const struct cells *cells, const struct moments *moments,
         double z = cells_value(cells, half, k);
         square += weight_of(moments, half, k) * z * z;
     }
+    double heaviest = 1; /* sums that hold a heavy position have its rounding */
+    for (uint64_t k = half->start[line]; k < half->start[line + 1]; k++)
+        heaviest = fmax(heaviest, weight_of(moments, half, k));
     assert_close(sum->square[lane], square, 1e-13 * (1 + square));
     for (size_t a = 0; a < d; a++) {
         assert_close(sum->target[a * BATCH_LANES + lane], plain_sum(cells, moments, line, a, moments->one, true),
-                     1e-12);
+                     1e-12 * heaviest);
         for (size_t b = 0; b <= a; b++)
             assert_close(sum->second[(packed_size(a) + b) * BATCH_LANES + lane],
-                         plain_sum(cells, moments, line, a, b, false), 1e-12);
+                         plain_sum(cells, moments, line, a, b, false), 1e-12 * heaviest);
     }
 }
 
@@ -122,13 +127,14 @@ static void gather_check(fescue_context *context, const struct gather_case *at)
     sow_cells(context, &sowing, &cells);
     struct random_stream stream = random_open(1, RANDOM_TEST, (uint32_t)at->d);
     struct moments moments = {.stride = moments_stride(at->d), .regressors = at->d, .one = at->one};
-    double *weight, *work;
+    double *weight, *work, *total;
     uint64_t *halves;
     moments.kernel = batch_kernel_choose();
     assert_status(context, TAKE(context, COLUMNS * moments.stride, &moments.data), FESCUE_OK);
     assert_status(context, TAKE(context, COLUMNS, &weight), FESCUE_OK);
     assert_status(context, TAKE(context, moments_batch_size(at->d), &work), FESCUE_OK);
     assert_status(context, TAKE(context, COLUMNS * moments_words(at->d), &halves), FESCUE_OK);
+    assert_status(context, TAKE(context, moments_total_size(at->d), &total), FESCUE_OK);
     for (size_t j = 0; j < COLUMNS; j++) {
         moment_draw(&stream, at->d, at->one, moments.data + j * moments.stride);
         weight[j] = 0.1 + random_uniform(&stream);
@@ -136,8 +142,13 @@ static void gather_check(fescue_context *context, const struct gather_case *at)
     }
     moments.halves = at->in_halves ? halves : NULL;
     moments.weight = at->weighted ? weight : NULL;
+    if (at->heaviest > 0)
+        weight[COLUMNS / 2] = at->heaviest;
     if (at->cells_weighted)
         cells_draw_weights(context, &cells);
+    if (at->from_total)
+        moments_total(context, &moments, &cells.by_row, total);
+    assert_int_equal(moments.total != NULL, at->from_total && !at->cells_weighted && at->seen > 0.6);
     struct moments_batch sum = moments_batch_carve(work, at->d);
     for (size_t line = 0; line < ROWS; line++) {
         if (line % BATCH_LANES == 0)
@@ -150,6 +161,7 @@ static void gather_check(fescue_context *context, const struct gather_case *at)
     GIVE(context, &weight);
     GIVE(context, &work);
     GIVE(context, &halves);
+    GIVE(context, &total);
     cells_free(context, &cells);
 }
 
@@ -164,14 +176,52 @@ static void sums_are_those_of_plain_loops(void **state)
             for (size_t s = 0; s < COUNT(seen); s++) {
                 size_t d = sizes[k];
                 for (int half = 0; half < 2; half++) {
-                    gather_check(context, &(struct gather_case){half != 0, FESCUE_DOUBLE, seen[s], d, d - 2, s % 2 == 0,
-                                                                k % 2 == 1});
-                    gather_check(context, &(struct gather_case){half != 0, FESCUE_SINGLE, seen[s], d,
-                                                                k % 2 == 0 ? 0 : d - 1, s > 1, k % 3 == 1});
+                    struct gather_case at = {.in_halves = half != 0, .seen = seen[s], .d = d};
+                    at.precision = FESCUE_DOUBLE, at.one = d - 2;
+                    at.weighted = s % 2 == 0, at.cells_weighted = k % 2 == 1;
+                    gather_check(context, &at);
+                    at.precision = FESCUE_SINGLE, at.one = k % 2 == 0 ? 0 : d - 1;
+                    at.weighted = s > 1, at.cells_weighted = k % 3 == 1;
+                    gather_check(context, &at);
                 }
             }
     }
     unsetenv("FESCUE_KERNEL");
+}
+
+static void sums_from_the_total_are_the_same(void **state)
+{
+    static const double seen[] = {0.4, 0.7, 0.8, 0.97, 1};
+    static const size_t sizes[] = {2, 4, 8, 9, 12, 18, 22, 30, 41};
+    fescue_context *context = bench_of(state)->context;
+    for (size_t n = 0; n < COUNT(kernels); n++) {
+        setenv("FESCUE_KERNEL", kernels[n], 1);
+        for (size_t k = 0; k < COUNT(sizes); k++)
+            for (size_t s = 0; s < COUNT(seen); s++)
+                for (int half = 0; half < 2; half++) {
+                    struct gather_case at = {.in_halves = half != 0, .seen = seen[s], .d = sizes[k]};
+                    at.one = sizes[k] - 2, at.weighted = s % 2 == 0, at.from_total = true;
+                    gather_check(context, &at);
+                    at.one = sizes[k] - 1;
+                    at.cells_weighted = true;
+                    gather_check(context, &at);
+                }
+    }
+    unsetenv("FESCUE_KERNEL");
+}
+
+/* A thousand million times the weight of any other: without it nine digits of the total would be gone. */
+static void a_line_that_lacks_a_heavy_position_keeps_its_digits(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    for (int half = 0; half < 2; half++)
+        gather_check(context, &(struct gather_case){.in_halves = half != 0,
+                                                    .seen = 0.8,
+                                                    .d = 18,
+                                                    .one = 16,
+                                                    .weighted = true,
+                                                    .from_total = true,
+                                                    .heaviest = 1e9});
 }
 
 /* A = G G' + 0.5 I, packed. */
@@ -314,6 +364,8 @@ int main(void)
 {
     const struct CMUnitTest tests[] = {
         BENCH_TEST(sums_are_those_of_plain_loops),
+        BENCH_TEST(sums_from_the_total_are_the_same),
+        BENCH_TEST(a_line_that_lacks_a_heavy_position_keeps_its_digits),
         cmocka_unit_test(batches_are_solved_lane_by_lane),
         cmocka_unit_test(congruence_is_a_product_of_three),
         cmocka_unit_test(inverse_times_matrix_is_identity),
