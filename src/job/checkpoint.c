@@ -77,8 +77,8 @@ fescue_status checkpoint_open(const fescue_table *table, const struct fescue_opt
     if (cells->by_row.weight != NULL) /* the files that they come from may have changed */
         text_add(&text, "weights %016" PRIx64 "\n",
                  memo_digest(0, cells->by_row.weight, cells->count * sizeof *cells->by_row.weight));
-    for (const char *line = lines; *line != '\0'; line = strchr(line, '\n') + 1)
-        text_add(&text, "%.*s\n", (int)strcspn(line, "\n"), line);
+    for (const char *line = lines, *end; (end = strchr(line, '\n')) != NULL; line = end + 1)
+        text_add(&text, "%.*s\n", (int)(end - line), line);
     TRY(text_finish(&text, &identity));
     TRY(memo_open(table->context, options->checkpoint, identity, options->checkpoint_every));
 done:
