@@ -18,6 +18,10 @@ enum { START_RANK = 20, FINE_ROUNDS = 60, NOISE_ROUNDS = 40 };
    else a few rounds, which leave what they have to settle far below the error, show whether it is worth all of them. */
 enum { TRIAL_ROUNDS = 5 };
 static const double felt_spread = 0.02;
+/* Nor are effects tried beside components that leave less of them than a tenth of what chance does, so that a line's
+   mean would tell its effect from 0 with a tenth of its weight and lower the squared error of its cells by a hundredth
+   of the square of their mean's error; unless some component may be made of them. */
+static const double felt_effects = 0.1, felt_constant = 0.05;
 /* And rounds enough to tell kinds of offsets apart, on tables where a round is felt. */
 enum { FELT = 50000, COMPARE_ROUNDS = 30 };
 /* The estimates are settled when a round moves them by this share of the table's spread. */
@@ -102,6 +106,7 @@ static fescue_status candidate_take(struct chooser *chooser, struct evidence_res
     candidate->noise = noise;
     candidate->variance = result->noise * result->noise;
     candidate->spread = noise_lines(chooser) == EVIDENCE_NOISE_COLUMNS ? result->column_spread : result->row_spread;
+    candidate->effects = fmax(result->row_effects, result->column_effects);
     candidate->ridge = NAN;
     chooser_take_scale(chooser, candidate);
     for (size_t k = 0; k < candidate->point.rank; k++)
@@ -242,6 +247,33 @@ done:
     return status;
 }
 
+/* How much of the constant lies in the span of a factor's orthonormal columns, over the lines with cells. */
+static double constant_share(const struct half *half, struct matrix factor)
+{
+    double share = 0, lines = 0;
+    for (size_t k = 0; k < factor.columns; k++) {
+        double sum = 0;
+        for (size_t i = 0; i < factor.rows; i++)
+            sum += MATRIX_AT(factor, i, k);
+        share += sum * sum;
+    }
+    for (size_t i = 0; i < half->lines; i++)
+        lines += half->start[i + 1] > half->start[i];
+    return share / lines;
+}
+
+/* Whether effects are worth a fit of their own on a large table: the best fit so far, which has none, leaves some, or
+   has them as components, in which case the other factor of these is constant. */
+static bool effects_felt(const struct chooser *chooser, const struct candidate *best)
+{
+    const struct cells *kept = chooser->kept;
+    const struct low_rank *point = &best->point;
+    if (!evidence_is_large(kept) || point->rank == 0 || best->offsets.kind != FESCUE_OFFSETS_NONE)
+        return true;
+    return best->effects >= felt_effects || constant_share(&kept->by_row, point->left) >= felt_constant ||
+           constant_share(&kept->by_column, point->right) >= felt_constant;
+}
+
 fescue_status evidence_compete(struct chooser *chooser, const struct candidate *const *alone, size_t count,
                                struct candidate *winner, size_t *best)
 {
@@ -251,6 +283,8 @@ fescue_status evidence_compete(struct chooser *chooser, const struct candidate *
     TRY(learn(chooser, alone[0], winner));
     TRY(path_try_exact(chooser, winner));
     for (size_t k = 1; k < count && !winner->is_exact && !chooser_is_late(chooser); k++) {
+        if (!effects_felt(chooser, winner))
+            continue;
         candidate_free(chooser, &candidate);
         TRY(learn_next(chooser, alone[k], winner, &candidate));
         TRY(path_try_exact(chooser, &candidate));

@@ -45,6 +45,7 @@ struct candidate {
     enum evidence_noise noise;
     double variance, spread; /* of that noise: its mean, table units, and by how much lines differ in it if it is equal
                               */
+    double effects;          /* of rows or columns that it has not, over what chance would leave of them */
     struct time_part time;   /* owned; table units */
     struct near_part near;
     struct errors errors;  /* on the hidden cells, table units; infinite when the fit blew up */

@@ -57,8 +57,8 @@ static void side_reserve(struct arena *arena, const struct half *half, size_t ra
     size_t lines = half->lines, d = rank + 2;
     arena_reserve(arena, lines * moments_stride(d), sizeof(double));
     arena_reserve(arena, rank + 1, sizeof(double));
-    arena_reserve(arena, lines, sizeof(double));
-    arena_reserve(arena, lines, sizeof(double));
+    for (size_t k = 0; k < 3; k++)
+        arena_reserve(arena, lines, sizeof(double));
     arena_reserve(arena, (half->blocks + 1) * evidence_basis_partial(rank), sizeof(double));
     matrix_reserve(arena, lines, d);
     matrix_reserve(arena, lines, d);
@@ -74,6 +74,7 @@ static void side_carve(struct arena *arena, const struct half *half, size_t rank
     side->variance = arena_carve(arena, rank + 1, sizeof(double));
     side->line_precision = arena_carve(arena, lines, sizeof(double));
     side->line_error = arena_carve(arena, lines, sizeof(double));
+    side->line_rest = arena_carve(arena, lines, sizeof(double));
     side->partial = arena_carve(arena, (half->blocks + 1) * evidence_basis_partial(rank), sizeof(double));
     side->mean = matrix_carve(arena, lines, d);
     side->old = matrix_carve(arena, lines, d);
@@ -320,6 +321,26 @@ static double noise_spread(const struct evidence_side *side)
     return spread / cells;
 }
 
+/* What effects of the lines that the fit has not would add to the squares of their means: an effect of variance s to n
+   cells of noise 1 adds n s. That of the means of n cells without effects, of which the fit has used up some for the
+   line's components and some for those of the other side, is (1 - rank/n) (1 - rank * lines of the other side / cells).
+   Of lines of twice as many cells as components, which have to hold half of all cells: else INFINITY. */
+static double effect_spread(const struct evidence *evidence, const struct evidence_side *side, size_t rank)
+{
+    const struct half *half = side->half;
+    double all = (double)half->start[half->lines], used = (double)rank * (double)half->length / all;
+    double squares = 0, expected = 0, cells = 0;
+    for (size_t line = 0; line < half->lines; line++) {
+        double own = (double)(half->start[line + 1] - half->start[line]);
+        if (own == 0 || own < 2 * (double)rank)
+            continue;
+        squares += side->line_rest[line] * side->line_rest[line] / own;
+        expected += (1 - (double)rank / own) * (1 - used);
+        cells += own;
+    }
+    return 2 * cells < all || !(used < 0.5) ? INFINITY : squares / (evidence->noise * expected) - 1;
+}
+
 /* Posterior means into a model in the table's units. */
 static fescue_status evidence_model(struct evidence *evidence, const struct model *start, struct model *model)
 {
@@ -467,6 +488,8 @@ fescue_status evidence_fit(fescue_context *context, const struct cells *cells, c
     out->fit.objective = evidence.noise;
     size_t alive = evidence_living(cells, out);
     evidence_trim(&out->model, alive > 0 ? alive : 1);
+    out->row_effects = effect_spread(&evidence, &evidence.rows, alive);
+    out->column_effects = effect_spread(&evidence, &evidence.columns, alive);
     evidence_keep(&work, out);
 done:
     evidence_near_close(&evidence);

@@ -28,6 +28,7 @@ struct evidence_side {
     double *line_precision; /* of each line, relative: 1 where all are alike */
     double *excess;         /* of each line, added to line_error: what the time residual does not know; or NULL */
     double *line_error;     /* expected squared error of each line, under the other side's relative precisions */
+    double *line_rest;      /* sum over the cells of each line of what its posterior mean leaves of them */
     double *partial;        /* sums of the blocks */
     double *own, *pull;     /* of each line, r + 1 prior precisions in place of 1 / variance, and those times the prior
                                means; NULL: all alike, around 0 */
@@ -98,7 +99,8 @@ size_t evidence_side_scratch(size_t rank);
 size_t evidence_basis_scratch(size_t rank);
 size_t evidence_basis_partial(size_t rank); /* numbers a block */
 
-/* New posteriors of all lines of `side` from the moments of `other`; fills side->mean and side->line_error. */
+/* New posteriors of all lines of `side` from the moments of `other`; fills side->mean, side->line_error and
+   side->line_rest. */
 void evidence_side_update(struct evidence *evidence, struct evidence_side *side, const struct evidence_side *other);
 /* Readies the moments of `side` to be gathered by the lines of `other`: in halves where that serves, and their total
    where that does. */

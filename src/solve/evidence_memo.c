@@ -12,7 +12,8 @@ struct evidence_sums {
     uint64_t rank, trace_count, iterations;
     uint64_t time_cells, time_components; /* of the time part; along which axis it is, the request says */
     int64_t stop, along;
-    double objective, rmse, gradient, noise, scale, mean, row_ridge, column_ridge, row_spread, column_spread;
+    double objective, rmse, gradient, noise, scale, mean, row_ridge, column_ridge, row_spread, column_spread,
+        row_effects, column_effects;
     struct near_part near;
 };
 enum { RESULT_PARTS = 13 };
@@ -161,6 +162,8 @@ void evidence_keep(struct memo_work *work, struct evidence_result *result)
                                  .column_ridge = offsets->column_ridge,
                                  .row_spread = result->row_spread,
                                  .column_spread = result->column_spread,
+                                 .row_effects = result->row_effects,
+                                 .column_effects = result->column_effects,
                                  .near = result->model.near};
     if (result->fit.stop != STOP_CANCELLED)
         memo_keep(work, parts, result_parts(&sums, result, parts));
@@ -179,6 +182,8 @@ static void sums_take(const struct evidence_sums *sums, struct evidence_result *
     out->scale = sums->scale;
     out->row_spread = sums->row_spread;
     out->column_spread = sums->column_spread;
+    out->row_effects = sums->row_effects;
+    out->column_effects = sums->column_effects;
     out->model.offsets.mean = sums->mean;
     out->model.offsets.row_ridge = sums->row_ridge;
     out->model.offsets.column_ridge = sums->column_ridge;

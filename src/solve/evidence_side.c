@@ -164,11 +164,13 @@ static void moments_write(size_t rank, const struct lines_scratch *s, double *re
     EACH_LANE effect[lane] = mean[rank * BATCH_LANES + lane];
 }
 
-/* Posteriors of a batch of lines into mean and moment; error[lane] is the expected squared error. */
+/* Posteriors of a batch of lines into mean and moment; error[lane] is the expected squared error, rest[lane] what the
+   means leave of the lines' sums. */
 static void lines_solve(const struct evidence_side *side, size_t rank, size_t first, const double *precision,
-                        const struct lines_scratch *s, double *error)
+                        const struct lines_scratch *s, double *error, double *rest)
 {
     size_t free = rank + 1;
+    const double *sum = s->gathered.second + packed_size(rank) * BATCH_LANES;
     const double *cross = s->gathered.second + packed_size(free) * BATCH_LANES, *target = s->gathered.target;
     double inner[BATCH_LANES];
     systems_write(side, free, precision, s);
@@ -184,6 +186,9 @@ static void lines_solve(const struct evidence_side *side, size_t rank, size_t fi
     for (size_t at = 0; at < free * BATCH_LANES; at += BATCH_LANES)
         EACH_LANE error[lane] += 2 * s->mean[at + lane] * (cross[at + lane] - target[at + lane]);
     EACH_LANE error[lane] = error[lane] > 0 ? error[lane] : 0;
+    EACH_LANE rest[lane] = target[rank * BATCH_LANES + lane] - cross[rank * BATCH_LANES + lane];
+    for (size_t at = 0; at < free * BATCH_LANES; at += BATCH_LANES)
+        EACH_LANE rest[lane] -= s->mean[at + lane] * sum[at + lane];
 }
 
 struct update_job {
@@ -201,15 +206,16 @@ static void update_batch(void *opaque, size_t batch, size_t worker)
     size_t rank = evidence->rank, first = batch * BATCH_LANES, left = side->half->lines - first;
     size_t count = left < BATCH_LANES ? left : BATCH_LANES;
     struct lines_scratch s = scratch_carve(evidence->scratch + worker * evidence->scratch_size, rank);
-    double precision[BATCH_LANES], error[BATCH_LANES], *to[BATCH_LANES];
+    double precision[BATCH_LANES], error[BATCH_LANES], rest[BATCH_LANES], *to[BATCH_LANES];
     EACH_LANE precision[lane] = lane < count ? side->line_precision[first + lane] / evidence->noise : 0;
     EACH_LANE to[lane] = lane < count ? side->moments.data + (first + lane) * side->moments.stride : s.beyond;
     moments_gather(&job->other->moments, side->half, evidence->problem->target.precision, first, &s.gathered);
-    lines_solve(side, rank, first, precision, &s, error);
+    lines_solve(side, rank, first, precision, &s, error, rest);
     packed_batch_unpack(side->moments.kernel, s.moment, packed_size(rank + 2), to);
     for (size_t lane = 0; lane < count; lane++) {
         size_t line = first + lane;
         side->line_error[line] = error[lane];
+        side->line_rest[line] = rest[lane];
         for (size_t k = 0; k < rank; k++)
             MATRIX_AT(side->mean, line, k) = s.mean[k * BATCH_LANES + lane];
         MATRIX_AT(side->mean, line, side->effect_at) = s.mean[rank * BATCH_LANES + lane];

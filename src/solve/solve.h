@@ -105,6 +105,8 @@ struct evidence_result { /* evidence_result_free */
     /* Variance of the noise of a line over the mean one, beyond what its number of cells leaves to chance, over the
        lines by their cells: what noise of every row's, or column's, own would have to say. */
     double row_spread, column_spread;
+    /* Mean squared effect of the rows, of the columns, which the fit has not, over what chance would leave of it. */
+    double row_effects, column_effects;
     double scale; /* units of the table in one of the trace's */
 };
 /* Cancelled: FESCUE_OK with STOP_CANCELLED in evidence_fit, once a round is done; FESCUE_STOPPED in evidence_learn.

@@ -217,6 +217,27 @@ static void effects_alone_have_no_rank(void **state)
     assert_in_range(found, 7, 8);
 }
 
+/* On a large table effects have a fit of their own where the fit without leaves some, be they too weak to have become
+   components (a thousandth of the noise's variance would), or has them as components; and only there. */
+static void effects_of_large_tables_are_seen_beside_components(void **state)
+{
+    static const double effects[] = {0, 0.02, 0.05, 0.5};
+    fescue_context *context = bench_of(state)->context;
+    for (size_t e = 0; e < sizeof effects / sizeof effects[0]; e++) {
+        const struct plot plot = {{900, 1000, 3, 0.64, 0.8, FESCUE_DOUBLE, 4}, 0, effects[e]};
+        struct trial trial;
+        bool is_tried = false;
+        trial_open(context, &plot, &trial);
+        trial.request.way = CHOOSE_LEARN;
+        trial_run(&trial);
+        for (size_t k = 0; k < trial.choice.path_count; k++)
+            is_tried |= trial.choice.path[k].offsets == FESCUE_OFFSETS_BOTH && trial.choice.path[k].rank > 0;
+        assert_true(is_tried == (effects[e] > 0));
+        assert_int_equal(trial.choice.offsets, effects[e] > 0 ? FESCUE_OFFSETS_BOTH : FESCUE_OFFSETS_NONE);
+        trial_close(&trial);
+    }
+}
+
 /* Like sensors: levels far apart, and two components underneath that are not to be lost in them. */
 static void effects_and_components_are_told_apart(void **state)
 {
@@ -519,6 +540,7 @@ int main(void)
         BENCH_TEST(learning_does_not_stop_short_of_exact),
         BENCH_TEST(noise_alone_has_no_rank),
         BENCH_TEST(effects_alone_have_no_rank),
+        BENCH_TEST(effects_of_large_tables_are_seen_beside_components),
         BENCH_TEST(effects_and_components_are_told_apart),
         BENCH_TEST(a_turned_table_in_other_units_gets_the_same),
         BENCH_TEST(learning_finds_the_same),
