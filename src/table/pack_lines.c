@@ -140,7 +140,11 @@ lines_look_eight(const struct pack_lines *lines, enum fescue_precision precision
         }
         faults |= end > half->start[i] && half->across[end - 1] >= half->length;
     }
-    *sum = (uint64_t)_mm512_reduce_add_epi64(total);
+    uint64_t part[8];
+    _mm512_storeu_si512(part, total);
+    *sum = 0;
+    for (size_t lane = 0; lane < 8; lane++) /* unsigned: the sum wraps, which signed numbers of a reduction may not */
+        *sum += part[lane];
     return faults == 0;
 }
 
