@@ -14,7 +14,7 @@
  * runs is taken or left as a whole, with the chance that keeps to it. The same chance is lowered when few cells are
  * still to be hidden, so that a table of few sensors does not lose far more than its share.
  *
- * Which cells go depends on the seed, the fold and the pattern. Sequential; O(n log n) for a sensor of n seen cells.
+ * Which cells go depends on the seed, the fold and the pattern. Sequential; O(n) for a sensor of n seen cells.
  */
 #include "judge/holdout_internal.h"
 
@@ -70,23 +70,28 @@ struct graft {
     double chance;
 };
 
-/* Whether the donor was missing at the place of the sensor's cell `at`, in a run that is taken. */
-static bool is_grafted(const struct tracks *tracks, const struct graft *graft, uint64_t at)
+/* Whether the donor was missing at the place of the sensor's cell `at`, in a run that is taken. Cells are asked for in
+   order; *next is where the donor's first cell not before the place is, and begins with the donor's first. */
+static bool is_grafted(const struct tracks *tracks, const struct graft *graft, uint64_t at, uint64_t *next)
 {
     uint64_t place = (uint64_t)tracks->rank[at] + graft->shift, round = place >= tracks->places;
+    uint64_t start = tracks->start[graft->donor], end = tracks->start[graft->donor + 1];
     place -= round * tracks->places;
-    uint64_t next = seen_before(tracks, graft->donor, (uint32_t)place);
-    if (next < tracks->start[graft->donor + 1] && tracks->rank[next] == place)
+    if (*next > start && tracks->rank[*next - 1] >= place)
+        *next = start; /* round the end */
+    while (*next < end && tracks->rank[*next] < place)
+        ++*next;
+    if (*next < end && tracks->rank[*next] == place)
         return false;
-    return graft->chance >= 1 || random_uniform_at(graft->salt, RANDOM_FOLD, (uint32_t)round, next) < graft->chance;
+    return graft->chance >= 1 || random_uniform_at(graft->salt, RANDOM_FOLD, (uint32_t)round, *next) < graft->chance;
 }
 
 static uint64_t graft_count(const struct gapping *gapping, const struct graft *graft)
 {
     const struct tracks *tracks = gapping->tracks;
-    uint64_t count = 0;
+    uint64_t count = 0, next = tracks->start[graft->donor];
     for (uint64_t at = tracks->start[graft->sensor]; at < tracks->start[graft->sensor + 1]; at++)
-        count += gapping->keep[tracks->cell[at]] && is_grafted(tracks, graft, at);
+        count += gapping->keep[tracks->cell[at]] && is_grafted(tracks, graft, at, &next);
     return count;
 }
 
@@ -97,9 +102,10 @@ static void sensor_graft(struct gapping *gapping, struct graft *graft)
     double most = floor(loses_most * (double)(to - from)) - (double)gapping->lost[graft->sensor];
     uint64_t left = gapping->wanted - gapping->hidden, taken = 0, count = graft_count(gapping, graft);
     double room = fmin(most, 1.5 * (double)left);
+    uint64_t next = tracks->start[graft->donor];
     graft->chance = count > 0 ? fmax(0, room) / (double)count : 0;
     for (uint64_t at = from; at < to && (double)taken < most; at++)
-        if (gapping->keep[tracks->cell[at]] && is_grafted(tracks, graft, at)) {
+        if (gapping->keep[tracks->cell[at]] && is_grafted(tracks, graft, at, &next)) {
             cell_hide(gapping, graft->sensor, at);
             taken++;
         }
