@@ -46,15 +46,13 @@ struct levering {
     double *inverse, *room;
 };
 
-/* Cells whose regressors are added in one go. */
-enum { TOGETHER = 4 };
-/* Cells ahead of which factors are asked for. */
-enum { AHEAD = 16 };
+/* Cells whose regressors are set side by side. */
+enum { TOGETHER = 32 };
 
 /* What a worker has: eight systems side by side, their inverses, right sides that are not used; eight packed lines; one
-   system in rows of a multiple of eight. */
+   system in rows of a multiple of eight; regressors of cells, as they are and weighted. */
 struct levering_room {
-    double *system, *inverse, *side, *line, *square;
+    double *system, *inverse, *side, *line, *square, *regressor, *weighted;
 };
 
 static size_t line_size(size_t size)
@@ -65,7 +63,7 @@ static size_t line_size(size_t size)
 static size_t room_size(size_t size)
 {
     return 2 * batch_size(packed_size(size)) + batch_size(size) + BATCH_LANES * line_size(size) +
-           size * factor_stride(size);
+           (gram_rows(size) + 2 * TOGETHER) * factor_stride(size);
 }
 
 static struct levering_room room_carve(double *at, size_t size)
@@ -75,61 +73,49 @@ static struct levering_room room_carve(double *at, size_t size)
     room.side = room.inverse + batch_size(packed_size(size));
     room.line = room.side + batch_size(size);
     room.square = room.line + BATCH_LANES * line_size(size);
+    room.regressor = room.square + gram_rows(size) * factor_stride(size);
+    room.weighted = room.regressor + TOGETHER * factor_stride(size);
     return room;
 }
 
-/* Lower triangle of the components, rows up to a multiple of eight, += sum over four of weight g g'; the row of the
-   effect, behind them, += sum of weight g. */
-NUMERIC_VERSIONS
-static void factors_add(const double *const factor[TOGETHER], const double *weight, size_t rank, size_t stride,
-                        double *restrict square)
-{
-    const double *g0 = factor[0], *g1 = factor[1], *g2 = factor[2], *g3 = factor[3];
-    double *restrict last = square + rank * stride;
-    for (size_t k = 0; k < rank; k++) {
-        double *restrict row = square + k * stride;
-        double x0 = weight[0] * g0[k], x1 = weight[1] * g1[k], x2 = weight[2] * g2[k], x3 = weight[3] * g3[k];
-        for (size_t l = 0; l < (k + 8) / 8 * 8; l++)
-            row[l] += (x0 * g0[l] + x1 * g1[l]) + (x2 * g2[l] + x3 * g3[l]);
-        last[k] += (x0 + x1) + (x2 + x3);
-    }
-}
-
-/* The factors of cell c + AHEAD will be wanted. */
-static void factor_prefetch(const struct levering *levering, uint64_t c)
+/* The regressors of cells c .. and, where these have weights, the same times their weight. Factors of a stretch behind
+   them are asked for. */
+static void regressors_take(const struct levering *levering, uint64_t c, size_t count, const struct levering_room *room)
 {
     const struct half *half = levering->half;
-    if (c + AHEAD >= half->start[half->lines])
-        return;
-    const double *factor = levering->other.data + half->across[c + AHEAD] * levering->other.stride;
-    for (size_t k = 0; k + 1 < levering->size; k += 8)
-        __builtin_prefetch(factor + k);
+    size_t size = levering->size, stride = factor_stride(size);
+    uint64_t last = half->start[half->lines];
+    for (size_t t = 0; t < count; t++) {
+        double *to = room->regressor + t * stride;
+        const double *factor = levering->other.data + half->across[c + t] * levering->other.stride;
+        for (size_t k = 0; k + 1 < size; k += 8)
+            memcpy(to + k, factor + k, 8 * sizeof *to);
+        to[size - 1] = levering->has_effect ? 1 : 0;
+        for (size_t k = 0; half->weight != NULL && k < size; k++)
+            room->weighted[t * stride + k] = (double)half->weight[c + t] * to[k];
+        const double *ahead = levering->other.data;
+        if (c + t + TOGETHER < last)
+            ahead += half->across[c + t + TOGETHER] * levering->other.stride;
+        for (size_t k = 0; k + 1 < size; k += 8)
+            __builtin_prefetch(ahead + k);
+    }
 }
 
 /* The system of a line into room->square. */
 static void system_write(const struct levering *levering, uint32_t line, const struct levering_room *room)
 {
     const struct half *half = levering->half;
-    size_t size = levering->size, rank = size - 1, stride = factor_stride(size);
-    double *last = room->square + rank * stride, total = 0;
-    memset(room->square, 0, size * stride * sizeof *room->square);
+    size_t size = levering->size, stride = factor_stride(size);
+    memset(room->square, 0, gram_rows(size) * stride * sizeof *room->square);
     for (uint64_t c = half->start[line]; c < half->start[line + 1]; c += TOGETHER) {
-        const double *factor[TOGETHER];
-        double weight[TOGETHER] = {0};
-        for (size_t t = 0; t < TOGETHER; t++) {
-            bool is_there = c + t < half->start[line + 1];
-            factor[t] = levering->other.data + half->across[is_there ? c + t : c] * levering->other.stride;
-            weight[t] = !is_there ? 0 : half->weight != NULL ? (double)half->weight[c + t] : 1;
-            total += weight[t];
-            factor_prefetch(levering, c + t);
-        }
-        factors_add(factor, weight, rank, stride, room->square);
+        uint64_t left = half->start[line + 1] - c;
+        size_t count = left < TOGETHER ? (size_t)left : TOGETHER;
+        regressors_take(levering, c, count, room);
+        gram_add(levering->kernel, half->weight != NULL ? room->weighted : room->regressor, room->regressor, count,
+                 size, room->square);
     }
-    for (size_t k = 0; k < rank; k++) {
+    for (size_t k = 0; k < size; k++)
         room->square[k * stride + k] += levering->ridge[k];
-        last[k] = levering->has_effect ? last[k] : 0;
-    }
-    last[rank] = levering->ridge[rank] + (levering->has_effect ? total : 0);
 }
 
 /* The same, packed. */
@@ -243,16 +229,18 @@ done:
     return status;
 }
 
+enum { SUMS = 4 }; /* that do not wait for one another */
+
 /* g' A g for a packed symmetric A; the last regressor is `last`. */
 NUMERIC_VERSIONS
 static double form_value(const double *packed, const double *factor, size_t size, double last)
 {
     double sum = 0;
     for (size_t k = 0; k < size; k++) {
-        double at_k = k + 1 < size ? factor[k] : last, row[TOGETHER] = {0}, rest = 0;
+        double at_k = k + 1 < size ? factor[k] : last, row[SUMS] = {0}, rest = 0;
         size_t l = 0;
-        for (; l + TOGETHER <= k; l += TOGETHER)
-            for (size_t t = 0; t < TOGETHER; t++)
+        for (; l + SUMS <= k; l += SUMS)
+            for (size_t t = 0; t < SUMS; t++)
                 row[t] += packed[l + t] * factor[l + t];
         for (; l < k; l++)
             rest += packed[l] * factor[l];

@@ -21,6 +21,12 @@ unsigned packed_batch_solve(const struct batch_kernel *kernel, double *a, size_t
     return kernel->solve(a, k, b, inverse, DBL_EPSILON);
 }
 
+void gram_add(const struct batch_kernel *kernel, const double *left, const double *right, size_t count, size_t size,
+              double *square)
+{
+    kernel->gram(left, right, count, size, factor_stride(size), square);
+}
+
 void packed_batch_unpack(const struct batch_kernel *kernel, const double *batch, size_t size,
                          double *const line[BATCH_LANES])
 {

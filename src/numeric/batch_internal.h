@@ -34,6 +34,7 @@ struct batch_kernel {
        target. sum and target have room for whole blocks, target for two at least; one of them may be NULL. */
     void (*add_halves)(const uint64_t *data, const struct batch_stretch *stretch, size_t blocks, size_t mean,
                        double *sum, double *target);
+    void (*gram)(const double *left, const double *right, size_t count, size_t size, size_t stride, double *square);
     /* epsilon: of the arithmetic that A was summed up in */
     unsigned (*solve)(double *a, size_t k, double *b, double *inverse, double epsilon);
     void (*pack)(const double *lines, size_t stride, size_t size, double *batch);

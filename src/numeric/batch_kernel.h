@@ -197,6 +197,42 @@ static void halves_add(const uint64_t *data, const struct batch_stretch *stretch
         halves_sum(data, stretch, stretch->pull, target, NULL, (mean + BATCH_BLOCK - 1) / BATCH_BLOCK);
 }
 
+/* ---- products of rows ---------------------------------------------------------------------------------------------
+ */
+
+enum { GRAM_REGISTERS = 3 };
+
+/* square(0 .. 3, 0 .. registers*LANES - 1) += sum over rows of left(0 .. 3) right(0 .. registers*LANES - 1) */
+INLINE void gram_tile(const double *left, const double *right, size_t count, size_t stride, double *square,
+                      const size_t registers)
+{
+    vec sum[FOUR][GRAM_REGISTERS];
+    for (size_t t = 0; t < FOUR; t++)
+        for (size_t v = 0; v < registers; v++)
+            sum[t][v] = *(const vec *)(square + t * stride + v * LANES);
+    for (size_t c = 0; c < count; c++, left += stride, right += stride)
+        for (size_t t = 0; t < FOUR; t++)
+            for (size_t v = 0; v < registers; v++)
+                sum[t][v] = MADD(splat(left[t]), *(const vec *)(right + v * LANES), sum[t][v]);
+    for (size_t t = 0; t < FOUR; t++)
+        for (size_t v = 0; v < registers; v++)
+            *(vec *)(square + t * stride + v * LANES) = sum[t][v];
+}
+
+static void rows_gram(const double *left, const double *right, size_t count, size_t size, size_t stride, double *square)
+{
+    for (size_t row = 0; row < size; row += FOUR) {
+        double *to = square + row * stride;
+        size_t first = 0, registers = (row + FOUR + LANES - 1) / LANES;
+        for (; registers >= GRAM_REGISTERS; registers -= GRAM_REGISTERS, first += GRAM_REGISTERS * LANES)
+            gram_tile(left + row, right + first, count, stride, to + first, GRAM_REGISTERS);
+        if (registers == 2)
+            gram_tile(left + row, right + first, count, stride, to + first, 2);
+        else if (registers == 1)
+            gram_tile(left + row, right + first, count, stride, to + first, 1);
+    }
+}
+
 /* ---- systems ------------------------------------------------------------------------------------------------------
  */
 
@@ -405,4 +441,4 @@ static void lines_unpack(const double *batch, size_t size, double *const line[BA
         }
 }
 
-const struct batch_kernel BATCH_KERNEL = {stretch_add, halves_add, lanes_all, lines_pack, lines_unpack};
+const struct batch_kernel BATCH_KERNEL = {stretch_add, halves_add, rows_gram, lanes_all, lines_pack, lines_unpack};

@@ -159,6 +159,14 @@ static inline size_t batch_size(size_t numbers)
    packed, unless NULL. Returns a bit for each lane whose pivots broke down and whose results mean nothing: that one is
    to be done again by packed_cholesky, which lifts such matrices. */
 unsigned packed_batch_solve(const struct batch_kernel *kernel, double *a, size_t k, double *b, double *inverse);
+/* square += left'right of `count` rows each, the lower triangle of it; all rows are factor_stride(size) long. Above the
+   diagonal, right of `size` and below, up to gram_rows(size) rows, square holds nothing. */
+void gram_add(const struct batch_kernel *kernel, const double *left, const double *right, size_t count, size_t size,
+              double *square);
+static inline size_t gram_rows(size_t size)
+{
+    return (size + 3) / 4 * 4;
+}
 /* line[l][at] <- batch, `size` numbers each and up to the next multiple of 8. */
 void packed_batch_unpack(const struct batch_kernel *kernel, const double *batch, size_t size,
                          double *const line[BATCH_LANES]);

@@ -11,7 +11,7 @@
 #include <stdlib.h>
 #include <string.h>
 
-enum { LARGEST = 64, MOMENT_MOST = 1024 };
+enum { LARGEST = 64, ROWS_MOST = 33, MOMENT_MOST = 1024 };
 static const char *const kernels[] = {"portable", "avx2", "avx512"}; /* those the processor lacks are not taken */
 #define COUNT(array) (sizeof(array) / sizeof *(array))
 
@@ -224,6 +224,36 @@ static void a_line_that_lacks_a_heavy_position_keeps_its_digits(void **state)
                                                     .heaviest = 1e9});
 }
 
+/* Added to what is there, whatever the size leaves beside whole tiles. */
+static void products_of_rows_are_those_of_plain_loops(void **state)
+{
+    static double left[ROWS_MOST * LARGEST], right[ROWS_MOST * LARGEST], square[LARGEST * LARGEST];
+    struct random_stream stream = random_open(7, RANDOM_TEST, 0);
+    (void)state;
+    for (size_t k = 0; k < ROWS_MOST * LARGEST; k++) {
+        left[k] = draw(&stream);
+        right[k] = draw(&stream);
+    }
+    for (size_t n = 0; n < COUNT(kernels); n++) {
+        setenv("FESCUE_KERNEL", kernels[n], 1);
+        for (size_t size = 1; size <= LARGEST; size += size < 26 ? 1 : 19)
+            for (size_t count = 0; count <= ROWS_MOST; count += 11) {
+                size_t stride = factor_stride(size);
+                for (size_t k = 0; k < LARGEST * LARGEST; k++)
+                    square[k] = 2;
+                gram_add(batch_kernel_choose(), left, right, count, size, square);
+                for (size_t i = 0; i < size; i++)
+                    for (size_t j = 0; j <= i; j++) {
+                        double sum = 2;
+                        for (size_t c = 0; c < count; c++)
+                            sum += left[c * stride + i] * right[c * stride + j];
+                        assert_close(square[i * stride + j], sum, 1e-13 * (double)(count + 1));
+                    }
+            }
+    }
+    unsetenv("FESCUE_KERNEL");
+}
+
 /* A = G G' + 0.5 I, packed. */
 static void definite_draw(struct random_stream *stream, size_t k, double *a)
 {
@@ -366,6 +396,7 @@ int main(void)
         BENCH_TEST(sums_are_those_of_plain_loops),
         BENCH_TEST(sums_from_the_total_are_the_same),
         BENCH_TEST(a_line_that_lacks_a_heavy_position_keeps_its_digits),
+        cmocka_unit_test(products_of_rows_are_those_of_plain_loops),
         cmocka_unit_test(batches_are_solved_lane_by_lane),
         cmocka_unit_test(congruence_is_a_product_of_three),
         cmocka_unit_test(inverse_times_matrix_is_identity),
