@@ -384,10 +384,12 @@ static void trace_append(struct evidence *evidence, uint64_t round, double chang
 }
 
 /* By how much all rounds that are left would move the estimates, each by the share of the one before that the last one
-   had. The first change is that from the start, and is not always told. */
-static double change_left(const struct evidence_at *at)
+   had. The first change is that from the start, and says nothing of those to come unless the start comes from such
+   rounds itself; nor is it always told. */
+static double change_left(const struct evidence_request *request, const struct evidence_at *at)
 {
-    double share = at->round > 1 && isfinite(at->before) ? at->change / at->before : INFINITY;
+    bool is_told = at->round > (request->is_shrunk ? 1 : 2) && isfinite(at->before);
+    double share = is_told ? at->change / at->before : INFINITY;
     return share < 1 ? at->change * share / (1 - share) : INFINITY;
 }
 
@@ -398,7 +400,7 @@ static bool is_settled(const struct evidence *evidence, const struct evidence_re
     if (at->round < 2)
         return false;
     return at->change <= fmax(request->change, request->change_noise * deviation) ||
-           change_left(at) <= request->change_left * deviation ||
+           change_left(request, at) <= request->change_left * deviation ||
            (evidence->time != NULL && evidence_time_settled(evidence, at->change));
 }
 

@@ -217,6 +217,27 @@ static void equal_noise_has_no_spread(void **state)
     plot_free(&plot);
 }
 
+/* The rounds' own changes tell what is left of them: two, where the start comes from such rounds. */
+static void a_change_from_elsewhere_tells_nothing(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct sowing sowing = {150, 100, 3, 0.3, 0.5, FESCUE_DOUBLE, 8};
+    struct plot plot = plot_sow(context, &sowing, 0);
+    struct evidence_request request = request_of(3, FESCUE_OFFSETS_NONE);
+    struct evidence_result fit = learn(context, &plot.cells, &request), next;
+    request.noise_start = 2 * fit.noise * fit.noise;
+    request.change_left = 1e3;
+    for (int shrunk = 0; shrunk < 2; shrunk++) {
+        request.is_shrunk = shrunk == 1;
+        assert_status(context, evidence_fit(context, &plot.cells, &request, &fit.model, &next), FESCUE_OK);
+        assert_int_equal(next.fit.iterations, request.is_shrunk ? 2 : 3);
+        assert_int_equal(next.fit.stop, STOP_CHANGE);
+        evidence_result_free(context, &next);
+    }
+    evidence_result_free(context, &fit);
+    plot_free(&plot);
+}
+
 /* What rounds left would come to: the fit ends before the one that goes on, and as near to it as is said. */
 static void rounds_end_when_little_is_left(void **state)
 {
@@ -379,6 +400,7 @@ int main(void)
         BENCH_TEST(units_and_orientation_do_not_matter),
         BENCH_TEST(unequal_noise_is_learnt),
         BENCH_TEST(equal_noise_has_no_spread),
+        BENCH_TEST(a_change_from_elsewhere_tells_nothing),
         BENCH_TEST(rounds_end_when_little_is_left),
         BENCH_TEST(weights_of_cells_are_used),
         BENCH_TEST(same_bits_for_any_number_of_workers),
