@@ -199,7 +199,12 @@ done:
 
 fescue_status cells_weigh(fescue_context *context, struct cells *cells, const double *weight)
 {
-    fescue_status status;
+    fescue_status status = FESCUE_OK;
+    if (weight == NULL) {
+        GIVE(context, &cells->by_row.weight);
+        GIVE(context, &cells->by_column.weight);
+        return FESCUE_OK;
+    }
     TRY(weights_open(context, cells));
     for (uint64_t k = 0; k < cells->count; k++)
         cells->by_row.weight[k] = (float)weight[k];

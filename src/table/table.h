@@ -65,7 +65,8 @@ fescue_status cells_select(fescue_context *context, const struct cells *from, co
 struct cells cells_share(const struct cells *from);
 /* New store that shares `from`'s pattern (which must outlive it) and has values of its own, zeroed. */
 fescue_status cells_alike(fescue_context *context, const struct cells *from, struct cells *cells);
-/* Gives every cell its weight, in row order, positive and finite; those it has are replaced. */
+/* Gives every cell its weight, in row order, positive and finite; those it has are replaced. With NULL they have none.
+ */
 fescue_status cells_weigh(fescue_context *context, struct cells *cells, const double *weight);
 void cells_free(fescue_context *context, struct cells *cells);
 /* The first cell of the line whose position is not before `position`; the line's end when there is none. */

@@ -3,7 +3,9 @@
  * Weights: how precise each cell is relative to the others. A cell of weight w counts as w cells of weight one: its
  * noise variance is the table's over w. They come from a fourth field of long text and from files of rows and columns;
  * what a cell has is the product, scaled so that the mean over the seen cells is one, and kept in single precision
- * (nobody knows a precision to more than seven digits). A standard deviation is the weight 1/sd^2.
+ * (nobody knows a precision to more than seven digits). A standard deviation is the weight 1/sd^2. Where all cells
+ * weigh the same, there is nothing to know, and the cells have none: what is made of them is to the bit what it is
+ * without.
  *
  * Weights lie within 1e-12 .. 1e12 when they are read, so that no product of three leaves double precision.
  */
@@ -79,7 +81,7 @@ fescue_status weights_set(fescue_table *table, double *weight)
     }
     table->weights.least = least;
     table->weights.most = most;
-    return cells_weigh(table->context, &table->cells, weight);
+    return cells_weigh(table->context, &table->cells, least < most ? weight : NULL);
 }
 
 /* A store of the weights with the pattern of the table; merged cells have their mean, or that of the cell taken. */

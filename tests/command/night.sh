@@ -151,7 +151,7 @@ check "nothing of the stopped one is there" test ! -e large/table-filled/run.jso
 cat >dead.ini <<'PLAN'
 [large]
 input = large/table.mtx
-deadline = 1
+deadline = 0.1
 PLAN
 try 0 night dead.ini
 check "a deadline ends the fits" told 'the time limit ended it before it was done'

@@ -59,8 +59,8 @@ static void merged_cells_have_a_weight(void **state)
     struct bench *bench = bench_of(state);
     const struct table_reading mean = {.duplicates = FESCUE_DUPLICATES_MEAN},
                                last = {.duplicates = FESCUE_DUPLICATES_LAST};
-    fescue_table *table = text_read(bench, "a,x,1,1\nb,x,1,2\na,x,2,3\n", &mean);
-    weights_are(&table->cells, (const double[]){1, 1});
+    fescue_table *table = text_read(bench, "a,x,1,1\nb,x,1,1\na,x,2,3\n", &mean);
+    weights_are(&table->cells, (const double[]){4 / 3.0, 2 / 3.0});
     table_destroy(&table);
     table = text_read(bench, "a,x,1,1\nb,x,1,1\na,x,2,3\n", &last);
     weights_are(&table->cells, (const double[]){1.5, 0.5});
@@ -137,6 +137,24 @@ static void an_array_of_the_matrix_market(void **state)
         weights_are(&table->cells, (const double[]){6 / 7.0, 12 / 7.0, 3 / 7.0});
         table_destroy(&table);
     }
+}
+
+static void weights_that_are_alike_are_none(void **state)
+{
+    struct bench *bench = bench_of(state);
+    fescue_table *table = text_read(bench, "r,c,v,weight\na,x,1,3\nb,x,2,3\na,y,3,3\n", NULL);
+    assert_null(table->cells.by_row.weight);
+    assert_null(table->cells.by_column.weight);
+    assert_true(table->weights.of_cells);
+    assert_close(table->weights.least, 1, 0);
+    assert_close(table->weights.most, 1, 0);
+    table_destroy(&table);
+    table = text_read(bench, "r,c,v,weight\na,x,1,1\nb,x,2,2\na,y,3,1\n", NULL);
+    weights_are(&table->cells, (const double[]){0.75, 0.75, 1.5});
+    assert_status(bench->context, weigh(bench, table, "a,4\nb,2\n", NULL), FESCUE_OK); /* times those of the cells */
+    assert_null(table->cells.by_row.weight);
+    assert_null(table->cells.by_column.weight);
+    table_destroy(&table);
 }
 
 static void files_of_weights_that_are_refused(void **state)
@@ -249,15 +267,11 @@ static void faults_leak_nothing(void **state)
 int main(void)
 {
     const struct CMUnitTest tests[] = {
-        BENCH_TEST(a_fourth_field_is_a_weight),
-        BENCH_TEST(a_header_says_what_it_is),
-        BENCH_TEST(merged_cells_have_a_weight),
-        BENCH_TEST(weights_in_long_text_that_are_refused),
-        BENCH_TEST(rows_and_columns_multiply),
-        BENCH_TEST(an_array_of_the_matrix_market),
-        BENCH_TEST(files_of_weights_that_are_refused),
-        BENCH_TEST(a_part_keeps_its_weights),
-        BENCH_TEST(faults_leak_nothing),
+        BENCH_TEST(a_fourth_field_is_a_weight),      BENCH_TEST(a_header_says_what_it_is),
+        BENCH_TEST(merged_cells_have_a_weight),      BENCH_TEST(weights_in_long_text_that_are_refused),
+        BENCH_TEST(rows_and_columns_multiply),       BENCH_TEST(an_array_of_the_matrix_market),
+        BENCH_TEST(weights_that_are_alike_are_none), BENCH_TEST(files_of_weights_that_are_refused),
+        BENCH_TEST(a_part_keeps_its_weights),        BENCH_TEST(faults_leak_nothing),
     };
     return cmocka_run_group_tests_name("weights", tests, NULL, NULL);
 }
