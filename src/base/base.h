@@ -160,6 +160,9 @@ fescue_status output_sweep(fescue_context *context, const char *directory);
 /* Appending to one file. Failures are sticky: after one, further calls do nothing and outfile_status tells; publish
    fails too. So a writer may check once, at its end. */
 void outfile_write(struct outfile *file, const void *bytes, size_t count);
+/* A buffer of so many bytes at least, before anything is written: the system then gets the file in pieces that begin
+   at multiples of it. */
+fescue_status outfile_widen(struct outfile *file, size_t size);
 void outfile_text(struct outfile *file, const char *text);
 void outfile_format(struct outfile *file, const char *format, ...) __attribute__((format(printf, 2, 3)));
 /* The shortest decimal that reads back as the same double (or float); "nan" for a hole; never depends on the locale. */

@@ -28,11 +28,15 @@ static int64_t posix_size(int descriptor)
     return fstat(descriptor, &about) == 0 && S_ISREG(about.st_mode) ? about.st_size : -1;
 }
 
-/* Pages come as they are looked at, by all workers. */
+/* Pages come as they are looked at, by all workers; large ones, where the file is not in memory yet and the system has
+   them. */
 static void *posix_map(int descriptor, size_t size)
 {
     void *bytes = mmap(NULL, size, PROT_READ, MAP_PRIVATE, descriptor, 0);
-    return bytes != MAP_FAILED ? bytes : NULL;
+    if (bytes == MAP_FAILED)
+        return NULL;
+    (void)madvise(bytes, size, MADV_HUGEPAGE); /* a wish: it may be refused */
+    return bytes;
 }
 
 static int posix_rest(void *bytes, size_t size)

@@ -135,6 +135,15 @@ static void outfile_flush(struct outfile *file)
     file->used = 0;
 }
 
+fescue_status outfile_widen(struct outfile *file, size_t size)
+{
+    if (file->status == FESCUE_OK && size > file->size)
+        file->status = RESIZE(file->context, size, &file->buffer);
+    if (file->status == FESCUE_OK && size > file->size)
+        file->size = size;
+    return file->status;
+}
+
 fescue_status outfile_finish(struct outfile *file)
 {
     outfile_flush(file);
@@ -162,19 +171,32 @@ fescue_status outfile_status(const struct outfile *file)
     return file->status;
 }
 
+/* Puts are whole buffers, so that they begin at multiples of its size; those that come whole need not go through it. */
+static void buffers_put(struct outfile *file, const char *bytes, size_t count)
+{
+    while (count > 0 && file->status == FESCUE_OK) {
+        size_t room = file->size - file->used, step = count < room ? count : room;
+        if (file->used == 0 && count >= file->size) {
+            step = count / file->size * file->size;
+            outfile_put(file, bytes, step);
+        } else {
+            memcpy(file->buffer + file->used, bytes, step);
+            file->used += step;
+            if (file->used == file->size)
+                outfile_flush(file);
+        }
+        bytes += step;
+        count -= step;
+    }
+}
+
 void outfile_write(struct outfile *file, const void *bytes, size_t count)
 {
     if (file->status != FESCUE_OK || count == 0)
         return;
-    if (count > file->size - file->used) {
-        if (!file->grows)
-            outfile_flush(file);
-        else if (!sink_grow(file, count))
-            return;
-    }
-    if (count > file->size) {
-        outfile_put(file, bytes, count);
-    } else {
+    if (!file->grows) {
+        buffers_put(file, bytes, count);
+    } else if (count <= file->size - file->used || sink_grow(file, count)) {
         memcpy(file->buffer + file->used, bytes, count);
         file->used += count;
     }

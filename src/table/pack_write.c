@@ -21,6 +21,10 @@ struct packer {
     uint64_t written;       /* bytes of the file */
 };
 
+/* A file that is written in such pieces lies in the system's memory as pages of that size, each of which is mapped at
+   once; small ones are mapped one by one when the pack is read, which takes several times longer than its check. */
+enum { LARGE_PAGE = 1 << 21 };
+
 /* ---- bytes ------------------------------------------------------------------------------------------------------ */
 
 static void block_sum(struct packer *packer)
@@ -226,6 +230,7 @@ fescue_status table_pack(const fescue_table *table, const char *path)
     TRY(TAKE(context, packer.places.blocks, &packer.sums));
     TRY(progress_tell(context, "packing", -1));
     TRY(place_open(context, path, &packer));
+    TRY(outfile_widen(packer.file, LARGE_PAGE));
     file_write(&packer);
     TRY(outfile_status(packer.file));
     TRY(output_publish(&packer.output));
