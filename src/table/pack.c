@@ -2,7 +2,7 @@
  *
  * What writing and reading a pack share: where its parts lie, and the sum over its bytes.
  *
- * The sum. Words of 64 bits go in turn to eight lanes h, so that eight products are on their way at once:
+ * The sum. Words of 64 bits go in turn to 32 lanes h, so that as many products are on their way at once:
  *
  *     h <- (h xor w) K;   h <- h xor h >> 32          K odd
  *
@@ -37,7 +37,7 @@ bool pack_places_find(const struct pack_header *header, struct pack_places *plac
            places->file_bytes <= SIZE_MAX;
 }
 
-enum { LANES = 8, STRIDE = LANES * sizeof(uint64_t) };
+enum { LANES = 32, STRIDE = LANES * sizeof(uint64_t) };
 
 static const uint64_t multiplier =
     0x9e3779b97f4a7c15; /* 2^64 over the golden ratio, made odd: its bits have no pattern */
@@ -48,39 +48,42 @@ static inline uint64_t mixed(uint64_t h, uint64_t word)
     return h ^ h >> 32;
 }
 
-static inline void lanes_add(uint64_t h[LANES], const unsigned char *bytes)
+/* Eight lanes at a time, as many as registers hold, through so few bytes that the cache has them for the others. */
+static void strides_add(uint64_t h[LANES], const unsigned char *bytes, size_t count)
 {
-    for (int lane = 0; lane < LANES; lane++) {
-        uint64_t word;
-        memcpy(&word, bytes + (size_t)lane * sizeof word, sizeof word);
-        h[lane] = mixed(h[lane], word);
+    enum { TOGETHER = 8, NEAR = 16 * STRIDE };
+    for (size_t near = 0; near < count; near += NEAR) {
+        const size_t end = count - near < NEAR ? count : near + NEAR;
+        for (size_t first = 0; first < LANES; first += TOGETHER) {
+            uint64_t few[TOGETHER], word[TOGETHER];
+            memcpy(few, h + first, sizeof few);
+            for (size_t k = near; k < end; k += STRIDE) {
+                memcpy(word, bytes + k + first * sizeof *h, sizeof word);
+                for (size_t lane = 0; lane < TOGETHER; lane++)
+                    few[lane] = mixed(few[lane], word[lane]);
+            }
+            memcpy(h + first, few, sizeof few);
+        }
     }
 }
 
-__attribute__((always_inline)) static inline void strides_add(uint64_t lanes[LANES], const unsigned char *bytes,
-                                                              size_t count)
-{
-    uint64_t h[LANES];
-    memcpy(h, lanes, sizeof h);
-    for (size_t k = 0; k < count; k += STRIDE)
-        lanes_add(h, bytes + k);
-    memcpy(lanes, h, sizeof h);
-}
-
-/* The same for the compiler to make with vectors: the lanes are one. */
+/* The same for the compiler to make with vectors. */
 #if defined(__x86_64__)
 __attribute__((target("avx512f,avx512dq"))) static void strides_add_wide(uint64_t lanes[LANES],
                                                                          const unsigned char *bytes, size_t count)
 {
-    typedef uint64_t wide __attribute__((vector_size(STRIDE)));
-    wide h, word;
-    memcpy(&h, lanes, sizeof h);
+    typedef uint64_t wide __attribute__((vector_size(64)));
+    enum { VECTORS = STRIDE / sizeof(wide) };
+    wide h[VECTORS], word[VECTORS];
+    memcpy(h, lanes, sizeof h);
     for (size_t k = 0; k < count; k += STRIDE) {
-        memcpy(&word, bytes + k, sizeof word);
-        h = (h ^ word) * multiplier;
-        h ^= h >> 32;
+        memcpy(word, bytes + k, sizeof word);
+        for (size_t v = 0; v < VECTORS; v++) {
+            h[v] = (h[v] ^ word[v]) * multiplier;
+            h[v] ^= h[v] >> 32;
+        }
     }
-    memcpy(lanes, &h, sizeof h);
+    memcpy(lanes, h, sizeof h);
 }
 #else
 static void strides_add_wide(uint64_t lanes[LANES], const unsigned char *bytes, size_t count)
@@ -103,7 +106,7 @@ uint64_t pack_sum(const void *bytes, size_t count, enum vectors vectors)
     if (rest > 0) {
         unsigned char last[STRIDE] = {0};
         memcpy(last, at + count - rest, rest);
-        lanes_add(h, last);
+        strides_add(h, last, STRIDE);
     }
     uint64_t sum = mixed(0, count);
     for (int lane = 0; lane < LANES; lane++)

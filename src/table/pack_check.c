@@ -17,32 +17,42 @@
 #include <stdatomic.h>
 #include <string.h>
 
-/* Of each direction: pieces so small that a cache holds one while it is told of and looked at; and runs of them for one
-   worker, since what is told of a piece brings much of the next ones into its cache. */
-enum { PIECES = 256, PIECES_A_RUN = 4, RUNS = PIECES / PIECES_A_RUN };
+/* A direction is looked at in pieces of about so many cells: a cache holds one while it is told of and looked at. */
+enum { PIECE = 1 << 15 };
 
 struct check {
     const struct cells *cells;
     const struct pack_watch *watch;
     enum vectors vectors;
     struct pack_key key;
+    uint64_t pieces; /* of each direction */
     _Atomic uint64_t sum[2];
-    _Atomic unsigned faults; /* bits by enum fault */
+    _Atomic bool is_faulty; /* in positions or values */
 };
 
-enum fault { FAULT_OFFSETS, FAULT_POSITIONS, FAULT_DIFFERENCE, FAULTS };
-static const char *const fault_texts[FAULTS] = {
-    [FAULT_OFFSETS] = "its offsets are out of order",
-    [FAULT_POSITIONS] = "it has positions out of order or outside, or values that are not finite",
-    [FAULT_DIFFERENCE] = "its rows and its columns hold different cells",
-};
-
-static void fault_set(struct check *check, enum fault fault)
+static bool offsets_are_sound(const struct half *half, uint64_t count)
 {
-    atomic_fetch_or(&check->faults, 1u << fault);
+    bool falls = half->start[0] != 0 || half->start[half->lines] != count;
+    for (uint32_t i = 0; i < half->lines; i++)
+        falls |= half->start[i] > half->start[i + 1];
+    return !falls;
 }
 
-/* A half's first and last offsets are right, and those of the lines ascend: so their cells are inside. */
+/* The line where a piece begins: the first that begins with its first cell or behind it. */
+static uint32_t piece_line(const struct check *check, const struct half *half, uint64_t piece)
+{
+    const uint64_t cell = check->cells->count * piece / check->pieces;
+    uint32_t low = 0, high = half->lines;
+    while (low < high) {
+        uint32_t middle = low + (high - low) / 2;
+        if (half->start[middle] < cell)
+            low = middle + 1;
+        else
+            high = middle;
+    }
+    return low;
+}
+
 static void lines_tell(const struct check *check, const struct pack_lines *lines)
 {
     const struct half *half = lines->half;
@@ -55,33 +65,26 @@ static void lines_tell(const struct check *check, const struct pack_lines *lines
                        (const char *)half->value + to * size);
 }
 
-static void piece_check(struct check *check, bool is_column, uint64_t piece)
+static void piece_check(void *job, size_t task, size_t worker)
 {
+    struct check *check = job;
+    const bool is_column = task >= check->pieces;
+    const uint64_t piece = is_column ? task - check->pieces : task;
     const struct half *half = is_column ? &check->cells->by_column : &check->cells->by_row;
     const struct pack_lines lines = {
         .half = half,
         .precision = check->cells->precision,
         .is_column = is_column,
-        .first = (uint32_t)(half->lines * piece / PIECES),
-        .end = (uint32_t)(half->lines * (piece + 1) / PIECES),
+        .first = piece_line(check, half, piece),
+        .end = piece_line(check, half, piece + 1),
         .key = &check->key,
     };
     uint64_t sum;
-    if (!pack_offsets_ascend(&lines) || half->start[lines.end] > check->cells->count) {
-        fault_set(check, FAULT_OFFSETS);
-        return;
-    }
+    (void)worker;
     lines_tell(check, &lines);
     if (!pack_lines_look(&lines, check->vectors, &sum))
-        fault_set(check, FAULT_POSITIONS);
+        atomic_store(&check->is_faulty, true);
     atomic_fetch_add(&check->sum[is_column], sum);
-}
-
-static void run_check(void *job, size_t run, size_t worker)
-{
-    (void)worker;
-    for (uint64_t k = 0; k < PIECES_A_RUN; k++)
-        piece_check(job, run >= RUNS, run % RUNS * PIECES_A_RUN + k);
 }
 
 /* By a seed that whoever made the file cannot know: where we lie, and when. */
@@ -99,15 +102,15 @@ static void key_draw(struct check *check)
 const char *pack_check_cells(fescue_context *context, const struct cells *cells, const struct pack_watch *watch,
                              enum vectors vectors)
 {
-    struct check check = {.cells = cells, .watch = watch, .vectors = vectors};
-    const struct half *rows = &cells->by_row, *columns = &cells->by_column;
-    if (rows->start[0] != 0 || rows->start[rows->lines] != cells->count || columns->start[0] != 0 ||
-        columns->start[columns->lines] != cells->count)
-        return fault_texts[FAULT_OFFSETS];
+    struct check check = {
+        .cells = cells, .watch = watch, .vectors = vectors, .pieces = (cells->count + PIECE - 1) / PIECE};
+    if (!offsets_are_sound(&cells->by_row, cells->count) || !offsets_are_sound(&cells->by_column, cells->count))
+        return "its offsets are out of order";
     key_draw(&check);
-    team_run(context, 2 * (size_t)RUNS, run_check, &check);
-    unsigned faults = atomic_load(&check.faults);
-    if (faults == 0 && check.sum[0] != check.sum[1])
-        faults = 1u << FAULT_DIFFERENCE;
-    return faults == 0 ? NULL : fault_texts[__builtin_ctz(faults)];
+    team_run(context, 2 * (size_t)check.pieces, piece_check, &check);
+    if (atomic_load(&check.is_faulty))
+        return "it has positions out of order or outside, or values that are not finite";
+    if (check.sum[0] != check.sum[1])
+        return "its rows and its columns hold different cells";
+    return NULL;
 }

@@ -20,10 +20,10 @@
 #include "table/table_internal.h"
 
 enum {
-    PACK_VERSION = 1,
+    PACK_VERSION = 2,
     PACK_HEADER = 512,
     PACK_ALIGNMENT = 64, /* a cache line, and more than any number needs */
-    PACK_BLOCK = 1 << 20 /* of one sum: enough of them to share out, few beside the data */
+    PACK_BLOCK = 1 << 16 /* of one sum: some fit a cache together, and the sums are few beside the data */
 };
 static const uint32_t pack_byte_order = 0x0a0b0c0d;
 
@@ -81,7 +81,6 @@ struct pack_lines {
     uint32_t first, end;
     const struct pack_key *key;
 };
-bool pack_offsets_ascend(const struct pack_lines *lines);
 /* Whether positions ascend and lie inside, and values are finite; *sum then is what the lines add to the sum of their
    direction. Offsets ascend and lie inside. */
 bool pack_lines_look(const struct pack_lines *lines, enum vectors vectors, uint64_t *sum);

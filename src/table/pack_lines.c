@@ -23,15 +23,6 @@
 static const uint32_t single_exponent = 0x7f800000;
 static const uint64_t double_exponent = 0x7ff0000000000000;
 
-bool pack_offsets_ascend(const struct pack_lines *lines)
-{
-    const uint64_t *start = lines->half->start;
-    bool falls = false;
-    for (uint32_t i = lines->first; i < lines->end; i++)
-        falls |= start[i] > start[i + 1];
-    return !falls;
-}
-
 /* ---- cell by cell ----------------------------------------------------------------------------------------------- */
 
 static inline uint64_t cell_mixed(const struct pack_key *key, uint64_t bits, uint64_t place)

@@ -490,7 +490,7 @@ static void strangers_are_told(void **state)
     other.version = 7;
     memcpy(copy, &other, sizeof other);
     bytes_refused(bench, copy, count, NULL,
-                  "the pack has version 7, this program reads version 1; pack the table again");
+                  "the pack has version 7, this program reads version 2; pack the table again");
     bytes_refused(bench, bytes, 300, NULL, "the pack is truncated after 300 bytes");
     snprintf(sentence, sizeof sentence,
              "the pack has %zu bytes, its header tells of %zu: it is truncated or something follows", count - 1, count);
