@@ -10,6 +10,7 @@
  *     inflate   zlib over the gzipped file, from the page cache into one buffer
  *     read      read(2) of a file, from the page cache into one buffer
  *     copy      memcpy of memory that no cache holds
+ *     scan      a pack mapped anew and its words added up: what using it where it lies costs at least
  *     sort      both compressed orders from rows, columns and values in memory
  * Then each form is loaded with 1 and with 2 workers, both orders built. Everything is run once a round, several
  * rounds; what is compared stands side by side in a round, a ratio is that of one round, and medians count, so that a
@@ -259,6 +260,8 @@ static void inflate_measure(struct loading *loading)
     close(file);
 }
 
+static volatile uint64_t scanned; /* so that the compiler has to */
+
 static void read_measure(struct loading *loading, enum form form, const char *name)
 {
     static char buffer[BUFFER];
@@ -274,6 +277,29 @@ static void read_measure(struct loading *loading, enum form form, const char *na
     while (read(file, buffer, sizeof buffer) > 0)
         ;
     clocks_stop(loading, start, name);
+    close(file);
+}
+
+/* What mapping costs at least: a pack's words added up, out of pages that are looked at for the first time. */
+static void scan_measure(struct loading *loading)
+{
+    char path[PATH_SIZE];
+    struct stat about;
+    int file = open(path_of(loading, FORM_PACK, path), O_RDONLY);
+    if (file < 0 || fstat(file, &about) != 0)
+        fail(path);
+    struct clocks start = clocks_start();
+    size_t size = (size_t)about.st_size;
+    uint64_t *words = mmap(NULL, size, PROT_READ, MAP_PRIVATE, file, 0);
+    if (words == MAP_FAILED)
+        fail(path);
+    madvise(words, size, MADV_HUGEPAGE);
+    uint64_t sum = 0;
+    for (size_t k = 0; k < size / sizeof *words; k++)
+        sum += words[k];
+    scanned = sum;
+    clocks_stop(loading, start, "map and scan pack");
+    munmap(words, size);
     close(file);
 }
 
@@ -442,6 +468,7 @@ static void round_run(struct loading *loading)
     sort_measure(loading, 2);
     load_measure(loading, FORM_TEXT, 2);
     read_measure(loading, FORM_PACK, "read pack");
+    scan_measure(loading);
     load_measure(loading, FORM_PACK, 1);
     load_measure(loading, FORM_PACK, 2);
     load_measure(loading, FORM_LONG, 1);
