@@ -45,6 +45,8 @@ fescue_status failure_record(fescue_context *context, fescue_status status, cons
 
 /* ---- memory --------------------------------------------------------------------------------------------------- */
 
+enum { MEMORY_LARGE_PAGE = 1 << 21 }; /* bytes of the larger kind of page, where the system has them */
+
 /* *out (the address of a pointer of any object type) becomes a new zeroed block of count * size bytes, aligned to 64;
    a size of 0 gives NULL and FESCUE_OK. FESCUE_NO_MEMORY when the product overflows, the memory limit would be passed
    or the system refuses; *out is then NULL. The caller owns the block. Safe from any worker. */

@@ -59,10 +59,10 @@ static void *pointer_load(const void *place)
  */
 static void pages_enlarge(void *taken, size_t size)
 {
-    enum { LARGE_PAGE = 1 << 21, LEAST_PAGES = 4 };
-    uintptr_t first = ((uintptr_t)taken + LARGE_PAGE - 1) & ~(uintptr_t)(LARGE_PAGE - 1);
-    uintptr_t end = ((uintptr_t)taken + size) & ~(uintptr_t)(LARGE_PAGE - 1);
-    if (size >= LEAST_PAGES * (size_t)LARGE_PAGE)
+    enum { LEAST_PAGES = 4 };
+    uintptr_t first = ((uintptr_t)taken + MEMORY_LARGE_PAGE - 1) & ~(uintptr_t)(MEMORY_LARGE_PAGE - 1);
+    uintptr_t end = ((uintptr_t)taken + size) & ~(uintptr_t)(MEMORY_LARGE_PAGE - 1);
+    if (size >= LEAST_PAGES * (size_t)MEMORY_LARGE_PAGE)
         (void)madvise((void *)first, end - first, MADV_HUGEPAGE); /* a wish: it may be refused */
 }
 

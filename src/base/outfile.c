@@ -137,9 +137,10 @@ static void outfile_flush(struct outfile *file)
 
 fescue_status outfile_widen(struct outfile *file, size_t size)
 {
-    if (file->status == FESCUE_OK && size > file->size)
-        file->status = RESIZE(file->context, size, &file->buffer);
-    if (file->status == FESCUE_OK && size > file->size)
+    if (file->status != FESCUE_OK || size <= file->size)
+        return file->status;
+    file->status = RESIZE(file->context, size, &file->buffer);
+    if (file->status == FESCUE_OK)
         file->size = size;
     return file->status;
 }

@@ -94,8 +94,7 @@ fescue_status half_find_twice(fescue_context *context, const struct half *half, 
     return FESCUE_OK;
 }
 
-/* The first line from which on at least `work` lies behind: work before line i is start[i] + i, which ascends. */
-static uint32_t line_at_work(const struct half *half, uint64_t work)
+uint32_t half_line_at_work(const struct half *half, uint64_t work)
 {
     uint32_t low = 0, high = half->lines;
     while (low < high) {
@@ -120,7 +119,7 @@ fescue_status half_cut(fescue_context *context, struct half *half)
     half->blocks = 0;
     for (uint64_t b = 1; b <= blocks; b++) {
         /* Both factors of b * work / blocks fit: blocks is at most 2^8, work below 2^56 for any memory there is. */
-        uint32_t end = b == blocks ? half->lines : line_at_work(half, b * work / blocks);
+        uint32_t end = b == blocks ? half->lines : half_line_at_work(half, b * work / blocks);
         if (end > half->block[half->blocks]) /* a line longer than a block leaves the next ones empty: left out */
             half->block[++half->blocks] = end;
     }

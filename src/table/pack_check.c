@@ -17,7 +17,8 @@
 #include <stdatomic.h>
 #include <string.h>
 
-/* A direction is looked at in pieces of about so many cells: a cache holds one while it is told of and looked at. */
+/* A direction is looked at in pieces of about so many cells and lines: a cache holds one while it is told of and looked
+   at. */
 enum { PIECE = 1 << 15 };
 
 struct check {
@@ -25,7 +26,7 @@ struct check {
     const struct pack_watch *watch;
     enum vectors vectors;
     struct pack_key key;
-    uint64_t pieces; /* of each direction */
+    uint64_t row_pieces; /* those of the columns follow */
     _Atomic uint64_t sum[2];
     _Atomic bool is_faulty; /* in positions or values */
 };
@@ -38,19 +39,9 @@ static bool offsets_are_sound(const struct half *half, uint64_t count)
     return !falls;
 }
 
-/* The line where a piece begins: the first that begins with its first cell or behind it. */
-static uint32_t piece_line(const struct check *check, const struct half *half, uint64_t piece)
+static uint64_t pieces_of(const struct half *half)
 {
-    const uint64_t cell = check->cells->count * piece / check->pieces;
-    uint32_t low = 0, high = half->lines;
-    while (low < high) {
-        uint32_t middle = low + (high - low) / 2;
-        if (half->start[middle] < cell)
-            low = middle + 1;
-        else
-            high = middle;
-    }
-    return low;
+    return (half->start[half->lines] + half->lines) / PIECE + 1;
 }
 
 static void lines_tell(const struct check *check, const struct pack_lines *lines)
@@ -68,15 +59,15 @@ static void lines_tell(const struct check *check, const struct pack_lines *lines
 static void piece_check(void *job, size_t task, size_t worker)
 {
     struct check *check = job;
-    const bool is_column = task >= check->pieces;
-    const uint64_t piece = is_column ? task - check->pieces : task;
+    const bool is_column = task >= check->row_pieces;
+    const uint64_t piece = is_column ? task - check->row_pieces : task;
     const struct half *half = is_column ? &check->cells->by_column : &check->cells->by_row;
     const struct pack_lines lines = {
         .half = half,
         .precision = check->cells->precision,
         .is_column = is_column,
-        .first = piece_line(check, half, piece),
-        .end = piece_line(check, half, piece + 1),
+        .first = half_line_at_work(half, piece * PIECE),
+        .end = half_line_at_work(half, (piece + 1) * PIECE),
         .key = &check->key,
     };
     uint64_t sum;
@@ -102,12 +93,12 @@ static void key_draw(struct check *check)
 const char *pack_check_cells(fescue_context *context, const struct cells *cells, const struct pack_watch *watch,
                              enum vectors vectors)
 {
-    struct check check = {
-        .cells = cells, .watch = watch, .vectors = vectors, .pieces = (cells->count + PIECE - 1) / PIECE};
+    struct check check = {.cells = cells, .watch = watch, .vectors = vectors};
     if (!offsets_are_sound(&cells->by_row, cells->count) || !offsets_are_sound(&cells->by_column, cells->count))
         return "its offsets are out of order";
     key_draw(&check);
-    team_run(context, 2 * (size_t)check.pieces, piece_check, &check);
+    check.row_pieces = pieces_of(&cells->by_row);
+    team_run(context, (size_t)(check.row_pieces + pieces_of(&cells->by_column)), piece_check, &check);
     if (atomic_load(&check.is_faulty))
         return "it has positions out of order or outside, or values that are not finite";
     if (check.sum[0] != check.sum[1])

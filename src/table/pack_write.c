@@ -2,6 +2,10 @@
  *
  * A table into a packed file (pack_internal.h), which appears whole under its name or not at all. One pass: bytes are
  * summed on their way to the file, and the sums are written behind them.
+ *
+ * The file is written in pieces of a large page: the system then keeps it in pages of that size, each of which is
+ * mapped at once. Small ones are mapped one by one when the pack is read, which takes several times longer than its
+ * check.
  */
 #include "table/pack_internal.h"
 
@@ -20,10 +24,6 @@ struct packer {
     uint64_t *sums, summed; /* so many are known */
     uint64_t written;       /* bytes of the file */
 };
-
-/* A file that is written in such pieces lies in the system's memory as pages of that size, each of which is mapped at
-   once; small ones are mapped one by one when the pack is read, which takes several times longer than its check. */
-enum { LARGE_PAGE = 1 << 21 };
 
 /* ---- bytes ------------------------------------------------------------------------------------------------------ */
 
@@ -230,7 +230,7 @@ fescue_status table_pack(const fescue_table *table, const char *path)
     TRY(TAKE(context, packer.places.blocks, &packer.sums));
     TRY(progress_tell(context, "packing", -1));
     TRY(place_open(context, path, &packer));
-    TRY(outfile_widen(packer.file, LARGE_PAGE));
+    TRY(outfile_widen(packer.file, MEMORY_LARGE_PAGE));
     file_write(&packer);
     TRY(outfile_status(packer.file));
     TRY(output_publish(&packer.output));

@@ -88,6 +88,9 @@ bool half_is_ascending(fescue_context *context, const struct half *half);
 /* Looks for two cells at the same place, in lines of any order: *twice, and where. O(cells + lines). */
 fescue_status half_find_twice(fescue_context *context, const struct half *half, bool *twice, uint32_t *line,
                               uint32_t *across);
+/* The first line from which on at least `work` lies behind, or `lines`: work before line i is start[i] + i, which
+   ascends. */
+uint32_t half_line_at_work(const struct half *half, uint64_t work);
 /* Cuts the lines into blocks of roughly equal work. */
 fescue_status half_cut(fescue_context *context, struct half *half);
 void half_free(fescue_context *context, struct half *half);

@@ -196,9 +196,9 @@ static void files_make(const struct loading *loading)
 /* Uses as much memory as any load takes, in pages as large as there are, like the library (base/memory.c). */
 static void memory_warm(const struct loading *loading)
 {
-    enum { LARGE_PAGE = 1 << 21, BYTES_A_CELL = 40 };
-    size_t size = (loading->cells * BYTES_A_CELL / LARGE_PAGE + 1) * LARGE_PAGE;
-    void *block = aligned_alloc(LARGE_PAGE, size);
+    enum { BYTES_A_CELL = 40 };
+    size_t size = (loading->cells * BYTES_A_CELL / MEMORY_LARGE_PAGE + 1) * MEMORY_LARGE_PAGE;
+    void *block = aligned_alloc(MEMORY_LARGE_PAGE, size);
     if (block == NULL)
         fail("no memory");
     madvise(block, size, MADV_HUGEPAGE);
@@ -260,8 +260,6 @@ static void inflate_measure(struct loading *loading)
     close(file);
 }
 
-static volatile uint64_t scanned; /* so that the compiler has to */
-
 static void read_measure(struct loading *loading, enum form form, const char *name)
 {
     static char buffer[BUFFER];
@@ -284,22 +282,21 @@ static void read_measure(struct loading *loading, enum form form, const char *na
 static void scan_measure(struct loading *loading)
 {
     char path[PATH_SIZE];
-    struct stat about;
     int file = open(path_of(loading, FORM_PACK, path), O_RDONLY);
-    if (file < 0 || fstat(file, &about) != 0)
+    if (file < 0)
         fail(path);
     struct clocks start = clocks_start();
-    size_t size = (size_t)about.st_size;
-    uint64_t *words = mmap(NULL, size, PROT_READ, MAP_PRIVATE, file, 0);
-    if (words == MAP_FAILED)
+    size_t size = (size_t)posix_file_calls.size(file);
+    uint64_t *words = posix_file_calls.map(file, size);
+    if (words == NULL)
         fail(path);
-    madvise(words, size, MADV_HUGEPAGE);
     uint64_t sum = 0;
     for (size_t k = 0; k < size / sizeof *words; k++)
         sum += words[k];
-    scanned = sum;
+    volatile uint64_t kept = sum; /* so that the compiler has to */
+    (void)kept;
     clocks_stop(loading, start, "map and scan pack");
-    munmap(words, size);
+    posix_file_calls.unmap(words, size);
     close(file);
 }
 
