@@ -30,6 +30,9 @@ struct memory_counters {
 enum { TEAM_MOST_WORKERS = 1024 }; /* the upper bound of --threads */
 
 struct team_member {
+    _Atomic size_t next_block; /* of its share of this round's work, which ends before last_block */
+    size_t last_block;
+    char apart[128]; /* no two members' counters in one line of the caches, nor in a pair of lines */
     pthread_t thread;
     struct team *team;
     size_t worker;
@@ -47,8 +50,6 @@ struct team {
     size_t workers;
     team_task *task;
     void *job;
-    size_t blocks;
-    _Atomic size_t next_block;
     struct team_member member[TEAM_MOST_WORKERS];
 };
 

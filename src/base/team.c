@@ -2,9 +2,11 @@
  *
  * The workers. The calling thread is worker 0; the others are threads that sleep between rounds of work.
  *
- * Who takes which block is left to chance (an atomic counter), and it does not matter: block bounds are fixed by the
- * caller, every block writes to a place of its own, and team_sum, the only place that adds over blocks, goes in block
- * order. A build over several ranks adds its all-reduce there and nowhere else.
+ * Each worker begins with the same share of the blocks whenever there are as many, so that it finds in its own cache
+ * what it has left there in the round before, and then helps others with theirs. Who takes which block is thus left to
+ * chance, and it does not matter: block bounds are fixed by the caller, every block writes to a place of its own, and
+ * team_sum, the only place that adds over blocks, goes in block order. A build over several ranks adds its all-reduce
+ * there and nowhere else.
  *
  * A worker joins a round while it is open, and the caller, who works too, closes it when no block is left and waits for
  * those who have joined. Whoever comes later, because the machine is busy with other things, is not waited for: on a
@@ -55,13 +57,22 @@ static void look_for(struct team *team, bool (*is_so)(struct team *team, uint64_
         }
 }
 
+/* Its own share, and then what is left of those of the others. */
 static void blocks_work(struct team *team, size_t worker)
 {
-    for (;;) {
-        size_t block = atomic_fetch_add(&team->next_block, 1);
-        if (block >= team->blocks)
-            return;
-        team->task(team->job, block, worker);
+    for (size_t k = 0; k < team->workers; k++) {
+        struct team_member *of = &team->member[(worker + k) % team->workers];
+        size_t block;
+        while ((block = atomic_fetch_add(&of->next_block, 1)) < of->last_block)
+            team->task(team->job, block, worker);
+    }
+}
+
+static void blocks_share(struct team *team, size_t blocks)
+{
+    for (size_t k = 0; k < team->workers; k++) {
+        team->member[k].last_block = blocks * (k + 1) / team->workers;
+        atomic_store(&team->member[k].next_block, blocks * k / team->workers);
     }
 }
 
@@ -161,7 +172,8 @@ void team_close(struct team *team)
 static int member_start(struct team *team, size_t worker)
 {
     struct team_member *member = &team->member[worker];
-    *member = (struct team_member){.team = team, .worker = worker};
+    member->team = team;
+    member->worker = worker;
     sigset_t all, before;
     sigfillset(&all);
     pthread_sigmask(SIG_SETMASK, &all, &before);
@@ -215,8 +227,7 @@ void team_run(fescue_context *context, size_t blocks, team_task *task, void *job
     team->running = true;
     team->task = task;
     team->job = job;
-    team->blocks = blocks;
-    atomic_store(&team->next_block, 0);
+    blocks_share(team, blocks);
     bool alone = team->workers == 1 || blocks < 2;
     if (!alone)
         round_open(team, blocks - 1, false);

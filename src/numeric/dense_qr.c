@@ -19,6 +19,7 @@
  * of lines; G is the sum over pieces in their order, so that bits do not depend on threads.
  */
 #include "numeric/dense_internal.h"
+#include "numeric/kernel_internal.h"
 
 #include <assert.h>
 #include <float.h>
@@ -35,15 +36,15 @@ struct qr {
     double *inverse;  /* k x k, of the triangle to be divided by */
     double *room;     /* tau and LAPACK's workspace */
     enum { DIVIDE_NOT, DIVIDE_SOLVE, DIVIDE_MULTIPLY } divide;
-    bool sum; /* make partial sums of A'A, after dividing */
+    bool sum;                             /* make partial sums of A'A, after dividing */
+    const struct tall_kernel *kernel;     /* NULL: A is wider than it takes */
+    double factor[TALL_MOST * TALL_MOST]; /* the inverse, as the kernel has it */
 };
 
 /* Below this many lines a column the copies and sums of the first way cost what they save. */
 enum { LINES_A_COLUMN = 4 };
 /* Lines that are divided and summed before the next are touched: 128 kB, in numbers. */
 enum { CHUNK_NUMBERS = 16384 };
-/* Up to here a whole product is faster than the half of it that is needed. */
-enum { WHOLE_PRODUCT_MOST = 40 };
 
 static void chunk_divide(const struct qr *qr, struct matrix a)
 {
@@ -51,6 +52,8 @@ static void chunk_divide(const struct qr *qr, struct matrix a)
     if (qr->divide == DIVIDE_SOLVE)
         cblas_dtrsm(CblasRowMajor, CblasRight, CblasUpper, CblasNoTrans, CblasNonUnit, n, k, 1, qr->gram, k, a.data,
                     stride);
+    else if (qr->divide == DIVIDE_MULTIPLY && qr->kernel != NULL)
+        qr->kernel->multiply(a, qr->factor, 0, a);
     else if (qr->divide == DIVIDE_MULTIPLY)
         cblas_dtrmm(CblasRowMajor, CblasRight, CblasUpper, CblasNoTrans, CblasNonUnit, n, k, 1, qr->inverse, k, a.data,
                     stride);
@@ -59,10 +62,7 @@ static void chunk_divide(const struct qr *qr, struct matrix a)
 static void chunk_sum(struct matrix a, double *sum)
 {
     lapack_int n = dense_size(a.rows), k = dense_size(a.columns), stride = dense_size(a.stride);
-    if (k <= WHOLE_PRODUCT_MOST)
-        cblas_dgemm(CblasRowMajor, CblasTrans, CblasNoTrans, k, k, n, 1, a.data, stride, a.data, stride, 1, sum, k);
-    else
-        cblas_dsyrk(CblasRowMajor, CblasUpper, CblasTrans, k, n, 1, a.data, stride, 1, sum, k);
+    cblas_dsyrk(CblasRowMajor, CblasUpper, CblasTrans, k, n, 1, a.data, stride, 1, sum, k);
 }
 
 static void piece_pass(void *job, size_t piece, size_t worker)
@@ -70,16 +70,20 @@ static void piece_pass(void *job, size_t piece, size_t worker)
     struct qr *qr = job;
     struct matrix a = dense_piece(qr->a, &qr->pieces, piece), chunk = a;
     size_t k = a.columns, lines = CHUNK_NUMBERS / k + 1;
-    double *sum = qr->partial + piece * k * k;
+    double *sum = qr->partial + piece * k * k, room[TALL_MOST * TALL_MOST] = {0};
     (void)worker;
     memset(sum, 0, k * k * sizeof *sum);
     for (size_t first = 0; first < a.rows; first += lines) {
         chunk.data = &MATRIX_AT(a, first, 0);
         chunk.rows = a.rows - first < lines ? a.rows - first : lines;
         chunk_divide(qr, chunk);
-        if (qr->sum)
+        if (qr->sum && qr->kernel != NULL)
+            qr->kernel->cross(chunk, chunk, room);
+        else if (qr->sum)
             chunk_sum(chunk, sum);
     }
+    if (qr->kernel != NULL)
+        matrix_copy((struct matrix){room, k, k, TALL_MOST}, (struct matrix){sum, k, k, k});
 }
 
 static void lines_pass(struct qr *qr)
@@ -121,6 +125,8 @@ static void triangle_invert(struct qr *qr)
     size_t k = qr->a.columns;
     memcpy(qr->inverse, qr->gram, k * k * sizeof *qr->gram);
     LAPACKE_dtrtri_work(LAPACK_COL_MAJOR, 'L', 'N', dense_size(k), qr->inverse, dense_size(k));
+    if (qr->kernel != NULL)
+        matrix_copy((struct matrix){qr->inverse, k, k, k}, (struct matrix){qr->factor, k, k, TALL_MOST});
 }
 
 /* Frobenius, of gram with its columns scaled to length 1; the lengths lie in room since gram_factor. */
@@ -235,6 +241,7 @@ fescue_status dense_qr(fescue_context *context, struct matrix a, struct matrix r
     qr.inverse = qr.triangle + k * k;
     qr.room = qr.inverse + k * k;
     qr.partial = qr.room + (DENSE_BLOCK + 1) * k;
+    qr.kernel = k <= TALL_MOST ? kernel_set_choose()->tall : NULL;
     if (a.rows >= LINES_A_COLUMN * k)
         cholesky_twice(&qr, &passes);
     if (passes < 2)

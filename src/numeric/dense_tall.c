@@ -2,10 +2,12 @@
  *
  * Products and sums of tall matrices by the team: pieces of lines, which depend on the shape alone.
  *
- * A product A B is a product of every piece by itself. One of two tall matrices, A'B, is the sum of those of the
- * pieces, added in their order; so neither has bits that depend on the workers.
+ * Narrow ones by the kernels of the instruction set, others by OpenBLAS. A product A B is a product of every piece by
+ * itself. One of two tall matrices, A'B, is the sum of those of the pieces, added in their order; so neither has bits
+ * that depend on the workers.
  */
 #include "numeric/dense_internal.h"
+#include "numeric/kernel_internal.h"
 
 #include <assert.h>
 
@@ -13,10 +15,20 @@ struct tall {
     struct dense_pieces pieces;
     double alpha, beta;
     struct matrix a, b, c;
-    const double *scale; /* of columns, of lines, or a packed factor */
-    bool transpose;      /* of b */
-    double *partial;     /* what a piece sums to: a number, or as many as A'B has */
+    const double *scale;              /* of columns, of lines, or a packed factor */
+    bool transpose;                   /* of b: op(b) = b' */
+    const struct tall_kernel *kernel; /* NULL: c is wider than it takes */
+    const double *factor;             /* alpha op(b), as the kernel has it */
+    double *partial;                  /* what a piece sums to: a number, or as many as A'B has */
 };
+
+/* So many columns from there on, or as many as are left. */
+static struct matrix matrix_columns(struct matrix a, size_t first, size_t most)
+{
+    a.data += first;
+    a.columns = a.columns - first < most ? a.columns - first : most;
+    return a;
+}
 
 static struct tall tall_of(double alpha, struct matrix a, struct matrix b, double beta, struct matrix c)
 {
@@ -28,16 +40,44 @@ static struct tall tall_of(double alpha, struct matrix a, struct matrix b, doubl
 static void multiply_piece(void *job, size_t piece, size_t worker)
 {
     const struct tall *tall = job;
+    struct matrix a = dense_piece(tall->a, &tall->pieces, piece), c = dense_piece(tall->c, &tall->pieces, piece);
     (void)worker;
-    matrix_multiply(tall->alpha, dense_piece(tall->a, &tall->pieces, piece), false, tall->b, tall->transpose,
-                    tall->beta, dense_piece(tall->c, &tall->pieces, piece));
+    if (tall->kernel != NULL)
+        tall->kernel->multiply(a, tall->factor, tall->beta, c);
+    else
+        matrix_multiply(tall->alpha, a, false, tall->b, tall->transpose, tall->beta, c);
+}
+
+/* Columns first .. of a, as many as the kernels take, with the lines of op(b) that they meet. */
+static void columns_multiply(fescue_context *context, const struct tall *whole, size_t first)
+{
+    double factor[TALL_MOST * TALL_MOST] = {0};
+    struct tall tall = *whole;
+    tall.a = matrix_columns(whole->a, first, TALL_MOST);
+    for (size_t i = 0; i < tall.a.columns; i++)
+        for (size_t j = 0; j < tall.c.columns; j++)
+            factor[i * TALL_MOST + j] =
+                tall.alpha * (tall.transpose ? MATRIX_AT(tall.b, j, first + i) : MATRIX_AT(tall.b, first + i, j));
+    tall.factor = factor;
+    tall.kernel = kernel_set_choose()->tall;
+    tall.beta = first == 0 ? tall.beta : 1;
+    team_run(context, tall.pieces.count, multiply_piece, &tall);
+}
+
+static void multiply_run(fescue_context *context, struct tall *tall)
+{
+    if (tall->c.columns > TALL_MOST || tall->a.columns == 0)
+        team_run(context, tall->pieces.count, multiply_piece, tall);
+    else
+        for (size_t first = 0; first < tall->a.columns; first += TALL_MOST)
+            columns_multiply(context, tall, first);
 }
 
 void tall_multiply(fescue_context *context, double alpha, struct matrix a, struct matrix b, double beta,
                    struct matrix c)
 {
     struct tall tall = tall_of(alpha, a, b, beta, c);
-    team_run(context, tall.pieces.count, multiply_piece, &tall);
+    multiply_run(context, &tall);
 }
 
 void tall_multiply_transposed(fescue_context *context, double alpha, struct matrix a, struct matrix b, double beta,
@@ -45,17 +85,27 @@ void tall_multiply_transposed(fescue_context *context, double alpha, struct matr
 {
     struct tall tall = tall_of(alpha, a, b, beta, c);
     tall.transpose = true;
-    team_run(context, tall.pieces.count, multiply_piece, &tall);
+    multiply_run(context, &tall);
 }
 
 static void cross_piece(void *job, size_t piece, size_t worker)
 {
     const struct tall *tall = job;
+    struct matrix a = dense_piece(tall->a, &tall->pieces, piece), b = dense_piece(tall->b, &tall->pieces, piece);
     size_t rows = tall->c.rows, columns = tall->c.columns;
     struct matrix sum = {tall->partial + piece * rows * columns, rows, columns, columns};
     (void)worker;
-    matrix_multiply(1, dense_piece(tall->a, &tall->pieces, piece), true, dense_piece(tall->b, &tall->pieces, piece),
-                    false, 0, sum);
+    if (tall->kernel == NULL) {
+        matrix_multiply(1, a, true, b, false, 0, sum);
+        return;
+    }
+    for (size_t first = 0; first < rows; first += TALL_MOST) {
+        double room[TALL_MOST * TALL_MOST] = {0};
+        struct matrix left = matrix_columns(a, first, TALL_MOST);
+        tall->kernel->cross(left, b, room);
+        matrix_copy((struct matrix){room, left.columns, columns, TALL_MOST},
+                    (struct matrix){&MATRIX_AT(sum, first, 0), left.columns, columns, columns});
+    }
 }
 
 void tall_cross(fescue_context *context, struct matrix a, struct matrix b, struct matrix c, double *work)
@@ -63,10 +113,7 @@ void tall_cross(fescue_context *context, struct matrix a, struct matrix b, struc
     struct tall tall = tall_of(1, a, b, 0, c);
     size_t count = c.rows * c.columns;
     assert(a.rows == b.rows && c.rows == a.columns && c.columns == b.columns);
-    if (tall.pieces.count == 1) {
-        matrix_multiply(1, a, true, b, false, 0, c);
-        return;
-    }
+    tall.kernel = b.columns <= TALL_MOST ? kernel_set_choose()->tall : NULL;
     tall.partial = work + count;
     team_run(context, tall.pieces.count, cross_piece, &tall);
     team_sum(context, tall.partial, tall.pieces.count, count, work);

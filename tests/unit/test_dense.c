@@ -4,7 +4,7 @@
  * against eps times the size of what was worked on; the factors in front are those of Higham 2002, Accuracy and
  * Stability of Numerical Algorithms, chapters 19 and 20: a modest constant times lines^1/2 columns.
  */
-#include "numeric/numeric.h"
+#include "numeric/kernel_internal.h"
 #include "support.h"
 
 #include <float.h>
@@ -396,6 +396,93 @@ static void products_of_tall_matrices(void **state)
     }
 }
 
+/* ---- kernels on narrow matrices -----------------------------------------------------------------------------------
+ */
+
+static const char *const kernels[] = {"portable", "avx2", "avx512"}; /* those the processor lacks are not taken */
+
+/* A block of its own that ends with the last number; all that stands beside the columns is not a number. */
+static struct matrix narrow_draw(struct random_stream *stream, size_t lines, size_t columns, size_t beside)
+{
+    size_t stride = columns + beside, size = lines == 0 ? 0 : (lines - 1) * stride + columns;
+    struct matrix a = {malloc((size + 1) * sizeof(double)), lines, columns, stride};
+    assert_non_null(a.data);
+    for (size_t at = 0; at < size; at++)
+        a.data[at] = at % stride < columns ? random_normal(stream) : (double)NAN;
+    return a;
+}
+
+static void narrow_cross_check(struct random_stream *stream, size_t lines, size_t p, size_t q, size_t beside)
+{
+    double sum[TALL_MOST * TALL_MOST] = {0};
+    struct matrix a = narrow_draw(stream, lines, p, beside), b = narrow_draw(stream, lines, q, beside);
+    sum[0] = 3;
+    kernel_set_choose()->tall->cross(a, b, sum);
+    for (size_t i = 0; i < p; i++)
+        for (size_t j = 0; j < q; j++) {
+            double want = i + j == 0 ? 3 : 0, size = want;
+            for (size_t l = 0; l < lines; l++) {
+                want += MATRIX_AT(a, l, i) * MATRIX_AT(b, l, j);
+                size += fabs(MATRIX_AT(a, l, i) * MATRIX_AT(b, l, j));
+            }
+            assert_close(sum[i * TALL_MOST + j], want, DBL_EPSILON * (double)(lines + 1) * size);
+        }
+    free(a.data);
+    free(b.data);
+}
+
+/* Into a block of its own, and in the place of a where the shape allows. */
+static void narrow_multiply_check(struct random_stream *stream, size_t lines, size_t p, size_t q, double beta)
+{
+    size_t beside = (p + q) % 3;
+    double factor[TALL_MOST * TALL_MOST] = {0};
+    struct matrix a = narrow_draw(stream, lines, p, beside), c = narrow_draw(stream, lines, q, beside), was;
+    was = narrow_draw(stream, lines, q, beside);
+    matrix_copy(c, was);
+    for (size_t i = 0; i < p; i++)
+        for (size_t j = 0; j < q; j++)
+            factor[i * TALL_MOST + j] = random_normal(stream);
+    if (beta == 0)
+        MATRIX_AT(c, lines - 1, q - 1) = (double)NAN; /* not looked at */
+    kernel_set_choose()->tall->multiply(a, factor, beta, c);
+    for (size_t l = 0; l < lines; l++)
+        for (size_t j = 0; j < q; j++) {
+            double want = beta == 0 ? 0 : beta * MATRIX_AT(was, l, j), size = fabs(want);
+            for (size_t i = 0; i < p; i++) {
+                want += MATRIX_AT(a, l, i) * factor[i * TALL_MOST + j];
+                size += fabs(MATRIX_AT(a, l, i) * factor[i * TALL_MOST + j]);
+            }
+            assert_close(MATRIX_AT(c, l, j), want, DBL_EPSILON * (double)(p + 1) * size);
+        }
+    for (size_t at = 0; at + 1 < (lines - 1) * c.stride + q; at++)
+        assert_true(at % c.stride < q || isnan(c.data[at]));
+    if (p == q && beta == 0) {
+        kernel_set_choose()->tall->multiply(a, factor, 0, a);
+        for (size_t l = 0; l < lines; l++)
+            assert_memory_equal(&MATRIX_AT(a, l, 0), &MATRIX_AT(c, l, 0), q * sizeof(double));
+    }
+    free(a.data);
+    free(c.data);
+    free(was.data);
+}
+
+static void narrow_products_are_those_of_plain_loops(void **state)
+{
+    static const size_t lines[] = {1, 2, 7, 8, 9, 23, 135, 300}, columns[] = {1, 2, 5, 8, 9, 16, 23, 33, 64};
+    struct random_stream stream = random_open(12, RANDOM_TEST, 0);
+    (void)state;
+    for (size_t n = 0; n < COUNT(kernels); n++) {
+        setenv("FESCUE_KERNEL", kernels[n], 1);
+        for (size_t k = 0; k < COUNT(lines); k++)
+            for (size_t p = 0; p < COUNT(columns); p++)
+                for (size_t q = 0; q < COUNT(columns); q++) {
+                    narrow_cross_check(&stream, lines[k], columns[p], columns[q], (k + p) % 3);
+                    narrow_multiply_check(&stream, lines[k], columns[p], columns[q], (double)((k + q) % 3) - 1);
+                }
+    }
+    unsetenv("FESCUE_KERNEL");
+}
+
 /* What the team makes is what one worker makes, to the bit, and what plain products make, to rounding. */
 static void tall_products_by_the_team(void **state)
 {
@@ -488,6 +575,7 @@ int main(void)
         BENCH_TEST(eigenvalues_of_the_second_difference),
         BENCH_TEST(products_of_all_kinds),
         BENCH_TEST(products_of_tall_matrices),
+        BENCH_TEST(narrow_products_are_those_of_plain_loops),
         BENCH_TEST(tall_products_by_the_team),
         BENCH_TEST(what_is_not_finite_is_refused),
     };

@@ -1,0 +1,25 @@
+/* SPDX-License-Identifier: MIT
+ *
+ * Between the products of tall matrices (dense_tall.c) and their kernels (tall_kernel.h, included once for each
+ * instruction set).
+ */
+#ifndef FESCUE_NUMERIC_TALL_INTERNAL_H
+#define FESCUE_NUMERIC_TALL_INTERNAL_H
+
+#include "numeric/numeric.h"
+
+enum { TALL_MOST = 64 }; /* columns of what the kernels take */
+
+struct tall_kernel {
+    /* sum += a'b, lines of TALL_MOST numbers, TALL_MOST of them */
+    void (*cross)(struct matrix a, struct matrix b, double *sum);
+    /* c = a factor + beta c; factor in lines of TALL_MOST numbers, 0 behind its last column. c may be a. */
+    void (*multiply)(struct matrix a, const double *factor, double beta, struct matrix c);
+};
+
+extern const struct tall_kernel tall_portable;
+#if defined(__x86_64__)
+extern const struct tall_kernel tall_avx2, tall_avx512;
+#endif
+
+#endif
