@@ -19,8 +19,8 @@ typedef double vec __attribute__((vector_size(LANES * sizeof(double)), aligned(s
 enum {
     TILE_REGISTERS = 3,
     CHUNK = 128,      /* lines that a nearest cache holds while the tiles go over them */
-    REACH = 8,        /* numbers to which TILE_ROWS and LANES divide */
-    LAST = REACH - 1, /* lines at the end from which a register might reach behind the last */
+    REACH = 8,        /* a multiple of TILE_ROWS and of LANES */
+    LAST = REACH - 1, /* lines at the end from which a register or tile might reach behind the last number */
 };
 _Static_assert(TALL_MOST % REACH == 0, "whole registers and tiles");
 
