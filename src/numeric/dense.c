@@ -43,11 +43,7 @@ struct dense_pieces dense_pieces_of(size_t lines, size_t columns)
 
 struct matrix dense_piece(struct matrix a, const struct dense_pieces *pieces, size_t which)
 {
-    size_t first = which * pieces->each;
-    size_t rest = pieces->lines - first;
-    a.data += first * a.stride;
-    a.rows = rest < pieces->each ? rest : pieces->each;
-    return a;
+    return matrix_lines(a, which * pieces->each, pieces->each);
 }
 
 /* c = alpha op(a) op(b) + beta c, nothing empty. */
@@ -63,13 +59,6 @@ static void product_make(const struct product *p, double beta)
     cblas_dgemm(CblasRowMajor, p->transpose_a ? CblasTrans : CblasNoTrans, p->transpose_b ? CblasTrans : CblasNoTrans,
                 dense_size(p->c.rows), dense_size(p->c.columns), dense_size(inner), p->alpha, p->a.data,
                 dense_size(p->a.stride), p->b.data, dense_size(p->b.stride), beta, p->c.data, dense_size(p->c.stride));
-}
-
-static struct matrix lines_of(struct matrix a, size_t first, size_t count)
-{
-    a.data += first * a.stride;
-    a.rows = a.rows - first < count ? a.rows - first : count;
-    return a;
 }
 
 /* Products of tall, narrow matrices wait for memory: a piece of lines that stays in the cache at a time is up to three
@@ -95,11 +84,11 @@ void matrix_multiply(double alpha, struct matrix a, bool transpose_a, struct mat
     }
     size_t lines = width <= NARROW_MOST && !(transpose_a && transpose_b) ? PIECE_NUMBERS / width : a.rows;
     for (size_t first = 0; first < a.rows; first += lines) {
-        part.a = lines_of(a, first, lines);
+        part.a = matrix_lines(a, first, lines);
         if (transpose_a)
-            part.b = transpose_b ? b : lines_of(b, first, lines);
+            part.b = transpose_b ? b : matrix_lines(b, first, lines);
         else
-            part.c = lines_of(c, first, lines);
+            part.c = matrix_lines(c, first, lines);
         product_make(&part, transpose_a && first > 0 ? 1 : beta);
     }
 }

@@ -36,9 +36,9 @@ struct qr {
     double *inverse;  /* k x k, of the triangle to be divided by */
     double *room;     /* tau and LAPACK's workspace */
     enum { DIVIDE_NOT, DIVIDE_SOLVE, DIVIDE_MULTIPLY } divide;
-    bool sum;                             /* make partial sums of A'A, after dividing */
-    const struct tall_kernel *kernel;     /* NULL: A is wider than it takes */
-    double factor[TALL_MOST * TALL_MOST]; /* the inverse, as the kernel has it */
+    bool sum;                         /* make partial sums of A'A, after dividing */
+    const struct tall_kernel *kernel; /* NULL: A is wider than it takes */
+    double *factor;                   /* the inverse, as the kernel has it */
 };
 
 /* Below this many lines a column the copies and sums of the first way cost what they save. */
@@ -68,14 +68,15 @@ static void chunk_sum(struct matrix a, double *sum)
 static void piece_pass(void *job, size_t piece, size_t worker)
 {
     struct qr *qr = job;
-    struct matrix a = dense_piece(qr->a, &qr->pieces, piece), chunk = a;
+    struct matrix a = dense_piece(qr->a, &qr->pieces, piece);
     size_t k = a.columns, lines = CHUNK_NUMBERS / k + 1;
-    double *sum = qr->partial + piece * k * k, room[TALL_MOST * TALL_MOST] = {0};
+    double *sum = qr->partial + piece * k * k, room[TALL_MOST * TALL_MOST];
     (void)worker;
     memset(sum, 0, k * k * sizeof *sum);
+    if (qr->kernel != NULL)
+        memset(room, 0, tall_lines(k) * TALL_MOST * sizeof *room);
     for (size_t first = 0; first < a.rows; first += lines) {
-        chunk.data = &MATRIX_AT(a, first, 0);
-        chunk.rows = a.rows - first < lines ? a.rows - first : lines;
+        struct matrix chunk = matrix_lines(a, first, lines);
         chunk_divide(qr, chunk);
         if (qr->sum && qr->kernel != NULL)
             qr->kernel->cross(chunk, chunk, room);
@@ -125,8 +126,10 @@ static void triangle_invert(struct qr *qr)
     size_t k = qr->a.columns;
     memcpy(qr->inverse, qr->gram, k * k * sizeof *qr->gram);
     LAPACKE_dtrtri_work(LAPACK_COL_MAJOR, 'L', 'N', dense_size(k), qr->inverse, dense_size(k));
-    if (qr->kernel != NULL)
+    if (qr->kernel != NULL) {
+        memset(qr->factor, 0, k * TALL_MOST * sizeof *qr->factor);
         matrix_copy((struct matrix){qr->inverse, k, k, k}, (struct matrix){qr->factor, k, k, TALL_MOST});
+    }
 }
 
 /* Frobenius, of gram with its columns scaled to length 1; the lengths lie in room since gram_factor. */
@@ -231,6 +234,7 @@ fescue_status dense_qr(fescue_context *context, struct matrix a, struct matrix r
     size_t k = a.columns;
     struct qr qr = {.context = context, .a = a, .pieces = dense_pieces_of(a.rows, k)};
     fescue_status status = FESCUE_OK;
+    double factor[TALL_MOST * TALL_MOST];
     int passes = 0;
     assert(a.rows >= k && (r.data == NULL || (r.rows == k && r.columns == k)));
     if (k == 0)
@@ -241,6 +245,7 @@ fescue_status dense_qr(fescue_context *context, struct matrix a, struct matrix r
     qr.inverse = qr.triangle + k * k;
     qr.room = qr.inverse + k * k;
     qr.partial = qr.room + (DENSE_BLOCK + 1) * k;
+    qr.factor = factor;
     qr.kernel = k <= TALL_MOST ? kernel_set_choose()->tall : NULL;
     if (a.rows >= LINES_A_COLUMN * k)
         cholesky_twice(&qr, &passes);

@@ -10,6 +10,7 @@
 #include "numeric/kernel_internal.h"
 
 #include <assert.h>
+#include <string.h>
 
 struct tall {
     struct dense_pieces pieces;
@@ -21,14 +22,6 @@ struct tall {
     const double *factor;             /* alpha op(b), as the kernel has it */
     double *partial;                  /* what a piece sums to: a number, or as many as A'B has */
 };
-
-/* So many columns from there on, or as many as are left. */
-static struct matrix matrix_columns(struct matrix a, size_t first, size_t most)
-{
-    a.data += first;
-    a.columns = a.columns - first < most ? a.columns - first : most;
-    return a;
-}
 
 static struct tall tall_of(double alpha, struct matrix a, struct matrix b, double beta, struct matrix c)
 {
@@ -51,9 +44,10 @@ static void multiply_piece(void *job, size_t piece, size_t worker)
 /* Columns first .. of a, as many as the kernels take, with the lines of op(b) that they meet. */
 static void columns_multiply(fescue_context *context, const struct tall *whole, size_t first)
 {
-    double factor[TALL_MOST * TALL_MOST] = {0};
+    double factor[TALL_MOST * TALL_MOST];
     struct tall tall = *whole;
     tall.a = matrix_columns(whole->a, first, TALL_MOST);
+    memset(factor, 0, tall.a.columns * TALL_MOST * sizeof *factor);
     for (size_t i = 0; i < tall.a.columns; i++)
         for (size_t j = 0; j < tall.c.columns; j++)
             factor[i * TALL_MOST + j] =
@@ -100,8 +94,9 @@ static void cross_piece(void *job, size_t piece, size_t worker)
         return;
     }
     for (size_t first = 0; first < rows; first += TALL_MOST) {
-        double room[TALL_MOST * TALL_MOST] = {0};
+        double room[TALL_MOST * TALL_MOST];
         struct matrix left = matrix_columns(a, first, TALL_MOST);
+        memset(room, 0, tall_lines(left.columns) * TALL_MOST * sizeof *room);
         tall->kernel->cross(left, b, room);
         matrix_copy((struct matrix){room, left.columns, columns, TALL_MOST},
                     (struct matrix){&MATRIX_AT(sum, first, 0), left.columns, columns, columns});

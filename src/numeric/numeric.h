@@ -27,6 +27,19 @@ void matrix_reserve(struct arena *arena, size_t rows, size_t columns);
 struct matrix matrix_carve(struct arena *arena, size_t rows, size_t columns);
 /* The first `columns` columns of a, same data. */
 struct matrix matrix_left(struct matrix a, size_t columns);
+/* Lines, or columns, from `first` on, `most` of them or as many as are left, same data; in the innermost loops too. */
+static inline struct matrix matrix_lines(struct matrix a, size_t first, size_t most)
+{
+    a.data += first * a.stride;
+    a.rows = a.rows - first < most ? a.rows - first : most;
+    return a;
+}
+static inline struct matrix matrix_columns(struct matrix a, size_t first, size_t most)
+{
+    a.data += first;
+    a.columns = a.columns - first < most ? a.columns - first : most;
+    return a;
+}
 
 /* A function that the compiler makes for several instruction sets; the one that fits is taken when the program starts.
    For elementwise loops, whose results do not depend on it. Not by clang, which calls the choice by another name than

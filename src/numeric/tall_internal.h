@@ -9,9 +9,14 @@
 #include "numeric/numeric.h"
 
 enum { TALL_MOST = 64 }; /* columns of what the kernels take */
+/* Lines of a'b that the kernels write to: whole tiles. */
+static inline size_t tall_lines(size_t columns)
+{
+    return (columns + 7) / 8 * 8;
+}
 
 struct tall_kernel {
-    /* sum += a'b, lines of TALL_MOST numbers, TALL_MOST of them */
+    /* sum += a'b, tall_lines(a.columns) lines of TALL_MOST numbers */
     void (*cross)(struct matrix a, struct matrix b, double *sum);
     /* c = a factor + beta c; factor in lines of TALL_MOST numbers, 0 behind its last column. c may be a. */
     void (*multiply)(struct matrix a, const double *factor, double beta, struct matrix c);

@@ -63,13 +63,6 @@ static void chunk_cross(struct matrix a, struct matrix b, double *sum)
     }
 }
 
-static struct matrix lines_at(struct matrix a, size_t first, size_t count)
-{
-    a.data += first * a.stride;
-    a.rows = count;
-    return a;
-}
-
 /* A copy of the lines, of which whole registers may be read. */
 static struct matrix lines_apart(struct matrix a, double *room)
 {
@@ -83,12 +76,10 @@ static void tall_cross_add(struct matrix a, struct matrix b, double *sum)
 {
     double left[LAST * TALL_MOST], right[LAST * TALL_MOST];
     size_t whole = a.rows > LAST ? a.rows - LAST : 0;
-    for (size_t first = 0; first < whole; first += CHUNK) {
-        size_t count = whole - first < CHUNK ? whole - first : CHUNK;
-        chunk_cross(lines_at(a, first, count), lines_at(b, first, count), sum);
-    }
-    chunk_cross(lines_apart(lines_at(a, whole, a.rows - whole), left),
-                lines_apart(lines_at(b, whole, a.rows - whole), right), sum);
+    struct matrix left_whole = matrix_lines(a, 0, whole), right_whole = matrix_lines(b, 0, whole);
+    for (size_t first = 0; first < whole; first += CHUNK)
+        chunk_cross(matrix_lines(left_whole, first, CHUNK), matrix_lines(right_whole, first, CHUNK), sum);
+    chunk_cross(lines_apart(matrix_lines(a, whole, LAST), left), lines_apart(matrix_lines(b, whole, LAST), right), sum);
 }
 
 /* ---- a b + c ----------------------------------------------------------------------------------------------------- */
@@ -135,12 +126,13 @@ static void tall_multiply_add(struct matrix a, const double *factor, double beta
     bool in_place = a.data == c.data;
     size_t i = 0;
     for (; i + TILE_ROWS <= a.rows; i += TILE_ROWS) {
-        struct matrix from = lines_at(a, i, TILE_ROWS);
-        lines_multiply(in_place ? lines_apart(from, room) : from, factor, beta, lines_at(c, i, TILE_ROWS), TILE_ROWS);
+        struct matrix from = matrix_lines(a, i, TILE_ROWS);
+        lines_multiply(in_place ? lines_apart(from, room) : from, factor, beta, matrix_lines(c, i, TILE_ROWS),
+                       TILE_ROWS);
     }
     for (; i < a.rows; i++) {
-        struct matrix from = lines_at(a, i, 1);
-        lines_multiply(in_place ? lines_apart(from, room) : from, factor, beta, lines_at(c, i, 1), 1);
+        struct matrix from = matrix_lines(a, i, 1);
+        lines_multiply(in_place ? lines_apart(from, room) : from, factor, beta, matrix_lines(c, i, 1), 1);
     }
 }
 

@@ -108,13 +108,6 @@ static void apply_transposed(struct krylov *k, struct matrix from, struct matrix
     sweep_multiply(k->sparse->sweep, k->sparse->by_long, k->sparse->long_values, from, to);
 }
 
-static struct matrix columns_of(struct matrix a, size_t first, size_t count)
-{
-    a.data += first;
-    a.columns = count;
-    return a;
-}
-
 /* raw minus its part in the first `count` columns of the basis; coefficients receives that part. */
 static void project_out(struct krylov *k, size_t count)
 {
@@ -137,7 +130,7 @@ static fescue_status block_add(struct krylov *k, size_t b)
         project_out(k, b * k->width);
         status = dense_qr(k->sparse->sweep->context, k->raw, none, k->dense);
     }
-    tall_copy(k->sparse->sweep->context, k->raw, NULL, columns_of(k->basis, b * k->width, k->width));
+    tall_copy(k->sparse->sweep->context, k->raw, NULL, matrix_columns(k->basis, b * k->width, k->width));
     return status;
 }
 
@@ -172,7 +165,7 @@ static fescue_status basis_build(struct krylov *k, uint64_t seed)
         TRY(block_add(k, b));
         apply_transposed(k, k->raw, k->scaled, k->across);
         apply(k, k->across, k->raw);
-        struct matrix part = columns_of(k->gram, b * k->width, k->width);
+        struct matrix part = matrix_columns(k->gram, b * k->width, k->width);
         part.rows = (b + 1) * k->width;
         tall_cross(k->sparse->sweep->context, matrix_left(k->basis, part.rows), k->raw, part, k->dense);
     }
