@@ -17,8 +17,10 @@
  *
  * Transport by projection onto the tangents at Y = W diag(.) T' needs the products of Z:
  *     Z T  = U (M (V'T) + Vp'T) + Up (V'T),      Z'W = V (M'(U'W) + Up'W) + Vp (U'W)
+ * Since the projection is self-adjoint, the inner product of the transported Z and of a tangent N, Yp, Yv at Y is that
+ * of both as matrices, <Z T, W N + Yp> + <Z'W, Yv>, which r x r products of the frames and normal parts tell.
  *
- * Cost: O((m+n) r^2), inner products O((m+n) r). Parallel.
+ * Cost: O((m+n) r^2), inner products at one point O((m+n) r). Parallel, both sides in the same rounds.
  */
 #include "manifold/manifold_internal.h"
 
@@ -41,67 +43,159 @@ struct fixed_rank_tangent fixed_rank_tangent_carve(struct arena *arena, size_t r
 void fixed_rank_add(const struct fixed_rank_work *work, double alpha, const struct fixed_rank_tangent *x, double beta,
                     struct fixed_rank_tangent *y)
 {
+    const struct tall_step sides[] = {
+        {.to = y->left, .beta = beta, .terms = 1, .term = {{.alpha = alpha, .a = x->left}}},
+        {.to = y->right, .beta = beta, .terms = 1, .term = {{.alpha = alpha, .a = x->right}}},
+    };
+    tall_run(work->context, sides, 2, NULL);
     tall_add(work->context, alpha, x->middle, beta, y->middle);
-    tall_add(work->context, alpha, x->left, beta, y->left);
-    tall_add(work->context, alpha, x->right, beta, y->right);
 }
 
 double fixed_rank_inner(const struct fixed_rank_work *work, const struct fixed_rank_tangent *x,
                         const struct fixed_rank_tangent *y)
 {
-    return matrix_dot(x->middle, y->middle) + tall_dot(work->context, x->left, y->left) +
-           tall_dot(work->context, x->right, y->right);
+    double left, right;
+    const struct tall_step sides[] = {
+        {.sums = 1, .sum = {{.a = x->left, .b = y->left, .dot = &left}}},
+        {.sums = 1, .sum = {{.a = x->right, .b = y->right, .dot = &right}}},
+    };
+    tall_run(work->context, sides, 2, work->sums);
+    return matrix_dot(x->middle, y->middle) + left + right;
 }
 
-/* within = frame'a; a <- (I - frame frame') a. */
-static void normal_part(struct fixed_rank_work *work, struct matrix frame, struct matrix a, struct matrix within)
+/* z->left and z->right, which lie nearly so, become orthogonal to the frames to rounding of their own size; *within, on
+   entry frame'normal of either side, is taken off first. */
+static void normals_settle(struct fixed_rank_work *work, const struct low_rank *point, struct fixed_rank_tangent *z)
 {
-    tall_cross(work->context, frame, a, within, work->dense);
-    if (frame.rows == frame.columns) { /* the frame spans everything */
-        matrix_zero(a);
-        return;
-    }
-    tall_multiply(work->context, -1, frame, within, 1, a);
-    tall_cross(work->context, frame, a, work->small, work->dense);
-    tall_multiply(work->context, -1, frame, work->small, 1, a);
+    const struct tall_step sides[] = {
+        {.to = z->left, .beta = 1, .terms = 1, .term = {{.alpha = -1, .a = point->left, .b = work->small}}},
+        {.to = z->right, .beta = 1, .terms = 1, .term = {{.alpha = -1, .a = point->right, .b = work->small_right}}},
+    };
+    tall_run(work->context, sides, 2, NULL);
+    /* A square frame spans everything. */
+    if (point->rows == point->rank)
+        matrix_zero(z->left);
+    if (point->columns == point->rank)
+        matrix_zero(z->right);
 }
 
 void fixed_rank_project(struct fixed_rank_work *work, const struct low_rank *point, struct fixed_rank_tangent *z)
 {
+    struct matrix u = point->left, v = point->right, in_left = work->small, in_right = work->small_right;
     assert(is_shape(z->left, point->rows, point->rank) && is_shape(z->right, point->columns, point->rank));
-    normal_part(work, point->left, z->left, z->middle);
-    normal_part(work, point->right, z->right, work->small_right); /* here the inner part is M' once more */
+    const struct tall_step inner[] = {
+        {.sums = 1, .sum = {{.a = u, .b = z->left, .cross = z->middle}}},
+        {.sums = 1, .sum = {{.a = v, .b = z->right, .cross = in_right}}}, /* M' once more */
+    };
+    tall_run(work->context, inner, 2, work->sums);
+    const struct tall_step once[] = {
+        {.to = z->left,
+         .beta = 1,
+         .terms = 1,
+         .term = {{.alpha = -1, .a = u, .b = z->middle}},
+         .sums = 1,
+         .sum = {{.a = u, .b = z->left, .cross = in_left}}},
+        {.to = z->right,
+         .beta = 1,
+         .terms = 1,
+         .term = {{.alpha = -1, .a = v, .b = in_right}},
+         .sums = 1,
+         .sum = {{.a = v, .b = z->right, .cross = in_right}}},
+    };
+    tall_run(work->context, once, 2, work->sums);
+    normals_settle(work, point, z);
 }
 
 void fixed_rank_pairs(const struct fixed_rank_work *work, const struct low_rank *point,
                       const struct fixed_rank_tangent *z, struct matrix a)
 {
-    tall_copy(work->context, z->left, NULL, a);
-    tall_multiply(work->context, 1, point->left, z->middle, 1, a);
+    const struct tall_step step = {
+        .to = a, .terms = 2, .term = {{.alpha = 1, .a = z->left}, {.alpha = 1, .a = point->left, .b = z->middle}}};
+    tall_run(work->context, &step, 1, NULL);
 }
 
-/* product = frame (middle overlap + normal_other'new_other) + normal overlap,  overlap = frame_other'new_other: one
-   side of a tangent times the new frame of the other side. transpose tells that middle is to be read as its transpose.
+/* ---- two points ---------------------------------------------------------------------------------------------------
  */
-struct tangent_side {
-    struct matrix frame, normal;
+
+/* What a tangent Z at one point looks like from another, W diag(.) T':  Z T = U k + Up v,  Z'W = V l + Vp u. */
+struct view {
+    struct matrix u, v; /* U'W, V'T */
+    struct matrix k, l; /* M v + Vp'T, M'u + Up'W; before view_finish Vp'T and Up'W */
 };
-static void tangent_times_frame(struct fixed_rank_work *work, struct tangent_side near, struct tangent_side far,
-                                struct matrix middle, bool transpose, struct matrix far_frame, struct matrix product)
+
+static struct view view_of(const struct fixed_rank_work *work)
 {
-    tall_cross(work->context, far.frame, far_frame, work->small, work->dense);
-    tall_cross(work->context, far.normal, far_frame, work->small_right, work->dense);
-    matrix_multiply(1, middle, transpose, work->small, false, 1, work->small_right);
-    tall_multiply(work->context, 1, near.frame, work->small_right, 0, product);
-    tall_multiply(work->context, 1, near.normal, work->small, 1, product);
+    return (struct view){matrix_quarter(work->core, 0, 0), matrix_quarter(work->core, 0, 1),
+                         matrix_quarter(work->core, 1, 0), matrix_quarter(work->core, 1, 1)};
+}
+
+/* middle = W'Z T = u'k + (Up'W)'v, unless NULL. */
+static void view_finish(const struct fixed_rank_tangent *z, const struct view *view, struct matrix *middle)
+{
+    matrix_multiply(1, z->middle, false, view->v, false, 1, view->k);
+    if (middle != NULL) {
+        matrix_multiply(1, view->u, true, view->k, false, 0, *middle);
+        matrix_multiply(1, view->l, true, view->v, false, 1, *middle);
+    }
+    matrix_multiply(1, z->middle, true, view->u, false, 1, view->l);
 }
 
 void fixed_rank_transport(struct fixed_rank_work *work, const struct low_rank *from, const struct fixed_rank_tangent *z,
                           const struct low_rank *to, struct fixed_rank_tangent *out)
 {
-    struct tangent_side left = {from->left, z->left}, right = {from->right, z->right};
+    struct view view = view_of(work);
     assert(out->left.data != z->left.data && out->right.data != z->right.data);
-    tangent_times_frame(work, left, right, z->middle, false, to->right, out->left);
-    tangent_times_frame(work, right, left, z->middle, true, to->left, out->right);
-    fixed_rank_project(work, to, out);
+    const struct tall_step look[] = {
+        {.sums = 2,
+         .sum = {{.a = from->left, .b = to->left, .cross = view.u}, {.a = z->left, .b = to->left, .cross = view.l}}},
+        {.sums = 2,
+         .sum = {{.a = from->right, .b = to->right, .cross = view.v},
+                 {.a = z->right, .b = to->right, .cross = view.k}}},
+    };
+    tall_run(work->context, look, 2, work->sums);
+    view_finish(z, &view, &out->middle);
+    const struct tall_step once[] = {
+        {.to = out->left,
+         .terms = 3,
+         .term = {{1, from->left, view.k, false}, {1, z->left, view.v, false}, {-1, to->left, out->middle, false}},
+         .sums = 1,
+         .sum = {{.a = to->left, .b = out->left, .cross = work->small}}},
+        {.to = out->right,
+         .terms = 3,
+         .term = {{1, from->right, view.l, false}, {1, z->right, view.u, false}, {-1, to->right, out->middle, true}},
+         .sums = 1,
+         .sum = {{.a = to->right, .b = out->right, .cross = work->small_right}}},
+    };
+    tall_run(work->context, once, 2, work->sums);
+    normals_settle(work, to, out);
+}
+
+double fixed_rank_inner_apart(struct fixed_rank_work *work, const struct low_rank *from,
+                              const struct fixed_rank_tangent *z, const struct low_rank *to,
+                              const struct fixed_rank_tangent *y)
+{
+    struct view view = view_of(work);
+    struct matrix far_frame = matrix_quarter(work->core_right, 0, 0),
+                  far_normal = matrix_quarter(work->core_right, 0, 1),
+                  far_right = matrix_quarter(work->core_right, 1, 0),
+                  far_right_normal = matrix_quarter(work->core_right, 1, 1);
+    const struct tall_step look[] = {
+        {.sums = 4,
+         .sum = {{.a = from->left, .b = to->left, .cross = view.u},
+                 {.a = z->left, .b = to->left, .cross = view.l},
+                 {.a = from->left, .b = y->left, .cross = far_frame},
+                 {.a = z->left, .b = y->left, .cross = far_normal}}},
+        {.sums = 4,
+         .sum = {{.a = from->right, .b = to->right, .cross = view.v},
+                 {.a = z->right, .b = to->right, .cross = view.k},
+                 {.a = from->right, .b = y->right, .cross = far_right},
+                 {.a = z->right, .b = y->right, .cross = far_right_normal}}},
+    };
+    tall_run(work->context, look, 2, work->sums);
+    /* U'(W N + Yp) and Up'(W N + Yp), N the middle of Y */
+    matrix_multiply(1, view.u, false, y->middle, false, 1, far_frame);
+    matrix_multiply(1, view.l, false, y->middle, false, 1, far_normal);
+    view_finish(z, &view, NULL);
+    return matrix_dot(view.k, far_frame) + matrix_dot(view.v, far_normal) + matrix_dot(view.l, far_right) +
+           matrix_dot(view.u, far_right_normal);
 }

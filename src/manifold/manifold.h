@@ -139,8 +139,9 @@ struct fixed_rank_work {
     struct matrix triangle_left, triangle_right; /* min(rows, 2 rank) x 2 rank and so on */
     struct matrix core, core_right, product;     /* 2 rank x 2 rank */
     struct matrix small, small_right;            /* rank x rank */
+    struct matrix inverse_left, inverse_right;   /* 2 rank x 2 rank */
     double *spectrum;                            /* 2 rank */
-    double *dense;
+    double *dense, *sums;
 };
 void fixed_rank_reserve(struct arena *arena, size_t rows, size_t columns, size_t rank);
 struct fixed_rank_work fixed_rank_carve(fescue_context *context, struct arena *arena, size_t rows, size_t columns,
@@ -166,6 +167,12 @@ void fixed_rank_pairs(const struct fixed_rank_work *work, const struct low_rank 
    O((m+n) r^2). */
 void fixed_rank_transport(struct fixed_rank_work *work, const struct low_rank *from, const struct fixed_rank_tangent *z,
                           const struct low_rank *to, struct fixed_rank_tangent *out);
+
+/* The inner product at `to` of y, a tangent there, and of the transport of z, a tangent at `from`: without making it.
+   O((m+n) r^2). */
+double fixed_rank_inner_apart(struct fixed_rank_work *work, const struct low_rank *from,
+                              const struct fixed_rank_tangent *z, const struct low_rank *to,
+                              const struct fixed_rank_tangent *y);
 
 /* to = a matrix of rank r nearest to X + t Z: the truncated SVD, exact, O((m+n) r^2 + r^3). `to` (same shape and rank)
    may be the point. The new spectrum may hold zeros when X + t Z has a lower rank. Agrees with the exponential map up

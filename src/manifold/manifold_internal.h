@@ -21,4 +21,11 @@ static inline struct matrix matrix_corner(struct matrix a, size_t rows, size_t c
     return (struct matrix){.data = a.data, .rows = rows, .columns = columns, .stride = a.stride};
 }
 
+/* Quarter (i, j) of a, same data; rows and columns even. */
+static inline struct matrix matrix_quarter(struct matrix a, size_t i, size_t j)
+{
+    size_t rows = a.rows / 2, columns = a.columns / 2;
+    return matrix_columns(matrix_lines(a, i * rows, rows), j * columns, columns);
+}
+
 #endif

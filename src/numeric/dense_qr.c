@@ -43,8 +43,15 @@ struct qr {
 
 /* Below this many lines a column the copies and sums of the first way cost what they save. */
 enum { LINES_A_COLUMN = 4 };
+/* What a column must keep of its length: cond(A) is then far enough below 1e8, see above. */
+#define LEAST_KEPT 1e-6
 /* Lines that are divided and summed before the next are touched: 128 kB, in numbers. */
 enum { CHUNK_NUMBERS = 16384 };
+
+static struct matrix square_of(double *data, size_t k)
+{
+    return (struct matrix){data, k, k, k};
+}
 
 static void chunk_divide(const struct qr *qr, struct matrix a)
 {
@@ -98,49 +105,59 @@ static void partials_add(struct qr *qr)
     team_sum(qr->context, qr->partial, qr->pieces.count, k * k, qr->gram);
 }
 
-/* gram = R'R in its upper triangle (lower zeroed); false when some column keeps less than `least` of its length after
-   what the columns before it explain. */
-static bool gram_factor(struct qr *qr, double least)
+/* gram = R'R in its upper triangle (lower zeroed), its columns' lengths in length[k]; false when some column keeps less
+   than `least` of its length after what the columns before it explain. */
+static bool gram_factor(struct matrix gram, double least, double *length)
 {
-    size_t k = qr->a.columns;
-    double *g = qr->gram, *length = qr->room;
+    size_t k = gram.columns;
     for (size_t j = 0; j < k; j++) {
-        length[j] = sqrt(g[j * k + j]);
+        length[j] = sqrt(MATRIX_AT(gram, j, j));
         /* Squares that went under or over have lost their digits. */
         if (!(length[j] > 1e-130 && length[j] < 1e130))
             return false;
     }
-    if (LAPACKE_dpotrf_work(LAPACK_COL_MAJOR, 'L', dense_size(k), g, dense_size(k)) != 0)
+    if (LAPACKE_dpotrf_work(LAPACK_COL_MAJOR, 'L', dense_size(k), gram.data, dense_size(gram.stride)) != 0)
         return false;
     for (size_t j = 0; j < k; j++) {
-        if (!(g[j * k + j] >= least * length[j]))
+        if (!(MATRIX_AT(gram, j, j) >= least * length[j]))
             return false;
-        memset(g + j * k, 0, j * sizeof *g);
+        memset(&MATRIX_AT(gram, j, 0), 0, j * sizeof *gram.data);
     }
     return true;
 }
 
-/* inverse = gram^-1, both upper triangles. */
-static void triangle_invert(struct qr *qr)
+/* inverse = triangle^-1, both upper triangles. */
+static void triangle_invert(struct matrix triangle, struct matrix inverse)
 {
-    size_t k = qr->a.columns;
-    memcpy(qr->inverse, qr->gram, k * k * sizeof *qr->gram);
-    LAPACKE_dtrtri_work(LAPACK_COL_MAJOR, 'L', 'N', dense_size(k), qr->inverse, dense_size(k));
-    if (qr->kernel != NULL) {
-        memset(qr->factor, 0, k * TALL_MOST * sizeof *qr->factor);
-        matrix_copy((struct matrix){qr->inverse, k, k, k}, (struct matrix){qr->factor, k, k, TALL_MOST});
-    }
+    matrix_copy(triangle, inverse);
+    LAPACKE_dtrtri_work(LAPACK_COL_MAJOR, 'L', 'N', dense_size(inverse.columns), inverse.data,
+                        dense_size(inverse.stride));
 }
 
-/* Frobenius, of gram with its columns scaled to length 1; the lengths lie in room since gram_factor. */
-static double triangle_condition(const struct qr *qr)
+/* Frobenius, of the triangle whose inverse this is, with its columns scaled to length 1. */
+static double triangle_condition(struct matrix inverse, const double *length)
 {
-    size_t k = qr->a.columns;
+    size_t k = inverse.columns;
     double square = 0;
     for (size_t i = 0; i < k; i++)
         for (size_t j = i; j < k; j++)
-            square += pow(qr->room[i] * qr->inverse[i * k + j], 2);
+            square += pow(length[i] * MATRIX_AT(inverse, i, j), 2);
     return sqrt((double)k * square);
+}
+
+/* Whether multiplying by the inverse costs no more than a digit or two. */
+static bool is_near(struct matrix inverse, const double *length)
+{
+    return triangle_condition(inverse, length) < 30 * (double)inverse.columns;
+}
+
+bool dense_gram_triangle(struct matrix gram, struct matrix inverse, double *work)
+{
+    dense_threads_hold();
+    if (!gram_factor(gram, LEAST_KEPT, work))
+        return false;
+    triangle_invert(gram, inverse);
+    return is_near(inverse, work);
 }
 
 static double identity_distance(const double *g, size_t k)
@@ -202,6 +219,16 @@ done:
     return status;
 }
 
+static void divide_by_inverse(struct qr *qr)
+{
+    size_t k = qr->a.columns;
+    triangle_invert(square_of(qr->gram, k), square_of(qr->inverse, k));
+    if (qr->kernel == NULL)
+        return;
+    memset(qr->factor, 0, k * TALL_MOST * sizeof *qr->factor);
+    matrix_copy(square_of(qr->inverse, k), (struct matrix){qr->factor, k, k, TALL_MOST});
+}
+
 /* *passes = how many triangles were divided out of a: 0, 1 (R1 in triangle) or 2 (R2 in gram as well). */
 static void cholesky_twice(struct qr *qr, int *passes)
 {
@@ -211,18 +238,17 @@ static void cholesky_twice(struct qr *qr, int *passes)
     qr->sum = true;
     lines_pass(qr);
     partials_add(qr);
-    /* 1e-6: cond(A) is then far enough below 1e8, see above. */
-    if (!gram_factor(qr, 1e-6))
+    if (!gram_factor(square_of(qr->gram, k), LEAST_KEPT, qr->room))
         return;
     memcpy(qr->triangle, qr->gram, k * k * sizeof *qr->gram);
-    triangle_invert(qr);
-    qr->divide = triangle_condition(qr) < 30 * (double)k ? DIVIDE_MULTIPLY : DIVIDE_SOLVE;
+    divide_by_inverse(qr);
+    qr->divide = is_near(square_of(qr->inverse, k), qr->room) ? DIVIDE_MULTIPLY : DIVIDE_SOLVE;
     lines_pass(qr);
     partials_add(qr);
     *passes = 1;
-    if (!(identity_distance(qr->gram, k) < 1e-2) || !gram_factor(qr, 0.5))
+    if (!(identity_distance(qr->gram, k) < 1e-2) || !gram_factor(square_of(qr->gram, k), 0.5, qr->room))
         return;
-    triangle_invert(qr);
+    divide_by_inverse(qr);
     qr->divide = DIVIDE_MULTIPLY;
     qr->sum = false;
     lines_pass(qr);

@@ -61,7 +61,31 @@ double matrix_norm(struct matrix a);                             /* Frobenius, s
 void matrix_multiply(double alpha, struct matrix a, bool transpose_a, struct matrix b, bool transpose_b, double beta,
                      struct matrix c);                           /* c = alpha op(a) op(b) + beta c */
 void matrix_scale_columns(struct matrix a, const double *scale); /* a_ij *= scale_j */
-/* The same for tall a (and b in a'b) by the team: c = alpha a b + beta c, c = a'b. `work` from dense_work_size(lines,
+/* Steps of work on tall matrices in one round of the team; they do not depend on each other. A step does, for every
+   piece of lines, to = beta to + sum of alpha a op(b) over its terms     (b without data: alpha a) and then its sums,
+   over what `to` has become and over others of as many lines cross = a'b, or *dot = sum of a_ij b_ij where that is not
+   NULL `to` has no data in a step of sums alone. Sums are written when all steps are done, so that a cross may be some
+   term's b. work: tall_run_size(lines, columns, sums) for every step that has sums, with as many columns as its widest
+   matrix.
+ */
+enum { TALL_STEPS = 2, TALL_TERMS = 3, TALL_SUMS = 5 };
+struct tall_step {
+    struct matrix to;
+    double beta;
+    size_t terms, sums;
+    struct tall_term {
+        double alpha;
+        struct matrix a, b;
+        bool transpose; /* of b */
+    } term[TALL_TERMS];
+    struct tall_sum {
+        struct matrix a, b, cross;
+        double *dot;
+    } sum[TALL_SUMS];
+};
+void tall_run(fescue_context *context, const struct tall_step *step, size_t steps, double *work);
+size_t tall_run_size(size_t lines, size_t columns, size_t sums);
+/* One such thing alone: c = alpha a b + beta c, c = a'b. `work` from dense_work_size(lines,
    the larger number of columns). */
 void tall_multiply(fescue_context *context, double alpha, struct matrix a, struct matrix b, double beta,
                    struct matrix c);
@@ -84,6 +108,10 @@ fescue_status dense_qr(fescue_context *context, struct matrix a, struct matrix r
 fescue_status dense_svd(fescue_context *context, struct matrix a, double *s, struct matrix v, double *work);
 /* Symmetric a (k x k, upper used) = q diag(w) q', w ascending; q overwrites a. */
 fescue_status dense_eigen(fescue_context *context, struct matrix a, double *w, double *work);
+/* From gram = a'a (k x k, upper triangle used) the r of a = q r, which overwrites it, and the inverse of r, so that q =
+   a inverse: orthonormal to rounding times the square of a's condition, with its columns scaled to length 1, which is
+   below 30 k where this returns true. Otherwise both are spoilt. `work` of k doubles. */
+bool dense_gram_triangle(struct matrix gram, struct matrix inverse, double *work);
 /* Work, in doubles, that is enough for every dense_ routine on lines x columns. */
 size_t dense_work_size(size_t lines, size_t columns);
 

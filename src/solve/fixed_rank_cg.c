@@ -16,7 +16,8 @@
  *     1. g = projection of R + lambda X onto the tangents at X, from the two products R V and R'U; lambda X = U (lambda
  *        S) V' is tangent, so it joins the middle part exactly.
  *     2. D = -g + beta T(D_old), T the transport by projection, beta by Polak and Ribiere, never negative (Nocedal,
- *        Wright 2006, section 5.2). D = -g again when D is no clear descent.
+ *        Wright 2006, section 5.2), which needs <g, T(g_old)> but not T(g_old). D = -g again when D is no clear
+ * descent.
  *     3. On the tangent the objective is a parabola, so the step there is exact:
  *            t = -<g, D> / (|P(D)|^2 + lambda |D|^2).
  *     4. X_new = the matrix of rank r nearest to X + t D. Armijo with backtracking guards it (line.c).
@@ -45,7 +46,8 @@ struct fixed_rank_cg {
     struct fixed_rank_tangent gradient, trial_gradient, direction, moved;
     struct matrix scaled_left, scaled_right; /* U S, V S; scaled_left also holds a factor of the direction */
     struct solve_measure measure, trial_measure;
-    bool fresh; /* the direction is the negative gradient */
+    double slope, size; /* of the direction: <g, D> and <D, D> */
+    bool fresh;         /* the direction is the negative gradient */
 };
 
 /* ---- memory --------------------------------------------------------------------------------------------------------
@@ -122,9 +124,16 @@ static void trial_accept(struct fixed_rank_cg *cg)
     cg->measure = cg->trial_measure;
 }
 
+static void direction_weigh(struct fixed_rank_cg *cg)
+{
+    cg->slope = fixed_rank_inner(&cg->work, &cg->gradient, &cg->direction);
+    cg->size = fixed_rank_inner(&cg->work, &cg->direction, &cg->direction);
+}
+
 static void direction_restart(struct fixed_rank_cg *cg)
 {
     fixed_rank_add(&cg->work, -1, &cg->gradient, 0, &cg->direction);
+    direction_weigh(cg);
     cg->fresh = true;
 }
 
@@ -156,16 +165,16 @@ done:
 /* ---- one iteration -------------------------------------------------------------------------------------------------
  */
 
-/* Slope and curvature of the objective along the direction, on the tangent. One pass. */
-static void direction_measure(struct fixed_rank_cg *cg, double *slope, double *curvature)
+/* Curvature of the objective along the direction, on the tangent. One pass. */
+static double direction_curvature(struct fixed_rank_cg *cg)
 {
     const struct low_rank *x = &cg->point;
     const struct fixed_rank_tangent *d = &cg->direction;
+    double curvature;
     fixed_rank_pairs(&cg->work, x, d, cg->scaled_left);
     sweep_tangent(&cg->field->sweep, field_rows(cg->field), cg->scaled_left, x->right, x->left, d->right, NULL, NULL,
-                  curvature);
-    *curvature += cg->field->problem->lambda * fixed_rank_inner(&cg->work, d, d);
-    *slope = fixed_rank_inner(&cg->work, &cg->gradient, d);
+                  &curvature);
+    return curvature + cg->field->problem->lambda * cg->size;
 }
 
 /* The direction for this iteration, carried over from the point before (which cg->trial still holds; its gradient is in
@@ -173,34 +182,33 @@ static void direction_measure(struct fixed_rank_cg *cg, double *slope, double *c
 static void direction_choose(struct fixed_rank_cg *cg, double old_gradient)
 {
     double new_gradient = cg->measure.gradient;
-    fixed_rank_transport(&cg->work, &cg->trial, &cg->trial_gradient, &cg->point, &cg->moved);
-    double turned = fixed_rank_inner(&cg->work, &cg->gradient, &cg->moved);
+    double turned = fixed_rank_inner_apart(&cg->work, &cg->trial, &cg->trial_gradient, &cg->point, &cg->gradient);
     double beta = (new_gradient * new_gradient - turned) / (old_gradient * old_gradient);
     if (!(beta > 0)) {
         direction_restart(cg);
         return;
     }
-    fixed_rank_transport(&cg->work, &cg->trial, &cg->direction, &cg->point, &cg->moved);
-    fixed_rank_add(&cg->work, beta, &cg->moved, 0, &cg->direction);
-    fixed_rank_add(&cg->work, -1, &cg->gradient, 1, &cg->direction);
+    struct fixed_rank_tangent old = cg->direction;
+    fixed_rank_transport(&cg->work, &cg->trial, &old, &cg->point, &cg->moved);
+    fixed_rank_add(&cg->work, -1, &cg->gradient, beta, &cg->moved);
+    cg->direction = cg->moved;
+    cg->moved = old;
     cg->fresh = false;
-    double descent = -fixed_rank_inner(&cg->work, &cg->gradient, &cg->direction);
-    double length = sqrt(fixed_rank_inner(&cg->work, &cg->direction, &cg->direction));
-    if (!(descent > least_cosine * new_gradient * length))
+    direction_weigh(cg);
+    if (!(-cg->slope > least_cosine * new_gradient * sqrt(cg->size)))
         direction_restart(cg);
 }
 
 /* Goes along the direction; *moved = false when nothing better was found, and the point is as before. */
 static fescue_status line_follow(struct fixed_rank_cg *cg, bool *moved)
 {
-    double slope, curvature;
     fescue_status status = FESCUE_OK;
     *moved = false;
-    direction_measure(cg, &slope, &curvature);
-    if (!(slope < 0) || !(curvature > 0))
+    double curvature = direction_curvature(cg);
+    if (!(cg->slope < 0) || !(curvature > 0))
         return status;
-    struct line line = line_start(cg->field->problem, &cg->measure, slope);
-    double t = -slope / curvature;
+    struct line line = line_start(cg->field->problem, &cg->measure, cg->slope);
+    double t = -cg->slope / curvature;
     for (int trial = 0; trial < LINE_MOST_TRIALS; trial++) {
         TRY(fixed_rank_retract(&cg->work, &cg->point, &cg->direction, t, &cg->trial));
         trial_evaluate(cg);
@@ -265,6 +273,7 @@ static void cg_resume(void *state)
     trial_evaluate(cg);
     trial_differentiate(cg);
     trial_accept(cg);
+    direction_weigh(cg);
 }
 
 static fescue_status cg_point_write(void *state, struct low_rank *point)

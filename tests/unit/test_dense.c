@@ -544,6 +544,79 @@ static void tall_products_by_the_team(void **state)
         stand_close(&stand[s]);
 }
 
+/* Two steps of unequal length in one round, with all that a step can do, are what plain products make one after the
+   other, and do not depend on the workers. */
+static void steps_check(fescue_context *context, size_t columns)
+{
+    enum { WORKERS = 2 };
+    static const size_t lines[TALL_STEPS] = {9000, 2500};
+    struct stand own[WORKERS][TALL_STEPS], plain[TALL_STEPS];
+    double dot[WORKERS][TALL_STEPS], *work[WORKERS];
+    size_t size = tall_run_size(lines[0], columns, 3) + tall_run_size(lines[1], columns, 3);
+    for (int w = 0; w < WORKERS; w++) {
+        struct tall_step step[TALL_STEPS];
+        for (size_t s = 0; s < TALL_STEPS; s++) {
+            struct stand *at = &own[w][s];
+            stand_open(at, context, (struct shape){lines[s], columns});
+            matrix_multiply(0.1, at->a, true, at->copy, false, 0, at->r);
+            MATRIX_AT(at->r, 0, columns - 1) = 7; /* no longer symmetric */
+            step[s] = (struct tall_step){
+                .to = at->copy,
+                .beta = -0.5,
+                .terms = 3,
+                .term = {{1e-3, at->a, at->r, false}, {2, at->a, {0}, false}, {2e-3, at->a, at->r, true}},
+                .sums = 3,
+                .sum = {{.a = at->a, .b = at->copy, .cross = at->product},
+                        {.a = at->copy, .b = at->copy, .cross = at->square},
+                        {.a = at->a, .b = at->copy, .dot = &dot[w][s]}},
+            };
+        }
+        assert_status(context, TAKE(context, size, &work[w]), FESCUE_OK);
+        assert_status(context, team_resize(context, w == 0 ? 1 : 3), FESCUE_OK);
+        tall_run(context, step, TALL_STEPS, work[w]);
+    }
+    assert_status(context, team_resize(context, 1), FESCUE_OK);
+    for (size_t s = 0; s < TALL_STEPS; s++) {
+        struct stand *one = &own[0][s], *three = &own[1][s];
+        double largest = 0;
+        stand_open(&plain[s], context, (struct shape){lines[s], columns});
+        matrix_multiply(1e-3, plain[s].a, false, one->r, false, -0.5, plain[s].copy);
+        matrix_add(2, plain[s].a, plain[s].copy);
+        matrix_multiply(2e-3, plain[s].a, false, one->r, true, 1, plain[s].copy);
+        for (size_t i = 0; i < lines[s]; i++)
+            for (size_t j = 0; j < columns; j++)
+                largest = fmax(largest, fabs(MATRIX_AT(plain[s].copy, i, j)));
+        for (size_t i = 0; i < lines[s]; i++)
+            for (size_t j = 0; j < columns; j++) {
+                assert_true(MATRIX_AT(one->copy, i, j) == MATRIX_AT(three->copy, i, j));
+                assert_close(MATRIX_AT(one->copy, i, j), MATRIX_AT(plain[s].copy, i, j), 1e-12 * largest);
+            }
+        matrix_multiply(1, plain[s].a, true, plain[s].copy, false, 0, plain[s].product);
+        matrix_multiply(1, plain[s].copy, true, plain[s].copy, false, 0, plain[s].square);
+        for (size_t i = 0; i < columns; i++)
+            for (size_t j = 0; j < columns; j++) {
+                double rounding = 1e-12 * (double)lines[s] * largest;
+                assert_true(MATRIX_AT(one->product, i, j) == MATRIX_AT(three->product, i, j) &&
+                            MATRIX_AT(one->square, i, j) == MATRIX_AT(three->square, i, j));
+                assert_close(MATRIX_AT(one->product, i, j), MATRIX_AT(plain[s].product, i, j), 4 * rounding);
+                assert_close(MATRIX_AT(one->square, i, j), MATRIX_AT(plain[s].square, i, j), rounding * largest);
+            }
+        assert_true(dot[0][s] == dot[1][s]);
+        assert_close(dot[0][s], matrix_dot(plain[s].a, plain[s].copy), 1e-12 * (double)(lines[s] * columns) * largest);
+        stand_close(one);
+        stand_close(three);
+        stand_close(&plain[s]);
+    }
+    for (int w = 0; w < WORKERS; w++)
+        GIVE(context, &work[w]);
+}
+static void steps_in_one_round(void **state)
+{
+    static const size_t columns[] = {1, 5, 16, 64, 70};
+    for (size_t k = 0; k < COUNT(columns); k++)
+        steps_check(bench_of(state)->context, columns[k]);
+}
+
 static void what_is_not_finite_is_refused(void **state)
 {
     struct stand stand;
@@ -577,6 +650,7 @@ int main(void)
         BENCH_TEST(products_of_tall_matrices),
         BENCH_TEST(narrow_products_are_those_of_plain_loops),
         BENCH_TEST(tall_products_by_the_team),
+        BENCH_TEST(steps_in_one_round),
         BENCH_TEST(what_is_not_finite_is_refused),
     };
     return cmocka_run_group_tests(tests, NULL, NULL);

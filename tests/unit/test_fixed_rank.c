@@ -7,8 +7,9 @@
 
 static const struct {
     size_t rows, columns, rank;
-} shapes[] = {{1, 1, 1}, {1, 4, 1},   {5, 1, 1},   {6, 5, 2},  {5, 9, 3},  {9, 5, 3},   {4, 4, 4},  {9, 4, 4},
-              {4, 9, 4}, {12, 12, 6}, {11, 13, 6}, {3, 40, 3}, {40, 7, 6}, {30, 20, 5}, {20, 30, 5}};
+} shapes[] = {{1, 1, 1},  {1, 4, 1},   {5, 1, 1},   {6, 5, 2},   {5, 9, 3},    {9, 5, 3},
+              {4, 4, 4},  {9, 4, 4},   {4, 9, 4},   {12, 12, 6}, {11, 13, 6},  {3, 40, 3},
+              {40, 7, 6}, {30, 20, 5}, {20, 30, 5}, {60, 90, 4}, {130, 80, 10}};
 enum { SHAPES = sizeof shapes / sizeof shapes[0] };
 
 /* A random point with a random unit tangent at one shape, and the work. */
@@ -240,21 +241,26 @@ static void the_metric_retraction_is_the_truncated_svd(void **state)
     at_every_shape(state, check_metric);
 }
 
-/* Tangents whose normal parts lose rank, vanish, or undo the point: the frames stay orthonormal, the nearest matrix is
-   met. */
+/* Tangents whose normal parts lose rank, nearly or wholly, vanish, or undo the point: the frames stay orthonormal, the
+   nearest matrix is met. */
 static void check_degenerate(struct scene *scene)
 {
     struct ground *ground = scene->ground;
     size_t rank = scene->work.rank;
     double *spectrum = zeros(ground, 1, rank).data;
-    for (int kind = 0; kind < 4; kind++) {
+    for (int kind = 0; kind < 8; kind++) {
+        double nearly = kind < 4 ? 1e-14 : pow(10, 1 - kind);
         scene->tangent = random_tangent(scene);
+        for (size_t i = 0; i < scene->work.rows && kind >= 4; i++) /* all columns of Up nearly the same */
+            for (size_t k = 1; k < rank; k++)
+                MATRIX_AT(scene->tangent.left, i, k) =
+                    MATRIX_AT(scene->tangent.left, i, 0) + nearly * MATRIX_AT(scene->tangent.left, i, k);
         for (size_t i = 0; i < scene->work.rows && kind == 0; i++) /* one column of Up repeats, one is tiny */
             for (size_t k = 1; k < rank; k++)
-                MATRIX_AT(scene->tangent.left, i, k) = MATRIX_AT(scene->tangent.left, i, 0) * (k == 1 ? 1 : 1e-14);
-        if (kind >= 1)
+                MATRIX_AT(scene->tangent.left, i, k) = MATRIX_AT(scene->tangent.left, i, 0) * (k == 1 ? 1 : nearly);
+        if (kind >= 1 && kind < 4)
             matrix_zero(scene->tangent.right);
-        if (kind >= 2)
+        if (kind == 2 || kind == 3)
             matrix_zero(scene->tangent.left);
         if (kind == 3) { /* X + Z = 0 */
             matrix_zero(scene->tangent.middle);
@@ -338,6 +344,11 @@ static void check_transport(struct scene *scene)
     assert_true(overlap(scene->to.right, moved.right) <= rounding(dense));
     fixed_rank_add(&scene->work, -1, &moved, 1, &wanted);
     assert_close(sqrt(fixed_rank_inner(&scene->work, &wanted, &wanted)), 0, 10 * rounding(dense));
+    struct fixed_rank_tangent there =
+        projected(scene, &scene->to, normals(ground, scene->work.rows, scene->work.columns));
+    assert_close(fixed_rank_inner_apart(&scene->work, &scene->point, &k, &scene->to, &there),
+                 fixed_rank_inner(&scene->work, &moved, &there),
+                 10 * rounding(dense) * sqrt(fixed_rank_inner(&scene->work, &there, &there)));
     fixed_rank_transport(&scene->work, &scene->point, &k, &scene->point, &moved);
     fixed_rank_add(&scene->work, -1, &k, 1, &moved);
     assert_close(sqrt(fixed_rank_inner(&scene->work, &moved, &moved)), 0, 4 * rounding(dense));
