@@ -197,9 +197,6 @@ static fescue_status core_factor(struct fixed_rank_work *work, struct matrix hig
 /* ---- without Q ----------------------------------------------------------------------------------------------------
  */
 
-/* Below this many lines a column the sums cost what they save. */
-enum { LINES_A_COLUMN = 4 };
-
 static struct tall_step pair_gram(const struct side *side)
 {
     struct matrix gram = side->triangle, f = side->frame, n = side->normal;

@@ -23,9 +23,11 @@ void grassmann_reserve(struct arena *arena, size_t rows, size_t rank)
     matrix_reserve(arena, rows, rank);
     matrix_reserve(arena, rank, rank);
     matrix_reserve(arena, rank, rank);
+    matrix_reserve(arena, rank, rank);
     arena_reserve(arena, rank, sizeof(double));
     arena_reserve(arena, rank, sizeof(double));
     arena_reserve(arena, dense_work_size(rows, rank), sizeof(double));
+    arena_reserve(arena, tall_run_size(rows, rank, 3), sizeof(double));
 }
 
 struct grassmann_work grassmann_carve(fescue_context *context, struct arena *arena, size_t rows, size_t rank)
@@ -36,9 +38,11 @@ struct grassmann_work grassmann_carve(fescue_context *context, struct arena *are
     work.other = matrix_carve(arena, rows, rank);
     work.core = matrix_carve(arena, rank, rank);
     work.second_core = matrix_carve(arena, rank, rank);
+    work.inverse = matrix_carve(arena, rank, rank);
     work.sine = arena_carve(arena, rank, sizeof(double));
     work.cosine = arena_carve(arena, rank, sizeof(double));
     work.dense = arena_carve(arena, dense_work_size(rows, rank), sizeof(double));
+    work.sums = arena_carve(arena, tall_run_size(rows, rank, 3), sizeof(double));
     return work;
 }
 
@@ -49,16 +53,57 @@ void grassmann_project(struct grassmann_work *work, struct matrix point, struct 
         matrix_zero(z);
         return;
     }
-    for (int pass = 0; pass < 2; pass++) {
-        tall_cross(work->context, point, z, work->core, work->dense);
-        tall_multiply(work->context, -1, point, work->core, 1, z);
-    }
+    tall_cross(work->context, point, z, work->core, work->dense);
+    const struct tall_step once = {.to = z,
+                                   .beta = 1,
+                                   .terms = 1,
+                                   .term = {{-1, point, work->core, false}},
+                                   .sums = 1,
+                                   .sum = {{.a = point, .b = z, .cross = work->core}}};
+    tall_run(work->context, &once, 1, work->sums);
+    tall_multiply(work->context, -1, point, work->core, 1, z);
+}
+
+/* tall = (U + tD) R^-1 with R'R = (U + tD)'(U + tD) from sums of products, and of that the same once more: Cholesky QR
+   (dense_qr.c), the first pass of which need not make U + tD. False where that is not sure enough, or small. */
+static bool retract_by_sums(struct grassmann_work *work, struct matrix point, struct matrix d, double t,
+                            struct matrix to)
+{
+    struct matrix gram = work->core, half = work->second_core, inverse = work->inverse;
+    size_t rank = work->rank;
+    const struct tall_step sums = {.sums = 3,
+                                   .sum = {{.a = point, .b = point, .cross = gram},
+                                           {.a = point, .b = d, .cross = half},
+                                           {.a = d, .b = d, .cross = inverse}}};
+    if (work->rows < LINES_A_COLUMN * rank)
+        return false;
+    tall_run(work->context, &sums, 1, work->sums);
+    for (size_t i = 0; i < rank; i++)
+        for (size_t j = i; j < rank; j++)
+            MATRIX_AT(gram, i, j) +=
+                t * (MATRIX_AT(half, i, j) + MATRIX_AT(half, j, i)) + t * t * MATRIX_AT(inverse, i, j);
+    if (!dense_gram_triangle(gram, inverse, work->sine))
+        return false;
+    matrix_copy(inverse, half);
+    matrix_scale(t, half);
+    const struct tall_step divided = {.to = work->tall,
+                                      .terms = 2,
+                                      .term = {{1, point, inverse, false}, {1, d, half, false}},
+                                      .sums = 1,
+                                      .sum = {{.a = work->tall, .b = work->tall, .cross = gram}}};
+    tall_run(work->context, &divided, 1, work->sums);
+    if (!dense_gram_triangle(gram, inverse, work->sine))
+        return false;
+    tall_multiply(work->context, 1, work->tall, inverse, 0, to);
+    return true;
 }
 
 fescue_status grassmann_retract_qr(struct grassmann_work *work, struct matrix point, struct matrix tangent, double t,
                                    struct matrix to)
 {
-    fescue_status status;
+    fescue_status status = FESCUE_OK;
+    if (retract_by_sums(work, point, tangent, t, to))
+        return status;
     tall_copy(work->context, point, NULL, work->tall);
     tall_add(work->context, t, tangent, 1, work->tall);
     TRY(dense_qr(work->context, work->tall, (struct matrix){0}, work->dense));

@@ -60,10 +60,10 @@ struct grassmann_work {
     fescue_context *context;
     size_t rows, rank;
     struct grassmann_geodesic geodesic;
-    struct matrix tall, other;       /* rows x rank */
-    struct matrix core, second_core; /* rank x rank */
-    double *sine, *cosine;           /* rank */
-    double *dense;
+    struct matrix tall, other;                /* rows x rank */
+    struct matrix core, second_core, inverse; /* rank x rank */
+    double *sine, *cosine;                    /* rank */
+    double *dense, *sums;
 };
 void grassmann_reserve(struct arena *arena, size_t rows, size_t rank);
 struct grassmann_work grassmann_carve(fescue_context *context, struct arena *arena, size_t rows, size_t rank);

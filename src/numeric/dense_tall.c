@@ -261,19 +261,52 @@ void tall_scale_lines(fescue_context *context, struct matrix from, const double 
     team_run(context, tall.pieces.count, scale_piece, &tall);
 }
 
+/* Lines side by side, number j of lane l at [j][l]: every lane goes through the same factor. */
+enum { SOLVE_LANES = 8, SOLVE_MOST = 260 };
+
+NUMERIC_VERSIONS static void lanes_solve(const double *factor, size_t k, double lanes[][SOLVE_LANES])
+{
+    for (size_t j = 0; j < k; j++) {
+        double pivot = factor[packed_size(j) + j];
+        for (size_t l = 0; l < SOLVE_LANES; l++)
+            lanes[j][l] /= pivot;
+        for (size_t i = j + 1; i < k; i++)
+            for (size_t l = 0; l < SOLVE_LANES; l++)
+                lanes[i][l] -= factor[packed_size(i) + j] * lanes[j][l];
+    }
+    for (size_t i = k; i-- > 0;) {
+        const double *row = factor + packed_size(i);
+        for (size_t l = 0; l < SOLVE_LANES; l++)
+            lanes[i][l] /= row[i];
+        for (size_t j = 0; j < i; j++)
+            for (size_t l = 0; l < SOLVE_LANES; l++)
+                lanes[j][l] -= row[j] * lanes[i][l];
+    }
+}
+
 static void solve_piece(void *job, size_t piece, size_t worker)
 {
     const struct tall *tall = job;
-    struct matrix to = dense_piece(tall->b, &tall->pieces, piece);
+    struct matrix from = dense_piece(tall->a, &tall->pieces, piece), to = dense_piece(tall->b, &tall->pieces, piece);
+    double lanes[SOLVE_MOST][SOLVE_LANES];
     (void)worker;
-    matrix_copy(dense_piece(tall->a, &tall->pieces, piece), to);
-    for (size_t i = 0; i < to.rows; i++)
-        packed_solve(tall->scale, to.columns, &MATRIX_AT(to, i, 0));
+    memset(lanes, 0, sizeof lanes);
+    for (size_t first = 0; first < to.rows; first += SOLVE_LANES) {
+        size_t count = to.rows - first < SOLVE_LANES ? to.rows - first : SOLVE_LANES;
+        for (size_t l = 0; l < count; l++)
+            for (size_t j = 0; j < to.columns; j++)
+                lanes[j][l] = MATRIX_AT(from, first + l, j);
+        lanes_solve(tall->scale, to.columns, lanes);
+        for (size_t l = 0; l < count; l++)
+            for (size_t j = 0; j < to.columns; j++)
+                MATRIX_AT(to, first + l, j) = lanes[j][l];
+    }
 }
 
 void tall_solve(fescue_context *context, const double *factor, struct matrix from, struct matrix to)
 {
     struct tall tall = tall_of(from, to);
+    assert(to.columns <= SOLVE_MOST);
     tall.scale = factor;
     team_run(context, tall.pieces.count, solve_piece, &tall);
 }

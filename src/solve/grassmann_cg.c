@@ -185,22 +185,37 @@ static void direction_choose(struct grassmann_cg *cg)
 {
     struct projection *p = &cg->projection;
     struct matrix d = cg->direction;
+    double old, turned, turned_old, descent, square;
     grassmann_project(&cg->work, p->basis, d);
-    double above = cg->steepness - tall_dot(cg->work.context, cg->descent, cg->gradient);
-    double below = tall_dot(cg->work.context, d, p->gradient) - tall_dot(cg->work.context, d, cg->gradient);
-    double beta = above / below;
+    const struct tall_step before = {.sums = 3,
+                                     .sum = {{.a = cg->descent, .b = cg->gradient, .dot = &old},
+                                             {.a = d, .b = p->gradient, .dot = &turned},
+                                             {.a = d, .b = cg->gradient, .dot = &turned_old}}};
+    tall_run(cg->work.context, &before, 1, cg->work.sums);
+    double beta = (cg->steepness - old) / (turned - turned_old);
     if (!(beta > 0) || !isfinite(beta)) {
         direction_restart(cg);
         return;
     }
-    tall_add(cg->work.context, -1, cg->descent, beta, d);
     cg->fresh = false;
     /* Lengths in the metric: |D| is that of D W', |z| is the square root of the steepness. */
-    double descent = -tall_dot(cg->work.context, d, p->gradient);
-    tall_cross(cg->work.context, p->weights, p->weights, p->core, p->dense);
-    tall_multiply(cg->work.context, 1, d, p->core, 0, cg->gradient);
-    double length = sqrt(fmax(tall_dot(cg->work.context, d, cg->gradient), 0));
-    if (!(descent > least_cosine * cg->measure.gradient * length))
+    const struct tall_step next[] = {
+        {.to = d,
+         .beta = beta,
+         .terms = 1,
+         .term = {{.alpha = -1, .a = cg->descent}},
+         .sums = 1,
+         .sum = {{.a = d, .b = p->gradient, .dot = &descent}}},
+        {.sums = 1, .sum = {{.a = p->weights, .b = p->weights, .cross = p->core}}},
+    };
+    tall_run(cg->work.context, next, 2, p->dense);
+    const struct tall_step length = {.to = cg->gradient,
+                                     .terms = 1,
+                                     .term = {{1, d, p->core, false}},
+                                     .sums = 1,
+                                     .sum = {{.a = d, .b = cg->gradient, .dot = &square}}};
+    tall_run(cg->work.context, &length, 1, cg->work.sums);
+    if (!(-descent > least_cosine * cg->measure.gradient * sqrt(fmax(square, 0))))
         direction_restart(cg);
 }
 

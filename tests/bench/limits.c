@@ -135,6 +135,29 @@ static double two_times(struct two *two, team_task *task)
     return bench_median(times, TWO_ROUNDS);
 }
 
+static const double block_seconds = 10e-6;
+
+static void two_wait(void *job, size_t block, size_t worker)
+{
+    (void)job, (void)block, (void)worker;
+    for (double end = clock_wall() + block_seconds; clock_wall() < end;)
+        ;
+}
+
+/* Seconds of a round of two short blocks over those of one block: what calling the other thread costs. */
+static double two_call(struct two *two)
+{
+    enum { ROUNDS = 1000 };
+    double seconds[TWO_ROUNDS];
+    for (int k = 0; k < TWO_ROUNDS; k++) {
+        double wall = clock_wall();
+        for (int round = 0; round < ROUNDS; round++)
+            team_run(two->context, 2, two_wait, two);
+        seconds[k] = (clock_wall() - wall) / ROUNDS - block_seconds;
+    }
+    return bench_median(seconds, TWO_ROUNDS);
+}
+
 static struct two *two_open(void)
 {
     static struct two two;
@@ -178,4 +201,6 @@ void limits_measure(struct bench *bench)
     bench->limit[LIMIT_TWO_COPY] = two_times(two, two_copy);
     figure_add(bench, json_pack("{s:s, s:i, s:f, s:f}", "what", "limit: times one thread", "threads", 2, "of products",
                                 bench->limit[LIMIT_TWO_DGEMM], "of copies", bench->limit[LIMIT_TWO_COPY]));
+    figure_add(bench, json_pack("{s:s, s:i, s:f}", "what", "limit: calling the other", "threads", 2, "us",
+                                1e6 * two_call(two)));
 }

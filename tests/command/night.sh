@@ -186,15 +186,24 @@ try 0 night --list sample.ini
 check "the sample plan has its jobs" grep -q 'cider-panel .*, after fen-levels' out
 
 # ---- locks ------------------------------------------------------------------------------------------------------------
-"$FESCUE" night short.ini --for 60 2>first &
+# A job that outlasts by far what the second night waits for the first.
+cat >long.ini <<'PLAN'
+[large]
+input = large/table.mtx
+solver = subgradient
+rank = 12
+tolerance = 0
+iterations = 1000000
+PLAN
+"$FESCUE" night long.ini 2>first &
 child=$!
 n=0
-until [ -s short-ledger.lock ] || [ $n -gt 100 ]; do sleep 0.05; n=$((n + 1)); done
-try 73 night short.ini
-check "two nights of one plan do not run at once" grep -q "short.ini: process $child is at work on it" err
+until [ -s long-ledger.lock ] || [ $n -gt 100 ]; do sleep 0.05; n=$((n + 1)); done
+try 73 night long.ini
+check "two nights of one plan do not run at once" grep -q "long.ini: process $child is at work on it" err
 kill -9 $child
 wait $child 2>/dev/null
-check "the dead one's lock is there" test -e short-ledger.lock
-try 75 night short.ini
-check "and is taken over" test ! -e short-ledger.lock
+check "the dead one's lock is there" test -e long-ledger.lock
+try 75 night long.ini --for 0.3
+check "and is taken over" test ! -e long-ledger.lock
 finish

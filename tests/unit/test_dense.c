@@ -489,14 +489,14 @@ static void tall_products_by_the_team(void **state)
     fescue_context *context = bench_of(state)->context;
     static const double scale[] = {2, 3, 0, -1, 5, 1, 1, 0.5};
     struct stand stand[3];
-    double dot[3], square[3], lines[20000], factor[8 * 9 / 2] = {0};
-    for (size_t i = 0; i < 20000; i++)
+    double dot[3], square[3], lines[20003], factor[8 * 9 / 2] = {0};
+    for (size_t i = 0; i < 20003; i++)
         lines[i] = 1 + (double)(i % 7);
-    for (size_t k = 0; k < 8; k++) /* of a diagonal matrix but for its last row, (1 0 .. 0 1) */
-        factor[packed_size(k) + k] = 1 + (double)k;
-    factor[packed_size(7)] = 1;
+    for (size_t i = 0; i < 8; i++)
+        for (size_t j = 0; j <= i; j++)
+            factor[packed_size(i) + j] = i == j ? 1 + (double)i : 0.25 * (double)(i + 2 * j) - 1;
     for (size_t s = 0; s < 3; s++) {
-        stand_open(&stand[s], context, (struct shape){20000, 8});
+        stand_open(&stand[s], context, (struct shape){20003, 8});
         struct matrix a = stand[s].a, b = stand[s].copy;
         assert_status(context, team_resize(context, s == 1 ? 3 : 1), FESCUE_OK);
         if (s < 2) {
@@ -517,11 +517,11 @@ static void tall_products_by_the_team(void **state)
             matrix_add(-2, a, b);
             dot[s] = matrix_dot(a, b);
             square[s] = 0;
-            for (size_t i = 0; i < 20000; i++)
+            for (size_t i = 0; i < 20003; i++)
                 for (size_t j = 0; j < 8; j++)
                     square[s] += lines[j] * MATRIX_AT(a, i, j) * MATRIX_AT(a, i, j);
             matrix_multiply(1e-3, a, false, stand[s].product, true, 2, b);
-            for (size_t i = 0; i < 20000; i++) {
+            for (size_t i = 0; i < 20003; i++) {
                 for (size_t j = 0; j < 8; j++)
                     MATRIX_AT(b, i, j) *= lines[i];
                 packed_solve(factor, 8, &MATRIX_AT(b, i, 0));
@@ -530,10 +530,10 @@ static void tall_products_by_the_team(void **state)
         }
     }
     assert_true(dot[0] == dot[1]);
-    assert_close(dot[0], dot[2], 1e-11 * 20000 * 20);
+    assert_close(dot[0], dot[2], 1e-11 * 20003 * 20);
     assert_true(square[0] == square[1]);
     assert_close(square[0], square[2], 1e-11 * square[2]);
-    for (size_t i = 0; i < 20000; i++)
+    for (size_t i = 0; i < 20003; i++)
         for (size_t j = 0; j < 8; j++) {
             double one = MATRIX_AT(stand[0].copy, i, j), plain = MATRIX_AT(stand[2].copy, i, j);
             assert_true(one == MATRIX_AT(stand[1].copy, i, j) && one == MATRIX_AT(stand[0].a, i, j));
