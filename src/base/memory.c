@@ -59,10 +59,9 @@ static void *pointer_load(const void *place)
  */
 static void pages_enlarge(void *taken, size_t size)
 {
-    enum { LEAST_PAGES = 4 };
     uintptr_t first = ((uintptr_t)taken + MEMORY_LARGE_PAGE - 1) & ~(uintptr_t)(MEMORY_LARGE_PAGE - 1);
     uintptr_t end = ((uintptr_t)taken + size) & ~(uintptr_t)(MEMORY_LARGE_PAGE - 1);
-    if (size >= LEAST_PAGES * (size_t)MEMORY_LARGE_PAGE)
+    if (first < end)
         (void)madvise((void *)first, end - first, MADV_HUGEPAGE); /* a wish: it may be refused */
 }
 
