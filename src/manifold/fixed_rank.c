@@ -63,8 +63,8 @@ double fixed_rank_inner(const struct fixed_rank_work *work, const struct fixed_r
     return matrix_dot(x->middle, y->middle) + left + right;
 }
 
-/* z->left and z->right, which lie nearly so, become orthogonal to the frames to rounding of their own size; *within, on
-   entry frame'normal of either side, is taken off first. */
+/* The second time: what the products of frame and normal part in the work's small matrices tell to be left within the
+   frames goes, and the normal parts are orthogonal to them to rounding of their own size. */
 static void normals_settle(struct fixed_rank_work *work, const struct low_rank *point, struct fixed_rank_tangent *z)
 {
     const struct tall_step sides[] = {
@@ -114,8 +114,7 @@ void fixed_rank_pairs(const struct fixed_rank_work *work, const struct low_rank 
     tall_run(work->context, &step, 1, NULL);
 }
 
-/* ---- two points ---------------------------------------------------------------------------------------------------
- */
+/* ---- two points ------------------------------------------------------------------------------------------------ */
 
 /* What a tangent Z at one point looks like from another, W diag(.) T':  Z T = U k + Up v,  Z'W = V l + Vp u. */
 struct view {
@@ -175,27 +174,27 @@ double fixed_rank_inner_apart(struct fixed_rank_work *work, const struct low_ran
                               const struct fixed_rank_tangent *y)
 {
     struct view view = view_of(work);
-    struct matrix far_frame = matrix_quarter(work->core_right, 0, 0),
-                  far_normal = matrix_quarter(work->core_right, 0, 1),
-                  far_right = matrix_quarter(work->core_right, 1, 0),
-                  far_right_normal = matrix_quarter(work->core_right, 1, 1);
+    struct matrix frame_left = matrix_quarter(work->core_right, 0, 0), /* U'Yp */
+        normal_left = matrix_quarter(work->core_right, 0, 1),          /* Up'Yp */
+        frame_right = matrix_quarter(work->core_right, 1, 0),          /* V'Yv */
+        normal_right = matrix_quarter(work->core_right, 1, 1);         /* Vp'Yv */
     const struct tall_step look[] = {
         {.sums = 4,
          .sum = {{.a = from->left, .b = to->left, .cross = view.u},
                  {.a = z->left, .b = to->left, .cross = view.l},
-                 {.a = from->left, .b = y->left, .cross = far_frame},
-                 {.a = z->left, .b = y->left, .cross = far_normal}}},
+                 {.a = from->left, .b = y->left, .cross = frame_left},
+                 {.a = z->left, .b = y->left, .cross = normal_left}}},
         {.sums = 4,
          .sum = {{.a = from->right, .b = to->right, .cross = view.v},
                  {.a = z->right, .b = to->right, .cross = view.k},
-                 {.a = from->right, .b = y->right, .cross = far_right},
-                 {.a = z->right, .b = y->right, .cross = far_right_normal}}},
+                 {.a = from->right, .b = y->right, .cross = frame_right},
+                 {.a = z->right, .b = y->right, .cross = normal_right}}},
     };
     tall_run(work->context, look, 2, work->sums);
     /* U'(W N + Yp) and Up'(W N + Yp), N the middle of Y */
-    matrix_multiply(1, view.u, false, y->middle, false, 1, far_frame);
-    matrix_multiply(1, view.l, false, y->middle, false, 1, far_normal);
+    matrix_multiply(1, view.u, false, y->middle, false, 1, frame_left);
+    matrix_multiply(1, view.l, false, y->middle, false, 1, normal_left);
     view_finish(z, &view, NULL);
-    return matrix_dot(view.k, far_frame) + matrix_dot(view.v, far_normal) + matrix_dot(view.l, far_right) +
-           matrix_dot(view.u, far_right_normal);
+    return matrix_dot(view.k, frame_left) + matrix_dot(view.v, normal_left) + matrix_dot(view.l, frame_right) +
+           matrix_dot(view.u, normal_right);
 }

@@ -143,7 +143,7 @@ static struct side right_side(const struct fixed_rank_work *work, const struct l
     return (struct side){point->right, z->right, work->tall_right, work->triangle_right, work->inverse_right};
 }
 
-/* ---- metric projection ------------------------------------------------------------------------------------------ */
+/* ---- metric projection, by QR ----------------------------------------------------------------------------------- */
 
 static bool is_wide(struct matrix a)
 {
@@ -194,8 +194,7 @@ static fescue_status core_factor(struct fixed_rank_work *work, struct matrix hig
     return dense_svd(work->context, *high_vectors, work->spectrum, *low_vectors, work->dense);
 }
 
-/* ---- without Q ----------------------------------------------------------------------------------------------------
- */
+/* ---- without Q ------------------------------------------------------------------------------------------------- */
 
 static struct tall_step pair_gram(const struct side *side)
 {
@@ -275,8 +274,7 @@ static fescue_status pairs_turn(struct fixed_rank_work *work, const struct side 
     return frames_settle(work, a, b, to);
 }
 
-/* ---- either way ---------------------------------------------------------------------------------------------------
- */
+/* ---- either way ------------------------------------------------------------------------------------------------ */
 
 fescue_status fixed_rank_retract(struct fixed_rank_work *work, const struct low_rank *point,
                                  const struct fixed_rank_tangent *z, double t, struct low_rank *to)

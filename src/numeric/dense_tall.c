@@ -78,7 +78,7 @@ NUMERIC_VERSIONS static void lines_add(double alpha, struct matrix x, double bet
 /* c = alpha a b + beta c for one piece. */
 static void term_add(const struct tall_term *term, struct matrix a, double beta, struct matrix c)
 {
-    if (term->b.data == NULL)
+    if (term->b.data == NULL && a.columns > 0)
         lines_add(term->alpha, a, beta, c);
     else if (c.columns > TALL_MOST || a.columns == 0)
         matrix_multiply(term->alpha, a, false, term->b, term->transpose, beta, c);
