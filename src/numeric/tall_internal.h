@@ -1,6 +1,6 @@
 /* SPDX-License-Identifier: MIT
  *
- * Between the products of tall matrices (dense_tall.c) and their kernels (tall_kernel.h, included once for each
+ * Between the products of tall matrices (tall_step.c) and their kernels (tall_kernel.h, included once for each
  * instruction set).
  */
 #ifndef FESCUE_NUMERIC_TALL_INTERNAL_H
