@@ -54,7 +54,7 @@ static void *pointer_load(const void *place)
     return block;
 }
 
-/* A block this large gets pages of 2 MB, where the system has them: its first touch then costs a fifth, and so do
+/* A block that spans pages of 2 MB gets such, where the system has them: its first touch then costs a fifth, and so do
    random accesses, which nearly all miss the table of small pages. Only whole pages inside of it: no byte more is used.
  */
 static void pages_enlarge(void *taken, size_t size)

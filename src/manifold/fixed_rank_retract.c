@@ -210,7 +210,7 @@ static struct tall_step pair_gram(const struct side *side)
 static bool pairs_sum(struct fixed_rank_work *work, const struct side *left, const struct side *right)
 {
     const struct tall_step grams[] = {pair_gram(left), pair_gram(right)};
-    size_t least_lines = LINES_A_COLUMN * 2 * work->rank;
+    size_t least_lines = DENSE_GRAM_LINES * 2 * work->rank;
     if (work->rows < least_lines || work->columns < least_lines)
         return false;
     tall_run(work->context, grams, 2, work->sums);

@@ -10,7 +10,7 @@
  * The projection is applied twice. Once leaves U'D of the size of rounding in Z; where Z is nearly normal, as a
  * gradient is that is nearly zero, that is not small beside D. Twice leaves rounding in D.
  *
- * The QR factor is unique only with the signs of R's diagonal fixed; dense_qr makes them positive, so that the new
+ * The QR factor is unique only with the signs of R's diagonal fixed; they are made positive, so that the new
  * basis tends to U as t D tends to zero and vectors at the two points can be compared.
  */
 #include "manifold/manifold_internal.h"
@@ -69,26 +69,26 @@ void grassmann_project(struct grassmann_work *work, struct matrix point, struct 
 static bool retract_by_sums(struct grassmann_work *work, struct matrix point, struct matrix d, double t,
                             struct matrix to)
 {
-    struct matrix gram = work->core, half = work->second_core, inverse = work->inverse;
+    struct matrix gram = work->core, mixed = work->second_core, inverse = work->inverse;
     size_t rank = work->rank;
     const struct tall_step sums = {.sums = 3,
                                    .sum = {{.a = point, .b = point, .cross = gram},
-                                           {.a = point, .b = d, .cross = half},
+                                           {.a = point, .b = d, .cross = mixed},
                                            {.a = d, .b = d, .cross = inverse}}};
-    if (work->rows < LINES_A_COLUMN * rank)
+    if (work->rows < DENSE_GRAM_LINES * rank)
         return false;
-    tall_run(work->context, &sums, 1, work->sums);
+    tall_run(work->context, &sums, 1, work->sums); /* inverse holds D'D as yet */
     for (size_t i = 0; i < rank; i++)
         for (size_t j = i; j < rank; j++)
             MATRIX_AT(gram, i, j) +=
-                t * (MATRIX_AT(half, i, j) + MATRIX_AT(half, j, i)) + t * t * MATRIX_AT(inverse, i, j);
+                t * (MATRIX_AT(mixed, i, j) + MATRIX_AT(mixed, j, i)) + t * t * MATRIX_AT(inverse, i, j);
     if (!dense_gram_triangle(gram, inverse, work->sine))
         return false;
-    matrix_copy(inverse, half);
-    matrix_scale(t, half);
+    matrix_copy(inverse, mixed);
+    matrix_scale(t, mixed);
     const struct tall_step divided = {.to = work->tall,
                                       .terms = 2,
-                                      .term = {{1, point, inverse, false}, {1, d, half, false}},
+                                      .term = {{1, point, inverse, false}, {1, d, mixed, false}},
                                       .sums = 1,
                                       .sum = {{.a = work->tall, .b = work->tall, .cross = gram}}};
     tall_run(work->context, &divided, 1, work->sums);

@@ -21,9 +21,6 @@ static inline struct matrix matrix_corner(struct matrix a, size_t rows, size_t c
     return (struct matrix){.data = a.data, .rows = rows, .columns = columns, .stride = a.stride};
 }
 
-/* Below this many lines a column QR by sums of products costs what it saves. */
-enum { LINES_A_COLUMN = 4 };
-
 /* Quarter (i, j) of a, same data; rows and columns even. */
 static inline struct matrix matrix_quarter(struct matrix a, size_t i, size_t j)
 {

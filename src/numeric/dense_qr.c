@@ -41,10 +41,8 @@ struct qr {
     double *factor;                   /* the inverse, as the kernel has it */
 };
 
-/* Below this many lines a column the copies and sums of the first way cost what they save. */
-enum { LINES_A_COLUMN = 4 };
 /* What a column must keep of its length: cond(A) is then far enough below 1e8, see above. */
-#define LEAST_KEPT 1e-6
+static const double least_kept = 1e-6;
 /* Lines that are divided and summed before the next are touched: 128 kB, in numbers. */
 enum { CHUNK_NUMBERS = 16384 };
 
@@ -154,7 +152,7 @@ static bool is_near(struct matrix inverse, const double *length)
 bool dense_gram_triangle(struct matrix gram, struct matrix inverse, double *work)
 {
     dense_threads_hold();
-    if (!gram_factor(gram, LEAST_KEPT, work))
+    if (!gram_factor(gram, least_kept, work))
         return false;
     triangle_invert(gram, inverse);
     return is_near(inverse, work);
@@ -238,7 +236,7 @@ static void cholesky_twice(struct qr *qr, int *passes)
     qr->sum = true;
     lines_pass(qr);
     partials_add(qr);
-    if (!gram_factor(square_of(qr->gram, k), LEAST_KEPT, qr->room))
+    if (!gram_factor(square_of(qr->gram, k), least_kept, qr->room))
         return;
     memcpy(qr->triangle, qr->gram, k * k * sizeof *qr->gram);
     divide_by_inverse(qr);
@@ -273,7 +271,7 @@ fescue_status dense_qr(fescue_context *context, struct matrix a, struct matrix r
     qr.partial = qr.room + (DENSE_BLOCK + 1) * k;
     qr.factor = factor;
     qr.kernel = k <= TALL_MOST ? kernel_set_choose()->tall : NULL;
-    if (a.rows >= LINES_A_COLUMN * k)
+    if (a.rows >= DENSE_GRAM_LINES * k)
         cholesky_twice(&qr, &passes);
     if (passes < 2)
         TRY(householder(&qr));

@@ -68,7 +68,7 @@ void matrix_scale_columns(struct matrix a, const double *scale); /* a_ij *= scal
    term's b. work: tall_run_size(lines, columns, sums) for every step that has sums, with as many columns as its widest
    matrix.
  */
-enum { TALL_STEPS = 2, TALL_TERMS = 3, TALL_SUMS = 5 };
+enum { TALL_STEPS = 2, TALL_TERMS = 3, TALL_SUMS = 4 };
 struct tall_step {
     struct matrix to;
     double beta;
@@ -110,7 +110,9 @@ fescue_status dense_svd(fescue_context *context, struct matrix a, double *s, str
 fescue_status dense_eigen(fescue_context *context, struct matrix a, double *w, double *work);
 /* From gram = a'a (k x k, upper triangle used) the r of a = q r, which overwrites it, and the inverse of r, so that q =
    a inverse: orthonormal to rounding times the square of a's condition, with its columns scaled to length 1, which is
-   below 30 k where this returns true. Otherwise both are spoilt. `work` of k doubles. */
+   below 30 k where this returns true. Otherwise both are spoilt. `work` of k doubles. With fewer lines a column than
+   this, the sums cost what they save. */
+enum { DENSE_GRAM_LINES = 4 };
 bool dense_gram_triangle(struct matrix gram, struct matrix inverse, double *work);
 /* Work, in doubles, that is enough for every dense_ routine on lines x columns. */
 size_t dense_work_size(size_t lines, size_t columns);

@@ -84,7 +84,7 @@ static void solve_piece(void *job, size_t piece, size_t worker)
     struct matrix from = dense_piece(pass->a, &pass->pieces, piece), to = dense_piece(pass->b, &pass->pieces, piece);
     double lanes[SOLVE_MOST][SOLVE_LANES];
     (void)worker;
-    memset(lanes, 0, sizeof lanes);
+    memset(lanes, 0, to.columns * sizeof *lanes);
     for (size_t first = 0; first < to.rows; first += SOLVE_LANES) {
         size_t count = to.rows - first < SOLVE_LANES ? to.rows - first : SOLVE_LANES;
         for (size_t l = 0; l < count; l++)

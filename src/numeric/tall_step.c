@@ -20,6 +20,7 @@
    had in other rounds, whatever the number of steps. */
 struct round {
     const struct tall_step *step;
+    const struct tall_kernel *kernel;
     struct dense_pieces pieces[TALL_STEPS];
     double *partial[TALL_STEPS][TALL_SUMS]; /* one after the other, what every piece sums to */
     struct round_block {
@@ -49,7 +50,8 @@ static size_t sum_size(const struct tall_sum *sum)
 }
 
 /* Columns first .. of a, as many as the kernels take, with the lines of op(b) that they meet. */
-static void columns_multiply(const struct tall_term *term, size_t first, struct matrix a, double beta, struct matrix c)
+static void columns_multiply(const struct tall_kernel *kernel, const struct tall_term *term, size_t first,
+                             struct matrix a, double beta, struct matrix c)
 {
     double factor[TALL_MOST * TALL_MOST];
     struct matrix part = matrix_columns(a, first, TALL_MOST);
@@ -60,7 +62,7 @@ static void columns_multiply(const struct tall_term *term, size_t first, struct 
             to[j] =
                 term->alpha * (term->transpose ? MATRIX_AT(term->b, j, first + i) : MATRIX_AT(term->b, first + i, j));
     }
-    kernel_set_choose()->tall->multiply(part, factor, beta, c);
+    kernel->multiply(part, factor, beta, c);
 }
 
 NUMERIC_VERSIONS static void lines_add(double alpha, struct matrix x, double beta, struct matrix y)
@@ -74,7 +76,8 @@ NUMERIC_VERSIONS static void lines_add(double alpha, struct matrix x, double bet
 }
 
 /* c = alpha a b + beta c for one piece. */
-static void term_add(const struct tall_term *term, struct matrix a, double beta, struct matrix c)
+static void term_add(const struct tall_kernel *kernel, const struct tall_term *term, struct matrix a, double beta,
+                     struct matrix c)
 {
     if (term->b.data == NULL && a.columns > 0)
         lines_add(term->alpha, a, beta, c);
@@ -82,11 +85,11 @@ static void term_add(const struct tall_term *term, struct matrix a, double beta,
         matrix_multiply(term->alpha, a, false, term->b, term->transpose, beta, c);
     else
         for (size_t first = 0; first < a.columns; first += TALL_MOST)
-            columns_multiply(term, first, a, first == 0 ? beta : 1, c);
+            columns_multiply(kernel, term, first, a, first == 0 ? beta : 1, c);
 }
 
 /* cross = a'b */
-static void piece_cross(struct matrix a, struct matrix b, struct matrix cross)
+static void piece_cross(const struct tall_kernel *kernel, struct matrix a, struct matrix b, struct matrix cross)
 {
     if (b.columns > TALL_MOST) {
         matrix_multiply(1, a, true, b, false, 0, cross);
@@ -96,7 +99,7 @@ static void piece_cross(struct matrix a, struct matrix b, struct matrix cross)
         double room[TALL_MOST * TALL_MOST];
         struct matrix left = matrix_columns(a, first, TALL_MOST);
         memset(room, 0, tall_lines(left.columns) * TALL_MOST * sizeof *room);
-        kernel_set_choose()->tall->cross(left, b, room);
+        kernel->cross(left, b, room);
         matrix_copy((struct matrix){room, left.columns, b.columns, TALL_MOST},
                     (struct matrix){&MATRIX_AT(cross, first, 0), left.columns, b.columns, cross.stride});
     }
@@ -110,8 +113,8 @@ static void round_piece(void *job, size_t at, size_t worker)
     const struct dense_pieces *pieces = &round->pieces[block.step];
     (void)worker;
     for (size_t k = 0; k < step->terms; k++)
-        term_add(&step->term[k], dense_piece(step->term[k].a, pieces, block.piece), k == 0 ? step->beta : 1,
-                 dense_piece(step->to, pieces, block.piece));
+        term_add(round->kernel, &step->term[k], dense_piece(step->term[k].a, pieces, block.piece),
+                 k == 0 ? step->beta : 1, dense_piece(step->to, pieces, block.piece));
     for (size_t k = 0; k < step->sums; k++) {
         struct matrix a = dense_piece(step->sum[k].a, pieces, block.piece),
                       b = dense_piece(step->sum[k].b, pieces, block.piece);
@@ -119,7 +122,7 @@ static void round_piece(void *job, size_t at, size_t worker)
         if (step->sum[k].dot != NULL)
             *partial = matrix_dot(a, b);
         else
-            piece_cross(a, b, (struct matrix){partial, a.columns, b.columns, b.columns});
+            piece_cross(round->kernel, a, b, (struct matrix){partial, a.columns, b.columns, b.columns});
     }
 }
 
@@ -151,7 +154,7 @@ static void sum_finish(fescue_context *context, const struct tall_sum *sum, cons
 
 void tall_run(fescue_context *context, const struct tall_step *step, size_t steps, double *work)
 {
-    struct round round = {.step = step};
+    struct round round = {.step = step, .kernel = kernel_set_choose()->tall};
     assert(steps <= TALL_STEPS);
     for (size_t s = 0; s < steps; s++) {
         round.pieces[s] = step_pieces(&step[s]);

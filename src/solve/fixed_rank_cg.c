@@ -16,8 +16,8 @@
  *     1. g = projection of R + lambda X onto the tangents at X, from the two products R V and R'U; lambda X = U (lambda
  *        S) V' is tangent, so it joins the middle part exactly.
  *     2. D = -g + beta T(D_old), T the transport by projection, beta by Polak and Ribiere, never negative (Nocedal,
- *        Wright 2006, section 5.2), which needs <g, T(g_old)> but not T(g_old). D = -g again when D is no clear
- * descent.
+ *        Wright 2006, section 5.2), which needs <g, T(g_old)> but not T(g_old).
+ *        D = -g again when D is no clear descent.
  *     3. On the tangent the objective is a parabola, so the step there is exact:
  *            t = -<g, D> / (|P(D)|^2 + lambda |D|^2).
  *     4. X_new = the matrix of rank r nearest to X + t D. Armijo with backtracking guards it (line.c).
