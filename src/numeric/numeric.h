@@ -149,6 +149,7 @@ struct sweep {
     enum fescue_precision precision;
     struct arena arena; /* partial sums, single-precision copies, one small workspace a worker */
     size_t rank_most;   /* at most 257 */
+    size_t near_most;   /* bytes of rows that are not asked for before they are needed */
     const char *kernel; /* which instruction set was chosen: "portable", "avx2", "avx512" */
     const struct sweep_kernel *kernels;
     const struct batch_kernel *batch;

@@ -15,8 +15,10 @@
 #include <assert.h>
 #include <float.h>
 #include <string.h>
+#include <unistd.h>
 
-enum { FACTORS_MOST = 2 }; /* that an operation reads for every cell */
+enum { FACTORS_MOST = 2 };          /* whose rows an operation reads for every cell */
+enum { NEAR_ANYWHERE = 160 << 10 }; /* bytes, where a processor does not tell the size of its caches */
 
 /* ---- workspace ----------------------------------------------------------------------------------------------------
  */
@@ -54,6 +56,16 @@ struct sweep_room sweep_room_of(const struct sweep *sweep, size_t worker)
     return room;
 }
 
+/* Bytes of rows that stay in a core's own cache beside the cells that pass through it: 5/8 of it. */
+static size_t near_most(void)
+{
+    long cache = 0;
+#ifdef _SC_LEVEL2_CACHE_SIZE
+    cache = sysconf(_SC_LEVEL2_CACHE_SIZE);
+#endif
+    return cache > 0 ? (size_t)cache / 8 * 5 : NEAR_ANYWHERE;
+}
+
 fescue_status sweep_create(fescue_context *context, const struct cells *cells, size_t rank_most, struct sweep *sweep)
 {
     const struct kernel_set *set = kernel_set_choose();
@@ -62,6 +74,7 @@ fescue_status sweep_create(fescue_context *context, const struct cells *cells, s
     *sweep = (struct sweep){.context = context,
                             .precision = cells->precision,
                             .rank_most = rank_most,
+                            .near_most = near_most(),
                             .kernel = set->name,
                             .kernels = set->sweep[cells->precision],
                             .batch = set->batch,
@@ -130,26 +143,28 @@ static void piece_copy(void *argument, size_t piece, size_t worker)
         rows_round(rows, from->stride, lines, job->width, to);
 }
 
-/* Makes factors what a kernel sees: themselves, or their copies in single precision, all made in one round. */
-static void factors_open(const struct sweep_job *job, size_t count, const struct matrix *factor,
-                         struct sweep_rows *const *rows)
+void sweep_rows_open(struct sweep_job *job, size_t first, size_t lines)
 {
     struct sweep *sweep = job->sweep;
+    const struct matrix *factor[FACTORS_MOST] = {&job->right_of, &job->b_of};
+    struct sweep_rows *rows[FACTORS_MOST] = {&job->right, &job->b};
     struct copy_job copy = {.width = job->width};
     float *room = sweep->pool;
-    assert(count <= FACTORS_MOST);
-    for (size_t f = 0; f < count; f++) {
-        assert(factor[f].stride >= job->width);
-        *rows[f] = (struct sweep_rows){.data = factor[f].data, .stride = factor[f].stride};
+    size_t count = 0, size = sweep->precision == FESCUE_SINGLE ? sizeof(float) : sizeof(double);
+    for (; count < FACTORS_MOST && factor[count]->data != NULL; count++) {
+        const struct matrix from = matrix_lines(*factor[count], first, lines);
+        assert(from.stride >= job->width);
+        *rows[count] = (struct sweep_rows){.data = from.data, .stride = from.stride};
         if (sweep->precision == FESCUE_DOUBLE)
             continue;
-        copy.from[f] = factor[f];
-        copy.to[f] = room;
-        copy.first[f + 1] = copy.first[f] + (factor[f].rows + COPY_LINES - 1) / COPY_LINES;
-        *rows[f] = (struct sweep_rows){.data = room, .stride = job->width};
-        room += factor[f].rows * job->width;
+        copy.from[count] = from;
+        copy.to[count] = room;
+        copy.first[count + 1] = copy.first[count] + (lines + COPY_LINES - 1) / COPY_LINES;
+        *rows[count] = (struct sweep_rows){.data = room, .stride = job->width};
+        room += lines * job->width;
     }
     assert(room <= sweep->pool + sweep->pool_size);
+    job->near = count * lines * job->width * size <= sweep->near_most;
     if (sweep->precision == FESCUE_SINGLE)
         team_run(sweep->context, copy.first[count], piece_copy, &copy);
 }
@@ -186,6 +201,7 @@ static struct sweep_job job_open(struct sweep *sweep, const struct half *half, s
     return (struct sweep_job){.sweep = sweep,
                               .half = half,
                               .values = half->value,
+                              .right_of = right,
                               .width = sweep_width(sweep, right.columns),
                               .rank = right.columns};
 }
@@ -203,7 +219,6 @@ void sweep_residual(struct sweep *sweep, const struct half *half, struct matrix 
     double sums[SWEEP_SUMS];
     assert(left.rows == half->lines && left.columns == right.columns);
     job.left = left;
-    factors_open(&job, 1, &right, (struct sweep_rows *const[]){&job.right});
     job.product = gradient;
     job.residual = residual;
     sweep_slabs_run(&job, sweep->kernels->residual, sums);
@@ -217,7 +232,6 @@ void sweep_errors(struct sweep *sweep, const struct half *half, struct matrix le
     double sums[SWEEP_SUMS];
     assert(left.rows == half->lines && left.columns == right.columns);
     job.left = left;
-    factors_open(&job, 1, &right, (struct sweep_rows *const[]){&job.right});
     sweep_slabs_run(&job, sweep->kernels->residual, sums);
     *square = sums[0];
     *absolute = sums[1];
@@ -229,7 +243,6 @@ void sweep_multiply(struct sweep *sweep, const struct half *half, const void *va
     struct sweep_job job = job_open(sweep, half, right);
     double sums[SWEEP_SUMS];
     assert(product.rows == half->lines && product.columns == right.columns);
-    factors_open(&job, 1, &right, (struct sweep_rows *const[]){&job.right});
     job.values = values;
     job.product = product;
     sweep_slabs_run(&job, job_kernel(&job)->multiply, sums);
@@ -243,7 +256,7 @@ void sweep_tangent(struct sweep *sweep, const struct half *half, struct matrix a
     assert(left.rows == half->lines && a.rows == half->lines && b.rows == half->length);
     job.left = left;
     job.a = a;
-    factors_open(&job, 2, (const struct matrix[]){right, b}, (struct sweep_rows *const[]){&job.right, &job.b});
+    job.b_of = b;
     if (residual != NULL) /* or what is summed with the half's own values is not handed on */
         job.values = residual;
     sweep_slabs_run(&job, job_kernel(&job)->tangent, sums);
@@ -258,10 +271,10 @@ void sweep_solve(struct sweep *sweep, const struct half *half, struct matrix rig
     struct sweep_job job = job_open(sweep, half, right);
     double sums[SWEEP_SUMS];
     assert(weights.rows == half->lines && weights.columns == right.columns);
-    factors_open(&job, 1, &right, (struct sweep_rows *const[]){&job.right});
     job.product = weights;
     job.ridge = ridge;
     job.factors = factors;
+    sweep_rows_open(&job, 0, half->length);
     sweep_run(&job, sweep->kernels->solve, sums);
 }
 

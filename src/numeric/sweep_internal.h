@@ -23,8 +23,10 @@ struct sweep_rows {
 struct sweep_job {
     struct sweep *sweep;
     const struct half *half;
-    struct matrix left, a; /* read once a line, and rounded then */
-    struct sweep_rows right, b;
+    struct matrix left, a;        /* read once a line, and rounded then */
+    struct matrix right_of, b_of; /* rows read for every cell; b's data may be NULL */
+    struct sweep_rows right, b;   /* those of the half's positions, as kernels see them (sweep_rows_open) */
+    bool near;                    /* that all of them fit into a core's own cache */
     size_t width; /* numbers worked on in each row: the rank up to whole registers, zeros behind the rank */
     size_t rank;
     const void *values;    /* of cells, in the half's order: the half's own, or residuals, or others */
@@ -47,6 +49,9 @@ extern const struct sweep_kernel sweep_portable_double, sweep_portable_single;
 extern const struct sweep_kernel sweep_avx2_double, sweep_avx2_single, sweep_avx512_double, sweep_avx512_single;
 #endif
 
+/* Lets kernels see `lines` rows of the job's factors, from `first` on: the rows themselves, or in single precision
+   copies, all made in one round. */
+void sweep_rows_open(struct sweep_job *job, size_t first, size_t lines);
 /* Runs one kernel over all blocks and adds up its sums. */
 void sweep_run(struct sweep_job *job, sweep_block *kernel, double sums[SWEEP_SUMS]);
 
@@ -55,7 +60,8 @@ struct sweep_slabs {
     const uint64_t *of; /* start and values of the half */
     const void *of_value;
     size_t count;
-    struct half *half; /* one a slab */
+    uint32_t positions; /* of a slab; the last may have less */
+    struct half *half;  /* one a slab, with positions from 0 on */
     uint64_t *start;   /* count x lines + 1: of a slab, its lines and the beginning of the next slab */
     uint32_t *across;
     void *value;

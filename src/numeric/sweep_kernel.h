@@ -38,7 +38,7 @@
  *     the waiting, and both are done at once.
  *   - An r goes into all lanes by one shuffle of four numbers read at once (SPREAD), not by a read for each.
  *   - The right rows lie anywhere in memory, but the order of cells says where: those of the cells AHEAD are asked for,
- *     unless all of them fit into a core's own cache (NEAR_BYTES).
+ *     unless all of them fit into a core's own cache.
  *   - Positions and values come in order, 12 bytes a cell, faster than the processor itself looks out for them: those
  *     STREAM_AHEAD are asked for.
  *   - The loops are written for any number of registers a row and made once for each common number of them, where
@@ -71,7 +71,7 @@
 #include <string.h>
 
 /* Some 32 cells of 2 to 3 ns hide a trip to memory of 80 ns, and what a busy machine adds to it; 4 KB of values. */
-enum { AHEAD = 32, STREAM_AHEAD = 512, CACHE_LINE = 64, NEAR_BYTES = 400 << 10 };
+enum { AHEAD = 32, STREAM_AHEAD = 512, CACHE_LINE = 64 };
 /* Cells of a chunk, whose rows are to stay in the nearest cache, of 32 KB, until they are read again. */
 enum { CHUNK = 128, CHUNK_BYTES = 16 << 10 };
 enum { MOST_REGISTERS = SWEEP_MOST_WIDTH / LANES, WIDE_LANES = LANES / WIDES };
@@ -309,10 +309,9 @@ INLINE struct span span_of(const struct sweep_job *job, size_t block, const size
                          .residual = job->residual,
                          .right = {job->right.data, stride > 0 ? stride : job->right.stride},
                          .b = {job->b.data, stride > 0 ? stride : job->b.stride},
-                         .ahead =
-                             half->length * job->width * sizeof(REAL) > NEAR_BYTES && half->start[last] > AHEAD + GROUP
-                                 ? half->start[last] - AHEAD - GROUP
-                                 : 0};
+                         .ahead = !job->near && half->start[last] > AHEAD + GROUP
+                                      ? half->start[last] - AHEAD - GROUP
+                                      : 0};
 }
 
 /* Asks for what the cells behind k will need, rows as far as they are of this block. */

@@ -40,10 +40,11 @@ static void block_count(void *argument, size_t block, size_t worker)
 {
     const struct arranging *arranging = argument;
     const struct half *half = arranging->half;
+    const struct sweep_slabs *slabs = arranging->slabs;
     (void)worker;
     for (uint32_t line = half->block[block]; line < half->block[block + 1]; line++)
         for (uint64_t k = half->start[line]; k < half->start[line + 1]; k++)
-            arranging->slabs->start[half->across[k] / SLAB_POSITIONS * half->lines + line]++;
+            slabs->start[half->across[k] / slabs->positions * half->lines + line]++;
 }
 
 static void block_copy(void *argument, size_t block, size_t worker)
@@ -58,7 +59,8 @@ static void block_copy(void *argument, size_t block, size_t worker)
         for (size_t slab = 0; slab < slabs->count; slab++) {
             const uint64_t *start = slabs->start + slab * half->lines + line;
             uint64_t count = start[1] - start[0];
-            memcpy(slabs->across + start[0], half->across + k, count * sizeof *half->across);
+            for (uint64_t at = 0; at < count; at++)
+                slabs->across[start[0] + at] = half->across[k + at] - (uint32_t)slab * slabs->positions;
             memcpy((char *)slabs->value + start[0] * size, (const char *)half->value + k * size, count * size);
             k += count;
         }
@@ -76,13 +78,22 @@ static void starts_sum(uint64_t *start, size_t count)
     }
 }
 
+/* Rounded up. */
+static size_t length_shared(size_t length, size_t parts)
+{
+    return (length + parts - 1) / parts;
+}
+
 fescue_status sweep_arrange(struct sweep *sweep, const struct half *half)
 {
     fescue_context *context = sweep->context;
-    size_t count = ((size_t)half->length + SLAB_POSITIONS - 1) / SLAB_POSITIONS, all = count * half->lines;
     uint64_t cells = half->start[half->lines];
     struct sweep_slabs *slabs;
-    if (half->length < 2 * SLAB_POSITIONS || sweep->slabs != NULL || cells < (uint64_t)all * STRETCH_LEAST)
+    if (half->length < 2 * SLAB_POSITIONS || sweep->slabs != NULL)
+        return FESCUE_OK;
+    size_t length = half->length, positions = length_shared(length, (length + SLAB_POSITIONS / 2) / SLAB_POSITIONS);
+    size_t count = length_shared(length, positions), all = count * half->lines;
+    if (cells < (uint64_t)all * STRETCH_LEAST)
         return FESCUE_OK;
     fescue_status status = TAKE(context, 1, &slabs);
     if (status != FESCUE_OK)
@@ -96,11 +107,14 @@ fescue_status sweep_arrange(struct sweep *sweep, const struct half *half)
     TRY(TAKE(context, cells, &slabs->across));
     TRY(memory_take(context, cells, arranging.size, &slabs->value));
     slabs->count = count;
+    slabs->positions = (uint32_t)positions;
     team_run(context, half->blocks, block_count, &arranging);
     starts_sum(slabs->start, all);
     team_run(context, half->blocks, block_copy, &arranging);
     for (size_t slab = 0; slab < count; slab++) {
+        uint32_t first = (uint32_t)slab * slabs->positions, left = half->length - first;
         slabs->half[slab] = *half;
+        slabs->half[slab].length = left < slabs->positions ? left : slabs->positions;
         slabs->half[slab].start = slabs->start + slab * half->lines;
         slabs->half[slab].across = slabs->across;
         slabs->half[slab].value = slabs->value;
@@ -129,6 +143,7 @@ void sweep_slabs_run(struct sweep_job *job, sweep_block *kernel, double sums[SWE
     const struct sweep_slabs *slabs = job->sweep->slabs;
     bool fits = slabs != NULL && job->half->start == slabs->of && job->values == slabs->of_value;
     if (!fits || job->residual != NULL) {
+        sweep_rows_open(job, 0, job->half->length);
         sweep_run(job, kernel, sums);
         return;
     }
@@ -138,6 +153,7 @@ void sweep_slabs_run(struct sweep_job *job, sweep_block *kernel, double sums[SWE
         job->half = &slabs->half[slab];
         job->values = slabs->value;
         job->more = slab > 0;
+        sweep_rows_open(job, slab * slabs->positions, job->half->length);
         sweep_run(job, kernel, part);
         for (size_t k = 0; k < SWEEP_SUMS; k++)
             sums[k] += part[k];
