@@ -62,7 +62,7 @@ struct sweep_slabs {
     size_t count;
     uint32_t positions; /* of a slab; the last may have less */
     struct half *half;  /* one a slab, with positions from 0 on */
-    uint64_t *start;   /* count x lines + 1: of a slab, its lines and the beginning of the next slab */
+    uint64_t *start;    /* count x lines + 1: of a slab, its lines and the beginning of the next slab */
     uint32_t *across;
     void *value;
 };

@@ -309,9 +309,8 @@ INLINE struct span span_of(const struct sweep_job *job, size_t block, const size
                          .residual = job->residual,
                          .right = {job->right.data, stride > 0 ? stride : job->right.stride},
                          .b = {job->b.data, stride > 0 ? stride : job->b.stride},
-                         .ahead = !job->near && half->start[last] > AHEAD + GROUP
-                                      ? half->start[last] - AHEAD - GROUP
-                                      : 0};
+                         .ahead =
+                             !job->near && half->start[last] > AHEAD + GROUP ? half->start[last] - AHEAD - GROUP : 0};
 }
 
 /* Asks for what the cells behind k will need, rows as far as they are of this block. */
@@ -503,13 +502,15 @@ INLINE void residual_lines(const struct sweep_job *job, size_t block, double *ou
 /* Whether the job's rows are of a width that is turned: then, what residual_lines would do. */
 INLINE bool turned_block(const struct sweep_job *job, size_t block, double *sums, const bool gradient)
 {
-    bool close = rows_are_close(job);
+    bool close = rows_are_close(job), kept = job->residual != NULL;
 #define TURNED_CASE(width, n, paired)                                                                                  \
     case width:                                                                                                        \
-        if (close)                                                                                                     \
-            turned_lines(job, block, sums, gradient, n, paired, width);                                                \
+        if (!close)                                                                                                    \
+            turned_lines(job, block, sums, gradient, kept, n, paired, 0);                                              \
+        else if (kept)                                                                                                 \
+            turned_lines(job, block, sums, gradient, true, n, paired, width);                                          \
         else                                                                                                           \
-            turned_lines(job, block, sums, gradient, n, paired, 0);                                                    \
+            turned_lines(job, block, sums, gradient, false, n, paired, width);                                         \
         return true;
     switch (job->width) {
         TURNED_WIDTHS(TURNED_CASE)

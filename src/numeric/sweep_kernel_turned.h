@@ -221,7 +221,7 @@ INLINE void turned_add(const turned *g, wide *sum, const size_t n, const bool pa
 }
 
 INLINE void turned_line(const struct span *span, uint64_t k, uint64_t end, const turned *l, wide *product,
-                        wide (*sums)[WIDES], const bool gradient, const size_t n, const bool paired)
+                        wide (*sums)[WIDES], const bool gradient, const bool kept, const size_t n, const bool paired)
 {
     struct chunk chunk;
     struct chunk_room room;
@@ -232,7 +232,7 @@ INLINE void turned_line(const struct span *span, uint64_t k, uint64_t end, const
             turned r[2];
             span_prefetch(span, k + c, false, paired ? 1 : n * TURNED / LANES);
             turned_group(span, chunk, c, l, &chunk_sums, r, gradient, n, paired);
-            if (span->residual != NULL)
+            if (kept)
                 group_keep(r, chunk.count - c, span->residual + k + c, paired);
         }
         parts_add(&chunk_sums.square, sums[0]);
@@ -244,8 +244,8 @@ INLINE void turned_line(const struct span *span, uint64_t k, uint64_t end, const
 }
 
 /* Rows of n registers, or of half of one. */
-INLINE void turned_lines(const struct sweep_job *job, size_t block, double *out, const bool gradient, const size_t n,
-                         const bool paired, const size_t stride)
+INLINE void turned_lines(const struct sweep_job *job, size_t block, double *out, const bool gradient, const bool kept,
+                         const size_t n, const bool paired, const size_t stride)
 {
     const size_t registers = paired ? 1 : n * TURNED / LANES;
     struct span span = span_of(job, block, stride);
@@ -258,7 +258,7 @@ INLINE void turned_lines(const struct sweep_job *job, size_t block, double *out,
             left_prefetch(&job->left, line + 1, registers);
         if (gradient)
             product_begin(job, line, span.last, product, registers);
-        turned_line(&span, span.start[line], span.start[line + 1], l, product, sums, gradient, n, paired);
+        turned_line(&span, span.start[line], span.start[line + 1], l, product, sums, gradient, kept, n, paired);
         if (gradient)
             product_store(job, line, product, registers);
     }

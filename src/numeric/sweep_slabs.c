@@ -5,11 +5,12 @@
  * The columns of a table of 100 000 rows read, in rank 16, here and there in 13 MB of right rows. Such reads come from
  * memory, two lines of 64 bytes each, and cost several times what is done with them. The slabs
  *
- *     positions 0 .. P-1 of all lines, line by line; then P .. 2P-1 of all lines; ...          P = SLAB_POSITIONS
+ *     positions 0 .. P-1 of all lines, line by line; then P .. 2P-1 of all lines; ...          P about SLAB_..
  *
- * are halves of their own, with the same lines and blocks, and are gone through one after another: the rows of a slab
- * come from memory once and are then near for every line, and for every worker, as all are at the same slab. What a
- * line has come to is read again and added to (sweep_job.more).
+ * are halves of their own, with the same lines and blocks and positions from 0 on, and are gone through one after
+ * another: the rows of a slab come from memory once (and are copied then, in single precision) and are then near for
+ * every line, and for every worker, as all are at the same slab. What a line has come to is read again and added to
+ * (sweep_job.more).
  *
  * Positions in two bytes each gain 3 to 5 per cent in rank 8 and single precision where the cells lie in a shared
  * cache, and nothing where they come from memory; they are not worth a second kind of loops.
@@ -18,16 +19,17 @@
  * not pay: cells are read more often than rows, and would then be read in pieces of some hundred bytes.
  *
  * Cost: positions and values once more (12 or 8 bytes a cell) and a number for each line and slab; making it costs
- * about what two sweeps cost. The order of additions is that of the slabs, whose bounds depend on the table alone, and
- * sums over blocks are added slab by slab: the bits do not depend on the number of workers.
+ * about what two sweeps cost. The order of additions is that of the slabs, whose bounds depend on the table and on how
+ * wide rows are, and sums over blocks are added slab by slab: the bits do not depend on the number of workers.
  */
 #include "numeric/sweep_internal.h"
 
 #include <string.h>
 
-/* Rows of 2 MB in rank 16, and at most what a few cores share in rank 32. Shorter slabs are nearer, but a line's part
-   of them is shorter too; below some 16 cells its beginning and end cost more than is won. */
-enum { SLAB_POSITIONS = 16 << 10, STRETCH_LEAST = 16 };
+/* Positions of a slab, all of which are of one size but the last. Rows of 32 bytes are to stay in a core's own cache
+   (458 KB); wider ones do not, and a few cores share what they take, 2 MB in rank 16. Shorter slabs are nearer, but a
+   line's part of them is shorter too; below some 16 cells its beginning and end cost more than is won. */
+enum { SLAB_NARROW = 14 << 10, SLAB_WIDE = 16 << 10, NARROW_BYTES = 32, STRETCH_LEAST = 16 };
 
 struct arranging {
     const struct half *half;
@@ -87,12 +89,14 @@ static size_t length_shared(size_t length, size_t parts)
 fescue_status sweep_arrange(struct sweep *sweep, const struct half *half)
 {
     fescue_context *context = sweep->context;
-    uint64_t cells = half->start[half->lines];
     struct sweep_slabs *slabs;
-    if (half->length < 2 * SLAB_POSITIONS || sweep->slabs != NULL)
+    size_t size = sweep->precision == FESCUE_SINGLE ? sizeof(float) : sizeof(double), length = half->length;
+    size_t about = sweep_width(sweep, sweep->rank_most) * size <= NARROW_BYTES ? SLAB_NARROW : SLAB_WIDE;
+    if (length < 2 * about || sweep->slabs != NULL)
         return FESCUE_OK;
-    size_t length = half->length, positions = length_shared(length, (length + SLAB_POSITIONS / 2) / SLAB_POSITIONS);
+    size_t positions = length_shared(length, (length + about / 2) / about);
     size_t count = length_shared(length, positions), all = count * half->lines;
+    uint64_t cells = half->start[half->lines];
     if (cells < (uint64_t)all * STRETCH_LEAST)
         return FESCUE_OK;
     fescue_status status = TAKE(context, 1, &slabs);
@@ -101,7 +105,7 @@ fescue_status sweep_arrange(struct sweep *sweep, const struct half *half)
     sweep->slabs = slabs;
     slabs->of = half->start;
     slabs->of_value = half->value;
-    struct arranging arranging = {half, slabs, sweep->precision == FESCUE_SINGLE ? sizeof(float) : sizeof(double)};
+    struct arranging arranging = {half, slabs, size};
     TRY(TAKE(context, count, &slabs->half));
     TRY(TAKE(context, all + 1, &slabs->start));
     TRY(TAKE(context, cells, &slabs->across));
