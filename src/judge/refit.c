@@ -62,7 +62,7 @@ static fescue_status rest_create(fescue_context *context, const struct cells *ce
 {
     assert(point->rows == cells->rows && point->columns == cells->columns);
     struct leftover left = {.cells = cells, .half = &cells->by_row, .point = point, .by_row = true};
-    fescue_status status = cells_alike(context, cells, rest);
+    fescue_status status = cells_alike(context, cells, cells->precision, rest);
     if (status != FESCUE_OK)
         return status;
     left.value = rest->by_row.value;

@@ -38,11 +38,14 @@ struct problem {
     struct cells target; /* shares the pattern of the cells it was made from, which must outlive it */
     double scale, ridge, lambda;
     double norm;     /* of the targets, sqrt(sum t^2): sqrt(count), or 0 when all are 0 */
-    double rounding; /* rms error that rounding leaves in a target: epsilon of the store, times rms(observed) / scale
-                        where that is above one (offsets took most of the number away) */
+    double rounding; /* rms error that rounding leaves in a target: its epsilon, or that of the store times
+                        rms(observed) / scale where that is more (offsets took most of the number away) */
 };
 fescue_status problem_create(fescue_context *context, const struct cells *cells, const struct offsets *offsets,
                              double ridge, struct problem *problem);
+/* The same with targets in this precision; problem_create keeps that of the store. */
+fescue_status problem_create_in(fescue_context *context, const struct cells *cells, const struct offsets *offsets,
+                                double ridge, enum fescue_precision precision, struct problem *problem);
 /* The scale of that problem alone. */
 double problem_scale(fescue_context *context, const struct cells *cells, const struct offsets *offsets);
 void problem_set_ridge(struct problem *problem, double ridge);

@@ -5,8 +5,8 @@
  *     t_ij = (x_ij - offset_ij) / scale,      scale^2 = mean over seen of (x_ij - offset_ij)^2
  *
  * so that the targets have mean square 1 in any units. Squares are summed relative to the largest difference, because
- * values around 1e-150 or 1e+150 have no square. All arithmetic is in double; only the stored target is rounded to the
- * store's precision.
+ * values around 1e-150 or 1e+150 have no square. All arithmetic is in double; only the stored target is rounded, to the
+ * store's precision or to another one.
  *
  * Parallel over the blocks of the store; each block writes its own targets and its own partial sums, which are added in
  * block order, so that the scale does not depend on the workers.
@@ -25,6 +25,7 @@ struct target_pass {
     const struct offsets *offsets; /* NULL: none */
     const struct half *half;       /* of `from` */
     void *target;                  /* values in the half's order, when they are written */
+    enum fescue_precision precision;
     bool by_row;
     double largest, scale;
     double largest_of[CELLS_MOST_BLOCKS];    /* |x - offset| */
@@ -129,12 +130,17 @@ static void target_task(void *job, size_t block, size_t worker)
         for (uint64_t k = pass->half->start[line], count; k < pass->half->start[line + 1]; k += count) {
             count = stretch_take(pass, line, k, &stretch);
             divide(pass->scale, count, stretch.difference);
-            if (pass->from->precision == FESCUE_SINGLE)
+            if (pass->precision == FESCUE_SINGLE)
                 for (size_t c = 0; c < count; c++)
                     ((float *)pass->target)[k + c] = (float)stretch.difference[c];
             else
                 memcpy((double *)pass->target + k, stretch.difference, count * sizeof(double));
         }
+}
+
+static double epsilon_of(enum fescue_precision precision)
+{
+    return precision == FESCUE_SINGLE ? FLT_EPSILON : DBL_EPSILON;
 }
 
 /* Scale and rounding, from two passes over the rows. */
@@ -145,15 +151,14 @@ static void problem_measure(struct problem *problem, struct target_pass *pass)
     for (size_t block = 0; block < pass->half->blocks; block++)
         pass->largest = fmax(pass->largest, pass->largest_of[block]);
     problem->scale = 1;
-    problem->rounding = pass->from->precision == FESCUE_SINGLE ? FLT_EPSILON : DBL_EPSILON;
+    problem->rounding = epsilon_of(pass->precision);
     if (pass->largest == 0)
         return;
     problem->norm = sqrt(count);
     team_run(problem->context, pass->half->blocks, square_task, pass);
     team_sum(problem->context, pass->square_of, pass->half->blocks, 2, sum);
     problem->scale = pass->largest * sqrt(sum[0] / count);
-    if (sum[1] > sum[0])
-        problem->rounding *= sqrt(sum[1] / sum[0]);
+    problem->rounding = fmax(problem->rounding, epsilon_of(pass->from->precision) * sqrt(sum[1] / sum[0]));
 }
 
 double problem_scale(fescue_context *context, const struct cells *cells, const struct offsets *offsets)
@@ -167,10 +172,17 @@ double problem_scale(fescue_context *context, const struct cells *cells, const s
 fescue_status problem_create(fescue_context *context, const struct cells *cells, const struct offsets *offsets,
                              double ridge, struct problem *problem)
 {
+    return problem_create_in(context, cells, offsets, ridge, cells->precision, problem);
+}
+
+fescue_status problem_create_in(fescue_context *context, const struct cells *cells, const struct offsets *offsets,
+                                double ridge, enum fescue_precision precision, struct problem *problem)
+{
     fescue_status status;
     *problem = (struct problem){.context = context};
-    struct target_pass pass = {.from = cells, .offsets = offsets, .half = &cells->by_row, .by_row = true};
-    TRY(cells_alike(context, cells, &problem->target));
+    struct target_pass pass = {
+        .from = cells, .offsets = offsets, .half = &cells->by_row, .by_row = true, .precision = precision};
+    TRY(cells_alike(context, cells, precision, &problem->target));
     problem_measure(problem, &pass);
     problem_set_ridge(problem, ridge);
     pass.scale = problem->scale;

@@ -340,7 +340,7 @@ fescue_status season_remove(fescue_context *context, const struct cells *cells, 
                             struct cells *rest)
 {
     struct removal job = {cells, season, rest, true};
-    fescue_status status = cells_alike(context, cells, rest);
+    fescue_status status = cells_alike(context, cells, cells->precision, rest);
     if (status != FESCUE_OK)
         return status;
     team_run(context, cells->by_row.blocks, remove_block, &job);

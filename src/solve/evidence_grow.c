@@ -95,7 +95,8 @@ static fescue_status model_grow(fescue_context *context, const struct cells *cel
     struct problem problem = {0};
     struct low_rank *point = &model->low_rank;
     fescue_status status;
-    TRY(problem_create(context, cells, &model->offsets, 0, &problem));
+    bool is_coarse = point->rank == 0 && evidence_is_large(cells); /* a start, to the noise and not beyond */
+    TRY(problem_create_in(context, cells, &model->offsets, 0, is_coarse ? FESCUE_SINGLE : cells->precision, &problem));
     if (point->rank == 0) {
         if (!(request->noise_start > 0))
             request->noise_start = START_NOISE * problem.scale * problem.scale;

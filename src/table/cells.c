@@ -244,11 +244,13 @@ done:
     return status;
 }
 
-fescue_status cells_alike(fescue_context *context, const struct cells *from, struct cells *cells)
+fescue_status cells_alike(fescue_context *context, const struct cells *from, enum fescue_precision precision,
+                          struct cells *cells)
 {
     fescue_status status;
-    size_t size = from->precision == FESCUE_SINGLE ? sizeof(float) : sizeof(double);
+    size_t size = precision == FESCUE_SINGLE ? sizeof(float) : sizeof(double);
     *cells = *from;
+    cells->precision = precision;
     cells->shares_pattern = true;
     cells->shares_all = false;
     cells->by_row.value = cells->by_column.value = NULL;

@@ -134,7 +134,7 @@ static void an_alike_store_shares_the_pattern(void **state)
     fescue_context *context = bench_of(state)->context;
     struct cells from, alike;
     sow_cells(context, &sowings[3], &from);
-    assert_status(context, cells_alike(context, &from, &alike), FESCUE_OK);
+    assert_status(context, cells_alike(context, &from, from.precision, &alike), FESCUE_OK);
     assert_true(alike.shares_pattern);
     assert_ptr_equal(alike.by_row.across, from.by_row.across);
     assert_ptr_equal(alike.by_column.start, from.by_column.start);
@@ -142,6 +142,11 @@ static void an_alike_store_shares_the_pattern(void **state)
         assert_true(cells_value(&alike, &alike.by_row, k) == 0 && cells_value(&alike, &alike.by_column, k) == 0);
     ((float *)alike.by_row.value)[0] = 5;
     assert_false(cells_value(&from, &from.by_row, 0) == 5);
+    cells_free(context, &alike);
+    assert_status(context, cells_alike(context, &from, FESCUE_DOUBLE, &alike), FESCUE_OK);
+    assert_int_equal(alike.precision, FESCUE_DOUBLE);
+    ((double *)alike.by_column.value)[alike.count - 1] = 1e-300; /* no float */
+    assert_true(cells_value(&alike, &alike.by_column, alike.count - 1) == 1e-300);
     cells_free(context, &alike);
     alike = cells_share(&from); /* of which nothing is freed but once */
     assert_ptr_equal(alike.by_row.value, from.by_row.value);
@@ -220,7 +225,7 @@ static void a_lack_of_memory_leaks_nothing(void **state)
         if (status == FESCUE_OK) {
             status = cells_select(context, &cells, keep, &some);
             if (status == FESCUE_OK) {
-                status = cells_alike(context, &cells, &alike);
+                status = cells_alike(context, &cells, cells.precision, &alike);
                 cells_free(context, &some);
                 cells_free(context, &alike);
             }

@@ -67,6 +67,27 @@ static void both_directions_hold_the_same(void **state)
     }
 }
 
+/* Targets in single precision are those in double, rounded; all else is the same but for what rounding is said to be.
+ */
+static void targets_may_be_coarser_than_the_store(void **state)
+{
+    fescue_context *context = bench_of(state)->context;
+    struct plot plot = plot_sow(context, &sown, 0);
+    struct problem coarse;
+    assert_status(context, problem_create_in(context, &plot.cells, NULL, 0.5, FESCUE_SINGLE, &coarse), FESCUE_OK);
+    assert_int_equal(coarse.target.precision, FESCUE_SINGLE);
+    assert_memory_equal(&coarse.scale, &plot.problem.scale, sizeof(double));
+    assert_close(coarse.rounding, FLT_EPSILON, 0);
+    for (int side = 0; side < 2; side++) {
+        const struct half *fine = side == 0 ? &plot.problem.target.by_row : &plot.problem.target.by_column;
+        const struct half *half = side == 0 ? &coarse.target.by_row : &coarse.target.by_column;
+        for (uint64_t k = 0; k < plot.cells.count; k++)
+            assert_close(cells_value(&coarse.target, half, k), (float)cells_value(&plot.problem.target, fine, k), 0);
+    }
+    problem_free(&coarse);
+    plot_free(&plot);
+}
+
 /* Values whose squares overflow or vanish have the targets of the same table in ordinary units. */
 static void extreme_units_do_not_matter(void **state)
 {
@@ -172,13 +193,10 @@ static void lack_of_memory_leaves_nothing(void **state)
 int main(void)
 {
     const struct CMUnitTest tests[] = {
-        BENCH_TEST(the_targets_are_what_the_formula_says),
-        BENCH_TEST(both_directions_hold_the_same),
-        BENCH_TEST(extreme_units_do_not_matter),
-        BENCH_TEST(a_table_of_zeros_keeps_scale_one),
-        BENCH_TEST(a_table_without_cells_is_a_problem_too),
-        BENCH_TEST(rounding_is_that_of_the_observed),
-        BENCH_TEST(the_bits_do_not_depend_on_the_workers),
+        BENCH_TEST(the_targets_are_what_the_formula_says), BENCH_TEST(both_directions_hold_the_same),
+        BENCH_TEST(targets_may_be_coarser_than_the_store), BENCH_TEST(extreme_units_do_not_matter),
+        BENCH_TEST(a_table_of_zeros_keeps_scale_one),      BENCH_TEST(a_table_without_cells_is_a_problem_too),
+        BENCH_TEST(rounding_is_that_of_the_observed),      BENCH_TEST(the_bits_do_not_depend_on_the_workers),
         BENCH_TEST(lack_of_memory_leaves_nothing),
     };
     return cmocka_run_group_tests(tests, NULL, NULL);
