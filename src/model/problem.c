@@ -22,10 +22,10 @@
 
 struct target_pass {
     const struct cells *from;
-    const struct offsets *offsets; /* NULL: none */
-    const struct half *half;       /* of `from` */
-    void *target;                  /* values in the half's order, when they are written */
-    enum fescue_precision precision;
+    const struct offsets *offsets;   /* NULL: none */
+    const struct half *half;         /* of `from` */
+    void *target;                    /* values in the half's order, when they are written */
+    enum fescue_precision precision; /* of the targets */
     bool by_row;
     double largest, scale;
     double largest_of[CELLS_MOST_BLOCKS];    /* |x - offset| */

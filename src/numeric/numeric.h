@@ -140,7 +140,7 @@ static inline size_t packed_size(size_t k)
    the team of the context; results are the same bits for any number of workers. The numbers of a row behind its columns
    up to the next multiple of 8 must be there and be zero, in factors read and written (matrix_carve makes such ones).
    Arithmetic in the store's precision, sums over cells in double. All workspace is taken by sweep_create; single
-   precision copies the factors there once a call. Numbers of factors are finite: one that is not may spoil the
+   precision copies each call's factors there. Numbers of factors are finite: one that is not may spoil the
    result of the line before its own as well. The half may be of any store with as many rows and columns as that
    of sweep_create. */
 struct sweep_kernel;

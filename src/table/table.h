@@ -63,7 +63,8 @@ fescue_status cells_build(fescue_context *context, uint32_t rows, uint32_t colum
 fescue_status cells_select(fescue_context *context, const struct cells *from, const uint8_t *keep, struct cells *cells);
 /* The same cells, which stay `from`'s and must not be changed; it must outlive this. Freed like any other store. */
 struct cells cells_share(const struct cells *from);
-/* New store that shares `from`'s pattern (which must outlive it) and has values of its own, zeroed. */
+/* New store that shares `from`'s pattern (which must outlive it) and has values of its own, zeroed, in this precision.
+ */
 fescue_status cells_alike(fescue_context *context, const struct cells *from, enum fescue_precision precision,
                           struct cells *cells);
 /* Gives every cell its weight, in row order, positive and finite; those it has are replaced. With NULL they have none.
