@@ -33,8 +33,14 @@ fescue_status dense_check(fescue_context *context, const char *routine, lapack_i
 struct dense_pieces dense_pieces_of(size_t lines, size_t columns)
 {
     /* A piece pays for its call into the team (some microseconds), and for a partial sum of columns^2 numbers; many
-       pieces share out more evenly. */
-    size_t each = 1024 > 8 * columns ? 1024 : 8 * columns;
+       pieces share out more evenly. So of 1024 lines, or a quarter of fewer, but not of less than 2^17 products with a
+       square, nor of less than eight lines a column. */
+    size_t square = columns * columns, pays = square > 128 ? ((size_t)1 << 17) / square : 1024;
+    size_t each = lines / 4 < 1024 ? lines / 4 : 1024;
+    if (each < pays)
+        each = pays;
+    if (each < 8 * columns)
+        each = 8 * columns;
     size_t least = (lines + DENSE_MOST_PIECES - 1) / DENSE_MOST_PIECES;
     if (each < least)
         each = least;

@@ -147,16 +147,20 @@ struct sweep_kernel;
 struct sweep {
     fescue_context *context;
     enum fescue_precision precision;
-    struct arena arena; /* partial sums, single-precision copies, one small workspace a worker */
+    struct arena arena; /* partial sums, copies of rows, one small workspace a worker */
     size_t rank_most;   /* at most 257 */
-    size_t near_most;   /* bytes of rows that are not asked for before they are needed */
     const char *kernel; /* which instruction set was chosen: "portable", "avx2", "avx512" */
     const struct sweep_kernel *kernels;
     const struct batch_kernel *batch;
     double *partial, *room;
-    float *pool;
+    struct sweep_copies {
+        float *shared; /* in single precision: both factors' rows of a side */
+        char *own;     /* of each worker: which opening its rows are of, and the rows; NULL with one worker alone */
+        size_t shared_size, own_size, near_most;
+        uint64_t openings;
+    } copies;                  /* of rows (sweep_rows.c) */
     struct sweep_slabs *slabs; /* of sweep_arrange, or NULL */
-    size_t pool_size, workers; /* the team may not grow beyond what it was at sweep_create */
+    size_t workers;            /* the team may not grow beyond what it was at sweep_create */
 };
 fescue_status sweep_create(fescue_context *context, const struct cells *cells, size_t rank_most, struct sweep *sweep);
 void sweep_destroy(struct sweep *sweep);

@@ -7,18 +7,14 @@
  * instruction set does: it decides how many numbers are summed side by side and whether products are rounded before
  * they are added (kernel_set.c).
  *
- * Workspace: sums of 256 blocks; in single precision, copies of up to two factors of a side; for each worker a
- * line's normal equations twice and a chunk of gathered rows.
+ * Workspace: sums of 256 blocks; copies of rows (sweep_rows.c); for each worker a line's normal equations twice and a
+ * chunk of gathered rows.
  */
 #include "numeric/kernel_internal.h"
 
 #include <assert.h>
 #include <float.h>
 #include <string.h>
-#include <unistd.h>
-
-enum { FACTORS_MOST = 2 };          /* whose rows an operation reads for every cell */
-enum { NEAR_ANYWHERE = 160 << 10 }; /* bytes, where a processor does not tell the size of its caches */
 
 /* ---- workspace ----------------------------------------------------------------------------------------------------
  */
@@ -56,16 +52,6 @@ struct sweep_room sweep_room_of(const struct sweep *sweep, size_t worker)
     return room;
 }
 
-/* Bytes of rows that stay in a core's own cache beside the cells that pass through it: 5/8 of it. */
-static size_t near_most(void)
-{
-    long cache = 0;
-#ifdef _SC_LEVEL2_CACHE_SIZE
-    cache = sysconf(_SC_LEVEL2_CACHE_SIZE);
-#endif
-    return cache > 0 ? (size_t)cache / 8 * 5 : NEAR_ANYWHERE;
-}
-
 fescue_status sweep_create(fescue_context *context, const struct cells *cells, size_t rank_most, struct sweep *sweep)
 {
     const struct kernel_set *set = kernel_set_choose();
@@ -74,21 +60,16 @@ fescue_status sweep_create(fescue_context *context, const struct cells *cells, s
     *sweep = (struct sweep){.context = context,
                             .precision = cells->precision,
                             .rank_most = rank_most,
-                            .near_most = near_most(),
                             .kernel = set->name,
                             .kernels = set->sweep[cells->precision],
                             .batch = set->batch,
                             .workers = team_workers(context)};
-    sweep->pool_size = 0;
-    if (cells->precision == FESCUE_SINGLE)
-        sweep->pool_size = FACTORS_MOST * (size_t)(cells->rows > cells->columns ? cells->rows : cells->columns) *
-                           sweep_width(sweep, rank_most);
     arena_reserve(&sweep->arena, (size_t)CELLS_MOST_BLOCKS * SWEEP_SUMS, sizeof(double));
-    arena_reserve(&sweep->arena, sweep->pool_size, sizeof(float));
+    sweep_rows_reserve(sweep, cells->rows > cells->columns ? cells->rows : cells->columns);
     arena_reserve(&sweep->arena, sweep->workers * worker_room(sweep), sizeof(double));
     TRY(arena_open(context, &sweep->arena));
     sweep->partial = arena_carve(&sweep->arena, (size_t)CELLS_MOST_BLOCKS * SWEEP_SUMS, sizeof(double));
-    sweep->pool = arena_carve(&sweep->arena, sweep->pool_size, sizeof(float));
+    sweep_rows_carve(sweep);
     sweep->room = arena_carve(&sweep->arena, sweep->workers * worker_room(sweep), sizeof(double));
 done:
     if (status != FESCUE_OK)
@@ -105,70 +86,6 @@ void sweep_destroy(struct sweep *sweep)
     *sweep = (struct sweep){0};
 }
 
-/* ---- factors as the kernels see them
- * --------------------------------------------------------------------------------- */
-
-enum { COPY_LINES = 512 }; /* lines of a piece for one worker: some microseconds */
-
-struct copy_job {
-    struct matrix from[FACTORS_MOST];
-    float *to[FACTORS_MOST];
-    size_t first[FACTORS_MOST + 1]; /* of each factor's pieces */
-    size_t width;
-};
-
-/* to <- from; the zeros behind a row go along. */
-NUMERIC_VERSIONS static void rows_round(const double *from, size_t stride, size_t lines, size_t width, float *to)
-{
-    for (size_t i = 0; i < lines; i++)
-        for (size_t j = 0; j < width; j++)
-            to[i * width + j] = (float)from[i * stride + j];
-}
-
-static void piece_copy(void *argument, size_t piece, size_t worker)
-{
-    const struct copy_job *job = argument;
-    size_t f = 0;
-    (void)worker;
-    while (piece >= job->first[f + 1])
-        f++;
-    const struct matrix *from = &job->from[f];
-    size_t line = (piece - job->first[f]) * COPY_LINES;
-    size_t lines = from->rows - line < COPY_LINES ? from->rows - line : COPY_LINES;
-    const double *rows = &MATRIX_AT(*from, line, 0);
-    float *to = job->to[f] + line * job->width;
-    if (from->stride == job->width)
-        rows_round(rows, 0, 1, lines * job->width, to);
-    else
-        rows_round(rows, from->stride, lines, job->width, to);
-}
-
-void sweep_rows_open(struct sweep_job *job, size_t first, size_t lines)
-{
-    struct sweep *sweep = job->sweep;
-    const struct matrix *factor[FACTORS_MOST] = {&job->right_of, &job->b_of};
-    struct sweep_rows *rows[FACTORS_MOST] = {&job->right, &job->b};
-    struct copy_job copy = {.width = job->width};
-    float *room = sweep->pool;
-    size_t count = 0, size = sweep->precision == FESCUE_SINGLE ? sizeof(float) : sizeof(double);
-    for (; count < FACTORS_MOST && factor[count]->data != NULL; count++) {
-        const struct matrix from = matrix_lines(*factor[count], first, lines);
-        assert(from.stride >= job->width);
-        *rows[count] = (struct sweep_rows){.data = from.data, .stride = from.stride};
-        if (sweep->precision == FESCUE_DOUBLE)
-            continue;
-        copy.from[count] = from;
-        copy.to[count] = room;
-        copy.first[count + 1] = copy.first[count] + (lines + COPY_LINES - 1) / COPY_LINES;
-        *rows[count] = (struct sweep_rows){.data = room, .stride = job->width};
-        room += lines * job->width;
-    }
-    assert(room <= sweep->pool + sweep->pool_size);
-    job->near = count * lines * job->width * size <= sweep->near_most;
-    if (sweep->precision == FESCUE_SINGLE)
-        team_run(sweep->context, copy.first[count], piece_copy, &copy);
-}
-
 /* ---- running
  * ---------------------------------------------------------------------------------------------------------- */
 
@@ -181,9 +98,11 @@ struct block_run {
 static void run_block(void *argument, size_t block, size_t worker)
 {
     const struct block_run *run = argument;
+    struct sweep_job job = *run->job;
     double *sums = run->partial + block * SWEEP_SUMS;
     sums[0] = sums[1] = 0;
-    run->kernel(run->job, block, worker, sums);
+    sweep_rows_take(&job, worker);
+    run->kernel(&job, block, worker, sums);
 }
 
 void sweep_run(struct sweep_job *job, sweep_block *kernel, double sums[SWEEP_SUMS])

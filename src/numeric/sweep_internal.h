@@ -25,8 +25,10 @@ struct sweep_job {
     const struct half *half;
     struct matrix left, a;        /* read once a line, and rounded then */
     struct matrix right_of, b_of; /* rows read for every cell; b's data may be NULL */
-    struct sweep_rows right, b;   /* those of the half's positions, as kernels see them (sweep_rows_open) */
+    struct sweep_rows right, b;   /* those of the half's positions, as kernels see them (sweep_rows.c) */
+    size_t first;                 /* of them, in the factors */
     bool near;                    /* that all of them fit into a core's own cache */
+    bool own;                     /* that every worker takes a copy of its own of them */
     size_t width; /* numbers worked on in each row: the rank up to whole registers, zeros behind the rank */
     size_t rank;
     const void *values;    /* of cells, in the half's order: the half's own, or residuals, or others */
@@ -49,9 +51,13 @@ extern const struct sweep_kernel sweep_portable_double, sweep_portable_single;
 extern const struct sweep_kernel sweep_avx2_double, sweep_avx2_single, sweep_avx512_double, sweep_avx512_single;
 #endif
 
-/* Lets kernels see `lines` rows of the job's factors, from `first` on: the rows themselves, or in single precision
-   copies, all made in one round. */
+/* Room for copies of rows, of sides of at most `lines`: reserved in the sweep's arena, and carved from it. */
+void sweep_rows_reserve(struct sweep *sweep, size_t lines);
+void sweep_rows_carve(struct sweep *sweep);
+/* Lets kernels see `lines` rows of the job's factors, from `first` on: the rows themselves, or copies. */
 void sweep_rows_open(struct sweep_job *job, size_t first, size_t lines);
+/* Before a block, by the worker who goes through it, in a job of the block's own. */
+void sweep_rows_take(struct sweep_job *job, size_t worker);
 /* Runs one kernel over all blocks and adds up its sums. */
 void sweep_run(struct sweep_job *job, sweep_block *kernel, double sums[SWEEP_SUMS]);
 
