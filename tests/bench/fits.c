@@ -68,6 +68,12 @@ void rating_fit(const struct rating *rating, const char *solver, size_t rank, si
     fescue_context_destroy(&context);
 }
 
+/* Of the whole fits, which take the same iterations on any number of threads; or of an iteration, where one was cut. */
+static double times_one_thread(const struct fit_outcome *one, const struct fit_outcome *two)
+{
+    return one->iterations == two->iterations ? one->cpu / two->wall : one->iteration / two->iteration;
+}
+
 static void fit_report(struct bench *bench, const struct rating *rating, const char *solver, size_t rank)
 {
     struct fit_outcome outcome[2];
@@ -82,7 +88,7 @@ static void fit_report(struct bench *bench, const struct rating *rating, const c
                                    (json_int_t)own->iterations, "error on hidden cells", own->rmse, "ended by",
                                    own->stop, "MB at most", (double)own->bytes / 1e6);
         if (threads == 2)
-            figure_times_add(figure, outcome[0].cpu / own->wall);
+            figure_times_add(figure, times_one_thread(&outcome[0], own));
         figure_add(bench, figure);
     }
 }
