@@ -193,7 +193,7 @@ void sweep_solve(struct sweep *sweep, const struct half *half, struct matrix rig
     job.product = weights;
     job.ridge = ridge;
     job.factors = factors;
-    sweep_rows_open(&job, 0, half->length);
+    sweep_rows_open_shared(&job);
     sweep_run(&job, sweep->kernels->solve, sums);
 }
 

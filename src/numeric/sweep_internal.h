@@ -56,6 +56,8 @@ void sweep_rows_reserve(struct sweep *sweep, size_t lines);
 void sweep_rows_carve(struct sweep *sweep);
 /* Lets kernels see `lines` rows of the job's factors, from `first` on: the rows themselves, or copies. */
 void sweep_rows_open(struct sweep_job *job, size_t first, size_t lines);
+/* All rows of the half's positions, without copies of a worker's own. */
+void sweep_rows_open_shared(struct sweep_job *job);
 /* Before a block, by the worker who goes through it, in a job of the block's own. */
 void sweep_rows_take(struct sweep_job *job, size_t worker);
 /* Runs one kernel over all blocks and adds up its sums. */
