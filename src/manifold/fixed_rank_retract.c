@@ -4,7 +4,20 @@
  *
  *     X = U diag(s) V',  Z = U M V' + Up V' + U Vp'  (U'Up = 0, V'Vp = 0),  t a step length
  *
- * By metric projection (Vandereycken 2013, algorithm 6): X + t Z has at most rank 2r,
+ * Orthographic (Absil, Malick 2012, "Projection-like retractions on matrix manifolds", section 4.2): Y = X + t Z + t^2
+ * Up N^-1 Vp' with N = diag(s) + t M, the one matrix of rank r near X whose difference to X + t Z is normal at X. With
+ * the SVD N = A diag(d) B'
+ *
+ *     Y = L diag(d) R',     L = [U Up] K,  K = ( A            )     R = [V Vp] ( B            )
+ *                                              ( t B diag(1/d) )                ( t A diag(1/d) )
+ *
+ * With G = [U Up]'[U Up], L'L = K'G K; with Cholesky factors L'L = P'P and R'R = Q'Q and the SVD P diag(d) Q' = W
+ * diag(s) T', Y = (L P^-1 W) diag(s) (R Q^-1 T)'. Neither L nor any Q of a QR is made: the lines are gone through for G
+ * and for the result, 10 m r^2 flops. Nothing is lost by that where L'L is near I, and there it is done: d_r is not
+ * zero, and no column of L leaves U by more than a slope of MOST_SLOPE. Both SVDs are of matrices near to diagonal
+ * ones.
+ *
+ * By metric projection (Vandereycken 2013, algorithm 6) elsewhere, for long steps: X + t Z has at most rank 2r,
  *
  *     X + t Z = [U Up] C [V Vp]',     C = ( diag(s) + t M   t I )
  *                                         ( t I             0   )
@@ -14,25 +27,20 @@
  *   - The QR runs over [U Up] whole, though U is orthonormal and orthogonal to Up already: where Up loses rank the
  *     factor of Up alone has columns that need not be orthogonal to U.
  *   - Where m < 2r the frame [U Up] is wider than tall; Ql = I and Rl = [U Up] then do without any factorisation.
- *   - Where [U Up] and [V Vp] are well conditioned and tall, as they nearly always are, R comes from the products
- *     [U Up]'[U Up] alone and Q is not made: the leading parts are A = [U Up] Rl^-1 (vectors), m x r, orthonormal to
- *     rounding times the condition squared, and the same again, a second time and r wide, mends that: Cholesky QR done
- *     twice (dense_qr.c) with only the half that is kept in its second part. 14 m r^2 flops in place of 36.
+ *   - Where [U Up] and [V Vp] are well conditioned and tall, as they nearly always are, R comes from G alone and Q is
+ *     not made: the leading parts are A = [U Up] Rl^-1 (vectors), m x r, orthonormal to rounding times the condition
+ *     squared, and the same again, a second time and r wide, mends that: Cholesky QR done twice (dense_qr.c) with only
+ *     the half that is kept in its second part. 14 m r^2 flops in place of 36.
  *
- * Orthographic (Absil, Malick 2012, section 4.2): Y = X + t Z + t^2 Up N^-1 Vp' with N = diag(s) + t M, the one matrix
- * of rank r near X whose difference to X + t Z is normal at X. With the SVD N = A diag(d) B'
- *
- *     Y = L diag(d) R',     L = U A + t Up B diag(1/d),     R = V B + t Vp A diag(1/d)
- *
- * and QR of L and of R and an SVD of size r restore the form. It does not exist where N is singular.
- *
- * Cost: metric 14 or 36 (m+n) r^2 flops and SVDs of size 2r and r, orthographic 8 (m+n) r^2 and two of size r. Parallel
- * over pieces of lines.
+ * Both agree with the exponential map to second order. Parallel over pieces of lines.
  */
 #include "manifold/manifold_internal.h"
 
 #include <float.h>
 #include <string.h>
+
+/* Of a column of L against U: 0.5 is an angle of 27 degrees. */
+#define MOST_SLOPE 0.5
 
 static size_t least(size_t a, size_t b)
 {
@@ -90,8 +98,8 @@ struct fixed_rank_work fixed_rank_carve(fescue_context *context, struct arena *a
     work.product = matrix_carve(arena, twice, twice);
     work.small = matrix_carve(arena, rank, rank);
     work.small_right = matrix_carve(arena, rank, rank);
-    work.inverse_left = matrix_carve(arena, twice, twice);
-    work.inverse_right = matrix_carve(arena, twice, twice);
+    work.gram_left = matrix_carve(arena, twice, twice);
+    work.gram_right = matrix_carve(arena, twice, twice);
     work.spectrum = arena_carve(arena, twice, sizeof(double));
     work.dense = arena_carve(arena, dense_room(rows, columns, rank), sizeof(double));
     work.sums = arena_carve(arena, sums_room(rows, columns, rank), sizeof(double));
@@ -128,19 +136,19 @@ static void metric_core(const struct low_rank *point, const struct fixed_rank_ta
 struct side {
     struct matrix frame, normal;  /* U and Up, or V and Vp */
     struct matrix tall, triangle; /* Q and R of what is factored */
-    struct matrix inverse;        /* R^-1, where Q is not made */
+    struct matrix gram;           /* G, and then R^-1 where Q is not made */
 };
 
 static struct side left_side(const struct fixed_rank_work *work, const struct low_rank *point,
                              const struct fixed_rank_tangent *z)
 {
-    return (struct side){point->left, z->left, work->tall_left, work->triangle_left, work->inverse_left};
+    return (struct side){point->left, z->left, work->tall_left, work->triangle_left, work->gram_left};
 }
 
 static struct side right_side(const struct fixed_rank_work *work, const struct low_rank *point,
                               const struct fixed_rank_tangent *z)
 {
-    return (struct side){point->right, z->right, work->tall_right, work->triangle_right, work->inverse_right};
+    return (struct side){point->right, z->right, work->tall_right, work->triangle_right, work->gram_right};
 }
 
 /* ---- metric projection, by QR ----------------------------------------------------------------------------------- */
@@ -194,97 +202,118 @@ static fescue_status core_factor(struct fixed_rank_work *work, struct matrix hig
     return dense_svd(work->context, *high_vectors, work->spectrum, *low_vectors, work->dense);
 }
 
-/* ---- without Q ------------------------------------------------------------------------------------------------- */
+/* ---- from products ---------------------------------------------------------------------------------------------- */
 
-static struct tall_step pair_gram(const struct side *side)
+static struct tall_step pair_products(const struct side *side)
 {
-    struct matrix gram = side->triangle, f = side->frame, n = side->normal;
+    struct matrix gram = side->gram, f = side->frame, n = side->normal;
     return (struct tall_step){.sums = 3,
                               .sum = {{.a = f, .b = f, .cross = matrix_quarter(gram, 0, 0)},
                                       {.a = f, .b = n, .cross = matrix_quarter(gram, 0, 1)},
                                       {.a = n, .b = n, .cross = matrix_quarter(gram, 1, 1)}}};
 }
 
-/* The triangles of both sides and their inverses from sums of products; false where [frame normal] is near to losing
-   rank, or small. */
-static bool pairs_sum(struct fixed_rank_work *work, const struct side *left, const struct side *right)
+/* G of both sides. */
+static void pairs_sum(struct fixed_rank_work *work, const struct side *left, const struct side *right)
 {
-    const struct tall_step grams[] = {pair_gram(left), pair_gram(right)};
+    const struct tall_step products[] = {pair_products(left), pair_products(right)};
+    tall_run(work->context, products, 2, work->sums);
+    for (size_t i = work->rank; i < 2 * work->rank; i++)
+        for (size_t j = 0; j < work->rank; j++) {
+            MATRIX_AT(left->gram, i, j) = MATRIX_AT(left->gram, j, i);
+            MATRIX_AT(right->gram, i, j) = MATRIX_AT(right->gram, j, i);
+        }
+}
+
+/* For nearly orthonormal frames A and B with diag(spectrum) between them, A'A in small and B'B in small_right: with
+   Cholesky factors R'R = A'A and S'S = B'B, the SVD of R diag(spectrum) S' is what turns A R^-1 and B S^-1. What turns
+   A and B takes the place of their products. */
+static fescue_status frames_turn(struct fixed_rank_work *work, double *spectrum)
+{
+    fescue_status status;
+    struct matrix r = work->small, s = work->small_right, core = matrix_quarter(work->core, 0, 0),
+                  scaled = matrix_quarter(work->core, 1, 1), core_right = matrix_quarter(work->core_right, 0, 0),
+                  inverse = matrix_quarter(work->gram_left, 0, 0),
+                  inverse_right = matrix_quarter(work->gram_right, 0, 0);
+    if (!dense_gram_triangle(r, inverse, work->spectrum + work->rank) ||
+        !dense_gram_triangle(s, inverse_right, work->spectrum + work->rank))
+        return FAIL(work->context, FESCUE_DEFECT, "frames that were orthonormal but for rounding are so no more");
+    matrix_copy(r, scaled);
+    matrix_scale_columns(scaled, work->spectrum);
+    matrix_multiply(1, scaled, false, s, true, 0, core);
+    TRY(dense_svd_near_diagonal(work->context, core, spectrum, core_right, work->dense));
+    matrix_multiply(1, inverse, false, core, false, 0, r);
+    matrix_multiply(1, inverse_right, false, core_right, false, 0, s);
+done:
+    return status;
+}
+
+/* The two halves of 2r lines, as they go with a frame and its normal. */
+static struct tall_step pair_turn(const struct side *side, struct matrix turn, struct matrix to)
+{
+    size_t rank = turn.columns;
+    return (struct tall_step){.to = to,
+                              .terms = 2,
+                              .term = {{1, side->frame, matrix_lines(turn, 0, rank), false},
+                                       {1, side->normal, matrix_lines(turn, rank, rank), false}}};
+}
+
+/* ---- metric projection, without Q -------------------------------------------------------------------------------- */
+
+/* The triangles of both sides and their inverses, where G has been summed; false where [frame normal] is near to losing
+   rank, or small. */
+static bool pairs_triangle(struct fixed_rank_work *work, const struct side *left, const struct side *right)
+{
     size_t least_lines = DENSE_GRAM_LINES * 2 * work->rank;
     if (work->rows < least_lines || work->columns < least_lines)
         return false;
-    tall_run(work->context, grams, 2, work->sums);
-    return dense_gram_triangle(left->triangle, left->inverse, work->spectrum) &&
-           dense_gram_triangle(right->triangle, right->inverse, work->spectrum);
+    matrix_copy(left->gram, left->triangle);
+    matrix_copy(right->gram, right->triangle);
+    return dense_gram_triangle(left->triangle, left->gram, work->spectrum) &&
+           dense_gram_triangle(right->triangle, right->gram, work->spectrum);
 }
 
 /* tall = [frame normal] R^-1 vectors, and of that the products. */
-static struct tall_step pair_turn(const struct side *side, struct matrix tall, struct matrix turn, struct matrix gram)
+static struct tall_step leading_turn(const struct side *side, struct matrix turn, struct matrix tall,
+                                     struct matrix gram)
 {
-    size_t rank = turn.columns;
-    return (struct tall_step){.to = tall,
-                              .terms = 2,
-                              .term = {{1, side->frame, matrix_lines(turn, 0, rank), false},
-                                       {1, side->normal, matrix_lines(turn, rank, rank), false}},
-                              .sums = 1,
-                              .sum = {{.a = tall, .b = tall, .cross = gram}}};
+    struct tall_step step = pair_turn(side, turn, tall);
+    step.sums = 1;
+    step.sum[0] = (struct tall_sum){.a = tall, .b = tall, .cross = gram};
+    return step;
 }
 
-/* to = nearly orthonormal frames A and B with diag(spectrum) between them, orthonormalised: with R'R = A'A and S'S =
-   B'B the SVD of R diag(spectrum) S' is what turns A R^-1 and B S^-1. */
-static fescue_status frames_settle(struct fixed_rank_work *work, struct matrix a, struct matrix b, struct low_rank *to)
+/* to = the frames times the leading vectors, where pairs_triangle has made the triangles. */
+static fescue_status pairs_turn(struct fixed_rank_work *work, const struct side *left, const struct side *right,
+                                struct matrix left_vectors, struct matrix right_vectors, struct low_rank *to)
 {
     fescue_status status;
     size_t rank = work->rank;
-    struct matrix r = work->small, s = work->small_right, core = matrix_quarter(work->core, 0, 0),
-                  core_right = matrix_quarter(work->core_right, 0, 0), turn = matrix_quarter(work->product, 0, 0),
-                  turn_right = matrix_quarter(work->product, 1, 1), inverse = matrix_quarter(work->inverse_left, 0, 0),
-                  inverse_right = matrix_quarter(work->inverse_right, 0, 0);
-    if (!dense_gram_triangle(r, inverse, work->spectrum + rank) ||
-        !dense_gram_triangle(s, inverse_right, work->spectrum + rank))
-        return FAIL(work->context, FESCUE_DEFECT, "frames that were orthonormal but for rounding are so no more");
-    matrix_copy(r, core);
-    matrix_scale_columns(core, work->spectrum);
-    matrix_multiply(1, core, false, s, true, 0, turn);
-    matrix_copy(turn, core);
-    TRY(dense_svd(work->context, core, to->spectrum, core_right, work->dense));
-    matrix_multiply(1, inverse, false, core, false, 0, turn);
-    matrix_multiply(1, inverse_right, false, core_right, false, 0, turn_right);
+    struct matrix turn = matrix_columns(work->product, 0, rank), turn_right = matrix_columns(work->product, rank, rank),
+                  a = matrix_left(left->tall, rank), b = matrix_left(right->tall, rank);
+    matrix_multiply(1, left->gram, false, matrix_left(left_vectors, rank), false, 0, turn);
+    matrix_multiply(1, right->gram, false, matrix_left(right_vectors, rank), false, 0, turn_right);
+    const struct tall_step turns[] = {leading_turn(left, turn, a, work->small),
+                                      leading_turn(right, turn_right, b, work->small_right)};
+    tall_run(work->context, turns, 2, work->sums);
+    TRY(frames_turn(work, to->spectrum));
     const struct tall_step last[] = {
-        {.to = to->left, .terms = 1, .term = {{1, a, turn, false}}},
-        {.to = to->right, .terms = 1, .term = {{1, b, turn_right, false}}},
+        {.to = to->left, .terms = 1, .term = {{1, a, work->small, false}}},
+        {.to = to->right, .terms = 1, .term = {{1, b, work->small_right, false}}},
     };
     tall_run(work->context, last, 2, NULL);
 done:
     return status;
 }
 
-/* to = the frames times the leading vectors, where pairs_sum has made the triangles. */
-static fescue_status pairs_turn(struct fixed_rank_work *work, const struct side *left, const struct side *right,
-                                struct matrix left_vectors, struct matrix right_vectors, struct low_rank *to)
-{
-    size_t rank = work->rank;
-    struct matrix turn = matrix_columns(work->product, 0, rank), turn_right = matrix_columns(work->product, rank, rank),
-                  a = matrix_left(left->tall, rank), b = matrix_left(right->tall, rank);
-    matrix_multiply(1, left->inverse, false, matrix_left(left_vectors, rank), false, 0, turn);
-    matrix_multiply(1, right->inverse, false, matrix_left(right_vectors, rank), false, 0, turn_right);
-    const struct tall_step turns[] = {pair_turn(left, a, turn, work->small),
-                                      pair_turn(right, b, turn_right, work->small_right)};
-    tall_run(work->context, turns, 2, work->sums);
-    return frames_settle(work, a, b, to);
-}
-
-/* ---- either way ------------------------------------------------------------------------------------------------ */
-
-fescue_status fixed_rank_retract(struct fixed_rank_work *work, const struct low_rank *point,
-                                 const struct fixed_rank_tangent *z, double t, struct low_rank *to)
+static fescue_status metric_project(struct fixed_rank_work *work, const struct low_rank *point,
+                                    const struct fixed_rank_tangent *z, double t, struct low_rank *to)
 {
     fescue_status status;
     struct side left = left_side(work, point, z), right = right_side(work, point, z);
     struct matrix left_vectors, right_vectors;
-    assert(is_of_work(work, point) && is_of_work(work, to));
-    bool summed = pairs_sum(work, &left, &right);
-    if (!summed) {
+    bool has_triangles = pairs_triangle(work, &left, &right);
+    if (!has_triangles) {
         TRY(pair_factor(work, &left));
         TRY(pair_factor(work, &right));
     }
@@ -293,7 +322,7 @@ fescue_status fixed_rank_retract(struct fixed_rank_work *work, const struct low_
         TRY(core_factor(work, left.triangle, right.triangle, false, &left_vectors, &right_vectors));
     else
         TRY(core_factor(work, right.triangle, left.triangle, true, &right_vectors, &left_vectors));
-    if (summed)
+    if (has_triangles)
         return pairs_turn(work, &left, &right, left_vectors, right_vectors, to);
     pair_frame(work->context, &left, left_vectors, to->left);
     pair_frame(work->context, &right, right_vectors, to->right);
@@ -304,53 +333,92 @@ done:
 
 /* ---- orthographic ------------------------------------------------------------------------------------------------ */
 
-/* tall triangle = frame own + t normal other diag(1/d), d the work's spectrum. */
-static fescue_status graph_factor(struct fixed_rank_work *work, const struct side *side, struct matrix own,
-                                  struct matrix other, double t)
+/* k = K of the orthographic retraction, of either side: A and B are `own` and `other`. */
+static void graph_turn(const double *spectrum, struct matrix own, struct matrix other, double t, struct matrix k)
 {
-    struct matrix tall = side->tall;
-    tall_multiply(work->context, t, side->normal, other, 0, tall);
-    for (size_t i = 0; i < tall.rows; i++)
-        for (size_t k = 0; k < tall.columns; k++)
-            MATRIX_AT(tall, i, k) /= work->spectrum[k];
-    tall_multiply(work->context, 1, side->frame, own, 1, tall);
-    return dense_qr(work->context, tall, side->triangle, work->dense);
+    size_t rank = own.columns;
+    for (size_t i = 0; i < rank; i++)
+        for (size_t j = 0; j < rank; j++) {
+            MATRIX_AT(k, i, j) = MATRIX_AT(own, i, j);
+            MATRIX_AT(k, rank + i, j) = t * MATRIX_AT(other, i, j) / spectrum[j];
+        }
 }
 
-/* to = L diag(d) R' with L and R from both sides, A and B in the work's small matrices. */
-static fescue_status graph_meet(struct fixed_rank_work *work, const struct side *left, const struct side *right,
-                                double t, struct low_rank *to)
+/* products = K'G K; whether no column of [frame normal] K leaves the frame by more than the slope. */
+static bool graph_sum(struct matrix gram, struct matrix k, struct matrix room, struct matrix products)
 {
-    fescue_status status;
-    struct matrix a = work->small, b = work->small_right;
-    TRY(graph_factor(work, left, a, b, t));
-    TRY(graph_factor(work, right, b, a, t));
-    matrix_scale_columns(left->triangle, work->spectrum);
-    matrix_multiply(1, left->triangle, false, right->triangle, true, 0, a);
-    TRY(dense_svd(work->context, a, to->spectrum, b, work->dense));
-    tall_multiply(work->context, 1, left->tall, a, 0, to->left);
-    tall_multiply(work->context, 1, right->tall, b, 0, to->right);
-done:
-    return status;
+    matrix_multiply(1, gram, false, k, false, 0, room);
+    matrix_multiply(1, k, true, room, false, 0, products);
+    for (size_t j = 0; j < products.columns; j++)
+        if (!(MATRIX_AT(products, j, j) <= 1 + MOST_SLOPE * MOST_SLOPE))
+            return false;
+    return true;
 }
 
-fescue_status fixed_rank_retract_orthographic(struct fixed_rank_work *work, const struct low_rank *point,
-                                              const struct fixed_rank_tangent *z, double t, struct low_rank *to,
-                                              bool *defined)
+static fescue_status orthographic_meet(struct fixed_rank_work *work, const struct low_rank *point,
+                                       const struct fixed_rank_tangent *z, double t, struct low_rank *to, bool *is_near)
 {
     fescue_status status;
     size_t rank = work->rank;
     struct side left = left_side(work, point, z), right = right_side(work, point, z);
-    assert(is_of_work(work, point) && is_of_work(work, to));
-    left.tall = matrix_left(left.tall, rank);
-    right.tall = matrix_left(right.tall, rank);
-    left.triangle = matrix_corner(work->core, rank, rank);
-    right.triangle = matrix_corner(work->core_right, rank, rank);
-    moved_core(point, z, t, work->small);
-    TRY(dense_svd(work->context, work->small, work->spectrum, work->small_right, work->dense));
-    *defined = work->spectrum[rank - 1] > (double)rank * DBL_EPSILON * work->spectrum[0];
-    if (*defined)
-        TRY(graph_meet(work, &left, &right, t, to));
+    struct matrix a = work->small, b = work->small_right, k = matrix_columns(work->product, 0, rank),
+                  k_right = matrix_columns(work->product, rank, rank), turn = matrix_columns(work->core, 0, rank),
+                  turn_right = matrix_columns(work->core, rank, rank);
+    moved_core(point, z, t, a);
+    TRY(dense_svd_near_diagonal(work->context, a, work->spectrum, b, work->dense));
+    *is_near = work->spectrum[rank - 1] > (double)rank * DBL_EPSILON * work->spectrum[0];
+    if (!*is_near)
+        goto done;
+    graph_turn(work->spectrum, a, b, t, k);
+    graph_turn(work->spectrum, b, a, t, k_right);
+    *is_near = graph_sum(left.gram, k, turn, a) && graph_sum(right.gram, k_right, turn_right, b);
+    if (!*is_near)
+        goto done;
+    TRY(frames_turn(work, to->spectrum));
+    matrix_multiply(1, k, false, a, false, 0, turn);
+    matrix_multiply(1, k_right, false, b, false, 0, turn_right);
+    const struct tall_step last[] = {pair_turn(&left, turn, to->left), pair_turn(&right, turn_right, to->right)};
+    tall_run(work->context, last, 2, NULL);
 done:
     return status;
+}
+
+/* ---- either way -------------------------------------------------------------------------------------------------- */
+
+static void products_make(struct fixed_rank_work *work, const struct low_rank *point,
+                          const struct fixed_rank_tangent *z)
+{
+    struct side left = left_side(work, point, z), right = right_side(work, point, z);
+    pairs_sum(work, &left, &right);
+}
+
+fescue_status fixed_rank_retract(struct fixed_rank_work *work, const struct low_rank *point,
+                                 const struct fixed_rank_tangent *z, double t, struct low_rank *to)
+{
+    fescue_status status;
+    bool is_near;
+    assert(is_of_work(work, point) && is_of_work(work, to));
+    products_make(work, point, z);
+    TRY(orthographic_meet(work, point, z, t, to, &is_near));
+    if (!is_near)
+        TRY(metric_project(work, point, z, t, to));
+done:
+    return status;
+}
+
+fescue_status fixed_rank_retract_metric(struct fixed_rank_work *work, const struct low_rank *point,
+                                        const struct fixed_rank_tangent *z, double t, struct low_rank *to)
+{
+    assert(is_of_work(work, point) && is_of_work(work, to));
+    products_make(work, point, z);
+    return metric_project(work, point, z, t, to);
+}
+
+fescue_status fixed_rank_retract_orthographic(struct fixed_rank_work *work, const struct low_rank *point,
+                                              const struct fixed_rank_tangent *z, double t, struct low_rank *to,
+                                              bool *is_near)
+{
+    assert(is_of_work(work, point) && is_of_work(work, to));
+    products_make(work, point, z);
+    return orthographic_meet(work, point, z, t, to, is_near);
 }

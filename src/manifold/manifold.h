@@ -139,7 +139,7 @@ struct fixed_rank_work {
     struct matrix triangle_left, triangle_right; /* min(rows, 2 rank) x 2 rank and so on */
     struct matrix core, core_right, product;     /* 2 rank x 2 rank */
     struct matrix small, small_right;            /* rank x rank */
-    struct matrix inverse_left, inverse_right;   /* 2 rank x 2 rank */
+    struct matrix gram_left, gram_right;         /* 2 rank x 2 rank */
     double *spectrum;                            /* 2 rank */
     double *dense, *sums;
 };
@@ -174,17 +174,22 @@ double fixed_rank_inner_apart(struct fixed_rank_work *work, const struct low_ran
                               const struct fixed_rank_tangent *z, const struct low_rank *to,
                               const struct fixed_rank_tangent *y);
 
-/* to = a matrix of rank r nearest to X + t Z: the truncated SVD, exact, O((m+n) r^2 + r^3). `to` (same shape and rank)
-   may be the point. The new spectrum may hold zeros when X + t Z has a lower rank. Agrees with the exponential map up
-   to O(t^3). */
+/* to = a matrix of rank r near X + t Z, which agrees with the exponential map up to O(t^3): the orthographic retraction
+   where it is near enough, the metric projection elsewhere. `to`, of the same shape and rank, is not the point.
+   O((m+n) r^2 + r^3). */
 fescue_status fixed_rank_retract(struct fixed_rank_work *work, const struct low_rank *point,
                                  const struct fixed_rank_tangent *z, double t, struct low_rank *to);
+/* to = a matrix of rank r nearest to X + t Z: the truncated SVD, exact. The new spectrum may hold zeros when X + t Z
+   has a lower rank. */
+fescue_status fixed_rank_retract_metric(struct fixed_rank_work *work, const struct low_rank *point,
+                                        const struct fixed_rank_tangent *z, double t, struct low_rank *to);
 /* to = X + t Z + t^2 Up (diag(s) + t M)^-1 Vp', the matrix of rank r that differs from X + t Z by a normal vector only
-   (Absil, Malick 2012). Cheaper: QR and SVD of width r. *defined = false, and `to` untouched, when diag(s) + t M is
-   singular to rounding. `to` may be the point. Agrees with the exponential map up to O(t^3). */
+   (Absil, Malick 2012). Cheaper: no SVD of width 2r. *is_near = false, and `to` untouched, when diag(s) + t M is
+   singular to rounding or what is sought is a long way off: a column of either frame would turn by more than 27
+   degrees. */
 fescue_status fixed_rank_retract_orthographic(struct fixed_rank_work *work, const struct low_rank *point,
                                               const struct fixed_rank_tangent *z, double t, struct low_rank *to,
-                                              bool *defined);
+                                              bool *is_near);
 
 /* ---- curvature and step rules --------------------------------------------------------------------------------------
  */

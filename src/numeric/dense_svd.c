@@ -7,6 +7,10 @@
  * LAPACK sees the row-major k x k array of R as R', whose SVD is R' = V diag(s) W': its left vectors are our v, its
  * right ones, transposed as it returns them, are W in row-major order. U = Q W is made in place, 64 lines at a time, by
  * the team; every line is a product of its own, so that bits do not depend on threads. Cost 6 n k^2 + O(k^3).
+ *
+ * A square matrix near to a diagonal one by one-sided Jacobi (LAPACK gesvj; Drmac, Veselic 2008, "New fast and accurate
+ * Jacobi SVD algorithm", SIAM J. Matrix Anal. Appl. 29): two or three sweeps of rotations in place of a reduction to
+ * bidiagonal form, which costs the same for every matrix.
  */
 #include "numeric/dense_internal.h"
 
@@ -48,11 +52,11 @@ static void square_transpose(const double *from, struct matrix to)
 }
 
 /* LAPACK's iterations need not end on numbers that are not finite: -4 is its own word for such an argument. Of the k x
-   k numbers those on and above the diagonal count. */
-static lapack_int finite_check(const double *x, size_t k)
+   k numbers those on and above the diagonal count, or all. */
+static lapack_int finite_check(const double *x, size_t k, bool all)
 {
     for (size_t i = 0; i < k; i++)
-        for (size_t j = i; j < k; j++)
+        for (size_t j = all ? 0 : i; j < k; j++)
             if (!isfinite(x[i * k + j]))
                 return -4;
     return 0;
@@ -71,7 +75,7 @@ fescue_status dense_svd(fescue_context *context, struct matrix a, double *s, str
     double *triangle = work, *left = triangle + k * k, *right = left + k * k, *room = right + k * k;
     for (size_t i = 0; i < k; i++)
         memcpy(triangle + i * k, &MATRIX_AT(v, i, 0), k * sizeof *triangle);
-    TRY(dense_check(context, "gesvd", finite_check(triangle, k)));
+    TRY(dense_check(context, "gesvd", finite_check(triangle, k, false)));
     TRY(dense_check(context, "gesvd",
                     LAPACKE_dgesvd_work(LAPACK_COL_MAJOR, 'A', 'A', size, size, triangle, size, s, left, size, right,
                                         size, room, size * (2 * DENSE_BLOCK + 3))));
@@ -79,6 +83,34 @@ fescue_status dense_svd(fescue_context *context, struct matrix a, double *s, str
     turn.turn = right;
     turn.room = room;
     team_run(context, turn.pieces.count, piece_turn, &turn);
+done:
+    return status;
+}
+
+/* The array of a is A' to LAPACK, whose SVD gives our v as its left vectors and our u as its right ones. */
+fescue_status dense_svd_near_diagonal(fescue_context *context, struct matrix a, double *s, struct matrix v,
+                                      double *work)
+{
+    size_t k = a.columns;
+    lapack_int size = dense_size(k);
+    double *square = work, *other = square + k * k, *room = other + k * k;
+    size_t room_size = 2 * k < 6 ? 6 : 2 * k;
+    fescue_status status = FESCUE_OK;
+    assert(a.rows == k && v.rows == k && v.columns == k);
+    dense_threads_hold();
+    for (size_t i = 0; i < k; i++)
+        memcpy(square + i * k, &MATRIX_AT(a, i, 0), k * sizeof *square);
+    TRY(dense_check(context, "gesvj", finite_check(square, k, true)));
+    TRY(dense_check(context, "gesvj",
+                    LAPACKE_dgesvj_work(LAPACK_COL_MAJOR, 'G', 'U', 'V', size, size, square, size, s, 0, other, size,
+                                        room, dense_size(room_size))));
+    double scale = room[0], rank = room[1];
+    if (rank < (double)k) /* gesvj leaves out the vectors of zeros */
+        return dense_svd(context, a, s, v, work);
+    for (size_t i = 0; i < k; i++)
+        s[i] *= scale;
+    square_transpose(square, v);
+    square_transpose(other, a);
 done:
     return status;
 }
@@ -97,7 +129,7 @@ fescue_status dense_eigen(fescue_context *context, struct matrix a, double *w, d
     dense_threads_hold();
     for (size_t i = 0; i < k; i++)
         memcpy(square + i * k, &MATRIX_AT(a, i, 0), k * sizeof *square);
-    TRY(dense_check(context, "syevd", finite_check(square, k)));
+    TRY(dense_check(context, "syevd", finite_check(square, k, false)));
     /* Our upper triangle is the lower one of what LAPACK sees. */
     TRY(dense_check(context, "syevd",
                     LAPACKE_dsyevd_work(LAPACK_COL_MAJOR, 'V', 'L', size, square, size, w, room, dense_size(room_size),

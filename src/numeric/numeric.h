@@ -106,6 +106,9 @@ double tall_square(fescue_context *context, struct matrix a, const double *weigh
 fescue_status dense_qr(fescue_context *context, struct matrix a, struct matrix r, double *work);
 /* Thin SVD a = u diag(s) v' of lines x k, lines >= k: u overwrites a, s descending [k], v is k x k. */
 fescue_status dense_svd(fescue_context *context, struct matrix a, double *s, struct matrix v, double *work);
+/* The same of a square a, in a fraction of the time where it is near to a diagonal one. */
+fescue_status dense_svd_near_diagonal(fescue_context *context, struct matrix a, double *s, struct matrix v,
+                                      double *work);
 /* Symmetric a (k x k, upper used) = q diag(w) q', w ascending; q overwrites a. */
 fescue_status dense_eigen(fescue_context *context, struct matrix a, double *w, double *work);
 /* From gram = a'a (k x k, upper triangle used) the r of a = q r, which overwrites it, and the inverse of r, so that q =

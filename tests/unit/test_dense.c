@@ -23,7 +23,7 @@ struct stand {
     fescue_context *context;
     struct arena arena;
     struct matrix a, copy, r, square, product;
-    double *s, *work, *x, *y;
+    double *s, *work;
 };
 
 static void stand_open(struct stand *stand, fescue_context *context, struct shape shape)
@@ -229,10 +229,12 @@ static void qr_leaves_no_trace_of_workers(void **state)
     }
 }
 
-static void svd_check(struct stand *stand)
+typedef fescue_status decomposition(fescue_context *, struct matrix, double *, struct matrix, double *);
+
+static void svd_check(struct stand *stand, decomposition *decompose)
 {
     struct matrix v = stand->r;
-    assert_status(stand->context, dense_svd(stand->context, stand->a, stand->s, v, stand->work), FESCUE_OK);
+    assert_status(stand->context, decompose(stand->context, stand->a, stand->s, v, stand->work), FESCUE_OK);
     orthonormal_check(stand->a, tolerance_of(stand));
     orthonormal_check(v, tolerance_of(stand));
     for (size_t j = 0; j < v.rows; j++) {
@@ -250,18 +252,59 @@ static void svd_of_many_shapes(void **state)
     struct stand stand;
     for (size_t k = 0; k < COUNT(shapes); k++) {
         stand_open(&stand, bench_of(state)->context, shapes[k]);
-        svd_check(&stand);
+        svd_check(&stand, dense_svd);
         stand_close(&stand);
         stand_open(&stand, bench_of(state)->context, shapes[k]);
         for (size_t i = 0; i < shapes[k].lines; i++) /* rank 1 */
             for (size_t j = 1; j < shapes[k].columns; j++)
                 MATRIX_AT(stand.a, i, j) = MATRIX_AT(stand.a, i, 0) * (double)j;
         matrix_copy(stand.a, stand.copy);
-        svd_check(&stand);
+        svd_check(&stand, dense_svd);
         if (shapes[k].columns > 1)
             assert_close(stand.s[1], 0, tolerance_of(&stand) * stand.s[0]);
         stand_close(&stand);
     }
+}
+
+/* By Jacobi's rotations as by a reduction, however far from a diagonal one the matrix is. */
+static void svd_of_matrices_near_diagonal(void **state)
+{
+    static const double far[] = {0, 1e-15, 1e-9, 1e-2, 1};
+    static const size_t sizes[] = {1, 2, 3, 8, 16, 33, 64, 100};
+    for (size_t k = 0; k < COUNT(sizes) * COUNT(far); k++) {
+        size_t size = sizes[k / COUNT(far)];
+        struct stand stand;
+        double jacobi[100];
+        stand_open(&stand, bench_of(state)->context, (struct shape){size, size});
+        matrix_scale(far[k % COUNT(far)], stand.a);
+        for (size_t i = 0; i < size; i++)
+            MATRIX_AT(stand.a, i, i) += 1 / (1 + (double)i);
+        matrix_copy(stand.a, stand.copy);
+        svd_check(&stand, dense_svd_near_diagonal);
+        memcpy(jacobi, stand.s, size * sizeof *jacobi);
+        matrix_copy(stand.copy, stand.a);
+        svd_check(&stand, dense_svd);
+        for (size_t j = 0; j < size; j++)
+            assert_close(jacobi[j], stand.s[j], tolerance_of(&stand) * stand.s[0]);
+        stand_close(&stand);
+    }
+}
+
+/* Where singular values are zero their vectors are there all the same. */
+static void svd_of_a_deficient_square(void **state)
+{
+    static const double scale[] = {3, 0, -0.5, 0, 2};
+    static const double sorted[] = {3, 2, 0.5, 0, 0};
+    struct stand stand;
+    stand_open(&stand, bench_of(state)->context, (struct shape){5, 5});
+    matrix_zero(stand.a);
+    for (size_t j = 0; j < 5; j++)
+        MATRIX_AT(stand.a, j, j) = scale[j];
+    matrix_copy(stand.a, stand.copy);
+    svd_check(&stand, dense_svd_near_diagonal);
+    for (size_t j = 0; j < 5; j++)
+        assert_close(stand.s[j], sorted[j], 1e-15);
+    stand_close(&stand);
 }
 
 /* A matrix whose singular values are known: columns of I, scaled. */
@@ -627,6 +670,11 @@ static void what_is_not_finite_is_refused(void **state)
     assert_non_null(strstr(fescue_failure_text(stand.context), "not all finite"));
     fescue_failure_clear(stand.context);
     matrix_zero(stand.square);
+    MATRIX_AT(stand.square, 2, 1) = (double)NAN;
+    assert_status(stand.context, dense_svd_near_diagonal(stand.context, stand.square, stand.s, stand.r, stand.work),
+                  FESCUE_DEFECT);
+    fescue_failure_clear(stand.context);
+    matrix_zero(stand.square);
     MATRIX_AT(stand.square, 1, 2) = (double)INFINITY;
     assert_status(stand.context, dense_eigen(stand.context, stand.square, stand.s, stand.work), FESCUE_DEFECT);
     fescue_failure_clear(stand.context);
@@ -643,6 +691,8 @@ int main(void)
         BENCH_TEST(qr_without_r),
         BENCH_TEST(qr_leaves_no_trace_of_workers),
         BENCH_TEST(svd_of_many_shapes),
+        BENCH_TEST(svd_of_matrices_near_diagonal),
+        BENCH_TEST(svd_of_a_deficient_square),
         BENCH_TEST(svd_of_a_diagonal),
         BENCH_TEST(eigen_of_many_sizes),
         BENCH_TEST(eigenvalues_of_the_second_difference),
