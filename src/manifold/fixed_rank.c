@@ -40,6 +40,13 @@ struct fixed_rank_tangent fixed_rank_tangent_carve(struct arena *arena, size_t r
     return z;
 }
 
+static void middle_add(double alpha, struct matrix x, double beta, struct matrix y)
+{
+    for (size_t i = 0; i < y.rows; i++)
+        for (size_t j = 0; j < y.columns; j++)
+            MATRIX_AT(y, i, j) = alpha * MATRIX_AT(x, i, j) + (beta == 0 ? 0 : beta * MATRIX_AT(y, i, j));
+}
+
 void fixed_rank_add(const struct fixed_rank_work *work, double alpha, const struct fixed_rank_tangent *x, double beta,
                     struct fixed_rank_tangent *y)
 {
@@ -48,7 +55,7 @@ void fixed_rank_add(const struct fixed_rank_work *work, double alpha, const stru
         {.to = y->right, .beta = beta, .terms = 1, .term = {{.alpha = alpha, .a = x->right}}},
     };
     tall_run(work->context, sides, 2, NULL);
-    tall_add(work->context, alpha, x->middle, beta, y->middle);
+    middle_add(alpha, x->middle, beta, y->middle);
 }
 
 double fixed_rank_inner(const struct fixed_rank_work *work, const struct fixed_rank_tangent *x,
@@ -60,27 +67,55 @@ double fixed_rank_inner(const struct fixed_rank_work *work, const struct fixed_r
         {.sums = 1, .sum = {{.a = x->right, .b = y->right, .dot = &right}}},
     };
     tall_run(work->context, sides, 2, work->sums);
-    return matrix_dot(x->middle, y->middle) + left + right;
+    return matrix_dot(x->middle, y->middle) + (left + right);
+}
+
+/* One side of that, normal = beta (normal - frame inside) + alpha y; dots = <normal, normal>, <y, normal>. */
+static struct tall_step normal_settle(struct matrix normal, struct matrix frame, struct matrix inside,
+                                      const struct fixed_rank_blend *blend, struct matrix y, double dots[2])
+{
+    struct tall_step step = {.to = normal,
+                             .beta = blend->beta,
+                             .terms = 1,
+                             .term = {{.alpha = -blend->beta, .a = frame, .b = inside}},
+                             .sums = 1,
+                             .sum = {{.a = normal, .b = normal, .dot = &dots[0]}}};
+    if (blend->y != NULL) {
+        step.term[step.terms++] = (struct tall_term){.alpha = blend->alpha, .a = y};
+        step.sum[step.sums++] = (struct tall_sum){.a = y, .b = normal, .dot = &dots[1]};
+    }
+    return step;
 }
 
 /* The second time: what the products of frame and normal part in the work's small matrices tell to be left within the
-   frames goes, and the normal parts are orthogonal to them to rounding of their own size. */
-static void normals_settle(struct fixed_rank_work *work, const struct low_rank *point, struct fixed_rank_tangent *z)
+   frames goes, and the normal parts are orthogonal to them to rounding of their own size. In the same round, the sum
+   with a tangent; of the normal parts of what comes out the products. */
+static void normals_settle(struct fixed_rank_work *work, const struct low_rank *point, struct fixed_rank_tangent *z,
+                           struct fixed_rank_blend *blend)
 {
+    const struct fixed_rank_tangent *y = blend->y != NULL ? blend->y : z;
+    double left[2] = {0}, right[2] = {0};
     const struct tall_step sides[] = {
-        {.to = z->left, .beta = 1, .terms = 1, .term = {{.alpha = -1, .a = point->left, .b = work->small}}},
-        {.to = z->right, .beta = 1, .terms = 1, .term = {{.alpha = -1, .a = point->right, .b = work->small_right}}},
+        normal_settle(z->left, point->left, work->small, blend, y->left, left),
+        normal_settle(z->right, point->right, work->small_right, blend, y->right, right),
     };
-    tall_run(work->context, sides, 2, NULL);
+    tall_run(work->context, sides, 2, work->sums);
     /* A square frame spans everything. */
-    if (point->rows == point->rank)
+    if (point->rows == point->rank) {
         matrix_zero(z->left);
-    if (point->columns == point->rank)
+        left[0] = left[1] = 0;
+    }
+    if (point->columns == point->rank) {
         matrix_zero(z->right);
+        right[0] = right[1] = 0;
+    }
+    blend->size = left[0] + right[0];
+    blend->along = left[1] + right[1];
 }
 
-void fixed_rank_project(struct fixed_rank_work *work, const struct low_rank *point, struct fixed_rank_tangent *z)
+double fixed_rank_project(struct fixed_rank_work *work, const struct low_rank *point, struct fixed_rank_tangent *z)
 {
+    struct fixed_rank_blend alone = {.beta = 1};
     struct matrix u = point->left, v = point->right, in_left = work->small, in_right = work->small_right;
     assert(is_shape(z->left, point->rows, point->rank) && is_shape(z->right, point->columns, point->rank));
     const struct tall_step inner[] = {
@@ -103,7 +138,8 @@ void fixed_rank_project(struct fixed_rank_work *work, const struct low_rank *poi
          .sum = {{.a = v, .b = z->right, .cross = in_right}}},
     };
     tall_run(work->context, once, 2, work->sums);
-    normals_settle(work, point, z);
+    normals_settle(work, point, z, &alone);
+    return alone.size;
 }
 
 void fixed_rank_pairs(const struct fixed_rank_work *work, const struct low_rank *point,
@@ -140,8 +176,9 @@ static void view_finish(const struct fixed_rank_tangent *z, const struct view *v
 }
 
 void fixed_rank_transport(struct fixed_rank_work *work, const struct low_rank *from, const struct fixed_rank_tangent *z,
-                          const struct low_rank *to, struct fixed_rank_tangent *out)
+                          const struct low_rank *to, struct fixed_rank_blend *blend, struct fixed_rank_tangent *out)
 {
+    struct fixed_rank_blend alone = {.beta = 1}, *sum = blend != NULL ? blend : &alone;
     struct view view = view_of(work);
     assert(out->left.data != z->left.data && out->right.data != z->right.data);
     const struct tall_step look[] = {
@@ -166,7 +203,13 @@ void fixed_rank_transport(struct fixed_rank_work *work, const struct low_rank *f
          .sum = {{.a = to->right, .b = out->right, .cross = work->small_right}}},
     };
     tall_run(work->context, once, 2, work->sums);
-    normals_settle(work, to, out);
+    normals_settle(work, to, out, sum);
+    if (sum->y != NULL) {
+        middle_add(sum->alpha, sum->y->middle, sum->beta, out->middle);
+        sum->along += matrix_dot(sum->y->middle, out->middle);
+    } else
+        matrix_scale(sum->beta, out->middle);
+    sum->size += matrix_dot(out->middle, out->middle);
 }
 
 double fixed_rank_inner_apart(struct fixed_rank_work *work, const struct low_rank *from,

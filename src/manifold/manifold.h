@@ -155,18 +155,24 @@ double fixed_rank_inner(const struct fixed_rank_work *work, const struct fixed_r
 
 /* The orthogonal projection of an m x n matrix A onto the tangents at `point`, from two products of A that its owner
    makes: on entry z->left = A V (m x r) and z->right = A'U (n x r), z->middle anything; on return z is the projection.
-   O((m+n) r^2). */
-void fixed_rank_project(struct fixed_rank_work *work, const struct low_rank *point, struct fixed_rank_tangent *z);
+   Returns |z->left|^2 + |z->right|^2. O((m+n) r^2). */
+double fixed_rank_project(struct fixed_rank_work *work, const struct low_rank *point, struct fixed_rank_tangent *z);
 
 /* The tangent as two pairs of factors, Z = A V' + U B': A (m x r, receives U M + Up); B is z->right itself. What
    sweep_tangent takes: (a, right, left, b) = (A, V, U, B). */
 void fixed_rank_pairs(const struct fixed_rank_work *work, const struct low_rank *point,
                       const struct fixed_rank_tangent *z, struct matrix a);
 
-/* Transport by projection: out (not z) = the projection of Z, a tangent at `from`, onto the tangents at `to`.
+/* Transport by projection: out (not z) = T(Z), the projection of Z, a tangent at `from`, onto the tangents at `to`; or,
+   as a direction of conjugate gradients is made, a sum with a tangent there, and its products, in the same rounds.
    O((m+n) r^2). */
+struct fixed_rank_blend { /* out = beta T(Z) + alpha Y */
+    double beta, alpha;
+    const struct fixed_rank_tangent *y; /* at `to`, not out; NULL: none */
+    double size, along;                 /* given back: <out, out>, <Y, out> */
+};
 void fixed_rank_transport(struct fixed_rank_work *work, const struct low_rank *from, const struct fixed_rank_tangent *z,
-                          const struct low_rank *to, struct fixed_rank_tangent *out);
+                          const struct low_rank *to, struct fixed_rank_blend *blend, struct fixed_rank_tangent *out);
 
 /* The inner product at `to` of y, a tangent there, and of the transport of z, a tangent at `from`: without making it.
    O((m+n) r^2). */

@@ -106,10 +106,10 @@ static void trial_differentiate(struct fixed_rank_cg *cg)
     double square;
     tall_copy(cg->work.context, x->right, x->spectrum, cg->scaled_right);
     sweep_residual(&cg->field->sweep, field_columns(cg->field), cg->scaled_right, x->left, g->right, NULL, &square);
-    fixed_rank_project(&cg->work, x, g);
+    double normal = fixed_rank_project(&cg->work, x, g);
     for (size_t k = 0; k < x->rank; k++)
         MATRIX_AT(g->middle, k, k) += cg->field->problem->lambda * x->spectrum[k];
-    cg->trial_measure.gradient = sqrt(fixed_rank_inner(&cg->work, g, g));
+    cg->trial_measure.gradient = sqrt(matrix_dot(g->middle, g->middle) + normal);
 }
 
 /* The trial becomes the point; what was the point is overwritten by the next trial. */
@@ -124,16 +124,11 @@ static void trial_accept(struct fixed_rank_cg *cg)
     cg->measure = cg->trial_measure;
 }
 
-static void direction_weigh(struct fixed_rank_cg *cg)
-{
-    cg->slope = fixed_rank_inner(&cg->work, &cg->gradient, &cg->direction);
-    cg->size = fixed_rank_inner(&cg->work, &cg->direction, &cg->direction);
-}
-
 static void direction_restart(struct fixed_rank_cg *cg)
 {
     fixed_rank_add(&cg->work, -1, &cg->gradient, 0, &cg->direction);
-    direction_weigh(cg);
+    cg->size = cg->measure.gradient * cg->measure.gradient;
+    cg->slope = -cg->size;
     cg->fresh = true;
 }
 
@@ -189,12 +184,13 @@ static void direction_choose(struct fixed_rank_cg *cg, double old_gradient)
         return;
     }
     struct fixed_rank_tangent old = cg->direction;
-    fixed_rank_transport(&cg->work, &cg->trial, &old, &cg->point, &cg->moved);
-    fixed_rank_add(&cg->work, -1, &cg->gradient, beta, &cg->moved);
+    struct fixed_rank_blend blend = {.beta = beta, .alpha = -1, .y = &cg->gradient};
+    fixed_rank_transport(&cg->work, &cg->trial, &old, &cg->point, &blend, &cg->moved);
     cg->direction = cg->moved;
     cg->moved = old;
+    cg->slope = blend.along;
+    cg->size = blend.size;
     cg->fresh = false;
-    direction_weigh(cg);
     if (!(-cg->slope > least_cosine * new_gradient * sqrt(cg->size)))
         direction_restart(cg);
 }
@@ -273,7 +269,12 @@ static void cg_resume(void *state)
     trial_evaluate(cg);
     trial_differentiate(cg);
     trial_accept(cg);
-    direction_weigh(cg);
+    if (cg->fresh) {
+        direction_restart(cg);
+        return;
+    }
+    cg->slope = fixed_rank_inner(&cg->work, &cg->gradient, &cg->direction);
+    cg->size = fixed_rank_inner(&cg->work, &cg->direction, &cg->direction);
 }
 
 static fescue_status cg_point_write(void *state, struct low_rank *point)

@@ -245,6 +245,13 @@ def frames_error(x):
     return max(np.linalg.norm(x[k].T @ x[k] - np.eye(x[1].size)) for k in (0, 2))
 
 
+def slope(z, middle, t):
+    """The steepest column of the two graphs, in the bases that make the middle diagonal."""
+    a, d, b = np.linalg.svd(middle)
+    rises = t * z[1] @ b.T / d, t * z[2] @ a / d
+    return max(np.linalg.norm(rise, axis=0).max(initial=0) for rise in rises)
+
+
 def retractions(geometry, rng):
     worst = Worst()
     for m, n, r in FIXED_RANK:
@@ -258,11 +265,14 @@ def retractions(geometry, rng):
             worst.keep("metric: the truncated SVD", (dense(moved) - best) * min(1.0, gap))
             worst.keep("metric: its spectrum", moved[1] - spectrum[:r])
             worst.keep("metric: orthonormal frames", frames_error(moved))
-            moved = geometry.point("orthographic", t, x, z)
-            extra = t * t * z[1] @ np.linalg.solve(middle, z[2].T)
-            size = max(1.0, np.linalg.norm(extra)) * np.linalg.cond(middle)
-            worst.keep("orthographic: its formula", (dense(moved) - straight - extra) / size)
-            worst.keep("orthographic: orthonormal frames", frames_error(moved))
+            moved = geometry.point("retract", t, x, z)
+            worst.keep("retraction: orthonormal frames", frames_error(moved))
+            if slope(z, middle, t) <= 0.5:
+                extra = t * t * z[1] @ np.linalg.solve(middle, z[2].T)
+                size = max(1.0, np.linalg.norm(extra)) * np.linalg.cond(middle)
+                worst.keep("orthographic where it is near: its formula", (dense(moved) - straight - extra) / size)
+            else:
+                worst.keep("metric elsewhere", (dense(moved) - best) * min(1.0, gap))
         undone = -np.diag(x[1]), z[1], z[2]  # the middle vanishes: singular values in equal pairs
         straight = dense(x) + dense_tangent(x, undone)
         moved = geometry.point("metric", 1, x, undone)

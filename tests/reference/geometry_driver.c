@@ -131,22 +131,29 @@ static void give_tangent(const struct fixed_rank_tangent *z)
     give(z->right);
 }
 
-static void do_metric(struct bench *bench)
+/* A point and a step from it by a retraction. */
+static void retract(struct bench *bench,
+                    fescue_status way(struct fixed_rank_work *, const struct low_rank *,
+                                      const struct fixed_rank_tangent *, double, struct low_rank *))
 {
     struct low_rank point = take_point(bench);
     struct fixed_rank_tangent z = take_tangent(bench);
-    must_do(fixed_rank_retract(&bench->fixed_rank, &point, &z, bench->step, &point));
-    give_point(&point);
+    struct low_rank to = point;
+    to.left = matrix_carve(&bench->arena, bench->rows, bench->rank);
+    to.right = matrix_carve(&bench->arena, bench->columns, bench->rank);
+    to.spectrum = arena_carve(&bench->arena, bench->rank, sizeof *to.spectrum);
+    must_do(way(&bench->fixed_rank, &point, &z, bench->step, &to));
+    give_point(&to);
 }
 
-static void do_orthographic(struct bench *bench)
+static void do_metric(struct bench *bench)
 {
-    struct low_rank point = take_point(bench);
-    struct fixed_rank_tangent z = take_tangent(bench);
-    bool defined = false;
-    must_do(fixed_rank_retract_orthographic(&bench->fixed_rank, &point, &z, bench->step, &point, &defined));
-    must(defined);
-    give_point(&point);
+    retract(bench, fixed_rank_retract_metric);
+}
+
+static void do_retract(struct bench *bench)
+{
+    retract(bench, fixed_rank_retract);
 }
 
 static void do_project(struct bench *bench)
@@ -162,7 +169,7 @@ static void do_carry(struct bench *bench)
     struct low_rank from = take_point(bench), to = take_point(bench);
     struct fixed_rank_tangent z = take_tangent(bench);
     struct fixed_rank_tangent out = fixed_rank_tangent_carve(&bench->arena, bench->rows, bench->columns, bench->rank);
-    fixed_rank_transport(&bench->fixed_rank, &from, &z, &to, &out);
+    fixed_rank_transport(&bench->fixed_rank, &from, &z, &to, NULL, &out);
     give_tangent(&out);
 }
 
@@ -170,16 +177,16 @@ static const struct operation {
     const char *name;
     void (*run)(struct bench *);
 } operations[] = {
-    {"exp", do_exp},                   /* U D -> Y */
-    {"log", do_log},                   /* U Y -> D */
-    {"angles", do_angles},             /* U Y -> the angles, ascending */
-    {"transport", do_transport},       /* U D K -> K at the end */
-    {"qr", do_qr},                     /* U D -> Y */
-    {"polar", do_polar},               /* U D -> Y */
-    {"metric", do_metric},             /* X Z -> X */
-    {"orthographic", do_orthographic}, /* X Z -> X */
-    {"project", do_project},           /* X (anything, A V, A'U) -> Z */
-    {"carry", do_carry},               /* X Y Z -> Z at Y */
+    {"exp", do_exp},             /* U D -> Y */
+    {"log", do_log},             /* U Y -> D */
+    {"angles", do_angles},       /* U Y -> the angles, ascending */
+    {"transport", do_transport}, /* U D K -> K at the end */
+    {"qr", do_qr},               /* U D -> Y */
+    {"polar", do_polar},         /* U D -> Y */
+    {"metric", do_metric},       /* X Z -> X */
+    {"retract", do_retract},     /* X Z -> X */
+    {"project", do_project},     /* X (anything, A V, A'U) -> Z */
+    {"carry", do_carry},         /* X Y Z -> Z at Y */
 };
 
 static void bench_open(struct bench *bench)

@@ -40,7 +40,8 @@ static struct fixed_rank_tangent projected(struct scene *scene, const struct low
     struct fixed_rank_tangent z = tangent_blank(scene);
     matrix_multiply(1, a, false, point->right, false, 0, z.left);
     matrix_multiply(1, a, true, point->left, false, 0, z.right);
-    fixed_rank_project(&scene->work, point, &z);
+    double square = fixed_rank_project(&scene->work, point, &z);
+    assert_close(square, matrix_dot(z.left, z.left) + matrix_dot(z.right, z.right), rounding(a) * square);
     return z;
 }
 
@@ -371,7 +372,7 @@ static void check_transport(struct scene *scene)
                   FESCUE_OK);
     struct matrix dense = dense_tangent(ground, &scene->point, &k);
     struct fixed_rank_tangent wanted = projected(scene, &scene->to, dense);
-    fixed_rank_transport(&scene->work, &scene->point, &k, &scene->to, &moved);
+    fixed_rank_transport(&scene->work, &scene->point, &k, &scene->to, NULL, &moved);
     assert_true(overlap(scene->to.left, moved.left) <= rounding(dense));
     assert_true(overlap(scene->to.right, moved.right) <= rounding(dense));
     fixed_rank_add(&scene->work, -1, &moved, 1, &wanted);
@@ -381,7 +382,16 @@ static void check_transport(struct scene *scene)
     assert_close(fixed_rank_inner_apart(&scene->work, &scene->point, &k, &scene->to, &there),
                  fixed_rank_inner(&scene->work, &moved, &there),
                  10 * rounding(dense) * sqrt(fixed_rank_inner(&scene->work, &there, &there)));
-    fixed_rank_transport(&scene->work, &scene->point, &k, &scene->point, &moved);
+    struct fixed_rank_tangent sum = tangent_blank(scene);
+    struct fixed_rank_blend blend = {.beta = 0.7, .alpha = -2, .y = &there};
+    fixed_rank_transport(&scene->work, &scene->point, &k, &scene->to, &blend, &sum);
+    assert_true(blend.size == fixed_rank_inner(&scene->work, &sum, &sum));
+    assert_true(blend.along == fixed_rank_inner(&scene->work, &there, &sum));
+    fixed_rank_add(&scene->work, -2, &there, 0.7, &moved);
+    fixed_rank_add(&scene->work, -1, &moved, 1, &sum);
+    assert_close(sqrt(fixed_rank_inner(&scene->work, &sum, &sum)), 0,
+                 rounding(dense) * sqrt(fixed_rank_inner(&scene->work, &moved, &moved)));
+    fixed_rank_transport(&scene->work, &scene->point, &k, &scene->point, NULL, &moved);
     fixed_rank_add(&scene->work, -1, &k, 1, &moved);
     assert_close(sqrt(fixed_rank_inner(&scene->work, &moved, &moved)), 0, 4 * rounding(dense));
 }
