@@ -11,7 +11,8 @@
 /* Cells of one line whose moments are added in one go. 48 positions of 512 bytes (a tile of the kernel) leave room in a
    nearest cache of 32 KB for the sums. */
 enum { BATCH_STRETCH = 48 };
-/* Cells ahead of which moments in halves are asked for: some hundred nanoseconds. */
+/* Cells ahead of which moments in halves are asked for, some hundred nanoseconds; half as many where they are in
+   doubles. */
 enum { BATCH_AHEAD = 16 };
 /* Numbers in a block of halves: a line of the caches. */
 enum { BATCH_BLOCK = 16 };
@@ -19,19 +20,20 @@ struct batch_stretch {
     size_t count;
     bool is_far; /* halves lie in main memory: they are asked into the second cache, which can wait for more of them at
                     once than the first */
-    size_t offset[BATCH_STRETCH + BATCH_AHEAD]; /* of the position's moment, in doubles; of halves, in words, and of
-                                                   the cells ahead */
+    size_t offset[BATCH_STRETCH + BATCH_AHEAD]; /* of the position's moment, in doubles; of halves, in words. And of the
+                                                   cells ahead, where they are asked for */
     double factor[BATCH_STRETCH];               /* its weight c */
     double pull[BATCH_STRETCH];                 /* c z */
 };
 
 struct batch_kernel {
-    /* sum[0 .. size-1] += sum over the stretch of factor * data[offset + 0 .. size-1], size rounded up to 8. What
-       `next` will need is asked for; NULL when it is near. */
-    void (*add)(const double *data, const struct batch_stretch *stretch, const struct batch_stretch *next,
-                const double *factor, size_t size, double *sum);
-    /* The same of `blocks` blocks of halves, and of the first of them, which hold `mean` numbers, with pull into
-       target. sum and target have room for whole blocks, target for two at least; one of them may be NULL. */
+    /* sum[0 .. size-1] += sum over the stretch of factor * data[offset + 0 .. size-1], size rounded up to 8. Where it
+       is not near, what the cells ahead will need is asked for. */
+    void (*add)(const double *data, const struct batch_stretch *stretch, const double *factor, size_t size, bool ahead,
+                double *sum);
+    /* The same, always asking ahead, of `blocks` blocks of halves, and of the first of them, which hold `mean` numbers,
+       with pull into target. sum and target have room for whole blocks, target for two at least; one of them may be
+       NULL. */
     void (*add_halves)(const uint64_t *data, const struct batch_stretch *stretch, size_t blocks, size_t mean,
                        double *sum, double *target);
     void (*gram)(const double *left, const double *right, size_t count, size_t size, size_t stride, double *square);

@@ -32,7 +32,8 @@
 typedef double vec __attribute__((vector_size(LANES * sizeof(double)), aligned(sizeof(double)), may_alias));
 typedef int64_t vec_bits __attribute__((vector_size(LANES * sizeof(double)), aligned(sizeof(double)), may_alias));
 
-enum { TILE = 8, FOUR = 4 }; /* registers of sums in flight; entries of a row at a time */
+enum { TILE = LANES == 8 ? 12 : 8 }; /* registers of sums in flight */
+enum { FOUR = 4 };                   /* entries of a row at a time */
 
 INLINE vec splat(double x)
 {
@@ -42,8 +43,8 @@ INLINE vec splat(double x)
 /* ---- sums of weighted moments -------------------------------------------------------------------------------------
  */
 
-INLINE void tile_add(const double *data, const struct batch_stretch *stretch, const struct batch_stretch *next,
-                     const double *factor, double *sum, const size_t registers)
+INLINE void tile_add(const double *data, const struct batch_stretch *stretch, const double *factor, double *sum,
+                     const size_t registers, const bool ahead)
 {
     vec total[TILE];
     for (size_t v = 0; v < registers; v++)
@@ -51,8 +52,8 @@ INLINE void tile_add(const double *data, const struct batch_stretch *stretch, co
     for (size_t c = 0; c < stretch->count; c++) {
         const double *moment = data + stretch->offset[c];
         vec share = splat(factor[c]);
-        for (size_t v = 0; next != NULL && v < registers; v += 8 / LANES)
-            __builtin_prefetch(data + next->offset[c] + v * LANES);
+        for (size_t v = 0; ahead && v < registers; v += 8 / LANES)
+            __builtin_prefetch(data + stretch->offset[c + BATCH_AHEAD / 2] + v * LANES);
         for (size_t v = 0; v < registers; v++)
             total[v] = MADD(share, *(const vec *)(moment + v * LANES), total[v]);
     }
@@ -62,19 +63,18 @@ INLINE void tile_add(const double *data, const struct batch_stretch *stretch, co
 
 #define TILE_CASE(n)                                                                                                   \
     case n:                                                                                                            \
-        tile_add(data, stretch, next, factor, sum, n);                                                                 \
+        if (TILE < n)                                                                                                  \
+            break;                                                                                                     \
+        if (ahead)                                                                                                     \
+            tile_add(data, stretch, factor, sum, n, true);                                                             \
+        else                                                                                                           \
+            tile_add(data, stretch, factor, sum, n, false);                                                            \
         break;
 
-static void stretch_add(const double *data, const struct batch_stretch *stretch, const struct batch_stretch *next,
-                        const double *factor, size_t size, double *sum)
+static void tile_add_any(const double *data, const struct batch_stretch *stretch, const double *factor, double *sum,
+                         size_t registers, bool ahead)
 {
-    size_t left = (size + LANES - 1) / LANES;
-    for (; left >= TILE; left -= TILE, data += TILE * LANES, sum += TILE * LANES)
-        if (next == NULL)
-            tile_add(data, stretch, NULL, factor, sum, TILE);
-        else
-            tile_add(data, stretch, next, factor, sum, TILE);
-    switch (left) {
+    switch (registers) {
         TILE_CASE(1)
         TILE_CASE(2)
         TILE_CASE(3)
@@ -82,8 +82,27 @@ static void stretch_add(const double *data, const struct batch_stretch *stretch,
         TILE_CASE(5)
         TILE_CASE(6)
         TILE_CASE(7)
+        TILE_CASE(8)
+        TILE_CASE(9)
+        TILE_CASE(10)
+        TILE_CASE(11)
+        TILE_CASE(12)
     default:
         break;
+    }
+}
+
+/* Tiles of nearly the same size. */
+static void stretch_add(const double *data, const struct batch_stretch *stretch, const double *factor, size_t size,
+                        bool ahead, double *sum)
+{
+    size_t left = (size + LANES - 1) / LANES;
+    for (size_t tiles = (left + TILE - 1) / TILE; tiles > 0; tiles--) {
+        size_t now = (left + tiles - 1) / tiles;
+        tile_add_any(data, stretch, factor, sum, now, ahead);
+        data += now * LANES;
+        sum += now * LANES;
+        left -= now;
     }
 }
 

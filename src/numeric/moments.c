@@ -17,7 +17,7 @@
  * they are read from. Eight lines go together. Where they see a good share of the positions, they go through these in
  * steps of 48 and through the triangle in tiles of 64 numbers: one tile of 48 positions is read from afar once, and
  * from the nearest cache for each line that has a cell there; its sum stays in registers. Where lines see few
- * positions there is nothing to share, and each goes through its cells alone, asking for those 48 cells ahead.
+ * positions there is nothing to share, and each goes through its cells alone, asking for those 8 cells ahead.
  *
  * A line that sees most positions takes from the sum over all of them, which is made once for all lines, the moments of
  * those that it does not see: few where tables are those of stations that seldom fail. Only t needs every cell, and d
@@ -124,7 +124,7 @@ static void stretch_target(const struct gather *gather, const struct batch_stret
 {
     const struct moments *moments = gather->moments;
     size_t one = moments->one, stride = gather->target_stride;
-    moments->kernel->add(moments->data + packed_size(one), stretch, NULL, stretch->pull, one + 1,
+    moments->kernel->add(moments->data + packed_size(one), stretch, stretch->pull, one + 1, false,
                          gather->target + lane * stride);
     for (size_t k = one + 1; k < moments->regressors; k++) {
         const double *from = moments->data + packed_size(k) + one;
@@ -135,12 +135,11 @@ static void stretch_target(const struct gather *gather, const struct batch_stret
     }
 }
 
-static void tile_add(const struct gather *gather, const struct batch_stretch *stretch, const struct batch_stretch *next,
-                     size_t lane, size_t at)
+static void tile_add(const struct gather *gather, const struct batch_stretch *stretch, size_t lane, size_t at)
 {
     const struct moments *moments = gather->moments;
     size_t left = packed_size(moments->regressors) - at;
-    moments->kernel->add(moments->data + at, stretch, next, stretch->factor, left < TILE_NUMBERS ? left : TILE_NUMBERS,
+    moments->kernel->add(moments->data + at, stretch, stretch->factor, left < TILE_NUMBERS ? left : TILE_NUMBERS, false,
                          gather->second + lane * gather->stride + at);
 }
 
@@ -168,33 +167,10 @@ static void lines_gather_together(const struct gather *gather)
         for (size_t at = 0; at < packed_size(gather->moments->regressors); at += TILE_NUMBERS)
             for (size_t lane = 0; lane < gather->count; lane++) {
                 tile_prefetch(gather, begin + BATCH_STRETCH + lane * PREFETCH_EACH, at);
-                tile_add(gather, &stretch[lane], NULL, lane, at);
+                tile_add(gather, &stretch[lane], lane, at);
             }
         for (size_t lane = 0; lane < gather->count; lane++)
             stretch_target(gather, &stretch[lane], lane);
-    }
-}
-
-static void lines_gather_alone(const struct gather *gather)
-{
-    const struct half *half = gather->half;
-    struct batch_stretch pair[2] = {{0}, {0}};
-    uint64_t k = half->start[gather->first], stop = half->start[gather->first + gather->count];
-    size_t lane[2] = {0, 0};
-    for (size_t turn = 0; pair[turn % 2].count > 0 || k < stop; turn++) {
-        struct batch_stretch *now = &pair[turn % 2], *next = &pair[(turn + 1) % 2];
-        size_t other = lane[turn % 2];
-        while (k < stop && k == half->start[gather->first + other + 1])
-            other++;
-        lane[(turn + 1) % 2] = other;
-        k = stretch_take(gather, k, half->start[gather->first + other + 1], half->length, gather->square + other, next);
-        for (size_t c = next->count; c < BATCH_STRETCH; c++) /* may be asked for, but not used */
-            next->offset[c] = next->count > 0 ? next->offset[0] : 0;
-        if (now->count == 0)
-            continue;
-        for (size_t at = 0; at < packed_size(gather->moments->regressors); at += TILE_NUMBERS)
-            tile_add(gather, now, next, lane[turn % 2], at);
-        stretch_target(gather, now, lane[turn % 2]);
     }
 }
 
@@ -203,9 +179,24 @@ static void stretch_look_ahead(const struct gather *gather, uint64_t k, struct b
 {
     const struct half *half = gather->half;
     uint64_t cells = half->start[half->lines];
-    size_t step = moments_words(gather->moments->regressors);
+    size_t step = moments_step(gather->moments);
     for (size_t c = 0; c < BATCH_AHEAD; c++)
         stretch->offset[stretch->count + c] = k + c < cells ? half->across[k + c] * step : stretch->offset[0];
+}
+
+static void line_gather_alone(const struct gather *gather, size_t lane)
+{
+    const struct moments *moments = gather->moments;
+    const struct half *half = gather->half;
+    struct batch_stretch stretch = {0};
+    uint64_t k = half->start[gather->first + lane], end = half->start[gather->first + lane + 1];
+    while (k < end) {
+        k = stretch_take(gather, k, end, half->length, gather->square + lane, &stretch);
+        stretch_look_ahead(gather, k, &stretch);
+        moments->kernel->add(moments->data, &stretch, stretch.factor, packed_size(moments->regressors), true,
+                             gather->second + lane * gather->stride);
+        stretch_target(gather, &stretch, lane);
+    }
 }
 
 static void line_gather_halves(const struct gather *gather, size_t lane)
@@ -237,7 +228,7 @@ static void stretch_sum(const struct moments *moments, struct batch_stretch *str
     if (moments->halves != NULL)
         moments->kernel->add_halves(moments->halves, stretch, moments_words(d) / 8, d, sum, NULL);
     else
-        moments->kernel->add(moments->data, stretch, NULL, stretch->factor, packed_size(d), sum);
+        moments->kernel->add(moments->data, stretch, stretch->factor, packed_size(d), true, sum);
     stretch->count = 0;
 }
 
@@ -360,7 +351,8 @@ static void lines_gather(const struct gather *gather)
     if (together)
         lines_gather_together(gather);
     else
-        lines_gather_alone(gather);
+        for (size_t lane = 0; lane < gather->count; lane++)
+            line_gather_alone(gather, lane);
     for (size_t lane = 0; lane < BATCH_LANES; lane++)
         memcpy(gather->target + lane * stride + behind, gather->tail + lane * stride + behind,
                (moments->regressors - behind) * sizeof *gather->target);
