@@ -16,9 +16,10 @@ static inline size_t tall_lines(size_t columns)
 }
 
 struct tall_kernel {
-    /* sum += a'b, tall_lines(a.columns) lines of TALL_MOST numbers */
+    /* sum += a'b, tall_lines(a.columns) lines of TALL_MOST numbers, factor_stride(b.columns) of which count */
     void (*cross)(struct matrix a, struct matrix b, double *sum);
-    /* c = a factor + beta c; factor in lines of TALL_MOST numbers, 0 behind its last column. c may be a. */
+    /* c = a factor + beta c; factor in lines of TALL_MOST numbers, 0 from its last column to factor_stride(c.columns).
+       c may be a. */
     void (*multiply)(struct matrix a, const double *factor, double beta, struct matrix c);
 };
 

@@ -66,9 +66,11 @@ static void chunk_cross(struct matrix a, struct matrix b, double *sum)
 /* A copy of the lines, of which whole registers may be read. */
 static struct matrix lines_apart(struct matrix a, double *room)
 {
-    memset(room, 0, a.rows * TALL_MOST * sizeof *room);
-    for (size_t i = 0; i < a.rows; i++)
-        memcpy(room + i * TALL_MOST, &MATRIX_AT(a, i, 0), a.columns * sizeof *room);
+    for (size_t i = 0; i < a.rows; i++) {
+        double *to = room + i * TALL_MOST;
+        memcpy(to, &MATRIX_AT(a, i, 0), a.columns * sizeof *to);
+        memset(to + a.columns, 0, (factor_stride(a.columns) - a.columns) * sizeof *to);
+    }
     return (struct matrix){room, a.rows, a.columns, TALL_MOST};
 }
 

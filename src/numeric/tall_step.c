@@ -57,10 +57,11 @@ static void columns_multiply(const struct tall_kernel *kernel, const struct tall
     struct matrix part = matrix_columns(a, first, TALL_MOST);
     for (size_t i = 0; i < part.columns; i++) {
         double *to = factor + i * TALL_MOST;
-        memset(to, 0, TALL_MOST * sizeof *to);
+        const double *from = term->transpose ? &MATRIX_AT(term->b, 0, first + i) : &MATRIX_AT(term->b, first + i, 0);
+        size_t step = term->transpose ? term->b.stride : 1;
         for (size_t j = 0; j < c.columns; j++)
-            to[j] =
-                term->alpha * (term->transpose ? MATRIX_AT(term->b, j, first + i) : MATRIX_AT(term->b, first + i, j));
+            to[j] = term->alpha * from[j * step];
+        memset(to + c.columns, 0, (factor_stride(c.columns) - c.columns) * sizeof *to);
     }
     kernel->multiply(part, factor, beta, c);
 }
@@ -98,7 +99,8 @@ static void piece_cross(const struct tall_kernel *kernel, struct matrix a, struc
     for (size_t first = 0; first < a.columns; first += TALL_MOST) {
         double room[TALL_MOST * TALL_MOST];
         struct matrix left = matrix_columns(a, first, TALL_MOST);
-        memset(room, 0, tall_lines(left.columns) * TALL_MOST * sizeof *room);
+        for (size_t i = 0; i < tall_lines(left.columns); i++)
+            memset(room + i * TALL_MOST, 0, factor_stride(b.columns) * sizeof *room);
         kernel->cross(left, b, room);
         matrix_copy((struct matrix){room, left.columns, b.columns, TALL_MOST},
                     (struct matrix){&MATRIX_AT(cross, first, 0), left.columns, b.columns, cross.stride});
