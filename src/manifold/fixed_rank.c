@@ -70,7 +70,7 @@ double fixed_rank_inner(const struct fixed_rank_work *work, const struct fixed_r
     return matrix_dot(x->middle, y->middle) + (left + right);
 }
 
-/* One side of that, normal = beta (normal - frame inside) + alpha y; dots = <normal, normal>, <y, normal>. */
+/* One side of normals_settle: normal = beta (normal - frame inside) + alpha y; dots = <normal, normal>, <y, normal>. */
 static struct tall_step normal_settle(struct matrix normal, struct matrix frame, struct matrix inside,
                                       const struct fixed_rank_blend *blend, struct matrix y, double dots[2])
 {
@@ -88,8 +88,8 @@ static struct tall_step normal_settle(struct matrix normal, struct matrix frame,
 }
 
 /* The second time: what the products of frame and normal part in the work's small matrices tell to be left within the
-   frames goes, and the normal parts are orthogonal to them to rounding of their own size. In the same round, the sum
-   with a tangent; of the normal parts of what comes out the products. */
+   frames goes, and the normal parts are orthogonal to them to rounding of their own size. The sum with a tangent is made
+   in the same round, and size and along of the blend become those of the normal parts. */
 static void normals_settle(struct fixed_rank_work *work, const struct low_rank *point, struct fixed_rank_tangent *z,
                            struct fixed_rank_blend *blend)
 {

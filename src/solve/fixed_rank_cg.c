@@ -20,10 +20,11 @@
  *        D = -g again when D is no clear descent.
  *     3. On the tangent the objective is a parabola, so the step there is exact:
  *            t = -<g, D> / (|P(D)|^2 + lambda |D|^2).
- *     4. X_new = the matrix of rank r nearest to X + t D. Armijo with backtracking guards it (line.c).
+ *     4. X_new = a matrix of rank r near X + t D (fixed_rank_retract). Armijo with backtracking guards it (line.c).
  *
  * Departures: the paper scales by 2/3 and halves the step on refusal; here the parabola through the refused value is
- * used. S enters the factor that is multiplied on, never divided off, so singular values may be as small as they like,
+ * used. The paper goes to the nearest matrix of rank r; here short steps go by the orthographic retraction, which agrees
+ * with that to second order and needs no SVD of twice the rank. S enters the factor that is multiplied on, never divided off, so singular values may be as small as they like,
  * or zero, and both halves of the gradient have the relative precision of R.
  *
  * Cost an iteration: three passes over the cells (tangent, residual with R V, residual with R'U), 4r flops a cell each,
