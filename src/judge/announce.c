@@ -203,7 +203,7 @@ static double stratum_draw(struct draw *draw, const struct sums total[JUDGE_BINS
 static void truth_draw(void *job, size_t number, size_t worker)
 {
     const struct announcing *announcing = job;
-    uint32_t *room = announcing->room + worker * 3 * announcing->sensors;
+    uint32_t *room = announcing->room + worker * team_room(3 * (size_t)announcing->sensors, sizeof(uint32_t));
     struct draw draw = {.announcing = announcing,
                         .drawn = room,
                         .times = room + announcing->sensors,
@@ -228,7 +228,7 @@ static fescue_status band_find(fescue_context *context, struct announcing *annou
     uint32_t sensors = announcing->sensors;
     double draws[DRAWS];
     uint64_t count = 0;
-    TRY(TAKE(context, team_workers(context) * 3 * sensors, &announcing->room));
+    TRY(TAKE(context, team_workers(context) * team_room(3 * (size_t)sensors, sizeof(uint32_t)), &announcing->room));
     size_t most = (size_t)fmin(DRAWS, fmax(DRAWS_LEAST, drawn_most / sensors));
     announcing->draws = draws;
     team_run(context, most, truth_draw, announcing);

@@ -42,6 +42,11 @@ struct krige {
     size_t longest;
 };
 
+static size_t krige_room(const struct krige *krige)
+{
+    return team_room(3 * krige->longest, sizeof(double));
+}
+
 /* Row and column of the k-th cell of a track. */
 static void place_of(const struct krige *krige, const struct time_axis *time, uint32_t sensor, uint64_t k,
                      uint32_t place[2])
@@ -76,7 +81,7 @@ static void series_block(void *opaque, size_t block, size_t worker)
 {
     struct krige *krige = opaque;
     struct time_part *part = krige->part;
-    double *noise = krige->room + worker * 3 * krige->longest, *variance = noise + krige->longest;
+    double *noise = krige->room + worker * krige_room(krige), *variance = noise + krige->longest;
     double *cross = variance + krige->longest, error = 0;
     const struct kalman_tally *all = &krige->tally[krige->series->blocks];
     struct kalman_tally *sum = &krige->tally[block];
@@ -133,11 +138,11 @@ static fescue_status krige_open(struct krige *krige, const struct time_axis *tim
         size_t count = (size_t)(series->start[line + 1] - series->start[line]);
         krige->longest = count > krige->longest ? count : krige->longest;
     }
-    krige->longest = (krige->longest + 7) / 8 * 8; /* workers in cache lines of their own */
+    krige->longest = (krige->longest + 7) / 8 * 8;
     TRY(tracks_create(context, krige->cells, &order, &krige->tracks));
     TRY(TAKE(context, krige->cells->count, &krige->value));
     TRY(TAKE(context, krige->cells->count, &krige->weight));
-    TRY(TAKE(context, team_workers(context) * 3 * krige->longest, &krige->room));
+    TRY(TAKE(context, team_workers(context) * krige_room(krige), &krige->room));
     TRY(TAKE(context, (size_t)series->blocks + 1, &krige->tally));
     TRY(TAKE(context, series->blocks, &krige->error));
     TRY(time_part_create(context, time, series->lines, krige->cells->count, 0, krige->part));

@@ -173,7 +173,7 @@ static fescue_status side_invert(fescue_context *context, struct levering *lever
     size_t packed = packed_size(levering->size);
     fescue_status status;
     levering->ridge = ridge;
-    levering->stride = room_size(levering->size);
+    levering->stride = team_room(room_size(levering->size), sizeof(double));
     levering->kernel = batch_kernel_choose();
     TRY(TAKE(context, team_workers(context) * levering->stride, &levering->room));
     TRY(TAKE(context, packed * levering->half->lines, &levering->inverse));

@@ -88,8 +88,8 @@ static struct tall_step normal_settle(struct matrix normal, struct matrix frame,
 }
 
 /* The second time: what the products of frame and normal part in the work's small matrices tell to be left within the
-   frames goes, and the normal parts are orthogonal to them to rounding of their own size. The sum with a tangent is made
-   in the same round, and size and along of the blend become those of the normal parts. */
+   frames goes, and the normal parts are orthogonal to them to rounding of their own size. The sum with a tangent is
+   made in the same round, and size and along of the blend become those of the normal parts. */
 static void normals_settle(struct fixed_rank_work *work, const struct low_rank *point, struct fixed_rank_tangent *z,
                            struct fixed_rank_blend *blend)
 {

@@ -25,13 +25,14 @@ size_t sweep_width(const struct sweep *sweep, size_t rank)
     return (rank + lanes - 1) / lanes * lanes;
 }
 
-/* Doubles that one worker needs: a chunk's rows (doubles also where they are floats), three squares, three vectors, a
-   batch of small systems. */
+/* Doubles from one worker's room to the next, each for: a chunk's rows (doubles also where they are floats), three
+   squares, three vectors, a batch of small systems. */
 static size_t worker_room(const struct sweep *sweep)
 {
     size_t width = sweep_width(sweep, sweep->rank_most);
     size_t batch = sweep->rank_most < SWEEP_BATCH_RANK ? sweep->rank_most : SWEEP_BATCH_RANK;
-    return (SWEEP_CHUNK + 3 * width + 3) * width + batch_size(packed_size(batch)) + batch_size(batch);
+    size_t numbers = (SWEEP_CHUNK + 3 * width + 3) * width + batch_size(packed_size(batch)) + batch_size(batch);
+    return team_room(numbers, sizeof(double));
 }
 
 struct sweep_room sweep_room_of(const struct sweep *sweep, size_t worker)

@@ -39,7 +39,7 @@ static const struct half *half_short(const struct field *field)
 
 static size_t room_a_worker(size_t rank)
 {
-    return (packed_size(rank) + 7) / 8 * 8; /* no cache line for two */
+    return team_room(packed_size(rank), sizeof(double));
 }
 
 void batches_reserve(struct arena *arena, const struct field *field, size_t rank, size_t width)

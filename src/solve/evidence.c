@@ -91,7 +91,7 @@ static fescue_status evidence_open(struct problem *problem, size_t rank, struct 
     *evidence = (struct evidence){.context = problem->context, .problem = problem, .rank = rank};
     evidence->started = clock_wall();
     size_t most = one > two ? one : two, chain = evidence_chain_scratch(rank);
-    evidence->scratch_size = ((most > chain ? most : chain) + 7) / 8 * 8;
+    evidence->scratch_size = team_room(most > chain ? most : chain, sizeof(double));
     struct arena *arena = &evidence->arena;
     side_reserve(arena, &cells->by_row, rank);
     side_reserve(arena, &cells->by_column, rank);

@@ -146,6 +146,11 @@ struct evidence_time {
     struct arena arena;
     size_t state_size; /* as that of the evidence */
 };
+/* From the series' room of one worker to the next. */
+static inline size_t evidence_series_room(const struct evidence_time *time)
+{
+    return team_room(6 * time->longest, sizeof(double));
+}
 fescue_status evidence_time_open(struct evidence *evidence, const struct evidence_request *request);
 void evidence_time_close(struct evidence *evidence);
 /* Switches residual and chain on when their round has come; laws of a start that has a time part are taken over. */

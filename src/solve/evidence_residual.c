@@ -157,7 +157,7 @@ static void residual_block(void *opaque, size_t block, size_t worker)
     struct residual_job *job = opaque;
     struct evidence_time *time = job->time;
     const struct half *half = time->series->half;
-    double *at = time->series_scratch + worker * 6 * time->longest, *out = at + 3 * time->longest;
+    double *at = time->series_scratch + worker * evidence_series_room(time), *out = at + 3 * time->longest;
     struct kalman_state state = {out, out + time->longest, out + 2 * time->longest};
     struct kalman_tally *sum = time->partial + block;
     memset(sum, 0, sizeof *sum);

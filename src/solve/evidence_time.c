@@ -44,7 +44,7 @@ static size_t longest_series(const struct half *half)
     for (size_t line = 0; line < half->lines; line++)
         if (half->start[line + 1] - half->start[line] > most)
             most = half->start[line + 1] - half->start[line];
-    return (size_t)(most + 7) / 8 * 8; /* workers' stretches in cache lines of their own */
+    return (size_t)(most + 7) / 8 * 8;
 }
 
 static void time_reserve(struct evidence *evidence, const struct evidence_time *time)
@@ -69,7 +69,7 @@ static void time_reserve(struct evidence *evidence, const struct evidence_time *
     arena_reserve(arena, steps->lines, sizeof(double));
     arena_reserve(arena, series->lines, sizeof(double));
     evidence->time->state_size = arena->reserved;
-    arena_reserve(arena, team_workers(evidence->context) * 6 * time->longest, sizeof(double));
+    arena_reserve(arena, team_workers(evidence->context) * evidence_series_room(time), sizeof(double));
 }
 
 static void time_carve(struct evidence *evidence, struct evidence_time *time)
@@ -96,7 +96,8 @@ static void time_carve(struct evidence *evidence, struct evidence_time *time)
     time->chain.backward = arena_carve(arena, steps->lines * chain_room(d), sizeof(double));
     time->steps->excess = arena_carve(arena, steps->lines, sizeof(double));
     time->series->excess = arena_carve(arena, series->lines, sizeof(double));
-    time->series_scratch = arena_carve(arena, team_workers(evidence->context) * 6 * time->longest, sizeof(double));
+    time->series_scratch =
+        arena_carve(arena, team_workers(evidence->context) * evidence_series_room(time), sizeof(double));
 }
 
 /* Twins and places: the steps in the order of time meet the cells of every series in that order. `next` has a number a

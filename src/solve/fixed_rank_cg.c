@@ -23,9 +23,10 @@
  *     4. X_new = a matrix of rank r near X + t D (fixed_rank_retract). Armijo with backtracking guards it (line.c).
  *
  * Departures: the paper scales by 2/3 and halves the step on refusal; here the parabola through the refused value is
- * used. The paper goes to the nearest matrix of rank r; here short steps go by the orthographic retraction, which agrees
- * with that to second order and needs no SVD of twice the rank. S enters the factor that is multiplied on, never divided off, so singular values may be as small as they like,
- * or zero, and both halves of the gradient have the relative precision of R.
+ * used. The paper goes to the nearest matrix of rank r; here short steps go by the orthographic retraction, which
+ * agrees with that to second order and needs no SVD of twice the rank. S enters the factor that is multiplied on, never
+ * divided off, so singular values may be as small as they like, or zero, and both halves of the gradient have the
+ * relative precision of R.
  *
  * Cost an iteration: three passes over the cells (tangent, residual with R V, residual with R'U), 4r flops a cell each,
  * and O((m+n) r^2). Workspace: four tangents, two points, two scaled factors; nothing a cell.

@@ -63,6 +63,11 @@ static size_t lag_most(const struct field *field, size_t rank)
     return LAG_MOST;
 }
 
+static size_t room_a_worker(size_t rank)
+{
+    return team_room(rank * rank, sizeof(double));
+}
+
 static void recursion_reserve(struct arena *arena, const struct field *field, size_t rank)
 {
     const struct cells *target = &field->problem->target;
@@ -70,7 +75,7 @@ static void recursion_reserve(struct arena *arena, const struct field *field, si
     if (!size_product(shorter, packed_size(rank), &entries))
         entries = SIZE_MAX; /* refused when the arena is opened */
     arena_reserve(arena, entries, sizeof(double));
-    arena_reserve(arena, team_workers(field->problem->context) * rank * rank, sizeof(double));
+    arena_reserve(arena, team_workers(field->problem->context) * room_a_worker(rank), sizeof(double));
     arena_reserve(arena, packed_size(rank), sizeof(double));
     moment_reserve(arena, rank);
 }
@@ -80,8 +85,8 @@ static void recursion_carve(struct stream *stream)
     struct recursion *own = stream->own;
     size_t rank = stream->projection.rank;
     own->inverses = arena_carve(&stream->arena, stream->projection.by_short->lines * packed_size(rank), sizeof(double));
-    own->room =
-        arena_carve(&stream->arena, team_workers(stream->field->problem->context) * rank * rank, sizeof(double));
+    own->room = arena_carve(&stream->arena, team_workers(stream->field->problem->context) * room_a_worker(rank),
+                            sizeof(double));
     own->packed = arena_carve(&stream->arena, packed_size(rank), sizeof(double));
     moment_carve(&stream->arena, rank, &own->moment);
 }
@@ -230,7 +235,7 @@ static void piece_rebase(void *argument, size_t piece, size_t worker)
     size_t rank = stream->projection.rank, lines = stream->projection.by_short->lines;
     size_t last = (piece + 1) * REBASE_LINES < lines ? (piece + 1) * REBASE_LINES : lines;
     for (size_t i = piece * REBASE_LINES; i < last; i++)
-        inverse_rebase(own->inverses + i * packed_size(rank), stream->turn, own->room + worker * rank * rank);
+        inverse_rebase(own->inverses + i * packed_size(rank), stream->turn, own->room + worker * room_a_worker(rank));
 }
 
 static void recursion_rebase(struct stream *stream, struct matrix turn)

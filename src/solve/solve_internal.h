@@ -150,9 +150,9 @@ void hessian_apply(struct hessian *hessian, struct matrix d, struct matrix produ
 /* Diagonal blocks of the Hessian, one a line of the shorter side, as its preconditioner (hessian_blocks.c). */
 struct hessian_blocks {
     struct projection *projection;
-    struct matrix scratch; /* a row a worker */
-    struct matrix core;    /* rank x rank: what all blocks have */
-    double *factors;       /* short x packed_size(rank) */
+    double *scratch;    /* rank numbers a worker */
+    struct matrix core; /* rank x rank: what all blocks have */
+    double *factors;    /* short x packed_size(rank) */
 };
 void hessian_blocks_reserve(struct arena *arena, const struct field *field, size_t shorter, size_t rank);
 void hessian_blocks_carve(struct arena *arena, struct projection *projection, struct hessian_blocks *blocks);
