@@ -138,7 +138,6 @@ static fescue_status krige_open(struct krige *krige, const struct time_axis *tim
         size_t count = (size_t)(series->start[line + 1] - series->start[line]);
         krige->longest = count > krige->longest ? count : krige->longest;
     }
-    krige->longest = (krige->longest + 7) / 8 * 8;
     TRY(tracks_create(context, krige->cells, &order, &krige->tracks));
     TRY(TAKE(context, krige->cells->count, &krige->value));
     TRY(TAKE(context, krige->cells->count, &krige->weight));

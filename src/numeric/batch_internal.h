@@ -8,7 +8,7 @@
 
 #include "numeric/numeric.h"
 
-/* Cells of one line whose moments are added in one go. 48 positions of 512 bytes (a tile of the kernel) leave room in a
+/* Cells of one line whose moments are added in one go. 48 positions of 512 bytes (a tile of moments.c) leave room in a
    nearest cache of 32 KB for the sums. */
 enum { BATCH_STRETCH = 48 };
 /* Cells ahead of which moments in halves are asked for, some hundred nanoseconds; half as many where they are in

@@ -184,33 +184,26 @@ static void stretch_look_ahead(const struct gather *gather, uint64_t k, struct b
         stretch->offset[stretch->count + c] = k + c < cells ? half->across[k + c] * step : stretch->offset[0];
 }
 
-static void line_gather_alone(const struct gather *gather, size_t lane)
+/* A line by itself; of one that takes from the total what it does not see the target alone. */
+static void line_gather(const struct gather *gather, size_t lane)
 {
     const struct moments *moments = gather->moments;
     const struct half *half = gather->half;
-    struct batch_stretch stretch = {0};
+    size_t d = moments->regressors, words = moments_words(d);
+    struct batch_stretch stretch = {.is_far = half->length * words * sizeof(uint64_t) > FAR_BYTES};
     uint64_t k = half->start[gather->first + lane], end = half->start[gather->first + lane + 1];
+    double *second = gather->full[lane] ? NULL : gather->second + lane * gather->stride;
     while (k < end) {
         k = stretch_take(gather, k, end, half->length, gather->square + lane, &stretch);
         stretch_look_ahead(gather, k, &stretch);
-        moments->kernel->add(moments->data, &stretch, stretch.factor, packed_size(moments->regressors), true,
-                             gather->second + lane * gather->stride);
+        if (moments->halves != NULL) {
+            moments->kernel->add_halves(moments->halves, &stretch, words / 8, d, second,
+                                        gather->target + lane * gather->target_stride);
+            continue;
+        }
+        if (second != NULL)
+            moments->kernel->add(moments->data, &stretch, stretch.factor, packed_size(d), true, second);
         stretch_target(gather, &stretch, lane);
-    }
-}
-
-static void line_gather_halves(const struct gather *gather, size_t lane)
-{
-    const struct moments *moments = gather->moments;
-    const struct half *half = gather->half;
-    size_t d = moments->regressors, blocks = moments_words(d) / 8;
-    struct batch_stretch stretch = {.is_far = half->length * moments_words(d) * sizeof(uint64_t) > FAR_BYTES};
-    uint64_t k = half->start[gather->first + lane], end = half->start[gather->first + lane + 1];
-    double *second = gather->second + lane * gather->stride, *target = gather->target + lane * gather->target_stride;
-    while (k < end) {
-        k = stretch_take(gather, k, end, half->length, gather->square + lane, &stretch);
-        stretch_look_ahead(gather, k, &stretch);
-        moments->kernel->add_halves(moments->halves, &stretch, blocks, d, gather->full[lane] ? NULL : second, target);
     }
 }
 
@@ -318,20 +311,8 @@ static void lines_gather_halves(const struct gather *gather)
     for (size_t lane = 0; lane < gather->count; lane++) {
         if (gather->full[lane])
             line_lack(gather, lane);
-        line_gather_halves(gather, lane);
+        line_gather(gather, lane);
         moments_restore(moments->regressors, moments->one, gather->tail, gather->second + lane * gather->stride);
-    }
-}
-
-/* The target of a line alone. */
-static void line_target(const struct gather *gather, size_t lane)
-{
-    const struct half *half = gather->half;
-    struct batch_stretch stretch = {0};
-    uint64_t end = half->start[gather->first + lane + 1];
-    for (uint64_t k = half->start[gather->first + lane]; k < end;) {
-        k = stretch_take(gather, k, end, half->length, gather->square + lane, &stretch);
-        stretch_target(gather, &stretch, lane);
     }
 }
 
@@ -345,14 +326,14 @@ static void lines_gather(const struct gather *gather)
     for (size_t lane = 0; lane < gather->count; lane++)
         if (gather->full[lane]) {
             line_lack(gather, lane);
-            line_target(gather, lane);
+            line_gather(gather, lane);
             together = true;
         }
     if (together)
         lines_gather_together(gather);
     else
         for (size_t lane = 0; lane < gather->count; lane++)
-            line_gather_alone(gather, lane);
+            line_gather(gather, lane);
     for (size_t lane = 0; lane < BATCH_LANES; lane++)
         memcpy(gather->target + lane * stride + behind, gather->tail + lane * stride + behind,
                (moments->regressors - behind) * sizeof *gather->target);

@@ -44,7 +44,7 @@ static size_t longest_series(const struct half *half)
     for (size_t line = 0; line < half->lines; line++)
         if (half->start[line + 1] - half->start[line] > most)
             most = half->start[line + 1] - half->start[line];
-    return (size_t)(most + 7) / 8 * 8;
+    return (size_t)most;
 }
 
 static void time_reserve(struct evidence *evidence, const struct evidence_time *time)

@@ -27,10 +27,15 @@
 /* Of p W'W: enough to bound a step, little beside what a well-seen row has. */
 static const double lift = 0.01;
 
+static size_t room_a_worker(size_t rank)
+{
+    return team_room(rank, sizeof(double));
+}
+
 void hessian_blocks_reserve(struct arena *arena, const struct field *field, size_t shorter, size_t rank)
 {
     size_t factors;
-    arena_reserve(arena, team_workers(field->problem->context) * team_room(rank, sizeof(double)), sizeof(double));
+    arena_reserve(arena, team_workers(field->problem->context) * room_a_worker(rank), sizeof(double));
     matrix_reserve(arena, rank, rank);
     if (size_product(shorter, packed_size(rank), &factors))
         arena_reserve(arena, factors, sizeof(double));
@@ -42,8 +47,8 @@ void hessian_blocks_carve(struct arena *arena, struct projection *projection, st
 {
     size_t rank = projection->rank;
     *blocks = (struct hessian_blocks){.projection = projection};
-    blocks->scratch = arena_carve(
-        arena, team_workers(projection->field->problem->context) * team_room(rank, sizeof(double)), sizeof(double));
+    blocks->scratch =
+        arena_carve(arena, team_workers(projection->field->problem->context) * room_a_worker(rank), sizeof(double));
     blocks->core = matrix_carve(arena, rank, rank);
     blocks->factors = arena_carve(arena, projection->by_short->lines * packed_size(rank), sizeof(double));
 }
@@ -55,7 +60,7 @@ static void block_sum(const struct hessian_blocks *blocks, uint32_t i, size_t wo
     const struct half *half = p->by_short;
     size_t rank = p->rank;
     const double *u = &MATRIX_AT(p->basis, i, 0);
-    double *solved = blocks->scratch + worker * team_room(rank, sizeof(double));
+    double *solved = blocks->scratch + worker * room_a_worker(rank);
     for (uint64_t k = half->start[i]; k < half->start[i + 1]; k++) {
         uint32_t j = half->across[k];
         const double *w = &MATRIX_AT(p->weights, j, 0);
