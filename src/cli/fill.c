@@ -51,10 +51,10 @@ fescue_status command_fill(struct request *request)
         status = fescue_fill_table(table, &request->options, &fill);
     if (status == FESCUE_OK && is_asked_to_stop())
         status = FESCUE_STOPPED;
-    if (status == FESCUE_STOPPED)
-        stop_say(request);
     if (status == FESCUE_OK)
         status = fescue_fill_write(fill, place);
+    if (status == FESCUE_STOPPED)
+        stop_say(request);
     if (status == FESCUE_OK)
         say_summary(request, fescue_fill_text(fill), place);
     fescue_fill_destroy(&fill);
