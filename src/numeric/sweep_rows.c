@@ -9,7 +9,8 @@
  * asking beforehand helps little; one after the other they cost half as much. So every worker takes a copy of its own
  * of all rows, in their order, before its first block, as long as they are no more than OWN_.. bytes; that is also
  * cheaper than to share rounded ones, which would have to be fetched just so. With 1e6 cells, rank 16 and single
- * precision two workers' iterations of conjugate gradients take 0.9 of the time.
+ * precision two workers' iterations of conjugate gradients take 0.9 of the time. Copies are read only but for their
+ * making, and nothing is won by keeping them apart as rooms are (team_room).
  *
  * Not so normal equations: so much is done with a row that fetching it hardly counts, and copies cost them 3 per cent.
  * More rows than OWN_.., of tables whose lines are too short for slabs, are copied once too.
