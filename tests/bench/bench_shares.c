@@ -202,30 +202,6 @@ static void share_report(struct stand *stand, const char *what, const char *solv
     fflush(stdout);
 }
 
-static void pack_make(struct stand *stand)
-{
-    const struct half *half = &stand->rating.cells.by_row;
-    struct fescue_options options;
-    fescue_context *context;
-    fescue_table *table;
-    char *text;
-    uint32_t *row = bench_take(stand->rating.cells.count, sizeof *row);
-    if (fescue_context_create(NULL, &context) != FESCUE_OK)
-        exit(1);
-    for (uint32_t i = 0; i < half->lines; i++)
-        for (uint64_t k = half->start[i]; k < half->start[i + 1]; k++)
-            row[k] = i;
-    fescue_options_standard(&options);
-    bench_check(context,
-                fescue_table_from_cells(context, stand->rating.cells.rows, stand->rating.cells.columns,
-                                        stand->rating.cells.count, row, half->across, half->value, &options, &table));
-    bench_check(context, fescue_table_pack(table, stand->pack, &text));
-    fescue_text_free(context, &text);
-    fescue_table_destroy(&table);
-    fescue_context_destroy(&context);
-    free(row);
-}
-
 static void shares_measure(uint64_t cells, double call, double wake)
 {
     struct stand stand = {.call = call, .wake = wake};
@@ -236,7 +212,7 @@ static void shares_measure(uint64_t cells, double call, double wake)
         exit(1);
     snprintf(stand.pack, sizeof stand.pack, "%s/ratings.pack", stand.folder);
     rating_sow(cells, FESCUE_DOUBLE, &stand.rating);
-    pack_make(&stand);
+    rating_pack(&stand.rating, stand.pack);
     share_report(&stand, "load pack", "", pack_load);
     for (size_t k = 0; solver_at(k) != NULL; k++)
         share_report(&stand, "fit", solver_name(solver_at(k)), fit_run);

@@ -94,3 +94,24 @@ void rating_free(struct rating *rating)
     free(rating->column);
     free(rating->value);
 }
+
+void rating_pack(const struct rating *rating, const char *path)
+{
+    const struct cells *cells = &rating->cells;
+    const struct half *half = &cells->by_row;
+    fescue_context *context = rating->context;
+    fescue_table *table;
+    uint32_t *row = bench_take(cells->count, sizeof *row);
+    double *value = bench_take(cells->count, sizeof *value);
+    for (uint32_t i = 0; i < half->lines; i++)
+        for (uint64_t k = half->start[i]; k < half->start[i + 1]; k++) {
+            row[k] = i;
+            value[k] = cells_value(cells, half, k);
+        }
+    bench_check(context, table_from_triplets(context, cells->rows, cells->columns, cells->count, row, half->across,
+                                             value, cells->precision, &table));
+    free(row);
+    free(value);
+    bench_check(context, table_pack(table, path));
+    table_destroy(&table);
+}

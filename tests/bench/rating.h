@@ -19,6 +19,8 @@ struct rating {
 };
 void rating_sow(uint64_t cells, enum fescue_precision precision, struct rating *rating);
 void rating_free(struct rating *rating);
+/* The observed cells as a packed file of that path, values in their precision. */
+void rating_pack(const struct rating *rating, const char *path);
 
 /* ---- fits of it (fits.c) ----------------------------------------------------------------------------------------- */
 
