@@ -189,7 +189,7 @@ void sweep_tangent(struct sweep *sweep, const struct half *half, struct matrix a
    receives the Cholesky factors. weights is lines x rank. */
 void sweep_solve(struct sweep *sweep, const struct half *half, struct matrix right, const double *ridge,
                  struct matrix weights, double *factors);
-/* sum and sum of |.| of (left_i . right_j - x_k), for errors on hidden cells; *square as above. */
+/* *square and *absolute = sums of (left_i . right_j - x_k)^2 and of its size, for errors on hidden cells. */
 void sweep_errors(struct sweep *sweep, const struct half *half, struct matrix left, struct matrix right, double *square,
                   double *absolute);
 

@@ -29,6 +29,9 @@
 #define TURNED_WIDTHS(X) X(8, 2, false)
 #define MADD_TURNED(a, b, c) (turned) _mm256_fmadd_pd(a, b, c)
 #define MSUB_TURNED(a, b, c) (turned) _mm256_fmsub_pd(a, b, c)
+#define MADD_PIECE(a, b, c) (piece) _mm_fmadd_pd(a, b, c)
+#define TURNED_AHEAD(n) 0
+#define TURNED_MIX(a, b) (turned) _mm256_blend_pd(a, b, 0xa)
 #define PIECE_REPEAT(x) (turned) _mm256_broadcast_pd((const __m128d *)(const void *)(x))
 #define PIECE_ALONE(x) (turned) _mm256_zextpd128_pd256(_mm_loadu_pd(x))
 #define COMMON_REGISTERS(X) X(2) X(4) X(6) X(8)

@@ -29,6 +29,9 @@
 #define TURNED_WIDTHS(X) X(8, 1, false)
 #define MADD_TURNED(a, b, c) (turned) _mm256_fmadd_ps(a, b, c)
 #define MSUB_TURNED(a, b, c) (turned) _mm256_fmsub_ps(a, b, c)
+#define MADD_PIECE(a, b, c) (piece) _mm_fmadd_ps(a, b, c)
+#define TURNED_AHEAD(n) 0
+#define TURNED_MIX(a, b) (turned) _mm256_blend_ps(a, b, 0xcc)
 #define PIECE_REPEAT(x) (turned) _mm256_broadcast_ps((const __m128 *)(const void *)(x))
 #define PIECE_ALONE(x) (turned) _mm256_zextps128_ps256(_mm_loadu_ps(x))
 #define COMMON_REGISTERS(X) X(1) X(2) X(3) X(4)

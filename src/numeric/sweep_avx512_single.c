@@ -33,13 +33,16 @@
 #define TURNED_WIDTHS(X) X(8, 1, true) X(16, 1, false) X(32, 2, false)
 #define MADD_TURNED(a, b, c) (turned) _mm512_fmadd_ps(a, b, c)
 #define MSUB_TURNED(a, b, c) (turned) _mm512_fmsub_ps(a, b, c)
+#define MADD_PIECE(a, b, c) (piece) _mm_fmadd_ps(a, b, c)
+#define TURNED_AHEAD(n) ((n) == 1)
+#define TURNED_MIX(a, b) (turned) _mm512_mask_blend_ps(0xcccc, a, b)
 #define PIECE_REPEAT(x) (turned) _mm512_broadcast_f32x4(_mm_loadu_ps(x))
 #define PIECE_ALONE(x) (turned) _mm512_zextps128_ps512(_mm_loadu_ps(x))
 #define EIGHT(x) _mm512_castps256_ps512(_mm256_loadu_ps(x))
-#define HALVES_JOIN(low, high) (turned) _mm512_insertf32x8(EIGHT(low), _mm256_loadu_ps(high), 1)
+#define HALVES_JOIN(low, high) (turned) _mm512_mask_broadcast_f32x8(EIGHT(low), 0xff00, _mm256_loadu_ps(high))
 /* two pieces as 0 0 1 1, and back; and as 0 . 1 . */
 #define HALVES_TWICE(x) (turned) _mm512_shuffle_f32x4(EIGHT(x), EIGHT(x), 0x50)
-#define HALVES_APART(x) (turned) _mm512_maskz_shuffle_f32x4(0x0f0f, EIGHT(x), EIGHT(x), 0x50)
+#define HALVES_APART(x) (turned) _mm512_maskz_broadcast_f32x8(0xf00f, _mm256_loadu_ps(x))
 #define HALVES_ONCE(x) (cells) _mm256_blend_ps(_mm512_castps512_ps256(x), _mm512_extractf32x8_ps(x, 1), 0xf0)
 #define COMMON_REGISTERS(X) X(1) X(2) X(3) X(4)
 #define SWEEP_KERNEL sweep_avx512_single

@@ -14,7 +14,8 @@
  *     NARROW               address of the table to take for rows of 8 numbers; or not
  *     TURNED               numbers of a register whose rows are turned; or not
  *     TURNED_..            what else sweep_kernel_turned.h needs for it: TURNED_MOST, TURNED_WIDTHS(X), MADD_TURNED,
- *                          MSUB_TURNED, PIECE_REPEAT, PIECE_ALONE, and HALVES_.. where rows are paired
+ *                          MSUB_TURNED, MADD_PIECE, TURNED_AHEAD(n), TURNED_MIX, PIECE_REPEAT, PIECE_ALONE, and
+ *                          HALVES_.. where rows are paired
  *     COMMON_REGISTERS(X)  X(n) for each number n of registers a row that deserves loops of its own
  *     SWEEP_KERNEL         the name of the table this gives
  *
@@ -499,18 +500,18 @@ INLINE void residual_lines(const struct sweep_job *job, size_t block, double *ou
 
 #ifdef TURNED
 #include "numeric/sweep_kernel_turned.h"
-/* Whether the job's rows are of a width that is turned: then, what residual_lines would do. */
-INLINE bool turned_block(const struct sweep_job *job, size_t block, double *sums, const bool gradient)
+/* Whether the job's rows are of a width that is turned: then, what residual_lines would do for a gradient. */
+INLINE bool turned_block(const struct sweep_job *job, size_t block, double *square)
 {
     bool close = rows_are_close(job), kept = job->residual != NULL;
 #define TURNED_CASE(width, n, paired)                                                                                  \
     case width:                                                                                                        \
         if (!close)                                                                                                    \
-            turned_lines(job, block, sums, gradient, kept, n, paired, 0);                                              \
+            *square = turned_lines(job, block, kept, n, paired, 0);                                                    \
         else if (kept)                                                                                                 \
-            turned_lines(job, block, sums, gradient, true, n, paired, width);                                          \
+            *square = turned_lines(job, block, true, n, paired, width);                                                \
         else                                                                                                           \
-            turned_lines(job, block, sums, gradient, false, n, paired, width);                                         \
+            *square = turned_lines(job, block, false, n, paired, width);                                               \
         return true;
     switch (job->width) {
         TURNED_WIDTHS(TURNED_CASE)
@@ -519,9 +520,9 @@ INLINE bool turned_block(const struct sweep_job *job, size_t block, double *sums
     }
 }
 #else
-INLINE bool turned_block(const struct sweep_job *job, size_t block, double *sums, const bool gradient)
+INLINE bool turned_block(const struct sweep_job *job, size_t block, double *square)
 {
-    return (void)job, (void)block, (void)sums, (void)gradient, false;
+    return (void)job, (void)block, (void)square, false;
 }
 #endif
 
@@ -529,7 +530,7 @@ static void residual_block(const struct sweep_job *job, size_t block, size_t wor
 {
     bool gradient = job->product.data != NULL;
     (void)worker;
-    if (gradient ? turned_block(job, block, sums, true) : turned_block(job, block, sums, false))
+    if (gradient && turned_block(job, block, &sums[0]))
         return;
     if (gradient && job->residual == NULL) {
 #define LINES(registers, stride) residual_lines(job, block, sums, true, false, registers, stride)

@@ -3,13 +3,15 @@
  * Residual and gradient of narrow rows, by turning them; part of sweep_kernel.h, which says what is defined here.
  *
  * A register of the widest kind consists of pieces of 16 bytes, of PIECE numbers each. The rows of PIECE cells a, b, ..
- * are read as they are and turned within their pieces (here of 4 floats):
+ * are read as they are and turned within their pieces, so that number c of a piece is always cell c's (here of 4
+ * floats):
  *
- *     a0 a1 a2 a3 | a4 a5 a6 a7 | ..               a0 b0 c0 d0 | a4 b4 c4 d4 | ..     p_0
- *     b0 b1 b2 b3 | b4 b5 b6 b7 | ..     --->      a1 b1 c1 d1 | a5 b5 c5 d5 | ..     p_1
- *     c0 ..                                        ..
+ *     a0 a1 a2 a3 | ..          a0 a1 b2 b3 | ..    a2 a3 b0 b1 | ..          a0 b2 c0 d2 | ..     p_0
+ *     b0 b1 b2 b3 | ..   --->   c0 c1 d2 d3 | ..    c2 c3 d0 d1 | ..   --->   a1 b3 c1 d3 | ..     p_1
+ *     c0 ..                        by choosing         by shuffling           a2 b0 c2 d0 | ..     p_2
+ *     d0 ..                                                                   a3 b1 c3 d1 | ..     p_3
  *
- * With the line's row spread alike (l_0 = l0 l0 l0 l0 | l4 l4 l4 l4 | ..), everything goes on side by side:
+ * With the line's row spread alike (l_0 = l0 l2 l0 l2 | ..), everything goes on side by side:
  *
  *     s    = sum over k of l_k p_k           then its pieces added up, so that each holds the sum of every cell
  *     r    = s - x                           x in every piece
@@ -18,10 +20,15 @@
  * No cell needs a register of its own for its partial sums, no r has to be brought into all lanes, and rows are read
  * once, in one or two operations each: 7 to 9 operations a cell of 8 or 16 floats in 512 bits, beside the 11 to 16 of
  * the loops of sweep_kernel.h, so that more cells are on their way at once. Where a row fills but half of a register
- * (paired), the row of another cell is the other half. Rows of 8, 16 and 32 floats take Zen 4 some 0.78, 0.78 and 0.83
- * of the time of those loops, rows of 8 and 16 doubles 0.84 and 0.80, on 909 778 cells in lines of 90 and 144; at 24
- * and 32 doubles nothing is gained. With 256 bits, where there are 16 registers, rows of 8 floats take some 0.75, of 8
- * doubles 0.85.
+ * (paired), the row of another cell is the other half. A row that is only multiplied, not added, is not worth turning.
+ *
+ * Time goes to what multiplies, which shuffles share; choosing (TURNED_MIX) may be done anywhere, and so turning takes
+ * two choices and six shuffles for four rows of floats, one and one for two of doubles, not eight and two shuffles.
+ * Each group is begun before the one before it is ended, as far as registers reach (TURNED_AHEAD). Rows of 8, 16 and 32
+ * floats take Zen 4 some 0.8, 0.75 and 0.8 of the time of those loops, rows of 8, 16, 24 and 32 doubles 0.65, 0.75,
+ * 0.87 and 0.92, on 909 778 cells in lines of 90 and 144. With 256 bits, where there are 16 registers, rows of 8 floats
+ * take some 0.8, of 8 doubles 0.85 to 1. Without gain: two chains for four products; 256 bits where there are 32
+ * registers (fewer halves to do, more to read); to ask for rows that are near.
  *
  * g_k and sums of squares are REAL over a chunk: in single precision a term meets CHUNK / PIECE roundings and some
  * more. The line's row, a step's rows and g, PIECE registers each for a register of the row, limit how wide rows may be
@@ -34,15 +41,14 @@ typedef REGISTER_OF(BITS, TURNED) turned_bits;
 
 /* Where number i of what a shuffle makes comes from: the numbers of the second operand begin at TURNED. */
 #define PIECE_OF(i) ((i) / PIECE * PIECE)
-#define INTERLEAVED(i, from) (PIECE_OF(i) + (from) + (i) % PIECE / 2 + (i) % 2 * TURNED)
-#define LOW(i) INTERLEAVED(i, 0)
-#define HIGH(i) INTERLEAVED(i, PIECE / 2)
-#define LOW_PAIR(i) (PIECE_OF(i) + (i) % 2 + (i) % PIECE / 2 * TURNED)
-#define HIGH_PAIR(i) (LOW_PAIR(i) + 2)
-#define EACH_0(i) PIECE_OF(i)
-#define EACH_1(i) (PIECE_OF(i) + 1)
-#define EACH_2(i) (PIECE_OF(i) + 2)
-#define EACH_3(i) (PIECE_OF(i) + 3)
+#define CROSSED(i) (PIECE_OF(i) + ((i) + PIECE / 2) % PIECE + (i) % PIECE / (PIECE / 2) * TURNED)
+#define EVEN(i) (PIECE_OF(i) + (i) % 2 * 2 + (i) % PIECE / 2 * TURNED)
+#define ODD(i) (EVEN(i) + 1)
+#define EVEN_TWICE(i) (PIECE_OF(i) + (i) % 2 * 2)
+#define ODD_TWICE(i) (EVEN_TWICE(i) + 1)
+#define SWAPPED(i) ((i) ^ 1)
+#define LOW(i) (PIECE_OF(i) + (i) % PIECE / 2 + (i) % 2 * TURNED)
+#define HIGH(i) (LOW(i) + PIECE / 2)
 #define ITSELF(i) i
 #define NEIGHBOUR(i) ((i) ^ PIECE)
 #define OPPOSITE(i) ((i) ^ (2 * PIECE))
@@ -60,15 +66,26 @@ typedef REGISTER_OF(BITS, TURNED) turned_bits;
 INLINE void rows_turn(const turned row[PIECE], turned p[PIECE])
 {
 #ifdef REAL_IS_DOUBLE
-    p[0] = SHUFFLE(row[0], row[1], LOW);
-    p[1] = SHUFFLE(row[0], row[1], HIGH);
+    p[0] = TURNED_MIX(row[0], row[1]);
+    p[1] = SHUFFLE(row[0], row[1], CROSSED);
 #else
-    turned ab = SHUFFLE(row[0], row[1], LOW), cd = SHUFFLE(row[2], row[3], LOW);
-    p[0] = SHUFFLE(ab, cd, LOW_PAIR);
-    p[1] = SHUFFLE(ab, cd, HIGH_PAIR);
-    ab = SHUFFLE(row[0], row[1], HIGH), cd = SHUFFLE(row[2], row[3], HIGH);
-    p[2] = SHUFFLE(ab, cd, LOW_PAIR);
-    p[3] = SHUFFLE(ab, cd, HIGH_PAIR);
+    turned ab = TURNED_MIX(row[0], row[1]), cd = TURNED_MIX(row[2], row[3]);
+    p[0] = SHUFFLE(ab, cd, EVEN);
+    p[1] = SHUFFLE(ab, cd, ODD);
+    ab = SHUFFLE(row[0], row[1], CROSSED), cd = SHUFFLE(row[2], row[3], CROSSED);
+    p[2] = SHUFFLE(ab, cd, EVEN);
+    p[3] = SHUFFLE(ab, cd, ODD);
+#endif
+}
+
+/* Of PIECE rows turned, their sum. */
+INLINE turned turned_sum(const turned p[PIECE])
+{
+#ifdef REAL_IS_DOUBLE
+    return p[0] + SHUFFLE(p[1], p[1], SWAPPED);
+#else
+    turned even = p[0] + SHUFFLE(p[2], p[2], SWAPPED), odd = p[1] + SHUFFLE(p[3], p[3], SWAPPED);
+    return SHUFFLE(even, odd, LOW) + SHUFFLE(even, odd, HIGH);
 #endif
 }
 
@@ -79,14 +96,16 @@ INLINE void rows_turn(const turned row[PIECE], turned p[PIECE])
 #define PARTS_JOIN(first, last) __builtin_shufflevector(*(first), *(last), LIST_16(ITSELF))
 #endif
 
-/* The first pieces of two registers. */
+/* A piece of a register, and the first of two. */
 #ifdef REAL_IS_DOUBLE
-#define FIRST_PIECE(a) __builtin_shufflevector(a, a, 0, 1)
-#define FIRST_PIECES(a, b) __builtin_shufflevector(FIRST_PIECE(a), FIRST_PIECE(b), LIST_4(ITSELF))
+#define PIECE_AT(a, at) __builtin_shufflevector(a, a, at, (at) + 1)
+#define FIRST_PIECES(a, b) __builtin_shufflevector(PIECE_AT(a, 0), PIECE_AT(b, 0), LIST_4(ITSELF))
 #else
-#define FIRST_PIECE(a) __builtin_shufflevector(a, a, 0, 1, 2, 3)
-#define FIRST_PIECES(a, b) __builtin_shufflevector(FIRST_PIECE(a), FIRST_PIECE(b), LIST_8(ITSELF))
+#define PIECE_AT(a, at) __builtin_shufflevector(a, a, at, (at) + 1, (at) + 2, (at) + 3)
+#define FIRST_PIECES(a, b) __builtin_shufflevector(PIECE_AT(a, 0), PIECE_AT(b, 0), LIST_8(ITSELF))
 #endif
+typedef REGISTER_OF(REAL, PIECE) piece;
+typedef REGISTER_OF(double, PIECE) piece_wide;
 
 #ifndef HALVES_JOIN
 #define HALVES_JOIN(low, high) (*(const turned *)((void)(high), low))
@@ -98,11 +117,14 @@ INLINE void rows_turn(const turned row[PIECE], turned p[PIECE])
 /* What PIECE rows p_0, p_1, .. turned have in every piece, row by row: l_k. */
 INLINE void row_spread(const turned *row, turned l[PIECE])
 {
-    l[0] = SHUFFLE(*row, *row, EACH_0);
-    l[1] = SHUFFLE(*row, *row, EACH_1);
-#ifndef REAL_IS_DOUBLE
-    l[2] = SHUFFLE(*row, *row, EACH_2);
-    l[3] = SHUFFLE(*row, *row, EACH_3);
+#ifdef REAL_IS_DOUBLE
+    l[0] = *row;
+    l[1] = SHUFFLE(*row, *row, SWAPPED);
+#else
+    l[0] = SHUFFLE(*row, *row, EVEN_TWICE);
+    l[1] = SHUFFLE(*row, *row, ODD_TWICE);
+    l[2] = SHUFFLE(l[0], l[0], SWAPPED);
+    l[3] = SHUFFLE(l[1], l[1], SWAPPED);
 #endif
 }
 
@@ -147,48 +169,62 @@ INLINE void step_turn(const struct sweep_rows *rows, const uint32_t *across, tur
     }
 }
 
-/* l . p_c - x_c of each cell, in every piece; of paired rows twice those of the first half, then twice the others. */
-INLINE turned step_residual(const turned *l, const turned *p, const REAL *x, const size_t n, const bool paired)
+/* A step on its way: its rows turned, and of each cell what l . p_c - x_c is the sum of, in its numbers of all pieces,
+   or, where rows are paired, of either half. */
+struct turned_step {
+    turned p[TURNED_MOST * PIECE], parts;
+};
+
+INLINE void step_begin(const struct span *span, struct chunk chunk, size_t c, const turned *l, struct turned_step *step,
+                       const size_t n, const bool paired)
 {
     const size_t chains = n * PIECE > 4 ? 2 : 1; /* one more addition, worth it where one chain would be long */
-    turned s[2] = {MSUB_TURNED(l[0], p[0], numbers_read_once(x, paired)), l[chains - 1] * p[chains - 1]};
+    const turned *p = step->p;
+    step_turn(&span->right, chunk.across + c, step->p, n, paired);
+    turned s[2] = {MSUB_TURNED(l[0], p[0], numbers_read_once(chunk.values + c, paired)), l[chains - 1] * p[chains - 1]};
     for (size_t k = chains; k < n * PIECE; k++)
         s[k % chains] = MADD_TURNED(l[k], p[k], s[k % chains]);
     if (chains == 2)
         s[0] += s[1];
-    s[0] += SHUFFLE(s[0], s[0], NEIGHBOUR);
-    if (PIECES == 4 && !paired)
-        s[0] += SHUFFLE(s[0], s[0], OPPOSITE);
-    return s[0];
+    step->parts = s[0];
 }
 
-/* What a chunk comes to: g_k, and r^2 and |r| of every cell, PIECES times, or twice where rows are paired. */
+/* What a chunk comes to: g_k, and r^2 of its cells. */
 struct turned_sums {
-    turned g[TURNED_MOST * PIECE], square, absolute;
+    turned g[TURNED_MOST * PIECE];
+    piece square;
 };
 
-/* The numbers of a group: g_k only when asked for, and |r| only otherwise. */
-INLINE void turned_group(const struct span *span, struct chunk chunk, size_t c, const turned *l,
-                         struct turned_sums *sums, turned r[2], const bool gradient, const size_t n, const bool paired)
+INLINE void squares_take(const turned *r, struct turned_sums *sums, const bool paired)
 {
-    turned p[TURNED_MOST * PIECE];
-    const size_t together = paired ? GROUP : PIECE;
-    for (size_t at = 0, step = 0; at < GROUP; at += together, step++) {
-        step_turn(&span->right, chunk.across + c + at, p, n, paired);
-        r[step] = step_residual(l, p, chunk.values + c + at, n, paired);
-        if (__builtin_expect(chunk.count - c < GROUP, 0)) {
-            const void *there = cells_there + (GROUP - (chunk.count - c)) + at;
-            r[step] = (turned)((turned_bits)r[step] & (turned_bits)numbers_read(there, paired));
-        }
-        sums->square = MADD_TURNED(r[step], r[step], sums->square);
-        if (!gradient)
-            sums->absolute += (turned)((turned_bits)r[step] & (sizeof(REAL) == sizeof(double) ? INT64_MAX : INT32_MAX));
-        for (size_t k = 0; gradient && k < n * PIECE; k++)
-            sums->g[k] = MADD_TURNED(r[step], p[k], sums->g[k]);
-    }
+    piece number = (piece)PIECE_AT(*r, 0);
+    sums->square = MADD_PIECE(number, number, sums->square);
+    if (!paired)
+        return;
+    number = (piece)PIECE_AT(*r, TURNED / 2);
+    sums->square = MADD_PIECE(number, number, sums->square);
 }
 
-INLINE void group_keep(const turned r[2], size_t left, REAL *to, const bool paired)
+/* r of a step's cells, as often as they stand in p_k: from cell `at` of a group on, of which `left` cells are there. */
+INLINE turned step_end(const struct turned_step *step, size_t at, size_t left, struct turned_sums *sums, const size_t n,
+                       const bool paired)
+{
+    turned r = step->parts;
+    r += SHUFFLE(r, r, NEIGHBOUR);
+    if (PIECES == 4 && !paired)
+        r += SHUFFLE(r, r, OPPOSITE);
+    if (__builtin_expect(left < GROUP, 0)) {
+        const void *there = cells_there + (GROUP - left) + at;
+        r = (turned)((turned_bits)r & (turned_bits)numbers_read(there, paired));
+    }
+    for (size_t k = 0; k < n * PIECE; k++)
+        sums->g[k] = MADD_TURNED(r, step->p[k], sums->g[k]);
+    squares_take(&r, sums, paired);
+    return r;
+}
+
+/* The numbers of a group, from those of its steps. */
+INLINE void numbers_keep(const turned *r, size_t left, REAL *to, const bool paired)
 {
     cells number;
     if (paired)
@@ -198,71 +234,110 @@ INLINE void group_keep(const turned r[2], size_t left, REAL *to, const bool pair
     group_store(&number, left, to);
 }
 
-/* The numbers of a register in any order: sum += */
-INLINE void parts_add(const turned *x, wide sum[WIDES])
-{
-    for (size_t at = 0; at < TURNED / LANES; at++)
-        wide_add(sum, (const vec *)x + at);
-}
-
 /* Turned back and added up, in the order of a row: sum += */
 INLINE void turned_add(const turned *g, wide *sum, const size_t n, const bool paired)
 {
     for (size_t v = 0; v < n; v++) {
-        turned row[PIECE];
-        rows_turn(g + v * PIECE, row);
-        for (size_t k = 1; k < PIECE; k++)
-            row[0] += row[k];
-        const vec *part = (const vec *)row;
+        turned row = turned_sum(g + v * PIECE);
+        const vec *part = (const vec *)&row;
         vec halves = part[0] + part[TURNED / LANES - 1];
         for (size_t at = 0; at < (paired ? 1 : TURNED / LANES); at++)
             wide_add(sum + (v * TURNED / LANES + at) * WIDES, paired ? &halves : part + at);
     }
 }
 
+/* Cells of a step, and steps of a group. */
+#define STEP_CELLS(paired) ((paired) ? GROUP : PIECE)
+#define STEPS(paired) (GROUP / STEP_CELLS(paired))
+enum { STEPS_MOST = GROUP / PIECE };
+
+INLINE void group_begin(const struct span *span, struct chunk chunk, size_t c, const turned *l,
+                        struct turned_step *step, const size_t n, const bool paired)
+{
+    for (size_t t = 0; t < STEPS(paired); t++)
+        step_begin(span, chunk, c + t * STEP_CELLS(paired), l, step + t, n, paired);
+}
+
+INLINE void group_end(const struct turned_step *step, size_t left, struct turned_sums *sums, REAL *to, const size_t n,
+                      const bool paired)
+{
+    turned r[STEPS_MOST];
+    for (size_t t = 0; t < STEPS(paired); t++)
+        r[t] = step_end(step + t, t * STEP_CELLS(paired), left, sums, n, paired);
+    if (to != NULL)
+        numbers_keep(r, left, to, paired);
+}
+
+/* Each group is begun before the one before it is ended: its rows are on their way while that one's r is waited for. */
+INLINE void chunk_ahead(const struct span *span, uint64_t k, struct chunk chunk, const turned *l,
+                        struct turned_sums *sums, const bool kept, const size_t n, const bool paired)
+{
+    struct turned_step step[STEPS_MOST], next[STEPS_MOST];
+    size_t c = 0;
+    span_prefetch(span, k, false, paired ? 1 : n * TURNED / LANES);
+    group_begin(span, chunk, 0, l, step, n, paired);
+    for (; c + GROUP < chunk.count; c += GROUP) {
+        span_prefetch(span, k + c + GROUP, false, paired ? 1 : n * TURNED / LANES);
+        group_begin(span, chunk, c + GROUP, l, next, n, paired);
+        group_end(step, GROUP, sums, kept ? span->residual + k + c : NULL, n, paired);
+        memcpy(step, next, sizeof step);
+    }
+    group_end(step, chunk.count - c, sums, kept ? span->residual + k + c : NULL, n, paired);
+}
+
+/* One step after another. */
+INLINE void chunk_in_turn(const struct span *span, uint64_t k, struct chunk chunk, const turned *l,
+                          struct turned_sums *sums, const bool kept, const size_t n, const bool paired)
+{
+    for (size_t c = 0; c < chunk.count; c += GROUP) {
+        turned r[STEPS_MOST];
+        span_prefetch(span, k + c, false, paired ? 1 : n * TURNED / LANES);
+        for (size_t t = 0; t < STEPS(paired); t++) {
+            struct turned_step step;
+            step_begin(span, chunk, c + t * STEP_CELLS(paired), l, &step, n, paired);
+            r[t] = step_end(&step, t * STEP_CELLS(paired), chunk.count - c, sums, n, paired);
+        }
+        if (kept)
+            numbers_keep(r, chunk.count - c, span->residual + k + c, paired);
+    }
+}
+
 INLINE void turned_line(const struct span *span, uint64_t k, uint64_t end, const turned *l, wide *product,
-                        wide (*sums)[WIDES], const bool gradient, const bool kept, const size_t n, const bool paired)
+                        piece_wide *square, const bool kept, const size_t n, const bool paired)
 {
     struct chunk chunk;
     struct chunk_room room;
     for (; k < end; k += chunk.count) {
         struct turned_sums chunk_sums = {0};
         chunk = chunk_find(span, k, end, &room, n * TURNED / LANES);
-        for (size_t c = 0; c < chunk.count; c += GROUP) {
-            turned r[2];
-            span_prefetch(span, k + c, false, paired ? 1 : n * TURNED / LANES);
-            turned_group(span, chunk, c, l, &chunk_sums, r, gradient, n, paired);
-            if (kept)
-                group_keep(r, chunk.count - c, span->residual + k + c, paired);
-        }
-        parts_add(&chunk_sums.square, sums[0]);
-        if (gradient)
-            turned_add(chunk_sums.g, product, n, paired);
+        if (TURNED_AHEAD(n))
+            chunk_ahead(span, k, chunk, l, &chunk_sums, kept, n, paired);
         else
-            parts_add(&chunk_sums.absolute, sums[1]);
+            chunk_in_turn(span, k, chunk, l, &chunk_sums, kept, n, paired);
+        *square += __builtin_convertvector(chunk_sums.square, piece_wide);
+        turned_add(chunk_sums.g, product, n, paired);
     }
 }
 
 /* Rows of n registers, or of half of one. */
-INLINE void turned_lines(const struct sweep_job *job, size_t block, double *out, const bool gradient, const bool kept,
-                         const size_t n, const bool paired, const size_t stride)
+INLINE double turned_lines(const struct sweep_job *job, size_t block, const bool kept, const size_t n,
+                           const bool paired, const size_t stride)
 {
     const size_t registers = paired ? 1 : n * TURNED / LANES;
     struct span span = span_of(job, block, stride);
-    wide sums[2][WIDES] = {{{0}}};
+    piece_wide square = {0};
     for (uint32_t line = span.line; line < span.last; line++) {
         turned l[TURNED_MOST * PIECE];
         wide product[TURNED_MOST * TURNED / LANES * WIDES];
         left_spread(&job->left, line, l, n, paired);
         if (line + 1 < span.last)
             left_prefetch(&job->left, line + 1, registers);
-        if (gradient)
-            product_begin(job, line, span.last, product, registers);
-        turned_line(&span, span.start[line], span.start[line + 1], l, product, sums, gradient, kept, n, paired);
-        if (gradient)
-            product_store(job, line, product, registers);
+        product_begin(job, line, span.last, product, registers);
+        turned_line(&span, span.start[line], span.start[line + 1], l, product, &square, kept, n, paired);
+        product_store(job, line, product, registers);
     }
-    for (size_t s = 0; s < 2; s++)
-        for (size_t at = 0; at < LANES; at++) /* each number was added as often as it stood there */
-            out[s] += sums[s][at / WIDE_LANES][at % WIDE_LANES] / (paired ? 2 : PIECES);
+    double sum = 0;
+    for (size_t c = 0; c < PIECE; c++)
+        sum += square[c];
+    return sum;
 }
