@@ -40,7 +40,7 @@
 #define PIECE_ALONE(x) (turned) _mm512_zextps128_ps512(_mm_loadu_ps(x))
 #define EIGHT(x) _mm512_castps256_ps512(_mm256_loadu_ps(x))
 #define HALVES_JOIN(low, high) (turned) _mm512_mask_broadcast_f32x8(EIGHT(low), 0xff00, _mm256_loadu_ps(high))
-/* two pieces as 0 0 1 1, and back; and as 0 . 1 . */
+/* two pieces as 0 0 1 1, and back; and as 0 . . 1 */
 #define HALVES_TWICE(x) (turned) _mm512_shuffle_f32x4(EIGHT(x), EIGHT(x), 0x50)
 #define HALVES_APART(x) (turned) _mm512_maskz_broadcast_f32x8(0xf00f, _mm256_loadu_ps(x))
 #define HALVES_ONCE(x) (cells) _mm256_blend_ps(_mm512_castps512_ps256(x), _mm512_extractf32x8_ps(x, 1), 0xf0)
