@@ -89,7 +89,8 @@ INLINE turned turned_sum(const turned p[PIECE])
 #endif
 }
 
-/* What is read once a line comes in registers of LANES. */
+/* What is read or written once a line comes in registers of LANES: so many a row of n registers, or of half of one. */
+#define ROW_REGISTERS(n, paired) ((paired) ? 1 : (n)*TURNED / LANES)
 #if TURNED == LANES
 #define PARTS_JOIN(first, last) ((void)(last), *(first))
 #else
@@ -137,7 +138,7 @@ INLINE turned row_read(const REAL *row, const REAL *later, const bool paired)
 INLINE void left_spread(const struct matrix *left, uint32_t line, turned *l, const size_t n, const bool paired)
 {
     vec part[TURNED_MOST * TURNED / LANES];
-    row_load(left, line, part, paired ? 1 : n * TURNED / LANES);
+    row_load(left, line, part, ROW_REGISTERS(n, paired));
     for (size_t v = 0; v < n; v++) {
         const vec *first = part + v * TURNED / LANES, *last = paired ? first : first + TURNED / LANES - 1;
         turned row = (turned)PARTS_JOIN(first, last);
@@ -241,7 +242,7 @@ INLINE void turned_add(const turned *g, wide *sum, const size_t n, const bool pa
         turned row = turned_sum(g + v * PIECE);
         const vec *part = (const vec *)&row;
         vec halves = part[0] + part[TURNED / LANES - 1];
-        for (size_t at = 0; at < (paired ? 1 : TURNED / LANES); at++)
+        for (size_t at = 0; at < ROW_REGISTERS(1, paired); at++)
             wide_add(sum + (v * TURNED / LANES + at) * WIDES, paired ? &halves : part + at);
     }
 }
@@ -274,10 +275,10 @@ INLINE void chunk_ahead(const struct span *span, uint64_t k, struct chunk chunk,
 {
     struct turned_step step[STEPS_MOST], next[STEPS_MOST];
     size_t c = 0;
-    span_prefetch(span, k, false, paired ? 1 : n * TURNED / LANES);
+    span_prefetch(span, k, false, ROW_REGISTERS(n, paired));
     group_begin(span, chunk, 0, l, step, n, paired);
     for (; c + GROUP < chunk.count; c += GROUP) {
-        span_prefetch(span, k + c + GROUP, false, paired ? 1 : n * TURNED / LANES);
+        span_prefetch(span, k + c + GROUP, false, ROW_REGISTERS(n, paired));
         group_begin(span, chunk, c + GROUP, l, next, n, paired);
         group_end(step, GROUP, sums, kept ? span->residual + k + c : NULL, n, paired);
         memcpy(step, next, sizeof step);
@@ -291,7 +292,7 @@ INLINE void chunk_in_turn(const struct span *span, uint64_t k, struct chunk chun
 {
     for (size_t c = 0; c < chunk.count; c += GROUP) {
         turned r[STEPS_MOST];
-        span_prefetch(span, k + c, false, paired ? 1 : n * TURNED / LANES);
+        span_prefetch(span, k + c, false, ROW_REGISTERS(n, paired));
         for (size_t t = 0; t < STEPS(paired); t++) {
             struct turned_step step;
             step_begin(span, chunk, c + t * STEP_CELLS(paired), l, &step, n, paired);
@@ -323,7 +324,7 @@ INLINE void turned_line(const struct span *span, uint64_t k, uint64_t end, const
 INLINE double turned_lines(const struct sweep_job *job, size_t block, const bool kept, const size_t n,
                            const bool paired, const size_t stride)
 {
-    const size_t registers = paired ? 1 : n * TURNED / LANES;
+    const size_t registers = ROW_REGISTERS(n, paired);
     struct span span = span_of(job, block, stride);
     piece_wide square = {0};
     for (uint32_t line = span.line; line < span.last; line++) {

@@ -144,13 +144,8 @@ static double fit_run(struct stand *stand, const char *solver)
 static double pack_load(struct stand *stand, const char *none)
 {
     fescue_context *context;
-    fescue_table *table;
-    const struct table_reading reading = {.precision = FESCUE_DOUBLE};
     (void)none;
-    if (fescue_context_create(NULL, &context) != FESCUE_OK)
-        exit(1);
-    bench_check(context, team_resize(context, 2));
-    bench_check(context, table_read(context, stand->pack, &reading, &table));
+    fescue_table *table = bench_load(stand->pack, FESCUE_DOUBLE, 2, &context);
     table_destroy(&table);
     fescue_context_destroy(&context);
     return 0;

@@ -1,8 +1,10 @@
 /* SPDX-License-Identifier: MIT
  *
- * Timing, printing and keeping of figures.
+ * Timing, printing and keeping of figures, and what every part of a run takes or loads.
  */
 #include "figures.h"
+
+#include "table/table.h"
 
 #include <math.h>
 #include <stdio.h>
@@ -31,6 +33,19 @@ void *bench_take(size_t count, size_t size)
     }
     memset(taken, 0, bytes);
     return taken;
+}
+
+fescue_table *bench_load(const char *path, enum fescue_precision precision, size_t workers, fescue_context **context)
+{
+    const struct table_reading reading = {.precision = precision};
+    fescue_table *table;
+    if (fescue_context_create(NULL, context) != FESCUE_OK) {
+        fprintf(stderr, "bench: no context\n");
+        exit(1);
+    }
+    bench_check(*context, team_resize(*context, workers));
+    bench_check(*context, table_read(*context, path, &reading, &table));
+    return table;
 }
 
 static int order(const void *a, const void *b)

@@ -21,6 +21,9 @@ struct bench {
 void bench_check(fescue_context *context, fescue_status status);
 void *bench_take(size_t count, size_t size); /* zeroed, aligned to 64; ends the program when there is no memory */
 
+/* The table of a file, in a context that has so many workers; ends the program when it is not to be had. */
+fescue_table *bench_load(const char *path, enum fescue_precision precision, size_t workers, fescue_context **context);
+
 /* Work that is timed. */
 typedef void bench_work(void *argument);
 /* Seconds of a run, the processor's on one thread and the wall's on several. What else the machine does strikes the

@@ -33,16 +33,11 @@ static struct share share_measure(const struct rating *rating, const char *solve
 static void load_report(struct bench *bench, const struct rating *rating, const char *path, size_t threads)
 {
     enum { LOADS = 5 };
-    const struct table_reading reading = {.precision = FESCUE_SINGLE};
     double wall[LOADS], cpu[LOADS];
     for (int k = 0; k < LOADS; k++) {
         fescue_context *context;
-        fescue_table *table;
         double wall_start = clock_wall(), cpu_start = clock_cpu();
-        if (fescue_context_create(NULL, &context) != FESCUE_OK)
-            exit(1);
-        bench_check(context, team_resize(context, threads));
-        bench_check(context, table_read(context, path, &reading, &table));
+        fescue_table *table = bench_load(path, FESCUE_SINGLE, threads, &context);
         wall[k] = clock_wall() - wall_start;
         cpu[k] = clock_cpu() - cpu_start;
         table_destroy(&table);

@@ -162,20 +162,10 @@ static void gzip_write(const char *from, const char *to)
         fail(to);
 }
 
-static fescue_table *load(const char *path, size_t workers, fescue_context **context)
-{
-    const struct table_reading reading = {.precision = FESCUE_DOUBLE};
-    fescue_table *table;
-    if (fescue_context_create(NULL, context) != FESCUE_OK || team_resize(*context, workers) != FESCUE_OK)
-        fail("no context");
-    bench_check(*context, table_read(*context, path, &reading, &table));
-    return table;
-}
-
 static void pack_write(const char *from, const char *to)
 {
     fescue_context *context;
-    fescue_table *table = load(from, 2, &context);
+    fescue_table *table = bench_load(from, FESCUE_DOUBLE, 2, &context);
     bench_check(context, table_pack(table, to));
     table_destroy(&table);
     fescue_context_destroy(&context);
@@ -344,7 +334,7 @@ static void load_measure(struct loading *loading, enum form form, size_t workers
     fescue_context *context;
     memory_warm(loading);
     struct clocks start = clocks_start();
-    fescue_table *table = load(path_of(loading, form, path), workers, &context);
+    fescue_table *table = bench_load(path_of(loading, form, path), FESCUE_DOUBLE, workers, &context);
     snprintf(name, sizeof name, "%s, %zu", names[form], workers);
     clocks_stop(loading, start, name);
     if (table->cells.count != loading->cells)

@@ -165,6 +165,8 @@ static void residual_check(struct shop *shop)
     assert_close(square, want_square, slack + rounding * want_square);
     sweep_errors(&shop->sweep, half, shop->left, shop->right, &got_square, &got_absolute);
     assert_close(got_square, want_square, slack + rounding * want_square);
+    sweep_residual(&shop->sweep, half, shop->left, shop->right, (struct matrix){0}, NULL, &square);
+    assert_true(memcmp(&got_square, &square, sizeof square) == 0);
     assert_close(got_absolute, want_absolute, absolute_slack + rounding * want_absolute);
     product_check(shop, shop->gradient);
 }
